@@ -9,12 +9,14 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage
 
 from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.physics.fields.differences import difference_matrix
 
 Mask = NDArray[np.bool_]
 
@@ -101,6 +103,8 @@ def wake_region(
         raise ValueError(f"level and grow must not be negative, {level} and {reach} m were given")
     smooth_loss = ndimage.gaussian_filter(loss, SMOOTHING, mode="nearest")
     smooth_vorticity = np.abs(ndimage.gaussian_filter(vorticity, SMOOTHING, mode="nearest"))
+    # Differences and smoothing let more noise through near the edges of the window; level it out.
+    smooth_vorticity /= _noise_gain(grid)
     quiet = np.ones(grid.shape, dtype=bool) if exclude is None else ~exclude
     zero, loss_noise, vorticity_noise = _first_guess(smooth_loss, smooth_vorticity, quiet)
     core = np.zeros(grid.shape, dtype=bool)
@@ -124,6 +128,21 @@ def wake_region(
     if exclude is not None:
         mask &= ~exclude
     return WakeRegion(mask, zero, loss_noise, vorticity_noise, loss_level, vorticity_level, reach)
+
+
+@lru_cache(maxsize=8)
+def _noise_gain(grid: UniformGrid) -> Array:
+    """Noise of the smoothed vorticity at each place relative to the middle of the window, shape (nz, ny)."""
+    gains = []
+    for n, step in ((grid.nz, grid.dz), (grid.ny, grid.dy)):
+        smoothing = ndimage.gaussian_filter1d(np.eye(n), SMOOTHING, axis=0, mode="nearest")
+        slope = smoothing @ difference_matrix(n).toarray() / step
+        gains.append((np.sum(smoothing**2, axis=1), np.sum(slope**2, axis=1)))
+    (value_z, slope_z), (value_y, slope_y) = gains
+    gain: Array = np.sqrt(np.outer(value_z, slope_y) + np.outer(slope_z, value_y))
+    gain /= gain[grid.nz // 2, grid.ny // 2]
+    gain.flags.writeable = False
+    return gain
 
 
 def _first_guess(smooth_loss: Array, smooth_vorticity: Array, quiet: Mask) -> tuple[float, float, float]:

@@ -1,0 +1,46 @@
+"""The small remainder of the momentum balance: axial disturbance and crossflow divergence, always as a pair.
+
+½ρ∬[−φσ − (u* − U)²] dA. For a disturbance that is harmonic and decays downstream the two cancel (Parseval); alone, the
+first is +5 % of the induced drag a quarter span behind the wing. Taken over the wake region, where the pressure of
+vortex cores leaves a real remainder.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from wakeledger.core.grid import Array
+from wakeledger.physics.fields.differences import crossflow_divergence
+from wakeledger.physics.fields.flow import Flow
+from wakeledger.physics.fields.poisson import velocity_potential
+from wakeledger.physics.fields.wake_region import Mask
+from wakeledger.physics.methods.betz_area import axial_integrand
+from wakeledger.stream.reference import Reference
+
+
+def residual_drag(flow: Flow, reference: Reference, loss_free: Array, mask: Mask) -> tuple[Array, Array]:
+    """Both parts of the residual over the wake region, N, each of shape (...).
+
+    Parameters
+    ----------
+    flow, reference
+        The plane and the undisturbed stream.
+    loss_free : ndarray, shape (..., nz, ny)
+        u* of `wakeledger.physics.methods.betz_area.loss_free_axial_velocity`, m/s.
+    mask : ndarray of bool, shape (..., nz, ny)
+        The wake region.
+
+    Returns
+    -------
+    divergence_part, axial_part : ndarray
+        −½ρ∬φσ dA and −½ρ∬(u* − U)² dA. The mean divergence of the region is taken out first: a net source has no
+        decaying potential in an unbounded plane.
+    """
+    grid = flow.grid
+    sigma = np.where(mask, crossflow_divergence(flow.v, flow.w, grid), 0.0)
+    count = np.maximum(np.count_nonzero(mask, axis=(-2, -1)), 1)
+    sigma = np.where(mask, sigma - (sigma.sum(axis=(-2, -1)) / count)[..., None, None], 0.0)
+    phi = velocity_potential(sigma, grid)
+    divergence_part = -0.5 * reference.density * grid.cell_area * np.einsum("...zy,...zy->...", phi, sigma)
+    axial_part = grid.integrate(np.where(mask, axial_integrand(loss_free, reference), 0.0))
+    return divergence_part, axial_part
