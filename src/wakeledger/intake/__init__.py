@@ -1,0 +1,1 @@
+"""From data files to a plane: readers, gridding and the flow state at each point."""

@@ -1,0 +1,233 @@
+"""From a data file to points: the format is told by content, one file for each format."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from pathlib import Path
+from types import MappingProxyType
+
+import numpy as np
+from numpy.typing import NDArray
+
+from wakeledger.core.errors import DataError
+from wakeledger.core.grid import Array
+from wakeledger.core.points import Channel, Column, Points
+from wakeledger.intake.readers.columns import POSITIONS, RawColumns
+from wakeledger.intake.readers.netcdf import read_netcdf
+from wakeledger.intake.readers.recognise import recognise
+from wakeledger.intake.readers.table import read_table
+
+__all__ = ["read_points", "recognise"]
+
+_READERS = {"table": read_table, "netcdf": read_netcdf}
+_NO_STD: Mapping[str, Column] = MappingProxyType({})
+#: Largest spread of the streamwise position of one plane, as a share of the plane's size.
+_PLANE_THICKNESS = 0.02
+
+
+def read_points(
+    path: Path | str,
+    columns: Mapping[str, Column],
+    *,
+    axes: Array,
+    std: Mapping[str, Column] = _NO_STD,
+    samples: Column | None = None,
+) -> Points:
+    """Read the points of one plane from a file.
+
+    Parameters
+    ----------
+    path : path
+        A delimited text table or a netCDF file.
+    columns : mapping of str to Column
+        Where each variable stands, by name. Positions are two of ``x``, ``y``, ``z`` along the file's axes, or ``r``
+        and ``theta`` with y = r cos(theta), z = r sin(theta) in wind axes, theta positive from starboard towards up.
+        A third position may be given: it must be the same at all points. ``row`` is the traverse row of each point.
+    axes : ndarray, shape (3, 3)
+        Signed permutation P with wind = P @ file.
+    std : mapping of str to Column, optional
+        Standard deviation of the samples at each point, by variable.
+    samples : Column, optional
+        Number of samples behind each point.
+
+    Returns
+    -------
+    Points
+        In SI, in file order; positions in wind axes, vector components along the file's axes.
+
+    Raises
+    ------
+    DataError
+        If the file cannot be read, or what it holds is no plane of points; names file, line and column.
+    """
+    file = Path(path)
+    axes = np.asarray(axes, dtype=float)
+    wanted = dict(columns) | {f"std.{name}": column for name, column in std.items()}
+    if samples is not None:
+        wanted["samples"] = samples
+    _require_positions(columns, axes, file)
+    raw = _READERS[recognise(file)](file, wanted)
+    named = _named(wanted)
+    _refuse_infinite(raw, named, file)
+    y, z = _positions(raw, columns, axes, file)
+    channels = {}
+    for key, values in raw.values.items():
+        if key in POSITIONS or key in {"row", "samples"} or key.startswith("std."):
+            continue
+        column = named[key]
+        if not np.isfinite(values).any():
+            raise DataError(
+                f"column {column.column!r} ({key}) has no value at any point",
+                file=file,
+                remedy="name the right column or leave the variable out",
+            )
+        channels[key] = Channel(_si(values, column), column.relative_to, column.normalised_by, column.kinematic)
+    return Points(
+        y=y,
+        z=z,
+        channels=MappingProxyType(channels),
+        line=raw.line,
+        source=str(path),
+        axes=axes,
+        std=MappingProxyType(_deviations(raw, named, file)),
+        samples=_integers(raw, "samples", named, file, least=1),
+        row=_integers(raw, "row", named, file),
+    )
+
+
+def _named(wanted: Mapping[str, Column]) -> dict[str, Column]:
+    """Columns by key, the three components of a vector array included."""
+    named = dict(wanted)
+    for prefix in ("", "std."):
+        if f"{prefix}velocity" in wanted:
+            named |= {prefix + letter: wanted[f"{prefix}velocity"] for letter in "uvw"}
+    return named
+
+
+def _si(values: Array, column: Column) -> Array:
+    return values if column.scale == 1.0 and column.offset == 0.0 else column.scale * values + column.offset
+
+
+def _place(raw: RawColumns, i: int, column: Column) -> str:
+    return raw.place(i, column.column)
+
+
+def _refuse_infinite(raw: RawColumns, named: Mapping[str, Column], file: Path) -> None:
+    for key, values in raw.values.items():
+        infinite = np.flatnonzero(np.isinf(values))
+        if infinite.size:
+            raise DataError(
+                f"an infinite value ({key}), {infinite.size} in all",
+                file=file,
+                place=_place(raw, int(infinite[0]), named[key]),
+                remedy="leave the cell empty if the value is missing",
+            )
+
+
+def _wind_axis(axes: Array, target: int) -> tuple[str, float]:
+    """Letter of the file's axis that becomes a wind axis, and its sign."""
+    source = int(np.argmax(np.abs(axes[target])))
+    return "xyz"[source], float(np.sign(axes[target, source]))
+
+
+def _require_positions(columns: Mapping[str, Column], axes: Array, file: Path) -> None:
+    given = [key for key in POSITIONS if key in columns]
+    polar = {"r", "theta"} & set(given)
+    if polar:
+        if polar != {"r", "theta"} or {"y", "z"} & set(given):
+            raise DataError(
+                f"the positions are given by {', '.join(given)}",
+                file=file,
+                remedy="give either r and theta, or two of x, y, z, in [plane.columns]",
+            )
+        return
+    for target, name in ((1, "y (to starboard)"), (2, "z (up)")):
+        letter, _ = _wind_axis(axes, target)
+        if letter not in columns:
+            raise DataError(
+                f"the position along the file's {letter} axis, which is the wind axis {name}, has no column",
+                file=file,
+                remedy=f"add {letter} to [plane.columns], or correct [plane.axes]",
+            )
+
+
+def _positions(raw: RawColumns, columns: Mapping[str, Column], axes: Array, file: Path) -> tuple[Array, Array]:
+    si: dict[str, Array] = {}
+    for key in POSITIONS:
+        if key not in raw.values:
+            continue
+        missing = np.flatnonzero(np.isnan(raw.values[key]))
+        if missing.size:
+            raise DataError(
+                f"the position {key} is missing, at {missing.size} point(s) in all",
+                file=file,
+                place=_place(raw, int(missing[0]), columns[key]),
+                remedy="give the position of every point, or delete the line",
+            )
+        si[key] = _si(raw.values[key], columns[key])
+    if "r" in si:
+        negative = np.flatnonzero(si["r"] < 0)
+        if negative.size:
+            raise DataError(
+                f"the radius r is negative, at {negative.size} point(s) in all",
+                file=file,
+                place=_place(raw, int(negative[0]), columns["r"]),
+                remedy="give r >= 0 and turn theta by half a turn",
+            )
+        y, z = si["r"] * np.cos(si["theta"]), si["r"] * np.sin(si["theta"])
+    else:
+        (letter_y, sign_y), (letter_z, sign_z) = _wind_axis(axes, 1), _wind_axis(axes, 2)
+        y, z = sign_y * si[letter_y] + 0.0, sign_z * si[letter_z] + 0.0
+    letter, _ = _wind_axis(axes, 0)
+    if letter in si:
+        _refuse_several_planes(si[letter], max(np.ptp(y), np.ptp(z)), columns[letter].column, file)
+    return y, z
+
+
+def _refuse_several_planes(x: Array, size: float, column: str, file: Path) -> None:
+    if np.ptp(x) <= _PLANE_THICKNESS * size:
+        return
+    levels = np.unique(np.round(x, 6))
+    found = (
+        f"planes at {column!r} = {', '.join(f'{level:g}' for level in levels)} m"
+        if levels.size <= 6
+        else f"points from {x.min():g} to {x.max():g} m along {column!r}"
+    )
+    raise DataError(f"the file holds {found}", file=file, remedy="give a file with the points of one plane only")
+
+
+def _deviations(raw: RawColumns, named: Mapping[str, Column], file: Path) -> dict[str, Array]:
+    deviations = {}
+    for key, values in raw.values.items():
+        if not key.startswith("std."):
+            continue
+        negative = np.flatnonzero(values < 0)
+        if negative.size:
+            raise DataError(
+                f"the standard deviation of {key.removeprefix('std.')} is negative",
+                file=file,
+                place=_place(raw, int(negative[0]), named[key]),
+                remedy="give values from zero up, and leave the cell empty where unknown",
+            )
+        deviations[key.removeprefix("std.")] = abs(named[key].scale) * values
+    return deviations
+
+
+def _integers(
+    raw: RawColumns, key: str, named: Mapping[str, Column], file: Path, *, least: int | None = None
+) -> NDArray[np.int64] | None:
+    if key not in raw.values:
+        return None
+    values = raw.values[key]
+    wrong = ~np.isfinite(values) | (values != np.round(values))
+    if least is not None:
+        wrong |= values < least
+    if wrong.any():
+        i = int(np.flatnonzero(wrong)[0])
+        raise DataError(
+            f"{key} is {values[i]:g}",
+            file=file,
+            place=_place(raw, i, named[key]),
+            remedy="give a whole number at every point" + (f", at least {least}" if least is not None else ""),
+        )
+    return np.round(values).astype(np.int64)

@@ -1,0 +1,111 @@
+"""What kind of file it is, told by its content and never by its name."""
+
+from __future__ import annotations
+
+import mmap
+from pathlib import Path
+
+from wakeledger.core.errors import DataError
+
+#: Bytes read to tell the format.
+_HEAD = 4096
+_HDF5 = b"\x89HDF\r\n\x1a\n"
+_HDF5_OFFSETS = (0, 512, 1024, 2048)
+#: What text never holds: control characters other than tab, newline, form feed, carriage return, end of file.
+_CONTROL = bytes(set(range(32)) - {9, 10, 11, 12, 13, 26}) + b"\x7f"
+_REMEDY = "write the plane as a delimited text table or as netCDF: this version reads these two"
+
+
+def recognise(path: Path) -> str:
+    """Tell the format of a data file by its content.
+
+    Parameters
+    ----------
+    path : Path
+        The file.
+
+    Returns
+    -------
+    str
+        ``"table"`` or ``"netcdf"``.
+
+    Raises
+    ------
+    DataError
+        If the file is missing, a directory, unreadable, empty, in a recognised format that is not read, or binary data
+        of an unknown kind.
+    """
+    head = _head(path)
+    if not head.strip():
+        raise DataError("the file is empty", file=path, remedy="give a file that holds the points of the plane")
+    if head[:3] == b"CDF" and head[3:4] in (b"\x01", b"\x02", b"\x05"):
+        return "netcdf"
+    if any(head[offset : offset + 8] == _HDF5 for offset in _HDF5_OFFSETS):
+        kind = _kind_of_hdf5(path, head)
+        if kind == "netcdf":
+            return kind
+        raise DataError(f"this is {kind}", file=path, remedy=_REMEDY)
+    other = _other_format(head)
+    if other:
+        raise DataError(f"this is {other}", file=path, remedy=_REMEDY)
+    if head.startswith((b"\xff\xfe", b"\xfe\xff")):
+        raise DataError("the file is text in UTF-16 encoding", file=path, remedy="save it in UTF-8 encoding")
+    if head.translate(None, _CONTROL) != head:
+        raise DataError("the file holds binary data in no format that is known here", file=path, remedy=_REMEDY)
+    return "table"
+
+
+def _head(path: Path) -> bytes:
+    try:
+        with path.open("rb") as stream:
+            return stream.read(_HEAD)
+    except FileNotFoundError:
+        raise DataError(
+            "there is no such file", file=path, remedy="check the path; it is relative to the survey file"
+        ) from None
+    except IsADirectoryError:
+        raise DataError(
+            "this is a directory", file=path, remedy="give the file that holds the points of the plane"
+        ) from None
+    except OSError as error:
+        reason = (error.strerror or str(error)).lower()
+        raise DataError(
+            f"the file cannot be read ({reason})", file=path, remedy="check the path and its permissions"
+        ) from None
+
+
+def _kind_of_hdf5(path: Path, head: bytes) -> str:
+    if head.startswith(b"MATLAB 7.3"):
+        return "a MATLAB 7.3 file (MAT, HDF5)"
+    with path.open("rb") as stream, mmap.mmap(stream.fileno(), 0, access=mmap.ACCESS_READ) as content:
+        if content.find(b"CGNSLibraryVersion") >= 0:
+            return "a CGNS file (HDF5)"
+        netcdf = any(content.find(mark) >= 0 for mark in (b"_NCProperties", b"_Netcdf4", b"DIMENSION_SCALE"))
+    return "netcdf" if netcdf else "an HDF5 file that is not netCDF-4"
+
+
+def _other_format(head: bytes) -> str | None:
+    start = head.removeprefix(b"\xef\xbb\xbf").lstrip()
+    if b"<VTKFile" in head:
+        return "a VTK XML file"
+    if start.startswith(b"# vtk DataFile"):
+        return "a legacy VTK file"
+    if b"FoamFile" in head:
+        return "an OpenFOAM file"
+    if head.startswith(b"MATLAB 5.0 MAT-file"):
+        return "a MATLAB file (MAT)"
+    if b"CGNSLibraryVersion" in head:
+        return "a CGNS file (ADF)"
+    for magic, kind in (
+        (b"PK\x03\x04", "a zip archive or a spreadsheet workbook"),
+        (b"\xd0\xcf\x11\xe0", "an old spreadsheet workbook"),
+        (b"\x1f\x8b", "a gzip archive"),
+        (b"BZh", "a bzip2 archive"),
+        (b"\xfd7zXZ", "an xz archive"),
+        (b"%PDF", "a PDF document"),
+        (b"\x89PNG", "a PNG picture"),
+        (b"#!TDV", "a binary Tecplot file"),
+    ):
+        if head.startswith(magic):
+            return kind
+    return None
