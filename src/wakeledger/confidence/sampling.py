@@ -1,0 +1,341 @@
+"""Draws of the errors of every input, reproducible whatever the order, the chunks or the company of other sources."""
+
+from __future__ import annotations
+
+import hashlib
+import math
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from wakeledger.confidence.correlation import Expansion, correlated_field
+from wakeledger.confidence.sources import InputLayout, Source, check_sources
+from wakeledger.core.grid import Array
+
+Seed = int | Sequence[int]
+
+# Few variables share one generator per block of draws, because starting a generator costs as much as 2000 numbers.
+_BLOCK = 256
+_FEW = 64
+
+
+def stream(key: str, index: int) -> np.random.Generator:
+    """A generator that depends only on the key and the index.
+
+    Parameters
+    ----------
+    key : str
+        Whatever identifies the stream.
+    index : int
+        Number of the draw, or of the block of draws.
+
+    Returns
+    -------
+    numpy.random.Generator
+    """
+    entropy = int.from_bytes(hashlib.sha256(key.encode()).digest()[:16], "little")
+    return np.random.Generator(np.random.SFC64(np.random.SeedSequence(entropy, spawn_key=(index,))))
+
+
+def unit_variables(rng: np.random.Generator, out: Array, distribution: str) -> None:
+    """Fill an array with independent variables of zero mean and unit variance.
+
+    Parameters
+    ----------
+    rng : numpy.random.Generator
+        Where the numbers come from.
+    out : ndarray
+        Filled in place; contiguous.
+    distribution : {"normal", "rectangular", "triangular", "arcsine"}
+        Their distribution.
+    """
+    if distribution == "normal":
+        rng.standard_normal(out=out)
+        return
+    rng.random(out=out)
+    if distribution == "rectangular":
+        out -= 0.5
+        out *= math.sqrt(12)
+    elif distribution == "triangular":
+        out += rng.random(out.shape)
+        out -= 1.0
+        out *= math.sqrt(6)
+    else:
+        np.sin(2 * math.pi * out, out=out)
+        out *= math.sqrt(2)
+
+
+def draw_blocks(
+    key: str, start: int, stop: int, width: int, fill: Callable[[np.random.Generator, Array], None]
+) -> Array:
+    """Draws `start` to `stop` of a stream, the same numbers however the range is cut.
+
+    Parameters
+    ----------
+    key : str
+        Identifies the stream.
+    start, stop : int
+        First draw and one past the last.
+    width : int
+        Numbers per draw.
+    fill : callable
+        Fills an array of shape (k, width) from a generator.
+
+    Returns
+    -------
+    ndarray, shape (stop - start, width)
+    """
+    out = np.empty((stop - start, width))
+    if width > _FEW:
+        for draw in range(start, stop):
+            fill(stream(key, draw), out[draw - start : draw - start + 1])
+        return out
+    for block in range(start // _BLOCK, -(-stop // _BLOCK)):
+        numbers = np.empty((_BLOCK, width))
+        fill(stream(key, block), numbers)
+        first, last = max(start, block * _BLOCK), min(stop, (block + 1) * _BLOCK)
+        out[first - start : last - start] = numbers[first - block * _BLOCK : last - block * _BLOCK]
+    return out
+
+
+@dataclass(frozen=True)
+class _InputErrors:
+    """One source on one input: `latents` independent unit variables, expanded to errors by a linear map."""
+
+    name: str
+    key: str
+    latents: int
+    scale: Array
+    expand: Expansion | None
+    is_scalar: bool
+
+    def errors(self, latents: Array) -> Array:
+        """Errors in SI, (draws, n) or (draws,), from unit variables, (draws, latents), which may be overwritten."""
+        if self.expand is None:
+            field = latents
+            field *= self.scale
+        else:
+            field = self.expand(latents) * self.scale
+        return field[:, 0] if self.is_scalar else field
+
+
+class SourceErrors:
+    """The errors of one source on all its inputs.
+
+    Parameters
+    ----------
+    source : Source
+        The source, checked against the layouts.
+    layouts : mapping of str to InputLayout
+        The inputs by name.
+    seed : int or sequence of int
+        Seed of the survey.
+    """
+
+    def __init__(self, source: Source, layouts: Mapping[str, InputLayout], *, seed: Seed) -> None:
+        self.source = source
+        numbers = (seed,) if isinstance(seed, int) else tuple(seed)
+        self._key = f"shared|{source.shared_id}" if source.shared_id else f"survey|{numbers}|{source.name}"
+        self._inputs = tuple(self._prepare(name, layouts[name]) for name in source.applies_to)
+
+    def _prepare(self, name: str, layout: InputLayout) -> _InputErrors:
+        source = self.source
+        nominal = np.atleast_1d(np.asarray(layout.nominal, dtype=float))
+        scale = np.full(layout.size, source.standard_uncertainty)
+        if source.relative:
+            scale *= nominal
+        if source.from_samples and layout.std is not None:
+            scale *= layout.std
+        scale[~np.isfinite(nominal) | ~np.isfinite(scale)] = 0.0
+        latents, expand = layout.size, None
+        if source.effect == "systematic":
+            latents, expand = 1, _repeat(layout.size)
+        elif source.effect == "per_row" and layout.row is not None:
+            rows, inverse = np.unique(layout.row, return_inverse=True)
+            latents, expand = rows.size, _gather(inverse)
+        elif source.correlation_length is not None and layout.positions is not None:
+            latents, expand = correlated_field(layout.positions, source.correlation_length)
+        return _InputErrors(name, f"{self._key}|{name}", latents, scale, expand, layout.is_scalar)
+
+    @property
+    def latents(self) -> int:
+        """Number of independent variables behind the errors of one draw."""
+        return sum(one.latents for one in self._inputs)
+
+    @property
+    def doubt_is_common(self) -> bool:
+        """Whether one factor per draw expresses what is not known about the uncertainty itself."""
+        return math.isfinite(self.source.degrees_of_freedom) and not self.source.from_samples
+
+    def draw(self, start: int, stop: int) -> dict[str, Array]:
+        """Errors of the draws `start` to `stop`.
+
+        Parameters
+        ----------
+        start, stop : int
+            First draw and one past the last.
+
+        Returns
+        -------
+        dict of str to ndarray, shape (stop - start, n), or (stop - start,) for single numbers
+            Additive errors in SI by input.
+        """
+        source = self.source
+
+        def fill(rng: np.random.Generator, out: Array) -> None:
+            unit_variables(rng, out, source.distribution)
+            if source.from_samples and math.isfinite(source.degrees_of_freedom):
+                out *= _doubt(rng, out.shape, source)
+
+        factor = None
+        if self.doubt_is_common:
+            factor = draw_blocks(f"{self._key}|doubt", start, stop, 1, lambda rng, out: _fill_doubt(rng, out, source))
+        errors = {}
+        for one in self._inputs:
+            latents = draw_blocks(one.key, start, stop, one.latents, fill)
+            if factor is not None:
+                latents *= factor
+            errors[one.name] = one.errors(latents)
+        return errors
+
+    def deviation(self, latent: int) -> dict[str, Array]:
+        """Errors when one independent variable is one standard deviation above zero and the others are zero.
+
+        Parameters
+        ----------
+        latent : int
+            Number of the variable, below `latents`.
+
+        Returns
+        -------
+        dict of str to ndarray, shape (1, n), or (1,) for single numbers
+        """
+        errors = {}
+        for one in self._inputs:
+            unit = np.zeros((1, one.latents))
+            if 0 <= latent < one.latents:
+                unit[0, latent] = self.source.spread
+            latent -= one.latents
+            errors[one.name] = one.errors(unit)
+        return errors
+
+
+def _repeat(size: int) -> Expansion:
+    return lambda latents: np.broadcast_to(latents, (len(latents), size))
+
+
+def _gather(index: NDArray[np.int64]) -> Expansion:
+    return lambda latents: latents[:, index]
+
+
+def _doubt(rng: np.random.Generator, shape: tuple[int, ...], source: Source) -> Array:
+    nu = source.degrees_of_freedom
+    if source.distribution == "rectangular":
+        result: Array = 1 + (2 * rng.random(shape) - 1) / math.sqrt(2 * nu)
+    else:
+        result = np.sqrt(nu / rng.chisquare(nu, shape))
+    return result
+
+
+def _fill_doubt(rng: np.random.Generator, out: Array, source: Source) -> None:
+    out[...] = _doubt(rng, out.shape, source)
+
+
+class ErrorSampler:
+    """The errors of all sources together, draw by draw.
+
+    Parameters
+    ----------
+    sources : sequence of Source
+        The sources of one survey.
+    layouts : mapping of str to InputLayout
+        The inputs by name.
+    seed : int or sequence of int
+        Seed of the survey. Two surveys with the same seed, names and layouts get the same errors; surveys that are to
+        be compared need seeds of their own, and share only the sources with a `shared_id`.
+
+    Raises
+    ------
+    SurveyError
+        If a source cannot act on these inputs (`check_sources`).
+    """
+
+    def __init__(self, sources: Sequence[Source], layouts: Mapping[str, InputLayout], *, seed: Seed) -> None:
+        check_sources(sources, layouts)
+        self.layouts = dict(layouts)
+        self.by_source = tuple(SourceErrors(source, layouts, seed=seed) for source in sources)
+
+    def zeros(self, draws: int) -> dict[str, Array]:
+        """No error at all, for every input.
+
+        Parameters
+        ----------
+        draws : int
+            Length of the leading axis.
+
+        Returns
+        -------
+        dict of str to ndarray, shape (draws, n), or (draws,) for single numbers
+        """
+        return {
+            name: np.zeros(draws if layout.is_scalar else (draws, layout.size)) for name, layout in self.layouts.items()
+        }
+
+    def draw(self, start: int, stop: int) -> dict[str, Array]:
+        """Sum of the errors of all sources for the draws `start` to `stop`.
+
+        Parameters
+        ----------
+        start, stop : int
+            First draw and one past the last.
+
+        Returns
+        -------
+        dict of str to ndarray, shape (stop - start, n), or (stop - start,) for single numbers
+            Every input of the layouts is there; those that no source acts on are zero.
+        """
+        total: dict[str, Array] = {}
+        for one in self.by_source:
+            for name, errors in one.draw(start, stop).items():
+                if name in total:
+                    total[name] += errors
+                else:
+                    total[name] = errors
+        zeros = self.zeros(0)
+        for name in zeros.keys() - total.keys():
+            total[name] = np.zeros((stop - start, *zeros[name].shape[1:]))
+        return total
+
+
+def draw_errors(
+    source: Source, layouts: Mapping[str, InputLayout], *, seed: Seed, draws: int, start: int = 0
+) -> dict[str, Array]:
+    """Errors of one source.
+
+    Parameters
+    ----------
+    source : Source
+        The source.
+    layouts : mapping of str to InputLayout
+        The inputs by name.
+    seed : int or sequence of int
+        Seed of the survey.
+    draws : int
+        How many draws.
+    start : int
+        Number of the first draw: chunks give the same numbers as one call.
+
+    Returns
+    -------
+    dict of str to ndarray, shape (draws, n), or (draws,) for single numbers
+        Additive errors in SI by input, for the inputs the source acts on.
+
+    Raises
+    ------
+    SurveyError
+        If the source cannot act on these inputs.
+    """
+    check_sources([source], layouts)
+    return SourceErrors(source, layouts, seed=seed).draw(start, start + draws)
