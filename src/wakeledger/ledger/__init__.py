@@ -1,0 +1,1 @@
+"""What is reported, held against each other, and kept."""

@@ -1,0 +1,1 @@
+"""A finished ledger in, pictures and text out."""

@@ -1,0 +1,1 @@
+"""The report of a finished ledger, one self-contained HTML file."""

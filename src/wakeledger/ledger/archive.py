@@ -1,0 +1,223 @@
+"""The archive: one netCDF-4 file (CF-1.11) that holds a whole ledger and everything needed to reduce it again.
+
+The root holds the rows, their covariance and the reference state; the groups hold the plane, the raw points and the
+other tables; the survey file's text and the provenance are attributes of the root.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import json
+import os
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from wakeledger.core.errors import DataError
+from wakeledger.ledger import encoding
+from wakeledger.ledger.rows import BudgetLine, Check, Comparison, CrossCheck, Ledger, Row
+from wakeledger.ledger.tabular import rows_dataset
+from wakeledger.ledger.units import scalar
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+#: Version of the archive's layout; a file with a higher one is refused.
+ARCHIVE_FORMAT = 1
+
+#: Name of the root attribute that holds the version, and by which an archive is recognised.
+FORMAT_ATTRIBUTE = "wakeledger_format"
+
+#: Groups that hold a table of records: field of `Ledger`, record, dimension.
+_RECORDS: tuple[tuple[str, type, str], ...] = (
+    ("estimates", CrossCheck, "estimate"),
+    ("comparisons", Comparison, "comparison"),
+    ("budget", BudgetLine, "line"),
+    ("checks", Check, "check"),
+)
+
+#: Groups that hold a dataset and may be absent.
+_TABLES = ("wake_line", "vortices", "span")
+
+#: Root attributes that hold a JSON object of strings.
+_MAPPINGS = ("test", "inputs", "provenance")
+
+
+def write_archive(ledger: Ledger, path: str | os.PathLike[str]) -> None:
+    """Write a ledger to its archive, whole or not at all.
+
+    Parameters
+    ----------
+    ledger : Ledger
+        The ledger.
+    path : path
+        The file; an existing one is replaced in one step when the new one is complete.
+
+    Raises
+    ------
+    DataError
+        If the file cannot be written there.
+    """
+    target = Path(path)
+    groups = _groups(ledger)
+    part = target.with_name(f".{target.name}.{os.getpid()}.part")
+    try:
+        mode = "w"
+        for group, dataset in groups.items():
+            encoding.write_group(dataset, part, group=group or None, mode=mode)
+            mode = "a"
+        part.replace(target)
+    except OSError as error:
+        raise _unwritable(target, error) from error
+    finally:
+        part.unlink(missing_ok=True)
+
+
+def open_archive(path: str | os.PathLike[str]) -> Ledger:
+    """Read a ledger from its archive.
+
+    Parameters
+    ----------
+    path : path
+        The file.
+
+    Returns
+    -------
+    Ledger
+        Equal to the one that was written.
+
+    Raises
+    ------
+    DataError
+        If the file is missing, not netCDF, not an archive of this program, of a newer layout, or damaged.
+    """
+    source = Path(path)
+    if not source.is_file():
+        found = "is a directory" if source.is_dir() else "does not exist"
+        raise DataError(f"the archive {found}", file=source, remedy="give the ledger.nc of a finished reduction")
+    try:
+        root = encoding.read_group(source)
+    except PermissionError as error:
+        raise DataError("the archive cannot be read", file=source, remedy="check its permissions") from error
+    except Exception as error:
+        raise DataError(
+            "the file is not netCDF, or is damaged", file=source, remedy="give the ledger.nc of a finished reduction"
+        ) from error
+    if FORMAT_ATTRIBUTE not in root.attrs:
+        raise DataError(
+            "the netCDF file is not a ledger", file=source, remedy="give the ledger.nc of a finished reduction"
+        )
+    version = root.attrs[FORMAT_ATTRIBUTE]
+    if isinstance(version, int | np.integer) and version > ARCHIVE_FORMAT:
+        raise DataError(
+            f"the archive has format {version}, this program reads up to {ARCHIVE_FORMAT}",
+            file=source,
+            remedy="open it with a newer version of this program",
+        )
+    try:
+        return _ledger(root, source)
+    except Exception as error:
+        raise DataError(
+            f"the archive is damaged or incomplete ({type(error).__name__}: {error})",
+            file=source,
+            remedy="take the file from its backup, or reduce the survey again",
+        ) from error
+
+
+def is_archive(path: str | os.PathLike[str]) -> bool:
+    """Whether a file starts like netCDF-4 (HDF5), so that it is to be opened as an archive rather than read as TOML.
+
+    Parameters
+    ----------
+    path : path
+        The file.
+
+    Returns
+    -------
+    bool
+        False also where the file cannot be read.
+    """
+    try:
+        with Path(path).open("rb") as stream:
+            return stream.read(8) == b"\x89HDF\r\n\x1a\n"
+    except OSError:
+        return False
+
+
+def _unwritable(target: Path, error: OSError) -> DataError:
+    reason = error.strerror or str(error)
+    return DataError(f"the archive cannot be written ({reason})", file=target, remedy="choose another place with --out")
+
+
+def _groups(ledger: Ledger) -> dict[str, xr.Dataset]:
+    import xarray as xr
+
+    root = rows_dataset(ledger)
+    command = ledger.provenance.get("command", "")
+    root.attrs = {
+        "Conventions": "CF-1.11",
+        FORMAT_ATTRIBUTE: np.int32(ARCHIVE_FORMAT),
+        "title": ledger.title,
+        "history": f"{ledger.provenance.get('time', '')} {command}".strip(),
+        "source": f"wakeledger {ledger.provenance.get('version wakeledger', '')}".strip(),
+        "comment": "Engineering estimates from a wake survey; see the variables' long names for signs and units.",
+        "compressible": np.int8(ledger.compressible),
+        "survey_text": ledger.survey_text,
+        "notes": json.dumps(list(ledger.notes), ensure_ascii=False),
+        "reference_names": json.dumps(list(ledger.reference)),
+    }
+    root.attrs |= {name: json.dumps(dict(getattr(ledger, name)), ensure_ascii=False) for name in _MAPPINGS}
+    groups = {"": root, "plane": encoding.with_ancillaries(ledger.plane)}
+    for name, record, dimension in _RECORDS:
+        groups[name] = encoding.records_dataset(getattr(ledger, name), record, dimension)
+    for name in _TABLES:
+        table = getattr(ledger, name)
+        if table is not None:
+            groups[name] = table
+    groups["model"] = xr.Dataset({name: scalar(name, value, "model") for name, value in ledger.model.items()})
+    groups["raw"] = encoding.points_dataset(ledger.raw)
+    return groups
+
+
+def _ledger(root: xr.Dataset, source: Path) -> Ledger:
+    present = encoding.group_names(source)
+    tables: dict[str, Any] = {
+        name: encoding.read_group(source, group=name) if name in present else None for name in _TABLES
+    }
+    for name, record, _ in _RECORDS:
+        tables[name] = encoding.dataset_records(encoding.read_group(source, group=name), record)
+    for name in _MAPPINGS:
+        tables[name] = json.loads(root.attrs[name])
+    model = encoding.read_group(source, group="model")
+    return Ledger(
+        title=root.attrs["title"],
+        compressible=bool(root.attrs["compressible"]),
+        rows=_rows(root),
+        covariance=root["covariance"].values,
+        plane=encoding.without_ancillaries(encoding.read_group(source, group="plane")),
+        raw=encoding.dataset_points(encoding.read_group(source, group="raw")),
+        survey_text=root.attrs["survey_text"],
+        notes=tuple(json.loads(root.attrs["notes"])),
+        reference={name: float(root[name]) for name in json.loads(root.attrs["reference_names"])},
+        model={str(name): float(variable) for name, variable in model.data_vars.items()},
+        **tables,
+    )
+
+
+def _rows(root: xr.Dataset) -> tuple[Row, ...]:
+    rows = []
+    names = [field.name for field in dataclasses.fields(Row) if field.name not in ("name", "unit", "reason")]
+    for index, name in enumerate(root["row"].values):
+        numbers = {key: float(root[key].values[index]) for key in names}
+        corrected = numbers.pop("coefficient_corrected")
+        rows.append(
+            Row(
+                name=str(name),
+                unit=str(root["unit"].values[index]),
+                reason=str(root["reason"].values[index]) or None,
+                coefficient_corrected=None if np.isnan(corrected) else corrected,
+                **numbers,
+            )
+        )
+    return tuple(rows)
