@@ -1,0 +1,1 @@
+"""The undisturbed stream: gas, atmosphere, airspeed and the reference state, in SI."""
