@@ -3,28 +3,40 @@
 The truth shares no code with what it judges: this room imports only the vocabulary and the stream.
 """
 
+from wakeledger.synthetic.aircraft import wing_and_tail_wake, wing_wake
 from wakeledger.synthetic.elements import GaussianElements, mutual_drag, vortex_pair
 from wakeledger.synthetic.lifting_line import LiftingLine
 from wakeledger.synthetic.loadings import LOADINGS, THIN_SHEET_EFFICIENCY, shed, straight_edge, thin_sheet_limit, v_edge
+from wakeledger.synthetic.losses import GaussianLosses, no_losses, sheet_losses, tip_cores
 from wakeledger.synthetic.optimum import OptimumLoading, optimum_efficiency, optimum_loading
 from wakeledger.synthetic.rollup import RolledUpWake, Sheet, roll_up, rolled_up_wing
+from wakeledger.synthetic.wakes import FlowState, SyntheticWake, Truth
 
 __all__ = [
     "LOADINGS",
     "THIN_SHEET_EFFICIENCY",
+    "FlowState",
     "GaussianElements",
+    "GaussianLosses",
     "LiftingLine",
     "OptimumLoading",
     "RolledUpWake",
     "Sheet",
+    "SyntheticWake",
+    "Truth",
     "mutual_drag",
+    "no_losses",
     "optimum_efficiency",
     "optimum_loading",
     "roll_up",
     "rolled_up_wing",
     "shed",
+    "sheet_losses",
     "straight_edge",
     "thin_sheet_limit",
+    "tip_cores",
     "v_edge",
     "vortex_pair",
+    "wing_and_tail_wake",
+    "wing_wake",
 ]
