@@ -108,5 +108,7 @@ def array_of(plane: xr.Dataset, name: str) -> NDArray[np.float64]:
     unit = plane[name].attrs.get("units")
     expected = PLANE_VARIABLES[name].unit
     if unit != expected:
-        raise DataError(f"{name} has units {unit!r}", remedy=f"give it in {expected!r} and say so in its units attribute")
+        raise DataError(
+            f"{name} has units {unit!r}", remedy=f"give it in {expected!r} and say so in its units attribute"
+        )
     return np.asarray(plane[name].transpose("z", "y").values, dtype=float)

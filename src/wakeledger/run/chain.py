@@ -1,0 +1,476 @@
+"""The whole chain from raw points to rows as one function of data, settings and errors.
+
+The reduction, its Monte Carlo draws, its numerical terms and whatever plans or compares surveys all run this function:
+nothing is computed one way for the value and another way for its uncertainty.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from types import MappingProxyType
+
+import numpy as np
+from numpy.typing import NDArray
+
+from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.core.points import Points
+from wakeledger.core.rotation import rotation_matrix
+from wakeledger.intake.gridding import Gridding
+from wakeledger.intake.state import point_state
+from wakeledger.physics.fields.differences import axial_vorticity
+from wakeledger.physics.fields.flow import Flow
+from wakeledger.physics.fields.lifting_line import near_field_crossflow
+from wakeledger.physics.fields.outer_flow import crossflow_offset, induced_crossflow, loss_zero
+from wakeledger.physics.fields.pressure import crossflow_pressure
+from wakeledger.physics.fields.wake_region import Mask, WakeRegion, region_of, wake_region
+from wakeledger.physics.methods.betz_area import loss_free_axial_velocity, profile_integrand
+from wakeledger.physics.methods.energy_area import crossflow_energy
+from wakeledger.physics.methods.entropy_area import entropy_profile_drag
+from wakeledger.physics.methods.momentum_area import momentum_drag
+from wakeledger.physics.methods.residual import residual_drag
+from wakeledger.physics.methods.vorticity_area import VorticityForces, vorticity_forces
+from wakeledger.physics.methods.wake_line import WakeCuts
+from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
+from wakeledger.physics.vortices.vortex_sum import WakeParts
+from wakeledger.physics.vortices.vortex_sum import evaluate as evaluate_vortex_sum
+from wakeledger.stream.reference import Reference, resolve_reference
+
+#: Rows the chain always gives, in the ledger's order.
+ROWS = (
+    "profile_drag",
+    "induced_drag",
+    "residual_drag",
+    "total_drag",
+    "lift",
+    "side_force",
+    "rolling_moment",
+    "span_efficiency",
+)
+#: Cross-checks the chain gives beside them, as (row, method).
+ESTIMATES = (
+    ("profile_drag", "entropy_area"),
+    ("induced_drag", "energy_area"),
+    ("induced_drag", "wake_line"),
+    ("induced_drag", "vortex_sum"),
+    ("total_drag", "momentum_area"),
+    ("lift", "wake_line"),
+)
+
+
+def coefficient_of(row: str) -> str:
+    """Name of a row's coefficient among the chain's outputs."""
+    return f"{row} coefficient"
+
+
+def estimate_of(row: str, method: str) -> str:
+    """Name of an estimate among the chain's outputs."""
+    return f"{row} {method}"
+
+
+#: Everything the chain gives, in the order of its output vector.
+OUTPUTS: tuple[str, ...] = (
+    *ROWS,
+    *(coefficient_of(row) for row in ROWS),
+    *(estimate_of(row, method) for row, method in ESTIMATES),
+)
+
+
+@dataclass(frozen=True)
+class Settings:
+    """What the survey file fixes about the chain, in SI.
+
+    Attributes
+    ----------
+    reference : mapping of str to float
+        The inputs of ``[reference]`` as given.
+    compressible : bool
+        Whether the compressible relations are used; decided once, on the nominal values.
+    primary : {"total_pressure", "velocity"}
+        Which variables were measured.
+    offsets : (float, float, float)
+        Pitch, yaw and roll of the file's axes, rad.
+    station, bound_line : float
+        Where the plane and the bound line are, m behind the trailing edge.
+    reference_area, span : float
+        m² and m; the span is NaN where it is not given.
+    moment_centre : (float, float)
+        y and z of the rolling moment's axis, m.
+    level : float
+        Boundary level of the wake region in units of the noise.
+    grow : float or None
+        How far the region is grown, m.
+    include, exclude : tuple of ndarray
+        Boxes and polygons that belong to the wake region, or do not.
+    """
+
+    reference: Mapping[str, float]
+    compressible: bool
+    primary: str
+    offsets: tuple[float, float, float]
+    station: float
+    bound_line: float
+    reference_area: float
+    span: float
+    moment_centre: tuple[float, float] = (0.0, 0.0)
+    level: float = 3.0
+    grow: float | None = None
+    include: tuple[Array, ...] = ()
+    exclude: tuple[Array, ...] = ()
+
+
+@dataclass(frozen=True)
+class Frozen:
+    """What is found once on the nominal plane and kept for every draw.
+
+    Attributes
+    ----------
+    near_field : (ndarray, ndarray) or None
+        Crossflow of the bound vortex at the plane, m/s.
+    cuts : WakeCuts or None
+        How the wake line cuts the wake.
+    parts : WakeParts or None
+        How the vortex sum divides the wake.
+    bias : mapping of str to float
+        Noise bias of each output, in its unit, subtracted from it.
+    """
+
+    near_field: tuple[Array, Array] | None = None
+    cuts: WakeCuts | None = None
+    parts: WakeParts | None = None
+    bias: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
+
+
+@dataclass(frozen=True)
+class Variation:
+    """A numerical choice made differently, to see what it is worth.
+
+    Attributes
+    ----------
+    grow_factor : float
+        Factor on the distance by which the wake region is grown.
+    mask : ndarray of bool or None
+        A given wake region instead of a found one.
+    loss_shift : float
+        Added to the loss zero, Pa.
+    crossflow_shift : (float, float)
+        Added to the crossflow offset, m/s.
+    """
+
+    grow_factor: float = 1.0
+    mask: Mask | None = None
+    loss_shift: float = 0.0
+    crossflow_shift: tuple[float, float] = (0.0, 0.0)
+
+
+@dataclass(frozen=True)
+class Reduction:
+    """One pass through the chain.
+
+    Attributes
+    ----------
+    reference : Reference
+        The undisturbed stream.
+    flow : Flow
+        The plane, total pressure zeroed in the outer flow.
+    region : WakeRegion
+        The wake region (its `mask` in use).
+    vorticity : ndarray, shape (nz, ny)
+        Axial vorticity inside the region, s⁻¹.
+    forces : VorticityForces
+        Forces of that vorticity, noise bias included.
+    loss_free : ndarray, shape (nz, ny)
+        u*, m/s.
+    profile_integrand : ndarray, shape (nz, ny)
+        Betz's integrand inside the region, Pa.
+    loss_zero : float
+        Mean loss of the outer flow that was taken out, Pa.
+    crossflow_offset : (float, float)
+        Outer crossflow not explained by the wake, m/s; taken out for the energy forms only.
+    values : mapping of str to float
+        The outputs by name; NaN where one cannot be had.
+    invalid_area : float
+        Area where the expansion to the stream's pressure has no real value, m².
+    residual_parts : (float, float)
+        Divergence and axial part of the residual, N.
+    """
+
+    reference: Reference
+    flow: Flow
+    region: WakeRegion
+    vorticity: Array
+    forces: VorticityForces
+    loss_free: Array
+    profile_integrand: Array
+    loss_zero: float
+    crossflow_offset: tuple[float, float]
+    values: Mapping[str, float]
+    invalid_area: float
+    residual_parts: tuple[float, float]
+
+    @property
+    def vector(self) -> Array:
+        """The outputs in the order of `OUTPUTS`."""
+        return np.array([self.values[name] for name in OUTPUTS])
+
+
+_NO_ERRORS: Mapping[str, Array] = MappingProxyType({})
+_AS_FOUND = Variation()
+
+
+@dataclass(frozen=True)
+class Chain:
+    """Data and settings of one survey, ready to be reduced under any errors.
+
+    Attributes
+    ----------
+    points : Points
+        The points as read.
+    gridding : Gridding
+        How they come onto the uniform grid.
+    settings : Settings
+        The survey's settings.
+    frozen : Frozen
+        What was found once on the nominal plane.
+    gradients : mapping of str to ndarray, shape (2, n)
+        Derivative of each channel along y and z at the points, for errors of position; empty where there are none.
+    """
+
+    points: Points
+    gridding: Gridding
+    settings: Settings
+    frozen: Frozen = Frozen()
+    gradients: Mapping[str, Array] = field(default_factory=lambda: MappingProxyType({}))
+
+    def with_gridding(self, gridding: Gridding) -> Chain:
+        """The same survey on another grid, without what was found on this one."""
+        return replace(self, gridding=gridding, frozen=replace(self.frozen, near_field=None, cuts=None, parts=None))
+
+    def reference(self, errors: Mapping[str, Array] = _NO_ERRORS) -> Reference:
+        """The undisturbed stream under errors of its inputs."""
+        given = dict(self.settings.reference)
+        for name in given:
+            error = errors.get(f"reference.{name}")
+            if error is not None:
+                given[name] += float(error)
+        return resolve_reference(given, compressible=self.settings.compressible)
+
+    def flow(self, reference: Reference, errors: Mapping[str, Array] = _NO_ERRORS) -> Flow:
+        """The gridded plane under errors of the points, flow angles and positions.
+
+        The primary variables are gridded and the dependent one follows from them on the grid, so that H, p and u are
+        consistent at every place.
+        """
+        values = {}
+        for name, channel in self.points.channels.items():
+            array = channel.values
+            error = errors.get(f"plane.{name}")
+            if error is not None:
+                array = array + error
+            for axis, coordinate in enumerate(("y", "z")):
+                shift = errors.get(f"position.{coordinate}")
+                if shift is not None and name in self.gradients:
+                    # A point believed at y + δ was measured at y: the field read at its nominal place changes by −δ ∂f.
+                    array = array - shift * self.gradients[name][axis]
+            values[name] = array
+        pitch, yaw, roll = (
+            offset + errors.get(f"angle.{name}", 0.0)
+            for name, offset in zip(("pitch", "yaw", "roll"), self.settings.offsets, strict=True)
+        )
+        state = point_state(
+            values,
+            self.points.channels,
+            reference,
+            primary=self.settings.primary,
+            axes=self.points.axes,
+            rotation=rotation_matrix(pitch, yaw, roll),
+        )
+        grid = self.gridding.grid
+        apply = self.gridding.apply
+        v, w = apply(state.v), apply(state.w)
+        density, temperature = reference.density, np.nan
+        if self.settings.primary == "total_pressure" or reference.compressible:
+            total, static = apply(state.total_pressure), apply(state.static_pressure)
+            u = apply(state.u)
+            if reference.compressible:
+                density, temperature = apply(state.density), apply(state.temperature)
+            else:
+                square = 2 * (total - static) / reference.density - v**2 - w**2
+                u = np.where(square > 0, np.sqrt(np.maximum(square, 0.0)), u)
+        else:
+            u = apply(state.u)
+            kinetic = 0.5 * reference.density * (u**2 + v**2 + w**2)
+            if state.static_pressure is not None:
+                static = apply(state.static_pressure)
+                total = static + kinetic
+            elif state.total_pressure is not None:
+                total = apply(state.total_pressure)
+                static = total - kinetic
+            else:
+                static = reference.static_pressure + crossflow_pressure(v, w, grid, density=reference.density)
+                total = static + kinetic
+        total_temperature = temperature
+        if reference.compressible:
+            total_temperature = temperature + (u**2 + v**2 + w**2) / (2 * reference.heat_capacity)
+        return Flow(grid, u, v, w, total, static, density, total_temperature)
+
+    def reduce(
+        self, errors: Mapping[str, Array] = _NO_ERRORS, *, vary: Variation = _AS_FOUND, estimates: bool = True
+    ) -> Reduction:
+        """One pass from points to rows.
+
+        Parameters
+        ----------
+        errors : mapping of str to ndarray
+            Additive errors of the inputs in SI, by the names of `layouts`.
+        vary : Variation
+            Numerical choices made differently.
+        estimates : bool
+            Whether to evaluate the cross-checks; they are NaN otherwise.
+
+        Returns
+        -------
+        Reduction
+        """
+        settings = self.settings
+        reference = self.reference(errors)
+        flow = self.flow(reference, errors)
+        grid = flow.grid
+        loss = reference.total_pressure - flow.total_pressure
+        whole_vorticity = axial_vorticity(flow.v, flow.w, grid)
+        region = self._region(loss, whole_vorticity, grid, vary)
+        mask = region.mask
+        zero = loss_zero(loss, mask) + vary.loss_shift
+        flow = self._zeroed(flow, reference, zero)
+        vorticity = np.where(mask, whole_vorticity, 0.0)
+        forces = vorticity_forces(vorticity, grid, reference, moment_centre=settings.moment_centre)
+        loss_free = loss_free_axial_velocity(flow, reference)
+        integrand = np.where(mask, profile_integrand(flow, reference, loss_free), 0.0)
+        divergence_part, axial_part = residual_drag(flow, reference, loss_free, mask)
+        bias = self.frozen.bias
+        profile = float(grid.integrate(integrand))
+        induced = float(forces.induced_drag) - bias.get("induced_drag", 0.0)
+        residual = float(divergence_part + axial_part) - bias.get("residual_drag", 0.0)
+        values = dict.fromkeys(OUTPUTS, np.nan)
+        values |= {
+            "profile_drag": profile,
+            "induced_drag": induced,
+            "residual_drag": residual,
+            "total_drag": profile + induced + residual,
+            "lift": float(forces.lift),
+            "side_force": float(forces.side_force),
+            "rolling_moment": float(forces.rolling_moment),
+        }
+        area = settings.reference_area + float(errors.get("model.reference_area", 0.0))
+        span = settings.span + float(errors.get("model.span", 0.0))
+        q = reference.dynamic_pressure
+        if induced > 0:
+            values["span_efficiency"] = values["lift"] ** 2 / (np.pi * q * span**2 * induced)
+        for row in ROWS:
+            if row != "span_efficiency":
+                values[coefficient_of(row)] = values[row] / (q * area * (span if row == "rolling_moment" else 1.0))
+        offset, invalid = (0.0, 0.0), 0.0
+        if estimates:
+            offset, invalid = self._estimate(values, flow, reference, region, vorticity, forces, vary)
+        return Reduction(
+            reference,
+            flow,
+            region,
+            vorticity,
+            forces,
+            loss_free,
+            integrand,
+            zero,
+            offset,
+            MappingProxyType(values),
+            invalid,
+            (float(divergence_part), float(axial_part)),
+        )
+
+    def _region(self, loss: Array, vorticity: Array, grid: UniformGrid, vary: Variation) -> WakeRegion:
+        settings = self.settings
+        if vary.mask is not None:
+            nan = float("nan")
+            return WakeRegion(vary.mask, nan, nan, nan, nan, nan, nan)
+        grow = settings.grow
+        if grow is None:
+            grow = default_grow(self.gridding)
+        return wake_region(
+            loss,
+            vorticity,
+            grid,
+            level=settings.level,
+            grow=grow * vary.grow_factor,
+            include=region_of(settings.include, grid) if settings.include else None,
+            exclude=region_of(settings.exclude, grid) if settings.exclude else None,
+        )
+
+    def _zeroed(self, flow: Flow, reference: Reference, zero: float) -> Flow:
+        total = flow.total_pressure + zero
+        if self.settings.primary != "total_pressure" or reference.compressible:
+            return replace(flow, total_pressure=total)
+        square = 2 * (total - flow.static_pressure) / reference.density - flow.v**2 - flow.w**2
+        u = np.where(square > 0, np.sqrt(np.maximum(square, 0.0)), flow.u)
+        return replace(flow, total_pressure=total, u=u)
+
+    def _estimate(
+        self,
+        values: dict[str, float],
+        flow: Flow,
+        reference: Reference,
+        region: WakeRegion,
+        vorticity: Array,
+        forces: VorticityForces,
+        vary: Variation,
+    ) -> tuple[tuple[float, float], float]:
+        """Fill in the cross-checks; gives the crossflow offset and the area without a real expansion."""
+        grid, mask, bias = flow.grid, region.mask, self.frozen.bias
+        entropy, invalid = entropy_profile_drag(flow, reference, mask)
+        values[estimate_of("profile_drag", "entropy_area")] = float(entropy)
+        near_field = self.frozen.near_field
+        if near_field is None:
+            near_field = self.near_field(vorticity, grid)
+        own = induced_crossflow(forces.stream_function, grid)
+        outer = (~mask).astype(float)
+        offset = np.zeros(2)
+        if outer.sum() > 0:
+            offset = crossflow_offset(flow.v, flow.w, own, near_field, outer)
+        offset = offset + np.asarray(vary.crossflow_shift)
+        v, w = flow.v - offset[0], flow.w - offset[1]
+        energy = float(crossflow_energy(v, w, grid, density=reference.density))
+        name = estimate_of("induced_drag", "energy_area")
+        values[name] = energy - bias.get(name, 0.0)
+        aligned = replace(flow, v=v, w=w)
+        name = estimate_of("total_drag", "momentum_area")
+        values[name] = float(momentum_drag(aligned, reference)) - bias.get(name, 0.0)
+        if self.frozen.cuts is not None:
+            line = evaluate_wake_line(self.frozen.cuts, v, w, density=reference.density, speed=reference.speed)
+            for row, value in (("induced_drag", line.induced_drag), ("lift", line.lift)):
+                name = estimate_of(row, "wake_line")
+                values[name] = float(value) - bias.get(name, 0.0)
+        if self.frozen.parts is not None:
+            name = estimate_of("induced_drag", "vortex_sum")
+            found = evaluate_vortex_sum(self.frozen.parts, v, w, density=reference.density)
+            values[name] = float(found.induced_drag) - bias.get(name, 0.0)
+        return (float(offset[0]), float(offset[1])), float(invalid)
+
+    def near_field(self, vorticity: Array, grid: UniformGrid) -> tuple[Array, Array]:
+        """Crossflow that the bound vortex adds at the plane, m/s; zero where the plane is not behind it."""
+        distance = self.settings.station - self.settings.bound_line
+        if not distance > 0:
+            return np.zeros(grid.shape), np.zeros(grid.shape)
+        return near_field_crossflow(vorticity, grid, distance=distance)
+
+
+def default_grow(gridding: Gridding) -> float:
+    """How far the wake region is grown where the survey file does not say, m: four spacings of the measured points."""
+    from wakeledger.physics.fields.wake_region import GROW_CELLS
+
+    return GROW_CELLS * max(gridding.raw_spacing)
+
+
+def sampled_mask(mask: Mask, grid: UniformGrid, onto: UniformGrid) -> NDArray[np.bool_]:
+    """A wake region brought onto another grid of the same plane, by nearest place."""
+    iz = np.clip(np.rint((onto.z - grid.z0) / grid.dz).astype(int), 0, grid.nz - 1)
+    iy = np.clip(np.rint((onto.y - grid.y0) / grid.dy).astype(int), 0, grid.ny - 1)
+    return mask[np.ix_(iz, iy)]
