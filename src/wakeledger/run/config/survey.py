@@ -1,0 +1,317 @@
+"""The survey file as a whole: read, checked, and brought to SI."""
+
+from __future__ import annotations
+
+import hashlib
+import re
+import tomllib
+from pathlib import Path
+from typing import Annotated
+
+from pydantic import BeforeValidator, Field, PrivateAttr, ValidationError, model_validator
+from pydantic_core import PydanticCustomError
+
+from wakeledger.core.errors import SurveyError
+from wakeledger.run.config.errors import survey_error
+from wakeledger.run.config.plane import Plane, check_positions, check_primary
+from wakeledger.run.config.quantities import Label, Table, below, fail, one_or_more_tables, tables
+from wakeledger.run.config.stream import ModelTable, ReferenceTable
+from wakeledger.run.config.tables import (
+    BodyTable,
+    BoundaryTable,
+    EmptyTunnelTable,
+    LoadingTable,
+    PlanTable,
+    ProbeTable,
+    SectionTable,
+    TestTable,
+    WakeTable,
+)
+from wakeledger.run.config.uncertainty import Comparison, UncertaintyTable, allowed_targets, refuse_twice
+
+#: Formats that later work reads, by the ending of the file's name.
+_LATER_FORMATS = {
+    **dict.fromkeys((".vtk", ".vtp", ".vtu", ".vts", ".vtr", ".vti", ".vtm", ".pvtu", ".pvtp"), "VTK"),
+    ".cgns": "CGNS",
+    ".mat": "MATLAB",
+    ".foam": "OpenFOAM",
+}
+
+
+class Survey(Table):
+    """One survey, completely described: the content of a survey file with every quantity in SI.
+
+    Attributes
+    ----------
+    title : str
+    test, reference, model, empty_tunnel, boundary, wake, section, loading, uncertainty, plan
+        The tables of the file under their own names; None where an optional one is absent.
+    planes, probe, body, compare
+        Tables that may stand more than once, as tuples; `plane` is the first plane.
+    """
+
+    title: Label = ""
+    test: TestTable = TestTable()
+    reference: ReferenceTable = Field(description="[reference] (the undisturbed stream: speed, density, ...)")
+    model: ModelTable | None = None
+    planes: Annotated[tuple[Plane, ...], BeforeValidator(one_or_more_tables)] = Field(
+        alias="plane", description="[plane] (the data file and where its variables stand)"
+    )
+    probe: Annotated[tuple[ProbeTable, ...], BeforeValidator(one_or_more_tables)] = ()
+    empty_tunnel: EmptyTunnelTable | None = None
+    boundary: BoundaryTable | None = None
+    wake: WakeTable = WakeTable()
+    section: SectionTable | None = None
+    body: Annotated[tuple[BodyTable, ...], BeforeValidator(tables)] = ()
+    loading: LoadingTable | None = None
+    uncertainty: UncertaintyTable = UncertaintyTable()
+    compare: Annotated[tuple[Comparison, ...], BeforeValidator(tables)] = ()
+    plan: PlanTable | None = None
+    _path: Path = PrivateAttr(default=Path())
+    _text: str = PrivateAttr(default="")
+
+    @classmethod
+    def written(cls, key: str) -> str:
+        """How messages name a table of the file."""
+        return f"table [{key}]"
+
+    @property
+    def plane(self) -> Plane:
+        """The first plane; the only one of most surveys."""
+        return self.planes[0]
+
+    @property
+    def path(self) -> Path:
+        """The survey file."""
+        return self._path
+
+    @property
+    def text(self) -> str:
+        """The file as read."""
+        return self._text
+
+    @property
+    def sha256(self) -> str:
+        """SHA-256 of the file, in hexadecimal digits."""
+        return hashlib.sha256(self._text.encode()).hexdigest()
+
+    def resolve(self, name: str) -> Path:
+        """Path of a file that the survey names, relative to the survey file."""
+        return self._path.parent / name
+
+    @model_validator(mode="after")
+    def _tables_fit_together(self) -> Survey:
+        if self.model is None and self.section is None:
+            raise fail("table [model] is missing", 'add [model] with reference_area = "0.180 m^2"')
+        if self.boundary is None and self.section is None:
+            raise fail(
+                "table [boundary] is missing",
+                'add [boundary] with kind = "free_air", "closed_walls" or "open_jet": the surroundings are never assumed',
+            )
+        for index, plane in enumerate(self.planes):
+            place: tuple[str | int, ...] = ("plane", index)
+            edge_static = self.section.edge_static if self.section else None
+            try:
+                check_positions(plane, coordinates=2 if edge_static is None else 1)
+                check_primary(plane, edge_static=edge_static)
+            except PydanticCustomError as error:
+                raise below(error, *place) from error
+            if plane.primary == "hole_pressures" and not any(probe.calibration for probe in self.probe):
+                raise fail(
+                    'primary = "hole_pressures" needs a calibrated probe',
+                    'add [probe] with calibration = "probe.toml"',
+                    *place,
+                    "primary",
+                )
+        refuse_twice(self.compare, "compare")
+        refuse_twice(self.body, "body")
+        half = self.boundary is not None and self.boundary.reflection == "y"
+        for index, comparison in enumerate(self.compare):
+            if half and comparison.as_measured is None:
+                raise fail(
+                    "key 'as_measured' is missing for a half model",
+                    'add as_measured = "half" (what the balance of the half model read) or "whole" (both halves)',
+                    "compare",
+                    index,
+                )
+            if not half and comparison.as_measured is not None:
+                raise fail(
+                    "as_measured is given without a half model",
+                    'leave it out, or add [boundary] reflection = "y"',
+                    "compare",
+                    index,
+                    "as_measured",
+                )
+        return self
+
+    def unsupported(self) -> list[str]:
+        """What the file asks for that this version does not do.
+
+        Returns
+        -------
+        list of str
+            Sentences "place: what"; empty where everything is acted on.
+        """
+        found: list[str] = []
+
+        def add(present: object, place: str, what: str) -> None:
+            if present:
+                found.append(f"{place}: {what}")
+
+        add(len(self.planes) > 1, "[[plane]]", "several planes are not combined yet; keep one [plane] per survey file")
+        for plane in self.planes:
+            holes = sorted(name for name in plane.columns if re.fullmatch(r"p\d", name))
+            raw = plane.primary == "hole_pressures"
+            add(raw, "[plane] primary", "hole pressures are not reduced yet; give total pressure and flow direction")
+            add(
+                holes and not raw,
+                f"[plane.columns] {', '.join(holes)}",
+                "hole pressures are not used yet; leave them out",
+            )
+            add(
+                "tube" in plane.columns,
+                "[plane.columns] tube",
+                "rakes are not assembled yet; give each point's position",
+            )
+            format_ = _LATER_FORMATS.get(Path(plane.file).suffix.lower())
+            add(format_, "[plane] file", f"{format_} files are not read yet; export the plane as a table or netCDF")
+        add(
+            self.probe,
+            "[probe]",
+            "probe calibrations are not applied yet; give velocities and pressures, and leave it out",
+        )
+        add(self.empty_tunnel, "[empty_tunnel]", "an empty-tunnel survey is not subtracted yet; leave it out")
+        if self.boundary is not None and self.boundary.kind != "free_air":
+            add(True, "[boundary] kind", f'"{self.boundary.kind}" is not computed yet; only "free_air" is')
+        add(self.body, "[[body]]", "bodies are not told apart yet; leave it out")
+        add(self.loading, "[loading]", "the least induced drag of a trailing edge is not computed yet; leave it out")
+        add(self.plan, "[plan]", "surveys are not planned yet; leave it out")
+        for source in self.uncertainty.source:
+            later = [name for name in source.applies_to if name.split(".")[0] in ("probe", "calibration")]
+            add(
+                later,
+                f"[[uncertainty.source]] ({source.name}) applies_to",
+                f"{', '.join(later)} is not perturbed yet; give the uncertainty of the reduced quantities",
+            )
+        return found
+
+    def notes(self) -> list[str]:
+        """What is lost because an optional key is absent.
+
+        Returns
+        -------
+        list of str
+            Sentences "place: what".
+        """
+        found: list[str] = []
+        if self.model is None:
+            found.append("[model]: it is absent, so forces have no coefficients")
+        else:
+            if self.model.span is None:
+                found.append("[model] span: it is absent, so span efficiency and moment coefficients are unknown")
+            if self.model.quarter_chord() is None:
+                found.append(
+                    "[model] mean_chord: it is absent, and quarter_chord_x too, so the bound vortex's effect on "
+                    "the energy form is not predicted"
+                )
+        if not self.uncertainty.source:
+            found.append("[[uncertainty.source]]: there is none, so the uncertainty of the measurement is unknown")
+        return found
+
+
+def parse_survey(text: str, path: Path | str) -> Survey:
+    """Check the text of a survey file.
+
+    Parameters
+    ----------
+    text : str
+        TOML, as read from the file or kept in an archive.
+    path : path-like
+        The file it is from; other paths are relative to its folder.
+
+    Returns
+    -------
+    Survey
+
+    Raises
+    ------
+    SurveyError
+        For the first thing that is wrong, with file, place and remedy.
+    """
+    try:
+        raw = tomllib.loads(text.removeprefix("\ufeff"))
+    except tomllib.TOMLDecodeError as error:
+        raise _syntax_error(str(error), text, path) from error
+    except RecursionError as error:
+        raise SurveyError(
+            "it is nested too deeply", file=path, remedy="write tables and lists as documented"
+        ) from error
+    try:
+        survey = Survey.model_validate(raw, context={"targets": allowed_targets(raw)})
+    except ValidationError as error:
+        raise survey_error(error, raw, path) from error
+    survey._path = Path(path)
+    survey._text = text
+    return survey
+
+
+def _syntax_error(message: str, text: str, path: Path | str) -> SurveyError:
+    where = re.search(r"\(at line (\d+), column (\d+)\)", message)
+    found = re.sub(r"\s*\(at .*\)", "", message)
+    if where is None:
+        return SurveyError(
+            f"the file ends too early: {found}", file=path, place=f"line {len(text.splitlines())}", remedy="complete it"
+        )
+    number = int(where.group(1))
+    lines = text.splitlines()
+    line = lines[number - 1].strip() if number <= len(lines) else ""
+    return SurveyError(
+        f"this is not TOML: {found}" + (f", in {line[:60]!r}" if line else ""),
+        file=path,
+        place=f"line {number}, column {where.group(2)}",
+        remedy='write key = "value" under a [table] heading, each key once, quantities in quotation marks',
+    )
+
+
+def read_survey(path: Path | str) -> Survey:
+    """Read and check a survey file.
+
+    Parameters
+    ----------
+    path : path-like
+        The survey file, TOML.
+
+    Returns
+    -------
+    Survey
+        With every quantity in SI.
+
+    Raises
+    ------
+    SurveyError
+        For the first thing that is wrong, with file, place and remedy.
+    """
+    path = Path(path)
+    try:
+        content = path.read_bytes()
+    except FileNotFoundError as error:
+        raise SurveyError("the survey file does not exist", file=path, remedy="check the path") from error
+    except IsADirectoryError as error:
+        raise SurveyError("this is a directory", file=path, remedy="name the survey file in it, *.toml") from error
+    except PermissionError as error:
+        raise SurveyError("the survey file may not be read", file=path, remedy="check its permissions") from error
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or str(error)
+        raise SurveyError(f"the survey file cannot be read ({reason})", file=path, remedy="check the path") from error
+    if content[:2] in (b"\xff\xfe", b"\xfe\xff"):
+        raise SurveyError("this is UTF-16 text", file=path, remedy="save it as UTF-8")
+    if b"\0" in content:
+        raise SurveyError("this is not a text file", file=path, remedy="give the survey file (TOML), not the data file")
+    try:
+        text = content.decode()
+    except UnicodeDecodeError as error:
+        line = content.count(b"\n", 0, error.start) + 1
+        raise SurveyError(
+            "this is not UTF-8 text", file=path, place=f"line {line}", remedy="save it as UTF-8"
+        ) from error
+    return parse_survey(text, path)

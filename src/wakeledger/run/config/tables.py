@@ -1,0 +1,246 @@
+"""The small tables: test, probe, empty tunnel, boundary, wake, section, bodies, loading and plan."""
+
+from __future__ import annotations
+
+import datetime
+from typing import Annotated, Any, Literal
+
+from pydantic import Field, PlainValidator, model_validator
+
+from wakeledger.run.config.quantities import (
+    Angle,
+    Duration,
+    Label,
+    Length,
+    LengthFromZero,
+    Number,
+    Point,
+    Polyline,
+    PositiveLength,
+    PositiveNumber,
+    Pressure,
+    Shape,
+    Shapes,
+    Speed,
+    Table,
+    Text,
+    Validator,
+    Walls,
+    fail,
+    kind_of,
+    listed,
+    parse_quantity,
+)
+
+
+def _date(value: Any) -> str:
+    if isinstance(value, datetime.date | datetime.datetime | datetime.time):
+        return value.isoformat()
+    if isinstance(value, str):
+        return value
+    raise fail(f"{kind_of(value)} stands where a date is needed", "write it as 2025-06-30 or as text")
+
+
+def _angle_text(value: Any) -> str:
+    parse_quantity(value, "rad")
+    return str(value)
+
+
+class TestTable(Table):
+    """``[test]``: what identifies the run; kept everywhere as written, all optional."""
+
+    __test__ = False
+
+    run: Label | None = None
+    point: Label | None = None
+    configuration: Label | None = None
+    alpha: Annotated[str, PlainValidator(_angle_text)] | None = None
+    beta: Annotated[str, PlainValidator(_angle_text)] | None = None
+    date: Annotated[str, PlainValidator(_date)] | None = None
+    operator: Label | None = None
+    notes: Label | None = None
+
+    def given(self) -> dict[str, str]:
+        """The keys the file gives, as written."""
+        return {name: str(value) for name in type(self).model_fields if (value := getattr(self, name)) is not None}
+
+
+class HoleReadings(Table):
+    """Readings of the holes with no flow, Pa."""
+
+    p1: Pressure | None = None
+    p2: Pressure | None = None
+    p3: Pressure | None = None
+    p4: Pressure | None = None
+    p5: Pressure | None = None
+    p6: Pressure | None = None
+    p7: Pressure | None = None
+
+
+class ProbeZeros(Table):
+    """Zero readings before and after the traverse."""
+
+    before: HoleReadings | None = None
+    after: HoleReadings | None = None
+
+
+def _backlash(value: Any) -> float | Literal["estimate"]:
+    if value == "estimate":
+        return "estimate"
+    if isinstance(value, str) and not value.strip()[:1].isdigit():
+        raise fail(f"{kind_of(value)} is not allowed", 'write backlash = "estimate", or a length as in "0.2 mm"')
+    return parse_quantity(value, "m", least=0.0)
+
+
+class ProbeTable(Table):
+    """``[probe]``, or one tube of a rake in ``[[probe]]``."""
+
+    calibration: Text | None = None
+    role: Literal["flow", "static"] = "flow"
+    tube: int | None = Field(default=None, ge=1)
+    offset: Point | None = None
+    roll: Angle = 0.0
+    pitch: Angle = 0.0
+    yaw: Angle = 0.0
+    tip_diameter: PositiveLength | None = None
+    zeros: ProbeZeros | None = None
+    lag: Duration | None = None
+    displacement: Number | None = None
+    backlash: Annotated[float | Literal["estimate"], PlainValidator(_backlash)] | None = None
+
+
+class EmptyTunnelTable(Table):
+    """``[empty_tunnel]``: a survey of the tunnel without the model."""
+
+    survey: Text = Field(description='survey = "empty.toml" (the survey of the empty tunnel)')
+
+
+class BoundaryTable(Table):
+    """``[boundary]``: what surrounds the survey.
+
+    Attributes
+    ----------
+    kind : {"free_air", "closed_walls", "open_jet"}
+    section : {"rectangle", "circle", "polygon"}
+    y, z : tuple of float or None
+        Walls of a rectangle, m.
+    diameter, centre, vertices
+        Of a circle, or of a polygon, m.
+    reflection : {"y", "z"} or None
+        Half model (plane y = 0), or ground plane (z = 0).
+    inboard_cut : float
+        Distance from the symmetry plane that was not surveyed, m.
+    """
+
+    kind: Literal["free_air", "closed_walls", "open_jet"] = Field(
+        description='kind = "free_air", "closed_walls" or "open_jet"'
+    )
+    section: Literal["rectangle", "circle", "polygon"] | None = None
+    y: Walls | None = None
+    z: Walls | None = None
+    diameter: PositiveLength | None = None
+    centre: Point | None = None
+    vertices: Shape | None = None
+    reflection: Literal["y", "z"] | None = None
+    inboard_cut: LengthFromZero | None = None
+
+    @model_validator(mode="after")
+    def _belongs_together(self) -> BoundaryTable:
+        needed = {"rectangle": ("y", "z"), "circle": ("diameter",), "polygon": ("vertices",)}
+        allowed = {**needed, "circle": ("diameter", "centre")}
+        section = self.section or "rectangle"
+        walls = self.kind != "free_air"
+        for key in ("section", "y", "z", "diameter", "centre", "vertices"):
+            if getattr(self, key) is None:
+                continue
+            if not walls:
+                raise fail(f'{key} is given in kind = "free_air"', "leave it out, or say which kind of walls", key)
+            if key != "section" and key not in allowed[section]:
+                raise fail(
+                    f"{key} is given for a {section}", f"a {section} takes {' and '.join(allowed[section])}", key
+                )
+        for key in needed[section] if walls else ():
+            if getattr(self, key) is None:
+                raise fail(
+                    f"key {key!r} is missing", f"a {section} of {self.kind} needs {' and '.join(needed[section])}"
+                )
+        if self.inboard_cut is not None and self.reflection != "y":
+            raise fail(
+                "inboard_cut is given without a half model",
+                'it is the gap to the symmetry plane: add reflection = "y", or leave it out',
+                "inboard_cut",
+            )
+        return self
+
+
+class WakeTable(Table):
+    """``[wake]``: how the wake is bounded.
+
+    Attributes
+    ----------
+    level : float or None
+        Threshold in units of the noise.
+    grow : float or None
+        Dilation of the mask, m.
+    include, exclude : tuple of ndarray, shape (n, 2)
+        Polygons (y, z), m, that are always or never in the wake; a box is given as its four corners.
+    """
+
+    level: PositiveNumber | None = None
+    grow: LengthFromZero | None = None
+    include: Shapes = ()
+    exclude: Shapes = ()
+
+
+class SectionTable(Table):
+    """``[section]``: a line traverse behind a section."""
+
+    chord: PositiveLength = Field(description='chord = "0.16 m" (c_d is the drag per span over q times it)')
+    edge_static: Literal["measured", "stream", "edge_speed"] = Field(
+        description='edge_static = "measured", "stream" or "edge_speed" (the static pressure of the Jones formula)'
+    )
+
+
+class BodyTable(Table):
+    """``[[body]]``: one surface or aircraft told apart from the others."""
+
+    name: Text = Field(description='name = "tail"')
+    region: Shape = Field(description='region = [["-0.3 m", "0.1 m"], ["0.3 m", "0.3 m"]] (a box or a polygon)')
+    x: Length | None = None
+
+
+class LoadingTable(Table):
+    """``[loading]``: the trailing edge the wake leaves."""
+
+    trailing_edge: Polyline = Field(description='trailing_edge = [["-0.6 m", "0 m"], ["0.6 m", "0 m"]]')
+
+
+def _range(si_unit: str, *, difference: bool = False) -> PlainValidator:
+    """One value or a list of values to try."""
+
+    def parse(value: Any) -> float:
+        return parse_quantity(value, si_unit, difference=difference, least=0.0)
+
+    many: Validator = listed(parse, "one value, or a list of values to try")
+    return PlainValidator(lambda value: many(value if isinstance(value, list) else [value]))
+
+
+def _counts(value: Any) -> tuple[int, ...]:
+    values = value if isinstance(value, list) else [value]
+    if not values or not all(isinstance(item, int) and not isinstance(item, bool) and item >= 1 for item in values):
+        raise fail(f"{kind_of(value)} stands here", "write a whole number of at least 1, or a list of them")
+    return tuple(values)
+
+
+class PlanTable(Table):
+    """``[plan]``: ranges to try when a survey is planned; single values are kept as ranges of one."""
+
+    spacing: Annotated[tuple[float, ...], _range("m")] | None = None
+    window: Annotated[tuple[float, ...], _range("m")] | None = None
+    noise: Annotated[tuple[float, ...], _range("m s-1")] | None = None
+    angle_accuracy: Annotated[tuple[float, ...], _range("rad")] | None = None
+    reference_accuracy: Annotated[tuple[float, ...], _range("1")] | None = None
+    repeats: Annotated[tuple[int, ...], PlainValidator(_counts)] | None = None
+    settling_time: Duration | None = None
+    traverse_speed: Speed | None = None
+    loading: Literal["elliptic", "parabolic", "linear", "bell"] | None = None
