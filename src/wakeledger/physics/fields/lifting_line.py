@@ -1,7 +1,7 @@
 """What the bound vortex and the finite length of the trailing legs add to the crossflow at a station.
 
-A plane far behind a wing sees two-dimensional crossflow; a plane at distance X behind the bound line sees legs that start
-there, and the bound line itself. The difference is smooth and follows from the measured vorticity alone:
+A plane far behind a wing sees two-dimensional crossflow; a plane at distance X behind the bound line sees legs that
+start there, and the bound line itself. The difference is smooth and follows from the measured vorticity alone:
 
     legs:   the two-dimensional velocity of each element times ½(X/√(X² + r²) − 1),
     bound:  w = −(X/4π) ∬ B dA' / (X² + r²)^{3/2},   B(y, z) = −∫_{port}^{y} ξ dy',
@@ -57,7 +57,8 @@ def near_field_crossflow(vorticity: Array, grid: UniformGrid, *, distance: float
     bound_kernel = distance / (4 * np.pi * reach**3)
 
     def transform(field: Array) -> Array:
-        return fft.rfft2(field, s=(mz, my))
+        spectrum: Array = fft.rfft2(field, s=(mz, my))
+        return spectrum
 
     def window(spectrum: Array) -> Array:
         solution: Array = fft.irfft2(spectrum, s=(mz, my))[:nz, :ny] * grid.cell_area
@@ -82,7 +83,7 @@ def _bound_circulation(vorticity: Array, grid: UniformGrid) -> tuple[Array, Arra
     if not np.abs(row).max() > 1e-12 * np.abs(vorticity).max() * grid.dy * grid.ny:
         return along_y, None
     weight = np.abs(vorticity).sum(axis=0)
-    centre = int(round(float(weight @ np.arange(grid.ny)) / max(float(weight.sum()), 1e-300)))
+    centre = round(float(weight @ np.arange(grid.ny)) / max(float(weight.sum()), 1e-300))
     along_y[:, centre:] += row[:, None]
     along_z = np.zeros_like(vorticity)
     # The row's surplus climbs (or falls) along the centre column to the rows that lack it.

@@ -24,7 +24,8 @@ def _truncated_logarithm(wavenumber: Array, radius: float) -> Array:
     s = np.where(wavenumber == 0, 1.0, wavenumber)
     kernel = (1 - special.j0(radius * s)) / s**2 - radius * np.log(radius) * special.j1(radius * s) / s
     at_zero = radius**2 / 4 - radius**2 * np.log(radius) / 2
-    return np.where(wavenumber == 0, at_zero, kernel)
+    spectrum: Array = np.where(wavenumber == 0, at_zero, kernel)
+    return spectrum
 
 
 @lru_cache(maxsize=8)

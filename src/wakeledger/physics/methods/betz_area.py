@@ -67,7 +67,8 @@ def profile_integrand(flow: Flow, reference: Reference, loss_free: Array) -> Arr
     ndarray, shape (..., nz, ny)
     """
     if reference.compressible:
-        return flow.density * flow.u * (loss_free - flow.u)
+        compressible: Array = flow.density * flow.u * (loss_free - flow.u)
+        return compressible
     gain = 0.5 * reference.density * (loss_free - flow.u) * (loss_free + flow.u - 2 * reference.speed)
     return reference.total_pressure - flow.total_pressure + gain
 

@@ -1,7 +1,7 @@
 """Total drag by the plain momentum balance of the plane.
 
-D = −∬[ρu(u − U) + (p − p∞)] dA over the window plus the crossflow energy beyond its edge. With the same primary variables
-it is the same algebra as Betz plus its partner terms, so its agreement tests the arithmetic, not the flow.
+D = −∬[ρu(u − U) + (p − p∞)] dA over the window plus the crossflow energy beyond its edge. With the same primary
+variables it is the same algebra as Betz plus its partner terms, so its agreement tests the arithmetic, not the flow.
 """
 
 from __future__ import annotations
