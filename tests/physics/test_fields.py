@@ -128,7 +128,7 @@ def test_velocity_potential_of_a_source():
     y, z = grid.mesh()
     sigma = np.exp(-((y - 0.1) ** 2 + z**2) / CORE**2) / (np.pi * CORE**2)
     phi = velocity_potential(sigma, grid)
-    # Point source of unit strength far away: radial velocity 1/(2πr) outwards; differences at h/r = 0.04 are exact to 1e-6.
+    # Point source of unit strength far away: radial velocity 1/(2πr) outwards; at h/r = 0.04 exact to 1e-6.
     i, j = grid.nz // 2, int((0.5 - grid.y0) / grid.dy)
     expected = (y[i, j] - 0.1) / (2 * np.pi * ((y[i, j] - 0.1) ** 2 + z[i, j] ** 2))
     assert ddy(phi, grid)[i, j] == pytest.approx(expected, rel=1e-6)
@@ -215,7 +215,7 @@ def test_induced_drag_is_invariant_under_shift_units_and_quarter_turns(shift, sc
     base = drag(v, w, grid)
     moved = UniformGrid(grid.y0 + shift, grid.z0 - shift, grid.dy, grid.dz, grid.ny, grid.nz)
     assert drag(v, w, moved) == pytest.approx(base, rel=1e-10)
-    # With zero net circulation a change of length unit leaves Γ²-scaled drag the same (circulation ~ velocity × length).
+    # With zero net circulation a change of length unit at the same circulations leaves the drag the same.
     other = UniformGrid(grid.y0 * scale, grid.z0 * scale, grid.dy * scale, grid.dz * scale, grid.ny, grid.nz)
     assert drag(v / scale, w / scale, other) == pytest.approx(base, rel=1e-9)
     turned_v, turned_w = v, w

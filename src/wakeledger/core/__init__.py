@@ -1,0 +1,1 @@
+"""The vocabulary that every room shares."""

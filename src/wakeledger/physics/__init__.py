@@ -1,0 +1,1 @@
+"""From a plane and a reference state to estimates."""

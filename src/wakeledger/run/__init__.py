@@ -1,0 +1,1 @@
+"""The declared order of steps, for one survey or many."""

@@ -1,0 +1,1 @@
+"""Mathematics of fields on a uniform grid, shared by all methods."""

@@ -1,0 +1,1 @@
+"""How lift and drag are spread along the span."""

@@ -1,0 +1,1 @@
+"""Vortices: where they are, how strong, and what they cost."""
