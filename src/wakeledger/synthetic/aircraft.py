@@ -84,6 +84,8 @@ def wing_and_tail_wake(
     tail_loss: float = 0.5,
     n: int = 240,
     n_tail: int = 120,
+    bound_distance: float | None = None,
+    tail_bound_distance: float | None = None,
 ) -> SyntheticWake:
     """Rolled-up wake of a wing and a tailplane behind it.
 
@@ -101,12 +103,22 @@ def wing_and_tail_wake(
         Integral of its total-pressure loss, N.
     n_tail : int
         Number of its elements.
+    bound_distance, tail_bound_distance : float, optional
+        Distances of the plane behind the wing's and the tailplane's bound line, m, if the field of these lines is
+        wanted; give both.
 
     Returns
     -------
     SyntheticWake
         Sheets in the order wing, tailplane.
+
+    Raises
+    ------
+    ValueError
+        If only one of the two distances is given.
     """
+    if (bound_distance is None) != (tail_bound_distance is None):
+        raise ValueError("give both bound_distance and tail_bound_distance, or neither")
     wing = shed(loading, straight_edge(span), peak=peak, core=core, n=n)
     tail = shed("elliptic", straight_edge(tail_span, z=tail_z), peak=tail_peak, core=core, n=n_tail)
     wake = roll_up([Sheet(wing), Sheet(tail, tail_x)], x=x, speed=reference.speed)
@@ -114,4 +126,8 @@ def wing_and_tail_wake(
     cores = tip_cores(here) + tip_cores(behind)
     losses = sheet_losses(wing, here, total=loss, width=1.2 * core)
     losses = losses + sheet_losses(tail, behind, total=tail_loss, width=1.2 * core)
-    return SyntheticWake(reference, (here, behind), _with_core_losses(losses, tip_cores(here), core_loss), cores)
+    losses = _with_core_losses(losses, tip_cores(here), core_loss)
+    distances = None
+    if bound_distance is not None and tail_bound_distance is not None:
+        distances = (bound_distance, tail_bound_distance)
+    return SyntheticWake(reference, (here, behind), losses, cores, distances)

@@ -239,12 +239,13 @@ class GaussianElements:
         return float(-density * speed * (self.z @ self.circulation))
 
     def rolling_moment(self, *, speed: float, density: float) -> float:
-        """Rolling moment about the x axis M_x = ½ρU Σ(y² + z² + a²)Γ, N m, positive starboard wing down.
+        """Rolling moment about the x axis −½ρU Σ(y² + z² + a²)Γ, N m, positive starboard wing down.
 
-        The second moment of each Gaussian about its own centre adds a² to y² + z².
+        The moment about +x itself, +½ρU∬(y² + z²)ξ dA, lifts the starboard wing. The second moment of each Gaussian
+        about its own centre adds a² to y² + z².
         """
         moment = (self.y**2 + self.z**2 + self.core**2) @ self.circulation
-        return float(density * speed * moment / 2)
+        return float(-density * speed * moment / 2)
 
     def span_efficiency(self, *, span: float) -> float:
         """Span efficiency e = L²/(πqb²D_i) on the given span, m."""

@@ -73,7 +73,7 @@ class Truth:
     lift, side_force : float
         ρU∬yξ dA and −ρU∬zξ dA, N.
     rolling_moment : float
-        ½ρU∬(y² + z²)ξ dA about the x axis, N m.
+        −½ρU∬(y² + z²)ξ dA about the x axis, positive starboard wing down, N m.
     quadrature_error : float
         Change of the total when the quadrature's spacing is reduced by a fifth, N.
     """
