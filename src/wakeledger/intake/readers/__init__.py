@@ -180,7 +180,7 @@ def _positions(raw: RawColumns, columns: Mapping[str, Column], axes: Array, file
         y, z = sign_y * si[letter_y] + 0.0, sign_z * si[letter_z] + 0.0
     letter, _ = _wind_axis(axes, 0)
     if letter in si:
-        _refuse_several_planes(si[letter], max(np.ptp(y), np.ptp(z)), columns[letter].column, file)
+        _refuse_several_planes(si[letter], float(max(np.ptp(y), np.ptp(z))), columns[letter].column, file)
     return y, z
 
 

@@ -1,0 +1,82 @@
+"""Points measured twice: repeats are averaged, contradictions are refused."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from wakeledger.core.errors import DataError
+from wakeledger.core.grid import Array
+from wakeledger.core.points import Points
+from wakeledger.intake.gridding.lattice import find_lattice
+
+#: Repeats that differ by more than this many standard deviations of their difference contradict each other.
+_CONTRADICTION = 8.0
+#: Least noise that is assumed, as a share of a variable's largest magnitude: the last digit of a table.
+_LEAST_NOISE = 1e-3
+
+
+def check_duplicates(points: Points) -> None:
+    """Refuse points at the same place whose values contradict each other.
+
+    Parameters
+    ----------
+    points : Points
+        Points as read.
+
+    Raises
+    ------
+    DataError
+        If two values at one place differ by more than 8 standard deviations of their difference; the standard deviation
+        comes from the file, or else from how far neighbouring points scatter about a smooth run.
+    """
+    label = _places(points.y, points.z)
+    order = np.argsort(label, kind="stable")
+    same = np.flatnonzero(np.diff(label[order]) == 0)
+    if not same.size:
+        return
+    first, second = order[same], order[same + 1]
+    path = np.lexsort((points.y, points.z))
+    for name, channel in points.channels.items():
+        values = channel.values
+        difference = np.abs(values[first] - values[second])
+        noise = np.maximum(_noise(values[path]), _LEAST_NOISE * _magnitude(values))
+        allowed = np.full(difference.shape, _CONTRADICTION * np.sqrt(2.0) * noise)
+        if name in points.std:
+            given = np.hypot(points.std[name][first], points.std[name][second])
+            allowed = np.fmax(allowed, _CONTRADICTION * given)
+        wrong = np.flatnonzero(difference > allowed)
+        if wrong.size:
+            worst = wrong[np.argmax(difference[wrong])]
+            i, j = int(first[worst]), int(second[worst])
+            raise DataError(
+                f"two values of {name} at the same place (y = {points.y[i]:g} m, z = {points.z[i]:g} m) contradict "
+                f"each other: {values[i]:g} and {values[j]:g}, in SI units",
+                file=points.source,
+                place=f"lines {points.line[i]} and {points.line[j]}",
+                remedy="delete the wrong line; repeats that agree within the noise are averaged",
+            )
+
+
+def _magnitude(values: Array) -> float:
+    finite = np.abs(values[np.isfinite(values)])
+    return float(finite.max()) if finite.size else 0.0
+
+
+def _places(y: Array, z: Array) -> NDArray[np.intp]:
+    """Number of the place of each point."""
+    lattice = find_lattice(y, z)
+    if lattice is not None:
+        return np.asarray(lattice.iz * lattice.y.size + lattice.iy, dtype=np.intp)
+    grain = 1e-9 * max(np.ptp(y), np.ptp(z), np.finfo(float).tiny)
+    keys = np.column_stack([np.round((y - y.min()) / grain), np.round((z - z.min()) / grain)])
+    return np.unique(keys, axis=0, return_inverse=True)[1].reshape(-1).astype(np.intp)
+
+
+def _noise(values: Array) -> float:
+    """Standard deviation of the scatter about a smooth run, from the median of second differences."""
+    finite = values[np.isfinite(values)]
+    if finite.size < 3:
+        return 0.0
+    bend = finite[:-2] - 2 * finite[1:-1] + finite[2:]
+    return float(np.median(np.abs(bend)) / (0.6745 * np.sqrt(6.0)))

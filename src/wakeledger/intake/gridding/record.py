@@ -1,0 +1,145 @@
+"""A gridding: how values at points become fields on the uniform grid, worked out once and applied to many."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from wakeledger.core.grid import Array, UniformGrid
+
+
+class Scheme(Protocol):
+    """What a way of gridding must be able to do."""
+
+    def fields(self, values: Array) -> Array:
+        """Grid values of shape (draws, n) to (draws, nz, ny)."""
+
+    def operators(self) -> tuple[Array, Array] | None:
+        """Dense operators along z and y, None where gridding does not separate."""
+
+    def near(self, points: NDArray[np.bool_]) -> NDArray[np.bool_]:
+        """Cells whose nearest point is among the given ones, shape (nz, ny)."""
+
+    def decimated(self, step: int, phase: tuple[int, int]) -> Gridding:
+        """The same with every `step`-th row and column only."""
+
+
+@dataclass(frozen=True, eq=False)
+class Gridding:
+    """From values at n points to fields on a uniform grid; linear in the values.
+
+    Attributes
+    ----------
+    grid : UniformGrid
+        The grid.
+    kind : {"uniform", "tensor", "scattered"}
+        Points on this very grid; on a tensor grid that is resampled by splines; anywhere.
+    flag : ndarray of int32, shape (nz, ny)
+        `wakeledger.core.flags.Flag` of each cell.
+    filled : ndarray of bool, shape (nz, ny)
+        Cells without a measurement, filled from their surroundings.
+    filled_fraction : float
+        Share of the cells that are filled.
+    raw_spacing : (float, float)
+        Typical spacing of the points along y and z, m.
+    raw_shape : (int, int)
+        Rows and columns of the raw tensor grid (nr, nc); for scattered points (1, number of places).
+    row_index : ndarray of int, shape (n,)
+        Traverse row of each point.
+    """
+
+    grid: UniformGrid
+    kind: str
+    flag: NDArray[np.int32]
+    filled: NDArray[np.bool_]
+    filled_fraction: float
+    raw_spacing: tuple[float, float]
+    raw_shape: tuple[int, int]
+    row_index: NDArray[np.int64]
+    scheme: Scheme
+
+    @property
+    def n(self) -> int:
+        """Number of points."""
+        return int(self.row_index.size)
+
+    def apply(self, values: Array) -> Array:
+        """Grid values at the points.
+
+        Parameters
+        ----------
+        values : ndarray, shape (..., n)
+            Values in file order. What stands at unusable points is ignored, NaN included.
+
+        Returns
+        -------
+        ndarray, shape (..., nz, ny)
+            Fields on `grid`.
+
+        Raises
+        ------
+        ValueError
+            If the last axis is not the points'.
+        """
+        array = np.asarray(values, dtype=np.float64)
+        if array.ndim < 1 or array.shape[-1] != self.n:
+            raise ValueError(f"values have shape {array.shape}, the last axis must hold the {self.n} points")
+        fields = self.scheme.fields(array.reshape(-1, self.n))
+        return fields.reshape(*array.shape[:-1], *self.grid.shape)
+
+    def operators(self) -> tuple[Array, Array] | None:
+        """Separable resampling, field = Wz @ raw @ Wy.T.
+
+        Returns
+        -------
+        (ndarray, ndarray) or None
+            Wz of shape (nz, nr) and Wy of shape (ny, nc), identities where the raw axis is kept; None for scattered
+            points.
+        """
+        return self.scheme.operators()
+
+    def near(self, points: NDArray[np.bool_]) -> NDArray[np.bool_]:
+        """Cells that stand for given points, to carry a flag from points to cells.
+
+        Parameters
+        ----------
+        points : ndarray of bool, shape (n,)
+            True at the points in question.
+
+        Returns
+        -------
+        ndarray of bool, shape (nz, ny)
+            Cells whose nearest point (or raw node) is among them.
+        """
+        return self.scheme.near(np.asarray(points, dtype=bool))
+
+    def decimated(self, step: int, *, phase: tuple[int, int] = (0, 0)) -> Gridding:
+        """Grid with every `step`-th row and column of the raw points only, to see what resolution costs.
+
+        Parameters
+        ----------
+        step : int
+            At least 1.
+        phase : (int, int), optional
+            Row and column (z, y) to begin with, each from 0 to step - 1.
+
+        Returns
+        -------
+        Gridding
+            For the same n values. Uniform: on its own coarser grid. Tensor: splines from the fewer lines onto the same
+            grid (the outermost lines are kept). Scattered: every `step`-th place, ordered by z then y, onto the same
+            grid; only phase[1] counts.
+
+        Raises
+        ------
+        ValueError
+            If step or phase is out of range.
+        DataError
+            If too few rows, columns or places remain.
+        """
+        if step < 1 or not all(0 <= start < step for start in phase):
+            raise ValueError(f"step must be at least 1 and phase within 0 ... step - 1, {step} and {phase} were given")
+        return self.scheme.decimated(step, phase)

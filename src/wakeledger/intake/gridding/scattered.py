@@ -1,0 +1,285 @@
+"""Points anywhere: local interpolation by radial functions and cubic polynomials, as one sparse matrix.
+
+Each cell takes the value of the interpolant through its nearest places: cubic radial functions |r|³ with all
+polynomials up to the third degree. It passes through the data, is exact for cubic polynomials and fourth order on
+smooth fields, and is a fixed linear combination of the values, so that a thousand draws cost one sparse product. On a
+Gaussian vortex its error is a third of that of piecewise cubic (Clough-Tocher) interpolation, whose slopes come from an
+iteration that would have to be repeated for every draw (tests/intake/test_gridding_scattered.py).
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import sparse
+
+from wakeledger.core.errors import DataError
+from wakeledger.core.flags import Flag
+from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.intake.gridding.fill import FAR, GapFill, make_gap_fill
+from wakeledger.intake.gridding.record import Gridding
+
+_NEIGHBOURS = 30
+_POWERS = [(i, j) for i in range(4) for j in range(4 - i)]
+_CHUNK = 4096
+#: Points closer than this share of the typical spacing are one place.
+_SAME_PLACE = 0.02
+FEWEST_PLACES = 25
+#: Spacings along y and z are told apart from this ratio on.
+_ANISOTROPIC = 2.0
+_FINE_PERCENT = 20.0
+
+
+@dataclass(frozen=True, eq=False)
+class ScatteredScheme:
+    """Interpolation matrix inside the data, gap filling outside."""
+
+    y: Array
+    z: Array
+    usable: NDArray[np.bool_]
+    row_index: NDArray[np.int64]
+    grid: UniformGrid
+    scale: tuple[float, float]
+    _inside: NDArray[np.intp]
+    _matrix: Any
+    _gaps: GapFill
+    _nearest_point: NDArray[np.intp]
+    _places: NDArray[np.intp]
+
+    def fields(self, values: Array) -> Array:
+        """Grid values of shape (draws, n) to (draws, nz, ny)."""
+        flat = np.zeros((values.shape[0], self.grid.nz * self.grid.ny))
+        flat[:, self._inside] = (self._matrix @ np.ascontiguousarray(values.T)).T
+        self._gaps.into(flat)
+        return flat.reshape(-1, *self.grid.shape)
+
+    def operators(self) -> None:
+        """Scattered gridding does not separate."""
+        return
+
+    def near(self, points: NDArray[np.bool_]) -> NDArray[np.bool_]:
+        """Cells whose nearest point is among the given ones."""
+        return points[self._nearest_point].reshape(self.grid.shape)
+
+    def decimated(self, step: int, phase: tuple[int, int]) -> Gridding:
+        """The same with every `step`-th place only."""
+        kept = (self._places >= 0) & (self._places % step == phase[1])
+        return make_scattered(self.y, self.z, kept, self.row_index, grid=self.grid, present=kept)
+
+
+def make_scattered(
+    y: Array,
+    z: Array,
+    usable: NDArray[np.bool_],
+    row_index: NDArray[np.int64],
+    *,
+    spacing: tuple[float, float] | None = None,
+    max_cells: int = 400_000,
+    grid: UniformGrid | None = None,
+    present: NDArray[np.bool_] | None = None,
+) -> Gridding:
+    """Grid scattered points.
+
+    Parameters
+    ----------
+    y, z : ndarray, shape (n,)
+        Positions, m.
+    usable : ndarray of bool, shape (n,)
+        Points with a usable measurement.
+    row_index : ndarray of int, shape (n,)
+        Traverse row of each point.
+    spacing : (float, float) or None
+        Spacing of the grid, m; None for the points' own spacing where they stand closest.
+    max_cells : int
+        Most cells of the grid.
+    grid : UniformGrid, optional
+        The grid itself, instead of spacing and max_cells.
+    present : ndarray of bool, shape (n,), optional
+        Points that count at all, usable or not; all by default.
+
+    Returns
+    -------
+    Gridding
+        Cells outside the convex hull of the points, or further than two typical spacings from any, are filled and
+        flagged as far from the data.
+
+    Raises
+    ------
+    DataError
+        If fewer than 25 places hold a usable point.
+    """
+    from scipy.spatial import Delaunay, cKDTree
+
+    used = np.flatnonzero(usable)
+    _require_places(used.size)
+    scale, label, places = _places(y[used], z[used])
+    _require_places(places.shape[0])
+    scaled = places / scale
+    mesh = Delaunay(scaled)
+    local = _local_spacing(mesh)
+    if grid is None:
+        fine = float(np.percentile(local, _FINE_PERCENT))
+        grid = _grid(places, spacing or (fine * scale[0], fine * scale[1]), max_cells)
+    zz, yy = np.meshgrid(grid.z, grid.y, indexing="ij")
+    cells = np.column_stack([yy.ravel() / scale[0], zz.ravel() / scale[1]])
+    tree = cKDTree(scaled)
+    distance, nearest = tree.query(cells)
+    close = distance <= FAR * local[nearest]
+    inside = np.flatnonzero((mesh.find_simplex(cells, tol=1e-9) >= 0) & close)
+    if not inside.size:
+        raise DataError("no cell of the grid lies among the points", remedy="give a finer spacing or more points")
+    averaging = sparse.csr_array((1.0 / np.bincount(label)[label], (label, used)), shape=(places.shape[0], usable.size))
+    matrix = _interpolation(scaled, tree, cells[inside]) @ averaging
+    measured = np.zeros(cells.shape[0], dtype=bool)
+    measured[inside] = True
+    counted = np.arange(y.size) if present is None else np.flatnonzero(present)
+    all_points = cKDTree(np.column_stack([y[counted] / scale[0], z[counted] / scale[1]]))
+    nearest_point = counted[all_points.query(cells)[1]]
+    flag = np.full(cells.shape[0], Flag.INTERPOLATED.value, dtype=np.int32)
+    flag[~measured] |= Flag.FAR_FROM_DATA.value
+    flag[~usable[nearest_point] & (distance > local[nearest] / 2)] |= Flag.MISSING.value
+    flag[np.bincount(label)[nearest] > 1] |= Flag.AVERAGED.value
+    flag = flag.reshape(grid.shape)
+    filled = (flag & (Flag.MISSING | Flag.FAR_FROM_DATA).value) != 0
+    index = np.full(usable.size, -1, dtype=np.intp)
+    index[used] = label
+    scheme = ScatteredScheme(
+        y=y,
+        z=z,
+        usable=usable,
+        row_index=row_index,
+        grid=grid,
+        scale=scale,
+        _inside=inside,
+        _matrix=matrix.tocsr(),
+        _gaps=make_gap_fill(measured.reshape(grid.shape), grid.y, grid.z),
+        _nearest_point=nearest_point,
+        _places=index,
+    )
+    typical = float(np.median(local))
+    return Gridding(
+        grid=grid,
+        kind="scattered",
+        flag=flag,
+        filled=filled,
+        filled_fraction=float(filled.mean()),
+        raw_spacing=(typical * scale[0], typical * scale[1]),
+        raw_shape=(1, places.shape[0]),
+        row_index=row_index,
+        scheme=scheme,
+    )
+
+
+def _require_places(number: int) -> None:
+    if number < FEWEST_PLACES:
+        raise DataError(
+            f"the survey has usable measurements at {number} place(s)",
+            remedy=f"a plane needs at least 5 x 5 places ({FEWEST_PLACES})",
+        )
+
+
+def _places(y: Array, z: Array) -> tuple[tuple[float, float], NDArray[np.intp], Array]:
+    """Distinct places, ordered by z then y, so that the order of the points plays no part.
+
+    Returns the scale of y and z, the place of each point, and the places, shape (m, 2) as (y, z).
+    """
+    from scipy.sparse.csgraph import connected_components
+    from scipy.spatial import Delaunay, cKDTree
+
+    grain = 1e-9 * max(np.ptp(y), np.ptp(z))
+    keys = np.column_stack([np.round((z - z.min()) / grain), np.round((y - y.min()) / grain)])
+    _, first, label = np.unique(keys, axis=0, return_index=True, return_inverse=True)
+    label = label.reshape(-1)
+    distinct = np.column_stack([y[first], z[first]])
+    _require_places(distinct.shape[0])
+    scale = _scale(distinct)
+    tree = cKDTree(distinct / scale)
+    radius = _SAME_PLACE * float(np.median(_local_spacing(Delaunay(distinct / scale))))
+    pairs = tree.query_pairs(radius, output_type="ndarray")
+    if not pairs.size:
+        return scale, label, distinct
+    links = sparse.csr_array((np.ones(len(pairs)), (pairs[:, 0], pairs[:, 1])), shape=(len(distinct),) * 2)
+    _, group = connected_components(links, directed=False)
+    group = group.astype(np.intp)
+    size = np.bincount(group)
+    merged = np.column_stack([np.bincount(group, weights=distinct[:, k]) / size for k in (0, 1)])
+    return scale, group[label], merged
+
+
+def _edges(mesh: Any) -> NDArray[np.intp]:
+    corners = mesh.simplices
+    pairs = np.concatenate([corners[:, [0, 1]], corners[:, [1, 2]], corners[:, [2, 0]]])
+    return np.asarray(np.unique(np.sort(pairs, axis=1), axis=0), dtype=np.intp)
+
+
+def _scale(places: Array) -> tuple[float, float]:
+    """Typical spacing along y and z: equal unless points stand much denser along one of them."""
+    from scipy.spatial import Delaunay
+
+    ratio = 1.0
+    for _ in range(4):
+        edges = _edges(Delaunay(places / (1.0, ratio)))
+        delta = np.abs(places[edges[:, 0]] - places[edges[:, 1]])
+        length = np.hypot(delta[:, 0], delta[:, 1] / ratio)
+        short = length <= np.percentile(length, 90)
+        mean = delta[short].mean(axis=0)
+        ratio = float(mean[1] / mean[0])
+    if 1 / _ANISOTROPIC < ratio < _ANISOTROPIC:
+        ratio = 1.0
+    typical = float(np.median(_local_spacing(Delaunay(places / (1.0, ratio)))))
+    return typical, typical * ratio
+
+
+def _local_spacing(mesh: Any) -> Array:
+    """Median length of the mesh edges that meet in each place."""
+    edges = _edges(mesh)
+    length = np.linalg.norm(mesh.points[edges[:, 0]] - mesh.points[edges[:, 1]], axis=1)
+    ends = np.concatenate([edges[:, 0], edges[:, 1]])
+    both = np.concatenate([length, length])
+    order = np.lexsort((both, ends))
+    count = np.bincount(ends, minlength=len(mesh.points))
+    start = np.concatenate([[0], np.cumsum(count)[:-1]])
+    lower = both[order][start + (count - 1) // 2]
+    upper = both[order][start + count // 2]
+    return np.asarray((lower + upper) / 2, dtype=float)
+
+
+def _grid(places: Array, spacing: tuple[float, float], max_cells: int) -> UniformGrid:
+    extent = np.ptp(places, axis=0)
+    counts = [math.ceil(length / step * (1 - 1e-9)) + 1 for length, step in zip(extent, spacing, strict=True)]
+    excess = counts[0] * counts[1] / max_cells
+    if excess > 1:
+        counts = [int(count / math.sqrt(excess)) for count in counts]
+    ny, nz = (max(count, 5) for count in counts)
+    start = places.min(axis=0)
+    return UniformGrid(
+        float(start[0]), float(start[1]), float(extent[0]) / (ny - 1), float(extent[1]) / (nz - 1), ny, nz
+    )
+
+
+def _interpolation(places: Array, tree: Any, cells: Array) -> Any:
+    """Interpolation from places to cells, sparse, shape (cells, places)."""
+    k, q = min(_NEIGHBOURS, places.shape[0]), len(_POWERS)
+    distance, index = tree.query(cells, k)
+    weights = np.empty((cells.shape[0], k))
+    for begin in range(0, cells.shape[0], _CHUNK):
+        part = slice(begin, begin + _CHUNK)
+        reach = distance[part, -1][:, None, None]
+        offset = (places[index[part]] - cells[part, None, :]) / reach
+        system = np.zeros((offset.shape[0], k + q, k + q))
+        system[:, :k, :k] = np.linalg.norm(offset[:, :, None, :] - offset[:, None, :, :], axis=-1) ** 3
+        powers = np.stack([offset[..., 0] ** i * offset[..., 1] ** j for i, j in _POWERS], axis=-1)
+        system[:, :k, k:] = powers
+        system[:, k:, :k] = powers.transpose(0, 2, 1)
+        # Keeps the system solvable where the neighbours happen to stand on few lines.
+        system[:, range(k, k + q), range(k, k + q)] = -1e-12
+        right = np.zeros((offset.shape[0], k + q, 1))
+        right[:, :k, 0] = np.linalg.norm(offset, axis=-1) ** 3
+        right[:, k + _POWERS.index((0, 0)), 0] = 1.0
+        weights[part] = np.linalg.solve(system, right)[:, :k, 0]
+    rows = np.repeat(np.arange(cells.shape[0]), k)
+    return sparse.csr_array((weights.ravel(), (rows, index.ravel())), shape=(cells.shape[0], places.shape[0]))
