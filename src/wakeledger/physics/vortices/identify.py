@@ -1,0 +1,283 @@
+"""Vortices of a crossflow plane: where they are, how strong, how large.
+
+A vortex is a place where Γ₂ comes close to ±1 and whose circulation stands out of the noise. Both judgements are blind
+to a uniform velocity. Its centre and core come from a fit of the velocity, its circulation from a closed line integral.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import ndimage
+from scipy.interpolate import RectBivariateSpline
+
+from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.physics.fields.circulation import CrossflowSpline, cell_circulations
+from wakeledger.physics.vortices.criteria import gamma2
+from wakeledger.physics.vortices.gaussian_fit import PEAK_RADIUS, PEAK_SWIRL, GaussianFit, fit_gaussian
+
+#: |Γ₂| that a vortex centre reaches. Graftieaux et al. use 0.9 to 0.95 on Γ₁; sheets stay near 2/π.
+CENTRE_LEVEL = 0.9
+#: Standard deviations of the noise by which a vortex's circulation and peak swirl stand out.
+SIGNIFICANCE = 5.0
+#: Radius of the circle of the line integral, in units of the core a.
+CONTOUR_RADIUS = 2.0
+# Rounding of smooth data passes for a vortex below this share of the plane's largest crossflow.
+_ROUNDING = 1e-9
+_SMALLEST_CIRCLE = 1.0
+_SWIRL_DROP = 0.93
+
+
+@dataclass(frozen=True)
+class Vortex:
+    """One vortex of the plane.
+
+    Attributes
+    ----------
+    y, z : float
+        Centre, m, between grid points.
+    circulation : float
+        Γ, m²/s, counter-clockwise positive: closed line integral of the measured velocity on the circle of radius 2a
+        (less where the window ends), over the share 1 − exp(−r²/a²) that a Gaussian vortex has inside it.
+    core_radius : float
+        Core a of ξ ∝ exp(−r²/a²), m. The swirl peaks at 1.1209 a.
+    contour_radius : float
+        Radius of the circle of the line integral, m.
+    peak_swirl : float
+        Largest azimuthal-mean swirl of the fitted vortex, m/s, positive.
+    roundness : float
+        Smaller over larger principal axis of the vorticity; 1 is round.
+    misfit : float
+        Rms of what the fit leaves over, as a share of the peak swirl.
+    u : float
+        Axial velocity at the centre, m/s; NaN where none was given.
+    """
+
+    y: float
+    z: float
+    circulation: float
+    core_radius: float
+    contour_radius: float
+    peak_swirl: float
+    roundness: float
+    misfit: float
+    u: float
+
+    @property
+    def peak_radius(self) -> float:
+        """Radius of the swirl's peak, 1.1209 a, m."""
+        return PEAK_RADIUS * self.core_radius
+
+
+def crossflow_noise(v: Array, w: Array) -> float:
+    """Standard deviation of point-to-point noise in one crossflow component, m/s.
+
+    Parameters
+    ----------
+    v, w : ndarray, shape (nz, ny)
+        Crossflow, m/s.
+
+    Returns
+    -------
+    float
+        From the median size of the mixed fourth difference, which smooth flow hardly enters and which a wake that fills
+        less than half of the window does not move.
+    """
+    if min(v.shape) < 3:
+        return 0.0
+    mixed = [np.diff(np.diff(np.asarray(f, float), 2, axis=-1), 2, axis=-2) for f in (v, w)]
+    # The weights (1, −2, 1) ⊗ (1, −2, 1) have the square sum 36; 0.6745 is the median of |N(0, 1)|.
+    return float(np.median(np.abs(np.stack(mixed))) / (6 * 0.6745))
+
+
+def find_vortices(
+    v: Array,
+    w: Array,
+    grid: UniformGrid,
+    *,
+    mask: NDArray[np.bool_] | None = None,
+    u: Array | None = None,
+) -> tuple[Vortex, ...]:
+    """Identify the vortices of one plane.
+
+    Parameters
+    ----------
+    v, w : ndarray, shape (nz, ny)
+        Crossflow, m/s, finite everywhere.
+    grid : UniformGrid
+        The grid.
+    mask : ndarray of bool, shape (nz, ny), optional
+        Only vortices with their centre in it are kept.
+    u : ndarray, shape (nz, ny), optional
+        Axial velocity, m/s.
+
+    Returns
+    -------
+    tuple of Vortex
+        From port to starboard. Mirrored data give the mirrored list.
+
+    Raises
+    ------
+    ValueError
+        If shapes do not fit the grid or a value is not finite.
+
+    Notes
+    -----
+    Γ₂ of Graftieaux, Michard & Grosjean (2001); a candidate is a connected set of points with |Γ₂| > 0.9.
+    """
+    return tuple(vortex for vortex, _ in fitted_vortices(v, w, grid, mask=mask, u=u))
+
+
+def fitted_vortices(
+    v: Array,
+    w: Array,
+    grid: UniformGrid,
+    *,
+    mask: NDArray[np.bool_] | None = None,
+    u: Array | None = None,
+) -> tuple[tuple[Vortex, GaussianFit], ...]:
+    """As `find_vortices`, each vortex with the fit behind it."""
+    v, w = np.asarray(v, float), np.asarray(w, float)
+    if v.shape != grid.shape or w.shape != grid.shape:
+        raise ValueError(f"v and w need the grid's shape {grid.shape}, {v.shape} and {w.shape} were given")
+    if not (np.isfinite(v).all() and np.isfinite(w).all()):
+        raise ValueError("v and w must be finite everywhere; fill missing points first")
+    if min(grid.shape) < 7:
+        return ()
+    noise = crossflow_noise(v, w)
+    largest = max(float(np.ptp(v)), float(np.ptp(w)))
+    spline: CrossflowSpline | None = None
+    found: list[tuple[Vortex, GaussianFit]] = []
+    for y, z in _candidates(v, w, grid):
+        spline = CrossflowSpline.on_grid(v, w, grid) if spline is None else spline
+        measured = _measured(v, w, grid, spline, y, z)
+        if measured is None:
+            continue
+        fit, circulation, radius = measured
+        spacing = max(grid.dy, grid.dz)
+        circle_noise = noise * spacing * np.sqrt(2 * np.pi * radius / spacing)
+        peak = PEAK_SWIRL * abs(circulation) / (2 * np.pi * fit.core)
+        if abs(circulation) < SIGNIFICANCE * circle_noise or peak < SIGNIFICANCE * noise + _ROUNDING * largest:
+            continue
+        if mask is not None and not _value_at(mask, grid, fit.y, fit.z):
+            continue
+        vortex = Vortex(
+            y=fit.y,
+            z=fit.z,
+            circulation=circulation,
+            core_radius=fit.core,
+            contour_radius=radius,
+            peak_swirl=peak,
+            roundness=_roundness(v, w, grid, fit),
+            misfit=fit.misfit,
+            u=float("nan") if u is None else _interpolated(np.asarray(u, float), grid, fit.y, fit.z),
+        )
+        found.append((vortex, fit))
+    return _ordered(_without_doubles(found), grid)
+
+
+def _candidates(v: Array, w: Array, grid: UniformGrid) -> Iterator[tuple[float, float]]:
+    criterion = gamma2(v, w, grid)
+    for sign in (1.0, -1.0):
+        labels, count = ndimage.label(sign * criterion > CENTRE_LEVEL, structure=np.ones((3, 3)))
+        if count == 0:
+            continue
+        weight = np.abs(criterion) - CENTRE_LEVEL
+        for row, column in ndimage.center_of_mass(weight, labels, range(1, count + 1)):
+            yield grid.y0 + column * grid.dy, grid.z0 + row * grid.dz
+
+
+def _measured(
+    v: Array, w: Array, grid: UniformGrid, spline: CrossflowSpline, y: float, z: float
+) -> tuple[GaussianFit, float, float] | None:
+    guess = _first_guess(spline, grid, y, z)
+    if guess is None:
+        return None
+    circulation, core = guess
+    fit = fit_gaussian(v, w, grid, y=y, z=z, circulation=circulation, core=core)
+    if fit is None:
+        return None
+    radius = min(CONTOUR_RADIUS * fit.core, _room(grid, fit.y, fit.z))
+    if radius < _SMALLEST_CIRCLE * fit.core:
+        return None
+    enclosed = float(spline.around_circle(fit.y, fit.z, radius))
+    line_integral = enclosed / -float(np.expm1(-((radius / fit.core) ** 2)))
+    if line_integral * fit.circulation <= 0:
+        return None
+    return fit, line_integral, radius
+
+
+def _room(grid: UniformGrid, y: float, z: float) -> float:
+    return min(y - grid.y[0], grid.y[-1] - y, z - grid.z[0], grid.z[-1] - z)
+
+
+def _first_guess(spline: CrossflowSpline, grid: UniformGrid, y: float, z: float) -> tuple[float, float] | None:
+    """Circulation and core from the first peak of the azimuthal-mean swirl, walking outwards."""
+    spacing = max(grid.dy, grid.dz)
+    room = _room(grid, y, z)
+    if room < 1.5 * spacing:
+        return None
+    radii = np.geomspace(0.75 * spacing, room, max(8, int(np.log(room / spacing) / np.log(1.12)) + 1))
+    swirl = np.abs(spline.around_circle(y, z, radii)) / (2 * np.pi * radii)
+    best = 0
+    for i in range(1, radii.size):
+        if swirl[i] > swirl[best]:
+            best = i
+        elif swirl[i] < _SWIRL_DROP * swirl[best]:
+            break
+    core = float(radii[best]) / PEAK_RADIUS
+    sign = np.sign(float(spline.around_circle(y, z, radii[best])))
+    return float(sign * 2 * np.pi * core * swirl[best] / PEAK_SWIRL), core
+
+
+def _roundness(v: Array, w: Array, grid: UniformGrid, fit: GaussianFit) -> float:
+    """Axis ratio of the Gaussian whose second moments, seen through a round Gaussian window, are the measured ones."""
+    y, z = grid.y[:-1] + grid.dy / 2 - fit.y, grid.z[:-1] + grid.dz / 2 - fit.z
+    reach = 3.0 * fit.core
+    columns, rows = np.flatnonzero(np.abs(y) < reach), np.flatnonzero(np.abs(z) < reach)
+    first, last = slice(rows[0], rows[-1] + 2), slice(columns[0], columns[-1] + 2)
+    cut = UniformGrid(0.0, 0.0, grid.dy, grid.dz, columns.size + 1, rows.size + 1)
+    circulation = cell_circulations(v[first, last], w[first, last], cut)
+    yy, zz = np.meshgrid(y[columns], z[rows])
+    weight = circulation * np.exp(-(yy**2 + zz**2) / fit.core**2)
+    total = weight.sum()
+    yy_moment = float((weight * yy**2).sum() / total) - grid.dy**2 / 12
+    zz_moment = float((weight * zz**2).sum() / total) - grid.dz**2 / 12
+    yz_moment = float((weight * yy * zz).sum() / total)
+    tensor = np.array([[yy_moment, yz_moment], [yz_moment, zz_moment]])
+    axes = np.linalg.eigvalsh(tensor)
+    if not axes[0] > 0:
+        return 0.0
+    # The window multiplies by exp(−r²/a²), which adds 2/a² to the inverse of each squared axis.
+    short, long = 1 / axes - 2 / fit.core**2
+    return float(np.sqrt(long / short)) if long > 0 else 0.0
+
+
+def _value_at(mask: NDArray[np.bool_], grid: UniformGrid, y: float, z: float) -> bool:
+    row = int(np.clip(round((z - grid.z0) / grid.dz), 0, grid.nz - 1))
+    column = int(np.clip(round((y - grid.y0) / grid.dy), 0, grid.ny - 1))
+    return bool(mask[row, column])
+
+
+def _interpolated(field: Array, grid: UniformGrid, y: float, z: float) -> float:
+    row = int(np.clip(np.floor((z - grid.z0) / grid.dz) - 3, 0, max(grid.nz - 8, 0)))
+    column = int(np.clip(np.floor((y - grid.y0) / grid.dy) - 3, 0, max(grid.ny - 8, 0)))
+    rows, columns = slice(row, row + 8), slice(column, column + 8)
+    return float(RectBivariateSpline(grid.z[rows], grid.y[columns], field[rows, columns]).ev(z, y))
+
+
+def _without_doubles(found: list[tuple[Vortex, GaussianFit]]) -> list[tuple[Vortex, GaussianFit]]:
+    """Fits that ran into the same vortex count once; the better fit stays."""
+    kept: list[tuple[Vortex, GaussianFit]] = []
+    for vortex, fit in sorted(found, key=lambda pair: pair[0].misfit):
+        if all(np.hypot(vortex.y - o.y, vortex.z - o.z) > max(vortex.core_radius, o.core_radius) / 2 for o, _ in kept):
+            kept.append((vortex, fit))
+    return kept
+
+
+def _ordered(found: list[tuple[Vortex, GaussianFit]], grid: UniformGrid) -> tuple[tuple[Vortex, GaussianFit], ...]:
+    step = 1e-6 * min(grid.dy, grid.dz)
+    return tuple(sorted(found, key=lambda pair: (round(pair[0].y / step), pair[0].z)))
