@@ -257,32 +257,34 @@ def parse_points(value: Any, *, least: int = 2) -> Array:
     return frozen(listed(parse_point, f"{what}, at least {least}", least=least)(value))
 
 
-def parse_shape(value: Any) -> Array:
-    """A box (two opposite corners) or a polygon, as the polygon's vertices.
+def parse_shape(value: Any, *, least: int = 2) -> Array:
+    """A box (two opposite corners) or a polygon.
 
     Parameters
     ----------
     value : list
         Two points, or three and more.
+    least : int, optional
+        3 where only a polygon will do.
 
     Returns
     -------
-    ndarray, shape (n, 2)
-        Vertices (y, z) in m, read-only; a box gives its four corners, counter-clockwise seen from behind.
+    ndarray, shape (2, 2) or (n, 2)
+        The lower port and upper starboard corner of a box, or the vertices of a polygon; (y, z) in m, read-only.
 
     Raises
     ------
     PydanticCustomError
         If it is neither, or encloses no area.
     """
-    points = parse_points(value)
-    if len(points) == 2:
-        (y0, z0), (y1, z1) = points.min(axis=0), points.max(axis=0)
-        points = frozen([[y0, z0], [y1, z0], [y1, z1], [y0, z1]])
+    points = parse_points(value, least=least)
+    low, high = points.min(axis=0), points.max(axis=0)
     y, z = points.T
-    if abs(np.sum(y * np.roll(z, -1) - z * np.roll(y, -1))) <= 1e-12 * np.ptp(y) * np.ptp(z) or not np.ptp(y):
+    extent = float(np.prod(high - low))
+    area = extent if len(points) == 2 else 0.5 * abs(float(np.sum(y * np.roll(z, -1) - z * np.roll(y, -1))))
+    if area <= 1e-12 * extent or extent == 0.0:
         raise fail("the shape encloses no area", "give two opposite corners of a box, or at least three vertices")
-    return points
+    return frozen([low, high]) if len(points) == 2 else points
 
 
 def _shapes(value: Any) -> tuple[Array, ...]:
@@ -297,6 +299,7 @@ Point = Annotated[tuple[float, float], PlainValidator(parse_point)]
 Walls = Annotated[tuple[float, float], PlainValidator(_ascending)]
 Polyline = Annotated[Array, PlainValidator(parse_points)]
 Shape = Annotated[Array, PlainValidator(parse_shape)]
+Polygon = Annotated[Array, PlainValidator(lambda value: parse_shape(value, least=3))]
 Shapes = Annotated[tuple[Array, ...], PlainValidator(_shapes)]
 
 

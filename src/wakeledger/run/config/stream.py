@@ -23,12 +23,14 @@ from wakeledger.run.config.quantities import (
     Temperature,
     TemperatureDifference,
     fail,
+    frozen,
     kind_of,
     listed,
     parse_quantity,
     quantity,
 )
 from wakeledger.stream.airspeed import PositionError
+from wakeledger.stream.reference import Reference, resolve_reference
 
 _parse_speeds = listed(
     lambda value: parse_quantity(value, "m s-1"), 'at least two speeds as ["60 kt", "120 kt"]', least=2
@@ -60,7 +62,7 @@ class PositionErrorTable(Table):
 
     def record(self) -> PositionError:
         """The table as the stream room takes it, m/s."""
-        return PositionError(self.indicated, self.correction)  # type: ignore[arg-type]
+        return PositionError(frozen(self.indicated), frozen(self.correction))
 
 
 class ReferenceTable(Table):
@@ -89,54 +91,31 @@ class ReferenceTable(Table):
         Returns
         -------
         dict of str to float
-            Without `compressible` and the position error table.
+            As `wakeledger.stream.reference.resolve_reference` takes them: the calibrated airspeed is corrected by the
+            position error table where there is one; `compressible` is apart.
         """
         names = [name for name in type(self).model_fields if name not in ("compressible", "position_error")]
-        return {name: float(value) for name in names if (value := getattr(self, name)) is not None}
+        given = {name: float(value) for name in names if (value := getattr(self, name)) is not None}
+        if self.position_error is not None and "calibrated_airspeed" in given:
+            given["calibrated_airspeed"] = self.position_error.record().calibrated(given["calibrated_airspeed"])
+        return given
+
+    def resolve(self) -> Reference:
+        """The undisturbed stream that the table determines."""
+        return resolve_reference(self.given(), compressible=None if self.compressible == "auto" else self.compressible)
 
     @model_validator(mode="after")
     def _is_a_stream(self) -> ReferenceTable:
-        given = set(self.given())
-        speeds = ("speed", "dynamic_pressure", "mach", "calibrated_airspeed")
-        altitude = bool(given & {"pressure_altitude", "altitude"})
-        temperature = bool(given & {"temperature", "total_temperature"}) or altitude
-        pressure = "static_pressure" in given or altitude
-        if not given & set(speeds):
-            raise fail("the stream has no speed", f"give one of {', '.join(speeds)}")
-        if self.relative_humidity is not None and self.relative_humidity > 1.0:
-            raise fail(
-                f"a relative humidity of {self.relative_humidity:g} is above 1",
-                'write it as text in per cent, as in "45 %"',
-                "relative_humidity",
-            )
-        if "density" not in given and not (temperature and pressure):
-            missing = "density"
-            if pressure and not temperature:
-                missing = "density, or temperature beside the static pressure,"
-            elif temperature and not pressure:
-                missing = "density, or static_pressure beside the temperature,"
-            raise fail(
-                f"{missing} is missing",
-                'give density = "1.185 kg/m^3", or static_pressure and temperature, or an altitude',
-            )
-        if self.density is None and self.static_pressure is not None and self.static_pressure <= 0.0:
-            raise fail(
-                f"a static pressure of {self.static_pressure:g} Pa gives no density",
-                "give the absolute static pressure, or the density",
-                "static_pressure",
-            )
         if self.position_error is not None and self.calibrated_airspeed is None:
             raise fail(
                 "a position error table is given without calibrated_airspeed",
                 "give calibrated_airspeed (as indicated; the table corrects it), or leave the table out",
                 "position_error",
             )
-        if self.isa_offset is not None and not altitude:
-            raise fail(
-                "isa_offset is given without an altitude",
-                "give pressure_altitude or altitude, or the temperature itself",
-                "isa_offset",
-            )
+        try:
+            self.resolve()
+        except InputError as error:
+            raise fail(error.found, error.remedy or "") from error
         return self
 
 

@@ -29,14 +29,6 @@ from wakeledger.run.config.tables import (
 )
 from wakeledger.run.config.uncertainty import Comparison, UncertaintyTable, allowed_targets, refuse_twice
 
-#: Formats that later work reads, by the ending of the file's name.
-_LATER_FORMATS = {
-    **dict.fromkeys((".vtk", ".vtp", ".vtu", ".vts", ".vtr", ".vti", ".vtm", ".pvtu", ".pvtp"), "VTK"),
-    ".cgns": "CGNS",
-    ".mat": "MATLAB",
-    ".foam": "OpenFOAM",
-}
-
 
 class Survey(Table):
     """One survey, completely described: the content of a survey file with every quantity in SI.
@@ -106,7 +98,7 @@ class Survey(Table):
         if self.boundary is None and self.section is None:
             raise fail(
                 "table [boundary] is missing",
-                'add [boundary] with kind = "free_air", "closed_walls" or "open_jet": the surroundings are never assumed',
+                'add [boundary] with kind = "free_air", "closed_walls" or "open_jet": it is never assumed',
             )
         for index, plane in enumerate(self.planes):
             place: tuple[str | int, ...] = ("plane", index)
@@ -173,8 +165,6 @@ class Survey(Table):
                 "[plane.columns] tube",
                 "rakes are not assembled yet; give each point's position",
             )
-            format_ = _LATER_FORMATS.get(Path(plane.file).suffix.lower())
-            add(format_, "[plane] file", f"{format_} files are not read yet; export the plane as a table or netCDF")
         add(
             self.probe,
             "[probe]",
@@ -196,7 +186,7 @@ class Survey(Table):
         return found
 
     def notes(self) -> list[str]:
-        """What is lost because an optional key is absent.
+        """What is lost because an optional key is absent, and what is kept without being used.
 
         Returns
         -------
@@ -214,6 +204,12 @@ class Survey(Table):
                     "[model] mean_chord: it is absent, and quarter_chord_x too, so the bound vortex's effect on "
                     "the energy form is not predicted"
                 )
+        idle = [key for key in ("weight", "load_factor") if getattr(self.reference, key) is not None]
+        found.extend(f"[reference] {key}: it is kept in the archive, and no row uses it" for key in idle)
+        for plane in self.planes:
+            kept = [name for name in plane.columns if name == "time" or name.startswith(("reynolds", "turbulent"))]
+            if kept:
+                found.append(f"[plane.columns] {', '.join(kept)}: kept in the archive, and no row uses them")
         if not self.uncertainty.source:
             found.append("[[uncertainty.source]]: there is none, so the uncertainty of the measurement is unknown")
         return found

@@ -15,6 +15,7 @@ from wakeledger.run.config.quantities import (
     LengthFromZero,
     Number,
     Point,
+    Polygon,
     Polyline,
     PositiveLength,
     PositiveNumber,
@@ -140,7 +141,7 @@ class BoundaryTable(Table):
     z: Walls | None = None
     diameter: PositiveLength | None = None
     centre: Point | None = None
-    vertices: Shape | None = None
+    vertices: Polygon | None = None
     reflection: Literal["y", "z"] | None = None
     inboard_cut: LengthFromZero | None = None
 
@@ -182,8 +183,8 @@ class WakeTable(Table):
         Threshold in units of the noise.
     grow : float or None
         Dilation of the mask, m.
-    include, exclude : tuple of ndarray, shape (n, 2)
-        Polygons (y, z), m, that are always or never in the wake; a box is given as its four corners.
+    include, exclude : tuple of ndarray, shape (2, 2) or (n, 2)
+        Boxes (two corners) and polygons (y, z), m, that are always or never in the wake.
     """
 
     level: PositiveNumber | None = None

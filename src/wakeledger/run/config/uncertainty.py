@@ -146,7 +146,7 @@ def _parse_amount(written: Any, names: tuple[str, ...], targets: Mapping[str, Ta
     if len(set(scales.values())) > 1:
         raise fail(
             f"{written!r} means different things for {' and '.join(names)}",
-            "give each a source of its own: it is a fraction of the reference for a normalised column, else of the value",
+            "give each a source of its own: normalised columns take a fraction of the reference, others of the value",
         )
     scale = scales[names[0]]
     if scale is None:
@@ -263,6 +263,18 @@ class Source(Table):
                 "correlation_length is given for an error that does not vary from point to point",
                 'leave it out, or write effect = "random" for plane, angle, position or probe quantities',
                 "correlation_length",
+            )
+        if self.correlation_length is not None and self.distribution != "normal":
+            raise fail(
+                f'correlation_length is given with distribution = "{self.distribution}"',
+                'errors that hang together in space are normal: write distribution = "normal", or leave it out',
+                "correlation_length",
+            )
+        if self.distribution == "triangular" and math.isfinite(self.degrees_of_freedom):
+            raise fail(
+                'degrees_of_freedom is given with distribution = "triangular"',
+                "it goes with a normal or a rectangular distribution",
+                "degrees_of_freedom",
             )
         return self
 
