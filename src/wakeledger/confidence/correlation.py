@@ -107,9 +107,7 @@ def _scattered_field(positions: Array, length: float) -> tuple[int, Expansion]:
     key = ((nodes[0][:, :, None] + reach) * stride + nodes[1][:, None, :] + reach).reshape(len(positions), -1)
     unique, column = np.unique(key, return_inverse=True)
     pointer = np.arange(0, weight.size + 1, weight.shape[1])
-    matrix = sparse.csr_array(  # type: ignore[no-untyped-call]
-        (weight.ravel(), column.ravel(), pointer), shape=(len(positions), unique.size)
-    )
+    matrix = sparse.csr_array((weight.ravel(), column.ravel(), pointer), shape=(len(positions), unique.size))
 
     def expand(latents: Array) -> Array:
         result: Array = (matrix @ latents.T).T

@@ -1,0 +1,223 @@
+"""Point-to-point noise of a gridded channel, estimated from the data themselves."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import cache
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.special import comb
+
+from wakeledger.core.grid import Array
+
+_ORDER = 6
+_CLIP = 3.0
+# Variance of a unit normal variable cut off at +-3, 1 - 6 phi(3)/(2 Phi(3) - 1).
+_CLIPPED_VARIANCE = 0.9733369
+_MAD_TO_SIGMA = 1.482602
+_FEWEST = 50
+_LONGEST = 2.0
+
+
+@dataclass(frozen=True)
+class NoiseEstimate:
+    """Noise of one channel.
+
+    Attributes
+    ----------
+    standard_deviation : float
+        Standard deviation of the noise of one point, in the channel's unit; NaN where it cannot be had.
+    correlation_length_cells : tuple of float
+        Correlation length along z and along y, in cells, of noise correlated as exp(-(d/L)²/2); NaN along an axis on
+        which it is not told apart from white noise.
+    effective_size : float
+        Number of independent values that would fix the standard deviation equally well: its relative standard error is
+        1/√(2 effective_size).
+    axis_standard_deviations : tuple of float
+        The estimate from differences along z and along y alone, corrected for the correlation found on that axis.
+    reason : str or None
+        Why the value is unknown or less certain than its size says.
+    """
+
+    standard_deviation: float
+    correlation_length_cells: tuple[float, float]
+    effective_size: float
+    axis_standard_deviations: tuple[float, float]
+    reason: str | None = None
+
+    @property
+    def is_white(self) -> bool:
+        """Whether no correlation between neighbouring points was found along either axis."""
+        return all(math.isnan(length) for length in self.correlation_length_cells)
+
+
+@dataclass(frozen=True)
+class _AxisNoise:
+    deviation: float
+    length: float
+    size: float
+    beyond: bool = False
+
+
+def estimate_noise(field: Array, *, mask: NDArray[np.bool_] | None = None) -> NoiseEstimate:
+    """Noise of a field from its sixth differences.
+
+    Parameters
+    ----------
+    field : ndarray, shape (nz, ny)
+        One channel on a uniform grid; NaN where there is no value.
+    mask : ndarray of bool, shape (nz, ny), optional
+        True where the field is to be left out, as in the wake, where the flow itself varies from point to point.
+
+    Returns
+    -------
+    NoiseEstimate
+
+    Raises
+    ------
+    ValueError
+        If the mask has another shape than the field.
+
+    Notes
+    -----
+    The sixth difference along an axis, divided by √924, leaves the standard deviation of white noise as it is and
+    takes out whatever is a polynomial of fifth degree over seven points. Its spread is the median absolute deviation,
+    refined by discarding what lies beyond three standard deviations until nothing changes, so that single wild values
+    do not count. White noise through the filter has autocorrelations -6/7 and 15/28 at lags one and two; where either
+    is off by more than four standard errors, the length of exp(-(d/L)²/2) that gives the first is found and the loss of
+    such noise in the filter is made good. The two axes are pooled where they agree; else the axis on which
+    the noise is white is taken, or the smaller value, since a signal can only add.
+    """
+    field = np.asarray(field, dtype=float)
+    if mask is not None:
+        if mask.shape != field.shape:
+            raise ValueError(f"mask has shape {mask.shape}; the field has {field.shape}")
+        field = np.where(mask, np.nan, field)
+    along_z, along_y = _axis_noise(field.T), _axis_noise(field)
+    lengths = (along_z.length, along_y.length)
+    deviations = (along_z.deviation, along_y.deviation)
+    found = [one for one in (along_z, along_y) if one.size >= 1]
+    if not found:
+        nan = math.nan
+        return NoiseEstimate(nan, (nan, nan), 0.0, (nan, nan), f"fewer than {_FEWEST} stretches of seven good points")
+    white = [one for one in found if math.isnan(one.length)] or found
+    chosen = min(white, key=lambda one: one.deviation)
+    deviation, size = chosen.deviation, chosen.size
+    if len(white) == 2 and _agree(*white):
+        # Differences along z and along y of the same white noise are nearly independent.
+        size = white[0].size + white[1].size
+        deviation = math.sqrt(sum(one.size * one.deviation**2 for one in white) / size)
+    reason = None
+    if chosen.beyond:
+        reason = f"the noise is correlated over more than {_LONGEST:g} cells; the value is a lower bound"
+    elif not math.isnan(chosen.length):
+        reason = "neighbouring points share their noise; the value rests on the correlation found"
+    return NoiseEstimate(deviation, lengths, size, deviations, reason)
+
+
+def _agree(one: _AxisNoise, other: _AxisNoise) -> bool:
+    if min(one.deviation, other.deviation) == 0:
+        return one.deviation == other.deviation
+    scatter = math.sqrt(1 / (2 * one.size) + 1 / (2 * other.size))
+    return abs(math.log(one.deviation / other.deviation)) < 4 * scatter
+
+
+def _axis_noise(field: Array) -> _AxisNoise:
+    """Noise from differences along the last axis."""
+    columns = field.shape[1] - _ORDER
+    if columns < 3:
+        return _AxisNoise(math.nan, math.nan, 0.0)
+    weights = comb(_ORDER, np.arange(_ORDER + 1)) * (-1.0) ** np.arange(_ORDER + 1)
+    weights /= math.sqrt(float((weights**2).sum()))
+    differences = sum(w * field[:, k : k + columns] for k, w in enumerate(weights))
+    values = differences[np.isfinite(differences)]
+    if values.size < _FEWEST:
+        return _AxisNoise(math.nan, math.nan, 0.0)
+    deviation = _clipped_deviation(values)
+    # Errors common to neighbouring lines, as in a traverse row, leave fewer independent values.
+    across = _robust_correlation(differences[:-1], differences[1:])
+    repeated = min((1 + across**2) / max(1 - across**2, 1e-12), float(len(field)))
+    count = values.size / repeated
+    white, errors = _white_filter()
+    lag_one = _robust_correlation(differences[:, :-1], differences[:, 1:])
+    lag_two = _robust_correlation(differences[:, :-2], differences[:, 2:])
+    departs = (
+        abs(lag_one - white[1]) > 4 * errors[0] / math.sqrt(count),
+        abs(lag_two - white[2]) > 4 * errors[1] / math.sqrt(count),
+    )
+    if deviation == 0 or not any(departs):
+        return _AxisNoise(deviation, math.nan, count * _independent_share(white))
+    lengths, first, gain = _correlated_filter()
+    length = float(np.interp(lag_one, first, lengths))
+    passed = float(np.interp(length, lengths, gain))
+    share = _independent_share(_autocovariance(_correlation_at_lags(length, 6 * _ORDER)))
+    slope = float(np.interp(lag_one, first, np.gradient(np.log(gain), first))) / 2
+    relative_variance = 1 / (2 * count * share) + (slope * errors[0]) ** 2 / count
+    return _AxisNoise(deviation / math.sqrt(passed), length, 1 / (2 * relative_variance), lag_one > first[-1])
+
+
+def _clipped_deviation(values: Array) -> float:
+    deviation = _MAD_TO_SIGMA * float(np.median(np.abs(values)))
+    for _ in range(30):
+        kept = values[np.abs(values) <= _CLIP * deviation]
+        refined = math.sqrt(float(np.mean(kept**2)) / _CLIPPED_VARIANCE)
+        if abs(refined - deviation) <= 1e-6 * deviation:
+            break
+        deviation = refined
+    return deviation
+
+
+def _robust_correlation(a: Array, b: Array) -> float:
+    """Correlation from the spreads of sum and difference; zero where there is too little to tell."""
+    good = np.isfinite(a) & np.isfinite(b)
+    if good.sum() < _FEWEST:
+        return 0.0
+    plus = _clipped_deviation(a[good] + b[good]) ** 2
+    minus = _clipped_deviation(a[good] - b[good]) ** 2
+    return (plus - minus) / (plus + minus) if plus + minus > 0 else 0.0
+
+
+def _autocovariance(correlation: Array) -> Array:
+    """Autocovariance at lags 0, 1, 2 … of the filtered noise, from the noise's correlation at lags 0, 1, …."""
+    lags = np.arange(-_ORDER, _ORDER + 1)
+    taps = comb(2 * _ORDER, lags + _ORDER) * (-1.0) ** lags / comb(2 * _ORDER, _ORDER)
+    shifts = np.arange(correlation.size - _ORDER)
+    result: Array = (taps[None, :] * correlation[np.abs(shifts[:, None] + lags[None, :])]).sum(axis=1)
+    return result
+
+
+def _correlation_at_lags(length: float, count: int) -> Array:
+    result: Array = np.exp(-0.5 * (np.arange(count) / length) ** 2)
+    return result
+
+
+def _independent_share(autocovariance: Array) -> float:
+    """Independent values per value, for the variance of a sequence with this autocovariance at lags 0, 1, …."""
+    rho = autocovariance / autocovariance[0]
+    # Cutting at three standard deviations costs a tenth of what the values tell about their variance.
+    return 0.9 / float(2 * (rho**2).sum() - 1)
+
+
+@cache
+def _white_filter() -> tuple[Array, tuple[float, float]]:
+    """Autocorrelation of filtered white noise, and Bartlett's standard errors at lags 1 and 2, times √n."""
+    correlation = _autocovariance(np.eye(1, 6 * _ORDER)[0])
+    lags = np.arange(1, 3 * _ORDER)
+    errors = []
+    for lag in (1, 2):
+        terms = correlation[lags + lag] + correlation[np.abs(lags - lag)] - 2 * correlation[lag] * correlation[lags]
+        errors.append(math.sqrt(float((terms**2).sum())))
+    return correlation, (errors[0], errors[1])
+
+
+@cache
+def _correlated_filter() -> tuple[Array, Array, Array]:
+    """Correlation lengths in cells, lag-one autocorrelation after the filter, share of the variance that it passes."""
+    lengths = np.linspace(0.2, _LONGEST, 181)
+    first, gain = np.empty_like(lengths), np.empty_like(lengths)
+    for k, length in enumerate(lengths):
+        covariance = _autocovariance(_correlation_at_lags(float(length), _ORDER + 2))
+        first[k], gain[k] = covariance[1] / covariance[0], covariance[0]
+    return lengths, first, gain

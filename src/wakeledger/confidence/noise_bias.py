@@ -1,0 +1,146 @@
+"""What noise adds, on average, to a quadratic form of the data: exact linear algebra, no simulation."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
+from numpy.typing import NDArray
+
+from wakeledger.core.grid import Array
+
+Kernel = Array | Callable[[NDArray[np.int64], NDArray[np.int64]], Array]
+
+_NEGLIGIBLE = 1e-10
+
+
+def quadratic_noise_bias(
+    left_z: Array,
+    left_y: Array,
+    kernel: Kernel,
+    mask: Array,
+    variance: float | Array,
+    *,
+    correlation: tuple[Array | None, Array | None] = (None, None),
+) -> float:
+    """Expected value that the noise of one data field adds to a quadratic form.
+
+    Parameters
+    ----------
+    left_z : ndarray, shape (nz, nz_raw)
+        Operator along z from the data to the field that enters the form (a derivative, an interpolation, the identity).
+    left_y : ndarray, shape (ny, ny_raw)
+        Operator along y.
+    kernel : ndarray, shape (2 nz - 1, 2 ny - 1), or callable
+        Weights g at the offsets (dz, dy) in cells, g(0, 0) in the middle; a callable takes two integer arrays that
+        broadcast and gives the weights. Quadrature weights belong in it.
+    mask : ndarray, shape (nz, ny)
+        Weight of each point: 1 inside the region, 0 outside, or anything between.
+    variance : float or ndarray, shape (nz_raw, ny_raw)
+        Variance of the noise of the data.
+    correlation : tuple of (ndarray or None)
+        Correlation matrices of the noise along z, (nz_raw, nz_raw), and along y, (ny_raw, ny_raw), whose product is the
+        correlation of two data points; None where they are independent. `squared_exponential` gives one; a matrix of
+        ones along y is one error per row of constant z.
+
+    Returns
+    -------
+    float
+        The expectation, in the unit of the form. Fields with independent noise add.
+
+    Raises
+    ------
+    ValueError
+        If the shapes do not fit together.
+
+    Notes
+    -----
+    With the form Q(f) = ½ Σ_ij M_i f_i g(i - j) f_j M_j and f = R_z n R_yᵀ the noise n adds
+    E[Q] = ½ Σ_ij g(i - j) C_ij M_i M_j, C = σ² (R_z K_z R_zᵀ) ⊗ (R_y K_y R_yᵀ), since the noise has no mean and the
+    mixed terms vanish. The sum runs over the offsets at which the covariance along the narrower axis is not negligible.
+    A variance that differs from point to point is exact for independent noise; with correlation it is taken as slowly
+    varying: √(σ²_i σ²_j) at the two points of the form, each a mean weighted with the operators' squares.
+    """
+    left_z, left_y, mask = (np.asarray(a, dtype=float) for a in (left_z, left_y, mask))
+    spread = np.asarray(variance, dtype=float)
+    nz, ny = mask.shape
+    raw = left_z.shape[1], left_y.shape[1]
+    if (left_z.shape[0], left_y.shape[0]) != mask.shape:
+        raise ValueError(f"the operators give shape {(left_z.shape[0], left_y.shape[0])}; the mask has {mask.shape}")
+    if spread.ndim and spread.shape != raw:
+        raise ValueError(f"variance has shape {spread.shape}; the data have {raw}")
+    weights = _offset_weights(kernel, nz, ny)
+    rows, columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
+    if not rows.size:
+        return 0.0
+    # Only the box around the region takes part.
+    box = slice(rows[0], rows[-1] + 1), slice(columns[0], columns[-1] + 1)
+    mask, left_z, left_y = mask[box], left_z[box[0]], left_y[box[1]]
+    reach_z, reach_y = mask.shape[0] - 1, mask.shape[1] - 1
+    weights = weights[nz - 1 - reach_z : nz + reach_z, ny - 1 - reach_y : ny + reach_y]
+    if spread.ndim and spread.min() == spread.max():
+        spread = spread[0, 0]
+    if spread.ndim:
+        if all(matrix is None for matrix in correlation):
+            return 0.5 * _independent(left_z, left_y, weights, mask, spread)
+        total = np.outer((left_z**2).sum(axis=1), (left_y**2).sum(axis=1))
+        local = left_z**2 @ spread @ (left_y**2).T
+        mask = mask * np.sqrt(np.divide(local, total, out=np.zeros_like(local), where=total > 0))
+        spread = np.array(1.0)
+    covariance_z, covariance_y = (
+        left @ left.T if matrix is None else left @ matrix @ left.T
+        for left, matrix in zip((left_z, left_y), correlation, strict=True)
+    )
+    if _band(covariance_y) < _band(covariance_z):
+        covariance_z, covariance_y, weights, mask = covariance_y, covariance_z, weights.T, mask.T
+    return 0.5 * float(spread) * _separable(covariance_z, covariance_y, weights, mask)
+
+
+def _offset_weights(kernel: Kernel, nz: int, ny: int) -> Array:
+    if callable(kernel):
+        kernel = kernel(np.arange(1 - nz, nz)[:, None], np.arange(1 - ny, ny)[None, :])
+    weights = np.asarray(kernel, dtype=float)
+    if weights.shape != (2 * nz - 1, 2 * ny - 1):
+        raise ValueError(f"kernel has shape {weights.shape}; {(2 * nz - 1, 2 * ny - 1)} offsets are needed")
+    return weights
+
+
+def _band(covariance: Array) -> int:
+    """Largest offset at which a covariance matrix is not negligible."""
+    i, j = np.nonzero(np.abs(covariance) > _NEGLIGIBLE * np.abs(covariance).max())
+    return int(np.abs(i - j).max()) if i.size else 0
+
+
+def _separable(covariance_z: Array, covariance_y: Array, weights: Array, mask: Array) -> float:
+    nz, ny = mask.shape
+    total = 0.0
+    for offset in range(_band(covariance_z) + 1):
+        coupling = _toeplitz(weights[nz - 1 + offset], ny)
+        if offset:
+            coupling = coupling + _toeplitz(weights[nz - 1 - offset], ny).T
+        coupling = coupling * covariance_y
+        left = mask[: nz - offset] * np.diagonal(covariance_z, offset)[:, None]
+        total += float(np.vdot(left @ coupling, mask[offset:]))
+    return total
+
+
+def _toeplitz(row: Array, ny: int) -> Array:
+    """Matrix of the weights at j' - j, from the row of weights at all offsets."""
+    return sliding_window_view(row, ny)[::-1]
+
+
+def _independent(left_z: Array, left_y: Array, weights: Array, mask: Array, variance: Array) -> float:
+    nz, ny = mask.shape
+    band_y = _band(left_y @ left_y.T)
+    total = 0.0
+    for dz in range(_band(left_z @ left_z.T) + 1):
+        along_z = (left_z[: nz - dz] * left_z[dz:]) @ variance
+        for dy in range(-band_y, band_y + 1):
+            if dz == 0 and dy < 0:
+                continue
+            here, there = slice(max(0, -dy), ny - max(0, dy)), slice(max(0, dy), ny - max(0, -dy))
+            g = weights[nz - 1 + dz, ny - 1 + dy] + (weights[nz - 1 - dz, ny - 1 - dy] if dz or dy else 0.0)
+            covariance = along_z @ (left_y[here] * left_y[there]).T
+            total += g * float(np.vdot(covariance, mask[: nz - dz, here] * mask[dz:, there]))
+    return total
