@@ -27,6 +27,8 @@ _CENTRE = 0.15
 _PART = 3.0
 _BRANCH = 6.0
 _MOST_BRANCHES = 8
+#: Width of the neighbourhood in which a centre is the highest, and extent below which a lone vortex is one part, cells.
+_NEIGHBOURHOOD, _COMPACT = 9, 12.0
 #: Share of the total strength below which an island has no trace of its own.
 _ISLAND_SHARE = 0.01
 #: Weight of the loss, and of the distance from the region's boundary, against the vorticity when the ridge is followed.
@@ -170,7 +172,10 @@ def _chains(
     centres = _centres(vorticity, island, rows, columns)
     strongest = centres[np.argmax(vorticity[rows, columns][centres])]
     one = centres[np.argmax(_distances(by_length, strongest)[centres])]
-    other = centres[np.argmax(_distances(by_length, one)[centres])]
+    from_one = _distances(by_length, one)[centres]
+    other = centres[np.argmax(from_one)]
+    if from_one.max() < _COMPACT * max(grid.dy, grid.dz) and one != strongest != other:
+        one = other = strongest
     if (place[one, 0], place[one, 1]) > (place[other, 0], place[other, 1]):
         one, other = other, one
     step = _PART * max(grid.dy, grid.dz)
@@ -200,7 +205,7 @@ def _centres(vorticity: Array, island: Mask, rows: Index, columns: Index) -> Ind
     """Nodes of the vortex centres; all strong cells where there is but one centre."""
     inside = np.where(island, vorticity, 0.0)
     strong = inside >= _CENTRE * inside.max()
-    peak = strong & island & (inside == ndimage.maximum_filter(inside, size=5))
+    peak = strong & island & (inside == ndimage.maximum_filter(inside, size=_NEIGHBOURHOOD))
     nodes = np.flatnonzero(peak[rows, columns])
     if nodes.size < 2:
         nodes = np.flatnonzero((strong & island)[rows, columns])
