@@ -41,6 +41,8 @@ _TEMPERATURE = re.compile(r"(?:°|\bdeg(?:ree)?s?)\s*([CFKR])(?![A-Za-z])")
 _PERCENT = {"%": "percent", "‰": "permille"}
 _GAUGE = re.compile(r"\b(psia|psig|bara|barg)\b", re.IGNORECASE)
 _LONGEST = 80
+# Names, a leading 1, products and small powers. The units library would evaluate anything else, 9**9**9**9 included.
+_TOKEN = re.compile(r"\*\*\s*\(?[+-]?\d(?:\.\d+)?\)?(?![\d.]|\s*\*\*)|[^\W\d]\w*|1(?!\w|\.)|[\s()/]|\*(?!\*)")
 
 
 class UnitError(InputError):
@@ -109,6 +111,8 @@ def _parse(unit: str, si_unit: str) -> tuple[Any, Any]:
         )
     if len(text) > _LONGEST:
         raise UnitError(f"unit {unit[:20]!r}... is too long to be one", remedy=_wanted(si_unit))
+    if _TOKEN.sub("", text):
+        raise UnitError(f"unit {unit!r} is not known", remedy=_hint(unit, si_unit) + _wanted(si_unit))
     try:
         parsed = registry.parse_units("dimensionless" if text in {"", "1"} else text)
         root = registry.get_root_units(parsed)[1]
