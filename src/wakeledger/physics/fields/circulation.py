@@ -10,6 +10,7 @@ from __future__ import annotations
 from functools import lru_cache
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy import sparse
 from scipy.interpolate import RectBivariateSpline
 
@@ -18,6 +19,7 @@ from wakeledger.core.grid import Array, UniformGrid
 # Half of the widest stencil of the edge integrals: eight points, exact for polynomials of degree seven.
 _REACH = 4
 _DEGREE = 5
+_STENCIL = _DEGREE + 1
 
 
 @lru_cache(maxsize=32)
@@ -76,6 +78,61 @@ def _along_last(field: Array, step: float) -> Array:
     flat = field.reshape(-1, n)
     result: Array = (matrix @ flat.T).T.reshape(*field.shape[:-1], n - 1) * step
     return result
+
+
+def circle_weights(grid: UniformGrid, y: float, z: float, radius: float) -> tuple[NDArray[np.intp], Array, Array]:
+    """The line integral around a circle as weights on grid values, for many planes at once.
+
+    Parameters
+    ----------
+    grid : UniformGrid
+        The grid, at least six points along each axis.
+    y, z, radius : float
+        The circle, m; inside the window.
+
+    Returns
+    -------
+    points : ndarray of int, shape (n,)
+        Flat indices of the points that count.
+    on_v, on_w : ndarray, shape (n,)
+        Weights, m: Γ = on_v · v + on_w · w, with fifth-degree polynomials between the points.
+
+    Raises
+    ------
+    ValueError
+        If the grid is too small.
+    """
+    if min(grid.shape) < _STENCIL:
+        raise ValueError(f"polynomials of degree {_DEGREE} need at least {_STENCIL} points along each axis")
+    n = _circle_points(radius, min(grid.dy, grid.dz))
+    angle = 2 * np.pi * (np.arange(n) + 0.5) / n
+    cosine, sine = np.cos(angle), np.sin(angle)
+    columns, along_y = _lagrange((y + radius * cosine - grid.y0) / grid.dy, grid.ny)
+    rows, along_z = _lagrange((z + radius * sine - grid.z0) / grid.dz, grid.nz)
+    flat = (rows[:, :, None] * grid.ny + columns[:, None, :]).reshape(n, -1)
+    weights = (along_z[:, :, None] * along_y[:, None, :]).reshape(n, -1) * (2 * np.pi * radius / n)
+    points, where = np.unique(flat, return_inverse=True)
+    where = where.ravel()
+    on_v: Array = np.bincount(where, (-weights * sine[:, None]).ravel(), points.size).astype(float)
+    on_w: Array = np.bincount(where, (weights * cosine[:, None]).ravel(), points.size).astype(float)
+    return points, on_v, on_w
+
+
+def _lagrange(position: Array, count: int) -> tuple[NDArray[np.intp], Array]:
+    """Indices and weights of the six points around each position given in grid steps, shape (n, 6)."""
+    first = np.clip(np.floor(position).astype(np.intp) - _STENCIL // 2 + 1, 0, count - _STENCIL)
+    offset = (position - first)[:, None]
+    weights = np.empty((position.size, _STENCIL))
+    for k in range(_STENCIL):
+        others = np.delete(np.arange(_STENCIL), k)
+        weights[:, k] = np.prod((offset - others) / (k - others), axis=1)
+    return first[:, None] + np.arange(_STENCIL), weights
+
+
+def _circle_points(radius: float, spacing: float) -> int:
+    # The trapezium rule on a circle is spectrally accurate once the points are about as close as the grid's; a multiple
+    # of four keeps mirrored circles mirrored.
+    return 4 * max(8, int(np.ceil(np.pi * radius / spacing / 2)))
 
 
 class CrossflowSpline:
@@ -143,9 +200,7 @@ class CrossflowSpline:
             raise ValueError(f"a circle of radius {radii.max():g} m about ({y:g}, {z:g}) m leaves the window")
         spacing = min(np.diff(self.y).min(), np.diff(self.z).min())
         largest = float(radii.max()) if radii.size else 0.0
-        # The trapezium rule on a circle is spectrally accurate once the points are about as close as the grid's; a
-        # multiple of four keeps mirrored circles mirrored.
-        n = 4 * max(8, int(np.ceil(np.pi * largest / spacing / 2)))
+        n = _circle_points(largest, spacing)
         angle = 2 * np.pi * (np.arange(n) + 0.5) / n
         cosine, sine = np.cos(angle), np.sin(angle)
         v, w = self.velocity(y + radii[..., None] * cosine, z + radii[..., None] * sine)
@@ -177,9 +232,7 @@ class CrossflowSpline:
         """
         y, z = np.asarray(y, float), np.asarray(z, float)
         slack = 1e-12 * (self.y[-1] - self.y[0] + self.z[-1] - self.z[0])
-        if (
-            min(y.min() - self.y[0], self.y[-1] - y.max(), z.min() - self.z[0], self.z[-1] - z.max()) < -slack
-        ):
+        if min(y.min() - self.y[0], self.y[-1] - y.max(), z.min() - self.z[0], self.z[-1] - z.max()) < -slack:
             raise ValueError(
                 f"the contour leaves the window {self.y[0]:g} … {self.y[-1]:g} m by {self.z[0]:g} … {self.z[-1]:g} m"
             )

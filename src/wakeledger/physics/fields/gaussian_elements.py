@@ -161,25 +161,3 @@ def element_velocity(
     dy, dz = np.asarray(at_y) - y, np.asarray(at_z) - z
     rate = circulation / (2 * np.pi) * swirl_fraction(dy**2 + dz**2, core**2)
     return -rate * dz, rate * dy
-
-
-def circulation_in_rectangles(
-    y_edges: Array, z_edges: Array, y: float, z: float, core: float
-) -> Array:
-    """Share of one Gaussian element's circulation in each cell of a tensor product of edges.
-
-    Parameters
-    ----------
-    y_edges, z_edges : ndarray, shape (n + 1,), (m + 1,)
-        Ascending edges, m.
-    y, z, core : float
-        The element, m.
-
-    Returns
-    -------
-    ndarray, shape (m, n)
-        ¼ Δerf((y − y₀)/a) Δerf((z − z₀)/a); sums to 1 over the whole plane.
-    """
-    along_y = np.diff(special.erf((np.asarray(y_edges) - y) / core)) / 2
-    along_z = np.diff(special.erf((np.asarray(z_edges) - z) / core)) / 2
-    return np.outer(along_z, along_y)

@@ -1,7 +1,7 @@
 """Where the crossflow turns: Γ₁, Γ₂ and the swirling strength.
 
-All three are positive for counter-clockwise rotation seen from behind. Γ₂ and the swirling strength do not change when a
-uniform velocity is added (they are Galilean invariant); Γ₁ does, by definition.
+All three are positive for counter-clockwise rotation seen from behind. Γ₂ and the swirling strength do not change when
+a uniform velocity is added (they are Galilean invariant); Γ₁ does, by definition.
 
 Source: L. Graftieaux, M. Michard, N. Grosjean, Meas. Sci. Technol. 12 (2001) 1422-1429, for Γ₁ and Γ₂.
 """

@@ -1,9 +1,9 @@
 """Least-squares fit of one Gaussian vortex to the measured velocity around it.
 
-The velocity is fitted, not its derivatives: v_θ = Γ/(2πr)(1 − exp(−r²/a²)) about an unknown centre, on top of what other
-vortices and the stream's misalignment leave there (a uniform velocity, irrotational strain and dilatation). Points count
-with a weight that fades smoothly at about the swirl's peak radius, so that the answer does not hinge on which points a
-sharp window happens to hold.
+The velocity is fitted, not its derivatives: v_θ = Γ/(2πr)(1 − exp(−r²/a²)) about an unknown centre, on top of what
+other vortices and the stream's misalignment leave there (a uniform velocity, irrotational strain and dilatation).
+Points count with a weight that fades smoothly beyond the swirl's peak, so that the answer does not hinge on which
+points a sharp window happens to hold.
 """
 
 from __future__ import annotations
@@ -11,6 +11,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy import optimize
 
 from wakeledger.core.grid import Array, UniformGrid
@@ -53,7 +54,7 @@ class GaussianFit:
     circulation: float
     core: float
     misfit: float
-    points: Array
+    points: NDArray[np.intp]
     response: Array
 
 
@@ -113,60 +114,64 @@ def fit_gaussian(
         None where the fit runs away from the guess or too few points are at hand.
     """
     first_core = core
+    fit: GaussianFit | None = None
     for _ in range(_STAGES):
-        patch, rows, columns, speed = _cut(v, w, grid, y, z, circulation, core)
-        if patch is None:
+        fit = _stage(v, w, grid, y, z, circulation, core)
+        if fit is None or not 0.25 < fit.core / first_core < 4.0:
             return None
-        start = np.zeros(9)
-        start[2] = circulation / (2 * np.pi * core * speed)
-        solution = optimize.least_squares(
-            lambda p, patch=patch: patch.model_and_jacobian(p)[0],
-            start,
-            jac=lambda p, patch=patch: patch.model_and_jacobian(p)[1],
-            method="lm",
-            xtol=1e-12,
-            ftol=1e-12,
-            gtol=1e-12,
-        )
-        p, pseudo_inverse = _polished(patch, solution.x)
-        step = np.hypot(p[0], p[1])
-        if not np.isfinite(p).all() or step > 2.0 or abs(p[3]) > np.log(3.0) or p[2] * circulation <= 0:
-            return None
-        y, z = y + p[0] * core, z + p[1] * core
-        circulation = 2 * np.pi * p[2] * core * speed
-        length, core = core, core * float(np.exp(p[3]))
-        if not 0.25 < core / first_core < 4.0:
-            return None
-    residual = patch.model_and_jacobian(p)[0]
-    rms = float(np.sqrt((residual**2).sum() / (patch.weight**2).sum()))
-    scale = np.array([length, length, 2 * np.pi * length * speed, core])
-    response = pseudo_inverse[:4] * patch.weight * (scale / speed)[:, None]
-    points = (rows[:, None] * grid.ny + columns).ravel()
-    peak = PEAK_SWIRL * abs(p[2]) / np.exp(p[3])
-    return GaussianFit(y, z, circulation, core, rms / peak, points, response)
+        y, z, circulation, core = fit.y, fit.z, fit.circulation, fit.core
+    return fit
 
 
-def _cut(
+def _stage(
     v: Array, w: Array, grid: UniformGrid, y: float, z: float, circulation: float, core: float
-) -> tuple[_Patch | None, Array, Array, float]:
+) -> GaussianFit | None:
+    """One fit with the weights that belong to the given vortex."""
     reach = max(_WINDOW * core, 2.5 * max(grid.dy, grid.dz))
     columns = np.flatnonzero(np.abs(grid.y - y) <= reach * (1 + 1e-9))
     rows = np.flatnonzero(np.abs(grid.z - z) <= reach * (1 + 1e-9))
     speed = PEAK_SWIRL * abs(circulation) / (2 * np.pi * core)
     if columns.size < 3 or rows.size < 3 or not speed > 0:
-        return None, rows, columns, speed
+        return None
     yy, zz = np.meshgrid((grid.y[columns] - y) / core, (grid.z[rows] - z) / core)
     yy, zz = yy.ravel(), zz.ravel()
     cut = np.ix_(rows, columns)
     velocity = np.concatenate([v[cut].ravel(), w[cut].ravel()]) / speed
     spread = max(_WEIGHT_REACH, 1.5 * max(grid.dy, grid.dz) / core)
     weight = np.exp(-(((yy**2 + zz**2) / spread**2) ** 2) / 2)
-    return _Patch(yy, zz, velocity, np.concatenate([weight, weight])), rows, columns, speed
+    patch = _Patch(yy, zz, velocity, np.concatenate([weight, weight]))
+    start = np.zeros(9)
+    start[2] = circulation / (2 * np.pi * core * speed)
+    solution = optimize.least_squares(
+        lambda p: patch.model_and_jacobian(p)[0],
+        start,
+        jac=lambda p: patch.model_and_jacobian(p)[1],
+        method="lm",
+        xtol=1e-12,
+        ftol=1e-12,
+        gtol=1e-12,
+    )
+    p, pseudo_inverse = _polished(patch, solution.x)
+    if not np.isfinite(p).all() or np.hypot(p[0], p[1]) > 2 or abs(p[3]) > np.log(3.0) or p[2] * circulation <= 0:
+        return None
+    fitted_core = core * float(np.exp(p[3]))
+    residual = patch.model_and_jacobian(p)[0]
+    rms = float(np.sqrt((residual**2).sum() / (patch.weight**2).sum()))
+    scale = np.array([core, core, 2 * np.pi * core * speed, fitted_core])
+    return GaussianFit(
+        y=y + float(p[0]) * core,
+        z=z + float(p[1]) * core,
+        circulation=float(p[2]) * 2 * np.pi * core * speed,
+        core=fitted_core,
+        misfit=rms * float(np.exp(p[3])) / (PEAK_SWIRL * abs(float(p[2]))),
+        points=(rows[:, None] * grid.ny + columns).ravel(),
+        response=pseudo_inverse[:4] * patch.weight * (scale / speed)[:, None],
+    )
 
 
 def _polished(patch: _Patch, p: Array) -> tuple[Array, Array]:
     """Plain Gauss-Newton steps until rounding: mirrored data must give mirrored answers to the last digits."""
-    pseudo_inverse = np.zeros((p.size, patch.velocity.size))
+    pseudo_inverse: Array = np.zeros((p.size, patch.velocity.size))
     for _ in range(_POLISH):
         residual, jacobian = patch.model_and_jacobian(p)
         pseudo_inverse = np.linalg.pinv(jacobian)

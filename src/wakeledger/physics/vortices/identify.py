@@ -211,7 +211,7 @@ def _measured(
 
 
 def _room(grid: UniformGrid, y: float, z: float) -> float:
-    return min(y - grid.y[0], grid.y[-1] - y, z - grid.z[0], grid.z[-1] - z)
+    return float(min(y - grid.y[0], grid.y[-1] - y, z - grid.z[0], grid.z[-1] - z))
 
 
 def _first_guess(spline: CrossflowSpline, grid: UniformGrid, y: float, z: float) -> tuple[float, float] | None:
