@@ -1,0 +1,35 @@
+"""The command line: parses, calls, prints, exits."""
+
+from __future__ import annotations
+
+import sys
+
+import click
+
+from wakeledger.cli.exits import run
+from wakeledger.cli.inspect import inspect
+from wakeledger.cli.reduce import reduce
+from wakeledger.cli.show import show
+
+
+@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.version_option(package_name="wakeledger", message="%(prog)s %(version)s")
+def wakeledger() -> None:
+    r"""Turn a plane of flow data behind a body into a drag ledger.
+
+    Profile, induced and wave drag and lift, each with its uncertainty and an independent cross-check, kept in one
+    archive.
+
+    \b
+    Exit status: 0 done; 1 done, but a check failed; 2 the input is wrong;
+    3 the program itself failed.
+    """
+
+
+for command in (reduce, inspect, show):
+    wakeledger.add_command(command)
+
+
+def main() -> None:
+    """Entry point of the ``wakeledger`` program."""
+    sys.exit(run(wakeledger, sys.argv[1:]))

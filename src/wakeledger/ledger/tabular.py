@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import html
+import json
 import math
 from collections.abc import Mapping
 from dataclasses import asdict, fields
@@ -78,6 +79,27 @@ def _plain(entry: Mapping[str, Any], why: str) -> dict[str, Any]:
     if reason:
         plain["reason"] = reason
     return plain
+
+
+def json_text(document: Mapping[str, Any]) -> str:
+    """A document as the text of a JSON file.
+
+    Parameters
+    ----------
+    document : mapping
+        As made by `ledger_json`.
+
+    Returns
+    -------
+    str
+        Indented, in Unicode, every number in full, ended by a line feed.
+
+    Raises
+    ------
+    ValueError
+        If it holds a NaN or an infinity.
+    """
+    return json.dumps(document, indent=1, ensure_ascii=False, allow_nan=False) + "\n"
 
 
 def ledger_csv(ledger: Ledger) -> str:

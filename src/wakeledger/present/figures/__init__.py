@@ -1,1 +1,21 @@
 """Figures of a finished ledger."""
+
+from wakeledger.present.figures.budget import budget_figure
+from wakeledger.present.figures.canvas import FORMATS, figure_bytes
+from wakeledger.present.figures.crosschecks import estimates_figure
+from wakeledger.present.figures.gallery import draw, save_figures
+from wakeledger.present.figures.maps import axial_velocity_map, loss_map, vorticity_map
+from wakeledger.present.figures.spanwise import span_figure
+
+__all__ = [
+    "FORMATS",
+    "axial_velocity_map",
+    "budget_figure",
+    "draw",
+    "estimates_figure",
+    "figure_bytes",
+    "loss_map",
+    "save_figures",
+    "span_figure",
+    "vorticity_map",
+]

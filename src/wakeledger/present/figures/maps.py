@@ -1,0 +1,224 @@
+"""Maps of the plane, seen from behind, looking upstream: y to starboard is to the right."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from wakeledger.core.flags import Flag
+from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.core.plane import grid_of
+from wakeledger.present.figures.canvas import INK, WIDTH, style
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+    from wakeledger.ledger.rows import Ledger
+
+#: Cells with one of these flags hold no measurement that can be trusted; they are hatched.
+UNTRUSTED = int(Flag.MISSING | Flag.FAR_FROM_DATA | Flag.NON_PHYSICAL | Flag.OUT_OF_RANGE)
+
+VEIL = (0.55, 0.58, 0.61, 0.45)
+HATCH = "///////"
+
+#: More boxes than this are drawn as pixels, so that the file stays small.
+MANY_BOXES = 500
+
+#: Arrows along the longer side of the plane.
+ARROWS = 32
+
+
+@dataclass(frozen=True)
+class _Shade:
+    """How one field is coloured."""
+
+    values: Array
+    label: str
+    colours: str
+    lowest: float
+    highest: float
+    beyond: str
+
+
+def loss_map(ledger: Ledger) -> Figure:
+    """Map of the total-pressure loss, as a part of the reference dynamic pressure where that is known.
+
+    Parameters
+    ----------
+    ledger : Ledger
+        With ``total_pressure_loss`` in its plane.
+
+    Returns
+    -------
+    Figure
+    """
+    loss = ledger.plane["total_pressure_loss"].values
+    q = ledger.reference.get("dynamic_pressure", np.nan)
+    known = bool(q > 0)
+    loss = loss / q if known else loss
+    label = "total-pressure loss / q" if known else "total-pressure loss, Pa"
+    highest = float(np.nanpercentile(loss, 99.7)) or 1.0
+    return _map(ledger, "Total-pressure loss", _Shade(loss, label, "GnBu", 0.0, max(highest, 1e-12), "both"))
+
+
+def vorticity_map(ledger: Ledger) -> Figure:
+    """Map of the axial vorticity with arrows of the crossflow.
+
+    Parameters
+    ----------
+    ledger : Ledger
+        With ``axial_vorticity``, ``v`` and ``w`` in its plane.
+
+    Returns
+    -------
+    Figure
+    """
+    xi = ledger.plane["axial_vorticity"].values
+    limit = max(float(np.nanpercentile(np.abs(xi), 99.0)), 1e-12)
+    shade = _Shade(xi, "axial vorticity, 1/s", "RdBu_r", -limit, limit, "both")
+    return _map(ledger, "Axial vorticity and crossflow", shade, arrows=True)
+
+
+def axial_velocity_map(ledger: Ledger) -> Figure:
+    """Map of the velocity along the stream, as a part of the stream's speed where that is known.
+
+    Parameters
+    ----------
+    ledger : Ledger
+        With ``u`` in its plane.
+
+    Returns
+    -------
+    Figure
+    """
+    u = ledger.plane["u"].values
+    speed = ledger.reference.get("speed", np.nan)
+    if speed > 0:
+        excess = u / speed - 1
+        limit = max(float(np.nanpercentile(np.abs(excess), 99.7)), 1e-12)
+        shade = _Shade(excess, "u / U − 1", "PuOr", -limit, limit, "both")
+    else:
+        low, high = (float(bound) for bound in np.nanpercentile(u, (0.3, 100)))
+        shade = _Shade(u, "u, m/s", "cividis", low, high, "min")
+    return _map(ledger, "Axial velocity", shade)
+
+
+def _map(ledger: Ledger, title: str, shade: _Shade, *, arrows: bool = False) -> Figure:
+    from matplotlib.figure import Figure
+
+    grid = grid_of(ledger.plane)
+    width_m, height_m = grid.dy * grid.ny, grid.dz * grid.nz
+    with style():
+        height = float(np.clip((WIDTH - 1.5) * height_m / width_m, 1.2, 7.5)) + 1.15
+        figure = Figure(figsize=(WIDTH, height), layout="constrained")
+        axes = figure.add_subplot()
+        image = axes.imshow(
+            shade.values,
+            origin="lower",
+            extent=(
+                grid.y[0] - grid.dy / 2,
+                grid.y[-1] + grid.dy / 2,
+                grid.z[0] - grid.dz / 2,
+                grid.z[-1] + grid.dz / 2,
+            ),
+            cmap=shade.colours,
+            vmin=shade.lowest,
+            vmax=shade.highest,
+            interpolation="nearest",
+            aspect="equal",
+            rasterized=True,
+        )
+        bar = figure.colorbar(image, ax=axes, extend=shade.beyond, fraction=0.05, pad=0.02, shrink=0.9)
+        bar.set_label(shade.label)
+        bar.outline.set_linewidth(0.5)
+        axes.set_title(title)
+        axes.set_xlabel("y to starboard, m (seen from behind)")
+        axes.set_ylabel("z up, m")
+        named = _overlay(axes, ledger)
+        if arrows:
+            _arrows(axes, ledger)
+        if named:
+            figure.legend(handles=named, loc="outside lower left", ncols=len(named))
+    return figure
+
+
+def _overlay(axes: Axes, ledger: Ledger) -> list[object]:
+    """Outline of the wake region, cells that were not measured, vortices and the wake's trace; what was drawn."""
+    from matplotlib.lines import Line2D
+    from matplotlib.patches import Circle, Patch
+    from matplotlib.patheffects import withStroke
+
+    halo = [withStroke(linewidth=2.2, foreground="white", alpha=0.7)]
+    plane = ledger.plane
+    y, z = plane["y"].values, plane["z"].values
+    drawn: list[object] = []
+    if "wake_mask" in plane:
+        mask = plane["wake_mask"].values.astype(float)
+        if 0 < mask.sum() < mask.size:
+            axes.contour(y, z, mask, levels=[0.5], colors=[INK], linewidths=0.8)
+            drawn.append(Line2D([], [], color=INK, linewidth=0.8, label="wake region"))
+    if "flag" in plane:
+        untrusted = (plane["flag"].values & UNTRUSTED) != 0
+        if untrusted.any():
+            _hatch(axes, grid_of(plane), untrusted)
+            drawn.append(Patch(facecolor=VEIL, edgecolor=INK, hatch=HATCH, linewidth=0, label="no trusted measurement"))
+    if ledger.wake_line is not None:
+        trace = ledger.wake_line
+        axes.plot(
+            trace["y"].values, trace["z"].values, color=INK, linewidth=1.0, linestyle=(0, (4, 2)), path_effects=halo
+        )
+        drawn.append(Line2D([], [], color=INK, linewidth=1.0, linestyle=(0, (4, 2)), label="trace of the wake"))
+    if ledger.vortices is not None and ledger.vortices["y"].size:
+        vortices = ledger.vortices
+        radius = vortices["core_radius"].values if "core_radius" in vortices else np.full(vortices["y"].size, np.nan)
+        for yc, zc, a in zip(vortices["y"].values, vortices["z"].values, radius, strict=True):
+            if np.isfinite(a):
+                axes.add_patch(Circle((yc, zc), a, fill=False, edgecolor=INK, linewidth=1.0, path_effects=halo))
+            axes.plot([yc], [zc], marker="+", color=INK, markersize=6, markeredgewidth=1.0, path_effects=halo)
+        drawn.append(
+            Line2D([], [], linestyle="none", marker="+", color=INK, markersize=6, label="vortex centre and core radius")
+        )
+    axes.set_xlim(float(y[0]), float(y[-1]))
+    axes.set_ylim(float(z[0]), float(z[-1]))
+    return drawn
+
+
+def _hatch(axes: Axes, grid: UniformGrid, cells: NDArray[np.bool_]) -> None:
+    """Veil and hatch whole cells; neighbours along y share one rectangle."""
+    from matplotlib.collections import PatchCollection
+    from matplotlib.patches import Rectangle
+
+    boxes = []
+    for row, line in enumerate(cells):
+        bounds = np.flatnonzero(np.diff(np.concatenate(([0], line.astype(int), [0]))))
+        for start, stop in bounds.reshape(-1, 2):
+            corner = grid.y0 + (start - 0.5) * grid.dy, grid.z0 + (row - 0.5) * grid.dz
+            boxes.append(Rectangle(corner, (stop - start) * grid.dy, grid.dz))
+    hatched = PatchCollection(
+        boxes, facecolor=VEIL, edgecolor=INK, hatch=HATCH, linewidth=0, rasterized=len(boxes) > MANY_BOXES
+    )
+    axes.add_collection(hatched, autolim=False)
+
+
+def _arrows(axes: Axes, ledger: Ledger) -> None:
+    plane = ledger.plane
+    grid = grid_of(plane)
+    step = max(1, round(max(grid.ny * grid.dy, grid.nz * grid.dz) / ARROWS / min(grid.dy, grid.dz)))
+    y, z = grid.mesh()
+    first = step // 2
+    some = (slice(first, None, step), slice(first, None, step))
+    v, w = plane["v"].values[some], plane["w"].values[some]
+    typical = float(np.nanpercentile(np.hypot(v, w), 98))
+    if not typical > 0:
+        return
+    spacing = step * min(grid.dy, grid.dz)
+    arrows = axes.quiver(
+        y[some], z[some], v, w, angles="xy", scale_units="xy", scale=typical / (1.6 * spacing), color=INK,
+        width=0.0016, alpha=0.85, zorder=2.5,
+    )  # fmt: skip
+    length = float(f"{typical:.0e}")
+    axes.quiverkey(arrows, 0.93, 1.04, length, f"{length:g} m/s", labelpos="W", coordinates="axes")

@@ -1,0 +1,306 @@
+"""The ledger and the inspection as text for a terminal; pure functions, nothing is printed here."""
+
+from __future__ import annotations
+
+import io
+import math
+from collections.abc import Iterable, Mapping, Sequence
+from typing import TYPE_CHECKING
+
+from wakeledger.ledger.rounding import UNKNOWN, rounded, significant
+from wakeledger.present.wording import STATEMENT, VERDICT_WORDS, coefficient_text, printable, signed, unit_text, words
+
+if TYPE_CHECKING:
+    from rich.console import Console, RenderableType
+    from rich.table import Table
+
+    from wakeledger.ledger.inspection import Inspection
+    from wakeledger.ledger.rows import Check, Comparison, CrossCheck, Ledger, Row
+
+#: Lines longer than this are hard to read, however wide the terminal is.
+LONGEST_LINE = 140
+
+#: From this width on, estimates show their value.
+ROOMY = 92
+
+#: From this width on, a check's message stands beside its figures.
+WIDE = 120
+
+_STYLES = {
+    "pass": "green",
+    "agrees": "green",
+    "warn": "bold yellow",
+    "fail": "bold red",
+    "disagrees": "bold red",
+    "unknown": "yellow",
+    "not_independent": "dim",
+    "not_applicable": "dim",
+}
+
+
+def ledger_text(ledger: Ledger, *, width: int = 100, colour: bool = False) -> str:
+    """A ledger as text: rows, estimates, comparisons, checks, notes.
+
+    Parameters
+    ----------
+    ledger : Ledger
+        The ledger.
+    width : int
+        Columns of the terminal.
+    colour : bool
+        Whether to write the terminal's colour codes; nothing is said by colour alone.
+
+    Returns
+    -------
+    str
+        Lines without trailing blanks, ended by a line feed.
+    """
+    console = _console(width, colour)
+    _heading(console, ledger.title, ledger.test)
+    console.print(_rows_table(ledger.rows))
+    for row in ledger.rows:
+        if row.reason:
+            _bullet(console, f"{words(row.name)}: {row.reason}")
+    if ledger.estimates:
+        _section(console, "Other methods against the primary one")
+        console.print(_estimates_table(ledger.estimates, roomy=console.width >= ROOMY))
+        for line in ledger.estimates:
+            if line.reason:
+                _bullet(console, f"{words(line.row)}, {words(line.method)}: {line.reason}")
+    if ledger.comparisons:
+        _section(console, "Comparison with other values")
+        console.print(_comparisons_table(ledger.comparisons))
+        for comparison in ledger.comparisons:
+            if comparison.reason:
+                _bullet(console, f"{comparison.name}, {words(comparison.row)}: {comparison.reason}")
+    _checks(console, ledger.checks)
+    _sentences(console, "Notes", ledger.notes)
+    console.print()
+    console.print(STATEMENT, style="dim")
+    return _text(console)
+
+
+def inspection_text(inspection: Inspection, *, width: int = 100, colour: bool = False) -> str:
+    """What `inspect` found, as text.
+
+    Parameters
+    ----------
+    inspection : Inspection
+        The record.
+    width : int
+        Columns of the terminal.
+    colour : bool
+        Whether to write the terminal's colour codes.
+
+    Returns
+    -------
+    str
+        Lines without trailing blanks, ended by a line feed.
+    """
+    console = _console(width, colour)
+    _heading(console, inspection.title, inspection.test)
+    facts = _table(("", "left"), ("", "left"), header=False)
+    for name, fact in _facts(inspection):
+        facts.add_row(name, fact)
+    console.print(facts)
+    if inspection.channels:
+        _section(console, "Measured variables")
+        channels = _table(
+            ("variable", "left"), ("from", "right"), ("to", "right"), ("unit", "left"), ("scatter", "right"),
+            ("missing", "right"),
+        )  # fmt: skip
+        for channel in inspection.channels:
+            low, high, noise = (_figure(x) for x in (channel.minimum, channel.maximum, channel.noise))
+            missing = str(channel.missing) if channel.missing else "–"
+            channels.add_row(words(channel.name), low, high, unit_text(channel.unit), noise, missing)
+        console.print(channels)
+    if inspection.edges:
+        _section(console, "Edges of the window")
+        edges = _table(("edge", "left"), ("loss / q", "right"), ("vorticity / largest", "right"))
+        for edge in inspection.edges:
+            edges.add_row(edge.side, _figure(edge.total_pressure_loss, 2), _figure(edge.vorticity, 2))
+        console.print(edges)
+    _checks(console, inspection.checks)
+    _sentences(console, "What to do", inspection.recommendations)
+    _sentences(console, "Notes", inspection.notes)
+    return _text(console)
+
+
+def _facts(inspection: Inspection) -> Iterable[tuple[str, str]]:
+    ny, nz = inspection.shape
+    dy, dz = (1e3 * step for step in inspection.spacing)
+    y0, y1, z0, z1 = inspection.window
+    yield "data", inspection.source
+    yield "points", f"{inspection.points}, {inspection.arrangement}"
+    yield "plane", f"{ny} × {nz} points (y × z), {significant(dy, 3)} × {significant(dz, 3)} mm apart"
+    yield "window", f"y {y0:.4g} … {y1:.4g} m, z {z0:.4g} … {z1:.4g} m"
+    if math.isfinite(inspection.station):
+        yield "station", f"{inspection.station:.4g} m behind the trailing edge"
+    yield "coverage", f"{100 * inspection.coverage:.1f} % of the window's cells hold a measurement"
+    flagged = ", ".join(f"{count} {words(name)}" for name, count in inspection.flags.items() if count)
+    yield "flagged cells", flagged or "none"
+
+
+def _console(width: int, colour: bool) -> Console:
+    from rich.console import Console
+
+    return Console(
+        file=io.StringIO(),
+        width=max(60, min(width, LONGEST_LINE)),
+        force_terminal=colour,
+        color_system="standard" if colour else None,
+        no_color=not colour,
+        highlight=False,
+        markup=False,
+        emoji=False,
+        legacy_windows=False,
+    )
+
+
+def _text(console: Console) -> str:
+    file = console.file
+    assert isinstance(file, io.StringIO)
+    return "\n".join(line.rstrip() for line in file.getvalue().splitlines()) + "\n"
+
+
+def _table(*columns: tuple[str, str], header: bool = True) -> Table:
+    from rich import box
+    from rich.table import Table
+
+    style = box.SIMPLE_HEAD if header else None
+    gap = (0, 1, 0, 0) if header else (0, 2, 0, 0)
+    table = Table(box=style, show_header=header, show_edge=False, pad_edge=False, padding=gap)
+    for name, side in columns:
+        table.add_column(name, justify="right" if side == "right" else "left", overflow="fold", header_style="bold")
+    return table
+
+
+def _heading(console: Console, title: str, test: Mapping[str, str]) -> None:
+    from rich.text import Text
+
+    console.print(Text(printable(title), style="bold"))
+    if test:
+        console.print(Text(printable(" · ".join(f"{key} {value}" for key, value in test.items()))))
+    console.print()
+
+
+def _section(console: Console, title: str) -> None:
+    from rich.text import Text
+
+    console.print()
+    console.print(Text(title, style="bold"))
+
+
+def _bullet(console: Console, sentence: str) -> None:
+    from rich.padding import Padding
+    from rich.table import Table
+    from rich.text import Text
+
+    grid = Table.grid(padding=(0, 1, 0, 0))
+    grid.add_column(width=1)
+    grid.add_column(ratio=1)
+    grid.add_row("-", Text(printable(sentence)))
+    console.print(Padding(grid, (0, 0, 0, 1)))
+
+
+def _sentences(console: Console, title: str, sentences: Sequence[str]) -> None:
+    if sentences:
+        _section(console, title)
+        for sentence in sentences:
+            _bullet(console, sentence)
+
+
+def _rows_table(rows: Sequence[Row]) -> Table:
+    figures = [rounded(row.value, row.expanded_uncertainty) for row in rows]
+    coefficients = [coefficient_text(row) for row in rows]
+    values = _joined(figures)
+    shares = _joined([text[:2] for text in coefficients])
+    table = _table(
+        ("", "left"), ("value ± U95", "left"), ("unit", "left"), ("u (k = 1)", "right"), ("coefficient ± U95", "left"),
+        ("", "left"),
+    )  # fmt: skip
+    for row, value, share, coefficient in zip(rows, values, shares, coefficients, strict=True):
+        u = significant(row.standard_uncertainty, 2)
+        table.add_row(words(row.name), value, unit_text(row.unit), u, share, coefficient[2])
+    return table
+
+
+def _joined(pairs: Sequence[tuple[str, ...]]) -> list[str]:
+    """Pairs of figures as ``a ± b`` with every part under its like."""
+    left = max((len(first) for first, _ in pairs), default=0)
+    right = max((len(second) for _, second in pairs if second != UNKNOWN), default=0)
+    joined = []
+    for first, second in pairs:
+        if not first or first == UNKNOWN:
+            joined.append(first.rjust(left))
+        else:
+            joined.append(f"{first.rjust(left)} ± {'?' if second == UNKNOWN else second.rjust(right)}")
+    return joined
+
+
+def _estimates_table(estimates: Sequence[CrossCheck], *, roomy: bool) -> Table:
+    table = _table(
+        ("", "left"), ("method", "left"), *([("estimate ± u", "left")] if roomy else []), ("difference", "right"),
+        ("expected", "right"), ("", "left"), ("E_n", "right"), ("verdict", "left"),
+    )  # fmt: skip
+    values = _joined([rounded(line.value, line.standard_uncertainty) for line in estimates])
+    for line, value in zip(estimates, values, strict=True):
+        digits = line.standard_uncertainty
+        difference, expected = (signed(figure, digits) for figure in (line.difference, line.expected_difference))
+        cells: list[RenderableType] = [words(line.row), words(line.method), *([value] if roomy else [])]
+        cells += [difference, expected, unit_text(line.unit), _error(line.normalised_error), _verdict(line.verdict)]
+        table.add_row(*cells)
+    return table
+
+
+def _comparisons_table(comparisons: Sequence[Comparison]) -> Table:
+    table = _table(
+        ("", "left"), ("row", "left"), ("value ± u", "left"), ("row − value", "right"), ("", "left"), ("E_n", "right"),
+        ("verdict", "left"),
+    )  # fmt: skip
+    values = _joined([rounded(line.value, line.standard_uncertainty) for line in comparisons])
+    for line, value in zip(comparisons, values, strict=True):
+        difference = signed(line.difference, line.standard_uncertainty)
+        verdict = _verdict(line.verdict)
+        error = _error(line.normalised_error)
+        table.add_row(line.name, words(line.row), value, difference, unit_text(line.unit), error, verdict)
+    return table
+
+
+def _checks(console: Console, checks: Sequence[Check]) -> None:
+    from rich.padding import Padding
+    from rich.table import Table
+    from rich.text import Text
+
+    if not checks:
+        return
+    _section(console, "Checks")
+    wide = console.width >= WIDE
+    widths = (4, 24, 8, 14)
+    for check in checks:
+        grid = Table.grid(padding=(0, 2, 0, 0))
+        for width, side in zip(widths, ("left", "left", "right", "right"), strict=True):
+            grid.add_column(width=width, justify="right" if side == "right" else "left")
+        cells: list[RenderableType] = [_verdict(check.verdict), words(check.name), _figure(check.value, 2)]
+        cells.append(f"limit {_figure(check.limit, 2)}")
+        if wide:
+            grid.add_column(ratio=1)
+            cells.append(Text(check.message))
+        grid.add_row(*cells)
+        console.print(grid)
+        if not wide:
+            console.print(Padding(Text(check.message), (0, 0, 0, widths[0] + 2)))
+
+
+def _verdict(verdict: str) -> RenderableType:
+    from rich.text import Text
+
+    return Text(VERDICT_WORDS[verdict], style=_STYLES[verdict])
+
+
+def _error(error: float) -> str:
+    return "–" if math.isnan(error) else f"{error:.2f}" if error < 100 else f"{error:.0f}"
+
+
+def _figure(value: float, digits: int = 4) -> str:
+    return significant(value, digits) if math.isfinite(value) else "–"

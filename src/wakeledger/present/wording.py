@@ -1,0 +1,162 @@
+"""Words that every way of showing a ledger shares."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from types import MappingProxyType
+from typing import TYPE_CHECKING
+
+from wakeledger.ledger.rounding import UNKNOWN, rounded
+from wakeledger.ledger.rows import COUNT
+
+if TYPE_CHECKING:
+    from wakeledger.ledger.rows import Row
+
+#: What the figures are and are not; stands on every report and below every printed ledger.
+STATEMENT = (
+    "These figures are engineering estimates. They do not replace certified performance data, the facility's own "
+    "procedures or a test authority's limits."
+)
+
+_SPECIAL: Mapping[str, str] = MappingProxyType(
+    {
+        "induced_drag_free_air": "induced drag, free air",
+        "induced_drag_minimum": "induced drag, least",
+    }
+)
+
+#: UDUNITS strings as they are printed.
+_UNITS: Mapping[str, str] = MappingProxyType(
+    {"1": "", "N m": "N m", "N m-1": "N/m", "m s-1": "m/s", "m2 s-1": "m²/s", "s-1": "1/s", "kg m-3": "kg/m³"}
+    | {"m2": "m²", "J kg-1 K-1": "J/(kg K)", "m2 s-2": "m²/s²"}
+)
+
+#: Verdicts as they are printed; those that ask for attention are in capitals, so that they stand out without colour.
+VERDICT_WORDS: Mapping[str, str] = MappingProxyType(
+    {
+        "pass": "pass",
+        "warn": "WARN",
+        "fail": "FAIL",
+        "not_applicable": "n/a",
+        "agrees": "agrees",
+        "disagrees": "DISAGREES",
+        "not_independent": "same algebra",
+        "unknown": "unknown",
+    }
+)
+
+
+def words(name: str) -> str:
+    """A name of a row, method or check as it is printed.
+
+    Parameters
+    ----------
+    name : str
+        The name.
+
+    Returns
+    -------
+    str
+
+    Examples
+    --------
+    >>> words("edge_total_pressure_loss")
+    'edge total pressure loss'
+    """
+    return _SPECIAL.get(name, name.replace("_", " "))
+
+
+def unit_text(unit: str) -> str:
+    """A UDUNITS string as it is printed.
+
+    Parameters
+    ----------
+    unit : str
+        The string.
+
+    Returns
+    -------
+    str
+        Empty for a dimensionless figure.
+    """
+    return _UNITS.get(unit, unit)
+
+
+def in_counts(row: str) -> bool:
+    """Whether a row's coefficient is printed in counts (1 count = 1e-4).
+
+    Parameters
+    ----------
+    row : str
+        Name of the row.
+
+    Returns
+    -------
+    bool
+        True for every drag.
+    """
+    return "drag" in row
+
+
+def coefficient_text(row: Row) -> tuple[str, str, str]:
+    """A row's coefficient as it is printed.
+
+    Parameters
+    ----------
+    row : Row
+        The row.
+
+    Returns
+    -------
+    tuple of str
+        Coefficient, its expanded uncertainty, and ``counts`` or an empty string; three empty strings where there is
+        no coefficient.
+    """
+    scale, unit = (COUNT, "counts") if in_counts(row.name) else (1.0, "")
+    figure, uncertainty = rounded(row.coefficient / scale, row.coefficient_expanded_uncertainty / scale)
+    return ("", "", "") if figure == UNKNOWN else (figure, uncertainty, unit)
+
+
+def printable(text: str) -> str:
+    r"""A text from a file without the characters that would steer a terminal.
+
+    Parameters
+    ----------
+    text : str
+        Any text.
+
+    Returns
+    -------
+    str
+        With every control character replaced by a blank.
+
+    Examples
+    --------
+    >>> printable("a\tb")
+    'a b'
+    """
+    return "".join(character if character.isprintable() else " " for character in text)
+
+
+def signed(difference: float, uncertainty: float) -> str:
+    """A difference as it is printed: with its sign, to the place of an uncertainty's second digit.
+
+    Parameters
+    ----------
+    difference, uncertainty : float
+        In one unit.
+
+    Returns
+    -------
+    str
+        A dash where the difference is unknown.
+
+    Examples
+    --------
+    >>> signed(0.0312, 0.018), signed(-0.0004, 0.018)
+    ('+0.031', '0.000')
+    """
+    figure, _ = rounded(difference, uncertainty)
+    if figure == UNKNOWN:
+        return "–"
+    return figure if figure.startswith("-") or not figure.strip("0.") else f"+{figure}"
