@@ -250,14 +250,13 @@ class Source(Table):
             raise below(error, key) from error
         self._amount = (amount / (self.coverage_factor or 1.0), scale)
         pointwise = all(name.split(".")[0] in ("plane", "probe", "angle", "position") for name in self.applies_to)
-        if self.effect != "systematic" and not pointwise:
-            once = next(name for name in self.applies_to if name.split(".")[0] in ("reference", "model", "calibration"))
-            if once.split(".")[0] == "model":
-                raise fail(
-                    f'effect = "{self.effect}" is given for {once}, which is one number for the survey',
-                    'write effect = "systematic"',
-                    "effect",
-                )
+        constant = next((name for name in self.applies_to if name.startswith("model.")), None)
+        if self.effect != "systematic" and constant:
+            raise fail(
+                f'effect = "{self.effect}" is given for {constant}, which is one number for the survey',
+                'write effect = "systematic"',
+                "effect",
+            )
         if self.correlation_length is not None and (self.effect != "random" or not pointwise):
             raise fail(
                 "correlation_length is given for an error that does not vary from point to point",
