@@ -160,6 +160,17 @@ class Survey(Table):
                 f"[plane.columns] {', '.join(holes)}",
                 "hole pressures are not used yet; leave them out",
             )
+            references = sorted(name for name in plane.columns if name.startswith("reference_"))
+            add(
+                references,
+                f"[plane.columns] {', '.join(references)}",
+                "the reference of each point is not used yet; leave it out, and give the drift as an uncertainty",
+            )
+            add(
+                plane.axes.turn_positions,
+                "[plane.axes] turn_positions",
+                "positions are not turned yet; leave it out, or turn them in the file",
+            )
             add(
                 "tube" in plane.columns,
                 "[plane.columns] tube",
