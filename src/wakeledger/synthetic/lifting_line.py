@@ -3,7 +3,7 @@
 A bound line runs through the elements in the plane x = 0 and carries Γ_b; from each element a straight half-infinite
 leg of circulation Γ runs downstream. The whole system is smoothed with one Gaussian of length a, which leaves the legs
 with axial vorticity Γ/(πa²) exp(−r²/a²) and changes neither the bound line's field nor the legs' beginnings seen from
-further than five core lengths behind; there the field is exact in closed form.
+further than five core lengths; there the field is exact in closed form.
 """
 
 from __future__ import annotations
@@ -50,12 +50,12 @@ class LiftingLine:
         return bound
 
     def velocity(self, x: float, y: Array, z: Array) -> tuple[Array, Array, Array]:
-        """Disturbance velocity at distance x behind the bound line.
+        """Disturbance velocity in the plane at distance x behind (or, negative, ahead of) the bound line.
 
         Parameters
         ----------
         x : float
-            Distance downstream of the bound line, m, at least five core lengths.
+            Distance downstream of the bound line, m, at least five core lengths; negative ahead of it.
         y, z : ndarray, any shape
             Points, m.
 
@@ -67,25 +67,25 @@ class LiftingLine:
         Raises
         ------
         ValueError
-            If x is less than five core lengths.
+            If the plane is nearer to the bound line than five core lengths.
         """
         e = self.elements
         core = float(e.core[0])
-        if x < _NEAREST * core:
+        if abs(x) < _NEAREST * core:
             raise ValueError(f"x = {x} m is nearer than five core lengths ({_NEAREST * core} m) to the bound line")
         yy, zz = np.broadcast_arrays(np.asarray(y, float), np.asarray(z, float))
         points_y, points_z = yy.ravel(), zz.ravel()
-        # The endless vortices first, then what is missing because they begin at the bound line.
-        v, w = e.velocity(points_y, points_z)
-        v, w = np.array(v), np.array(w)
-        u = np.zeros(points_y.size)
+        u, v, w = (np.zeros(points_y.size) for _ in range(3))
+        if x > 0:
+            # Behind the line: endless vortices, less what is missing because they begin at the line.
+            v, w = (np.array(component) for component in e.velocity(points_y, points_z))
         for part in e._parts(points_y.size):
             dy, dz, r2 = e._offsets(points_y[part], points_z[part])
             distance = np.sqrt(x * x + r2)
-            # ½(1 − x/R)/r² = ½/(R(R + x)), regular on the leg's axis.
-            missing = e.circulation / (4 * np.pi * distance * (distance + x))
-            v[part] += (missing * dz).sum(axis=1)
-            w[part] -= (missing * dy).sum(axis=1)
+            # ½(1 − |x|/R)/r² = ½/(R(R + |x|)), regular on the leg's axis.
+            begun = np.sign(-x) * e.circulation / (4 * np.pi * distance * (distance + abs(x)))
+            v[part] -= (begun * dz).sum(axis=1)
+            w[part] += (begun * dy).sum(axis=1)
             self._add_bound(x, dy, dz, distance, u[part], v[part], w[part])
         return u.reshape(yy.shape), v.reshape(yy.shape), w.reshape(yy.shape)
 

@@ -239,9 +239,9 @@ class SyntheticWake:
         )
 
     def _quadrature(self, fraction: float) -> tuple[float, float]:
-        """Profile and residual drag by the trapezium rule at a fraction of the smallest Gaussian's width, N.
+        """Profile and residual drag by evenly weighted sums at a fraction of the smallest Gaussian's width, N.
 
-        The integrands are smooth and vanish at the window's edge, so the rule converges faster than any power.
+        The integrands are smooth and vanish at the window's edge, so the sums converge faster than any power.
         """
         ref = self.reference
         grid = self._window(fraction)
