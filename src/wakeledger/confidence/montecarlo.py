@@ -35,8 +35,8 @@ def run(
     ----------
     evaluate : callable
         Takes additive errors by input name, arrays of shape (k, n) or (k,) in SI for every input of the layouts, and
-        gives the outputs, shape (k, m). It may overwrite what it is given, and is called from several threads at once.
-        NaN says that a draw has no value.
+        gives the outputs, shape (k, m). NaN says that a draw has no value. It is called from several threads at once.
+        An input that no source acts on comes as read-only zeros that take no memory (all strides zero).
     sources : sequence of Source
         The sources.
     layouts : mapping of str to InputLayout

@@ -19,6 +19,8 @@ _CLIPPED_VARIANCE = 0.9733369
 _MAD_TO_SIGMA = 1.482602
 _FEWEST = 50
 _LONGEST = 2.0
+# Differences of exact data are a few units of rounding.
+_ROUNDING = 16 * np.finfo(float).eps
 
 
 @dataclass(frozen=True)
@@ -28,7 +30,8 @@ class NoiseEstimate:
     Attributes
     ----------
     standard_deviation : float
-        Standard deviation of the noise of one point, in the channel's unit; NaN where it cannot be had.
+        Standard deviation of the noise of one point, in the channel's unit; NaN where it cannot be had, zero for data
+        exact to rounding.
     correlation_length_cells : tuple of float
         Correlation length along z and along y, in cells, of noise correlated as exp(-(d/L)²/2); NaN along an axis on
         which it is not told apart from white noise.
@@ -147,7 +150,9 @@ def _axis_noise(field: Array) -> _AxisNoise:
         abs(lag_one - white[1]) > 4 * errors[0] / math.sqrt(count),
         abs(lag_two - white[2]) > 4 * errors[1] / math.sqrt(count),
     )
-    if deviation == 0 or not any(departs):
+    if deviation <= _ROUNDING * float(np.nanmax(np.abs(field))):
+        return _AxisNoise(0.0, math.nan, count * _independent_share(white))
+    if not any(departs):
         return _AxisNoise(deviation, math.nan, count * _independent_share(white))
     lengths, first, gain = _correlated_filter()
     length = float(np.interp(lag_one, first, lengths))

@@ -13,6 +13,7 @@ from wakeledger.core.grid import Array
 Kernel = Array | Callable[[NDArray[np.int64], NDArray[np.int64]], Array]
 
 _NEGLIGIBLE = 1e-10
+_LOW_RANK = 8
 
 
 def quadratic_noise_bias(
@@ -92,8 +93,6 @@ def quadratic_noise_bias(
         left @ left.T if matrix is None else left @ matrix @ left.T
         for left, matrix in zip((left_z, left_y), correlation, strict=True)
     )
-    if _band(covariance_y) < _band(covariance_z):
-        covariance_z, covariance_y, weights, mask = covariance_y, covariance_z, weights.T, mask.T
     return 0.5 * float(spread) * _separable(covariance_z, covariance_y, weights, mask)
 
 
@@ -113,6 +112,9 @@ def _band(covariance: Array) -> int:
 
 
 def _separable(covariance_z: Array, covariance_y: Array, weights: Array, mask: Array) -> float:
+    """Σ g C M M for a covariance that is a product of one symmetric matrix per axis."""
+    if _band(covariance_y) < _band(covariance_z):
+        covariance_z, covariance_y, weights, mask = covariance_y, covariance_z, weights.T, mask.T
     nz, ny = mask.shape
     total = 0.0
     for offset in range(_band(covariance_z) + 1):
@@ -131,6 +133,19 @@ def _toeplitz(row: Array, ny: int) -> Array:
 
 
 def _independent(left_z: Array, left_y: Array, weights: Array, mask: Array, variance: Array) -> float:
+    """Σ g C M M for independent noise whose variance differs from point to point."""
+    along_z, sizes, along_y = np.linalg.svd(variance, full_matrices=False)
+    rank = int((sizes > _NEGLIGIBLE * sizes[0]).sum())
+    if rank <= _LOW_RANK:
+        return sum(
+            float(sizes[r])
+            * _separable((left_z * along_z[:, r]) @ left_z.T, (left_y * along_y[r]) @ left_y.T, weights, mask)
+            for r in range(rank)
+        )
+    return _point_by_point(left_z, left_y, weights, mask, variance)
+
+
+def _point_by_point(left_z: Array, left_y: Array, weights: Array, mask: Array, variance: Array) -> float:
     nz, ny = mask.shape
     band_y = _band(left_y @ left_y.T)
     total = 0.0

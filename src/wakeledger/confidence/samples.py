@@ -218,7 +218,8 @@ class Samples:
         -----
         Mean: u/√M. Standard deviation: √((μ₄ - u⁴)/M)/(2u), with the fourth central moment μ₄ of the draws. Ends of the
         interval: half the distance between the order statistics one binomial standard deviation to either side. The
-        coverage factor's takes the ends as independent and u as known, which errs on the large side.
+        coverage factor's takes the ends as independent and u as known, which errs on the large
+        side, as do all of them where few systematic errors, drawn in strata, rule.
         """
         _check_probability(probability)
         count = len(self.used)

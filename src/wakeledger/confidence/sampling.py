@@ -9,6 +9,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.special import ndtri
 
 from wakeledger.confidence.correlation import Expansion, correlated_field
 from wakeledger.confidence.sources import InputLayout, Source, check_sources
@@ -46,24 +47,32 @@ def unit_variables(rng: np.random.Generator, out: Array, distribution: str) -> N
     ----------
     rng : numpy.random.Generator
         Where the numbers come from.
-    out : ndarray
-        Filled in place; contiguous.
+    out : ndarray, shape (k, width)
+        Filled in place; contiguous. With several rows each column is stratified (a Latin hypercube): every row has the
+        distribution asked for, and the column's moments are nearly exact.
     distribution : {"normal", "rectangular", "triangular", "arcsine"}
         Their distribution.
     """
-    if distribution == "normal":
+    stratified = len(out) > 1
+    if distribution == "normal" and not stratified:
         rng.standard_normal(out=out)
         return
     rng.random(out=out)
-    if distribution == "rectangular":
+    if stratified:
+        strata = np.broadcast_to(np.arange(len(out), dtype=float)[:, None], out.shape)
+        out += rng.permuted(strata, axis=0)
+        out /= len(out)
+    if distribution == "normal":
+        np.clip(out, 1e-16, 1 - 1e-16, out=out)
+        ndtri(out, out=out)
+    elif distribution == "rectangular":
         out -= 0.5
         out *= math.sqrt(12)
     elif distribution == "triangular":
-        out += rng.random(out.shape)
-        out -= 1.0
-        out *= math.sqrt(6)
+        rising = np.minimum(out, 1 - out)
+        np.copysign(math.sqrt(6) * (1 - np.sqrt(2 * rising)), out - 0.5, out=out)
     else:
-        np.sin(2 * math.pi * out, out=out)
+        np.sin(math.pi * (out - 0.5), out=out)
         out *= math.sqrt(2)
 
 
@@ -81,7 +90,7 @@ def draw_blocks(
     width : int
         Numbers per draw.
     fill : callable
-        Fills an array of shape (k, width) from a generator.
+        Fills an array of shape (k, width) from a generator: whole blocks where the width is small, else single draws.
 
     Returns
     -------
@@ -268,7 +277,7 @@ class ErrorSampler:
         self.by_source = tuple(SourceErrors(source, layouts, seed=seed) for source in sources)
 
     def zeros(self, draws: int) -> dict[str, Array]:
-        """No error at all, for every input.
+        """No error at all, for every input, as read-only arrays that take no memory.
 
         Parameters
         ----------
@@ -280,7 +289,8 @@ class ErrorSampler:
         dict of str to ndarray, shape (draws, n), or (draws,) for single numbers
         """
         return {
-            name: np.zeros(draws if layout.is_scalar else (draws, layout.size)) for name, layout in self.layouts.items()
+            name: np.broadcast_to(np.float64(0), (draws,) if layout.is_scalar else (draws, layout.size))
+            for name, layout in self.layouts.items()
         }
 
     def draw(self, start: int, stop: int) -> dict[str, Array]:
@@ -303,10 +313,7 @@ class ErrorSampler:
                     total[name] += errors
                 else:
                     total[name] = errors
-        zeros = self.zeros(0)
-        for name in zeros.keys() - total.keys():
-            total[name] = np.zeros((stop - start, *zeros[name].shape[1:]))
-        return total
+        return self.zeros(stop - start) | total
 
 
 def draw_errors(

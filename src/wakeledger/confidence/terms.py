@@ -1,0 +1,82 @@
+"""Numerical terms: what resolution, the choice of a mask or gaps add, as one common deviation of all outputs each."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from functools import partial
+from typing import get_args
+
+import numpy as np
+
+from wakeledger.confidence.samples import Samples
+from wakeledger.confidence.sampling import Seed, draw_blocks, unit_variables
+from wakeledger.confidence.sources import Distribution
+from wakeledger.core.grid import Array
+
+
+@dataclass(frozen=True)
+class NumericalTerm:
+    """One numerical cause that moves all outputs together.
+
+    Attributes
+    ----------
+    name : str
+        Name of the term in the budget.
+    standard_uncertainty : ndarray, shape (m,)
+        By how much each output moves at one standard deviation of the cause, in the output's unit and **with its
+        sign**: outputs that move together have one sign, and so get their covariance. NaN where it is unknown.
+    distribution : {"normal", "rectangular", "triangular", "arcsine"}
+        Distribution of the cause.
+
+    Raises
+    ------
+    ValueError
+        If the distribution is not known or the deviations are not a vector.
+    """
+
+    name: str
+    standard_uncertainty: Array
+    distribution: Distribution = "normal"
+
+    def __post_init__(self) -> None:
+        allowed = get_args(Distribution)
+        if self.distribution not in allowed:
+            raise ValueError(f"distribution is {self.distribution!r}; allowed are {', '.join(allowed)}")
+        if np.ndim(self.standard_uncertainty) != 1:
+            raise ValueError(f"standard_uncertainty has {np.ndim(self.standard_uncertainty)} dimensions; give a vector")
+
+
+def add_terms(samples: Samples, terms: Sequence[NumericalTerm], *, seed: Seed) -> Samples:
+    """Add numerical terms to the draws, one independent variable per term and draw.
+
+    Parameters
+    ----------
+    samples : Samples
+        Draws of m outputs.
+    terms : sequence of NumericalTerm
+        The terms; an output for which one is NaN becomes unknown, and says so.
+    seed : int or sequence of int
+        Seed of the survey.
+
+    Returns
+    -------
+    Samples
+
+    Raises
+    ------
+    ValueError
+        If a term has another number of outputs.
+    """
+    values = samples.values.copy()
+    unknown = list(samples.unknown)
+    for term in terms:
+        vector = np.asarray(term.standard_uncertainty, dtype=float)
+        if vector.shape != (len(samples.names),):
+            raise ValueError(f"term {term.name!r} has {vector.size} deviations; there are {len(samples.names)} outputs")
+        key = f"term|{(seed,) if isinstance(seed, int) else tuple(seed)}|{term.name}"
+        latent = draw_blocks(key, 0, samples.draws, 1, partial(unit_variables, distribution=term.distribution))
+        values += latent * np.where(np.isfinite(vector), vector, 0.0)
+        for k in np.flatnonzero(~np.isfinite(vector)):
+            unknown[k] = unknown[k] or f"the term {term.name!r} is unknown"
+    return replace(samples, values=values, unknown=tuple(unknown))

@@ -1,0 +1,108 @@
+"""Noise of a field found from the field itself."""
+
+import math
+
+import numpy as np
+import pytest
+
+from wakeledger.confidence.correlation import correlated_field
+from wakeledger.confidence.noise import estimate_noise
+
+Z, Y = np.mgrid[0:60, 0:100]
+SIGMA = 0.3
+# A broad wake, a vortex-like core eight cells wide and a gradient, a hundred times the noise.
+SMOOTH = 30 * np.exp(-((Z - 30) ** 2 + (Y - 50) ** 2) / (2 * 4**2)) + 5 * np.sin(Y / 8) + 0.3 * Z
+CORE = (Z - 30) ** 2 + (Y - 50) ** 2 < 12**2
+
+
+def noise(seed, sigma=SIGMA):
+    return sigma * np.random.default_rng(seed).standard_normal(Z.shape)
+
+
+def estimates(make, count=20, **options):
+    return [estimate_noise(make(seed), **options) for seed in range(count)]
+
+
+@pytest.mark.parametrize("signal", [0.0, SMOOTH])
+@pytest.mark.parametrize("mask", [None, CORE])
+def test_white_noise_is_found_under_a_smooth_signal(signal, mask):
+    found = estimates(lambda seed: signal + noise(seed), mask=mask)
+    values = np.array([one.standard_deviation for one in found])
+    # The mean of 20 estimates is good to 1.3 %/√20 = 0.3 %; the aim is a bias below 5 %.
+    assert values.mean() == pytest.approx(SIGMA, rel=0.015)
+    expected = 1 / math.sqrt(2 * found[0].effective_size)
+    assert expected < 0.02
+    # A standard deviation from 20 values is good to 16 %; twice that and the approximation of the size.
+    assert values.std() / SIGMA == pytest.approx(expected, rel=0.5)
+    assert all(one.is_white and one.reason is None for one in found)
+
+
+def test_wild_values_hardly_count():
+    def spoiled(seed):
+        field = SMOOTH + noise(seed)
+        field.ravel()[np.random.default_rng(seed + 1000).integers(0, field.size, 30)] += 100
+        return field
+
+    values = [one.standard_deviation for one in estimates(spoiled)]
+    # Each wild value spoils seven differences: 3.5 % of them; the aim is a bias below 5 %.
+    assert np.mean(values) == pytest.approx(SIGMA, rel=0.03)
+
+
+@pytest.mark.parametrize("length", [0.7, 1.0, 1.5])
+def test_correlated_noise_is_recognised_and_corrected(length):
+    latents, expand = correlated_field(np.stack([Z.ravel(), Y.ravel()], axis=1).astype(float), length)
+
+    def field(seed):
+        return SIGMA * expand(np.random.default_rng(seed).standard_normal((1, latents)))[0].reshape(Z.shape)
+
+    found = estimates(field)
+    assert not any(one.is_white for one in found)
+    # The length follows from the shape of the spectrum; scatter of one estimate 2 to 4 %.
+    np.testing.assert_allclose(np.mean([one.correlation_length_cells for one in found], axis=0), length, rtol=0.02)
+    assert np.mean([one.standard_deviation for one in found]) == pytest.approx(SIGMA, rel=0.03)
+
+
+def test_noise_smoother_than_the_grid_is_a_lower_bound_and_says_so():
+    latents, expand = correlated_field(np.stack([Z.ravel(), Y.ravel()], axis=1).astype(float), 4.0)
+    found = estimate_noise(expand(np.random.default_rng(1).standard_normal((1, latents)))[0].reshape(Z.shape))
+    assert not found.is_white
+    assert "lower bound" in found.reason
+    assert 0 < found.standard_deviation < 1
+
+
+def test_errors_of_whole_rows_show_as_a_difference_between_the_axes():
+    rows = np.random.default_rng(4).standard_normal((60, 1))
+    found = estimate_noise(noise(1) + rows)
+    along_z, along_y = found.axis_standard_deviations
+    assert along_y == pytest.approx(SIGMA, rel=0.06)
+    assert along_z == pytest.approx(math.hypot(SIGMA, 1.0), rel=0.5)
+    assert found.standard_deviation == pytest.approx(SIGMA, rel=0.06)
+
+
+def test_missing_points_and_masked_points_are_not_used():
+    field = SMOOTH + noise(1)
+    spoiled = field.copy()
+    spoiled[CORE] = np.nan
+    assert estimate_noise(spoiled) == estimate_noise(field, mask=CORE)
+    wild = field.copy()
+    wild[CORE] = 1e6
+    assert estimate_noise(wild, mask=CORE) == estimate_noise(field, mask=CORE)
+
+
+def test_scale_and_offset():
+    one, other = estimate_noise(SMOOTH + noise(2)), estimate_noise(7.0 - 1000 * (SMOOTH + noise(2)))
+    assert other.standard_deviation == pytest.approx(1000 * one.standard_deviation, rel=1e-6)
+    assert estimate_noise((SMOOTH + noise(2)).T).standard_deviation == pytest.approx(one.standard_deviation, rel=1e-9)
+
+
+def test_exact_data_have_no_noise():
+    assert estimate_noise(SMOOTH, mask=CORE).standard_deviation < 1e-4
+    assert estimate_noise(np.full(Z.shape, 3.0)).standard_deviation == 0.0
+
+
+def test_too_few_points_are_unknown_with_a_reason():
+    found = estimate_noise(noise(1)[:7, :7])
+    assert math.isnan(found.standard_deviation)
+    assert "seven" in found.reason
+    with pytest.raises(ValueError, match="mask"):
+        estimate_noise(noise(1), mask=CORE.T)
