@@ -184,7 +184,6 @@ class Axes(Table):
             )
         return self
 
-    @property
     def matrix(self) -> Array:
         """Signed permutation P with wind = P @ file.
 
@@ -195,7 +194,7 @@ class Axes(Table):
 
         Examples
         --------
-        >>> Axes(x="+x", y="+z", z="-y").matrix @ [1.0, 2.0, 3.0]
+        >>> Axes(x="+x", y="+z", z="-y").matrix() @ [1.0, 2.0, 3.0]
         array([ 1., -3.,  2.])
         """
         matrix = np.zeros((3, 3))
