@@ -17,7 +17,7 @@ from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.core.points import Points
 from wakeledger.core.rotation import rotation_matrix
 from wakeledger.intake.gridding import Gridding
-from wakeledger.intake.state import point_state
+from wakeledger.intake.state import State, point_state
 from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.flow import Flow
 from wakeledger.physics.fields.lifting_line import near_field_crossflow
@@ -255,12 +255,8 @@ class Chain:
                 given[name] += float(error)
         return resolve_reference(given, compressible=self.settings.compressible)
 
-    def flow(self, reference: Reference, errors: Mapping[str, Array] = _NO_ERRORS) -> Flow:
-        """The gridded plane under errors of the points, flow angles and positions.
-
-        The primary variables are gridded and the dependent one follows from them on the grid, so that H, p and u are
-        consistent at every place.
-        """
+    def state(self, reference: Reference, errors: Mapping[str, Array] = _NO_ERRORS) -> State:
+        """The flow state at every point, in wind axes, under errors of the points, flow angles and positions."""
         values = {}
         for name, channel in self.points.channels.items():
             array = channel.values
@@ -277,7 +273,7 @@ class Chain:
             offset + errors.get(f"angle.{name}", 0.0)
             for name, offset in zip(("pitch", "yaw", "roll"), self.settings.offsets, strict=True)
         )
-        state = point_state(
+        return point_state(
             values,
             self.points.channels,
             reference,
@@ -285,6 +281,14 @@ class Chain:
             axes=self.points.axes,
             rotation=rotation_matrix(pitch, yaw, roll),
         )
+
+    def flow(self, reference: Reference, errors: Mapping[str, Array] = _NO_ERRORS) -> Flow:
+        """The gridded plane under errors of the inputs.
+
+        The primary variables are gridded and the dependent one follows from them on the grid, so that H, p and u are
+        consistent at every place.
+        """
+        state = self.state(reference, errors)
         grid = self.gridding.grid
         apply = self.gridding.apply
         v, w = apply(state.v), apply(state.w)
@@ -444,14 +448,14 @@ class Chain:
         name = estimate_of("total_drag", "momentum_area")
         values[name] = float(momentum_drag(aligned, reference)) - bias.get(name, 0.0)
         if self.frozen.cuts is not None:
-            line = evaluate_wake_line(self.frozen.cuts, v, w, density=reference.density, speed=reference.speed)
+            line = evaluate_wake_line(self.frozen.cuts, flow.v, flow.w, reference.density, reference.speed, mask=mask)
             for row, value in (("induced_drag", line.induced_drag), ("lift", line.lift)):
                 name = estimate_of(row, "wake_line")
                 values[name] = float(value) - bias.get(name, 0.0)
         if self.frozen.parts is not None:
             name = estimate_of("induced_drag", "vortex_sum")
-            found = evaluate_vortex_sum(self.frozen.parts, v, w, density=reference.density)
-            values[name] = float(found.induced_drag) - bias.get(name, 0.0)
+            found = evaluate_vortex_sum(self.frozen.parts, v, w, reference.density)
+            values[name] = float(found) - bias.get(name, 0.0)
         return (float(offset[0]), float(offset[1])), float(invalid)
 
     def near_field(self, vorticity: Array, grid: UniformGrid) -> tuple[Array, Array]:

@@ -12,7 +12,6 @@ import numpy as np
 
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.differences import ddy, ddz
-from wakeledger.physics.fields.lifting_line import near_field_crossflow
 from wakeledger.physics.fields.wake_region import Mask
 
 #: Outer flow below this share of the window cannot give a zero.
@@ -83,7 +82,7 @@ def induced_crossflow(psi: Array, grid: UniformGrid) -> Array:
 
 
 def outer_flow(
-    loss: Array, v: Array, w: Array, psi: Array, grid: UniformGrid, *, mask: Mask, distance: float, vorticity: Array
+    loss: Array, v: Array, w: Array, psi: Array, grid: UniformGrid, *, mask: Mask, near_field: tuple[Array, Array]
 ) -> OuterFlow:
     """Zeros of the survey from the flow outside the wake.
 
@@ -99,10 +98,8 @@ def outer_flow(
         The grid.
     mask : ndarray of bool, shape (nz, ny)
         The wake region.
-    distance : float
-        Distance of the plane behind the bound line, m.
-    vorticity : ndarray, shape (nz, ny)
-        Axial vorticity inside the wake region, s⁻¹.
+    near_field : (ndarray, ndarray), shape (nz, ny)
+        Crossflow that the bound vortex adds, m/s (`wakeledger.physics.fields.lifting_line`).
 
     Returns
     -------
@@ -113,7 +110,7 @@ def outer_flow(
     share = float(outer.mean())
     if share < LEAST_SHARE:
         return OuterFlow(share, 0.0, np.nan, 0.0, 0.0, np.nan)
-    near = near_field_crossflow(vorticity, grid, distance=distance)
+    near = near_field
     own = induced_crossflow(psi, grid)
     v_offset, w_offset = crossflow_offset(v, w, own, near, outer)
     left_v, left_w = v - near[0] - own[0], w - near[1] - own[1]

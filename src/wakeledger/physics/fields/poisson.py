@@ -29,6 +29,40 @@ def _truncated_logarithm(wavenumber: Array, radius: float) -> Array:
 
 
 @lru_cache(maxsize=8)
+def green_weights(nz: int, ny: int, dz: float, dy: float) -> NDArray[np.float64]:
+    """Discrete free-space Green's function: ψ_i = Σ_j g(i − j) ξ_j for band-limited ξ.
+
+    Parameters
+    ----------
+    nz, ny : int
+        Shape of the window.
+    dz, dy : float
+        Spacing, m.
+
+    Returns
+    -------
+    ndarray, shape (2 nz - 1, 2 ny - 1)
+        g at the offsets −(nz − 1) … nz − 1 and −(ny − 1) … ny − 1, m²; it contains the cell area.
+    """
+    # Work in units of the window's diagonal so that the cut-off's logarithm is harmless; a change of length unit only
+    # adds a constant, which the last line puts back.
+    diagonal = float(np.hypot(nz * dz, ny * dy))
+    radius = 1.1
+    # A period of window + cut-off keeps the periodic images of the cut-off kernel out of the window.
+    pz = fft.next_fast_len(max(2 * nz, int(np.ceil(nz + radius * diagonal / dz)) + 1), real=True)
+    py = fft.next_fast_len(max(2 * ny, int(np.ceil(ny + radius * diagonal / dy)) + 1), real=True)
+    sz = 2 * np.pi * fft.fftfreq(pz, dz / diagonal)
+    sy = 2 * np.pi * fft.rfftfreq(py, dy / diagonal)
+    spectrum = _truncated_logarithm(np.hypot(sz[:, None], sy[None, :]), radius)
+    response = fft.irfft2(spectrum, s=(pz, py), workers=2)
+    # Offsets beyond the window never meet data; those inside it are the discrete convolution weights.
+    weights: NDArray[np.float64] = response[np.ix_(np.arange(1 - nz, nz) % pz, np.arange(1 - ny, ny) % py)]
+    weights = weights * diagonal**2 - dz * dy * np.log(diagonal) / (2 * np.pi)
+    weights.flags.writeable = False
+    return weights
+
+
+@lru_cache(maxsize=8)
 def free_space_kernel(nz: int, ny: int, dz: float, dy: float) -> NDArray[np.float64]:
     """Transform of the free-space Green's function on the doubled window.
 
@@ -45,23 +79,10 @@ def free_space_kernel(nz: int, ny: int, dz: float, dy: float) -> NDArray[np.floa
         Real transform, to be multiplied with `scipy.fft.rfft2` of the source padded to (mz, my); it contains the cell
         area.
     """
-    # Work in units of the window's diagonal so that the cut-off's logarithm is harmless; a change of length unit only
-    # adds a constant, which the last line puts back.
-    diagonal = float(np.hypot(nz * dz, ny * dy))
-    radius = 1.1
-    # A period of window + cut-off keeps the periodic images of the cut-off kernel out of the window.
-    pz = fft.next_fast_len(max(2 * nz, int(np.ceil(nz + radius * diagonal / dz)) + 1), real=True)
-    py = fft.next_fast_len(max(2 * ny, int(np.ceil(ny + radius * diagonal / dy)) + 1), real=True)
-    sz = 2 * np.pi * fft.fftfreq(pz, dz / diagonal)
-    sy = 2 * np.pi * fft.rfftfreq(py, dy / diagonal)
-    spectrum = _truncated_logarithm(np.hypot(sz[:, None], sy[None, :]), radius)
-    response = fft.irfft2(spectrum, s=(pz, py), workers=2)
     mz, my = fft.next_fast_len(2 * nz, real=True), fft.next_fast_len(2 * ny, real=True)
-    # Offsets beyond the window never meet data; those inside it are the discrete convolution weights.
-    z_offset = np.concatenate([np.arange(mz // 2 + 1), np.arange(mz // 2 + 1 - mz, 0)])
-    y_offset = np.concatenate([np.arange(my // 2 + 1), np.arange(my // 2 + 1 - my, 0)])
-    weights = response[np.ix_(z_offset % pz, y_offset % py)] * diagonal**2
-    weights -= dz * dy * np.log(diagonal) / (2 * np.pi)
+    weights = np.zeros((mz, my))
+    at = np.ix_(np.arange(1 - nz, nz) % mz, np.arange(1 - ny, ny) % my)
+    weights[at] = green_weights(nz, ny, dz, dy)
     kernel: NDArray[np.float64] = np.ascontiguousarray(fft.rfft2(weights).real)
     kernel.flags.writeable = False
     return kernel

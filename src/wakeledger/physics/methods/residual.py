@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from wakeledger.core.grid import Array
+from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.differences import crossflow_divergence
 from wakeledger.physics.fields.flow import Flow
 from wakeledger.physics.fields.poisson import velocity_potential
@@ -36,11 +36,14 @@ def residual_drag(flow: Flow, reference: Reference, loss_free: Array, mask: Mask
         −½ρ∬φσ dA and −½ρ∬(u* − U)² dA. The mean divergence of the region is taken out first: a net source has no
         decaying potential in an unbounded plane.
     """
-    grid = flow.grid
-    sigma = np.where(mask, crossflow_divergence(flow.v, flow.w, grid), 0.0)
+    axial_part = flow.grid.integrate(np.where(mask, axial_integrand(loss_free, reference), 0.0))
+    return divergence_drag(flow.v, flow.w, flow.grid, mask, density=reference.density), axial_part
+
+
+def divergence_drag(v: Array, w: Array, grid: UniformGrid, mask: Mask, *, density: float) -> Array:
+    """Divergence part −½ρ∬φσ dA of a crossflow over a wake region, N, shape (...)."""
+    sigma = np.where(mask, crossflow_divergence(v, w, grid), 0.0)
     count = np.maximum(np.count_nonzero(mask, axis=(-2, -1)), 1)
     sigma = np.where(mask, sigma - (sigma.sum(axis=(-2, -1)) / count)[..., None, None], 0.0)
     phi = velocity_potential(sigma, grid)
-    divergence_part = -0.5 * reference.density * grid.cell_area * np.einsum("...zy,...zy->...", phi, sigma)
-    axial_part = grid.integrate(np.where(mask, axial_integrand(loss_free, reference), 0.0))
-    return divergence_part, axial_part
+    return -0.5 * density * grid.cell_area * np.einsum("...zy,...zy->...", phi, sigma)

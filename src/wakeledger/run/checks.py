@@ -1,0 +1,287 @@
+"""Checks of a survey's quality: each with a value, a limit, a verdict and a sentence that says what to do.
+
+Every check compares a dimensionless value with two limits: above the first the survey deserves a look (`warn`), above
+the second its figures should not be used as they stand (`fail`). The limits are common practice unless a note says
+where one comes from.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+
+from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.ledger.rows import Check, CheckVerdict
+from wakeledger.physics.fields.edge import edge_integrals
+from wakeledger.physics.fields.wake_region import Mask
+from wakeledger.run.chain import Reduction
+
+#: First and second limit of each check.
+LIMITS: dict[str, tuple[float, float]] = {
+    "net_circulation": (0.02, 0.10),
+    "mass_balance": (0.003, 0.02),
+    "edge_vorticity": (0.01, 0.05),
+    "edge_total_pressure_loss": (0.01, 0.05),
+    "core_resolution": (0.8, 1.5),
+    "noise_bias": (0.02, 0.10),
+    "outer_flow": (0.05, 0.25),
+    "missing_points": (0.02, 0.10),
+}
+#: Width of the strip along the window's edge that must be quiet, in cells.
+EDGE_CELLS = 3
+#: Flow-angle offset that deserves a look, rad.
+ANGLE_LIMIT = math.radians(0.5)
+
+
+class Core(Protocol):
+    """A vortex core, as far as its resolution is concerned."""
+
+    @property
+    def core_radius(self) -> float:
+        """Gaussian core length a, m."""
+
+    @property
+    def y(self) -> float:
+        """Centre, m."""
+
+    @property
+    def z(self) -> float:
+        """Centre, m."""
+
+
+@dataclass(frozen=True)
+class Facts:
+    """What the checks need beyond the reduction itself.
+
+    Attributes
+    ----------
+    vortices : sequence of Core
+        The vortices found.
+    raw_spacing : float
+        Larger of the measured points' spacings, m.
+    filled : ndarray of bool, shape (nz, ny)
+        Places whose value was filled in.
+    bias : float
+        Noise bias of the induced drag that was subtracted, N; NaN where the noise is unknown.
+    loss_zero_uncertainty : float
+        Standard uncertainty of the loss zero, Pa.
+    """
+
+    vortices: Sequence[Core]
+    raw_spacing: float
+    filled: Mask
+    bias: float
+    loss_zero_uncertainty: float
+
+
+def all_checks(reduction: Reduction, facts: Facts) -> tuple[Check, ...]:
+    """Every check of one plane, in the ledger's order.
+
+    Parameters
+    ----------
+    reduction : Reduction
+        The nominal reduction, with its cross-checks.
+    facts : Facts
+        What else is known.
+
+    Returns
+    -------
+    tuple of Check
+    """
+    return (
+        net_circulation(reduction),
+        mass_balance(reduction),
+        edge_vorticity(reduction),
+        edge_total_pressure_loss(reduction),
+        core_resolution(facts),
+        noise_bias(reduction, facts),
+        outer_flow(reduction, facts),
+        missing_points(reduction, facts),
+    )
+
+
+def _verdict(name: str, value: float) -> CheckVerdict:
+    warn, fail = LIMITS[name]
+    if math.isnan(value):
+        return "not_applicable"
+    if value > fail:
+        return "fail"
+    return "warn" if value > warn else "pass"
+
+
+def _check(name: str, value: float, messages: dict[str, str]) -> Check:
+    verdict = _verdict(name, value)
+    return Check(name, verdict, value, LIMITS[name][0], messages[verdict] if verdict in messages else messages["warn"])
+
+
+def net_circulation(reduction: Reduction) -> Check:
+    """Net circulation of the window over the circulation of one sign."""
+    gross = float(reduction.forces.gross_circulation)
+    if gross == 0:
+        return _check("net_circulation", math.nan, {"not_applicable": "No vorticity was found in the plane."})
+    flow = reduction.flow
+    value = abs(float(edge_integrals(flow.v, flow.w, flow.grid).circulation)) / gross
+    return _check(
+        "net_circulation",
+        value,
+        {
+            "pass": f"The line integral along the window's edge leaves {value:.1%} of the wake's circulation unbalanced.",
+            "warn": f"{value:.1%} of the wake's circulation is unbalanced, so the induced drag depends on where the"
+            " window ends; widen the survey on the side whose vortex is cut, or check the crossflow's calibration.",
+        },
+    )
+
+
+def mass_balance(reduction: Reduction) -> Check:
+    """Mean axial velocity outside the wake against the stream's."""
+    outer = ~reduction.region.mask
+    if not outer.any():
+        return _check("mass_balance", math.nan, {"not_applicable": "The wake fills the window: no outer flow is left."})
+    excess = float((reduction.flow.u[outer] / reduction.reference.speed - 1).mean())
+    value = abs(excess)
+    return _check(
+        "mass_balance",
+        value,
+        {
+            "pass": f"Outside the wake the axial velocity is the stream's within {value:.2%}.",
+            "warn": f"Outside the wake the axial velocity is {excess:+.2%} off the stream's; check the reference speed,"
+            " the static pressure and the probe's calibration, or blockage if the stream is bounded.",
+        },
+    )
+
+
+def _edge_share(field: Array, mask: Mask, grid: UniformGrid) -> tuple[float, str]:
+    """Share of a field's absolute integral that lies in the strip along the edge, and the side with most of it."""
+    inside = np.where(mask, np.abs(field), 0.0)
+    total = float(inside.sum())
+    if total == 0:
+        return math.nan, ""
+    n = EDGE_CELLS
+    sides = {
+        "port": inside[:, :n].sum(),
+        "starboard": inside[:, -n:].sum(),
+        "lower": inside[:n].sum(),
+        "upper": inside[-n:].sum(),
+    }
+    strip = np.ones(grid.shape, dtype=bool)
+    strip[n:-n, n:-n] = False
+    return float(inside[strip].sum()) / total, max(sides, key=lambda side: float(sides[side]))
+
+
+def edge_vorticity(reduction: Reduction) -> Check:
+    """Share of the wake's vorticity that touches the window's edge."""
+    value, side = _edge_share(reduction.vorticity, reduction.region.mask, reduction.flow.grid)
+    return _check(
+        "edge_vorticity",
+        value,
+        {
+            "pass": "The window encloses the wake's vorticity.",
+            "warn": f"{value:.1%} of the wake's vorticity lies along the window's edge, most of it on the {side} side:"
+            " the survey does not enclose its wake; widen it there. Lift and induced drag are those of the part inside.",
+            "not_applicable": "No vorticity was found in the plane.",
+        },
+    )
+
+
+def edge_total_pressure_loss(reduction: Reduction) -> Check:
+    """Share of the total-pressure loss that touches the window's edge."""
+    loss = reduction.reference.total_pressure - reduction.flow.total_pressure
+    value, side = _edge_share(loss, reduction.region.mask, reduction.flow.grid)
+    return _check(
+        "edge_total_pressure_loss",
+        value,
+        {
+            "pass": "The window encloses the wake's total-pressure loss.",
+            "warn": f"{value:.1%} of the total-pressure loss lies along the window's edge, most of it on the {side}"
+            " side: the wake still touches it; widen the survey there. The profile drag is that of the part inside.",
+            "not_applicable": "No loss was found in the plane.",
+        },
+    )
+
+
+def core_resolution(facts: Facts) -> Check:
+    """Spacing of the measured points over the smallest core length."""
+    cores = [vortex for vortex in facts.vortices if vortex.core_radius > 0]
+    if not cores:
+        return _check("core_resolution", math.nan, {"not_applicable": "No vortex core was identified."})
+    smallest = min(cores, key=lambda vortex: vortex.core_radius)
+    value = facts.raw_spacing / smallest.core_radius
+    where = f"the core at y = {smallest.y:.4g} m, z = {smallest.z:.4g} m (a = {smallest.core_radius:.3g} m)"
+    return _check(
+        "core_resolution",
+        value,
+        {
+            "pass": f"The points are {value:.2f} core lengths apart in {where}.",
+            "warn": f"The points are {value:.2f} core lengths apart in {where}: its induced drag is smeared; measure it"
+            f" at a spacing of {0.5 * smallest.core_radius:.2g} m. A good lift does not prove a good induced drag.",
+        },
+    )
+
+
+def noise_bias(reduction: Reduction, facts: Facts) -> Check:
+    """Noise bias of the induced drag over the induced drag."""
+    induced = abs(float(reduction.forces.induced_drag))
+    value = abs(facts.bias) / induced if induced > 0 else math.nan
+    return _check(
+        "noise_bias",
+        value,
+        {
+            "pass": f"Noise adds {value:.2%} to the induced drag; it has been subtracted.",
+            "warn": f"Noise adds {value:.1%} to the induced drag; it has been subtracted, but its own uncertainty now"
+            " counts: sample longer, or measure the wake alone more closely.",
+            "not_applicable": "There is no induced drag that noise could bias.",
+        },
+    )
+
+
+def outer_flow(reduction: Reduction, facts: Facts) -> Check:
+    """Zero errors found in the outer flow: what the loss zero is worth in the total drag, and the flow-angle offset."""
+    reference, region = reduction.reference, reduction.region
+    outer = ~region.mask
+    if outer.mean() < 0.1:
+        message = "The wake fills the window: too little outer flow is left to zero the total pressure and flow angles."
+        return Check("outer_flow", "fail", math.nan, LIMITS["outer_flow"][0], message)
+    worth = reduction.loss_zero * float(region.mask.sum()) * reduction.flow.grid.cell_area
+    total = abs(reduction.values["total_drag"])
+    value = abs(worth) / total if total > 0 else math.nan
+    pitch = math.degrees(math.atan2(reduction.crossflow_offset[1], reference.speed))
+    yaw = math.degrees(math.atan2(reduction.crossflow_offset[0], reference.speed))
+    found = (
+        f"Outside the wake the total pressure is {-reduction.loss_zero:+.3g} Pa off the stream's"
+        f" ({worth / max(total, 1e-300):+.1%} of the drag; taken out) and the flow is turned by {pitch:+.2f} deg in pitch"
+        f" and {yaw:+.2f} deg in yaw (taken out of the energy form only)."
+    )
+    check = _check("outer_flow", value, {"pass": found, "warn": f"{found} Check the total-pressure reference's drift."})
+    turned = math.radians(math.hypot(pitch, yaw))
+    if check.verdict == "pass" and turned > ANGLE_LIMIT:
+        message = f"{found} Check the probe's alignment or the stream's upflow."
+        return Check("outer_flow", "warn", turned / ANGLE_LIMIT * LIMITS["outer_flow"][0], check.limit, message)
+    return check
+
+
+def missing_points(reduction: Reduction, facts: Facts) -> Check:
+    """Share of the wake region that was filled in, and whether a core was."""
+    mask, filled, grid = reduction.region.mask, facts.filled, reduction.flow.grid
+    value = float((filled & mask).sum()) / max(int(mask.sum()), 1)
+    for vortex in facts.vortices:
+        iz = min(max(round((vortex.z - grid.z0) / grid.dz), 0), grid.nz - 1)
+        iy = min(max(round((vortex.y - grid.y0) / grid.dy), 0), grid.ny - 1)
+        if filled[iz, iy]:
+            message = (
+                f"The centre of the vortex at y = {vortex.y:.4g} m, z = {vortex.z:.4g} m was not measured but filled in:"
+                " its circulation and induced drag are guesses; measure it again."
+            )
+            return Check("missing_points", "fail", max(value, LIMITS["missing_points"][1]), 0.02, message)
+    total = float(filled.mean())
+    return _check(
+        "missing_points",
+        value,
+        {
+            "pass": f"{value:.1%} of the wake region and {total:.1%} of the window were filled from their neighbours.",
+            "warn": f"{value:.1%} of the wake region was filled from its neighbours; measure the missing points again.",
+        },
+    )

@@ -1,0 +1,112 @@
+"""A survey ready to be reduced: from its file and data, or from an archive that holds both."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+
+from wakeledger.core.errors import DataError, SurveyError
+from wakeledger.core.points import Points
+from wakeledger.run.config import Survey, parse_survey, read_survey
+
+_NETCDF = (b"\x89HDF\r\n\x1a\n", b"CDF")
+
+
+@dataclass(frozen=True)
+class SurveyInput:
+    """A survey and its points.
+
+    Attributes
+    ----------
+    survey : Survey
+        The survey file.
+    points : Points
+        The points of its plane as read.
+    inputs : mapping of str to str
+        SHA-256 of each input file by name.
+    """
+
+    survey: Survey
+    points: Points
+    inputs: Mapping[str, str]
+
+
+def load(path: str | Path) -> SurveyInput:
+    """Read a survey file with its data, or take both out of an archive.
+
+    Parameters
+    ----------
+    path : path-like
+        A survey file (TOML) or a ledger (netCDF), told apart by content.
+
+    Returns
+    -------
+    SurveyInput
+
+    Raises
+    ------
+    InputError
+        If anything about the survey file, the data or the archive is wrong.
+    """
+    path = Path(path)
+    if _is_netcdf(path):
+        from wakeledger.ledger.archive import open_archive
+
+        ledger = open_archive(path)
+        survey = parse_survey(ledger.survey_text, path)
+        return SurveyInput(survey, ledger.raw, ledger.inputs)
+    return load_survey(read_survey(path))
+
+
+def load_survey(survey: Survey) -> SurveyInput:
+    """Read the data of a survey file.
+
+    Parameters
+    ----------
+    survey : Survey
+        The survey file.
+
+    Returns
+    -------
+    SurveyInput
+
+    Raises
+    ------
+    InputError
+        If the survey asks for what this version does not do, or its data are wrong.
+    """
+    refuse_unsupported(survey)
+    from wakeledger.intake.readers import read_points
+
+    plane = survey.plane
+    file = survey.resolve(plane.file)
+    points = read_points(file, plane.columns, axes=plane.axes.matrix(), std=plane.std, samples=plane.samples)
+    digest = hashlib.sha256(file.read_bytes()).hexdigest()
+    return SurveyInput(survey, points, {survey.path.name: survey.sha256, plane.file: digest})
+
+
+def refuse_unsupported(survey: Survey) -> None:
+    """Say in one line what a survey asks for that this version does not do.
+
+    Raises
+    ------
+    SurveyError
+        Naming the first such place.
+    """
+    unsupported = survey.unsupported()
+    if unsupported:
+        place, what = unsupported[0].split(": ", 1)
+        raise SurveyError(what, file=survey.path, place=place)
+
+
+def _is_netcdf(path: Path) -> bool:
+    try:
+        with path.open("rb") as file:
+            head = file.read(8)
+    except OSError:
+        return False
+    if path.suffix == ".nc" and not head:
+        raise DataError("the archive is empty", file=path, remedy="reduce the survey again")
+    return head.startswith(_NETCDF)

@@ -1,0 +1,257 @@
+"""Noise of the crossflow, and the bias it leaves in the quadratic forms of the chain."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from wakeledger.confidence.correlation import squared_exponential
+from wakeledger.confidence.noise import NoiseEstimate, estimate_noise
+from wakeledger.confidence.noise_bias import quadratic_noise_bias
+from wakeledger.confidence.sampling import SourceErrors
+from wakeledger.confidence.sources import InputLayout, Source
+from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.physics.fields.differences import difference_matrix
+from wakeledger.physics.fields.poisson import green_weights
+from wakeledger.physics.fields.wake_region import Mask
+from wakeledger.physics.methods.energy_area import crossflow_energy
+from wakeledger.physics.methods.residual import divergence_drag
+from wakeledger.physics.methods.vorticity_area import vorticity_drag
+from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
+from wakeledger.physics.methods.wake_line import noise_bias as wake_line_bias
+from wakeledger.physics.vortices.vortex_sum import evaluate as evaluate_vortex_sum
+from wakeledger.physics.vortices.vortex_sum import noise_bias as vortex_sum_bias
+from wakeledger.run.chain import Chain, Reduction, estimate_of
+
+#: Drawn error fields of each source: for its variance, and for a bias that has no closed form.
+_DRAWS = 64
+
+
+@dataclass(frozen=True)
+class Noise:
+    """Errors of the crossflow that differ from point to point, from one source.
+
+    Attributes
+    ----------
+    name : str
+        The source.
+    variance : (float, float)
+        Variance of v and w at one point of the wake, m²/s².
+    outer_variance : (float, float)
+        The same over all points, m²/s².
+    correlation : (ndarray or None, ndarray or None)
+        Correlation matrices along z and y of the raw tensor grid; None where points are independent.
+    fields : ndarray, shape (2, k, nz, ny), or None
+        Drawn errors of v and w on the grid, m/s; None where they are not needed.
+    """
+
+    name: str
+    variance: tuple[float, float]
+    outer_variance: tuple[float, float]
+    correlation: tuple[Array | None, Array | None] = (None, None)
+    fields: Array | None = None
+
+    @property
+    def is_white(self) -> bool:
+        """Whether every point has its own error."""
+        return self.correlation[0] is None and self.correlation[1] is None
+
+
+def declared_noise(
+    chain: Chain, nominal: Reduction, sources: Sequence[Source], layouts: Mapping[str, InputLayout], *, seed: int
+) -> tuple[Noise, ...]:
+    """Noise of v and w that the survey's random and per-row sources cause.
+
+    Parameters
+    ----------
+    chain : Chain
+        The survey.
+    nominal : Reduction
+        Its nominal reduction.
+    sources, layouts
+        As in Monte Carlo.
+    seed : int
+        The survey's seed.
+
+    Returns
+    -------
+    tuple of Noise
+        Sources that do not reach the crossflow are left out.
+    """
+    found = []
+    wake = _at_points(nominal.region.mask, chain)
+    still = chain.state(nominal.reference)
+    for source in sources:
+        if source.effect == "systematic":
+            continue
+        draws = SourceErrors(source, layouts, seed=seed).draw(0, _DRAWS)
+        states = [
+            chain.state(nominal.reference, {name: array[k] for name, array in draws.items()}) for k in range(_DRAWS)
+        ]
+        errors = np.stack([[state.v for state in states] - still.v, [state.w for state in states] - still.w])
+        if not np.nanmax(np.abs(errors)) > 0:
+            continue
+        known = np.isfinite(errors).all(axis=(0, 1))
+        mean_square = (errors**2).mean(axis=1)
+        inner = tuple(float(mean_square[k][known & wake].mean()) if (known & wake).any() else 0.0 for k in range(2))
+        outer = tuple(float(mean_square[k][known].mean()) for k in range(2))
+        correlation = _correlation(source, chain)
+        closed = correlation is not None
+        fields = None if closed and correlation == (None, None) else chain.gridding.apply(np.nan_to_num(errors))
+        found.append(Noise(source.name, inner, outer, correlation or (None, None), fields))  # type: ignore[arg-type]
+    return tuple(found)
+
+
+def estimated_noise(nominal: Reduction, filled: Mask) -> tuple[NoiseEstimate, NoiseEstimate]:
+    """Noise of v and w estimated from the outer flow of a plane that was measured on its own uniform grid.
+
+    Parameters
+    ----------
+    nominal : Reduction
+        The nominal reduction.
+    filled : ndarray of bool, shape (nz, ny)
+        Places that were filled in.
+
+    Returns
+    -------
+    (NoiseEstimate, NoiseEstimate)
+    """
+    skip = nominal.region.mask | filled
+    return estimate_noise(nominal.flow.v, mask=skip), estimate_noise(nominal.flow.w, mask=skip)
+
+
+def white_noise(name: str, v: float, w: float) -> Noise:
+    """Independent noise of given standard deviations of v and w, m/s."""
+    return Noise(name, (v**2, w**2), (v**2, w**2))
+
+
+def noise_bias(chain: Chain, nominal: Reduction, noises: Sequence[Noise]) -> dict[str, float]:
+    """What noise adds on average to each quadratic output of the chain.
+
+    Parameters
+    ----------
+    chain : Chain
+        The survey, with what was frozen on the nominal plane.
+    nominal : Reduction
+        Its nominal reduction.
+    noises : sequence of Noise
+        Independent noises; their biases add.
+
+    Returns
+    -------
+    dict of str to float
+        By output, N; to be subtracted.
+
+    Notes
+    -----
+    D = ½ρ Σ_ij ξ_i g(i − j) ξ_j A with noise in ξ = ∂w/∂y − ∂v/∂z adds ½ρA Σ_ij g(i − j) cov(ξ_i, ξ_j) over the wake
+    region; the crossflow energy adds ½ρ ∬(σ_v² + σ_w²) dA. Where points are scattered, or noise is not white for the
+    wake line and the vortex sum, the mean over drawn noise fields stands in for the closed form.
+    """
+    total: dict[str, float] = {}
+    for noise in noises:
+        for name, value in _bias_of(chain, nominal, noise).items():
+            total[name] = total.get(name, 0.0) + value
+    return total
+
+
+def _bias_of(chain: Chain, nominal: Reduction, noise: Noise) -> dict[str, float]:
+    grid, mask, reference = nominal.flow.grid, nominal.region.mask, nominal.reference
+    operators = chain.gridding.operators()
+    density = reference.density
+    energy = estimate_of("induced_drag", "energy_area")
+    line, vortices = estimate_of("induced_drag", "wake_line"), estimate_of("induced_drag", "vortex_sum")
+    cuts, parts = chain.frozen.cuts, chain.frozen.parts
+    if operators is None:
+        if noise.fields is None:
+            return {}
+        v, w = noise.fields
+        found = {
+            "induced_drag": _mean(vorticity_drag(v, w, grid, mask, density=density)),
+            "residual_drag": _mean(divergence_drag(v, w, grid, mask, density=density)),
+            energy: _mean(crossflow_energy(v, w, grid, density=density)),
+        }
+    else:
+        found = _closed_forms(grid, mask, operators, noise, density)
+        gain = np.outer((operators[0] ** 2).sum(axis=1), (operators[1] ** 2).sum(axis=1))
+        found[energy] = 0.5 * density * float(grid.integrate(gain)) * sum(noise.outer_variance)
+        white = noise.is_white and chain.gridding.kind == "uniform"
+        if white and cuts is not None:
+            found[line] = wake_line_bias(cuts, *(np.full(grid.shape, x) for x in noise.variance), density)
+        if white and parts is not None:
+            found[vortices] = vortex_sum_bias(parts, *noise.variance, density)
+    if noise.fields is not None:
+        if cuts is not None and line not in found:
+            found[line] = _paired_mean(
+                lambda v, w: evaluate_wake_line(cuts, v, w, density, reference.speed).induced_drag,
+                nominal,
+                noise.fields,
+            )
+        if parts is not None and vortices not in found:
+            found[vortices] = _paired_mean(
+                lambda v, w: evaluate_vortex_sum(parts, v, w, density), nominal, noise.fields
+            )
+    found[estimate_of("total_drag", "momentum_area")] = found[energy]
+    return found
+
+
+def _closed_forms(
+    grid: UniformGrid, mask: Mask, operators: tuple[Array, Array], noise: Noise, density: float
+) -> dict[str, float]:
+    wz, wy = operators
+    slope_z = difference_matrix(grid.nz) @ wz / grid.dz
+    slope_y = difference_matrix(grid.ny) @ wy / grid.dy
+    kernel = density * grid.cell_area * green_weights(grid.nz, grid.ny, grid.dz, grid.dy)
+    region = mask.astype(float)
+    variance_v, variance_w = noise.variance
+
+    def bias(left_z: Array, left_y: Array, variance: float) -> float:
+        return quadratic_noise_bias(left_z, left_y, kernel, region, variance, correlation=noise.correlation)
+
+    return {
+        "induced_drag": bias(slope_z, wy, variance_v) + bias(wz, slope_y, variance_w),
+        "residual_drag": bias(wz, slope_y, variance_v) + bias(slope_z, wy, variance_w),
+    }
+
+
+def _mean(values: Array) -> float:
+    return float(np.mean(values))
+
+
+def _paired_mean(form: Callable[[Array, Array], Array], nominal: Reduction, fields: Array) -> float:
+    """Mean change of a quadratic form under drawn errors, each taken with both signs so that linear parts cancel."""
+    v, w = nominal.flow.v, nominal.flow.w
+    still = form(v, w)
+    return _mean((form(v + fields[0], w + fields[1]) + form(v - fields[0], w - fields[1])) / 2 - still)
+
+
+def _at_points(mask: Mask, chain: Chain) -> Mask:
+    """Value of a region at every point, by the nearest place of the grid."""
+    grid = chain.gridding.grid
+    iz = np.clip(np.rint((chain.points.z - grid.z0) / grid.dz).astype(int), 0, grid.nz - 1)
+    iy = np.clip(np.rint((chain.points.y - grid.y0) / grid.dy).astype(int), 0, grid.ny - 1)
+    return mask[iz, iy]
+
+
+def _correlation(source: Source, chain: Chain) -> tuple[Array | None, Array | None] | None:
+    """Correlation of a source's errors along z and y of the raw tensor grid; None where it does not separate."""
+    operators = chain.gridding.operators()
+    if operators is None:
+        return None
+    if source.effect == "per_row":
+        rows = chain.gridding.row_index
+        along_y = np.unique(chain.points.z[rows == rows[0]]).size == 1
+        count = operators[1].shape[1] if along_y else operators[0].shape[1]
+        together = np.ones((count, count))
+        return (None, together) if along_y else (together, None)
+    if source.correlation_length is None:
+        return None, None
+    grid = chain.gridding.grid
+    if chain.gridding.kind != "uniform":
+        return None
+    return (
+        squared_exponential(grid.z, source.correlation_length),
+        squared_exponential(grid.y, source.correlation_length),
+    )

@@ -1,0 +1,180 @@
+"""Numerical terms of the uncertainty: what a choice that could have been made otherwise is worth.
+
+Each term is the change of every output of the chain when one choice is made differently: the wake region's edge, the
+spacing of the points, the spline between them, the filling of gaps, the zeros taken from the outer flow.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import replace
+
+import numpy as np
+
+from wakeledger.confidence.terms import NumericalTerm
+from wakeledger.core.errors import DataError
+from wakeledger.core.grid import Array
+from wakeledger.intake.gridding import Gridding
+from wakeledger.physics.fields.outer_flow import OuterFlow
+from wakeledger.physics.fields.wake_region import Mask
+from wakeledger.run.chain import OUTPUTS, Chain, Reduction, Variation, estimate_of, sampled_mask
+
+MASK = "edge of the wake region"
+RESOLUTION = "spacing of the points"
+RESAMPLING = "spline between the points"
+GAPS = "filled points"
+LOSS_ZERO = "zero of the total pressure"
+OFFSET_ZERO = "zero of the flow angles"
+
+#: Order of accuracy claimed when a decimated grid is extrapolated; between h/a = 0.5 and 1 the observed order is 4 to 8.
+ORDER = 3.0
+#: Factors on the region's growth that bound the plausible choices.
+SWEEP = (0.5, 2.0)
+#: Outputs that are evaluated on geometry frozen at the nominal grid: their own method uncertainty covers them.
+_FROZEN = {
+    estimate_of("induced_drag", "wake_line"),
+    estimate_of("induced_drag", "vortex_sum"),
+    estimate_of("lift", "wake_line"),
+}
+
+
+def numerical_terms(
+    chain: Chain,
+    nominal: Reduction,
+    *,
+    outer: OuterFlow,
+    regrid: Callable[..., Gridding],
+    method_uncertainty: dict[str, float],
+) -> tuple[NumericalTerm, ...]:
+    """All numerical terms of one plane.
+
+    Parameters
+    ----------
+    chain : Chain
+        The survey, with what was frozen on the nominal plane.
+    nominal : Reduction
+        Its nominal reduction.
+    outer : OuterFlow
+        Zeros found in the outer flow, with their uncertainties.
+    regrid : callable
+        Makes a gridding of the same points: ``regrid(usable=..., degree=..., spacing=...)``.
+    method_uncertainty : dict of str to float
+        Standard uncertainty that an estimate's own method adds, by output, N.
+
+    Returns
+    -------
+    tuple of NumericalTerm
+        Over `wakeledger.run.chain.OUTPUTS`; terms that do not apply are left out.
+    """
+    terms = [_mask_term(chain, nominal), _resolution_term(chain, nominal)]
+    if chain.gridding.kind == "tensor":
+        terms.append(_resampling_term(chain, nominal, regrid))
+    if chain.gridding.filled.any():
+        terms.append(_gap_term(chain, nominal, regrid))
+    terms.append(_shift_term(chain, nominal, LOSS_ZERO, Variation(loss_shift=outer.loss_zero_uncertainty)))
+    shift = outer.offset_uncertainty
+    both = [
+        _deviation(chain, nominal, Variation(crossflow_shift=pair)) if np.isfinite(shift) else None
+        for pair in ((shift, 0.0), (0.0, shift))
+    ]
+    known = [one for one in both if one is not None]
+    if known:
+        terms.append(NumericalTerm(OFFSET_ZERO, np.sqrt(sum(one**2 for one in known))))
+    for name, value in method_uncertainty.items():
+        vector = np.zeros(len(OUTPUTS))
+        vector[OUTPUTS.index(name)] = value if np.isfinite(value) else 0.0
+        terms.append(NumericalTerm(f"method of {name}", vector))
+    return tuple(term for term in terms if term is not None)
+
+
+def _difference(vector: Array, nominal: Reduction) -> Array:
+    """Change of the outputs; zero where either is not known, which the row itself then says."""
+    return np.nan_to_num(vector - nominal.vector)
+
+
+def _deviation(chain: Chain, nominal: Reduction, vary: Variation) -> Array:
+    return _difference(chain.reduce(vary=vary).vector, nominal)
+
+
+def _mask_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
+    smaller, larger = (_deviation(chain, nominal, Variation(grow_factor=factor)) for factor in SWEEP)
+    # One latent choice of the edge moves all outputs together, each in the direction in which it grows.
+    size = np.maximum(np.abs(smaller), np.abs(larger))
+    return NumericalTerm(MASK, np.where(larger - smaller < 0, -size, size) / np.sqrt(3), "rectangular")
+
+
+def _resolution_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
+    found = []
+    for phase in ((0, 0), (0, 1), (1, 0), (1, 1)):
+        try:
+            coarse = chain.with_gridding(chain.gridding.decimated(2, phase=phase))
+        except DataError:
+            continue
+        mask = sampled_mask(nominal.region.mask, nominal.flow.grid, coarse.gridding.grid)
+        found.append(coarse.reduce(vary=Variation(mask=mask)).vector)
+    if not found:
+        return NumericalTerm(RESOLUTION, np.full(len(OUTPUTS), np.nan))
+    change = np.nan_to_num(np.mean(found, axis=0) - nominal.vector) / (2**ORDER - 1)
+    change[[OUTPUTS.index(name) for name in _FROZEN]] = 0.0
+    return NumericalTerm(RESOLUTION, change)
+
+
+def _resampling_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gridding]) -> NumericalTerm:
+    other = chain.with_gridding(regrid(degree=5, spacing=min(nominal.flow.grid.dy, nominal.flow.grid.dz)))
+    same = other.gridding.grid.shape == nominal.flow.grid.shape
+    vary = Variation(mask=nominal.region.mask if same else None)
+    return NumericalTerm(RESAMPLING, _difference(other.reduce(vary=vary).vector, nominal))
+
+
+def _gap_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gridding]) -> NumericalTerm:
+    """Remove measured points in the same pattern beside the true gaps, fill them, and see what that does."""
+    state = chain.state(nominal.reference)
+    usable = np.isfinite(state.v) & np.isfinite(state.w)
+    inside = ~usable
+    changes = []
+    step_y, step_z = chain.gridding.raw_spacing
+    places = np.stack([chain.points.y, chain.points.z], axis=1)
+    gap = places[inside]
+    if gap.size == 0:
+        gap = _filled_places(chain)
+    for dy, dz in ((2, 0), (-2, 0), (0, 2), (0, -2), (2, 2), (-2, -2), (2, -2), (-2, 2)):
+        moved = gap + np.array([dy * step_y, dz * step_z])
+        also_missing = _nearest(places, moved, (step_y, step_z))
+        if not also_missing.any():
+            continue
+        try:
+            gridding = regrid(usable=usable & ~also_missing)
+        except DataError:
+            continue
+        if gridding.grid != chain.gridding.grid:
+            continue
+        trial = replace(chain, gridding=gridding)
+        vector = trial.reduce(vary=Variation(mask=nominal.region.mask)).vector
+        changes.append(_difference(vector, nominal))
+    if not changes:
+        return NumericalTerm(GAPS, np.full(len(OUTPUTS), np.nan))
+    return NumericalTerm(GAPS, np.sqrt(np.mean(np.square(changes), axis=0)))
+
+
+def _filled_places(chain: Chain) -> Array:
+    grid = chain.gridding.grid
+    yy, zz = grid.mesh()
+    filled = chain.gridding.filled
+    places: Array = np.stack([yy[filled], zz[filled]], axis=1)
+    return places
+
+
+def _nearest(places: Array, wanted: Array, spacing: tuple[float, float]) -> Mask:
+    """Points within half a spacing of any wanted place."""
+    from scipy.spatial import cKDTree
+
+    scaled, targets = places / np.asarray(spacing), wanted / np.asarray(spacing)
+    distance, _ = cKDTree(targets).query(scaled, distance_upper_bound=0.75)
+    found: Mask = np.isfinite(distance)
+    return found
+
+
+def _shift_term(chain: Chain, nominal: Reduction, name: str, vary: Variation) -> NumericalTerm | None:
+    if not np.isfinite(vary.loss_shift):
+        return None
+    return NumericalTerm(name, _deviation(chain, nominal, vary))

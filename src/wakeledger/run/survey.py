@@ -1,0 +1,525 @@
+"""The reduction of one survey, from points to ledger, in its declared order."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from wakeledger.confidence.budget import Budget, make_budget
+from wakeledger.confidence.montecarlo import run as run_montecarlo
+from wakeledger.confidence.samples import Samples
+from wakeledger.confidence.sources import InputLayout, Source
+from wakeledger.confidence.terms import NumericalTerm, add_terms
+from wakeledger.core.errors import InputError
+from wakeledger.core.estimate import Estimate
+from wakeledger.core.grid import Array
+from wakeledger.core.names import ROWS as ROW_TABLE
+from wakeledger.intake.gridding import Gridding, check_duplicates, make_gridding
+from wakeledger.intake.state import check_state
+from wakeledger.ledger.crosscheck import check_estimate, compare
+from wakeledger.ledger.rows import BudgetLine, Comparison, CrossCheck, Ledger, Row
+from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
+from wakeledger.physics.loading.span import span_loading
+from wakeledger.physics.methods.energy_area import crossflow_energy
+from wakeledger.physics.methods.wake_line import WakeLine, wake_line
+from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
+from wakeledger.physics.vortices.vortex_sum import VortexSum, WakeParts, find_parts, summarise
+from wakeledger.run import tables
+from wakeledger.run.chain import (
+    ESTIMATES,
+    OUTPUTS,
+    ROWS,
+    Chain,
+    Frozen,
+    Reduction,
+    Settings,
+    coefficient_of,
+    estimate_of,
+)
+from wakeledger.run.checks import Facts, all_checks
+from wakeledger.run.inputs import gradients, layouts, sources
+from wakeledger.run.load import SurveyInput, load, refuse_unsupported
+from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
+from wakeledger.run.numerics import numerical_terms
+from wakeledger.stream.reference import Reference
+
+__all__ = ["SurveyInput", "load", "reduce"]
+
+Progress = Callable[[int, int], None]
+
+#: Points per core length that the plane is resampled to where its own points are uneven.
+POINTS_PER_CORE = 2.0
+_NO_SOURCE = "the survey file gives no uncertainty source"
+_SAME_ALGEBRA = "the same algebra as the sum of the rows: it tests the arithmetic, not the flow"
+
+
+@dataclass(frozen=True)
+class Prepared:
+    """A survey brought onto its grid, before any error is added.
+
+    Attributes
+    ----------
+    chain : Chain
+        Ready to be reduced.
+    nominal : Reduction
+        Its reduction, noise bias not yet subtracted.
+    outer : OuterFlow
+        Zeros found in the outer flow.
+    line : WakeLine
+        The wake line of the nominal plane.
+    vortices : VortexSum
+        The vortices of the nominal plane.
+    expected : mapping of str to float
+        What each estimate is expected to read above the primary one, N.
+    sources, layouts
+        Sources of uncertainty and the inputs they act on.
+    noises : tuple of Noise
+        Noise of the crossflow.
+    notes : tuple of str
+        Sentences about the choices made.
+    """
+
+    chain: Chain
+    nominal: Reduction
+    outer: OuterFlow
+    line: WakeLine
+    vortices: VortexSum
+    expected: Mapping[str, float]
+    sources: tuple[Source, ...]
+    layouts: Mapping[str, InputLayout]
+    noises: tuple[Noise, ...]
+    notes: tuple[str, ...]
+
+
+def reduce(
+    survey: SurveyInput, *, draws: int | None = None, progress: Progress | None = None, command: str = ""
+) -> Ledger:
+    """Reduce one survey to its ledger.
+
+    Parameters
+    ----------
+    survey : SurveyInput
+        From `load`.
+    draws : int, optional
+        Monte Carlo draws instead of the survey file's.
+    progress : callable, optional
+        Called with the draws done and their number.
+    command : str
+        The command line, for the archive.
+
+    Returns
+    -------
+    Ledger
+
+    Raises
+    ------
+    InputError
+        If the survey or its data are wrong.
+    """
+    prepared = prepare(survey)
+    uncertainty = survey.survey.uncertainty
+    count = uncertainty.draws if draws is None else draws
+    terms = _terms(prepared, survey)
+    samples, budget = None, None
+    if prepared.sources:
+        samples, budget = _propagate(prepared, terms, draws=count, seed=uncertainty.seed, progress=progress)
+    return _ledger(survey, prepared, samples, budget, terms, command=command)
+
+
+def prepare(survey: SurveyInput) -> Prepared:
+    """Everything up to the Monte Carlo: grid, wake region, frozen geometry, noise and its bias.
+
+    Parameters
+    ----------
+    survey : SurveyInput
+        From `load`.
+
+    Returns
+    -------
+    Prepared
+
+    Raises
+    ------
+    InputError
+        If the survey or its data are wrong.
+    """
+    refuse_unsupported(survey.survey)
+    try:
+        return _prepare(survey)
+    except InputError as error:
+        raise error.located(file=survey.points.source) from error
+
+
+def settings_of(survey: SurveyInput, reference: Reference) -> Settings:
+    """The chain's settings from the survey file."""
+    file, plane = survey.survey, survey.survey.plane
+    model = file.model
+    quarter_chord = None if model is None else model.quarter_chord()
+    axes = plane.axes
+    return Settings(
+        reference=file.reference.given(),
+        compressible=reference.compressible,
+        primary=plane.primary,
+        offsets=(axes.pitch_offset, axes.yaw_offset, axes.roll_offset),
+        station=plane.station,
+        bound_line=math.inf if quarter_chord is None else quarter_chord,
+        reference_area=math.nan if model is None else model.reference_area,
+        span=math.nan if model is None or model.span is None else model.span,
+        moment_centre=(0.0, 0.0) if model is None or model.moment_centre is None else model.moment_centre,
+        level=file.wake.level if file.wake.level is not None else Settings.level,
+        grow=file.wake.grow,
+        include=tuple(file.wake.include),
+        exclude=tuple(file.wake.exclude),
+    )
+
+
+def _prepare(survey: SurveyInput) -> Prepared:
+    file, points = survey.survey, survey.points
+    reference = file.reference.resolve()
+    settings = settings_of(survey, reference)
+    check_duplicates(points)
+    empty = Chain(points, None, settings)  # type: ignore[arg-type]
+    state = empty.state(reference)
+    check_state(state, points=points)
+    usable = np.isfinite(state.u) & np.isfinite(state.v) & np.isfinite(state.w)
+    for pressure in (state.total_pressure, state.static_pressure):
+        if pressure is not None:
+            usable &= np.isfinite(pressure)
+    regrid = Regrid(points.y, points.z, usable, points.row)
+    gridding = regrid()
+    chain = Chain(points, gridding, settings)
+    first = chain.reduce(estimates=False)
+    parts, vortices = _vortices(first)
+    if gridding.kind != "uniform" and vortices.vortices:
+        finer = min(vortex.core_radius for vortex in vortices.vortices) / POINTS_PER_CORE
+        if finer < 0.98 * max(gridding.grid.dy, gridding.grid.dz):
+            gridding = regrid(spacing=(min(finer, gridding.grid.dy), min(finer, gridding.grid.dz)))
+            chain = Chain(points, gridding, settings)
+            first = chain.reduce(estimates=False)
+            parts, vortices = _vortices(first)
+    near_field = chain.near_field(first.vorticity, first.flow.grid)
+    line = _line(first)
+    kept = None if math.isnan(vortices.induced_drag) else parts
+    chain = replace(chain, frozen=Frozen(near_field, line.cuts if line.reason is None else None, kept))
+    declared = sources(file, points, reference)
+    names = sorted({name for source in declared for name in source.applies_to})
+    inputs = layouts(file, points, gridding, names)
+    if any(name.startswith("position.") for name in names):
+        chain = replace(chain, gradients=gradients(points, gridding))
+    plain = chain.reduce()
+    noises, noise_notes = _noises(chain, plain, declared, inputs, seed=file.uncertainty.seed)
+    chain = replace(chain, frozen=replace(chain.frozen, bias=noise_bias(chain, plain, noises)))
+    nominal = chain.reduce()
+    outer = outer_flow(
+        reference.total_pressure - nominal.flow.total_pressure + nominal.loss_zero,
+        nominal.flow.v,
+        nominal.flow.w,
+        nominal.forces.stream_function,
+        nominal.flow.grid,
+        mask=nominal.region.mask,
+        near_field=near_field,
+    )
+    expected = _expected(chain, nominal)
+    notes = (*file.notes(), *tables.notes(survey, chain, nominal, state), *noise_notes)
+    return Prepared(chain, nominal, outer, line, vortices, expected, declared, inputs, noises, notes)
+
+
+@dataclass(frozen=True)
+class Regrid:
+    """Makes griddings of the same points with one choice made differently."""
+
+    y: Array
+    z: Array
+    usable: np.ndarray[tuple[int], np.dtype[np.bool_]]
+    row: np.ndarray[tuple[int], np.dtype[np.int64]] | None
+
+    def __call__(
+        self,
+        *,
+        usable: np.ndarray[tuple[int], np.dtype[np.bool_]] | None = None,
+        spacing: tuple[float, float] | None = None,
+        degree: int = 3,
+    ) -> Gridding:
+        """Gridding with other usable points, another largest spacing (along y and z, m) or another spline degree."""
+        chosen = self.usable if usable is None else usable
+        return make_gridding(self.y, self.z, chosen, row=self.row, spacing=spacing, degree=degree)
+
+
+def _vortices(nominal: Reduction) -> tuple[WakeParts, VortexSum]:
+    flow = nominal.flow
+    parts = find_parts(flow.v, flow.w, flow.grid, mask=nominal.region.mask, u=flow.u)
+    return parts, summarise(parts, flow.v, flow.w, nominal.reference.density)
+
+
+def _line(nominal: Reduction) -> WakeLine:
+    flow, reference = nominal.flow, nominal.reference
+    loss = reference.total_pressure - flow.total_pressure
+    return wake_line(flow.v, flow.w, flow.grid, reference.density, reference.speed, mask=nominal.region.mask, loss=loss)
+
+
+def _noises(
+    chain: Chain,
+    nominal: Reduction,
+    declared: Sequence[Source],
+    inputs: Mapping[str, InputLayout],
+    *,
+    seed: int,
+) -> tuple[tuple[Noise, ...], list[str]]:
+    """Noise of the crossflow as declared, else as the data show it; and what the data say about the declaration."""
+    noises = declared_noise(chain, nominal, declared, inputs, seed=seed)
+    if chain.gridding.kind != "uniform":
+        if noises:
+            return noises, []
+        return (), ["The noise of the crossflow is unknown, so its bias was not subtracted from the induced drag."]
+    estimates = estimated_noise(nominal, chain.gridding.filled)
+    v, w = (estimate.standard_deviation for estimate in estimates)
+    if not math.isfinite(v + w):
+        return noises, ["The noise of the crossflow cannot be estimated: too little outer flow is left."]
+    shown = f"v {v:.3g} m/s, w {w:.3g} m/s"
+    if not noises:
+        return (white_noise("noise in the data", v, w),), [
+            f"No noise of the crossflow was declared; its bias was subtracted with what the data show ({shown})."
+        ]
+    said = [math.sqrt(sum(noise.outer_variance[k] for noise in noises if noise.is_white)) for k in range(2)]
+    ratios = [found / max(stated, 1e-300) for found, stated in zip((v, w), said, strict=True)]
+    if max(ratios) > 1.5 or min(ratios) < 1 / 1.5:
+        declared_text = f"v {said[0]:.3g} m/s, w {said[1]:.3g} m/s"
+        return noises, [
+            f"The crossflow's point-to-point noise shown by the data ({shown}) is not the declared one ({declared_text});"
+            " check the sources."
+        ]
+    return noises, []
+
+
+def _expected(chain: Chain, nominal: Reduction) -> dict[str, float]:
+    """What each estimate reads above the primary one because of the bound vortex, by the estimate applied to its field."""
+    near = chain.frozen.near_field
+    zero = dict.fromkeys((estimate_of(row, method) for row, method in ESTIMATES), 0.0)
+    if near is None or not (np.any(near[0]) or np.any(near[1])):
+        return zero
+    flow, reference, cuts = nominal.flow, nominal.reference, chain.frozen.cuts
+    v0, w0 = nominal.crossflow_offset
+    energy = [
+        float(crossflow_energy(v - v0, w - w0, flow.grid, density=reference.density))
+        for v, w in ((flow.v, flow.w), (flow.v - near[0], flow.w - near[1]))
+    ]
+    zero[estimate_of("induced_drag", "energy_area")] = energy[0] - energy[1]
+    if cuts is not None:
+        here = evaluate_wake_line(cuts, flow.v, flow.w, reference.density, reference.speed)
+        there = evaluate_wake_line(cuts, flow.v - near[0], flow.w - near[1], reference.density, reference.speed)
+        zero[estimate_of("induced_drag", "wake_line")] = float(here.induced_drag - there.induced_drag)
+        zero[estimate_of("lift", "wake_line")] = float(here.lift - there.lift)
+    return zero
+
+
+def _terms(prepared: Prepared, survey: SurveyInput) -> tuple[NumericalTerm, ...]:
+    points = survey.points
+    state = prepared.chain.state(prepared.nominal.reference)
+    usable = np.isfinite(state.u) & np.isfinite(state.v) & np.isfinite(state.w)
+    for pressure in (state.total_pressure, state.static_pressure):
+        if pressure is not None:
+            usable &= np.isfinite(pressure)
+    method = {
+        estimate_of("induced_drag", "wake_line"): prepared.line.method_uncertainty,
+        estimate_of("lift", "wake_line"): prepared.line.lift_method_uncertainty,
+        estimate_of("induced_drag", "vortex_sum"): prepared.vortices.method_uncertainty,
+    }
+    return numerical_terms(
+        prepared.chain,
+        prepared.nominal,
+        outer=prepared.outer,
+        regrid=Regrid(points.y, points.z, usable, points.row),
+        method_uncertainty=method,
+    )
+
+
+def _propagate(
+    prepared: Prepared, terms: Sequence[NumericalTerm], *, draws: int, seed: int, progress: Progress | None
+) -> tuple[Samples, Budget]:
+    chain = prepared.chain
+
+    def evaluate(errors: dict[str, Array]) -> Array:
+        count = len(next(iter(errors.values())))
+        vectors = [chain.reduce({name: array[k] for name, array in errors.items()}).vector for k in range(count)]
+        return np.stack(vectors)
+
+    plain = run_montecarlo(
+        evaluate,
+        prepared.sources,
+        prepared.layouts,
+        names=OUTPUTS,
+        draws=draws,
+        seed=seed,
+        progress=progress,
+    )
+    budget = make_budget(
+        evaluate,
+        prepared.sources,
+        prepared.layouts,
+        plain,
+        seed=seed,
+        terms=terms,
+        draws=max(50, draws // 5),
+    )
+    return add_terms(plain, terms, seed=seed), budget
+
+
+def _ledger(
+    survey: SurveyInput,
+    prepared: Prepared,
+    samples: Samples | None,
+    budget: Budget | None,
+    terms: Sequence[NumericalTerm],
+    *,
+    command: str,
+) -> Ledger:
+    file, nominal = survey.survey, prepared.nominal
+    rows = tuple(row for row in (_row(name, nominal, samples) for name in ROWS) if row is not None)
+    names = [row.name for row in rows]
+    covariance = np.full((len(names), len(names)), np.nan)
+    if samples is not None:
+        at = [OUTPUTS.index(name) for name in names]
+        covariance = samples.covariance[np.ix_(at, at)]
+    facts = Facts(
+        vortices=prepared.vortices.vortices,
+        raw_spacing=max(prepared.chain.gridding.raw_spacing),
+        filled=prepared.chain.gridding.filled,
+        bias=prepared.chain.frozen.bias.get("induced_drag", math.nan),
+        loss_zero_uncertainty=prepared.outer.loss_zero_uncertainty,
+    )
+    return Ledger(
+        title=file.title,
+        compressible=nominal.reference.compressible,
+        rows=rows,
+        covariance=covariance,
+        plane=tables.plane_table(prepared.chain, nominal),
+        raw=survey.points,
+        survey_text=file.text,
+        estimates=_crosschecks(prepared, rows, samples),
+        comparisons=_comparisons(survey, prepared, rows),
+        budget=_budget_lines(budget, names),
+        checks=all_checks(nominal, facts),
+        notes=prepared.notes,
+        test=file.test.given(),
+        reference=tables.reference_scalars(nominal.reference),
+        model={} if file.model is None else file.model.given(),
+        wake_line=tables.wake_line_table(prepared.line),
+        vortices=tables.vortex_table(prepared.vortices.vortices),
+        span=tables.span_table(
+            span_loading(
+                nominal.vorticity,
+                nominal.forces.stream_function,
+                nominal.profile_integrand,
+                nominal.flow.grid,
+                nominal.reference,
+            )
+        ),
+        inputs=dict(survey.inputs),
+        provenance=tables.provenance(command),
+    )
+
+
+def _row(name: str, nominal: Reduction, samples: Samples | None) -> Row | None:
+    value = nominal.values[name]
+    if math.isnan(value):
+        return None
+    coefficient = nominal.values.get(coefficient_of(name), math.nan)
+    unknown = (math.nan, math.nan, math.nan, math.nan)
+    unit = ROW_TABLE[name].unit
+    if samples is None:
+        return Row(name, value, unit, *unknown, coefficient, math.nan, reason=_NO_SOURCE)
+    at = OUTPUTS.index(name)
+    reason = samples.unknown[at]
+    if reason:
+        return Row(name, value, unit, *unknown, coefficient, math.nan, reason=reason)
+    u = float(samples.standard_uncertainty[at])
+    half_width = float(samples.interval().half_width[at])
+    coefficient_u = float(samples.standard_uncertainty[OUTPUTS.index(coefficient_of(name))])
+    return Row(
+        name,
+        value,
+        unit,
+        standard_uncertainty=u,
+        expanded_uncertainty=half_width,
+        coverage_factor=half_width / u if u > 0 else math.nan,
+        degrees_of_freedom=float(samples.draws - 1),
+        coefficient=coefficient,
+        coefficient_standard_uncertainty=coefficient_u if math.isfinite(coefficient) else math.nan,
+    )
+
+
+def _crosschecks(prepared: Prepared, rows: Sequence[Row], samples: Samples | None) -> tuple[CrossCheck, ...]:
+    nominal = prepared.nominal
+    by_name = {row.name: row for row in rows}
+    found = []
+    for row, method in ESTIMATES:
+        name = estimate_of(row, method)
+        value = nominal.values[name]
+        if row not in by_name:
+            continue
+        reason = None
+        if math.isnan(value):
+            reason = prepared.line.reason if method == "wake_line" else prepared.vortices.reason
+            reason = reason or "it could not be evaluated on this plane"
+        u = difference_u = math.nan
+        if samples is not None:
+            at, primary = OUTPUTS.index(name), OUTPUTS.index(row)
+            u = float(samples.standard_uncertainty[at])
+            variance = samples.covariance[at, at] + samples.covariance[primary, primary]
+            expected_u = tables.EXPECTED_DOUBT * abs(prepared.expected[name])
+            difference_u = math.sqrt(max(variance - 2 * samples.covariance[at, primary], 0.0) + expected_u**2)
+        estimate = Estimate(
+            row,
+            method,
+            value,
+            standard_uncertainty=u,
+            expected_difference=prepared.expected[name],
+            reason=reason or (_NO_SOURCE if samples is None else None),
+        )
+        same = _SAME_ALGEBRA if method == "momentum_area" else None
+        found.append(check_estimate(estimate, by_name[row], difference_uncertainty=difference_u, same_algebra=same))
+    return tuple(found)
+
+
+def _comparisons(survey: SurveyInput, prepared: Prepared, rows: Sequence[Row]) -> tuple[Comparison, ...]:
+    by_name = {row.name: row for row in rows}
+    q = prepared.nominal.reference.dynamic_pressure
+    settings = prepared.chain.settings
+    found = []
+    for entry in survey.survey.compare:
+        if entry.row not in by_name:
+            raise InputError(
+                f"row {entry.row!r} is not in this ledger",
+                file=survey.survey.path,
+                place=f"[[compare]] ({entry.name}) row",
+                remedy=f"it has {', '.join(by_name)}",
+            )
+        scale = q * settings.reference_area * (settings.span if entry.row == "rolling_moment" else 1.0)
+        uncertainty = entry.standard_uncertainty
+        if uncertainty is None:
+            uncertainty = entry.coefficient_standard_uncertainty
+        found.append(
+            compare(
+                by_name[entry.row],
+                name=entry.name,
+                value=entry.value,
+                coefficient=entry.coefficient,
+                coefficient_scale=scale,
+                standard_uncertainty=math.nan if uncertainty is None else uncertainty,
+                as_measured=entry.as_measured or "whole",
+            )
+        )
+    return tuple(found)
+
+
+def _budget_lines(budget: Budget | None, names: Sequence[str]) -> tuple[BudgetLine, ...]:
+    if budget is None:
+        return ()
+    return tuple(
+        BudgetLine(line.row, line.source, line.standard_uncertainty, line.share)
+        for name in names
+        for line in budget.of(name)
+    )

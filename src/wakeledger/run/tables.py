@@ -1,0 +1,198 @@
+"""What the ledger keeps beside its rows: labelled arrays, notes and provenance."""
+
+from __future__ import annotations
+
+import platform
+from collections.abc import Sequence
+from datetime import UTC, datetime
+from importlib.metadata import PackageNotFoundError, version
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from wakeledger.core.flags import decode
+from wakeledger.core.grid import Array
+from wakeledger.core.plane import make_plane
+from wakeledger.intake.state import State, nonphysical
+from wakeledger.physics.fields.differences import axial_vorticity, crossflow_divergence
+from wakeledger.physics.loading.span import SpanLoading
+from wakeledger.physics.methods.wake_line import WakeLine
+from wakeledger.physics.vortices.identify import Vortex
+from wakeledger.run.chain import Chain, Reduction, default_grow
+from wakeledger.run.load import SurveyInput
+from wakeledger.stream.reference import Reference
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+#: Doubt about a predicted difference as a fraction of it (k = 1): the bound line is taken as straight and level.
+EXPECTED_DOUBT = 0.2
+_PACKAGES = ("wakeledger", "numpy", "scipy", "xarray", "netCDF4", "pandas", "pint", "pydantic")
+
+
+def plane_table(chain: Chain, nominal: Reduction) -> xr.Dataset:
+    """The reduced plane in wind axes with its mask and flags."""
+    flow, reference = nominal.flow, nominal.reference
+    flags = chain.gridding.flag.astype(np.int32)
+    fields = {
+        "u": flow.u,
+        "v": flow.v,
+        "w": flow.w,
+        "total_pressure": flow.total_pressure,
+        "static_pressure": flow.static_pressure,
+        "total_pressure_loss": reference.total_pressure - flow.total_pressure,
+        "axial_vorticity": axial_vorticity(flow.v, flow.w, flow.grid),
+        "crossflow_divergence": crossflow_divergence(flow.v, flow.w, flow.grid),
+        "stream_function": nominal.forces.stream_function,
+        "wake_mask": nominal.region.mask.astype(np.int8),
+        "flag": flags,
+    }
+    if reference.compressible:
+        fields["density"] = np.asarray(flow.density)
+        heat = 2 * reference.heat_capacity
+        fields["temperature"] = flow.total_temperature - (flow.u**2 + flow.v**2 + flow.w**2) / heat
+    return make_plane(flow.grid, fields, station=chain.settings.station)
+
+
+def _dataset(dimension: str, columns: Sequence[tuple[str, Array, str, str]]) -> xr.Dataset:
+    import xarray as xr
+
+    return xr.Dataset(
+        {
+            name: (dimension, np.asarray(values), {"units": unit, "long_name": meaning})
+            for name, values, unit, meaning in columns
+        }
+    )
+
+
+def wake_line_table(line: WakeLine) -> xr.Dataset | None:
+    """The wake's trace with its bound circulation and normal velocity; None where there is none."""
+    if line.reason is not None:
+        return None
+    return _dataset(
+        "part",
+        (
+            ("y", line.y, "m", "distance to starboard of the trace"),
+            ("z", line.z, "m", "height of the trace"),
+            ("arc_length", line.arc_length, "m", "length along the trace from the port end of its chain"),
+            ("chain", np.asarray(line.chain, dtype=np.int32), "1", "number of the chain a part belongs to"),
+            ("circulation", line.circulation, "m2 s-1", "circulation of the part, counter-clockwise seen from behind"),
+            ("bound_circulation", line.bound_circulation, "m2 s-1", "bound circulation to starboard of the part"),
+            (
+                "normal_velocity",
+                line.normal_velocity,
+                "m s-1",
+                "velocity normal to the trace, positive up for a flat wake",
+            ),
+            ("stream_function", line.stream_function, "m2 s-1", "mean stream function of the part from path integrals"),
+        ),
+    )
+
+
+def vortex_table(vortices: Sequence[Vortex]) -> xr.Dataset | None:
+    """The identified vortices from port to starboard; None where there are none."""
+    if not vortices:
+        return None
+    return _dataset(
+        "vortex",
+        (
+            ("y", np.array([x.y for x in vortices]), "m", "distance to starboard of the centre"),
+            ("z", np.array([x.z for x in vortices]), "m", "height of the centre"),
+            (
+                "circulation",
+                np.array([x.circulation for x in vortices]),
+                "m2 s-1",
+                "circulation, counter-clockwise seen from behind",
+            ),
+            ("core_radius", np.array([x.core_radius for x in vortices]), "m", "core length a of exp(-(r/a)^2)"),
+            ("u", np.array([x.u for x in vortices]), "m s-1", "axial velocity at the centre"),
+        ),
+    )
+
+
+def span_table(loading: SpanLoading) -> xr.Dataset:
+    """Distributions along the span."""
+    return _dataset(
+        "y",
+        (
+            ("y", loading.y, "m", "distance to starboard"),
+            ("bound_circulation", loading.bound_circulation, "m2 s-1", "bound circulation, positive for lift"),
+            ("lift_per_span", loading.lift_per_span, "N m-1", "lift per unit span"),
+            ("profile_drag_per_span", loading.profile_drag_per_span, "N m-1", "profile drag per unit span"),
+            ("induced_drag_per_span", loading.induced_drag_per_span, "N m-1", "induced drag per unit span"),
+        ),
+    )
+
+
+def reference_scalars(reference: Reference) -> dict[str, float]:
+    """The undisturbed stream as scalars, SI; unknown ones are left out."""
+    values = {
+        "speed": reference.speed,
+        "density": reference.density,
+        "static_pressure": reference.static_pressure,
+        "total_pressure": reference.total_pressure,
+        "dynamic_pressure": reference.dynamic_pressure,
+        "temperature": reference.temperature,
+        "mach": reference.mach,
+    }
+    return {name: float(value) for name, value in values.items() if np.isfinite(value)}
+
+
+def provenance(command: str) -> dict[str, str]:
+    """Package versions, command line and time."""
+    found = {"command": command, "time": datetime.now(UTC).isoformat(timespec="seconds")}
+    found["version python"] = platform.python_version()
+    for package in _PACKAGES:
+        try:
+            found[f"version {package}"] = version(package)
+        except PackageNotFoundError:
+            continue
+    return found
+
+
+def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -> list[str]:
+    """Sentences about what was done to the data, each choice named."""
+    gridding, region, grid = chain.gridding, nominal.region, nominal.flow.grid
+    ways = {
+        "uniform": "used as they stand",
+        "tensor": f"resampled by cubic splines to {1e3 * grid.dy:.3g} mm x {1e3 * grid.dz:.3g} mm",
+        "scattered": f"interpolated to {1e3 * grid.dy:.3g} mm x {1e3 * grid.dz:.3g} mm",
+    }
+    found = [f"{survey.points.n} points on a {gridding.kind} grid, {ways[gridding.kind]} ({grid.ny} x {grid.nz})."]
+    counts = decode(gridding.flag)
+    if gridding.filled.any():
+        found.append(f"{int(gridding.filled.sum())} places without a usable point were filled from their neighbours.")
+    if counts["averaged"]:
+        found.append(f"{counts['averaged']} places were measured more than once and averaged.")
+    impossible = int(np.count_nonzero(nonphysical(state)))
+    if impossible:
+        found.append(f"{impossible} points have no real flow state and count as missing.")
+    found.append(
+        f"The wake region is bounded at {chain.settings.level:g} times the noise of the smoothed loss and vorticity and"
+        f" grown by {1e3 * (chain.settings.grow if chain.settings.grow is not None else default_grow(gridding)):.3g} mm;"
+        f" it covers {region.mask.mean():.0%} of the window."
+    )
+    if chain.settings.include or chain.settings.exclude:
+        found.append("Places were included in or excluded from the wake region by the survey file.")
+    found.append(
+        f"The total pressure was zeroed in the outer flow: {-nominal.loss_zero:+.3g} Pa were taken out"
+        f" ({_counts(nominal.loss_zero * region.mask.sum() * grid.cell_area, nominal, chain)})."
+    )
+    pitch, yaw = (np.degrees(np.arctan2(nominal.crossflow_offset[k], nominal.reference.speed)) for k in (1, 0))
+    found.append(
+        f"Outside the wake the flow is turned by {pitch:+.3f} deg in pitch and {yaw:+.3f} deg in yaw; that was taken out"
+        " of the energy form and the momentum balance, and the vorticity form does not see it."
+    )
+    if survey.survey.plane.primary == "velocity" and state.static_pressure is None and state.total_pressure is None:
+        found.append("No pressure was measured: the static pressure follows from the crossflow's momentum balance.")
+    if nominal.invalid_area > 0:
+        found.append(
+            f"Over {1e4 * nominal.invalid_area:.3g} cm2 the total pressure lies below the stream's static pressure; there"
+            " entropy_area takes the flow as brought to rest."
+        )
+    return found
+
+
+def _counts(force: float, nominal: Reduction, chain: Chain) -> str:
+    coefficient = force / (nominal.reference.dynamic_pressure * chain.settings.reference_area)
+    return f"{1e4 * coefficient:+.2f} counts" if np.isfinite(coefficient) else f"{force:+.3g} N"
