@@ -129,9 +129,12 @@ class WakeLine:
         ψ̄_k, m²/s.
     drag : ndarray, shape (parts,)
         ½ρΓ_kψ̄_k, N; the sum is the induced drag, the share of one part depends on the constant of ψ.
-    bound_circulation, normal_velocity : ndarray, shape (parts,)
-        Γ_b, m²/s, and V_n = −dψ̄/ds, m/s, at the cut between a part and the next of its chain; V_n is NaN at the end
-        of a chain.
+    bound_circulation : ndarray, shape (parts,)
+        Γ_b at the cut between a part and the next of its chain, m²/s; Σ Γ_b(ψ̄_k+1 − ψ̄_k) along the chains is the drag
+        over ½ρ where the net circulation of each is zero.
+    normal_velocity : ndarray, shape (parts,)
+        Measured V_n at the same cuts, m/s, upward for a flat wake, less the offset; NaN at the end of a chain. On the
+        trace it exceeds −dψ̄/ds by the wake's finite thickness.
     cuts : WakeCuts or None
         To evaluate other fields with.
     reason : str or None
@@ -427,9 +430,6 @@ def wake_line(
         trace = wake_trace(np.where(cuts.cells, cell_gamma, 0.0), cuts.cells, grid, loss=loss)
     circulation = trace.sums(cell_gamma)
     mean_psi = _part_mean(trace, cell_gamma, cell_psi)
-    next_in_chain = np.append(np.diff(trace.chain) == 0, False)
-    step = np.append(np.diff(trace.arc_length), math.nan)
-    slope = np.append(np.diff(mean_psi), math.nan) / np.where(next_in_chain, step, math.nan)
     return WakeLine(
         induced_drag=float(forces.induced_drag),
         lift=float(forces.lift),
@@ -448,7 +448,7 @@ def wake_line(
         stream_function=mean_psi,
         drag=0.5 * density * trace.sums(cell_gamma * cell_psi),
         bound_circulation=trace.bound_circulation(circulation),
-        normal_velocity=-slope,
+        normal_velocity=_normal_velocity(trace, v - forces.offset_v, w - forces.offset_w, grid),
         cuts=cuts,
         reason=None,
     )
@@ -466,6 +466,18 @@ def _in_window(fields: PathFields, values: Array, cuts: WakeCuts) -> Array:
     )
     window[first_z : first_z + fields.z.size, first_y : first_y + fields.y.size] = values
     return window
+
+
+def _normal_velocity(trace: WakeTrace, v: Array, w: Array, grid: UniformGrid) -> Array:
+    """Crossflow across the trace halfway to the next part, along n = (−dz/ds, dy/ds)."""
+    along_y, along_z = np.diff(trace.y), np.diff(trace.z)
+    middle_y, middle_z = trace.y[:-1] + along_y / 2, trace.z[:-1] + along_z / 2
+    place = np.stack([(middle_z - grid.z0) / grid.dz, (middle_y - grid.y0) / grid.dy])
+    v_there, w_there = (ndimage.map_coordinates(field, place, order=3, mode="nearest") for field in (v, w))
+    same_chain = np.diff(trace.chain) == 0
+    step = np.where(same_chain, np.hypot(along_y, along_z), math.nan)
+    normal: Array = np.append((w_there * along_y - v_there * along_z) / step, math.nan)
+    return normal
 
 
 def _part_mean(trace: WakeTrace, circulation: Array, quantity: Array) -> Array:
