@@ -171,7 +171,7 @@ def mach_from_pitot(ratio: Number, *, gamma: float = GAMMA) -> Number:
 
     target = np.where(supersonic, ratio, pitot_pressure_ratio(2.0, gamma=gamma))
     start = np.where(supersonic, np.sqrt(target / pitot_pressure_ratio(1.0, gamma=gamma)), 2.0)
-    solved = optimize.newton(  # type: ignore[no-untyped-call]
+    solved = optimize.newton(
         lambda guess: pitot_pressure_ratio(np.asarray(guess), gamma=gamma) / target - 1.0, start, tol=1e-13
     )
     result: Number = _like(np.where(supersonic, solved, isentropic))
