@@ -76,12 +76,12 @@ def wakes():
 
 
 @pytest.mark.parametrize("name", WAKES)
-@pytest.mark.parametrize(("ratio", "tolerance"), [(0.5, 5e-5), (0.8, 1e-3), (1.0, 3e-3)])
+@pytest.mark.parametrize(("ratio", "tolerance"), [(0.5, 2e-5), (0.8, 5e-4), (1.0, 2e-3)])
 def test_drag_and_lift_are_those_of_the_elements(wakes, name, ratio, tolerance):
     elements = wakes[name]
     grid, v, w, mask = survey(elements, ratio)
     line = wake_line(v, w, grid, DENSITY, SPEED, mask=mask)
-    # Measured: 5e-6, 2e-4, 1e-3. The target is 5e-3 at 0.5.
+    # Measured at worst 4e-6, 1.5e-4, 6e-4; the target is 5e-3 at 0.5.
     assert line.induced_drag == pytest.approx(elements.induced_drag(density=DENSITY), rel=tolerance)
     # The impulse needs only the vorticity to be inside; the mask cuts it at 1e-3 of its peak.
     assert line.lift == pytest.approx(elements.lift(speed=SPEED, density=DENSITY), rel=1e-5)
@@ -222,7 +222,7 @@ def noisy_draws(v, w, sigma, draws, seed):
 
 
 @pytest.mark.parametrize("name", ["flat", "rolled up", "asymmetric", "with tail"])
-def test_noise_scatters_half_as_much_as_in_the_area_form_and_its_bias_is_known(wakes, name):
+def test_noise_scatters_less_than_in_the_area_form_and_its_bias_is_known(wakes, name):
     elements = wakes[name]
     grid, v, w, mask = survey(elements, 0.63)
     exact = elements.induced_drag(density=DENSITY)
