@@ -75,7 +75,9 @@ class LiftingLine:
             raise ValueError(f"x = {x} m is nearer than five core lengths ({_NEAREST * core} m) to the bound line")
         yy, zz = np.broadcast_arrays(np.asarray(y, float), np.asarray(z, float))
         points_y, points_z = yy.ravel(), zz.ravel()
-        u, v, w = (np.zeros(points_y.size) for _ in range(3))
+        u: Array = np.zeros(points_y.size)
+        v: Array = np.zeros(points_y.size)
+        w: Array = np.zeros(points_y.size)
         if x > 0:
             # Behind the line: endless vortices, less what is missing because they begin at the line.
             v, w = (np.array(component) for component in e.velocity(points_y, points_z))

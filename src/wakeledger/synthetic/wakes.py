@@ -25,6 +25,10 @@ from wakeledger.synthetic.elements import GaussianElements
 from wakeledger.synthetic.lifting_line import LiftingLine
 from wakeledger.synthetic.losses import GaussianLosses, no_losses
 
+#: Relative change of profile and residual drag at which the quadrature's spacing is fine enough.
+_CLOSE = 1e-10
+_REFINEMENTS = 4
+
 
 @dataclass(frozen=True, eq=False)
 class FlowState:
@@ -75,7 +79,7 @@ class Truth:
     rolling_moment : float
         −½ρU∬(y² + z²)ξ dA about the x axis, positive starboard wing down, N m.
     quadrature_error : float
-        Change of the total when the quadrature's spacing is reduced by a fifth, N.
+        Change of the total with the last refinement of the quadrature, N.
     """
 
     profile_drag: float
@@ -224,8 +228,13 @@ class SyntheticWake:
     def truth(self) -> Truth:
         """Exact rows: closed forms, and quadrature of the compact integrands to about 1e-9."""
         ref = self.reference
-        fine = self._quadrature(1 / 3)
-        coarse = self._quadrature(1 / 2.5)
+        fraction = 1 / 2.5
+        coarse, fine = self._quadrature(fraction), self._quadrature(fraction / 1.3)
+        for _ in range(_REFINEMENTS):
+            if abs(sum(fine) - sum(coarse)) <= _CLOSE * (abs(fine[0]) + abs(fine[1])):
+                break
+            fraction /= 1.5
+            coarse, fine = fine, self._quadrature(fraction / 1.3)
         induced = self.elements.induced_drag(density=ref.density)
         return Truth(
             profile_drag=fine[0],
