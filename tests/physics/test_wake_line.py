@@ -364,6 +364,10 @@ def test_unknown_values_say_why(wakes):
     hole = v.copy()
     hole[5, 5] = np.nan
     assert "not finite" in wake_line(hole, w, grid, DENSITY, SPEED, mask=mask).reason
+    # A draw whose region is empty has no wake: nothing, not an error, within a Monte Carlo.
+    nothing = evaluate(find_cuts(v, w, grid, mask=mask), v, w, DENSITY, SPEED, mask=np.zeros_like(mask))
+    assert nothing.induced_drag == 0
+    assert nothing.lift == 0
     with pytest.raises(ValueError, match="mask, or cuts"):
         wake_line(v, w, grid, DENSITY, SPEED)
     with pytest.raises(ValueError, match="has shape"):

@@ -135,6 +135,8 @@ def _block(cells: Mask) -> tuple[slice, slice]:
     everywhere: Mask = np.asarray(cells.reshape(-1, *cells.shape[-2:]).any(axis=0), dtype=bool)
     rows, columns = np.flatnonzero(everywhere.any(axis=1)), np.flatnonzero(everywhere.any(axis=0))
     nz, ny = everywhere.shape
+    if rows.size == 0:
+        return slice(0, nz), slice(0, ny)
     return (
         slice(max(0, int(rows[0]) - 1), min(nz, int(rows[-1]) + 2)),
         slice(max(0, int(columns[0]) - 1), min(ny, int(columns[-1]) + 2)),
