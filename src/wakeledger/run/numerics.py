@@ -6,7 +6,7 @@ spacing of the points, the spline between them, the filling of gaps, the zeros t
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -25,11 +25,18 @@ RESAMPLING = "spline between the points"
 GAPS = "filled points"
 LOSS_ZERO = "zero of the total pressure"
 OFFSET_ZERO = "zero of the flow angles"
+METHOD = "choices inside {}"
 
 #: Order of accuracy claimed when a decimated grid is extrapolated; between h/a = 0.5 and 1 the observed order is 4 to 8.
 ORDER = 3.0
 #: Factors on the region's growth that bound the plausible choices.
 SWEEP = (0.5, 2.0)
+#: Estimates that integrate over the same region as a row, and so share its doubt.
+_SAME_REGION = {
+    estimate_of("profile_drag", "entropy_area"): "profile_drag",
+    estimate_of("induced_drag", "wake_line"): "induced_drag",
+    estimate_of("lift", "wake_line"): "lift",
+}
 #: Outputs that are evaluated on geometry frozen at the nominal grid: their own method uncertainty covers them.
 _FROZEN = {
     estimate_of("induced_drag", "wake_line"),
@@ -44,7 +51,8 @@ def numerical_terms(
     *,
     outer: OuterFlow,
     regrid: Callable[..., Gridding],
-    method_uncertainty: dict[str, float],
+    method_uncertainty: Mapping[str, float],
+    noise: Sequence[Mapping[str, Array]] = (),
 ) -> tuple[NumericalTerm, ...]:
     """All numerical terms of one plane.
 
@@ -58,15 +66,17 @@ def numerical_terms(
         Zeros found in the outer flow, with their uncertainties.
     regrid : callable
         Makes a gridding of the same points: ``regrid(usable=..., degree=..., spacing=...)``.
-    method_uncertainty : dict of str to float
+    method_uncertainty : mapping of str to float
         Standard uncertainty that an estimate's own method adds, by output, N.
+    noise : sequence of mapping
+        A few draws of the random errors alone, to tell the region's own effect from theirs.
 
     Returns
     -------
     tuple of NumericalTerm
         Over `wakeledger.run.chain.OUTPUTS`; terms that do not apply are left out.
     """
-    terms = [_mask_term(chain, nominal), _resolution_term(chain, nominal)]
+    terms = [_mask_term(chain, nominal, noise), _resolution_term(chain, nominal)]
     if chain.gridding.kind == "tensor":
         terms.append(_resampling_term(chain, nominal, regrid))
     if chain.gridding.filled.any():
@@ -83,7 +93,7 @@ def numerical_terms(
     for name, value in method_uncertainty.items():
         vector = np.zeros(len(OUTPUTS))
         vector[OUTPUTS.index(name)] = value if np.isfinite(value) else 0.0
-        terms.append(NumericalTerm(f"method of {name}", vector))
+        terms.append(NumericalTerm(METHOD.format(name), vector))
     return tuple(term for term in terms if term is not None)
 
 
@@ -96,11 +106,27 @@ def _deviation(chain: Chain, nominal: Reduction, vary: Variation) -> Array:
     return _difference(chain.reduce(vary=vary).vector, nominal)
 
 
-def _mask_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
-    smaller, larger = (_deviation(chain, nominal, Variation(grow_factor=factor)) for factor in SWEEP)
+def _mask_term(chain: Chain, nominal: Reduction, noise: Sequence[Mapping[str, Array]]) -> NumericalTerm:
+    """What a narrower or a wider region would have given, less what the noise of the added ring alone makes of it."""
+    masks = [chain.reduce(vary=Variation(grow_factor=factor), estimates=False).region.mask for factor in SWEEP]
+    masks.append(nominal.region.mask)
+
+    def sweep(errors: Mapping[str, Array]) -> Array:
+        smaller, larger, same = (
+            chain.reduce(errors, vary=Variation(mask=mask), estimates=False).vector for mask in masks
+        )
+        return np.nan_to_num(np.stack([smaller - same, larger - same]))
+
+    found = sweep({})
+    if noise:
+        by_noise = np.mean([np.square(sweep(errors) - found) for errors in noise], axis=0)
+        found = np.sign(found) * np.sqrt(np.maximum(np.square(found) - by_noise, 0.0))
     # One latent choice of the edge moves all outputs together, each in the direction in which it grows.
-    size = np.maximum(np.abs(smaller), np.abs(larger))
-    return NumericalTerm(MASK, np.where(larger - smaller < 0, -size, size) / np.sqrt(3), "rectangular")
+    size = np.abs(found).max(axis=0)
+    vector = np.where(found[1] - found[0] < 0, -size, size) / np.sqrt(3)
+    for follower, leader in _SAME_REGION.items():
+        vector[OUTPUTS.index(follower)] = vector[OUTPUTS.index(leader)]
+    return NumericalTerm(MASK, vector, "rectangular")
 
 
 def _resolution_term(chain: Chain, nominal: Reduction) -> NumericalTerm:

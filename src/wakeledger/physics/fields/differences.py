@@ -11,7 +11,7 @@ from __future__ import annotations
 from functools import lru_cache
 
 import numpy as np
-from scipy import sparse
+from scipy import ndimage, sparse
 
 from wakeledger.core.grid import Array, UniformGrid
 
@@ -70,37 +70,35 @@ def difference_matrix(n: int, order: int = ORDER) -> sparse.csr_array:
 
 def ddy(field: Array, grid: UniformGrid, *, order: int = ORDER) -> Array:
     """Derivative along y of a field of shape (..., nz, ny), in the field's unit per metre."""
-    return _along_last(np.asarray(field), order) / grid.dy
+    return _along(np.asarray(field, dtype=float), -1, order) / grid.dy
 
 
 def ddz(field: Array, grid: UniformGrid, *, order: int = ORDER) -> Array:
     """Derivative along z of a field of shape (..., nz, ny), in the field's unit per metre."""
-    swapped = np.swapaxes(np.asarray(field), -1, -2)
-    return np.swapaxes(_along_last(swapped, order), -1, -2) / grid.dz
+    return _along(np.asarray(field, dtype=float), -2, order) / grid.dz
 
 
-def _along_last(field: Array, order: int) -> Array:
-    n = field.shape[-1]
+@lru_cache(maxsize=32)
+def _ends(n: int, order: int) -> tuple[Array, Array, Array, int]:
+    """Interior stencil, the rows of the matrix near either end as dense blocks, and how many rows those are."""
+    weights = _CENTRAL[order]
+    edge = min(len(weights), (n + 1) // 2)
+    width = min(n, edge + len(weights) + 1)
+    matrix = difference_matrix(n, order)
+    stencil = np.array([*(-x for x in reversed(weights)), 0.0, *weights])
+    return stencil, matrix[:edge, :width].toarray(), matrix[n - edge :, n - width :].toarray(), edge
+
+
+def _along(field: Array, axis: int, order: int) -> Array:
+    n = field.shape[axis]
     if n < 3:
         raise ValueError(f"a derivative needs at least 3 points along each axis, {n} were given")
-    weights = _CENTRAL[order]
-    reach = len(weights)
-    out = np.empty(field.shape)
-    if n > 2 * reach:
-        inner = out[..., reach : n - reach]
-        np.subtract(field[..., reach + 1 : n - reach + 1], field[..., reach - 1 : n - reach - 1], out=inner)
-        inner *= weights[0]
-        for k, weight in enumerate(weights[1:], start=2):
-            inner += weight * (field[..., reach + k : n - reach + k] - field[..., reach - k : n - reach - k])
-        edge = reach
-    else:
-        edge = (n + 1) // 2
-    matrix = difference_matrix(n, order)
-    width = min(n, edge + reach + 1)
-    left = matrix[:edge, :width].toarray()
-    right = matrix[n - edge :, n - width :].toarray()
-    out[..., :edge] = field[..., :width] @ left.T
-    out[..., n - edge :] = field[..., n - width :] @ right.T
+    stencil, first, last, edge = _ends(n, order)
+    out: Array = ndimage.correlate1d(field, stencil, axis=axis, mode="nearest")
+    # The ends are done again with the shorter stencils that fit there.
+    source, target = (field, out) if axis == -1 else (np.swapaxes(field, -1, -2), np.swapaxes(out, -1, -2))
+    target[..., :edge] = source[..., : first.shape[1]] @ first.T
+    target[..., n - edge :] = source[..., n - last.shape[1] :] @ last.T
     return out
 
 

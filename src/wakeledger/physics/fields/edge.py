@@ -8,11 +8,12 @@ derivative of the data and no Poisson solve enters.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
-from scipy.integrate import cumulative_simpson
 
 from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.physics.fields.path_integrals import running_integral
 
 #: Multipoles of the exterior field whose fit fixes the constant of ψ when there is a net circulation.
 _MULTIPOLES = 6
@@ -59,56 +60,61 @@ def edge_integrals(v: Array, w: Array, grid: UniformGrid) -> Edge:
     -------
     Edge
     """
-    y, z = grid.y, grid.z
+    shape = _edge_shape(grid)
     # Side by side: tangential and outward velocity along the direction of travel.
     sides = (
-        (v[..., 0, :], -w[..., 0, :], grid.dy, y, np.full(grid.ny, z[0])),
-        (w[..., :, -1], v[..., :, -1], grid.dz, np.full(grid.nz, y[-1]), z),
-        (-v[..., -1, ::-1], w[..., -1, ::-1], grid.dy, y[::-1], np.full(grid.ny, z[-1])),
-        (-w[..., ::-1, 0], -v[..., ::-1, 0], grid.dz, np.full(grid.nz, y[0]), z[::-1]),
+        (v[..., 0, :], -w[..., 0, :], grid.dy),
+        (w[..., :, -1], v[..., :, -1], grid.dz),
+        (-v[..., -1, ::-1], w[..., -1, ::-1], grid.dy),
+        (-w[..., ::-1, 0], -v[..., ::-1, 0], grid.dz),
     )
-    flux_parts, psi_parts = [], []
-    along, across = np.zeros(v.shape[:-2]), np.zeros(v.shape[:-2])
-    for tangential, outward, step, _, _ in sides:
+    psi_parts = []
+    circulation, outflow = np.zeros(v.shape[:-2]), np.zeros(v.shape[:-2])
+    for tangential, outward, step in sides:
         # Counter-clockwise, ψ grows by the outflow: dψ = v dz − w dy = v_n ds.
-        growth = cumulative_simpson(outward, dx=step, axis=-1, initial=0.0)
-        psi_parts.append(across[..., None] + growth)
-        across = across + growth[..., -1]
-        circulation = cumulative_simpson(tangential, dx=step, axis=-1, initial=0.0)[..., -1]
-        along = along + circulation
-        flux_parts.append((tangential, step))
-    ys = np.concatenate([side[3] for side in sides])
-    zs = np.concatenate([side[4] for side in sides])
+        running = step * running_integral(tangential.shape[-1])
+        growth = outward @ running.T
+        psi_parts.append(outflow[..., None] + growth)
+        outflow = outflow + growth[..., -1]
+        circulation = circulation + tangential @ running[-1]
     psi = np.concatenate(psi_parts, axis=-1)
-    travelled = np.concatenate([[0.0], np.cumsum(np.hypot(np.diff(ys), np.diff(zs)))])
     # A net outflow (σ ≠ 0 near the model, or noise) leaves ψ many-valued: spread it evenly along the edge.
-    psi = psi - across[..., None] * (travelled / travelled[-1])
-    psi = psi - _exterior_constant(psi, along, ys, zs)[..., None]
+    psi = psi - outflow[..., None] * shape.travelled
+    constant = psi @ shape.constant + circulation * shape.logarithm
+    psi = psi - constant[..., None]
     energy = np.zeros(v.shape[:-2])
     start = 0
-    for tangential, step in flux_parts:
+    for tangential, _, step in sides:
         stop = start + tangential.shape[-1]
-        energy = energy + _simpson(psi[..., start:stop] * tangential, step)
+        energy = energy + (psi[..., start:stop] * tangential) @ (step * running_integral(stop - start)[-1])
         start = stop
-    return Edge(ys, zs, along, across, psi, energy)
+    return Edge(shape.y, shape.z, circulation, outflow, psi, energy)
 
 
-def _simpson(values: Array, step: float) -> Array:
-    total: Array = cumulative_simpson(values, dx=step, axis=-1, initial=0.0)[..., -1]
-    return total
+@dataclass(frozen=True, eq=False)
+class _EdgeShape:
+    """Places along the edge, the share of it travelled at each, and the functional that gives ψ its constant."""
+
+    y: Array
+    z: Array
+    travelled: Array
+    constant: Array
+    logarithm: float
 
 
-def _exterior_constant(psi: Array, circulation: Array, ys: Array, zs: Array) -> Array:
-    """Constant c in ψ = c − (Γ/2π) ln r + decaying multipoles, by least squares along the edge."""
-    centre_y, centre_z = (ys.min() + ys.max()) / 2, (zs.min() + zs.max()) / 2
-    scale = np.hypot(ys.max() - centre_y, zs.max() - centre_z)
+@lru_cache(maxsize=8)
+def _edge_shape(grid: UniformGrid) -> _EdgeShape:
+    """The constant c in ψ = c − (Γ/2π) ln r + decaying multipoles is linear in ψ: the first row of a least-squares fit."""
+    y, z = grid.y, grid.z
+    ys = np.concatenate([y, np.full(grid.nz, y[-1]), y[::-1], np.full(grid.nz, y[0])])
+    zs = np.concatenate([np.full(grid.ny, z[0]), z, np.full(grid.ny, z[-1]), z[::-1]])
+    travelled = np.concatenate([[0.0], np.cumsum(np.hypot(np.diff(ys), np.diff(zs)))])
+    centre_y, centre_z = (y[0] + y[-1]) / 2, (z[0] + z[-1]) / 2
     distance = np.hypot(ys - centre_y, zs - centre_z)
     angle = np.arctan2(zs - centre_z, ys - centre_y)
     columns = [np.ones_like(angle)]
     for n in range(1, _MULTIPOLES + 1):
-        decay = (scale / distance) ** n
+        decay = (distance.max() / distance) ** n
         columns += [decay * np.cos(n * angle), decay * np.sin(n * angle)]
-    pseudo_inverse = np.linalg.pinv(np.stack(columns, axis=1))
-    target = psi + circulation[..., None] / (2 * np.pi) * np.log(distance)
-    constant: Array = target @ pseudo_inverse[0]
-    return constant
+    constant: Array = np.linalg.pinv(np.stack(columns, axis=1))[0]
+    return _EdgeShape(ys, zs, travelled / travelled[-1], constant, float(constant @ np.log(distance)) / (2 * np.pi))
