@@ -113,7 +113,7 @@ def test_observed_order_of_convergence(order, ratios, record_property):
     coarse, fine = (abs(errors(FLAT["pair"], ratio, order=order)[0]) for ratio in ratios)
     observed = np.log(coarse / fine) / np.log(ratios[0] / ratios[1])
     record_property("observed_order", round(float(observed), 2))
-    # Measured 1.98, 3.88, 5.58 and 9.22. Gaussians leave the asymptotic range upwards with h/a: the higher the order, the later it is reached.
+    # Measured 1.98, 3.88, 5.58 and 9.22; the higher the order, the smaller h/a must be to show it.
     assert observed == pytest.approx(order, abs=0.15 * order)
 
 
