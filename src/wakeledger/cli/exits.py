@@ -25,7 +25,7 @@ def run(command: click.Command, arguments: Sequence[str]) -> int:
     Parameters
     ----------
     command : click.Command
-        The command; its function returns the exit status.
+        The command; its function returns the exit status, and finds the command line as the context's object.
     arguments : sequence of str
         The command line behind the program's name.
 
@@ -35,7 +35,8 @@ def run(command: click.Command, arguments: Sequence[str]) -> int:
         0 done; 1 done, but a check failed; 2 the input is wrong; 3 the program itself failed; 130 interrupted.
     """
     try:
-        status = command.main(args=list(arguments), prog_name="wakeledger", standalone_mode=False)
+        line = f"wakeledger {shlex.join(arguments)}"
+        status = command.main(args=list(arguments), prog_name="wakeledger", standalone_mode=False, obj=line)
         sys.stdout.flush()
     except click.exceptions.NoArgsIsHelpError as error:
         click.echo(error.format_message(), err=True)

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import shlex
-import sys
 from pathlib import Path
 
 import click
@@ -28,8 +26,15 @@ def _formats(_context: click.Context, _parameter: click.Parameter, given: str | 
 @click.option("--figures", callback=_formats, metavar="pdf,png,svg", help="Also write the figures in these formats.")
 @click.option("--overwrite", is_flag=True, help="Replace existing products.")
 @click.option("--quiet", is_flag=True, help="Print neither progress nor the ledger.")
+@click.pass_obj
 def reduce(
-    survey: Path, out: Path | None, draws: int | None, figures: tuple[str, ...], overwrite: bool, quiet: bool
+    command: str,
+    survey: Path,
+    out: Path | None,
+    draws: int | None,
+    figures: tuple[str, ...],
+    overwrite: bool,
+    quiet: bool,
 ) -> int:
     """Reduce a survey to its drag ledger.
 
@@ -39,14 +44,13 @@ def reduce(
     """
     from wakeledger.present.products import require_free, write_products
 
-    directory = out if out is not None else survey.with_name(f"{survey.stem}-ledger")
+    directory = out if out is not None else survey.parent / f"{survey.stem}-ledger"
     require_free(directory, overwrite=overwrite)
 
     from wakeledger.run.survey import load
     from wakeledger.run.survey import reduce as reduce_survey
 
     loaded = load(survey)
-    command = f"wakeledger {shlex.join(sys.argv[1:])}"
     with screen.progress_bar("Monte Carlo", quiet=quiet) as progress:
         ledger = reduce_survey(loaded, draws=draws, progress=progress, command=command)
     names = write_products(ledger, directory, figures=figures, overwrite=overwrite)

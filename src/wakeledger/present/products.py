@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
+import os
 import shutil
-import tempfile
 from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -104,16 +104,20 @@ def write_products(
     require_free(directory, overwrite=overwrite)
     made: list[Path] = []
     try:
-        for missing in (*reversed(directory.parents), directory):
+        for missing in reversed(directory.parents):
             if not missing.exists():
                 missing.mkdir()
                 made.append(missing)
-        aside = Path(tempfile.mkdtemp(dir=directory, prefix=".", suffix=".part"))
+        home = directory if directory.is_dir() else directory.parent
+        aside = home / f".wakeledger-{os.getpid()}.part"
+        fresh = aside / "fresh"
         try:
-            fresh, earlier = aside / "fresh", aside / "earlier"
-            fresh.mkdir()
+            fresh.mkdir(parents=True)
             names = _build(ledger, fresh, figures)
-            _exchange(directory, fresh, earlier, names, existing_products(directory))
+            if directory.is_dir():
+                _exchange(directory, fresh, aside / "earlier", names, existing_products(directory))
+            else:
+                fresh.rename(directory)
         finally:
             shutil.rmtree(aside, ignore_errors=True)
     except BaseException as error:

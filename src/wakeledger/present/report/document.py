@@ -83,7 +83,7 @@ def report_html(ledger: Ledger) -> str:
         trim_blocks=True,
         lstrip_blocks=True,
     )
-    environment.filters |= {"words": words, "unit": unit_text, "digits": _digits}
+    environment.filters |= {"words": words, "unit": unit_text, "digits": _digits, "cell": _cell}
     pictures = {name: _picture(name, figure) for name, figure in draw(ledger).items()}
     return environment.get_template("report.html").render(
         ledger=ledger,
@@ -118,6 +118,15 @@ def _scalar_units() -> dict[str, str]:
 
 def _digits(value: float, digits: int = 4) -> str:
     return significant(value, digits) if math.isfinite(value) else "–"
+
+
+def _cell(value: object) -> str:
+    """One entry of a table whose columns the report does not know: a number, a count or a word."""
+    try:
+        number = float(value)  # type: ignore[arg-type]
+    except (TypeError, ValueError):
+        return str(value)
+    return str(int(number)) if number.is_integer() and abs(number) < 1e6 else _digits(number)
 
 
 def _shown(figure: str) -> str:

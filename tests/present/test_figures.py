@@ -1,0 +1,189 @@
+"""Figures hold what they are meant to hold, and their files are the same bytes each time."""
+
+import dataclasses
+import io
+import math
+import subprocess
+import sys
+
+import numpy as np
+import pytest
+from matplotlib.image import AxesImage
+
+from wakeledger.core.flags import Flag
+from wakeledger.present import figures
+from wakeledger.present.figures import gallery
+from wakeledger.present.figures.crosschecks import offsets
+
+
+@pytest.fixture(scope="module")
+def drawn(ledger):
+    return figures.draw(ledger)
+
+
+def image_of(figure):
+    return next(child for child in figure.axes[0].get_children() if isinstance(child, AxesImage))
+
+
+def labels(axes):
+    return axes.get_xlabel(), axes.get_ylabel()
+
+
+def test_every_figure_is_drawn(drawn):
+    assert list(drawn) == [
+        "total_pressure_loss", "axial_vorticity", "axial_velocity", "span_loading", "estimates", "budget",
+    ]  # fmt: skip
+
+
+@pytest.mark.parametrize("name", ["total_pressure_loss", "axial_vorticity", "axial_velocity"])
+def test_maps_are_seen_from_behind_in_equal_scale_with_units(drawn, ledger, name):
+    axes = drawn[name].axes[0]
+    assert axes.get_aspect() == 1.0
+    left, right = axes.get_xlim()
+    low, high = axes.get_ylim()
+    assert left < right and low < high  # y to starboard is to the right, z is up
+    assert labels(axes) == ("y to starboard, m (seen from behind)", "z up, m")
+    image = image_of(drawn[name])
+    assert image.origin == "lower"
+    assert image.get_rasterized()
+    # Each cell is drawn around its own point: the edges lie half a cell outside the outermost points.
+    assert image.get_extent() == pytest.approx([-0.755, 0.755, -0.305, 0.305], rel=1e-9)
+    bar = drawn[name].axes[1]
+    assert bar.get_ylabel() in ("total-pressure loss / q", "axial vorticity, 1/s", "u / U − 1")
+
+
+def test_diverging_colours_are_centred_at_zero(drawn):
+    for name in ("axial_vorticity", "axial_velocity"):
+        low, high = image_of(drawn[name]).get_clim()
+        assert low == -high < 0
+
+
+def test_maps_show_the_fields_unflipped(drawn, ledger):
+    shown = image_of(drawn["axial_vorticity"]).get_array()
+    assert np.array_equal(shown, ledger.plane["axial_vorticity"].values)
+    starboard = ledger.plane["y"].values > 0.4
+    assert shown[:, starboard].sum() > 0  # the starboard tip vortex turns counter-clockwise for lift up
+
+
+def test_outline_vortices_trace_and_gaps_are_named(drawn):
+    texts = [text.get_text() for text in drawn["axial_vorticity"].legends[0].get_texts()]
+    assert texts == ["wake region", "no trusted measurement", "trace of the wake", "vortex centre and core radius"]
+
+
+def test_hatched_boxes_cover_exactly_the_untrusted_cells(ledger, drawn):
+    from matplotlib.collections import PatchCollection
+
+    collections = [c for c in drawn["total_pressure_loss"].axes[0].collections if isinstance(c, PatchCollection)]
+    area = sum(np.ptp(path.vertices[:, 0]) * np.ptp(path.vertices[:, 1]) for c in collections for path in c.get_paths())
+    untrusted = (ledger.plane["flag"].values & (Flag.MISSING | Flag.FAR_FROM_DATA)) != 0
+    assert area == pytest.approx(untrusted.sum() * 1e-4, rel=1e-9)
+
+
+def test_what_a_ledger_lacks_is_left_out(ledger):
+    poor = dataclasses.replace(
+        ledger,
+        plane=ledger.plane.drop_vars(["total_pressure_loss", "wake_mask", "flag"]),
+        span=None,
+        vortices=None,
+        wake_line=None,
+        estimates=(),
+        comparisons=(),
+        budget=(),
+        reference={},
+    )
+    drawn = figures.draw(poor)
+    assert list(drawn) == ["axial_vorticity", "axial_velocity"]
+    assert drawn["axial_velocity"].axes[1].get_ylabel() == "u, m/s"
+    assert not drawn["axial_vorticity"].legends
+    assert figures.figure_bytes(drawn["axial_vorticity"], "png")
+
+
+def test_estimates_are_offsets_in_per_cent(ledger):
+    found = {offset.label: offset for offset in offsets(ledger)}
+    energy = found["induced drag: energy area"]
+    # The example's energy form reads 3.1 % high, 2.8 % is expected, u = 0.9 %, the row has U95 = 2.6 of 103.1 counts.
+    assert (energy.offset, energy.expected, energy.half) == pytest.approx((3.1, 2.8, 1.8), rel=1e-9)
+    assert energy.band == pytest.approx(100 * 2.6 / 103.1, rel=1e-9)
+    balance = found["total drag: balance"]
+    row = ledger.row("total_drag").value
+    assert balance.offset == pytest.approx(100 * (4.68 - row) / row, rel=1e-9)  # below the row: to the left
+    assert balance.offset < 0
+    assert math.isnan(found["lift: balance"].half)
+
+
+def test_axes_of_the_other_figures_have_units(drawn):
+    upper, lower = drawn["span_loading"].axes
+    assert upper.get_ylabel() == "Γ, m²/s"
+    assert labels(lower) == ("y to starboard, m (seen from behind)", "drag, N/m")
+    assert drawn["estimates"].axes[0].get_xlabel() == "difference from the primary row, % of the row"
+    assert {axes.get_xlabel() for axes in drawn["budget"].axes} == {"share of variance, %"}
+    assert [axes.get_title(loc="left") for axes in drawn["budget"].axes] == [
+        "profile drag", "induced drag", "total drag", "lift",
+    ]  # fmt: skip
+
+
+def test_budget_bars_are_the_shares(drawn):
+    widths = [bar.get_width() for bar in drawn["budget"].axes[0].patches]
+    assert widths == pytest.approx([42, 27, 16, 10, 4, 1], rel=1e-9)
+
+
+@pytest.mark.parametrize("kind", figures.FORMATS)
+def test_files_are_the_same_bytes_each_time(ledger, kind):
+    first, second = (figures.figure_bytes(figures.vorticity_map(ledger), kind) for _ in range(2))
+    assert first == second
+    assert first[:5] == {"pdf": b"%PDF-", "png": b"\x89PNG\r", "svg": b"<?xml"}[kind]
+
+
+def test_svg_names_neither_date_nor_random_identifiers(ledger):
+    text = figures.figure_bytes(figures.loss_map(ledger), "svg").decode()
+    assert "<dc:date>" not in text
+    assert "<image" in text
+    script = (
+        "import runpy, sys, hashlib; from wakeledger.present import figures\n"
+        "ledger = runpy.run_path(sys.argv[1])['example_ledger']()\n"
+        "print(hashlib.sha256(figures.figure_bytes(figures.loss_map(ledger), 'svg')).hexdigest())\n"
+        "print('matplotlib.pyplot' in sys.modules)"
+    )
+    from hashlib import sha256
+    from pathlib import Path
+
+    example = str(Path(__file__).resolve().parents[1] / "ledger" / "example.py")
+    done = subprocess.run([sys.executable, "-c", script, example], capture_output=True, text=True, check=True)
+    assert done.stdout.split() == [sha256(text.encode()).hexdigest(), "False"]
+
+
+def test_large_maps_stay_small_files(example_ledger):
+    fine = example_ledger(spacing=0.002)
+    assert fine.plane["u"].size > 200_000
+    assert len(figures.figure_bytes(figures.vorticity_map(fine), "svg")) < 1_000_000
+
+
+def test_names_of_the_user_are_no_formulas(ledger):
+    line = dataclasses.replace(ledger.budget[0], source="zero drift $x_{ 翼")
+    figure = figures.budget_figure(dataclasses.replace(ledger, budget=(line,)))
+    assert b"<svg" in figures.figure_bytes(figure, "svg")
+
+
+def test_the_style_leaves_no_trace(ledger):
+    import matplotlib as mpl
+
+    before = {name: repr(value) for name, value in mpl.rcParams.items()}
+    figures.figure_bytes(figures.budget_figure(ledger), "svg")
+    assert {name: repr(value) for name, value in mpl.rcParams.items()} == before
+
+
+def test_saving(ledger, tmp_path, monkeypatch):
+    few = {name: gallery.DRAWINGS[name] for name in ("estimates", "budget")}
+    monkeypatch.setattr(gallery, "DRAWINGS", few)
+    names = [path.name for path in figures.save_figures(ledger, tmp_path, ("png", "svg"))]
+    assert len(names) == 4
+    assert {path.name for path in tmp_path.iterdir()} == set(names)
+    with pytest.raises(ValueError, match="allowed: pdf, png, svg"):
+        figures.figure_bytes(figures.budget_figure(ledger), "bmp")
+
+
+def test_png_has_the_stated_size(drawn):
+    from PIL import Image
+
+    with Image.open(io.BytesIO(figures.figure_bytes(drawn["budget"], "png"))) as image:
+        assert image.width == pytest.approx(7.1 * 150, abs=1)
