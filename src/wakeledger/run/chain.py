@@ -319,7 +319,12 @@ class Chain:
         return Flow(grid, u, v, w, total, static, density, total_temperature)
 
     def reduce(
-        self, errors: Mapping[str, Array] = _NO_ERRORS, *, vary: Variation = _AS_FOUND, estimates: bool = True
+        self,
+        errors: Mapping[str, Array] = _NO_ERRORS,
+        *,
+        vary: Variation = _AS_FOUND,
+        estimates: bool = True,
+        geometric: bool = True,
     ) -> Reduction:
         """One pass from points to rows.
 
@@ -331,6 +336,8 @@ class Chain:
             Numerical choices made differently.
         estimates : bool
             Whether to evaluate the cross-checks; they are NaN otherwise.
+        geometric : bool
+            Whether those on frozen geometry are among them.
 
         Returns
         -------
@@ -375,7 +382,7 @@ class Chain:
                 values[coefficient_of(row)] = values[row] / (q * area * (span if row == "rolling_moment" else 1.0))
         offset, invalid = (0.0, 0.0), 0.0
         if estimates:
-            offset, invalid = self._estimate(values, flow, reference, region, vorticity, forces, vary)
+            offset, invalid = self._estimate(values, flow, reference, region, vorticity, forces, vary, geometric)
         return Reduction(
             reference,
             flow,
@@ -390,6 +397,50 @@ class Chain:
             invalid,
             (float(divergence_part), float(axial_part)),
         )
+
+    def vectors(self, errors: Mapping[str, Array]) -> Array:
+        """Outputs under many draws of errors.
+
+        Parameters
+        ----------
+        errors : mapping of str to ndarray, shape (k, n) or (k,)
+            Additive errors of the inputs in SI, one draw after the other.
+
+        Returns
+        -------
+        ndarray, shape (k, m)
+            Over `OUTPUTS`.
+        """
+        count = len(next(iter(errors.values())))
+        draws = [self.reduce({name: array[k] for name, array in errors.items()}, geometric=False) for k in range(count)]
+        vectors = np.stack([draw.vector for draw in draws])
+        # The estimates on frozen geometry are matrix products: all draws at once.
+        references = [draw.reference for draw in draws]
+        found = self._on_frozen_geometry(
+            np.stack([draw.flow.v for draw in draws]),
+            np.stack([draw.flow.w for draw in draws]),
+            np.stack([draw.region.mask for draw in draws]),
+            np.array([reference.density for reference in references]),
+            np.array([reference.speed for reference in references]),
+        )
+        for name, values in found.items():
+            vectors[:, OUTPUTS.index(name)] = values
+        return vectors
+
+    def _on_frozen_geometry(
+        self, v: Array, w: Array, mask: Mask, density: Array | float, speed: Array | float
+    ) -> dict[str, Array]:
+        """Wake line and vortex sum of fields of shape (..., nz, ny), noise bias subtracted."""
+        found, bias = {}, self.frozen.bias
+        if self.frozen.cuts is not None:
+            line = evaluate_wake_line(self.frozen.cuts, v, w, density, speed, mask=mask)
+            for row, value in (("induced_drag", line.induced_drag), ("lift", line.lift)):
+                name = estimate_of(row, "wake_line")
+                found[name] = value - bias.get(name, 0.0)
+        if self.frozen.parts is not None:
+            name = estimate_of("induced_drag", "vortex_sum")
+            found[name] = evaluate_vortex_sum(self.frozen.parts, v, w, density) - bias.get(name, 0.0)
+        return found
 
     def _region(self, loss: Array, vorticity: Array, grid: UniformGrid, vary: Variation) -> WakeRegion:
         settings = self.settings
@@ -426,6 +477,7 @@ class Chain:
         vorticity: Array,
         forces: VorticityForces,
         vary: Variation,
+        geometric: bool,
     ) -> tuple[tuple[float, float], float]:
         """Fill in the cross-checks; gives the crossflow offset and the area without a real expansion."""
         grid, mask, bias = flow.grid, region.mask, self.frozen.bias
@@ -444,18 +496,14 @@ class Chain:
         energy = float(crossflow_energy(v, w, grid, density=reference.density))
         name = estimate_of("induced_drag", "energy_area")
         values[name] = energy - bias.get(name, 0.0)
-        aligned = replace(flow, v=v, w=w)
+        # Turning the flow keeps its speed.
+        square = flow.u**2 + (flow.v**2 - v**2) + (flow.w**2 - w**2)
+        aligned = replace(flow, u=np.sqrt(np.maximum(square, 0.0)), v=v, w=w)
         name = estimate_of("total_drag", "momentum_area")
         values[name] = float(momentum_drag(aligned, reference)) - bias.get(name, 0.0)
-        if self.frozen.cuts is not None:
-            line = evaluate_wake_line(self.frozen.cuts, flow.v, flow.w, reference.density, reference.speed, mask=mask)
-            for row, value in (("induced_drag", line.induced_drag), ("lift", line.lift)):
-                name = estimate_of(row, "wake_line")
-                values[name] = float(value) - bias.get(name, 0.0)
-        if self.frozen.parts is not None:
-            name = estimate_of("induced_drag", "vortex_sum")
-            found = evaluate_vortex_sum(self.frozen.parts, v, w, reference.density)
-            values[name] = float(found) - bias.get(name, 0.0)
+        if geometric:
+            found = self._on_frozen_geometry(flow.v, flow.w, mask, reference.density, reference.speed)
+            values |= {name: float(value) for name, value in found.items()}
         return (float(offset[0]), float(offset[1])), float(invalid)
 
     def near_field(self, vorticity: Array, grid: UniformGrid) -> tuple[Array, Array]:

@@ -30,7 +30,7 @@ METHOD = "choices inside {}"
 #: Order of accuracy claimed when a decimated grid is extrapolated; between h/a = 0.5 and 1 the observed order is 4 to 8.
 ORDER = 3.0
 #: Factors on the region's growth that bound the plausible choices.
-SWEEP = (0.5, 2.0)
+SWEEP = (0.5, 1.5)
 #: Estimates that integrate over the same region as a row, and so share its doubt.
 _SAME_REGION = {
     estimate_of("profile_drag", "entropy_area"): "profile_drag",

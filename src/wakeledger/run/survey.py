@@ -11,6 +11,7 @@ import numpy as np
 from wakeledger.confidence.budget import Budget, make_budget
 from wakeledger.confidence.montecarlo import run as run_montecarlo
 from wakeledger.confidence.samples import Samples
+from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.confidence.terms import NumericalTerm, add_terms
 from wakeledger.core.errors import InputError
@@ -24,7 +25,8 @@ from wakeledger.ledger.rows import BudgetLine, Comparison, CrossCheck, Ledger, R
 from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
 from wakeledger.physics.loading.span import span_loading
 from wakeledger.physics.methods.energy_area import crossflow_energy
-from wakeledger.physics.methods.wake_line import WakeLine, wake_line
+from wakeledger.physics.methods.entropy_area import expansion_doubt
+from wakeledger.physics.methods.wake_line import WakeLine, path_scatter, wake_line
 from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
 from wakeledger.physics.vortices.vortex_sum import VortexSum, WakeParts, find_parts, summarise
 from wakeledger.run import tables
@@ -52,6 +54,8 @@ Progress = Callable[[int, int], None]
 
 #: Points per core length that the plane is resampled to where its own points are uneven.
 POINTS_PER_CORE = 2.0
+#: Draws that tell the wake region's own effect from that of noise.
+_NOISE_DRAWS = 16
 _NO_SOURCE = "the survey file gives no uncertainty source"
 _SAME_ALGEBRA = "the same algebra as the sum of the rows: it tests the arithmetic, not the flow"
 
@@ -322,18 +326,41 @@ def _terms(prepared: Prepared, survey: SurveyInput) -> tuple[NumericalTerm, ...]
     for pressure in (state.total_pressure, state.static_pressure):
         if pressure is not None:
             usable &= np.isfinite(pressure)
-    method = {
-        estimate_of("induced_drag", "wake_line"): prepared.line.method_uncertainty,
-        estimate_of("lift", "wake_line"): prepared.line.lift_method_uncertainty,
-        estimate_of("induced_drag", "vortex_sum"): prepared.vortices.method_uncertainty,
-    }
     return numerical_terms(
         prepared.chain,
         prepared.nominal,
         outer=prepared.outer,
         regrid=Regrid(points.y, points.z, usable, points.row),
-        method_uncertainty=method,
+        method_uncertainty=_method_uncertainty(prepared),
+        noise=_noise_draws(prepared, seed=survey.survey.uncertainty.seed),
     )
+
+
+def _method_uncertainty(prepared: Prepared) -> dict[str, float]:
+    """Standard uncertainty that each estimate's own choices add, N."""
+    chain, nominal, near = prepared.chain, prepared.nominal, prepared.chain.frozen.near_field
+    flow, reference = nominal.flow, nominal.reference
+    found = {
+        estimate_of("induced_drag", "vortex_sum"): prepared.vortices.method_uncertainty,
+        estimate_of("profile_drag", "entropy_area"): expansion_doubt(flow, reference, nominal.profile_integrand),
+    }
+    if chain.frozen.cuts is not None and near is not None:
+        # The bound vortex makes families of paths differ as predicted; what is left over is the method's doubt.
+        far = evaluate_wake_line(
+            chain.frozen.cuts, flow.v - near[0], flow.w - near[1], reference.density, reference.speed
+        )
+        found[estimate_of("induced_drag", "wake_line")] = float(path_scatter(far.family_drag))
+    return found
+
+
+def _noise_draws(prepared: Prepared, *, seed: int) -> list[dict[str, Array]]:
+    """A few draws of the errors that differ from point to point."""
+    random = [source for source in prepared.sources if source.effect != "systematic"]
+    if not random:
+        return []
+    inputs = {name: prepared.layouts[name] for source in random for name in source.applies_to}
+    draws = ErrorSampler(random, inputs, seed=seed).draw(0, _NOISE_DRAWS)
+    return [{name: array[k] for name, array in draws.items()} for k in range(_NOISE_DRAWS)]
 
 
 def _propagate(
@@ -341,13 +368,8 @@ def _propagate(
 ) -> tuple[Samples, Budget]:
     chain = prepared.chain
 
-    def evaluate(errors: dict[str, Array]) -> Array:
-        count = len(next(iter(errors.values())))
-        vectors = [chain.reduce({name: array[k] for name, array in errors.items()}).vector for k in range(count)]
-        return np.stack(vectors)
-
     plain = run_montecarlo(
-        evaluate,
+        chain.vectors,
         prepared.sources,
         prepared.layouts,
         names=OUTPUTS,
@@ -356,7 +378,7 @@ def _propagate(
         progress=progress,
     )
     budget = make_budget(
-        evaluate,
+        chain.vectors,
         prepared.sources,
         prepared.layouts,
         plain,
@@ -522,4 +544,6 @@ def _budget_lines(budget: Budget | None, names: Sequence[str]) -> tuple[BudgetLi
         BudgetLine(line.row, line.source, line.standard_uncertainty, line.share)
         for name in names
         for line in budget.of(name)
+        # A numerical term that does not touch this row is no line of its budget; a declared source is, even at zero.
+        if not (line.how == "numerical" and line.standard_uncertainty == 0)
     )

@@ -63,6 +63,34 @@ def entropy_profile_drag(flow: Flow, reference: Reference, mask: Mask) -> tuple[
     return flow.grid.integrate(integrand), np.count_nonzero(mask & ~real, axis=(-2, -1)) * flow.grid.cell_area
 
 
+def expansion_doubt(flow: Flow, reference: Reference, profile_integrand: Array) -> float:
+    """How far expansion to the stream's pressure may differ from Betz's local form, as a standard uncertainty, N.
+
+    Parameters
+    ----------
+    flow : Flow
+        The plane, arrays of shape (nz, ny).
+    reference : Reference
+        The undisturbed stream.
+    profile_integrand : ndarray, shape (nz, ny)
+        Betz's integrand, Pa, zero outside the wake region.
+
+    Returns
+    -------
+    float
+
+    Notes
+    -----
+    Both are exact where the wake has the stream's pressure and no crossflow. Elsewhere they differ in second order, by
+    about the loss times the local C_p (tests/physics/test_area_methods.py), so |C_p| and the crossflow's share of q
+    weighted with the drag bound the difference; they are taken as its standard uncertainty.
+    """
+    q = reference.dynamic_pressure
+    off_pressure = np.abs(flow.static_pressure - reference.static_pressure) / q
+    defect = np.clip((reference.total_pressure - flow.total_pressure) / q, 0.0, 1.0)
+    return float(flow.grid.integrate(np.abs(profile_integrand) * off_pressure * (0.05 + defect)))
+
+
 def entropy_area(plane: xr.Dataset, reference: Reference) -> Estimate:
     """Profile drag of a labelled plane by the irreversible velocity defect over its wake mask.
 
