@@ -18,6 +18,19 @@ from wakeledger.stream.gas import mach_from_pressure_ratio, pressure_ratio, temp
 NONPHYSICAL_LIMIT = 0.02
 REVERSE_LIMIT = 0.10
 _PLACE = "[plane.columns]"
+_MEASURED = (
+    "u",
+    "v",
+    "w",
+    "speed",
+    "pitch",
+    "yaw",
+    "total_pressure",
+    "static_pressure",
+    "density",
+    "temperature",
+    "total_temperature",
+)
 
 
 class Stream(Protocol):
@@ -145,11 +158,9 @@ def point_state(
     """
     if primary not in {"total_pressure", "velocity"}:
         raise ValueError(f"primary must be 'total_pressure' or 'velocity', {primary!r} was given")
-    names = ("u", "v", "w", "speed", "pitch", "yaw", "total_pressure", "static_pressure")
-    names += ("density", "temperature", "total_temperature")
     given = {
         name: _absolute(np.asarray(channels[name], dtype=float), kinds.get(name), reference)
-        for name in names
+        for name in _MEASURED
         if name in channels
     }
     with np.errstate(invalid="ignore", divide="ignore", over="ignore"):

@@ -14,6 +14,8 @@ from wakeledger.intake.gridding.lattice import find_lattice
 _CONTRADICTION = 8.0
 #: Least noise that is assumed, as a share of a variable's largest magnitude: the last digit of a table.
 _LEAST_NOISE = 1e-3
+_NEIGHBOURS = 8
+_TESTED_PLACES = 2000
 
 
 def check_duplicates(points: Points) -> None:
@@ -28,7 +30,7 @@ def check_duplicates(points: Points) -> None:
     ------
     DataError
         If two values at one place differ by more than 8 standard deviations of their difference; the standard deviation
-        comes from the file, or else from how far neighbouring points scatter about a smooth run.
+        comes from the file, or else from how far points scatter about a plane through their neighbours.
     """
     label = _places(points.y, points.z)
     order = np.argsort(label, kind="stable")
@@ -36,11 +38,10 @@ def check_duplicates(points: Points) -> None:
     if not same.size:
         return
     first, second = order[same], order[same + 1]
-    path = np.lexsort((points.y, points.z))
     for name, channel in points.channels.items():
         values = channel.values
         difference = np.abs(values[first] - values[second])
-        noise = np.maximum(_noise(values[path]), _LEAST_NOISE * _magnitude(values))
+        noise = max(_noise(points.y, points.z, values, label), _LEAST_NOISE * _magnitude(values))
         allowed = np.full(difference.shape, _CONTRADICTION * np.sqrt(2.0) * noise)
         if name in points.std:
             given = np.hypot(points.std[name][first], points.std[name][second])
@@ -73,10 +74,21 @@ def _places(y: Array, z: Array) -> NDArray[np.intp]:
     return np.unique(keys, axis=0, return_inverse=True)[1].reshape(-1).astype(np.intp)
 
 
-def _noise(values: Array) -> float:
-    """Standard deviation of the scatter about a smooth run, from the median of second differences."""
-    finite = values[np.isfinite(values)]
-    if finite.size < 3:
+def _noise(y: Array, z: Array, values: Array, label: NDArray[np.intp]) -> float:
+    """Standard deviation of the scatter about a local plane, the median over places so that the wake hardly counts."""
+    from scipy.spatial import cKDTree
+
+    finite = np.flatnonzero(np.isfinite(values))
+    chosen = finite[np.unique(label[finite], return_index=True)[1]]
+    if chosen.size <= _NEIGHBOURS:
         return 0.0
-    bend = finite[:-2] - 2 * finite[1:-1] + finite[2:]
-    return float(np.median(np.abs(bend)) / (0.6745 * np.sqrt(6.0)))
+    places = np.column_stack([y[chosen], z[chosen]])
+    tested = np.arange(0, chosen.size, max(1, chosen.size // _TESTED_PLACES))
+    near = cKDTree(places).query(places[tested], _NEIGHBOURS + 1)[1][:, 1:]
+    offset = places[near] - places[tested][:, None, :]
+    size = np.abs(offset).max(axis=(1, 2), keepdims=True)
+    plane = np.concatenate([np.ones((*near.shape, 1)), offset / size], axis=-1)
+    weights = np.linalg.pinv(plane)[:, 0, :]
+    residual = values[chosen[tested]] - (weights * values[chosen[near]]).sum(axis=1)
+    spread = np.sqrt(1.0 + (weights**2).sum(axis=1))
+    return float(np.median(np.abs(residual) / spread) / 0.6745)

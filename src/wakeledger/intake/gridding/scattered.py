@@ -1,10 +1,11 @@
 """Points anywhere: local interpolation by radial functions and cubic polynomials, as one sparse matrix.
 
 Each cell takes the value of the interpolant through its nearest places: cubic radial functions |r|³ with all
-polynomials up to the third degree. It passes through the data, is exact for cubic polynomials and fourth order on
-smooth fields, and is a fixed linear combination of the values, so that a thousand draws cost one sparse product. On a
-Gaussian vortex its error is a third of that of piecewise cubic (Clough-Tocher) interpolation, whose slopes come from an
-iteration that would have to be repeated for every draw (tests/intake/test_gridding_scattered.py).
+polynomials up to the third degree. It passes through the data, is exact for cubic polynomials and converges at third
+to fourth order on smooth fields, and is a fixed linear combination of the values, so that a thousand draws cost one
+sparse product. On a Gaussian vortex its error is a third of that of piecewise cubic (Clough-Tocher) interpolation,
+whose slopes come from an iteration that would have to be repeated for every draw
+(tests/intake/test_gridding_scattered.py).
 """
 
 from __future__ import annotations
@@ -120,20 +121,20 @@ def make_scattered(
     _require_places(places.shape[0])
     scaled = places / scale
     mesh = Delaunay(scaled)
-    local = _local_spacing(mesh)
+    spacings, reach = _spacings(mesh)
     if grid is None:
-        fine = float(np.percentile(local, _FINE_PERCENT))
+        fine = float(np.percentile(spacings, _FINE_PERCENT))
         grid = _grid(places, spacing or (fine * scale[0], fine * scale[1]), max_cells)
     zz, yy = np.meshgrid(grid.z, grid.y, indexing="ij")
     cells = np.column_stack([yy.ravel() / scale[0], zz.ravel() / scale[1]])
     tree = cKDTree(scaled)
     distance, nearest = tree.query(cells)
-    close = distance <= FAR * local[nearest]
+    close = distance <= FAR * reach[nearest]
     inside = np.flatnonzero((mesh.find_simplex(cells, tol=1e-9) >= 0) & close)
     if not inside.size:
         raise DataError("no cell of the grid lies among the points", remedy="give a finer spacing or more points")
     averaging = sparse.csr_array((1.0 / np.bincount(label)[label], (label, used)), shape=(places.shape[0], usable.size))
-    matrix = _interpolation(scaled, tree, cells[inside]) @ averaging
+    matrix = _interpolation(scaled, tree, cells[inside], stretch=np.array(scale) / min(scale)) @ averaging
     measured = np.zeros(cells.shape[0], dtype=bool)
     measured[inside] = True
     counted = np.arange(y.size) if present is None else np.flatnonzero(present)
@@ -141,7 +142,7 @@ def make_scattered(
     nearest_point = counted[all_points.query(cells)[1]]
     flag = np.full(cells.shape[0], Flag.INTERPOLATED.value, dtype=np.int32)
     flag[~measured] |= Flag.FAR_FROM_DATA.value
-    flag[~usable[nearest_point] & (distance > local[nearest] / 2)] |= Flag.MISSING.value
+    flag[~usable[nearest_point] & (distance > reach[nearest] / 2)] |= Flag.MISSING.value
     flag[np.bincount(label)[nearest] > 1] |= Flag.AVERAGED.value
     flag = flag.reshape(grid.shape)
     filled = (flag & (Flag.MISSING | Flag.FAR_FROM_DATA).value) != 0
@@ -160,7 +161,7 @@ def make_scattered(
         _nearest_point=nearest_point,
         _places=index,
     )
-    typical = float(np.median(local))
+    typical = float(np.median(spacings))
     return Gridding(
         grid=grid,
         kind="scattered",
@@ -198,7 +199,7 @@ def _places(y: Array, z: Array) -> tuple[tuple[float, float], NDArray[np.intp], 
     _require_places(distinct.shape[0])
     scale = _scale(distinct)
     tree = cKDTree(distinct / scale)
-    radius = _SAME_PLACE * float(np.median(_local_spacing(Delaunay(distinct / scale))))
+    radius = _SAME_PLACE * float(np.median(_spacings(Delaunay(distinct / scale))[0]))
     pairs = tree.query_pairs(radius, output_type="ndarray")
     if not pairs.size:
         return scale, label, distinct
@@ -230,22 +231,31 @@ def _scale(places: Array) -> tuple[float, float]:
         ratio = float(mean[1] / mean[0])
     if 1 / _ANISOTROPIC < ratio < _ANISOTROPIC:
         ratio = 1.0
-    typical = float(np.median(_local_spacing(Delaunay(places / (1.0, ratio)))))
+    typical = float(np.median(_spacings(Delaunay(places / (1.0, ratio)))[0]))
     return typical, typical * ratio
 
 
-def _local_spacing(mesh: Any) -> Array:
-    """Median length of the mesh edges that meet in each place."""
+def _spacings(mesh: Any) -> tuple[Array, Array]:
+    """Spacing of the places about each place, and what may count as such at the edge of a hole.
+
+    The first is the median length of the mesh edges that meet in a place; the second the lower quartile of these among
+    the place and its neighbours, in which the long edges across a hole do not count.
+    """
     edges = _edges(mesh)
     length = np.linalg.norm(mesh.points[edges[:, 0]] - mesh.points[edges[:, 1]], axis=1)
     ends = np.concatenate([edges[:, 0], edges[:, 1]])
-    both = np.concatenate([length, length])
-    order = np.lexsort((both, ends))
-    count = np.bincount(ends, minlength=len(mesh.points))
+    median = _quantile_by_group(ends, np.concatenate([length, length]), 0.5)
+    own = np.arange(median.size)
+    others = np.concatenate([edges[:, 1], edges[:, 0], own])
+    return median, _quantile_by_group(np.concatenate([ends, own]), median[others], 0.25)
+
+
+def _quantile_by_group(group: NDArray[np.intp], values: Array, share: float) -> Array:
+    """Quantile of the values of each group, groups numbered from 0; the lower of two candidates."""
+    order = np.lexsort((values, group))
+    count = np.bincount(group)
     start = np.concatenate([[0], np.cumsum(count)[:-1]])
-    lower = both[order][start + (count - 1) // 2]
-    upper = both[order][start + count // 2]
-    return np.asarray((lower + upper) / 2, dtype=float)
+    return np.asarray(values[order][start + (share * (count - 1)).astype(np.intp)], dtype=float)
 
 
 def _grid(places: Array, spacing: tuple[float, float], max_cells: int) -> UniformGrid:
@@ -261,8 +271,12 @@ def _grid(places: Array, spacing: tuple[float, float], max_cells: int) -> Unifor
     )
 
 
-def _interpolation(places: Array, tree: Any, cells: Array) -> Any:
-    """Interpolation from places to cells, sparse, shape (cells, places)."""
+def _interpolation(places: Array, tree: Any, cells: Array, *, stretch: Array) -> Any:
+    """Interpolation from places to cells, sparse, shape (cells, places).
+
+    Neighbours are the nearest in units of the spacing along each axis, so that they surround the cell; the radial
+    functions count true distance, which `stretch` brings back.
+    """
     k, q = min(_NEIGHBOURS, places.shape[0]), len(_POWERS)
     distance, index = tree.query(cells, k)
     weights = np.empty((cells.shape[0], k))
@@ -271,14 +285,14 @@ def _interpolation(places: Array, tree: Any, cells: Array) -> Any:
         reach = distance[part, -1][:, None, None]
         offset = (places[index[part]] - cells[part, None, :]) / reach
         system = np.zeros((offset.shape[0], k + q, k + q))
-        system[:, :k, :k] = np.linalg.norm(offset[:, :, None, :] - offset[:, None, :, :], axis=-1) ** 3
+        system[:, :k, :k] = np.linalg.norm((offset[:, :, None, :] - offset[:, None, :, :]) * stretch, axis=-1) ** 3
         powers = np.stack([offset[..., 0] ** i * offset[..., 1] ** j for i, j in _POWERS], axis=-1)
         system[:, :k, k:] = powers
         system[:, k:, :k] = powers.transpose(0, 2, 1)
         # Keeps the system solvable where the neighbours happen to stand on few lines.
         system[:, range(k, k + q), range(k, k + q)] = -1e-12
         right = np.zeros((offset.shape[0], k + q, 1))
-        right[:, :k, 0] = np.linalg.norm(offset, axis=-1) ** 3
+        right[:, :k, 0] = np.linalg.norm(offset * stretch, axis=-1) ** 3
         right[:, k + _POWERS.index((0, 0)), 0] = 1.0
         weights[part] = np.linalg.solve(system, right)[:, :k, 0]
     rows = np.repeat(np.arange(cells.shape[0]), k)

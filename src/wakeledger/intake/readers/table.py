@@ -148,7 +148,7 @@ def _layout(lines: Sequence[str], columns: Mapping[str, Column]) -> _Layout:
 def _candidates(line: str) -> Iterable[tuple[str | None, list[str]]]:
     texts = [line.strip()]
     if line.lstrip().startswith(("#", "%", "!")):
-        texts.append(_uncommented(line))
+        texts.insert(0, _uncommented(line))
     for text in texts:
         for separator in _SEPARATORS:
             if separator is None or separator in text:
