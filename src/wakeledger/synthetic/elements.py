@@ -158,8 +158,8 @@ class GaussianElements:
         points_y, points_z, shape = _flat(y, z)
         v, w = np.empty(points_y.size), np.empty(points_y.size)
         strength = self.circulation / (2 * np.pi)
-        for part in self._parts(points_y.size):
-            dy, dz, r2 = self._offsets(points_y[part], points_z[part])
+        for part in self.chunks(points_y.size):
+            dy, dz, r2 = self.offsets(points_y[part], points_z[part])
             swirl = swirl_factor(r2, self.core**2)
             swirl *= strength
             np.einsum("ij,ij->i", swirl, dz, out=v[part])
@@ -171,8 +171,8 @@ class GaussianElements:
         points_y, points_z, shape = _flat(y, z)
         xi = np.empty(points_y.size)
         strength = self.circulation / (np.pi * self.core**2)
-        for part in self._parts(points_y.size):
-            _, _, r2 = self._offsets(points_y[part], points_z[part])
+        for part in self.chunks(points_y.size):
+            _, _, r2 = self.offsets(points_y[part], points_z[part])
             xi[part] = np.exp(-np.minimum(r2 / self.core**2, 700.0)) @ strength
         return xi.reshape(shape)
 
@@ -180,8 +180,8 @@ class GaussianElements:
         """Stream function ψ = −(Γ/2π)[ln r + ½E1(r²/a²)], m²/s, at points of any shape (m)."""
         points_y, points_z, shape = _flat(y, z)
         psi = np.empty(points_y.size)
-        for part in self._parts(points_y.size):
-            _, _, r2 = self._offsets(points_y[part], points_z[part])
+        for part in self.chunks(points_y.size):
+            _, _, r2 = self.offsets(points_y[part], points_z[part])
             psi[part] = log_distance(r2, self.core**2) @ self.circulation
         return (-psi / (2 * np.pi)).reshape(shape)
 
@@ -197,11 +197,13 @@ class GaussianElements:
         """Stream function on a grid, shape (nz, ny), m²/s."""
         return self.stream_function(*grid.mesh())
 
-    def _parts(self, points: int) -> Iterator[slice]:
+    def chunks(self, points: int) -> Iterator[slice]:
+        """Slices of so many points, each small enough to be worked on with all elements at once."""
         size = max(1, _CHUNK // self.n)
         return (slice(start, start + size) for start in range(0, points, size))
 
-    def _offsets(self, y: Array, z: Array) -> tuple[Array, Array, Array]:
+    def offsets(self, y: Array, z: Array) -> tuple[Array, Array, Array]:
+        """y and z from each element to each point and r², m and m², shape (points, n)."""
         dy = y[:, None] - self.y
         dz = z[:, None] - self.z
         return dy, dz, dy * dy + dz * dz
@@ -287,8 +289,8 @@ def mutual_drag(first: GaussianElements, second: GaussianElements, *, density: f
     float
     """
     total = 0.0
-    for part in second._parts(first.n):
-        _, _, r2 = second._offsets(first.y[part], first.z[part])
+    for part in second.chunks(first.n):
+        _, _, r2 = second.offsets(first.y[part], first.z[part])
         smoothed = log_distance(r2, first.core[part, None] ** 2 + second.core**2)
         total += float(first.circulation[part] @ smoothed @ second.circulation)
     return -density * total / (4 * np.pi)

@@ -81,8 +81,8 @@ class LiftingLine:
         if x > 0:
             # Behind the line: endless vortices, less what is missing because they begin at the line.
             v, w = (np.array(component) for component in e.velocity(points_y, points_z))
-        for part in e._parts(points_y.size):
-            dy, dz, r2 = e._offsets(points_y[part], points_z[part])
+        for part in e.chunks(points_y.size):
+            dy, dz, r2 = e.offsets(points_y[part], points_z[part])
             distance = np.sqrt(x * x + r2)
             # ½(1 − |x|/R)/r² = ½/(R(R + |x|)), regular on the leg's axis.
             begun = np.sign(-x) * e.circulation / (4 * np.pi * distance * (distance + abs(x)))
