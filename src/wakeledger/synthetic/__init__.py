@@ -9,25 +9,31 @@ from wakeledger.synthetic.lifting_line import LiftingLine
 from wakeledger.synthetic.loadings import LOADINGS, THIN_SHEET_EFFICIENCY, shed, straight_edge, thin_sheet_limit, v_edge
 from wakeledger.synthetic.losses import GaussianLosses, no_losses, sheet_losses, tip_cores
 from wakeledger.synthetic.optimum import OptimumLoading, optimum_efficiency, optimum_loading
+from wakeledger.synthetic.recordings import Errors, Positions, Recording, grid_positions, record
 from wakeledger.synthetic.rollup import RolledUpWake, Sheet, roll_up, rolled_up_wing
 from wakeledger.synthetic.wakes import FlowState, SyntheticWake, Truth
 
 __all__ = [
     "LOADINGS",
     "THIN_SHEET_EFFICIENCY",
+    "Errors",
     "FlowState",
     "GaussianElements",
     "GaussianLosses",
     "LiftingLine",
     "OptimumLoading",
+    "Positions",
+    "Recording",
     "RolledUpWake",
     "Sheet",
     "SyntheticWake",
     "Truth",
+    "grid_positions",
     "mutual_drag",
     "no_losses",
     "optimum_efficiency",
     "optimum_loading",
+    "record",
     "roll_up",
     "rolled_up_wing",
     "shed",

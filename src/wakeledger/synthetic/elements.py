@@ -203,7 +203,7 @@ class GaussianElements:
         return (slice(start, start + size) for start in range(0, points, size))
 
     def offsets(self, y: Array, z: Array) -> tuple[Array, Array, Array]:
-        """y and z from each element to each point and r², m and m², shape (points, n)."""
+        """Distances along y and z from each element to each point, m, and r², m²; three arrays of shape (points, n)."""
         dy = y[:, None] - self.y
         dz = z[:, None] - self.z
         return dy, dz, dy * dy + dz * dz
