@@ -70,6 +70,23 @@ def test_outline_vortices_trace_and_gaps_are_named(drawn):
     assert texts == ["wake region", "no trusted measurement", "trace of the wake", "vortex centre and core radius"]
 
 
+def test_gaps_in_the_fields_are_drawn(ledger):
+    """Cells without a value stay blank; nothing warns."""
+    hole = (ledger.plane["y"] > 0.3) & (ledger.plane["z"] > 0.1)
+    gappy = dataclasses.replace(ledger, plane=ledger.plane.where(~hole).assign(flag=ledger.plane["flag"]))
+    for figure in figures.draw(gappy).values():
+        assert figures.figure_bytes(figure, "png")
+
+
+def test_separate_chains_of_the_trace_are_not_joined(ledger):
+    trace = ledger.wake_line
+    chains = trace.assign(chain=("s", (trace["y"].values > 0).astype(np.int32)))
+    axes = figures.loss_map(dataclasses.replace(ledger, wake_line=chains)).axes[0]
+    dashed = [line for line in axes.lines if line.get_linestyle() == "--"]
+    assert len(dashed) == 2
+    assert max(dashed[0].get_xdata()) < min(dashed[1].get_xdata())
+
+
 def test_hatched_boxes_cover_exactly_the_untrusted_cells(ledger, drawn):
     from matplotlib.collections import PatchCollection
 
@@ -82,7 +99,9 @@ def test_hatched_boxes_cover_exactly_the_untrusted_cells(ledger, drawn):
 def test_what_a_ledger_lacks_is_left_out(ledger):
     poor = dataclasses.replace(
         ledger,
-        plane=ledger.plane.drop_vars(["total_pressure_loss", "wake_mask", "flag"]),
+        plane=ledger.plane.drop_vars(["wake_mask", "flag"]).assign(
+            total_pressure_loss=ledger.plane["total_pressure_loss"] * np.nan
+        ),
         span=None,
         vortices=None,
         wake_line=None,

@@ -8,7 +8,16 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import TYPE_CHECKING
 
 from wakeledger.ledger.rounding import UNKNOWN, rounded, significant
-from wakeledger.present.wording import STATEMENT, VERDICT_WORDS, coefficient_text, printable, signed, unit_text, words
+from wakeledger.present.wording import (
+    STATEMENT,
+    VERDICT_WORDS,
+    coefficient_text,
+    grouped_reasons,
+    printable,
+    signed,
+    unit_text,
+    words,
+)
 
 if TYPE_CHECKING:
     from rich.console import Console, RenderableType
@@ -58,21 +67,20 @@ def ledger_text(ledger: Ledger, *, width: int = 100, colour: bool = False) -> st
     console = _console(width, colour)
     _heading(console, ledger.title, ledger.test)
     console.print(_rows_table(ledger.rows))
-    for row in ledger.rows:
-        if row.reason:
-            _bullet(console, f"{words(row.name)}: {row.reason}")
+    for sentence in grouped_reasons((words(row.name), row.reason) for row in ledger.rows):
+        _bullet(console, sentence)
     if ledger.estimates:
         _section(console, "Other methods against the primary one")
         console.print(_estimates_table(ledger.estimates, roomy=console.width >= ROOMY))
-        for line in ledger.estimates:
-            if line.reason:
-                _bullet(console, f"{words(line.row)}, {words(line.method)}: {line.reason}")
+        reasons = [(f"{words(line.row)}, {words(line.method)}", line.reason) for line in ledger.estimates]
+        for sentence in grouped_reasons(reasons):
+            _bullet(console, sentence)
     if ledger.comparisons:
         _section(console, "Comparison with other values")
         console.print(_comparisons_table(ledger.comparisons))
-        for comparison in ledger.comparisons:
-            if comparison.reason:
-                _bullet(console, f"{comparison.name}, {words(comparison.row)}: {comparison.reason}")
+        reasons = [(f"{line.name}, {words(line.row)}", line.reason) for line in ledger.comparisons]
+        for sentence in grouped_reasons(reasons):
+            _bullet(console, sentence)
     _checks(console, ledger.checks)
     _sentences(console, "Notes", ledger.notes)
     console.print()

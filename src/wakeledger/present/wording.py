@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from types import MappingProxyType
 from typing import TYPE_CHECKING
 
@@ -160,3 +160,27 @@ def signed(difference: float, uncertainty: float) -> str:
     if figure == UNKNOWN:
         return "–"
     return figure if figure.startswith("-") or not figure.strip("0.") else f"+{figure}"
+
+
+def grouped_reasons(reasons: Iterable[tuple[str, str | None]]) -> list[str]:
+    """Reasons with everything they apply to, each said once.
+
+    Parameters
+    ----------
+    reasons : iterable of (str, str or None)
+        What it is about, and the reason; None where there is nothing to explain.
+
+    Returns
+    -------
+    list of str
+
+    Examples
+    --------
+    >>> grouped_reasons([("lift", "no source"), ("total drag", None), ("side force", "no source")])
+    ['lift; side force: no source']
+    """
+    subjects: dict[str, list[str]] = {}
+    for subject, reason in reasons:
+        if reason:
+            subjects.setdefault(reason, []).append(subject)
+    return [f"{'; '.join(named)}: {reason}" for reason, named in subjects.items()]

@@ -13,13 +13,21 @@ if TYPE_CHECKING:
 
     from wakeledger.ledger.rows import Ledger
 
+
+def _in_plane(*names: str) -> Callable[[Ledger], bool]:
+    def has(ledger: Ledger) -> bool:
+        return all(name in ledger.plane and bool(ledger.plane[name].notnull().any()) for name in names)
+
+    return has
+
+
 Drawing = tuple[Callable[["Ledger"], "Figure"], Callable[["Ledger"], bool]]
 
 #: Name of each figure's file, how to draw it, and whether a ledger has what it needs.
 DRAWINGS: dict[str, Drawing] = {
-    "total_pressure_loss": (maps.loss_map, lambda ledger: "total_pressure_loss" in ledger.plane),
-    "axial_vorticity": (maps.vorticity_map, lambda ledger: {"axial_vorticity", "v", "w"} <= set(ledger.plane)),
-    "axial_velocity": (maps.axial_velocity_map, lambda ledger: "u" in ledger.plane),
+    "total_pressure_loss": (maps.loss_map, _in_plane("total_pressure_loss")),
+    "axial_vorticity": (maps.vorticity_map, _in_plane("axial_vorticity", "v", "w")),
+    "axial_velocity": (maps.axial_velocity_map, _in_plane("u")),
     "span_loading": (spanwise.span_figure, lambda ledger: ledger.span is not None),
     "estimates": (crosschecks.estimates_figure, lambda ledger: bool(crosschecks.offsets(ledger))),
     "budget": (budget.budget_figure, lambda ledger: bool(ledger.budget)),

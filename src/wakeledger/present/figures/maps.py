@@ -168,9 +168,13 @@ def _overlay(axes: Axes, ledger: Ledger) -> list[object]:
             drawn.append(Patch(facecolor=VEIL, edgecolor=INK, hatch=HATCH, linewidth=0, label="no trusted measurement"))
     if ledger.wake_line is not None:
         trace = ledger.wake_line
-        axes.plot(
-            trace["y"].values, trace["z"].values, color=INK, linewidth=1.0, linestyle=(0, (4, 2)), path_effects=halo
-        )
+        chain = trace["chain"].values if "chain" in trace else np.zeros(trace["y"].size, dtype=int)
+        for number in np.unique(chain):
+            one = chain == number
+            axes.plot(
+                trace["y"].values[one], trace["z"].values[one], color=INK, linewidth=1.0, linestyle=(0, (4, 2)),
+                path_effects=halo,
+            )  # fmt: skip
         drawn.append(Line2D([], [], color=INK, linewidth=1.0, linestyle=(0, (4, 2)), label="trace of the wake"))
     if ledger.vortices is not None and ledger.vortices["y"].size:
         vortices = ledger.vortices

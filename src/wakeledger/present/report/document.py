@@ -12,6 +12,7 @@ from wakeledger.present.wording import (
     STATEMENT,
     VERDICT_WORDS,
     coefficient_text,
+    grouped_reasons,
     in_counts,
     signed,
     unit_text,
@@ -83,13 +84,16 @@ def report_html(ledger: Ledger) -> str:
         trim_blocks=True,
         lstrip_blocks=True,
     )
-    environment.filters |= {"words": words, "unit": unit_text, "digits": _digits, "cell": _cell}
+    environment.filters |= {"words": words, "unit": unit_text, "digits": _digits, "scalar": _scalar, "cell": _cell}
     pictures = {name: _picture(name, figure) for name, figure in draw(ledger).items()}
     return environment.get_template("report.html").render(
         ledger=ledger,
         statement=STATEMENT,
         verdicts=VERDICT_WORDS,
         rows=_rows(ledger),
+        row_reasons=grouped_reasons((words(row.name), row.reason) for row in ledger.rows),
+        estimate_reasons=grouped_reasons((f"{words(x.row)}, {words(x.method)}", x.reason) for x in ledger.estimates),
+        comparison_reasons=grouped_reasons((f"{x.name}, {words(x.row)}", x.reason) for x in ledger.comparisons),
         corrected=any(row.coefficient_corrected is not None for row in ledger.rows),
         estimates=_estimates(ledger),
         comparisons=_comparisons(ledger),
@@ -120,13 +124,17 @@ def _digits(value: float, digits: int = 4) -> str:
     return significant(value, digits) if math.isfinite(value) else "–"
 
 
+def _scalar(value: object) -> str:
+    return f"{value:.6g}" if isinstance(value, float) else str(value)
+
+
 def _cell(value: object) -> str:
     """One entry of a table whose columns the report does not know: a number, a count or a word."""
     try:
         number = float(value)  # type: ignore[arg-type]
     except (TypeError, ValueError):
         return str(value)
-    return str(int(number)) if number.is_integer() and abs(number) < 1e6 else _digits(number)
+    return f"{number:.4g}" if math.isfinite(number) else "–"
 
 
 def _shown(figure: str) -> str:
@@ -158,7 +166,6 @@ def _rows(ledger: Ledger) -> list[dict[str, Any]]:
                 "u_coefficient": _shown(u_coefficient),
                 "counts": counts,
                 "corrected": corrected_text,
-                "reason": row.reason,
             }
         )
     return lines
@@ -179,7 +186,6 @@ def _estimates(ledger: Ledger) -> list[dict[str, Any]]:
                 "expected": signed(line.expected_difference, line.standard_uncertainty),
                 "error": f"{line.normalised_error:.2f}" if math.isfinite(line.normalised_error) else "–",
                 "verdict": line.verdict,
-                "reason": line.reason,
             }
         )
     return lines
@@ -199,7 +205,6 @@ def _comparisons(ledger: Ledger) -> list[dict[str, Any]]:
                 "difference": signed(line.difference, line.standard_uncertainty),
                 "error": f"{line.normalised_error:.2f}" if math.isfinite(line.normalised_error) else "–",
                 "verdict": line.verdict,
-                "reason": line.reason,
             }
         )
     return lines
