@@ -31,7 +31,7 @@ _CONVERGED = 1e-13
 
 @dataclass(frozen=True)
 class GaussianFit:
-    """Fitted vortex and how it answers to a change of the data.
+    """Vortex fitted to the velocity, and how its centre answers to a change of the data.
 
     Attributes
     ----------
@@ -45,8 +45,8 @@ class GaussianFit:
         Weighted rms of the residual over the fitted peak swirl.
     points : ndarray of int, shape (n,)
         Flat indices of the grid points used.
-    response : ndarray, shape (4, 2n)
-        d(y, z, Γ, a)/d(v at the points, w at the points).
+    response : ndarray, shape (2, 2n)
+        d(y, z)/d(v at the points, w at the points).
     """
 
     y: float
@@ -157,7 +157,6 @@ def _stage(
     fitted_core = core * float(np.exp(p[3]))
     residual = patch.model_and_jacobian(p)[0]
     rms = float(np.sqrt((residual**2).sum() / (patch.weight**2).sum()))
-    scale = np.array([core, core, 2 * np.pi * core * speed, fitted_core])
     return GaussianFit(
         y=y + float(p[0]) * core,
         z=z + float(p[1]) * core,
@@ -165,7 +164,7 @@ def _stage(
         core=fitted_core,
         misfit=rms * float(np.exp(p[3])) / (PEAK_SWIRL * abs(float(p[2]))),
         points=(rows[:, None] * grid.ny + columns).ravel(),
-        response=pseudo_inverse[:4] * patch.weight * (scale / speed)[:, None],
+        response=pseudo_inverse[:2] * patch.weight * (core / speed),
     )
 
 
@@ -180,3 +179,57 @@ def _polished(patch: _Patch, p: Array) -> tuple[Array, Array]:
         if not np.isfinite(p).all() or np.abs(p[:4]).max() > 5 or np.abs(step[:4]).max() < _CONVERGED:
             break
     return p, pseudo_inverse
+
+
+@dataclass(frozen=True)
+class ProfileFit:
+    """Γ(r) = Γ(1 − exp(−r²/a²)) fitted to circulations around circles.
+
+    Attributes
+    ----------
+    circulation : float
+        Γ, m²/s.
+    core : float
+        Core a, m.
+    core_response : ndarray, shape (m,)
+        da/dΓ(r), s/m.
+    """
+
+    circulation: float
+    core: float
+    core_response: Array
+
+
+def fit_profile(radius: Array, enclosed: Array, *, core: float) -> ProfileFit | None:
+    """Fit a Gaussian vortex to its radial profile of circulation.
+
+    Parameters
+    ----------
+    radius : ndarray, shape (m,)
+        Radii of the circles, m.
+    enclosed : ndarray, shape (m,)
+        Γ(r) by line integrals, m²/s.
+    core : float
+        First guess of a, m.
+
+    Returns
+    -------
+    ProfileFit or None
+        Least squares with equal weights; None where it runs away from the guess by more than a factor of two.
+    """
+    logarithm = 0.0
+    circulation, pseudo_inverse = 0.0, np.zeros((2, radius.size))
+    for _ in range(_POLISH):
+        x = (radius / (core * np.exp(logarithm))) ** 2
+        share = -np.expm1(-x)
+        circulation = float(share @ enclosed / (share @ share))
+        by_core = -2 * circulation * x * np.exp(-x)
+        pseudo_inverse = np.linalg.pinv(np.stack([share, by_core], axis=1))
+        step = float(pseudo_inverse[1] @ (enclosed - circulation * share))
+        logarithm += float(np.clip(step, -0.5, 0.5))
+        if abs(step) < _CONVERGED:
+            break
+        if abs(logarithm) > np.log(2.0):
+            return None
+    fitted = core * float(np.exp(logarithm))
+    return ProfileFit(circulation, fitted, pseudo_inverse[1] * fitted)

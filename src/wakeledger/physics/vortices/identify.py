@@ -1,7 +1,7 @@
 """Vortices of a crossflow plane: where they are, how strong, how large.
 
 A vortex is a place where Γ₂ comes close to ±1 and whose circulation stands out of the noise. Both judgements are blind
-to a uniform velocity. Its centre and core come from a fit of the velocity, its circulation from a closed line integral.
+to a uniform velocity. Its centre comes from a fit of the velocity, its core and circulation from closed line integrals.
 """
 
 from __future__ import annotations
@@ -17,17 +17,28 @@ from scipy.interpolate import RectBivariateSpline
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.circulation import CrossflowSpline, cell_circulations
 from wakeledger.physics.vortices.criteria import gamma2
-from wakeledger.physics.vortices.gaussian_fit import PEAK_RADIUS, PEAK_SWIRL, GaussianFit, fit_gaussian
+from wakeledger.physics.vortices.gaussian_fit import (
+    PEAK_RADIUS,
+    PEAK_SWIRL,
+    GaussianFit,
+    ProfileFit,
+    fit_gaussian,
+    fit_profile,
+)
 
 #: |Γ₂| that a vortex centre reaches. Graftieaux et al. use 0.9 to 0.95 on Γ₁; sheets stay near 2/π.
 CENTRE_LEVEL = 0.9
-#: Standard deviations of the noise by which a vortex's circulation and peak swirl stand out.
+#: Standard deviations of the noise by which a vortex's circulation stands out.
 SIGNIFICANCE = 5.0
 #: Radius of the circle of the line integral, in units of the core a.
 CONTOUR_RADIUS = 2.0
-# Rounding of smooth data passes for a vortex below this share of the plane's largest crossflow.
-_ROUNDING = 1e-9
+#: Peak swirl below this share of the plane's range of crossflow is an eddy of the sheet or a trace of rounding.
+FAINT = 0.02
+#: Largest misfit, in units of the peak swirl, that still passes for a vortex.
+LARGEST_MISFIT = 0.35
 _SMALLEST_CIRCLE = 1.0
+_CIRCLES = 12
+_REFINEMENTS = 8
 _SWIRL_DROP = 0.93
 
 
@@ -43,11 +54,12 @@ class Vortex:
         Γ, m²/s, counter-clockwise positive: closed line integral of the measured velocity on the circle of radius 2a
         (less where the window ends), over the share 1 − exp(−r²/a²) that a Gaussian vortex has inside it.
     core_radius : float
-        Core a of ξ ∝ exp(−r²/a²), m. The swirl peaks at 1.1209 a.
+        Core a of ξ ∝ exp(−r²/a²), m, fitted to the circulations Γ(r) = Γ(1 − exp(−r²/a²)) inside 2a. The swirl peaks at
+        1.1209 a.
     contour_radius : float
         Radius of the circle of the line integral, m.
     peak_swirl : float
-        Largest azimuthal-mean swirl of the fitted vortex, m/s, positive.
+        Largest azimuthal-mean swirl measured, m/s, positive.
     roundness : float
         Smaller over larger principal axis of the vorticity; 1 is round.
     misfit : float
@@ -128,18 +140,40 @@ def find_vortices(
     -----
     Γ₂ of Graftieaux, Michard & Grosjean (2001); a candidate is a connected set of points with |Γ₂| > 0.9.
     """
-    return tuple(vortex for vortex, _ in fitted_vortices(v, w, grid, mask=mask, u=u))
+    return tuple(measured.vortex for measured in measured_vortices(v, w, grid, mask=mask, u=u))
 
 
-def fitted_vortices(
+@dataclass(frozen=True, eq=False)
+class MeasuredVortex:
+    """A vortex with the fits behind it, for what a change of the data does to it.
+
+    Attributes
+    ----------
+    vortex : Vortex
+        The record.
+    centre : GaussianFit
+        Fit of the centre.
+    profile : ProfileFit
+        Fit of the core.
+    radii : ndarray, shape (m,)
+        Radii of the circles of the profile, m; the last is the contour's.
+    """
+
+    vortex: Vortex
+    centre: GaussianFit
+    profile: ProfileFit
+    radii: Array
+
+
+def measured_vortices(
     v: Array,
     w: Array,
     grid: UniformGrid,
     *,
     mask: NDArray[np.bool_] | None = None,
     u: Array | None = None,
-) -> tuple[tuple[Vortex, GaussianFit], ...]:
-    """As `find_vortices`, each vortex with the fit behind it."""
+) -> tuple[MeasuredVortex, ...]:
+    """As `find_vortices`, each vortex with the fits behind it."""
     v, w = np.asarray(v, float), np.asarray(w, float)
     if v.shape != grid.shape or w.shape != grid.shape:
         raise ValueError(f"v and w need the grid's shape {grid.shape}, {v.shape} and {w.shape} were given")
@@ -148,34 +182,22 @@ def fitted_vortices(
     if min(grid.shape) < 7:
         return ()
     noise = crossflow_noise(v, w)
-    largest = max(float(np.ptp(v)), float(np.ptp(w)))
+    faint = FAINT * max(float(np.ptp(v)), float(np.ptp(w)))
+    spacing = max(grid.dy, grid.dz)
     spline: CrossflowSpline | None = None
-    found: list[tuple[Vortex, GaussianFit]] = []
+    found: list[MeasuredVortex] = []
     for y, z in _candidates(v, w, grid):
         spline = CrossflowSpline.on_grid(v, w, grid) if spline is None else spline
-        measured = _measured(v, w, grid, spline, y, z)
+        measured = _measured(v, w, grid, spline, y, z, u)
         if measured is None:
             continue
-        fit, circulation, radius = measured
-        spacing = max(grid.dy, grid.dz)
-        circle_noise = noise * spacing * np.sqrt(2 * np.pi * radius / spacing)
-        peak = PEAK_SWIRL * abs(circulation) / (2 * np.pi * fit.core)
-        if abs(circulation) < SIGNIFICANCE * circle_noise or peak < SIGNIFICANCE * noise + _ROUNDING * largest:
+        vortex = measured.vortex
+        circle_noise = noise * np.sqrt(2 * np.pi * vortex.contour_radius * spacing)
+        if abs(vortex.circulation) < SIGNIFICANCE * circle_noise or vortex.peak_swirl < max(2 * noise, faint):
             continue
-        if mask is not None and not _value_at(mask, grid, fit.y, fit.z):
+        if vortex.misfit > LARGEST_MISFIT or (mask is not None and not _value_at(mask, grid, vortex.y, vortex.z)):
             continue
-        vortex = Vortex(
-            y=fit.y,
-            z=fit.z,
-            circulation=circulation,
-            core_radius=fit.core,
-            contour_radius=radius,
-            peak_swirl=peak,
-            roundness=_roundness(v, w, grid, fit),
-            misfit=fit.misfit,
-            u=float("nan") if u is None else _interpolated(np.asarray(u, float), grid, fit.y, fit.z),
-        )
-        found.append((vortex, fit))
+        found.append(measured)
     return _ordered(_without_doubles(found), grid)
 
 
@@ -191,23 +213,44 @@ def _candidates(v: Array, w: Array, grid: UniformGrid) -> Iterator[tuple[float, 
 
 
 def _measured(
-    v: Array, w: Array, grid: UniformGrid, spline: CrossflowSpline, y: float, z: float
-) -> tuple[GaussianFit, float, float] | None:
+    v: Array, w: Array, grid: UniformGrid, spline: CrossflowSpline, y: float, z: float, u: Array | None
+) -> MeasuredVortex | None:
     guess = _first_guess(spline, grid, y, z)
     if guess is None:
         return None
-    circulation, core = guess
-    fit = fit_gaussian(v, w, grid, y=y, z=z, circulation=circulation, core=core)
-    if fit is None:
+    centre = fit_gaussian(v, w, grid, y=y, z=z, circulation=guess[0], core=guess[1])
+    if centre is None:
         return None
-    radius = min(CONTOUR_RADIUS * fit.core, _room(grid, fit.y, fit.z))
-    if radius < _SMALLEST_CIRCLE * fit.core:
+    room = _room(grid, centre.y, centre.z)
+    core = centre.core
+    profile: ProfileFit | None = None
+    radii: Array = np.zeros(0)
+    enclosed: Array = np.zeros(0)
+    for _ in range(_REFINEMENTS):
+        largest = min(CONTOUR_RADIUS * core, room)
+        if largest < _SMALLEST_CIRCLE * core:
+            return None
+        radii = largest * np.arange(1, _CIRCLES + 1) / _CIRCLES
+        enclosed = spline.around_circle(centre.y, centre.z, radii)
+        profile = fit_profile(radii, enclosed, core=core)
+        if profile is None or not 0.5 < profile.core / centre.core < 2:
+            return None
+        core = profile.core
+    circulation = float(enclosed[-1]) / -float(np.expm1(-((radii[-1] / core) ** 2)))
+    if profile is None or circulation * centre.circulation <= 0:
         return None
-    enclosed = float(spline.around_circle(fit.y, fit.z, radius))
-    line_integral = enclosed / -float(np.expm1(-((radius / fit.core) ** 2)))
-    if line_integral * fit.circulation <= 0:
-        return None
-    return fit, line_integral, radius
+    vortex = Vortex(
+        y=centre.y,
+        z=centre.z,
+        circulation=circulation,
+        core_radius=core,
+        contour_radius=float(radii[-1]),
+        peak_swirl=float((np.abs(enclosed) / (2 * np.pi * radii)).max()),
+        roundness=_roundness(v, w, grid, centre.y, centre.z, core),
+        misfit=centre.misfit,
+        u=float("nan") if u is None else _interpolated(np.asarray(u, float), grid, centre.y, centre.z),
+    )
+    return MeasuredVortex(vortex, centre, profile, radii)
 
 
 def _room(grid: UniformGrid, y: float, z: float) -> float:
@@ -233,16 +276,16 @@ def _first_guess(spline: CrossflowSpline, grid: UniformGrid, y: float, z: float)
     return float(sign * 2 * np.pi * core * swirl[best] / PEAK_SWIRL), core
 
 
-def _roundness(v: Array, w: Array, grid: UniformGrid, fit: GaussianFit) -> float:
+def _roundness(v: Array, w: Array, grid: UniformGrid, at_y: float, at_z: float, core: float) -> float:
     """Axis ratio of the Gaussian whose second moments, seen through a round Gaussian window, are the measured ones."""
-    y, z = grid.y[:-1] + grid.dy / 2 - fit.y, grid.z[:-1] + grid.dz / 2 - fit.z
-    reach = 3.0 * fit.core
+    y, z = grid.y[:-1] + grid.dy / 2 - at_y, grid.z[:-1] + grid.dz / 2 - at_z
+    reach = 3.0 * core
     columns, rows = np.flatnonzero(np.abs(y) < reach), np.flatnonzero(np.abs(z) < reach)
     first, last = slice(rows[0], rows[-1] + 2), slice(columns[0], columns[-1] + 2)
     cut = UniformGrid(0.0, 0.0, grid.dy, grid.dz, columns.size + 1, rows.size + 1)
     circulation = cell_circulations(v[first, last], w[first, last], cut)
     yy, zz = np.meshgrid(y[columns], z[rows])
-    weight = circulation * np.exp(-(yy**2 + zz**2) / fit.core**2)
+    weight = circulation * np.exp(-(yy**2 + zz**2) / core**2)
     total = weight.sum()
     yy_moment = float((weight * yy**2).sum() / total) - grid.dy**2 / 12
     zz_moment = float((weight * zz**2).sum() / total) - grid.dz**2 / 12
@@ -252,7 +295,7 @@ def _roundness(v: Array, w: Array, grid: UniformGrid, fit: GaussianFit) -> float
     if not axes[0] > 0:
         return 0.0
     # The window multiplies by exp(−r²/a²), which adds 2/a² to the inverse of each squared axis.
-    short, long = 1 / axes - 2 / fit.core**2
+    short, long = 1 / axes - 2 / core**2
     return float(np.sqrt(long / short)) if long > 0 else 0.0
 
 
@@ -269,15 +312,17 @@ def _interpolated(field: Array, grid: UniformGrid, y: float, z: float) -> float:
     return float(RectBivariateSpline(grid.z[rows], grid.y[columns], field[rows, columns]).ev(z, y))
 
 
-def _without_doubles(found: list[tuple[Vortex, GaussianFit]]) -> list[tuple[Vortex, GaussianFit]]:
+def _without_doubles(found: list[MeasuredVortex]) -> list[MeasuredVortex]:
     """Fits that ran into the same vortex count once; the better fit stays."""
-    kept: list[tuple[Vortex, GaussianFit]] = []
-    for vortex, fit in sorted(found, key=lambda pair: pair[0].misfit):
-        if all(np.hypot(vortex.y - o.y, vortex.z - o.z) > max(vortex.core_radius, o.core_radius) / 2 for o, _ in kept):
-            kept.append((vortex, fit))
+    kept: list[MeasuredVortex] = []
+    for new in sorted(found, key=lambda measured: measured.vortex.misfit):
+        a = new.vortex
+        others = (measured.vortex for measured in kept)
+        if all(np.hypot(a.y - b.y, a.z - b.z) > max(a.core_radius, b.core_radius) / 2 for b in others):
+            kept.append(new)
     return kept
 
 
-def _ordered(found: list[tuple[Vortex, GaussianFit]], grid: UniformGrid) -> tuple[tuple[Vortex, GaussianFit], ...]:
+def _ordered(found: list[MeasuredVortex], grid: UniformGrid) -> tuple[MeasuredVortex, ...]:
     step = 1e-6 * min(grid.dy, grid.dz)
-    return tuple(sorted(found, key=lambda pair: (round(pair[0].y / step), pair[0].z)))
+    return tuple(sorted(found, key=lambda measured: (round(measured.vortex.y / step), measured.vortex.z)))

@@ -25,8 +25,7 @@ from wakeledger.physics.fields.circulation import circle_weights
 from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.gaussian_elements import Reflection, interaction_matrix
 from wakeledger.physics.fields.wake_region import wake_region
-from wakeledger.physics.vortices.gaussian_fit import GaussianFit
-from wakeledger.physics.vortices.identify import Vortex, fitted_vortices
+from wakeledger.physics.vortices.identify import MeasuredVortex, Vortex, measured_vortices
 from wakeledger.physics.vortices.tiles import Tiles, cut_plane
 
 Mask = NDArray[np.bool_]
@@ -138,7 +137,7 @@ class WakeParts:
     with_cells: Array
     among_cells: Array
     _cut: _Cut
-    _fits: tuple[GaussianFit, ...]
+    _measured: tuple[MeasuredVortex, ...]
     _nominal: tuple[Array, Array]
 
     @cached_property
@@ -199,12 +198,11 @@ def find_parts(
     """
     v, w = np.asarray(v, float), np.asarray(w, float)
     kept = None if excluded is None else ~np.asarray(excluded, bool)
-    found = fitted_vortices(v, w, grid, mask=kept, u=u)
+    found = measured_vortices(v, w, grid, mask=kept, u=u)
     if mask is None:
         mask = wake_region(np.zeros(grid.shape), axial_vorticity(v, w, grid), grid).mask
-    vortices = tuple(vortex for vortex, _ in found)
-    cut, tiles = _fitting_cut(grid, mask, excluded, [vortex.core_radius for vortex in vortices])
-    return _parts(grid, vortices, cut, tiles, reflection, tuple(fit for _, fit in found), (v, w))
+    cut, tiles = _fitting_cut(grid, mask, excluded, [measured.vortex.core_radius for measured in found])
+    return _parts(grid, found, cut, tiles, reflection, (v, w))
 
 
 def _fitting_cut(grid: UniformGrid, mask: Mask, excluded: Mask | None, cores: list[float]) -> tuple[_Cut, Tiles]:
@@ -223,13 +221,13 @@ def _fitting_cut(grid: UniformGrid, mask: Mask, excluded: Mask | None, cores: li
 
 def _parts(
     grid: UniformGrid,
-    vortices: tuple[Vortex, ...],
+    measured: tuple[MeasuredVortex, ...],
     cut: _Cut,
     tiles: Tiles,
     reflection: Reflection,
-    fits: tuple[GaussianFit, ...],
     nominal: tuple[Array, Array],
 ) -> WakeParts:
+    vortices = tuple(one.vortex for one in measured)
     y, z = np.array([x.y for x in vortices]), np.array([x.z for x in vortices])
     core_squared = np.array([x.core_radius**2 for x in vortices])
     shares = np.empty((tiles.count, len(vortices)))
@@ -254,7 +252,7 @@ def _parts(
         with_cells=with_cells,
         among_cells=among_cells,
         _cut=cut,
-        _fits=fits,
+        _measured=measured,
         _nominal=nominal,
     )
 
@@ -332,15 +330,18 @@ def vortex_draws(parts: WakeParts, v: Array, w: Array) -> VortexDraws:
     change_v = (v - parts._nominal[0]).reshape(-1, size)
     change_w = (w - parts._nominal[1]).reshape(-1, size)
     out = np.empty((4, change_v.shape[0], len(parts.vortices)))
-    for k, (vortex, fit) in enumerate(zip(parts.vortices, parts._fits, strict=True)):
-        change = np.concatenate([change_v[:, fit.points], change_w[:, fit.points]], axis=1) @ fit.response.T
-        points, on_v, on_w = circle_weights(parts.grid, vortex.y, vortex.z, vortex.contour_radius)
-        enclosed = vortex.circulation * _gaussian_inside(vortex.contour_radius, vortex.core_radius)
-        enclosed = enclosed + change_v[:, points] @ on_v + change_w[:, points] @ on_w
-        core = vortex.core_radius + change[:, 3]
-        out[0, :, k] = vortex.y + change[:, 0]
-        out[1, :, k] = vortex.z + change[:, 1]
-        out[2, :, k] = enclosed / _gaussian_inside(vortex.contour_radius, core)
+    for k, measured in enumerate(parts._measured):
+        vortex, centre = measured.vortex, measured.centre
+        moved = np.concatenate([change_v[:, centre.points], change_w[:, centre.points]], axis=1) @ centre.response.T
+        enclosed = np.empty((change_v.shape[0], measured.radii.size))
+        for m, radius in enumerate(measured.radii):
+            points, on_v, on_w = circle_weights(parts.grid, vortex.y, vortex.z, radius)
+            enclosed[:, m] = change_v[:, points] @ on_v + change_w[:, points] @ on_w
+        core = vortex.core_radius + enclosed @ measured.profile.core_response
+        inside = vortex.circulation * _gaussian_inside(vortex.contour_radius, vortex.core_radius) + enclosed[:, -1]
+        out[0, :, k] = vortex.y + moved[:, 0]
+        out[1, :, k] = vortex.z + moved[:, 1]
+        out[2, :, k] = inside / _gaussian_inside(vortex.contour_radius, core)
         out[3, :, k] = core
     y, z, circulation, core = out.reshape(4, *lead, len(parts.vortices))
     return VortexDraws(y, z, circulation, core)
@@ -461,8 +462,6 @@ def _method_uncertainty(parts: WakeParts, v: Array, w: Array, density: float, dr
     cells = parts.tiles.circulations(v, w)
     unsplit = 0.5 * density * float(cells @ parts.among_cells @ cells)
     cut = parts._cut.doubled()
-    doubled = _parts(
-        parts.grid, parts.vortices, cut, cut.tiles(parts.grid), parts.reflection, parts._fits, parts._nominal
-    )
+    doubled = _parts(parts.grid, parts._measured, cut, cut.tiles(parts.grid), parts.reflection, parts._nominal)
     coarse = float(evaluate(doubled, v, w, density))
     return float(np.hypot(unsplit - drag, (coarse - drag) / _DOUBLING))
