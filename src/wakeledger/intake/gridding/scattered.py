@@ -285,15 +285,23 @@ def _interpolation(places: Array, tree: Any, cells: Array, *, stretch: Array) ->
         reach = distance[part, -1][:, None, None]
         offset = (places[index[part]] - cells[part, None, :]) / reach
         system = np.zeros((offset.shape[0], k + q, k + q))
-        system[:, :k, :k] = np.linalg.norm((offset[:, :, None, :] - offset[:, None, :, :]) * stretch, axis=-1) ** 3
+        true = offset * stretch
+        system[:, :k, :k] = _cube_of_length(
+            true[:, :, None, 0] - true[:, None, :, 0], true[:, :, None, 1] - true[:, None, :, 1]
+        )
         powers = np.stack([offset[..., 0] ** i * offset[..., 1] ** j for i, j in _POWERS], axis=-1)
         system[:, :k, k:] = powers
         system[:, k:, :k] = powers.transpose(0, 2, 1)
         # Keeps the system solvable where the neighbours happen to stand on few lines.
         system[:, range(k, k + q), range(k, k + q)] = -1e-12
         right = np.zeros((offset.shape[0], k + q, 1))
-        right[:, :k, 0] = np.linalg.norm(offset * stretch, axis=-1) ** 3
+        right[:, :k, 0] = _cube_of_length(true[..., 0], true[..., 1])
         right[:, k + _POWERS.index((0, 0)), 0] = 1.0
         weights[part] = np.linalg.solve(system, right)[:, :k, 0]
     rows = np.repeat(np.arange(cells.shape[0]), k)
     return sparse.csr_array((weights.ravel(), (rows, index.ravel())), shape=(cells.shape[0], places.shape[0]))
+
+
+def _cube_of_length(y: Array, z: Array) -> Array:
+    square = y * y + z * z
+    return square * np.sqrt(square)
