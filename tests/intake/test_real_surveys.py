@@ -60,7 +60,7 @@ def test_sampled_slice_of_a_flow_solution():
         {key: Column(name, "m") for key, name in names.items()},
         axes=np.eye(3),
     )
-    # "# U  POINT_DATA 8479" is the file's first line, its header the second, its first point "2 0 -0.00496467449 29.9…".
+    # "# U  POINT_DATA 8479" is the first line, the header the second, the first point "2 0 -0.00496467449 29.96…".
     assert points.n == 8479
     assert points.line[0] == 3
     assert points.z[0] == -0.00496467449
