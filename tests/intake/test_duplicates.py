@@ -1,5 +1,7 @@
 """Repeated points: those that agree within the noise pass, contradictions are refused with both lines."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -45,6 +47,13 @@ def test_stated_deviations_widen_what_is_allowed():
     check_duplicates(survey((3.0,), std=0.5))
     with pytest.raises(DataError):
         check_duplicates(survey((7.0,), std=0.5))
+
+
+def test_the_number_of_samples_narrows_it_again():
+    wide = survey((3.0,), std=2.0)
+    check_duplicates(wide)
+    with pytest.raises(DataError):
+        check_duplicates(replace(wide, samples=np.full(wide.n, 400)))
 
 
 def test_noise_free_data_allow_the_last_digit():

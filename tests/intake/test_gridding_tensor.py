@@ -1,5 +1,7 @@
 """Tensor grids: placement, averaging, gaps, resampling; truth from polynomials and a Gaussian vortex."""
 
+import pickle
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -164,6 +166,15 @@ def test_gaps_at_edges_and_corners_continue_planes():
     usable[:2, :2] = usable[0, 10:14] = usable[10:12, 29:] = False
     values = np.where(usable.ravel(), 1 + 2 * y - 3 * z, np.nan)
     np.testing.assert_allclose(make_gridding(y, z, usable.ravel()).apply(values).ravel(), 1 + 2 * y - 3 * z, atol=1e-11)
+
+
+def test_a_gridding_can_be_sent_to_another_process():
+    y, z = mesh(graded(21), graded(17))
+    usable = np.random.default_rng(5).random(y.size) > 0.1
+    gridding = make_gridding(y, z, usable)
+    before = gridding.apply(swirl(y, z))
+    copy = pickle.loads(pickle.dumps(gridding))
+    np.testing.assert_array_equal(copy.apply(swirl(y, z)), before)
 
 
 def test_large_gap_is_flagged_far_and_stays_bounded():

@@ -151,6 +151,7 @@ def fault(text, **parts):
         fault("# nothing\n# here\n", id="comments only", found="no data"),
         fault(table().replace("U,", "Ux,"), id="missing column", found="'U'", place="line 1", remedy="'Ux'"),
         fault(table().replace("U,", "u,"), id="case", found="'U'", place="line 1", remedy="did you mean 'u'?"),
+        fault(table().replace("U,", "U [m/s],"), id="unit in the name", found="'U'", remedy="did you mean 'U [m/s]'?"),
         fault("\n".join(rows()), id="no header", found="no header line", remedy='column = "3"'),
         fault(table().replace("41.0", "4l.0"), id="text", found="'4l.0'", place="line 3, column 'U'"),
         fault(table().replace("41.0", "4_1.0"), id="underscore", found="'4_1.0'", place="line 3, column 'U'"),

@@ -30,7 +30,7 @@ def check_duplicates(points: Points) -> None:
     ------
     DataError
         If two values at one place differ by more than 8 standard deviations of their difference; the standard deviation
-        comes from the file, or else from how far points scatter about a plane through their neighbours.
+        of a mean comes from the file, or else from how far points scatter about a plane through their neighbours.
     """
     label = _places(points.y, points.z)
     order = np.argsort(label, kind="stable")
@@ -44,7 +44,8 @@ def check_duplicates(points: Points) -> None:
         noise = max(_noise(points.y, points.z, values, label), _LEAST_NOISE * _magnitude(values))
         allowed = np.full(difference.shape, _CONTRADICTION * np.sqrt(2.0) * noise)
         if name in points.std:
-            given = np.hypot(points.std[name][first], points.std[name][second])
+            error = points.std[name] / (1.0 if points.samples is None else np.sqrt(points.samples))
+            given = np.hypot(error[first], error[second])
             allowed = np.fmax(allowed, _CONTRADICTION * given)
         wrong = np.flatnonzero(difference > allowed)
         if wrong.size:

@@ -8,6 +8,7 @@ any measurement also pay for the slope, which holds extrapolation within the ran
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -33,7 +34,17 @@ class GapFill:
     missing: NDArray[np.intp]
     used: NDArray[np.intp]
     _coupling: Any
-    _factor: Any
+    _normal: Any
+
+    @cached_property
+    def _factor(self) -> Any:
+        from scipy.sparse.linalg import splu
+
+        return splu(self._normal)
+
+    def __getstate__(self) -> dict[str, Any]:
+        """The system without its factors, which cannot be copied between processes; they are worked out again."""
+        return {name: value for name, value in self.__dict__.items() if name != "_factor"}
 
     def into(self, fields: Array) -> None:
         """Overwrite the missing cells of fields in place.
@@ -80,10 +91,8 @@ def make_gap_fill(measured: NDArray[np.bool_], y: Array, z: Array) -> GapFill:
     Returns
     -------
     GapFill
-        Holds the factorised sparse system, so that each further field costs one substitution.
+        Holds the sparse system, factorised on first use, so that each further field costs one substitution.
     """
-    from scipy.sparse.linalg import splu
-
     missing = np.flatnonzero(~measured)
     if not missing.size:
         return GapFill(missing, missing, None, None)
@@ -96,7 +105,7 @@ def make_gap_fill(measured: NDArray[np.bool_], y: Array, z: Array) -> GapFill:
     normal = (at_missing.T @ at_missing).tocsc()
     coupling = (-(at_missing.T @ at_known)).tocsc()
     used = np.flatnonzero(np.diff(coupling.indptr))
-    return GapFill(missing, np.flatnonzero(measured)[used], coupling[:, used].tocsr(), splu(normal))
+    return GapFill(missing, np.flatnonzero(measured)[used], coupling[:, used].tocsr(), normal)
 
 
 def _differences(x: Array, unit: float) -> tuple[Any, Any, Array, Array, Array]:

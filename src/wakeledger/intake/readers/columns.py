@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
@@ -132,7 +133,8 @@ def missing_column(name: str, present: list[str], *, what: str) -> DataError:
         Offering the nearest name and listing all; without file and place.
     """
     folded = {entry.casefold(): entry for entry in present}
-    close = folded.get(name.casefold()) or nearest(name, present)
+    longer = (entry for entry in present if re.match(re.escape(name) + r"\W", entry, re.IGNORECASE))
+    close = folded.get(name.casefold()) or next(longer, None) or nearest(name, present)
     guess = f"did you mean {close!r}? " if close else ""
     shown = [repr(entry) for entry in present if entry]
     listed = ", ".join(shown[:40]) + (f" and {len(shown) - 40} more" if len(shown) > 40 else "")
