@@ -128,7 +128,7 @@ def ledgers(draw, plane):
 def test_round_trip_of_any_ledger(tmp_path, ledger):
     small = ledger.plane.isel(y=slice(3), z=slice(2))
 
-    @settings(max_examples=25, deadline=None, suppress_health_check=[HealthCheck.too_slow])
+    @settings(max_examples=15, deadline=None, suppress_health_check=[HealthCheck.too_slow])
     @given(made=ledgers(small))
     def check(made):
         write_archive(made, tmp_path / "any.nc")

@@ -11,8 +11,10 @@ import pytest
 from matplotlib.image import AxesImage
 
 from wakeledger.core.flags import Flag
+from wakeledger.ledger.rows import BudgetLine
 from wakeledger.present import figures
 from wakeledger.present.figures import gallery
+from wakeledger.present.figures.budget import pooled_shares
 from wakeledger.present.figures.crosschecks import offsets
 
 
@@ -144,6 +146,20 @@ def test_axes_of_the_other_figures_have_units(drawn):
 def test_budget_bars_are_the_shares(drawn):
     widths = [bar.get_width() for bar in drawn["budget"].axes[0].patches]
     assert widths == pytest.approx([42, 27, 16, 10, 4, 1], rel=1e-9)
+
+
+def test_small_sources_are_pooled_and_unknown_ones_say_so(ledger):
+    shares = {"noise": 0.981, "a": 0.006, "b": 0.009, "c": 0.004}
+    lines = tuple(BudgetLine("lift", source, 0.1, share) for source, share in shares.items())
+    unknown = BudgetLine("total_drag", "mask", math.nan, math.nan)
+    poor = dataclasses.replace(ledger, budget=(*lines, unknown))
+    rows, sources, pooled = pooled_shares(poor)
+    assert rows == ["total_drag", "lift"]
+    assert sources == ["mask", "noise", "3 smaller sources"]
+    assert pooled["lift", "3 smaller sources"] == pytest.approx(1.9, rel=1e-9)
+    assert sum(share for (row, _), share in pooled.items() if row == "lift") == pytest.approx(100, rel=1e-9)
+    texts = [text.get_text() for text in figures.budget_figure(poor).axes[0].texts]
+    assert "unknown" in texts
 
 
 @pytest.mark.parametrize("kind", figures.FORMATS)

@@ -78,7 +78,12 @@ def vorticity_map(ledger: Ledger) -> Figure:
     Figure
     """
     xi = ledger.plane["axial_vorticity"].values
-    limit = max(float(np.nanpercentile(np.abs(xi), 99.0)), 1e-12)
+    inside = ledger.plane["wake_mask"].values > 0 if "wake_mask" in ledger.plane else np.ones(xi.shape, dtype=bool)
+    strong = np.abs(xi[inside & np.isfinite(xi)]) if inside.any() else np.abs(xi[np.isfinite(xi)])
+    quiet = np.abs(xi[~inside & np.isfinite(xi)])
+    # Four standard deviations of the scatter outside the wake stay pale, so that the wake stands out of the noise.
+    noise = 4 * 1.4826 * float(np.median(quiet)) if quiet.size else 0.0
+    limit = max(float(np.percentile(strong, 99.0)) if strong.size else 0.0, noise, 1e-12)
     shade = _Shade(xi, "axial vorticity, 1/s", "RdBu_r", -limit, limit, "both")
     return _map(ledger, "Axial vorticity and crossflow", shade, arrows=True)
 
