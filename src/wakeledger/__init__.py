@@ -1,0 +1,51 @@
+"""From a plane of flow data behind a body to drag, with error bars and cross-checks.
+
+Everything below is imported when it is first used, so ``import wakeledger`` is cheap.
+
+Examples
+--------
+>>> import wakeledger as wl
+>>> stream = wl.Reference(speed=42.0, density=1.185)
+>>> round(stream.dynamic_pressure, 2)
+1045.17
+"""
+
+from __future__ import annotations
+
+import importlib
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from wakeledger.core.estimate import Estimate
+    from wakeledger.core.plane import make_plane as plane
+    from wakeledger.ledger.archive import open_archive as open_ledger
+    from wakeledger.ledger.rows import Ledger
+    from wakeledger.physics import methods
+    from wakeledger.run.load import load as read_survey
+    from wakeledger.run.survey import reduce
+    from wakeledger.stream.reference import Reference
+
+_HOMES = {
+    "Estimate": ("wakeledger.core.estimate", "Estimate"),
+    "plane": ("wakeledger.core.plane", "make_plane"),
+    "open_ledger": ("wakeledger.ledger.archive", "open_archive"),
+    "Ledger": ("wakeledger.ledger.rows", "Ledger"),
+    "methods": ("wakeledger.physics.methods", None),
+    "read_survey": ("wakeledger.run.load", "load"),
+    "reduce": ("wakeledger.run.survey", "reduce"),
+    "Reference": ("wakeledger.stream.reference", "Reference"),
+}
+
+__all__ = ["Estimate", "Ledger", "Reference", "methods", "open_ledger", "plane", "read_survey", "reduce"]
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOMES:
+        raise AttributeError(f"module 'wakeledger' has no attribute {name!r}; it has {', '.join(__all__)}")
+    module, attribute = _HOMES[name]
+    home = importlib.import_module(module)
+    return home if attribute is None else getattr(home, attribute)
+
+
+def __dir__() -> list[str]:
+    return sorted([*globals(), *__all__])

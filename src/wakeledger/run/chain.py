@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from types import MappingProxyType
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -292,30 +293,35 @@ class Chain:
         grid = self.gridding.grid
         apply = self.gridding.apply
         v, w = apply(state.v), apply(state.w)
-        density, temperature = reference.density, np.nan
-        if self.settings.primary == "total_pressure" or reference.compressible:
+        u = apply(state.u)
+        density: Any = reference.density
+        total_temperature: Any = np.nan
+        measured_total = state.total_pressure if "total_pressure" in self.points.channels else None
+        if (
+            state.total_pressure is not None
+            and state.static_pressure is not None
+            and (self.settings.primary == "total_pressure" or reference.compressible)
+        ):
             total, static = apply(state.total_pressure), apply(state.static_pressure)
-            u = apply(state.u)
             if reference.compressible:
-                density, temperature = apply(state.density), apply(state.temperature)
+                density = apply(state.density)
+                warming = (u**2 + v**2 + w**2) / (2 * reference.heat_capacity)
+                total_temperature = apply(state.temperature) + warming
             else:
                 square = 2 * (total - static) / reference.density - v**2 - w**2
                 u = np.where(square > 0, np.sqrt(np.maximum(square, 0.0)), u)
         else:
-            u = apply(state.u)
             kinetic = 0.5 * reference.density * (u**2 + v**2 + w**2)
-            if state.static_pressure is not None:
+            # A measured total pressure comes first: a biased static pressure then costs almost nothing.
+            if measured_total is not None:
+                total = apply(measured_total)
+                static = total - kinetic
+            elif state.static_pressure is not None:
                 static = apply(state.static_pressure)
                 total = static + kinetic
-            elif state.total_pressure is not None:
-                total = apply(state.total_pressure)
-                static = total - kinetic
             else:
                 static = reference.static_pressure + crossflow_pressure(v, w, grid, density=reference.density)
                 total = static + kinetic
-        total_temperature = temperature
-        if reference.compressible:
-            total_temperature = temperature + (u**2 + v**2 + w**2) / (2 * reference.heat_capacity)
         return Flow(grid, u, v, w, total, static, density, total_temperature)
 
     def reduce(
@@ -488,7 +494,7 @@ class Chain:
             near_field = self.near_field(vorticity, grid)
         own = induced_crossflow(forces.stream_function, grid)
         outer = (~mask).astype(float)
-        offset = np.zeros(2)
+        offset: Array = np.zeros(2)
         if outer.sum() > 0:
             offset = crossflow_offset(flow.v, flow.w, own, near_field, outer)
         offset = offset + np.asarray(vary.crossflow_shift)

@@ -129,7 +129,7 @@ def net_circulation(reduction: Reduction) -> Check:
         "net_circulation",
         value,
         {
-            "pass": f"The line integral along the window's edge leaves {value:.1%} of the wake's circulation unbalanced.",
+            "pass": f"{value:.1%} of the wake's circulation is unbalanced along the window's edge.",
             "warn": f"{value:.1%} of the wake's circulation is unbalanced, so the induced drag depends on where the"
             " window ends; widen the survey on the side whose vortex is cut, or check the crossflow's calibration.",
         },
@@ -181,7 +181,8 @@ def edge_vorticity(reduction: Reduction) -> Check:
         {
             "pass": "The window encloses the wake's vorticity.",
             "warn": f"{value:.1%} of the wake's vorticity lies along the window's edge, most of it on the {side} side:"
-            " the survey does not enclose its wake; widen it there. Lift and induced drag are those of the part inside.",
+            " the survey does not enclose its wake; widen it there. Lift and induced drag are those of the part"
+            " inside.",
             "not_applicable": "No vorticity was found in the plane.",
         },
     )
@@ -252,8 +253,8 @@ def outer_flow(reduction: Reduction, facts: Facts) -> Check:
     yaw = math.degrees(math.atan2(reduction.crossflow_offset[0], reference.speed))
     found = (
         f"Outside the wake the total pressure is {-reduction.loss_zero:+.3g} Pa off the stream's"
-        f" ({worth / max(total, 1e-300):+.1%} of the drag; taken out) and the flow is turned by {pitch:+.2f} deg in pitch"
-        f" and {yaw:+.2f} deg in yaw (taken out of the energy form only)."
+        f" ({worth / max(total, 1e-300):+.1%} of the drag; taken out) and the flow is turned by {pitch:+.2f} deg in"
+        f" pitch and {yaw:+.2f} deg in yaw (taken out of the energy form only)."
     )
     check = _check("outer_flow", value, {"pass": found, "warn": f"{found} Check the total-pressure reference's drift."})
     turned = math.radians(math.hypot(pitch, yaw))
@@ -272,8 +273,8 @@ def missing_points(reduction: Reduction, facts: Facts) -> Check:
         iy = min(max(round((vortex.y - grid.y0) / grid.dy), 0), grid.ny - 1)
         if filled[iz, iy]:
             message = (
-                f"The centre of the vortex at y = {vortex.y:.4g} m, z = {vortex.z:.4g} m was not measured but filled in:"
-                " its circulation and induced drag are guesses; measure it again."
+                f"The centre of the vortex at y = {vortex.y:.4g} m, z = {vortex.z:.4g} m was not measured but filled"
+                " in: its circulation and induced drag are guesses; measure it again."
             )
             return Check("missing_points", "fail", max(value, LIMITS["missing_points"][1]), 0.02, message)
     total = float(filled.mean())

@@ -179,7 +179,8 @@ def _bias_of(chain: Chain, nominal: Reduction, noise: Noise) -> dict[str, float]
         found[energy] = 0.5 * density * float(grid.integrate(gain)) * sum(noise.outer_variance)
         white = noise.is_white and chain.gridding.kind == "uniform"
         if white and cuts is not None:
-            found[line] = wake_line_bias(cuts, *(np.full(grid.shape, x) for x in noise.variance), density)
+            by_v, by_w = (np.full(grid.shape, variance) for variance in noise.variance)
+            found[line] = wake_line_bias(cuts, by_v, by_w, density)
         if white and parts is not None:
             found[vortices] = vortex_sum_bias(parts, *noise.variance, density)
     if noise.fields is not None:
@@ -232,7 +233,8 @@ def _at_points(mask: Mask, chain: Chain) -> Mask:
     grid = chain.gridding.grid
     iz = np.clip(np.rint((chain.points.z - grid.z0) / grid.dz).astype(int), 0, grid.nz - 1)
     iy = np.clip(np.rint((chain.points.y - grid.y0) / grid.dy).astype(int), 0, grid.ny - 1)
-    return mask[iz, iy]
+    inside: Mask = mask[iz, iy]
+    return inside
 
 
 def _correlation(source: Source, chain: Chain) -> tuple[Array | None, Array | None] | None:

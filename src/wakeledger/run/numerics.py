@@ -27,7 +27,7 @@ LOSS_ZERO = "zero of the total pressure"
 OFFSET_ZERO = "zero of the flow angles"
 METHOD = "choices inside {}"
 
-#: Order of accuracy claimed when a decimated grid is extrapolated; between h/a = 0.5 and 1 the observed order is 4 to 8.
+#: Order claimed when a decimated grid is extrapolated; the observed order between h/a = 0.5 and 1 is 4 to 8.
 ORDER = 3.0
 #: Factors on the region's growth that bound the plausible choices.
 SWEEP = (0.5, 1.5)
@@ -76,7 +76,7 @@ def numerical_terms(
     tuple of NumericalTerm
         Over `wakeledger.run.chain.OUTPUTS`; terms that do not apply are left out.
     """
-    terms = [_mask_term(chain, nominal, noise), _resolution_term(chain, nominal)]
+    terms: list[NumericalTerm | None] = [_mask_term(chain, nominal, noise), _resolution_term(chain, nominal)]
     if chain.gridding.kind == "tensor":
         terms.append(_resampling_term(chain, nominal, regrid))
     if chain.gridding.filled.any():

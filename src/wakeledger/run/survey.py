@@ -21,6 +21,7 @@ from wakeledger.core.names import ROWS as ROW_TABLE
 from wakeledger.intake.gridding import Gridding, check_duplicates, make_gridding
 from wakeledger.intake.state import check_state
 from wakeledger.ledger.crosscheck import check_estimate, compare
+from wakeledger.ledger.inspection import Inspection
 from wakeledger.ledger.rows import BudgetLine, Comparison, CrossCheck, Ledger, Row
 from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
 from wakeledger.physics.loading.span import span_loading
@@ -43,12 +44,13 @@ from wakeledger.run.chain import (
 )
 from wakeledger.run.checks import Facts, all_checks
 from wakeledger.run.inputs import gradients, layouts, sources
+from wakeledger.run.inspection import inspection_of
 from wakeledger.run.load import SurveyInput, load, refuse_unsupported
 from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
 from wakeledger.run.numerics import numerical_terms
 from wakeledger.stream.reference import Reference
 
-__all__ = ["SurveyInput", "load", "reduce"]
+__all__ = ["SurveyInput", "inspect", "load", "prepare", "reduce"]
 
 Progress = Callable[[int, int], None]
 
@@ -131,6 +133,27 @@ def reduce(
     if prepared.sources:
         samples, budget = _propagate(prepared, terms, draws=count, seed=uncertainty.seed, progress=progress)
     return _ledger(survey, prepared, samples, budget, terms, command=command)
+
+
+def inspect(survey: SurveyInput) -> Inspection:
+    """Read, grid and check one survey without reducing it.
+
+    Parameters
+    ----------
+    survey : SurveyInput
+        From `load`.
+
+    Returns
+    -------
+    Inspection
+
+    Raises
+    ------
+    InputError
+        If the survey or its data are wrong.
+    """
+    prepared = prepare(survey)
+    return inspection_of(survey, prepared.chain, prepared.nominal, _facts(prepared), prepared.notes)
 
 
 def prepare(survey: SurveyInput) -> Prepared:
@@ -292,14 +315,14 @@ def _noises(
     if max(ratios) > 1.5 or min(ratios) < 1 / 1.5:
         declared_text = f"v {said[0]:.3g} m/s, w {said[1]:.3g} m/s"
         return noises, [
-            f"The crossflow's point-to-point noise shown by the data ({shown}) is not the declared one ({declared_text});"
-            " check the sources."
+            f"The crossflow's point-to-point noise shown by the data ({shown}) is not the declared one"
+            f" ({declared_text}); check the sources."
         ]
     return noises, []
 
 
 def _expected(chain: Chain, nominal: Reduction) -> dict[str, float]:
-    """What each estimate reads above the primary one because of the bound vortex, by the estimate applied to its field."""
+    """What each estimate reads above the primary one because of the bound vortex."""
     near = chain.frozen.near_field
     zero = dict.fromkeys((estimate_of(row, method) for row, method in ESTIMATES), 0.0)
     if near is None or not (np.any(near[0]) or np.any(near[1])):
@@ -405,13 +428,6 @@ def _ledger(
     if samples is not None:
         at = [OUTPUTS.index(name) for name in names]
         covariance = samples.covariance[np.ix_(at, at)]
-    facts = Facts(
-        vortices=prepared.vortices.vortices,
-        raw_spacing=max(prepared.chain.gridding.raw_spacing),
-        filled=prepared.chain.gridding.filled,
-        bias=prepared.chain.frozen.bias.get("induced_drag", math.nan),
-        loss_zero_uncertainty=prepared.outer.loss_zero_uncertainty,
-    )
     return Ledger(
         title=file.title,
         compressible=nominal.reference.compressible,
@@ -423,7 +439,7 @@ def _ledger(
         estimates=_crosschecks(prepared, rows, samples),
         comparisons=_comparisons(survey, prepared, rows),
         budget=_budget_lines(budget, names),
-        checks=all_checks(nominal, facts),
+        checks=all_checks(nominal, _facts(prepared)),
         notes=prepared.notes,
         test=file.test.given(),
         reference=tables.reference_scalars(nominal.reference),
@@ -441,6 +457,16 @@ def _ledger(
         ),
         inputs=dict(survey.inputs),
         provenance=tables.provenance(command),
+    )
+
+
+def _facts(prepared: Prepared) -> Facts:
+    return Facts(
+        vortices=prepared.vortices.vortices,
+        raw_spacing=max(prepared.chain.gridding.raw_spacing),
+        filled=prepared.chain.gridding.filled,
+        bias=prepared.chain.frozen.bias.get("induced_drag", math.nan),
+        loss_zero_uncertainty=prepared.outer.loss_zero_uncertainty,
     )
 
 

@@ -167,9 +167,10 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
     impossible = int(np.count_nonzero(nonphysical(state)))
     if impossible:
         found.append(f"{impossible} points have no real flow state and count as missing.")
+    grow = default_grow(gridding) if chain.settings.grow is None else chain.settings.grow
     found.append(
         f"The wake region is bounded at {chain.settings.level:g} times the noise of the smoothed loss and vorticity and"
-        f" grown by {1e3 * (chain.settings.grow if chain.settings.grow is not None else default_grow(gridding)):.3g} mm;"
+        f" grown by {1e3 * grow:.3g} mm;"
         f" it covers {region.mask.mean():.0%} of the window."
     )
     if chain.settings.include or chain.settings.exclude:
@@ -180,15 +181,15 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
     )
     pitch, yaw = (np.degrees(np.arctan2(nominal.crossflow_offset[k], nominal.reference.speed)) for k in (1, 0))
     found.append(
-        f"Outside the wake the flow is turned by {pitch:+.3f} deg in pitch and {yaw:+.3f} deg in yaw; that was taken out"
-        " of the energy form and the momentum balance, and the vorticity form does not see it."
+        f"Outside the wake the flow is turned by {pitch:+.3f} deg in pitch and {yaw:+.3f} deg in yaw; that was taken"
+        " out of the energy form and the momentum balance, and the vorticity form does not see it."
     )
     if survey.survey.plane.primary == "velocity" and state.static_pressure is None and state.total_pressure is None:
         found.append("No pressure was measured: the static pressure follows from the crossflow's momentum balance.")
     if nominal.invalid_area > 0:
         found.append(
-            f"Over {1e4 * nominal.invalid_area:.3g} cm2 the total pressure lies below the stream's static pressure; there"
-            " entropy_area takes the flow as brought to rest."
+            f"Over {1e4 * nominal.invalid_area:.3g} cm2 the total pressure lies below the stream's static pressure;"
+            " there entropy_area takes the flow as brought to rest."
         )
     return found
 

@@ -104,7 +104,7 @@ class _EdgeShape:
 
 @lru_cache(maxsize=8)
 def _edge_shape(grid: UniformGrid) -> _EdgeShape:
-    """The constant c in ψ = c − (Γ/2π) ln r + decaying multipoles is linear in ψ: the first row of a least-squares fit."""
+    """The constant c in ψ = c − (Γ/2π) ln r + decaying multipoles is linear in ψ: a row of a least-squares inverse."""
     y, z = grid.y, grid.z
     ys = np.concatenate([y, np.full(grid.nz, y[-1]), y[::-1], np.full(grid.nz, y[0])])
     zs = np.concatenate([np.full(grid.ny, z[0]), z, np.full(grid.ny, z[-1]), z[::-1]])

@@ -46,4 +46,5 @@ def divergence_drag(v: Array, w: Array, grid: UniformGrid, mask: Mask, *, densit
     count = np.maximum(np.count_nonzero(mask, axis=(-2, -1)), 1)
     sigma = np.where(mask, sigma - (sigma.sum(axis=(-2, -1)) / count)[..., None, None], 0.0)
     phi = velocity_potential(sigma, grid)
-    return -0.5 * density * grid.cell_area * np.einsum("...zy,...zy->...", phi, sigma)
+    drag: Array = -0.5 * density * grid.cell_area * np.einsum("...zy,...zy->...", phi, sigma)
+    return drag

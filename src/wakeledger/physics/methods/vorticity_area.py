@@ -104,7 +104,8 @@ def vorticity_forces(
 def vorticity_drag(v: Array, w: Array, grid: UniformGrid, mask: Mask, *, density: float) -> Array:
     """Induced drag ½ρ∬ψξ dA of a crossflow over a wake region, N, shape (...)."""
     xi = np.where(mask, axial_vorticity(v, w, grid), 0.0)
-    return 0.5 * density * grid.cell_area * np.einsum("...zy,...zy->...", stream_function(xi, grid), xi)
+    drag: Array = 0.5 * density * grid.cell_area * np.einsum("...zy,...zy->...", stream_function(xi, grid), xi)
+    return drag
 
 
 def vorticity_area(plane: xr.Dataset, reference: Reference, *, mask: Mask | None = None) -> tuple[Estimate, Estimate]:
