@@ -49,9 +49,11 @@ class EdgeState:
     side : {"port", "starboard", "lower", "upper"}
         Which edge.
     total_pressure_loss : float
-        Largest loss along it over the dynamic pressure; NaN where it was not measured.
+        Largest loss along it over the dynamic pressure, inside the wake region; zero where the region does not reach
+        the edge, NaN where it was not measured.
     vorticity : float
-        Largest absolute axial vorticity along it over the largest in the plane; NaN where it was not measured.
+        Largest absolute axial vorticity along it over the largest in the plane, inside the wake region; zero where the
+        region does not reach the edge, NaN where it was not measured.
     """
 
     side: str

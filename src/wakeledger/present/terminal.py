@@ -123,7 +123,7 @@ def inspection_text(inspection: Inspection, *, width: int = 100, colour: bool = 
             channels.add_row(words(channel.name), low, high, unit_text(channel.unit), noise, missing)
         console.print(channels)
     if inspection.edges:
-        _section(console, "Edges of the window")
+        _section(console, "Edges of the window, largest values inside the wake region")
         edges = _table(("edge", "left"), ("loss / q", "right"), ("vorticity / largest", "right"))
         for edge in inspection.edges:
             edges.add_row(edge.side, _figure(edge.total_pressure_loss, 2), _figure(edge.vorticity, 2))
