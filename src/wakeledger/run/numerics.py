@@ -163,7 +163,9 @@ def _gap_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gridding])
     gap = places[inside]
     if gap.size == 0:
         gap = _filled_places(chain)
-    for dy, dz in ((2, 0), (-2, 0), (0, 2), (0, -2), (2, 2), (-2, -2), (2, -2), (-2, 2)):
+    moves = ((2, 0), (-2, 0), (0, 2), (0, -2), (2, 2), (-2, -2), (2, -2), (-2, 2))
+    # Scattered points take seconds to grid anew.
+    for dy, dz in moves if chain.gridding.operators() is not None else moves[:2]:
         moved = gap + np.array([dy * step_y, dz * step_z])
         also_missing = _nearest(places, moved, (step_y, step_z))
         if not also_missing.any():

@@ -19,6 +19,7 @@ from wakeledger.core.estimate import Estimate
 from wakeledger.core.grid import Array
 from wakeledger.core.names import ROWS as ROW_TABLE
 from wakeledger.intake.gridding import Gridding, check_duplicates, make_gridding
+from wakeledger.intake.gridding.window import covered_window
 from wakeledger.intake.state import check_state
 from wakeledger.ledger.crosscheck import check_estimate, compare
 from wakeledger.ledger.inspection import Inspection
@@ -56,6 +57,8 @@ Progress = Callable[[int, int], None]
 
 #: Points per core length that the plane is resampled to where its own points are uneven.
 POINTS_PER_CORE = 2.0
+#: Most cells of a resampled plane.
+MOST_CELLS = 120_000
 #: Draws that tell the wake region's own effect from that of noise.
 _NOISE_DRAWS = 16
 _NO_SOURCE = "the survey file gives no uncertainty source"
@@ -272,7 +275,9 @@ class Regrid:
     ) -> Gridding:
         """Gridding with other usable points, another largest spacing (along y and z, m) or another spline degree."""
         chosen = self.usable if usable is None else usable
-        return make_gridding(self.y, self.z, chosen, row=self.row, spacing=spacing, degree=degree)
+        return covered_window(
+            make_gridding(self.y, self.z, chosen, row=self.row, spacing=spacing, degree=degree, max_cells=MOST_CELLS)
+        )
 
 
 def _vortices(nominal: Reduction) -> tuple[WakeParts, VortexSum]:

@@ -160,6 +160,17 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
     }
     found = [f"{survey.points.n} points on a {gridding.kind} grid, {ways[gridding.kind]} ({grid.ny} x {grid.nz})."]
     counts = decode(gridding.flag)
+    beyond = np.count_nonzero(
+        (survey.points.y < grid.y[0] - grid.dy)
+        | (survey.points.y > grid.y[-1] + grid.dy)
+        | (survey.points.z < grid.z[0] - grid.dz)
+        | (survey.points.z > grid.z[-1] + grid.dz)
+    )
+    if beyond:
+        found.append(
+            f"The plane was cut to the largest rectangle that the points cover, y {grid.y[0]:.4g} to"
+            f" {grid.y[-1]:.4g} m, z {grid.z[0]:.4g} to {grid.z[-1]:.4g} m; {beyond} points lie outside it."
+        )
     if gridding.filled.any():
         found.append(f"{int(gridding.filled.sum())} places without a usable point were filled from their neighbours.")
     if counts["averaged"]:
