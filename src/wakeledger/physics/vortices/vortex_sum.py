@@ -1,14 +1,15 @@
 """Induced drag as a sum over identified vortices and the rest of the wake.
 
 The crossflow is represented by Gaussian elements: one for each identified vortex, with its fitted centre and core and
-the circulation of a closed line integral, and one for each cell of the plane, with the line integral of the velocity
-around the cell less the share of the identified vortices in it. Whatever the vortices leave over thus stays in the sum,
-with its circulation and its place, so that neither depends on where a vortex is said to end. The drag is the closed
-double sum over the elements, self terms included. Nothing is differentiated and no Poisson equation is solved.
+the circulation of a closed line integral, and one for each of the overlapping cells that cover the plane, with the mean
+of the line integrals of the velocity around the cell less the share of the identified vortices in it. Whatever the
+vortices leave over thus stays in the sum, with its circulation and its place, so that neither depends on where a vortex
+is said to end. The drag is the closed double sum over the elements, self terms included. Nothing is differentiated and
+no Poisson equation is solved.
 
-A cell's element is a little wider than what it stands for: an even spread over the cell and a Gaussian of the cell's
-second moment each take ½ρΓ²(width² + height²)/(24 · area) off the energy, to first order. Both are put back in the
-cell's self term; between a cell and a vortex the sum uses the vortex's squared core less (width² + height²)/12.
+A cell's element is wider than what it stands for: the averaging over the cell and the Gaussian that is as wide as the
+cell each take ½ρΓ² s/(2 · area) off the energy, to first order in the sum s of the cell's second moments. Both are put
+back in the cell's self term; between a cell and a vortex the sum uses the vortex's squared core less s.
 """
 
 from __future__ import annotations
@@ -21,19 +22,21 @@ from numpy.typing import NDArray
 from scipy import sparse
 
 from wakeledger.core.grid import Array, UniformGrid
-from wakeledger.physics.fields.circulation import circle_weights
+from wakeledger.physics.fields.circulation import cell_circulations, circle_weights
 from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.gaussian_elements import Reflection, interaction_matrix
 from wakeledger.physics.fields.wake_region import wake_region
+from wakeledger.physics.vortices.cells import WakeCells, share_out
 from wakeledger.physics.vortices.identify import MeasuredVortex, Vortex, measured_vortices
-from wakeledger.physics.vortices.tiles import Tiles, cut_plane
 
 Mask = NDArray[np.bool_]
 
-#: Largest cell in units of the smallest core found.
-CELL_SIZE = 1.05
+#: Step of the wake's cells in units of the smallest core found, and in grid spacings where none is found.
+CELL_STEP = 1.0
+CELL_STEP_UNRESOLVED = 2.0
 #: Cells at most; beyond it they grow.
 MOST_CELLS = 2500
+_GROWTH = 1.1
 # Share of a vortex's squared core that is never taken off for the cells' size.
 _LEAST_CORE = 0.25
 # The error grows with at least the cell's square, so doubling the cells shows three times what is left.
@@ -73,11 +76,12 @@ class VortexSum:
     remainder_circulation : float
         Sum of |Γ| of the cells, less the vortices' share, m²/s.
     net_circulation : float
-        Sum of Γ over all elements, m²/s.
+        Line integral around the window's edge, m²/s; about zero where the survey encloses the wake of a body in free
+        air.
     cells : int
         Number of cells used.
-    cell_size : float
-        Side of the smallest cells (the longer one), m.
+    cell_step : float
+        Step of the wake's cells, m.
     reason : str or None
         Why there is no value.
     """
@@ -89,23 +93,21 @@ class VortexSum:
     remainder_circulation: float
     net_circulation: float
     cells: int
-    cell_size: float
+    cell_step: float
     reason: str | None = None
 
 
 @dataclass(frozen=True, eq=False)
-class _Cut:
-    """How the plane was cut, so that it can be cut again with other cells."""
+class _Sharing:
+    """How the plane was shared out, so that it can be done again with other cells."""
 
     mask: Mask
     excluded: Mask | None
-    intervals: tuple[int, int]
+    reflection: Reflection
+    step: float
 
-    def tiles(self, grid: UniformGrid) -> Tiles:
-        return cut_plane(grid, self.mask, self.intervals, excluded=self.excluded)
-
-    def doubled(self) -> _Cut:
-        return replace(self, intervals=(2 * self.intervals[0], 2 * self.intervals[1]))
+    def cells(self, grid: UniformGrid) -> WakeCells:
+        return share_out(grid, self.mask, self.step, excluded=self.excluded, reflection=self.reflection)
 
 
 @dataclass(frozen=True, eq=False)
@@ -118,7 +120,7 @@ class WakeParts:
         The grid.
     vortices : tuple of Vortex
         From port to starboard.
-    tiles : Tiles
+    cells : WakeCells
         Cells of the wake and of the outer flow.
     reflection : {"y", "z"} or None
         Plane of symmetry.
@@ -130,13 +132,13 @@ class WakeParts:
 
     grid: UniformGrid
     vortices: tuple[Vortex, ...]
-    tiles: Tiles
+    cells: WakeCells
     reflection: Reflection
     shares: Array
     among_vortices: Array
     with_cells: Array
     among_cells: Array
-    _cut: _Cut
+    _sharing: _Sharing
     _measured: tuple[MeasuredVortex, ...]
     _nominal: tuple[Array, Array]
 
@@ -201,57 +203,56 @@ def find_parts(
     found = measured_vortices(v, w, grid, mask=kept, u=u)
     if mask is None:
         mask = wake_region(np.zeros(grid.shape), axial_vorticity(v, w, grid), grid).mask
-    cut, tiles = _fitting_cut(grid, mask, excluded, [measured.vortex.core_radius for measured in found])
-    return _parts(grid, found, cut, tiles, reflection, (v, w))
+    sharing, cells = _sharing(grid, mask, excluded, reflection, [measured.vortex.core_radius for measured in found])
+    return _parts(grid, found, sharing, cells, reflection, (v, w))
 
 
-def _fitting_cut(grid: UniformGrid, mask: Mask, excluded: Mask | None, cores: list[float]) -> tuple[_Cut, Tiles]:
-    size = CELL_SIZE * min(cores) if cores else 0.0
-    along_y, along_z = max(1, int(size / grid.dy)), max(1, int(size / grid.dz))
+def _sharing(
+    grid: UniformGrid, mask: Mask, excluded: Mask | None, reflection: Reflection, cores: list[float]
+) -> tuple[_Sharing, WakeCells]:
+    spacing = max(grid.dy, grid.dz)
+    step = max(spacing, CELL_STEP * min(cores)) if cores else CELL_STEP_UNRESOLVED * spacing
     while True:
-        cut = _Cut(mask, excluded, (along_y, along_z))
-        tiles = cut.tiles(grid)
-        if tiles.count <= MOST_CELLS or along_y >= grid.ny - 1:
-            return cut, tiles
-        if along_y * grid.dy <= along_z * grid.dz:
-            along_y += 1
-        else:
-            along_z += 1
+        sharing = _Sharing(mask, excluded, reflection, step)
+        cells = sharing.cells(grid)
+        if cells.count <= MOST_CELLS:
+            return sharing, cells
+        step *= max(_GROWTH, float(np.sqrt(cells.count / MOST_CELLS)))
 
 
 def _parts(
     grid: UniformGrid,
     measured: tuple[MeasuredVortex, ...],
-    cut: _Cut,
-    tiles: Tiles,
+    sharing: _Sharing,
+    cells: WakeCells,
     reflection: Reflection,
     nominal: tuple[Array, Array],
 ) -> WakeParts:
     vortices = tuple(one.vortex for one in measured)
     y, z = np.array([x.y for x in vortices]), np.array([x.z for x in vortices])
     core_squared = np.array([x.core_radius**2 for x in vortices])
-    shares = np.empty((tiles.count, len(vortices)))
-    with_cells = np.empty((len(vortices), tiles.count))
-    spread = tiles.spread
+    shares = np.empty((cells.count, len(vortices)))
+    with_cells = np.empty((len(vortices), cells.count))
     for k, vortex in enumerate(vortices):
-        shares[:, k] = tiles.gaussian_share(vortex.y, vortex.z, vortex.core_radius)
-        taken_off = np.minimum(spread, (1 - _LEAST_CORE) * core_squared[k])
+        shares[:, k] = cells.gaussian_share(vortex.y, vortex.z, vortex.core_radius)
+        size = core_squared[k] - np.minimum(cells.spread, (1 - _LEAST_CORE) * core_squared[k])
         centre_y, centre_z, point = y[k : k + 1], z[k : k + 1], np.zeros(1)
-        with_cells[k] = interaction_matrix(
-            tiles.y, tiles.z, core_squared[k] - taken_off, centre_y, centre_z, point, reflection=reflection
-        )[:, 0]
-    among_cells = interaction_matrix(tiles.y, tiles.z, spread, tiles.y, tiles.z, spread, reflection=reflection)
-    among_cells[np.diag_indices_from(among_cells)] += spread / tiles.area
+        facing = interaction_matrix(cells.y, cells.z, size, centre_y, centre_z, point, reflection=reflection)
+        with_cells[k] = facing[:, 0]
+    among_cells = interaction_matrix(
+        cells.y, cells.z, cells.spread, cells.y, cells.z, cells.spread, reflection=reflection
+    )
+    among_cells[np.diag_indices_from(among_cells)] += cells.spread / cells.area
     return WakeParts(
         grid=grid,
         vortices=vortices,
-        tiles=tiles,
+        cells=cells,
         reflection=reflection,
         shares=shares,
         among_vortices=interaction_matrix(y, z, core_squared, y, z, core_squared, reflection=reflection),
         with_cells=with_cells,
         among_cells=among_cells,
-        _cut=cut,
+        _sharing=sharing,
         _measured=measured,
         _nominal=nominal,
     )
@@ -275,7 +276,7 @@ def evaluate(parts: WakeParts, v: Array, w: Array, density: float | Array) -> Ar
         D_i, N. The nominal vortices stay where they are; every change of the field is carried by the cells, so the
         result is an exact quadratic form of the velocities.
     """
-    cells = parts.tiles.circulations(v, w)
+    cells = parts.cells.circulations(v, w)
     quadratic = np.einsum("...i,...i->...", cells @ parts.among_cells, cells)
     total = quadratic + 2 * (cells @ parts._linear) + parts._constant
     result: Array = 0.5 * np.asarray(density) * total
@@ -299,12 +300,12 @@ def sensitivities(parts: WakeParts, v: Array, w: Array, density: float) -> tuple
     by_v, by_w : ndarray, shape (nz, ny)
         ∂D_i/∂v and ∂D_i/∂w, N s/m, exact for the quadratic form of `evaluate`.
     """
-    tiles = parts.tiles
-    by_cell = density * (parts.among_cells @ tiles.circulations(v, w) + parts._linear)
+    cells = parts.cells
+    by_cell = density * (parts.among_cells @ cells.circulations(v, w) + parts._linear)
     out = []
-    for matrix in (tiles.from_v, tiles.from_w):
+    for matrix in (cells.from_v, cells.from_w):
         flat = np.zeros(parts.grid.nz * parts.grid.ny)
-        flat[tiles.points] = matrix.T @ by_cell
+        flat[cells.points] = matrix.T @ by_cell
         out.append(flat.reshape(parts.grid.shape))
     return out[0], out[1]
 
@@ -370,11 +371,11 @@ def noise_bias(parts: WakeParts, variance_v: Array | float, variance_w: Array | 
     float
         ½ρ tr(K C), C the covariance of the cells' circulations, N.
     """
-    tiles = parts.tiles
+    cells = parts.cells
     shape = parts.grid.shape
     total = 0.0
-    for matrix, variance in ((tiles.from_v, variance_v), (tiles.from_w, variance_w)):
-        weights = np.broadcast_to(np.asarray(variance, float), shape).ravel()[tiles.points]
+    for matrix, variance in ((cells.from_v, variance_v), (cells.from_w, variance_w)):
+        weights = np.broadcast_to(np.asarray(variance, float), shape).ravel()[cells.points]
         covariance = sparse.csr_array((matrix * weights[None, :]) @ matrix.T)
         total += float(covariance.multiply(parts.among_cells).sum())
     return 0.5 * density * total
@@ -437,8 +438,7 @@ def summarise(parts: WakeParts, v: Array, w: Array, density: float) -> VortexSum
     -------
     VortexSum
     """
-    tiles = parts.tiles
-    cells = tiles.circulations(v, w)
+    cells = parts.cells.circulations(v, w)
     gamma = parts.strengths
     remainder = cells - parts.shares @ gamma
     drag = float(evaluate(parts, v, w, density))
@@ -450,18 +450,18 @@ def summarise(parts: WakeParts, v: Array, w: Array, density: float) -> VortexSum
         vortices=parts.vortices,
         vortex_circulation=float(np.abs(gamma).sum()),
         remainder_circulation=float(np.abs(remainder).sum()),
-        net_circulation=float(gamma.sum() + remainder.sum()),
-        cells=tiles.count,
-        cell_size=float(max((tiles.y_high - tiles.y_low).min(), (tiles.z_high - tiles.z_low).min())),
+        net_circulation=float(cell_circulations(v, w, parts.grid).sum()),
+        cells=parts.cells.count,
+        cell_step=parts._sharing.step,
         reason=reason,
     )
 
 
 def _method_uncertainty(parts: WakeParts, v: Array, w: Array, density: float, drag: float) -> float:
     """Change of the drag without a split and with cells twice as large, the second scaled to what is left."""
-    cells = parts.tiles.circulations(v, w)
+    cells = parts.cells.circulations(v, w)
     unsplit = 0.5 * density * float(cells @ parts.among_cells @ cells)
-    cut = parts._cut.doubled()
-    doubled = _parts(parts.grid, parts._measured, cut, cut.tiles(parts.grid), parts.reflection, parts._nominal)
+    sharing = replace(parts._sharing, step=2 * parts._sharing.step)
+    doubled = _parts(parts.grid, parts._measured, sharing, sharing.cells(parts.grid), parts.reflection, parts._nominal)
     coarse = float(evaluate(doubled, v, w, density))
     return float(np.hypot(unsplit - drag, (coarse - drag) / _DOUBLING))
