@@ -26,6 +26,9 @@ from wakeledger.intake.gridding.record import Gridding
 
 _NEIGHBOURS = 30
 _POWERS = [(i, j) for i in range(4) for j in range(4 - i)]
+_LINEAR_POWERS = [(0, 0), (1, 0), (0, 1)]
+#: Weights that miss a polynomial by more than this belong to neighbours that do not carry it.
+_MISSED = 1e-6
 _CHUNK = 4096
 #: Points closer than this share of the typical spacing are one place.
 _SAME_PLACE = 0.02
@@ -277,29 +280,41 @@ def _interpolation(places: Array, tree: Any, cells: Array, *, stretch: Array) ->
     Neighbours are the nearest in units of the spacing along each axis, so that they surround the cell; the radial
     functions count true distance, which `stretch` brings back.
     """
-    k, q = min(_NEIGHBOURS, places.shape[0]), len(_POWERS)
+    k = min(_NEIGHBOURS, places.shape[0])
     distance, index = tree.query(cells, k)
     weights = np.empty((cells.shape[0], k))
     for begin in range(0, cells.shape[0], _CHUNK):
         part = slice(begin, begin + _CHUNK)
         reach = distance[part, -1][:, None, None]
         offset = (places[index[part]] - cells[part, None, :]) / reach
-        system = np.zeros((offset.shape[0], k + q, k + q))
-        true = offset * stretch
-        system[:, :k, :k] = _cube_of_length(
-            true[:, :, None, 0] - true[:, None, :, 0], true[:, :, None, 1] - true[:, None, :, 1]
-        )
-        powers = np.stack([offset[..., 0] ** i * offset[..., 1] ** j for i, j in _POWERS], axis=-1)
-        system[:, :k, k:] = powers
-        system[:, k:, :k] = powers.transpose(0, 2, 1)
-        # Keeps the system solvable where the neighbours happen to stand on few lines.
-        system[:, range(k, k + q), range(k, k + q)] = -1e-12
-        right = np.zeros((offset.shape[0], k + q, 1))
-        right[:, :k, 0] = _cube_of_length(true[..., 0], true[..., 1])
-        right[:, k + _POWERS.index((0, 0)), 0] = 1.0
-        weights[part] = np.linalg.solve(system, right)[:, :k, 0]
+        found, missed = _local_weights(offset, offset * stretch, _POWERS)
+        poor = np.flatnonzero(missed > _MISSED)
+        if poor.size:
+            # Neighbours on one circle (the innermost of a polar traverse) or on few lines carry no cubic polynomial.
+            found[poor] = _local_weights(offset[poor], offset[poor] * stretch, _LINEAR_POWERS)[0]
+        weights[part] = found
     rows = np.repeat(np.arange(cells.shape[0]), k)
     return sparse.csr_array((weights.ravel(), (rows, index.ravel())), shape=(cells.shape[0], places.shape[0]))
+
+
+def _local_weights(offset: Array, true: Array, polynomials: list[tuple[int, int]]) -> tuple[Array, Array]:
+    """Weights of the neighbours of each cell, shape (cells, k), and by how much they miss the polynomials there."""
+    k, q = offset.shape[1], len(polynomials)
+    system = np.zeros((offset.shape[0], k + q, k + q))
+    system[:, :k, :k] = _cube_of_length(
+        true[:, :, None, 0] - true[:, None, :, 0], true[:, :, None, 1] - true[:, None, :, 1]
+    )
+    powers = np.stack([offset[..., 0] ** i * offset[..., 1] ** j for i, j in polynomials], axis=-1)
+    system[:, :k, k:] = powers
+    system[:, k:, :k] = powers.transpose(0, 2, 1)
+    # Keeps the system solvable where the neighbours do not tell all polynomials apart.
+    system[:, range(k, k + q), range(k, k + q)] = -1e-12
+    right = np.zeros((offset.shape[0], k + q, 1))
+    right[:, :k, 0] = _cube_of_length(true[..., 0], true[..., 1])
+    right[:, k + polynomials.index((0, 0)), 0] = 1.0
+    weights = np.linalg.solve(system, right)[:, :k, 0]
+    missed: Array = np.abs(np.einsum("ckq,ck->cq", powers, weights) - right[:, k:, 0]).max(axis=1)
+    return weights, missed
 
 
 def _cube_of_length(y: Array, z: Array) -> Array:
