@@ -159,7 +159,7 @@ def point_state(
     if primary not in {"total_pressure", "velocity"}:
         raise ValueError(f"primary must be 'total_pressure' or 'velocity', {primary!r} was given")
     given = {
-        name: _absolute(np.asarray(channels[name], dtype=float), kinds.get(name), reference)
+        name: absolute(np.asarray(channels[name], dtype=float), kinds.get(name), reference)
         for name in _MEASURED
         if name in channels
     }
@@ -183,8 +183,23 @@ class _Parts:
     used: tuple[str, ...]
 
 
-def _absolute(values: Array, kind: Channel | None, reference: Stream) -> Array:
-    """Undo the normalisation, then the division by density, then the subtraction of a reference pressure."""
+def absolute(values: Array, kind: Channel | None, reference: Stream) -> Array:
+    """Undo what was done to a variable before it was written.
+
+    Parameters
+    ----------
+    values : ndarray, shape (..., n)
+        As written, SI.
+    kind : Channel or None
+        What it is measured against; None for an absolute value.
+    reference : Stream
+        The undisturbed stream.
+
+    Returns
+    -------
+    ndarray, shape (..., n)
+        The normalisation undone, then the division by density, then the subtraction of a reference pressure.
+    """
     if kind is None:
         return values
     if kind.normalised_by == "speed":

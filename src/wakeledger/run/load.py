@@ -82,7 +82,14 @@ def load_survey(survey: Survey) -> SurveyInput:
 
     plane = survey.plane
     file = survey.resolve(plane.file)
-    points = read_points(file, plane.columns, axes=plane.axes.matrix(), std=plane.std, samples=plane.samples)
+    points = read_points(
+        file,
+        plane.columns,
+        axes=plane.axes.matrix(),
+        std=plane.std,
+        samples=plane.samples,
+        coordinates=2 if survey.section is None else 1,
+    )
     digest = hashlib.sha256(file.read_bytes()).hexdigest()
     return SurveyInput(survey, points, {survey.path.name: survey.sha256, plane.file: digest})
 

@@ -32,6 +32,7 @@ def read_points(
     axes: Array,
     std: Mapping[str, Column] = _NO_STD,
     samples: Column | None = None,
+    coordinates: int = 2,
 ) -> Points:
     """Read the points of one plane from a file.
 
@@ -49,6 +50,8 @@ def read_points(
         Standard deviation of the samples at each point, by variable.
     samples : Column, optional
         Number of samples behind each point.
+    coordinates : {1, 2}
+        How many positions across the stream place a point; with one, as of a line traverse, the other is 0.
 
     Returns
     -------
@@ -65,7 +68,7 @@ def read_points(
     wanted = dict(columns) | {f"std.{name}": column for name, column in std.items()}
     if samples is not None:
         wanted["samples"] = samples
-    _require_positions(columns, axes, file)
+    _require_positions(columns, axes, file, coordinates)
     raw = _READERS[recognise(file)](file, wanted)
     named = _named(wanted)
     _refuse_infinite(raw, named, file)
@@ -130,7 +133,7 @@ def _wind_axis(axes: Array, target: int) -> tuple[str, float]:
     return "xyz"[source], float(np.sign(axes[target, source]))
 
 
-def _require_positions(columns: Mapping[str, Column], axes: Array, file: Path) -> None:
+def _require_positions(columns: Mapping[str, Column], axes: Array, file: Path, coordinates: int) -> None:
     given = [key for key in POSITIONS if key in columns]
     polar = {"r", "theta"} & set(given)
     if polar:
@@ -141,9 +144,10 @@ def _require_positions(columns: Mapping[str, Column], axes: Array, file: Path) -
                 remedy="give either r and theta, or two of x, y, z, in [plane.columns]",
             )
         return
-    for target, name in ((1, "y (to starboard)"), (2, "z (up)")):
-        letter, _ = _wind_axis(axes, target)
-        if letter not in columns:
+    across = [(_wind_axis(axes, target)[0], name) for target, name in ((1, "y (to starboard)"), (2, "z (up)"))]
+    absent = [(letter, name) for letter, name in across if letter not in columns]
+    for letter, name in absent:
+        if len(absent) > 2 - coordinates:
             raise DataError(
                 f"the position along the file's {letter} axis, which is the wind axis {name}, has no column",
                 file=file,
@@ -177,7 +181,8 @@ def _positions(raw: RawColumns, columns: Mapping[str, Column], axes: Array, file
         y, z = si["r"] * np.cos(si["theta"]), si["r"] * np.sin(si["theta"])
     else:
         (letter_y, sign_y), (letter_z, sign_z) = _wind_axis(axes, 1), _wind_axis(axes, 2)
-        y, z = sign_y * si[letter_y] + 0.0, sign_z * si[letter_z] + 0.0
+        still = np.zeros(raw.line.size)
+        y, z = sign_y * si.get(letter_y, still) + 0.0, sign_z * si.get(letter_z, still) + 0.0
     letter, _ = _wind_axis(axes, 0)
     if letter in si:
         _refuse_several_planes(si[letter], float(max(np.ptp(y), np.ptp(z))), columns[letter].column, file)
