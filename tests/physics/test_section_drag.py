@@ -1,5 +1,6 @@
 """Section drag against tables of the compressible formula, exact wakes, and a computed airfoil wake of known drag."""
 
+import importlib
 import math
 import os
 from pathlib import Path
@@ -10,7 +11,6 @@ import pytest
 
 from wakeledger.core.errors import DataError
 from wakeledger.physics.fields.traverse_window import TAIL, edge_levels, wake_edges
-from wakeledger.physics.methods import section_drag as section
 from wakeledger.physics.methods.section_kernels import (
     KERNELS,
     betz,
@@ -20,6 +20,9 @@ from wakeledger.physics.methods.section_kernels import (
     window_weights,
 )
 from wakeledger.stream.reference import Reference, resolve_reference
+
+# The package offers the function of the same name.
+section = importlib.import_module("wakeledger.physics.methods.section_drag")
 
 #: q = 1 Pa, so that drags are drag coefficients on a chord of 1 m.
 UNIT = Reference(speed=1.0, density=2.0)

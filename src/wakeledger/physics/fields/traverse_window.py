@@ -181,7 +181,7 @@ def wake_edges(
     )
 
 
-def edge_levels(coordinate: Array, values: Array, window: WakeWindow) -> tuple[float, float]:
+def edge_levels(coordinate: Array, values: Array, window: WakeWindow, *, reach: float = 0.25) -> tuple[float, float]:
     """Value of a quantity at the two edges of the wake, from the flow just outside it.
 
     Parameters
@@ -190,21 +190,49 @@ def edge_levels(coordinate: Array, values: Array, window: WakeWindow) -> tuple[f
         The traverse, ascending.
     window : WakeWindow
         The wake.
+    reach : float
+        How far outside each edge points count, relative to the wake's width.
 
     Returns
     -------
     lower, upper : float
-        A straight line through the points within a quarter of the wake's width outside each edge, read at the edge;
-        where there are fewer than four of them, the value on the traverse at the edge.
+        A straight line through the points that count, read at the edge; where there are fewer than four of them, the
+        value on the traverse at the edge.
     """
     found = []
     for edge, sign in ((window.lower, -1.0), (window.upper, 1.0)):
         distance = sign * (coordinate - edge)
-        outside = (distance >= 0.0) & (distance <= 0.25 * window.width)
+        outside = (distance >= 0.0) & (distance <= reach * window.width)
         if np.count_nonzero(outside) < 4:
             found.append(float(np.interp(edge, coordinate, values)))
         else:
             found.append(_line(distance[outside], values[outside], _cells(distance[outside] * sign))[0])
+    return found[0], found[1]
+
+
+def outer_levels(coordinate: Array, values: Array, window: WakeWindow, *, reach: float = 1.5) -> tuple[float, float]:
+    """Mean of a quantity in the outer flow on each side of the wake.
+
+    Parameters
+    ----------
+    coordinate, values : ndarray, shape (n,)
+        The traverse, ascending.
+    window : WakeWindow
+        The wake.
+    reach : float
+        How far outside each edge points count, relative to the wake's width. The tenth of the width next to the edge
+        does not, so that what is left of the wake's tail stays out.
+
+    Returns
+    -------
+    lower, upper : float
+        NaN on a side with fewer than four such points.
+    """
+    found = []
+    for edge, sign in ((window.lower, -1.0), (window.upper, 1.0)):
+        distance = sign * (coordinate - edge) / window.width
+        outside = (distance >= 0.1) & (distance <= reach)
+        found.append(float(values[outside].mean()) if np.count_nonzero(outside) >= 4 else math.nan)
     return found[0], found[1]
 
 

@@ -79,7 +79,7 @@ def jones(
     """
     total = _total_temperature(total_temperature, reference)
     density, speed = _state(total_pressure, static_pressure, total, reference)
-    recovered = _speed(total_pressure, reference.static_pressure, total, reference)
+    recovered = speed_at(total_pressure, reference.static_pressure, total, reference)
     return _integral(density * speed * (reference.speed - recovered), coordinate, weights)
 
 
@@ -174,7 +174,7 @@ def _total_temperature(given: Array | None, reference: Reference) -> Array | flo
     return reference.total_temperature if given is None else given
 
 
-def _speed(total: Array | float, static: Array | float, total_temperature: Array | float, ref: Reference) -> Array:
+def speed_at(total: Array | float, static: Array | float, total_temperature: Array | float, ref: Reference) -> Array:
     """Speed of the isentropic state between two pressures, m/s; zero where the static pressure is the higher one."""
     if not ref.compressible:
         square = 2.0 * (np.asarray(total) - static) / ref.density
@@ -188,7 +188,7 @@ def _state(
     total: Array, static: Array, total_temperature: Array | float, ref: Reference
 ) -> tuple[Array | float, Array]:
     """Density, kg/m³, and speed, m/s."""
-    speed = _speed(total, static, total_temperature, ref)
+    speed = speed_at(total, static, total_temperature, ref)
     if not ref.compressible:
         return ref.density, speed
     temperature = total_temperature - 0.5 * speed * speed / ref.heat_capacity
