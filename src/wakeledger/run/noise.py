@@ -98,8 +98,8 @@ def declared_noise(
         inner = tuple(float(mean_square[k][known & wake].mean()) if (known & wake).any() else 0.0 for k in range(2))
         outer = tuple(float(mean_square[k][known].mean()) for k in range(2))
         correlation = _correlation(source, chain)
-        closed = correlation is not None
-        fields = None if closed and correlation == (None, None) else chain.gridding.apply(np.nan_to_num(errors))
+        independent = correlation is not None and all(matrix is None for matrix in correlation)
+        fields = None if independent else chain.gridding.apply(np.nan_to_num(errors))
         found.append(Noise(source.name, inner, outer, correlation or (None, None), fields))  # type: ignore[arg-type]
     return tuple(found)
 
