@@ -1,0 +1,143 @@
+"""Checks: each passes on a good survey, and warns or fails on the survey it is there for."""
+
+import math
+from dataclasses import dataclass, replace
+
+import numpy as np
+import pytest
+
+from wakeledger.core.grid import UniformGrid
+from wakeledger.core.names import CHECKS
+from wakeledger.physics.fields.differences import axial_vorticity
+from wakeledger.physics.fields.flow import Flow
+from wakeledger.physics.fields.wake_region import wake_region
+from wakeledger.physics.methods.vorticity_area import vorticity_forces
+from wakeledger.run import checks
+from wakeledger.run.chain import OUTPUTS, Reduction
+from wakeledger.stream.reference import Reference
+from wakeledger.synthetic.aircraft import wing_wake
+
+STREAM = Reference(speed=42.0, density=1.185, static_pressure=100.6e3)
+WAKE = wing_wake(STREAM)
+
+
+@dataclass(frozen=True)
+class Core:
+    y: float = 0.47
+    z: float = 0.0
+    core_radius: float = 0.03
+
+
+def reduction(grid=None, *, u_shift=0.0, loss_shift=0.0, offset=(0.0, 0.0)):
+    grid = grid or UniformGrid(-0.81, -0.36, 0.012, 0.012, 136, 61)
+    state = WAKE.state_on(grid)
+    flow = Flow(grid, state.u + u_shift, state.v, state.w, state.total_pressure, state.static_pressure, STREAM.density)
+    xi = axial_vorticity(state.v, state.w, grid)
+    region = wake_region(STREAM.total_pressure - state.total_pressure, xi, grid)
+    inside = np.where(region.mask, xi, 0.0)
+    values = dict.fromkeys(OUTPUTS, math.nan) | WAKE.truth.rows()
+    none = np.zeros(grid.shape)
+    return Reduction(
+        STREAM,
+        flow,
+        region,
+        inside,
+        vorticity_forces(inside, grid, STREAM),
+        none,
+        none,
+        loss_shift,
+        offset,
+        values,
+        0.0,
+        (0.0, 0.0),
+    )
+
+
+def facts(nominal, **changes):
+    plain = checks.Facts((Core(),), 0.012, np.zeros(nominal.flow.grid.shape, bool), 0.001, 0.01)
+    return replace(plain, **changes)
+
+
+GOOD = reduction()
+
+
+def test_a_good_survey_passes_every_check_in_the_ledgers_order():
+    found = checks.all_checks(GOOD, facts(GOOD))
+    assert tuple(check.name for check in found) == CHECKS
+    assert {check.verdict for check in found} == {"pass"}
+    assert all(check.limit == checks.LIMITS[check.name][0] for check in found)
+    assert all(0 <= check.value <= check.limit for check in found)
+
+
+def test_a_window_that_cuts_the_starboard_vortex_is_reported():
+    cut = reduction(UniformGrid(-0.81, -0.36, 0.012, 0.012, 106, 61))
+    found = {check.name: check for check in checks.all_checks(cut, facts(cut))}
+    assert found["edge_vorticity"].verdict == "fail"
+    assert "starboard" in found["edge_vorticity"].message
+    assert found["net_circulation"].verdict == "fail"
+
+
+def test_a_window_that_cuts_the_wake_below_names_the_lower_edge():
+    cut = reduction(UniformGrid(-0.81, -0.03, 0.012, 0.012, 136, 34))
+    check = checks.edge_total_pressure_loss(cut)
+    assert check.verdict in ("warn", "fail")
+    assert "lower" in check.message
+
+
+@pytest.mark.parametrize(("shift", "verdict"), [(0.0, "pass"), (0.2, "warn"), (-2.0, "fail")])
+def test_axial_velocity_off_the_streams(shift, verdict):
+    check = checks.mass_balance(reduction(u_shift=shift))
+    assert check.verdict == verdict
+    if shift:
+        assert check.value == pytest.approx(abs(shift) / STREAM.speed, rel=0.1)
+
+
+@pytest.mark.parametrize(("spacing", "verdict"), [(0.012, "pass"), (0.030, "warn"), (0.060, "fail")])
+def test_core_resolution(spacing, verdict):
+    check = checks.core_resolution(facts(GOOD, raw_spacing=spacing))
+    assert check.verdict == verdict
+    assert check.value == pytest.approx(spacing / 0.03)
+    assert checks.core_resolution(facts(GOOD, vortices=())).verdict == "not_applicable"
+
+
+@pytest.mark.parametrize(("share", "verdict"), [(0.01, "pass"), (0.05, "warn"), (0.3, "fail")])
+def test_noise_bias(share, verdict):
+    bias = share * float(GOOD.forces.induced_drag)
+    assert checks.noise_bias(GOOD, facts(GOOD, bias=bias)).verdict == verdict
+    assert checks.noise_bias(GOOD, facts(GOOD, bias=math.nan)).verdict == "not_applicable"
+
+
+def test_outer_flow_warns_of_a_drifted_reference_and_of_a_turned_probe():
+    worth = GOOD.region.mask.sum() * GOOD.flow.grid.cell_area
+    drift = 0.1 * GOOD.values["total_drag"] / worth
+    assert checks.outer_flow(reduction(loss_shift=drift), facts(GOOD)).verdict == "warn"
+    assert checks.outer_flow(reduction(loss_shift=-4 * drift), facts(GOOD)).verdict == "fail"
+    turned = checks.outer_flow(reduction(offset=(0.0, STREAM.speed * math.radians(0.8))), facts(GOOD))
+    assert turned.verdict == "warn"
+    assert "+0.80 deg in pitch" in turned.message
+    assert turned.value > turned.limit
+
+
+def test_missing_points_fail_where_a_core_was_filled_in():
+    grid = GOOD.flow.grid
+    filled = np.zeros(grid.shape, bool)
+    filled[0, 0] = True
+    assert checks.missing_points(GOOD, facts(GOOD, filled=filled)).verdict == "pass"
+    filled[round((0.0 - grid.z0) / grid.dz), round((0.47 - grid.y0) / grid.dy)] = True
+    core = checks.missing_points(GOOD, facts(GOOD, filled=filled))
+    assert core.verdict == "fail"
+    assert "y = 0.47 m" in core.message
+    many = np.zeros(grid.shape, bool)
+    many[GOOD.region.mask] = np.arange(GOOD.region.mask.sum()) % 20 == 0
+    assert checks.missing_points(GOOD, facts(GOOD, filled=many, vortices=())).verdict == "warn"
+
+
+def test_a_plane_without_vorticity_says_so():
+    still = replace(
+        GOOD,
+        vorticity=np.zeros(GOOD.flow.grid.shape),
+        forces=vorticity_forces(np.zeros(GOOD.flow.grid.shape), GOOD.flow.grid, STREAM),
+    )
+    assert checks.net_circulation(still).verdict == "not_applicable"
+    assert checks.edge_vorticity(still).verdict == "not_applicable"
+    assert all(check.message for check in checks.all_checks(still, facts(still, vortices=())))
