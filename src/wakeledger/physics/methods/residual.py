@@ -35,8 +35,20 @@ def residual_drag(flow: Flow, reference: Reference, loss_free: Array, mask: Mask
     divergence_part, axial_part : ndarray
         −½ρ∬φσ dA and −½ρ∬(u* − U)² dA. The mean divergence of the region is taken out first: a net source has no
         decaying potential in an unbounded plane.
+
+    Notes
+    -----
+    In compressible flow the axial part is −∬[ρu(u* − U) + (p − p∞) + ½ρ∞(v² + w²)] dA, what the profile drag and the
+    crossflow leave of the momentum balance. It holds −½ρ∞(1 − M²)(u* − U)² and also, of the same order, the loss times
+    the axial disturbance, which the incompressible Betz integrand counts as profile drag.
     """
-    axial_part = flow.grid.integrate(np.where(mask, axial_integrand(loss_free, reference), 0.0))
+    if reference.compressible:
+        axial = -flow.density * flow.u * (loss_free - reference.speed)
+        axial = axial - (flow.static_pressure - reference.static_pressure)
+        axial = axial - 0.5 * reference.density * (flow.v**2 + flow.w**2)
+    else:
+        axial = axial_integrand(loss_free, reference)
+    axial_part = flow.grid.integrate(np.where(mask, axial, 0.0))
     return divergence_drag(flow.v, flow.w, flow.grid, mask, density=reference.density), axial_part
 
 
