@@ -10,7 +10,12 @@ import pytest
 from scipy.special import erf
 
 from wakeledger.core.grid import UniformGrid
-from wakeledger.physics.fields.circulation import CrossflowSpline, cell_circulations, circle_weights
+from wakeledger.physics.fields.circulation import (
+    CrossflowSpline,
+    cell_circulations,
+    cell_circulations_adjoint,
+    circle_weights,
+)
 from wakeledger.physics.fields.gaussian_elements import element_velocity, induced_drag_of_elements, pair_logarithm
 from wakeledger.synthetic.elements import GaussianElements
 
@@ -166,3 +171,14 @@ def test_wing_tip_survey_circulation_from_the_windows_edge() -> None:
     inflow = CrossflowSpline(v, w, y, z).around_rectangle((y[0], y[-1]), (z[0], z[-1]))
     # About zero: 0.002 in size (DERIVED).
     assert abs(inflow) < 0.003
+
+
+def test_the_adjoint_of_the_cells_is_their_transpose() -> None:
+    rng = np.random.default_rng(9)
+    for ny, nz in ((31, 17), (6, 12)):
+        grid = UniformGrid(0.0, 0.0, 0.02, 0.03, ny, nz)
+        v, w = rng.standard_normal((2, nz, ny))
+        weights = rng.standard_normal((nz - 1, ny - 1))
+        by_v, by_w = cell_circulations_adjoint(weights, grid)
+        forward = (weights * cell_circulations(v, w, grid)).sum()
+        assert (by_v * v + by_w * w).sum() == pytest.approx(forward, rel=1e-11)

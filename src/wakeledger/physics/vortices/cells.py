@@ -18,11 +18,10 @@ from numpy.typing import NDArray
 from scipy import ndimage, sparse, special
 
 from wakeledger.core.grid import Array, UniformGrid
-from wakeledger.physics.fields.circulation import interval_weights
+from wakeledger.physics.fields.circulation import cell_circulations, cell_circulations_adjoint, interval_weights
 from wakeledger.physics.fields.gaussian_elements import Reflection
 
 Mask = NDArray[np.bool_]
-Indices = NDArray[np.intp]
 
 #: Step of the outer flow's tents in units of the wake's.
 OUTER_STEP = 4.0
@@ -33,6 +32,8 @@ _MARGIN = 1.0
 # The outer flow counts 1 − s⁴, s its distance from the wake over that from the wake to the edge: flat at first, so that
 # vorticity that a mask has missed still counts.
 _FADING = 4
+# Points worked on at once.
+_BATCH = 60_000
 # Weights that cancel but for rounding, and cells with next to no weight.
 _CANCELLED = 1e-12
 _EMPTY = 1e-6
@@ -54,10 +55,6 @@ class WakeCells:
         Sum of the second moments along y and z about the centre, m²: a² of the Gaussian that is as wide.
     weights : sparse array, shape (n, (nz − 1)(ny − 1))
         Weight of each cell on the squares between grid points.
-    points : ndarray of int, shape (p,)
-        Flat indices of the grid points that count.
-    from_v, from_w : sparse array, shape (n, p)
-        Circulations, m²/s, from the velocities at those points, m/s.
     """
 
     grid: UniformGrid
@@ -66,9 +63,6 @@ class WakeCells:
     area: Array
     spread: Array
     weights: sparse.csr_array
-    points: Indices
-    from_v: sparse.csr_array
-    from_w: sparse.csr_array
 
     @property
     def count(self) -> int:
@@ -89,10 +83,42 @@ class WakeCells:
             Γ, m²/s, counter-clockwise positive.
         """
         v, w = np.asarray(v, float), np.asarray(w, float)
-        size = v.shape[-2] * v.shape[-1]
-        flat_v, flat_w = (np.take(f.reshape(-1, size), self.points, axis=1) for f in (v, w))
-        result: Array = np.asarray(self.from_v @ flat_v.T + self.from_w @ flat_w.T).T
-        return result.reshape(*v.shape[:-2], self.count)
+        lead, shape = v.shape[:-2], v.shape[-2:]
+        stacked_v, stacked_w = v.reshape(-1, *shape), w.reshape(-1, *shape)
+        out = np.empty((stacked_v.shape[0], self.count))
+        # A few planes at a time stay in the processor's cache.
+        batch = max(1, _BATCH // (shape[0] * shape[1]))
+        for start in range(0, out.shape[0], batch):
+            part = slice(start, start + batch)
+            squares = cell_circulations(stacked_v[part], stacked_w[part], self.grid)
+            out[part] = (self.weights @ squares.reshape(squares.shape[0], -1).T).T
+        return out.reshape(*lead, self.count)
+
+    def velocity_derivatives(self, by_cell: Array) -> tuple[Array, Array]:
+        """Derivatives of Σ by_cell Γ with respect to v and w, two arrays of shape (nz, ny)."""
+        squares = (self.weights.T @ by_cell).reshape(self.grid.nz - 1, self.grid.ny - 1)
+        return cell_circulations_adjoint(squares, self.grid)
+
+    def covariance(self, variance_v: Array | float, variance_w: Array | float) -> sparse.csr_array:
+        """Covariance of the circulations from independent noise of the velocities.
+
+        Parameters
+        ----------
+        variance_v, variance_w : float or ndarray, shape (nz, ny)
+            Variances at the grid points, m²/s².
+
+        Returns
+        -------
+        sparse array, shape (n, n)
+            m⁴/s².
+        """
+        grid = self.grid
+        along_y, along_z = interval_weights(grid.ny) * grid.dy, interval_weights(grid.nz) * grid.dz
+        # v runs along the lower edge to starboard and back along the upper one; w up one side and down the other.
+        from_v = _clean(self.weights @ sparse.kron(-_steps(grid.nz), along_y, format="csr"))
+        from_w = _clean(self.weights @ sparse.kron(along_z, _steps(grid.ny), format="csr"))
+        spread_v, spread_w = (np.broadcast_to(x, grid.shape).ravel()[None, :] for x in (variance_v, variance_w))
+        return sparse.csr_array((from_v * spread_v) @ from_v.T + (from_w * spread_w) @ from_w.T)
 
     def gaussian_share(self, y: float, z: float, core: float) -> Array:
         """Share of one Gaussian vortex's circulation that falls to each cell, shape (n,).
@@ -163,22 +189,7 @@ def _with_moments(grid: UniformGrid, weights: sparse.csr_array) -> WakeCells:
     square = weights @ ((yy - middle_y) ** 2 + (zz - middle_z) ** 2) / total
     own = (grid.dy**2 + grid.dz**2) / 12
     spread = square - (y - middle_y) ** 2 - (z - middle_z) ** 2 + own
-    along_y, along_z = interval_weights(grid.ny) * grid.dy, interval_weights(grid.nz) * grid.dz
-    # v runs along the lower edge to starboard and back along the upper one; w up the starboard edge, down the port one.
-    from_v = _clean(weights @ sparse.kron(-_steps(grid.nz), along_y, format="csr"))
-    from_w = _clean(weights @ sparse.kron(along_z, _steps(grid.ny), format="csr"))
-    points = np.unique(np.concatenate([from_v.indices, from_w.indices])).astype(np.intp)
-    return WakeCells(
-        grid=grid,
-        y=y,
-        z=z,
-        area=total * grid.cell_area,
-        spread=spread,
-        weights=weights,
-        points=points,
-        from_v=sparse.csr_array(from_v[:, points]),
-        from_w=sparse.csr_array(from_w[:, points]),
-    )
+    return WakeCells(grid=grid, y=y, z=z, area=total * grid.cell_area, spread=spread, weights=weights)
 
 
 def _tents(grid: UniformGrid, step: float) -> sparse.csr_array:

@@ -264,16 +264,17 @@ def _first_guess(spline: CrossflowSpline, grid: UniformGrid, y: float, z: float)
     if room < 1.5 * spacing:
         return None
     radii = np.geomspace(0.75 * spacing, room, max(8, int(np.log(room / spacing) / np.log(1.12)) + 1))
-    swirl = np.abs(spline.around_circle(y, z, radii)) / (2 * np.pi * radii)
-    best = 0
-    for i in range(1, radii.size):
-        if swirl[i] > swirl[best]:
-            best = i
-        elif swirl[i] < _SWIRL_DROP * swirl[best]:
+    best_radius, best_swirl = 0.0, 0.0
+    for radius in radii:
+        swirl = float(spline.around_circle(y, z, radius)) / (2 * np.pi * radius)
+        if abs(swirl) > abs(best_swirl):
+            best_radius, best_swirl = float(radius), swirl
+        elif abs(swirl) < _SWIRL_DROP * abs(best_swirl):
             break
-    core = float(radii[best]) / PEAK_RADIUS
-    sign = np.sign(float(spline.around_circle(y, z, radii[best])))
-    return float(sign * 2 * np.pi * core * swirl[best] / PEAK_SWIRL), core
+    if best_swirl == 0:
+        return None
+    core = best_radius / PEAK_RADIUS
+    return 2 * np.pi * core * best_swirl / PEAK_SWIRL, core
 
 
 def _roundness(v: Array, w: Array, grid: UniformGrid, at_y: float, at_z: float, core: float) -> float:

@@ -19,7 +19,6 @@ from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
 
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.circulation import cell_circulations, circle_weights
@@ -300,14 +299,8 @@ def sensitivities(parts: WakeParts, v: Array, w: Array, density: float) -> tuple
     by_v, by_w : ndarray, shape (nz, ny)
         ∂D_i/∂v and ∂D_i/∂w, N s/m, exact for the quadratic form of `evaluate`.
     """
-    cells = parts.cells
-    by_cell = density * (parts.among_cells @ cells.circulations(v, w) + parts._linear)
-    out = []
-    for matrix in (cells.from_v, cells.from_w):
-        flat = np.zeros(parts.grid.nz * parts.grid.ny)
-        flat[cells.points] = matrix.T @ by_cell
-        out.append(flat.reshape(parts.grid.shape))
-    return out[0], out[1]
+    by_cell = density * (parts.among_cells @ parts.cells.circulations(v, w) + parts._linear)
+    return parts.cells.velocity_derivatives(by_cell)
 
 
 def vortex_draws(parts: WakeParts, v: Array, w: Array) -> VortexDraws:
@@ -371,14 +364,8 @@ def noise_bias(parts: WakeParts, variance_v: Array | float, variance_w: Array | 
     float
         ½ρ tr(K C), C the covariance of the cells' circulations, N.
     """
-    cells = parts.cells
-    shape = parts.grid.shape
-    total = 0.0
-    for matrix, variance in ((cells.from_v, variance_v), (cells.from_w, variance_w)):
-        weights = np.broadcast_to(np.asarray(variance, float), shape).ravel()[cells.points]
-        covariance = sparse.csr_array((matrix * weights[None, :]) @ matrix.T)
-        total += float(covariance.multiply(parts.among_cells).sum())
-    return 0.5 * density * total
+    covariance = parts.cells.covariance(variance_v, variance_w)
+    return 0.5 * density * float(covariance.multiply(parts.among_cells).sum())
 
 
 def vortex_sum(
