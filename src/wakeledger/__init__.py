@@ -17,26 +17,28 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from wakeledger.core.estimate import Estimate
-    from wakeledger.core.plane import make_plane as plane
+    from wakeledger.core.plane import plane
     from wakeledger.ledger.archive import open_archive as open_ledger
     from wakeledger.ledger.rows import Ledger
     from wakeledger.physics import methods
+    from wakeledger.physics.fields.flow import find_wake
     from wakeledger.run.load import load as read_survey
     from wakeledger.run.survey import reduce
     from wakeledger.stream.reference import Reference
 
 _HOMES = {
     "Estimate": ("wakeledger.core.estimate", "Estimate"),
-    "plane": ("wakeledger.core.plane", "make_plane"),
+    "plane": ("wakeledger.core.plane", "plane"),
     "open_ledger": ("wakeledger.ledger.archive", "open_archive"),
     "Ledger": ("wakeledger.ledger.rows", "Ledger"),
+    "find_wake": ("wakeledger.physics.fields.flow", "find_wake"),
     "methods": ("wakeledger.physics.methods", None),
     "read_survey": ("wakeledger.run.load", "load"),
     "reduce": ("wakeledger.run.survey", "reduce"),
     "Reference": ("wakeledger.stream.reference", "Reference"),
 }
 
-__all__ = ["Estimate", "Ledger", "Reference", "methods", "open_ledger", "plane", "read_survey", "reduce"]
+__all__ = ["Estimate", "Ledger", "Reference", "find_wake", "methods", "open_ledger", "plane", "read_survey", "reduce"]
 
 
 def __getattr__(name: str) -> Any:

@@ -58,6 +58,62 @@ def make_plane(
     return dataset
 
 
+def plane(dataset: xr.Dataset, *, station: float = float("nan")) -> xr.Dataset:
+    """Check a dataset of one's own and bring it to SI.
+
+    Parameters
+    ----------
+    dataset : Dataset
+        Dimensions z and y with uniform ascending coordinates; variables of `wakeledger.core.names.PLANE_VARIABLES`,
+        each with a ``units`` attribute, in wind axes. Coordinates without units are in m.
+    station : float
+        Distance of the plane behind the trailing edge, m.
+
+    Returns
+    -------
+    Dataset
+        A new plane in SI, stamped from the names table; variables of other names are left out.
+
+    Raises
+    ------
+    DataError
+        If a coordinate is missing or not uniform, a variable has no units or ones of another dimension, or nothing is
+        known in it.
+    """
+    from wakeledger.core.units import UnitError, conversion
+
+    axes = {}
+    for name in ("y", "z"):
+        if name not in dataset.coords:
+            raise DataError(f"the dataset has no coordinate {name}", remedy="give y (to starboard) and z (up)")
+        scale, _ = conversion(str(dataset[name].attrs.get("units", "m")), "m")
+        axes[name] = scale * np.asarray(dataset[name].values, dtype=float)
+    try:
+        grid = UniformGrid.from_axes(axes["y"], axes["z"])
+    except ValueError as error:
+        raise DataError(str(error)) from error
+    fields: dict[str, NDArray[np.generic]] = {}
+    for name in map(str, dataset.data_vars):
+        if name not in PLANE_VARIABLES:
+            continue
+        array, meaning = dataset[name], PLANE_VARIABLES[name]
+        values = array.transpose("z", "y").values
+        if meaning.unit == "1":
+            fields[name] = values
+            continue
+        if "units" not in array.attrs:
+            raise DataError(f"{name} has no units", remedy=f"set its units attribute, as in {meaning.unit!r}")
+        try:
+            scale, offset = conversion(str(array.attrs["units"]), meaning.unit)
+        except UnitError as error:
+            raise DataError(f"{name}: {error.found}", remedy=error.remedy) from error
+        fields[name] = scale * np.asarray(values, dtype=float) + offset
+    if not fields:
+        known = ", ".join(PLANE_VARIABLES)
+        raise DataError("the dataset has no variable with a known name", remedy=f"known names: {known}")
+    return make_plane(grid, fields, station=station)
+
+
 def grid_of(plane: xr.Dataset) -> UniformGrid:
     """The uniform grid of a plane.
 

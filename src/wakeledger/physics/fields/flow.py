@@ -9,7 +9,10 @@ import numpy as np
 
 from wakeledger.core.errors import DataError
 from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.core.names import stamp
 from wakeledger.core.plane import array_of, grid_of
+from wakeledger.physics.fields.differences import axial_vorticity
+from wakeledger.physics.fields.wake_region import wake_region
 from wakeledger.stream.reference import Reference
 
 if TYPE_CHECKING:
@@ -82,6 +85,40 @@ def mask_of(plane: xr.Dataset) -> np.ndarray[Any, np.dtype[np.bool_]]:
         If the plane has no wake_mask.
     """
     if "wake_mask" not in plane:
-        raise DataError("the plane has no wake_mask", remedy="find it with wakeledger.wake_region first")
+        raise DataError("the plane has no wake_mask", remedy="find it with wakeledger.find_wake first")
     mask: np.ndarray[Any, np.dtype[np.bool_]] = plane["wake_mask"].transpose("z", "y").values.astype(bool)
     return mask
+
+
+def find_wake(plane: xr.Dataset, reference: Reference, *, level: float = 3.0, grow: float | None = None) -> xr.Dataset:
+    """A labelled plane with its wake region marked.
+
+    Parameters
+    ----------
+    plane : Dataset
+        With v, w and total_pressure.
+    reference : Reference
+        The undisturbed stream.
+    level : float
+        Boundary level in standard deviations of the smoothed fields' noise.
+    grow : float, optional
+        How far the region is grown beyond the level, m; four spacings unless given.
+
+    Returns
+    -------
+    Dataset
+        The plane with ``wake_mask``.
+
+    Raises
+    ------
+    DataError
+        If the plane lacks a variable or is not uniform.
+    """
+    import xarray as xr
+
+    grid = grid_of(plane)
+    loss = reference.total_pressure - array_of(plane, "total_pressure")
+    vorticity = axial_vorticity(array_of(plane, "v"), array_of(plane, "w"), grid)
+    region = wake_region(loss, vorticity, grid, level=level, grow=grow)
+    mask = xr.DataArray(region.mask.astype(np.int8), dims=("z", "y"))
+    return plane.assign(wake_mask=stamp(mask, "wake_mask"))
