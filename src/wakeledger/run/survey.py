@@ -25,6 +25,7 @@ from wakeledger.ledger.crosscheck import check_estimate, compare
 from wakeledger.ledger.inspection import Inspection
 from wakeledger.ledger.rows import BudgetLine, Comparison, CrossCheck, Ledger, Row
 from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
+from wakeledger.physics.fields.wake_region import region_of
 from wakeledger.physics.loading.span import span_loading
 from wakeledger.physics.methods.energy_area import crossflow_energy
 from wakeledger.physics.methods.entropy_area import expansion_doubt
@@ -222,14 +223,14 @@ def _prepare(survey: SurveyInput) -> Prepared:
     gridding = regrid()
     chain = Chain(points, gridding, settings)
     first = chain.reduce(estimates=False)
-    parts, vortices = _vortices(first)
+    parts, vortices = _vortices(first, settings)
     if gridding.kind != "uniform" and vortices.vortices:
         finer = min(vortex.core_radius for vortex in vortices.vortices) / POINTS_PER_CORE
         if finer < 0.98 * max(gridding.grid.dy, gridding.grid.dz):
             gridding = regrid(spacing=(min(finer, gridding.grid.dy), min(finer, gridding.grid.dz)))
             chain = Chain(points, gridding, settings)
             first = chain.reduce(estimates=False)
-            parts, vortices = _vortices(first)
+            parts, vortices = _vortices(first, settings)
     near_field = chain.near_field(first.vorticity, first.flow.grid)
     line = _line(first)
     kept = None if math.isnan(vortices.induced_drag) else parts
@@ -280,9 +281,10 @@ class Regrid:
         )
 
 
-def _vortices(nominal: Reduction) -> tuple[WakeParts, VortexSum]:
+def _vortices(nominal: Reduction, settings: Settings) -> tuple[WakeParts, VortexSum]:
     flow = nominal.flow
-    parts = find_parts(flow.v, flow.w, flow.grid, mask=nominal.region.mask, u=flow.u)
+    excluded = region_of(settings.exclude, flow.grid) if settings.exclude else None
+    parts = find_parts(flow.v, flow.w, flow.grid, mask=nominal.region.mask, excluded=excluded, u=flow.u)
     return parts, summarise(parts, flow.v, flow.w, nominal.reference.density)
 
 
