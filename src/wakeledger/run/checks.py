@@ -106,7 +106,8 @@ def all_checks(reduction: Reduction, facts: Facts) -> tuple[Check, ...]:
     )
 
 
-def _verdict(name: str, value: float) -> CheckVerdict:
+def verdict_of(name: str, value: float) -> CheckVerdict:
+    """Verdict that a value earns against the limits of a check; not applicable where it is NaN."""
     warn, fail = LIMITS[name]
     if math.isnan(value):
         return "not_applicable"
@@ -116,7 +117,7 @@ def _verdict(name: str, value: float) -> CheckVerdict:
 
 
 def _check(name: str, value: float, messages: dict[str, str]) -> Check:
-    verdict = _verdict(name, value)
+    verdict = verdict_of(name, value)
     return Check(name, verdict, value, LIMITS[name][0], messages[verdict] if verdict in messages else messages["warn"])
 
 

@@ -4,8 +4,10 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
+from typing import Protocol
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy.interpolate import RegularGridInterpolator
 
 from wakeledger.confidence.sources import InputLayout, Source
@@ -21,7 +23,15 @@ from wakeledger.stream.reference import Reference
 SAMPLES_SOURCE = "scatter of the samples"
 
 
-def layouts(survey: Survey, points: Points, gridding: Gridding, names: Sequence[str]) -> dict[str, InputLayout]:
+class HasRows(Protocol):
+    """Knows the traverse row of each point: a gridding, or the places of a line."""
+
+    @property
+    def row_index(self) -> NDArray[np.int64]:
+        """Row of each point, shape (n,)."""
+
+
+def layouts(survey: Survey, points: Points, gridding: HasRows, names: Sequence[str]) -> dict[str, InputLayout]:
     """Nominal values, places and rows of the inputs that some source acts on.
 
     Parameters
@@ -30,7 +40,7 @@ def layouts(survey: Survey, points: Points, gridding: Gridding, names: Sequence[
         The survey file.
     points : Points
         The points as read.
-    gridding : Gridding
+    gridding : HasRows
         Knows the traverse row of each point.
     names : sequence of str
         The inputs wanted, as ``applies_to`` writes them.

@@ -63,7 +63,7 @@ def inspection_of(
         channels=_channels(chain, nominal),
         edges=_edges(nominal),
         checks=checks,
-        recommendations=_recommendations(checks),
+        recommendations=recommendations(checks),
         notes=notes,
         reference=tables.reference_scalars(nominal.reference),
         test=survey.survey.test.given(),
@@ -108,7 +108,8 @@ def _edges(nominal: Reduction) -> tuple[EdgeState, ...]:
     )
 
 
-def _recommendations(checks: tuple[Check, ...]) -> tuple[str, ...]:
+def recommendations(checks: tuple[Check, ...]) -> tuple[str, ...]:
+    """What to do about the checks that did not pass, the failed ones first."""
     wrong = [check for check in checks if check.verdict in ("warn", "fail")]
     if not wrong:
         return ("The survey is complete and encloses its wake: it may be reduced, and the next point taken.",)

@@ -1,0 +1,197 @@
+"""From the outputs of a chain and their draws to the records of the ledger; the same for areas and for sections."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+
+from wakeledger.confidence.budget import Budget
+from wakeledger.confidence.samples import Samples
+from wakeledger.core.errors import InputError
+from wakeledger.core.estimate import Estimate
+from wakeledger.core.names import ROWS
+from wakeledger.ledger.crosscheck import check_estimate, compare
+from wakeledger.ledger.rows import BudgetLine, Comparison, CrossCheck, Row
+from wakeledger.run.chain import coefficient_of, estimate_of
+from wakeledger.run.config import Survey
+
+NO_SOURCE = "the survey file gives no uncertainty source"
+
+
+def ledger_row(
+    name: str, values: Mapping[str, float], samples: Samples | None, *, reason: str = NO_SOURCE
+) -> Row | None:
+    """One row with its uncertainty.
+
+    Parameters
+    ----------
+    name : str
+        Name of the row.
+    values : mapping of str to float
+        The chain's outputs.
+    samples : Samples or None
+        Their draws, numerical terms included; None where there are none.
+    reason : str
+        Why there are none.
+
+    Returns
+    -------
+    Row or None
+        None where the value cannot be had.
+    """
+    value = values[name]
+    if math.isnan(value):
+        return None
+    coefficient = values.get(coefficient_of(name), math.nan)
+    unknown = (math.nan, math.nan, math.nan, math.nan)
+    unit = ROWS[name].unit
+    if samples is None:
+        return Row(name, value, unit, *unknown, coefficient, math.nan, reason=reason)
+    at = samples.names.index(name)
+    why = samples.unknown[at]
+    if why:
+        return Row(name, value, unit, *unknown, coefficient, math.nan, reason=why)
+    u = float(samples.standard_uncertainty[at])
+    half_width = float(samples.interval().half_width[at])
+    coefficient_u = math.nan
+    if math.isfinite(coefficient):
+        coefficient_u = float(samples.standard_uncertainty[samples.names.index(coefficient_of(name))])
+    return Row(
+        name,
+        value,
+        unit,
+        standard_uncertainty=u,
+        expanded_uncertainty=half_width,
+        coverage_factor=half_width / u if u > 0 else math.nan,
+        degrees_of_freedom=float(samples.draws - 1),
+        coefficient=coefficient,
+        coefficient_standard_uncertainty=coefficient_u,
+    )
+
+
+def cross_check(
+    row: Row,
+    method: str,
+    value: float,
+    samples: Samples | None,
+    *,
+    expected: float,
+    expected_uncertainty: float,
+    reason: str | None = None,
+    same_algebra: str | None = None,
+    no_samples: str = NO_SOURCE,
+) -> CrossCheck:
+    """One other method's estimate held against its row.
+
+    Parameters
+    ----------
+    row : Row
+        The row.
+    method : str
+        The other method.
+    value : float
+        Its estimate, in the row's unit.
+    samples : Samples or None
+        Draws of the chain's outputs; None where there are none.
+    expected, expected_uncertainty : float
+        What it is expected to read above the row, and the standard uncertainty of that, same unit.
+    reason : str, optional
+        Why the estimate is unknown, where it is.
+    same_algebra : str, optional
+        Why it is not independent, where it is not.
+    no_samples : str
+        Why there are no draws, where there are none.
+
+    Returns
+    -------
+    CrossCheck
+    """
+    u = difference_u = math.nan
+    if samples is not None:
+        at, primary = samples.names.index(estimate_of(row.name, method)), samples.names.index(row.name)
+        u = float(samples.standard_uncertainty[at])
+        variance = samples.covariance[at, at] + samples.covariance[primary, primary]
+        variance -= 2 * samples.covariance[at, primary]
+        difference_u = math.sqrt(max(float(variance), 0.0) + expected_uncertainty**2)
+    estimate = Estimate(
+        row.name,
+        method,
+        value,
+        standard_uncertainty=u,
+        expected_difference=expected,
+        reason=reason or (no_samples if samples is None else None),
+    )
+    return check_estimate(estimate, row, difference_uncertainty=difference_u, same_algebra=same_algebra)
+
+
+def comparisons(survey: Survey, rows: Sequence[Row], scales: Mapping[str, float]) -> tuple[Comparison, ...]:
+    """The values of ``[[compare]]`` held against the rows.
+
+    Parameters
+    ----------
+    survey : Survey
+        The survey file.
+    rows : sequence of Row
+        The rows of the ledger.
+    scales : mapping of str to float
+        Force, or moment, of a unit coefficient by row, in the row's unit.
+
+    Returns
+    -------
+    tuple of Comparison
+
+    Raises
+    ------
+    InputError
+        If a row that is to be compared is not in the ledger.
+    """
+    by_name = {row.name: row for row in rows}
+    found = []
+    for entry in survey.compare:
+        if entry.row not in by_name:
+            raise InputError(
+                f"row {entry.row!r} is not in this ledger",
+                file=survey.path,
+                place=f"[[compare]] ({entry.name}) row",
+                remedy=f"it has {', '.join(by_name)}",
+            )
+        uncertainty = entry.standard_uncertainty
+        if uncertainty is None:
+            uncertainty = entry.coefficient_standard_uncertainty
+        found.append(
+            compare(
+                by_name[entry.row],
+                name=entry.name,
+                value=entry.value,
+                coefficient=entry.coefficient,
+                coefficient_scale=scales.get(entry.row, math.nan),
+                standard_uncertainty=math.nan if uncertainty is None else uncertainty,
+                as_measured=entry.as_measured or "whole",
+            )
+        )
+    return tuple(found)
+
+
+def budget_lines(budget: Budget | None, names: Sequence[str]) -> tuple[BudgetLine, ...]:
+    """The budget of some rows.
+
+    Parameters
+    ----------
+    budget : Budget or None
+        The budget of all outputs.
+    names : sequence of str
+        The rows wanted.
+
+    Returns
+    -------
+    tuple of BudgetLine
+        A numerical term that does not touch a row is no line of its budget; a declared source is, even at zero.
+    """
+    if budget is None:
+        return ()
+    return tuple(
+        BudgetLine(line.row, line.source, line.standard_uncertainty, line.share)
+        for name in names
+        for line in budget.of(name)
+        if not (line.how == "numerical" and line.standard_uncertainty == 0)
+    )

@@ -1,0 +1,437 @@
+"""The reduction of a section traverse, from points to ledger: `[section]` in the survey file."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from wakeledger.confidence.budget import Budget, make_budget
+from wakeledger.confidence.montecarlo import run as run_montecarlo
+from wakeledger.confidence.samples import Samples
+from wakeledger.confidence.sampling import ErrorSampler
+from wakeledger.confidence.sources import InputLayout, Source
+from wakeledger.confidence.terms import NumericalTerm, add_terms
+from wakeledger.core.errors import InputError
+from wakeledger.core.flags import decode
+from wakeledger.core.grid import Array
+from wakeledger.core.names import VARIABLES
+from wakeledger.core.traverse import make_traverse
+from wakeledger.intake.gridding import check_duplicates
+from wakeledger.intake.gridding.line import Line, make_line
+from wakeledger.ledger.inspection import ChannelSummary, EdgeState, Inspection
+from wakeledger.ledger.rows import CrossCheck, Ledger, Row
+from wakeledger.physics.methods.section_drag import SectionDrag, section_drag
+from wakeledger.run import tables
+from wakeledger.run.assembly import NO_SOURCE, budget_lines, comparisons, cross_check, ledger_row
+from wakeledger.run.chain import estimate_of
+from wakeledger.run.checks import EDGE_CELLS
+from wakeledger.run.inputs import layouts, sources
+from wakeledger.run.inspection import recommendations
+from wakeledger.run.load import SurveyInput, refuse_unsupported
+from wakeledger.run.section_chain import (
+    METHODS,
+    OUTPUTS,
+    ROW,
+    SectionChain,
+    SectionReduction,
+    SectionSettings,
+    SectionVariation,
+)
+from wakeledger.run.section_checks import SectionFacts, section_checks
+from wakeledger.run.section_notes import section_notes
+from wakeledger.run.section_state import SectionState, check_section_state
+from wakeledger.run.section_terms import LEVEL, section_terms
+from wakeledger.stream.reference import Reference
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+Progress = Callable[[int, int], None]
+
+#: Draws that tell the effect of a choice from that of noise.
+_NOISE_DRAWS = 16
+_NO_DRAWS = "no Monte Carlo draws were made"
+#: Differences smaller than this share of the drag are rounding.
+_ROUNDING = 1e-6
+_ONE_ALGEBRA = (
+    "at the stream's static pressure Jones, Betz and the momentum balance are one algebra: it tests the arithmetic, not"
+    " the flow"
+)
+_AS_BETZ = "with the outer flow's part expected of it, it is Betz's algebra point by point"
+
+
+@dataclass(frozen=True)
+class PreparedSection:
+    """A section survey with its nominal reduction, before any error is added.
+
+    Attributes
+    ----------
+    chain : SectionChain
+        Ready to be reduced.
+    nominal : SectionReduction
+        Its reduction.
+    state : SectionState
+        What the points say.
+    usable : ndarray of bool, shape (n,)
+        Points that are used.
+    drag : SectionDrag
+        The three methods on the nominal traverse, with what is expected of each.
+    sources, layouts
+        Sources of uncertainty and the inputs they act on.
+    noise : tuple of mapping
+        A few draws of the errors that differ from point to point.
+    terms : tuple of NumericalTerm
+        What the numerical choices are worth.
+    notes : tuple of str
+        Sentences about the choices made.
+    """
+
+    chain: SectionChain
+    nominal: SectionReduction
+    state: SectionState
+    usable: NDArray[np.bool_]
+    drag: SectionDrag
+    sources: tuple[Source, ...]
+    layouts: Mapping[str, InputLayout]
+    noise: tuple[Mapping[str, Array], ...]
+    terms: tuple[NumericalTerm, ...]
+    notes: tuple[str, ...]
+
+    @property
+    def facts(self) -> SectionFacts:
+        """What the checks need."""
+        level = next(term for term in self.terms if term.name == LEVEL)
+        effect = math.sqrt(3.0) * abs(float(level.standard_uncertainty[0])) / abs(self.nominal.values[ROW])
+        return SectionFacts(self.chain.settings, self.chain.line.filled, effect)
+
+
+def reduce_section(
+    survey: SurveyInput, *, draws: int | None = None, progress: Progress | None = None, command: str = ""
+) -> Ledger:
+    """Reduce a section survey to its ledger.
+
+    Parameters
+    ----------
+    survey : SurveyInput
+        With a ``[section]``.
+    draws : int, optional
+        Monte Carlo draws instead of the survey file's.
+    progress : callable, optional
+        Called with the draws done and their number.
+    command : str
+        The command line, for the archive.
+
+    Returns
+    -------
+    Ledger
+        With the row ``section_drag``; its plane is the traverse (`wakeledger.core.traverse.make_traverse`).
+
+    Raises
+    ------
+    InputError
+        If the survey or its data are wrong.
+    """
+    prepared = prepare_section(survey)
+    uncertainty = survey.survey.uncertainty
+    count = uncertainty.draws if draws is None else draws
+    samples, budget = None, None
+    if prepared.sources and count >= 2:
+        samples, budget = _propagate(prepared, draws=count, seed=uncertainty.seed, progress=progress)
+    return _ledger(survey, prepared, samples, budget, command=command)
+
+
+def inspect_section(survey: SurveyInput) -> Inspection:
+    """Read and check a section survey without reducing it.
+
+    Parameters
+    ----------
+    survey : SurveyInput
+        With a ``[section]``.
+
+    Returns
+    -------
+    Inspection
+
+    Raises
+    ------
+    InputError
+        If the survey or its data are wrong.
+    """
+    prepared = prepare_section(survey)
+    chain, nominal, line = prepared.chain, prepared.nominal, prepared.chain.line
+    checks = section_checks(nominal, prepared.facts)
+    low, high = float(line.position[0]), float(line.position[-1])
+    vertical = chain.settings.along == "z"
+    return Inspection(
+        title=survey.survey.title,
+        source=survey.points.source,
+        points=survey.points.n,
+        arrangement=f"line traverse along {chain.settings.along}",
+        shape=(1, line.position.size) if vertical else (line.position.size, 1),
+        spacing=(math.nan, line.spacing) if vertical else (line.spacing, math.nan),
+        window=(0.0, 0.0, low, high) if vertical else (low, high, 0.0, 0.0),
+        coverage=1.0 - float(line.filled.mean()),
+        station=survey.survey.plane.station,
+        flags=decode(line.flag),
+        channels=_channels(prepared),
+        edges=_edges(prepared),
+        checks=checks,
+        recommendations=recommendations(checks),
+        notes=prepared.notes,
+        reference=tables.reference_scalars(nominal.reference),
+        test=survey.survey.test.given(),
+    )
+
+
+def prepare_section(survey: SurveyInput) -> PreparedSection:
+    """Everything up to the Monte Carlo: places, window, expected differences and numerical terms.
+
+    Parameters
+    ----------
+    survey : SurveyInput
+        With a ``[section]``.
+
+    Returns
+    -------
+    PreparedSection
+
+    Raises
+    ------
+    InputError
+        If the survey or its data are wrong.
+    """
+    refuse_unsupported(survey.survey)
+    try:
+        return _prepare(survey)
+    except InputError as error:
+        raise error.located(file=survey.points.source) from error
+
+
+def section_settings(survey: SurveyInput, reference: Reference) -> SectionSettings:
+    """The chain's settings from the survey file."""
+    file = survey.survey
+    assert file.section is not None
+    along: Literal["y", "z"] = "y" if file.plane.axes.file_axis("y") in file.plane.columns else "z"
+    return SectionSettings(
+        reference=file.reference.given(),
+        compressible=reference.compressible,
+        primary=file.plane.primary,
+        edge_static=file.section.edge_static,
+        along=along,
+        chord=file.section.chord,
+        level=file.wake.level if file.wake.level is not None else SectionSettings.level,
+        grow=file.wake.grow or 0.0,
+        include=_stretches(file.wake.include, along),
+    )
+
+
+def _stretches(shapes: Sequence[Array], along: str) -> tuple[tuple[float, float], ...]:
+    """What boxes and polygons cover along the traverse, m."""
+    column = "yz".index(along)
+    return tuple((float(shape[:, column].min()), float(shape[:, column].max())) for shape in shapes)
+
+
+def _prepare(survey: SurveyInput) -> PreparedSection:
+    file, points = survey.survey, survey.points
+    reference = file.reference.resolve()
+    settings = section_settings(survey, reference)
+    check_duplicates(points)
+    position = getattr(points, settings.along)
+    empty = SectionChain(points, None, settings)  # type: ignore[arg-type]
+    state = empty.state(reference)
+    check_section_state(state, points)
+    usable = state.usable
+    for start, stop in _stretches(file.wake.exclude, settings.along):
+        usable &= (position < start) | (position > stop)
+
+    def line(chosen: NDArray[np.bool_]) -> Line:
+        return make_line(position, chosen, impossible=state.impossible, row=points.row)
+
+    chain = SectionChain(points, line(usable), settings)
+    nominal = chain.reduce()
+    drag = section_drag(
+        nominal.coordinate,
+        nominal.total_pressure,
+        nominal.static_pressure,
+        nominal.reference,
+        total_temperature=nominal.total_temperature,
+        window=(nominal.window.lower, nominal.window.upper),
+    )
+    declared = sources(file, points, reference)
+    names = sorted({name for source in declared for name in source.applies_to})
+    inputs = layouts(file, points, chain.line, names)
+    noise = _noise_draws(declared, inputs, seed=file.uncertainty.seed)
+    terms = section_terms(chain, nominal, line=line, usable=usable, noise=noise)
+    notes = section_notes(survey, chain, nominal, drag, state, usable)
+    notes += _noise_notes(chain, nominal, noise)
+    return PreparedSection(chain, nominal, state, usable, drag, declared, inputs, noise, terms, tuple(notes))
+
+
+def _noise_draws(
+    declared: Sequence[Source], inputs: Mapping[str, InputLayout], *, seed: int
+) -> tuple[Mapping[str, Array], ...]:
+    """A few draws of the errors that differ from point to point."""
+    random = [source for source in declared if source.effect == "random"]
+    if not random:
+        return ()
+    used = {name: inputs[name] for source in random for name in source.applies_to}
+    drawn = ErrorSampler(random, used, seed=seed).draw(0, _NOISE_DRAWS)
+    return tuple({name: array[k] for name, array in drawn.items()} for k in range(_NOISE_DRAWS))
+
+
+def _noise_notes(chain: SectionChain, nominal: SectionReduction, noise: Sequence[Mapping[str, Array]]) -> list[str]:
+    """Whether the noise beside the wake is the declared one."""
+    outer = ~nominal.inside & ~chain.line.filled
+    shown = nominal.window.noise
+    if not noise or np.count_nonzero(outer) < 8 or not math.isfinite(shown):
+        return []
+    by_speed = chain.settings.primary == "velocity" and chain.settings.edge_static != "measured"
+    held = SectionVariation(window=nominal.window)
+    squares = []
+    for errors in noise:
+        drawn = chain.reduce(errors, vary=held)
+        change = drawn.speed - nominal.speed if by_speed else drawn.loss - nominal.loss
+        squares.append(np.mean(np.square(change[outer])))
+    declared = math.sqrt(float(np.mean(squares)))
+    if max(shown, declared) <= 1.5 * min(shown, declared):
+        return []
+    unit = "m/s" if by_speed else "Pa"
+    return [
+        f"The point-to-point noise beside the wake ({shown:.3g} {unit}) is not the declared one"
+        f" ({declared:.3g} {unit}); check the sources."
+    ]
+
+
+def _propagate(
+    prepared: PreparedSection, *, draws: int, seed: int, progress: Progress | None
+) -> tuple[Samples, Budget]:
+    chain = prepared.chain
+    plain = run_montecarlo(
+        chain.vectors,
+        prepared.sources,
+        prepared.layouts,
+        names=OUTPUTS,
+        draws=draws,
+        seed=seed,
+        workers=1,
+        progress=progress,
+    )
+    budget = make_budget(
+        chain.vectors,
+        prepared.sources,
+        prepared.layouts,
+        plain,
+        seed=seed,
+        terms=prepared.terms,
+        draws=max(50, draws // 5),
+        workers=1,
+    )
+    return add_terms(plain, prepared.terms, seed=seed), budget
+
+
+def _ledger(
+    survey: SurveyInput, prepared: PreparedSection, samples: Samples | None, budget: Budget | None, *, command: str
+) -> Ledger:
+    file, nominal = survey.survey, prepared.nominal
+    settings = prepared.chain.settings
+    why = _NO_DRAWS if prepared.sources else NO_SOURCE
+    row = ledger_row(ROW, nominal.values, samples, reason=why)
+    assert row is not None
+    variance = math.nan if samples is None else float(samples.covariance[0, 0])
+    model = {} if file.model is None else file.model.given()
+    return Ledger(
+        title=file.title,
+        compressible=nominal.reference.compressible,
+        rows=(row,),
+        covariance=np.array([[variance]]),
+        plane=_traverse(prepared, survey.survey.plane.station),
+        raw=survey.points,
+        survey_text=file.text,
+        estimates=_crosschecks(prepared, row, samples, why),
+        comparisons=comparisons(file, (row,), {ROW: nominal.reference.dynamic_pressure * settings.chord}),
+        budget=budget_lines(budget, (ROW,)),
+        checks=section_checks(nominal, prepared.facts),
+        notes=prepared.notes,
+        test=file.test.given(),
+        reference=tables.reference_scalars(nominal.reference),
+        model={**model, "chord": settings.chord},
+        inputs=dict(survey.inputs),
+        provenance=tables.provenance(command),
+    )
+
+
+def _crosschecks(prepared: PreparedSection, row: Row, samples: Samples | None, why: str) -> tuple[CrossCheck, ...]:
+    """Betz and the momentum balance against Jones.
+
+    What is expected of them is of first order in the loss; the rest grows as the loss over what is left of the total
+    pressure.
+    """
+    nominal, expected = prepared.nominal, prepared.drag.expected_difference
+    reference = nominal.reference
+    depth = float(nominal.loss[nominal.inside].max()) / (reference.total_pressure - reference.static_pressure)
+    share = max(tables.EXPECTED_DOUBT, depth / max(1.0 - depth, 0.05))
+    doubt = math.hypot(share * expected["betz"], _ROUNDING * row.value)
+    same = {"betz": None, "momentum": _AS_BETZ}
+    if prepared.chain.settings.edge_static == "stream":
+        same = dict.fromkeys(METHODS, _ONE_ALGEBRA)
+    return tuple(
+        cross_check(
+            row,
+            method,
+            nominal.values[estimate_of(ROW, method)],
+            samples,
+            expected=expected[method],
+            expected_uncertainty=doubt,
+            same_algebra=same[method],
+            no_samples=why,
+        )
+        for method in METHODS
+    )
+
+
+def _traverse(prepared: PreparedSection, station: float) -> xr.Dataset:
+    """The traverse as it was integrated, with the wake's window and flags."""
+    nominal = prepared.nominal
+    profiles = {
+        "u": nominal.speed,
+        "total_pressure": nominal.total_pressure,
+        "static_pressure": nominal.static_pressure,
+        "total_pressure_loss": nominal.loss,
+        "wake_mask": nominal.inside.astype(np.int8),
+        "flag": prepared.chain.line.flag,
+    }
+    wake = (nominal.window.lower, nominal.window.upper)
+    return make_traverse(prepared.chain.settings.along, nominal.coordinate, profiles, wake=wake, station=station)
+
+
+def _channels(prepared: PreparedSection) -> tuple[ChannelSummary, ...]:
+    line = prepared.chain.line
+    outer = ~prepared.nominal.inside & ~line.filled
+    pairs = outer[1:] & outer[:-1]
+    found = []
+    for name, channel in prepared.chain.points.channels.items():
+        finite = channel.values[np.isfinite(channel.values)]
+        noise = math.nan
+        if np.count_nonzero(pairs) >= 6 and np.isfinite(channel.values[prepared.usable]).all():
+            steps = np.diff(line.apply(channel.values))[pairs]
+            noise = math.sqrt(0.5 * float(np.mean(steps**2)))
+        unit = "1" if channel.normalised_by else VARIABLES[name].unit if name in VARIABLES else "1"
+        low, high = (float(finite.min()), float(finite.max())) if finite.size else (math.nan, math.nan)
+        found.append(ChannelSummary(name, unit, low, high, noise, channel.values.size - finite.size))
+    return tuple(found)
+
+
+def _edges(prepared: PreparedSection) -> tuple[EdgeState, ...]:
+    """Largest loss at either end of the traverse inside the wake."""
+    nominal = prepared.nominal
+    loss = np.where(nominal.inside, nominal.loss, 0.0) / nominal.reference.dynamic_pressure
+    sides = ("port", "starboard") if prepared.chain.settings.along == "y" else ("lower", "upper")
+    return tuple(
+        EdgeState(side, float(part.max()))
+        for side, part in zip(sides, (loss[:EDGE_CELLS], loss[-EDGE_CELLS:]), strict=True)
+    )

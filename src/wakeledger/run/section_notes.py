@@ -1,0 +1,114 @@
+"""What was done to a section traverse, said in sentences."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+
+from wakeledger.core.flags import decode
+from wakeledger.physics.methods.section_drag import SectionDrag
+from wakeledger.physics.methods.section_kernels import jones, window_weights
+from wakeledger.run.load import SurveyInput
+from wakeledger.run.section_chain import ROW, SectionChain, SectionReduction
+from wakeledger.run.section_state import SectionState
+
+
+def section_notes(
+    survey: SurveyInput,
+    chain: SectionChain,
+    nominal: SectionReduction,
+    drag: SectionDrag,
+    state: SectionState,
+    usable: NDArray[np.bool_],
+) -> list[str]:
+    """Sentences about what was done to the data, each choice named.
+
+    Parameters
+    ----------
+    survey : SurveyInput
+        The survey.
+    chain : SectionChain
+        It on its places.
+    nominal : SectionReduction
+        Its nominal reduction.
+    drag : SectionDrag
+        The three methods on it.
+    state : SectionState
+        What the points say.
+    usable : ndarray of bool, shape (n,)
+        Points that are used.
+
+    Returns
+    -------
+    list of str
+    """
+    settings, line, window = chain.settings, chain.line, nominal.window
+    # Coefficients of a section refer to its chord, so [model] is not missed.
+    found = [note for note in survey.survey.notes() if not note.startswith("[model]")]
+    found.append(
+        f"{survey.points.n} points along {settings.along} at {line.position.size} places, {1e3 * line.spacing:.3g} mm"
+        " apart in the median."
+    )
+    counts = decode(line.flag)
+    for count, what in (
+        (counts["missing"], "places without a usable point were filled from their neighbours"),
+        (counts["averaged"], "places were measured more than once and averaged"),
+        (int(np.count_nonzero(state.impossible)), "points have no real flow state and count as missing"),
+        (int(np.count_nonzero(state.usable & ~usable)), "points were excluded by the survey file"),
+    ):
+        if count:
+            found.append(f"{count} {what}.")
+    wake = f"from {settings.along} = {window.lower:.4g} m to {window.upper:.4g} m"
+    if settings.include or settings.grow:
+        found.append(f"The wake was found, and widened by the survey file, {wake}.")
+    else:
+        found.append(
+            f"The wake was found {wake}, where it falls to {settings.level:g} times the noise or a thousandth of its"
+            " depth, its tail included."
+        )
+    if not window.enclosed:
+        found.append("The traverse ends before the wake does, or where it does.")
+    found += _static_notes(chain, nominal)
+    lower, upper = nominal.loss_zero
+    if math.isfinite(lower) and (lower or upper):
+        worth = 0.5 * (lower + upper) * window.width / (nominal.reference.dynamic_pressure * settings.chord)
+        found.append(
+            f"The total pressure was zeroed in the outer flow: {-lower:+.3g} Pa and {-upper:+.3g} Pa were taken out at"
+            f" the wake's edges, straight between ({1e4 * worth:+.2f} counts)."
+        )
+    if drag.stalled_points:
+        found.append(
+            f"At {drag.stalled_points} places the total pressure lies below a static pressure; there the flow is taken"
+            " as brought to rest."
+        )
+    return found
+
+
+def _static_notes(chain: SectionChain, nominal: SectionReduction) -> list[str]:
+    reference, window, settings = nominal.reference, nominal.window, chain.settings
+    z, q = nominal.coordinate, reference.dynamic_pressure
+    weights = window_weights(z, window.lower, window.upper)
+    if settings.edge_static == "measured":
+        mean = float(weights @ (nominal.static_pressure - reference.static_pressure)) / (q * window.width)
+        return [f"In the wake the measured static pressure is {mean:+.3f} q off the stream's on average."]
+    if settings.edge_static == "edge_speed":
+        at = (np.interp((window.lower, window.upper), z, nominal.static_pressure) - reference.static_pressure) / q
+        return [
+            "The static pressure across the wake is that of the loss-free flow at a speed straight between those at the"
+            f" wake's edges: {at[0]:+.3f} q and {at[1]:+.3f} q off the stream's there."
+        ]
+    shifted = jones(
+        z,
+        nominal.total_pressure,
+        nominal.static_pressure + 0.01 * q,
+        reference,
+        weights=weights,
+        total_temperature=nominal.total_temperature,
+    )
+    change = float(shifted) / nominal.values[ROW] - 1.0
+    return [
+        "The static pressure across the wake is taken as the stream's. Whether it is cannot be told from this traverse"
+        f" and is not in the uncertainty: a pressure 0.01 q higher would change the drag by {change:+.2%}."
+    ]
