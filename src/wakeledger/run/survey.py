@@ -15,15 +15,12 @@ from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.confidence.terms import NumericalTerm, add_terms
 from wakeledger.core.errors import InputError
-from wakeledger.core.estimate import Estimate
 from wakeledger.core.grid import Array
-from wakeledger.core.names import ROWS as ROW_TABLE
 from wakeledger.intake.gridding import Gridding, check_duplicates, make_gridding
 from wakeledger.intake.gridding.window import covered_window
 from wakeledger.intake.state import check_state
-from wakeledger.ledger.crosscheck import check_estimate, compare
 from wakeledger.ledger.inspection import Inspection
-from wakeledger.ledger.rows import BudgetLine, Comparison, CrossCheck, Ledger, Row
+from wakeledger.ledger.rows import CrossCheck, Ledger, Row
 from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
 from wakeledger.physics.fields.wake_region import region_of
 from wakeledger.physics.loading.span import span_loading
@@ -33,6 +30,7 @@ from wakeledger.physics.methods.wake_line import WakeLine, path_scatter, wake_li
 from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
 from wakeledger.physics.vortices.vortex_sum import VortexSum, WakeParts, find_parts, summarise
 from wakeledger.run import tables
+from wakeledger.run.assembly import budget_lines, comparisons, cross_check, ledger_row
 from wakeledger.run.chain import (
     ESTIMATES,
     OUTPUTS,
@@ -41,7 +39,6 @@ from wakeledger.run.chain import (
     Frozen,
     Reduction,
     Settings,
-    coefficient_of,
     estimate_of,
 )
 from wakeledger.run.checks import Facts, all_checks
@@ -50,6 +47,7 @@ from wakeledger.run.inspection import inspection_of
 from wakeledger.run.load import SurveyInput, load, refuse_unsupported
 from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
 from wakeledger.run.numerics import numerical_terms
+from wakeledger.run.section import inspect_section, reduce_section
 from wakeledger.stream.reference import Reference
 
 __all__ = ["SurveyInput", "inspect", "load", "prepare", "reduce"]
@@ -62,7 +60,6 @@ POINTS_PER_CORE = 2.0
 MOST_CELLS = 120_000
 #: Draws that tell the wake region's own effect from that of noise.
 _NOISE_DRAWS = 16
-_NO_SOURCE = "the survey file gives no uncertainty source"
 _SAME_ALGEBRA = "the same algebra as the sum of the rows: it tests the arithmetic, not the flow"
 
 
@@ -129,6 +126,8 @@ def reduce(
     InputError
         If the survey or its data are wrong.
     """
+    if survey.survey.section is not None:
+        return reduce_section(survey, draws=draws, progress=progress, command=command)
     prepared = prepare(survey)
     uncertainty = survey.survey.uncertainty
     count = uncertainty.draws if draws is None else draws
@@ -156,6 +155,8 @@ def inspect(survey: SurveyInput) -> Inspection:
     InputError
         If the survey or its data are wrong.
     """
+    if survey.survey.section is not None:
+        return inspect_section(survey)
     prepared = prepare(survey)
     return inspection_of(survey, prepared.chain, prepared.nominal, _facts(prepared), prepared.notes)
 
@@ -429,7 +430,7 @@ def _ledger(
     command: str,
 ) -> Ledger:
     file, nominal = survey.survey, prepared.nominal
-    rows = tuple(row for row in (_row(name, nominal, samples) for name in ROWS) if row is not None)
+    rows = tuple(row for row in (ledger_row(name, nominal.values, samples) for name in ROWS) if row is not None)
     names = [row.name for row in rows]
     covariance = np.full((len(names), len(names)), np.nan)
     if samples is not None:
@@ -444,8 +445,8 @@ def _ledger(
         raw=survey.points,
         survey_text=file.text,
         estimates=_crosschecks(prepared, rows, samples),
-        comparisons=_comparisons(survey, prepared, rows),
-        budget=_budget_lines(budget, names),
+        comparisons=comparisons(file, rows, _scales(prepared)),
+        budget=budget_lines(budget, names),
         checks=all_checks(nominal, _facts(prepared)),
         notes=prepared.notes,
         test=file.test.given(),
@@ -477,106 +478,35 @@ def _facts(prepared: Prepared) -> Facts:
     )
 
 
-def _row(name: str, nominal: Reduction, samples: Samples | None) -> Row | None:
-    value = nominal.values[name]
-    if math.isnan(value):
-        return None
-    coefficient = nominal.values.get(coefficient_of(name), math.nan)
-    unknown = (math.nan, math.nan, math.nan, math.nan)
-    unit = ROW_TABLE[name].unit
-    if samples is None:
-        return Row(name, value, unit, *unknown, coefficient, math.nan, reason=_NO_SOURCE)
-    at = OUTPUTS.index(name)
-    reason = samples.unknown[at]
-    if reason:
-        return Row(name, value, unit, *unknown, coefficient, math.nan, reason=reason)
-    u = float(samples.standard_uncertainty[at])
-    half_width = float(samples.interval().half_width[at])
-    coefficient_u = float(samples.standard_uncertainty[OUTPUTS.index(coefficient_of(name))])
-    return Row(
-        name,
-        value,
-        unit,
-        standard_uncertainty=u,
-        expanded_uncertainty=half_width,
-        coverage_factor=half_width / u if u > 0 else math.nan,
-        degrees_of_freedom=float(samples.draws - 1),
-        coefficient=coefficient,
-        coefficient_standard_uncertainty=coefficient_u if math.isfinite(coefficient) else math.nan,
-    )
-
-
 def _crosschecks(prepared: Prepared, rows: Sequence[Row], samples: Samples | None) -> tuple[CrossCheck, ...]:
     nominal = prepared.nominal
     by_name = {row.name: row for row in rows}
     found = []
     for row, method in ESTIMATES:
-        name = estimate_of(row, method)
-        value = nominal.values[name]
         if row not in by_name:
             continue
+        name = estimate_of(row, method)
+        value, expected = nominal.values[name], prepared.expected[name]
         reason = None
         if math.isnan(value):
             reason = prepared.line.reason if method == "wake_line" else prepared.vortices.reason
             reason = reason or "it could not be evaluated on this plane"
-        u = difference_u = math.nan
-        if samples is not None:
-            at, primary = OUTPUTS.index(name), OUTPUTS.index(row)
-            u = float(samples.standard_uncertainty[at])
-            variance = samples.covariance[at, at] + samples.covariance[primary, primary]
-            expected_u = tables.EXPECTED_DOUBT * abs(prepared.expected[name])
-            difference_u = math.sqrt(max(variance - 2 * samples.covariance[at, primary], 0.0) + expected_u**2)
-        estimate = Estimate(
-            row,
+        check = cross_check(
+            by_name[row],
             method,
             value,
-            standard_uncertainty=u,
-            expected_difference=prepared.expected[name],
-            reason=reason or (_NO_SOURCE if samples is None else None),
+            samples,
+            expected=expected,
+            expected_uncertainty=tables.EXPECTED_DOUBT * abs(expected),
+            reason=reason,
+            same_algebra=_SAME_ALGEBRA if method == "momentum_area" else None,
         )
-        same = _SAME_ALGEBRA if method == "momentum_area" else None
-        found.append(check_estimate(estimate, by_name[row], difference_uncertainty=difference_u, same_algebra=same))
+        found.append(check)
     return tuple(found)
 
 
-def _comparisons(survey: SurveyInput, prepared: Prepared, rows: Sequence[Row]) -> tuple[Comparison, ...]:
-    by_name = {row.name: row for row in rows}
-    q = prepared.nominal.reference.dynamic_pressure
+def _scales(prepared: Prepared) -> dict[str, float]:
+    """Force, or moment, of a unit coefficient by row."""
     settings = prepared.chain.settings
-    found = []
-    for entry in survey.survey.compare:
-        if entry.row not in by_name:
-            raise InputError(
-                f"row {entry.row!r} is not in this ledger",
-                file=survey.survey.path,
-                place=f"[[compare]] ({entry.name}) row",
-                remedy=f"it has {', '.join(by_name)}",
-            )
-        scale = q * settings.reference_area * (settings.span if entry.row == "rolling_moment" else 1.0)
-        uncertainty = entry.standard_uncertainty
-        if uncertainty is None:
-            uncertainty = entry.coefficient_standard_uncertainty
-        found.append(
-            compare(
-                by_name[entry.row],
-                name=entry.name,
-                value=entry.value,
-                coefficient=entry.coefficient,
-                coefficient_scale=scale,
-                standard_uncertainty=math.nan if uncertainty is None else uncertainty,
-                as_measured=entry.as_measured or "whole",
-            )
-        )
-    return tuple(found)
-
-
-def _budget_lines(budget: Budget | None, names: Sequence[str]) -> tuple[BudgetLine, ...]:
-    if budget is None:
-        return ()
-    return tuple(
-        BudgetLine(line.row, line.source, line.standard_uncertainty, line.share)
-        for name in names
-        for line in budget.of(name)
-        # A numerical term that does not touch this row is no line of its budget; a declared source is, even at zero.
-        if not (line.how == "numerical" and line.standard_uncertainty == 0)
-    )
+    force = prepared.nominal.reference.dynamic_pressure * settings.reference_area
+    return dict.fromkeys(ROWS, force) | {"rolling_moment": force * settings.span}
