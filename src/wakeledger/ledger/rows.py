@@ -268,7 +268,8 @@ class Ledger:
     covariance : ndarray, shape (m, m)
         Covariance of the m rows, in the product of their units; NaN where unknown.
     plane : Dataset
-        Fields in wind axes on a uniform grid, dimensions (z, y) (`wakeledger.core.plane.make_plane`).
+        Fields in wind axes on a uniform grid, dimensions (z, y) (`wakeledger.core.plane.make_plane`); of a
+        section, profiles along its traverse, one of the dimensions being 1 (`wakeledger.core.traverse.make_traverse`).
     raw : Points
         The points as read, lossless.
     survey_text : str

@@ -140,8 +140,13 @@ def _facts(inspection: Inspection) -> Iterable[tuple[str, str]]:
     y0, y1, z0, z1 = inspection.window
     yield "data", inspection.source
     yield "points", f"{inspection.points}, {inspection.arrangement}"
-    yield "plane", f"{ny} × {nz} points (y × z), {significant(dy, 3)} × {significant(dz, 3)} mm apart"
-    yield "window", f"y {y0:.4g} … {y1:.4g} m, z {z0:.4g} … {z1:.4g} m"
+    if min(ny, nz) == 1:
+        along, places, step, start, stop = ("z", nz, dz, z0, z1) if ny == 1 else ("y", ny, dy, y0, y1)
+        yield "traverse", f"{places} places, {significant(step, 3)} mm apart"
+        yield "window", f"{along} {start:.4g} … {stop:.4g} m"
+    else:
+        yield "plane", f"{ny} × {nz} points (y × z), {significant(dy, 3)} × {significant(dz, 3)} mm apart"
+        yield "window", f"y {y0:.4g} … {y1:.4g} m, z {z0:.4g} … {z1:.4g} m"
     if math.isfinite(inspection.station):
         yield "station", f"{inspection.station:.4g} m behind the trailing edge"
     yield "coverage", f"{100 * inspection.coverage:.1f} % of the window's cells hold a measurement"

@@ -6,6 +6,7 @@ from wakeledger.present.figures.crosschecks import estimates_figure
 from wakeledger.present.figures.gallery import draw, save_figures
 from wakeledger.present.figures.maps import axial_velocity_map, loss_map, vorticity_map
 from wakeledger.present.figures.spanwise import span_figure
+from wakeledger.present.figures.traverse import traverse_figure
 
 __all__ = [
     "FORMATS",
@@ -17,5 +18,6 @@ __all__ = [
     "loss_map",
     "save_figures",
     "span_figure",
+    "traverse_figure",
     "vorticity_map",
 ]

@@ -6,7 +6,7 @@ from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from wakeledger.present.figures import budget, canvas, crosschecks, maps, spanwise
+from wakeledger.present.figures import budget, canvas, crosschecks, maps, spanwise, traverse
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -16,6 +16,8 @@ if TYPE_CHECKING:
 
 def _in_plane(*names: str) -> Callable[[Ledger], bool]:
     def has(ledger: Ledger) -> bool:
+        if traverse.is_traverse(ledger):
+            return False
         return all(name in ledger.plane and bool(ledger.plane[name].notnull().any()) for name in names)
 
     return has
@@ -28,6 +30,7 @@ DRAWINGS: dict[str, Drawing] = {
     "total_pressure_loss": (maps.loss_map, _in_plane("total_pressure_loss")),
     "axial_vorticity": (maps.vorticity_map, _in_plane("axial_vorticity", "v", "w")),
     "axial_velocity": (maps.axial_velocity_map, _in_plane("u")),
+    "traverse": (traverse.traverse_figure, traverse.is_traverse),
     "span_loading": (spanwise.span_figure, lambda ledger: ledger.span is not None),
     "estimates": (crosschecks.estimates_figure, lambda ledger: bool(crosschecks.offsets(ledger))),
     "budget": (budget.budget_figure, lambda ledger: bool(ledger.budget)),

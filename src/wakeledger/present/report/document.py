@@ -31,6 +31,8 @@ CAPTIONS = {
     "axial_vorticity": "Axial vorticity with arrows of the crossflow. Counter-clockwise is positive; the colours are "
     "centred at zero.",
     "axial_velocity": "Velocity along the stream as a part of the stream's speed.",
+    "traverse": "Loss, static pressure and speed along the traverse. The drag is integrated over the shaded wake; open "
+    "circles were not measured but filled in.",
     "span_loading": "Loading along the span and the drag of each strip, with expanded uncertainties (k = 2) where they "
     "are known.",
     "estimates": "Every estimate and compared value beside its primary row; the short stroke is the difference that is "
@@ -38,7 +40,7 @@ CAPTIONS = {
     "budget": "Share of each source in the variance of the main rows.",
 }
 
-_MAPS = ("total_pressure_loss", "axial_vorticity", "axial_velocity")
+_MAPS = ("total_pressure_loss", "axial_vorticity", "axial_velocity", "traverse")
 
 
 @dataclass(frozen=True)
@@ -155,7 +157,7 @@ def _rows(ledger: Ledger) -> list[dict[str, Any]]:
         lines.append(
             {
                 "name": words(row.name),
-                "main": row.name == "total_drag",
+                "main": row.name in ("total_drag", "section_drag"),
                 "value": value,
                 "expanded": _shown(expanded),
                 "unit": unit_text(row.unit),
