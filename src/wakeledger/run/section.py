@@ -55,6 +55,8 @@ Progress = Callable[[int, int], None]
 
 #: Draws that tell the effect of a choice from that of noise.
 _NOISE_DRAWS = 16
+#: Fewer places than this beside the wake do not show its noise.
+_FEWEST_OUTER = 8
 _NO_DRAWS = "no Monte Carlo draws were made"
 #: Differences smaller than this share of the drag are rounding.
 _ROUNDING = 1e-6
@@ -266,9 +268,10 @@ def _prepare(survey: SurveyInput) -> PreparedSection:
     names = sorted({name for source in declared for name in source.applies_to})
     inputs = layouts(file, points, chain.line, names)
     noise = _noise_draws(declared, inputs, seed=file.uncertainty.seed)
-    terms = section_terms(chain, nominal, line=line, usable=usable, noise=noise)
+    outer_noise = _outer_noise(chain, nominal, noise)
+    terms = section_terms(chain, nominal, line=line, usable=usable, noise=noise, noise_share=outer_noise.share)
     notes = section_notes(survey, chain, nominal, drag, state, usable)
-    notes += _noise_notes(chain, nominal, noise)
+    notes += outer_noise.notes()
     return PreparedSection(chain, nominal, state, usable, drag, declared, inputs, noise, terms, tuple(notes))
 
 
@@ -284,27 +287,43 @@ def _noise_draws(
     return tuple({name: array[k] for name, array in drawn.items()} for k in range(_NOISE_DRAWS))
 
 
-def _noise_notes(chain: SectionChain, nominal: SectionReduction, noise: Sequence[Mapping[str, Array]]) -> list[str]:
-    """Whether the noise beside the wake is the declared one."""
-    outer = ~nominal.inside & ~chain.line.filled
-    shown = nominal.window.noise
-    if not noise or np.count_nonzero(outer) < 8 or not math.isfinite(shown):
-        return []
+@dataclass(frozen=True)
+class _OuterNoise:
+    """Point-to-point noise beside the wake, as the data show it and as the sources say, both in `unit`."""
+
+    shown: float
+    declared: float
+    unit: str
+
+    @property
+    def share(self) -> float:
+        """Which share of the declared variance the data show, 1 where either is unknown."""
+        ratio = self.shown / self.declared if self.declared > 0 else math.nan
+        return 1.0 if math.isnan(ratio) else min(ratio**2, 1.0)
+
+    def notes(self) -> list[str]:
+        """What is to be said where the two differ."""
+        if not self.declared > 0 or not max(self.shown, self.declared) > 1.5 * min(self.shown, self.declared):
+            return []
+        return [
+            f"The point-to-point noise beside the wake ({self.shown:.3g} {self.unit}) is not the declared one"
+            f" ({self.declared:.3g} {self.unit}); check the sources."
+        ]
+
+
+def _outer_noise(chain: SectionChain, nominal: SectionReduction, noise: Sequence[Mapping[str, Array]]) -> _OuterNoise:
     by_speed = chain.settings.primary == "velocity" and chain.settings.edge_static != "measured"
+    unit = "m/s" if by_speed else "Pa"
+    outer = ~nominal.inside & ~chain.line.filled
+    if not noise or np.count_nonzero(outer) < _FEWEST_OUTER:
+        return _OuterNoise(math.nan, math.nan, unit)
     held = SectionVariation(window=nominal.window)
     squares = []
     for errors in noise:
         drawn = chain.reduce(errors, vary=held)
         change = drawn.speed - nominal.speed if by_speed else drawn.loss - nominal.loss
         squares.append(np.mean(np.square(change[outer])))
-    declared = math.sqrt(float(np.mean(squares)))
-    if max(shown, declared) <= 1.5 * min(shown, declared):
-        return []
-    unit = "m/s" if by_speed else "Pa"
-    return [
-        f"The point-to-point noise beside the wake ({shown:.3g} {unit}) is not the declared one"
-        f" ({declared:.3g} {unit}); check the sources."
-    ]
+    return _OuterNoise(nominal.window.noise, math.sqrt(float(np.mean(squares))), unit)
 
 
 def _propagate(

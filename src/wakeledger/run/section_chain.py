@@ -270,8 +270,8 @@ class SectionChain:
         found = SectionReduction(reference, z, total, static, speed, heat, window, zero, {})
         drags = found.integrated()
         scale = reference.dynamic_pressure * settings.chord
-        values = {ROW: drags[0], coefficient_of(ROW): drags[0] / scale}
-        values |= {estimate_of(ROW, method): drag for method, drag in zip(METHODS, drags[2:], strict=True)}
+        values = {ROW: float(drags[0]), coefficient_of(ROW): float(drags[0]) / scale}
+        values |= {estimate_of(ROW, method): float(drag) for method, drag in zip(METHODS, drags[2:], strict=True)}
         return replace(found, values=values)
 
     def vectors(self, errors: dict[str, Array], *, vary: SectionVariation = _AS_FOUND) -> Array:

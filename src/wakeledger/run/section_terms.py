@@ -37,6 +37,7 @@ class _Trials:
     chain: SectionChain
     nominal: SectionReduction
     noise: Sequence[Errors]
+    noise_share: float
 
     def changes(self, choices: Callable[[SectionReduction, Errors], Sequence[Array]]) -> Array:
         """Change of the outputs by each choice, the mean square that noise alone causes taken off; shape (c, m)."""
@@ -49,7 +50,7 @@ class _Trials:
             return found
         held = SectionVariation(window=self.nominal.window)
         by_noise = [differences(self.chain.reduce(errors, vary=held), errors) - found for errors in self.noise]
-        square = np.square(found) - np.mean(np.square(by_noise), axis=0)
+        square = np.square(found) - self.noise_share * np.mean(np.square(by_noise), axis=0)
         cleaned: Array = np.copysign(np.sqrt(np.maximum(square, 0.0)), found)
         return cleaned
 
@@ -61,6 +62,7 @@ def section_terms(
     line: Callable[[NDArray[np.bool_]], Line],
     usable: NDArray[np.bool_],
     noise: Sequence[Errors] = (),
+    noise_share: float = 1.0,
 ) -> tuple[NumericalTerm, ...]:
     """All numerical terms of one traverse.
 
@@ -76,13 +78,15 @@ def section_terms(
         Points that are used.
     noise : sequence of mapping
         A few draws of the random errors alone.
+    noise_share : float
+        Which share of their variance the data show; only so much can have caused what is found.
 
     Returns
     -------
     tuple of NumericalTerm
         Over `wakeledger.run.section_chain.OUTPUTS`; terms that do not apply are left out.
     """
-    trials = _Trials(chain, nominal, noise)
+    trials = _Trials(chain, nominal, noise, noise_share)
     terms = [_window_term(trials), _resolution_term(trials), _level_term(trials)]
     if chain.line.filled.any():
         terms.append(_gap_term(trials, line, usable))
