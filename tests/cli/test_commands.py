@@ -107,9 +107,9 @@ def test_options_reach_the_reduction(cli, survey_room, survey, passing, monkeypa
     monkeypatch.setattr(gallery, "DRAWINGS", {"budget": gallery.DRAWINGS["budget"]})
     survey_room.ledger = passing
     out_folder = survey.parent / "a" / "b"
-    status, out, err = cli("reduce", survey, "--out", out_folder, "--draws", 50, "--figures", "svg, PNG", "--quiet")
+    status, out, err = cli("reduce", survey, "--out", out_folder, "--draws", 150, "--figures", "svg, PNG", "--quiet")
     assert (status, out, err) == (0, "", "")
-    assert survey_room.calls[0][1] == 50
+    assert survey_room.calls[0][1] == 150
     assert {path.name for path in (out_folder / "figures").iterdir()} == {"budget.svg", "budget.png"}
 
 

@@ -15,14 +15,12 @@ from wakeledger.cli.show import show
 @click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
 @click.version_option(package_name="wakeledger", message="%(prog)s %(version)s")
 def wakeledger() -> None:
-    r"""Turn a plane of flow data behind a body into a drag ledger.
+    """Turn a plane of flow data behind a body into a drag ledger.
 
     Profile, induced and wave drag and lift, each with its uncertainty and an independent cross-check, kept in one
     archive.
 
-    \b
-    Exit status: 0 done; 1 done, but a check failed; 2 the input is wrong;
-    3 the program itself failed.
+    Exit status: 0 done; 1 done, but a check failed; 2 the input is wrong; 3 the program itself failed.
     """
 
 

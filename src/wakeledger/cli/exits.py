@@ -59,7 +59,7 @@ def run(command: click.Command, arguments: Sequence[str]) -> int:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return DONE
     except Exception as error:
-        _say(f"the program failed ({type(error).__name__}); the log with the traceback is {_log(arguments)}")
+        _say(f"the program failed ({type(error).__name__}); {_log(arguments)}")
         return PROGRAM_FAILED
     return status if isinstance(status, int) else DONE
 
@@ -69,12 +69,19 @@ def _say(message: str) -> None:
 
 
 def _log(arguments: Sequence[str]) -> str:
+    """Write the log of a failure; says where it is."""
     import platform
     import tempfile
     from importlib.metadata import version
 
-    handle, name = tempfile.mkstemp(prefix="wakeledger-", suffix=".log")
-    with os.fdopen(handle, "w", encoding="utf-8") as stream:
-        stream.write(f"wakeledger {version('wakeledger')}, Python {platform.python_version()}, {platform.platform()}\n")
-        stream.write(f"command: wakeledger {shlex.join(arguments)}\n\n{traceback.format_exc()}")
-    return name
+    text = (
+        f"wakeledger {version('wakeledger')}, Python {platform.python_version()}, {platform.platform()}\n"
+        f"command: wakeledger {shlex.join(arguments)}\n\n{traceback.format_exc()}"
+    )
+    try:
+        handle, name = tempfile.mkstemp(prefix="wakeledger-", suffix=".log")
+        with os.fdopen(handle, "w", encoding="utf-8", errors="backslashreplace") as stream:
+            stream.write(text)
+    except OSError as error:
+        return f"no log could be written ({error.strerror or error}): {traceback.format_exc(limit=-1)}"
+    return f"the log with the traceback is {name}"

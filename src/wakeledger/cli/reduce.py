@@ -22,7 +22,12 @@ def _formats(_context: click.Context, _parameter: click.Parameter, given: str | 
 @click.command(short_help="Reduce a survey to its drag ledger.")
 @click.argument("survey", type=click.Path(path_type=Path), metavar="SURVEY.toml|LEDGER.nc")
 @click.option("--out", type=click.Path(path_type=Path), metavar="DIR", help="Folder of the products.")
-@click.option("--draws", type=click.IntRange(min=0), metavar="N", help="Monte Carlo draws instead of the survey's.")
+@click.option(
+    "--draws",
+    type=click.IntRange(min=100),
+    metavar="N",
+    help="Monte Carlo draws instead of the survey's.",
+)
 @click.option("--figures", callback=_formats, metavar="pdf,png,svg", help="Also write the figures in these formats.")
 @click.option("--overwrite", is_flag=True, help="Replace existing products.")
 @click.option("--quiet", is_flag=True, help="Print neither progress nor the ledger.")

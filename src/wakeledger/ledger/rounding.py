@@ -46,7 +46,7 @@ def rounded(value: float, uncertainty: float) -> tuple[str, str]:
 
 
 def significant(value: float, digits: int) -> str:
-    """A value to so many significant digits, without an exponent where it is between 1e-6 and 1e9.
+    """A value to so many significant digits, without an exponent where it is between 1e-4 and 1e9.
 
     Parameters
     ----------
@@ -68,7 +68,7 @@ def significant(value: float, digits: int) -> str:
         return UNKNOWN if math.isnan(value) else str(value)
     if value == 0:
         return "0"
-    if not 1e-6 <= abs(value) < 1e9:
+    if not 1e-4 <= abs(value) < 1e9:
         return f"{value:.{digits - 1}e}"
     return f"{value:.{_decimals(abs(value), digits)}f}"
 

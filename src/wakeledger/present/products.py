@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+import errno
 import os
 import shutil
+import tempfile
 from collections.abc import Sequence
+from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -59,11 +62,18 @@ def require_free(directory: Path, *, overwrite: bool) -> None:
     ProductExistsError
         If there are products and they must not be replaced.
     DataError
-        If the place is taken by a file.
+        If the place is taken by a file, or nothing can be written there.
     """
-    if directory.exists() and not directory.is_dir():
-        raise DataError("the output folder is a file", file=directory, remedy="give a folder with --out")
-    found = existing_products(directory)
+    try:
+        _require_writable(directory)
+        found = existing_products(directory)
+    except OSError as error:
+        raise _unwritable(directory, error) from error
+    for name in found:
+        if name.name in FILES and (directory / name).is_dir():
+            raise DataError(
+                f"{name} is a folder there", file=directory, remedy="move it, or choose another folder with --out"
+            )
     if found and not overwrite:
         names = ", ".join(str(name) for name in found[:4])
         raise ProductExistsError(
@@ -71,6 +81,25 @@ def require_free(directory: Path, *, overwrite: bool) -> None:
             file=directory,
             remedy="add --overwrite to replace them, or choose another folder with --out",
         )
+
+
+def _require_writable(directory: Path) -> None:
+    """Refuse a place where no folder can be made, or none can be filled, before any work is done."""
+    nearest = next(folder for folder in (directory, *directory.absolute().parents) if os.path.lexists(folder))
+    if not nearest.is_dir():
+        if nearest == directory:
+            raise DataError("the output folder is a file", file=directory, remedy="give a folder with --out")
+        raise NotADirectoryError(errno.ENOTDIR, f"{nearest} is a file")
+    if not os.access(nearest, os.W_OK | os.X_OK):
+        raise PermissionError(errno.EACCES, f"{nearest} is not writable")
+
+
+def _unwritable(directory: Path, error: OSError) -> DataError:
+    return DataError(
+        f"the products cannot be written ({error.strerror or error})",
+        file=directory,
+        remedy="choose another folder with --out",
+    )
 
 
 def write_products(
@@ -109,11 +138,13 @@ def write_products(
                 missing.mkdir()
                 made.append(missing)
         home = directory if directory.is_dir() else directory.parent
-        aside = home / f".wakeledger-{os.getpid()}.part"
+        aside = Path(tempfile.mkdtemp(prefix=".wakeledger-", suffix=".part", dir=home))
         fresh = aside / "fresh"
         try:
-            fresh.mkdir(parents=True)
+            fresh.mkdir()
             names = _build(ledger, fresh, figures)
+            # Another run may have written there meanwhile.
+            require_free(directory, overwrite=overwrite)
             if directory.is_dir():
                 _exchange(directory, fresh, aside / "earlier", names, existing_products(directory))
             else:
@@ -122,13 +153,10 @@ def write_products(
             shutil.rmtree(aside, ignore_errors=True)
     except BaseException as error:
         for folder in reversed(made):
-            folder.rmdir()
+            with suppress(OSError):
+                folder.rmdir()
         if isinstance(error, OSError):
-            raise DataError(
-                f"the products cannot be written ({error.strerror or error})",
-                file=directory,
-                remedy="choose another folder with --out",
-            ) from error
+            raise _unwritable(directory, error) from error
         raise
     return names
 

@@ -56,6 +56,8 @@ def recognise(path: Path) -> str:
 
 
 def _head(path: Path) -> bytes:
+    if path.is_fifo() or path.is_char_device():
+        raise DataError("this is no regular file", file=path, remedy="write what it gives to a file, and name that")
     try:
         with path.open("rb") as stream:
             return stream.read(_HEAD)
@@ -67,8 +69,8 @@ def _head(path: Path) -> bytes:
         raise DataError(
             "this is a directory", file=path, remedy="give the file that holds the points of the plane"
         ) from None
-    except OSError as error:
-        reason = (error.strerror or str(error)).lower()
+    except (OSError, ValueError) as error:
+        reason = (getattr(error, "strerror", None) or str(error)).lower()
         raise DataError(
             f"the file cannot be read ({reason})", file=path, remedy="check the path and its permissions"
         ) from None
