@@ -245,6 +245,7 @@ def _prepare(survey: SurveyInput) -> Prepared:
     noises, noise_notes = _noises(chain, plain, declared, inputs, seed=file.uncertainty.seed)
     chain = replace(chain, frozen=replace(chain.frozen, bias=noise_bias(chain, plain, noises)))
     nominal = chain.reduce()
+    chain = replace(chain, frozen=replace(chain.frozen, region=nominal.region.mask))
     outer = outer_flow(
         reference.total_pressure - nominal.flow.total_pressure + nominal.loss_zero,
         nominal.flow.v,
