@@ -8,6 +8,7 @@ tests/test_docs.py computes it once more and compares.
 from __future__ import annotations
 
 import json
+import os
 import re
 import subprocess
 import sys
@@ -219,7 +220,13 @@ class Sample:
         """What a command prints; it must end with the given exit status."""
         program = [sys.executable, "-c", "from wakeledger.cli import main; main()"]
         done = subprocess.run(
-            [*program, *arguments], cwd=self.folder, capture_output=True, text=True, encoding="utf-8", check=False
+            [*program, *arguments],
+            cwd=self.folder,
+            env={**os.environ, "COLUMNS": "100", "NO_COLOR": "1"},
+            capture_output=True,
+            text=True,
+            encoding="utf-8",
+            check=False,
         )
         if done.returncode != status:
             raise RuntimeError(f"wakeledger {' '.join(arguments)} ended with {done.returncode}: {done.stderr}")
@@ -239,7 +246,7 @@ class Sample:
 
     def cut(self) -> str:
         """What the program says of the same survey without its starboard end: the checks only."""
-        text = self.run("reduce", "cut.toml", "--overwrite", status=1).replace(" --overwrite", "")
+        text = self.run("reduce", "cut.toml", "--draws", "100", "--overwrite", status=1).replace(" --overwrite", "")
         command = text.splitlines()[0]
         estimates = text[text.index("Other methods") : text.index("Comparison")]
         checks = text[text.index("Checks\n") : text.index("Notes\n")]
