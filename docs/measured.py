@@ -245,12 +245,12 @@ class Sample:
         return self.console(self.run("inspect", "survey.toml"))
 
     def cut(self) -> str:
-        """What the program says of the same survey without its starboard end: the checks only."""
+        """What the program says of the same survey without its starboard end, without heading and notes."""
         text = self.run("reduce", "cut.toml", "--draws", "100", "--overwrite", status=1).replace(" --overwrite", "")
         command = text.splitlines()[0]
-        estimates = text[text.index("Other methods") : text.index("Comparison")]
+        rows = text[text.index("\n\n") : text.index("Comparison")]
         checks = text[text.index("Checks\n") : text.index("Notes\n")]
-        return self.console(f"{command}\n...\n{estimates}{checks}")
+        return self.console(f"{command}\n...{rows}...\n\n{checks}")
 
     def truth(self) -> str:
         """The ledger of the sample survey beside its exact rows."""

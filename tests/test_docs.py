@@ -115,7 +115,8 @@ def test_links_and_images_resolve(page):
 
 def test_every_page_is_reached_and_every_figure_used(measured):
     listed = re.findall(r"\]\((\w+\.md)\)", PAGES["index.md"])
-    assert set(listed) | {"index.md"} == set(PAGES)
+    # The coverage study writes a page of its own where it is run.
+    assert {*listed, "index.md"} == set(PAGES) - {"coverage.md"}
     shown = {target for text in PAGES.values() for target in re.findall(r"!\[[^\]]+\]\(figures/([^)]+)\)", text)}
     files = {path.name for path in (DOCS / "figures").iterdir()}
     assert shown == files
