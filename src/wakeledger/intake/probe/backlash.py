@@ -1,0 +1,254 @@
+"""Play in the traverse gear: rows taken to starboard and to port stand apart, and the plane shows a zipper.
+
+The probe stands b/2 behind the indicated place in its direction of travel. Only rows taken both ways show it; where all
+rows run the same way the whole plane is moved by b/2, which no drag depends on, and nothing is corrected.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from wakeledger.core.grid import Array
+from wakeledger.intake.probe.correction import Correction
+
+#: Fewest points of a row and fewest rows that take part.
+FEWEST_POINTS = 5
+FEWEST_ROWS = 6
+#: Rows in one comparison: a polynomial of degree 3 across them leaves no trace.
+_ROWS = 5
+_ITERATIONS = 12
+_GROUPS = 8
+_ONE_WAY = "all rows were taken in the same direction"
+
+
+@dataclass(frozen=True)
+class Backlash:
+    """Play of the traverse gear found from neighbouring rows.
+
+    Attributes
+    ----------
+    value : float
+        b, m: distance between the places of one indicated position reached from either side; positive where the probe
+        lags behind. 0 where it cannot be seen.
+    standard_uncertainty : float
+        m; NaN with a reason where it is unknown.
+    rows : int
+        Rows it rests on.
+    reason : str or None
+        Why it is unknown.
+    """
+
+    value: float
+    standard_uncertainty: float
+    rows: int
+    reason: str | None = None
+
+
+def row_senses(along: Array, row: NDArray[np.integer]) -> Array:
+    """Direction in which each point's row was taken: +1, −1, or 0 for a row of one place, shape (n,).
+
+    Parameters
+    ----------
+    along : ndarray, shape (n,)
+        Position along the rows, m, in the order in which the points were taken.
+    row : ndarray of int, shape (n,)
+        Traverse row of each point.
+    """
+    sense = np.zeros(along.size)
+    for number in np.unique(row):
+        here = np.flatnonzero(row == number)
+        sense[here] = np.sign(along[here[-1]] - along[here[0]])
+    return sense
+
+
+def estimate_backlash(along: Array, across: Array, row: NDArray[np.integer], values: Array) -> Backlash:
+    """Backlash of a traverse whose rows run to and fro.
+
+    Parameters
+    ----------
+    along, across : ndarray, shape (n,)
+        Indicated positions along the rows and across them, m, in the order in which the points were taken.
+    row : ndarray of int, shape (n,)
+        Traverse row of each point.
+    values : ndarray, shape (channels, n)
+        Any readings; NaN where one is missing. Channels are weighted by their own scatter.
+
+    Returns
+    -------
+    Backlash
+
+    Notes
+    -----
+    With σ_j = ±1 the direction of row j and F the field, a row reads F(y − σ_j b/2, z_j). A divided difference of
+    fourth order across five neighbouring rows, Σ c_j f_j, leaves nothing of a field that varies smoothly from row to
+    row but keeps what alternates: Σ c_j f_j = −(b/2) Σ c_j σ_j ∂F_j/∂y. b is found by least squares over all places,
+    rows and channels, the rows being moved by cubic splines until nothing is left; its standard uncertainty is a
+    jackknife over groups of rows. What varies from row to row with an alternating sign looks the same, so does a lag.
+    """
+    table = _rows(along, across, row, values)
+    senses = np.array([entry.sense for entry in table])
+    if not np.any(senses):
+        return Backlash(0.0, np.nan, 0, "no row has points enough")
+    if not (np.any(senses > 0) and np.any(senses < 0)):
+        return Backlash(0.0, np.nan, len(table), _ONE_WAY)
+    if len(table) < FEWEST_ROWS:
+        return Backlash(0.0, np.nan, len(table), f"fewer than {FEWEST_ROWS} rows")
+    score = _Score(table)
+    half, slope = 0.0, 1.0
+    step = score(half)
+    reach = 4 * score.spacing
+    for _ in range(_ITERATIONS):
+        # Noise in the slopes makes the first step too short; the secant learns by how much.
+        move = float(np.clip(step / slope, -reach, reach))
+        if abs(move) < 1e-6 * score.spacing:
+            break
+        half += move
+        after = score(half)
+        if abs(step - after) > 0.05 * abs(move):
+            slope = float(np.clip((step - after) / move, 0.2, 2.0))
+        step = after
+    return Backlash(2 * half, 2 * score.scatter(half) / slope, len(table))
+
+
+def correct_backlash(
+    values: Array,
+    along: Array,
+    row: NDArray[np.integer],
+    *,
+    backlash: float,
+    standard_uncertainty: float = np.nan,
+) -> Correction:
+    """Values as they are at the indicated places.
+
+    Parameters
+    ----------
+    values : ndarray, shape (..., n)
+        Readings or flow variables; a point that is missing in one of them stays missing in all.
+    along : ndarray, shape (n,)
+        Indicated position along the rows, m.
+    row : ndarray of int, shape (n,)
+        Traverse row of each point, in the order in which the points were taken.
+    backlash, standard_uncertainty : float
+        b and how well it is known, m (NaN: not known).
+
+    Returns
+    -------
+    Correction
+        Each row read by a cubic spline through its true places, y − σ b/2; beyond a row's last true place the last
+        value is kept. Where all rows run the same way nothing is changed.
+    """
+    values = np.asarray(values, float)
+    sense = row_senses(along, row)
+    size, slope = np.zeros(values.shape), np.zeros(values.shape)
+    if not (np.any(sense > 0) and np.any(sense < 0)):
+        return Correction(values + size, size, slope)
+    measured = np.isfinite(values).reshape(-1, along.size).all(axis=0)
+    for number in np.unique(row):
+        here = np.flatnonzero((row == number) & measured)
+        places, first = np.unique(along[here], return_index=True)
+        if here.size < FEWEST_POINTS or places.size < here.size or not backlash:
+            continue
+        spline = _spline(places - 0.5 * sense[here[0]] * backlash, values[..., here[first]])
+        at = np.clip(along[here], spline.x[0], spline.x[-1])
+        size[..., here] = spline(at) - values[..., here]
+    for number in np.unique(row):
+        here = np.flatnonzero((row == number) & measured)
+        places, first = np.unique(along[here], return_index=True)
+        if here.size >= FEWEST_POINTS and places.size == here.size:
+            slope[..., here[first]] = 0.5 * sense[here[0]] * _spline(places, values[..., here[first]])(places, 1)
+    return Correction(values + size, size, standard_uncertainty * slope)
+
+
+def _spline(places: Array, values: Array) -> Any:
+    from scipy.interpolate import CubicSpline
+
+    return CubicSpline(places, values, axis=-1)
+
+
+@dataclass(frozen=True, eq=False)
+class _Row:
+    """One row: ascending indicated places, readings, level across, direction of travel."""
+
+    along: Array
+    values: Array
+    across: float
+    sense: float
+
+
+def _rows(along: Array, across: Array, row: NDArray[np.integer], values: Array) -> list[_Row]:
+    sense = row_senses(along, row)
+    measured = np.isfinite(values).all(axis=0)
+    table = []
+    for number in np.unique(row):
+        here = np.flatnonzero((row == number) & measured)
+        places, first = np.unique(along[here], return_index=True)
+        if places.size >= FEWEST_POINTS and sense[here[0]]:
+            chosen = here[first]
+            table.append(_Row(places, values[:, chosen], float(np.mean(across[chosen])), float(sense[here[0]])))
+    return sorted(table, key=lambda entry: entry.across)
+
+
+class _Score:
+    """How far apart the rows still are when each is moved back by half the backlash."""
+
+    def __init__(self, table: list[_Row]) -> None:
+        low, high = max(entry.along[0] for entry in table), min(entry.along[-1] for entry in table)
+        count = int(np.median([entry.along.size for entry in table]))
+        self.spacing = float((high - low) / (count - 1))
+        self.at = low + self.spacing * np.arange(1, count - 1)
+        self.table = table
+        self.sense = np.array([entry.sense for entry in table])
+        levels = np.array([entry.across for entry in table])
+        self.windows, weights = [], []
+        for start in range(len(table) - _ROWS + 1):
+            window = slice(start, start + _ROWS)
+            z = levels[window]
+            if np.any(np.diff(z) <= 0):
+                continue
+            gap = (z[:, None] - z) / np.ptp(z)
+            np.fill_diagonal(gap, 1.0)
+            coefficients = 1 / np.prod(gap, axis=1)
+            self.windows.append(window)
+            weights.append(coefficients / np.abs(coefficients).sum())
+        self.weights = weights
+
+    def parts(self, half: float) -> tuple[Array, Array]:
+        """Σ d g and Σ g² of each window of rows."""
+        moved = [_spline(entry.along - entry.sense * half, entry.values) for entry in self.table]
+        fields = np.stack([spline(self.at) for spline in moved])
+        slopes = np.stack([spline(self.at, 1) for spline in moved])
+        smooth = slopes.copy()
+        smooth[1:-1] = 0.25 * slopes[:-2] + 0.5 * slopes[1:-1] + 0.25 * slopes[2:]
+        left, model = [], []
+        for window, weight in zip(self.windows, self.weights, strict=True):
+            left.append(np.einsum("j,jcy->cy", weight, fields[window]))
+            model.append(-np.einsum("j,jcy->cy", weight * self.sense[window], smooth[window]))
+        d, g = np.stack(left), np.stack(model)
+        scatter = np.median(np.abs(d), axis=(0, 2))
+        floor = 1e-9 * np.max(np.abs(fields), axis=(0, 2))
+        trust = 1 / np.maximum(scatter, np.maximum(floor, 1e-300)) ** 2
+        return np.einsum("kcy,kcy,c->k", d, g, trust), np.einsum("kcy,kcy,c->k", g, g, trust)
+
+    def __call__(self, half: float) -> float:
+        """Remaining half backlash, as far as the noisy slopes can tell, m."""
+        products, squares = self.parts(half)
+        total = squares.sum()
+        return float(products.sum() / total) if total > 0 else 0.0
+
+    def scatter(self, half: float) -> float:
+        """Standard uncertainty of the remaining half backlash, m: a jackknife over groups of neighbouring rows."""
+        products, squares = self.parts(half)
+        groups = np.array_split(np.arange(products.size), min(_GROUPS, products.size))
+        total = squares.sum()
+        if len(groups) < 2 or not total > 0:
+            return float("nan")
+        without = []
+        for group in groups:
+            rest = total - squares[group].sum()
+            without.append((products.sum() - products[group].sum()) / rest if rest > 0 else 0.0)
+        k = len(groups)
+        return float(np.sqrt((k - 1) / k * np.sum((np.array(without) - np.mean(without)) ** 2)))
