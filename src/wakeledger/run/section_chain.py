@@ -180,11 +180,14 @@ class SectionChain:
         How they come onto the places of the traverse.
     settings : SectionSettings
         The survey's settings.
+    drifting : bool
+        Whether the total pressure beside the wake is a sloping line, as where its reference drifts, and not a level.
     """
 
     points: Points
     line: Line
     settings: SectionSettings
+    drifting: bool = False
 
     def reference(self, errors: Mapping[str, Array] = _NO_ERRORS) -> Reference:
         """The undisturbed stream under errors of its inputs."""
@@ -302,7 +305,7 @@ class SectionChain:
     def _window(self, z: Array, total: Array | None, speed: Array | None, reference: Reference) -> WakeWindow:
         settings = self.settings
         if total is not None:
-            deficit, sloping = reference.total_pressure - total, False
+            deficit, sloping = reference.total_pressure - total, self.drifting
         else:
             assert speed is not None
             deficit, sloping = reference.speed - speed, True

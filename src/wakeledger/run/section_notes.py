@@ -53,13 +53,13 @@ def section_notes(
     )
     counts = decode(line.flag)
     for count, what in (
-        (counts["missing"], "places without a usable point were filled from their neighbours"),
-        (counts["averaged"], "places were measured more than once and averaged"),
-        (int(np.count_nonzero(state.impossible)), "points have no real flow state and count as missing"),
-        (int(np.count_nonzero(state.usable & ~usable)), "points were excluded by the survey file"),
+        (counts["missing"], "Places without a usable point, filled from their neighbours"),
+        (counts["averaged"], "Places measured more than once and averaged"),
+        (int(np.count_nonzero(state.impossible)), "Points without a real flow state, which count as missing"),
+        (int(np.count_nonzero(state.usable & ~usable)), "Points excluded by the survey file"),
     ):
         if count:
-            found.append(f"{count} {what}.")
+            found.append(f"{what}: {count}.")
     wake = f"from {settings.along} = {window.lower:.4g} m to {window.upper:.4g} m"
     if settings.include or settings.grow:
         found.append(f"The wake was found, and widened by the survey file, {wake}.")
@@ -70,6 +70,8 @@ def section_notes(
         )
     if not window.enclosed:
         found.append("The traverse ends before the wake does, or where it does.")
+    if chain.drifting:
+        found.append("The total pressure beside the wake drifts along the traverse; the wake was found above that.")
     found += _static_notes(chain, nominal)
     lower, upper = nominal.loss_zero
     if math.isfinite(lower) and (lower or upper):
@@ -80,8 +82,8 @@ def section_notes(
         )
     if drag.stalled_points:
         found.append(
-            f"At {drag.stalled_points} places the total pressure lies below a static pressure; there the flow is taken"
-            " as brought to rest."
+            "Places where the total pressure lies below a static pressure, so that the flow is taken as brought to"
+            f" rest: {drag.stalled_points}."
         )
     return found
 
