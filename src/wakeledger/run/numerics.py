@@ -163,6 +163,8 @@ def _gap_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gridding])
     gap = places[inside]
     if gap.size == 0:
         gap = _filled_places(chain)
+    grid = chain.gridding.grid
+    spacing = None if chain.gridding.kind == "uniform" else (grid.dy, grid.dz)
     moves = ((2, 0), (-2, 0), (0, 2), (0, -2), (2, 2), (-2, -2), (2, -2), (-2, 2))
     # Scattered points take seconds to grid anew.
     for dy, dz in moves if chain.gridding.operators() is not None else moves[:2]:
@@ -171,7 +173,7 @@ def _gap_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gridding])
         if not also_missing.any():
             continue
         try:
-            gridding = regrid(usable=usable & ~also_missing)
+            gridding = regrid(usable=usable & ~also_missing, spacing=spacing)
         except DataError:
             continue
         if gridding.grid != chain.gridding.grid:
