@@ -437,6 +437,19 @@ def test_excluded_and_included_stretches(tmp_path):
     assert wide.row(ROW).value == pytest.approx(exact, rel=2e-3)
 
 
+def test_a_wake_lost_in_noise_can_be_given(tmp_path):
+    data, exact = gaussian(depth=0.02, width=0.04, n=61, half=0.2)
+    data = noisy(data, total=15.0, seed=5)
+    level = {"level": 30.0}
+    with pytest.raises(InputError, match="no wake stands out"):
+        ledger(tmp_path, data, wake=level)
+    found = ledger(tmp_path / "given", data, wake=level | {"include": [[["-1 m", "-0.1 m"], ["1 m", "0.1 m"]]]})
+    window = float(found.plane["wake_from"]), float(found.plane["wake_to"])
+    assert window == pytest.approx((-0.1, 0.1))
+    # Noise of 3 % of q over 0.2 m with 30 places, and the same again from the level beside it.
+    assert found.row(ROW).value == pytest.approx(exact, abs=4 * 15.0 * 0.2 / math.sqrt(30))
+
+
 # checks
 
 
@@ -475,6 +488,19 @@ def test_checks_and_notes_of_a_good_traverse(tmp_path):
     assert not any("check the sources" in note or "[model]" in note for note in found.notes)
     loud = ledger(tmp_path / "loud", data, sources=[source("total noise", "plane.total_pressure", "9 Pa")])
     assert any("check the sources" in note for note in loud.notes)
+
+
+def test_speed_at_the_streams_pressure_is_questioned(tmp_path):
+    """Where the pressure is not the stream's, a speed taken at it shows a loss beside the wake, which is reported."""
+    data, exact = carried_back(pressure=0.04)
+    speed = {"z": entry("z", "m"), "u": entry("u", "m/s")}
+    found = ledger(tmp_path, data, columns=speed, primary="velocity", edge_static="stream")
+    verdicts = {check.name: check.verdict for check in found.checks}
+    assert verdicts["outer_flow"] != "pass"
+    assert verdicts["noise_bias"] in ("pass", "not_applicable")
+    far, exact = gaussian()
+    options = {"columns": speed, "primary": "velocity", "edge_static": "stream"}
+    assert drag_of(tmp_path / "far", far, **options) == pytest.approx(exact, rel=1e-3)
 
 
 def test_without_sources_the_uncertainty_is_unknown(tmp_path):

@@ -7,7 +7,7 @@ from collections.abc import Mapping, Sequence
 
 from wakeledger.confidence.budget import Budget
 from wakeledger.confidence.samples import Samples
-from wakeledger.core.errors import InputError
+from wakeledger.core.errors import SurveyError
 from wakeledger.core.estimate import Estimate
 from wakeledger.core.names import ROWS
 from wakeledger.ledger.crosscheck import check_estimate, compare
@@ -124,6 +124,31 @@ def cross_check(
     return check_estimate(estimate, row, difference_uncertainty=difference_u, same_algebra=same_algebra)
 
 
+def require_rows(survey: Survey, names: Sequence[str]) -> None:
+    """Refuse a ``[[compare]]`` with a row that the ledger will not have, before the Monte Carlo.
+
+    Parameters
+    ----------
+    survey : Survey
+        The survey file.
+    names : sequence of str
+        The rows there will be.
+
+    Raises
+    ------
+    SurveyError
+        Naming the entry and the rows there are.
+    """
+    for number, entry in enumerate(survey.compare, 1):
+        if entry.row not in names:
+            raise SurveyError(
+                f"row {entry.row!r} is not in this ledger",
+                file=survey.path,
+                place=f"[[compare]] {number} ({entry.name}) row",
+                remedy=f"it has {', '.join(names)}",
+            )
+
+
 def comparisons(survey: Survey, rows: Sequence[Row], scales: Mapping[str, float]) -> tuple[Comparison, ...]:
     """The values of ``[[compare]]`` held against the rows.
 
@@ -142,19 +167,13 @@ def comparisons(survey: Survey, rows: Sequence[Row], scales: Mapping[str, float]
 
     Raises
     ------
-    InputError
+    SurveyError
         If a row that is to be compared is not in the ledger.
     """
+    require_rows(survey, [row.name for row in rows])
     by_name = {row.name: row for row in rows}
     found = []
     for entry in survey.compare:
-        if entry.row not in by_name:
-            raise InputError(
-                f"row {entry.row!r} is not in this ledger",
-                file=survey.path,
-                place=f"[[compare]] ({entry.name}) row",
-                remedy=f"it has {', '.join(by_name)}",
-            )
         uncertainty = entry.standard_uncertainty
         if uncertainty is None:
             uncertainty = entry.coefficient_standard_uncertainty

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
@@ -16,7 +16,7 @@ from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.confidence.terms import NumericalTerm, add_terms
-from wakeledger.core.errors import InputError
+from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.core.flags import decode
 from wakeledger.core.grid import Array
 from wakeledger.core.names import VARIABLES
@@ -25,9 +25,10 @@ from wakeledger.intake.gridding import check_duplicates
 from wakeledger.intake.gridding.line import Line, make_line
 from wakeledger.ledger.inspection import ChannelSummary, EdgeState, Inspection
 from wakeledger.ledger.rows import CrossCheck, Ledger, Row
+from wakeledger.physics.fields.traverse_window import TAIL
 from wakeledger.physics.methods.section_drag import SectionDrag, section_drag
 from wakeledger.run import tables
-from wakeledger.run.assembly import NO_SOURCE, budget_lines, comparisons, cross_check, ledger_row
+from wakeledger.run.assembly import NO_SOURCE, budget_lines, comparisons, cross_check, ledger_row, require_rows
 from wakeledger.run.chain import estimate_of
 from wakeledger.run.checks import EDGE_CELLS
 from wakeledger.run.inputs import layouts, sources
@@ -55,6 +56,8 @@ Progress = Callable[[int, int], None]
 
 #: Draws that tell the effect of a choice from that of noise.
 _NOISE_DRAWS = 16
+#: The outer flow's total pressure is taken as drifting where sloping lines leave less than this share of its scatter.
+_DRIFT = 0.8
 #: Fewer places than this beside the wake do not show its noise.
 _FEWEST_OUTER = 8
 _NO_DRAWS = "no Monte Carlo draws were made"
@@ -138,12 +141,16 @@ def reduce_section(
     InputError
         If the survey or its data are wrong.
     """
+    require_rows(survey.survey, (ROW,))
     prepared = prepare_section(survey)
     uncertainty = survey.survey.uncertainty
     count = uncertainty.draws if draws is None else draws
     samples, budget = None, None
     if prepared.sources and count >= 2:
-        samples, budget = _propagate(prepared, draws=count, seed=uncertainty.seed, progress=progress)
+        try:
+            samples, budget = _propagate(prepared, draws=count, seed=uncertainty.seed, progress=progress)
+        except InputError as error:
+            raise error.located(file=survey.survey.path) from error
     return _ledger(survey, prepared, samples, budget, command=command)
 
 
@@ -210,6 +217,8 @@ def prepare_section(survey: SurveyInput) -> PreparedSection:
     refuse_unsupported(survey.survey)
     try:
         return _prepare(survey)
+    except SurveyError as error:
+        raise error.located(file=survey.survey.path) from error
     except InputError as error:
         raise error.located(file=survey.points.source) from error
 
@@ -256,6 +265,11 @@ def _prepare(survey: SurveyInput) -> PreparedSection:
 
     chain = SectionChain(points, line(usable), settings)
     nominal = chain.reduce()
+    if state.total_pressure is not None and nominal.window.noise > TAIL * nominal.window.depth:
+        sloping = replace(chain, drifting=True)
+        other = sloping.reduce()
+        if other.window.noise < _DRIFT * nominal.window.noise:
+            chain, nominal = sloping, other
     drag = section_drag(
         nominal.coordinate,
         nominal.total_pressure,

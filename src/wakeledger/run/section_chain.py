@@ -10,7 +10,7 @@ from typing import Literal
 
 import numpy as np
 
-from wakeledger.core.errors import InputError
+from wakeledger.core.errors import DataError, InputError
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Points
 from wakeledger.intake.gridding.line import Line
@@ -309,7 +309,13 @@ class SectionChain:
         else:
             assert speed is not None
             deficit, sloping = reference.speed - speed, True
-        window = wake_edges(z, deficit, level=settings.level, sloping=sloping)
+        try:
+            window = wake_edges(z, deficit, level=settings.level, sloping=sloping)
+        except DataError:
+            if not settings.include:
+                raise
+            ends = np.clip([edge for stretch in settings.include for edge in stretch], z[0], z[-1])
+            return WakeWindow.given(z, deficit, float(ends.min()), float(ends.max()))
         lower, upper = window.lower - settings.grow, window.upper + settings.grow
         for start, stop in settings.include:
             lower, upper = min(lower, start), max(upper, stop)

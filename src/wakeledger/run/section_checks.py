@@ -131,8 +131,11 @@ def noise_shift(reduction: SectionReduction, settings: SectionSettings) -> float
     def moved(sign: float) -> Array:
         # The window's noise is that of the speed where no total pressure was measured.
         if settings.primary == "velocity" and settings.edge_static != "measured":
-            speed = reduction.speed + sign * step
-            return total_at(speed, reduction.static_pressure, reference, total_temperature=heat)
+            here, there = (
+                total_at(speed, reduction.static_pressure, reference, total_temperature=heat)
+                for speed in (reduction.speed, reduction.speed + sign * step)
+            )
+            return reduction.total_pressure + there - here
         return reduction.total_pressure + sign * step
 
     if math.isnan(sigma):
