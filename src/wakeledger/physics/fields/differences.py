@@ -2,8 +2,8 @@
 
 Tenth-order central differences inside, lower orders towards the edges of the window as the stencil runs out of room,
 one-sided second order on the edge itself. For a pair of Gaussian vortices the error of the induced drag at spacing
-h/a = 0.5 and 0.8 is 2.4e-4 and 2.7e-3 with sixth order, 1.9e-5 and 2.1e-4 with tenth, while the scatter from noise
-grows by less than a tenth of itself (tests/physics/test_differences.py).
+h/a = 0.5 and 0.8 is 2.4e-4 and 2.7e-3 with sixth order, 2e-5 and below 1e-3 with tenth, while the scatter from noise
+grows by less than a tenth of itself (docs/numerics.md, tests/physics/test_fields.py).
 """
 
 from __future__ import annotations
