@@ -136,8 +136,9 @@ def point_state(
     axes : ndarray, shape (3, 3)
         Signed permutation P of the file's vector components. Pitch and yaw have their senses in probe axes, and P does
         not apply to them.
-    rotation : ndarray, shape (..., 3, 3)
-        Mounting of the measuring axes, wind = R @ P @ file (`wakeledger.core.rotation.rotation_matrix`).
+    rotation : ndarray, shape (..., 3, 3), or (3, 3, n)
+        Mounting of the measuring axes, wind = R @ P @ file (`wakeledger.core.rotation.rotation_matrix`); of each point
+        its own where the last axis runs over the points.
 
     Returns
     -------
@@ -321,7 +322,7 @@ def _velocity(
 def _assemble(parts: _Parts, given: Mapping[str, Array], rotation: Array) -> State:
     u, v, w = parts.velocity
     if not (rotation.shape == (3, 3) and np.array_equal(rotation, np.eye(3))):
-        turn = rotation[..., None]
+        turn = rotation[..., None] if rotation.shape[-2:] == (3, 3) else rotation
         u, v, w = (turn[..., i, 0, :] * u + turn[..., i, 1, :] * v + turn[..., i, 2, :] * w for i in range(3))
     density = parts.density
     arrays = [u, v, w, density]

@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.core.points import Points
 from wakeledger.core.rotation import rotation_matrix
@@ -264,7 +265,16 @@ class Chain:
             error = errors.get(f"reference.{name}")
             if error is not None:
                 given[name] += float(error)
-        return resolve_reference(given, compressible=self.settings.compressible)
+        try:
+            return resolve_reference(given, compressible=self.settings.compressible)
+        except InputError as error:
+            if not errors:
+                raise
+            raise SurveyError(
+                f"an error drawn for [reference] gives no stream ({error.found})",
+                place="[[uncertainty.source]]",
+                remedy="give what acts on [reference] a smaller standard uncertainty",
+            ) from error
 
     def state(self, reference: Reference, errors: Mapping[str, Array] = _NO_ERRORS) -> State:
         """The flow state at every point, in wind axes, under errors of the points, flow angles and positions."""
@@ -284,13 +294,14 @@ class Chain:
             offset + errors.get(f"angle.{name}", 0.0)
             for name, offset in zip(("pitch", "yaw", "roll"), self.settings.offsets, strict=True)
         )
+        turn = rotation_matrix(pitch, yaw, roll)
         return point_state(
             values,
             self.points.channels,
             reference,
             primary=self.settings.primary,
             axes=self.points.axes,
-            rotation=rotation_matrix(pitch, yaw, roll),
+            rotation=np.moveaxis(turn, 0, -1) if turn.ndim > 2 else turn,
         )
 
     def flow(self, reference: Reference, errors: Mapping[str, Array] = _NO_ERRORS) -> Flow:

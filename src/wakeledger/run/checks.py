@@ -250,6 +250,13 @@ def core_resolution(facts: Facts) -> Check:
 def noise_bias(reduction: Reduction, facts: Facts) -> Check:
     """Noise bias of the induced drag over the induced drag."""
     induced = abs(float(reduction.forces.induced_drag))
+    if math.isnan(facts.bias):
+        message = (
+            "The noise of the crossflow is neither declared nor can it be told from the data, so what it adds to the"
+            " induced drag is unknown and not subtracted: declare it as an [[uncertainty.source]] of plane.v and"
+            " plane.w."
+        )
+        return _check("noise_bias", math.nan, {"not_applicable": message})
     value = abs(facts.bias) / induced if induced > 0 else math.nan
     return _check(
         "noise_bias",
@@ -266,6 +273,12 @@ def noise_bias(reduction: Reduction, facts: Facts) -> Check:
 def outer_flow(reduction: Reduction, facts: Facts) -> Check:
     """Zero errors found in the outer flow: what the loss zero is worth in the total drag, and the flow-angle offset."""
     reference, region = reduction.reference, reduction.region
+    if not region.mask.any():
+        message = (
+            "No wake stands out of the window: the figures are zero because none was found. Either there is none, or it"
+            " is wider than the window, or [wake] (level, exclude) hides it."
+        )
+        return Check("outer_flow", "fail", math.nan, LIMITS["outer_flow"][0], message)
     outer = ~region.mask
     if outer.mean() < 0.1:
         message = "The wake fills the window: too little outer flow is left to zero the total pressure and flow angles."
@@ -276,7 +289,7 @@ def outer_flow(reduction: Reduction, facts: Facts) -> Check:
     pitch = math.degrees(math.atan2(reduction.crossflow_offset[1], reference.speed))
     yaw = math.degrees(math.atan2(reduction.crossflow_offset[0], reference.speed))
     found = (
-        f"Outside the wake the total pressure is {-reduction.loss_zero:+.3g} Pa off the stream's"
+        f"Outside the wake the total pressure is {0.0 - reduction.loss_zero:+.3g} Pa off the stream's"
         f" ({worth / max(total, 1e-300):+.1%} of the drag; taken out) and the flow is turned by {pitch:+.2f} deg in"
         f" pitch and {yaw:+.2f} deg in yaw (taken out of the energy form only)."
     )

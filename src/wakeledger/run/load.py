@@ -51,6 +51,10 @@ def load(path: str | Path) -> SurveyInput:
         If anything about the survey file, the data or the archive is wrong.
     """
     path = Path(path)
+    if path.is_fifo() or path.is_char_device():
+        raise SurveyError(
+            "this is no regular file", file=path, remedy="write the survey to a file: its data are found beside it"
+        )
     if _is_netcdf(path):
         from wakeledger.ledger.archive import open_archive
 

@@ -93,15 +93,19 @@ def declared_noise(
         errors = np.stack([[state.v for state in states] - still.v, [state.w for state in states] - still.w])
         if not np.nanmax(np.abs(errors)) > 0:
             continue
-        known = np.isfinite(errors).all(axis=(0, 1))
-        mean_square = (errors**2).mean(axis=1)
-        inner = tuple(float(mean_square[k][known & wake].mean()) if (known & wake).any() else 0.0 for k in range(2))
-        outer = tuple(float(mean_square[k][known].mean()) for k in range(2))
+        inner, outer = _mean_square(errors[:, :, wake]), _mean_square(errors)
         correlation = _correlation(source, chain)
         independent = correlation is not None and all(matrix is None for matrix in correlation)
         fields = None if independent else chain.gridding.apply(np.nan_to_num(errors))
-        found.append(Noise(source.name, inner, outer, correlation or (None, None), fields))  # type: ignore[arg-type]
+        found.append(Noise(source.name, inner, outer, correlation or (None, None), fields))
     return tuple(found)
+
+
+def _mean_square(errors: Array) -> tuple[float, float]:
+    """Mean square of v and w over draws and points, those without a flow state left out; zero where there is none."""
+    known = [component[np.isfinite(component)] for component in errors]
+    v, w = (float(np.mean(component**2)) if component.size else 0.0 for component in known)
+    return v, w
 
 
 def estimated_noise(nominal: Reduction, filled: Mask) -> tuple[NoiseEstimate, NoiseEstimate]:

@@ -14,7 +14,7 @@ from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.confidence.terms import NumericalTerm, add_terms
-from wakeledger.core.errors import InputError
+from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.core.grid import Array
 from wakeledger.intake.gridding import Gridding, check_duplicates, make_gridding
 from wakeledger.intake.gridding.window import covered_window
@@ -30,7 +30,7 @@ from wakeledger.physics.methods.wake_line import WakeLine, path_scatter, wake_li
 from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
 from wakeledger.physics.vortices.vortex_sum import VortexSum, WakeParts, find_parts, summarise
 from wakeledger.run import tables
-from wakeledger.run.assembly import budget_lines, comparisons, cross_check, ledger_row
+from wakeledger.run.assembly import NO_SOURCE, budget_lines, comparisons, cross_check, ledger_row, require_rows
 from wakeledger.run.chain import (
     ESTIMATES,
     OUTPUTS,
@@ -60,6 +60,7 @@ POINTS_PER_CORE = 2.0
 MOST_CELLS = 120_000
 #: Draws that tell the wake region's own effect from that of noise.
 _NOISE_DRAWS = 16
+_NO_WAKE = "no wake was found, and what the noise may hide is unknown"
 _SAME_ALGEBRA = "the same algebra as the sum of the rows: it tests the arithmetic, not the flow"
 
 
@@ -129,12 +130,17 @@ def reduce(
     if survey.survey.section is not None:
         return reduce_section(survey, draws=draws, progress=progress, command=command)
     prepared = prepare(survey)
+    require_rows(survey.survey, [name for name in ROWS if not math.isnan(prepared.nominal.values[name])])
     uncertainty = survey.survey.uncertainty
     count = uncertainty.draws if draws is None else draws
-    terms = _terms(prepared, survey)
+    terms: tuple[NumericalTerm, ...] = ()
     samples, budget = None, None
-    if prepared.sources:
-        samples, budget = _propagate(prepared, terms, draws=count, seed=uncertainty.seed, progress=progress)
+    if prepared.sources and prepared.nominal.region.mask.any():
+        try:
+            terms = _terms(prepared, survey)
+            samples, budget = _propagate(prepared, terms, draws=count, seed=uncertainty.seed, progress=progress)
+        except InputError as error:
+            raise error.located(file=survey.survey.path) from error
     return _ledger(survey, prepared, samples, budget, terms, command=command)
 
 
@@ -222,6 +228,10 @@ def _prepare(survey: SurveyInput) -> Prepared:
             usable &= np.isfinite(pressure)
     regrid = Regrid(points.y, points.z, usable, points.row)
     gridding = regrid()
+    if settings.exclude and region_of(settings.exclude, gridding.grid).all():
+        raise SurveyError(
+            "the shapes cover the whole window", file=file.path, place="[wake] exclude", remedy="leave some of it free"
+        )
     chain = Chain(points, gridding, settings)
     first = chain.reduce(estimates=False)
     parts, vortices = _vortices(first, settings)
@@ -431,7 +441,9 @@ def _ledger(
     command: str,
 ) -> Ledger:
     file, nominal = survey.survey, prepared.nominal
-    rows = tuple(row for row in (ledger_row(name, nominal.values, samples) for name in ROWS) if row is not None)
+    reason = NO_SOURCE if nominal.region.mask.any() else _NO_WAKE
+    found = (ledger_row(name, nominal.values, samples, reason=reason) for name in ROWS)
+    rows = tuple(row for row in found if row is not None)
     names = [row.name for row in rows]
     covariance = np.full((len(names), len(names)), np.nan)
     if samples is not None:
@@ -445,7 +457,7 @@ def _ledger(
         plane=tables.plane_table(prepared.chain, nominal),
         raw=survey.points,
         survey_text=file.text,
-        estimates=_crosschecks(prepared, rows, samples),
+        estimates=_crosschecks(prepared, rows, samples, reason),
         comparisons=comparisons(file, rows, _scales(prepared)),
         budget=budget_lines(budget, names),
         checks=all_checks(nominal, _facts(prepared)),
@@ -479,7 +491,9 @@ def _facts(prepared: Prepared) -> Facts:
     )
 
 
-def _crosschecks(prepared: Prepared, rows: Sequence[Row], samples: Samples | None) -> tuple[CrossCheck, ...]:
+def _crosschecks(
+    prepared: Prepared, rows: Sequence[Row], samples: Samples | None, no_samples: str
+) -> tuple[CrossCheck, ...]:
     nominal = prepared.nominal
     by_name = {row.name: row for row in rows}
     found = []
@@ -501,6 +515,7 @@ def _crosschecks(prepared: Prepared, rows: Sequence[Row], samples: Samples | Non
             expected_uncertainty=tables.EXPECTED_DOUBT * abs(expected),
             reason=reason,
             same_algebra=_SAME_ALGEBRA if method == "momentum_area" else None,
+            no_samples=no_samples,
         )
         found.append(check)
     return tuple(found)

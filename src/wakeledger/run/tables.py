@@ -15,6 +15,7 @@ from wakeledger.core.grid import Array
 from wakeledger.core.plane import make_plane
 from wakeledger.intake.state import State, nonphysical
 from wakeledger.physics.fields.differences import axial_vorticity, crossflow_divergence
+from wakeledger.physics.fields.outer_flow import LEAST_SHARE
 from wakeledger.physics.loading.span import SpanLoading
 from wakeledger.physics.methods.wake_line import WakeLine
 from wakeledger.physics.vortices.identify import Vortex
@@ -186,10 +187,13 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
     )
     if chain.settings.include or chain.settings.exclude:
         found.append("Places were included in or excluded from the wake region by the survey file.")
-    found.append(
-        f"The total pressure was zeroed in the outer flow: {-nominal.loss_zero:+.3g} Pa were taken out"
-        f" ({_counts(nominal.loss_zero * region.mask.sum() * grid.cell_area, nominal, chain)})."
-    )
+    if np.mean(~region.mask) < LEAST_SHARE:
+        found.append("The total pressure was not zeroed: too little outer flow is left.")
+    else:
+        found.append(
+            f"The total pressure was zeroed in the outer flow: {0.0 - nominal.loss_zero:+.3g} Pa were taken out"
+            f" ({_counts(nominal.loss_zero * region.mask.sum() * grid.cell_area, nominal, chain)})."
+        )
     pitch, yaw = (np.degrees(np.arctan2(nominal.crossflow_offset[k], nominal.reference.speed)) for k in (1, 0))
     found.append(
         f"Outside the wake the flow is turned by {pitch:+.3f} deg in pitch and {yaw:+.3f} deg in yaw; that was taken"

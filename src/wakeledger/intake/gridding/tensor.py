@@ -22,6 +22,8 @@ UNIFORM = 0.01
 #: Fewest rows and columns of a survey; after decimation.
 FEWEST_LINES = 5
 _FEWEST_DECIMATED = 4
+#: Least share of the decimated places that must carry a usable point.
+_LEAST_DECIMATED = 0.25
 #: The spacing that this percentage of the raw intervals stays below is taken as the finest one.
 _FINEST_PERCENT = 5.0
 
@@ -92,6 +94,12 @@ class TensorScheme:
                 remedy=f"at least {_FEWEST_DECIMATED} are needed",
             )
         lattice = _subset(self.lattice, iy, iz)
+        share = np.count_nonzero(self.usable & (lattice.iy >= 0) & (lattice.iz >= 0)) / (iz.size * iy.size)
+        if share < _LEAST_DECIMATED:
+            raise DataError(
+                f"every {step}. row and column leaves usable points at {share:.0%} of the places",
+                remedy=f"at least {_LEAST_DECIMATED:.0%} are needed",
+            )
         grid = self.grid if resampled else UniformGrid(*_uniform_axes(lattice))
         return build(lattice, self.usable, self.row_index, grid=grid, degree=self.degree, resampled=resampled)
 
