@@ -182,6 +182,12 @@ class Survey(Table):
             "probe calibrations are not applied yet; give velocities and pressures, and leave it out",
         )
         add(self.empty_tunnel, "[empty_tunnel]", "an empty-tunnel survey is not subtracted yet; leave it out")
+        if self.boundary is not None:
+            add(
+                self.boundary.reflection,
+                "[boundary] reflection",
+                "half models and ground planes are not computed yet; leave it out and survey both sides",
+            )
         if self.boundary is not None and self.boundary.kind != "free_air":
             add(True, "[boundary] kind", f'"{self.boundary.kind}" is not computed yet; only "free_air" is')
         add(self.body, "[[body]]", "bodies are not told apart yet; leave it out")
