@@ -263,6 +263,20 @@ def test_pressures_in_every_form(kit, wake, data, plain, tmp_path, form):
     assert_same(kit, kit.values(found), plain, 1e-8)
 
 
+@pytest.mark.parametrize("name", ["total_pressure", "static_pressure", "both", "stream"])
+def test_gauge_against_absolute_pressures_are_refused(kit, data, tmp_path, name):
+    from wakeledger.core.errors import InputError
+
+    written = {
+        column: array - kit.PRESSURE if column == name or (name == "both" and column.endswith("pressure")) else array
+        for column, array in data.items()
+    }
+    content = kit.description(reference={"static_pressure": None} if name == "stream" else {})
+    with pytest.raises(InputError) as caught:
+        kit.ledger(tmp_path, written, content)
+    assert "relative_to" in str(caught.value)
+
+
 def test_velocities_over_the_stream_speed(kit, data, plain, tmp_path):
     written = {**data, **{name: data[name] / kit.SPEED for name in "uvw"}}
     entries = kit.columns(**{name: {"column": name, "unit": "1", "normalised_by": "speed"} for name in "uvw"})

@@ -17,6 +17,8 @@ from wakeledger.stream.gas import mach_from_pressure_ratio, pressure_ratio, temp
 #: Share of the points that may have no real flow state, and share with reverse flow, before the data are refused.
 NONPHYSICAL_LIMIT = 0.02
 REVERSE_LIMIT = 0.10
+#: Dynamic pressures by which the median of a pressure may differ from the stream's.
+MEDIAN_LIMIT = 1.0
 _PLACE = "[plane.columns]"
 _MEASURED = (
     "u",
@@ -368,7 +370,9 @@ def nonphysical(state: State) -> NDArray[np.bool_]:
     return state.impossible
 
 
-def check_state(state: State, *, points: Points | None = None, density: Array | None = None) -> None:
+def check_state(
+    state: State, *, points: Points | None = None, density: Array | None = None, reference: Stream | None = None
+) -> None:
     """Refuse data whose flow state is wrong at more than a few points.
 
     Parameters
@@ -379,12 +383,15 @@ def check_state(state: State, *, points: Points | None = None, density: Array | 
         The points as read, so that messages name file and line.
     density : ndarray, shape (n,), optional
         Density as measured; taken from `points` if they carry it.
+    reference : Stream, optional
+        The undisturbed stream, to hold the pressures against.
 
     Raises
     ------
     DataError
-        If any measured density is not positive, more than 2 % of the points have no real flow state, or the flow runs
-        upstream over more than 10 % of the points.
+        If any measured density is not positive, more than 2 % of the points have no real flow state, the flow runs
+        upstream over more than 10 % of the points, or the median of a pressure is further from the stream's than its
+        dynamic pressure.
     """
     if density is None and points is not None and "density" in points.channels:
         density = points.channels["density"].values
@@ -410,6 +417,28 @@ def check_state(state: State, *, points: Points | None = None, density: Array | 
         "the flow runs upstream (u <= 0)",
         "check the column of u and the directions in [plane.axes]",
     )
+    if reference is not None:
+        _refuse_another_zero(state, reference, points)
+
+
+def _refuse_another_zero(state: State, reference: Stream, points: Points | None) -> None:
+    """Refuse pressures that are not counted from the zero of the stream's, such as gauge against absolute ones."""
+    for name, values, level in (
+        ("static_pressure", state.static_pressure, reference.static_pressure),
+        ("total_pressure", state.total_pressure, reference.total_pressure),
+    ):
+        if values is None or not np.isfinite(values).any():
+            continue
+        distance = float(np.nanmedian(values)) - level
+        if abs(distance) > MEDIAN_LIMIT * reference.dynamic_pressure:
+            raise DataError(
+                f"{name} is {distance:+.4g} Pa off the stream's in the middle of its range,"
+                f" {abs(distance) / reference.dynamic_pressure:.3g} times the dynamic pressure",
+                file=None if points is None else points.source,
+                place=f"{_PLACE} {name}",
+                remedy="say what it is measured against with relative_to, and give [reference] static_pressure absolute"
+                " where columns are absolute",
+            )
 
 
 def _refuse(wrong: NDArray[np.bool_], limit: float, points: Points | None, found: str, remedy: str) -> None:

@@ -221,7 +221,7 @@ def _prepare(survey: SurveyInput) -> Prepared:
     check_duplicates(points)
     empty = Chain(points, None, settings)  # type: ignore[arg-type]
     state = empty.state(reference)
-    check_state(state, points=points)
+    check_state(state, points=points, reference=reference)
     usable = np.isfinite(state.u) & np.isfinite(state.v) & np.isfinite(state.w)
     for pressure in (state.total_pressure, state.static_pressure):
         if pressure is not None:
