@@ -97,7 +97,7 @@ BROKEN = [
     # [plane]
     ([('file = "traverse.csv"\n', "")], "[plane]", "key 'file' is missing", 'file = "traverse.csv"'),
     ([('file = "traverse.csv"', "file = 3")], "[plane] file", "bare number 3", "quotation marks"),
-    ([('file = "traverse.csv"', 'file = ""')], "[plane] file", "the text ''", "quotation marks"),
+    ([('file = "traverse.csv"', 'file = ""')], "[plane] file", "the text is empty", "quotation marks"),
     ([('station = "0.90 m"\n', "")], "[plane]", "key 'station' is missing", "behind the trailing edge"),
     ([('station = "0.90 m"', "station = 0.9")], "[plane] station", "bare number 0.9", "with its unit"),
     ([('station = "0.90 m"', 'station = "0.9 deg"')], "[plane] station", "an angle", "a length"),

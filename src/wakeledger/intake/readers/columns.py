@@ -135,7 +135,7 @@ def missing_column(name: str, present: list[str], *, what: str) -> DataError:
     folded = {entry.casefold(): entry for entry in present}
     longer = (entry for entry in present if re.match(re.escape(name) + r"\W", entry, re.IGNORECASE))
     close = folded.get(name.casefold()) or next(longer, None) or nearest(name, present)
-    guess = f"did you mean {close!r}? " if close else ""
+    guess = f"did you mean {close!r}? The" if close else "the"
     shown = [repr(entry) for entry in present if entry]
     listed = ", ".join(shown[:40]) + (f" and {len(shown) - 40} more" if len(shown) > 40 else "")
-    return DataError(f"there is no {what} {name!r}", remedy=f"{guess}The file has {listed}" if shown else None)
+    return DataError(f"there is no {what} {name!r}", remedy=f"{guess} file has {listed}" if shown else None)

@@ -304,8 +304,10 @@ Shapes = Annotated[tuple[Array, ...], PlainValidator(_shapes)]
 
 
 def _text(value: Any) -> str:
-    if not isinstance(value, str) or not value.strip():
-        raise fail(f"{kind_of(value)} stands where text is needed", "write some text in quotation marks")
+    if not isinstance(value, str):
+        raise fail(f"{kind_of(value)} stands where text is needed", "write it in quotation marks")
+    if not value.strip():
+        raise fail("the text is empty", "write some text between the quotation marks")
     return value
 
 

@@ -100,6 +100,7 @@ class Survey(Table):
                 "table [boundary] is missing",
                 'add [boundary] with kind = "free_air", "closed_walls" or "open_jet": it is never assumed',
             )
+        bound_line = None if self.model is None else self.model.quarter_chord()
         for index, plane in enumerate(self.planes):
             place: tuple[str | int, ...] = ("plane", index)
             edge_static = self.section.edge_static if self.section else None
@@ -108,6 +109,13 @@ class Survey(Table):
                 check_primary(plane, edge_static=edge_static)
             except PydanticCustomError as error:
                 raise below(error, *place) from error
+            if self.section is None and bound_line is not None and plane.station <= bound_line:
+                raise fail(
+                    f"the plane at {plane.station:g} m is not behind the quarter-chord line at {bound_line:g} m",
+                    "count the station downstream from the trailing edge, or correct [model] quarter_chord_x",
+                    *place,
+                    "station",
+                )
             if plane.primary == "hole_pressures" and not any(probe.calibration for probe in self.probe):
                 raise fail(
                     'primary = "hole_pressures" needs a calibrated probe',

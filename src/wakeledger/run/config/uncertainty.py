@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
+from types import MappingProxyType
 from typing import Annotated, Any, Literal
 
 from pydantic import (
@@ -19,7 +20,7 @@ from pydantic import (
 from pydantic_core import PydanticCustomError
 
 from wakeledger.core.errors import nearest
-from wakeledger.core.names import ROWS
+from wakeledger.core.names import ROWS, VARIABLES
 from wakeledger.core.units import DIMENSIONS, UnitError, split
 from wakeledger.run.config.plane import HOLES, column_targets, conversion_fits
 from wakeledger.run.config.quantities import (
@@ -94,6 +95,15 @@ def allowed_targets(raw: Mapping[str, Any]) -> dict[str, Target]:
     return targets
 
 
+#: Where a quantity that an uncertainty names is given, and the names that can be given there.
+_TABLES_OF: Mapping[str, tuple[str, Collection[str]]] = MappingProxyType(
+    {
+        "plane": ("[plane.columns]", VARIABLES),
+        "reference": ("[reference]", _REFERENCE_UNITS),
+        "model": ("[model]", _MODEL_UNITS),
+    }
+)
+
 Scale = Literal["absolute", "relative", "normalised"]
 
 
@@ -105,9 +115,15 @@ def _parse_targets(value: Any, info: ValidationInfo) -> tuple[str, ...]:
             return item
         if not isinstance(item, str):
             raise fail(f"{kind_of(item)} stands where a name is needed", f"known here: {', '.join(allowed)}")
-        close = nearest(item, allowed)
-        meant = f"did you mean {close!r}? " if close else ""
-        raise fail(f"{item!r} is nothing this survey gives", f"{meant}known here: {', '.join(allowed)}")
+        remedy = f"known here: {', '.join(allowed)}"
+        room, _, key = item.partition(".")
+        table, names = _TABLES_OF.get(room, ("", ()))
+        if key in names:
+            remedy = f"give {key} in {table}, or take {item!r} out; {remedy}"
+        else:
+            close = f"position.{key}" if f"position.{key}" in allowed else nearest(item, allowed)
+            remedy = f"did you mean {close!r}? {remedy}" if close else remedy
+        raise fail(f"{item!r} is nothing this survey gives", remedy)
 
     names: tuple[str, ...] = listed(parse, 'a list of names as ["plane.v", "plane.w"]')(value)
     if len(set(names)) < len(names):
@@ -226,10 +242,11 @@ class Source(Table):
         targets: Mapping[str, Target] = (info.context or {})["targets"]
         standard, expanded = self.written_standard, self.written_expanded
         if standard is None and expanded is None:
-            how = DIMENSIONS[targets[self.applies_to[0]].unit][1]
+            unit = DIMENSIONS[targets[self.applies_to[0]].unit][1].partition(" ")[2]
             raise fail(
                 "key 'standard_uncertainty' is missing",
-                f"add standard_uncertainty = {how!r} (k = 1), or expanded_uncertainty with coverage_factor",
+                f"add it (k = 1) as in standard_uncertainty = '0.1 {unit}', or expanded_uncertainty with "
+                "coverage_factor",
             )
         if standard is not None and expanded is not None:
             raise fail(
