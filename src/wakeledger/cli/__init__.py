@@ -6,6 +6,7 @@ import sys
 
 import click
 
+from wakeledger.cli.calibrate import calibrate
 from wakeledger.cli.exits import run
 from wakeledger.cli.inspect import inspect
 from wakeledger.cli.reduce import reduce
@@ -24,7 +25,7 @@ def wakeledger() -> None:
     """
 
 
-for command in (reduce, inspect, show):
+for command in (reduce, inspect, show, calibrate):
     wakeledger.add_command(command)
 
 

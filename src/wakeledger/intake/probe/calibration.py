@@ -125,7 +125,7 @@ def _complete(table: CalibrationTable) -> tuple[CalibrationTable, tuple[str, ...
     columns |= {f"p{hole + 1}": values for hole, values in enumerate(table.holes)}
     if table.level is not None and table.level_name is not None:
         columns[table.level_name] = table.level
-    notes = []
+    notes: list[str] = []
     whole = np.ones(table.n, dtype=bool)
     for name, values in columns.items():
         missing = table.line[~np.isfinite(values) & whole]

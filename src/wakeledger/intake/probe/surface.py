@@ -70,7 +70,7 @@ class Surface:
             values[start : start + step] = (
                 _kernel(part, self.places) @ self.weights + _powers(part, len(self.polynomial)) @ self.polynomial
             )
-        return np.asarray(values.T.reshape(-1, *shape))
+        return np.asarray(np.reshape(values.T, (-1, *shape)))
 
 
 @dataclass(frozen=True, eq=False)
@@ -107,7 +107,7 @@ def _kernel(a: Array, b: Array) -> Array:
         np.sum(a * a, axis=1)[:, None] + np.sum(b * b, axis=1)[None, :] - 2.0 * (a @ b.T),
         0.0,
     )
-    return -square * square * np.sqrt(square)
+    return np.asarray(-square * square * np.sqrt(square))
 
 
 def _powers(at: Array, number: int) -> Array:
