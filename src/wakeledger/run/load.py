@@ -7,7 +7,10 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 
+import numpy as np
+
 from wakeledger.core.errors import DataError, SurveyError
+from wakeledger.core.names import VARIABLES
 from wakeledger.core.points import Points
 from wakeledger.run.config import Survey, parse_survey, read_survey
 
@@ -59,9 +62,32 @@ def load(path: str | Path) -> SurveyInput:
         from wakeledger.ledger.archive import open_archive
 
         ledger = open_archive(path)
-        survey = parse_survey(ledger.survey_text, path)
+        survey = _kept_survey(ledger.survey_text, ledger.raw, path)
         return SurveyInput(survey, ledger.raw, ledger.inputs)
     return load_survey(read_survey(path))
+
+
+def _kept_survey(text: object, points: Points, path: Path) -> Survey:
+    """The survey file kept in an archive, which must be whole and fit the points kept beside it."""
+    remedy = "take the file from its backup, or reduce the survey again"
+    try:
+        survey = parse_survey(str(text), path)
+    except SurveyError as error:
+        found = f"{error.place}: {error.found}" if error.place else error.found
+        raise DataError(f"the survey file kept inside is damaged ({found})", file=path, remedy=remedy) from error
+    named = survey.plane.columns
+    wanted = {"u", "v", "w"} if "velocity" in named else set()
+    wanted |= {name for name in named if name in VARIABLES}
+    missing = sorted(wanted - set(points.channels))
+    if missing:
+        raise DataError(
+            f"the points kept inside have no {', '.join(missing)}, which the survey file kept beside them names",
+            file=path,
+            remedy=remedy,
+        )
+    if not (np.isfinite(points.y).all() and np.isfinite(points.z).all() and np.isfinite(points.axes).all()):
+        raise DataError("the positions of the points kept inside are damaged", file=path, remedy=remedy)
+    return survey
 
 
 def load_survey(survey: Survey) -> SurveyInput:
@@ -120,4 +146,9 @@ def _is_netcdf(path: Path) -> bool:
         return False
     if path.suffix == ".nc" and not head:
         raise DataError("the archive is empty", file=path, remedy="reduce the survey again")
-    return head.startswith(_NETCDF)
+    found = head.startswith(_NETCDF)
+    if path.suffix == ".nc" and not found:
+        raise DataError(
+            "the file is not netCDF, or is damaged", file=path, remedy="give a survey file, or a finished ledger.nc"
+        )
+    return found
