@@ -20,8 +20,13 @@ FEWEST_POINTS = 5
 FEWEST_ROWS = 6
 #: Rows in one comparison: a polynomial of degree 3 across them leaves no trace.
 _ROWS = 5
+#: Rows shorter than this share of the median row do not take part, nor those that are one level twice.
+_LONG = 0.6
+_SAME_LEVEL = 0.02
 _ITERATIONS = 12
-_GROUPS = 8
+#: Places per step of a row at which rows are compared: with one, the noise of a moved row and that of its slope are
+#: correlated, since a spline's noise is largest at its knots; over a whole step that averages out.
+_PHASES = 4
 _ONE_WAY = "all rows were taken in the same direction"
 
 
@@ -86,8 +91,8 @@ def estimate_backlash(along: Array, across: Array, row: NDArray[np.integer], val
     With σ_j = ±1 the direction of row j and F the field, a row reads F(y − σ_j b/2, z_j). A divided difference of
     fourth order across five neighbouring rows, Σ c_j f_j, leaves nothing of a field that varies smoothly from row to
     row but keeps what alternates: Σ c_j f_j = −(b/2) Σ c_j σ_j ∂F_j/∂y. b is found by least squares over all places,
-    rows and channels, the rows being moved by cubic splines until nothing is left; its standard uncertainty is a
-    jackknife over groups of rows. What varies from row to row with an alternating sign looks the same, so does a lag.
+    rows and channels, the rows being moved by cubic splines until nothing is left; its standard uncertainty comes
+    from the scatter between rows. What varies from row to row with an alternating sign looks the same, so does a lag.
     """
     table = _rows(along, across, row, values)
     senses = np.array([entry.sense for entry in table])
@@ -98,6 +103,8 @@ def estimate_backlash(along: Array, across: Array, row: NDArray[np.integer], val
     if len(table) < FEWEST_ROWS:
         return Backlash(0.0, np.nan, len(table), f"fewer than {FEWEST_ROWS} rows")
     score = _Score(table)
+    if not score.windows:
+        return Backlash(0.0, np.nan, len(table), "no neighbouring rows were taken in opposite directions")
     half, slope = 0.0, 1.0
     step = score(half)
     reach = 4 * score.spacing
@@ -138,8 +145,8 @@ def correct_backlash(
     Returns
     -------
     Correction
-        Each row read by a cubic spline through its true places, y − σ b/2; beyond a row's last true place the last
-        value is kept. Where all rows run the same way nothing is changed.
+        Each row read by a cubic spline through its true places, y − σ b/2, which goes on straight beyond its last one.
+        Where all rows run the same way nothing is changed.
     """
     values = np.asarray(values, float)
     sense = row_senses(along, row)
@@ -154,7 +161,8 @@ def correct_backlash(
             continue
         spline = _spline(places - 0.5 * sense[here[0]] * backlash, values[..., here[first]])
         at = np.clip(along[here], spline.x[0], spline.x[-1])
-        size[..., here] = spline(at) - values[..., here]
+        beyond = along[here] - at
+        size[..., here] = spline(at) + spline(at, 1) * beyond - values[..., here]
     for number in np.unique(row):
         here = np.flatnonzero((row == number) & measured)
         places, first = np.unique(along[here], return_index=True)
@@ -189,7 +197,30 @@ def _rows(along: Array, across: Array, row: NDArray[np.integer], values: Array) 
         if places.size >= FEWEST_POINTS and sense[here[0]]:
             chosen = here[first]
             table.append(_Row(places, values[:, chosen], float(np.mean(across[chosen])), float(sense[here[0]])))
+    extent = [entry.along[-1] - entry.along[0] for entry in table]
+    long = _LONG * float(np.median(extent)) if extent else 0.0
+    table = [entry for entry, length in zip(table, extent, strict=True) if length >= long]
     return sorted(table, key=lambda entry: entry.across)
+
+
+def _windows(levels: Array, sense: Array) -> tuple[list[NDArray[np.intp]], list[Array]]:
+    """Rows to compare and their weights: pairs at one level taken both ways, else five neighbouring levels."""
+    near = _SAME_LEVEL * float(np.max(np.diff(levels), initial=0.0))
+    pairs = [np.array([j, j + 1]) for j in np.flatnonzero((np.diff(levels) <= near) & (sense[1:] != sense[:-1]))]
+    if pairs:
+        return pairs, [np.array([0.5, -0.5])] * len(pairs)
+    distinct = np.flatnonzero(np.diff(levels, prepend=-np.inf) > near)
+    windows, weights = [], []
+    for start in range(distinct.size - _ROWS + 1):
+        window = distinct[start : start + _ROWS]
+        if np.ptp(sense[window]) == 0:
+            continue
+        gap = (levels[window][:, None] - levels[window]) / np.ptp(levels[window])
+        np.fill_diagonal(gap, 1.0)
+        coefficients = 1 / np.prod(gap, axis=1)
+        windows.append(window)
+        weights.append(coefficients / np.abs(coefficients).sum())
+    return windows, weights
 
 
 class _Score:
@@ -199,25 +230,13 @@ class _Score:
         low, high = max(entry.along[0] for entry in table), min(entry.along[-1] for entry in table)
         count = int(np.median([entry.along.size for entry in table]))
         self.spacing = float((high - low) / (count - 1))
-        self.at = low + self.spacing * np.arange(1, count - 1)
+        self.at = low + self.spacing * np.arange(_PHASES, _PHASES * (count - 2)) / _PHASES
         self.table = table
         self.sense = np.array([entry.sense for entry in table])
-        levels = np.array([entry.across for entry in table])
-        self.windows, weights = [], []
-        for start in range(len(table) - _ROWS + 1):
-            window = slice(start, start + _ROWS)
-            z = levels[window]
-            if np.any(np.diff(z) <= 0):
-                continue
-            gap = (z[:, None] - z) / np.ptp(z)
-            np.fill_diagonal(gap, 1.0)
-            coefficients = 1 / np.prod(gap, axis=1)
-            self.windows.append(window)
-            weights.append(coefficients / np.abs(coefficients).sum())
-        self.weights = weights
+        self.windows, self.weights = _windows(np.array([entry.across for entry in table]), self.sense)
 
-    def parts(self, half: float) -> tuple[Array, Array]:
-        """Σ d g and Σ g² of each window of rows."""
+    def parts(self, half: float) -> tuple[Array, Array, Array]:
+        """Differences d and model g of each window of rows, shape (windows, channels, places), and channel weights."""
         moved = [_spline(entry.along - entry.sense * half, entry.values) for entry in self.table]
         fields = np.stack([spline(self.at) for spline in moved])
         slopes = np.stack([spline(self.at, 1) for spline in moved])
@@ -230,25 +249,30 @@ class _Score:
         d, g = np.stack(left), np.stack(model)
         scatter = np.median(np.abs(d), axis=(0, 2))
         floor = 1e-9 * np.max(np.abs(fields), axis=(0, 2))
-        trust = 1 / np.maximum(scatter, np.maximum(floor, 1e-300)) ** 2
-        return np.einsum("kcy,kcy,c->k", d, g, trust), np.einsum("kcy,kcy,c->k", g, g, trust)
+        return d, g, 1 / np.maximum(scatter, np.maximum(floor, 1e-300)) ** 2
 
     def __call__(self, half: float) -> float:
         """Remaining half backlash, as far as the noisy slopes can tell, m."""
-        products, squares = self.parts(half)
-        total = squares.sum()
-        return float(products.sum() / total) if total > 0 else 0.0
+        d, g, trust = self.parts(half)
+        total = float(np.einsum("kcy,kcy,c->", g, g, trust))
+        return float(np.einsum("kcy,kcy,c->", d, g, trust)) / total if total > 0 else 0.0
 
     def scatter(self, half: float) -> float:
-        """Standard uncertainty of the remaining half backlash, m: a jackknife over groups of neighbouring rows."""
-        products, squares = self.parts(half)
-        groups = np.array_split(np.arange(products.size), min(_GROUPS, products.size))
-        total = squares.sum()
-        if len(groups) < 2 or not total > 0:
+        """Standard uncertainty of the remaining half backlash, m, from the scatter of the windows' own sums.
+
+        Neighbouring windows share rows, and the fit has made the sums add to nothing; what either does to their scatter
+        follows from the weights, the rows being independent.
+        """
+        d, g, trust = self.parts(half)
+        pulls = np.einsum("kcy,kcy,c->k", d, g, trust)
+        model = np.einsum("kcy,lcy,c->kl", g, g, trust)
+        total = float(np.trace(model))
+        if pulls.size < 2 or not total > 0:
             return float("nan")
-        without = []
-        for group in groups:
-            rest = total - squares[group].sum()
-            without.append((products.sum() - products[group].sum()) / rest if rest > 0 else 0.0)
-        k = len(groups)
-        return float(np.sqrt((k - 1) / k * np.sum((np.array(without) - np.mean(without)) ** 2)))
+        spread = np.zeros((pulls.size, len(self.table)))
+        for k, (window, weight) in enumerate(zip(self.windows, self.weights, strict=True)):
+            spread[k, window] = weight
+        covariance = (spread @ spread.T) * model
+        fitted = np.eye(pulls.size) - np.diag(model)[:, None] / total
+        scatter = float(np.trace(fitted @ covariance @ fitted.T))
+        return float(np.sqrt(covariance.sum() / scatter * np.sum(pulls**2))) / total

@@ -19,8 +19,12 @@ COEFFICIENT = 0.15
 STANDARD_UNCERTAINTY = 0.05
 #: Shear counts where it stands out of its noise by this many standard deviations.
 _LEVEL = 3.0
-_SMOOTH = np.array([0.25, 0.5, 0.25])
+_SMOOTH = np.array([1.0, 4.0, 6.0, 4.0, 1.0]) / 16
+_SLOPE = np.array([-0.5, 0.0, 0.5])
 _FOURTH = np.array([1.0, -4.0, 6.0, -4.0, 1.0])
+#: Noise of a smoothed speed's change over one step, and what smoothing across does to it, over the speed's own.
+_STEP_NOISE = float(np.linalg.norm(np.convolve(_SLOPE, _SMOOTH)))
+_ACROSS_NOISE = float(np.linalg.norm(_SMOOTH))
 
 
 def displacement_on_plane(
@@ -54,16 +58,13 @@ def displacement_on_plane(
     Returns
     -------
     Correction
-        f − k d n·∇f. The unit vector n along the shear is multiplied by max(0, 1 − (3 σ/|shear|)²), σ being the
-        shear's noise, so that noise outside the wake is not rectified into a loss.
+        f − k d n·∇f. The unit vector n along the smoothed shear is multiplied by max(0, 1 − (3 σ/|shear|)²), σ being
+        the smoothed shear's noise, so that noise outside the wake is not rectified into a loss.
     """
-    by_y, by_z = _gradient(_smoothed(speed, -2), grid.dy, -1), _gradient(_smoothed(speed, -1), grid.dz, -2)
+    smooth = _smoothed(_smoothed(speed, -1), -2)
+    by_y, by_z = _gradient(smooth, grid.dy, -1), _gradient(smooth, grid.dz, -2)
     sigma = speed_noise(speed) if noise is None else noise
-    # Norm of the smoothing across times that of the difference along.
-    own = float(np.sqrt(np.sum(_SMOOTH**2) / 2)) * sigma
-    # Shear along an axis that is finer has more noise; each is measured in its own.
-    significance = (by_y * grid.dy) ** 2 + (by_z * grid.dz) ** 2
-    weight = _significant(significance, own)
+    weight = _significant((by_y * grid.dy) ** 2 + (by_z * grid.dz) ** 2, _STEP_NOISE * _ACROSS_NOISE * sigma)
     square = by_y**2 + by_z**2
     shear = np.sqrt(np.where(square > 0, square, 1.0))
     along = (by_y * _gradient(fields, grid.dy, -1) + by_z * _gradient(fields, grid.dz, -2)) / shear
@@ -97,10 +98,10 @@ def displacement_on_line(
     -------
     Correction
     """
-    slope = np.gradient(speed, position, axis=-1)
+    slope = np.gradient(_smoothed(speed, -1), position, axis=-1)
     step = np.gradient(position)
     sigma = speed_noise(speed) if noise is None else noise
-    weight = _significant((slope * step) ** 2, sigma / np.sqrt(2.0))
+    weight = _significant((slope * step) ** 2, _STEP_NOISE * sigma)
     along = np.sign(slope) * np.gradient(profiles, position, axis=-1)
     return _correction(profiles, along * weight, diameter, coefficient, standard_uncertainty)
 

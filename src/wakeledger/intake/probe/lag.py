@@ -8,6 +8,7 @@ lag nothing changes.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -22,6 +23,10 @@ FEWEST = 5
 #: Range in which the smoothing time is sought, in sampling intervals.
 _SHORTEST, _LONGEST = 0.3, 30.0
 _PROBES = 16
+#: Rows are at one level within this share of the largest distance between levels.
+_SAME_LEVEL = 0.02
+#: Pairs of rows from which on their own scatter tells the uncertainty.
+_FEWEST_PAIRS = 6
 
 
 @dataclass(frozen=True, eq=False)
@@ -32,11 +37,14 @@ class RateFilter:
     ----------
     smoothing_time : float
         Time T, s: the spline passes 1/(1 + (ωT)⁴) of an oscillation.
+    interval : float
+        Median time between two points of a row, s.
     usable : ndarray of bool, shape (n,)
         Points that take part; the rate of the others is NaN.
     """
 
     smoothing_time: float
+    interval: float
     usable: NDArray[np.bool_]
     _second: Any
     _direct: Any
@@ -171,71 +179,92 @@ class Lag:
     reason: str | None = None
 
 
-def estimate_lag(along: Array, across: Array, row: NDArray[np.integer], values: Array, rates: RateFilter) -> Lag:
+def estimate_lag(along: Array, across: Array, row: NDArray[np.integer], time: Array, values: Array) -> Lag:
     """Time constant of the tubing from rows that were traversed in both directions.
 
     Parameters
     ----------
     along, across : ndarray, shape (n,)
-        Positions along the rows and across them, m.
+        Positions along the rows and across them, m, in the order in which the points were taken.
     row : ndarray of int, shape (n,)
         Traverse row of each point.
+    time : ndarray, shape (n,)
+        Time of each point, s, growing along each row.
     values : ndarray, shape (channels, n)
-        Readings, Pa.
-    rates : RateFilter
-        Made with the same rows.
+        Readings, Pa; NaN where one is missing.
 
     Returns
     -------
     Lag
-        The τ with which both ways read the same, m₁ + τ dm₁/dt = m₂ + τ dm₂/dt, by least squares over all channels.
+        The τ with which both ways read the same, m₁ + τ dm₁/dt = m₂ + τ dm₂/dt, over all channels.
+
+    Raises
+    ------
+    DataError
+        If time does not grow along a row.
 
     Notes
     -----
-    Backlash moves the two ways apart just as lag does: they can be told apart only by traversing at another speed. The
-    noise of the rates, known from the filter and the readings' scatter, is taken out of the sum of squares.
+    With d the difference of the readings and s that of the rates, τ = −Σ w d/Σ w s, where the weight w is s from the
+    smoothing splines and s itself comes from hardly smoothed ones, so that smoothing does not flatten it; what noise
+    adds to Σ w s is known from the splines and is taken out. Backlash moves the two ways apart just as lag does: they
+    can be told apart only by traversing at another speed.
     """
+    smooth = make_rate_filter(time, row, values=values)
+    pairs = _pairs(along, across, row, smooth.usable)
+    if not pairs:
+        return Lag(np.nan, np.nan, 0, "no row was traversed in both directions")
+    close = make_rate_filter(time, row, smoothing_time=_SHORTEST / 2 * smooth.interval, usable=smooth.usable)
+    signs = np.sign(np.random.default_rng(0).standard_normal((_PROBES, row.size)))
+    rough = signs - smooth.smooth(signs)
+    noise = np.nansum((values - smooth.smooth(values)) ** 2, axis=-1) / np.nansum(rough * signs) * _PROBES
+    common = smooth.rate(signs) * close.rate(signs)
+    trust = 1 / np.maximum(noise, 1e-300 + 1e-12 * np.nanvar(values, axis=-1))[:, None]
+    channels = np.stack([values, close.rate(values), smooth.rate(values)])
+    above, below, parts = 0.0, 0.0, []
+    for first, second in pairs:
+        read, rate, weight = channels[..., first] - _at(along[first], along[second], channels[..., second])
+        shared = np.mean(common[:, first]) + np.mean(common[:, second])
+        above -= float(np.sum(trust * weight * read))
+        below += float(np.sum(trust * (weight * rate - noise[:, None] * shared)))
+        parts.append((trust * weight, read, rate))
+    if not below > 0:
+        return Lag(np.nan, np.nan, len(pairs), "the readings do not vary along the rows by more than their noise")
+    tau = above / below
+    pulls = [np.sum(weight * (read + tau * rate)) for weight, read, rate in parts]
+    inside = [np.sum((weight * (read + tau * rate)) ** 2) for weight, read, rate in parts]
+    # Pairs are independent of each other; with few of them, so are (nearly) the points within each.
+    squares = float(np.sum(np.square(pulls)) if len(pairs) >= _FEWEST_PAIRS else np.sum(inside))
+    return Lag(tau, float(np.sqrt(squares)) / below, len(pairs))
+
+
+def _pairs(
+    along: Array, across: Array, row: NDArray[np.integer], usable: NDArray[np.bool_]
+) -> list[tuple[NDArray[np.intp], NDArray[np.intp]]]:
+    """Points of each two rows at one level taken in opposite senses: those of one inside the other, and the other's."""
+    rows = []
+    for number in np.unique(row):
+        here = np.flatnonzero((row == number) & usable)
+        if here.size >= FEWEST:
+            sense = np.sign(along[here[-1]] - along[here[0]])
+            rows.append((float(np.mean(across[here])), sense, here[np.argsort(along[here], kind="stable")]))
+    levels = np.diff(np.unique([level for level, _, _ in rows]))
+    tolerance = _SAME_LEVEL * float(np.max(levels, initial=0.0))
+    pairs = []
+    for index, (level, sense, here) in enumerate(rows):
+        for other_level, other_sense, other in rows[index + 1 :]:
+            if sense * other_sense < 0 and abs(level - other_level) <= tolerance:
+                inside = (along[here] >= along[other[0]]) & (along[here] <= along[other[-1]])
+                if np.count_nonzero(inside) >= FEWEST and (np.diff(along[other]) > 0).all():
+                    pairs.append((here[inside], other))
+    return pairs
+
+
+def _at(places: Array, along: Array, values: Array) -> Array:
     from scipy.interpolate import CubicSpline
 
-    places = {int(k): np.flatnonzero((row == k) & rates.usable) for k in np.unique(row)}
-    rows = [k for k, here in places.items() if here.size >= FEWEST]
-    level = {k: float(np.mean(across[places[k]])) for k in rows}
-    sense = {k: np.sign(along[places[k]][-1] - along[places[k]][0]) for k in rows}
-    heights = np.unique(list(level.values()))
-    apart = np.diff(heights)
-    tolerance = 0.02 * float(np.max(apart, initial=0.0))
-    rate, smooth = rates.rate(values), rates.smooth(values)
-    noise = np.nanvar(values - smooth, axis=-1)
-    gain = rates.rate(np.sign(np.random.default_rng(0).standard_normal((_PROBES, row.size))))
-    products, squares, used, sums = 0.0, 0.0, 0, []
-    for index, a in enumerate(rows):
-        for b in rows[index + 1 :]:
-            if sense[a] * sense[b] >= 0 or abs(level[a] - level[b]) > tolerance:
-                continue
-            first, second = places[a], places[b][::-1] if sense[b] < 0 else places[b]
-            first = first[::-1] if sense[a] < 0 else first
-            low = max(along[first[0]], along[second[0]])
-            high = min(along[first[-1]], along[second[-1]])
-            first = first[(along[first] >= low) & (along[first] <= high)]
-            if first.size < FEWEST:
-                continue
-            other = CubicSpline(along[second], np.stack([values[:, second], rate[:, second]]), axis=-1)(along[first])
-            apart_read = values[:, first] - other[0]
-            apart_rate = rate[:, first] - other[1]
-            weight = 1 / np.maximum(noise, 1e-30 + 1e-12 * np.nanvar(values, axis=-1))[:, None]
-            noisy = 2 * np.mean(gain[:, first] ** 2) * noise[:, None]
-            squares += float(np.sum(weight * (apart_rate**2 - noisy)))
-            products -= float(np.sum(weight * apart_read * apart_rate))
-            sums.append((weight, apart_read, apart_rate))
-            used += 1
-    if not used:
-        return Lag(np.nan, np.nan, 0, "no row was traversed in both directions")
-    if not squares > 0:
-        return Lag(np.nan, np.nan, used, "the readings do not vary along the rows by more than their noise")
-    tau = products / squares
-    left = [w * (read + tau * slope) ** 2 for w, read, slope in sums]
-    variance = sum(float(np.sum(x)) for x in left) / max(sum(x.size for x in left) - 1, 1)
-    return Lag(tau, float(np.sqrt(variance / squares)), used)
+    result: Array = CubicSpline(along, values, axis=-1)(places)
+    return result
 
 
 # -- Reinsch's equations ------------------------------------------------------------------------------------------
@@ -250,6 +279,29 @@ class _System:
     direct: Any
     curved: Any
     interval: float
+
+    @cached_property
+    def back(self) -> Any:
+        """Q."""
+        return self.second.T.tocsr()
+
+    @cached_property
+    def bands(self) -> tuple[Array, Array]:
+        """Upper bands of R and QᵀQ."""
+        return _upper(self.energy), _upper((self.second @ self.back).tocsr())
+
+    @cached_property
+    def slope_of_back(self) -> Any:
+        return (self.direct @ self.back).tocsr()
+
+    def factor(self, strength: float) -> Array | None:
+        """Cholesky factor of R + λ QᵀQ."""
+        from scipy.linalg import cholesky_banded
+
+        if not self.energy.shape[0]:
+            return None
+        factor: Array = cholesky_banded(self.bands[0] + strength * self.bands[1], check_finite=False)
+        return factor
 
 
 def _system(time: Array, row: NDArray[np.integer]) -> _System:
@@ -278,8 +330,8 @@ def _system(time: Array, row: NDArray[np.integer]) -> _System:
             sparse.diags_array([1 / h[:-1], -1 / h[:-1] - 1 / h[1:], 1 / h[1:]], offsets=[0, 1, 2], shape=(n - 2, n))
         )
         energy.append(sparse.diags_array([h[1:-1] / 6, (h[:-1] + h[1:]) / 3, h[1:-1] / 6], offsets=[-1, 0, 1]))
-        # The mean of the slopes from either side, which agree; at the ends the only one there is.
-        left = sparse.diags_array([-1 / h, 1 / h], offsets=[-1, 0], shape=(n, n)).tolil()
+        # Slope at the far end of each interval; at the first point, at its near end.
+        left = sparse.diags_array([-1 / h, np.append(0.0, 1 / h)], offsets=[-1, 0], shape=(n, n)).tolil()
         left[0, :] = 0
         left[0, [0, 1]] = [-1 / h[0], 1 / h[0]]
         direct.append(left.tocsr())
@@ -293,16 +345,17 @@ def _system(time: Array, row: NDArray[np.integer]) -> _System:
 
 
 def _filter(system: _System, smoothing_time: float, usable: NDArray[np.bool_]) -> RateFilter:
-    from scipy.linalg import cholesky_banded
-
     strength = smoothing_time**4 / system.interval
-    spread = system.second.T.tocsr()
-    factor = None
-    if system.energy.shape[0]:
-        matrix = (system.energy + strength * (system.second @ spread)).tocsr()
-        factor = cholesky_banded(_upper(matrix), check_finite=False)
-    curved = system.curved - strength * (system.direct @ spread)
-    return RateFilter(smoothing_time, usable, system.second, system.direct, curved.tocsr(), strength * spread, factor)
+    return RateFilter(
+        smoothing_time,
+        system.interval,
+        usable,
+        system.second,
+        system.direct,
+        (system.curved - strength * system.slope_of_back).tocsr(),
+        strength * system.back,
+        system.factor(strength),
+    )
 
 
 def _upper(matrix: Any) -> Array:
@@ -315,6 +368,7 @@ def _upper(matrix: Any) -> Array:
 
 def _cross_validated(system: _System, readings: Array) -> float:
     """Smoothing time with the least Σr²/(n − trace)², the trace from random signs."""
+    from scipy.linalg import cho_solve_banded
     from scipy.optimize import minimize_scalar
 
     n = readings.shape[1]
@@ -323,13 +377,16 @@ def _cross_validated(system: _System, readings: Array) -> float:
     signs = np.sign(np.random.default_rng(0).standard_normal((_PROBES, n)))
     scale = np.maximum(np.ptp(readings, axis=1, keepdims=True), 1e-300)
     columns = np.vstack([readings / scale, signs]).T
-    everything = np.ones(n, dtype=bool)
+    bent = system.second @ columns
 
     def score(logarithm: float) -> float:
-        trial = _filter(system, float(np.exp(logarithm)) * system.interval, everything)
-        left = trial._roughness @ trial._bend(columns)
+        strength = float(np.exp(4 * logarithm)) * system.interval**3
+        factor = system.factor(strength)
+        left = strength * (system.back @ cho_solve_banded((factor, False), bent, check_finite=False))
         freedom = float(np.mean(np.sum(left[:, -_PROBES:] * signs.T, axis=0)))
         return float(np.log(np.sum(left[:, :-_PROBES] ** 2) + 1e-300) - 2 * np.log(freedom))
 
-    found = minimize_scalar(score, bounds=(np.log(_SHORTEST), np.log(_LONGEST)), method="bounded")
+    found = minimize_scalar(
+        score, bounds=(np.log(_SHORTEST), np.log(_LONGEST)), method="bounded", options={"xatol": 0.01}
+    )
     return float(np.exp(found.x)) * system.interval
