@@ -708,7 +708,7 @@ def test_coverage(monkeypatch):
         )
         prepared = prepare_section(SurveyInput(survey, points, {}))
         samples = run_montecarlo(
-            prepared.chain.vectors,
+            prepared.vectors,
             prepared.sources,
             prepared.layouts,
             names=OUTPUTS,

@@ -107,6 +107,10 @@ class PreparedSection:
     terms: tuple[NumericalTerm, ...]
     notes: tuple[str, ...]
 
+    def vectors(self, errors: dict[str, Array]) -> Array:
+        """Outputs of many draws in the nominal window, which the data's own noise has had its part in choosing."""
+        return self.chain.vectors(errors, vary=SectionVariation(window=self.nominal.window))
+
     @property
     def facts(self) -> SectionFacts:
         """What the checks need."""
@@ -343,9 +347,8 @@ def _outer_noise(chain: SectionChain, nominal: SectionReduction, noise: Sequence
 def _propagate(
     prepared: PreparedSection, *, draws: int, seed: int, progress: Progress | None
 ) -> tuple[Samples, Budget]:
-    chain = prepared.chain
     plain = run_montecarlo(
-        chain.vectors,
+        prepared.vectors,
         prepared.sources,
         prepared.layouts,
         names=OUTPUTS,
@@ -355,7 +358,7 @@ def _propagate(
         progress=progress,
     )
     budget = make_budget(
-        chain.vectors,
+        prepared.vectors,
         prepared.sources,
         prepared.layouts,
         plain,

@@ -290,7 +290,7 @@ class SectionChain:
         Returns
         -------
         ndarray, shape (k, m)
-            Over `OUTPUTS`; NaN where a draw hides the wake or is no possible stream.
+            Over `OUTPUTS`; NaN where a draw is no possible stream, or hides a wake that is to be found.
         """
         count = len(next(iter(errors.values())))
         result = np.full((count, len(OUTPUTS)), np.nan)
