@@ -26,6 +26,7 @@ class Core:
     y: float = 0.47
     z: float = 0.0
     core_radius: float = 0.03
+    circulation: float = 2.0
 
 
 def reduction(grid=None, *, u_shift=0.0, loss_shift=0.0, offset=(0.0, 0.0)):
@@ -100,6 +101,19 @@ def test_core_resolution(spacing, verdict):
     assert checks.core_resolution(facts(GOOD, vortices=())).verdict == "not_applicable"
 
 
+def test_core_resolution_is_judged_where_the_core_is():
+    # Uneven points: coarse far from the core, fine in it.
+    check = checks.core_resolution(facts(GOOD, raw_spacing=0.1, spacings=(0.01,)))
+    assert check.verdict == "pass"
+    assert check.value == pytest.approx(0.01 / 0.03)
+
+
+def test_core_resolution_passes_over_a_faint_eddy():
+    eddy = Core(core_radius=0.005, circulation=-0.1)
+    assert checks.core_resolution(facts(GOOD, vortices=(eddy, Core()))).value == pytest.approx(0.012 / 0.03)
+    assert checks.core_resolution(facts(GOOD, vortices=(replace(eddy, circulation=-0.5), Core()))).verdict == "fail"
+
+
 @pytest.mark.parametrize(("share", "verdict"), [(0.01, "pass"), (0.05, "warn"), (0.3, "fail")])
 def test_noise_bias(share, verdict):
     bias = share * float(GOOD.forces.induced_drag)
@@ -141,3 +155,10 @@ def test_a_plane_without_vorticity_says_so():
     assert checks.net_circulation(still).verdict == "not_applicable"
     assert checks.edge_vorticity(still).verdict == "not_applicable"
     assert all(check.message for check in checks.all_checks(still, facts(still, vortices=())))
+
+
+def test_net_circulation_of_a_wake_cut_in_half_is_all_of_it():
+    grid = UniformGrid(0.0, -0.36, 0.012, 0.012, 70, 61)
+    half = reduction(grid)
+    # The starboard half alone has one sign: no more than all of it can be unbalanced.
+    assert checks.net_circulation(half).value == pytest.approx(1.0, abs=0.05)

@@ -259,6 +259,11 @@ def test_wing_tip_reports_that_the_survey_cuts_its_wake(tip):
     assert verdicts["edge_total_pressure_loss"] in ("warn", "fail")
     assert verdicts["net_circulation"] == "fail"
     assert ledger.failed
+    # Of the one-signed half of a wake no more than all can be unbalanced; the bound circulation's 0.332 of it leaves.
+    net = next(check for check in ledger.checks if check.name == "net_circulation")
+    assert 0.7 < net.value <= 1
+    # The lines are 0.1 to 0.25 inch apart about the core and inches apart elsewhere.
+    assert verdicts["core_resolution"] == "pass"
 
 
 def test_wing_tip_exit_status(tip, tmp_path):

@@ -35,12 +35,18 @@ LIMITS: dict[str, tuple[float, float]] = {
 EDGE_CELLS = 3
 #: Closed lines around the wake that the net circulation is averaged over, at most.
 _CONTOURS = 5
+#: Share of the strongest circulation below which a vortex's core does not matter: its drag goes with the square.
+FAINT_VORTEX = 0.1
 #: Flow-angle offset that deserves a look, rad.
 ANGLE_LIMIT = math.radians(0.5)
 
 
 class Core(Protocol):
     """A vortex core, as far as its resolution is concerned."""
+
+    @property
+    def circulation(self) -> float:
+        """Circulation, m²/s."""
 
     @property
     def core_radius(self) -> float:
@@ -71,6 +77,8 @@ class Facts:
         Noise bias of the induced drag that was subtracted, N; NaN where the noise is unknown.
     loss_zero_uncertainty : float
         Standard uncertainty of the loss zero, Pa.
+    spacings : tuple of float
+        Larger of the measured points' spacings about each vortex, m; empty where the points are evenly spaced.
     """
 
     vortices: Sequence[Core]
@@ -78,6 +86,7 @@ class Facts:
     filled: Mask
     bias: float
     loss_zero_uncertainty: float
+    spacings: tuple[float, ...] = ()
 
 
 def all_checks(reduction: Reduction, facts: Facts) -> tuple[Check, ...]:
@@ -122,11 +131,12 @@ def _check(name: str, value: float, messages: dict[str, str]) -> Check:
 
 
 def net_circulation(reduction: Reduction) -> Check:
-    """Net circulation of the window over the circulation of one sign."""
-    gross = float(reduction.forces.gross_circulation)
-    if gross == 0:
+    """Net circulation of the window over the circulation of the sign that prevails."""
+    forces = reduction.forces
+    prevailing = float(forces.gross_circulation) + abs(float(forces.net_circulation)) / 2
+    if prevailing == 0:
         return _check("net_circulation", math.nan, {"not_applicable": "No vorticity was found in the plane."})
-    value = abs(_surrounding_circulation(reduction)) / gross
+    value = abs(_surrounding_circulation(reduction)) / prevailing
     return _check(
         "net_circulation",
         value,
@@ -229,12 +239,17 @@ def edge_total_pressure_loss(reduction: Reduction) -> Check:
 
 
 def core_resolution(facts: Facts) -> Check:
-    """Spacing of the measured points over the smallest core length."""
-    cores = [vortex for vortex in facts.vortices if vortex.core_radius > 0]
+    """Spacing of the measured points over the core length, where that is largest among the vortices that count."""
+    spacings = facts.spacings or (facts.raw_spacing,) * len(facts.vortices)
+    least = FAINT_VORTEX * max((abs(vortex.circulation) for vortex in facts.vortices), default=0.0)
+    cores = [
+        (spacing / vortex.core_radius, vortex)
+        for vortex, spacing in zip(facts.vortices, spacings, strict=True)
+        if vortex.core_radius > 0 and abs(vortex.circulation) >= least
+    ]
     if not cores:
         return _check("core_resolution", math.nan, {"not_applicable": "No vortex core was identified."})
-    smallest = min(cores, key=lambda vortex: vortex.core_radius)
-    value = facts.raw_spacing / smallest.core_radius
+    value, smallest = max(cores, key=lambda core: core[0])
     where = f"the core at y = {smallest.y:.4g} m, z = {smallest.z:.4g} m (a = {smallest.core_radius:.3g} m)"
     return _check(
         "core_resolution",

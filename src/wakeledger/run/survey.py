@@ -17,6 +17,7 @@ from wakeledger.confidence.terms import NumericalTerm, add_terms
 from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.core.grid import Array
 from wakeledger.intake.gridding import Gridding, check_duplicates, make_gridding
+from wakeledger.intake.gridding.lattice import find_lattice
 from wakeledger.intake.gridding.window import covered_window
 from wakeledger.intake.state import check_state
 from wakeledger.ledger.inspection import Inspection
@@ -488,7 +489,22 @@ def _facts(prepared: Prepared) -> Facts:
         filled=prepared.chain.gridding.filled,
         bias=prepared.chain.frozen.bias.get("induced_drag", math.nan),
         loss_zero_uncertainty=prepared.outer.loss_zero_uncertainty,
+        spacings=_spacings(prepared),
     )
+
+
+def _spacings(prepared: Prepared) -> tuple[float, ...]:
+    """Larger of the points' spacings about each vortex, m; empty where the points stand evenly or on no lines."""
+    points = prepared.chain.points
+    lattice = find_lattice(points.y, points.z) if prepared.chain.gridding.kind == "tensor" else None
+    if lattice is None:
+        return ()
+
+    def about(lines: Array, place: float) -> float:
+        upper = min(max(int(np.searchsorted(lines, place)), 1), lines.size - 1)
+        return float(lines[upper] - lines[upper - 1])
+
+    return tuple(max(about(lattice.y, vortex.y), about(lattice.z, vortex.z)) for vortex in prepared.vortices.vortices)
 
 
 def _crosschecks(
