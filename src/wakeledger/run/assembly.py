@@ -7,6 +7,7 @@ from collections.abc import Mapping, Sequence
 
 from wakeledger.confidence.budget import Budget
 from wakeledger.confidence.samples import Samples
+from wakeledger.confidence.sources import Source
 from wakeledger.core.errors import SurveyError
 from wakeledger.core.estimate import Estimate
 from wakeledger.core.names import ROWS
@@ -19,7 +20,13 @@ NO_SOURCE = "the survey file gives no uncertainty source"
 
 
 def ledger_row(
-    name: str, values: Mapping[str, float], samples: Samples | None, *, reason: str = NO_SOURCE
+    name: str,
+    values: Mapping[str, float],
+    samples: Samples | None,
+    *,
+    budget: Budget | None = None,
+    sources: Sequence[Source] = (),
+    reason: str = NO_SOURCE,
 ) -> Row | None:
     """One row with its uncertainty.
 
@@ -31,8 +38,12 @@ def ledger_row(
         The chain's outputs.
     samples : Samples or None
         Their draws, numerical terms included; None where there are none.
+    budget : Budget or None
+        The row's budget, for its degrees of freedom.
+    sources : sequence of Source
+        The sources behind it.
     reason : str
-        Why there are none.
+        Why there are no draws, where there are none.
 
     Returns
     -------
@@ -63,10 +74,36 @@ def ledger_row(
         standard_uncertainty=u,
         expanded_uncertainty=half_width,
         coverage_factor=half_width / u if u > 0 else math.nan,
-        degrees_of_freedom=float(samples.draws - 1),
+        degrees_of_freedom=effective_degrees_of_freedom(budget, name, sources),
         coefficient=coefficient,
         coefficient_standard_uncertainty=coefficient_u,
     )
+
+
+def effective_degrees_of_freedom(budget: Budget | None, row: str, sources: Sequence[Source]) -> float:
+    """Effective degrees of freedom of a row, ν_eff = u⁴/Σ(u_i⁴/ν_i) (Welch and Satterthwaite; GUM G.2b).
+
+    Parameters
+    ----------
+    budget : Budget or None
+        The row's budget.
+    row : str
+        The row.
+    sources : sequence of Source
+        The sources, whose contributions are independent of each other; numerical terms count as exactly known.
+
+    Returns
+    -------
+    float
+        Infinite where every contributing source's uncertainty is taken as exact.
+    """
+    if budget is None:
+        return math.inf
+    freedom = {source.name: source.degrees_of_freedom for source in sources}
+    lines = budget.of(row)
+    total = sum(line.standard_uncertainty**2 for line in lines)
+    loss = sum(line.standard_uncertainty**4 / freedom.get(line.source, math.inf) for line in lines)
+    return total**2 / loss if loss > 0 else math.inf
 
 
 def cross_check(

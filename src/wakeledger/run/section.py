@@ -376,7 +376,7 @@ def _ledger(
     file, nominal = survey.survey, prepared.nominal
     settings = prepared.chain.settings
     why = _NO_DRAWS if prepared.sources else NO_SOURCE
-    row = ledger_row(ROW, nominal.values, samples, reason=why)
+    row = ledger_row(ROW, nominal.values, samples, budget=budget, sources=prepared.sources, reason=why)
     assert row is not None
     variance = math.nan if samples is None else float(samples.covariance[0, 0])
     model = {} if file.model is None else file.model.given()

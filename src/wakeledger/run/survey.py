@@ -443,7 +443,10 @@ def _ledger(
 ) -> Ledger:
     file, nominal = survey.survey, prepared.nominal
     reason = NO_SOURCE if nominal.region.mask.any() else _NO_WAKE
-    found = (ledger_row(name, nominal.values, samples, reason=reason) for name in ROWS)
+    found = (
+        ledger_row(name, nominal.values, samples, budget=budget, sources=prepared.sources, reason=reason)
+        for name in ROWS
+    )
     rows = tuple(row for row in found if row is not None)
     names = [row.name for row in rows]
     covariance = np.full((len(names), len(names)), np.nan)
