@@ -106,6 +106,13 @@ def vortex_table(vortices: Sequence[Vortex]) -> xr.Dataset | None:
                 "circulation, counter-clockwise seen from behind",
             ),
             ("core_radius", np.array([x.core_radius for x in vortices]), "m", "core length a of exp(-(r/a)^2)"),
+            (
+                "peak_radius",
+                np.array([x.peak_radius for x in vortices]),
+                "m",
+                "radius at which the swirl is largest, 1.1209 core lengths",
+            ),
+            ("peak_swirl", np.array([x.peak_swirl for x in vortices]), "m s-1", "largest azimuthal mean of the swirl"),
             ("u", np.array([x.u for x in vortices]), "m s-1", "axial velocity at the centre"),
         ),
     )
