@@ -23,8 +23,8 @@ from wakeledger.ledger.archive import open_archive, write_archive
 from wakeledger.ledger.tabular import ledger_json
 from wakeledger.run.config import parse_survey
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.section import prepare_section
-from wakeledger.run.section_chain import OUTPUTS, ROW
+from wakeledger.run.section.chain import OUTPUTS, ROW
+from wakeledger.run.section.survey import prepare_section
 from wakeledger.run.survey import inspect, load, reduce
 from wakeledger.stream.reference import Reference, resolve_reference
 
@@ -688,7 +688,7 @@ def test_coverage(monkeypatch):
     survey = parse_survey(toml(description(sources=sources)), "survey.toml")
     clean, exact = carried_back(pressure=0.04, n=61)
     # The numerical terms cover by design and are tested by themselves; they need no noise here.
-    monkeypatch.setattr("wakeledger.run.section._NOISE_DRAWS", 2)
+    monkeypatch.setattr("wakeledger.run.section.survey._NOISE_DRAWS", 2)
     held, surveys, deviations = 0, 100, []
     for seed in range(surveys):
         generator = np.random.default_rng([2024, seed])

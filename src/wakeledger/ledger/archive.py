@@ -9,6 +9,7 @@ from __future__ import annotations
 import dataclasses
 import json
 import os
+import shutil
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -25,6 +26,9 @@ if TYPE_CHECKING:
 
 #: Version of the archive's layout; a file with a higher one is refused.
 ARCHIVE_FORMAT = 1
+
+#: A device with fewer bytes than this to spare counts as full once writing to it has failed.
+_NO_SPACE = 100_000
 
 #: Name of the root attribute that holds the version, and by which an archive is recognised.
 FORMAT_ATTRIBUTE = "wakeledger_format"
@@ -68,7 +72,10 @@ def write_archive(ledger: Ledger, path: str | os.PathLike[str]) -> None:
             encoding.write_group(dataset, part, group=group or None, mode=mode)
             mode = "a"
         part.replace(target)
-    except OSError as error:
+    except (OSError, RuntimeError) as error:
+        # The netCDF library reports a full disk as an error of its own.
+        if isinstance(error, RuntimeError) and not str(error).startswith("NetCDF:"):
+            raise
         raise _unwritable(target, error) from error
     finally:
         part.unlink(missing_ok=True)
@@ -93,11 +100,13 @@ def open_archive(path: str | os.PathLike[str]) -> Ledger:
         If the file is missing, not netCDF, not an archive of this program, of a newer layout, or damaged.
     """
     source = Path(path)
-    if not source.is_file():
-        found = "is a directory" if source.is_dir() else "does not exist"
-        raise DataError(f"the archive {found}", file=source, remedy="give the ledger.nc of a finished reduction")
     try:
+        if not source.is_file():
+            found = "is a directory" if source.is_dir() else "does not exist"
+            raise DataError(f"the archive {found}", file=source, remedy="give the ledger.nc of a finished reduction")
         root = encoding.read_group(source)
+    except DataError:
+        raise
     except PermissionError as error:
         raise DataError("the archive cannot be read", file=source, remedy="check its permissions") from error
     except Exception as error:
@@ -145,8 +154,10 @@ def is_archive(path: str | os.PathLike[str]) -> bool:
         return False
 
 
-def _unwritable(target: Path, error: OSError) -> DataError:
-    reason = error.strerror or str(error)
+def _unwritable(target: Path, error: OSError | RuntimeError) -> DataError:
+    reason = getattr(error, "strerror", None) or str(error)
+    if shutil.disk_usage(target.parent).free < _NO_SPACE:
+        reason = "no space is left on the device"
     return DataError(f"the archive cannot be written ({reason})", file=target, remedy="choose another place with --out")
 
 

@@ -157,6 +157,8 @@ def write_products(
                 folder.rmdir()
         if isinstance(error, OSError):
             raise _unwritable(directory, error) from error
+        if isinstance(error, DataError):
+            raise error.located(file=directory) from error
         raise
     return names
 
@@ -167,7 +169,11 @@ def _build(ledger: Ledger, folder: Path, figures: Sequence[str]) -> tuple[Path, 
     from wakeledger.present.figures import save_figures
     from wakeledger.present.report import report_html
 
-    write_archive(ledger, folder / "ledger.nc")
+    try:
+        write_archive(ledger, folder / "ledger.nc")
+    except DataError as error:
+        # It names a file that is there only while the products are built.
+        raise DataError(error.found, remedy=error.remedy) from error
     texts = {
         "ledger.json": json_text(ledger_json(ledger)),
         "ledger.csv": ledger_csv(ledger),

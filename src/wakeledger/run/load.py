@@ -53,8 +53,10 @@ def load(path: str | Path) -> SurveyInput:
     InputError
         If anything about the survey file, the data or the archive is wrong.
     """
+    from wakeledger.intake.readers.recognise import is_stream
+
     path = Path(path)
-    if path.is_fifo() or path.is_char_device():
+    if is_stream(path):
         raise SurveyError(
             "this is no regular file", file=path, remedy="write the survey to a file: its data are found beside it"
         )

@@ -17,7 +17,7 @@ from wakeledger.core.grid import Array
 from wakeledger.intake.gridding import Gridding
 from wakeledger.physics.fields.outer_flow import OuterFlow
 from wakeledger.physics.fields.wake_region import Mask
-from wakeledger.run.chain import OUTPUTS, Chain, Reduction, Variation, estimate_of, sampled_mask
+from wakeledger.run.chain import OUTPUTS, Chain, Reduction, Variation, coefficient_of, estimate_of, sampled_mask
 
 MASK = "edge of the wake region"
 RESOLUTION = "spacing of the points"
@@ -25,10 +25,14 @@ RESAMPLING = "spline between the points"
 GAPS = "filled points"
 LOSS_ZERO = "zero of the total pressure"
 OFFSET_ZERO = "zero of the flow angles"
+PAIR = "pair of the residual cut at the region's edge"
 METHOD = "choices inside {}"
 
 #: Order claimed when a decimated grid is extrapolated; the observed order between h/a = 0.5 and 1 is 4 to 8.
 ORDER = 3.0
+#: Doubt of the residual as a share of it. Over the whole plane its two parts cancel but for the cores' share; over the
+#: region they do not, and near the model nearly all of the residual is what is left of them.
+PAIR_DOUBT = 0.6
 #: Factors on the region's growth that bound the plausible choices.
 SWEEP = (0.5, 1.5)
 #: Estimates that integrate over the same region as a row, and so share its doubt.
@@ -90,6 +94,7 @@ def numerical_terms(
     known = [one for one in both if one is not None]
     if known:
         terms.append(NumericalTerm(OFFSET_ZERO, np.sqrt(sum(one**2 for one in known))))
+    terms.append(_pair_term(nominal))
     for name, value in method_uncertainty.items():
         vector = np.zeros(len(OUTPUTS))
         vector[OUTPUTS.index(name)] = value if np.isfinite(value) else 0.0
@@ -150,6 +155,17 @@ def _resampling_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gri
     same = other.gridding.grid.shape == nominal.flow.grid.shape
     vary = Variation(mask=nominal.region.mask if same else None)
     return NumericalTerm(RESAMPLING, _difference(other.reduce(vary=vary).vector, nominal))
+
+
+def _pair_term(nominal: Reduction) -> NumericalTerm:
+    """Doubt of the residual, which the total drag shares."""
+    doubt = PAIR_DOUBT * abs(nominal.values["residual_drag"])
+    vector = np.zeros(len(OUTPUTS))
+    for row in ("residual_drag", "total_drag"):
+        vector[OUTPUTS.index(row)] = doubt
+        coefficient, value = nominal.values[coefficient_of(row)], nominal.values[row]
+        vector[OUTPUTS.index(coefficient_of(row))] = np.nan_to_num(doubt * coefficient / value) if value else 0.0
+    return NumericalTerm(PAIR, vector)
 
 
 def _gap_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gridding]) -> NumericalTerm:

@@ -48,7 +48,7 @@ from wakeledger.run.inspection import inspection_of
 from wakeledger.run.load import SurveyInput, load, refuse_unsupported
 from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
 from wakeledger.run.numerics import numerical_terms
-from wakeledger.run.section import inspect_section, reduce_section
+from wakeledger.run.section.survey import inspect_section, reduce_section
 from wakeledger.stream.reference import Reference
 
 __all__ = ["SurveyInput", "inspect", "load", "prepare", "reduce"]

@@ -41,7 +41,7 @@ def check_duplicates(points: Points) -> None:
     for name, channel in points.channels.items():
         values = channel.values
         difference = np.abs(values[first] - values[second])
-        noise = max(_noise(points.y, points.z, values, label), _LEAST_NOISE * _magnitude(values))
+        noise = max(_noise(points.y, points.z, values, label), _LEAST_NOISE * _range(values))
         allowed = np.full(difference.shape, _CONTRADICTION * np.sqrt(2.0) * noise)
         if name in points.std:
             error = points.std[name] / (1.0 if points.samples is None else np.sqrt(points.samples))
@@ -60,9 +60,10 @@ def check_duplicates(points: Points) -> None:
             )
 
 
-def _magnitude(values: Array) -> float:
-    finite = np.abs(values[np.isfinite(values)])
-    return float(finite.max()) if finite.size else 0.0
+def _range(values: Array) -> float:
+    """Range of nearly all values: a level common to all of them, as of absolute pressures, says nothing of their noise."""
+    finite = values[np.isfinite(values)]
+    return float(np.ptp(np.quantile(finite, [0.01, 0.99]))) if finite.size else 0.0
 
 
 def _places(y: Array, z: Array) -> NDArray[np.intp]:

@@ -17,7 +17,7 @@ from wakeledger.core.grid import Array
 #: Weight of the two coefficients against their denominator in the compressed plane, in the centre sector. Coefficients
 #: of usual tips reach 2 to 4 at the edge of the range.
 CENTRE_WEIGHT = 0.5
-OUTER_WEIGHT = 1.0
+OUTER_WEIGHT = 0.5
 #: By sector: the leading hole, the next one counter-clockwise seen from behind, and the next one clockwise.
 _RING = tuple(np.array(ring) for ring in ((1, 1, 2, 3, 4, 5, 6), (2, 2, 3, 4, 5, 6, 1), (6, 6, 1, 2, 3, 4, 5)))
 #: cos 60° √3 and the like of the least-squares plane through three opposite pairs.

@@ -24,10 +24,10 @@ from wakeledger.intake.probe.validity import DirectionHull
 NODES = 97
 #: A sector's table reaches to directions at which its hole reads this much less than the highest one, in dynamic
 #: pressures: noise and displaced holes shift the boundaries between sectors.
-OVERLAP = 0.3
-#: A table reaches this many spacings of the calibration beyond the hull, so that a reading near the edge under errors
-#: still finds a value.
-MARGIN = 1.0
+OVERLAP = 0.15
+#: A table reaches one spacing of the calibration, and at least this far, beyond the hull, rad: a reading near the edge
+#: under errors still finds a value, and the cubic between the last nodes stays away from the range.
+MARGIN = 0.05
 _MESH = 121
 _ITERATIONS = 12
 _STEP = 1e-5
@@ -268,6 +268,11 @@ def newton_step(holes: Array, gradient: tuple[Array, Array], lead: NDArray[np.in
     return solve_pairs(plane_slopes(holes, gradient, lead), target - np.stack(now[:2]))
 
 
+def margin(hull: DirectionHull) -> float:
+    """How far beyond the hull the tables reach, rad."""
+    return max(hull.spacing, MARGIN)
+
+
 def build_tables(model: HoleModel, hull: DirectionHull, *, sectors: int) -> InverseTables:
     """Invert a model of the hole pressures in every sector.
 
@@ -385,7 +390,7 @@ class _Patch:
 
 def _belongs(image: Array, holes: Array, hull: DirectionHull, sector: int, *, share: float) -> NDArray[np.bool_]:
     """Directions near the calibrated range at which a sector's hole may lead."""
-    belongs: NDArray[np.bool_] = hull.outside(*angles(from_plane(image))) <= share * MARGIN * hull.spacing
+    belongs: NDArray[np.bool_] = hull.outside(*angles(from_plane(image))) <= share * margin(hull)
     if len(holes) == 7:
         belongs &= holes[sector] >= holes.max(axis=0) - share * OVERLAP
     return belongs
@@ -406,5 +411,5 @@ def bounds(directions: Array, hull: DirectionHull) -> tuple[Array, Array]:
     low, high : ndarray, shape (2,)
     """
     image = to_plane(directions)
-    reach = np.max(0.5 * (1.0 + np.sum(image**2, axis=0))) * 1.5 * MARGIN * hull.spacing
+    reach = np.max(0.5 * (1.0 + np.sum(image**2, axis=0))) * 1.5 * margin(hull)
     return image.min(axis=1) - reach, image.max(axis=1) + reach

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import mmap
+import stat
 from pathlib import Path
 
 from wakeledger.core.errors import DataError
@@ -55,8 +56,17 @@ def recognise(path: Path) -> str:
     return "table"
 
 
+def is_stream(path: Path) -> bool:
+    """Whether a path is a pipe or a terminal, which can be read only once; False where that cannot be told."""
+    try:
+        mode = path.stat().st_mode
+    except (OSError, ValueError):
+        return False
+    return stat.S_ISFIFO(mode) or stat.S_ISCHR(mode)
+
+
 def _head(path: Path) -> bytes:
-    if path.is_fifo() or path.is_char_device():
+    if is_stream(path):
         raise DataError("this is no regular file", file=path, remedy="write what it gives to a file, and name that")
     try:
         with path.open("rb") as stream:

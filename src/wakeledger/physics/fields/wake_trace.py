@@ -1,13 +1,15 @@
-"""The wake's trace, a curve through the vortex centres along the ridge of vorticity and loss, and the parts along it.
+"""The wake's trace: chains of parts along the ridges of vorticity and loss, from vortex to vortex.
 
-The trace of each island of the wake region runs from its port end to its starboard end; what hangs on it (a fin's or
-tail's sheet inside the same region) is followed as branches. Small parts of about three cells' length are strung along
-it, and every cell of the region belongs to exactly one part. Nothing that is integrated depends on where the cuts fall.
+Each sheet that stands out of the noise has a chain, from its port to its starboard end; what hangs on it (a fin's
+sheet, say) is followed as branches. Where neither vorticity nor loss can be told from the noise there is no trace, and
+what goes on beyond such a gap is a chain that hangs on the first. Parts are about three cells long, and every cell of
+the region belongs to exactly one. Nothing that is integrated depends on where the cuts fall.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,24 +17,24 @@ from scipy import ndimage, sparse, spatial
 from scipy.sparse import csgraph
 
 from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.physics.fields.wake_ridge import Ridges, find_ridges
 
 Mask = NDArray[np.bool_]
 Index = NDArray[np.int64]
 
-#: Standard deviation of the smoothing, in cells.
-_SMOOTHING = 1.5
-#: A vortex centre is a peak of the smoothed vorticity above this fraction of the highest.
-_CENTRE = 0.15
-#: Length of a part along the trace, and distance from the trace that makes a centre a branch of its own, in cells.
-_PART = 3.0
+#: Length of a part along the trace, and standard deviation of the smoothing along it, in cells.
+_PART, _SMOOTHING = 3.0, 1.0
+#: Least length of a branch, in cells, and the most that one ridge has.
 _BRANCH = 6.0
 _MOST_BRANCHES = 8
-#: Width of the neighbourhood in which a centre is the highest, and extent below which a lone vortex is one part, cells.
-_NEIGHBOURHOOD, _COMPACT = 9, 12.0
-#: Share of the total strength below which an island has no trace of its own.
-_ISLAND_SHARE = 0.01
-#: Weight of the loss, and of the distance from the region's boundary, against the vorticity when the ridge is followed.
-_LOSS_WEIGHT, _CENTRE_WEIGHT = 0.3, 0.15
+#: Radius in which a summit is the highest point, in cells.
+_SUMMIT = 4.0
+#: Distance between the ends of a ridge over its length below which it is closed, and the least length of such, cells.
+_CLOSED, _RING = 0.15, 30.0
+#: How far the slopes of a vortex reach beyond those of a Gaussian of the same curvature, as a factor.
+_SLOPE = 1.25
+#: Net circulation of a ridge over its gross from which it must go on somewhere beyond a gap.
+_UNBALANCED = 0.25
 
 
 @dataclass(frozen=True, eq=False)
@@ -50,8 +52,8 @@ class WakeTrace:
     part : ndarray of int, shape (nz − 1, ny − 1)
         Part of each cell, −1 outside the wake.
     joint : tuple of (int, bool)
-        For each chain the part on which it hangs (−1 for a chain of its own) and whether its first part is the one
-        that hangs there.
+        For each chain the part of an earlier chain on which it hangs (−1 for a chain of its own), and whether its
+        first part is the one that hangs there: branches, and the other half of a sheet beyond a gap in the trace.
     """
 
     y: Array
@@ -83,11 +85,13 @@ class WakeTrace:
         Returns
         -------
         ndarray, shape (parts,)
-            −(circulation accumulated from the port end), m²/s, at the cut towards the next part; branches are counted
-            from their free tip. The last value of a chain of its own is minus its net circulation.
+            −(circulation accumulated from the port end), m²/s, at the cut towards the next part; hanging chains are
+            counted from their free end. The last value of a chain of its own that none continues is minus its net
+            circulation.
         """
         gathered = circulation.copy()
-        bound = np.empty(self.n)
+        bound, beyond = np.empty(self.n), np.zeros(self.n)
+        last = np.append(np.diff(self.chain) != 0, True)
         for chain in reversed(range(len(self.joint))):
             parts = np.flatnonzero(self.chain == chain)
             on, by_first = self.joint[chain]
@@ -95,7 +99,9 @@ class WakeTrace:
             bound[parts] = accumulated[-1] - accumulated if by_first else -accumulated
             if on >= 0:
                 gathered[on] += accumulated[-1]
-        return bound
+                if by_first and last[on]:
+                    beyond[on] += accumulated[-1]
+        return bound + beyond
 
 
 def wake_trace(circulation: Array, cells: Mask, grid: UniformGrid, *, loss: Array | None = None) -> WakeTrace:
@@ -104,13 +110,13 @@ def wake_trace(circulation: Array, cells: Mask, grid: UniformGrid, *, loss: Arra
     Parameters
     ----------
     circulation : ndarray, shape (nz − 1, ny − 1)
-        Circulation of each cell, m²/s.
+        Circulation of each cell, m²/s, outside the wake too, where the noise is read.
     cells : ndarray of bool, shape (nz − 1, ny − 1)
         Cells of the wake region, at least one.
     grid : UniformGrid
         The grid.
     loss : ndarray, shape (nz, ny), optional
-        Total-pressure loss, Pa; helps where the vorticity changes sign along the trace.
+        Total-pressure loss, Pa; shows the sheet where its vorticity changes sign.
 
     Returns
     -------
@@ -123,147 +129,194 @@ def wake_trace(circulation: Array, cells: Mask, grid: UniformGrid, *, loss: Arra
     """
     if not cells.any():
         raise ValueError("the wake region has no cell, so it has no trace")
-    vorticity = np.abs(ndimage.gaussian_filter(np.where(cells, circulation, 0.0), _SMOOTHING, mode="constant"))
-    cost = _cost(vorticity, cells, grid, loss)
-    labels, count = ndimage.label(cells, structure=np.ones((3, 3)))
-    strength = ndimage.sum_labels(vorticity, labels, np.arange(1, count + 1))
-    chains: list[tuple[Array, int, bool]] = []
-    island_of_chain: list[int] = []
-    first_part = 0
-    # A perfectly quiet wake still has an island to draw.
-    for island in np.flatnonzero(strength >= _ISLAND_SHARE * strength.sum()) + 1:
-        for points, on, by_first in _chains(vorticity, cost, labels == island, grid, first_part):
-            chains.append((points, on, by_first))
-            island_of_chain.append(int(island))
-            first_part += len(points)
-    points = np.concatenate([points for points, _, _ in chains])
-    sizes = [len(points) for points, _, _ in chains]
-    return WakeTrace(
+    cell = max(grid.dy, grid.dz)
+    pieces = _pieces(find_ridges(circulation, cells, grid, loss=loss), cell)
+    if not pieces:
+        # Even a wake without a ridge has a place.
+        row, column = np.unravel_index(np.argmax(np.where(cells, np.abs(circulation), -1.0)), cells.shape)
+        pieces = [_Piece(np.array([[grid.y0 + grid.dy * (column + 0.5), grid.z0 + grid.dz * (row + 0.5)]]))]
+    points = np.concatenate([piece.points for piece in pieces])
+    chain = np.repeat(np.arange(len(pieces)), [len(piece.points) for piece in pieces])
+    part = _nearest_part(points, cells, grid)
+    trace = WakeTrace(
         y=points[:, 0],
         z=points[:, 1],
-        arc_length=np.concatenate([_arc_length(points) for points, _, _ in chains]),
-        chain=np.repeat(np.arange(len(chains)), sizes),
-        part=_nearest_part(points, np.repeat(island_of_chain, sizes), labels, grid),
-        joint=tuple((on, by_first) for _, on, by_first in chains),
+        arc_length=np.concatenate([_arc_length(piece.points) for piece in pieces]),
+        chain=chain,
+        part=part,
+        joint=tuple((piece.on, piece.by_first) for piece in pieces),
     )
+    return replace(trace, joint=_continued(trace, trace.sums(circulation)))
 
 
-def _cost(vorticity: Array, cells: Mask, grid: UniformGrid, loss: Array | None) -> Array:
-    """Cost per unit length of following the trace through a cell: low on the ridge."""
-    depth = ndimage.distance_transform_edt(np.pad(cells, 1), sampling=(grid.dz, grid.dy))[1:-1, 1:-1]
-    quality = vorticity / max(float(vorticity.max()), np.finfo(float).tiny)
-    if loss is not None:
-        corners = (loss[1:, 1:] + loss[1:, :-1] + loss[:-1, 1:] + loss[:-1, :-1]) / 4
-        smooth = np.clip(ndimage.gaussian_filter(np.where(cells, corners, 0.0), _SMOOTHING), 0.0, None)
-        if smooth.max() > 0:
-            quality = quality + _LOSS_WEIGHT * smooth / smooth.max()
-    cost: Array = (0.02 + np.sqrt(quality) + _CENTRE_WEIGHT * depth / depth.max()) ** -2.0
-    return cost
+@dataclass(frozen=True, eq=False)
+class _Piece:
+    """One chain: its points from port to starboard, the part it hangs on and whether by its first."""
+
+    points: Array
+    on: int = -1
+    by_first: bool = False
 
 
-def _chains(
-    vorticity: Array, cost: Array, island: Mask, grid: UniformGrid, first_part: int
-) -> list[tuple[Array, int, bool]]:
-    """Points of each chain of one island, the part it hangs on and whether by its first part."""
-    rows, columns = np.nonzero(island)
-    place = np.stack([grid.y0 + grid.dy * (columns + 0.5), grid.z0 + grid.dz * (rows + 0.5)], axis=1)
-    by_length = _graph(island, np.ones(island.shape), grid)
-    by_cost = _graph(island, cost, grid)
-    centres = _centres(vorticity, island, rows, columns)
-    strongest = centres[np.argmax(vorticity[rows, columns][centres])]
-    one = centres[np.argmax(_distances(by_length, strongest)[centres])]
-    from_one = _distances(by_length, one)[centres]
-    other = centres[np.argmax(from_one)]
-    if from_one.max() < _COMPACT * max(grid.dy, grid.dz) and one != strongest != other:
-        one = other = strongest
-    if (place[one, 0], place[one, 1]) > (place[other, 0], place[other, 1]):
-        one, other = other, one
-    step = _PART * max(grid.dy, grid.dz)
-    path = _path(by_cost, np.array([one]), int(other))
-    trunk = _strung(place[path], step)
-    found: list[tuple[Array, int, bool]] = [(trunk, -1, False)]
-    on_trace = set(path.tolist())
-    for _ in range(_MOST_BRANCHES):
-        tree = spatial.cKDTree(place[sorted(on_trace)])
-        away = tree.query(place[centres])[0]
-        tip = int(centres[np.argmax(away)])
-        if away.max() < _BRANCH * max(grid.dy, grid.dz):
-            break
-        path = _path(by_cost, np.array(sorted(on_trace)), tip)
-        # The junction itself belongs to the chain it lies on.
-        outside = path[1:] if len(path) > 1 else path
-        points = _strung(place[outside], step)
-        known = np.concatenate([points for points, _, _ in found])
-        joint = first_part + int(np.argmin(np.hypot(*(known - place[path[0]]).T)))
-        from_junction = (points[0, 0], points[0, 1]) <= (points[-1, 0], points[-1, 1])
-        found.append((points if from_junction else points[::-1], joint, from_junction))
-        on_trace |= set(path.tolist())
+def _pieces(ridges: Ridges, cell: float) -> list[_Piece]:
+    """The chain along each ridge, the strongest first, each followed by its branches."""
+    place = ridges.place
+    free = _ends(ridges, cell)
+    found: list[_Piece] = []
+    for number in range(int(ridges.ridge.max(initial=-1)) + 1):
+        own = free & (ridges.ridge == number)
+        if not own.any():
+            continue
+        first_part = sum(len(piece.points) for piece in found)
+        one = _farthest(ridges.tree, int(np.argmax(own)), own)
+        other = _farthest(ridges.tree, one, own)
+        on_trace = _from_summit(ridges, _path(ridges.tree, np.array([one]), other), cell)
+        on_trace = _from_summit(ridges, on_trace[::-1], cell)
+        free &= ~_on_slope(ridges, on_trace, cell)
+        own &= free
+        chains = _trunk(place[on_trace], cell, first_part)
+        for _ in range(_MOST_BRANCHES):
+            away = np.where(own, spatial.cKDTree(place[on_trace]).query(place)[0], 0.0)
+            tip = int(np.argmax(away))
+            if away[tip] < _BRANCH * cell:
+                break
+            arm = _path(ridges.tree, on_trace, tip)
+            # The junction itself belongs to the chain it lies on.
+            branch = _from_summit(ridges, arm[:0:-1], cell)
+            own[tip] = False
+            free &= ~_on_slope(ridges, branch, cell)
+            own &= free
+            points = place[branch[::-1]]
+            known = np.concatenate([piece.points for piece in chains])
+            on = first_part + int(np.argmin(np.hypot(*(known - place[arm[0]]).T)))
+            by_first = tuple(points[0]) <= tuple(points[-1])
+            chains.append(_Piece(_strung(points if by_first else points[::-1], cell), on, by_first))
+            on_trace = np.concatenate([on_trace, branch])
+        found += chains
     return found
 
 
-def _centres(vorticity: Array, island: Mask, rows: Index, columns: Index) -> Index:
-    """Nodes of the vortex centres; all strong cells where there is but one centre."""
-    inside = np.where(island, vorticity, 0.0)
-    strong = inside >= _CENTRE * inside.max()
-    peak = strong & island & (inside == ndimage.maximum_filter(inside, size=_NEIGHBOURHOOD))
-    nodes = np.flatnonzero(peak[rows, columns])
-    if nodes.size < 2:
-        nodes = np.flatnonzero((strong & island)[rows, columns])
-    return nodes
+def _ends(ridges: Ridges, cell: float) -> Mask:
+    """Points at which a trace may end: the summits of vortices and what does not lie on their slopes."""
+    place, height = ridges.place, ridges.height
+    kept = ridges.ridge >= 0
+    if not kept.any():
+        return kept
+    first, second = spatial.cKDTree(place).query_pairs(_SUMMIT * cell, output_type="ndarray").T
+    highest = height.copy()
+    np.maximum.at(highest, first, height[second])
+    np.maximum.at(highest, second, height[first])
+    return kept & ~_on_slope(ridges, np.flatnonzero(kept & (height >= highest)), cell)
 
 
-def _graph(island: Mask, cost: Array, grid: UniformGrid) -> sparse.csr_array:
-    """Neighbouring cells of an island joined by length times mean cost."""
-    number = np.full(island.shape, -1)
-    number[island] = np.arange(np.count_nonzero(island))
-    first, second, weight = [], [], []
-    nz, ny = island.shape
-    for dz, dy in ((0, 1), (1, 0), (1, 1), (1, -1)):
-        here = np.s_[: nz - dz, max(0, -dy) : ny - max(0, dy)]
-        there = np.s_[dz:, max(0, dy) : ny + min(0, dy)]
-        both = island[here] & island[there]
-        first.append(number[here][both])
-        second.append(number[there][both])
-        weight.append(np.hypot(dz * grid.dz, dy * grid.dy) * (cost[here][both] + cost[there][both]) / 2)
-    n = int(np.count_nonzero(island))
-    joined = (np.concatenate(weight), (np.concatenate(first), np.concatenate(second)))
-    return sparse.csr_array(joined, shape=(n, n))
+def _on_slope(ridges: Ridges, summits: Index, cell: float) -> Mask:
+    """Points that lie on the slope of any of the summits: part of a vortex and not of a sheet of its own."""
+    slope = np.zeros(len(ridges.place), dtype=bool)
+    for summit in summits:
+        fall = ridges.height[summit] - ridges.height
+        apart = ((ridges.place - ridges.place[summit]) ** 2).sum(axis=1)
+        slope |= (fall > 0) & (apart <= (_SLOPE * ridges.reach[summit]) ** 2 * fall + cell**2)
+    return slope
 
 
-def _distances(graph: sparse.csr_array, node: int) -> Array:
-    distances: Array = csgraph.dijkstra(graph, directed=False, indices=int(node))
-    return distances
+def _from_summit(ridges: Ridges, path: Index, cell: float) -> Index:
+    """The path without what lies on the far slope of the vortex it begins in."""
+    place, height = ridges.place[path], ridges.height[path]
+    fall = np.clip(height - height[:, None], 0.0, None)
+    apart = ((place - place[:, None]) ** 2).sum(axis=-1)
+    slope = apart <= (_SLOPE * ridges.reach[path]) ** 2 * fall + cell**2
+    summit = np.array([slope[:k, k].all() for k in range(len(path))])
+    return path[np.argmax(np.where(summit, height, -np.inf)) :]
 
 
-def _path(graph: sparse.csr_array, sources: Index, target: int) -> Index:
-    """Nodes of the cheapest path from any source to the target, both included."""
-    _, before, _ = csgraph.dijkstra(graph, directed=False, indices=sources, min_only=True, return_predecessors=True)
-    nodes = [target]
+def _trunk(points: Array, cell: float, first_part: int) -> list[_Piece]:
+    """The chain along the longest way through a ridge; two where the ridge is closed, cut at its sides."""
+    if tuple(points[0]) > tuple(points[-1]):
+        points = points[::-1]
+    along = _arc_length(points)
+    gap = float(np.hypot(*(points[-1] - points[0])))
+    if gap > _CLOSED * along[-1] or along[-1] < _RING * cell:
+        return [_Piece(_strung(points, cell))]
+    one, other = sorted((int(np.argmin(points[:, 0])), int(np.argmax(points[:, 0]))))
+    across = points[one : other + 1]
+    rest = [points[other:], points[: one + 1]]
+    if gap <= 2 * _PART * cell:
+        rest = [np.concatenate(rest)]
+    if points[one, 0] > points[other, 0]:
+        across = across[::-1]
+    else:
+        rest = [way[::-1] for way in rest[::-1]]
+    strung = [_strung(way, cell) for way in (across, *rest) if len(way) > 1]
+    pieces = [_Piece(way) for way in strung]
+    if len(pieces) == 3:
+        # The second surface is whole but for the gap where the ridge was cut.
+        pieces[2] = _Piece(strung[2], first_part + len(strung[0]) + len(strung[1]) - 1, True)
+    return pieces
+
+
+def _farthest(tree: sparse.csr_array, node: int, among: Mask) -> int:
+    """The node farthest from one along its tree."""
+    distance = csgraph.dijkstra(tree, directed=False, indices=node)
+    return int(np.argmax(np.where(among, distance, -1.0)))
+
+
+def _path(tree: sparse.csr_array, sources: Index, node: int) -> Index:
+    """Nodes of the way along the tree to one from the nearest of the sources."""
+    _, before, _ = csgraph.dijkstra(tree, directed=False, indices=sources, min_only=True, return_predecessors=True)
+    nodes = [node]
     while before[nodes[-1]] >= 0:
         nodes.append(int(before[nodes[-1]]))
     return np.array(nodes[::-1], dtype=np.int64)
 
 
-def _strung(points: Array, step: float) -> Array:
-    """A staircase path smoothed, its ends kept, and points strung along it about `step` apart."""
-    if len(points) < 3:
-        return points
-    smooth = ndimage.gaussian_filter1d(points, 2.0, axis=0, mode="nearest")
-    smooth[[0, -1]] = points[[0, -1]]
-    along = _arc_length(smooth)
-    count = max(2, round(float(along[-1]) / step) + 1)
-    at = np.linspace(0.0, along[-1], count)
-    return np.stack([np.interp(at, along, smooth[:, 0]), np.interp(at, along, smooth[:, 1])], axis=1)
+def _continued(trace: WakeTrace, circulation: Array) -> tuple[tuple[int, bool], ...]:
+    """Joints, with each ridge that has circulation left over hung on the nearest part of a stronger one."""
+    joints = list(trace.joint)
+    place = np.stack([trace.y, trace.z], axis=1)
+    trunks = [chain for chain, (on, _) in enumerate(joints) if on < 0]
+    for start, stop in list(pairwise([*trunks, len(joints)]))[1:]:
+        own = circulation[(trace.chain >= start) & (trace.chain < stop)]
+        if abs(own.sum()) < _UNBALANCED * np.abs(own).sum():
+            continue
+        earlier = np.flatnonzero(trace.chain < start)
+        ends = np.flatnonzero(trace.chain == start)[[0, -1]]
+        apart = np.hypot(*np.moveaxis(place[ends][:, None] - place[earlier], -1, 0))
+        end, nearest = np.unravel_index(np.argmin(apart), apart.shape)
+        on = int(earlier[nearest])
+        by_first = trace.y[on] <= trace.y[ends[0]] if ends[0] == ends[1] else end == 0
+        joints[start] = on, bool(by_first)
+    return tuple(joints)
+
+
+def _strung(points: Array, cell: float) -> Array:
+    """Points along a path smoothed with its ends kept, about a part's length apart."""
+    along = _arc_length(points)
+    if along[-1] < 0.5 * _PART * cell:
+        return points[[len(points) // 2]]
+
+    def evenly(points: Array, along: Array, step: float) -> Array:
+        at = np.linspace(0.0, along[-1], max(2, round(float(along[-1]) / step) + 1))
+        return np.stack([np.interp(at, along, points[:, k]) for k in (0, 1)], axis=1)
+
+    fine = evenly(points, along, cell / 2)
+    width = min(int(8 * _SMOOTHING), len(fine) - 1)
+    extended = np.pad(fine, ((width, width), (0, 0)), mode="reflect", reflect_type="odd")
+    smooth = ndimage.gaussian_filter1d(extended, 2 * _SMOOTHING, axis=0)[width:-width]
+    return evenly(smooth, _arc_length(smooth), _PART * cell)
 
 
 def _arc_length(points: Array) -> Array:
     return np.concatenate([[0.0], np.cumsum(np.hypot(*np.diff(points, axis=0).T))])
 
 
-def _nearest_part(points: Array, island: Index, labels: Index, grid: UniformGrid) -> Index:
+def _nearest_part(points: Array, cells: Mask, grid: UniformGrid) -> Index:
     """Part of each cell: the nearest point of the trace on the cell's own island, or of any where it has none."""
-    part = np.full(labels.shape, -1, dtype=np.int64)
-    for label in range(1, int(labels.max()) + 1):
+    labels, count = ndimage.label(cells, structure=np.ones((3, 3)))
+    row = np.clip(((points[:, 1] - grid.z0) / grid.dz).astype(int), 0, cells.shape[0] - 1)
+    column = np.clip(((points[:, 0] - grid.y0) / grid.dy).astype(int), 0, cells.shape[1] - 1)
+    island = labels[row, column]
+    part = np.full(cells.shape, -1, dtype=np.int64)
+    for label in range(1, count + 1):
         own = np.flatnonzero(island == label)
         candidates = own if own.size else np.arange(len(points))
         rows, columns = np.nonzero(labels == label)

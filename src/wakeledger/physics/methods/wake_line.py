@@ -198,8 +198,8 @@ def find_cuts(
     if not (np.isfinite(v).all() and np.isfinite(w).all()):
         raise ValueError(_NOT_FINITE)
     cells = _cells(mask)
-    circulation = np.where(cells, cell_circulation(v, w, grid), 0.0)
-    inner, enclosed = _enclosed(circulation, cells)
+    circulation = cell_circulation(v, w, grid)
+    inner, enclosed = _enclosed(np.where(cells, circulation, 0.0), cells)
     rows, columns = np.flatnonzero(inner.any(axis=1)), np.flatnonzero(inner.any(axis=0))
     box = (int(rows[0]), int(rows[-1]) + 1, int(columns[0]), int(columns[-1]) + 1)
     return WakeCuts(
@@ -427,7 +427,7 @@ def wake_line(
     cell_y, cell_z = _in_window(fields, fields.y, cuts), _in_window(fields, fields.z[:, None], cuts)
     trace = cuts.trace
     if trace is None:
-        trace = wake_trace(np.where(cuts.cells, cell_gamma, 0.0), cuts.cells, grid, loss=loss)
+        trace = wake_trace(cell_circulation(v, w, grid), cuts.cells, grid, loss=loss)
     circulation = trace.sums(cell_gamma)
     mean_psi = _part_mean(trace, cell_gamma, cell_psi)
     return WakeLine(

@@ -34,7 +34,7 @@ from wakeledger.run.checks import EDGE_CELLS
 from wakeledger.run.inputs import layouts, sources
 from wakeledger.run.inspection import recommendations
 from wakeledger.run.load import SurveyInput, refuse_unsupported
-from wakeledger.run.section_chain import (
+from wakeledger.run.section.chain import (
     METHODS,
     OUTPUTS,
     ROW,
@@ -43,10 +43,10 @@ from wakeledger.run.section_chain import (
     SectionSettings,
     SectionVariation,
 )
-from wakeledger.run.section_checks import SectionFacts, section_checks
-from wakeledger.run.section_notes import section_notes
-from wakeledger.run.section_state import SectionState, check_section_state
-from wakeledger.run.section_terms import LEVEL, section_terms
+from wakeledger.run.section.checks import SectionFacts, section_checks
+from wakeledger.run.section.notes import section_notes
+from wakeledger.run.section.state import SectionState, check_section_state
+from wakeledger.run.section.terms import LEVEL, section_terms
 from wakeledger.stream.reference import Reference
 
 if TYPE_CHECKING:

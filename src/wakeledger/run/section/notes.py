@@ -11,8 +11,8 @@ from wakeledger.core.flags import decode
 from wakeledger.physics.methods.section_drag import SectionDrag
 from wakeledger.physics.methods.section_kernels import jones, window_weights
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.section_chain import ROW, SectionChain, SectionReduction
-from wakeledger.run.section_state import SectionState
+from wakeledger.run.section.chain import ROW, SectionChain, SectionReduction
+from wakeledger.run.section.state import SectionState
 
 
 def section_notes(

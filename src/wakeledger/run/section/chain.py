@@ -18,7 +18,7 @@ from wakeledger.physics.fields.traverse_window import WakeWindow, edge_levels, o
 from wakeledger.physics.methods.section_drag import EdgeStatic
 from wakeledger.physics.methods.section_kernels import KERNELS, speed_at, static_at, total_at, window_weights
 from wakeledger.run.chain import coefficient_of, estimate_of
-from wakeledger.run.section_state import SectionState, section_state
+from wakeledger.run.section.state import SectionState, section_state
 from wakeledger.stream.reference import Reference, resolve_reference
 
 #: The row of a section, and what is held against it.

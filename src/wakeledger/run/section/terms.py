@@ -13,7 +13,7 @@ from wakeledger.core.errors import DataError
 from wakeledger.core.grid import Array
 from wakeledger.intake.gridding.line import Line
 from wakeledger.physics.methods.section_drag import SWEEP
-from wakeledger.run.section_chain import OUTPUTS, SectionChain, SectionReduction, SectionVariation
+from wakeledger.run.section.chain import OUTPUTS, SectionChain, SectionReduction, SectionVariation
 
 WINDOW = "edges of the wake"
 RESOLUTION = "spacing of the points"
@@ -84,7 +84,7 @@ def section_terms(
     Returns
     -------
     tuple of NumericalTerm
-        Over `wakeledger.run.section_chain.OUTPUTS`; terms that do not apply are left out.
+        Over `wakeledger.run.section.chain.OUTPUTS`; terms that do not apply are left out.
     """
     trials = _Trials(chain, nominal, noise, noise_share)
     terms = [_window_term(trials), _resolution_term(trials), _level_term(trials)]

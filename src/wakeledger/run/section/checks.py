@@ -12,7 +12,7 @@ from wakeledger.core.grid import Array
 from wakeledger.ledger.rows import Check
 from wakeledger.physics.methods.section_kernels import jones, total_at, window_weights
 from wakeledger.run.checks import EDGE_CELLS, LIMITS, verdict_of
-from wakeledger.run.section_chain import ROW, SectionReduction, SectionSettings
+from wakeledger.run.section.chain import ROW, SectionReduction, SectionSettings
 
 _SIDES = {"y": ("port", "starboard"), "z": ("lower", "upper")}
 _NO_PLANE = {
