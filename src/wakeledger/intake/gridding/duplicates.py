@@ -12,7 +12,7 @@ from wakeledger.intake.gridding.lattice import find_lattice
 
 #: Repeats that differ by more than this many standard deviations of their difference contradict each other.
 _CONTRADICTION = 8.0
-#: Least noise that is assumed, as a share of a variable's largest magnitude: the last digit of a table.
+#: Least noise that is assumed, as a share of a variable's range: the last digit of a table.
 _LEAST_NOISE = 1e-3
 _NEIGHBOURS = 8
 _TESTED_PLACES = 2000
