@@ -61,7 +61,7 @@ def check_duplicates(points: Points) -> None:
 
 
 def _range(values: Array) -> float:
-    """Range of nearly all values: a level common to all of them, as of absolute pressures, says nothing of their noise."""
+    """Range of nearly all values: a level common to them, as of absolute pressures, says nothing of their noise."""
     finite = values[np.isfinite(values)]
     return float(np.ptp(np.quantile(finite, [0.01, 0.99]))) if finite.size else 0.0
 

@@ -36,7 +36,8 @@ def crossflow_pressure(v: Array, w: Array, grid: UniformGrid, *, density: float)
     Returns
     -------
     ndarray, shape (..., nz, ny)
-        p − p∞; negative in a vortex core. Vorticity in the window's rim, ten cells, is left out. The axial disturbance of a body close by is not in it.
+        p − p∞; negative in a vortex core. Vorticity in the window's rim, ten cells, is left out, and so is
+        the axial disturbance of a body close by.
     """
     xi = axial_vorticity(v, w, grid)
     # One-sided differences are correlated with the value at their own place, so they would rectify noise.
