@@ -27,6 +27,9 @@ from wakeledger.run.chain import Chain, Reduction, estimate_of
 
 #: Drawn error fields of each source: for its variance, and for a bias that has no closed form.
 _DRAWS = 64
+#: Errors drawn of each independent source at most: 64 draws of 50 000 points, fewer of more, which tell as much.
+_MOST_ERRORS = 3_200_000
+_FEWEST_DRAWS = 4
 
 
 @dataclass(frozen=True)
@@ -86,16 +89,19 @@ def declared_noise(
     for source in sources:
         if source.effect == "systematic":
             continue
-        draws = SourceErrors(source, layouts, seed=seed).draw(0, _DRAWS)
+        correlation = _correlation(source, chain)
+        independent = correlation is not None and all(matrix is None for matrix in correlation)
+        count = _DRAWS
+        if independent:
+            count = min(_DRAWS, max(_FEWEST_DRAWS, _MOST_ERRORS // chain.points.n))
+        draws = SourceErrors(source, layouts, seed=seed).draw(0, count)
         states = [
-            chain.state(nominal.reference, {name: array[k] for name, array in draws.items()}) for k in range(_DRAWS)
+            chain.state(nominal.reference, {name: array[k] for name, array in draws.items()}) for k in range(count)
         ]
         errors = np.stack([[state.v for state in states] - still.v, [state.w for state in states] - still.w])
         if not np.nanmax(np.abs(errors)) > 0:
             continue
         inner, outer = _mean_square(errors[:, :, wake]), _mean_square(errors)
-        correlation = _correlation(source, chain)
-        independent = correlation is not None and all(matrix is None for matrix in correlation)
         fields = None if independent else chain.gridding.apply(np.nan_to_num(errors))
         found.append(Noise(source.name, inner, outer, correlation or (None, None), fields))
     return tuple(found)
@@ -155,10 +161,21 @@ def noise_bias(chain: Chain, nominal: Reduction, noises: Sequence[Noise]) -> dic
     wake line and the vortex sum, the mean over drawn noise fields stands in for the closed form.
     """
     total: dict[str, float] = {}
-    for noise in noises:
+    for noise in _white_together(noises):
         for name, value in _bias_of(chain, nominal, noise).items():
             total[name] = total.get(name, 0.0) + value
     return total
+
+
+def _white_together(noises: Sequence[Noise]) -> list[Noise]:
+    """White noises as one: their closed forms are linear in the variances, and each is costly on a large plane."""
+    white = [noise for noise in noises if noise.is_white and noise.fields is None]
+    others = [noise for noise in noises if not (noise.is_white and noise.fields is None)]
+    if not white:
+        return others
+    variance, outer = np.sum([(noise.variance, noise.outer_variance) for noise in white], axis=0)
+    name = ", ".join(noise.name for noise in white)
+    return [Noise(name, (variance[0], variance[1]), (outer[0], outer[1])), *others]
 
 
 def _bias_of(chain: Chain, nominal: Reduction, noise: Noise) -> dict[str, float]:
