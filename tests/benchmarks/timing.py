@@ -34,12 +34,18 @@ class Timing:
         return Timing(self.wall + other.wall, self.cpu + other.cpu)
 
 
+#: No measurement is repeated beyond this time, s.
+_ENOUGH = 4.0
+
+
 def timed(call: Callable[[], object], *, runs: int = 5, warm: bool = True) -> Timing:
     """Median wall and CPU time of a call; one run before them fills the caches unless `warm` is False."""
+    start = time.perf_counter()
     if warm:
         call()
-    wall, cpu = [], []
-    for _ in range(runs):
+    wall: list[float] = []
+    cpu: list[float] = []
+    while not wall or (len(wall) < runs and time.perf_counter() - start < _ENOUGH):
         busy, clock = time.process_time(), time.perf_counter()
         call()
         wall.append(time.perf_counter() - clock)
