@@ -39,6 +39,8 @@ __all__ = [
 #: deviations and by more than this share of the dynamic pressure.
 BAD_DEVIATIONS = 8.0
 BAD_PRESSURE = 0.01
+#: Largest typical error of a point's direction, as predicted by all others, as a share of the half range.
+_UNRELATED = 0.2
 #: Points closer than this are one direction, rad.
 SAME_DIRECTION = 1e-6
 #: Points belong to one set while their Mach numbers (or Reynolds numbers, relatively) follow each other this closely.
@@ -197,6 +199,7 @@ def _calibrate_set(table: CalibrationTable, members: NDArray[np.intp], level: fl
     left = fit.left_out.T[:, which]
     predicted = means[:, which] - left
     left_out = reading_errors(readings, predicted, (gradient[0], gradient[1]), image[:, which])
+    _refuse_unrelated(left_out, hull)
     residual = reading_errors(readings, model(image)[:, which], (gradient[0], gradient[1]), image[:, which])
     record = CalibrationSet(
         level=level,
@@ -223,6 +226,17 @@ def _calibrate_set(table: CalibrationTable, members: NDArray[np.intp], level: fl
         edge[which],
         covered[which],
     )
+
+
+def _refuse_unrelated(left_out: Array, hull: DirectionHull) -> None:
+    """Refuse a table whose pressures do not tell the direction."""
+    typical = float(np.median(np.hypot(left_out[0], left_out[1])))
+    if typical > _UNRELATED * 0.5 * float(np.max(np.ptp(hull.vertices, axis=0))):
+        raise DataError(
+            f"the hole pressures do not follow the flow direction: points are predicted by the others to "
+            f"{np.degrees(typical):.1f} deg only",
+            remedy="check which columns are the angles and the holes, and that their lines belong together",
+        )
 
 
 def _regional(model: HoleModel, directions: Array, left_out: Array, inner: NDArray[np.bool_], spacing: float) -> Array:
