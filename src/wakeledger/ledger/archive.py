@@ -156,7 +156,7 @@ def is_archive(path: str | os.PathLike[str]) -> bool:
 
 def _unwritable(target: Path, error: OSError | RuntimeError) -> DataError:
     reason = getattr(error, "strerror", None) or str(error)
-    if shutil.disk_usage(target.parent).free < _NO_SPACE:
+    if target.parent.is_dir() and shutil.disk_usage(target.parent).free < _NO_SPACE:
         reason = "no space is left on the device"
     return DataError(f"the archive cannot be written ({reason})", file=target, remedy="choose another place with --out")
 
