@@ -146,14 +146,15 @@ def test_tail_has_a_chain_of_its_own(wakes):
     assert line.lift == pytest.approx(DENSITY * SPEED * np.pi / 4 * (1 - 0.25 * 0.35), rel=2e-3)
 
 
-def test_branches_carry_their_circulation_to_the_chain_they_hang_on(wakes):
+def test_tail_in_the_same_region_has_a_chain_of_its_own(wakes):
     grid, v, w, mask = survey(wakes["with tail"])
+    assert ndimage.label(mask)[1] == 1
     line = wake_line(v, w, grid, DENSITY, SPEED, mask=mask)
-    assert line.chain.max() >= 1
     trunk = line.chain == 0
-    # The trunk's last value is minus everything, which is nothing.
-    assert line.bound_circulation[trunk][-1] == pytest.approx(0, abs=1e-6)
-    assert line.bound_circulation[trunk].max() == pytest.approx(1.0, rel=0.05)
+    # All of the wing's comes back to nothing, but for what of the tail's skirts lies nearer to it.
+    assert line.bound_circulation[trunk][-1] == pytest.approx(0, abs=1e-3)
+    assert line.bound_circulation[trunk].max() == pytest.approx(1.0, rel=0.02)
+    assert line.bound_circulation[~trunk].min() < -0.1
     assert line.circulation.sum() == pytest.approx(line.net_circulation, abs=1e-9)
 
 

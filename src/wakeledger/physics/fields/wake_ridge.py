@@ -21,11 +21,10 @@ Index = NDArray[np.int64]
 
 #: Standard deviation of the smoothing of the fields, and of the sum of their squares, in cells.
 _SMOOTHING, _CREASE = 1.25, 1.25
-#: A ridge stands so many standard deviations above the noise, its highest point so many.
-_LEVEL, _SEED = 4.0, 8.0
-#: Softens the logarithm near zero, in standard deviations.
-_SOFT = 0.5
-#: The same for data without noise, as fractions of the peak.
+#: Standard deviations by which a ridge stands above the noise, by which its highest point does, and which soften the
+#: logarithm near zero.
+_LEVEL, _SEED, _SOFT = 4.0, 8.0, 0.5
+#: The level for data without noise, as a fraction of the peak.
 _VORTICITY_FLOOR, _LOSS_FLOOR = 2e-3, 4e-3
 #: A median of magnitudes of normal noise is 0.6745 standard deviations, their 30 % quantile 0.3853.
 _MEDIAN_NORMAL, _QUANTILE, _QUANTILE_NORMAL = 0.674490, 0.30, 0.385320
@@ -40,11 +39,11 @@ _ROUND, _PASS = 0.5, 0.4
 #: deviations of its noise and this fraction.
 _DIP, _DIP_SHARE = 1.0, 0.1
 #: Length of such a step, in cells, per standard deviation by which the lower end stands out of the noise.
-_LEAP = 0.5
+_LEAP = 0.65
 #: Cosine of the angle within which a step across a change of sign follows the ridge.
 _STRAIGHT = 0.9
-#: Least share of the whole strength that a ridge of its own has, and how many points as high as its highest must be
-#: it amounts to at least.
+#: Least share of the whole strength that a ridge has, and least number of points as high as its highest must be to
+#: which it amounts.
 _SHARE, _BODY = 0.003, 6.0
 
 
@@ -57,8 +56,7 @@ class Ridges:
     place : ndarray, shape (points, 2)
         (y, z), m.
     height : ndarray, shape (points,)
-        ½ln(R² + ¼), R the root of the smoothed sum of the squares of loss and vorticity, each over its
-        noise.
+        ½ln(R² + ¼), R the root of the smoothed sum of the squares of loss and vorticity, each over its noise.
     reach : ndarray, shape (points,)
         Width a of the Gaussian exp(−n²/a²) that has the curvature of the field across the ridge, m.
     tree : csr_array, shape (points, points)
@@ -87,7 +85,7 @@ def find_ridges(circulation: Array, cells: Mask, grid: UniformGrid, *, loss: Arr
     grid : UniformGrid
         The grid.
     loss : ndarray, shape (nz, ny), optional
-        Total-pressure loss, Pa.
+        Total-pressure loss, Pa, finite.
 
     Returns
     -------
@@ -130,7 +128,7 @@ def _over_noise(field: Array, cells: Mask, floor: float) -> Array:
 
 @dataclass(frozen=True, eq=False)
 class _Crests:
-    """Cells that hold a maximum across the ridge, its place, the ridge's direction, curvature, roundness."""
+    """Points with a maximum across the ridge: their cells, places, the ridge's direction, curvature and roundness."""
 
     rows: Index
     columns: Index
@@ -141,19 +139,20 @@ class _Crests:
 
 
 def _crests(height: Array, where: Mask, grid: UniformGrid) -> _Crests:
-    by_z, by_y = np.gradient(height, grid.dz, grid.dy)
-    zz, zy = np.gradient(by_z, grid.dz, grid.dy)
-    yy = np.gradient(by_y, grid.dy, axis=1)
+    """The points of all ridges, one for each cell that holds one."""
     rows, columns = np.nonzero(where)
-    by_y, by_z, yy, zy, zz = (field[rows, columns] for field in (by_y, by_z, yy, zy, zz))
-    # Principal axes of the curvature: the lower eigenvalue and its direction.
+    slope_z, slope_y = np.gradient(height, grid.dz, axis=0), np.gradient(height, grid.dy, axis=1)
+    yy, zz = np.gradient(slope_y, grid.dy, axis=1), np.gradient(slope_z, grid.dz, axis=0)
+    zy = np.gradient(slope_z, grid.dy, axis=1)
+    slope_y, slope_z, yy, zy, zz = (np.asarray(d)[rows, columns] for d in (slope_y, slope_z, yy, zy, zz))
+    gradient = np.stack([slope_y, slope_z], axis=1)
+    # Principal axes of the curvature, the stronger downward one across the ridge.
     half, mean = (yy - zz) / 2, (yy + zz) / 2
     difference = np.hypot(half, zy)
     curvature, along = difference - mean, -difference - mean
     angle = np.arctan2(zy, half) / 2
     tangent = np.stack([np.cos(angle), np.sin(angle)], axis=1)
     normal = np.stack([-tangent[:, 1], tangent[:, 0]], axis=1)
-    gradient = np.stack([by_y, by_z], axis=1)
     nearest = _OFFSET * np.array([grid.dy, grid.dz])
 
     def step(direction: Array, curvature: Array) -> Array:
@@ -180,7 +179,8 @@ def _tree(crests: _Crests, strength: Array, vorticity: Array, deficit: Array, gr
     if n == 0:
         return sparse.csr_array((0, 0))
     cell = max(grid.dy, grid.dz)
-    first, second = spatial.cKDTree(place).query_pairs(_STEP * cell, output_type="ndarray").T
+    pairs = spatial.cKDTree(place).query_pairs(_STEP * cell, output_type="ndarray")
+    first, second = pairs[:, 0], pairs[:, 1]
     way = place[second] - place[first]
     length = np.hypot(*way.T)
     own = strength[crests.rows, crests.columns]
@@ -192,8 +192,8 @@ def _tree(crests: _Crests, strength: Array, vorticity: Array, deficit: Array, gr
     between = (place[first] + way * inner - (grid.y0, grid.z0)) / (grid.dy, grid.dz) - 0.5
     between = np.moveaxis(between[..., ::-1], -1, 0)
     dip = np.empty(len(first))
-    for pairs, field in ((~changes, strength), (changes, deficit)):
-        dip[pairs] = ndimage.map_coordinates(field, between[..., pairs], order=1, mode="nearest").min(axis=0)
+    for some, field in ((~changes, strength), (changes, deficit)):
+        dip[some] = ndimage.map_coordinates(field, between[..., some], order=1, mode="nearest").min(axis=0)
     joined = (dip >= (1 - _DIP_SHARE) * lower - _DIP) & (length <= _LEAP * cell * lower)
     for end in (first, second):
         changes &= ~crests.round_[end] & (np.abs((way * crests.tangent[end]).sum(axis=1)) >= _STRAIGHT * length)

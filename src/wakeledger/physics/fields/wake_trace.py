@@ -31,8 +31,10 @@ _MOST_BRANCHES = 8
 _SUMMIT = 4.0
 #: Distance between the ends of a ridge over its length below which it is closed, and the least length of such, cells.
 _CLOSED, _RING = 0.15, 30.0
+#: Distance over which the ends of a closed ridge are joined again after it was cut there, in cells.
+_GAP = 9.0
 #: How far the slopes of a vortex reach beyond those of a Gaussian of the same curvature, as a factor.
-_SLOPE = 1.25
+_SLOPE = 1.4
 #: Net circulation of a ridge over its gross from which it must go on somewhere beyond a gap.
 _UNBALANCED = 0.25
 
@@ -186,6 +188,8 @@ def _pieces(ridges: Ridges, cell: float) -> list[_Piece]:
             own[tip] = False
             free &= ~_on_slope(ridges, branch, cell)
             own &= free
+            if away[branch[0]] < _BRANCH * cell:
+                continue
             points = place[branch[::-1]]
             known = np.concatenate([piece.points for piece in chains])
             on = first_part + int(np.argmin(np.hypot(*(known - place[arm[0]]).T)))
@@ -237,21 +241,27 @@ def _trunk(points: Array, cell: float, first_part: int) -> list[_Piece]:
     gap = float(np.hypot(*(points[-1] - points[0])))
     if gap > _CLOSED * along[-1] or along[-1] < _RING * cell:
         return [_Piece(_strung(points, cell))]
-    one, other = sorted((int(np.argmin(points[:, 0])), int(np.argmax(points[:, 0]))))
+    one, other = sorted(_side(points * (sign, 1), cell) for sign in (-1, 1))
     across = points[one : other + 1]
     rest = [points[other:], points[: one + 1]]
-    if gap <= 2 * _PART * cell:
+    if gap <= _GAP * cell:
         rest = [np.concatenate(rest)]
     if points[one, 0] > points[other, 0]:
         across = across[::-1]
     else:
         rest = [way[::-1] for way in rest[::-1]]
-    strung = [_strung(way, cell) for way in (across, *rest) if len(way) > 1]
+    strung = [_strung(way, cell) for way in (across, *rest) if len(way) > 1 and _arc_length(way)[-1] > _PART * cell]
     pieces = [_Piece(way) for way in strung]
     if len(pieces) == 3:
         # The second surface is whole but for the gap where the ridge was cut.
         pieces[2] = _Piece(strung[2], first_part + len(strung[0]) + len(strung[1]) - 1, True)
     return pieces
+
+
+def _side(points: Array, cell: float) -> int:
+    """The point half way up the starboard side of a closed ridge."""
+    side = np.flatnonzero(points[:, 0] >= points[:, 0].max() - 2 * cell)
+    return int(side[np.argmin(np.abs(points[side, 1] - points[side, 1].mean()))])
 
 
 def _farthest(tree: sparse.csr_array, node: int, among: Mask) -> int:
@@ -281,18 +291,16 @@ def _continued(trace: WakeTrace, circulation: Array) -> tuple[tuple[int, bool], 
         earlier = np.flatnonzero(trace.chain < start)
         ends = np.flatnonzero(trace.chain == start)[[0, -1]]
         apart = np.hypot(*np.moveaxis(place[ends][:, None] - place[earlier], -1, 0))
-        end, nearest = np.unravel_index(np.argmin(apart), apart.shape)
-        on = int(earlier[nearest])
-        by_first = trace.y[on] <= trace.y[ends[0]] if ends[0] == ends[1] else end == 0
-        joints[start] = on, bool(by_first)
+        on = int(earlier[np.argmin(apart.min(axis=0))])
+        joints[start] = on, bool(trace.y[on] <= trace.y[ends].mean())
     return tuple(joints)
 
 
 def _strung(points: Array, cell: float) -> Array:
     """Points along a path smoothed with its ends kept, about a part's length apart."""
     along = _arc_length(points)
-    if along[-1] < 0.5 * _PART * cell:
-        return points[[len(points) // 2]]
+    if along[-1] < _PART * cell:
+        return np.asarray(points.mean(axis=0, keepdims=True))
 
     def evenly(points: Array, along: Array, step: float) -> Array:
         at = np.linspace(0.0, along[-1], max(2, round(float(along[-1]) / step) + 1))
