@@ -99,7 +99,7 @@ def test_cone_and_roll_as_a_probe_pitched_up_then_rolled():
 
 
 def test_five_hole_coefficients_are_those_published():
-    # Treaster & Yocum (1979), definitions; the numbers are worked by hand. Port 60 above starboard, lower 20 above upper.
+    # Treaster & Yocum (1979), definitions; worked by hand. Port reads 60 above starboard, lower 20 above upper.
     holes = np.array([[100.0], [70.0], [10.0], [40.0], [20.0]])
     found = coefficients(holes, np.array([104.0]), np.array([5.0]))
     mean, d = 35.0, 65.0
@@ -213,7 +213,9 @@ def test_displaced_holes_unequal_sensitivities_and_an_irregular_table(holes):
 
 
 def test_large_cone_of_a_seven_hole_probe_is_read_in_its_outer_sectors():
-    cone, roll = (np.ravel(a) for a in np.meshgrid(np.radians(np.arange(5.0, 51.0, 5.0)), np.radians(np.arange(0, 360, 12))))
+    cone, roll = (
+        np.ravel(a) for a in np.meshgrid(np.radians(np.arange(5.0, 51.0, 5.0)), np.radians(np.arange(0, 360, 12)))
+    )
     pitch, yaw = angles(direction_from_cone(np.append(cone, 0.0), np.append(roll, 0.0)))
     calibration = calibrate(table(ideal(7), pitch, yaw))
     assert set(calibration.coefficients.sector) == set(range(7))
@@ -230,9 +232,9 @@ def test_noise_of_the_table_shows_in_the_uncertainty_and_is_smoothed():
     noise = 0.002
     calibration = calibrate(table(ideal(5), *grid(), noise=noise, rng=rng))
     assert not calibration.bad.any()
-    reading, apart, _, errors = read_back(calibration, ideal(5), *np.radians(rng.uniform(-28, 28, (2, 4000))))
+    reading, _, _, errors = read_back(calibration, ideal(5), *np.radians(rng.uniform(-28, 28, (2, 4000))))
     pitch, _, total, _ = calibration.standard_uncertainty()
-    # p4 - p5 changes by 2 u w 9/4 q: 4.5 q per rad near the axis, so noise of each hole is about sqrt(2)/4.5 of an angle.
+    # p4 - p5 = (9/4) 2 u w q changes by 4.5 q per rad near the axis: noise of both holes is sqrt(2)/4.5 of it in angle.
     single = noise * np.sqrt(2.0) / 4.5
     assert 0.8 * single < pitch < 2.5 * single
     assert noise * 0.7 < total < noise * 2
