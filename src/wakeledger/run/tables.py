@@ -166,7 +166,8 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
         "tensor": f"resampled by cubic splines to {1e3 * grid.dy:.3g} mm x {1e3 * grid.dz:.3g} mm",
         "scattered": f"interpolated to {1e3 * grid.dy:.3g} mm x {1e3 * grid.dz:.3g} mm",
     }
-    found = [f"{survey.points.n} points on a {gridding.kind} grid, {ways[gridding.kind]} ({grid.ny} x {grid.nz})."]
+    arranged = "scattered points" if gridding.kind == "scattered" else f"points on a {gridding.kind} grid"
+    found = [f"{survey.points.n} {arranged}, {ways[gridding.kind]} ({grid.ny} x {grid.nz})."]
     counts = decode(gridding.flag)
     beyond = np.count_nonzero(
         (survey.points.y < grid.y[0] - grid.dy)
@@ -180,12 +181,14 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
             f" {grid.y[-1]:.4g} m, z {grid.z[0]:.4g} to {grid.z[-1]:.4g} m; {beyond} points lie outside it."
         )
     if gridding.filled.any():
-        found.append(f"{int(gridding.filled.sum())} places without a usable point were filled from their neighbours.")
+        number = int(gridding.filled.sum())
+        whose = "its" if number == 1 else "their"
+        found.append(f"{_places(number)} without a usable point {_were(number)} filled from {whose} neighbours.")
     if counts["averaged"]:
-        found.append(f"{counts['averaged']} places were measured more than once and averaged.")
+        found.append(f"{_places(counts['averaged'])} {_were(counts['averaged'])} measured more than once and averaged.")
     impossible = int(np.count_nonzero(nonphysical(state)))
     if impossible:
-        found.append(f"{impossible} points have no real flow state and count as missing.")
+        found.append(f"{_places(impossible, 'point')} without a real flow state {_were(impossible)} taken as missing.")
     grow = default_grow(gridding) if chain.settings.grow is None else chain.settings.grow
     found.append(
         f"The wake region is bounded at {chain.settings.level:g} times the noise of the smoothed loss and vorticity and"
@@ -214,6 +217,14 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
             " there entropy_area takes the flow as brought to rest."
         )
     return found
+
+
+def _places(number: int, thing: str = "place") -> str:
+    return f"{number} {thing}" if number == 1 else f"{number} {thing}s"
+
+
+def _were(number: int) -> str:
+    return "was" if number == 1 else "were"
 
 
 def _counts(force: float, nominal: Reduction, chain: Chain) -> str:

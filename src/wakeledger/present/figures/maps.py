@@ -216,15 +216,16 @@ def _hatch(axes: Axes, grid: UniformGrid, cells: NDArray[np.bool_]) -> None:
 def _arrows(axes: Axes, ledger: Ledger) -> None:
     plane = ledger.plane
     grid = grid_of(plane)
-    step = max(1, round(max(grid.ny * grid.dy, grid.nz * grid.dz) / ARROWS / min(grid.dy, grid.dz)))
+    apart = max(grid.ny * grid.dy, grid.nz * grid.dz) / ARROWS
+    along_y = min(max(1, round(apart / grid.dy)), grid.ny)
+    along_z = min(max(1, round(apart / grid.dz)), grid.nz)
     y, z = grid.mesh()
-    first = step // 2
-    some = (slice(first, None, step), slice(first, None, step))
+    some = (slice(along_z // 2, None, along_z), slice(along_y // 2, None, along_y))
     v, w = plane["v"].values[some], plane["w"].values[some]
     typical = float(np.nanpercentile(np.hypot(v, w), 98))
     if not typical > 0:
         return
-    spacing = step * min(grid.dy, grid.dz)
+    spacing = min(along_y * grid.dy, along_z * grid.dz)
     arrows = axes.quiver(
         y[some], z[some], v, w, angles="xy", scale_units="xy", scale=typical / (1.6 * spacing), color=INK,
         width=0.0016, alpha=0.85, zorder=2.5,
