@@ -19,9 +19,10 @@ from wakeledger.confidence.montecarlo import run as run_montecarlo
 from wakeledger.physics.fields.poisson import stream_function
 from wakeledger.run.chain import OUTPUTS, Chain, Frozen
 from wakeledger.run.config import parse_survey
+from wakeledger.run.gridded import Regrid, find_vortices, settings_of
 from wakeledger.run.load import SurveyInput, load
 from wakeledger.run.noise import noise_bias, white_noise
-from wakeledger.run.survey import Regrid, _line, _vortices, inspect, prepare, settings_of
+from wakeledger.run.survey import _line, inspect, prepare
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import Errors, Recording, grid_positions, record, wing_wake
 
@@ -52,7 +53,7 @@ def large_plane() -> list[Result]:
     first = chain.reduce(estimates=False)
     grid = first.flow.grid
     solve = timed(lambda: stream_function(first.vorticity, grid), runs=7)
-    parts, _ = _vortices(first, chain.settings)
+    parts, _ = find_vortices(first, chain.settings)
     line = _line(first)
     near = chain.near_field(first.vorticity, grid)
     chain = replace(chain, frozen=Frozen(near, line.cuts if line.reason is None else None, parts))
@@ -62,7 +63,7 @@ def large_plane() -> list[Result]:
     one_pass = timed(lambda: chain.reduce(), runs=5)
     points_to_plane = timed(lambda: chain.flow(reference), runs=3)
     bias = timed(lambda: noise_bias(chain, nominal, noise), runs=3)
-    geometry = timed(lambda: (_vortices(first, chain.settings), _line(first)), runs=1, warm=False)
+    geometry = timed(lambda: (find_vortices(first, chain.settings), _line(first)), runs=1, warm=False)
     del state
     size = "512 x 1024 plane"
     return [

@@ -15,34 +15,39 @@ from wakeledger.ledger.rows import Check
 from wakeledger.run import tables
 from wakeledger.run.chain import Chain, Reduction
 from wakeledger.run.checks import EDGE_CELLS, Facts, all_checks
+from wakeledger.run.gridded import Gridded, core_spacings
 from wakeledger.run.load import SurveyInput
 
 #: Checks whose value needs the noise bias or a reduction's uncertainty; they are left to `reduce`.
 _LATER = frozenset({"noise_bias"})
 
 
-def inspection_of(
-    survey: SurveyInput, chain: Chain, nominal: Reduction, facts: Facts, notes: tuple[str, ...]
-) -> Inspection:
-    """What can be said of a survey from its grid and one pass through the chain.
+def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
+    """What can be said of an area survey from its grid and one pass through the chain.
 
     Parameters
     ----------
     survey : SurveyInput
         The survey.
-    chain : Chain
+    gridded : Gridded
         It on its grid.
-    nominal : Reduction
-        One pass through the chain, with its cross-checks.
-    facts : Facts
-        What the checks need to know.
-    notes : tuple of str
-        Sentences about the choices made.
 
     Returns
     -------
     Inspection
     """
+    chain = gridded.chain
+    nominal = chain.reduce(geometric=False)
+    vortices = gridded.vortices.vortices
+    facts = Facts(
+        vortices=vortices,
+        raw_spacing=max(chain.gridding.raw_spacing),
+        filled=chain.gridding.filled,
+        bias=math.nan,
+        loss_zero_uncertainty=math.nan,
+        spacings=core_spacings(chain, vortices),
+    )
+    notes = (*survey.survey.notes(), *tables.notes(survey, chain, nominal, gridded.state))
     gridding, grid = chain.gridding, chain.gridding.grid
     checks = tuple(check for check in all_checks(nominal, facts) if check.name not in _LATER)
     return Inspection(

@@ -14,22 +14,17 @@ from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.confidence.terms import NumericalTerm, add_terms
-from wakeledger.core.errors import InputError, SurveyError
+from wakeledger.core.errors import InputError
 from wakeledger.core.grid import Array
-from wakeledger.intake.gridding import Gridding, check_duplicates, make_gridding
-from wakeledger.intake.gridding.lattice import find_lattice
-from wakeledger.intake.gridding.window import covered_window
-from wakeledger.intake.state import check_state
 from wakeledger.ledger.inspection import Inspection
 from wakeledger.ledger.rows import CrossCheck, Ledger, Row
 from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
-from wakeledger.physics.fields.wake_region import region_of
 from wakeledger.physics.loading.span import span_loading
 from wakeledger.physics.methods.energy_area import crossflow_energy
 from wakeledger.physics.methods.entropy_area import expansion_doubt
 from wakeledger.physics.methods.wake_line import WakeLine, path_scatter, wake_line
 from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
-from wakeledger.physics.vortices.vortex_sum import VortexSum, WakeParts, find_parts, summarise
+from wakeledger.physics.vortices.vortex_sum import VortexSum
 from wakeledger.run import tables
 from wakeledger.run.assembly import NO_SOURCE, budget_lines, comparisons, cross_check, ledger_row, require_rows
 from wakeledger.run.chain import (
@@ -39,26 +34,21 @@ from wakeledger.run.chain import (
     Chain,
     Frozen,
     Reduction,
-    Settings,
     estimate_of,
 )
 from wakeledger.run.checks import Facts, all_checks
+from wakeledger.run.gridded import Regrid, core_spacings, grid_survey, usable_points
 from wakeledger.run.inputs import gradients, layouts, sources
-from wakeledger.run.inspection import inspection_of
+from wakeledger.run.inspection import inspect_plane
 from wakeledger.run.load import SurveyInput, load, refuse_unsupported
 from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
 from wakeledger.run.numerics import numerical_terms
 from wakeledger.run.section.survey import inspect_section, reduce_section
-from wakeledger.stream.reference import Reference
 
 __all__ = ["SurveyInput", "inspect", "load", "prepare", "reduce"]
 
 Progress = Callable[[int, int], None]
 
-#: Points per core length that the plane is resampled to where its own points are uneven.
-POINTS_PER_CORE = 2.0
-#: Most cells of a resampled plane.
-MOST_CELLS = 120_000
 #: Draws that tell the wake region's own effect from that of noise.
 _NOISE_DRAWS = 16
 _NO_WAKE = "no wake was found, and what the noise may hide is unknown"
@@ -164,8 +154,11 @@ def inspect(survey: SurveyInput) -> Inspection:
     """
     if survey.survey.section is not None:
         return inspect_section(survey)
-    prepared = prepare(survey)
-    return inspection_of(survey, prepared.chain, prepared.nominal, _facts(prepared), prepared.notes)
+    refuse_unsupported(survey.survey)
+    try:
+        return inspect_plane(survey, grid_survey(survey, quick=True))
+    except InputError as error:
+        raise error.located(file=survey.points.source) from error
 
 
 def prepare(survey: SurveyInput) -> Prepared:
@@ -192,60 +185,14 @@ def prepare(survey: SurveyInput) -> Prepared:
         raise error.located(file=survey.points.source) from error
 
 
-def settings_of(survey: SurveyInput, reference: Reference) -> Settings:
-    """The chain's settings from the survey file."""
-    file, plane = survey.survey, survey.survey.plane
-    model = file.model
-    quarter_chord = None if model is None else model.quarter_chord()
-    axes = plane.axes
-    return Settings(
-        reference=file.reference.given(),
-        compressible=reference.compressible,
-        primary=plane.primary,
-        offsets=(axes.pitch_offset, axes.yaw_offset, axes.roll_offset),
-        station=plane.station,
-        bound_line=math.inf if quarter_chord is None else quarter_chord,
-        reference_area=math.nan if model is None else model.reference_area,
-        span=math.nan if model is None or model.span is None else model.span,
-        moment_centre=(0.0, 0.0) if model is None or model.moment_centre is None else model.moment_centre,
-        level=file.wake.level if file.wake.level is not None else Settings.level,
-        grow=file.wake.grow,
-        include=tuple(file.wake.include),
-        exclude=tuple(file.wake.exclude),
-    )
-
-
 def _prepare(survey: SurveyInput) -> Prepared:
     file, points = survey.survey, survey.points
-    reference = file.reference.resolve()
-    settings = settings_of(survey, reference)
-    check_duplicates(points)
-    empty = Chain(points, None, settings)  # type: ignore[arg-type]
-    state = empty.state(reference)
-    check_state(state, points=points, reference=reference)
-    usable = np.isfinite(state.u) & np.isfinite(state.v) & np.isfinite(state.w)
-    for pressure in (state.total_pressure, state.static_pressure):
-        if pressure is not None:
-            usable &= np.isfinite(pressure)
-    regrid = Regrid(points.y, points.z, usable, points.row)
-    gridding = regrid()
-    if settings.exclude and region_of(settings.exclude, gridding.grid).all():
-        raise SurveyError(
-            "the shapes cover the whole window", file=file.path, place="[wake] exclude", remedy="leave some of it free"
-        )
-    chain = Chain(points, gridding, settings)
-    first = chain.reduce(estimates=False)
-    parts, vortices = _vortices(first, settings)
-    if gridding.kind != "uniform" and vortices.vortices:
-        finer = min(vortex.core_radius for vortex in vortices.vortices) / POINTS_PER_CORE
-        if finer < 0.98 * max(gridding.grid.dy, gridding.grid.dz):
-            gridding = regrid(spacing=(min(finer, gridding.grid.dy), min(finer, gridding.grid.dz)))
-            chain = Chain(points, gridding, settings)
-            first = chain.reduce(estimates=False)
-            parts, vortices = _vortices(first, settings)
+    gridded = grid_survey(survey)
+    chain, first, vortices = gridded.chain, gridded.first, gridded.vortices
+    reference, gridding = first.reference, chain.gridding
     near_field = chain.near_field(first.vorticity, first.flow.grid)
     line = _line(first)
-    kept = None if math.isnan(vortices.induced_drag) else parts
+    kept = None if math.isnan(vortices.induced_drag) else gridded.parts
     chain = replace(chain, frozen=Frozen(near_field, line.cuts if line.reason is None else None, kept))
     declared = sources(file, points, reference)
     names = sorted({name for source in declared for name in source.applies_to})
@@ -267,38 +214,8 @@ def _prepare(survey: SurveyInput) -> Prepared:
         near_field=near_field,
     )
     expected = _expected(chain, nominal)
-    notes = (*file.notes(), *tables.notes(survey, chain, nominal, state), *noise_notes)
+    notes = (*file.notes(), *tables.notes(survey, chain, nominal, gridded.state), *noise_notes)
     return Prepared(chain, nominal, outer, line, vortices, expected, declared, inputs, noises, notes)
-
-
-@dataclass(frozen=True)
-class Regrid:
-    """Makes griddings of the same points with one choice made differently."""
-
-    y: Array
-    z: Array
-    usable: np.ndarray[tuple[int], np.dtype[np.bool_]]
-    row: np.ndarray[tuple[int], np.dtype[np.int64]] | None
-
-    def __call__(
-        self,
-        *,
-        usable: np.ndarray[tuple[int], np.dtype[np.bool_]] | None = None,
-        spacing: tuple[float, float] | None = None,
-        degree: int = 3,
-    ) -> Gridding:
-        """Gridding with other usable points, another largest spacing (along y and z, m) or another spline degree."""
-        chosen = self.usable if usable is None else usable
-        return covered_window(
-            make_gridding(self.y, self.z, chosen, row=self.row, spacing=spacing, degree=degree, max_cells=MOST_CELLS)
-        )
-
-
-def _vortices(nominal: Reduction, settings: Settings) -> tuple[WakeParts, VortexSum]:
-    flow = nominal.flow
-    excluded = region_of(settings.exclude, flow.grid) if settings.exclude else None
-    parts = find_parts(flow.v, flow.w, flow.grid, mask=nominal.region.mask, excluded=excluded, u=flow.u)
-    return parts, summarise(parts, flow.v, flow.w, nominal.reference.density)
 
 
 def _line(nominal: Reduction) -> WakeLine:
@@ -364,11 +281,7 @@ def _expected(chain: Chain, nominal: Reduction) -> dict[str, float]:
 
 def _terms(prepared: Prepared, survey: SurveyInput) -> tuple[NumericalTerm, ...]:
     points = survey.points
-    state = prepared.chain.state(prepared.nominal.reference)
-    usable = np.isfinite(state.u) & np.isfinite(state.v) & np.isfinite(state.w)
-    for pressure in (state.total_pressure, state.static_pressure):
-        if pressure is not None:
-            usable &= np.isfinite(pressure)
+    usable = usable_points(prepared.chain.state(prepared.nominal.reference))
     return numerical_terms(
         prepared.chain,
         prepared.nominal,
@@ -492,22 +405,8 @@ def _facts(prepared: Prepared) -> Facts:
         filled=prepared.chain.gridding.filled,
         bias=prepared.chain.frozen.bias.get("induced_drag", math.nan),
         loss_zero_uncertainty=prepared.outer.loss_zero_uncertainty,
-        spacings=_spacings(prepared),
+        spacings=core_spacings(prepared.chain, prepared.vortices.vortices),
     )
-
-
-def _spacings(prepared: Prepared) -> tuple[float, ...]:
-    """Larger of the points' spacings about each vortex, m; empty where the points stand evenly or on no lines."""
-    points = prepared.chain.points
-    lattice = find_lattice(points.y, points.z) if prepared.chain.gridding.kind == "tensor" else None
-    if lattice is None:
-        return ()
-
-    def about(lines: Array, place: float) -> float:
-        upper = min(max(int(np.searchsorted(lines, place)), 1), lines.size - 1)
-        return float(lines[upper] - lines[upper - 1])
-
-    return tuple(max(about(lattice.y, vortex.y), about(lattice.z, vortex.z)) for vortex in prepared.vortices.vortices)
 
 
 def _crosschecks(
