@@ -20,7 +20,7 @@ import numpy as np
 
 from wakeledger.core.grid import UniformGrid
 from wakeledger.physics.fields.differences import axial_vorticity
-from wakeledger.physics.fields.lifting_line import near_field_crossflow
+from wakeledger.physics.fields.lifting_line import near_field
 from wakeledger.physics.fields.poisson import stream_function
 from wakeledger.physics.methods.energy_area import crossflow_energy
 from wakeledger.physics.methods.wake_line import wake_line
@@ -160,7 +160,7 @@ def station_excess(stations: tuple[float, ...] = STATIONS) -> Iterator[tuple[flo
         _, v, w = line.velocity_on(x, grid)
         xi = np.where(inside(elements, grid), axial_vorticity(v, w, grid), 0.0)
         energy = float(crossflow_energy(v, w, grid, density=RHO))
-        near_v, near_w = near_field_crossflow(xi, grid, distance=x)
+        near_v, near_w, _ = near_field(xi, grid, distance=x)
         far = float(crossflow_energy(v - near_v, w - near_w, grid, density=RHO))
         yield x, vorticity_form(xi, grid) / exact - 1, energy / exact - 1, (energy - far) / exact
 

@@ -21,12 +21,13 @@ from wakeledger.core.units import UnitError, to_si
 from wakeledger.ledger.crosscheck import COVERAGE_FACTOR
 from wakeledger.ledger.encoding import group_names
 from wakeledger.ledger.rows import CHECK_VERDICTS, VERDICTS
-from wakeledger.run import chain, checks, numerics, section_terms, tables
+from wakeledger.run import chain, checks, numerics, tables
 from wakeledger.run.config import plane as plane_tables
 from wakeledger.run.config import stream, uncertainty
 from wakeledger.run.config import tables as small_tables
 from wakeledger.run.config.survey import Survey, parse_survey
 from wakeledger.run.load import refuse_unsupported
+from wakeledger.run.section import terms as section_terms
 
 ROOT = Path(__file__).resolve().parents[1]
 DOCS = ROOT / "docs"

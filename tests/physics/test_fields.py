@@ -8,7 +8,7 @@ from hypothesis import strategies as st
 from wakeledger.core.grid import UniformGrid
 from wakeledger.physics.fields.differences import axial_vorticity, crossflow_divergence, ddy, ddz
 from wakeledger.physics.fields.edge import edge_integrals
-from wakeledger.physics.fields.lifting_line import near_field_crossflow
+from wakeledger.physics.fields.lifting_line import near_field
 from wakeledger.physics.fields.poisson import stream_function, velocity_potential
 from wakeledger.physics.fields.pressure import crossflow_pressure
 from wakeledger.synthetic.elements import GaussianElements, vortex_pair
@@ -186,19 +186,20 @@ def test_crossflow_energy_closed_at_the_edge_is_the_whole_planes(half_width, hal
     assert closed == pytest.approx(exact, rel=1e-5)
 
 
-def test_near_field_crossflow_equals_the_three_dimensional_lifting_line():
+def test_near_field_equals_the_three_dimensional_lifting_line():
     core = 0.03
     wake = shed("elliptic", straight_edge(1.0), n=120, core=core, peak=1.0)
     grid = window(core / 2, 0.9, 0.4)
     line = LiftingLine(wake)
     v2, w2 = wake.velocity_on(grid)
     for distance in (0.25, 0.6, 2.0):
-        _, v3, w3 = line.velocity_on(distance, grid)
-        dv, dw = near_field_crossflow(wake.vorticity_on(grid), grid, distance=distance)
+        u3, v3, w3 = line.velocity_on(distance, grid)
+        dv, dw, du = near_field(wake.vorticity_on(grid), grid, distance=distance)
         scale = np.abs(w3 - w2).max()
         # Cumulative sums of the vorticity are second order in h, and the bound line is smeared over the core: (a/X)².
         assert np.abs(dw - (w3 - w2)).max() < max(2e-3, 2 * (core / distance) ** 2) * scale
         assert np.abs(dv - (v3 - v2)).max() < max(2e-3, 2 * (core / distance) ** 2) * scale
+        assert np.abs(du - u3).max() < max(2e-3, 2 * (core / distance) ** 2) * np.abs(u3).max()
         assert (w3 - w2)[grid.nz // 2, grid.ny // 2] * dw[grid.nz // 2, grid.ny // 2] > 0
 
 
@@ -210,12 +211,13 @@ def test_near_field_of_a_v_shaped_wing_closes_over_the_rows():
     grid = window(core / 2, 0.9, 0.4)
     line = LiftingLine(wake)
     v2, w2 = wake.velocity_on(grid)
-    _, v3, w3 = line.velocity_on(0.6, grid)
-    dv, dw = near_field_crossflow(wake.vorticity_on(grid), grid, distance=0.6)
+    u3, v3, w3 = line.velocity_on(0.6, grid)
+    dv, dw, du = near_field(wake.vorticity_on(grid), grid, distance=0.6)
     scale = np.abs(w3 - w2).max()
     # The bound line's path between the legs is a choice (along y, then up the centre): worth a few percent here.
     assert np.abs(dw - (w3 - w2)).max() < 0.06 * scale
     assert np.abs(dv - (v3 - v2)).max() < 0.06 * scale
+    assert np.abs(du - u3).max() < 0.06 * np.abs(u3).max()
 
 
 @settings(max_examples=15, deadline=None)

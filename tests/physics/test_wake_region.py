@@ -5,7 +5,7 @@ import pytest
 
 from wakeledger.core.grid import UniformGrid
 from wakeledger.physics.fields.differences import axial_vorticity
-from wakeledger.physics.fields.lifting_line import near_field_crossflow
+from wakeledger.physics.fields.lifting_line import near_field
 from wakeledger.physics.fields.outer_flow import outer_flow
 from wakeledger.physics.fields.poisson import stream_function
 from wakeledger.physics.fields.wake_region import region_of, wake_region
@@ -139,7 +139,7 @@ def test_outer_flow_tells_upwash_of_the_bound_vortex_from_an_offset():
     mask = wake_region(loss, xi, GRID).mask
     inside = np.where(mask, xi, 0.0)
     psi = stream_function(inside, GRID)
-    predicted = near_field_crossflow(inside, GRID, distance=0.42)
+    predicted = near_field(inside, GRID, distance=0.42)
     nothing = (np.zeros(GRID.shape), np.zeros(GRID.shape))
     with_it = outer_flow(loss, state.v, state.w, psi, GRID, mask=mask, near_field=predicted)
     without = outer_flow(loss, state.v, state.w, psi, GRID, mask=mask, near_field=nothing)

@@ -22,7 +22,7 @@ from wakeledger.intake.gridding import Gridding
 from wakeledger.intake.state import State, point_state
 from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.flow import Flow
-from wakeledger.physics.fields.lifting_line import near_field_crossflow
+from wakeledger.physics.fields.lifting_line import NearField, near_field
 from wakeledger.physics.fields.outer_flow import crossflow_offset, induced_crossflow, loss_zero
 from wakeledger.physics.fields.pressure import crossflow_pressure
 from wakeledger.physics.fields.wake_region import Mask, WakeRegion, region_of, wake_region
@@ -127,8 +127,8 @@ class Frozen:
 
     Attributes
     ----------
-    near_field : (ndarray, ndarray) or None
-        Crossflow of the bound vortex at the plane, m/s.
+    near_field : NearField or None
+        Disturbance of the bound vortex at the plane, m/s.
     cuts : WakeCuts or None
         How the wake line cuts the wake.
     parts : WakeParts or None
@@ -145,7 +145,7 @@ class Frozen:
     errors (docs/coverage.md). What the choice of the edge itself is worth is a numerical term.
     """
 
-    near_field: tuple[Array, Array] | None = None
+    near_field: NearField | None = None
     cuts: WakeCuts | None = None
     parts: WakeParts | None = None
     region: Mask | None = None
@@ -328,9 +328,13 @@ class Chain:
                 density = apply(state.density)
                 warming = (u**2 + v**2 + w**2) / (2 * reference.heat_capacity)
                 total_temperature = apply(state.temperature) + warming
+                if self.settings.primary == "velocity" and measured_total is not None:
+                    static = total * (1 - warming / total_temperature) ** (
+                        reference.heat_capacity / reference.gas_constant
+                    )
+                    density = static / (reference.gas_constant * (total_temperature - warming))
             else:
-                square = 2 * (total - static) / reference.density - v**2 - w**2
-                u = np.where(square > 0, np.sqrt(np.maximum(square, 0.0)), u)
+                u = _axial(2 * (total - static) / reference.density - v**2 - w**2, u)
         else:
             kinetic = 0.5 * reference.density * (u**2 + v**2 + w**2)
             # A measured total pressure comes first: a biased static pressure then costs almost nothing.
@@ -384,7 +388,10 @@ class Chain:
         forces = vorticity_forces(vorticity, grid, reference, moment_centre=settings.moment_centre)
         loss_free = loss_free_axial_velocity(flow, reference)
         integrand = np.where(mask, profile_integrand(flow, reference, loss_free), 0.0)
-        divergence_part, axial_part = residual_drag(flow, reference, loss_free, mask)
+        near = self.frozen.near_field
+        if near is None:
+            near = self.near_field(vorticity, grid)
+        divergence_part, axial_part = residual_drag(flow, reference, loss_free, mask, near=near)
         bias = self.frozen.bias
         profile = float(grid.integrate(integrand))
         induced = float(forces.induced_drag) - bias.get("induced_drag", 0.0)
@@ -409,7 +416,7 @@ class Chain:
                 values[coefficient_of(row)] = values[row] / (q * area * (span if row == "rolling_moment" else 1.0))
         offset, invalid = (0.0, 0.0), 0.0
         if estimates:
-            offset, invalid = self._estimate(values, flow, reference, region, vorticity, forces, vary, geometric)
+            offset, invalid = self._estimate(values, flow, reference, region, forces, near, vary, geometric)
         return Reduction(
             reference,
             flow,
@@ -498,12 +505,43 @@ class Chain:
         )
 
     def _zeroed(self, flow: Flow, reference: Reference, zero: float) -> Flow:
+        """The plane with its total pressure raised by a constant, and what depends on it following.
+
+        A measured speed stays, and a static pressure that rests on the total one follows; where the speed itself comes
+        from the pressures, it follows, at the same static pressure and the same measured, else total, temperature.
+        """
         total = flow.total_pressure + zero
-        if self.settings.primary != "total_pressure" or reference.compressible:
-            return replace(flow, total_pressure=total)
-        square = 2 * (total - flow.static_pressure) / reference.density - flow.v**2 - flow.w**2
-        u = np.where(square > 0, np.sqrt(np.maximum(square, 0.0)), flow.u)
-        return replace(flow, total_pressure=total, u=u)
+        raised = total / flow.total_pressure
+        if self.settings.primary == "velocity":
+            if not reference.compressible:
+                implied = zero if "total_pressure" in self.points.channels else 0.0
+                return replace(flow, total_pressure=total, static_pressure=flow.static_pressure + implied)
+            return replace(
+                flow,
+                total_pressure=total,
+                static_pressure=flow.static_pressure * raised,
+                density=flow.density * raised,
+            )
+        crossflow = flow.v**2 + flow.w**2
+        if not reference.compressible:
+            square = 2 * (total - flow.static_pressure) / reference.density - crossflow
+            return replace(flow, total_pressure=total, u=_axial(square, flow.u))
+        exponent = reference.gas_constant / reference.heat_capacity
+        ratio = np.maximum(total / flow.static_pressure, 1.0) ** exponent
+        if {"temperature", "density"} & set(self.points.channels):
+            # The static temperature was measured and stays.
+            temperature = flow.static_pressure / (reference.gas_constant * flow.density)
+            total_temperature, density = temperature * ratio, flow.density
+        else:
+            total_temperature, density = flow.total_temperature, flow.density * raised**exponent
+        square = 2 * reference.heat_capacity * total_temperature * (1 - 1 / ratio) - crossflow
+        return replace(
+            flow,
+            total_pressure=total,
+            u=_axial(square, flow.u),
+            density=density,
+            total_temperature=total_temperature,
+        )
 
     def _estimate(
         self,
@@ -511,8 +549,8 @@ class Chain:
         flow: Flow,
         reference: Reference,
         region: WakeRegion,
-        vorticity: Array,
         forces: VorticityForces,
+        near: NearField,
         vary: Variation,
         geometric: bool,
     ) -> tuple[tuple[float, float], float]:
@@ -520,14 +558,11 @@ class Chain:
         grid, mask, bias = flow.grid, region.mask, self.frozen.bias
         entropy, invalid = entropy_profile_drag(flow, reference, mask)
         values[estimate_of("profile_drag", "entropy_area")] = float(entropy)
-        near_field = self.frozen.near_field
-        if near_field is None:
-            near_field = self.near_field(vorticity, grid)
         own = induced_crossflow(forces.stream_function, grid)
         outer = (~mask).astype(float)
         offset: Array = np.zeros(2)
         if outer.sum() > 0:
-            offset = crossflow_offset(flow.v, flow.w, own, near_field, outer)
+            offset = crossflow_offset(flow.v, flow.w, own, near, outer)
         offset = offset + np.asarray(vary.crossflow_shift)
         v, w = flow.v - offset[0], flow.w - offset[1]
         energy = float(crossflow_energy(v, w, grid, density=reference.density))
@@ -543,12 +578,17 @@ class Chain:
             values |= {name: float(value) for name, value in found.items()}
         return (float(offset[0]), float(offset[1])), float(invalid)
 
-    def near_field(self, vorticity: Array, grid: UniformGrid) -> tuple[Array, Array]:
-        """Crossflow that the bound vortex adds at the plane, m/s; zero where the plane is not behind it."""
+    def near_field(self, vorticity: Array, grid: UniformGrid) -> NearField:
+        """Disturbance that the bound vortex adds at the plane, m/s; zero where the plane is not behind it."""
         distance = self.settings.station - self.settings.bound_line
         if not distance > 0:
-            return np.zeros(grid.shape), np.zeros(grid.shape)
-        return near_field_crossflow(vorticity, grid, distance=distance)
+            return NearField(*np.zeros((3, *grid.shape)))
+        return near_field(vorticity, grid, distance=distance)
+
+
+def _axial(square: Array, measured: Array) -> Array:
+    """Axial velocity of a given square, in the direction measured; as measured where the square is not positive."""
+    return np.where(square > 0, np.copysign(np.sqrt(np.maximum(square, 0.0)), measured), measured)
 
 
 def default_grow(gridding: Gridding) -> float:

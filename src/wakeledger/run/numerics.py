@@ -17,6 +17,7 @@ from wakeledger.core.grid import Array
 from wakeledger.intake.gridding import Gridding
 from wakeledger.physics.fields.outer_flow import OuterFlow
 from wakeledger.physics.fields.wake_region import Mask
+from wakeledger.physics.methods.residual import residual_drag
 from wakeledger.run.chain import OUTPUTS, Chain, Reduction, Variation, coefficient_of, estimate_of, sampled_mask
 
 MASK = "edge of the wake region"
@@ -25,14 +26,14 @@ RESAMPLING = "spline between the points"
 GAPS = "filled points"
 LOSS_ZERO = "zero of the total pressure"
 OFFSET_ZERO = "zero of the flow angles"
-PAIR = "pair of the residual cut at the region's edge"
+PAIR = "bound vortex in the residual"
 METHOD = "choices inside {}"
 
 #: Order claimed when a decimated grid is extrapolated; the observed order between h/a = 0.5 and 1 is 4 to 8.
 ORDER = 3.0
-#: Doubt of the residual as a share of it. Over the whole plane its two parts cancel but for the cores' share; over the
-#: region they do not, and near the model nearly all of the residual is what is left of them.
-PAIR_DOUBT = 0.6
+#: Doubt of what the bound vortex's predicted disturbance takes out of the residual, as a share of it (k = 1): the bound
+#: line is taken as straight and level.
+PAIR_DOUBT = 0.2
 #: Factors on the region's growth that bound the plausible choices.
 SWEEP = (0.5, 1.5)
 #: Estimates that integrate over the same region as a row, and so share its doubt.
@@ -151,7 +152,7 @@ def _resolution_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
 
 
 def _resampling_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gridding]) -> NumericalTerm:
-    other = chain.with_gridding(regrid(degree=5, spacing=min(nominal.flow.grid.dy, nominal.flow.grid.dz)))
+    other = chain.with_gridding(regrid(degree=5, spacing=(nominal.flow.grid.dy, nominal.flow.grid.dz)))
     same = other.gridding.grid.shape == nominal.flow.grid.shape
     vary = Variation(mask=nominal.region.mask if same else None)
     return NumericalTerm(RESAMPLING, _difference(other.reduce(vary=vary).vector, nominal))
@@ -159,7 +160,8 @@ def _resampling_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gri
 
 def _pair_term(nominal: Reduction) -> NumericalTerm:
     """Doubt of the residual, which the total drag shares."""
-    doubt = PAIR_DOUBT * abs(nominal.values["residual_drag"])
+    whole = residual_drag(nominal.flow, nominal.reference, nominal.loss_free, nominal.region.mask)
+    doubt = PAIR_DOUBT * abs(float(sum(whole)) - sum(nominal.residual_parts))
     vector = np.zeros(len(OUTPUTS))
     for row in ("residual_drag", "total_drag"):
         vector[OUTPUTS.index(row)] = doubt

@@ -270,7 +270,11 @@ def _expected(chain: Chain, nominal: Reduction) -> dict[str, float]:
         float(crossflow_energy(v - v0, w - w0, flow.grid, density=reference.density))
         for v, w in ((flow.v, flow.w), (flow.v - near[0], flow.w - near[1]))
     ]
-    zero[estimate_of("induced_drag", "energy_area")] = energy[0] - energy[1]
+    excess = energy[0] - energy[1]
+    zero[estimate_of("induced_drag", "energy_area")] = excess
+    # The momentum balance over the window holds the axial disturbance as well, with the other sign.
+    axial = 0.5 * reference.density * float(flow.grid.integrate(near.u**2))
+    zero[estimate_of("total_drag", "momentum_area")] = excess - axial
     if cuts is not None:
         here = evaluate_wake_line(cuts, flow.v, flow.w, reference.density, reference.speed)
         there = evaluate_wake_line(cuts, flow.v - near[0], flow.w - near[1], reference.density, reference.speed)

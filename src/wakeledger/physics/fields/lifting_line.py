@@ -6,11 +6,15 @@ start there, and the bound line itself. The difference is smooth and follows fro
     legs:   the two-dimensional velocity of each element times ½(X/√(X² + r²) − 1),
     bound:  w = −(X/4π) ∬ B dA' / (X² + r²)^{3/2},   B(y, z) = −∫_{port}^{y} ξ dy',
 
+    axial:  u' = (1/4π) ∬ B (z − z') dA' / (X² + r²)^{3/2},
+
 where every leg is joined along y at its own height. It is what the energy form and the wake line are expected to read
 above the vorticity form.
 """
 
 from __future__ import annotations
+
+from typing import NamedTuple
 
 import numpy as np
 from scipy import fft
@@ -18,8 +22,16 @@ from scipy import fft
 from wakeledger.core.grid import Array, UniformGrid
 
 
-def near_field_crossflow(vorticity: Array, grid: UniformGrid, *, distance: float) -> tuple[Array, Array]:
-    """Crossflow at the plane beyond that of infinitely long trailing vortices.
+class NearField(NamedTuple):
+    """What the bound vortex and the legs' beginning add to the velocity, m/s, each of shape (nz, ny)."""
+
+    v: Array
+    w: Array
+    u: Array
+
+
+def near_field(vorticity: Array, grid: UniformGrid, *, distance: float) -> NearField:
+    """Velocity at the plane beyond that of infinitely long trailing vortices.
 
     Parameters
     ----------
@@ -32,8 +44,8 @@ def near_field_crossflow(vorticity: Array, grid: UniformGrid, *, distance: float
 
     Returns
     -------
-    dv, dw : ndarray, shape (nz, ny)
-        To be added to the two-dimensional crossflow of the same vorticity, m/s.
+    NearField
+        v and w to be added to the two-dimensional crossflow of the same vorticity; u to the stream's speed.
 
     Raises
     ------
@@ -69,10 +81,14 @@ def near_field_crossflow(vorticity: Array, grid: UniformGrid, *, distance: float
     dw = window(source * transform(yy * shortfall))
     bound_y, bound_z = _bound_circulation(vorticity, grid)
     kernel = transform(bound_kernel)
-    dw -= window(transform(bound_y) * kernel)
+    along_y = transform(bound_y)
+    dw -= window(along_y * kernel)
+    du = window(along_y * transform(zz / (4 * np.pi * reach**3)))
     if bound_z is not None:
-        dv += window(transform(bound_z) * kernel)
-    return dv, dw
+        along_z = transform(bound_z)
+        dv += window(along_z * kernel)
+        du -= window(along_z * transform(yy / (4 * np.pi * reach**3)))
+    return NearField(dv, dw, du)
 
 
 def _bound_circulation(vorticity: Array, grid: UniformGrid) -> tuple[Array, Array | None]:

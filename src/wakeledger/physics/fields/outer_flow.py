@@ -51,7 +51,7 @@ def loss_zero(loss: Array, mask: Mask) -> float:
     return float(loss[outer].mean())
 
 
-def crossflow_offset(v: Array, w: Array, psi: Array, near_field: tuple[Array, Array], outer: Array) -> Array:
+def crossflow_offset(v: Array, w: Array, psi: Array, near_field: tuple[Array, ...], outer: Array) -> Array:
     """Mean crossflow left over outside the wake, m/s.
 
     Parameters
@@ -60,7 +60,7 @@ def crossflow_offset(v: Array, w: Array, psi: Array, near_field: tuple[Array, Ar
         Measured crossflow, m/s.
     psi : ndarray, shape (2, ..., nz, ny)
         Crossflow of the wake's own vorticity, (∂ψ/∂z, −∂ψ/∂y), m/s.
-    near_field : (ndarray, ndarray), shape (nz, ny)
+    near_field : NearField, or any tuple of two or more ndarrays of shape (nz, ny)
         What the bound vortex adds, m/s.
     outer : ndarray, shape (nz, ny)
         Weight of each place, 1 outside the wake.
@@ -82,7 +82,7 @@ def induced_crossflow(psi: Array, grid: UniformGrid) -> Array:
 
 
 def outer_flow(
-    loss: Array, v: Array, w: Array, psi: Array, grid: UniformGrid, *, mask: Mask, near_field: tuple[Array, Array]
+    loss: Array, v: Array, w: Array, psi: Array, grid: UniformGrid, *, mask: Mask, near_field: tuple[Array, ...]
 ) -> OuterFlow:
     """Zeros of the survey from the flow outside the wake.
 
@@ -98,7 +98,7 @@ def outer_flow(
         The grid.
     mask : ndarray of bool, shape (nz, ny)
         The wake region.
-    near_field : (ndarray, ndarray), shape (nz, ny)
+    near_field : NearField, or any tuple of two or more ndarrays of shape (nz, ny)
         Crossflow that the bound vortex adds, m/s (`wakeledger.physics.fields.lifting_line`).
 
     Returns

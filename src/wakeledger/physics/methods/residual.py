@@ -1,8 +1,8 @@
 """The small remainder of the momentum balance: axial disturbance and crossflow divergence, always as a pair.
 
 ½ρ∬[−φσ − (u* − U)²] dA. For a disturbance that is harmonic and decays downstream the two cancel (Parseval); alone, the
-first is +5 % of the induced drag a quarter span behind the wing. Taken over the wake region, where the pressure of
-vortex cores leaves a real remainder.
+first is +5 % of the induced drag a quarter span behind the wing. So the bound vortex's predicted disturbance is taken
+out of both, and what is left is taken over the wake region, where the pressure of vortex cores leaves a real remainder.
 """
 
 from __future__ import annotations
@@ -12,13 +12,16 @@ import numpy as np
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.differences import crossflow_divergence
 from wakeledger.physics.fields.flow import Flow
+from wakeledger.physics.fields.lifting_line import NearField
 from wakeledger.physics.fields.poisson import velocity_potential
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.physics.methods.betz_area import axial_integrand
 from wakeledger.stream.reference import Reference
 
 
-def residual_drag(flow: Flow, reference: Reference, loss_free: Array, mask: Mask) -> tuple[Array, Array]:
+def residual_drag(
+    flow: Flow, reference: Reference, loss_free: Array, mask: Mask, *, near: NearField | None = None
+) -> tuple[Array, Array]:
     """Both parts of the residual over the wake region, N, each of shape (...).
 
     Parameters
@@ -29,6 +32,8 @@ def residual_drag(flow: Flow, reference: Reference, loss_free: Array, mask: Mask
         u* of `wakeledger.physics.methods.betz_area.loss_free_axial_velocity`, m/s.
     mask : ndarray of bool, shape (..., nz, ny)
         The wake region.
+    near : NearField, optional
+        Predicted disturbance of the bound vortex (`wakeledger.physics.fields.lifting_line`), m/s.
 
     Returns
     -------
@@ -46,10 +51,13 @@ def residual_drag(flow: Flow, reference: Reference, loss_free: Array, mask: Mask
         axial = -flow.density * flow.u * (loss_free - reference.speed)
         axial = axial - (flow.static_pressure - reference.static_pressure)
         axial = axial - 0.5 * reference.density * (flow.v**2 + flow.w**2)
+        if near is not None:
+            axial = axial + 0.5 * reference.density * (1 - reference.mach**2) * near.u**2
     else:
-        axial = axial_integrand(loss_free, reference)
+        axial = axial_integrand(loss_free if near is None else loss_free - near.u, reference)
     axial_part = flow.grid.integrate(np.where(mask, axial, 0.0))
-    return divergence_drag(flow.v, flow.w, flow.grid, mask, density=reference.density), axial_part
+    v, w = (flow.v, flow.w) if near is None else (flow.v - near.v, flow.w - near.w)
+    return divergence_drag(v, w, flow.grid, mask, density=reference.density), axial_part
 
 
 def divergence_drag(v: Array, w: Array, grid: UniformGrid, mask: Mask, *, density: float) -> Array:
