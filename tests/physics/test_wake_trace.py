@@ -9,7 +9,17 @@ from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.path_integrals import cell_circulation
 from wakeledger.physics.fields.wake_region import wake_region
 from wakeledger.physics.fields.wake_trace import WakeTrace, wake_trace
-from wakeledger.synthetic import Sheet, roll_up, shed, sheet_losses, straight_edge, tip_cores, v_edge
+from wakeledger.stream.reference import Reference
+from wakeledger.synthetic import (
+    Sheet,
+    roll_up,
+    shed,
+    sheet_losses,
+    straight_edge,
+    tip_cores,
+    v_edge,
+    wing_and_tail_wake,
+)
 
 # The reference case in shape: Γ = 0.035 U b, a = 0.03 b, about 100 counts of losses; cells of 0.63 a.
 SPEED, DENSITY, CORE, SPACING, NOISE = 28.0, 1.2, 0.03, 0.0189, 0.005
@@ -201,6 +211,33 @@ def test_vorticity_alone_is_followed_all_along_where_there_is_no_noise(planes, n
     off, missed, from_vortex, sheet_from_vortex = distances(plane, trace)
     assert off[from_vortex > 8].max(initial=0) < 1.5
     assert missed[sheet_from_vortex > 8].max(initial=0) < 2.0
+
+
+@pytest.mark.parametrize("seed", range(6))
+@pytest.mark.parametrize("dz", [0.012, 0.008])
+def test_wing_and_tail_have_a_chain_each_from_vortex_to_vortex(dz, seed):
+    # The flow and noise of the sample survey, in square and in oblong cells.
+    stream = Reference(speed=42.0, density=1.185, static_pressure=0.0)
+    wake = wing_and_tail_wake(stream, peak=2.11, x=1.5)
+    grid = UniformGrid(-0.72, -0.336, 0.012, dz, 121, round(0.768 / dz) + 1)
+    rng = np.random.default_rng(seed)
+    state = wake.state_on(grid)
+    v, w = (f + 0.17 * rng.standard_normal(grid.shape) for f in (state.v, state.w))
+    loss = stream.total_pressure - state.total_pressure + 1.6 * rng.standard_normal(grid.shape)
+    plane = Plane(grid, v, w, loss, region(v, w, grid, loss), wake.sheets)
+    trace = plane.trace()
+    assert trace.chain.max() == 1
+    bound = trace.bound_circulation(trace.sums(plane.circulation))
+    for chain, (sheet, peak) in enumerate(zip(wake.sheets, (2.11, -0.3), strict=True)):
+        own = np.flatnonzero(trace.chain == chain)
+        vortices = tip_cores(sheet)
+        for end, k in ((own[0], 0), (own[-1], 1)):
+            # Two core lengths; the tail's vortices are weak and lie in its losses.
+            assert np.hypot(trace.y[end] - vortices.y[k], trace.z[end] - vortices.z[k]) < 0.048
+        values = bound[own] * np.sign(peak)
+        # The noise of the line around each surface's parts.
+        assert values.max() == pytest.approx(abs(peak), abs=0.1)
+        assert values[-1] == pytest.approx(0, abs=0.15)
 
 
 @pytest.mark.parametrize("name", ["asymmetric", "with tail", "box"])

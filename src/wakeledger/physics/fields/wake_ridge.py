@@ -57,6 +57,8 @@ class Ridges:
         (y, z), m.
     height : ndarray, shape (points,)
         ½ln(R² + ¼), R the root of the smoothed sum of the squares of loss and vorticity, each over its noise.
+    vorticity : ndarray, shape (points,)
+        Magnitude of the smoothed vorticity over its noise.
     reach : ndarray, shape (points,)
         Width a of the Gaussian exp(−n²/a²) that has the curvature of the field across the ridge, m.
     tree : csr_array, shape (points, points)
@@ -68,6 +70,7 @@ class Ridges:
 
     place: Array
     height: Array
+    vorticity: Array
     reach: Array
     tree: sparse.csr_array
     ridge: Index
@@ -110,7 +113,14 @@ def find_ridges(circulation: Array, cells: Mask, grid: UniformGrid, *, loss: Arr
     kept = (peak >= _SEED) & (total >= max(_BODY * _SEED, _SHARE * total.sum()))
     rank = np.full(count, -1)
     rank[np.argsort(-total * kept)[: np.count_nonzero(kept)]] = np.arange(np.count_nonzero(kept))
-    return Ridges(crests.place, np.log(np.hypot(height, _SOFT)), np.sqrt(2 / crests.curvature), tree, rank[label])
+    return Ridges(
+        place=crests.place,
+        height=np.log(np.hypot(height, _SOFT)),
+        vorticity=np.abs(vorticity[crests.rows, crests.columns]),
+        reach=np.sqrt(2 / crests.curvature),
+        tree=tree,
+        ridge=rank[label],
+    )
 
 
 def _over_noise(field: Array, cells: Mask, floor: float) -> Array:

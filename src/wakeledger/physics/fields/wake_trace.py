@@ -230,7 +230,7 @@ def _from_summit(ridges: Ridges, path: Index, cell: float) -> Index:
     apart = ((place - place[:, None]) ** 2).sum(axis=-1)
     slope = apart <= (_SLOPE * ridges.reach[path]) ** 2 * fall + cell**2
     summit = np.array([slope[:k, k].all() for k in range(len(path))])
-    return path[np.argmax(np.where(summit, height, -np.inf)) :]
+    return path[np.argmax(np.where(summit, ridges.vorticity[path], -1.0)) :]
 
 
 def _trunk(points: Array, cell: float, first_part: int) -> list[_Piece]:
