@@ -174,7 +174,7 @@ def trace(ledger: Ledger) -> Figure:
             own = line["chain"].values == chain
             panel.plot(line["y"].values[own], line["z"].values[own], ".-", ms=3, lw=0.9, color=GREEN)
         angle = np.linspace(0, 2 * np.pi, 60)
-        for at_y, at_z, core in zip(*(found[name].values for name in ("y", "z", "core_radius")), strict=True):
+        for at_y, at_z, core in zip(*(found[name].values for name in ("y", "z", "core_length")), strict=True):
             panel.plot(at_y + core * np.cos(angle), at_z + core * np.sin(angle), color=PURPLE, lw=1.2)
         panel.set_aspect("equal")
         panel.set_xlabel("y (starboard), m")

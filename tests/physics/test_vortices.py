@@ -182,7 +182,7 @@ def test_lone_vortices_are_found_exactly(ratio: float) -> None:
         # Spline interpolation of the circles limits Γ and a: 4e-3 at 1.25 points per core, 1e-4 from two on.
         tolerance = 4e-3 if ratio > 0.5 else 2e-4
         assert vortex.circulation == pytest.approx(truth.circulation[k], rel=tolerance)
-        assert vortex.core_radius == pytest.approx(CORE, rel=tolerance)
+        assert vortex.core_length == pytest.approx(CORE, rel=tolerance)
         assert vortex.peak_swirl == pytest.approx(PEAK_SWIRL * abs(truth.circulation[k]) / (2 * np.pi * CORE), rel=0.01)
         assert (vortex.y, vortex.z) == pytest.approx((truth.y[k], truth.z[k]), abs=1e-4 * CORE)
         assert vortex.roundness == pytest.approx(1.0, abs=0.02)
@@ -242,7 +242,7 @@ def test_mirrored_surveys_give_mirrored_vortices_and_the_same_drag(name: str) ->
     assert len(one.vortices) == len(other.vortices) > 1
     for a, b in zip(one.vortices, reversed(other.vortices), strict=True):
         assert (a.y, a.z) == pytest.approx((-b.y, b.z), abs=1e-10)
-        assert (a.circulation, a.core_radius) == pytest.approx((-b.circulation, b.core_radius), rel=1e-10)
+        assert (a.circulation, a.core_length) == pytest.approx((-b.circulation, b.core_length), rel=1e-10)
     assert one.induced_drag == pytest.approx(other.induced_drag, rel=1e-10)
 
 
@@ -257,7 +257,7 @@ def test_symmetric_surveys_give_equal_and_opposite_vortices(name: str) -> None:
     found = find_vortices(v, w, grid)
     for a, b in zip(found, reversed(found), strict=True):
         assert (a.y, a.z) == pytest.approx((-b.y, b.z), abs=1e-10)
-        assert (a.circulation, a.core_radius) == pytest.approx((-b.circulation, b.core_radius), rel=1e-10)
+        assert (a.circulation, a.core_length) == pytest.approx((-b.circulation, b.core_length), rel=1e-10)
 
 
 @settings(max_examples=6, deadline=None)
@@ -430,7 +430,7 @@ def test_vortex_draws_follow_the_fits() -> None:
         fitted = find_vortices(v + change_v[k], w + change_w[k], grid)
         for j, (vortex, start) in enumerate(zip(fitted, parts.vortices, strict=True)):
             # First order; the circles' interpolation (local polynomials against a spline) is the largest difference.
-            for name, scale in (("y", CORE), ("z", CORE), ("core_radius", CORE), ("circulation", 1.0)):
+            for name, scale in (("y", CORE), ("z", CORE), ("core_length", CORE), ("circulation", 1.0)):
                 full = getattr(vortex, name) - getattr(start, name)
                 linear = getattr(draws, name)[k, j] - getattr(start, name)
                 assert linear == pytest.approx(full, rel=0.35, abs=2e-4 * scale)
@@ -474,7 +474,7 @@ def test_wing_tip_survey(station: float, centre_y: float, centre_z: float, circu
     assert result.net_circulation == pytest.approx(circulation, rel=0.01)
     tip = max(result.vortices, key=lambda vortex: vortex.circulation)
     assert (tip.y, tip.z) == pytest.approx((centre_y, centre_z), abs=0.001)
-    assert tip.core_radius * PEAK_RADIUS == pytest.approx(0.028, rel=0.10)
+    assert tip.core_length * PEAK_RADIUS == pytest.approx(0.028, rel=0.10)
     assert tip.peak_swirl == pytest.approx(swirl, rel=0.03)
     # The core itself holds 0.228 to 0.236 of it: Γ(r) levels off there (read off the same files).
     assert tip.circulation == pytest.approx(0.232, rel=0.03)

@@ -25,7 +25,7 @@ WAKE = wing_wake(STREAM)
 class Core:
     y: float = 0.47
     z: float = 0.0
-    core_radius: float = 0.03
+    core_length: float = 0.03
     circulation: float = 2.0
 
 
@@ -109,7 +109,7 @@ def test_core_resolution_is_judged_where_the_core_is():
 
 
 def test_core_resolution_passes_over_a_faint_eddy():
-    eddy = Core(core_radius=0.005, circulation=-0.1)
+    eddy = Core(core_length=0.005, circulation=-0.1)
     assert checks.core_resolution(facts(GOOD, vortices=(eddy, Core()))).value == pytest.approx(0.012 / 0.03)
     assert checks.core_resolution(facts(GOOD, vortices=(replace(eddy, circulation=-0.5), Core()))).verdict == "fail"
 

@@ -49,7 +49,7 @@ class Core(Protocol):
         """Circulation, m²/s."""
 
     @property
-    def core_radius(self) -> float:
+    def core_length(self) -> float:
         """Gaussian core length a, m."""
 
     @property
@@ -243,21 +243,21 @@ def core_resolution(facts: Facts) -> Check:
     spacings = facts.spacings or (facts.raw_spacing,) * len(facts.vortices)
     least = FAINT_VORTEX * max((abs(vortex.circulation) for vortex in facts.vortices), default=0.0)
     cores = [
-        (spacing / vortex.core_radius, vortex)
+        (spacing / vortex.core_length, vortex)
         for vortex, spacing in zip(facts.vortices, spacings, strict=True)
-        if vortex.core_radius > 0 and abs(vortex.circulation) >= least
+        if vortex.core_length > 0 and abs(vortex.circulation) >= least
     ]
     if not cores:
         return _check("core_resolution", math.nan, {"not_applicable": "No vortex core was identified."})
     value, smallest = max(cores, key=lambda core: core[0])
-    where = f"the core at y = {smallest.y:.4g} m, z = {smallest.z:.4g} m (a = {smallest.core_radius:.3g} m)"
+    where = f"the core at y = {smallest.y:.4g} m, z = {smallest.z:.4g} m (a = {smallest.core_length:.3g} m)"
     return _check(
         "core_resolution",
         value,
         {
             "pass": f"The points are {value:.2f} core lengths apart in {where}.",
             "warn": f"The points are {value:.2f} core lengths apart in {where}: its induced drag is smeared; measure it"
-            f" at a spacing of {0.5 * smallest.core_radius:.2g} m. A good lift does not prove a good induced drag.",
+            f" at a spacing of {0.5 * smallest.core_length:.2g} m. A good lift does not prove a good induced drag.",
         },
     )
 

@@ -91,7 +91,7 @@ def grid_survey(survey: SurveyInput, *, quick: bool = False) -> Gridded:
     first = chain.reduce(estimates=False)
     parts, vortices = find_vortices(first, settings)
     if gridding.kind != "uniform" and vortices.vortices and not coarse:
-        finer = min(vortex.core_radius for vortex in vortices.vortices) / POINTS_PER_CORE
+        finer = min(vortex.core_length for vortex in vortices.vortices) / POINTS_PER_CORE
         if finer < 0.98 * max(gridding.grid.dy, gridding.grid.dz):
             gridding = regrid(spacing=(min(finer, gridding.grid.dy), min(finer, gridding.grid.dz)))
             chain = Chain(points, gridding, settings)

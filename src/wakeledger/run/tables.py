@@ -105,10 +105,10 @@ def vortex_table(vortices: Sequence[Vortex]) -> xr.Dataset | None:
                 "m2 s-1",
                 "circulation, counter-clockwise seen from behind",
             ),
-            ("core_radius", np.array([x.core_radius for x in vortices]), "m", "core length a of exp(-(r/a)^2)"),
+            ("core_length", np.array([x.core_length for x in vortices]), "m", "core length a of exp(-(r/a)^2)"),
             (
-                "peak_radius",
-                np.array([x.peak_radius for x in vortices]),
+                "core_radius",
+                np.array([x.core_radius for x in vortices]),
                 "m",
                 "radius at which the swirl is largest, 1.1209 core lengths",
             ),

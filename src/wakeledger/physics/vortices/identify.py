@@ -53,7 +53,7 @@ class Vortex:
     circulation : float
         Γ, m²/s, counter-clockwise positive: closed line integral of the measured velocity on the circle of radius 2a
         (less where the window ends), over the share 1 − exp(−r²/a²) that a Gaussian vortex has inside it.
-    core_radius : float
+    core_length : float
         Core a of ξ ∝ exp(−r²/a²), m, fitted to the circulations Γ(r) = Γ(1 − exp(−r²/a²)) inside 2a. The swirl peaks at
         1.1209 a.
     contour_radius : float
@@ -71,7 +71,7 @@ class Vortex:
     y: float
     z: float
     circulation: float
-    core_radius: float
+    core_length: float
     contour_radius: float
     peak_swirl: float
     roundness: float
@@ -79,9 +79,9 @@ class Vortex:
     u: float
 
     @property
-    def peak_radius(self) -> float:
+    def core_radius(self) -> float:
         """Radius of the swirl's peak, 1.1209 a, m."""
-        return PEAK_RADIUS * self.core_radius
+        return PEAK_RADIUS * self.core_length
 
 
 def crossflow_noise(v: Array, w: Array) -> float:
@@ -243,7 +243,7 @@ def _measured(
         y=centre.y,
         z=centre.z,
         circulation=circulation,
-        core_radius=core,
+        core_length=core,
         contour_radius=float(radii[-1]),
         peak_swirl=float((np.abs(enclosed) / (2 * np.pi * radii)).max()),
         roundness=_roundness(v, w, grid, centre.y, centre.z, core),
@@ -319,7 +319,7 @@ def _without_doubles(found: list[MeasuredVortex]) -> list[MeasuredVortex]:
     for new in sorted(found, key=lambda measured: measured.vortex.misfit):
         a = new.vortex
         others = (measured.vortex for measured in kept)
-        if all(np.hypot(a.y - b.y, a.z - b.z) > max(a.core_radius, b.core_radius) / 2 for b in others):
+        if all(np.hypot(a.y - b.y, a.z - b.z) > max(a.core_length, b.core_length) / 2 for b in others):
             kept.append(new)
     return kept
 

@@ -48,14 +48,14 @@ class VortexDraws:
 
     Attributes
     ----------
-    y, z, circulation, core_radius : ndarray
+    y, z, circulation, core_length : ndarray
         m, m, m²/s, m.
     """
 
     y: Array
     z: Array
     circulation: Array
-    core_radius: Array
+    core_length: Array
 
 
 @dataclass(frozen=True)
@@ -202,7 +202,7 @@ def find_parts(
     found = measured_vortices(v, w, grid, mask=kept, u=u)
     if mask is None:
         mask = wake_region(np.zeros(grid.shape), axial_vorticity(v, w, grid), grid).mask
-    sharing, cells = _sharing(grid, mask, excluded, reflection, [measured.vortex.core_radius for measured in found])
+    sharing, cells = _sharing(grid, mask, excluded, reflection, [measured.vortex.core_length for measured in found])
     return _parts(grid, found, sharing, cells, reflection, (v, w))
 
 
@@ -229,11 +229,11 @@ def _parts(
 ) -> WakeParts:
     vortices = tuple(one.vortex for one in measured)
     y, z = np.array([x.y for x in vortices]), np.array([x.z for x in vortices])
-    core_squared = np.array([x.core_radius**2 for x in vortices])
+    core_squared = np.array([x.core_length**2 for x in vortices])
     shares = np.empty((cells.count, len(vortices)))
     with_cells = np.empty((len(vortices), cells.count))
     for k, vortex in enumerate(vortices):
-        shares[:, k] = cells.gaussian_share(vortex.y, vortex.z, vortex.core_radius)
+        shares[:, k] = cells.gaussian_share(vortex.y, vortex.z, vortex.core_length)
         size = core_squared[k] - np.minimum(cells.spread, (1 - _LEAST_CORE) * core_squared[k])
         centre_y, centre_z, point = y[k : k + 1], z[k : k + 1], np.zeros(1)
         facing = interaction_matrix(cells.y, cells.z, size, centre_y, centre_z, point, reflection=reflection)
@@ -331,8 +331,8 @@ def vortex_draws(parts: WakeParts, v: Array, w: Array) -> VortexDraws:
         for m, radius in enumerate(measured.radii):
             points, on_v, on_w = circle_weights(parts.grid, vortex.y, vortex.z, radius)
             enclosed[:, m] = change_v[:, points] @ on_v + change_w[:, points] @ on_w
-        core = vortex.core_radius + enclosed @ measured.profile.core_response
-        inside = vortex.circulation * _gaussian_inside(vortex.contour_radius, vortex.core_radius) + enclosed[:, -1]
+        core = vortex.core_length + enclosed @ measured.profile.core_response
+        inside = vortex.circulation * _gaussian_inside(vortex.contour_radius, vortex.core_length) + enclosed[:, -1]
         out[0, :, k] = vortex.y + moved[:, 0]
         out[1, :, k] = vortex.z + moved[:, 1]
         out[2, :, k] = inside / _gaussian_inside(vortex.contour_radius, core)
