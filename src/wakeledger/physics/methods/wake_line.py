@@ -120,7 +120,7 @@ class WakeLine:
     y, z, arc_length : ndarray, shape (parts,)
         The trace, m; the arc length starts at each chain's port end.
     chain : ndarray of int, shape (parts,)
-        Chain (island or branch) each part belongs to.
+        Chain each part belongs to: one for each sheet that stands out of the noise, one for each branch.
     circulation : ndarray, shape (parts,)
         Γ_k, the closed line integral around each part, m²/s.
     centroid_y, centroid_z : ndarray, shape (parts,)
