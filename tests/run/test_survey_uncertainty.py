@@ -401,3 +401,20 @@ def test_balance_verdicts(wake, reduced):
     assert close.comparisons[0].difference == pytest.approx(-0.05, abs=2e-3)
     assert far.comparisons[0].verdict == "disagrees"
     assert far.comparisons[0].normalised_error > 3
+
+
+def test_the_spline_between_the_points_is_judged_on_the_same_grid(kit, tmp_path):
+    # Uneven lines, twice as close along z: only the degree of the spline may change, or the term holds the change of
+    # the wake region as well, many times what the splines are worth.
+    y, z = np.linspace(-1.1, 1.1, 70), np.linspace(-0.7, 0.6, 75)
+    y, z = y + 0.004 * np.sin(9 * y), z + 0.003 * np.sin(11 * z)
+    content = kit.description(uncertainty={"draws": 100, "seed": 3})
+    content["uncertainty.source"] = [kit.source("crossflow", ["plane.v", "plane.w"], "0.1 m/s", "random")]
+    data = kit.table(kit.wing(), y, z)
+    generator = np.random.default_rng(5)
+    for name in ("v", "w"):
+        data[name] = data[name] + generator.normal(0, 0.1, data[name].size)
+    found = kit.ledger(tmp_path, data, content)
+    lines = {line.row: line for line in found.budget if line.source == "spline between the points"}
+    assert 0 < lines["induced_drag"].standard_uncertainty < 1e-3 * found.row("induced_drag").value
+    assert 0 < lines["lift"].standard_uncertainty < 1e-3 * found.row("lift").value
