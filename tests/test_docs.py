@@ -226,6 +226,7 @@ TABLES = {
     "`[plane]`": plane_tables.Plane,
     "`[plane.columns]`": plane_tables.ColumnsTable,
     "`[plane.axes]`": plane_tables.Axes,
+    "`[probe]`": small_tables.ProbeTable,
     "`[boundary]`": small_tables.BoundaryTable,
     "`[wake]`": small_tables.WakeTable,
     "`[section]`": small_tables.SectionTable,
@@ -234,7 +235,6 @@ TABLES = {
     "`[[compare]]`": uncertainty.Comparison,
 }
 REFUSED = {
-    "probe": small_tables.ProbeTable,
     "empty_tunnel": small_tables.EmptyTunnelTable,
     "body": small_tables.BodyTable,
     "loading": small_tables.LoadingTable,
@@ -279,7 +279,6 @@ BASE = (
     )
 )
 WANTS = {
-    "probe": '[probe]\ntip_diameter = "3 mm"\n',
     "empty_tunnel": '[empty_tunnel]\nsurvey = "empty.toml"\n',
     "body": '[[body]]\nname = "tail"\nregion = [["-0.3 m", "0.1 m"], ["0.3 m", "0.3 m"]]\n',
     "loading": '[loading]\ntrailing_edge = [["-0.6 m", "0 m"], ["0.6 m", "0 m"]]\n',

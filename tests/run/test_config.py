@@ -202,9 +202,10 @@ def test_flight_inputs():
         ((("row = {", 'p1 = { column = "p1", unit = "Pa" }\nrow = {'),), "[plane.columns] p1"),
         ((PROBE, ('["angle.pitch", "angle.yaw"]', '["calibration"]'), ('"0.05 deg"', '"0.5 %"')), "[probe]"),
         (
-            (PROBE, ('primary = "total_pressure"', 'primary = "hole_pressures"'),
+            ("[[probe]]\ntube = 1\n" + PROBE.removeprefix("[probe]\n"), "[[probe]]\ntube = 2\n",
+             ('primary = "total_pressure"', 'primary = "hole_pressures"'),
              ("row = {", "".join(f'p{n} = {{ column = "p{n}", unit = "Pa" }}\n' for n in range(1, 6)) + "row = {")),
-            "[plane] primary",
+            "[[probe]]",
         ),
         (
             (("[plane]\n", "[[plane]]\n"),

@@ -57,6 +57,10 @@ VARIABLES: Mapping[str, Variable] = _table(
     reynolds_stress_uv=Variable("mean product of the fluctuations of u and v", "m2 s-2"),
     reynolds_stress_uw=Variable("mean product of the fluctuations of u and w", "m2 s-2"),
     reynolds_stress_vw=Variable("mean product of the fluctuations of v and w", "m2 s-2"),
+    **{f"p{number}": Variable(f"pressure of hole {number} of the probe, 1 the centre", "Pa") for number in range(1, 8)},
+    reference_dynamic_pressure=Variable("dynamic pressure of the stream while the point was taken", "Pa"),
+    reference_static_pressure=Variable("static pressure of the stream while the point was taken", "Pa"),
+    time=Variable("time at which the point was taken", "s"),
 )
 
 #: Variables of a plane in wind axes, as kept in the archive.

@@ -44,6 +44,9 @@ _RECORDS: tuple[tuple[str, type, str], ...] = (
 #: Groups that hold a dataset and may be absent.
 _TABLES = ("wake_line", "vortices", "span")
 
+#: Group of the first probe calibration; further ones are numbered. Its attribute says which file it comes from.
+_CALIBRATION, _CALIBRATION_NAME = "calibration", "survey_name"
+
 #: Root attributes that hold a JSON object of strings.
 _MAPPINGS = ("test", "inputs", "provenance")
 
@@ -186,6 +189,9 @@ def _groups(ledger: Ledger) -> dict[str, xr.Dataset]:
         table = getattr(ledger, name)
         if table is not None:
             groups[name] = table
+    for number, (name, calibration) in enumerate(ledger.calibrations.items(), start=1):
+        group = _CALIBRATION if number == 1 else f"{_CALIBRATION}_{number}"
+        groups[group] = calibration.assign_attrs({_CALIBRATION_NAME: name})
     groups["model"] = xr.Dataset({name: scalar(name, value, "model") for name, value in ledger.model.items()})
     groups["raw"] = encoding.points_dataset(ledger.raw)
     return groups
@@ -201,6 +207,10 @@ def _ledger(root: xr.Dataset, source: Path) -> Ledger:
     for name in _MAPPINGS:
         tables[name] = json.loads(root.attrs[name])
     model = encoding.read_group(source, group="model")
+    calibrations = [
+        encoding.read_group(source, group=name)
+        for name in sorted((name for name in present if name.startswith(_CALIBRATION)), key=_number)
+    ]
     return Ledger(
         title=root.attrs["title"],
         compressible=bool(root.attrs["compressible"]),
@@ -212,8 +222,14 @@ def _ledger(root: xr.Dataset, source: Path) -> Ledger:
         notes=tuple(json.loads(root.attrs["notes"])),
         reference={name: float(root[name]) for name in json.loads(root.attrs["reference_names"])},
         model={str(name): float(variable) for name, variable in model.data_vars.items()},
+        calibrations={str(dataset.attrs.pop(_CALIBRATION_NAME)): dataset for dataset in calibrations},
         **tables,
     )
+
+
+def _number(group: str) -> int:
+    """Number of a calibration's group."""
+    return int(group.removeprefix(_CALIBRATION).strip("_") or 1)
 
 
 def _rows(root: xr.Dataset) -> tuple[Row, ...]:

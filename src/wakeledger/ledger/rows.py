@@ -282,6 +282,8 @@ class Ledger:
         Sentences about the choices that were made.
     wake_line, vortices, span : Dataset or None
         The wake's trace, the identified vortices, the span loading, where found.
+    calibrations : mapping of str to Dataset
+        Calibrations of the probes whose hole pressures were reduced, whole, by the name the survey file gives them.
     inputs : mapping of str to str
         SHA-256 of each input file by name.
     provenance : mapping of str to str
@@ -311,6 +313,7 @@ class Ledger:
     wake_line: xr.Dataset | None = None
     vortices: xr.Dataset | None = None
     span: xr.Dataset | None = None
+    calibrations: Mapping[str, xr.Dataset] = field(default_factory=lambda: MappingProxyType({}))
     inputs: Mapping[str, str] = field(default_factory=_empty)
     provenance: Mapping[str, str] = field(default_factory=_empty)
 

@@ -19,6 +19,7 @@ from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.core.points import Points
 from wakeledger.core.rotation import rotation_matrix
 from wakeledger.intake.gridding import Gridding
+from wakeledger.intake.probe.traverse import Traverse, correction_input
 from wakeledger.intake.state import State, point_state
 from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.flow import Flow
@@ -36,6 +37,7 @@ from wakeledger.physics.methods.wake_line import WakeCuts
 from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
 from wakeledger.physics.vortices.vortex_sum import WakeParts
 from wakeledger.physics.vortices.vortex_sum import evaluate as evaluate_vortex_sum
+from wakeledger.run.shear import Displacement
 from wakeledger.stream.reference import Reference, resolve_reference
 
 #: Rows the chain always gives, in the ledger's order.
@@ -89,7 +91,7 @@ class Settings:
     compressible : bool
         Whether the compressible relations are used; decided once, on the nominal values.
     primary : {"total_pressure", "velocity"}
-        Which variables were measured.
+        Which variables were measured; hole pressures give total and static pressure and direction.
     offsets : (float, float, float)
         Pitch, yaw and roll of the file's axes, rad.
     station, bound_line : float
@@ -245,6 +247,10 @@ class Chain:
         What was found once on the nominal plane.
     gradients : mapping of str to ndarray, shape (2, n)
         Derivative of each channel along y and z at the points, for errors of position; empty where there are none.
+    traverse : Traverse or None
+        How hole pressures become flow states; None where flow variables were measured.
+    displacement : Displacement or None
+        Of the probe in shear; None where it is not corrected.
     """
 
     points: Points
@@ -252,11 +258,28 @@ class Chain:
     settings: Settings
     frozen: Frozen = Frozen()
     gradients: Mapping[str, Array] = field(default_factory=lambda: MappingProxyType({}))
+    traverse: Traverse | None = None
+    displacement: Displacement | None = None
+
+    @property
+    def measured(self) -> frozenset[str]:
+        """Names of the variables measured in the flow."""
+        names = frozenset(self.points.channels)
+        return names if self.traverse is None else names & {"density", "total_temperature"}
+
+    def with_frozen_shear(self) -> Chain:
+        """The same survey with the shear that displaces the probe frozen on the nominal plane."""
+        if self.displacement is None:
+            return self
+        flow = replace(self, displacement=None).flow(self.reference())
+        speed = np.sqrt(flow.u**2 + flow.v**2 + flow.w**2)
+        return replace(self, displacement=self.displacement.frozen_on(speed))
 
     def with_gridding(self, gridding: Gridding) -> Chain:
         """The same survey on another grid, without what was found on this one."""
         frozen = replace(self.frozen, near_field=None, cuts=None, parts=None, region=None)
-        return replace(self, gridding=gridding, frozen=frozen)
+        displacement = None if self.displacement is None else self.displacement.frozen_on(None)
+        return replace(self, gridding=gridding, frozen=frozen, displacement=displacement)
 
     def reference(self, errors: Mapping[str, Array] = _NO_ERRORS) -> Reference:
         """The undisturbed stream under errors of its inputs."""
@@ -290,6 +313,9 @@ class Chain:
                     # A point believed at y + δ was measured at y: the field read at its nominal place changes by −δ ∂f.
                     array = array - shift * self.gradients[name][axis]
             values[name] = array
+        if self.traverse is not None:
+            # Errors of angles are those of the probe's mounting.
+            return self.traverse.state(values, reference, errors, rotation=rotation_matrix(*self.settings.offsets))
         pitch, yaw, roll = (
             offset + errors.get(f"angle.{name}", 0.0)
             for name, offset in zip(("pitch", "yaw", "roll"), self.settings.offsets, strict=True)
@@ -317,17 +343,23 @@ class Chain:
         u = apply(state.u)
         density: Any = reference.density
         total_temperature: Any = np.nan
-        measured_total = state.total_pressure if "total_pressure" in self.points.channels else None
+        measured_total = state.total_pressure if "total_pressure" in self.measured else None
         if (
             state.total_pressure is not None
             and state.static_pressure is not None
             and (self.settings.primary == "total_pressure" or reference.compressible)
         ):
-            total, static = apply(state.total_pressure), apply(state.static_pressure)
+            fields = [u, v, w, apply(state.total_pressure), apply(state.static_pressure)]
             if reference.compressible:
-                density = apply(state.density)
+                fields += [apply(state.density), apply(state.temperature)]
+            if self.displacement is not None:
+                error = float(errors.get(correction_input("displacement"), 0.0))
+                fields = list(self.displacement.undone(np.stack(fields), grid, error=error))
+            u, v, w, total, static = fields[:5]
+            if reference.compressible:
+                density, temperature = fields[5:]
                 warming = (u**2 + v**2 + w**2) / (2 * reference.heat_capacity)
-                total_temperature = apply(state.temperature) + warming
+                total_temperature = temperature + warming
                 if self.settings.primary == "velocity" and measured_total is not None:
                     static = total * (1 - warming / total_temperature) ** (
                         reference.heat_capacity / reference.gas_constant
@@ -514,7 +546,7 @@ class Chain:
         raised = total / flow.total_pressure
         if self.settings.primary == "velocity":
             if not reference.compressible:
-                implied = zero if "total_pressure" in self.points.channels else 0.0
+                implied = zero if "total_pressure" in self.measured else 0.0
                 return replace(flow, total_pressure=total, static_pressure=flow.static_pressure + implied)
             return replace(
                 flow,
@@ -528,7 +560,7 @@ class Chain:
             return replace(flow, total_pressure=total, u=_axial(square, flow.u))
         exponent = reference.gas_constant / reference.heat_capacity
         ratio = np.maximum(total / flow.static_pressure, 1.0) ** exponent
-        if {"temperature", "density"} & set(self.points.channels):
+        if {"temperature", "density"} & self.measured:
             # The static temperature was measured and stays.
             temperature = flow.static_pressure / (reference.gas_constant * flow.density)
             total_temperature, density = temperature * ratio, flow.density

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -19,6 +19,7 @@ from wakeledger.physics.vortices.identify import Vortex
 from wakeledger.physics.vortices.vortex_sum import VortexSum, WakeParts, find_parts, summarise
 from wakeledger.run.chain import Chain, Reduction, Settings
 from wakeledger.run.load import SurveyInput
+from wakeledger.run.traverse import RawSurvey, corrected_points, prepare_traverse
 from wakeledger.stream.reference import Reference
 
 #: Points per core length that the plane is resampled to where its own points are uneven.
@@ -45,6 +46,8 @@ class Gridded:
         How the vortex sum divides the wake.
     vortices : VortexSum
         The vortices found.
+    raw : RawSurvey or None
+        What a traverse of hole pressures adds.
     """
 
     chain: Chain
@@ -52,6 +55,7 @@ class Gridded:
     state: State
     parts: WakeParts
     vortices: VortexSum
+    raw: RawSurvey | None = None
 
 
 def grid_survey(survey: SurveyInput, *, quick: bool = False) -> Gridded:
@@ -76,8 +80,11 @@ def grid_survey(survey: SurveyInput, *, quick: bool = False) -> Gridded:
     file, points = survey.survey, survey.points
     reference = file.reference.resolve()
     settings = settings_of(survey, reference)
-    check_duplicates(points)
+    raw = prepare_traverse(survey, reference) if file.plane.primary == "hole_pressures" else None
+    check_duplicates(points if raw is None else corrected_points(points, raw.traverse, reference))
     empty = Chain(points, None, settings)  # type: ignore[arg-type]
+    if raw is not None:
+        empty = replace(empty, traverse=raw.traverse, displacement=raw.displacement)
     state = empty.state(reference)
     check_state(state, points=points, reference=reference)
     regrid = Regrid(points.y, points.z, usable_points(state), points.row)
@@ -87,17 +94,17 @@ def grid_survey(survey: SurveyInput, *, quick: bool = False) -> Gridded:
         raise SurveyError(
             "the shapes cover the whole window", file=file.path, place="[wake] exclude", remedy="leave some of it free"
         )
-    chain = Chain(points, gridding, settings)
+    chain = replace(empty, gridding=gridding)
     first = chain.reduce(estimates=False)
     parts, vortices = find_vortices(first, settings)
     if gridding.kind != "uniform" and vortices.vortices and not coarse:
         finer = min(vortex.core_length for vortex in vortices.vortices) / POINTS_PER_CORE
         if finer < 0.98 * max(gridding.grid.dy, gridding.grid.dz):
             gridding = regrid(spacing=(min(finer, gridding.grid.dy), min(finer, gridding.grid.dz)))
-            chain = Chain(points, gridding, settings)
+            chain = replace(empty, gridding=gridding)
             first = chain.reduce(estimates=False)
             parts, vortices = find_vortices(first, settings)
-    return Gridded(chain, first, state, parts, vortices)
+    return Gridded(chain, first, state, parts, vortices, raw)
 
 
 def usable_points(state: State) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
@@ -118,7 +125,8 @@ def settings_of(survey: SurveyInput, reference: Reference) -> Settings:
     return Settings(
         reference=file.reference.given(),
         compressible=reference.compressible,
-        primary=plane.primary,
+        # Hole pressures give total and static pressure and a direction: behind them it is a total-pressure survey.
+        primary="total_pressure" if plane.primary == "hole_pressures" else plane.primary,
         offsets=(axes.pitch_offset, axes.yaw_offset, axes.roll_offset),
         station=plane.station,
         bound_line=math.inf if quarter_chord is None else quarter_chord,

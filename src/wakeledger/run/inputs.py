@@ -14,6 +14,7 @@ from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Points
 from wakeledger.intake.gridding import Gridding
+from wakeledger.intake.probe.reduction import CALIBRATION_INPUTS
 from wakeledger.physics.fields.differences import ddy, ddz
 from wakeledger.run.config import Source as DeclaredSource
 from wakeledger.run.config import Survey
@@ -21,6 +22,10 @@ from wakeledger.stream.reference import Reference
 
 #: Name of the source made from a file's own standard deviations.
 SAMPLES_SOURCE = "scatter of the samples"
+
+
+#: Channels that change with time and not with the place.
+_NOT_OF_PLACE = frozenset({"time", "reference_dynamic_pressure", "reference_static_pressure"})
 
 
 class HasRows(Protocol):
@@ -48,7 +53,8 @@ def layouts(survey: Survey, points: Points, gridding: HasRows, names: Sequence[s
     Returns
     -------
     dict of str to InputLayout
-        Flow angles that only systematic sources act on are single numbers, else one number per point.
+        Flow angles and the calibration of a probe are single numbers where only systematic sources act on them, else
+        one number per point.
     """
     places = np.stack([points.y, points.z], axis=1)
     row = gridding.row_index
@@ -56,18 +62,27 @@ def layouts(survey: Survey, points: Points, gridding: HasRows, names: Sequence[s
         name
         for source in survey.uncertainty.source
         for name in source.applies_to
-        if source.effect != "systematic" and name.startswith("angle.")
+        if source.effect != "systematic" and name.split(".")[0] in ("angle", "calibration")
     }
+    raw = survey.plane.primary == "hole_pressures"
     found: dict[str, InputLayout] = {}
     for name in names:
         room, key = name.split(".", 1)
-        if room == "plane":
+        if room == "probe":
+            found[name] = InputLayout(points.channels[key].values, positions=places, row=row)
+        elif room == "correction":
+            found[name] = InputLayout(0.0)
+        elif room == "calibration":
+            # Its errors are multiples of its own standard uncertainty, so that a relative one is a multiple too.
+            each = InputLayout(np.ones(points.n), positions=places, row=row)
+            found[name] = each if room in pointwise else InputLayout(1.0)
+        elif room == "plane":
             std = standard_errors(points).get(key)
             found[name] = InputLayout(points.channels[key].values, positions=places, row=row, std=std)
         elif room == "position":
             found[name] = InputLayout(getattr(points, key), positions=places, row=row)
         elif room == "angle":
-            offset = float(getattr(survey.plane.axes, f"{key}_offset"))
+            offset = float(getattr(survey.probe[0], key) if raw else getattr(survey.plane.axes, f"{key}_offset"))
             if name in pointwise:
                 found[name] = InputLayout(np.full(points.n, offset), positions=places, row=row)
             else:
@@ -118,7 +133,7 @@ def _in_channel_units(declared: DeclaredSource, points: Points, reference: Refer
     """One source, or several of the same size where its targets are written in different units."""
     base = Source(
         name=declared.name,
-        applies_to=declared.applies_to,
+        applies_to=_inputs_of(declared.applies_to),
         effect=declared.effect,
         standard_uncertainty=declared.standard_uncertainty,
         relative=declared.relative,
@@ -130,7 +145,7 @@ def _in_channel_units(declared: DeclaredSource, points: Points, reference: Refer
     if declared.scale != "absolute":
         return [base]
     by_divisor: dict[float, list[str]] = {}
-    for name in declared.applies_to:
+    for name in base.applies_to:
         by_divisor.setdefault(_divisor(name, points, reference), []).append(name)
     if len(by_divisor) == 1:
         divisor = next(iter(by_divisor))
@@ -146,10 +161,18 @@ def _in_channel_units(declared: DeclaredSource, points: Points, reference: Refer
     ]
 
 
+def _inputs_of(applies_to: Sequence[str]) -> tuple[str, ...]:
+    """The names a source is given for as names of inputs: a calibration errs in each of what it gives."""
+    found: list[str] = []
+    for name in applies_to:
+        found.extend(CALIBRATION_INPUTS if name == "calibration" else (name,))
+    return tuple(found)
+
+
 def _divisor(name: str, points: Points, reference: Reference) -> float:
     """What a channel was divided by before it was written, 1 for a plain dimensional one."""
     room, key = name.split(".", 1)
-    channel = points.channels.get(key) if room == "plane" else None
+    channel = points.channels.get(key) if room in ("plane", "probe") else None
     if channel is None:
         return 1.0
     divisor = reference.density if channel.kinematic else 1.0
@@ -169,6 +192,8 @@ def gradients(points: Points, gridding: Gridding) -> Mapping[str, Array]:
     places = np.stack([points.z, points.y], axis=1)
     found = {}
     for name, channel in points.channels.items():
+        if name in _NOT_OF_PLACE:
+            continue
         field = gridding.apply(channel.values)
         slopes = []
         for slope in (ddy(field, grid, order=2), ddz(field, grid, order=2)):

@@ -4,15 +4,20 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from wakeledger.core.errors import DataError, SurveyError
 from wakeledger.core.names import VARIABLES
 from wakeledger.core.points import Points
+from wakeledger.intake.probe.record import Calibration
 from wakeledger.run.config import Survey, parse_survey, read_survey
+
+if TYPE_CHECKING:
+    import xarray as xr
 
 _NETCDF = (b"\x89HDF\r\n\x1a\n", b"CDF")
 
@@ -29,11 +34,14 @@ class SurveyInput:
         The points of its plane as read.
     inputs : mapping of str to str
         SHA-256 of each input file by name.
+    calibrations : mapping of str to Calibration
+        Calibrated probes by the name under which the survey file gives them.
     """
 
     survey: Survey
     points: Points
     inputs: Mapping[str, str]
+    calibrations: Mapping[str, Calibration] = field(default_factory=dict)
 
 
 def load(path: str | Path) -> SurveyInput:
@@ -65,7 +73,7 @@ def load(path: str | Path) -> SurveyInput:
 
         ledger = open_archive(path)
         survey = _kept_survey(ledger.survey_text, ledger.raw, path)
-        return SurveyInput(survey, ledger.raw, ledger.inputs)
+        return SurveyInput(survey, ledger.raw, ledger.inputs, _kept_calibrations(survey, ledger.calibrations, path))
     return load_survey(read_survey(path))
 
 
@@ -90,6 +98,25 @@ def _kept_survey(text: object, points: Points, path: Path) -> Survey:
     if not (np.isfinite(points.y).all() and np.isfinite(points.z).all() and np.isfinite(points.axes).all()):
         raise DataError("the positions of the points kept inside are damaged", file=path, remedy=remedy)
     return survey
+
+
+def _kept_calibrations(survey: Survey, kept: Mapping[str, xr.Dataset], path: Path) -> dict[str, Calibration]:
+    """The calibrations kept in an archive, which must be those that the survey file kept beside them names."""
+    from wakeledger.intake.probe.stored import from_dataset
+
+    remedy = "take the file from its backup, or reduce the survey again"
+    missing = sorted(set(_calibrations_named(survey)) - set(kept))
+    if missing:
+        raise DataError(f"the calibration {missing[0]} is not kept inside", file=path, remedy=remedy)
+    try:
+        return {name: from_dataset(dataset) for name, dataset in kept.items()}
+    except (KeyError, ValueError) as error:
+        raise DataError(f"a calibration kept inside is damaged ({error})", file=path, remedy=remedy) from error
+
+
+def _calibrations_named(survey: Survey) -> tuple[str, ...]:
+    """Names of the calibration files of a survey, each once."""
+    return tuple(dict.fromkeys(probe.calibration for probe in survey.probe if probe.calibration is not None))
 
 
 def load_survey(survey: Survey) -> SurveyInput:
@@ -122,8 +149,15 @@ def load_survey(survey: Survey) -> SurveyInput:
         samples=plane.samples,
         coordinates=2 if survey.section is None else 1,
     )
-    digest = hashlib.sha256(file.read_bytes()).hexdigest()
-    return SurveyInput(survey, points, {survey.path.name: survey.sha256, plane.file: digest})
+    inputs = {survey.path.name: survey.sha256, plane.file: hashlib.sha256(file.read_bytes()).hexdigest()}
+    calibrations = {}
+    for name in _calibrations_named(survey):
+        from wakeledger.run.calibrate import load_calibration
+
+        calibration = calibrations[name] = load_calibration(survey.resolve(name))
+        inputs[name] = hashlib.sha256(survey.resolve(name).read_bytes()).hexdigest()
+        inputs |= {own: digest for own, digest in calibration.inputs.items() if own not in inputs}
+    return SurveyInput(survey, points, inputs, calibrations)
 
 
 def refuse_unsupported(survey: Survey) -> None:

@@ -39,11 +39,12 @@ from wakeledger.run.chain import (
 from wakeledger.run.checks import Facts, all_checks
 from wakeledger.run.gridded import Regrid, core_spacings, grid_survey, usable_points
 from wakeledger.run.inputs import gradients, layouts, sources
-from wakeledger.run.inspection import inspect_plane
+from wakeledger.run.inspection import inspect_plane, inspect_section
 from wakeledger.run.load import SurveyInput, load, refuse_unsupported
 from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
 from wakeledger.run.numerics import numerical_terms
-from wakeledger.run.section.survey import inspect_section, reduce_section
+from wakeledger.run.section.survey import reduce_section
+from wakeledger.run.traverse_notes import traverse_notes
 
 __all__ = ["SurveyInput", "inspect", "load", "prepare", "reduce"]
 
@@ -188,13 +189,14 @@ def prepare(survey: SurveyInput) -> Prepared:
 def _prepare(survey: SurveyInput) -> Prepared:
     file, points = survey.survey, survey.points
     gridded = grid_survey(survey)
-    chain, first, vortices = gridded.chain, gridded.first, gridded.vortices
+    chain, first, vortices = gridded.chain.with_frozen_shear(), gridded.first, gridded.vortices
     reference, gridding = first.reference, chain.gridding
     near_field = chain.near_field(first.vorticity, first.flow.grid)
     line = _line(first)
     kept = None if math.isnan(vortices.induced_drag) else gridded.parts
     chain = replace(chain, frozen=Frozen(near_field, line.cuts if line.reason is None else None, kept))
-    declared = sources(file, points, reference)
+    raw = gridded.raw
+    declared = sources(file, points, reference) + (() if raw is None else raw.sources)
     names = sorted({name for source in declared for name in source.applies_to})
     inputs = layouts(file, points, gridding, names)
     if any(name.startswith("position.") for name in names):
@@ -214,7 +216,8 @@ def _prepare(survey: SurveyInput) -> Prepared:
         near_field=near_field,
     )
     expected = _expected(chain, nominal)
-    notes = (*file.notes(), *tables.notes(survey, chain, nominal, gridded.state), *noise_notes)
+    made = () if raw is None else traverse_notes(raw, chain, nominal)
+    notes = (*file.notes(), *made, *tables.notes(survey, chain, nominal, gridded.state), *noise_notes)
     return Prepared(chain, nominal, outer, line, vortices, expected, declared, inputs, noises, notes)
 
 
@@ -397,6 +400,7 @@ def _ledger(
                 nominal.reference,
             )
         ),
+        calibrations=tables.calibration_tables(survey.calibrations),
         inputs=dict(survey.inputs),
         provenance=tables.provenance(command),
     )

@@ -3,16 +3,17 @@
 from __future__ import annotations
 
 import platform
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from datetime import UTC, datetime
 from importlib.metadata import PackageNotFoundError, version
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from wakeledger.core.flags import decode
+from wakeledger.core.flags import Flag, decode
 from wakeledger.core.grid import Array
 from wakeledger.core.plane import make_plane
+from wakeledger.intake.probe.record import Calibration
 from wakeledger.intake.state import State, nonphysical
 from wakeledger.physics.fields.differences import axial_vorticity, crossflow_divergence
 from wakeledger.physics.fields.outer_flow import LEAST_SHARE
@@ -35,6 +36,10 @@ def plane_table(chain: Chain, nominal: Reduction) -> xr.Dataset:
     """The reduced plane in wind axes with its mask and flags."""
     flow, reference = nominal.flow, nominal.reference
     flags = chain.gridding.flag.astype(np.int32)
+    if chain.traverse is not None:
+        values = {name: channel.values for name, channel in chain.points.channels.items()}
+        beyond = chain.gridding.near(chain.traverse.out_of_range(values, chain.reference())) & chain.gridding.filled
+        flags |= np.where(beyond, np.int32(Flag.OUT_OF_RANGE), np.int32(0))
     fields = {
         "u": flow.u,
         "v": flow.v,
@@ -116,6 +121,13 @@ def vortex_table(vortices: Sequence[Vortex]) -> xr.Dataset | None:
             ("u", np.array([x.u for x in vortices]), "m s-1", "axial velocity at the centre"),
         ),
     )
+
+
+def calibration_tables(calibrations: Mapping[str, Calibration]) -> dict[str, xr.Dataset]:
+    """Calibrations of probes as they are kept, by name."""
+    from wakeledger.intake.probe.stored import to_dataset
+
+    return {name: to_dataset(calibration) for name, calibration in calibrations.items()}
 
 
 def span_table(loading: SpanLoading) -> xr.Dataset:
@@ -202,7 +214,7 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
     else:
         found.append(
             f"The total pressure was zeroed in the outer flow: {0.0 - nominal.loss_zero:+.3g} Pa were taken out"
-            f" ({_counts(nominal.loss_zero * region.mask.sum() * grid.cell_area, nominal, chain)})."
+            f" ({counts_text(nominal.loss_zero * region.mask.sum() * grid.cell_area, nominal, chain)})."
         )
     pitch, yaw = (np.degrees(np.arctan2(nominal.crossflow_offset[k], nominal.reference.speed)) for k in (1, 0))
     found.append(
@@ -227,6 +239,7 @@ def _were(number: int) -> str:
     return "was" if number == 1 else "were"
 
 
-def _counts(force: float, nominal: Reduction, chain: Chain) -> str:
+def counts_text(force: float, nominal: Reduction, chain: Chain) -> str:
+    """A drag in counts, or in newtons where there is no reference area."""
     coefficient = force / (nominal.reference.dynamic_pressure * chain.settings.reference_area)
     return f"{1e4 * coefficient:+.2f} counts" if np.isfinite(coefficient) else f"{force:+.3g} N"

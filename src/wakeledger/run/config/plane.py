@@ -27,12 +27,8 @@ COLUMN_UNITS: Mapping[str, str] = MappingProxyType(
         **POSITIONS,
         **{name: variable.unit for name, variable in VARIABLES.items()},
         "velocity": "m s-1",
-        **dict.fromkeys(HOLES, "Pa"),
-        "reference_dynamic_pressure": "Pa",
-        "reference_static_pressure": "Pa",
         "row": "1",
         "tube": "1",
-        "time": "s",
     }
 )
 

@@ -162,7 +162,11 @@ class Survey(Table):
         for plane in self.planes:
             holes = sorted(name for name in plane.columns if re.fullmatch(r"p\d", name))
             raw = plane.primary == "hole_pressures"
-            add(raw, "[plane] primary", "hole pressures are not reduced yet; give total pressure and flow direction")
+            add(
+                raw and self.section is not None,
+                "[plane] primary",
+                "hole pressures of a line traverse are not reduced yet; give total and static pressure",
+            )
             add(
                 holes and not raw,
                 f"[plane.columns] {', '.join(holes)}",
@@ -170,7 +174,7 @@ class Survey(Table):
             )
             references = sorted(name for name in plane.columns if name.startswith("reference_"))
             add(
-                references,
+                references and not raw,
                 f"[plane.columns] {', '.join(references)}",
                 "the reference of each point is not used yet; leave it out, and give the drift as an uncertainty",
             )
@@ -184,10 +188,18 @@ class Survey(Table):
                 "[plane.columns] tube",
                 "rakes are not assembled yet; give each point's position",
             )
+        holes_measured = any(plane.primary == "hole_pressures" for plane in self.planes)
         add(
-            self.probe,
+            self.probe and not holes_measured,
             "[probe]",
-            "probe calibrations are not applied yet; give velocities and pressures, and leave it out",
+            'a probe is only used with primary = "hole_pressures"; leave it out',
+        )
+        rake = any(probe.tube is not None or probe.offset is not None or probe.role == "static" for probe in self.probe)
+        add(
+            len(self.probe) > 1 or rake,
+            "[[probe]]",
+            "rakes of several tubes and separate static tubes are not assembled yet; keep one [probe] without tube,"
+            " offset and role",
         )
         add(self.empty_tunnel, "[empty_tunnel]", "an empty-tunnel survey is not subtracted yet; leave it out")
         if self.boundary is not None:
@@ -204,9 +216,9 @@ class Survey(Table):
         for source in self.uncertainty.source:
             later = [name for name in source.applies_to if name.split(".")[0] in ("probe", "calibration")]
             add(
-                later,
+                later and not holes_measured,
                 f"[[uncertainty.source]] ({source.name}) applies_to",
-                f"{', '.join(later)} is not perturbed yet; give the uncertainty of the reduced quantities",
+                f'{", ".join(later)} is only perturbed with primary = "hole_pressures"; give that of what was measured',
             )
         return found
 
@@ -232,7 +244,10 @@ class Survey(Table):
         idle = [key for key in ("weight", "load_factor") if getattr(self.reference, key) is not None]
         found.extend(f"[reference] {key}: it is kept in the archive, and no row uses it" for key in idle)
         for plane in self.planes:
-            kept = [name for name in plane.columns if name == "time" or name.startswith(("reynolds", "turbulent"))]
+            idle_here = (
+                ("reynolds", "turbulent") if plane.primary == "hole_pressures" else ("reynolds", "turbulent", "time")
+            )
+            kept = [name for name in plane.columns if name.startswith(idle_here)]
             if kept:
                 found.append(f"[plane.columns] {', '.join(kept)}: kept in the archive, and no row uses them")
         if not self.uncertainty.source:

@@ -1,0 +1,496 @@
+"""The raw traverse of a survey file: its probe, and the corrections of its readings worked out once.
+
+In this order: zeros, reference condition, lag, backlash, drift; the displacement in shear acts on the gridded plane.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from wakeledger.confidence.sources import Source
+from wakeledger.core.errors import DataError, SurveyError
+from wakeledger.core.grid import Array
+from wakeledger.core.points import Points
+from wakeledger.intake.gridding.lattice import find_lattice, rows_in_order
+from wakeledger.intake.probe.backlash import correct_backlash, estimate_backlash
+from wakeledger.intake.probe.displacement import COEFFICIENT, STANDARD_UNCERTAINTY
+from wakeledger.intake.probe.lag import correct_lag, estimate_lag, make_rate_filter
+from wakeledger.intake.probe.mounting import Mounting
+from wakeledger.intake.probe.readings import (
+    check_dynamic_pressure,
+    estimate_drift,
+    find_revisits,
+    progress,
+    subtract_zeros,
+)
+from wakeledger.intake.probe.record import Calibration
+from wakeledger.intake.probe.reduction import CALIBRATION_INPUTS, HoleReduction
+from wakeledger.intake.probe.traverse import DYNAMIC, STATIC, Addition, Traverse, Tube, correction_input
+from wakeledger.run.config.tables import HoleReadings, ProbeTable
+from wakeledger.run.load import SurveyInput
+from wakeledger.run.shear import Displacement
+from wakeledger.stream.reference import Reference
+
+#: Names of the corrections.
+ZEROS, REFERENCE, LAG, BACKLASH, DRIFT, SHEAR = (
+    "zeros",
+    "reference readings",
+    "lag",
+    "backlash",
+    "drift",
+    "displacement",
+)
+#: How well a lag or a backlash is known that the survey file states, as a share of it.
+STATED = 0.1
+#: A drift is taken out if it is this unlikely to be the scatter of the repeats, else it is carried as an uncertainty.
+SIGNIFICANCE = 0.05
+_CALIBRATION = "probe calibration"
+
+
+@dataclass(frozen=True, eq=False)
+class RawSurvey:
+    """What a raw traverse adds to a survey.
+
+    Attributes
+    ----------
+    traverse : Traverse
+        From readings to flow states.
+    displacement : Displacement or None
+        Correction on the gridded plane.
+    sources : tuple of Source
+        Of the calibration, unless the survey file declares its own, and of the corrections.
+    notes : tuple of str
+        Sentences about what was found and what was not corrected.
+    said : mapping of str to str
+        A sentence about each correction that is made, by name, to be completed by what it is worth.
+    """
+
+    traverse: Traverse
+    displacement: Displacement | None
+    sources: tuple[Source, ...]
+    notes: tuple[str, ...]
+    said: Mapping[str, str]
+
+
+def prepare_traverse(survey: SurveyInput, reference: Reference) -> RawSurvey:
+    """The reduction of a survey's hole pressures, every correction worked out.
+
+    Parameters
+    ----------
+    survey : SurveyInput
+        A survey with ``primary = "hole_pressures"``.
+    reference : Reference
+        The nominal stream.
+
+    Returns
+    -------
+    RawSurvey
+
+    Raises
+    ------
+    InputError
+        If the survey file, the calibration and the readings do not fit together.
+    """
+    return _Preparation(survey, reference).run()
+
+
+@dataclass(frozen=True, eq=False)
+class _Path:
+    """The points in the order in which they were taken."""
+
+    order: NDArray[np.intp]
+    time: Array | None
+    row: NDArray[np.int64]
+    y: Array
+    z: Array
+
+    @property
+    def n(self) -> int:
+        return int(self.order.size)
+
+    @property
+    def clock(self) -> Array:
+        """Time, s, or the number of each point where no time was kept."""
+        return np.arange(self.n, dtype=float) if self.time is None else self.time
+
+    @property
+    def along_and_across(self) -> tuple[Array, Array]:
+        """Positions along the rows and across them."""
+        same = np.diff(self.row) == 0
+        by_y, by_z = (float(np.abs(np.diff(x))[same].sum()) for x in (self.y, self.z))
+        return (self.y, self.z) if by_y >= by_z else (self.z, self.y)
+
+    def taken(self, values: Array) -> Array:
+        """Values of the file's order in the order in which they were taken, shape (..., n)."""
+        return values[..., self.order]
+
+    def filed(self, values: Array) -> Array:
+        """Undo `taken`."""
+        found = np.empty_like(values)
+        found[..., self.order] = values
+        return found
+
+
+class _Preparation:
+    """Works out one correction after the other."""
+
+    def __init__(self, survey: SurveyInput, reference: Reference) -> None:
+        self.survey, self.points, self.reference = survey.survey, survey.points, reference
+        self.probe: ProbeTable = self.survey.probe[0]
+        self.values = {name: channel.values for name, channel in self.points.channels.items()}
+        self.calibration = _calibration(survey, self.probe)
+        self.holes = tuple(f"p{number}" for number in range(1, self.calibration.holes + 1))
+        self._check_columns()
+        self.path = _path(self.points)
+        self.sources: list[Source] = []
+        self.notes: list[str] = []
+        self.said: dict[str, str] = {}
+        probe = self.probe
+        reduction = HoleReduction(
+            self.calibration,
+            Mounting(pitch=probe.pitch, yaw=probe.yaw, roll=probe.roll),
+            tip_diameter=math.nan if probe.tip_diameter is None else probe.tip_diameter,
+        )
+        kinds = {hole: self.points.channels[hole] for hole in self.holes}
+        self.traverse = Traverse((Tube(reduction),), kinds)
+
+    def run(self) -> RawSurvey:
+        self._calibrated()
+        self._zeros()
+        self._readings()
+        self._lag()
+        self._backlash()
+        self._drift()
+        displacement = self._shear()
+        self.notes.append(
+            "The probe was not corrected for the nearness of walls (none are given), nor for a misalignment of its head"
+            " (the outer flow's angles below show the sum of that and of the stream's own)."
+        )
+        traverse = self.traverse.frozen_on(self.values, self.reference)
+        beyond = int(np.count_nonzero(traverse.out_of_range(self.values, self.reference)))
+        if beyond:
+            self.notes.append(
+                f"{beyond} of {self.points.n} points lie outside the calibrated range: they are flagged out_of_range"
+                " and count as missing."
+            )
+        return RawSurvey(traverse, displacement, tuple(self.sources), tuple(self.notes), self.said)
+
+    # -- what is there ----------------------------------------------------------------------------------------------
+
+    def _check_columns(self) -> None:
+        for hole in self.holes:
+            if hole not in self.values:
+                raise DataError(
+                    f"hole {hole} has no column, and the probe is calibrated with {len(self.holes)} holes",
+                    place="[plane.columns]",
+                    remedy=f"add {hole}, or give the calibration of the probe that was used",
+                )
+        extra = sorted(
+            name for name in self.values if name[:1] == "p" and name[1:].isdigit() and name not in self.holes
+        )
+        if extra:
+            raise DataError(
+                f"{', '.join(extra)} has a column, and the probe is calibrated with {len(self.holes)} holes",
+                place="[plane.columns]",
+                remedy="leave it out, or give the calibration of the probe that was used",
+            )
+
+    def _calibrated(self) -> None:
+        bad = self.calibration.bad_points
+        if bad:
+            lines = ", ".join(str(point.line) for point in bad[:5]) + (", ..." if len(bad) > 5 else "")
+            self.notes.append(
+                f"The calibration does not rest on {len(bad)} of its {self.calibration.table.n} points, which lie off"
+                f" the smooth surface through all others (lines {lines} of its table)."
+            )
+        pitch, yaw, total, static = self.calibration.standard_uncertainty()
+        self.notes.append(
+            f"The calibration ({self.calibration.holes} holes, {self.calibration.table.n} points) is known to"
+            f" {math.degrees(pitch):.2g} deg in pitch, {math.degrees(yaw):.2g} deg in yaw, {total:.2%} of q in total"
+            f" and {static:.2%} in static pressure, by points left out."
+        )
+        declared = self.survey.uncertainty.source
+        if not any("calibration" in source.applies_to for source in declared):
+            self.sources.append(Source(_CALIBRATION, CALIBRATION_INPUTS, "systematic", 1.0))
+        if not declared:
+            self.notes.append(
+                "No source of uncertainty is declared: only those of the calibration and of the corrections are in the"
+                " figures, not noise, mounting and reference readings."
+            )
+
+    # -- corrections of the readings --------------------------------------------------------------------------------
+
+    def _zeros(self) -> None:
+        given = self.probe.zeros
+        if given is None or (given.before is None and given.after is None):
+            self.notes.append("No zeros of the holes are given: their readings are taken as they stand.")
+            return
+        for hole in self.holes:
+            if self.points.channels[hole].normalised_by is not None:
+                raise SurveyError(
+                    f"zeros are given, and {hole} is normalised_by dynamic_pressure",
+                    place="[probe] zeros",
+                    remedy="give the holes as read, in a unit of pressure, or take the zeros out of them beforehand",
+                )
+        first, last = (
+            None if table is None else self._readings_of(table, side)
+            for table, side in ((given.before, "before"), (given.after, "after"))
+        )
+        only = first is None or last is None
+        before = last if first is None else first
+        assert before is not None
+        path = self.path
+        done = progress(path.n, time=path.time)
+        correction = subtract_zeros(
+            path.taken(np.stack([self.values[hole] for hole in self.holes])),
+            before[:, None],
+            None if only else np.asarray(last)[:, None],
+            done,
+        )
+        drifts = {} if only else self._one_per_hole(ZEROS, path.filed(correction.per_sigma))
+        self._add(ZEROS, path.filed(correction.size), drifts, raw=True)
+        size = float(np.max(np.abs(before)))
+        change = "one reading, so their drift is unknown and in no figure"
+        if first is not None and last is not None:
+            change = f"they changed by up to {np.max(np.abs(last - first)):.3g} Pa, taken as even"
+        self.said[ZEROS] = f"Zeros of the holes (up to {size:.3g} Pa; {change}) were taken out"
+        self._carry(ZEROS, "zeros of the holes", tuple(drifts))
+
+    def _readings_of(self, table: HoleReadings, side: str) -> Array:
+        found = [getattr(table, hole) for hole in self.holes]
+        for hole, value in zip(self.holes, found, strict=True):
+            if value is None:
+                raise SurveyError(
+                    f"{hole} is missing", place=f"[probe] zeros.{side}", remedy="give the zero of every hole"
+                )
+        return np.array(found, dtype=float)
+
+    def _readings(self) -> None:
+        names = [name for name in (DYNAMIC, STATIC) if name in self.values]
+        if not names:
+            self.notes.append(
+                "The stream was not read at each point: it is taken to have held the reference condition."
+            )
+            return
+        if DYNAMIC in names:
+            check_dynamic_pressure(self.values[DYNAMIC], self.reference.dynamic_pressure, line=self.points.line)
+        for name in names:
+            missing = int(np.count_nonzero(np.isnan(self.values[name])))
+            if missing:
+                self.notes.append(f"{missing} points have no {name} and count as missing.")
+        spread = ""
+        if DYNAMIC in names:
+            low, high = (
+                float(x(self.values[DYNAMIC])) / self.reference.dynamic_pressure for x in (np.nanmin, np.nanmax)
+            )
+            spread = f" (q {low:.2%} to {high:.2%} of the reference)"
+        self.said[REFERENCE] = f"Each point was brought to the reference condition by its own readings{spread}"
+
+    def _lag(self) -> None:
+        lag = self.probe.lag
+        if not lag:
+            self.notes.append("No lag of the tubing is given: none was taken out.")
+            return
+        path = self.path
+        if path.time is None:
+            raise SurveyError(
+                "a lag needs the time of each point", place="[probe] lag", remedy="add time to [plane.columns]"
+            )
+        pressures = self._pressures()
+        along, across = path.along_and_across
+        rates = make_rate_filter(path.time, path.row, values=pressures)
+        sigma, how = STATED * lag, f"taken as known to {STATED:.0%}"
+        if not self.probe.backlash:
+            found = estimate_lag(along, across, path.row, path.time, pressures)
+            if math.isfinite(found.value) and math.isfinite(found.standard_uncertainty):
+                sigma = math.hypot(found.standard_uncertainty, found.value - lag)
+                how = (
+                    f"rows taken both ways show {1e3 * found.value:.3g} +- {1e3 * found.standard_uncertainty:.2g} ms,"
+                    " and the difference is its uncertainty"
+                )
+        correction = correct_lag(pressures, rates, lag=lag, standard_uncertainty=sigma)
+        self._add(LAG, path.filed(correction.size), self._one_for_all(LAG, path.filed(correction.per_sigma)))
+        self.said[LAG] = f"A lag of the tubing of {1e3 * lag:.3g} ms ({how}) was taken out"
+        self._carry(LAG, "lag of the tubing", (correction_input(LAG),))
+
+    def _backlash(self) -> None:
+        asked = self.probe.backlash
+        if not asked:
+            self.notes.append("No backlash of the traverse is given: none was taken out.")
+            return
+        path, pressures = self.path, self._pressures()
+        along, across = path.along_and_across
+        if asked == "estimate":
+            found = estimate_backlash(along, across, path.row, pressures)
+            if found.reason is not None or not math.isfinite(found.standard_uncertainty):
+                why = found.reason or "its uncertainty cannot be told"
+                self.notes.append(f"The backlash of the traverse could not be estimated ({why}): none was taken out.")
+                return
+            value, sigma = found.value, found.standard_uncertainty
+            how = f"estimated from {found.rows} rows, +- {1e3 * sigma:.2g} mm"
+        else:
+            value, sigma, how = asked, STATED * asked, f"taken as known to {STATED:.0%}"
+        correction = correct_backlash(pressures, along, path.row, backlash=value, standard_uncertainty=sigma)
+        if not np.any(correction.per_sigma):
+            self.notes.append("All rows were taken in the same direction: a backlash moves the plane as a whole.")
+            return
+        parts = self._one_for_all(BACKLASH, path.filed(correction.per_sigma))
+        self._add(BACKLASH, path.filed(correction.size), parts)
+        self.said[BACKLASH] = f"A backlash of the traverse of {1e3 * value:.3g} mm ({how}) was taken out"
+        self._carry(BACKLASH, "backlash of the traverse", (correction_input(BACKLASH),))
+
+    def _drift(self) -> None:
+        path = self.path
+        place = find_revisits(path.y, path.z)
+        state = self.traverse.state(self.values, self.reference)
+        assert state.total_pressure is not None and state.static_pressure is not None
+        total, static = path.taken(state.total_pressure), path.taken(state.static_pressure)
+        found = estimate_drift(np.stack([total, total - static]), path.clock, place)
+        if found is None:
+            self.notes.append(
+                "No place was visited again: a drift of the readings over the traverse is unknown and in no figure."
+            )
+            return
+        since = path.clock - float(np.mean(path.clock))
+        here = (place >= 0) & np.isfinite(total)
+        level, dynamic = (float(np.mean(x[here])) for x in (total, total - static))
+        zero = self.reference.static_pressure
+        pressures = self._pressures()
+
+        def on_holes(by_total: Array, by_dynamic: Array) -> Array:
+            # The change of the holes that changes H and q of the visited places by this much, everywhere alike.
+            gain = by_dynamic / dynamic
+            return by_total - gain * (level - zero) + gain * (pressures - zero)
+
+        still = np.zeros(path.n)
+        size = np.zeros(pressures.shape)
+        parts: dict[str, dict[str, Array]] = {}
+        sentences = []
+        names = (("total pressure", "total_pressure"), ("dynamic pressure", "dynamic_pressure"))
+        span = float(np.ptp(path.clock))
+        for index, (name, key) in enumerate(names):
+            rate, sigma = float(found.rate[index]), float(found.standard_uncertainty[index])
+            clear = math.isfinite(sigma) and abs(rate) > _quantile(found.degrees_of_freedom) * sigma
+            unit = on_holes(*((since, still) if index == 0 else (still, since)))
+            if clear:
+                size -= rate * unit
+            carried = sigma if clear else math.hypot(rate, np.nan_to_num(sigma))
+            parts |= self._one_for_all(f"{DRIFT}.{key}", path.filed(carried * unit))
+            share = span / self.reference.dynamic_pressure
+            known = f"+- {abs(sigma) * share:.2%}" if math.isfinite(sigma) else "one repeat, so its scatter is unknown"
+            done = "taken out" if clear else "not clear of the scatter, so carried as an uncertainty"
+            sentences.append(f"{name} {rate * share:+.2%} of q ({known}; {done})")
+        self._add(DRIFT, path.filed(size), parts)
+        self.said[DRIFT] = (
+            f"{found.visits} visits to {found.places} place(s) show a drift over the traverse of"
+            f" {' and '.join(sentences)}; what was taken out"
+        )
+        self._carry(DRIFT, "drift of the readings", tuple(parts))
+
+    def _shear(self) -> Displacement | None:
+        coefficient, diameter = self.probe.displacement, self.probe.tip_diameter
+        if coefficient is None:
+            coefficient = COEFFICIENT if diameter is not None else 0.0
+        if not coefficient:
+            why = "switched off" if self.probe.displacement is not None else "tip_diameter is not given"
+            self.notes.append(f"The probe's displacement in shear was not corrected ({why}).")
+            return None
+        if diameter is None:
+            raise SurveyError(
+                "a displacement needs the diameter of the tip",
+                place="[probe] displacement",
+                remedy='add tip_diameter = "3.2 mm", or write displacement = 0',
+            )
+        self.said[SHEAR] = (
+            f"The displacement in shear of {coefficient:g} tip diameters (+- {STANDARD_UNCERTAINTY:g}, common practice)"
+            " was taken out"
+        )
+        self._carry(SHEAR, "displacement in shear", (correction_input(SHEAR),))
+        return Displacement(diameter, coefficient)
+
+    # -- bookkeeping ------------------------------------------------------------------------------------------------
+
+    def _pressures(self) -> Array:
+        """Hole pressures as corrected so far, in the order in which they were taken, shape (holes, n)."""
+        found = self.traverse.pressures(self.values, self.reference)
+        return self.path.taken(np.stack([found[hole] for hole in self.holes]))
+
+    def _one_for_all(self, name: str, per_sigma: Array) -> dict[str, dict[str, Array]]:
+        return {correction_input(name): dict(zip(self.holes, np.nan_to_num(per_sigma), strict=True))}
+
+    def _one_per_hole(self, name: str, per_sigma: Array) -> dict[str, dict[str, Array]]:
+        return {
+            correction_input(f"{name}.{hole}"): {hole: change}
+            for hole, change in zip(self.holes, np.nan_to_num(per_sigma), strict=True)
+        }
+
+    def _add(self, name: str, size: Array, per_sigma: Mapping[str, Mapping[str, Array]], *, raw: bool = False) -> None:
+        sizes = dict(zip(self.holes, np.nan_to_num(size), strict=True))
+        addition = Addition(name, sizes, dict(per_sigma), raw=raw)
+        self.traverse = replace(self.traverse, additions=(*self.traverse.additions, addition))
+
+    def _carry(self, name: str, label: str, inputs: tuple[str, ...]) -> None:
+        if inputs:
+            self.sources.append(Source(f"{label} (correction)", inputs, "systematic", 1.0))
+
+
+def _quantile(freedom: int) -> float:
+    """Two-sided quantile of Student's t."""
+    from scipy.special import stdtrit
+
+    return float(stdtrit(freedom, 1 - SIGNIFICANCE / 2)) if freedom > 0 else math.inf
+
+
+def _calibration(survey: SurveyInput, probe: ProbeTable) -> Calibration:
+    found = survey.calibrations.get(probe.calibration or "")
+    if found is None:
+        raise SurveyError(
+            f"the calibration {probe.calibration!r} was not read",
+            place="[probe] calibration",
+            remedy="load the survey from its file, or from a ledger that holds the calibration",
+        )
+    return found
+
+
+def _path(points: Points) -> _Path:
+    channel = points.channels.get("time")
+    time = None if channel is None else channel.values
+    if time is not None:
+        missing = np.flatnonzero(~np.isfinite(time))
+        if missing.size:
+            raise DataError(
+                f"time is missing at {missing.size} point(s)",
+                place=f"line {points.line[missing[0]]}",
+                remedy="give the time of every point, or leave its column out",
+            )
+    order = np.arange(points.n) if time is None else np.argsort(time, kind="stable")
+    y, z = points.y[order], points.z[order]
+    row = points.row[order] if points.row is not None else _rows_travelled(y, z)
+    row = np.cumsum(np.concatenate([[0], np.diff(row) != 0])).astype(np.int64)
+    return _Path(order, None if time is None else time[order], row, y, z)
+
+
+def _rows_travelled(y: Array, z: Array) -> NDArray[np.int64]:
+    """Row of each point, from positions in the order in which they were taken: a new one where the probe turns back."""
+    line = rows_in_order(y, z, find_lattice(y, z))
+    step_y, step_z = np.diff(y), np.diff(z)
+    along = step_y if np.abs(step_y).sum() >= np.abs(step_z).sum() else step_z
+    new = np.concatenate([[False], np.diff(line) != 0])
+    turned = np.zeros(y.size, dtype=bool)
+    turned[2:] = along[1:] * along[:-1] < 0
+    # The point after a change of line has come from another row: its step tells no direction.
+    turned[1:] &= ~new[:-1]
+    return np.cumsum(new | turned).astype(np.int64)
+
+
+def corrected_points(points: Points, traverse: Traverse, reference: Reference) -> Points:
+    """The points with hole pressures that repeat where the flow does: at the reference condition and corrected."""
+    values = {name: channel.values for name, channel in points.channels.items()}
+    pressures = traverse.pressures(values, reference)
+    channels = {hole: replace(points.channels[hole], values=found) for hole, found in pressures.items()}
+    return replace(points, channels=channels)
