@@ -7,7 +7,7 @@ from unicodedata import east_asian_width
 import pytest
 
 from wakeledger.core.flags import Flag
-from wakeledger.ledger.inspection import ChannelSummary, EdgeState, Inspection
+from wakeledger.ledger.inspection import AngleRange, ChannelSummary, EdgeState, Inspection, Recommendation, Repeats
 from wakeledger.ledger.rows import Check
 from wakeledger.present.terminal import inspection_text, ledger_text
 from wakeledger.present.wording import STATEMENT, signed, words
@@ -34,7 +34,7 @@ def inspection():
         ),
         edges=(EdgeState("lower", 0.031, 0.02), EdgeState("port")),
         checks=(Check("missing_points", "pass", 0.0013, 0.02, "0.13 % of the cells are missing."),),
-        recommendations=("Lower the window's edge by 40 mm.",),
+        recommendations=(Recommendation("widen", "Lower the window's edge by 40 mm.", side="lower", distance=0.04),),
         test={"run": "117"},
         reference={"speed": 42.0},
     )

@@ -15,8 +15,8 @@ from wakeledger.cli import exits, screen
 def inspect(survey: Path, as_json: bool) -> int:
     """Read and check a survey without reducing it.
 
-    Prints the grid that was found, its coverage, missing and flagged points, the range and scatter of each variable,
-    the state of the window's edges, and what to do.
+    Prints the grid that was found, a map of its points, the range and noise of each variable, the flow angles, how well
+    points repeat, the state of the window's edges, the checks, and what to do next.
     """
     from wakeledger.run.survey import inspect as inspect_survey
     from wakeledger.run.survey import load
@@ -29,5 +29,6 @@ def inspect(survey: Path, as_json: bool) -> int:
     else:
         from wakeledger.present.terminal import inspection_text
 
-        screen.show(inspection_text(found, width=screen.width(), colour=screen.colour()))
+        text = inspection_text(found, width=screen.width(), colour=screen.colour(), unicode=screen.unicode())
+        screen.show(text)
     return exits.CHECK_FAILED if found.failed else exits.DONE

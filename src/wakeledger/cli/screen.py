@@ -27,6 +27,11 @@ def colour() -> bool:
     return sys.stdout.isatty() and not os.environ.get("NO_COLOR") and os.environ.get("TERM") != "dumb"
 
 
+def unicode() -> bool:
+    """Whether standard output takes characters beyond ASCII."""
+    return (sys.stdout.encoding or "ascii").lower().replace("_", "-").startswith("utf")
+
+
 def show(text: str) -> None:
     """Write a text to standard output; characters its encoding does not have become question marks.
 

@@ -8,6 +8,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import TYPE_CHECKING
 
 from wakeledger.ledger.rounding import UNKNOWN, rounded, significant
+from wakeledger.present.map_text import map_lines, plain
 from wakeledger.present.wording import (
     STATEMENT,
     VERDICT_WORDS,
@@ -23,7 +24,7 @@ if TYPE_CHECKING:
     from rich.console import Console, RenderableType
     from rich.table import Table
 
-    from wakeledger.ledger.inspection import Inspection
+    from wakeledger.ledger.inspection import AngleRange, ChannelSummary, EdgeState, Inspection
     from wakeledger.ledger.rows import Check, Comparison, CrossCheck, Ledger, Row
 
 #: Lines longer than this are hard to read, however wide the terminal is.
@@ -88,7 +89,7 @@ def ledger_text(ledger: Ledger, *, width: int = 100, colour: bool = False) -> st
     return _text(console)
 
 
-def inspection_text(inspection: Inspection, *, width: int = 100, colour: bool = False) -> str:
+def inspection_text(inspection: Inspection, *, width: int = 100, colour: bool = False, unicode: bool = True) -> str:
     """What `inspect` found, as text.
 
     Parameters
@@ -99,39 +100,95 @@ def inspection_text(inspection: Inspection, *, width: int = 100, colour: bool = 
         Columns of the terminal.
     colour : bool
         Whether to write the terminal's colour codes.
+    unicode : bool
+        Whether the terminal has other characters than ASCII.
 
     Returns
     -------
     str
         Lines without trailing blanks, ended by a line feed.
     """
-    console = _console(width, colour)
+    # Some characters become several in ASCII.
+    console = _console(width if unicode else width - 4, colour)
     _heading(console, inspection.title, inspection.test)
     facts = _table(("", "left"), ("", "left"), header=False)
     for name, fact in _facts(inspection):
         facts.add_row(name, fact)
     console.print(facts)
+    if inspection.map is not None:
+        line = inspection.map.is_line
+        _section(console, "Places along the traverse" if line else "Map of the points, seen from behind")
+        for text in map_lines(inspection.map, width=console.width, unicode=unicode):
+            console.print(text, no_wrap=True, crop=False)
     if inspection.channels:
         _section(console, "Measured variables")
-        channels = _table(
-            ("variable", "left"), ("from", "right"), ("to", "right"), ("unit", "left"), ("scatter", "right"),
-            ("missing", "right"),
-        )  # fmt: skip
-        for channel in inspection.channels:
-            low, high, noise = (_figure(x) for x in (channel.minimum, channel.maximum, channel.noise))
-            missing = str(channel.missing) if channel.missing else "–"
-            channels.add_row(words(channel.name), low, high, unit_text(channel.unit), noise, missing)
-        console.print(channels)
+        console.print(_channels_table(inspection.channels))
+    if inspection.angles:
+        _section(console, "Flow angles, with where they occur (y, z in m)")
+        console.print(_angles_table(inspection.angles))
     if inspection.edges:
-        _section(console, "Edges of the window, largest values inside the wake region")
-        edges = _table(("edge", "left"), ("loss / q", "right"), ("vorticity / largest", "right"))
-        for edge in inspection.edges:
-            edges.add_row(edge.side, _figure(edge.total_pressure_loss, 2), _figure(edge.vorticity, 2))
-        console.print(edges)
+        _section(console, "Edges of the window, inside the wake region")
+        console.print(_edges_table(inspection.edges))
     _checks(console, inspection.checks)
-    _sentences(console, "What to do", inspection.recommendations)
+    _sentences(console, "What to do", [advice.message for advice in inspection.recommendations])
     _sentences(console, "Notes", inspection.notes)
-    return _text(console)
+    return _text(console) if unicode else plain(_text(console))
+
+
+def _channels_table(channels: Sequence[ChannelSummary]) -> Table:
+    """One line for each variable; columns that would be empty are left out."""
+    declared = any(math.isfinite(channel.declared_noise) for channel in channels)
+    repeated = any(math.isfinite(channel.repeatability) for channel in channels)
+    missing = any(channel.missing for channel in channels)
+    shown = (True, True, True, True, True, declared, repeated, missing)
+    heads = (
+        ("variable", "left"), ("from", "right"), ("to", "right"), ("unit", "left"), ("noise", "right"),
+        ("declared", "right"), ("repeats", "right"), ("missing", "right"),
+    )  # fmt: skip
+    table = _table(*(head for head, kept in zip(heads, shown, strict=True) if kept))
+    for channel in channels:
+        cells = (
+            words(channel.name),
+            _figure(channel.minimum),
+            _figure(channel.maximum),
+            unit_text(channel.unit),
+            _figure(channel.noise, 2),
+            _figure(channel.declared_noise, 2),
+            _figure(channel.repeatability, 2),
+            str(channel.missing) if channel.missing else "–",
+        )
+        table.add_row(*(cell for cell, kept in zip(cells, shown, strict=True) if kept))
+    return table
+
+
+def _angles_table(angles: Sequence[AngleRange]) -> Table:
+    table = _table(
+        ("angle", "left"), ("from", "right"), ("at", "right"), ("to", "right"), ("at", "right"), ("unit", "left")
+    )
+    for angle in angles:
+        low, high = (f"{math.degrees(value):.1f}" for value in (angle.minimum, angle.maximum))
+        places = [", ".join(f"{x + 0.0:.4g}" for x in at) for at in (angle.minimum_at, angle.maximum_at)]
+        table.add_row(words(angle.name), low, places[0], high, places[1], "deg")
+    return table
+
+
+def _edges_table(edges: Sequence[EdgeState]) -> Table:
+    """Largest values near each edge and shares in its last line; vorticity only where it was measured."""
+    turning = any(math.isfinite(edge.vorticity) for edge in edges)
+    heads = [("edge", "left"), ("loss / q", "right"), ("of the loss", "right")]
+    if turning:
+        heads += [("vorticity / largest", "right"), ("of the vorticity", "right")]
+    table = _table(*heads, ("", "left"))
+    for edge in edges:
+        cells = [edge.side, _figure(edge.total_pressure_loss, 2), _share(edge.loss_share)]
+        if turning:
+            cells += [_figure(edge.vorticity, 2), _share(edge.vorticity_share)]
+        table.add_row(*cells, "quiet" if edge.quiet else "TOUCHED")
+    return table
+
+
+def _share(share: float) -> str:
+    return f"{100 * share:.1f} %" if math.isfinite(share) else "–"
 
 
 def _facts(inspection: Inspection) -> Iterable[tuple[str, str]]:
@@ -152,6 +209,14 @@ def _facts(inspection: Inspection) -> Iterable[tuple[str, str]]:
     yield "coverage", f"{100 * inspection.coverage:.1f} % of the window's cells hold a measurement"
     flagged = ", ".join(f"{count} {words(name)}" for name, count in inspection.flags.items() if count)
     yield "flagged cells", flagged or "none"
+    lost = len(inspection.missing_places)
+    if lost:
+        yield "lost places", f"{lost}, of them {inspection.missing_in_wake} in the wake region"
+    repeats = inspection.repeats
+    if repeats.places:
+        again = f"; {repeats.revisited} of them left and visited again" if repeats.revisited else ""
+        places = "1 place" if repeats.places == 1 else f"{repeats.places} places"
+        yield "repeats", f"{places} measured {repeats.points} times{again}"
 
 
 def _console(width: int, colour: bool) -> Console:

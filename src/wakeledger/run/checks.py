@@ -238,8 +238,8 @@ def edge_total_pressure_loss(reduction: Reduction) -> Check:
     )
 
 
-def core_resolution(facts: Facts) -> Check:
-    """Spacing of the measured points over the core length, where that is largest among the vortices that count."""
+def worst_core(facts: Facts) -> tuple[float, Core] | None:
+    """The core measured most coarsely among the vortices that count: spacing over core length, and the vortex."""
     spacings = facts.spacings or (facts.raw_spacing,) * len(facts.vortices)
     least = FAINT_VORTEX * max((abs(vortex.circulation) for vortex in facts.vortices), default=0.0)
     cores = [
@@ -247,9 +247,15 @@ def core_resolution(facts: Facts) -> Check:
         for vortex, spacing in zip(facts.vortices, spacings, strict=True)
         if vortex.core_length > 0 and abs(vortex.circulation) >= least
     ]
-    if not cores:
+    return max(cores, key=lambda core: core[0], default=None)
+
+
+def core_resolution(facts: Facts) -> Check:
+    """Spacing of the measured points over the core length, where that is largest among the vortices that count."""
+    worst = worst_core(facts)
+    if worst is None:
         return _check("core_resolution", math.nan, {"not_applicable": "No vortex core was identified."})
-    value, smallest = max(cores, key=lambda core: core[0])
+    value, smallest = worst
     where = f"the core at y = {smallest.y:.4g} m, z = {smallest.z:.4g} m (a = {smallest.core_length:.3g} m)"
     return _check(
         "core_resolution",

@@ -17,22 +17,17 @@ from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.confidence.terms import NumericalTerm, add_terms
 from wakeledger.core.errors import InputError, SurveyError
-from wakeledger.core.flags import decode
 from wakeledger.core.grid import Array
-from wakeledger.core.names import VARIABLES
 from wakeledger.core.traverse import make_traverse
 from wakeledger.intake.gridding import check_duplicates
 from wakeledger.intake.gridding.line import Line, make_line
-from wakeledger.ledger.inspection import ChannelSummary, EdgeState, Inspection
 from wakeledger.ledger.rows import CrossCheck, Ledger, Row
 from wakeledger.physics.fields.traverse_window import TAIL
 from wakeledger.physics.methods.section_drag import SectionDrag, section_drag
 from wakeledger.run import tables
 from wakeledger.run.assembly import NO_SOURCE, budget_lines, comparisons, cross_check, ledger_row, require_rows
 from wakeledger.run.chain import estimate_of
-from wakeledger.run.checks import EDGE_CELLS
 from wakeledger.run.inputs import layouts, sources
-from wakeledger.run.inspection import recommendations
 from wakeledger.run.load import SurveyInput, refuse_unsupported
 from wakeledger.run.section.chain import (
     METHODS,
@@ -156,49 +151,6 @@ def reduce_section(
         except InputError as error:
             raise error.located(file=survey.survey.path) from error
     return _ledger(survey, prepared, samples, budget, command=command)
-
-
-def inspect_section(survey: SurveyInput) -> Inspection:
-    """Read and check a section survey without reducing it.
-
-    Parameters
-    ----------
-    survey : SurveyInput
-        With a ``[section]``.
-
-    Returns
-    -------
-    Inspection
-
-    Raises
-    ------
-    InputError
-        If the survey or its data are wrong.
-    """
-    prepared = prepare_section(survey)
-    chain, nominal, line = prepared.chain, prepared.nominal, prepared.chain.line
-    checks = section_checks(nominal, prepared.facts)
-    low, high = float(line.position[0]), float(line.position[-1])
-    vertical = chain.settings.along == "z"
-    return Inspection(
-        title=survey.survey.title,
-        source=survey.points.source,
-        points=survey.points.n,
-        arrangement=f"line traverse along {chain.settings.along}",
-        shape=(1, line.position.size) if vertical else (line.position.size, 1),
-        spacing=(math.nan, line.spacing) if vertical else (line.spacing, math.nan),
-        window=(0.0, 0.0, low, high) if vertical else (low, high, 0.0, 0.0),
-        coverage=1.0 - float(line.filled.mean()),
-        station=survey.survey.plane.station,
-        flags=decode(line.flag),
-        channels=_channels(prepared),
-        edges=_edges(prepared),
-        checks=checks,
-        recommendations=recommendations(checks),
-        notes=prepared.notes,
-        reference=tables.reference_scalars(nominal.reference),
-        test=survey.survey.test.given(),
-    )
 
 
 def prepare_section(survey: SurveyInput) -> PreparedSection:
@@ -443,31 +395,3 @@ def _traverse(prepared: PreparedSection, station: float) -> xr.Dataset:
     }
     wake = (nominal.window.lower, nominal.window.upper)
     return make_traverse(prepared.chain.settings.along, nominal.coordinate, profiles, wake=wake, station=station)
-
-
-def _channels(prepared: PreparedSection) -> tuple[ChannelSummary, ...]:
-    line = prepared.chain.line
-    outer = ~prepared.nominal.inside & ~line.filled
-    pairs = outer[1:] & outer[:-1]
-    found = []
-    for name, channel in prepared.chain.points.channels.items():
-        finite = channel.values[np.isfinite(channel.values)]
-        noise = math.nan
-        if np.count_nonzero(pairs) >= 6 and np.isfinite(channel.values[prepared.usable]).all():
-            steps = np.diff(line.apply(channel.values))[pairs]
-            noise = math.sqrt(0.5 * float(np.mean(steps**2)))
-        unit = "1" if channel.normalised_by else VARIABLES[name].unit if name in VARIABLES else "1"
-        low, high = (float(finite.min()), float(finite.max())) if finite.size else (math.nan, math.nan)
-        found.append(ChannelSummary(name, unit, low, high, noise, channel.values.size - finite.size))
-    return tuple(found)
-
-
-def _edges(prepared: PreparedSection) -> tuple[EdgeState, ...]:
-    """Largest loss at either end of the traverse inside the wake."""
-    nominal = prepared.nominal
-    loss = np.where(nominal.inside, nominal.loss, 0.0) / nominal.reference.dynamic_pressure
-    sides = ("port", "starboard") if prepared.chain.settings.along == "y" else ("lower", "upper")
-    return tuple(
-        EdgeState(side, float(part.max()))
-        for side, part in zip(sides, (loss[:EDGE_CELLS], loss[-EDGE_CELLS:]), strict=True)
-    )
