@@ -67,7 +67,7 @@ class RawSurvey:
     notes : tuple of str
         Sentences about what was found and what was not corrected.
     said : mapping of str to str
-        A sentence about each correction that is made, by name, to be completed by what it is worth.
+        Half a sentence about each correction that is made, by name, to be completed by what it is worth.
     """
 
     traverse: Traverse
@@ -156,7 +156,7 @@ class _Preparation:
             Mounting(pitch=probe.pitch, yaw=probe.yaw, roll=probe.roll),
             tip_diameter=math.nan if probe.tip_diameter is None else probe.tip_diameter,
         )
-        kinds = {hole: self.points.channels[hole] for hole in self.holes}
+        kinds = {hole: replace(self.points.channels[hole], values=np.empty(0)) for hole in self.holes}
         self.traverse = Traverse((Tube(reduction),), kinds)
 
     def run(self) -> RawSurvey:
@@ -367,28 +367,33 @@ class _Preparation:
             gain = by_dynamic / dynamic
             return by_total - gain * (level - zero) + gain * (pressures - zero)
 
-        still = np.zeros(path.n)
+        still, once = np.zeros(path.n), np.ones(path.n)
         size = np.zeros(pressures.shape)
         parts: dict[str, dict[str, Array]] = {}
+        taken_out = np.zeros(2)
         sentences = []
         names = (("total pressure", "total_pressure"), ("dynamic pressure", "dynamic_pressure"))
         span = float(np.ptp(path.clock))
+        share = span / self.reference.dynamic_pressure
         for index, (name, key) in enumerate(names):
             rate, sigma = float(found.rate[index]), float(found.standard_uncertainty[index])
             clear = math.isfinite(sigma) and abs(rate) > _quantile(found.degrees_of_freedom) * sigma
             unit = on_holes(*((since, still) if index == 0 else (still, since)))
             if clear:
                 size -= rate * unit
+                taken_out[index] = rate
             carried = sigma if clear else math.hypot(rate, np.nan_to_num(sigma))
             parts |= self._one_for_all(f"{DRIFT}.{key}", path.filed(carried * unit))
-            share = span / self.reference.dynamic_pressure
             known = f"+- {abs(sigma) * share:.2%}" if math.isfinite(sigma) else "one repeat, so its scatter is unknown"
             done = "taken out" if clear else "not clear of the scatter, so carried as an uncertainty"
-            sentences.append(f"{name} {rate * share:+.2%} of q ({known}; {done})")
+            sentences.append(f"the {name} by {rate * share:+.2%} of q ({known}; {done})")
+        if np.any(taken_out):
+            # The readings were right at some moment between the first and the last point, and nobody knows when.
+            moved = span / math.sqrt(12) * taken_out
+            parts |= self._one_for_all(f"{DRIFT}.level", path.filed(on_holes(moved[0] * once, moved[1] * once)))
         self._add(DRIFT, path.filed(size), parts)
         self.said[DRIFT] = (
-            f"{found.visits} visits to {found.places} place(s) show a drift over the traverse of"
-            f" {' and '.join(sentences)}; what was taken out"
+            f"{found.visits} visits to {found.places} place(s): over the traverse {' and '.join(sentences)} drifted"
         )
         self._carry(DRIFT, "drift of the readings", tuple(parts))
 

@@ -2,8 +2,14 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Mapping
 from dataclasses import replace
 
+import numpy as np
+
+from wakeledger.core.grid import Array
+from wakeledger.intake.probe.traverse import correction_input
 from wakeledger.run import tables
 from wakeledger.run.chain import Chain, Reduction, Variation
 from wakeledger.run.traverse import REFERENCE, SHEAR, RawSurvey
@@ -24,14 +30,33 @@ def traverse_notes(raw: RawSurvey, chain: Chain, nominal: Reduction) -> tuple[st
     Returns
     -------
     tuple of str
-        Each correction with the counts of total drag between reducing with it and without it, in the same wake region.
+        Each correction with the counts of total drag between reducing with it and without it, in the same wake region,
+        and with those of its standard uncertainty.
     """
+    vary = Variation(mask=nominal.region.mask)
+
+    def change(other: Chain, errors: Mapping[str, Array]) -> float:
+        return nominal.values["total_drag"] - other.reduce(errors, vary=vary, estimates=False).values["total_drag"]
+
     made = []
     for name, sentence in raw.said.items():
-        before = without(chain, name).reduce(vary=Variation(mask=nominal.region.mask), estimates=False)
-        change = nominal.values["total_drag"] - before.values["total_drag"]
-        made.append(f"{sentence}: {tables.counts_text(change, nominal, chain)} of total drag.")
+        worth = tables.counts_text(change(without(chain, name), {}), nominal, chain)
+        inputs = _inputs(chain, name)
+        if inputs:
+            doubt = math.hypot(*(change(chain, {each: np.ones(())}) for each in inputs))
+            worth += f" of total drag, +- {tables.counts_text(doubt, nominal, chain).lstrip('+')}"
+        else:
+            worth += " of total drag"
+        made.append(f"{sentence}: {worth}.")
     return (*made, *raw.notes)
+
+
+def _inputs(chain: Chain, name: str) -> tuple[str, ...]:
+    """Inputs that errors of one correction are drawn for."""
+    if name == SHEAR:
+        return (correction_input(SHEAR),)
+    additions = () if chain.traverse is None else chain.traverse.additions
+    return tuple(each for one in additions if one.name == name for each in one.per_sigma)
 
 
 def without(chain: Chain, name: str) -> Chain:
