@@ -9,6 +9,7 @@ from importlib.metadata import PackageNotFoundError, version
 from typing import TYPE_CHECKING
 
 import numpy as np
+from numpy.typing import NDArray
 
 from wakeledger.core.flags import Flag, decode
 from wakeledger.core.grid import Array
@@ -35,11 +36,6 @@ _PACKAGES = ("wakeledger", "numpy", "scipy", "xarray", "netCDF4", "pandas", "pin
 def plane_table(chain: Chain, nominal: Reduction) -> xr.Dataset:
     """The reduced plane in wind axes with its mask and flags."""
     flow, reference = nominal.flow, nominal.reference
-    flags = chain.gridding.flag.astype(np.int32)
-    if chain.traverse is not None:
-        values = {name: channel.values for name, channel in chain.points.channels.items()}
-        beyond = chain.gridding.near(chain.traverse.out_of_range(values, chain.reference())) & chain.gridding.filled
-        flags |= np.where(beyond, np.int32(Flag.OUT_OF_RANGE), np.int32(0))
     fields = {
         "u": flow.u,
         "v": flow.v,
@@ -51,13 +47,30 @@ def plane_table(chain: Chain, nominal: Reduction) -> xr.Dataset:
         "crossflow_divergence": crossflow_divergence(flow.v, flow.w, flow.grid),
         "stream_function": nominal.forces.stream_function,
         "wake_mask": nominal.region.mask.astype(np.int8),
-        "flag": flags,
+        "flag": plane_flags(chain),
     }
     if reference.compressible:
         fields["density"] = np.asarray(flow.density)
         heat = 2 * reference.heat_capacity
         fields["temperature"] = flow.total_temperature - (flow.u**2 + flow.v**2 + flow.w**2) / heat
     return make_plane(flow.grid, fields, station=chain.settings.station)
+
+
+def out_of_range(chain: Chain) -> NDArray[np.bool_]:
+    """Points outside the calibrated range of the probe, shape (n,)."""
+    if chain.traverse is None:
+        return np.zeros(chain.points.n, dtype=bool)
+    values = {name: channel.values for name, channel in chain.points.channels.items()}
+    return chain.traverse.out_of_range(values, chain.reference())
+
+
+def plane_flags(chain: Chain) -> NDArray[np.int32]:
+    """Flags of the cells, those that stand for a point outside the probe's calibrated range among them."""
+    flags = chain.gridding.flag.astype(np.int32)
+    if chain.traverse is not None:
+        beyond = chain.gridding.near(out_of_range(chain)) & chain.gridding.filled
+        flags |= np.where(beyond, np.int32(Flag.OUT_OF_RANGE), np.int32(0))
+    return flags
 
 
 def _dataset(dimension: str, columns: Sequence[tuple[str, Array, str, str]]) -> xr.Dataset:

@@ -8,7 +8,6 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from wakeledger.core.flags import Flag
 from wakeledger.core.points import Points
 from wakeledger.intake.gridding import Gridding
 from wakeledger.ledger.inspection import ChannelSummary, EdgeState, Recommendation, Repeats
@@ -102,7 +101,7 @@ def recommendations(
     missing_in_wake: Sequence[tuple[float, float]] = (),
     channels: Sequence[ChannelSummary] = (),
     repeats: Repeats | None = None,
-    flags: Mapping[str, int] | None = None,
+    out_of_range: Sequence[tuple[float, float]] = (),
     spacing: Mapping[str, float] | None = None,
     place: Callable[[tuple[float, float]], str] | None = None,
 ) -> tuple[Recommendation, ...]:
@@ -124,8 +123,8 @@ def recommendations(
         The measured variables.
     repeats : Repeats or None
         Places measured more than once.
-    flags : mapping of str to int, optional
-        Number of cells by quality flag.
+    out_of_range : sequence of (float, float)
+        Points outside the probe's calibrated range, y and z, m.
     spacing : mapping of str to float, optional
         Spacing of the points along "y" and "z", m, to count lines by.
     place : callable, optional
@@ -150,13 +149,12 @@ def recommendations(
             wrong.pop(name, None)
     if "missing_points" in wrong and missing_in_wake:
         found.append(_repeat(wrong.pop("missing_points"), missing_in_wake, written))
-    outside = (flags or {}).get(str(Flag.OUT_OF_RANGE.name).lower(), 0)
-    if outside:
+    if out_of_range:
         message = (
-            f"{outside} places are outside the probe's calibrated range and count as missing: turn the probe into the"
-            " flow there, or extend its calibration, and repeat them."
+            f"{_count(len(out_of_range), 'point')} outside the probe's calibrated range, the first at"
+            f" {written(out_of_range[0])}: turn the probe into the flow there, or extend its calibration, and repeat."
         )
-        found.append(Recommendation("repeat", message))
+        found.append(Recommendation("repeat", message, places=tuple(out_of_range)))
     if "core_resolution" in wrong and core is not None:
         found.append(_refine(wrong.pop("core_resolution"), core, written))
     left = sorted(wrong.values(), key=lambda check: check.verdict != "fail")

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -13,6 +12,9 @@ from wakeledger.core.points import Points
 from wakeledger.intake.gridding.lattice import find_lattice
 from wakeledger.intake.probe.readings import SAME_PLACE
 from wakeledger.ledger.inspection import Repeats
+
+#: Channels that neither repeat at a place nor follow their neighbours.
+NOT_REPEATING = frozenset({"time"})
 
 
 @dataclass(frozen=True, eq=False)
@@ -60,13 +62,13 @@ class Places:
         again = (np.diff(label) == 0) & (np.diff(order) > 1)
         return Repeats(int(many.sum()), chosen.size, np.unique(label[1:][again]).size)
 
-    def repeatability(self, values: Mapping[str, Array]) -> dict[str, float]:
+    def repeatability(self, points: Points) -> dict[str, float]:
         """Standard deviation of each variable at one place, pooled over all places with several usable values.
 
         Parameters
         ----------
-        values : mapping of str to ndarray, shape (n,)
-            Variables at the points; NaN where one is missing.
+        points : Points
+            The points, in the same order.
 
         Returns
         -------
@@ -74,7 +76,10 @@ class Places:
             √(Σ (x − x̄)²/(points − places)), x̄ being the mean of the place; variables without repeats are left out.
         """
         found = {}
-        for name, array in values.items():
+        for name, channel in points.channels.items():
+            array = channel.values
+            if name in NOT_REPEATING:
+                continue
             known = self.usable & np.isfinite(array)
             counts = np.bincount(self.label[known], minlength=self.y.size)
             known &= counts[self.label] > 1

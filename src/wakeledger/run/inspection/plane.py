@@ -22,6 +22,7 @@ from wakeledger.run.inspection.channels import angle_ranges, channel_summaries, 
 from wakeledger.run.inspection.edges import plane_edges
 from wakeledger.run.inspection.places import Places, places_of
 from wakeledger.run.load import SurveyInput
+from wakeledger.run.traverse import corrected_points
 
 #: Checks whose value needs the noise bias or a reduction's uncertainty; they are left to `reduce`.
 _LATER = frozenset({"noise_bias"})
@@ -62,15 +63,20 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
     worst = worst_core(facts)
     places = places_of(points, usable_points(state), gridding.raw_spacing)
     repeats = places.repeats()
+    raw = gridded.raw
+    # Hole pressures repeat, and follow their neighbours, at the reference condition only.
+    steady = points if raw is None else corrected_points(points, raw.traverse, nominal.reference)
     channels = channel_summaries(
         points,
-        noise=shown_noise(points, gridding, wake, places.first),
+        noise=shown_noise(steady, gridding, wake, places.first),
         declared=declared_noise(survey, nominal.reference),
-        repeatability=places.repeatability({name: channel.values for name, channel in points.channels.items()}),
+        repeatability=places.repeatability(steady),
     )
     edges = plane_edges(nominal, gridding.raw_spacing)
     missing, in_wake = _lost(places, wake, grid)
-    flags = decode(gridding.flag)
+    flags = tables.plane_flags(chain)
+    beyond = np.flatnonzero(tables.out_of_range(chain))
+    corrected = () if raw is None else (*(f"{sentence}." for sentence in raw.said.values()), *raw.notes)
     spacing = {"y": gridding.raw_spacing[0], "z": gridding.raw_spacing[1]}
     return Inspection(
         title=survey.survey.title,
@@ -82,7 +88,7 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
         window=(float(grid.y[0]), float(grid.y[-1]), float(grid.z[0]), float(grid.z[-1])),
         coverage=1.0 - gridding.filled_fraction,
         station=chain.settings.station,
-        flags=flags,
+        flags=decode(flags),
         channels=channels,
         edges=edges,
         checks=checks,
@@ -94,17 +100,17 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
             missing_in_wake=missing[:in_wake],
             channels=channels,
             repeats=repeats,
-            flags=flags,
+            out_of_range=[(float(points.y[k]), float(points.z[k])) for k in beyond],
             spacing=spacing,
         ),
-        notes=(*survey.survey.notes(), *tables.notes(survey, chain, nominal, state)),
+        notes=(*survey.survey.notes(), *corrected, *tables.notes(survey, chain, nominal, state)),
         reference=tables.reference_scalars(nominal.reference),
         test=survey.survey.test.given(),
         angles=angle_ranges(state.u, state.v, state.w, y=points.y, z=points.z),
         repeats=repeats,
         missing_places=missing,
         missing_in_wake=in_wake,
-        map=_map(gridding, wake, nonphysical(state)),
+        map=_map(gridding, flags, wake, nonphysical(state)),
     )
 
 
@@ -119,11 +125,11 @@ def _lost(places: Places, wake: Mask, grid: UniformGrid) -> tuple[tuple[tuple[fl
     return tuple((float(y[k]), float(z[k])) for k in order), int(np.count_nonzero(inside))
 
 
-def _map(gridding: Gridding, wake: Mask, impossible: NDArray[np.bool_]) -> PlaneMap:
+def _map(gridding: Gridding, flags: NDArray[np.int32], wake: Mask, impossible: NDArray[np.bool_]) -> PlaneMap:
     grid = gridding.grid
 
     def has(flag: Flag) -> Mask:
-        found: Mask = (gridding.flag & flag.value) != 0
+        found: Mask = (flags & flag.value) != 0
         return found
 
     return plane_map(

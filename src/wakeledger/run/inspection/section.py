@@ -56,11 +56,10 @@ def inspect_section(survey: SurveyInput) -> Inspection:
         points,
         noise=_noise(prepared),
         declared=declared_noise(survey, nominal.reference),
-        repeatability=places.repeatability({name: channel.values for name, channel in points.channels.items()}),
+        repeatability=places.repeatability(points),
     )
     edges = _edges(prepared)
     missing, in_wake = _lost(places, prepared)
-    flags = decode(line.flag)
     return Inspection(
         title=survey.survey.title,
         source=points.source,
@@ -71,7 +70,7 @@ def inspect_section(survey: SurveyInput) -> Inspection:
         window=(0.0, 0.0, low, high) if vertical else (low, high, 0.0, 0.0),
         coverage=1.0 - float(line.filled.mean()),
         station=survey.survey.plane.station,
-        flags=flags,
+        flags=decode(line.flag),
         channels=channels,
         edges=edges,
         checks=checks,
@@ -81,7 +80,6 @@ def inspect_section(survey: SurveyInput) -> Inspection:
             missing_in_wake=missing[:in_wake],
             channels=channels,
             repeats=repeats,
-            flags=flags,
             spacing={along: line.spacing},
             place=lambda place: f"{along} = {1e3 * place[int(vertical)]:.4g} mm",
         ),
