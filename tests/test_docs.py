@@ -195,9 +195,8 @@ def test_verdicts_are_those_of_the_program():
 def test_numerical_terms_of_the_budget_are_documented(sample):
     listed = part("uncertainty.md", "Numerical terms")
     names = [line.split("|")[1].strip() for line in listed.splitlines() if line.startswith("| ")][1:]
-    known = [
-        getattr(numerics, name) for name in ("MASK", "RESOLUTION", "RESAMPLING", "GAPS", "LOSS_ZERO", "OFFSET_ZERO")
-    ]
+    constants = ("MASK", "RESOLUTION", "RESAMPLING", "GAPS", "PAIR", "PRESSURE", "LOSS_ZERO", "OFFSET_ZERO")
+    known = [getattr(numerics, name) for name in constants]
     lines = [getattr(section_terms, name) for name in ("WINDOW", "RESOLUTION", "GAPS", "LEVEL")]
     assert names == [*known, "choices inside *estimate*", "Term of a line traverse", *lines]
     assert numerics.METHOD == "choices inside {}"

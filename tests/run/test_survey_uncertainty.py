@@ -418,3 +418,19 @@ def test_the_spline_between_the_points_is_judged_on_the_same_grid(kit, tmp_path)
     lines = {line.row: line for line in found.budget if line.source == "spline between the points"}
     assert 0 < lines["induced_drag"].standard_uncertainty < 1e-3 * found.row("induced_drag").value
     assert 0 < lines["lift"].standard_uncertainty < 1e-3 * found.row("lift").value
+
+
+@pytest.mark.parametrize("options", [{"peak": 4.0}, {"x": 4.0}])
+def test_a_plane_without_a_pressure_has_the_doubt_of_the_pressure_it_takes(kit, tmp_path, options):
+    # Doubled lift, and a long roll-up: the profile drag is off by 11 and 3 % with exact velocities.
+    wake = kit.wing(**options)
+    columns = kit.columns(total_pressure=None, static_pressure=None)
+    content = kit.description(plane={"primary": "velocity", "columns": columns}, uncertainty={"draws": 100, "seed": 3})
+    content["uncertainty.source"] = [kit.source("velocity", ["plane.u", "plane.v", "plane.w"], "0.01 m/s", "random")]
+    found = kit.ledger(tmp_path, kit.table(wake, *kit.axes()), content)
+    lines = {(line.row, line.source): line.standard_uncertainty for line in found.budget}
+    assert lines["profile_drag", "static pressure that was not measured"] > 0.01 * found.row("profile_drag").value
+    assert ("induced_drag", "static pressure that was not measured") not in lines
+    for name in ("profile_drag", "total_drag"):
+        row = found.row(name)
+        assert abs(row.value - wake.truth.rows()[name]) < row.expanded_uncertainty, name

@@ -106,6 +106,8 @@ class Settings:
         How far the region is grown, m.
     include, exclude : tuple of ndarray
         Boxes and polygons that belong to the wake region, or do not.
+    turning_pressure : bool
+        Whether a static pressure that was not measured includes what turns the crossflow, beside −½ρ(v² + w²).
     """
 
     reference: Mapping[str, float]
@@ -121,6 +123,7 @@ class Settings:
     grow: float | None = None
     include: tuple[Array, ...] = ()
     exclude: tuple[Array, ...] = ()
+    turning_pressure: bool = True
 
 
 @dataclass(frozen=True)
@@ -377,7 +380,10 @@ class Chain:
                 static = apply(state.static_pressure)
                 total = static + kinetic
             else:
-                static = reference.static_pressure + crossflow_pressure(v, w, grid, density=reference.density)
+                excess = -0.5 * reference.density * (v**2 + w**2)
+                if self.settings.turning_pressure:
+                    excess = crossflow_pressure(v, w, grid, density=reference.density)
+                static = reference.static_pressure + excess
                 total = static + kinetic
         return Flow(grid, u, v, w, total, static, density, total_temperature)
 

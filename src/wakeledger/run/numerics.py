@@ -27,6 +27,7 @@ GAPS = "filled points"
 LOSS_ZERO = "zero of the total pressure"
 OFFSET_ZERO = "zero of the flow angles"
 PAIR = "bound vortex in the residual"
+PRESSURE = "static pressure that was not measured"
 METHOD = "choices inside {}"
 
 #: Order claimed when a decimated grid is extrapolated; the observed order between h/a = 0.5 and 1 is 4 to 8.
@@ -95,6 +96,8 @@ def numerical_terms(
     known = [one for one in both if one is not None]
     if known:
         terms.append(NumericalTerm(OFFSET_ZERO, np.sqrt(sum(one**2 for one in known))))
+    if chain.settings.primary == "velocity" and not {"total_pressure", "static_pressure"} & chain.measured:
+        terms.append(_pressure_term(chain, nominal))
     terms.append(_pair_term(nominal))
     for name, value in method_uncertainty.items():
         vector = np.zeros(len(OUTPUTS))
@@ -156,6 +159,16 @@ def _resampling_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gri
     same = other.gridding.grid.shape == nominal.flow.grid.shape
     vary = Variation(mask=nominal.region.mask if same else None)
     return NumericalTerm(RESAMPLING, _difference(other.reduce(vary=vary).vector, nominal))
+
+
+def _pressure_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
+    """Doubt of a static pressure from the crossflow: half of what the pressure that turns it is worth.
+
+    The crossflow is taken to be in equilibrium with the pressure. A sheet that rolls up, or a plane with curvature of
+    its own, is not, by a part of that pressure.
+    """
+    without = replace(chain, settings=replace(chain.settings, turning_pressure=False))
+    return NumericalTerm(PRESSURE, _deviation(without, nominal, Variation(mask=nominal.region.mask)) / 2)
 
 
 def _pair_term(nominal: Reduction) -> NumericalTerm:
