@@ -141,6 +141,18 @@ def test_quarter_chord_is_where_the_survey_says(kit, tmp_path):
     assert any(entry.expected_difference > 0.01 for entry in same.estimates)
 
 
+def test_mean_chord_is_area_over_span_where_it_is_not_given(kit, tmp_path):
+    # An expected difference of zero so close behind the wing would be wrong by 4 % of the induced drag.
+    data = kit.table(kit.wing(bound_distance=0.6), *kit.axes())
+    place = {"station": f"{0.6 - 0.75 * kit.AREA / kit.SPAN!r} m"}
+    given = kit.ledger(tmp_path / "a", data, kit.description(plane=place))
+    absent = kit.ledger(tmp_path / "b", data, kit.description(plane=place, model={"mean_chord": None}))
+    assert [entry.expected_difference for entry in absent.estimates] == pytest.approx(
+        [entry.expected_difference for entry in given.estimates], rel=1e-9, abs=1e-12
+    )
+    assert any(entry.expected_difference > 0.01 for entry in absent.estimates)
+
+
 def test_flow_angle_offset_leaves_the_vorticity_forms_alone(kit, tmp_path):
     wake = kit.wing(loading=kit.asymmetric)
     data = kit.table(wake, *kit.axes())

@@ -139,8 +139,12 @@ class ModelTable(Table):
         Returns
         -------
         float or None
-            x, negative upstream of the trailing edge; None where neither is given.
+            x, negative upstream of the trailing edge; the mean chord is the area over the span where it is not given,
+            and None is returned where there is no span either.
         """
         if self.quarter_chord_x is not None:
             return self.quarter_chord_x
-        return None if self.mean_chord is None else -0.75 * self.mean_chord
+        chord = self.mean_chord
+        if chord is None and self.span is not None:
+            chord = self.reference_area / self.span
+        return None if chord is None else -0.75 * chord

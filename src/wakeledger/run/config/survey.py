@@ -238,8 +238,8 @@ class Survey(Table):
                 found.append("[model] span: it is absent, so span efficiency and moment coefficients are unknown")
             if self.model.quarter_chord() is None:
                 found.append(
-                    "[model] mean_chord: it is absent, and quarter_chord_x too, so the bound vortex's effect on "
-                    "the energy form is not predicted"
+                    "[model] mean_chord: it is absent, and quarter_chord_x and span too, so the bound vortex's "
+                    "effect on the cross-checks is not predicted"
                 )
         idle = [key for key in ("weight", "load_factor") if getattr(self.reference, key) is not None]
         found.extend(f"[reference] {key}: it is kept in the archive, and no row uses it" for key in idle)
