@@ -30,7 +30,7 @@ from wakeledger.intake.probe.readings import (
 )
 from wakeledger.intake.probe.record import Calibration
 from wakeledger.intake.probe.reduction import CALIBRATION_INPUTS, HoleReduction
-from wakeledger.intake.probe.traverse import DYNAMIC, STATIC, Addition, Traverse, Tube, correction_input
+from wakeledger.intake.probe.traverse import DYNAMIC, STATIC, Addition, LagFilter, Traverse, Tube, correction_input
 from wakeledger.run.config.tables import HoleReadings, ProbeTable
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.shear import Displacement
@@ -314,7 +314,8 @@ class _Preparation:
                     " and the difference is its uncertainty"
                 )
         correction = correct_lag(pressures, rates, lag=lag, standard_uncertainty=sigma)
-        self._add(LAG, path.filed(correction.size), self._one_for_all(LAG, path.filed(correction.per_sigma)))
+        parts = self._one_for_all(LAG, path.filed(correction.per_sigma))
+        self._add(LAG, None, parts, lag=LagFilter(rates, lag, path.order))
         self.said[LAG] = f"A lag of the tubing of {1e3 * lag:.3g} ms ({how}) was taken out"
         self._carry(LAG, "lag of the tubing", (correction_input(LAG),))
 
@@ -434,9 +435,17 @@ class _Preparation:
             for hole, change in zip(self.holes, np.nan_to_num(per_sigma), strict=True)
         }
 
-    def _add(self, name: str, size: Array, per_sigma: Mapping[str, Mapping[str, Array]], *, raw: bool = False) -> None:
-        sizes = dict(zip(self.holes, np.nan_to_num(size), strict=True))
-        addition = Addition(name, sizes, dict(per_sigma), raw=raw)
+    def _add(
+        self,
+        name: str,
+        size: Array | None,
+        per_sigma: Mapping[str, Mapping[str, Array]],
+        *,
+        raw: bool = False,
+        lag: LagFilter | None = None,
+    ) -> None:
+        sizes = {} if size is None else dict(zip(self.holes, np.nan_to_num(size), strict=True))
+        addition = Addition(name, sizes, dict(per_sigma), raw=raw, lag=lag)
         self.traverse = replace(self.traverse, additions=(*self.traverse.additions, addition))
 
     def _carry(self, name: str, label: str, inputs: tuple[str, ...]) -> None:

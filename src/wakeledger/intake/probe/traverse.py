@@ -1,7 +1,8 @@
 """A raw traverse as it is reduced: hole pressures brought to one condition, corrected, and turned into a flow state.
 
 The corrections are worked out once, on the readings as they are. A draw of errors adds to each a standard normal
-number times its standard uncertainty, so that a draw costs little more than the reduction of the holes itself.
+number times its standard uncertainty, so that a draw costs little more than the reduction of the holes itself. A lag is
+taken out of every draw anew: that is how noise grows by it.
 """
 
 from __future__ import annotations
@@ -16,6 +17,7 @@ from numpy.typing import NDArray
 from wakeledger.core.flags import Flag
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Channel
+from wakeledger.intake.probe.lag import RateFilter
 from wakeledger.intake.probe.readings import at_reference_condition
 from wakeledger.intake.probe.reduction import HoleReduction, ProbeStream
 from wakeledger.intake.state import State
@@ -33,6 +35,31 @@ def correction_input(name: str) -> str:
 
 
 @dataclass(frozen=True, eq=False)
+class LagFilter:
+    """What taking out a lag adds to pressures.
+
+    Attributes
+    ----------
+    rates : RateFilter
+        Rates of change along the rows, points in the order in which they were taken.
+    lag : float
+        Time constant, s.
+    order : ndarray of int, shape (n,)
+        Which points, as filed, were taken one after the other.
+    """
+
+    rates: RateFilter
+    lag: float
+    order: NDArray[np.intp]
+
+    def added(self, pressure: Array) -> Array:
+        """Lag times rate, Pa, shape (..., n); 0 at points that have none."""
+        found = np.empty(pressure.shape)
+        found[..., self.order] = self.lag * np.nan_to_num(self.rates.rate(pressure[..., self.order]))
+        return found
+
+
+@dataclass(frozen=True, eq=False)
 class Addition:
     """What one correction adds to the hole pressures.
 
@@ -46,21 +73,24 @@ class Addition:
         By input (`correction_input`): change of each hole if that parameter is one standard uncertainty larger, Pa.
     raw : bool
         Whether it is added to the readings as they are, before they are brought to the reference condition.
+    lag : LagFilter or None
+        Instead of `size`.
     """
 
     name: str
     size: Mapping[str, Array]
     per_sigma: Mapping[str, Mapping[str, Array]] = field(default_factory=dict)
     raw: bool = False
+    lag: LagFilter | None = None
 
-    def to(self, hole: str, errors: Mapping[str, Array | float]) -> Array | float:
-        """What is added to a hole under errors of the correction, Pa."""
-        total: Array | float = self.size.get(hole, 0.0)
+    def to(self, hole: str, pressure: Array, errors: Mapping[str, Array | float]) -> Array:
+        """Pressure of a hole with what is added to it under errors of the correction, Pa."""
+        total: Array | float = self.size.get(hole, 0.0) if self.lag is None else self.lag.added(pressure)
         for name, changes in self.per_sigma.items():
             factor = errors.get(name)
             if factor is not None and hole in changes:
                 total = total + factor * changes[hole]
-        return total
+        return np.asarray(pressure + total)
 
 
 @dataclass(frozen=True, eq=False)
@@ -151,11 +181,11 @@ class Traverse:
                 pressure = pressure + error
             for addition in self.additions:
                 if addition.raw:
-                    pressure = pressure + addition.to(hole, errors)
+                    pressure = addition.to(hole, pressure, errors)
             pressure = self._at_reference(pressure, self.kinds.get(hole), values, reference)
             for addition in self.additions:
                 if not addition.raw:
-                    pressure = pressure + addition.to(hole, errors)
+                    pressure = addition.to(hole, pressure, errors)
             found[hole] = pressure
         return found
 
@@ -194,6 +224,8 @@ class Traverse:
         """
         readings: dict[str, Array] = self.pressures(values, reference, errors)
         readings |= self._in_the_flow(values, reference)
+        # Errors of the holes are in the readings by now.
+        errors = {name: error for name, error in errors.items() if not name.startswith("probe.")}
         if len(self.tubes) == 1 and self.tubes[0].points is None:
             return self.tubes[0].reduction.state(readings, reference, errors, rotation=rotation)
         parts = []
