@@ -7,37 +7,10 @@ from unicodedata import east_asian_width
 import pytest
 
 from wakeledger.core.flags import Flag
-from wakeledger.ledger.inspection import AngleRange, ChannelSummary, EdgeState, Inspection, Recommendation, Repeats
-from wakeledger.ledger.rows import Check
 from wakeledger.present.terminal import inspection_text, ledger_text
 from wakeledger.present.wording import STATEMENT, signed, words
 
 ESCAPE = "\x1b"
-
-
-@pytest.fixture(scope="module")
-def inspection():
-    return Inspection(
-        title="Clean wing, α = 6°",
-        source="traverse.csv",
-        points=9211,
-        arrangement="tensor grid, uniform",
-        shape=(151, 61),
-        spacing=(0.01, 0.01),
-        window=(-0.75, 0.75, -0.3, 0.3),
-        coverage=0.9987,
-        station=0.9,
-        flags={"missing": 12, "averaged": 0},
-        channels=(
-            ChannelSummary("u", "m s-1", 37.2, 42.3, 0.11, 2),
-            ChannelSummary("total_pressure", "Pa", -240.0, 3.1),
-        ),
-        edges=(EdgeState("lower", 0.031, 0.02), EdgeState("port")),
-        checks=(Check("missing_points", "pass", 0.0013, 0.02, "0.13 % of the cells are missing."),),
-        recommendations=(Recommendation("widen", "Lower the window's edge by 40 mm.", side="lower", distance=0.04),),
-        test={"run": "117"},
-        reference={"speed": 42.0},
-    )
 
 
 def columns(line):
@@ -124,9 +97,32 @@ def test_inspection_says_what_was_found(inspection):
     for part in (
         "traverse.csv", "9211, tensor grid, uniform", "151 × 61 points (y × z), 10.0 × 10.0 mm apart",
         "y -0.75 … 0.75 m, z -0.3 … 0.3 m", "99.9 %", "12 missing", "total pressure", "lower", "What to do",
-        "Lower the window's edge by 40 mm.", "pass  missing points",
+        "Lower the window's edge by 40 mm.", "pass  missing points", "2, of them 1 in the wake region",
+        "4 places measured 9 times; 1 of them left and visited again", "Map of the points, seen from behind", "▒", "○",
     ):  # fmt: skip
         assert part in text, part
+
+
+def test_noise_stands_beside_the_declared_one_and_the_repeats(inspection):
+    lines = inspection_text(inspection).splitlines()
+    head = next(line for line in lines if line.startswith("variable"))
+    assert head.split() == ["variable", "from", "to", "unit", "noise", "declared", "repeats", "missing"]
+    u = next(line for line in lines if line.startswith("u "))
+    assert u.split() == ["u", "37.20", "42.30", "m/s", "0.11", "0.15", "0.14", "2"]
+    bare = tuple(dataclasses.replace(x, declared_noise=math.nan, repeatability=math.nan) for x in inspection.channels)
+    assert "declared" not in inspection_text(dataclasses.replace(inspection, channels=bare))
+
+
+def test_flow_angles_are_in_degrees_with_their_places(inspection):
+    line = next(line for line in inspection_text(inspection).splitlines() if line.startswith("pitch"))
+    assert line.split() == ["pitch", "-5.7", "-0.6,", "0.012", "2.9", "0.61,", "0", "deg"]
+
+
+def test_edges_that_are_touched_stand_out(inspection):
+    lines = inspection_text(inspection).splitlines()
+    lower, port = (next(line for line in lines if line.startswith(side)) for side in ("lower ", "port "))
+    assert lower.endswith("TOUCHED") and "4.0 %" in lower
+    assert port.endswith("quiet")
 
 
 def test_inspection_document_has_no_nan(inspection):

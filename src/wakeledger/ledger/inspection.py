@@ -141,7 +141,9 @@ class EdgeState:
         Share of the wake region's absolute loss, and vorticity, in the last line of measured points; NaN where it was
         not measured.
     quiet : bool
-        Whether the wake does not touch the edge, by the limits of the edge checks.
+        Whether the wake does not touch the edge, by the limits of the edge checks. Patches of the wake region that
+        stand apart and hold less than a twentieth of the loss and of the circulation do not count here and in the
+        shares: they are rather noise.
     missing_reach : float
         How far beyond the edge the wake is expected to go on, m, with room for a quiet edge; NaN where it is quiet.
     message : str

@@ -167,7 +167,7 @@ def _angles_table(angles: Sequence[AngleRange]) -> Table:
     )
     for angle in angles:
         low, high = (f"{math.degrees(value):.1f}" for value in (angle.minimum, angle.maximum))
-        places = [", ".join(f"{x + 0.0:.4g}" for x in at) for at in (angle.minimum_at, angle.maximum_at)]
+        places = [", ".join(f"{round(x, 6) + 0.0:.4g}" for x in at) for at in (angle.minimum_at, angle.maximum_at)]
         table.add_row(words(angle.name), low, places[0], high, places[1], "deg")
     return table
 

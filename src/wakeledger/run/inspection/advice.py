@@ -25,6 +25,11 @@ _FINE, _AROUND = 0.5, 3.0
 #: Places named in a sentence.
 _NAMED = 5
 _WAYS = {"port": "to port", "starboard": "to starboard", "lower": "downwards", "upper": "upwards"}
+_EDGE_CHECKS = ("edge_vorticity", "edge_total_pressure_loss")
+_PATCH = (
+    "What touches the window's edge stands apart from the wake and holds little of it: rather noise than wake. Sample"
+    " longer, or take it out of the wake region with [wake] exclude or a higher level."
+)
 MOVE_ON = "The survey is complete and encloses its wake: it may be reduced, and the next point taken."
 MOVE_ON_WITH_CARE = "Apart from that the survey is complete and encloses its wake: it may be reduced."
 
@@ -144,9 +149,9 @@ def recommendations(
         )
         found.append(Recommendation("continue", message, side=traverse.heading))
     found += [_beyond(edge, traverse, spacing or {}) for edge in edges if not edge.quiet]
-    if any(not edge.quiet for edge in edges):
-        for name in ("edge_vorticity", "edge_total_pressure_loss"):
-            wrong.pop(name, None)
+    at_edges = [wrong.pop(name) for name in _EDGE_CHECKS if name in wrong]
+    if at_edges and all(edge.quiet for edge in edges):
+        found.append(Recommendation("check", _PATCH))
     if "missing_points" in wrong and missing_in_wake:
         found.append(_repeat(wrong.pop("missing_points"), missing_in_wake, written))
     if out_of_range:
@@ -173,6 +178,10 @@ def place_text(place: tuple[float, float]) -> str:
     return "y = {:.4g}, z = {:.4g} mm".format(*(1e3 * x + 0.0 for x in place))
 
 
+def _mm(length: float) -> str:
+    return f"{1e3 * length:.0f} mm" if length >= 0.0095 else f"{1e3 * length:.2g} mm"
+
+
 def _beyond(edge: EdgeState, traverse: Traverse | None, spacing: Mapping[str, float]) -> Recommendation:
     across = "y" if edge.side in ("port", "starboard") else "z"
     line = {"y": "column", "z": "row"}[across] if len(spacing) > 1 else "place"
@@ -180,7 +189,7 @@ def _beyond(edge: EdgeState, traverse: Traverse | None, spacing: Mapping[str, fl
     number = "" if math.isnan(step) else f" ({_count(round(edge.missing_reach / step), line)})"
     going_on = traverse is not None and traverse.heading == edge.side
     start = f"Continue {_WAYS[edge.side]}" if going_on else f"Widen the survey {_WAYS[edge.side]}"
-    message = f"{start} by about {1e3 * edge.missing_reach:.3g} mm{number}. {edge.message}"
+    message = f"{start} by about {_mm(edge.missing_reach)}{number}. {edge.message}"
     return Recommendation(
         "continue" if going_on else "widen", message, side=edge.side, distance=edge.missing_reach, spacing=step
     )
@@ -203,7 +212,7 @@ def _repeat(
 def _refine(check: Check, core: Core, written: Callable[[tuple[float, float]], str]) -> Recommendation:
     step, around = _FINE * core.core_length, _AROUND * core.core_length
     message = (
-        f"Refine within {1e3 * around:.2g} mm of {written((core.y, core.z))}: points {1e3 * step:.2g} mm apart; there"
+        f"Refine within {_mm(around)} of {written((core.y, core.z))}: points {_mm(step)} apart; there"
         f" they are {check.value:.2g} core lengths apart, which smears the induced drag."
     )
     return Recommendation("refine", message, distance=around, spacing=step, places=((core.y, core.z),))

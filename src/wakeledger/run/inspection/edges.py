@@ -7,9 +7,11 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from scipy import ndimage
 
 from wakeledger.core.grid import Array
 from wakeledger.ledger.inspection import EdgeState
+from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.run.chain import Reduction
 from wakeledger.run.checks import EDGE_CELLS, LIMITS
 
@@ -21,6 +23,8 @@ _FALLEN = 0.6
 _LEAST_DECAY = 0.1
 #: Where a profile is below this share of its largest value the wake has ended.
 _ENDED = 0.02
+#: Parts of the wake region that hold less than this share of the loss and net circulation are rather noise than wake.
+PATCH = 0.05
 _OPPOSITE = {"port": "starboard", "starboard": "port", "lower": "upper", "upper": "lower"}
 _LINE = {"port": "column", "starboard": "column", "lower": "row", "upper": "row"}
 
@@ -129,7 +133,8 @@ def plane_edges(nominal: Reduction, raw_spacing: tuple[float, float]) -> tuple[E
     loss = np.where(mask, nominal.reference.total_pressure - nominal.flow.total_pressure, 0.0)
     turning = np.where(mask, np.abs(nominal.vorticity), 0.0)
     fields = {"total-pressure loss": np.abs(loss), "vorticity": turning}
-    profiles = {name: _profiles(field, nominal, raw_spacing) for name, field in fields.items()}
+    wake = _without_patches(mask, (loss, np.where(mask, nominal.vorticity, 0.0)))
+    profiles = {name: _profiles(field, wake, nominal, raw_spacing) for name, field in fields.items()}
     peak = float(turning.max())
     found = []
     for side in _OPPOSITE:
@@ -224,7 +229,21 @@ def inwards(field: Array, side: str) -> Array:
     return views[side]
 
 
-def _profiles(field: Array, nominal: Reduction, raw_spacing: Sequence[float]) -> dict[str, EdgeProfile]:
+def _without_patches(mask: Mask, fields: Sequence[Array]) -> Mask:
+    """The parts of the wake region that hold more than a small share of one of the fields, signs cancelling in each."""
+    label, count = ndimage.label(mask, structure=np.ones((3, 3)))
+    kept = np.zeros(count + 1, dtype=bool)
+    for field in fields:
+        held = np.bincount(label.ravel(), weights=field.ravel(), minlength=count + 1)
+        kept |= np.abs(held) > PATCH * np.abs(field).sum()
+    kept[0] = False
+    if not kept.any():
+        return mask
+    wake: Mask = kept[label]
+    return wake
+
+
+def _profiles(field: Array, wake: Mask, nominal: Reduction, raw_spacing: Sequence[float]) -> dict[str, EdgeProfile]:
     total = float(field.sum())
     if total == 0:
         return {}
@@ -235,7 +254,7 @@ def _profiles(field: Array, nominal: Reduction, raw_spacing: Sequence[float]) ->
         step, spacing = (grid.dy, raw_spacing[0]) if across_y else (grid.dz, raw_spacing[1])
         axis = grid.y if across_y else grid.z
         last = side in ("starboard", "upper")
-        lines = inwards(field, side).sum(axis=1) / total
+        lines = inwards(np.where(wake, field, 0.0), side).sum(axis=1) / total
         # Cells of a resampled plane belong to the nearest line of measured points.
         number = np.floor(np.arange(lines.size) * step / max(spacing, step) + 0.5).astype(int)
         found[side] = EdgeProfile(
