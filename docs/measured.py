@@ -244,6 +244,14 @@ class Sample:
         """The sample survey before it is reduced."""
         return self.console(self.run("inspect", "survey.toml"))
 
+    def inspected_cut(self) -> str:
+        """The same survey without its starboard end before it is reduced: the map, the edges and what to do."""
+        text = self.run("inspect", "cut.toml", status=1)
+        chart = text[text.index("Map of the points") : text.index("Measured variables")]
+        edges = text[text.index("Edges of the window") : text.index("Checks\n")]
+        advice = text[text.index("What to do") : text.index("Notes\n")]
+        return self.console(f"{text.splitlines()[0]}\n...\n{chart}...\n\n{edges}...\n\n{advice}")
+
     def cut(self) -> str:
         """What the program says of the same survey without its starboard end, without heading and notes."""
         text = self.run("reduce", "cut.toml", "--draws", "100", "--overwrite", status=1).replace(" --overwrite", "")
@@ -283,6 +291,7 @@ TABLES: dict[str, Callable[[], str]] = {
 #: Parts that come from the sample survey, in the order in which they are made.
 OUTPUTS: dict[str, Callable[[Sample], str]] = {
     "inspect": Sample.inspected,
+    "inspect cut": Sample.inspected_cut,
     "reduce": Sample.reduced,
     "cut": Sample.cut,
     "truth": Sample.truth,

@@ -64,7 +64,5 @@ def inspection():
         repeats=Repeats(4, 9, 1),
         missing_places=((0.1, 0.0), (0.7, 0.3)),
         missing_in_wake=1,
-        map=PlaneMap(
-            ("." * 151,) * 30 + ("." * 60 + "#o#" + "." * 88,) + ("." * 151,) * 30, (-0.75, 0.75), (-0.3, 0.3)
-        ),
+        map=PlaneMap((*(outer,) * 30, "." * 60 + "#o#" + "." * 88, *(outer,) * 30), (-0.75, 0.75), (-0.3, 0.3)),
     )
