@@ -236,7 +236,7 @@ def test_a_drift_of_the_reference_reading_is_seen_at_revisits_and_taken_out(raw,
     found = reduce(load(path), draws=200)
     said = note(found, "visits to 1 place(s)")
     # q* = q q/(q + 10 Pa s): it seems to fall by 1.04 % of q, as the total pressure does.
-    for quantity in ("total pressure by ", "dynamic pressure by "):
+    for quantity in ("total pressure changed by ", "dynamic pressure by "):
         assert float(said.split(quantity)[1].split("%")[0]) == pytest.approx(-1.03, abs=0.12)
     assert "taken out" in said
     for row in found.rows:

@@ -15,12 +15,13 @@ from numpy.typing import NDArray
 from wakeledger.confidence.sources import Source
 from wakeledger.core.errors import DataError, SurveyError
 from wakeledger.core.grid import Array
-from wakeledger.core.points import Points
+from wakeledger.core.points import Channel, Points
 from wakeledger.intake.gridding.lattice import find_lattice, rows_in_order
 from wakeledger.intake.probe.backlash import correct_backlash, estimate_backlash
 from wakeledger.intake.probe.displacement import COEFFICIENT, STANDARD_UNCERTAINTY
 from wakeledger.intake.probe.lag import correct_lag, estimate_lag, make_rate_filter
 from wakeledger.intake.probe.mounting import Mounting
+from wakeledger.intake.probe.pitot import PitotReduction
 from wakeledger.intake.probe.readings import (
     check_dynamic_pressure,
     estimate_drift,
@@ -50,6 +51,8 @@ STATED = 0.1
 #: A drift is taken out if it is this unlikely to be the scatter of the repeats, else it is carried as an uncertainty.
 SIGNIFICANCE = 0.05
 _CALIBRATION = "probe calibration"
+#: Fewer points tell no rows.
+_FEWEST_OF_A_ROW = 3
 
 
 @dataclass(frozen=True, eq=False)
@@ -143,21 +146,26 @@ class _Preparation:
         self.survey, self.points, self.reference = survey.survey, survey.points, reference
         self.probe: ProbeTable = self.survey.probe[0]
         self.values = {name: channel.values for name, channel in self.points.channels.items()}
-        self.calibration = _calibration(survey, self.probe)
-        self.holes = tuple(f"p{number}" for number in range(1, self.calibration.holes + 1))
+        self.calibration = None if self.probe.calibration is None else _calibration(survey, self.probe)
+        reduction = self._reduction()
+        self.holes = tuple(name for name in reduction.names if name != "static_pressure")
         self._check_columns()
         self.path = _path(self.points)
         self.sources: list[Source] = []
         self.notes: list[str] = []
         self.said: dict[str, str] = {}
+        kinds = {name: replace(self.points.channels[name], values=np.empty(0)) for name in reduction.names}
+        self.traverse = Traverse((Tube(reduction),), kinds)
+
+    def _reduction(self) -> HoleReduction | PitotReduction:
         probe = self.probe
-        reduction = HoleReduction(
+        if self.calibration is None:
+            return PitotReduction(measured_static=probe.role == "flow" and "static_pressure" in self.values)
+        return HoleReduction(
             self.calibration,
             Mounting(pitch=probe.pitch, yaw=probe.yaw, roll=probe.roll),
             tip_diameter=math.nan if probe.tip_diameter is None else probe.tip_diameter,
         )
-        kinds = {hole: replace(self.points.channels[hole], values=np.empty(0)) for hole in self.holes}
-        self.traverse = Traverse((Tube(reduction),), kinds)
 
     def run(self) -> RawSurvey:
         self._calibrated()
@@ -167,10 +175,11 @@ class _Preparation:
         self._backlash()
         self._drift()
         displacement = self._shear()
-        self.notes.append(
-            "The probe was not corrected for the nearness of walls (none are given), nor for a misalignment of its head"
-            " (the outer flow's angles below show the sum of that and of the stream's own)."
-        )
+        if self.calibration is not None:
+            self.notes.append(
+                "The probe was not corrected for the nearness of walls (none are given), nor for a misalignment of its"
+                " head (the outer flow's angles below show the sum of that and of the stream's own)."
+            )
         traverse = self.traverse.frozen_on(self.values, self.reference)
         beyond = int(np.count_nonzero(traverse.out_of_range(self.values, self.reference)))
         if beyond:
@@ -183,6 +192,8 @@ class _Preparation:
     # -- what is there ----------------------------------------------------------------------------------------------
 
     def _check_columns(self) -> None:
+        if self.calibration is None:
+            return
         for hole in self.holes:
             if hole not in self.values:
                 raise DataError(
@@ -201,12 +212,15 @@ class _Preparation:
             )
 
     def _calibrated(self) -> None:
+        if self.calibration is None:
+            return
         bad = self.calibration.bad_points
         if bad:
             lines = ", ".join(str(point.line) for point in bad[:5]) + (", ..." if len(bad) > 5 else "")
+            lines = f"{'line' if len(bad) == 1 else 'lines'} {lines}"
             self.notes.append(
                 f"The calibration does not rest on {len(bad)} of its {self.calibration.table.n} points, which lie off"
-                f" the smooth surface through all others (lines {lines} of its table)."
+                f" the smooth surface through all others ({lines} of its table)."
             )
         pitch, yaw, total, static = self.calibration.standard_uncertainty()
         self.notes.append(
@@ -346,6 +360,8 @@ class _Preparation:
         self._carry(BACKLASH, "backlash of the traverse", (correction_input(BACKLASH),))
 
     def _drift(self) -> None:
+        if self.probe.role == "static":
+            return
         path = self.path
         place = find_revisits(path.y, path.z)
         state = self.traverse.state(self.values, self.reference)
@@ -378,7 +394,7 @@ class _Preparation:
         share = span / self.reference.dynamic_pressure
         for index, (name, key) in enumerate(names):
             rate, sigma = float(found.rate[index]), float(found.standard_uncertainty[index])
-            clear = math.isfinite(sigma) and abs(rate) > _quantile(found.degrees_of_freedom) * sigma
+            clear = math.isfinite(sigma) and abs(rate) > quantile(found.degrees_of_freedom) * sigma
             unit = on_holes(*((since, still) if index == 0 else (still, since)))
             if clear:
                 size -= rate * unit
@@ -387,18 +403,21 @@ class _Preparation:
             parts |= self._one_for_all(f"{DRIFT}.{key}", path.filed(carried * unit))
             known = f"+- {abs(sigma) * share:.2%}" if math.isfinite(sigma) else "one repeat, so its scatter is unknown"
             done = "taken out" if clear else "not clear of the scatter, so carried as an uncertainty"
-            sentences.append(f"the {name} by {rate * share:+.2%} of q ({known}; {done})")
+            changed = "changed " if index == 0 else ""
+            sentences.append(f"the {name} {changed}by {rate * share:+.2%} of q ({known}; {done})")
         if np.any(taken_out):
             # The readings were right at some moment between the first and the last point, and nobody knows when.
             moved = span / math.sqrt(12) * taken_out
             parts |= self._one_for_all(f"{DRIFT}.level", path.filed(on_holes(moved[0] * once, moved[1] * once)))
         self._add(DRIFT, path.filed(size), parts)
         self.said[DRIFT] = (
-            f"{found.visits} visits to {found.places} place(s): over the traverse {' and '.join(sentences)} drifted"
+            f"{found.visits} visits to {found.places} place(s) show that over the traverse {' and '.join(sentences)}"
         )
         self._carry(DRIFT, "drift of the readings", tuple(parts))
 
     def _shear(self) -> Displacement | None:
+        if self.probe.role == "static":
+            return None
         coefficient, diameter = self.probe.displacement, self.probe.tip_diameter
         if coefficient is None:
             coefficient = COEFFICIENT if diameter is not None else 0.0
@@ -453,7 +472,7 @@ class _Preparation:
             self.sources.append(Source(f"{label} (correction)", inputs, "systematic", 1.0))
 
 
-def _quantile(freedom: int) -> float:
+def quantile(freedom: int) -> float:
     """Two-sided quantile of Student's t."""
     from scipy.special import stdtrit
 
@@ -491,6 +510,8 @@ def _path(points: Points) -> _Path:
 
 def _rows_travelled(y: Array, z: Array) -> NDArray[np.int64]:
     """Row of each point, from positions in the order in which they were taken: a new one where the probe turns back."""
+    if y.size < _FEWEST_OF_A_ROW:
+        return np.zeros(y.size, dtype=np.int64)
     line = rows_in_order(y, z, find_lattice(y, z))
     step_y, step_z = np.diff(y), np.diff(z)
     along = step_y if np.abs(step_y).sum() >= np.abs(step_z).sum() else step_z
@@ -503,8 +524,15 @@ def _rows_travelled(y: Array, z: Array) -> NDArray[np.int64]:
 
 
 def corrected_points(points: Points, traverse: Traverse, reference: Reference) -> Points:
-    """The points with hole pressures that repeat where the flow does: at the reference condition and corrected."""
+    """The points with values that repeat where the flow does, at the reference condition and corrected.
+
+    Hole pressures of one probe; of several, whose holes differ, the pressures and velocities they were reduced to.
+    """
     values = {name: channel.values for name, channel in points.channels.items()}
+    if len(traverse.tubes) > 1:
+        state = traverse.state(values, reference)
+        found = {name: getattr(state, name) for name in ("total_pressure", "static_pressure", "u", "v", "w")}
+        return replace(points, channels={name: Channel(array) for name, array in found.items() if array is not None})
     pressures = traverse.pressures(values, reference)
     channels = {hole: replace(points.channels[hole], values=found) for hole, found in pressures.items()}
     return replace(points, channels=channels)
