@@ -1,6 +1,7 @@
 """The commands: exit status, one line for what is wrong, products whole or not at all."""
 
 import dataclasses
+import io
 import json
 import subprocess
 import sys
@@ -9,7 +10,7 @@ from pathlib import Path
 
 import pytest
 
-from wakeledger.cli import exits, wakeledger
+from wakeledger.cli import exits, screen, wakeledger
 from wakeledger.core.errors import SurveyError
 from wakeledger.ledger.archive import open_archive, write_archive
 from wakeledger.ledger.inspection import Inspection
@@ -222,6 +223,14 @@ def test_a_closed_pipe_is_no_error(archive):
     done = subprocess.run(["bash", "-c", script], capture_output=True, text=True, check=True)
     assert done.stdout.startswith("{")
     assert done.stderr == ""
+
+
+@pytest.mark.parametrize(
+    ("encoding", "expected"), [("utf-8", True), ("UTF-8", True), ("ascii", False), ("cp1252", False)]
+)
+def test_signs_beyond_ascii_are_for_utf_8(monkeypatch, encoding, expected):
+    monkeypatch.setattr(sys, "stdout", io.TextIOWrapper(io.BytesIO(), encoding=encoding))
+    assert screen.unicode() is expected
 
 
 def test_an_encoding_without_the_signs_is_no_error(archive):

@@ -2,11 +2,13 @@
 
 import math
 import re
+from pathlib import Path
 
 import numpy as np
 import pytest
 
 from wakeledger.run import survey as survey_module
+from wakeledger.run.inspection.advice import recommendations
 from wakeledger.run.survey import inspect, load, reduce
 
 NOISE = {"u": 0.1, "v": 0.1, "w": 0.1, "total_pressure": 1.0, "static_pressure": 1.0}
@@ -277,6 +279,56 @@ def test_other_arrangements_are_looked_at_too(kit, wing, tmp_path, kind):
     assert len(seen.map.rows) == seen.shape[1] and {len(row) for row in seen.map.rows} == {seen.shape[0]}
     assert sum(row.count("#") for row in seen.map.rows) > 0.05 * seen.shape[0] * seen.shape[1]
     assert not any(edge.side in ("upper", "lower") and not edge.quiet for edge in seen.edges)
+
+
+def test_points_outside_the_probe_range_are_named():
+    [advice] = recommendations((), out_of_range=[(0.1, -0.02), (0.2, 0.0)])
+    assert advice.action == "repeat" and advice.places == ((0.1, -0.02), (0.2, 0.0))
+    assert advice.message.startswith("2 points outside the probe's calibrated range, the first at y = 100, z = -20 mm")
+
+
+@pytest.fixture
+def section(tmp_path):
+    """The sample survey of a section in a folder of its own, with only the lines that a test keeps."""
+    sample = Path(__file__).resolve().parents[2] / "sample_surveys" / "wing_section"
+
+    def make(kept=lambda y: True):
+        folder = tmp_path / f"section-{len(list(tmp_path.iterdir()))}"
+        folder.mkdir()
+        text = (sample / "survey.toml").read_text(encoding="utf-8")
+        (folder / "survey.toml").write_text(text, encoding="utf-8")
+        lines = (sample / "traverse.csv").read_text(encoding="utf-8").splitlines()
+        head = next(k for k, line in enumerate(lines) if re.match(r"^-?[0-9]", line))
+        chosen = [line for line in lines[head:] if kept(float(re.match(r"^-?[0-9.]+", line)[0]))]
+        (folder / "traverse.csv").write_text("\n".join([*lines[:head], *chosen]) + "\n", encoding="utf-8")
+        return inspect(load(folder / "survey.toml"))
+
+    return make
+
+
+def test_a_section_is_drawn_as_a_line(section):
+    seen = section()
+    [row] = seen.map.rows
+    assert len(row) == seen.shape[0] and row.count("o") == 2 and row.count("=") == 1
+    assert re.fullmatch(r"\.+[#o=]+[.o]+", row)
+    # One of the two lost places lies in the wake, one of the places was visited again.
+    assert (len(seen.missing_places), seen.missing_in_wake) == (2, 1)
+    assert (seen.repeats.places, seen.repeats.points, seen.repeats.revisited) == (1, 2, 1)
+    assert seen.angles == () and all(edge.quiet for edge in seen.edges)
+    assert math.isnan(seen.edges[0].vorticity)
+    assert [(one.action, one.places) for one in seen.recommendations] == [("repeat", seen.missing_places[:1])]
+
+
+def test_a_cut_section_is_traversed_further(section):
+    """Without what lies beyond y = 30 mm, 25 mm before the wake's end; then widened as recommended."""
+    cut = section(lambda y: y < 30)
+    [edge] = [edge for edge in cut.edges if not edge.quiet]
+    assert edge.side == "starboard" and "in the last place" in edge.message
+    advice = cut.recommendations[0]
+    assert advice.action == "widen" and f"{1e3 * advice.distance:.0f} mm" in advice.message
+    wider = section(lambda y: y < 30 + 1e3 * advice.distance + 0.5)
+    assert all(edge.quiet for edge in wider.edges)
+    assert advice.distance < 0.1
 
 
 def test_document_holds_everything(kit, wing, tmp_path):

@@ -17,7 +17,6 @@ from wakeledger.intake.gridding import Gridding
 from wakeledger.ledger.inspection import AngleRange, ChannelSummary
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.run.inputs import sources, standard_errors
-from wakeledger.run.inspection.places import NOT_REPEATING
 from wakeledger.run.load import SurveyInput
 from wakeledger.stream.reference import Reference
 
@@ -92,7 +91,7 @@ def shown_noise(points: Points, gridding: Gridding, wake: Mask, first_of_place: 
         return {
             name: estimate_noise(gridding.apply(channel.values), mask=skip).standard_deviation
             for name, channel in points.channels.items()
-            if name not in NOT_REPEATING
+            if name != "time"
         }
     grid = gridding.grid
     iz = np.rint((points.z - grid.z0) / grid.dz).astype(int)
@@ -103,7 +102,7 @@ def shown_noise(points: Points, gridding: Gridding, wake: Mask, first_of_place: 
     places = np.column_stack([points.y / gridding.raw_spacing[0], points.z / gridding.raw_spacing[1]])
     found = {}
     for name, channel in points.channels.items():
-        if name in NOT_REPEATING:
+        if name == "time":
             continue
         chosen = outer & np.isfinite(channel.values)
         found[name] = float(local_noise(places[chosen], channel.values[None, chosen])[0])

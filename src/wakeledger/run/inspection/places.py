@@ -13,8 +13,8 @@ from wakeledger.intake.gridding.lattice import find_lattice
 from wakeledger.intake.probe.readings import SAME_PLACE
 from wakeledger.ledger.inspection import Repeats
 
-#: Channels that neither repeat at a place nor follow their neighbours.
-NOT_REPEATING = frozenset({"time"})
+#: Channels that do not belong to a place: readings of the stream at the moment, and the moment itself.
+OF_THE_MOMENT = frozenset({"time", "reference_dynamic_pressure", "reference_static_pressure"})
 
 
 @dataclass(frozen=True, eq=False)
@@ -78,7 +78,7 @@ class Places:
         found = {}
         for name, channel in points.channels.items():
             array = channel.values
-            if name in NOT_REPEATING:
+            if name in OF_THE_MOMENT:
                 continue
             known = self.usable & np.isfinite(array)
             counts = np.bincount(self.label[known], minlength=self.y.size)

@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from wakeledger.core.flags import Flag, decode
 from wakeledger.core.grid import UniformGrid
+from wakeledger.core.points import Points
 from wakeledger.intake.gridding import Gridding
 from wakeledger.intake.state import nonphysical
 from wakeledger.ledger.inspection import Inspection
@@ -22,7 +24,8 @@ from wakeledger.run.inspection.channels import angle_ranges, channel_summaries, 
 from wakeledger.run.inspection.edges import plane_edges
 from wakeledger.run.inspection.places import Places, places_of
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.traverse import corrected_points
+from wakeledger.run.traverse import RawSurvey, corrected_points
+from wakeledger.stream.reference import Reference
 
 #: Checks whose value needs the noise bias or a reduction's uncertainty; they are left to `reduce`.
 _LATER = frozenset({"noise_bias"})
@@ -64,8 +67,7 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
     places = places_of(points, usable_points(state), gridding.raw_spacing)
     repeats = places.repeats()
     raw = gridded.raw
-    # Hole pressures repeat, and follow their neighbours, at the reference condition only.
-    steady = points if raw is None else corrected_points(points, raw.traverse, nominal.reference)
+    steady = points if raw is None else _steady(points, raw, nominal.reference)
     channels = channel_summaries(
         points,
         noise=shown_noise(steady, gridding, wake, places.first),
@@ -112,6 +114,12 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
         missing_in_wake=in_wake,
         map=_map(gridding, flags, wake, nonphysical(state)),
     )
+
+
+def _steady(points: Points, raw: RawSurvey, reference: Reference) -> Points:
+    """The points with hole pressures at the reference condition, where they repeat and follow their neighbours."""
+    corrected = corrected_points(points, raw.traverse, reference)
+    return replace(points, channels={**points.channels, **corrected.channels})
 
 
 def _lost(places: Places, wake: Mask, grid: UniformGrid) -> tuple[tuple[tuple[float, float], ...], int]:

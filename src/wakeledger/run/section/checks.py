@@ -117,13 +117,12 @@ def noise_bias(reduction: SectionReduction, settings: SectionSettings) -> Check:
 def noise_shift(reduction: SectionReduction, settings: SectionSettings) -> float:
     """Mean change of the drag by noise of the size that the outer flow shows, N/m; NaN where it shows none.
 
-    Every place is moved up and down by one standard deviation of the noise by itself: half the sum of the changes is
-    what independent noise adds on average, to second order.
+    Half the sum of the changes by one standard deviation up and down is what noise adds on average, to second order.
+    The drag is a sum over places of what each gives alone, so that all of them are moved at once.
     """
     sigma = reduction.window.noise
     z, reference, heat = reduction.coordinate, reduction.reference, reduction.total_temperature
     weights = window_weights(z, reduction.window.lower, reduction.window.upper)
-    step = sigma * np.eye(z.size)
 
     def drag(total: Array) -> Array:
         return jones(z, total, reduction.static_pressure, reference, weights=weights, total_temperature=heat)
@@ -133,14 +132,14 @@ def noise_shift(reduction: SectionReduction, settings: SectionSettings) -> float
         if settings.primary == "velocity" and settings.edge_static != "measured":
             here, there = (
                 total_at(speed, reduction.static_pressure, reference, total_temperature=heat)
-                for speed in (reduction.speed, reduction.speed + sign * step)
+                for speed in (reduction.speed, reduction.speed + sign * sigma)
             )
             return reduction.total_pressure + there - here
-        return reduction.total_pressure + sign * step
+        return reduction.total_pressure + sign * sigma
 
     if math.isnan(sigma):
         return math.nan
-    return float(np.sum((drag(moved(1.0)) + drag(moved(-1.0))) / 2.0 - drag(reduction.total_pressure)))
+    return float((drag(moved(1.0)) + drag(moved(-1.0))) / 2.0 - drag(reduction.total_pressure))
 
 
 def outer_flow(reduction: SectionReduction, facts: SectionFacts) -> Check:
