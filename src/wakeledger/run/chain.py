@@ -380,7 +380,7 @@ class Chain:
                 static = apply(state.static_pressure)
                 total = static + kinetic
             else:
-                excess = -0.5 * reference.density * (v**2 + w**2)
+                excess: Array = -0.5 * reference.density * (v**2 + w**2)
                 if self.settings.turning_pressure:
                     excess = crossflow_pressure(v, w, grid, density=reference.density)
                 static = reference.static_pressure + excess
@@ -421,7 +421,10 @@ class Chain:
         region = self._region(loss, whole_vorticity, grid, vary)
         mask = region.mask
         zero = loss_zero(loss, mask) + vary.loss_shift
+        measured = flow
         flow = self._zeroed(flow, reference, zero)
+        if flow.v is not measured.v:
+            whole_vorticity = axial_vorticity(flow.v, flow.w, grid)
         vorticity = np.where(mask, whole_vorticity, 0.0)
         forces = vorticity_forces(vorticity, grid, reference, moment_centre=settings.moment_centre)
         loss_free = loss_free_axial_velocity(flow, reference)
@@ -546,7 +549,8 @@ class Chain:
         """The plane with its total pressure raised by a constant, and what depends on it following.
 
         A measured speed stays, and a static pressure that rests on the total one follows; where the speed itself comes
-        from the pressures, it follows, at the same static pressure and the same measured, else total, temperature.
+        from the pressures, it follows, at the same static pressure and the same measured, else total, temperature. Where
+        the flow's direction was measured, the crossflow follows the speed; where v and w themselves were, they stay.
         """
         total = flow.total_pressure + zero
         raised = total / flow.total_pressure
@@ -560,10 +564,9 @@ class Chain:
                 static_pressure=flow.static_pressure * raised,
                 density=flow.density * raised,
             )
-        crossflow = flow.v**2 + flow.w**2
         if not reference.compressible:
-            square = 2 * (total - flow.static_pressure) / reference.density - crossflow
-            return replace(flow, total_pressure=total, u=_axial(square, flow.u))
+            square = 2 * (total - flow.static_pressure) / reference.density
+            return replace(self._with_speed(flow, square), total_pressure=total)
         exponent = reference.gas_constant / reference.heat_capacity
         ratio = np.maximum(total / flow.static_pressure, 1.0) ** exponent
         if {"temperature", "density"} & self.measured:
@@ -572,14 +575,18 @@ class Chain:
             total_temperature, density = temperature * ratio, flow.density
         else:
             total_temperature, density = flow.total_temperature, flow.density * raised**exponent
-        square = 2 * reference.heat_capacity * total_temperature * (1 - 1 / ratio) - crossflow
+        square = 2 * reference.heat_capacity * total_temperature * (1 - 1 / ratio)
         return replace(
-            flow,
-            total_pressure=total,
-            u=_axial(square, flow.u),
-            density=density,
-            total_temperature=total_temperature,
+            self._with_speed(flow, square), total_pressure=total, density=density, total_temperature=total_temperature
         )
+
+    def _with_speed(self, flow: Flow, square: Array) -> Flow:
+        """The plane with another square of the speed, m²/s², in the measured direction or at the measured crossflow."""
+        crossflow = flow.v**2 + flow.w**2
+        if self.traverse is None and not {"u", "pitch"} & self.measured:
+            return replace(flow, u=_axial(square - crossflow, flow.u))
+        factor = np.sqrt(np.maximum(square, 0.0) / (flow.u**2 + crossflow))
+        return replace(flow, u=factor * flow.u, v=factor * flow.v, w=factor * flow.w)
 
     def _estimate(
         self,
