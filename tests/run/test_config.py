@@ -202,12 +202,6 @@ def test_flight_inputs():
         ((("row = {", 'p1 = { column = "p1", unit = "Pa" }\nrow = {'),), "[plane.columns] p1"),
         ((PROBE, ('["angle.pitch", "angle.yaw"]', '["calibration"]'), ('"0.05 deg"', '"0.5 %"')), "[probe]"),
         (
-            ("[[probe]]\ntube = 1\n" + PROBE.removeprefix("[probe]\n"), "[[probe]]\ntube = 2\n",
-             ('primary = "total_pressure"', 'primary = "hole_pressures"'),
-             ("row = {", "".join(f'p{n} = {{ column = "p{n}", unit = "Pa" }}\n' for n in range(1, 6)) + "row = {")),
-            "[[probe]]",
-        ),
-        (
             (("[plane]\n", "[[plane]]\n"),
              ("[boundary]", '[[plane]]\nfile = "b.csv"\nstation = "2 m"\nprimary = "velocity"\n[plane.columns]\n'
               + "".join(f'{n} = {{ column = "{n}", unit = "m" }}\n' for n in "yz")

@@ -19,7 +19,8 @@ from wakeledger.physics.vortices.identify import Vortex
 from wakeledger.physics.vortices.vortex_sum import VortexSum, WakeParts, find_parts, summarise
 from wakeledger.run.chain import Chain, Reduction, Settings
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.traverse import RawSurvey, corrected_points, prepare_traverse
+from wakeledger.run.rake import prepare_raw
+from wakeledger.run.traverse import RawSurvey, corrected_points
 from wakeledger.stream.reference import Reference
 
 #: Points per core length that the plane is resampled to where its own points are uneven.
@@ -80,7 +81,7 @@ def grid_survey(survey: SurveyInput, *, quick: bool = False) -> Gridded:
     file, points = survey.survey, survey.points
     reference = file.reference.resolve()
     settings = settings_of(survey, reference)
-    raw = prepare_traverse(survey, reference) if file.plane.primary == "hole_pressures" else None
+    raw = prepare_raw(survey, reference) if file.plane.primary == "hole_pressures" else None
     check_duplicates(points if raw is None else corrected_points(points, raw.traverse, reference))
     empty = Chain(points, None, settings)  # type: ignore[arg-type]
     if raw is not None:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -15,6 +15,7 @@ from wakeledger.core.names import VARIABLES
 from wakeledger.core.points import Points
 from wakeledger.intake.probe.record import Calibration
 from wakeledger.run.config import Survey, parse_survey, read_survey
+from wakeledger.run.tubes import RakePoints, assemble
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -31,17 +32,28 @@ class SurveyInput:
     survey : Survey
         The survey file.
     points : Points
-        The points of its plane as read.
+        The points of its plane as read; those of a rake where its tubes were, static tubes left out.
     inputs : mapping of str to str
         SHA-256 of each input file by name.
     calibrations : mapping of str to Calibration
         Calibrated probes by the name under which the survey file gives them.
+    rake : RakePoints or None
+        Which tube of a rake took which point.
+    read : Points or None
+        The points of a rake as read; None where `points` are.
     """
 
     survey: Survey
     points: Points
     inputs: Mapping[str, str]
     calibrations: Mapping[str, Calibration] = field(default_factory=dict)
+    rake: RakePoints | None = None
+    read: Points | None = None
+
+    @property
+    def as_read(self) -> Points:
+        """The points of the file, to be kept."""
+        return self.points if self.read is None else self.read
 
 
 def load(path: str | Path) -> SurveyInput:
@@ -73,7 +85,8 @@ def load(path: str | Path) -> SurveyInput:
 
         ledger = open_archive(path)
         survey = _kept_survey(ledger.survey_text, ledger.raw, path)
-        return SurveyInput(survey, ledger.raw, ledger.inputs, _kept_calibrations(survey, ledger.calibrations, path))
+        calibrations = _kept_calibrations(survey, ledger.calibrations, path)
+        return _assembled(SurveyInput(survey, ledger.raw, ledger.inputs, calibrations))
     return load_survey(read_survey(path))
 
 
@@ -157,7 +170,15 @@ def load_survey(survey: Survey) -> SurveyInput:
         calibration = calibrations[name] = load_calibration(survey.resolve(name))
         inputs[name] = hashlib.sha256(survey.resolve(name).read_bytes()).hexdigest()
         inputs |= {own: digest for own, digest in calibration.inputs.items() if own not in inputs}
-    return SurveyInput(survey, points, inputs, calibrations)
+    return _assembled(SurveyInput(survey, points, inputs, calibrations))
+
+
+def _assembled(survey: SurveyInput) -> SurveyInput:
+    """The same with the points of a rake where its tubes were."""
+    if not survey.survey.rake:
+        return survey
+    points, rake = assemble(survey.survey, survey.points)
+    return replace(survey, points=points, rake=rake, read=survey.points)
 
 
 def refuse_unsupported(survey: Survey) -> None:

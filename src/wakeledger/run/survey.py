@@ -379,7 +379,7 @@ def _ledger(
         rows=rows,
         covariance=covariance,
         plane=tables.plane_table(prepared.chain, nominal),
-        raw=survey.points,
+        raw=survey.as_read,
         survey_text=file.text,
         estimates=_crosschecks(prepared, rows, samples, reason),
         comparisons=comparisons(file, rows, _scales(prepared)),

@@ -18,8 +18,10 @@ from wakeledger.core.flags import Flag
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Channel
 from wakeledger.intake.probe.lag import RateFilter
+from wakeledger.intake.probe.pitot import STATIC_INPUT, PitotReduction
 from wakeledger.intake.probe.readings import at_reference_condition
 from wakeledger.intake.probe.reduction import HoleReduction, ProbeStream
+from wakeledger.intake.probe.static_tubes import StaticInterpolation
 from wakeledger.intake.state import State
 
 #: Readings of the stream that were taken beside the holes.
@@ -45,7 +47,7 @@ class LagFilter:
     lag : float
         Time constant, s.
     order : ndarray of int, shape (n,)
-        Which points, as filed, were taken one after the other.
+        Which points, as filed, were taken one after the other; 0 is added to others, of other tubes.
     """
 
     rates: RateFilter
@@ -54,7 +56,7 @@ class LagFilter:
 
     def added(self, pressure: Array) -> Array:
         """Lag times rate, Pa, shape (..., n); 0 at points that have none."""
-        found = np.empty(pressure.shape)
+        found = np.zeros(pressure.shape)
         found[..., self.order] = self.lag * np.nan_to_num(self.rates.rate(pressure[..., self.order]))
         return found
 
@@ -99,14 +101,51 @@ class Tube:
 
     Attributes
     ----------
-    reduction : HoleReduction
+    reduction : HoleReduction or PitotReduction
         Of its hole pressures, absolute.
     points : ndarray of int, or None
         Its points; None for all.
     """
 
-    reduction: HoleReduction
+    reduction: HoleReduction | PitotReduction
     points: NDArray[np.intp] | None = None
+
+
+@dataclass(frozen=True, eq=False)
+class StaticTubes:
+    """Static tubes that sit elsewhere than the tubes in the flow, and their readings.
+
+    Attributes
+    ----------
+    traverses : tuple of Traverse
+        Of each tube, its reading as ``p1``.
+    values : tuple of mapping of str to ndarray
+        Readings of each.
+    interpolation : StaticInterpolation
+        From the readings of all, one tube after the other, to the points in the flow.
+    """
+
+    traverses: tuple[Traverse, ...]
+    values: tuple[Mapping[str, Array], ...]
+    interpolation: StaticInterpolation
+
+    def at_points(
+        self, reference: ProbeStream, errors: Mapping[str, Array | float], *, normalised: bool = True
+    ) -> Array:
+        """Static pressure at the points in the flow, Pa, shape (..., n).
+
+        Errors of the corrections and of the interpolation (`STATIC_INPUT`) act on it; those of single points do not.
+        """
+        common = {name: error for name, error in errors.items() if name.startswith("correction.")}
+        readings = [
+            replace(traverse, normalised=normalised).pressures(values, reference, common)["p1"]
+            for traverse, values in zip(self.traverses, self.values, strict=True)
+        ]
+        shape = np.broadcast_shapes(*(one.shape[:-1] for one in readings))
+        whole = np.concatenate([np.broadcast_to(one, (*shape, one.shape[-1])) for one in readings], axis=-1)
+        found = self.interpolation.at_points(np.nan_to_num(whole))
+        error = errors.get(STATIC_INPUT)
+        return found if error is None else found + error * self.interpolation.standard_uncertainty
 
 
 @dataclass(frozen=True, eq=False)
@@ -123,6 +162,8 @@ class Traverse:
         The corrections of the hole pressures, in the order in which they are made.
     normalised : bool
         Whether the readings of the stream at each point are used, where there are any.
+    statics : StaticTubes or None
+        Where the static pressure of pitot tubes comes from, if not from a column of their own or from the stream.
 
     Notes
     -----
@@ -134,6 +175,7 @@ class Traverse:
     kinds: Mapping[str, Channel]
     additions: tuple[Addition, ...] = ()
     normalised: bool = True
+    statics: StaticTubes | None = None
 
     @property
     def holes(self) -> tuple[str, ...]:
@@ -143,11 +185,17 @@ class Traverse:
     @property
     def inputs(self) -> tuple[str, ...]:
         """Names of the inputs that errors of the corrections are drawn for."""
-        return tuple(name for addition in self.additions for name in addition.per_sigma)
+        found = tuple(name for addition in self.additions for name in addition.per_sigma)
+        if self.statics is not None:
+            found += tuple(name for traverse in self.statics.traverses for name in traverse.inputs)
+        return found
 
     def without(self, name: str) -> Traverse:
         """The same traverse without one of its corrections."""
-        return replace(self, additions=tuple(one for one in self.additions if one.name != name))
+        statics = self.statics
+        if statics is not None:
+            statics = replace(statics, traverses=tuple(one.without(name) for one in statics.traverses))
+        return replace(self, additions=tuple(one for one in self.additions if one.name != name), statics=statics)
 
     def pressures(
         self,
@@ -224,6 +272,8 @@ class Traverse:
         """
         readings: dict[str, Array] = self.pressures(values, reference, errors)
         readings |= self._in_the_flow(values, reference)
+        if self.statics is not None:
+            readings["static_pressure"] = self.statics.at_points(reference, errors, normalised=self.normalised)
         # Errors of the holes are in the readings by now.
         errors = {name: error for name, error in errors.items() if not name.startswith("probe.")}
         if len(self.tubes) == 1 and self.tubes[0].points is None:

@@ -338,7 +338,7 @@ def check_positions(plane: Plane, *, coordinates: int) -> None:
         )
 
 
-def check_primary(plane: Plane, *, edge_static: str | None) -> None:
+def check_primary(plane: Plane, *, edge_static: str | None, calibrated: bool = True) -> None:
     """Refuse a plane without the columns its primary quantity needs.
 
     Parameters
@@ -347,6 +347,8 @@ def check_primary(plane: Plane, *, edge_static: str | None) -> None:
         The plane.
     edge_static : str or None
         ``[section] edge_static`` of a line traverse, None for an area survey.
+    calibrated : bool
+        Whether the probes are calibrated; else each is a tube that reads one pressure.
 
     Raises
     ------
@@ -381,7 +383,9 @@ def check_primary(plane: Plane, *, edge_static: str | None) -> None:
             for name in ("u", "v", "w"):
                 need(name in names, f"u, v and w, or speed, pitch and yaw, and {name!r} is missing", "add it")
     else:
-        for name in HOLES[:5]:
+        if not calibrated:
+            need("p1" in names, "the reading of the tubes, and 'p1' is missing", "add it")
+        for name in HOLES[:5] if calibrated else ():
             need(name in names, f"the holes p1 to p5 (or p7), and {name!r} is missing", "add it")
 
 

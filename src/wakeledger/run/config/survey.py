@@ -15,6 +15,7 @@ from wakeledger.core.errors import SurveyError
 from wakeledger.run.config.errors import survey_error
 from wakeledger.run.config.plane import Plane, check_positions, check_primary
 from wakeledger.run.config.quantities import Label, Table, below, fail, one_or_more_tables, tables
+from wakeledger.run.config.rake import check_rake, is_directed, is_rake
 from wakeledger.run.config.stream import ModelTable, ReferenceTable
 from wakeledger.run.config.tables import (
     BodyTable,
@@ -73,6 +74,16 @@ class Survey(Table):
         return self.planes[0]
 
     @property
+    def directed(self) -> bool:
+        """Whether the direction of the flow is measured; pitot tubes alone do not tell it."""
+        return self.plane.primary != "hole_pressures" or is_directed(self.probe)
+
+    @property
+    def rake(self) -> bool:
+        """Whether the points were taken by tubes that have to be put together first."""
+        return self.plane.primary == "hole_pressures" and is_rake(self.probe)
+
+    @property
     def path(self) -> Path:
         """The survey file."""
         return self._path
@@ -106,7 +117,7 @@ class Survey(Table):
             edge_static = self.section.edge_static if self.section else None
             try:
                 check_positions(plane, coordinates=2 if edge_static is None else 1)
-                check_primary(plane, edge_static=edge_static)
+                check_primary(plane, edge_static=edge_static, calibrated=self.directed or not self.probe)
             except PydanticCustomError as error:
                 raise below(error, *place) from error
             if self.section is None and bound_line is not None and plane.station <= bound_line:
@@ -116,13 +127,15 @@ class Survey(Table):
                     *place,
                     "station",
                 )
-            if plane.primary == "hole_pressures" and not any(probe.calibration for probe in self.probe):
-                raise fail(
-                    'primary = "hole_pressures" needs a calibrated probe',
-                    'add [probe] with calibration = "probe.toml"',
-                    *place,
-                    "primary",
-                )
+            if plane.primary == "hole_pressures":
+                if not self.probe:
+                    raise fail(
+                        'primary = "hole_pressures" needs a calibrated probe',
+                        'add [probe] with calibration = "probe.toml", or without it for a pitot tube',
+                        *place,
+                        "primary",
+                    )
+                check_rake(plane, self.probe)
         refuse_twice(self.compare, "compare")
         refuse_twice(self.body, "body")
         half = self.boundary is not None and self.boundary.reflection == "y"
@@ -163,9 +176,9 @@ class Survey(Table):
             holes = sorted(name for name in plane.columns if re.fullmatch(r"p\d", name))
             raw = plane.primary == "hole_pressures"
             add(
-                raw and self.section is not None,
+                raw and self.section is not None and self.directed,
                 "[plane] primary",
-                "hole pressures of a line traverse are not reduced yet; give total and static pressure",
+                "hole pressures of a calibrated probe are not reduced along a line yet; give total and static pressure",
             )
             add(
                 holes and not raw,
@@ -184,22 +197,15 @@ class Survey(Table):
                 "positions are not turned yet; leave it out, or turn them in the file",
             )
             add(
-                "tube" in plane.columns,
+                "tube" in plane.columns and not raw,
                 "[plane.columns] tube",
-                "rakes are not assembled yet; give each point's position",
+                'tubes are only told apart with primary = "hole_pressures"; give each point\'s position',
             )
         holes_measured = any(plane.primary == "hole_pressures" for plane in self.planes)
         add(
             self.probe and not holes_measured,
             "[probe]",
             'a probe is only used with primary = "hole_pressures"; leave it out',
-        )
-        rake = any(probe.tube is not None or probe.offset is not None or probe.role == "static" for probe in self.probe)
-        add(
-            len(self.probe) > 1 or rake,
-            "[[probe]]",
-            "rakes of several tubes and separate static tubes are not assembled yet; keep one [probe] without tube,"
-            " offset and role",
         )
         add(self.empty_tunnel, "[empty_tunnel]", "an empty-tunnel survey is not subtracted yet; leave it out")
         if self.boundary is not None:

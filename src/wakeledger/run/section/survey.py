@@ -338,7 +338,7 @@ def _ledger(
         rows=(row,),
         covariance=np.array([[variance]]),
         plane=_traverse(prepared, survey.survey.plane.station),
-        raw=survey.points,
+        raw=survey.as_read,
         survey_text=file.text,
         estimates=_crosschecks(prepared, row, samples, why),
         comparisons=comparisons(file, (row,), {ROW: nominal.reference.dynamic_pressure * settings.chord}),
