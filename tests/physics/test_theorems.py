@@ -28,7 +28,7 @@ def test_mutual_drags_are_equal_for_unequal_spans():
     d12, d21 = np.sum(psi[0] * xi[1]), np.sum(psi[1] * xi[0])
     # The discrete Green's function is symmetric, so this holds to rounding; each is a sizeable part of the whole.
     assert d12 == pytest.approx(d21, rel=1e-11)
-    assert abs(d12) > 0.1 * np.sum(psi[0] * xi[0])
+    assert abs(d12) > 0.05 * np.sum(psi[0] * xi[0])
 
 
 def test_half_of_a_symmetric_wake_has_half_the_drag_in_the_whole_ones_stream_function():
