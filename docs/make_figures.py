@@ -118,6 +118,58 @@ def mounting() -> Figure:
     return figure
 
 
+def holes() -> Figure:
+    """Hole numbers of five- and seven-hole probes, and the flow angles in probe axes."""
+    rings = {
+        "five holes": {2: 180, 3: 0, 4: 270, 5: 90},
+        "seven holes": {2: 90, 3: 150, 4: 210, 5: 270, 6: 330, 7: 30},
+    }
+    with drawing(7.4, 2.4, 4) as (figure, panels):
+        for panel, (name, ring) in zip(panels, rings.items(), strict=False):
+            _bare(panel, (-1.5, 1.6), (-1.45, 1.5))
+            panel.set_title(f"{name}\nseen from behind", fontsize=8.5)
+            edge = np.radians(np.linspace(0, 360, 100))
+            panel.plot(np.cos(edge), np.sin(edge), color=INK, lw=1.2)
+            for number, angle in {1: None, **ring}.items():
+                y, z = (
+                    (0.0, 0.0)
+                    if angle is None
+                    else (0.62 * np.cos(np.radians(angle)), 0.62 * np.sin(np.radians(angle)))
+                )
+                panel.plot(y, z, "o", ms=15, mfc="white", mec=BLUE if number > 1 else VERMILION)
+                panel.annotate(f"p{number}", (y, z), ha="center", va="center", fontsize=7)
+            _arrow(panel, (1.05, 0), (1.5, 0), GREY)
+            panel.annotate("y", (1.42, 0.1), fontsize=8, color=GREY)
+            _arrow(panel, (0, 1.05), (0, 1.45), GREY)
+            panel.annotate("z", (0.1, 1.32), fontsize=8, color=GREY)
+            panel.annotate("port", (-1.5, -1.35), fontsize=7, color=GREY)
+            panel.annotate("starboard", (0.75, -1.35), fontsize=7, color=GREY)
+        angles = (
+            ("pitch > 0: upwash", "seen from port", "x", "z", "lower holes\nread more"),
+            ("yaw > 0: to starboard", "seen from above", "x", "y", "port holes\nread more"),
+        )
+        for panel, (name, view, right, up, words) in zip(panels[2:], angles, strict=True):
+            _bare(panel, (-1.6, 1.5), (-1.45, 1.5))
+            panel.set_title(f"{name}\n{view}", fontsize=8.5)
+            panel.plot([-0.5, 1.3], [0, 0], color=GREY, lw=5, solid_capstyle="round")
+            panel.plot(-0.5, 0, "o", ms=9, color=INK)
+            panel.plot([-1.6, -0.5], [0, 0], color=GREY, lw=0.8, ls="--")
+            slope = np.radians(24)
+            _arrow(
+                panel,
+                (-0.62 - 0.95 * np.cos(slope), -0.06 - 0.95 * np.sin(slope)),
+                (-0.62, -0.06),
+                VERMILION,
+            )
+            panel.annotate("flow", (-1.6, -0.75), fontsize=8, color=VERMILION)
+            panel.annotate(words, (-0.45, -0.6), fontsize=7, color=BLUE)
+            _arrow(panel, (-1.4, -1.3), (-0.85, -1.3), GREY)
+            _arrow(panel, (-1.4, -1.3), (-1.4, -0.85), GREY)
+            panel.annotate(right, (-0.8, -1.35), fontsize=8, color=GREY)
+            panel.annotate(up, (-1.32, -0.95), fontsize=8, color=GREY)
+    return figure
+
+
 def accuracy() -> Figure:
     """Error of the vorticity form against the spacing, for several orders of the differences."""
     elements = measured.pair()
@@ -186,6 +238,7 @@ def trace(ledger: Ledger) -> Figure:
 DRAWN: dict[str, Callable[[], Figure]] = {
     "axes.svg": axes,
     "mounting.svg": mounting,
+    "holes.svg": holes,
     "accuracy.svg": accuracy,
     "station.svg": station,
 }

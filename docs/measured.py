@@ -38,6 +38,7 @@ from wakeledger.synthetic import (
 
 DOCS = Path(__file__).resolve().parent
 SAMPLE = DOCS.parent / "sample_surveys" / "wing_and_tail"
+RAW_SAMPLE = DOCS.parent / "sample_surveys" / "raw_traverse"
 BLOCK = re.compile(r"(<!-- measured: (?P<name>[\w ]+) -->\n)(?P<body>.*?)(<!-- end -->)", re.DOTALL)
 
 RHO, U, CORE = 1.2, 42.0, 0.03
@@ -252,6 +253,17 @@ class Sample:
         advice = text[text.index("What to do") : text.index("Notes\n")]
         return self.console(f"{text.splitlines()[0]}\n...\n{chart}...\n\n{edges}...\n\n{advice}")
 
+    def raw(self) -> str:
+        """What the program says of the raw traverse's corrections, and its total drag."""
+        folder = self.folder / "raw_traverse"
+        folder.mkdir(exist_ok=True)
+        for name in ("survey.toml", "traverse.csv", "probe.toml", "calibration.csv"):
+            (folder / name).write_bytes((RAW_SAMPLE / name).read_bytes())
+        text = self.run("reduce", "raw_traverse/survey.toml", "--overwrite").replace(" --overwrite", "")
+        drag = next(line for line in text.splitlines() if line.startswith("total drag"))
+        notes = text[text.index("Notes\n") : text.index(" - 5095 points")]
+        return self.console(f"{text.splitlines()[0]}\n...\n{drag}\n...\n{notes}...")
+
     def cut(self) -> str:
         """What the program says of the same survey without its starboard end, without heading and notes."""
         text = self.run("reduce", "cut.toml", "--draws", "100", "--overwrite", status=1).replace(" --overwrite", "")
@@ -293,6 +305,7 @@ OUTPUTS: dict[str, Callable[[Sample], str]] = {
     "inspect": Sample.inspected,
     "inspect cut": Sample.inspected_cut,
     "reduce": Sample.reduced,
+    "raw": Sample.raw,
     "cut": Sample.cut,
     "truth": Sample.truth,
 }

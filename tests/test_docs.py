@@ -432,7 +432,7 @@ def test_measured_tables_can_be_measured_again(measured, name):
     assert same(measured.blocks()[name], measured.TABLES[name](), 0.5)
 
 
-@pytest.mark.parametrize("name", ["inspect", "inspect cut", "reduce", "cut", "truth"])
+@pytest.mark.parametrize("name", ["inspect", "inspect cut", "reduce", "raw", "cut", "truth"])
 def test_printed_outputs_are_what_the_program_prints(measured, sample, name):
     # 300 draws: a tenth for uncertainties whose last digit hangs on one draw, values move less.
     assert same(measured.blocks()[name], sample.parts[name], 0.1)
