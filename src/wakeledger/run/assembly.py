@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 
 from wakeledger.confidence.budget import Budget
 from wakeledger.confidence.samples import Samples
@@ -78,6 +79,27 @@ def ledger_row(
         coefficient=coefficient,
         coefficient_standard_uncertainty=coefficient_u,
     )
+
+
+def made_unknown(samples: Samples, rows: Sequence[str], reason: str) -> Samples:
+    """Draws whose figures for some rows and their coefficients are unknown, and why.
+
+    Parameters
+    ----------
+    samples : Samples
+        Draws of a chain's outputs.
+    rows : sequence of str
+        The rows.
+    reason : str
+        Why.
+
+    Returns
+    -------
+    Samples
+    """
+    named = {*rows, *(coefficient_of(row) for row in rows)}
+    unknown = tuple(reason if name in named else why for name, why in zip(samples.names, samples.unknown, strict=True))
+    return replace(samples, unknown=unknown)
 
 
 def effective_degrees_of_freedom(budget: Budget | None, row: str, sources: Sequence[Source]) -> float:

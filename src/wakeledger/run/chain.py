@@ -80,6 +80,14 @@ OUTPUTS: tuple[str, ...] = (
 )
 
 
+#: What the chain gives where the direction of the flow was not measured.
+WITHOUT_CROSSFLOW: tuple[str, ...] = (
+    "profile_drag",
+    coefficient_of("profile_drag"),
+    estimate_of("profile_drag", "entropy_area"),
+)
+
+
 @dataclass(frozen=True)
 class Settings:
     """What the survey file fixes about the chain, in SI.
@@ -106,6 +114,8 @@ class Settings:
         How far the region is grown, m.
     include, exclude : tuple of ndarray
         Boxes and polygons that belong to the wake region, or do not.
+    crossflow : bool
+        Whether the direction of the flow was measured; else the profile drag is all that can be had.
     turning_pressure : bool
         Whether a static pressure that was not measured includes what turns the crossflow, beside −½ρ(v² + w²).
     """
@@ -123,6 +133,7 @@ class Settings:
     grow: float | None = None
     include: tuple[Array, ...] = ()
     exclude: tuple[Array, ...] = ()
+    crossflow: bool = True
     turning_pressure: bool = True
 
 
@@ -223,6 +234,11 @@ class Reduction:
     values: Mapping[str, float]
     invalid_area: float
     residual_parts: tuple[float, float]
+
+    @property
+    def drag(self) -> str:
+        """The row with as much of the drag as can be had: the total, or the profile drag alone."""
+        return "profile_drag" if np.isnan(self.values["total_drag"]) else "total_drag"
 
     @property
     def vector(self) -> Array:
@@ -458,6 +474,8 @@ class Chain:
         offset, invalid = (0.0, 0.0), 0.0
         if estimates:
             offset, invalid = self._estimate(values, flow, reference, region, forces, near, vary, geometric)
+        if not settings.crossflow:
+            values |= dict.fromkeys((name for name in OUTPUTS if name not in WITHOUT_CROSSFLOW), np.nan)
         return Reduction(
             reference,
             flow,
@@ -549,8 +567,9 @@ class Chain:
         """The plane with its total pressure raised by a constant, and what depends on it following.
 
         A measured speed stays, and a static pressure that rests on the total one follows; where the speed itself comes
-        from the pressures, it follows, at the same static pressure and the same measured, else total, temperature. Where
-        the flow's direction was measured, the crossflow follows the speed; where v and w themselves were, they stay.
+        from the pressures, it follows, at the same static pressure and the same measured, else total, temperature.
+        Where the flow's direction was measured, the crossflow follows the speed; where v and w themselves were, they
+        stay.
         """
         total = flow.total_pressure + zero
         raised = total / flow.total_pressure

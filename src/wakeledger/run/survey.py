@@ -17,7 +17,7 @@ from wakeledger.confidence.terms import NumericalTerm, add_terms
 from wakeledger.core.errors import InputError
 from wakeledger.core.grid import Array
 from wakeledger.ledger.inspection import Inspection
-from wakeledger.ledger.rows import CrossCheck, Ledger, Row
+from wakeledger.ledger.rows import Check, CrossCheck, Ledger, Row
 from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
 from wakeledger.physics.loading.span import span_loading
 from wakeledger.physics.methods.energy_area import crossflow_energy
@@ -26,7 +26,15 @@ from wakeledger.physics.methods.wake_line import WakeLine, path_scatter, wake_li
 from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
 from wakeledger.physics.vortices.vortex_sum import VortexSum
 from wakeledger.run import tables
-from wakeledger.run.assembly import NO_SOURCE, budget_lines, comparisons, cross_check, ledger_row, require_rows
+from wakeledger.run.assembly import (
+    NO_SOURCE,
+    budget_lines,
+    comparisons,
+    cross_check,
+    ledger_row,
+    made_unknown,
+    require_rows,
+)
 from wakeledger.run.chain import (
     ESTIMATES,
     OUTPUTS,
@@ -53,6 +61,16 @@ Progress = Callable[[int, int], None]
 #: Draws that tell the wake region's own effect from that of noise.
 _NOISE_DRAWS = 16
 _NO_WAKE = "no wake was found, and what the noise may hide is unknown"
+_NO_BOUND_LINE = "without mean_chord, quarter_chord_x or span the bound vortex's effect on it is unknown"
+_SEES_THE_BOUND_VORTEX = {
+    ("induced_drag", "energy_area"),
+    ("induced_drag", "wake_line"),
+    ("total_drag", "momentum_area"),
+}
+_UNBALANCED = "the net circulation is not zero, so the induced drag depends on where the window ends"
+#: Outputs that hang on the induced drag.
+_INDUCED = ("induced_drag", "total_drag", "span_efficiency")
+_ASSUMED_STATIC = "at the stream's static pressure it is the algebra of the row: it tests the arithmetic, not the flow"
 _SAME_ALGEBRA = "the same algebra as the sum of the rows: it tests the arithmetic, not the flow"
 
 
@@ -133,7 +151,10 @@ def reduce(
             samples, budget = _propagate(prepared, terms, draws=count, seed=uncertainty.seed, progress=progress)
         except InputError as error:
             raise error.located(file=survey.survey.path) from error
-    return _ledger(survey, prepared, samples, budget, terms, command=command)
+    checks = all_checks(prepared.nominal, _facts(prepared))
+    if samples is not None and any(check.name == "net_circulation" and check.verdict == "fail" for check in checks):
+        samples = made_unknown(samples, _INDUCED, _UNBALANCED)
+    return _ledger(survey, prepared, samples, budget, checks, command=command)
 
 
 def inspect(survey: SurveyInput) -> Inspection:
@@ -193,7 +214,8 @@ def _prepare(survey: SurveyInput) -> Prepared:
     reference, gridding = first.reference, chain.gridding
     near_field = chain.near_field(first.vorticity, first.flow.grid)
     line = _line(first)
-    kept = None if math.isnan(vortices.induced_drag) else gridded.parts
+    found = first.region.mask.any() and not math.isnan(vortices.induced_drag)
+    kept = gridded.parts if found else None
     chain = replace(chain, frozen=Frozen(near_field, line.cuts if line.reason is None else None, kept))
     raw = gridded.raw
     declared = sources(file, points, reference) + (() if raw is None else raw.sources)
@@ -236,6 +258,8 @@ def _noises(
     seed: int,
 ) -> tuple[tuple[Noise, ...], list[str]]:
     """Noise of the crossflow as declared, else as the data show it; and what the data say about the declaration."""
+    if not chain.settings.crossflow:
+        return (), []
     noises = declared_noise(chain, nominal, declared, inputs, seed=seed)
     if chain.gridding.kind != "uniform":
         if noises:
@@ -357,7 +381,7 @@ def _ledger(
     prepared: Prepared,
     samples: Samples | None,
     budget: Budget | None,
-    terms: Sequence[NumericalTerm],
+    checks: tuple[Check, ...],
     *,
     command: str,
 ) -> Ledger:
@@ -383,8 +407,8 @@ def _ledger(
         survey_text=file.text,
         estimates=_crosschecks(prepared, rows, samples, reason),
         comparisons=comparisons(file, rows, _scales(prepared)),
-        budget=budget_lines(budget, names),
-        checks=all_checks(nominal, _facts(prepared)),
+        budget=budget_lines(budget, [row.name for row in rows if math.isfinite(row.standard_uncertainty)]),
+        checks=checks,
         notes=prepared.notes,
         test=file.test.given(),
         reference=tables.reference_scalars(nominal.reference),
@@ -398,7 +422,8 @@ def _ledger(
                 nominal.profile_integrand,
                 nominal.flow.grid,
                 nominal.reference,
-            )
+            ),
+            crossflow=prepared.chain.settings.crossflow,
         ),
         calibrations=tables.calibration_tables(survey.calibrations),
         inputs=dict(survey.inputs),
@@ -414,6 +439,7 @@ def _facts(prepared: Prepared) -> Facts:
         bias=prepared.chain.frozen.bias.get("induced_drag", math.nan),
         loss_zero_uncertainty=prepared.outer.loss_zero_uncertainty,
         spacings=core_spacings(prepared.chain, prepared.vortices.vortices),
+        crossflow=prepared.chain.settings.crossflow,
     )
 
 
@@ -429,6 +455,8 @@ def _crosschecks(
         name = estimate_of(row, method)
         value, expected = nominal.values[name], prepared.expected[name]
         reason = None
+        if math.isinf(prepared.chain.settings.bound_line) and (row, method) in _SEES_THE_BOUND_VORTEX:
+            expected, reason = math.nan, _NO_BOUND_LINE
         if math.isnan(value):
             reason = prepared.line.reason if method == "wake_line" else prepared.vortices.reason
             reason = reason or "it could not be evaluated on this plane"
@@ -440,11 +468,22 @@ def _crosschecks(
             expected=expected,
             expected_uncertainty=tables.EXPECTED_DOUBT * abs(expected),
             reason=reason,
-            same_algebra=_SAME_ALGEBRA if method == "momentum_area" else None,
+            same_algebra=_same_algebra(method, prepared),
             no_samples=no_samples,
         )
         found.append(check)
     return tuple(found)
+
+
+def _same_algebra(method: str, prepared: Prepared) -> str | None:
+    """Why an estimate is not independent of its row, where it is not."""
+    if method == "momentum_area":
+        return _SAME_ALGEBRA
+    nominal = prepared.nominal
+    everywhere = np.all(nominal.flow.static_pressure == nominal.reference.static_pressure)
+    if method == "entropy_area" and not prepared.chain.settings.crossflow and everywhere:
+        return _ASSUMED_STATIC
+    return None
 
 
 def _scales(prepared: Prepared) -> dict[str, float]:
