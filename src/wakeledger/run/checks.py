@@ -79,6 +79,8 @@ class Facts:
         Standard uncertainty of the loss zero, Pa.
     spacings : tuple of float
         Larger of the measured points' spacings about each vortex, m; empty where the points are evenly spaced.
+    crossflow : bool
+        Whether the direction of the flow was measured.
     """
 
     vortices: Sequence[Core]
@@ -87,6 +89,16 @@ class Facts:
     bias: float
     loss_zero_uncertainty: float
     spacings: tuple[float, ...] = ()
+    crossflow: bool = True
+
+
+#: Why checks do not apply where the direction of the flow was not measured.
+_NO_CROSSFLOW = {
+    "net_circulation": "Pitot tubes do not tell the flow's direction, so the circulation of the wake is not known.",
+    "edge_vorticity": "Pitot tubes do not tell the flow's direction, so the vorticity of the wake is not known.",
+    "core_resolution": "Pitot tubes do not tell the flow's direction, so no vortex core was identified.",
+    "noise_bias": "Pitot tubes do not tell the flow's direction, so there is no induced drag that noise could bias.",
+}
 
 
 def all_checks(reduction: Reduction, facts: Facts) -> tuple[Check, ...]:
@@ -103,7 +115,7 @@ def all_checks(reduction: Reduction, facts: Facts) -> tuple[Check, ...]:
     -------
     tuple of Check
     """
-    return (
+    found = (
         net_circulation(reduction),
         mass_balance(reduction),
         edge_vorticity(reduction),
@@ -112,6 +124,14 @@ def all_checks(reduction: Reduction, facts: Facts) -> tuple[Check, ...]:
         noise_bias(reduction, facts),
         outer_flow(reduction, facts),
         missing_points(reduction, facts),
+    )
+    if facts.crossflow:
+        return found
+    return tuple(
+        _check(check.name, math.nan, {"not_applicable": _NO_CROSSFLOW[check.name]})
+        if check.name in _NO_CROSSFLOW
+        else check
+        for check in found
     )
 
 
@@ -305,14 +325,19 @@ def outer_flow(reduction: Reduction, facts: Facts) -> Check:
         message = "The wake fills the window: too little outer flow is left to zero the total pressure and flow angles."
         return Check("outer_flow", "fail", math.nan, LIMITS["outer_flow"][0], message)
     worth = reduction.loss_zero * float(region.mask.sum()) * reduction.flow.grid.cell_area
-    total = abs(reduction.values["total_drag"])
+    total = abs(reduction.values[reduction.drag])
     value = abs(worth) / total if total > 0 else math.nan
     pitch = math.degrees(math.atan2(reduction.crossflow_offset[1], reference.speed))
     yaw = math.degrees(math.atan2(reduction.crossflow_offset[0], reference.speed))
     found = (
         f"Outside the wake the total pressure is {0.0 - reduction.loss_zero:+.3g} Pa off the stream's"
-        f" ({worth / max(total, 1e-300):+.1%} of the drag; taken out) and the flow is turned by {pitch:+.2f} deg in"
-        f" pitch and {yaw:+.2f} deg in yaw (taken out of the energy form only)."
+        f" ({worth / max(total, 1e-300):+.1%} of the drag; taken out)"
+    )
+    found += (
+        f" and the flow is turned by {pitch:+.2f} deg in pitch and {yaw:+.2f} deg in yaw (taken out of the energy form"
+        " only)."
+        if facts.crossflow
+        else "."
     )
     check = _check("outer_flow", value, {"pass": found, "warn": f"{found} Check the total-pressure reference's drift."})
     turned = math.radians(math.hypot(pitch, yaw))

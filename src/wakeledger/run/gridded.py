@@ -138,6 +138,7 @@ def settings_of(survey: SurveyInput, reference: Reference) -> Settings:
         grow=file.wake.grow,
         include=tuple(file.wake.include),
         exclude=tuple(file.wake.exclude),
+        crossflow=file.directed,
     )
 
 

@@ -49,6 +49,9 @@ def plane_table(chain: Chain, nominal: Reduction) -> xr.Dataset:
         "wake_mask": nominal.region.mask.astype(np.int8),
         "flag": plane_flags(chain),
     }
+    if not chain.settings.crossflow:
+        unknown = ("v", "w", "axial_vorticity", "crossflow_divergence", "stream_function")
+        fields = {name: field for name, field in fields.items() if name not in unknown}
     if reference.compressible:
         fields["density"] = np.asarray(flow.density)
         heat = 2 * reference.heat_capacity
@@ -143,9 +146,9 @@ def calibration_tables(calibrations: Mapping[str, Calibration]) -> dict[str, xr.
     return {name: to_dataset(calibration) for name, calibration in calibrations.items()}
 
 
-def span_table(loading: SpanLoading) -> xr.Dataset:
-    """Distributions along the span."""
-    return _dataset(
+def span_table(loading: SpanLoading, *, crossflow: bool = True) -> xr.Dataset:
+    """Distributions along the span; without a measured crossflow that of the profile drag alone."""
+    table = _dataset(
         "y",
         (
             ("y", loading.y, "m", "distance to starboard"),
@@ -155,6 +158,7 @@ def span_table(loading: SpanLoading) -> xr.Dataset:
             ("induced_drag_per_span", loading.induced_drag_per_span, "N m-1", "induced drag per unit span"),
         ),
     )
+    return table if crossflow else table[["y", "profile_drag_per_span"]]
 
 
 def reference_scalars(reference: Reference) -> dict[str, float]:
@@ -229,11 +233,12 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
             f"The total pressure was zeroed in the outer flow: {0.0 - nominal.loss_zero:+.3g} Pa were taken out"
             f" ({counts_text(nominal.loss_zero * region.mask.sum() * grid.cell_area, nominal, chain)})."
         )
-    pitch, yaw = (np.degrees(np.arctan2(nominal.crossflow_offset[k], nominal.reference.speed)) for k in (1, 0))
-    found.append(
-        f"Outside the wake the flow is turned by {pitch:+.3f} deg in pitch and {yaw:+.3f} deg in yaw; that was taken"
-        " out of the energy form and the momentum balance, and the vorticity form does not see it."
-    )
+    if chain.settings.crossflow:
+        pitch, yaw = (np.degrees(np.arctan2(nominal.crossflow_offset[k], nominal.reference.speed)) for k in (1, 0))
+        found.append(
+            f"Outside the wake the flow is turned by {pitch:+.3f} deg in pitch and {yaw:+.3f} deg in yaw; that was"
+            " taken out of the energy form and the momentum balance, and the vorticity form does not see it."
+        )
     if survey.survey.plane.primary == "velocity" and state.static_pressure is None and state.total_pressure is None:
         found.append("No pressure was measured: the static pressure follows from the crossflow's momentum balance.")
     if nominal.invalid_area > 0:

@@ -30,13 +30,16 @@ def traverse_notes(raw: RawSurvey, chain: Chain, nominal: Reduction) -> tuple[st
     Returns
     -------
     tuple of str
-        Each correction with the counts of total drag between reducing with it and without it, in the same wake region,
+        Each correction with the counts of total (or else profile) drag between reducing with it and without it, in the same wake region,
         and with those of its standard uncertainty.
     """
     vary = Variation(mask=nominal.region.mask)
 
+    row = nominal.drag
+    of = f" of {row.replace('_', ' ')}"
+
     def change(other: Chain, errors: Mapping[str, Array]) -> float:
-        return nominal.values["total_drag"] - other.reduce(errors, vary=vary, estimates=False).values["total_drag"]
+        return nominal.values[row] - other.reduce(errors, vary=vary, estimates=False).values[row]
 
     made = []
     for name, sentence in raw.said.items():
@@ -44,9 +47,9 @@ def traverse_notes(raw: RawSurvey, chain: Chain, nominal: Reduction) -> tuple[st
         inputs = _inputs(chain, name)
         if inputs:
             doubt = math.hypot(*(change(chain, {each: np.ones(())}) for each in inputs))
-            worth += f" of total drag, +- {tables.counts_text(doubt, nominal, chain).lstrip('+')}"
+            worth += f"{of}, +- {tables.counts_text(doubt, nominal, chain).lstrip('+')}"
         else:
-            worth += " of total drag"
+            worth += of
         made.append(f"{sentence}: {worth}.")
     return (*made, *raw.notes)
 

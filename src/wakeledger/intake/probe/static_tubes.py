@@ -14,8 +14,8 @@ from wakeledger.core.grid import Array
 _LINE = 1e-6
 #: Least part of the interpolation's own error that is left at a place beside a reading.
 _AT_READING = 0.5
-#: A place left out is predicted from its neighbours; so many places at most are tried.
-_MOST_TRIED = 200
+#: Places are left out in so many parts at most, to be predicted from the others.
+_PARTS = 20
 
 
 @dataclass(frozen=True, eq=False)
@@ -157,11 +157,11 @@ def _left_out(where: Array, values: Array) -> tuple[float, float]:
         spacing = float(np.hypot(*np.ptp(where, axis=0))) if len(where) == 2 else 0.0
         return math.nan, spacing
     spacing = float(np.median(cKDTree(where).query(where, 2)[0][:, 1]))
-    tried = np.unique(np.linspace(0, len(where) - 1, min(len(where), _MOST_TRIED)).astype(int))
+    part = np.arange(len(where)) % _PARTS
     errors = []
-    for k in tried:
-        others = np.delete(np.arange(len(where)), k)
-        matrix, beyond = _weights(where[others], where[k : k + 1])
-        if not beyond[0]:
-            errors.append(float((matrix @ values[others])[0]) - float(values[k]))  # type: ignore[operator]
-    return (float(np.sqrt(np.mean(np.square(errors)))) if errors else math.nan), spacing
+    for number in range(min(len(where), _PARTS)):
+        left, others = part == number, part != number
+        matrix, beyond = _weights(where[others], where[left])
+        errors.append((matrix @ values[others] - values[left])[~beyond])  # type: ignore[operator]
+    found = np.concatenate(errors)
+    return (float(np.sqrt(np.mean(found**2))) if found.size else math.nan), spacing

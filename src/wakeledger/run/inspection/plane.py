@@ -61,6 +61,7 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
         bias=math.nan,
         loss_zero_uncertainty=math.nan,
         spacings=core_spacings(chain, vortices),
+        crossflow=chain.settings.crossflow,
     )
     checks = tuple(check for check in all_checks(nominal, facts) if check.name not in _LATER)
     worst = worst_core(facts)
@@ -108,7 +109,7 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
         notes=(*survey.survey.notes(), *corrected, *tables.notes(survey, chain, nominal, state)),
         reference=tables.reference_scalars(nominal.reference),
         test=survey.survey.test.given(),
-        angles=angle_ranges(state.u, state.v, state.w, y=points.y, z=points.z),
+        angles=angle_ranges(state.u, state.v, state.w, y=points.y, z=points.z) if facts.crossflow else (),
         repeats=repeats,
         missing_places=missing,
         missing_in_wake=in_wake,
