@@ -224,15 +224,20 @@ def _with_static(
     survey: SurveyInput, rake: RakePoints, traverse: Traverse, reference: Reference
 ) -> tuple[Traverse, list[Source], list[str]]:
     """Pitots with a static pressure: measured beside them, by static tubes elsewhere, or the stream's."""
-    alone = "The tubes are pitots, which tell no direction: the profile drag is all that follows."
+    section = survey.survey.section
+    alone = "The tubes are pitots, which tell no direction: the profile drag is all that follows. "
+    if section is not None:
+        alone = ""
     assumed = ASSUMED_STATIC * reference.dynamic_pressure
     source = Source(_STATIC_SOURCE, (STATIC_INPUT,), "systematic", 1.0)
     if "static_pressure" in survey.points.channels:
-        return traverse, [], [f"{alone} Their static pressure was measured beside them."]
+        return traverse, [], [f"{alone}The pitots' static pressure was measured beside them."]
     if not rake.static:
         tubes = tuple(_assumed(tube, assumed) for tube in traverse.tubes)
+        if section is not None:
+            return traverse, [], []
         sentence = (
-            f"{alone} No static pressure was measured: that of the stream is taken to hold at every point, +-"
+            f"{alone}No static pressure was measured: that of the stream is taken to hold at every point, +-"
             f" {assumed:.3g} Pa ({ASSUMED_STATIC:.0%} of q, common practice)."
         )
         return replace(traverse, tubes=tubes), [source], [sentence]
@@ -256,9 +261,9 @@ def _with_static(
         found = replace(found, standard_uncertainty=np.full(survey.points.n, assumed))
         how = f"too few to tell how well; {ASSUMED_STATIC:.0%} of q is taken, common practice"
     tubes_text = f"static tube{'s' if len(statics) > 1 else ''} {listed(list(rake.static))}"
-    most = float(np.max(found.standard_uncertainty))
+    most, count = float(np.max(found.standard_uncertainty)), sum(map(len, readings))
     sentence = (
-        f"{alone} Their static pressure was interpolated from the {sum(map(len, readings))} readings of {tubes_text},"
+        f"{alone}The pitots' static pressure was interpolated from the {count} readings of {tubes_text},"
         f" up to {1e3 * float(found.distance.max()):.3g} mm away, +- {most:.3g} Pa at most"
         f" ({how})."
     )

@@ -9,7 +9,7 @@ from dataclasses import replace
 import numpy as np
 
 from wakeledger.core.grid import Array
-from wakeledger.intake.probe.traverse import correction_input
+from wakeledger.intake.probe.traverse import Traverse, correction_input
 from wakeledger.run import tables
 from wakeledger.run.chain import Chain, Reduction, Variation
 from wakeledger.run.traverse import REFERENCE, SHEAR, RawSurvey
@@ -30,8 +30,8 @@ def traverse_notes(raw: RawSurvey, chain: Chain, nominal: Reduction) -> tuple[st
     Returns
     -------
     tuple of str
-        Each correction with the counts of total (or else profile) drag between reducing with it and without it, in the same wake region,
-        and with those of its standard uncertainty.
+        Each correction with the counts of total drag, or of profile drag alone, between reducing with it and without
+        it, in the same wake region, and with those of its standard uncertainty.
     """
     vary = Variation(mask=nominal.region.mask)
 
@@ -58,8 +58,12 @@ def _inputs(chain: Chain, name: str) -> tuple[str, ...]:
     """Inputs that errors of one correction are drawn for."""
     if name == SHEAR:
         return (correction_input(SHEAR),)
-    additions = () if chain.traverse is None else chain.traverse.additions
-    return tuple(each for one in additions if one.name == name for each in one.per_sigma)
+    return () if chain.traverse is None else inputs_of(chain.traverse, name)
+
+
+def inputs_of(traverse: Traverse, name: str) -> tuple[str, ...]:
+    """Inputs that errors of one correction of the readings are drawn for."""
+    return tuple(each for one in traverse.additions if one.name == name for each in one.per_sigma)
 
 
 def without(chain: Chain, name: str) -> Chain:
@@ -67,6 +71,9 @@ def without(chain: Chain, name: str) -> Chain:
     assert chain.traverse is not None
     if name == SHEAR:
         return replace(chain, displacement=None)
-    if name == REFERENCE:
-        return replace(chain, traverse=replace(chain.traverse, normalised=False))
-    return replace(chain, traverse=chain.traverse.without(name))
+    return replace(chain, traverse=traverse_without(chain.traverse, name))
+
+
+def traverse_without(traverse: Traverse, name: str) -> Traverse:
+    """The same readings without one of their corrections."""
+    return replace(traverse, normalised=False) if name == REFERENCE else traverse.without(name)

@@ -162,6 +162,6 @@ def _left_out(where: Array, values: Array) -> tuple[float, float]:
     for number in range(min(len(where), _PARTS)):
         left, others = part == number, part != number
         matrix, beyond = _weights(where[others], where[left])
-        errors.append((matrix @ values[others] - values[left])[~beyond])  # type: ignore[operator]
+        errors.append((matrix @ values[others] - values[left])[~beyond])
     found = np.concatenate(errors)
     return (float(np.sqrt(np.mean(found**2))) if found.size else math.nan), spacing

@@ -109,3 +109,26 @@ def _check_tube(probe: ProbeTable, place: Sequence[str | int]) -> None:
         for name in ("roll", "pitch", "yaw"):
             if getattr(probe, name):
                 raise fail(f"{name} is given without a calibration", f"{_PITOT}: leave it out", *place, name)
+
+
+def check_static(plane: Plane, probes: Sequence[ProbeTable]) -> None:
+    """Refuse a line traverse whose static pressure is to be measured and is not.
+
+    Parameters
+    ----------
+    plane, probes
+        As for `check_rake`.
+
+    Raises
+    ------
+    PydanticCustomError
+        If pitots have no static pressure.
+    """
+    measured = "static_pressure" in plane.columns or any(probe.role == "static" for probe in probes)
+    if not measured and not is_directed(probes):
+        raise fail(
+            "the static pressure is to be measured, and pitots do not tell it",
+            'add static tubes, or a column static_pressure, or write edge_static = "stream"',
+            "section",
+            "edge_static",
+        )

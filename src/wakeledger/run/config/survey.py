@@ -15,7 +15,7 @@ from wakeledger.core.errors import SurveyError
 from wakeledger.run.config.errors import survey_error
 from wakeledger.run.config.plane import Plane, check_positions, check_primary
 from wakeledger.run.config.quantities import Label, Table, below, fail, one_or_more_tables, tables
-from wakeledger.run.config.rake import check_rake, is_directed, is_rake
+from wakeledger.run.config.rake import check_rake, check_static, is_directed, is_rake
 from wakeledger.run.config.stream import ModelTable, ReferenceTable
 from wakeledger.run.config.tables import (
     BodyTable,
@@ -136,6 +136,8 @@ class Survey(Table):
                         "primary",
                     )
                 check_rake(plane, self.probe)
+                if self.section is not None and edge_static != "stream":
+                    check_static(plane, self.probe)
         refuse_twice(self.compare, "compare")
         refuse_twice(self.body, "body")
         half = self.boundary is not None and self.boundary.reflection == "y"

@@ -12,8 +12,9 @@ import numpy as np
 
 from wakeledger.core.errors import DataError, InputError
 from wakeledger.core.grid import Array
-from wakeledger.core.points import Points
+from wakeledger.core.points import Channel, Points
 from wakeledger.intake.gridding.line import Line
+from wakeledger.intake.probe.traverse import Traverse
 from wakeledger.physics.fields.traverse_window import WakeWindow, edge_levels, outer_levels, wake_edges
 from wakeledger.physics.methods.section_drag import EdgeStatic
 from wakeledger.physics.methods.section_kernels import KERNELS, speed_at, static_at, total_at, window_weights
@@ -182,12 +183,15 @@ class SectionChain:
         The survey's settings.
     drifting : bool
         Whether the total pressure beside the wake is a sloping line, as where its reference drifts, and not a level.
+    traverse : Traverse or None
+        How readings of pitots become pressures; None where pressures or velocities are given.
     """
 
     points: Points
     line: Line
     settings: SectionSettings
     drifting: bool = False
+    traverse: Traverse | None = None
 
     def reference(self, errors: Mapping[str, Array] = _NO_ERRORS) -> Reference:
         """The undisturbed stream under errors of its inputs."""
@@ -203,9 +207,15 @@ class SectionChain:
         values = {
             name: channel.values + errors.get(f"plane.{name}", 0.0) for name, channel in self.points.channels.items()
         }
+        kinds: Mapping[str, Channel] = self.points.channels
+        if self.traverse is not None:
+            read = self.traverse.state(values, reference, errors)
+            pressures = {"total_pressure": read.total_pressure, "static_pressure": read.static_pressure}
+            values = {name: pressure for name, pressure in pressures.items() if pressure is not None}
+            kinds = {}
         return section_state(
             values,
-            self.points.channels,
+            kinds,
             reference,
             primary=self.settings.primary,
             edge_static=self.settings.edge_static,

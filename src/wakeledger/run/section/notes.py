@@ -3,16 +3,21 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from wakeledger.core.flags import decode
+from wakeledger.core.grid import Array
+from wakeledger.intake.probe.traverse import Traverse
 from wakeledger.physics.methods.section_drag import SectionDrag
 from wakeledger.physics.methods.section_kernels import jones, window_weights
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.section.chain import ROW, SectionChain, SectionReduction
+from wakeledger.run.section.chain import ROW, SectionChain, SectionReduction, SectionVariation
 from wakeledger.run.section.state import SectionState
+from wakeledger.run.traverse import SHEAR, RawSurvey
+from wakeledger.run.traverse_notes import inputs_of, traverse_without
 
 
 def section_notes(
@@ -114,3 +119,41 @@ def _static_notes(chain: SectionChain, nominal: SectionReduction) -> list[str]:
         "The static pressure across the wake is taken as the stream's. Whether it is cannot be told from this traverse"
         f" and is not in the uncertainty: a pressure 0.01 q higher would change the drag by {change:+.2%}."
     ]
+
+
+def raw_notes(raw: RawSurvey, chain: SectionChain, nominal: SectionReduction) -> list[str]:
+    """Sentences about the tubes that took the readings, each correction with what it is worth.
+
+    Parameters
+    ----------
+    raw : RawSurvey
+        What the raw readings add to the survey.
+    chain : SectionChain
+        The survey.
+    nominal : SectionReduction
+        Its nominal reduction.
+
+    Returns
+    -------
+    list of str
+    """
+    held = SectionVariation(window=nominal.window)
+    scale = 1e4 / (nominal.reference.dynamic_pressure * chain.settings.chord)
+
+    def counts(traverse: Traverse, errors: dict[str, Array]) -> float:
+        other = replace(chain, traverse=traverse).reduce(errors, vary=held)
+        return scale * (nominal.values[ROW] - other.values[ROW])
+
+    made = []
+    assert chain.traverse is not None
+    for name, sentence in raw.said.items():
+        if name == SHEAR:
+            continue
+        worth = f"{counts(traverse_without(chain.traverse, name), {}):+.2f} counts"
+        inputs = inputs_of(chain.traverse, name)
+        if inputs:
+            worth += f", +- {math.hypot(*(counts(chain.traverse, {each: np.ones(())}) for each in inputs)):.2f} counts"
+        made.append(f"{sentence}: {worth}.")
+    if SHEAR in raw.said:
+        made.append("The displacement of the tubes in shear is not corrected along a line.")
+    return [*made, *raw.notes]

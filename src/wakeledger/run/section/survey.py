@@ -21,6 +21,7 @@ from wakeledger.core.grid import Array
 from wakeledger.core.traverse import make_traverse
 from wakeledger.intake.gridding import check_duplicates
 from wakeledger.intake.gridding.line import Line, make_line
+from wakeledger.intake.probe.traverse import correction_input
 from wakeledger.ledger.rows import CrossCheck, Ledger, Row
 from wakeledger.physics.fields.traverse_window import TAIL
 from wakeledger.physics.methods.section_drag import SectionDrag, section_drag
@@ -29,6 +30,7 @@ from wakeledger.run.assembly import NO_SOURCE, budget_lines, comparisons, cross_
 from wakeledger.run.chain import estimate_of
 from wakeledger.run.inputs import layouts, sources
 from wakeledger.run.load import SurveyInput, refuse_unsupported
+from wakeledger.run.rake import prepare_raw
 from wakeledger.run.section.chain import (
     METHODS,
     OUTPUTS,
@@ -39,9 +41,10 @@ from wakeledger.run.section.chain import (
     SectionVariation,
 )
 from wakeledger.run.section.checks import SectionFacts, section_checks
-from wakeledger.run.section.notes import section_notes
+from wakeledger.run.section.notes import raw_notes, section_notes
 from wakeledger.run.section.state import SectionState, check_section_state
 from wakeledger.run.section.terms import LEVEL, section_terms
+from wakeledger.run.traverse import SHEAR, RawSurvey, corrected_points
 from wakeledger.stream.reference import Reference
 
 if TYPE_CHECKING:
@@ -187,7 +190,7 @@ def section_settings(survey: SurveyInput, reference: Reference) -> SectionSettin
     return SectionSettings(
         reference=file.reference.given(),
         compressible=reference.compressible,
-        primary=file.plane.primary,
+        primary="total_pressure" if file.plane.primary == "hole_pressures" else file.plane.primary,
         edge_static=file.section.edge_static,
         along=along,
         chord=file.section.chord,
@@ -203,13 +206,19 @@ def _stretches(shapes: Sequence[Array], along: str) -> tuple[tuple[float, float]
     return tuple((float(shape[:, column].min()), float(shape[:, column].max())) for shape in shapes)
 
 
+def _of_readings(raw: RawSurvey) -> tuple[Source, ...]:
+    """Sources of raw readings; their displacement in shear is not corrected along a line."""
+    return tuple(source for source in raw.sources if source.applies_to != (correction_input(SHEAR),))
+
+
 def _prepare(survey: SurveyInput) -> PreparedSection:
     file, points = survey.survey, survey.points
     reference = file.reference.resolve()
     settings = section_settings(survey, reference)
-    check_duplicates(points)
+    raw = prepare_raw(survey, reference) if file.plane.primary == "hole_pressures" else None
+    check_duplicates(points if raw is None else corrected_points(points, raw.traverse, reference))
     position = getattr(points, settings.along)
-    empty = SectionChain(points, None, settings)  # type: ignore[arg-type]
+    empty = SectionChain(points, None, settings, traverse=None if raw is None else raw.traverse)  # type: ignore[arg-type]
     state = empty.state(reference)
     check_section_state(state, points)
     usable = state.usable
@@ -219,7 +228,7 @@ def _prepare(survey: SurveyInput) -> PreparedSection:
     def line(chosen: NDArray[np.bool_]) -> Line:
         return make_line(position, chosen, impossible=state.impossible, row=points.row)
 
-    chain = SectionChain(points, line(usable), settings)
+    chain = replace(empty, line=line(usable))
     nominal = chain.reduce()
     if state.total_pressure is not None and nominal.window.noise > TAIL * nominal.window.depth:
         sloping = replace(chain, drifting=True)
@@ -234,7 +243,7 @@ def _prepare(survey: SurveyInput) -> PreparedSection:
         total_temperature=nominal.total_temperature,
         window=(nominal.window.lower, nominal.window.upper),
     )
-    declared = sources(file, points, reference)
+    declared = sources(file, points, reference) + (() if raw is None else _of_readings(raw))
     names = sorted({name for source in declared for name in source.applies_to})
     inputs = layouts(file, points, chain.line, names)
     noise = _noise_draws(declared, inputs, seed=file.uncertainty.seed)
@@ -242,6 +251,8 @@ def _prepare(survey: SurveyInput) -> PreparedSection:
     terms = section_terms(chain, nominal, line=line, usable=usable, noise=noise, noise_share=outer_noise.share)
     notes = section_notes(survey, chain, nominal, drag, state, usable)
     notes += outer_noise.notes()
+    if raw is not None:
+        notes += raw_notes(raw, chain, nominal)
     return PreparedSection(chain, nominal, state, usable, drag, declared, inputs, noise, terms, tuple(notes))
 
 
