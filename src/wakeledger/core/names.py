@@ -121,6 +121,7 @@ CHECKS: tuple[str, ...] = (
     "noise_bias",
     "outer_flow",
     "missing_points",
+    "probe_range",
 )
 
 

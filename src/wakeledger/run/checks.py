@@ -19,6 +19,7 @@ from wakeledger.ledger.rows import Check, CheckVerdict
 from wakeledger.physics.fields.edge import edge_integrals
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.run.chain import Reduction
+from wakeledger.run.probe_range import ProbeRange
 
 #: First and second limit of each check.
 LIMITS: dict[str, tuple[float, float]] = {
@@ -30,6 +31,7 @@ LIMITS: dict[str, tuple[float, float]] = {
     "noise_bias": (0.02, 0.10),
     "outer_flow": (0.05, 0.25),
     "missing_points": (0.02, 0.10),
+    "probe_range": (0.02, 1.0),
 }
 #: Width of the strip along the window's edge that must be quiet, in cells.
 EDGE_CELLS = 3
@@ -81,6 +83,8 @@ class Facts:
         Larger of the measured points' spacings about each vortex, m; empty where the points are evenly spaced.
     crossflow : bool
         Whether the direction of the flow was measured.
+    probe : ProbeRange or None
+        Where the probe was used, against where it was calibrated, if its calibration tells a Mach or Reynolds number.
     """
 
     vortices: Sequence[Core]
@@ -90,6 +94,7 @@ class Facts:
     loss_zero_uncertainty: float
     spacings: tuple[float, ...] = ()
     crossflow: bool = True
+    probe: ProbeRange | None = None
 
 
 #: Why checks do not apply where the direction of the flow was not measured.
@@ -114,8 +119,9 @@ def all_checks(reduction: Reduction, facts: Facts) -> tuple[Check, ...]:
     Returns
     -------
     tuple of Check
+        The last one only where a calibration tells its Mach or Reynolds number.
     """
-    found = (
+    found: tuple[Check, ...] = (
         net_circulation(reduction),
         mass_balance(reduction),
         edge_vorticity(reduction),
@@ -125,6 +131,8 @@ def all_checks(reduction: Reduction, facts: Facts) -> tuple[Check, ...]:
         outer_flow(reduction, facts),
         missing_points(reduction, facts),
     )
+    if facts.probe is not None:
+        found += (probe_range(facts.probe),)
     if facts.crossflow:
         return found
     return tuple(
@@ -369,3 +377,11 @@ def missing_points(reduction: Reduction, facts: Facts) -> Check:
             "warn": f"{value:.1%} of the wake region was filled from its neighbours; measure the missing points again.",
         },
     )
+
+
+def probe_range(found: ProbeRange) -> Check:
+    """Share of the points at a Mach or Reynolds number that the probe was not calibrated at."""
+    remedy = "calibrate the probe at the survey's speed"
+    if found.name == "reynolds":
+        remedy += ", or take a tip of another diameter: separation from it depends on the Reynolds number"
+    return _check("probe_range", found.outside, {"pass": found.sentence, "warn": f"{found.sentence[:-1]}; {remedy}."})

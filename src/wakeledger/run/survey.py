@@ -51,6 +51,7 @@ from wakeledger.run.inspection import inspect_plane, inspect_section
 from wakeledger.run.load import SurveyInput, load, refuse_unsupported
 from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
 from wakeledger.run.numerics import numerical_terms
+from wakeledger.run.probe_range import probe_range
 from wakeledger.run.section.survey import reduce_section
 from wakeledger.run.traverse_notes import traverse_notes
 
@@ -440,6 +441,7 @@ def _facts(prepared: Prepared) -> Facts:
         loss_zero_uncertainty=prepared.outer.loss_zero_uncertainty,
         spacings=core_spacings(prepared.chain, prepared.vortices.vortices),
         crossflow=prepared.chain.settings.crossflow,
+        probe=probe_range(prepared.chain),
     )
 
 

@@ -12,6 +12,7 @@ from wakeledger.core.grid import Array
 from wakeledger.intake.probe.traverse import Traverse, correction_input
 from wakeledger.run import tables
 from wakeledger.run.chain import Chain, Reduction, Variation
+from wakeledger.run.probe_range import tip_notes
 from wakeledger.run.traverse import REFERENCE, SHEAR, RawSurvey
 
 
@@ -51,7 +52,7 @@ def traverse_notes(raw: RawSurvey, chain: Chain, nominal: Reduction) -> tuple[st
         else:
             worth += of
         made.append(f"{sentence}: {worth}.")
-    return (*made, *raw.notes)
+    return (*made, *raw.notes, *tip_notes(chain))
 
 
 def _inputs(chain: Chain, name: str) -> tuple[str, ...]:

@@ -24,6 +24,7 @@ from wakeledger.run.inspection.channels import angle_ranges, channel_summaries, 
 from wakeledger.run.inspection.edges import plane_edges
 from wakeledger.run.inspection.places import Places, places_of
 from wakeledger.run.load import SurveyInput
+from wakeledger.run.probe_range import probe_range, tip_notes
 from wakeledger.run.traverse import RawSurvey, corrected_points
 from wakeledger.stream.reference import Reference
 
@@ -62,6 +63,7 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
         loss_zero_uncertainty=math.nan,
         spacings=core_spacings(chain, vortices),
         crossflow=chain.settings.crossflow,
+        probe=probe_range(chain),
     )
     checks = tuple(check for check in all_checks(nominal, facts) if check.name not in _LATER)
     worst = worst_core(facts)
@@ -79,7 +81,9 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
     missing, in_wake = _lost(places, wake, grid)
     flags = tables.plane_flags(chain)
     beyond = np.flatnonzero(tables.out_of_range(chain))
-    corrected = () if raw is None else (*(f"{sentence}." for sentence in raw.said.values()), *raw.notes)
+    corrected = (
+        () if raw is None else (*(f"{sentence}." for sentence in raw.said.values()), *raw.notes, *tip_notes(chain))
+    )
     spacing = {"y": gridding.raw_spacing[0], "z": gridding.raw_spacing[1]}
     return Inspection(
         title=survey.survey.title,
