@@ -32,11 +32,11 @@ Complex = NDArray[np.complexfloating[Any, Any]]
 
 #: Nodes of a panel.
 ORDER = 16
-#: Panels at a corner that is not 180°/n shrink to 4^−levels of its walls.
-CORNER_LEVELS = 5
+#: Panels at a corner that is not 180°/n shrink to 4^−levels of its walls: the drag in a regular octagon to 2e-13.
+CORNER_LEVELS = 3
 _SHRINK = 0.25
-#: Panel length over the distance of the nearest vortices: interpolation to 1e-12.
-_REACH = 0.75
+#: Panel length over the distance of the nearest vortices: interpolation to about 1e-10, quadrature to rounding.
+_REACH = 1.0
 #: Bernstein ellipse outside which the plain rule of 16 nodes is good to 5e-14.
 _NEAR = 2.6
 _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(ORDER)

@@ -33,8 +33,12 @@ Condition = Literal["zero", "no_gradient"]
 #: Walls along the axes nearer than this part of the window's longer side act through images.
 _MIRRORED = 0.35
 #: Interpolation between the grid and the Chebyshev points is good to this.
-_TOLERANCE = 1e-14
+_TOLERANCE = 1e-13
 _MOST_POINTS = 160
+#: Numbers of random combinations tried for the range of the edge data.
+_RANKS = (64, 192)
+#: Pairs of places on the window and on the edge that are worked on where the window reaches outside the section.
+_MOST_PAIRS = 5e7
 #: Places this near a wall, as a part of the section's size, are moved inwards by as much.
 INWARD = 1e-9
 
@@ -133,7 +137,7 @@ def section_setup(
     points_y, onto_y = _interpolation(grid.y, distance)
     points_z, onto_z = _interpolation(grid.z, distance)
     if not window_inside(grid, section):
-        if grid.ny * grid.nz * panels.nodes.size > 1e8:
+        if grid.ny * grid.nz * panels.nodes.size > _MOST_PAIRS:
             raise SurveyError(
                 "the survey window reaches outside the section on a grid too fine for it",
                 place="[boundary] section",
@@ -163,15 +167,65 @@ def section_setup(
     )
 
 
-def harmonic_values(panels: Panels, places: Complex, condition: Condition) -> Array:
-    """χ at places from the known part of F on the edge and the constant, shape (k, n + 1)."""
-    weights, conjugate = panels.cauchy(places), panels.conjugate
+def harmonic_values(panels: Panels, places: Complex, condition: Condition, known: Array) -> Array:
+    """Harmonic functions at places inside the section from what is known of them on its edge.
+
+    Parameters
+    ----------
+    panels : Panels
+        Around the section.
+    places : ndarray of complex, shape (k,)
+        Inside it, m.
+    condition : {"zero", "no_gradient"}
+        Whether χ is known on the edge, or its conjugate η.
+    known : ndarray, shape (n + 1, r)
+        Values at the nodes, and the constant, of r functions; see `edge_data`.
+
+    Returns
+    -------
+    ndarray, shape (k, r)
+        χ.
+    """
+    given, constant = known[:-1], known[-1]
+    solved = panels.conjugate @ given
+    weights = panels.cauchy(places)
     if condition == "zero":
-        values = weights.real - weights.imag @ conjugate
+        values: Array = weights.real @ given - weights.imag @ solved
     else:
-        values = -weights.imag - weights.real @ conjugate
-    evaluation: Array = np.concatenate([values, np.ones((places.size, 1))], axis=1)
-    return evaluation
+        values = -weights.imag @ given - weights.real @ solved
+    values += constant
+    return values
+
+
+def edge_modes(known: Array) -> tuple[Array, Array]:
+    """Few functions on the edge that make up all of many, to rounding.
+
+    Parameters
+    ----------
+    known : ndarray, shape (n + 1, k)
+        Edge data of many sources.
+
+    Returns
+    -------
+    modes : ndarray, shape (n + 1, r)
+        Orthonormal.
+    shares : ndarray, shape (r, k)
+        known = modes @ shares to `_TOLERANCE` of its largest value.
+
+    Notes
+    -----
+    The range is found with seeded random combinations (N. Halko, P. G. Martinsson, J. A. Tropp, SIAM Review 53 (2011)
+    217-288); where a few do not do, all nodes are kept.
+    """
+    rng = np.random.default_rng(0)
+    for rank in _RANKS:
+        if 2 * rank > min(known.shape):
+            break
+        modes, _ = np.linalg.qr(known @ rng.standard_normal((known.shape[1], rank)))
+        shares: Array = modes.T @ known
+        if np.abs(known - modes @ shares).max() < _TOLERANCE * np.abs(known).max():
+            return modes, shares
+    return np.eye(known.shape[0]), known
 
 
 def edge_data(
@@ -270,12 +324,15 @@ def _interpolation(axis: Array, distance: float) -> tuple[Array, Array]:
     Returns
     -------
     points : ndarray, shape (p,)
+        The axis itself where it has no more points than would be needed.
     onto : ndarray, shape (n, p)
         Values at the axis from values at the points (Lagrange polynomials in barycentric form).
     """
     middle, half = (axis[0] + axis[-1]) / 2, (axis[-1] - axis[0]) / 2
     rate = np.arcsinh(max(distance, 1e-12) / half)
     count = int(min(np.ceil(-np.log(_TOLERANCE) / rate) + 2, _MOST_POINTS))
+    if count >= axis.size:
+        return axis, np.eye(axis.size)
     angle = (np.arange(count) + 0.5) * np.pi / count
     points = middle - half * np.cos(angle)
     sign = np.where(np.arange(count) % 2, -1.0, 1.0) * np.sin(angle)

@@ -39,6 +39,7 @@ from wakeledger.physics.fields.section_setup import (
     SectionSetup,
     complex_of,
     edge_data,
+    edge_modes,
     harmonic_values,
     reach_of,
     reflections,
@@ -119,15 +120,15 @@ def wall_crossflow(vorticity: Array, grid: UniformGrid, boundary: Boundary, y: A
     slope = weights @ (np.eye(conjugate.shape[0]) + 1j * conjugate)
     if condition == "no_gradient":
         slope = slope * 1j
-    moments = setup.moments(vorticity)
-    found = moments @ (slope @ setup.data).T
+    found = setup.moments(vorticity) @ (slope @ setup.data[:-1]).T
     v, w = -found.imag, -found.real
-    ys, zs = np.meshgrid(setup.points_y, setup.points_z)
+    ys, zs = (part.ravel() for part in grid.mesh())
+    strength = np.reshape(vorticity, (*shape[:-1], -1)) * grid.cell_area
     for image in setup.walls_only:
-        image_y, image_z = image.of(ys.ravel(), zs.ravel())
+        image_y, image_z = image.of(ys, zs)
         dy, dz = y[:, None] - image_y, z[:, None] - image_z
         swirl = image.sign / (2 * np.pi * (dy**2 + dz**2))
-        v, w = v - moments @ (swirl * dz).T, w + moments @ (swirl * dy).T
+        v, w = v - strength @ (swirl * dz).T, w + strength @ (swirl * dy).T
     return v.reshape(shape), w.reshape(shape)
 
 
@@ -162,8 +163,7 @@ def section_interaction(
 
     panels = panels_of(boundary.section, clearance, floor=margin, refine=refine)
     at = complex_of(y, z)
-    result: Array = harmonic_values(panels, at, condition) @ edge_data(panels, at, images, boundary.section, condition)
-    return result
+    return harmonic_values(panels, at, condition, edge_data(panels, at, images, boundary.section, condition))
 
 
 @dataclass(frozen=True, eq=False)
@@ -209,12 +209,11 @@ def _solver(grid: UniformGrid, boundary: Boundary, condition: Condition, parity:
     if not window_inside(grid, boundary.section):
         inside = points_inside(boundary.section, *grid.mesh(), margin=INWARD * size_of(boundary.section))
     targets = setup.places(ys.ravel(), zs.ravel(), inward=INWARD)
-    if inside is None:
-        evaluation = harmonic_values(setup.panels, targets, condition)
-    else:
-        evaluation = np.zeros((targets.size, setup.data.shape[0]))
-        evaluation[inside.ravel()] = harmonic_values(setup.panels, targets[inside.ravel()], condition)
-    factors: tuple[Array, ...] = (evaluation, setup.data)
-    if targets.size < 2 * evaluation.shape[1]:
-        factors = (evaluation @ setup.data,)
+    modes, shares = edge_modes(setup.data)
+    held = np.ones(targets.size, dtype=bool) if inside is None else inside.ravel()
+    values = np.zeros((targets.size, modes.shape[1]))
+    values[held] = harmonic_values(setup.panels, targets[held], condition, modes)
+    factors: tuple[Array, ...] = (values, shares)
+    if targets.size < 2 * modes.shape[1]:
+        factors = (values @ shares,)
     return _Solver(grid, base, setup, factors, inside)
