@@ -11,6 +11,7 @@ import pytest
 from wakeledger.core.errors import InputError
 from wakeledger.core.flags import Flag
 from wakeledger.core.rotation import rotation_matrix
+from wakeledger.intake.probe.readings import find_revisits
 from wakeledger.intake.probe.reduction import CALIBRATION_INPUTS
 from wakeledger.intake.probe.traverse import Tube
 from wakeledger.ledger.archive import write_archive
@@ -254,6 +255,15 @@ def test_a_drift_within_the_scatter_is_carried_and_not_taken_out(raw, wake, prob
     addition = found.traverse.additions[-1]
     assert addition.name == "drift" and not np.any(addition.size["p1"])
     assert np.any(addition.per_sigma["correction.drift.total_pressure"]["p1"])
+
+
+def test_scattered_points_taken_in_any_order_are_no_revisits():
+    generator = np.random.default_rng(4)
+    places = np.stack([part.ravel() for part in np.meshgrid(np.arange(60), np.arange(50))]) + 0.0
+    places = generator.permutation(places + generator.uniform(-0.3, 0.3, places.shape), axis=1)
+    assert not np.any(find_revisits(*places) >= 0)
+    again = np.concatenate([places, places[:, :5]], axis=1)
+    assert np.flatnonzero(find_revisits(*again) >= 0).tolist() == [*range(5), *range(3000, 3005)]
 
 
 def test_the_order_of_the_file_does_not_matter_where_the_time_is_known(raw, wake, probes, tmp_path):

@@ -387,7 +387,7 @@ class _Preparation:
         still, once = np.zeros(path.n), np.ones(path.n)
         size = np.zeros(pressures.shape)
         parts: dict[str, dict[str, Array]] = {}
-        taken_out = np.zeros(2)
+        level_change = np.zeros(2)
         sentences = []
         names = (("total pressure", "total_pressure"), ("dynamic pressure", "dynamic_pressure"))
         span = float(np.ptp(path.clock))
@@ -398,17 +398,16 @@ class _Preparation:
             unit = on_holes(*((since, still) if index == 0 else (still, since)))
             if clear:
                 size -= rate * unit
-                taken_out[index] = rate
             carried = sigma if clear else math.hypot(rate, np.nan_to_num(sigma))
+            level_change[index] = rate if clear else math.copysign(carried, rate)
             parts |= self._one_for_all(f"{DRIFT}.{key}", path.filed(carried * unit))
             known = f"+- {abs(sigma) * share:.2%}" if math.isfinite(sigma) else "one repeat, so its scatter is unknown"
             done = "taken out" if clear else "not clear of the scatter, so carried as an uncertainty"
             changed = "changed " if index == 0 else ""
             sentences.append(f"the {name} {changed}by {rate * share:+.2%} of q ({known}; {done})")
-        if np.any(taken_out):
-            # The readings were right at some moment between the first and the last point, and nobody knows when.
-            moved = span / math.sqrt(12) * taken_out
-            parts |= self._one_for_all(f"{DRIFT}.level", path.filed(on_holes(moved[0] * once, moved[1] * once)))
+        # What drifts was right at the first or at the last point, and the visits do not tell which.
+        moved = 0.5 * span * level_change
+        parts |= self._one_for_all(f"{DRIFT}.level", path.filed(on_holes(moved[0] * once, moved[1] * once)))
         self._add(DRIFT, path.filed(size), parts)
         self.said[DRIFT] = (
             f"{found.visits} visits to {found.places} place(s) show that over the traverse {' and '.join(sentences)}"

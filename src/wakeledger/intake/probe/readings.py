@@ -20,6 +20,8 @@ from wakeledger.intake.probe.correction import Correction
 LARGEST_RATIO = 2.0
 #: Points are at the same place within this share of the typical step of the traverse.
 SAME_PLACE = 0.02
+#: The neighbour whose distance counts: rows that are taken twice or three times have nearer ones.
+_NEIGHBOUR = 4
 
 
 def at_reference_condition(
@@ -217,8 +219,8 @@ def find_revisits(y: Array, z: Array) -> NDArray[np.int64]:
     -------
     ndarray of int, shape (n,)
         Number of the place of each point that was visited again, from 0; −1 for all others. Points are at one place
-        within 2 % of the typical step. Points repeated at once, without leaving, say nothing of a drift and are not
-        counted.
+        within 2 % of the typical step, or of the typical distance of neighbours where that is less. Points repeated at
+        once, without leaving, say nothing of a drift and are not counted.
     """
     from scipy.sparse import coo_array
     from scipy.sparse.csgraph import connected_components
@@ -229,8 +231,9 @@ def find_revisits(y: Array, z: Array) -> NDArray[np.int64]:
     moving = step[step > 0]
     if not moving.size:
         return label
-    tolerance = SAME_PLACE * float(np.median(moving))
-    pairs = cKDTree(np.column_stack([y, z])).query_pairs(tolerance, output_type="ndarray")
+    tree = cKDTree(np.column_stack([y, z]))
+    apart = float(np.median(tree.query(tree.data, min(_NEIGHBOUR + 1, y.size))[0][:, -1]))
+    pairs = tree.query_pairs(SAME_PLACE * min(float(np.median(moving)), apart), output_type="ndarray")
     if not pairs.size:
         return label
     graph = coo_array((np.ones(len(pairs)), (pairs[:, 0], pairs[:, 1])), shape=(y.size, y.size))
