@@ -313,11 +313,21 @@ def _outer_flow(
     return base, scatter, wavy
 
 
+#: Places smoothed at a time, and how many scales a Gaussian reaches before it is below rounding.
+_PLACES, _REACH = 512, 9.0
+
+
 def _smoothed(z: Array, values: Array, cells: Array, scale: float) -> tuple[Array, Array]:
     """Values averaged with a Gaussian of the given scale, and what is left of the noise of one point."""
-    kernel = np.exp(-0.5 * ((z[:, None] - z) / scale) ** 2) * cells
-    kernel /= kernel.sum(axis=1, keepdims=True)
-    return kernel @ values, np.sqrt(np.sum(kernel**2, axis=1))
+    mean, gain = np.empty(z.size), np.empty(z.size)
+    # Some places at a time, each with the stretch of the traverse that its Gaussian reaches.
+    for start in range(0, z.size, _PLACES):
+        here = slice(start, min(start + _PLACES, z.size))
+        near = slice(*np.searchsorted(z, [z[here.start] - _REACH * scale, z[here.stop - 1] + _REACH * scale]))
+        kernel = np.exp(-0.5 * ((z[here, None] - z[near]) / scale) ** 2) * cells[near]
+        kernel /= kernel.sum(axis=1, keepdims=True)
+        mean[here], gain[here] = kernel @ values[near], np.sqrt(np.sum(kernel**2, axis=1))
+    return mean, gain
 
 
 def _around(z: Array, above: Array, peak: float, gap: float) -> tuple[int, int]:
