@@ -20,9 +20,16 @@ from wakeledger.intake.probe.residuals import QUANTITIES
 from wakeledger.intake.state import State, Stream, absolute, point_state
 from wakeledger.stream.gas import mach_from_pressure_ratio, sutherland_viscosity
 
-#: Inputs that errors of the calibration are drawn for: a standard normal number each, times the calibration's own
-#: standard uncertainty in the region of the point.
-CALIBRATION_INPUTS: tuple[str, ...] = tuple(f"calibration.{name}" for name in QUANTITIES)
+#: Waves over the directions that errors of the calibration are made of.
+WAVES = 4
+#: Distance over which these errors hang together, in spacings of the calibrated directions. Tables with noise give
+#: surfaces whose errors, scaled to the uncertainty by left-out points, are as steep as waves of 2 to 6 spacings.
+WAVE_SPACINGS = 3.0
+#: Inputs that errors of the calibration are drawn for: standard normal numbers, four for each of `QUANTITIES`, times
+#: the calibration's own standard uncertainty in the region of the point.
+CALIBRATION_INPUTS: tuple[str, ...] = tuple(
+    f"calibration.{name}.{wave}" for name in QUANTITIES for wave in range(WAVES)
+)
 #: What a survey may measure at each point beside the holes.
 _PASSED_ON = ("density", "temperature", "total_temperature")
 _NO_ERRORS: Mapping[str, Array | float] = MappingProxyType({})
@@ -269,11 +276,21 @@ class HoleReduction:
 
 
 def _disturbed(reading: Reading, errors: Mapping[str, Array | float], shape: tuple[int, ...]) -> Reading:
-    """A reading with errors of the calibration; shape is that of the points and draws."""
+    """A reading with errors of the calibration; shape is that of the points and draws.
+
+    The error of a quantity at the direction (a, b) is its standard uncertainty there times
+    (z0 cos ka + z1 sin ka) cos kb + (z2 cos ka + z3 sin ka) sin kb: of variance 1 everywhere, alike at directions that
+    are close to each other, and independent at those a quarter of a wave apart.
+    """
     sizes = reading.standard_uncertainty()
+    waves = _waves(reading)
     pitch, yaw, total, static = (
-        np.ravel(np.broadcast_to(np.asarray(errors.get(name, 0.0), dtype=float), shape)) * size
-        for name, size in zip(CALIBRATION_INPUTS, sizes, strict=True)
+        sum(
+            np.ravel(np.broadcast_to(np.asarray(errors.get(f"calibration.{name}.{k}", 0.0), float), shape)) * wave
+            for k, wave in enumerate(waves)
+        )
+        * size
+        for name, size in zip(QUANTITIES, sizes, strict=True)
     )
     u, v, w = reading.direction
     level = np.sqrt(u * u + w * w)
@@ -289,3 +306,11 @@ def _disturbed(reading: Reading, errors: Mapping[str, Array | float], shape: tup
         total=reading.total + total * dynamic,
         static=reading.static + static * dynamic,
     )
+
+
+def _waves(reading: Reading) -> tuple[Array, Array, Array, Array]:
+    """The waves that errors of the calibration are made of, at the directions of a reading, shape (n,) each."""
+    number = 1.0 / (WAVE_SPACINGS * reading.weights[0][0].hull.spacing)
+    by_pitch, by_yaw = number * reading.pitch, number * reading.yaw
+    cos_pitch, sin_pitch, cos_yaw, sin_yaw = np.cos(by_pitch), np.sin(by_pitch), np.cos(by_yaw), np.sin(by_yaw)
+    return cos_pitch * cos_yaw, sin_pitch * cos_yaw, cos_pitch * sin_yaw, sin_pitch * sin_yaw
