@@ -10,13 +10,11 @@ from collections.abc import Mapping
 from dataclasses import dataclass, replace
 
 import numpy as np
-from numpy.typing import NDArray
 
 from wakeledger.confidence.sources import Source
 from wakeledger.core.errors import DataError, SurveyError
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Channel, Points
-from wakeledger.intake.gridding.lattice import find_lattice, rows_in_order
 from wakeledger.intake.probe.backlash import correct_backlash, estimate_backlash
 from wakeledger.intake.probe.displacement import COEFFICIENT, STANDARD_UNCERTAINTY
 from wakeledger.intake.probe.lag import correct_lag, estimate_lag, make_rate_filter
@@ -35,6 +33,7 @@ from wakeledger.intake.probe.traverse import DYNAMIC, STATIC, Addition, LagFilte
 from wakeledger.run.config.tables import HoleReadings, ProbeTable
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.shear import Displacement
+from wakeledger.run.travel import travel_of
 from wakeledger.stream.reference import Reference
 
 #: Names of the corrections.
@@ -51,8 +50,6 @@ STATED = 0.1
 #: A drift is taken out if it is this unlikely to be the scatter of the repeats, else it is carried as an uncertainty.
 SIGNIFICANCE = 0.05
 _CALIBRATION = "probe calibration"
-#: Fewer points tell no rows.
-_FEWEST_OF_A_ROW = 3
 
 
 @dataclass(frozen=True, eq=False)
@@ -102,43 +99,6 @@ def prepare_traverse(survey: SurveyInput, reference: Reference) -> RawSurvey:
     return _Preparation(survey, reference).run()
 
 
-@dataclass(frozen=True, eq=False)
-class _Path:
-    """The points in the order in which they were taken."""
-
-    order: NDArray[np.intp]
-    time: Array | None
-    row: NDArray[np.int64]
-    y: Array
-    z: Array
-
-    @property
-    def n(self) -> int:
-        return int(self.order.size)
-
-    @property
-    def clock(self) -> Array:
-        """Time, s, or the number of each point where no time was kept."""
-        return np.arange(self.n, dtype=float) if self.time is None else self.time
-
-    @property
-    def along_and_across(self) -> tuple[Array, Array]:
-        """Positions along the rows and across them."""
-        same = np.diff(self.row) == 0
-        by_y, by_z = (float(np.abs(np.diff(x))[same].sum()) for x in (self.y, self.z))
-        return (self.y, self.z) if by_y >= by_z else (self.z, self.y)
-
-    def taken(self, values: Array) -> Array:
-        """Values of the file's order in the order in which they were taken, shape (..., n)."""
-        return values[..., self.order]
-
-    def filed(self, values: Array) -> Array:
-        """Undo `taken`."""
-        found = np.empty_like(values)
-        found[..., self.order] = values
-        return found
-
-
 class _Preparation:
     """Works out one correction after the other."""
 
@@ -150,7 +110,7 @@ class _Preparation:
         reduction = self._reduction()
         self.holes = tuple(name for name in reduction.names if name != "static_pressure")
         self._check_columns()
-        self.path = _path(self.points)
+        self.path = travel_of(self.points)
         self.sources: list[Source] = []
         self.notes: list[str] = []
         self.said: dict[str, str] = {}
@@ -487,39 +447,6 @@ def _calibration(survey: SurveyInput, probe: ProbeTable) -> Calibration:
             remedy="load the survey from its file, or from a ledger that holds the calibration",
         )
     return found
-
-
-def _path(points: Points) -> _Path:
-    channel = points.channels.get("time")
-    time = None if channel is None else channel.values
-    if time is not None:
-        missing = np.flatnonzero(~np.isfinite(time))
-        if missing.size:
-            raise DataError(
-                f"time is missing at {missing.size} point(s)",
-                place=f"line {points.line[missing[0]]}",
-                remedy="give the time of every point, or leave its column out",
-            )
-    order = np.arange(points.n) if time is None else np.argsort(time, kind="stable")
-    y, z = points.y[order], points.z[order]
-    row = points.row[order] if points.row is not None else _rows_travelled(y, z)
-    row = np.cumsum(np.concatenate([[0], np.diff(row) != 0])).astype(np.int64)
-    return _Path(order, None if time is None else time[order], row, y, z)
-
-
-def _rows_travelled(y: Array, z: Array) -> NDArray[np.int64]:
-    """Row of each point, from positions in the order in which they were taken: a new one where the probe turns back."""
-    if y.size < _FEWEST_OF_A_ROW:
-        return np.zeros(y.size, dtype=np.int64)
-    line = rows_in_order(y, z, find_lattice(y, z))
-    step_y, step_z = np.diff(y), np.diff(z)
-    along = step_y if np.abs(step_y).sum() >= np.abs(step_z).sum() else step_z
-    new = np.concatenate([[False], np.diff(line) != 0])
-    turned = np.zeros(y.size, dtype=bool)
-    turned[2:] = along[1:] * along[:-1] < 0
-    # The point after a change of line has come from another row: its step tells no direction.
-    turned[1:] &= ~new[:-1]
-    return np.cumsum(new | turned).astype(np.int64)
 
 
 def corrected_points(points: Points, traverse: Traverse, reference: Reference) -> Points:
