@@ -205,6 +205,11 @@ class ClosedWalls:
         """Area C that belongs to the ledger's forces, m²; see `flow_area`."""
         return flow_area(self.section, self.reflection)
 
+    @property
+    def surveyed_area(self) -> float:
+        """Area of the stream on the survey's side of the reflection plane, m²."""
+        return self.section.area / 2 if self.reflection else self.section.area
+
 
 @dataclass(frozen=True)
 class OpenJet:
@@ -238,6 +243,11 @@ class OpenJet:
     def flow_area(self) -> float:
         """Area C that belongs to the ledger's forces, m²; see `flow_area`."""
         return flow_area(self.section, self.reflection)
+
+    @property
+    def surveyed_area(self) -> float:
+        """Area of the stream on the survey's side of the reflection plane, m²."""
+        return self.section.area / 2 if self.reflection else self.section.area
 
 
 Boundary = FreeAir | ClosedWalls | OpenJet
