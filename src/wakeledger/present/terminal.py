@@ -215,8 +215,8 @@ def _facts(inspection: Inspection) -> Iterable[tuple[str, str]]:
     repeats = inspection.repeats
     if repeats.places:
         again = f"; {repeats.revisited} of them left and visited again" if repeats.revisited else ""
-        places = "1 place" if repeats.places == 1 else f"{repeats.places} places"
-        yield "repeats", f"{places} measured {repeats.points} times{again}"
+        where = "1 place" if repeats.places == 1 else f"{repeats.places} places"
+        yield "repeats", f"{where} measured {repeats.points} times{again}"
 
 
 def _console(width: int, colour: bool) -> Console:
