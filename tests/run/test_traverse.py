@@ -1,5 +1,6 @@
 """Raw traverses from hole pressures to the ledger: what was put in comes out, and errors are said and carried."""
 
+import dataclasses
 import pickle
 import runpy
 from pathlib import Path
@@ -8,7 +9,7 @@ from types import SimpleNamespace
 import numpy as np
 import pytest
 
-from wakeledger.core.errors import InputError
+from wakeledger.core.errors import DataError, InputError
 from wakeledger.core.flags import Flag
 from wakeledger.core.rotation import rotation_matrix
 from wakeledger.intake.probe.readings import find_revisits
@@ -389,6 +390,18 @@ def test_a_ledger_is_reduced_again_to_the_last_digit_without_its_probe_file(nois
     assert again.notes == noisy_ledger.notes
     assert dict(kept.inputs) == dict(noisy_ledger.inputs)
     assert {Path(name).name for name in kept.inputs} >= {"survey.toml", "plane.csv", "probe.nc", "calibration.csv"}
+
+
+def test_an_archive_without_its_calibration_is_told_in_one_line(noisy_ledger, tmp_path):
+    write_archive(dataclasses.replace(noisy_ledger, calibrations={}), tmp_path / "ledger.nc")
+    with pytest.raises(DataError, match=r"the calibration .*probe\.nc is not kept inside"):
+        load(tmp_path / "ledger.nc")
+
+
+def test_a_survey_without_sources_says_what_its_figures_lack(raw, wake, probes, tmp_path):
+    found = reduce(load(raw.traverse(tmp_path, wake, *probes[5])), draws=100)
+    assert "not noise, mounting and reference readings" in note(found, "No source of uncertainty is declared")
+    assert not any("so the uncertainty of the measurement is unknown" in text for text in found.notes)
 
 
 # -- the record -------------------------------------------------------------------------------------------------------

@@ -258,7 +258,8 @@ class Survey(Table):
             kept = [name for name in plane.columns if name.startswith(idle_here)]
             if kept:
                 found.append(f"[plane.columns] {', '.join(kept)}: kept in the archive, and no row uses them")
-        if not self.uncertainty.source:
+        # With hole pressures the calibration and the corrections have sources of their own; their notes say what lacks.
+        if not self.uncertainty.source and self.plane.primary != "hole_pressures":
             found.append("[[uncertainty.source]]: there is none, so the uncertainty of the measurement is unknown")
         return found
 
