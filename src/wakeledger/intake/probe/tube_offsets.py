@@ -67,6 +67,8 @@ def offsets_from_overlap(total: Array, tube: NDArray[np.intp], y: Array, z: Arra
     -----
     Least squares of total = (a level for each place) + (an offset for each tube), the offsets adding to zero.
     """
+    from scipy.sparse.csgraph import connected_components
+
     usable = np.flatnonzero(np.isfinite(total))
     place = _places(y[usable], z[usable])
     held = usable[place >= 0]
@@ -86,10 +88,10 @@ def offsets_from_overlap(total: Array, tube: NDArray[np.intp], y: Array, z: Arra
     _, place = np.unique(place, return_inverse=True)
     means = np.bincount(place, weights=values) / number
     normal = np.diag(counts.sum(axis=0)) - counts.T @ (counts / number[:, None])
-    if np.linalg.matrix_rank(normal) < tubes - 1:
+    if connected_components(counts.T @ counts > 0, directed=False)[0] > 1:
         return None
     right = np.bincount(which, weights=values - means[place], minlength=tubes)
-    inverse = np.linalg.pinv(normal)
+    inverse = np.linalg.pinv(normal, rcond=1e-9, hermitian=True)
     found: Array = np.asarray(inverse @ right, dtype=float)
     # What an offset does to its place's mean is part of the model.
     shift = counts @ found / number

@@ -70,11 +70,12 @@ def check_rake(plane: Plane, probes: Sequence[ProbeTable]) -> None:
         raise fail("all tubes are static tubes", "describe the probes in the flow, too", "probe")
     calibrated = [bool(probe.calibration) for probe in flow]
     if any(calibrated) and not all(calibrated):
-        which = flow[calibrated.index(False)].tube
+        pitot = flow[calibrated.index(False)]
         raise fail(
-            f"tube {which} has no calibration, and others have one",
+            f"tube {pitot.tube} has no calibration, and others have one",
             "calibrate it, or survey with the pitots in a survey file of their own: they tell no direction",
             "probe",
+            list(probes).index(pitot),
         )
     if static and all(calibrated):
         raise fail(

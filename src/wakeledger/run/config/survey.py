@@ -115,11 +115,22 @@ class Survey(Table):
         for index, plane in enumerate(self.planes):
             place: tuple[str | int, ...] = ("plane", index)
             edge_static = self.section.edge_static if self.section else None
+            if plane.primary == "hole_pressures" and self.probe:
+                check_rake(plane, self.probe)
+                if self.section is not None and edge_static != "stream":
+                    check_static(plane, self.probe)
             try:
                 check_positions(plane, coordinates=2 if edge_static is None else 1)
                 check_primary(plane, edge_static=edge_static, calibrated=self.directed or not self.probe)
             except PydanticCustomError as error:
                 raise below(error, *place) from error
+            if plane.primary == "hole_pressures" and not self.probe:
+                raise fail(
+                    'primary = "hole_pressures" needs a calibrated probe',
+                    'add [probe] with calibration = "probe.toml", or without it for a pitot tube',
+                    *place,
+                    "primary",
+                )
             if self.section is None and bound_line is not None and plane.station <= bound_line:
                 raise fail(
                     f"the plane at {plane.station:g} m is not behind the quarter-chord line at {bound_line:g} m",
@@ -127,17 +138,6 @@ class Survey(Table):
                     *place,
                     "station",
                 )
-            if plane.primary == "hole_pressures":
-                if not self.probe:
-                    raise fail(
-                        'primary = "hole_pressures" needs a calibrated probe',
-                        'add [probe] with calibration = "probe.toml", or without it for a pitot tube',
-                        *place,
-                        "primary",
-                    )
-                check_rake(plane, self.probe)
-                if self.section is not None and edge_static != "stream":
-                    check_static(plane, self.probe)
         refuse_twice(self.compare, "compare")
         refuse_twice(self.body, "body")
         half = self.boundary is not None and self.boundary.reflection == "y"
