@@ -9,7 +9,7 @@ be, so that a half window with its image gives the whole window's solution to ro
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import lru_cache
 from typing import Any
 
@@ -21,6 +21,10 @@ from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.poisson import _truncated_logarithm, green_weights
 
 Complex = NDArray[np.complexfloating[Any, Any]]
+
+#: With images in walls, the spectral weights pass smoothly into the plain logarithm between these numbers of cells: a
+#: sharp change would cost 1e-5.
+_BLEND = (32, 128)
 
 
 @dataclass(frozen=True)
@@ -35,6 +39,8 @@ class Image:
         m.
     sign : float
         Factor on the circulation.
+    distant : bool
+        Whether it lies so many cells away from the window that a smooth field acts by the plain logarithm.
     """
 
     turn_y: int = 1
@@ -42,6 +48,7 @@ class Image:
     turn_z: int = 1
     shift_z: float = 0.0
     sign: float = 1.0
+    distant: bool = field(default=False, compare=False)
 
     def after(self, first: Image) -> Image:
         """The image, by this one, of another image."""
@@ -51,6 +58,7 @@ class Image:
             self.turn_z * first.turn_z,
             self.turn_z * first.shift_z + self.shift_z,
             self.sign * first.sign,
+            self.distant or first.distant,
         )
 
     def of(self, y: Array, z: Array) -> tuple[Array, Array]:
@@ -112,8 +120,7 @@ class ImageSolve:
         return solution
 
 
-@lru_cache(maxsize=8)
-def image_solve(grid: UniformGrid, images: tuple[Image, ...], reach: tuple[float, float]) -> ImageSolve:
+def image_solve(grid: UniformGrid, images: tuple[Image, ...], reach: tuple[float, float] | None = None) -> ImageSolve:
     """Prepare a solve with images.
 
     Parameters
@@ -122,9 +129,9 @@ def image_solve(grid: UniformGrid, images: tuple[Image, ...], reach: tuple[float
         The window.
     images : tuple of Image
         All that act, `ITSELF` included.
-    reach : (float, float)
-        Largest offset along z and y for which the weights of the free-space solve are tabulated, m; images beyond it
-        act by the plain logarithm.
+    reach : (float, float) or None
+        Extents along z and y of the window together with its reflection where there are no images in walls, m: the
+        free-space solve's own weights of that size are used throughout. With images in walls, None.
 
     Returns
     -------
@@ -132,21 +139,13 @@ def image_solve(grid: UniformGrid, images: tuple[Image, ...], reach: tuple[float
     """
     nz, ny = grid.shape
     mz, my = _padded(grid)
-    offsets = []
+    sums: dict[tuple[int, int], Array] = {}
     for image in images:
         at_z, off_z = _offsets(grid.z0, grid.dz, nz, image.turn_z, image.shift_z)
         at_y, off_y = _offsets(grid.y0, grid.dy, ny, image.turn_y, image.shift_y)
-        offsets.append((image, np.ix_(at_z % mz, at_y % my), off_z, off_y))
-    # The free-space solve's own table where all offsets lie on the grid; else with room for parts of a step.
-    between = any(_part(off_z)[1] or _part(off_y)[1] for _, _, off_z, off_y in offsets)
-    table = tuple(
-        int(np.ceil(length / step - 1e-6)) + (2 if between else 1)
-        for length, step in zip(reach, (grid.dz, grid.dy), strict=True)
-    )
-    sums: dict[tuple[int, int], Array] = {}
-    for image, at, off_z, off_y in offsets:
         weights = sums.setdefault((image.turn_y, image.turn_z), np.zeros((mz, my)))
-        weights[at] += image.sign * _weights(grid, table, off_z, off_y)
+        acting = _weights(grid, off_z, off_y, image, reach)
+        weights[np.ix_(at_z % mz, at_y % my)] += image.sign * acting
     return ImageSolve(grid, {turn: fft.rfft2(weights) for turn, weights in sums.items()})
 
 
@@ -170,20 +169,36 @@ def _part(offsets: Array) -> tuple[NDArray[np.intp], float]:
     return (start + np.arange(offsets.size)).astype(int), 0.0 if abs(fraction) < 1e-6 else fraction
 
 
-def _weights(grid: UniformGrid, table: tuple[int, ...], off_z: Array, off_y: Array) -> Array:
+def _weights(grid: UniformGrid, off_z: Array, off_y: Array, image: Image, reach: tuple[float, float] | None) -> Array:
     """Green's function at offsets in steps, each axis ascending by one, cell area included, m²."""
-    whole, part = zip(*(_part(offsets) for offsets in (off_z, off_y)), strict=True)
-    nz, ny = table
-    inside = all(max(abs(index[0]), abs(index[-1])) < n for index, n in zip(whole, table, strict=True))
-    if not inside:
-        distance = np.hypot(off_z[:, None] * grid.dz, off_y[None, :] * grid.dy)
-        plain: Array = -grid.cell_area * np.log(distance) / (2 * np.pi)
-        return plain
-    weights = _between(nz, ny, grid.dz, grid.dy, part[0], part[1])
-    return weights[np.ix_(whole[0] + nz - 1, whole[1] + ny - 1)]
+    (whole_z, part_z), (whole_y, part_y) = _part(off_z), _part(off_y)
+    if reach is not None:
+        room = 1 if part_z == part_y == 0 else 2
+        nz, ny = (int(np.ceil(n / h - 1e-6)) + room for n, h in zip(reach, (grid.dz, grid.dy), strict=True))
+        spectral = _between(nz, ny, grid.dz, grid.dy, part_z, part_y)
+        return spectral[np.ix_(whole_z + nz - 1, whole_y + ny - 1)]
+    radius = np.hypot(off_z[:, None] * grid.dz, off_y[None, :] * grid.dy)
+    weights: Array = -grid.cell_area * np.log(np.where(radius > 0, radius, 1.0)) / (2 * np.pi)
+    if image.distant:
+        return weights
+    n = _BLEND[1]
+    near_z, near_y = np.flatnonzero(np.abs(whole_z) < n), np.flatnonzero(np.abs(whole_y) < n)
+    spectral = _between(n, n, grid.dz, grid.dy, part_z, part_y)
+    share = _blend(off_z[near_z])[:, None] * _blend(off_y[near_y])
+    excess = spectral[np.ix_(whole_z[near_z] + n - 1, whole_y[near_y] + n - 1)] - weights[np.ix_(near_z, near_y)]
+    weights[np.ix_(near_z, near_y)] += share * excess
+    return weights
 
 
-@lru_cache(maxsize=16)
+def _blend(cells: Array) -> Array:
+    """1 up to the lower number of cells, 0 beyond the upper one, infinitely smooth between."""
+    low, high = _BLEND
+    t = np.clip((np.abs(cells) - low) / (high - 1 - low), 2e-3, 1 - 2e-3)
+    share: Array = 1 / (1 + np.exp(1 / (1 - t) - 1 / t))
+    return share
+
+
+@lru_cache(maxsize=8)
 def _between(nz: int, ny: int, dz: float, dy: float, part_z: float, part_y: float) -> Array:
     """`green_weights` at offsets moved by a part of a step."""
     if part_z == 0 and part_y == 0:

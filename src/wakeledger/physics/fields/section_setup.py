@@ -6,7 +6,7 @@ acts, and what unit circulation at each of them puts on the edge. See `wall_corr
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from typing import Literal
 
@@ -32,6 +32,8 @@ Condition = Literal["zero", "no_gradient"]
 
 #: Walls along the axes nearer than this part of the window's longer side act through images.
 _MIRRORED = 0.35
+#: Images beyond this many cells act by the plain logarithm, which a smooth field cannot tell from its own weights.
+_DISTANT = 24
 #: Interpolation between the grid and the Chebyshev points is good to this.
 _TOLERANCE = 1e-13
 _MOST_POINTS = 160
@@ -61,7 +63,7 @@ class SectionSetup:
     condition: Condition
     images: tuple[Image, ...]
     walls_only: tuple[Image, ...]
-    reach: tuple[float, float]
+    reach: tuple[float, float] | None
     panels: Panels
     points_y: Array
     points_z: Array
@@ -111,6 +113,7 @@ def section_setup(
     union = union_window(grid, boundary)
     sign = -1.0 if condition == "zero" else 1.0
     near = _near_walls(section, union, sign) if window_inside(grid, section) else ()
+    near = tuple(_told_apart(wall, union, grid) for wall in near)
     halves = reflections(boundary, parity)
     images = tuple(wall.after(image) for wall in (ITSELF, *near) for image in halves)
     walls_only = tuple(wall.after(image) for wall in near for image in halves)
@@ -157,7 +160,7 @@ def section_setup(
         condition,
         images,
         walls_only,
-        reach_of(union, (ITSELF, *near)),
+        None if near else reach_of(union),
         panels,
         points_y,
         points_z,
@@ -270,12 +273,17 @@ def _moved(box: tuple[float, float, float, float], image: Image) -> tuple[float,
     return float(y.min()), float(y.max()), float(z.min()), float(z.max())
 
 
-def reach_of(union: tuple[float, float, float, float], walls: tuple[Image, ...]) -> tuple[float, float]:
-    """Largest offset along z and y between the window and its images in the walls, m."""
-    boxes = [_moved(union, wall) for wall in walls]
-    reach_y = max(max(abs(union[1] - box[0]), abs(box[1] - union[0])) for box in boxes)
-    reach_z = max(max(abs(union[3] - box[2]), abs(box[3] - union[2])) for box in boxes)
-    return reach_z, reach_y
+def reach_of(union: tuple[float, float, float, float]) -> tuple[float, float]:
+    """Extents of the window and its reflection along z and y, m."""
+    return union[3] - union[2], union[1] - union[0]
+
+
+def _told_apart(wall: Image, union: tuple[float, float, float, float], grid: UniformGrid) -> Image:
+    """An image in walls, marked distant where it lies many cells from the window."""
+    box = _moved(union, wall)
+    cells_y = max(box[0] - union[1], union[0] - box[1], 0.0) / grid.dy
+    cells_z = max(box[2] - union[3], union[2] - box[3], 0.0) / grid.dz
+    return replace(wall, distant=max(cells_y, cells_z) > _DISTANT)
 
 
 def _axis_walls(section: Section) -> list[tuple[str, float]]:

@@ -30,7 +30,7 @@ from wakeledger.physics.fields.boundary import (
     check_window,
     points_inside,
 )
-from wakeledger.physics.fields.image_solve import ITSELF, ImageSolve, image_solve
+from wakeledger.physics.fields.image_solve import ImageSolve, image_solve
 from wakeledger.physics.fields.poisson import stream_function
 from wakeledger.physics.fields.section_panels import Complex, panels_of
 from wakeledger.physics.fields.section_setup import (
@@ -201,7 +201,7 @@ def _solver(grid: UniformGrid, boundary: Boundary, condition: Condition, parity:
         if boundary.reflection is None:
             return _Solver(grid, None, None)
         images = reflections(boundary, parity)
-        return _Solver(grid, image_solve(grid, images, reach_of(union_window(grid, boundary), (ITSELF,))), None)
+        return _Solver(grid, image_solve(grid, images, reach_of(union_window(grid, boundary))), None)
     setup = section_setup(grid, boundary, condition, parity)
     base = image_solve(grid, setup.images, setup.reach) if len(setup.images) > 1 else None
     ys, zs = np.meshgrid(setup.points_y, setup.points_z)
