@@ -88,6 +88,10 @@ WITHOUT_CROSSFLOW: tuple[str, ...] = (
 )
 
 
+#: What of a flow state changes with the place.
+STATE: tuple[str, ...] = ("u", "v", "w", "total_pressure", "static_pressure")
+
+
 @dataclass(frozen=True)
 class Settings:
     """What the survey file fixes about the chain, in SI.
@@ -265,7 +269,8 @@ class Chain:
     frozen : Frozen
         What was found once on the nominal plane.
     gradients : mapping of str to ndarray, shape (2, n)
-        Derivative of each channel along y and z at the points, for errors of position; empty where there are none.
+        Derivative of each channel along y and z at the points, for errors of position, or of ``state.u`` and so on
+        where several tubes took the points; empty where there are none.
     traverse : Traverse or None
         How hole pressures become flow states; None where flow variables were measured.
     displacement : Displacement or None
@@ -334,7 +339,8 @@ class Chain:
             values[name] = array
         if self.traverse is not None:
             # Errors of angles are those of the probe's mounting.
-            return self.traverse.state(values, reference, errors, rotation=rotation_matrix(*self.settings.offsets))
+            state = self.traverse.state(values, reference, errors, rotation=rotation_matrix(*self.settings.offsets))
+            return self._elsewhere(state, errors)
         pitch, yaw, roll = (
             offset + errors.get(f"angle.{name}", 0.0)
             for name, offset in zip(("pitch", "yaw", "roll"), self.settings.offsets, strict=True)
@@ -348,6 +354,20 @@ class Chain:
             axes=self.points.axes,
             rotation=np.moveaxis(turn, 0, -1) if turn.ndim > 2 else turn,
         )
+
+    def _elsewhere(self, state: State, errors: Mapping[str, Array]) -> State:
+        """States of a rake under errors of position; the readings of its tubes have no common slopes."""
+        moved = {name: self.gradients.get(f"state.{name}") for name in STATE}
+        for axis, coordinate in enumerate(("y", "z")):
+            shift = errors.get(f"position.{coordinate}")
+            if shift is not None:
+                changes = {
+                    name: getattr(state, name) - shift * slope[axis]
+                    for name, slope in moved.items()
+                    if slope is not None
+                }
+                state = replace(state, **changes)
+        return state
 
     def flow(self, reference: Reference, errors: Mapping[str, Array] = _NO_ERRORS) -> Flow:
         """The gridded plane under errors of the inputs.

@@ -13,9 +13,9 @@ from scipy.interpolate import RegularGridInterpolator
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Points
-from wakeledger.intake.gridding import Gridding
 from wakeledger.intake.probe.reduction import CALIBRATION_INPUTS
 from wakeledger.physics.fields.differences import ddy, ddz
+from wakeledger.run.chain import STATE, Chain
 from wakeledger.run.config import Source as DeclaredSource
 from wakeledger.run.config import Survey
 from wakeledger.stream.reference import Reference
@@ -183,18 +183,22 @@ def _divisor(name: str, points: Points, reference: Reference) -> float:
     return divisor
 
 
-def gradients(points: Points, gridding: Gridding) -> Mapping[str, Array]:
+def gradients(chain: Chain) -> Mapping[str, Array]:
     """Derivatives of every channel along y and z at the points, shape (2, n), unit per metre.
 
-    They carry errors of position into the values; zero at points outside the grid.
+    They carry errors of position into the values; zero at points outside the grid. Where several tubes took the points,
+    which do not read alike, those of the flow states, ``state.u`` and so on.
     """
+    points, gridding = chain.points, chain.gridding
+    values = {name: channel.values for name, channel in points.channels.items() if name not in _NOT_OF_PLACE}
+    if chain.traverse is not None and len(chain.traverse.tubes) > 1:
+        state = chain.state(chain.reference())
+        values = {f"state.{name}": getattr(state, name) for name in STATE}
     grid = gridding.grid
     places = np.stack([points.z, points.y], axis=1)
     found = {}
-    for name, channel in points.channels.items():
-        if name in _NOT_OF_PLACE:
-            continue
-        field = gridding.apply(channel.values)
+    for name, array in values.items():
+        field = gridding.apply(array)
         slopes = []
         for slope in (ddy(field, grid, order=2), ddz(field, grid, order=2)):
             interpolate = RegularGridInterpolator((grid.z, grid.y), slope, bounds_error=False, fill_value=0.0)

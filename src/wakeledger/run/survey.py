@@ -223,7 +223,7 @@ def _prepare(survey: SurveyInput) -> Prepared:
     names = sorted({name for source in declared for name in source.applies_to})
     inputs = layouts(file, points, gridding, names)
     if any(name.startswith("position.") for name in names):
-        chain = replace(chain, gradients=gradients(points, gridding))
+        chain = replace(chain, gradients=gradients(chain))
     plain = chain.reduce()
     noises, noise_notes = _noises(chain, plain, declared, inputs, seed=file.uncertainty.seed)
     chain = replace(chain, frozen=replace(chain.frozen, bias=noise_bias(chain, plain, noises)))

@@ -72,7 +72,8 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
     raw = gridded.raw
     steady = points if raw is None else _steady(points, raw, nominal.reference)
     channels = channel_summaries(
-        points,
+        # The holes of different tubes read different pressures at one place.
+        steady if raw is not None and len(raw.traverse.tubes) > 1 else points,
         noise=shown_noise(steady, gridding, wake, places.first),
         declared=declared_noise(survey, nominal.reference),
         repeatability=places.repeatability(steady),
@@ -122,9 +123,12 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
 
 
 def _steady(points: Points, raw: RawSurvey, reference: Reference) -> Points:
-    """The points with hole pressures at the reference condition, where they repeat and follow their neighbours."""
+    """The points with values that repeat and follow their neighbours (`corrected_points`)."""
     corrected = corrected_points(points, raw.traverse, reference)
-    return replace(points, channels={**points.channels, **corrected.channels})
+    kept = points.channels
+    if len(raw.traverse.tubes) > 1:
+        kept = {name: channel for name, channel in kept.items() if name not in raw.traverse.kinds}
+    return replace(points, channels={**kept, **corrected.channels})
 
 
 def _lost(places: Places, wake: Mask, grid: UniformGrid) -> tuple[tuple[tuple[float, float], ...], int]:
