@@ -213,7 +213,9 @@ def _gap_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gridding])
         vector = trial.reduce(vary=Variation(mask=nominal.region.mask)).vector
         changes.append(_difference(vector, nominal))
     if not changes:
-        return NumericalTerm(GAPS, np.full(len(OUTPUTS), np.nan))
+        # No such pattern fits beside the gaps: all that the filled places contribute is in doubt.
+        without = nominal.region.mask & ~chain.gridding.filled
+        return NumericalTerm(GAPS, _deviation(chain, nominal, Variation(mask=without)))
     return NumericalTerm(GAPS, np.sqrt(np.mean(np.square(changes), axis=0)))
 
 
