@@ -21,7 +21,7 @@ from wakeledger.core.units import UnitError, to_si
 from wakeledger.ledger.crosscheck import COVERAGE_FACTOR
 from wakeledger.ledger.encoding import group_names
 from wakeledger.ledger.rows import CHECK_VERDICTS, VERDICTS
-from wakeledger.run import chain, checks, numerics, tables
+from wakeledger.run import checks, numerics, outputs, reduction, tables
 from wakeledger.run.config import plane as plane_tables
 from wakeledger.run.config import stream, uncertainty
 from wakeledger.run.config import tables as small_tables
@@ -134,7 +134,7 @@ def test_rows_are_all_documented_and_none_is_invented(sample):
     listed = first_column(page[page.index("| Row |") : page.index("## How the rows")])
     assert sorted(listed) == sorted(ROWS)
     titles = [CODE.findall(title)[0] for level, title in headings(page) if level == 2 and CODE.findall(title)]
-    assert set(titles) == {*chain.ROWS, "section_drag"}
+    assert set(titles) == {*outputs.ROWS, "section_drag"}
     for line in page[page.index("| Row |") : page.index("## How the rows")].splitlines()[2:]:
         if not line.startswith("|"):
             continue
@@ -143,17 +143,17 @@ def test_rows_are_all_documented_and_none_is_invented(sample):
             ROWS[name].unit for name in CODE.findall(names)
         ]
         if given.strip() == "yes":
-            assert set(CODE.findall(names)) <= set(chain.ROWS)
+            assert set(CODE.findall(names)) <= set(outputs.ROWS)
         elif given.strip() == "no":
-            assert not set(CODE.findall(names)) & {*chain.ROWS, "section_drag"}
+            assert not set(CODE.findall(names)) & {*outputs.ROWS, "section_drag"}
     reduced = json.loads((sample.folder / "survey-ledger" / "ledger.json").read_text("utf-8"))
-    assert {row["name"] for row in reduced["rows"]} == set(chain.ROWS)
+    assert {row["name"] for row in reduced["rows"]} == set(outputs.ROWS)
 
 
 def test_methods_are_all_documented_and_none_is_invented():
     page = PAGES["crosschecks.md"]
     titles = {CODE.findall(title)[0] for level, title in headings(page) if level == 3}
-    assert titles == {method for _, method in chain.ESTIMATES if _ in ROWS and method != "wake_line"} | {"wake_line"}
+    assert titles == {method for _, method in outputs.ESTIMATES if _ in ROWS and method != "wake_line"} | {"wake_line"}
     for row, methods in METHODS.items():
         for method in methods[1:]:
             assert f"`{method}`" in page, f"{method} of {row}"
@@ -305,7 +305,7 @@ def test_defaults_are_those_of_the_program():
     fields = uncertainty.UncertaintyTable.model_fields
     assert f"| whole number, at least 100 | {fields['draws'].default} |" in page
     assert f"| whole number, at least 0 | {fields['seed'].default} |" in page
-    assert chain.Settings.level == 3.0 and "| pure number | 3 | `4.0` |" in page
+    assert reduction.Settings.level == 3.0 and "| pure number | 3 | `4.0` |" in page
 
 
 @pytest.mark.parametrize(("text", "page", "before"), fences("toml"))

@@ -22,9 +22,11 @@ import numpy as np
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.terms import add_terms
-from wakeledger.run.chain import ROWS, Chain, Variation
+from wakeledger.run.chain import Chain
 from wakeledger.run.config import parse_survey
 from wakeledger.run.load import SurveyInput
+from wakeledger.run.outputs import ROWS
+from wakeledger.run.reduction import Variation
 from wakeledger.run.survey import _terms, prepare
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import SyntheticWake, wing_wake

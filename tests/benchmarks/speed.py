@@ -17,11 +17,13 @@ from tests.benchmarks.timing import Result, Timing, timed
 
 from wakeledger.confidence.montecarlo import run as run_montecarlo
 from wakeledger.physics.fields.poisson import stream_function
-from wakeledger.run.chain import OUTPUTS, Chain, Frozen
+from wakeledger.run.chain import Chain
 from wakeledger.run.config import parse_survey
 from wakeledger.run.gridded import Regrid, find_vortices, settings_of
 from wakeledger.run.load import SurveyInput, load
 from wakeledger.run.noise import noise_bias, white_noise
+from wakeledger.run.outputs import OUTPUTS
+from wakeledger.run.reduction import Frozen
 from wakeledger.run.survey import _line, inspect, prepare
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import Errors, Recording, grid_positions, record, wing_wake

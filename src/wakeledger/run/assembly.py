@@ -14,8 +14,8 @@ from wakeledger.core.estimate import Estimate
 from wakeledger.core.names import ROWS
 from wakeledger.ledger.crosscheck import check_estimate, compare
 from wakeledger.ledger.rows import BudgetLine, Comparison, CrossCheck, Row
-from wakeledger.run.chain import coefficient_of, estimate_of
 from wakeledger.run.config import Survey
+from wakeledger.run.outputs import coefficient_of, estimate_of
 
 NO_SOURCE = "the survey file gives no uncertainty source"
 

@@ -18,8 +18,8 @@ from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.ledger.rows import Check, CheckVerdict
 from wakeledger.physics.fields.edge import edge_integrals
 from wakeledger.physics.fields.wake_region import Mask
-from wakeledger.run.chain import Reduction
 from wakeledger.run.probe_range import ProbeRange
+from wakeledger.run.reduction import Reduction
 
 #: First and second limit of each check.
 LIMITS: dict[str, tuple[float, float]] = {

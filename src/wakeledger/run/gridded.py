@@ -17,9 +17,10 @@ from wakeledger.intake.state import State, check_state
 from wakeledger.physics.fields.wake_region import region_of
 from wakeledger.physics.vortices.identify import Vortex
 from wakeledger.physics.vortices.vortex_sum import VortexSum, WakeParts, find_parts, summarise
-from wakeledger.run.chain import Chain, Reduction, Settings
+from wakeledger.run.chain import Chain
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.rake import prepare_raw
+from wakeledger.run.reduction import Reduction, Settings
 from wakeledger.run.traverse import RawSurvey, corrected_points
 from wakeledger.stream.reference import Reference
 

@@ -18,7 +18,9 @@ from wakeledger.intake.gridding import Gridding
 from wakeledger.physics.fields.outer_flow import OuterFlow
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.physics.methods.residual import residual_drag
-from wakeledger.run.chain import OUTPUTS, Chain, Reduction, Variation, coefficient_of, estimate_of, sampled_mask
+from wakeledger.run.chain import Chain, sampled_mask
+from wakeledger.run.outputs import OUTPUTS, coefficient_of, estimate_of
+from wakeledger.run.reduction import Reduction, Variation
 
 MASK = "edge of the wake region"
 RESOLUTION = "spacing of the points"
@@ -80,7 +82,7 @@ def numerical_terms(
     Returns
     -------
     tuple of NumericalTerm
-        Over `wakeledger.run.chain.OUTPUTS`; terms that do not apply are left out.
+        Over `wakeledger.run.outputs.OUTPUTS`; terms that do not apply are left out.
     """
     terms: list[NumericalTerm | None] = [_mask_term(chain, nominal, noise), _resolution_term(chain, nominal)]
     if chain.gridding.kind == "tensor":

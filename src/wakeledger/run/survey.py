@@ -35,15 +35,7 @@ from wakeledger.run.assembly import (
     made_unknown,
     require_rows,
 )
-from wakeledger.run.chain import (
-    ESTIMATES,
-    OUTPUTS,
-    ROWS,
-    Chain,
-    Frozen,
-    Reduction,
-    estimate_of,
-)
+from wakeledger.run.chain import Chain
 from wakeledger.run.checks import Facts, all_checks
 from wakeledger.run.gridded import Regrid, core_spacings, grid_survey, usable_points
 from wakeledger.run.inputs import gradients, layouts, sources
@@ -51,7 +43,9 @@ from wakeledger.run.inspection import inspect_plane, inspect_section
 from wakeledger.run.load import SurveyInput, load, refuse_unsupported
 from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
 from wakeledger.run.numerics import numerical_terms
+from wakeledger.run.outputs import ESTIMATES, OUTPUTS, ROWS, estimate_of
 from wakeledger.run.probe_range import probe_range
+from wakeledger.run.reduction import Frozen, Reduction
 from wakeledger.run.section.survey import reduce_section
 from wakeledger.run.traverse_notes import traverse_notes
 

@@ -11,8 +11,9 @@ import numpy as np
 from wakeledger.core.grid import Array
 from wakeledger.intake.probe.traverse import Traverse, correction_input
 from wakeledger.run import tables
-from wakeledger.run.chain import Chain, Reduction, Variation
+from wakeledger.run.chain import Chain
 from wakeledger.run.probe_range import tip_notes
+from wakeledger.run.reduction import Reduction, Variation
 from wakeledger.run.traverse import REFERENCE, SHEAR, RawSurvey
 
 

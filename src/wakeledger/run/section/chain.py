@@ -18,7 +18,7 @@ from wakeledger.intake.probe.traverse import Traverse
 from wakeledger.physics.fields.traverse_window import WakeWindow, edge_levels, outer_levels, wake_edges
 from wakeledger.physics.methods.section_drag import EdgeStatic
 from wakeledger.physics.methods.section_kernels import KERNELS, speed_at, static_at, total_at, window_weights
-from wakeledger.run.chain import coefficient_of, estimate_of
+from wakeledger.run.outputs import coefficient_of, estimate_of
 from wakeledger.run.section.state import SectionState, section_state
 from wakeledger.stream.reference import Reference, resolve_reference
 

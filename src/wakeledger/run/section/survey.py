@@ -27,9 +27,9 @@ from wakeledger.physics.fields.traverse_window import TAIL
 from wakeledger.physics.methods.section_drag import SectionDrag, section_drag
 from wakeledger.run import tables
 from wakeledger.run.assembly import NO_SOURCE, budget_lines, comparisons, cross_check, ledger_row, require_rows
-from wakeledger.run.chain import estimate_of
 from wakeledger.run.inputs import layouts, sources
 from wakeledger.run.load import SurveyInput, refuse_unsupported
+from wakeledger.run.outputs import estimate_of
 from wakeledger.run.rake import prepare_raw
 from wakeledger.run.section.chain import (
     METHODS,
