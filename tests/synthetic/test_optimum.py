@@ -9,7 +9,7 @@ from wakeledger.synthetic.optimum import biplane, box_wing, c_wing, end_plates, 
 
 CORES = (0.004, 0.005, 0.006, 0.008, 0.010, 0.012, 0.016)
 #: e derived elsewhere by Richardson extrapolation of a panel solve (planar 1.00000, ring 2.000), beside it Kroo's value
-#: (VKI lecture 2005, from memory, two decimals) where there is one.
+#: (VKI 2005, from memory, two decimals) where there is one.
 SYSTEMS = [
     ("biplane 0.1", biplane(0.1), 1.2158, None),
     ("biplane 0.2", biplane(0.2), 1.3546, 1.36),
