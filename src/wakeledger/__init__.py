@@ -21,12 +21,21 @@ if TYPE_CHECKING:
     from wakeledger.ledger.archive import open_archive as open_ledger
     from wakeledger.ledger.rows import Ledger
     from wakeledger.physics import methods
+    from wakeledger.physics.fields.boundary import Circle, ClosedWalls, FreeAir, OpenJet, Polygon, Rectangle
     from wakeledger.physics.fields.flow import find_wake
+    from wakeledger.physics.fields.wall_correction import wall_stream_function
     from wakeledger.run.load import load as read_survey
     from wakeledger.run.survey import reduce
     from wakeledger.stream.reference import Reference
 
+_BOUNDARY = "wakeledger.physics.fields.boundary"
 _HOMES = {
+    "Circle": (_BOUNDARY, "Circle"),
+    "ClosedWalls": (_BOUNDARY, "ClosedWalls"),
+    "FreeAir": (_BOUNDARY, "FreeAir"),
+    "OpenJet": (_BOUNDARY, "OpenJet"),
+    "Polygon": (_BOUNDARY, "Polygon"),
+    "Rectangle": (_BOUNDARY, "Rectangle"),
     "Estimate": ("wakeledger.core.estimate", "Estimate"),
     "plane": ("wakeledger.core.plane", "plane"),
     "open_ledger": ("wakeledger.ledger.archive", "open_archive"),
@@ -34,11 +43,29 @@ _HOMES = {
     "find_wake": ("wakeledger.physics.fields.flow", "find_wake"),
     "methods": ("wakeledger.physics.methods", None),
     "read_survey": ("wakeledger.run.load", "load"),
+    "wall_stream_function": ("wakeledger.physics.fields.wall_correction", "wall_stream_function"),
     "reduce": ("wakeledger.run.survey", "reduce"),
     "Reference": ("wakeledger.stream.reference", "Reference"),
 }
 
-__all__ = ["Estimate", "Ledger", "Reference", "find_wake", "methods", "open_ledger", "plane", "read_survey", "reduce"]
+__all__ = [
+    "Circle",
+    "ClosedWalls",
+    "Estimate",
+    "FreeAir",
+    "Ledger",
+    "OpenJet",
+    "Polygon",
+    "Rectangle",
+    "Reference",
+    "find_wake",
+    "methods",
+    "open_ledger",
+    "plane",
+    "read_survey",
+    "reduce",
+    "wall_stream_function",
+]
 
 
 def __getattr__(name: str) -> Any:
