@@ -165,6 +165,7 @@ BROKEN = [
     ([PROBE.replace("3.2 mm", "3.2 s")], "[probe] tip_diameter", "a time", "a length"),
     ([PROBE.replace("calibration", "calibraton")], "[probe] calibraton", "unknown key", "'calibration'"),
     ([PROBE.replace('"estimate"', '"guess"')], "[probe] backlash", "'guess'", '"estimate"'),
+    ([PROBE + "displacement = -0.15\n"], "[probe] displacement", "-0.15", "at least 0"),
     ([PROBE.replace("[probe]", '[[probe]]\ntube = 0\noffset = ["0 m", "1 m"]')],
      "[[probe]] 1 tube", "number 0", "at least 1"),
     ([PROBE + "zeros = { before = { p9 = '1 Pa' } }\n"], "[probe] zeros.before.p9", "unknown key", "p1"),

@@ -221,6 +221,15 @@ def test_a_backlash_is_recovered(raw, wake, probes, tmp_path, asked):
     assert errors[0] < 0.3 * errors[1]
 
 
+def test_zeros_that_are_alike_before_and_after_are_not_called_exact(raw, wake, probes, tmp_path):
+    how = TraverseConditions(zeros_before=BEFORE)
+    path = raw.traverse(tmp_path, wake, *probes[5], how=how, probe={"zeros": raw.zeros(BEFORE, BEFORE)})
+    survey = load(path)
+    said = prepare_traverse(survey, prepare(survey).nominal.reference)
+    assert "how well they were read is in no figure" in said.said["zeros"]
+    assert "zeros of the holes (correction)" not in {source.name for source in said.sources}
+
+
 def test_zeros_read_once_are_taken_out_and_their_drift_is_said_to_be_unknown(raw, wake, probes, by_velocity, tmp_path):
     how = TraverseConditions(zeros_before=BEFORE)
     path = raw.traverse(tmp_path, wake, *probes[5], how=how, probe={"zeros": raw.zeros(BEFORE)})

@@ -226,12 +226,19 @@ class _Preparation:
             None if only else np.asarray(last)[:, None],
             done,
         )
-        drifts = {} if only else self._one_per_hole(ZEROS, path.filed(correction.per_sigma))
+        drifts = (
+            {}
+            if not np.any(np.nan_to_num(correction.per_sigma))
+            else self._one_per_hole(ZEROS, path.filed(correction.per_sigma))
+        )
         self._add(ZEROS, path.filed(correction.size), drifts, raw=True)
         size = float(np.max(np.abs(before)))
         change = "one reading, so their drift is unknown and in no figure"
         if first is not None and last is not None:
-            change = f"they changed by up to {np.max(np.abs(last - first)):.3g} Pa, taken as even"
+            most = float(np.max(np.abs(last - first)))
+            change = f"they changed by up to {most:.3g} Pa, taken as even"
+            if most == 0:
+                change = "alike before and after, so no drift is carried; how well they were read is in no figure"
         self.said[ZEROS] = f"Zeros of the holes (up to {size:.3g} Pa; {change}) were taken out"
         self._carry(ZEROS, "zeros of the holes", tuple(drifts))
 
@@ -251,6 +258,12 @@ class _Preparation:
                 "The stream was not read at each point: it is taken to have held the reference condition."
             )
             return
+        absolute = [hole for hole in self.holes if self.points.channels[hole].relative_to is None]
+        if absolute and STATIC not in names:
+            self.notes.append(
+                "The holes are absolute pressures, and the stream's static pressure was not read at each point: it is"
+                " taken to have held that of [reference]; an error of this is in no figure."
+            )
         if DYNAMIC in names:
             check_dynamic_pressure(self.values[DYNAMIC], self.reference.dynamic_pressure, line=self.points.line)
         for name in names:

@@ -174,6 +174,7 @@ def quantity(
 
 Number = Annotated[float, quantity("1")]
 PositiveNumber = Annotated[float, quantity("1", above=0.0)]
+NumberFromZero = Annotated[float, quantity("1", least=0.0)]
 Length = Annotated[float, quantity("m")]
 PositiveLength = Annotated[float, quantity("m", above=0.0)]
 LengthFromZero = Annotated[float, quantity("m", least=0.0)]

@@ -13,7 +13,7 @@ from wakeledger.run.config.quantities import (
     Label,
     Length,
     LengthFromZero,
-    Number,
+    NumberFromZero,
     Point,
     Polygon,
     Polyline,
@@ -106,7 +106,7 @@ class ProbeTable(Table):
     tip_diameter: PositiveLength | None = None
     zeros: ProbeZeros | None = None
     lag: Duration | None = None
-    displacement: Number | None = None
+    displacement: NumberFromZero | None = None
     backlash: Annotated[float | Literal["estimate"], PlainValidator(_backlash)] | None = None
 
 
