@@ -341,6 +341,7 @@ def test_static_tubes_elsewhere_are_brought_to_the_pitots(kit, wake, exact, writ
     left = np.sqrt(np.nanmean((state.static_pressure - truth) ** 2))
     assert left < 0.25 * np.sqrt(np.mean((truth - wake.reference.static_pressure) ** 2))
     note = next(note for note in prepared.notes if "interpolated from" in note)
+    assert "all readings of the static tubes share is in no figure" in note
     assert "static tubes 11, 12 and 13" in note
     assert prepared.nominal.values["profile_drag"] == pytest.approx(exact["profile_drag"], rel=3e-3)
     found = reduce(survey, draws=30)

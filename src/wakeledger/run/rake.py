@@ -269,6 +269,7 @@ def _with_static(
     )
     if found.beyond:
         sentence += f" {found.beyond} points lie beyond these readings and take the nearest."
+    sentence += " An error that all readings of the static tubes share is in no figure."
     attached = StaticTubes(tuple(one for one, _ in statics), tuple(values for _, values in statics), found)
     return replace(traverse, statics=attached), [*_sources(sources), source], [sentence]
 
