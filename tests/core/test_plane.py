@@ -68,6 +68,6 @@ def test_attributes_never_leak_through_arithmetic():
 
 
 def test_unknown_names_of_the_package_are_said():
-    with pytest.raises(AttributeError, match="it has .*Estimate"):
+    with pytest.raises(AttributeError, match=r"it has .*Estimate"):
         _ = wl.betz
     assert "reduce" in dir(wl)
