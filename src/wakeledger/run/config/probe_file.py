@@ -17,6 +17,7 @@ from wakeledger.core.points import Column
 from wakeledger.core.units import DIMENSIONS, UnitError, conversion
 from wakeledger.run.config.errors import survey_error
 from wakeledger.run.config.quantities import Label, Table, Text, fail
+from wakeledger.run.config.text_file import read_toml_text
 
 #: Every name ``[data.columns]`` takes, with its SI unit.
 CALIBRATION_UNITS: Mapping[str, str] = MappingProxyType(
@@ -218,22 +219,4 @@ def read_probe_file(path: Path | str) -> ProbeFile:
         For the first thing that is wrong, with file, place and remedy.
     """
     path = Path(path)
-    try:
-        content = path.read_bytes()
-    except FileNotFoundError as error:
-        raise SurveyError("the probe file does not exist", file=path, remedy="check the path") from error
-    except IsADirectoryError as error:
-        raise SurveyError("this is a directory", file=path, remedy="name the probe file in it, *.toml") from error
-    except (OSError, ValueError) as error:
-        reason = getattr(error, "strerror", None) or str(error)
-        raise SurveyError(f"the probe file cannot be read ({reason})", file=path, remedy="check the path") from error
-    if b"\0" in content:
-        raise SurveyError("this is not a text file", file=path, remedy="give the probe file (TOML), not the data file")
-    try:
-        text = content.decode()
-    except UnicodeDecodeError as error:
-        line = content.count(b"\n", 0, error.start) + 1
-        raise SurveyError(
-            "this is not UTF-8 text", file=path, place=f"line {line}", remedy="save it as UTF-8"
-        ) from error
-    return parse_probe_file(text, path)
+    return parse_probe_file(read_toml_text(path, "probe file"), path)

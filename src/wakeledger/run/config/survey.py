@@ -28,6 +28,7 @@ from wakeledger.run.config.tables import (
     TestTable,
     WakeTable,
 )
+from wakeledger.run.config.text_file import read_toml_text
 from wakeledger.run.config.uncertainty import Comparison, UncertaintyTable, allowed_targets, refuse_twice
 
 
@@ -337,26 +338,4 @@ def read_survey(path: Path | str) -> Survey:
         For the first thing that is wrong, with file, place and remedy.
     """
     path = Path(path)
-    try:
-        content = path.read_bytes()
-    except FileNotFoundError as error:
-        raise SurveyError("the survey file does not exist", file=path, remedy="check the path") from error
-    except IsADirectoryError as error:
-        raise SurveyError("this is a directory", file=path, remedy="name the survey file in it, *.toml") from error
-    except PermissionError as error:
-        raise SurveyError("the survey file may not be read", file=path, remedy="check its permissions") from error
-    except (OSError, ValueError) as error:
-        reason = getattr(error, "strerror", None) or str(error)
-        raise SurveyError(f"the survey file cannot be read ({reason})", file=path, remedy="check the path") from error
-    if content[:2] in (b"\xff\xfe", b"\xfe\xff"):
-        raise SurveyError("this is UTF-16 text", file=path, remedy="save it as UTF-8")
-    if b"\0" in content:
-        raise SurveyError("this is not a text file", file=path, remedy="give the survey file (TOML), not the data file")
-    try:
-        text = content.decode()
-    except UnicodeDecodeError as error:
-        line = content.count(b"\n", 0, error.start) + 1
-        raise SurveyError(
-            "this is not UTF-8 text", file=path, place=f"line {line}", remedy="save it as UTF-8"
-        ) from error
-    return parse_survey(text, path)
+    return parse_survey(read_toml_text(path, "survey file"), path)
