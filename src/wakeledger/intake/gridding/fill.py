@@ -2,7 +2,8 @@
 
 The filled values minimise the bending energy of a thin plate, the sum of f_yy² + 2 f_yz² + f_zz² over the grid, with
 the measured values held: gaps inside the survey continue cubic polynomials exactly on a uniform grid. Cells far from
-any measurement also pay for the slope, which holds extrapolation within the range of its surroundings.
+any measurement, and not between two of their row or column, also pay for the slope, which holds extrapolation within
+the range of its surroundings.
 """
 
 from __future__ import annotations
@@ -78,6 +79,18 @@ def distance_to_data(measured: NDArray[np.bool_]) -> Array:
     return np.asarray(distance_transform_edt(~measured), dtype=float)
 
 
+def _between(measured: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Cells with measurements on both sides of them along their row or their column."""
+
+    def bracketed(axis: int) -> NDArray[np.bool_]:
+        before = np.logical_or.accumulate(measured, axis=axis)
+        after = np.flip(np.logical_or.accumulate(np.flip(measured, axis), axis=axis), axis)
+        both: NDArray[np.bool_] = before & after
+        return both
+
+    return bracketed(0) | bracketed(1)
+
+
 def make_gap_fill(measured: NDArray[np.bool_], y: Array, z: Array) -> GapFill:
     """Prepare the filling of every cell that is not measured.
 
@@ -96,7 +109,7 @@ def make_gap_fill(measured: NDArray[np.bool_], y: Array, z: Array) -> GapFill:
     missing = np.flatnonzero(~measured)
     if not missing.size:
         return GapFill(missing, missing, None, None)
-    far = distance_to_data(measured) > FAR
+    far = (distance_to_data(measured) > FAR) & ~_between(measured)
     rows = _energy_rows(float(np.median(np.diff(y))), float(np.median(np.diff(z))), y, z, far)
     touched = rows[:, missing]
     keep = np.flatnonzero(np.diff(touched.indptr))

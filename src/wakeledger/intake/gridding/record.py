@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import Protocol
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from wakeledger.core.grid import Array, UniformGrid
+
+if TYPE_CHECKING:
+    from wakeledger.intake.gridding.mirror import Mirror
 
 
 class Scheme(Protocol):
@@ -49,6 +52,8 @@ class Gridding:
         Rows and columns of the raw tensor grid (nr, nc); for scattered points (1, number of places).
     row_index : ndarray of int, shape (n,)
         Traverse row of each point.
+    mirror : Mirror or None
+        Where the points are one half and the grid is the whole's (`wakeledger.intake.gridding.mirror`).
     """
 
     grid: UniformGrid
@@ -60,19 +65,22 @@ class Gridding:
     raw_shape: tuple[int, int]
     row_index: NDArray[np.int64]
     scheme: Scheme
+    mirror: Mirror | None = None
 
     @property
     def n(self) -> int:
         """Number of points."""
         return int(self.row_index.size)
 
-    def apply(self, values: Array) -> Array:
+    def apply(self, values: Array, *, odd: bool = False) -> Array:
         """Grid values at the points.
 
         Parameters
         ----------
         values : ndarray, shape (..., n)
             Values in file order. What stands at unusable points is ignored, NaN included.
+        odd : bool, optional
+            Whether the quantity changes its sign at the reflection plane; without one it makes no difference.
 
         Returns
         -------
@@ -87,11 +95,21 @@ class Gridding:
         array = np.asarray(values, dtype=np.float64)
         if array.ndim < 1 or array.shape[-1] != self.n:
             raise ValueError(f"values have shape {array.shape}, the last axis must hold the {self.n} points")
-        fields = self.scheme.fields(array.reshape(-1, self.n))
+        flat = array.reshape(-1, self.n)
+        fields = self.scheme.fields(flat if self.mirror is None else self.mirror.values(flat, odd=odd))
         return fields.reshape(*array.shape[:-1], *self.grid.shape)
 
-    def operators(self) -> tuple[Array, Array] | None:
+    def is_odd(self, component: str) -> bool:
+        """Whether a velocity component, "u", "v" or "w", is the one normal to the reflection plane."""
+        return self.mirror is not None and component == {"y": "v", "z": "w"}[self.mirror.axis]
+
+    def operators(self, *, odd: bool = False) -> tuple[Array, Array] | None:
         """Separable resampling, field = Wz @ raw @ Wy.T.
+
+        Parameters
+        ----------
+        odd : bool, optional
+            As in `apply`.
 
         Returns
         -------
@@ -99,7 +117,10 @@ class Gridding:
             Wz of shape (nz, nr) and Wy of shape (ny, nc), identities where the raw axis is kept; None for scattered
             points.
         """
-        return self.scheme.operators()
+        operators = self.scheme.operators()
+        if operators is None or self.mirror is None:
+            return operators
+        return self.mirror.operators(*operators, odd=odd)
 
     def near(self, points: NDArray[np.bool_]) -> NDArray[np.bool_]:
         """Cells that stand for given points, to carry a flag from points to cells.
@@ -114,7 +135,8 @@ class Gridding:
         ndarray of bool, shape (nz, ny)
             Cells whose nearest point (or raw node) is among them.
         """
-        return self.scheme.near(np.asarray(points, dtype=bool))
+        chosen = np.asarray(points, dtype=bool)
+        return self.scheme.near(chosen if self.mirror is None else self.mirror.points(chosen))
 
     def decimated(self, step: int, *, phase: tuple[int, int] = (0, 0)) -> Gridding:
         """Grid with every `step`-th row and column of the raw points only, to see what resolution costs.
@@ -142,4 +164,5 @@ class Gridding:
         """
         if step < 1 or not all(0 <= start < step for start in phase):
             raise ValueError(f"step must be at least 1 and phase within 0 ... step - 1, {step} and {phase} were given")
-        return self.scheme.decimated(step, phase)
+        coarse = self.scheme.decimated(step, phase)
+        return replace(coarse, mirror=self.mirror, row_index=self.row_index)
