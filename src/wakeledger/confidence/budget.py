@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 
+from wakeledger.confidence.components import Component, scatter, shifted_components, term_components
 from wakeledger.confidence.montecarlo import Evaluate, Progress, sample
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler, Seed, SourceErrors
@@ -25,6 +26,9 @@ REMAINDER = "remainder"
 
 #: A source with no more independent errors than this is shifted error by error instead of being drawn.
 FEW_ERRORS = 8
+
+#: The same for a source with a shared identity, so that each of its errors can be followed to other surveys.
+FEW_SHARED_ERRORS = 40
 
 How = Literal["sensitivities", "monte_carlo", "numerical", "remainder"]
 
@@ -73,12 +77,18 @@ class Budget:
     scale : ndarray, shape (m,)
         Factor by which the variances of the lines were reduced because together they exceeded the total, as they can
         through sampling or through sources that partly cancel; 1 where they did not.
+    components : tuple of Component
+        Every error that was shifted by itself and every numerical term, with its signed effect on the rows.
+    scatter : ndarray, shape (m, m), or None
+        Covariance of the rows that the components leave unexplained (`wakeledger.confidence.components.scatter`).
     """
 
     rows: tuple[str, ...]
     lines: tuple[BudgetLine, ...]
     standard_uncertainty: Array
     scale: Array
+    components: tuple[Component, ...] = ()
+    scatter: Array | None = None
 
     def of(self, row: str) -> tuple[BudgetLine, ...]:
         """The lines of one row, the largest first.
@@ -175,8 +185,8 @@ def make_budget(
     it and `scale` says by how much.
     """
     sampler = ErrorSampler(sources, layouts, seed=seed)
-    few = [one for one in sampler.by_source if one.latents <= FEW_ERRORS]
-    many = [one for one in sampler.by_source if one.latents > FEW_ERRORS]
+    few = [one for one in sampler.by_source if _is_few(one)]
+    many = [one for one in sampler.by_source if not _is_few(one)]
     draws = min(draws, samples.draws)
     counts = [1 + 2 * sum(one.latents for one in few)] if few else []
     redrawn = 0 if len(sampler.by_source) == 1 else len(many)
@@ -187,8 +197,12 @@ def make_budget(
             progress(done + part, total_count)
 
     parts: list[_Part] = []
+    components: tuple[Component, ...] = ()
     if few:
-        parts += _shifted(evaluate, sampler, few, samples, batch, workers, report)
+        components = shifted_components(
+            evaluate, sampler, few, len(samples.names), batch=batch, workers=workers, progress=report
+        )
+        parts += [_shifted(one, [part for part in components if part.source == one.source.name]) for one in few]
         done += counts[0]
     for one in many:
         if redrawn:
@@ -203,43 +217,24 @@ def make_budget(
         parts.append(_drawn(one.source.name, values, samples))
     nothing = np.full(len(samples.names), np.nan)
     parts += [_Part(term.name, "numerical", np.square(term.standard_uncertainty), nothing) for term in terms]
-    return _close(samples.names, add_terms(samples, terms, seed=seed).standard_uncertainty ** 2, parts)
+    budget = _close(samples.names, add_terms(samples, terms, seed=seed).standard_uncertainty ** 2, parts)
+    left = scatter(samples, few, components)
+    return replace(budget, components=(*components, *term_components(terms)), scatter=left)
 
 
-def _shifted(
-    evaluate: Evaluate,
-    sampler: ErrorSampler,
-    few: Sequence[SourceErrors],
-    samples: Samples,
-    batch: int,
-    workers: int,
-    report: Progress,
-) -> list[_Part]:
-    """Contributions by two-sided shifts of each independent error."""
-    shifts = [(one, latent, sign) for one in few for latent in range(one.latents) for sign in (1.0, -1.0)]
+def _is_few(one: SourceErrors) -> bool:
+    followed = one.source.shared_id is not None and one.followed
+    return one.latents <= (FEW_SHARED_ERRORS if followed else FEW_ERRORS)
 
-    def draw(start: int, stop: int) -> dict[str, Array]:
-        errors = sampler.zeros(stop - start)
-        for k in range(max(start, 1), stop):
-            one, latent, sign = shifts[k - 1]
-            for name, deviation in one.deviation(latent).items():
-                if not errors[name].flags.writeable:
-                    errors[name] = np.zeros(errors[name].shape)
-                errors[name][k - start] = sign * deviation[0]
-        return errors
 
-    values = sample(evaluate, draw, len(samples.names), 1 + len(shifts), batch, workers, report)
-    parts, position = [], 1
-    for one in few:
-        own = values[position : position + 2 * one.latents]
-        position += 2 * one.latents
-        linear = (own[0::2] - own[1::2]) / 2
-        curved = (own[0::2] + own[1::2]) / 2 - values[0]
-        # A t with few degrees of freedom has no fourth moment; the normal one stands in and the remainder has the rest.
-        kurtosis = one.source.kurtosis if math.isfinite(one.source.kurtosis) else 3.0
-        variance = (linear**2 + (kurtosis - 1) * curved**2).sum(axis=0)
-        parts.append(_Part(one.source.name, "sensitivities", variance, curved.sum(axis=0)))
-    return parts
+def _shifted(one: SourceErrors, components: Sequence[Component]) -> _Part:
+    """Contribution of a source whose errors were shifted one by one."""
+    linear = np.stack([part.linear for part in components])
+    curved = np.stack([part.curved for part in components])
+    # A t with few degrees of freedom has no fourth moment; the normal one stands in and the remainder has the rest.
+    kurtosis = one.source.kurtosis if math.isfinite(one.source.kurtosis) else 3.0
+    variance = (linear**2 + (kurtosis - 1) * curved**2).sum(axis=0)
+    return _Part(one.source.name, "sensitivities", variance, curved.sum(axis=0))
 
 
 def _drawn(name: str, values: Array, samples: Samples) -> _Part:

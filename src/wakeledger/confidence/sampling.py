@@ -191,23 +191,54 @@ class SourceErrors:
         dict of str to ndarray, shape (stop - start, n), or (stop - start,) for single numbers
             Additive errors in SI by input.
         """
+        return {
+            one.name: one.errors(latents) for one, latents in zip(self._inputs, self._latents(start, stop), strict=True)
+        }
+
+    def variables(self, start: int, stop: int) -> Array:
+        """The independent variables behind the errors that `draw` gives, of unit variance.
+
+        Parameters
+        ----------
+        start, stop : int
+            First draw and one past the last.
+
+        Returns
+        -------
+        ndarray, shape (stop - start, latents)
+            In the order of `deviation`.
+        """
+        return np.concatenate(self._latents(start, stop), axis=1) / self.source.spread
+
+    @property
+    def names(self) -> tuple[tuple[str, int], ...]:
+        """Input of each independent variable and its number there, in the order of `deviation`."""
+        return tuple((one.name, number) for one in self._inputs for number in range(one.latents))
+
+    @property
+    def followed(self) -> bool:
+        """Whether its variables can be followed to other surveys: one for each input, not for each point or row."""
+        return all(one.is_scalar for one in self._inputs) or self.source.effect == "systematic"
+
+    def _latents(self, start: int, stop: int) -> list[Array]:
+        """Variables of each input, (draws, latents), before they are expanded to errors."""
         source = self.source
 
         def fill(rng: np.random.Generator, out: Array) -> None:
             unit_variables(rng, out, source.distribution)
             if source.from_samples and math.isfinite(source.degrees_of_freedom):
-                out *= _doubt(rng, out.shape, source)
+                out *= doubt(rng, out.shape, source.distribution, source.degrees_of_freedom)
 
         factor = None
         if self.doubt_is_common:
             factor = draw_blocks(f"{self._key}|doubt", start, stop, 1, lambda rng, out: _fill_doubt(rng, out, source))
-        errors = {}
+        drawn = []
         for one in self._inputs:
             latents = draw_blocks(one.key, start, stop, one.latents, fill)
             if factor is not None:
                 latents *= factor
-            errors[one.name] = one.errors(latents)
-        return errors
+            drawn.append(latents)
+        return drawn
 
     def deviation(self, latent: int) -> dict[str, Array]:
         """Errors when one independent variable is one standard deviation above zero and the others are zero.
@@ -239,9 +270,25 @@ def _gather(index: NDArray[np.int64]) -> Expansion:
     return lambda latents: latents[:, index]
 
 
-def _doubt(rng: np.random.Generator, shape: tuple[int, ...], source: Source) -> Array:
-    nu = source.degrees_of_freedom
-    if source.distribution == "rectangular":
+def doubt(rng: np.random.Generator, shape: tuple[int, ...], distribution: str, nu: float) -> Array:
+    """Factors on errors whose standard uncertainty has few degrees of freedom.
+
+    Parameters
+    ----------
+    rng : numpy.random.Generator
+        Where the numbers come from.
+    shape : tuple of int
+        Their shape.
+    distribution : str
+        Distribution of the errors: ``"rectangular"``, else normal.
+    nu : float
+        Degrees of freedom.
+
+    Returns
+    -------
+    ndarray
+    """
+    if distribution == "rectangular":
         result: Array = 1 + (2 * rng.random(shape) - 1) / math.sqrt(2 * nu)
     else:
         result = np.sqrt(nu / rng.chisquare(nu, shape))
@@ -249,7 +296,7 @@ def _doubt(rng: np.random.Generator, shape: tuple[int, ...], source: Source) -> 
 
 
 def _fill_doubt(rng: np.random.Generator, out: Array, source: Source) -> None:
-    out[...] = _doubt(rng, out.shape, source)
+    out[...] = doubt(rng, out.shape, source.distribution, source.degrees_of_freedom)
 
 
 class ErrorSampler:

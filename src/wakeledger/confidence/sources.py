@@ -114,24 +114,60 @@ class Source:
     @property
     def spread(self) -> float:
         """Standard deviation of the errors over `standard_uncertainty`; infinite for a t with ν ≤ 2."""
-        nu = self.degrees_of_freedom
-        if math.isinf(nu):
-            return 1.0
-        if self.distribution == "rectangular":
-            return math.sqrt(1 + 1 / (6 * nu))
-        return math.sqrt(nu / (nu - 2)) if nu > 2 else math.inf
+        return spread(self.distribution, self.degrees_of_freedom)
 
     @property
     def kurtosis(self) -> float:
         """Fourth moment of one error over the square of its variance; infinite for a t with ν ≤ 4."""
-        nu = self.degrees_of_freedom
-        plain = _KURTOSIS[self.distribution]
-        if math.isinf(nu):
-            return plain
-        if self.distribution == "rectangular":
-            d = 1 / math.sqrt(2 * nu)
-            return plain * (1 + 2 * d**2 + d**4 / 5) / (1 + d**2 / 3) ** 2
-        return plain * (nu - 2) / (nu - 4) if nu > 4 else math.inf
+        return kurtosis(self.distribution, self.degrees_of_freedom)
+
+
+def spread(distribution: str, degrees_of_freedom: float) -> float:
+    """Standard deviation of an error over its standard uncertainty as stated.
+
+    Parameters
+    ----------
+    distribution : {"normal", "rectangular", "triangular", "arcsine"}
+        Distribution of the error.
+    degrees_of_freedom : float
+        How well the standard uncertainty is known.
+
+    Returns
+    -------
+    float
+        Infinite for a t with ν ≤ 2.
+    """
+    nu = degrees_of_freedom
+    if math.isinf(nu):
+        return 1.0
+    if distribution == "rectangular":
+        return math.sqrt(1 + 1 / (6 * nu))
+    return math.sqrt(nu / (nu - 2)) if nu > 2 else math.inf
+
+
+def kurtosis(distribution: str, degrees_of_freedom: float) -> float:
+    """Fourth moment of an error over the square of its variance.
+
+    Parameters
+    ----------
+    distribution : {"normal", "rectangular", "triangular", "arcsine"}
+        Distribution of the error.
+    degrees_of_freedom : float
+        How well its standard uncertainty is known.
+
+    Returns
+    -------
+    float
+        Infinite for a t with ν ≤ 4.
+    """
+    nu = degrees_of_freedom
+    plain = _KURTOSIS[distribution]
+    if math.isinf(nu):
+        return plain
+    if distribution == "rectangular":
+        d = 1 / math.sqrt(2 * nu)
+        return plain * (1 + 2 * d**2 + d**4 / 5) / (1 + d**2 / 3) ** 2
+    return plain * (nu - 2) / (nu - 4) if nu > 4 else math.inf
 
 
 @dataclass(frozen=True)
