@@ -11,6 +11,21 @@ from numpy.typing import NDArray
 
 from wakeledger.core.grid import Array
 
+#: What a variable may have been divided by before it was written: quantities of the undisturbed stream.
+NORMALISATIONS: tuple[str, ...] = (
+    "speed",
+    "sound_speed",
+    "dynamic_pressure",
+    "density_speed_squared",
+    "density_sound_speed_squared",
+    "static_pressure",
+    "total_pressure",
+    "density",
+    "temperature",
+    "total_temperature",
+    "viscosity",
+)
+
 
 @dataclass(frozen=True)
 class Column:
@@ -47,10 +62,10 @@ class Channel:
         The values in SI; NaN where the cell of the file was empty.
     relative_to : {None, "total", "static"}
         The reference pressure that was subtracted before it was written, None for an absolute value.
-    normalised_by : {None, "speed", "dynamic_pressure"}
-        The reference quantity it was divided by, None for a dimensional value.
+    normalised_by : str or None
+        The reference quantity it was divided by (`NORMALISATIONS`), None for a dimensional value.
     kinematic : bool
-        True for a pressure divided by density, m² s⁻².
+        True for a pressure divided by density, m² s⁻², or a viscosity divided by density, m² s⁻¹.
     """
 
     values: Array
@@ -81,6 +96,13 @@ class Points:
         Line of the file (or flat index into its arrays) each point came from, counted from 1.
     source : str
         Name of the file.
+    triangles : ndarray of int, shape (m, 3), or None
+        Triangles between the points, where the file connects them and its values stand at the corners.
+    areas : ndarray, shape (n,), or None
+        Area of the cell that each point is the centre of, m², where the file's values stand for cells.
+    how : str
+        How the points came out of a file that holds more than them: cut, taken at cell centres, merged; empty where
+        they stand in it as they are.
     """
 
     y: Array
@@ -92,6 +114,9 @@ class Points:
     std: Mapping[str, Array] = field(default_factory=lambda: MappingProxyType({}))
     samples: NDArray[np.int64] | None = None
     row: NDArray[np.int64] | None = None
+    triangles: NDArray[np.int64] | None = None
+    areas: Array | None = None
+    how: str = ""
 
     @property
     def n(self) -> int:

@@ -24,6 +24,7 @@ DIMENSIONS: dict[str, tuple[str, str]] = {
     "m2 s-2": ("a velocity squared (or a pressure over density)", "3.1 m^2/s^2"),
     "rad": ("an angle", "3 deg"),
     "Pa": ("a pressure", "1013 hPa"),
+    "m2 s-1": ("a kinematic viscosity", "1.5e-5 m^2/s"),
     "Pa s": ("a dynamic viscosity", "1.8e-5 Pa s"),
     "kg m-3": ("a density", "1.185 kg/m^3"),
     "K": ("a temperature", "12 degC"),

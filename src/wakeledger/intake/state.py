@@ -67,6 +67,14 @@ class Stream(Protocol):
         """Total temperature, K; NaN where unknown."""
 
     @property
+    def sound_speed(self) -> float:
+        """Speed of sound, m/s; NaN where unknown."""
+
+    @property
+    def viscosity(self) -> float:
+        """Dynamic viscosity, Pa s; NaN where unknown."""
+
+    @property
     def compressible(self) -> bool:
         """Whether the compressible relations are used."""
 
@@ -202,13 +210,16 @@ def absolute(values: Array, kind: Channel | None, reference: Stream) -> Array:
     -------
     ndarray, shape (..., n)
         The normalisation undone, then the division by density, then the subtraction of a reference pressure.
+
+    Raises
+    ------
+    SurveyError
+        If the stream does not have the quantity that a variable was divided by.
     """
     if kind is None:
         return values
-    if kind.normalised_by == "speed":
-        values = values * reference.speed
-    elif kind.normalised_by == "dynamic_pressure":
-        values = values * reference.dynamic_pressure
+    if kind.normalised_by is not None:
+        values = values * normalisation(kind.normalised_by, reference)
     if kind.kinematic:
         values = values * reference.density
     if kind.relative_to == "total":
@@ -216,6 +227,42 @@ def absolute(values: Array, kind: Channel | None, reference: Stream) -> Array:
     elif kind.relative_to == "static":
         values = values + reference.static_pressure
     return values
+
+
+def normalisation(name: str, reference: Stream) -> float:
+    """The quantity of the undisturbed stream that a variable was divided by.
+
+    Parameters
+    ----------
+    name : str
+        One of `wakeledger.core.points.NORMALISATIONS`.
+    reference : Stream
+        The undisturbed stream.
+
+    Returns
+    -------
+    float
+        In SI; positive.
+
+    Raises
+    ------
+    SurveyError
+        If the stream does not have it.
+    """
+    if name == "density_speed_squared":
+        value = reference.density * reference.speed**2
+    elif name == "density_sound_speed_squared":
+        value = reference.density * reference.sound_speed**2
+    else:
+        value = float(getattr(reference, name))
+    if not (np.isfinite(value) and value > 0):
+        needed = "static_pressure" if name in {"static_pressure", "total_pressure"} else "temperature"
+        raise SurveyError(
+            f'a column has normalised_by = "{name}", which [reference] does not determine',
+            place="[reference]",
+            remedy=f"add {needed} (or whatever else determines it), or give the column with its unit",
+        )
+    return value
 
 
 def _needed(given: Mapping[str, Array], name: str, primary: str, remedy: str) -> Array:

@@ -289,7 +289,15 @@ def points_dataset(points: Points) -> xr.Dataset:
     meaning = "signed permutation from the file's vector components to wind axes"
     axes = np.asarray(points.axes, dtype=float)
     dataset["axes"] = (("wind_axis", "file_axis"), axes, {"long_name": meaning, "units": "1"})
+    if points.triangles is not None:
+        corners = {"long_name": "points at the corners of each triangle, counted from 0", "units": "1"}
+        dataset["triangles"] = (("triangle", "corner"), np.asarray(points.triangles, dtype=np.int64), corners)
+    if points.areas is not None:
+        area = {"long_name": "area of the cell that each point is the centre of", "units": "m2"}
+        dataset["areas"] = ("point", np.asarray(points.areas, dtype=float), area)
     dataset.attrs = {"file": points.source, "channels": " ".join(points.channels)}
+    if points.how:
+        dataset.attrs["how"] = points.how
     return dataset
 
 
@@ -297,7 +305,7 @@ def _unit(name: str, channel: Channel | None) -> str:
     if channel is not None and channel.normalised_by:
         return "1"
     if channel is not None and channel.kinematic:
-        return "m2 s-2"
+        return "m2 s-1" if name == "turbulent_viscosity" else "m2 s-2"
     return VARIABLES[name].unit if name in VARIABLES else "1"
 
 
@@ -351,4 +359,7 @@ def dataset_points(dataset: xr.Dataset) -> Points:
         std=std,
         samples=counts("samples"),
         row=counts("row"),
+        triangles=counts("triangles"),
+        areas=dataset["areas"].values if "areas" in dataset else None,
+        how=str(dataset.attrs.get("how", "")),
     )

@@ -14,6 +14,7 @@ from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Points
 from wakeledger.intake.probe.reduction import CALIBRATION_INPUTS
+from wakeledger.intake.state import normalisation
 from wakeledger.physics.fields.differences import ddy, ddz
 from wakeledger.run.chain import STATE, Chain
 from wakeledger.run.config import Source as DeclaredSource
@@ -176,10 +177,8 @@ def _divisor(name: str, points: Points, reference: Reference) -> float:
     if channel is None:
         return 1.0
     divisor = reference.density if channel.kinematic else 1.0
-    if channel.normalised_by == "speed":
-        divisor *= reference.speed
-    elif channel.normalised_by == "dynamic_pressure":
-        divisor *= reference.dynamic_pressure
+    if channel.normalised_by is not None:
+        divisor *= normalisation(channel.normalised_by, reference)
     return divisor
 
 

@@ -67,7 +67,7 @@ def si_unit(key: str, column: Column) -> str | None:
     if column.normalised_by is not None:
         return "1"
     if column.kinematic:
-        return "m2 s-2"
+        return "m2 s-1" if name == "turbulent_viscosity" else "m2 s-2"
     if name in POSITIONS:
         return POSITIONS[name]
     if name in VARIABLES:

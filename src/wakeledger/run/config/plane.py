@@ -8,18 +8,52 @@ from types import MappingProxyType
 from typing import TYPE_CHECKING, Annotated, Any, Literal
 
 import numpy as np
-from pydantic import AfterValidator, Field, create_model, model_validator
+from pydantic import AfterValidator, Field, PlainValidator, create_model, model_validator
 
 from wakeledger.core.grid import Array
 from wakeledger.core.names import VARIABLES
 from wakeledger.core.points import Column
 from wakeledger.core.units import DIMENSIONS, UnitError, conversion
-from wakeledger.run.config.quantities import Angle, Length, Table, Text, fail, frozen
+from wakeledger.run.config.quantities import (
+    Angle,
+    Length,
+    Table,
+    Text,
+    fail,
+    frozen,
+    listed,
+    parse_quantity,
+    parse_text,
+)
 
 POSITIONS: Mapping[str, str] = MappingProxyType({"x": "m", "y": "m", "z": "m", "r": "m", "theta": "rad"})
 HOLES: tuple[str, ...] = tuple(f"p{number}" for number in range(1, 8))
 PRESSURES: tuple[str, ...] = ("total_pressure", "static_pressure", *HOLES)
 VELOCITIES: tuple[str, ...] = ("u", "v", "w", "speed", "velocity")
+#: What each variable may be normalised by, the usual one first.
+NORMALISED: Mapping[str, tuple[str, ...]] = MappingProxyType(
+    {
+        **dict.fromkeys(VELOCITIES, ("speed", "sound_speed")),
+        **dict.fromkeys(
+            PRESSURES,
+            (
+                "dynamic_pressure",
+                "density_speed_squared",
+                "density_sound_speed_squared",
+                "static_pressure",
+                "total_pressure",
+            ),
+        ),
+        "density": ("density",),
+        "temperature": ("temperature", "total_temperature"),
+        "total_temperature": ("total_temperature", "temperature"),
+        "turbulent_viscosity": ("viscosity",),
+    }
+)
+#: SI unit of a variable that is divided by density.
+KINEMATIC: Mapping[str, str] = MappingProxyType(
+    {"total_pressure": "m2 s-2", "static_pressure": "m2 s-2", "turbulent_viscosity": "m2 s-1"}
+)
 
 #: Every name `[plane.columns]` takes, with its SI unit.
 COLUMN_UNITS: Mapping[str, str] = MappingProxyType(
@@ -39,21 +73,36 @@ class ColumnEntry(Table):
     column: Text = Field(description='column = "..." (the name of the column or array in the file)')
     unit: Text | None = None
     relative_to: Literal["total", "static"] | None = None
-    normalised_by: Literal["speed", "dynamic_pressure"] | None = None
+    normalised_by: (
+        Literal[
+            "speed",
+            "sound_speed",
+            "dynamic_pressure",
+            "density_speed_squared",
+            "density_sound_speed_squared",
+            "static_pressure",
+            "total_pressure",
+            "density",
+            "temperature",
+            "total_temperature",
+            "viscosity",
+        ]
+        | None
+    ) = None
     kinematic: bool = False
 
 
 def _refuse_where_senseless(name: str, entry: ColumnEntry) -> None:
     if entry.relative_to and name not in PRESSURES:
         raise fail(f"relative_to is given for {name}", f"only {', '.join(PRESSURES)} take it", "relative_to")
-    if entry.kinematic and name not in PRESSURES[:2]:
-        raise fail(f"kinematic is given for {name}", f"only {' and '.join(PRESSURES[:2])} take it", "kinematic")
+    if entry.kinematic and name not in KINEMATIC:
+        raise fail(f"kinematic is given for {name}", f"only {', '.join(KINEMATIC)} take it", "kinematic")
     if entry.kinematic and entry.normalised_by:
-        raise fail("kinematic and normalised_by are both given", "a normalised pressure is not kinematic", "kinematic")
-    allowed = {"speed": VELOCITIES, "dynamic_pressure": PRESSURES}
-    if entry.normalised_by and name not in allowed[entry.normalised_by]:
-        fitting = next((by for by, names in allowed.items() if name in names), None)
-        remedy = f'write normalised_by = "{fitting}"' if fitting else "leave it out: this variable is never normalised"
+        raise fail("kinematic and normalised_by are both given", "a normalised value is not kinematic", "kinematic")
+    allowed = NORMALISED.get(name, ())
+    if entry.normalised_by and entry.normalised_by not in allowed:
+        listed = " or ".join(f'"{by}"' for by in allowed)
+        remedy = f"write normalised_by = {listed}" if allowed else "leave it out: this variable is never normalised"
         raise fail(f"{name} is normalised_by {entry.normalised_by!r}", remedy, "normalised_by")
 
 
@@ -62,7 +111,7 @@ def _to_column(name: str, entry: ColumnEntry, *, difference: bool = False) -> Co
     _refuse_where_senseless(name, entry)
     si_unit = COLUMN_UNITS[name]
     if entry.kinematic:
-        si_unit = "m2 s-2"
+        si_unit = KINEMATIC[name]
     elif entry.normalised_by:
         si_unit = "1"
     if entry.unit is None and si_unit != "1":
@@ -76,11 +125,13 @@ def _to_column(name: str, entry: ColumnEntry, *, difference: bool = False) -> Co
         remedy = error.remedy or ""
         if entry.normalised_by:
             remedy = f'a value normalised by the {entry.normalised_by} has unit = "1"'
-        elif conversion_fits(unit, "1") and name in (*VELOCITIES, *PRESSURES):
-            by = "speed" if name in VELOCITIES else "dynamic_pressure"
-            remedy = f'{remedy}; for a value divided by the reference one add normalised_by = "{by}"'
-        elif name in PRESSURES[:2] and conversion_fits(unit, "m2 s-2"):
-            remedy = f"{remedy}; for a pressure divided by density add kinematic = true"
+        elif conversion_fits(unit, "1") and name in NORMALISED:
+            remedy = f'{remedy}; for a value divided by the reference one add normalised_by = "{NORMALISED[name][0]}"'
+            if len(NORMALISED[name]) > 1:
+                remedy = f"{remedy} (or {', '.join(NORMALISED[name][1:])})"
+        elif name in KINEMATIC and conversion_fits(unit, KINEMATIC[name]):
+            what = "viscosity" if name == "turbulent_viscosity" else "pressure"
+            remedy = f"{remedy}; for a {what} divided by density add kinematic = true"
         raise fail(error.found, remedy, "unit") from error
     return Column(
         column=entry.column,
@@ -203,22 +254,43 @@ class Axes(Table):
         return next(name for name in ("x", "y", "z") if getattr(self, name)[1] == wind_axis)
 
 
+def _files(value: Any) -> str | tuple[str, ...]:
+    if not isinstance(value, list):
+        return parse_text(value)
+    names = listed(parse_text, 'the files as file = ["U_plane.raw", "p_plane.raw"]')(value)
+    for name in names:
+        if names.count(name) > 1:
+            raise fail(f"{name!r} is listed {names.count(name)} times", "list each file once")
+    return names[0] if len(names) == 1 else names
+
+
+def _time(value: Any) -> float:
+    # Steady solvers count iterations where others have seconds, and name their folders alike.
+    return parse_quantity(value, "s" if isinstance(value, str) else "1")
+
+
 class Plane(Table):
     """``[plane]``.
 
     Attributes
     ----------
-    file : str
-        The data file, relative to the survey file.
+    file : str or tuple of str
+        The data file or files, relative to the survey file.
     station : float
         Distance of the plane behind the trailing edge, m.
+    trailing_edge_x : float
+        Where the trailing edge stands along the project's x axis in a file of computed flow, m.
+    time : float or None
+        Instant of a case folder that holds several, in s or as the solver counts; None for the latest.
     primary : {"total_pressure", "velocity", "hole_pressures"}
         What was measured.
     axes : Axes
         The file's axes in the project's frame.
     """
 
-    file: Text = Field(description='file = "traverse.csv" (the data file, relative to the survey file)')
+    file: Annotated[str | tuple[str, ...], PlainValidator(_files)] = Field(
+        description='file = "traverse.csv" (the data file, relative to the survey file)'
+    )
     station: Length = Field(description='station = "0.90 m" (distance of the plane behind the trailing edge)')
     primary: Literal["total_pressure", "velocity", "hole_pressures"] = Field(
         description='primary = "total_pressure", "velocity" or "hole_pressures" (what was measured)'
@@ -228,6 +300,13 @@ class Plane(Table):
         description='[plane.columns] (where each variable stands, as u = { column = "U", unit = "m/s" })',
     )
     axes: Axes = Axes()
+    trailing_edge_x: Length = 0.0
+    time: Annotated[float, PlainValidator(_time)] | None = None
+
+    @property
+    def files(self) -> tuple[str, ...]:
+        """The data files."""
+        return (self.file,) if isinstance(self.file, str) else self.file
 
     @cached_property
     def columns(self) -> Mapping[str, Column]:
@@ -305,6 +384,9 @@ def check_positions(plane: Plane, *, coordinates: int) -> None:
     """
     names = set(plane.columns)
     across = [plane.axes.file_axis("y"), plane.axes.file_axis("z")]
+    if not names & set(POSITIONS):
+        # A mesh has positions of its own; where the file turns out to be none, its reader asks for them.
+        return
     cartesian = [name for name in across if name in names]
     if plane.polar:
         if coordinates == 1:

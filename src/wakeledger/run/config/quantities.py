@@ -304,7 +304,8 @@ Polygon = Annotated[Array, PlainValidator(lambda value: parse_shape(value, least
 Shapes = Annotated[tuple[Array, ...], PlainValidator(_shapes)]
 
 
-def _text(value: Any) -> str:
+def parse_text(value: Any) -> str:
+    """Text that is not empty."""
     if not isinstance(value, str):
         raise fail(f"{kind_of(value)} stands where text is needed", "write it in quotation marks")
     if not value.strip():
@@ -318,5 +319,5 @@ def _label(value: Any) -> str:
     return str(value)
 
 
-Text = Annotated[str, PlainValidator(_text)]
+Text = Annotated[str, PlainValidator(parse_text)]
 Label = Annotated[str, PlainValidator(_label)]
