@@ -17,6 +17,7 @@ import numpy as np
 
 from wakeledger.core.errors import DataError
 from wakeledger.ledger import encoding
+from wakeledger.ledger.contributions import Contributions
 from wakeledger.ledger.rows import BudgetLine, Check, Comparison, CrossCheck, Ledger, Row
 from wakeledger.ledger.tabular import rows_dataset
 from wakeledger.ledger.units import scalar
@@ -42,7 +43,10 @@ _RECORDS: tuple[tuple[str, type, str], ...] = (
 )
 
 #: Groups that hold a dataset and may be absent.
-_TABLES = ("wake_line", "vortices", "span")
+_TABLES = ("wake_line", "vortices", "span", "repeats")
+
+#: Group of what each error does to the rows.
+_CONTRIBUTIONS = "contributions"
 
 #: Group of the first probe calibration; further ones are numbered. Its attribute says which file it comes from.
 _CALIBRATION, _CALIBRATION_NAME = "calibration", "survey_name"
@@ -189,6 +193,8 @@ def _groups(ledger: Ledger) -> dict[str, xr.Dataset]:
         table = getattr(ledger, name)
         if table is not None:
             groups[name] = table
+    if ledger.contributions is not None:
+        groups[_CONTRIBUTIONS] = ledger.contributions.to_dataset()
     for number, (name, calibration) in enumerate(ledger.calibrations.items(), start=1):
         group = _CALIBRATION if number == 1 else f"{_CALIBRATION}_{number}"
         groups[group] = calibration.assign_attrs({_CALIBRATION_NAME: name})
@@ -207,6 +213,9 @@ def _ledger(root: xr.Dataset, source: Path) -> Ledger:
     for name in _MAPPINGS:
         tables[name] = json.loads(root.attrs[name])
     model = encoding.read_group(source, group="model")
+    contributions = None
+    if _CONTRIBUTIONS in present:
+        contributions = Contributions.from_dataset(encoding.read_group(source, group=_CONTRIBUTIONS))
     calibrations = [
         encoding.read_group(source, group=name)
         for name in sorted((name for name in present if name.startswith(_CALIBRATION)), key=_number)
@@ -223,6 +232,7 @@ def _ledger(root: xr.Dataset, source: Path) -> Ledger:
         reference={name: float(root[name]) for name in json.loads(root.attrs["reference_names"])},
         model={str(name): float(variable) for name, variable in model.data_vars.items()},
         calibrations={str(dataset.attrs.pop(_CALIBRATION_NAME)): dataset for dataset in calibrations},
+        contributions=contributions,
         **tables,
     )
 

@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     import xarray as xr
 
     from wakeledger.core.points import Points
+    from wakeledger.ledger.contributions import Contributions
 
 #: How an estimate or a compared value stands to the row.
 Verdict = Literal["agrees", "disagrees", "not_independent", "unknown"]
@@ -282,6 +283,10 @@ class Ledger:
         Sentences about the choices that were made.
     wake_line, vortices, span : Dataset or None
         The wake's trace, the identified vortices, the span loading, where found.
+    contributions : Contributions or None
+        What each error does to the rows, with its sign; None where no uncertainty is known.
+    repeats : Dataset or None
+        Of a ledger that combines several surveys: their rows, weights and scatter (`wakeledger.run.repeats`).
     calibrations : mapping of str to Dataset
         Calibrations of the probes whose hole pressures were reduced, whole, by the name the survey file gives them.
     inputs : mapping of str to str
@@ -313,6 +318,8 @@ class Ledger:
     wake_line: xr.Dataset | None = None
     vortices: xr.Dataset | None = None
     span: xr.Dataset | None = None
+    contributions: Contributions | None = None
+    repeats: xr.Dataset | None = None
     calibrations: Mapping[str, xr.Dataset] = field(default_factory=lambda: MappingProxyType({}))
     inputs: Mapping[str, str] = field(default_factory=_empty)
     provenance: Mapping[str, str] = field(default_factory=_empty)

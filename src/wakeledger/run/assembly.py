@@ -6,12 +6,15 @@ import math
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
 
+import numpy as np
+
 from wakeledger.confidence.budget import Budget
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sources import Source
 from wakeledger.core.errors import SurveyError
 from wakeledger.core.estimate import Estimate
 from wakeledger.core.names import ROWS
+from wakeledger.ledger.contributions import Contributions
 from wakeledger.ledger.crosscheck import check_estimate, compare
 from wakeledger.ledger.rows import BudgetLine, Comparison, CrossCheck, Row
 from wakeledger.run.config import Survey
@@ -273,3 +276,34 @@ def budget_lines(budget: Budget | None, names: Sequence[str]) -> tuple[BudgetLin
         for line in budget.of(name)
         if not (line.how == "numerical" and line.standard_uncertainty == 0)
     )
+
+
+def contributions(budget: Budget | None, names: Sequence[str]) -> Contributions | None:
+    """What each error does to some rows and their coefficients, for increments.
+
+    Parameters
+    ----------
+    budget : Budget or None
+        The budget of all outputs.
+    names : sequence of str
+        The rows wanted.
+
+    Returns
+    -------
+    Contributions or None
+        None where there is no budget, or no row.
+    """
+    if budget is None or budget.scatter is None or not names:
+        return None
+    at = np.array([[budget.rows.index(name) for name in named] for named in _outputs_of(names)])
+    components = tuple(
+        replace(one, linear=one.linear[at], curved=one.curved[at])
+        for one in budget.components
+        if np.any(one.linear[at]) or np.any(one.curved[at])
+    )
+    scatter = np.stack([budget.scatter[np.ix_(one, one)] for one in at])
+    return Contributions(tuple(names), components, scatter, np.full(at.shape, math.inf))
+
+
+def _outputs_of(names: Sequence[str]) -> tuple[list[str], list[str]]:
+    return list(names), [coefficient_of(name) for name in names]

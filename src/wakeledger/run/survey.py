@@ -30,6 +30,7 @@ from wakeledger.run.assembly import (
     NO_SOURCE,
     budget_lines,
     comparisons,
+    contributions,
     cross_check,
     ledger_row,
     made_unknown,
@@ -388,6 +389,7 @@ def _ledger(
     )
     rows = tuple(row for row in found if row is not None)
     names = [row.name for row in rows]
+    known = [row.name for row in rows if math.isfinite(row.standard_uncertainty)]
     covariance = np.full((len(names), len(names)), np.nan)
     if samples is not None:
         at = [OUTPUTS.index(name) for name in names]
@@ -402,7 +404,8 @@ def _ledger(
         survey_text=file.text,
         estimates=_crosschecks(prepared, rows, samples, reason),
         comparisons=comparisons(file, rows, _scales(prepared)),
-        budget=budget_lines(budget, [row.name for row in rows if math.isfinite(row.standard_uncertainty)]),
+        budget=budget_lines(budget, known),
+        contributions=contributions(budget, known),
         checks=checks,
         notes=prepared.notes,
         test=file.test.given(),

@@ -26,7 +26,15 @@ from wakeledger.ledger.rows import CrossCheck, Ledger, Row
 from wakeledger.physics.fields.traverse_window import TAIL
 from wakeledger.physics.methods.section_drag import SectionDrag, section_drag
 from wakeledger.run import tables
-from wakeledger.run.assembly import NO_SOURCE, budget_lines, comparisons, cross_check, ledger_row, require_rows
+from wakeledger.run.assembly import (
+    NO_SOURCE,
+    budget_lines,
+    comparisons,
+    contributions,
+    cross_check,
+    ledger_row,
+    require_rows,
+)
 from wakeledger.run.inputs import layouts, sources
 from wakeledger.run.load import SurveyInput, refuse_unsupported
 from wakeledger.run.outputs import estimate_of
@@ -354,6 +362,7 @@ def _ledger(
         estimates=_crosschecks(prepared, row, samples, why),
         comparisons=comparisons(file, (row,), {ROW: nominal.reference.dynamic_pressure * settings.chord}),
         budget=budget_lines(budget, (ROW,)),
+        contributions=contributions(budget, (ROW,)),
         checks=section_checks(nominal, prepared.facts),
         notes=prepared.notes,
         test=file.test.given(),
