@@ -11,11 +11,14 @@ from wakeledger.synthetic.losses import GaussianLosses, no_losses, sheet_losses,
 from wakeledger.synthetic.optimum import OptimumLoading, optimum_efficiency, optimum_loading
 from wakeledger.synthetic.recordings import Errors, Positions, Recording, grid_positions, record
 from wakeledger.synthetic.rollup import RolledUpWake, Sheet, roll_up, rolled_up_wing
+from wakeledger.synthetic.tunnel import EmptyTunnel, TunnelTruth, TunnelWake, root_bending_moment
 from wakeledger.synthetic.wakes import FlowState, SyntheticWake, Truth
+from wakeledger.synthetic.walls import RectangularDuct, RoundDuct
 
 __all__ = [
     "LOADINGS",
     "THIN_SHEET_EFFICIENCY",
+    "EmptyTunnel",
     "Errors",
     "FlowState",
     "GaussianElements",
@@ -24,10 +27,14 @@ __all__ = [
     "OptimumLoading",
     "Positions",
     "Recording",
+    "RectangularDuct",
     "RolledUpWake",
+    "RoundDuct",
     "Sheet",
     "SyntheticWake",
     "Truth",
+    "TunnelTruth",
+    "TunnelWake",
     "grid_positions",
     "mutual_drag",
     "no_losses",
@@ -36,6 +43,7 @@ __all__ = [
     "record",
     "roll_up",
     "rolled_up_wing",
+    "root_bending_moment",
     "shed",
     "sheet_losses",
     "straight_edge",

@@ -154,7 +154,7 @@ class SyntheticWake:
         u, v, w = (np.sum([part[k] for part in parts], axis=0) for k in range(3))
         return u, v, w
 
-    def _core_pressure(self, y: Array, z: Array) -> Array:
+    def core_pressure(self, y: Array, z: Array) -> Array:
         """Σ δp of the concentrated vortices, Pa."""
         pressure = np.zeros(np.broadcast(y, z).shape)
         if self.cores is None:
@@ -197,7 +197,7 @@ class SyntheticWake:
         disturbance, v, w = self._crossflow(y, z)
         loss = self.losses.loss(y, z)
         lossless = (ref.speed + disturbance) ** 2 + v**2 + w**2
-        pressure_step = self._core_pressure(y, z)
+        pressure_step = self.core_pressure(y, z)
         density = np.full(loss.shape, ref.density)
         if ref.compressible:
             kappa = (ref.gamma - 1) / ref.gamma
@@ -253,7 +253,7 @@ class SyntheticWake:
         The integrands are smooth and vanish at the window's edge, so the sums converge faster than any power.
         """
         ref = self.reference
-        grid = self._window(fraction)
+        grid = self.compact_window(fraction)
         y, z = grid.mesh()
         state, ustar, disturbance = self._parts(y, z)
         if ref.compressible:
@@ -267,8 +267,8 @@ class SyntheticWake:
             residual = -ref.density * ((ustar - ref.speed) ** 2 - disturbance**2) / 2
         return float(grid.integrate(profile)), float(grid.integrate(residual))
 
-    def _window(self, fraction: float) -> UniformGrid:
-        """Grid that holds everything the quadrature needs."""
+    def compact_window(self, fraction: float) -> UniformGrid:
+        """Grid that holds everything the quadrature needs, at a fraction of the smallest Gaussian's width."""
         sources = [(self.losses.y, self.losses.z, self.losses.width)] if self.losses.strength.any() else []
         if self.cores is not None:
             sources.append((self.cores.y, self.cores.z, self.cores.core))
