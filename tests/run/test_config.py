@@ -16,7 +16,11 @@ SURVEYS = pathlib.Path(__file__).parent / "surveys"
 GOOD = (SURVEYS / "wing.toml").read_text(encoding="utf-8")
 SECTION = (SURVEYS / "section.toml").read_text(encoding="utf-8")
 PROBE = '[probe]\ncalibration = "probe.toml"\ntip_diameter = "3.2 mm"\nlag = "40 ms"\nbacklash = "estimate"\n'
-PLAN = '[plan]\nspacing = ["5 mm", "10 mm"]\nnoise = "0.1 m/s"\nrepeats = [1, 2]\nloading = "elliptic"\n'
+PLAN = (
+    '[plan]\nspacing = ["5 mm", "10 mm"]\nwindow = "0.1 m"\nnoise = "0.1 m/s"\ntotal_pressure_noise = "1 Pa"\n'
+    'repeats = [1, 2]\nloading = "elliptic"\nlift_coefficient = 0.5\ntip_core = "20 mm"\nwake_width = "20 mm"\n'
+    "profile_drag_coefficient = 0.01\n"
+)
 BODY = '[[body]]\nname = "tail"\nregion = [["-0.3 m", "0.1 m"], ["0.3 m", "0.3 m"]]\nx = "0.8 m"\n'
 LOADING = '[loading]\ntrailing_edge = [["-0.6 m", "0.0 m"], ["0.6 m", "0.0 m"]]\n'
 WALLS = 'kind = "closed_walls"\ny = ["-1.2 m", "1.2 m"]\nz = ["-0.9 m", "0.9 m"]'
@@ -194,7 +198,6 @@ def test_flight_inputs():
         (((FREE_AIR, 'kind = "open_jet"\nsection = "circle"\ndiameter = "2 m"'),), "[boundary] kind"),
         ((BODY,), "[[body]]"),
         ((LOADING,), "[loading]"),
-        ((PLAN,), "[plan]"),
         ((("row = {", 'tube = { column = "tube" }\nrow = {'),), "[plane.columns] tube"),
         ((("row = {", 'reference_dynamic_pressure = { column = "q", unit = "Pa" }\nrow = {'),),
          "[plane.columns] reference_dynamic_pressure"),

@@ -13,6 +13,7 @@ from pydantic_core import PydanticCustomError
 
 from wakeledger.core.errors import SurveyError
 from wakeledger.run.config.errors import survey_error
+from wakeledger.run.config.plan import PlanTable
 from wakeledger.run.config.plane import Plane, check_positions, check_primary
 from wakeledger.run.config.quantities import Label, Table, below, fail, one_or_more_tables, tables
 from wakeledger.run.config.rake import check_rake, check_static, is_directed, is_rake
@@ -22,7 +23,6 @@ from wakeledger.run.config.tables import (
     BoundaryTable,
     EmptyTunnelTable,
     LoadingTable,
-    PlanTable,
     ProbeTable,
     SectionTable,
     TestTable,
@@ -221,7 +221,6 @@ class Survey(Table):
             add(True, "[boundary] kind", f'"{self.boundary.kind}" is not computed yet; only "free_air" is')
         add(self.body, "[[body]]", "bodies are not told apart yet; leave it out")
         add(self.loading, "[loading]", "the least induced drag of a trailing edge is not computed yet; leave it out")
-        add(self.plan, "[plan]", "surveys are not planned yet; leave it out")
         for source in self.uncertainty.source:
             later = [name for name in source.applies_to if name.split(".")[0] in ("probe", "calibration")]
             add(
@@ -259,6 +258,8 @@ class Survey(Table):
             kept = [name for name in plane.columns if name.startswith(idle_here)]
             if kept:
                 found.append(f"[plane.columns] {', '.join(kept)}: kept in the archive, and no row uses them")
+        if self.plan is not None:
+            found.append("[plan]: kept in the archive; only the planning of surveys uses it")
         # With hole pressures the calibration and the corrections have sources of their own; their notes say what lacks.
         if not self.uncertainty.source and self.plane.primary != "hole_pressures":
             found.append("[[uncertainty.source]]: there is none, so the uncertainty of the measurement is unknown")
