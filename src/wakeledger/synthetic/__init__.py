@@ -5,12 +5,14 @@ The truth shares no code with what it judges: this room imports only the vocabul
 
 from wakeledger.synthetic.aircraft import wing_and_tail_wake, wing_wake
 from wakeledger.synthetic.elements import GaussianElements, mutual_drag, vortex_pair
+from wakeledger.synthetic.expanded_wake import ExpandedWake
 from wakeledger.synthetic.lifting_line import LiftingLine
 from wakeledger.synthetic.loadings import LOADINGS, THIN_SHEET_EFFICIENCY, shed, straight_edge, thin_sheet_limit, v_edge
 from wakeledger.synthetic.losses import GaussianLosses, no_losses, sheet_losses, tip_cores
 from wakeledger.synthetic.optimum import OptimumLoading, optimum_efficiency, optimum_loading
 from wakeledger.synthetic.recordings import Errors, Positions, Recording, grid_positions, record
 from wakeledger.synthetic.rollup import RolledUpWake, Sheet, roll_up, rolled_up_wing
+from wakeledger.synthetic.shock_losses import ShockedWake, normal_shock_entropy, stream_tube_wave_drag
 from wakeledger.synthetic.tunnel import EmptyTunnel, TunnelTruth, TunnelWake, root_bending_moment
 from wakeledger.synthetic.wakes import FlowState, SyntheticWake, Truth
 from wakeledger.synthetic.walls import RectangularDuct, RoundDuct
@@ -20,6 +22,7 @@ __all__ = [
     "THIN_SHEET_EFFICIENCY",
     "EmptyTunnel",
     "Errors",
+    "ExpandedWake",
     "FlowState",
     "GaussianElements",
     "GaussianLosses",
@@ -31,6 +34,7 @@ __all__ = [
     "RolledUpWake",
     "RoundDuct",
     "Sheet",
+    "ShockedWake",
     "SyntheticWake",
     "Truth",
     "TunnelTruth",
@@ -38,6 +42,7 @@ __all__ = [
     "grid_positions",
     "mutual_drag",
     "no_losses",
+    "normal_shock_entropy",
     "optimum_efficiency",
     "optimum_loading",
     "record",
@@ -47,6 +52,7 @@ __all__ = [
     "shed",
     "sheet_losses",
     "straight_edge",
+    "stream_tube_wave_drag",
     "thin_sheet_limit",
     "tip_cores",
     "v_edge",

@@ -41,15 +41,21 @@ def loss_free_axial_velocity(flow: Flow, reference: Reference) -> Array:
         u*, m/s; the stream's speed where it has no real value, which turns Betz's integrand into the plain momentum
         balance there instead of dropping the point.
     """
+    square = loss_free_axial_velocity_squared(flow, reference)
+    return np.where(square > 0, np.sqrt(np.maximum(square, 0)), reference.speed)
+
+
+def loss_free_axial_velocity_squared(flow: Flow, reference: Reference) -> Array:
+    """Square of u* of `loss_free_axial_velocity`, m²/s², shape (..., nz, ny); not positive where u* is not real."""
     crossflow = flow.v**2 + flow.w**2
     if reference.compressible:
         heat = reference.gamma / (reference.gamma - 1) * reference.gas_constant
         exponent = (reference.gamma - 1) / reference.gamma
         enthalpy = heat * reference.temperature * (flow.static_pressure / reference.static_pressure) ** exponent
-        square = 2 * (reference.total_enthalpy - enthalpy) - crossflow
-    else:
-        square = 2 * (reference.total_pressure - flow.static_pressure) / reference.density - crossflow
-    return np.where(square > 0, np.sqrt(np.maximum(square, 0)), reference.speed)
+        square: Array = 2 * (reference.total_enthalpy - enthalpy) - crossflow
+        return square
+    slow: Array = 2 * (reference.total_pressure - flow.static_pressure) / reference.density - crossflow
+    return slow
 
 
 def profile_integrand(flow: Flow, reference: Reference, loss_free: Array) -> Array:
