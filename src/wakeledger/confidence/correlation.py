@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,7 +16,15 @@ from wakeledger.core.grid import Array
 _NODE_SPACING = 0.7
 _REACH = 3.0
 
-Expansion = Callable[[Array], Array]
+
+class Expansion(Protocol):
+    """A linear map from independent variables to errors of the points."""
+
+    def __call__(self, latents: Array) -> Array:
+        """Errors, (draws, n), from variables, (draws, latents)."""
+
+    def transposed(self, weights: Array) -> Array:
+        """Weights of the variables, (k, latents), from weights of the errors, (k, n)."""
 
 
 def squared_exponential(x: Array, length: float) -> Array:
@@ -73,15 +82,39 @@ def _tensor_field(
 ) -> tuple[int, Expansion]:
     root_a = _square_root(squared_exponential(a, length))
     root_b = _square_root(squared_exponential(b, length))
-    rank_a, rank_b = root_a.shape[1], root_b.shape[1]
-    pick = a_index * b.size + b_index
+    return root_a.shape[1] * root_b.shape[1], _TensorField(root_a, root_b, a_index * b.size + b_index)
 
-    def expand(latents: Array) -> Array:
-        field = root_a @ latents.reshape(-1, rank_a, rank_b) @ root_b.T
-        result: Array = field.reshape(len(latents), -1)[:, pick]
+
+@dataclass(frozen=True, eq=False)
+class _TensorField:
+    root_a: Array
+    root_b: Array
+    pick: NDArray[np.int64]
+
+    def __call__(self, latents: Array) -> Array:
+        field = self.root_a @ latents.reshape(-1, self.root_a.shape[1], self.root_b.shape[1]) @ self.root_b.T
+        result: Array = field.reshape(len(latents), -1)[:, self.pick]
         return result
 
-    return rank_a * rank_b, expand
+    def transposed(self, weights: Array) -> Array:
+        shape = len(self.root_a), len(self.root_b)
+        # Points that share a place share its error, so their weights add.
+        places = np.stack([np.bincount(self.pick, row, minlength=shape[0] * shape[1]) for row in weights])
+        result: Array = self.root_a.T @ places.reshape(-1, *shape) @ self.root_b
+        return result.reshape(len(weights), -1)
+
+
+@dataclass(frozen=True, eq=False)
+class _ScatteredField:
+    matrix: Any
+
+    def __call__(self, latents: Array) -> Array:
+        result: Array = (self.matrix @ latents.T).T
+        return result
+
+    def transposed(self, weights: Array) -> Array:
+        result: Array = (self.matrix.T @ weights.T).T
+        return result
 
 
 def _square_root(correlation: Array) -> Array:
@@ -108,9 +141,4 @@ def _scattered_field(positions: Array, length: float) -> tuple[int, Expansion]:
     unique, column = np.unique(key, return_inverse=True)
     pointer = np.arange(0, weight.size + 1, weight.shape[1])
     matrix = sparse.csr_array((weight.ravel(), column.ravel(), pointer), shape=(len(positions), unique.size))
-
-    def expand(latents: Array) -> Array:
-        result: Array = (matrix @ latents.T).T
-        return result
-
-    return int(unique.size), expand
+    return int(unique.size), _ScatteredField(matrix)

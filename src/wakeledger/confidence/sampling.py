@@ -129,6 +129,11 @@ class _InputErrors:
             field = self.expand(latents) * self.scale
         return field[:, 0] if self.is_scalar else field
 
+    def weights(self, slopes: Array) -> Array:
+        """Effects of the unit variables, (m, latents), from derivatives by the input, (m, n) or (m,)."""
+        effects: Array = (slopes[:, None] if self.is_scalar else slopes) * self.scale
+        return effects if self.expand is None else self.expand.transposed(effects)
+
 
 class SourceErrors:
     """The errors of one source on all its inputs.
@@ -160,10 +165,10 @@ class SourceErrors:
         scale[~np.isfinite(nominal) | ~np.isfinite(scale)] = 0.0
         latents, expand = layout.size, None
         if source.effect == "systematic":
-            latents, expand = 1, _repeat(layout.size)
+            latents, expand = 1, _Repeated(layout.size)
         elif source.effect == "per_row" and layout.row is not None:
             rows, inverse = np.unique(layout.row, return_inverse=True)
-            latents, expand = rows.size, _gather(inverse)
+            latents, expand = rows.size, _ByRow(inverse, rows.size)
         elif source.correlation_length is not None and layout.positions is not None:
             latents, expand = correlated_field(layout.positions, source.correlation_length)
         return _InputErrors(name, f"{self._key}|{name}", latents, scale, expand, layout.is_scalar)
@@ -209,6 +214,22 @@ class SourceErrors:
             In the order of `deviation`.
         """
         return np.concatenate(self._latents(start, stop), axis=1) / self.source.spread
+
+    def effects(self, slopes: Mapping[str, Array]) -> dict[str, Array]:
+        """What one standard deviation of each independent variable does to outputs, to first order.
+
+        Parameters
+        ----------
+        slopes : mapping of str to ndarray, shape (m, n), or (m,) for single numbers
+            Derivatives of the m outputs by every element of the source's inputs.
+
+        Returns
+        -------
+        dict of str to ndarray, shape (m, latents)
+            By input, with signs: the transpose of the map from variables to errors. The covariance of the outputs is
+            the sum of its products with itself.
+        """
+        return {one.name: self.source.spread * one.weights(slopes[one.name]) for one in self._inputs}
 
     @property
     def names(self) -> tuple[tuple[str, int], ...]:
@@ -262,12 +283,32 @@ class SourceErrors:
         return errors
 
 
-def _repeat(size: int) -> Expansion:
-    return lambda latents: np.broadcast_to(latents, (len(latents), size))
+@dataclass(frozen=True)
+class _Repeated:
+    """One variable for all points."""
+
+    size: int
+
+    def __call__(self, latents: Array) -> Array:
+        return np.broadcast_to(latents, (len(latents), self.size))
+
+    def transposed(self, weights: Array) -> Array:
+        result: Array = weights.sum(axis=1, keepdims=True)
+        return result
 
 
-def _gather(index: NDArray[np.int64]) -> Expansion:
-    return lambda latents: latents[:, index]
+@dataclass(frozen=True, eq=False)
+class _ByRow:
+    """One variable for each traverse row."""
+
+    index: NDArray[np.int64]
+    rows: int
+
+    def __call__(self, latents: Array) -> Array:
+        return latents[:, self.index]
+
+    def transposed(self, weights: Array) -> Array:
+        return np.stack([np.bincount(self.index, row, minlength=self.rows) for row in weights])
 
 
 def doubt(rng: np.random.Generator, shape: tuple[int, ...], distribution: str, nu: float) -> Array:

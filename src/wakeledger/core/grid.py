@@ -89,6 +89,11 @@ class UniformGrid:
         """Area between the outermost points, m²."""
         return self.dy * (self.ny - 1) * self.dz * (self.nz - 1)
 
+    @property
+    def weights(self) -> Array:
+        """Weights of `integrate`, m², shape (nz, ny)."""
+        return np.outer(_gregory(self.nz) * self.dz, _gregory(self.ny) * self.dy)
+
     def mesh(self) -> tuple[Array, Array]:
         """Coordinates of every point, m, two arrays of shape (nz, ny): y, z."""
         yy, zz = np.meshgrid(self.y, self.z)

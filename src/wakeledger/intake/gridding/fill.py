@@ -61,6 +61,19 @@ class GapFill:
             solved = self._factor.solve(right).reshape((self.missing.size, *known.shape[1:]))
             fields[..., self.missing] = np.moveaxis(solved, 0, -1)
 
+    def back(self, weights: Array) -> None:
+        """Move weights of the missing cells, in place, to the measured cells they depend on: the transpose of `into`.
+
+        Parameters
+        ----------
+        weights : ndarray, shape (k, nz * ny)
+            Weights of flat fields; those of missing cells become zero.
+        """
+        if self.missing.size:
+            solved = self._factor.solve(np.ascontiguousarray(weights[:, self.missing].T), trans="T")
+            weights[:, self.used] += (self._coupling.T @ solved).T
+            weights[:, self.missing] = 0.0
+
 
 def distance_to_data(measured: NDArray[np.bool_]) -> Array:
     """Distance of each cell to the nearest measured one, in cells.

@@ -72,6 +72,11 @@ class Mirror:
             own, twin = np.where(self.on_plane, 0.0, values), -values
         return np.concatenate([own, twin, np.full((*values.shape[:-1], self.spare), np.nan)], axis=-1)
 
+    def transposed(self, weights: Array, *, odd: bool = False) -> Array:
+        """Weights of the points of the half, (..., n), from those of the places of the whole, (..., 2 n + spare)."""
+        own, twin = weights[..., : self.n], weights[..., self.n : 2 * self.n]
+        return np.where(self.on_plane, 0.0, own) - twin if odd else own + twin
+
     def points(self, chosen: NDArray[np.bool_]) -> NDArray[np.bool_]:
         """Chosen points of the half, shape (n,), and their twins, shape (2 n + spare,)."""
         return np.concatenate([chosen, chosen & ~self.on_plane, np.zeros(self.spare, dtype=bool)])

@@ -20,6 +20,9 @@ class Scheme(Protocol):
     def fields(self, values: Array) -> Array:
         """Grid values of shape (draws, n) to (draws, nz, ny)."""
 
+    def transposed(self, weights: Array) -> Array:
+        """Weights of the points, (k, n), from weights of the cells, (k, nz, ny): the transpose of `fields`."""
+
     def operators(self) -> tuple[Array, Array] | None:
         """Dense operators along z and y, None where gridding does not separate."""
 
@@ -98,6 +101,34 @@ class Gridding:
         flat = array.reshape(-1, self.n)
         fields = self.scheme.fields(flat if self.mirror is None else self.mirror.values(flat, odd=odd))
         return fields.reshape(*array.shape[:-1], *self.grid.shape)
+
+    def transposed(self, weights: Array, *, odd: bool = False) -> Array:
+        """How a weighted sum over the grid depends on the values at the points: the transpose of `apply`.
+
+        Parameters
+        ----------
+        weights : ndarray, shape (..., nz, ny)
+            Weight of each cell.
+        odd : bool, optional
+            As in `apply`.
+
+        Returns
+        -------
+        ndarray, shape (..., n)
+            Σ weights apply(values) = Σ transposed(weights) values for every set of values; zero at unusable points.
+
+        Raises
+        ------
+        ValueError
+            If the last axes are not the grid's.
+        """
+        array = np.asarray(weights, dtype=np.float64)
+        if array.shape[-2:] != self.grid.shape:
+            raise ValueError(f"weights have shape {array.shape}, the last axes must be the grid's {self.grid.shape}")
+        back = self.scheme.transposed(array.reshape(-1, *self.grid.shape))
+        if self.mirror is not None:
+            back = self.mirror.transposed(back, odd=odd)
+        return back.reshape(*array.shape[:-2], self.n)
 
     def is_odd(self, component: str) -> bool:
         """Whether a velocity component, "u", "v" or "w", is the one normal to the reflection plane."""

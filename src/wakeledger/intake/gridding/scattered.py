@@ -63,6 +63,12 @@ class ScatteredScheme:
         self._gaps.into(flat)
         return flat.reshape(-1, *self.grid.shape)
 
+    def transposed(self, weights: Array) -> Array:
+        """Weights of the points, (k, n), from weights of the cells, (k, nz, ny)."""
+        flat = weights.reshape(weights.shape[0], -1).copy()
+        self._gaps.back(flat)
+        return np.asarray((self._matrix.T @ np.ascontiguousarray(flat[:, self._inside].T)).T)
+
     def operators(self) -> None:
         """Scattered gridding does not separate."""
         return

@@ -69,6 +69,22 @@ class TensorScheme:
             fields = self.wz @ fields
         return fields
 
+    def transposed(self, weights: Array) -> Array:
+        """Weights of the points, (k, n), from weights of the cells, (k, nz, ny)."""
+        if self.wz is not None:
+            weights = self.wz.T @ weights
+        if self.wy is not None:
+            weights = weights @ self.wy
+        raw = weights.reshape(weights.shape[0], -1).copy()
+        self._gaps.back(raw)
+        result = np.zeros((raw.shape[0], self.usable.size))
+        single = np.ones(raw.shape[1], dtype=bool)
+        single[self._gaps.missing] = single[self._repeated] = False
+        result[:, self._gather[single]] = raw[:, single]
+        if self._repeated.size:
+            result += (self._mean.T @ raw[:, self._repeated].T).T
+        return result
+
     def operators(self) -> tuple[Array, Array]:
         """Dense operators along z and y, identities for kept axes."""
         wz = np.eye(self.lattice.z.size) if self.wz is None else self.wz

@@ -30,15 +30,24 @@ class CutScheme:
         The scheme that grids the points.
     rows, columns : slice
         The rectangle.
+    shape : (int, int)
+        Shape of the whole grid.
     """
 
     whole: Scheme
     rows: slice
     columns: slice
+    shape: tuple[int, int]
 
     def fields(self, values: Array) -> Array:
         """Grid values of shape (draws, n) to (draws, nz, ny)."""
         return self.whole.fields(values)[:, self.rows, self.columns]
+
+    def transposed(self, weights: Array) -> Array:
+        """Weights of the points, (k, n), from weights of the cells, (k, nz, ny)."""
+        whole = np.zeros((weights.shape[0], *self.shape))
+        whole[:, self.rows, self.columns] = weights
+        return self.whole.transposed(whole)
 
     def operators(self) -> tuple[Array, Array] | None:
         """Dense operators along z and y, None where gridding does not separate."""
@@ -97,7 +106,7 @@ def covered_window(gridding: Gridding) -> Gridding:
         flag=gridding.flag[rows, columns],
         filled=filled,
         filled_fraction=float(filled.mean()),
-        scheme=CutScheme(gridding.scheme, rows, columns),
+        scheme=CutScheme(gridding.scheme, rows, columns, gridding.grid.shape),
     )
 
 
