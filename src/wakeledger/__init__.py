@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     from wakeledger.physics.fields.boundary import Circle, ClosedWalls, FreeAir, OpenJet, Polygon, Rectangle
     from wakeledger.physics.fields.flow import find_wake
     from wakeledger.physics.fields.wall_correction import wall_stream_function
+    from wakeledger.run.increment import increment
     from wakeledger.run.load import load as read_survey
     from wakeledger.run.survey import reduce
     from wakeledger.stream.reference import Reference
@@ -41,6 +42,7 @@ _HOMES = {
     "open_ledger": ("wakeledger.ledger.archive", "open_archive"),
     "Ledger": ("wakeledger.ledger.rows", "Ledger"),
     "find_wake": ("wakeledger.physics.fields.flow", "find_wake"),
+    "increment": ("wakeledger.run.increment", "increment"),
     "methods": ("wakeledger.physics.methods", None),
     "read_survey": ("wakeledger.run.load", "load"),
     "wall_stream_function": ("wakeledger.physics.fields.wall_correction", "wall_stream_function"),
@@ -59,6 +61,7 @@ __all__ = [
     "Rectangle",
     "Reference",
     "find_wake",
+    "increment",
     "methods",
     "open_ledger",
     "plane",

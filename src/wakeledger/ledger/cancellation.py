@@ -1,0 +1,208 @@
+"""The difference of two ledgers' contributions: errors that both have in common cancel as far as they act alike."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Hashable, Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from wakeledger.confidence.components import NUMERICAL, Component, half_width
+from wakeledger.core.errors import InputError
+from wakeledger.core.grid import Array
+from wakeledger.ledger.contributions import Contributions
+
+#: What the budget of an increment calls the errors that are not followed one by one.
+SCATTER = "errors of single points or rows, and interaction"
+
+
+@dataclass(frozen=True)
+class Cancelled:
+    """One source that both ledgers share; arrays of shape (2, m), over value and coefficient and the rows.
+
+    Attributes
+    ----------
+    shared_id : str
+        The identity.
+    source_a, source_b : str
+        What the two ledgers call it.
+    in_a, in_b, left : ndarray
+        Standard uncertainty from it in A, in B, and in the difference.
+    """
+
+    shared_id: str
+    source_a: str
+    source_b: str
+    in_a: Array
+    in_b: Array
+    left: Array
+
+
+@dataclass(frozen=True)
+class Difference:
+    """Contributions to B - A.
+
+    Attributes
+    ----------
+    rows : tuple of str
+        The rows.
+    components : tuple of Component
+        Independent errors of the difference; the source's name says whose it is.
+    groups : tuple of hashable
+        Which source each belongs to.
+    scatters : tuple of (str, ndarray, ndarray)
+        For each ledger what it is, its covariance (2, m, m) and its degrees of freedom (2, m).
+    cancelled : tuple of Cancelled
+        The sources that both share.
+    """
+
+    rows: tuple[str, ...]
+    components: tuple[Component, ...]
+    groups: tuple[Hashable, ...]
+    scatters: tuple[tuple[str, Array, Array], ...]
+    cancelled: tuple[Cancelled, ...]
+
+    @property
+    def covariance(self) -> Array:
+        """Covariance of the differences, shape (2, m, m)."""
+        total = sum((covariance for _, covariance, _ in self.scatters), np.zeros((2, len(self.rows), len(self.rows))))
+        return Contributions(self.rows, self.components, total, np.full((2, len(self.rows)), math.inf)).covariance
+
+    @property
+    def by_source(self) -> dict[str, Array]:
+        """Variance of each difference by source, shape (2, m) each."""
+        found: dict[str, Array] = {}
+        for one in self.components:
+            found[one.source] = found.get(one.source, 0.0) + one.variance
+        for name, covariance, _ in self.scatters:
+            found[name] = np.einsum("qrr->qr", covariance).copy()
+        return found
+
+    @property
+    def degrees_of_freedom(self) -> Array:
+        """Effective degrees of freedom by Welch and Satterthwaite (GUM G.2b), shape (2, m)."""
+        variances: dict[Hashable, Array] = {}
+        freedom: dict[Hashable, float] = {}
+        for one, group in zip(self.components, self.groups, strict=True):
+            variances[group] = variances.get(group, 0.0) + one.variance
+            freedom[group] = one.degrees_of_freedom
+        shape = (2, len(self.rows))
+        loss = np.zeros(shape)
+        for group, variance in variances.items():
+            loss = loss + variance**2 / freedom[group]
+        for _, covariance, nu in self.scatters:
+            loss = loss + np.einsum("qrr->qr", covariance) ** 2 / nu
+        total = np.einsum("qrr->qr", self.covariance)
+        result: Array = np.divide(total**2, loss, out=np.full(shape, math.inf), where=loss > 0)
+        return result
+
+    def half_width(self) -> Array:
+        """Half the length of the 95 % interval of each difference, shape (2, m)."""
+        scatters = [(np.sqrt(np.einsum("qrr->qr", covariance)), nu) for _, covariance, nu in self.scatters]
+        return half_width(self.components, self.groups, scatters)
+
+
+def opaque(rows: Sequence[str], uncertainty: Array, degrees_of_freedom: Array) -> Contributions:
+    """Contributions of a ledger of which only the totals are known: nothing in it can cancel.
+
+    Parameters
+    ----------
+    rows : sequence of str
+        The rows.
+    uncertainty, degrees_of_freedom : ndarray, shape (2, m)
+        Of values and coefficients.
+
+    Returns
+    -------
+    Contributions
+    """
+    scatter = np.zeros((2, len(rows), len(rows)))
+    diagonal = np.arange(len(rows))
+    scatter[:, diagonal, diagonal] = uncertainty**2
+    return Contributions(tuple(rows), (), scatter, degrees_of_freedom)
+
+
+def subtract(a: Contributions, b: Contributions) -> Difference:
+    """Contributions to B - A.
+
+    Parameters
+    ----------
+    a, b : Contributions
+        Of the same rows.
+
+    Returns
+    -------
+    Difference
+
+    Raises
+    ------
+    InputError
+        If both have an error in common, but not with the same distribution or degrees of freedom.
+
+    Notes
+    -----
+    Errors with the same shared identity, input and number are one error ε: it contributes (a_B - a_A) ε +
+    (b_B - b_A)(ε² - 1), with the signed effects a and b of first and second order in each ledger. All others are
+    independent and contribute their own effect.
+    """
+    own_a, own_b = _by_key(a), _by_key(b)
+    components: list[Component] = []
+    groups: list[Hashable] = []
+    for key, one in own_b.items():
+        other = own_a.get(key)
+        if other is None:
+            continue
+        if (one.distribution, one.degrees_of_freedom) != (other.distribution, other.degrees_of_freedom):
+            raise InputError(
+                f"shared_id {key[0]!r} has a {other.distribution} distribution with {other.degrees_of_freedom:g} "
+                f"degrees of freedom in A, and a {one.distribution} one with {one.degrees_of_freedom:g} in B",
+                remedy="one error has one distribution; correct a survey file, or give two identities",
+            )
+        name = one.source if one.source == other.source else f"{other.source} / {one.source}"
+        components.append(
+            replace(one, source=f"{name} (left)", linear=one.linear - other.linear, curved=one.curved - other.curved)
+        )
+        groups.append(("shared", key[0]))
+    common = set(own_a) & set(own_b)
+    for side, given, own in (("A", a, own_a), ("B", b, own_b)):
+        alone = [one for one in given.components if one.key is None or one.kind == NUMERICAL]
+        for one in (*(own[key] for key in own if key not in common), *alone):
+            components.append(replace(one, source=f"{one.source} ({side})"))
+            groups.append(("shared", one.shared_id) if one.shared_id else (side, one.kind, one.source))
+    scatters = tuple(
+        (f"{SCATTER} ({side})", given.scatter, given.scatter_degrees_of_freedom) for side, given in (("A", a), ("B", b))
+    )
+    return Difference(a.rows, tuple(components), tuple(groups), scatters, _cancelled(own_a, own_b))
+
+
+def _by_key(given: Contributions) -> dict[tuple[str, str, int], Component]:
+    """Shared errors by what tells them; those that come twice in one ledger are one error."""
+    found: dict[tuple[str, str, int], Component] = {}
+    for one in given.components:
+        if one.key is None or one.kind == NUMERICAL:
+            continue
+        twin = found.get(one.key)
+        found[one.key] = (
+            one if twin is None else replace(twin, linear=twin.linear + one.linear, curved=twin.curved + one.curved)
+        )
+    return found
+
+
+def _cancelled(
+    a: dict[tuple[str, str, int], Component], b: dict[tuple[str, str, int], Component]
+) -> tuple[Cancelled, ...]:
+    """What the shared sources came to, source by source; errors that only one ledger has are among what is left."""
+    found = []
+    for identity in dict.fromkeys(key[0] for key in b if key in a):
+        ours = [key for key in {**a, **b} if key[0] == identity]
+        one = next(key for key in b if key in a and key[0] == identity)
+        nothing = replace(b[one], linear=0 * b[one].linear, curved=0 * b[one].curved)
+        sums = np.zeros((3, *b[one].linear.shape))
+        for key in ours:
+            x, y = a.get(key, nothing), b.get(key, nothing)
+            sums[0] += x.variance
+            sums[1] += y.variance
+            sums[2] += replace(y, linear=y.linear - x.linear, curved=y.curved - x.curved).variance
+        found.append(Cancelled(identity, a[one].source, b[one].source, *np.sqrt(sums)))
+    return tuple(found)

@@ -1,0 +1,119 @@
+"""The difference of two planes on a common grid."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.interpolate import RectBivariateSpline
+
+from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.core.plane import grid_of
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+    from wakeledger.ledger.rows import Ledger
+
+#: Grids whose places differ by less than this share of a spacing are the same.
+_SAME = 1e-6
+
+#: Fields of the difference: name, variable of the plane, scalar of the stream it is divided by, unit, meaning.
+_FIELDS = (
+    ("total_pressure_loss", "total_pressure_loss", "dynamic_pressure", "1", "total-pressure loss over q"),
+    ("axial_vorticity", "axial_vorticity", "speed", "m-1", "axial vorticity over U"),
+    ("v", "v", "speed", "1", "velocity to starboard over U"),
+    ("w", "w", "speed", "1", "upward velocity over U"),
+)
+
+
+def plane_difference(a: Ledger, b: Ledger) -> tuple[xr.Dataset | None, str]:
+    """Plane of B minus plane of A, each divided by its own stream.
+
+    Parameters
+    ----------
+    a, b : Ledger
+        The ledgers.
+
+    Returns
+    -------
+    dataset : Dataset or None
+        Dimensions (z, y): differences of total-pressure loss over q, axial vorticity and crossflow over U, the two wake
+        regions and both planes' flags; None where there is no common window.
+    note : str
+        What was done, or why there is none.
+
+    Notes
+    -----
+    Along each axis the places are those of the coarser plane inside both windows; a field of the other plane is brought
+    there by a bicubic spline, wake regions and flags by their nearest place.
+    """
+    import xarray as xr
+
+    if min(*a.plane["y"].shape, *a.plane["z"].shape, *b.plane["y"].shape, *b.plane["z"].shape) < 2:
+        return None, "Line traverses have no difference of planes."
+    grids = grid_of(a.plane), grid_of(b.plane)
+    same = _same(grids[0].y, grids[1].y, grids[0].dy) and _same(grids[0].z, grids[1].z, grids[0].dz)
+    y, z = (grids[0].y, grids[0].z) if same else (_common(*grids, "y"), _common(*grids, "z"))
+    if y.size < 2 or z.size < 2:
+        return None, "The two planes have no window in common, so there is no difference of planes."
+    dataset = xr.Dataset(
+        coords={
+            "y": ("y", y, {"units": "m", "long_name": "distance to starboard"}),
+            "z": ("z", z, {"units": "m", "long_name": "height, positive up"}),
+        }
+    )
+    for name, variable, scale, unit, meaning in _FIELDS:
+        if not (variable in a.plane and variable in b.plane and scale in a.reference and scale in b.reference):
+            continue
+        fields = [
+            _brought(one.plane[variable].values, grid, y, z) / one.reference[scale]
+            for one, grid in zip((a, b), grids, strict=True)
+        ]
+        dataset[name] = (("z", "y"), fields[1] - fields[0], {"units": unit, "long_name": f"{meaning}, B minus A"})
+    for side, one, grid in (("a", a, grids[0]), ("b", b, grids[1])):
+        for name in ("wake_mask", "flag"):
+            if name in one.plane:
+                dataset[f"{name}_{side}"] = (
+                    ("z", "y"), _nearest(one.plane[name].values, grid, y, z),
+                    {"units": "1", "long_name": f"{name.replace('_', ' ')} of {side.upper()}"},
+                )  # fmt: skip
+    steps = f"{1e3 * (y[1] - y[0]):.3g} mm x {1e3 * (z[1] - z[0]):.3g} mm"
+    window = f"y {y[0]:.4g} to {y[-1]:.4g} m, z {z[0]:.4g} to {z[-1]:.4g} m"
+    how = (
+        "Both planes have the same places; their difference was taken as they stand"
+        if same
+        else "For the difference of planes the finer one was brought onto the places of the coarser one, inside both "
+        "windows, by bicubic splines"
+    )
+    return dataset, f"{how} ({y.size} x {z.size} places, {steps}, {window})."
+
+
+def _same(x: Array, y: Array, step: float) -> bool:
+    return x.size == y.size and bool(np.abs(x - y).max() < _SAME * step)
+
+
+def _common(a: UniformGrid, b: UniformGrid, axis: str) -> Array:
+    """Places of the coarser grid along an axis that lie inside both windows."""
+    coarse, fine = sorted((a, b), key=lambda grid: -getattr(grid, f"d{axis}"))
+    places: Array = getattr(coarse, axis)
+    other, slack = getattr(fine, axis), _SAME * getattr(fine, f"d{axis}")
+    inside: Array = places[(places >= other[0] - slack) & (places <= other[-1] + slack)]
+    return inside
+
+
+def _brought(field: NDArray[np.generic], grid: UniformGrid, y: Array, z: Array) -> Array:
+    values = np.asarray(field, dtype=float)
+    if values.shape == (z.size, y.size) and _same(grid.y, y, grid.dy) and _same(grid.z, z, grid.dz):
+        return values
+    orders = min(3, grid.nz - 1), min(3, grid.ny - 1)
+    spline = RectBivariateSpline(grid.z, grid.y, values, kx=orders[0], ky=orders[1])
+    result: Array = spline(np.clip(z, grid.z[0], grid.z[-1]), np.clip(y, grid.y[0], grid.y[-1]))
+    return result
+
+
+def _nearest(field: NDArray[np.generic], grid: UniformGrid, y: Array, z: Array) -> NDArray[np.int32]:
+    iz = np.clip(np.rint((z - grid.z0) / grid.dz).astype(int), 0, grid.nz - 1)
+    iy = np.clip(np.rint((y - grid.y0) / grid.dy).astype(int), 0, grid.ny - 1)
+    return np.asarray(field)[np.ix_(iz, iy)].astype(np.int32)

@@ -1,0 +1,393 @@
+"""The increment of two ledgers, B minus A, with the errors that both have in common cancelling."""
+
+from __future__ import annotations
+
+import json
+import math
+from collections.abc import Iterable, Sequence
+from os import PathLike
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from wakeledger.confidence.components import MEASURED, NUMERICAL
+from wakeledger.core.errors import DataError, InputError, SurveyError
+from wakeledger.ledger.archive import open_archive
+from wakeledger.ledger.cancellation import Difference, opaque, subtract
+from wakeledger.ledger.contributions import Contributions
+from wakeledger.ledger.increment import (
+    Cancellation,
+    Figure,
+    Increment,
+    IncrementRow,
+    NotCancelled,
+    Side,
+    ordered_budget,
+)
+from wakeledger.ledger.plane_difference import plane_difference
+from wakeledger.ledger.rows import Ledger, Row
+from wakeledger.ledger.units import SCALAR_UNITS
+from wakeledger.run import tables
+from wakeledger.run.config import Survey, parse_survey
+
+if TYPE_CHECKING:
+    from wakeledger.run.config import Source
+
+#: Scalars of stream and model that two ledgers should have alike, with the relative difference from which it is said.
+_REFERENCES = {
+    "reference_area": 1e-6,
+    "span": 1e-6,
+    "mean_chord": 1e-6,
+    "chord": 1e-6,
+    "dynamic_pressure": 2e-3,
+    "mach": 2e-2,
+}
+_PER_POINT = (
+    "it has an error of its own for each point or row, which is not followed from one survey to the other, so it was "
+    "added"
+)
+_NO_RECORD = "an archive from an earlier version does not hold what each error does; reduce it again"
+#: Why numerical terms are added.
+_NUMERICAL = (
+    "a numerical term: the same method errs in the same sense on like wakes, but by how much on each is not known, so "
+    "that the two were added in squares"
+)
+
+
+def increment(a: Ledger | str | PathLike[str], b: Ledger | str | PathLike[str], *, command: str = "") -> Increment:
+    """B minus A for every row that both have.
+
+    Parameters
+    ----------
+    a, b : Ledger or path
+        The ledgers, or their archives; combined ones too (`wakeledger.run.repeats.combine`).
+    command : str
+        The command line, for the record.
+
+    Returns
+    -------
+    Increment
+
+    Raises
+    ------
+    DataError
+        If an archive cannot be read, or the two have no row in common.
+    InputError
+        If both declare a source with the same ``shared_id``, but not the same error.
+
+    Notes
+    -----
+    u²(B - A) is the sum over all independent errors of the square of their effect on the difference. An error that both
+    surveys name by one ``shared_id`` is one error, and its effect on the difference is the difference of its signed
+    effects; nothing cancels by name alone. U95 is half the 95 % interval of the difference, drawn from the errors'
+    distributions (JCGM 101:2008).
+    """
+    ledgers, files = [], []
+    for one in (a, b):
+        ledgers.append(one if isinstance(one, Ledger) else open_archive(one))
+        files.append("" if isinstance(one, Ledger) else str(one))
+    first, second = ledgers
+    names = [row.name for row in first.rows if any(row.name == other.name for other in second.rows)]
+    if not names:
+        raise DataError(
+            "the two ledgers have no row in common",
+            file=files[1] or None,
+            remedy=f"A has {_listed(row.name for row in first.rows)}; B has {_listed(row.name for row in second.rows)}",
+        )
+    surveys = declared_surveys(first, files[0]), declared_surveys(second, files[1])
+    _refuse_conflicts(*surveys)
+    known = [name for name in names if all(math.isfinite(one.row(name).standard_uncertainty) for one in ledgers)]
+    difference = subtract(*(contributions_of(one, known) for one in ledgers))
+    rows = _rows(first, second, names, known, difference)
+    covariance = np.full((len(names), len(names)), np.nan)
+    at = [names.index(name) for name in known]
+    covariance[np.ix_(at, at)] = difference.covariance[0]
+    plane, note = plane_difference(first, second)
+    only = [
+        f"Only {side} has {_listed(row.name for row in one.rows if row.name not in names)}."
+        for side, one in (("A", first), ("B", second))
+        if any(row.name not in names for row in one.rows)
+    ]
+    return Increment(
+        a=_side(first, files[0]),
+        b=_side(second, files[1]),
+        rows=rows,
+        covariance=covariance,
+        cancellations=_cancellations(difference),
+        not_cancelled=_not_cancelled(first, second, *surveys, difference),
+        budget=ordered_budget(known, {name: variance[0] for name, variance in difference.by_source.items()}),
+        warnings=tuple(_warnings(first, second, *surveys)),
+        notes=(*only, note),
+        plane=plane,
+        provenance=tables.provenance(command),
+    )
+
+
+def declared_surveys(ledger: Ledger, file: str = "") -> tuple[Survey, ...]:
+    """The survey files behind a ledger; several for a combined one.
+
+    Parameters
+    ----------
+    ledger : Ledger
+        The ledger.
+    file : str
+        Its archive, for messages.
+
+    Returns
+    -------
+    tuple of Survey
+
+    Raises
+    ------
+    DataError
+        If a survey file kept in it cannot be read.
+    """
+    texts = [ledger.survey_text] if ledger.repeats is None else json.loads(ledger.repeats.attrs["survey_texts"])
+    try:
+        return tuple(parse_survey(text, Path(file or "survey.toml")) for text in texts)
+    except SurveyError as error:
+        found = f"{error.place}: {error.found}" if error.place else error.found
+        raise DataError(
+            f"the survey file kept in the ledger cannot be read ({found})",
+            file=file or None,
+            remedy="take the archive from its backup, or reduce the survey again",
+        ) from error
+
+
+def contributions_of(ledger: Ledger, names: Sequence[str]) -> Contributions:
+    """What each error does to some rows; their totals alone where the ledger does not hold that."""
+    if ledger.contributions is not None and set(names) <= set(ledger.contributions.rows):
+        return ledger.contributions.of(names)
+    rows = [ledger.row(name) for name in names]
+    u = np.array([[row.standard_uncertainty for row in rows], [row.coefficient_standard_uncertainty for row in rows]])
+    nu = np.array([[row.degrees_of_freedom for row in rows]] * 2)
+    return opaque(names, u, np.where(np.isfinite(nu), nu, math.inf))
+
+
+def _refuse_conflicts(a: Iterable[Survey], b: Iterable[Survey]) -> None:
+    """Refuse surveys that give one identity to two different errors: one of their error bars would be wrong."""
+    seen: dict[str, tuple[str, Source]] = {}
+    for side, surveys in (("A", a), ("B", b)):
+        for survey in surveys:
+            for source in survey.uncertainty.source:
+                if source.shared_id is None:
+                    continue
+                _, earlier = seen.setdefault(source.shared_id, (side, source))
+                unlike = [
+                    (what, _said(one), _said(other))
+                    for what, one, other in zip(_DECLARED, _declaration(earlier), _declaration(source), strict=True)
+                    if one != other
+                ]
+                if unlike:
+                    what, one, other = unlike[0]
+                    raise InputError(
+                        f"shared_id {source.shared_id!r} is declared as two different errors: {what} is {one} for"
+                        f" {earlier.name!r} in {seen[source.shared_id][0]}, and {other} for {source.name!r} in {side}",
+                        remedy="one of the two error bars is wrong: declare the same error in both survey files, or "
+                        "give two errors two identities, and reduce again",
+                    )
+
+
+_DECLARED = (
+    "effect",
+    "standard_uncertainty",
+    "its scale",
+    "distribution",
+    "degrees_of_freedom",
+    "correlation_length",
+)
+
+
+def _declaration(source: Source) -> tuple[object, ...]:
+    return (
+        source.effect,
+        # The same size written in two units differs by rounding.
+        float(f"{source.standard_uncertainty:.9g}"),
+        source.scale,
+        source.distribution,
+        source.degrees_of_freedom,
+        source.correlation_length,
+    )
+
+
+def _said(value: object) -> str:
+    return f"{value:g}" if isinstance(value, float) else "not given" if value is None else str(value)
+
+
+def _rows(
+    a: Ledger, b: Ledger, names: Sequence[str], known: Sequence[str], difference: Difference
+) -> tuple[IncrementRow, ...]:
+    u = np.sqrt(np.einsum("qrr->qr", difference.covariance))
+    half, freedom = difference.half_width(), difference.degrees_of_freedom
+    found = []
+    for name in names:
+        one, other = a.row(name), b.row(name)
+        pairs = [(one.value, other.value), (one.coefficient, other.coefficient)]
+        apart = [
+            math.hypot(one.standard_uncertainty, other.standard_uncertainty),
+            math.hypot(one.coefficient_standard_uncertainty, other.coefficient_standard_uncertainty),
+        ]
+        figures = []
+        for quantity, (x, y) in enumerate(pairs):
+            if name in known:
+                k = known.index(name)
+                uncertainty = float(u[quantity, k]), float(half[quantity, k]), float(freedom[quantity, k])
+            else:
+                uncertainty = math.nan, math.nan, math.nan
+            size, width, nu = uncertainty
+            factor = width / size if size > 0 else math.nan
+            figures.append(Figure(x, y, y - x, size, width, factor, nu, apart[quantity]))
+        found.append(IncrementRow(name, other.unit, figures[0], figures[1], reason=_reason(one, other)))
+    return tuple(found)
+
+
+def _reason(a: Row, b: Row) -> str | None:
+    unknown = [(side, row) for side, row in (("A", a), ("B", b)) if math.isnan(row.value + row.standard_uncertainty)]
+    return "; ".join(f"unknown in {side}: {row.reason}" for side, row in unknown) or None
+
+
+def _cancellations(difference: Difference) -> tuple[Cancellation, ...]:
+    found = []
+    for k, row in enumerate(difference.rows):
+        for one in difference.cancelled:
+            values, coefficients = ((one.in_a[q, k], one.in_b[q, k], one.left[q, k]) for q in (0, 1))
+            found.append(
+                Cancellation(
+                    row,
+                    one.shared_id,
+                    one.source_a,
+                    one.source_b,
+                    *(float(value) for value in values),
+                    *(float(value) for value in coefficients),
+                )
+            )
+    return tuple(found)
+
+
+def _not_cancelled(
+    a: Ledger, b: Ledger, surveys_a: Sequence[Survey], surveys_b: Sequence[Survey], difference: Difference
+) -> tuple[NotCancelled, ...]:
+    """Sources and terms that both ledgers have under one name or identity, and why they were added."""
+    done = {one.shared_id for one in difference.cancelled}
+    identities = [_identities(surveys) for surveys in (surveys_a, surveys_b)]
+    named = [_budget_names(ledger, MEASURED) for ledger in (a, b)]
+    unrecorded = a.contributions is None or b.contributions is None
+    found = []
+    for name in named[0]:
+        if name not in named[1]:
+            continue
+        ids = [_identity(name, known) for known in identities]
+        if ids[0] is not None and ids[0] in done and ids[0] == ids[1]:
+            continue
+        if ids[0] is not None and ids[0] == ids[1]:
+            reason = _NO_RECORD if unrecorded else _PER_POINT
+        elif ids[0] is not None and ids[1] is not None:
+            reason = f"its shared_id is {ids[0]!r} in A and {ids[1]!r} in B: two errors, which were added"
+        else:
+            where = "either" if ids == [None, None] else "A" if ids[0] is None else "B"
+            reason = f"it has no shared_id in {where}; a name alone does not make it the same error, so it was added"
+        found.append(NotCancelled(name, reason))
+    said = {line.source for line in found}
+    for identity in dict.fromkeys(identities[0].values()):
+        if identity in identities[1].values() and identity not in done:
+            name = next(key for key, value in identities[1].items() if value == identity)
+            if name not in said:
+                reason = _NO_RECORD if unrecorded else _PER_POINT
+                found.append(NotCancelled(name, f"shared_id {identity!r} is in both: {reason}"))
+    terms = [_budget_names(ledger, NUMERICAL) for ledger in (a, b)]
+    found += [NotCancelled(name, _NUMERICAL) for name in terms[0] if name in terms[1]]
+    return tuple(found)
+
+
+def _identities(surveys: Iterable[Survey]) -> dict[str, str]:
+    return {
+        source.name: source.shared_id
+        for survey in surveys
+        for source in survey.uncertainty.source
+        if source.shared_id is not None
+    }
+
+
+def _identity(name: str, known: dict[str, str]) -> str | None:
+    """Identity of a source of the budget, which may be a part of a declared one ("name (inputs)")."""
+    return known.get(name, next((known[key] for key in known if name.startswith(f"{key} (")), None))
+
+
+def _budget_names(ledger: Ledger, kind: str) -> tuple[str, ...]:
+    """Names of the sources, or of the numerical terms, in a ledger's budget."""
+    terms = set()
+    if ledger.contributions is not None:
+        terms = {one.source for one in ledger.contributions.components if one.kind == NUMERICAL}
+    names = dict.fromkeys(line.source for line in ledger.budget if line.source != "remainder")
+    return tuple(name for name in names if (name in terms) == (kind == NUMERICAL))
+
+
+def _warnings(a: Ledger, b: Ledger, surveys_a: Sequence[Survey], surveys_b: Sequence[Survey]) -> list[str]:
+    found = []
+    for name, slack in _REFERENCES.items():
+        one, other = ({**ledger.model, **ledger.reference}.get(name, math.nan) for ledger in (a, b))
+        if math.isnan(one) and math.isnan(other):
+            continue
+        if not abs(other - one) <= slack * abs(one):
+            effect = (
+                "the coefficients are each on its own; the differences of forces are those of two streams"
+                if name == "dynamic_pressure"
+                else "the coefficients are each on its own"
+                if name in ("reference_area", "span", "chord")
+                else "the two flows are not alike"
+            )
+            shown = [_scalar_text(name, value) for value in (one, other)]
+            found.append(f"The {name.replace('_', ' ')} is {shown[0]} in A and {shown[1]} in B: {effect}.")
+    if a.compressible != b.compressible:
+        ways = ["compressible" if ledger.compressible else "incompressible" for ledger in (a, b)]
+        found.append(f"A was reduced by the {ways[0]}, B by the {ways[1]} relations: their rows are not the same.")
+    for what, read in (
+        ("boundary", lambda survey: None if survey.boundary is None else survey.boundary.kind),
+        ("reflection", lambda survey: None if survey.boundary is None else survey.boundary.reflection),
+        ("primary measurement", lambda survey: survey.plane.primary),
+        ("station", lambda survey: None if math.isnan(survey.plane.station) else f"{survey.plane.station:g} m"),
+    ):
+        texts = [
+            " or ".join(sorted({str(read(survey) or "none") for survey in surveys}))
+            for surveys in (surveys_a, surveys_b)
+        ]
+        if texts[0] != texts[1]:
+            found.append(f"The {what} is {texts[0]} in A and {texts[1]} in B: part of the difference may be its doing.")
+    for side, ledger in (("A", a), ("B", b)):
+        if ledger.contributions is None and any(math.isfinite(row.standard_uncertainty) for row in ledger.rows):
+            found.append(
+                f"The archive of {side} does not hold what each error does, so nothing cancels: reduce it again."
+            )
+    common = sorted(set(a.inputs.values()) & set(b.inputs.values()) & (_data(a, surveys_a) | _data(b, surveys_b)))
+    if common:
+        found.append(
+            "A and B are made from the same data: their random errors are the same ones, which the uncertainty of the "
+            "increment takes as independent."
+        )
+    return found
+
+
+def _data(ledger: Ledger, surveys: Iterable[Survey]) -> set[str]:
+    """Digests of the data files; a combined ledger's names have the run before them."""
+    names = {str(survey.plane.file) for survey in surveys}
+    return {digest for name, digest in ledger.inputs.items() if name.rpartition(": ")[2] in names}
+
+
+def _scalar_text(name: str, value: float) -> str:
+    """A scalar of stream or model as it is printed."""
+    if math.isnan(value):
+        return "not given"
+    unit = SCALAR_UNITS.get(name, "1").replace("m2", "m²")
+    return f"{value:.6g}" + ("" if unit == "1" else f" {unit}")
+
+
+def _side(ledger: Ledger, file: str) -> Side:
+    failed = tuple(
+        f"{check.name.replace('_', ' ')}: {check.message}" for check in ledger.checks if check.verdict == "fail"
+    )
+    return Side(ledger.title, dict(ledger.test), file, dict(ledger.inputs), failed, dict(ledger.reference))
+
+
+def _listed(names: Iterable[str]) -> str:
+    return ", ".join(name.replace("_", " ") for name in names)
