@@ -10,8 +10,8 @@ shape; primes denote what was measured, and M' the stream's Mach number ahead of
     c_l/c_l' = 1 − σ/(1 − M'²) − (2 − M'²) [the two terms of the velocity]
     α − α'   = σ/(2π √(1 − M'²)) (c_l' + 4c_m')
 
-The drag's solid term is one Λσ larger than that of q: the wake's images make the stream accelerate past the model, which
-pushes it downstream. c_d' is the force on the section between the walls. What Jones's method gives there is more,
+The drag's solid term is one Λσ larger than that of q: the wake's images make the stream accelerate past the model,
+which pushes it downstream. c_d' is the force on the section between the walls. What Jones's method gives there is more,
 because it lets the wake recover to the pressure ahead of the model although the walls keep the stream behind it faster
 by 2u_b; between the walls (compare `maskell`)
 
@@ -74,7 +74,7 @@ class SectionWalls:
 
     @property
     def _solid(self) -> float:
-        return self.solid_blockage / (1 - self.mach**2) ** 1.5
+        return self.solid_blockage / float((1 - self.mach**2) ** 1.5)
 
     def _wake(self, drag_coefficient: Array | float) -> Array | float:
         square = self.mach**2
