@@ -115,7 +115,7 @@ def test_a_ground_plane_mirrors_upwards():
 
 def test_points_across_the_plane_are_refused():
     y, z = half(-0.1)
-    with pytest.raises(DataError, match="lie across the reflection plane y = 0, the farthest at y = -0.1 m"):
+    with pytest.raises(DataError, match=r"lie across the reflection plane y = 0, the farthest at y = -0\.1 m"):
         gridded(y, z)
 
 

@@ -184,27 +184,6 @@ def test_uniform_crossflow_leaves_them_exactly(kit, tmp_path):
     assert energy.value == pytest.approx(plain["induced_drag"], rel=1e-3)
 
 
-# -- what is not computed -----------------------------------------------------------------------------------------
-
-
-@pytest.mark.parametrize(
-    ("boundary", "place"),
-    [
-        ({"reflection": "y"}, "[boundary] reflection"),
-        ({"reflection": "z"}, "[boundary] reflection"),
-        ({"kind": "open_jet", "y": ["-2 m", "2 m"], "z": ["-2 m", "2 m"]}, "[boundary] kind"),
-        ({"kind": "closed_walls", "y": ["-2 m", "2 m"], "z": ["-2 m", "2 m"]}, "[boundary] kind"),
-    ],
-)
-def test_a_boundary_that_is_not_computed_is_refused(kit, tmp_path, boundary, place):
-    # Taken as free air the half of a wing has half its lift, a side force and the wrong induced drag.
-    from wakeledger.core.errors import SurveyError
-
-    with pytest.raises(SurveyError) as caught:
-        load(kit.write(tmp_path, kit.table(kit.wing(), *kit.axes(spacing=0.05)), kit.description(boundary=boundary)))
-    assert place in str(caught.value)
-
-
 # -- a real survey ------------------------------------------------------------------------------------------------
 
 #: Chow, Zilliac & Bradshaw, AIAA J. 35(10), 1997; NASA TM 110418 (check_values 0.2, SEEN; circulation, centre and core

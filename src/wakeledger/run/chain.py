@@ -21,23 +21,25 @@ from wakeledger.core.rotation import rotation_matrix
 from wakeledger.intake.gridding import Gridding
 from wakeledger.intake.probe.traverse import Traverse, correction_input
 from wakeledger.intake.state import State, point_state
+from wakeledger.physics.fields.boundary import Boundary
 from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.flow import Flow
 from wakeledger.physics.fields.lifting_line import NearField, near_field
-from wakeledger.physics.fields.outer_flow import crossflow_offset, induced_crossflow, loss_zero
+from wakeledger.physics.fields.outer_flow import induced_crossflow, loss_zero, stream_swirl
 from wakeledger.physics.fields.pressure import crossflow_pressure
 from wakeledger.physics.fields.wake_region import Mask, WakeRegion, region_of, wake_region
+from wakeledger.physics.fields.wall_correction import wall_stream_function
 from wakeledger.physics.methods.betz_area import loss_free_axial_velocity, profile_integrand
-from wakeledger.physics.methods.energy_area import crossflow_energy
-from wakeledger.physics.methods.entropy_area import entropy_profile_drag
-from wakeledger.physics.methods.momentum_area import momentum_drag
+from wakeledger.physics.methods.maskell import wake_deficit, with_blockage
 from wakeledger.physics.methods.residual import residual_drag
 from wakeledger.physics.methods.vorticity_area import VorticityForces, vorticity_forces
-from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
-from wakeledger.physics.vortices.vortex_sum import evaluate as evaluate_vortex_sum
-from wakeledger.run.outputs import OUTPUTS, ROWS, WITHOUT_CROSSFLOW, coefficient_of, estimate_of
+from wakeledger.run.coefficients import coefficients, tunnel_figures
+from wakeledger.run.empty_tunnel import EmptyTunnel
+from wakeledger.run.estimates import area_estimates, on_frozen_geometry, without_walls
+from wakeledger.run.outputs import OUTPUTS, WITHOUT_CROSSFLOW
 from wakeledger.run.reduction import Frozen, Reduction, Settings, Variation
 from wakeledger.run.shear import Displacement
+from wakeledger.run.zeroing import axial_velocity, zeroed
 from wakeledger.stream.reference import Reference, resolve_reference
 
 #: What of a flow state changes with the place.
@@ -69,6 +71,8 @@ class Chain:
         How hole pressures become flow states; None where flow variables were measured.
     displacement : Displacement or None
         Of the probe in shear; None where it is not corrected.
+    empty : EmptyTunnel or None
+        The stream without the model, which is taken out of the plane; None where it was not surveyed.
     """
 
     points: Points
@@ -78,12 +82,24 @@ class Chain:
     gradients: Mapping[str, Array] = field(default_factory=lambda: MappingProxyType({}))
     traverse: Traverse | None = None
     displacement: Displacement | None = None
+    empty: EmptyTunnel | None = None
 
     @property
     def measured(self) -> frozenset[str]:
         """Names of the variables measured in the flow."""
         names = frozenset(self.points.channels)
         return names if self.traverse is None else names & {"density", "total_temperature"}
+
+    @property
+    def directed(self) -> bool:
+        """Whether the flow's direction was measured, rather than v and w beside a speed that follows."""
+        return self.traverse is not None or bool({"u", "pitch"} & self.measured)
+
+    @property
+    def swirls(self) -> bool:
+        """Whether the stream may rotate: in a tunnel that was not surveyed empty, without a reflection plane."""
+        settings = self.settings
+        return settings.bounded and settings.crossflow and self.empty is None and settings.reflection is None
 
     def with_frozen_shear(self) -> Chain:
         """The same survey with the shear that displaces the probe frozen on the nominal plane."""
@@ -172,7 +188,7 @@ class Chain:
         state = self.state(reference, errors)
         grid = self.gridding.grid
         apply = self.gridding.apply
-        v, w = apply(state.v), apply(state.w)
+        v, w = (apply(getattr(state, name), odd=self.gridding.is_odd(name)) for name in ("v", "w"))
         u = apply(state.u)
         density: Any = reference.density
         total_temperature: Any = np.nan
@@ -199,7 +215,7 @@ class Chain:
                     )
                     density = static / (reference.gas_constant * (total_temperature - warming))
             else:
-                u = _axial(2 * (total - static) / reference.density - v**2 - w**2, u)
+                u = axial_velocity(2 * (total - static) / reference.density - v**2 - w**2, u)
         else:
             kinetic = 0.5 * reference.density * (u**2 + v**2 + w**2)
             # A measured total pressure comes first: a biased static pressure then costs almost nothing.
@@ -215,7 +231,10 @@ class Chain:
                     excess = crossflow_pressure(v, w, grid, density=reference.density)
                 static = reference.static_pressure + excess
                 total = static + kinetic
-        return Flow(grid, u, v, w, total, static, density, total_temperature)
+        flow = Flow(grid, u, v, w, total, static, density, total_temperature)
+        if self.empty is None:
+            return flow
+        return self.empty.taken_out(flow, reference, errors, primary=self.settings.primary, measured=self.measured)
 
     def reduce(
         self,
@@ -252,21 +271,37 @@ class Chain:
         mask = region.mask
         zero = loss_zero(loss, mask) + vary.loss_shift
         measured = flow
-        flow = self._zeroed(flow, reference, zero)
+        flow = zeroed(flow, reference, zero, primary=settings.primary, measured=self.measured, directed=self.directed)
         if flow.v is not measured.v:
             whole_vorticity = axial_vorticity(flow.v, flow.w, grid)
+        flow, whole_vorticity, swirl = self._unswirled(flow, whole_vorticity, mask, vary)
         vorticity = np.where(mask, whole_vorticity, 0.0)
-        forces = vorticity_forces(vorticity, grid, reference, moment_centre=settings.moment_centre)
+        boundary = settings.boundary.whole
+        forces = vorticity_forces(
+            vorticity,
+            grid,
+            reference,
+            moment_centre=settings.moment_centre,
+            boundary=boundary,
+            reflection=settings.reflection,
+        )
         loss_free = loss_free_axial_velocity(flow, reference)
         integrand = np.where(mask, profile_integrand(flow, reference, loss_free), 0.0)
+        deficit = wake_deficit(flow, loss_free, mask)
+        blockage = float(with_blockage(grid.integrate(integrand), deficit, reference, boundary).velocity)
+        if blockage:
+            integrand = integrand - np.where(mask, reference.density * blockage * (loss_free - flow.u), 0.0)
         near = self.frozen.near_field
         if near is None:
             near = self.near_field(vorticity, grid)
-        divergence_part, axial_part = residual_drag(flow, reference, loss_free, mask, near=near)
+        parts = residual_drag(flow, reference, loss_free, mask, near=near, boundary=boundary, blockage=blockage)
+        divergence_part, axial_part = (settings.counted * float(part) for part in parts)
         bias = self.frozen.bias
-        profile = float(grid.integrate(integrand))
+        tare = settings.given.get("boundary.support_tare", 0.0) + float(errors.get("boundary.support_tare", 0.0))
+        profile = settings.counted * float(grid.integrate(integrand)) - tare
         induced = float(forces.induced_drag) - bias.get("induced_drag", 0.0)
-        residual = float(divergence_part + axial_part) - bias.get("residual_drag", 0.0)
+        free_air = float(forces.free_air_drag) - bias.get("induced_drag", 0.0)
+        residual = divergence_part + axial_part - bias.get("residual_drag", 0.0)
         values = dict.fromkeys(OUTPUTS, np.nan)
         values |= {
             "profile_drag": profile,
@@ -276,18 +311,33 @@ class Chain:
             "lift": float(forces.lift),
             "side_force": float(forces.side_force),
             "rolling_moment": float(forces.rolling_moment),
+            "root_bending_moment": float(forces.root_bending_moment),
         }
-        area = settings.reference_area + float(errors.get("model.reference_area", 0.0))
-        span = settings.span + float(errors.get("model.span", 0.0))
-        q = reference.dynamic_pressure
-        if induced > 0:
-            values["span_efficiency"] = values["lift"] ** 2 / (np.pi * q * span**2 * induced)
-        for row in ROWS:
-            if row != "span_efficiency":
-                values[coefficient_of(row)] = values[row] / (q * area * (span if row == "rolling_moment" else 1.0))
+        if settings.bounded:
+            values["induced_drag_free_air"] = free_air
+        values |= coefficients(values, free_air, settings, reference, blockage, errors)
+        values |= tunnel_figures(values, vorticity, grid, settings, reference, blockage, errors)
         offset, invalid = (0.0, 0.0), 0.0
         if estimates:
-            offset, invalid = self._estimate(values, flow, reference, region, forces, near, vary, geometric)
+            found = area_estimates(
+                settings,
+                self.frozen,
+                flow,
+                reference,
+                mask,
+                forces,
+                near,
+                wake_blockage=blockage,
+                vary=vary,
+            )
+            values |= found.values
+            offset, invalid = found.offset, found.invalid_area
+            if geometric:
+                v, w = without_walls(settings, flow, forces)
+                lines = on_frozen_geometry(
+                    settings, self.frozen, v, w, mask, reference.density, reference.speed, _walls_drag(forces)
+                )
+                values |= {name: float(value) for name, value in lines.items()}
         if not settings.crossflow:
             values |= dict.fromkeys((name for name in OUTPUTS if name not in WITHOUT_CROSSFLOW), np.nan)
         return Reduction(
@@ -302,7 +352,9 @@ class Chain:
             offset,
             MappingProxyType(values),
             invalid,
-            (float(divergence_part), float(axial_part)),
+            (divergence_part, axial_part),
+            blockage,
+            swirl,
         )
 
     def vectors(self, errors: Mapping[str, Array], *, estimates: bool = True) -> Array:
@@ -333,31 +385,20 @@ class Chain:
             return vectors
         # The estimates on frozen geometry are matrix products: all draws at once.
         references = [draw.reference for draw in draws]
-        found = self._on_frozen_geometry(
-            np.stack([draw.flow.v for draw in draws]),
-            np.stack([draw.flow.w for draw in draws]),
+        crossflow = [without_walls(self.settings, draw.flow, draw.forces) for draw in draws]
+        found = on_frozen_geometry(
+            self.settings,
+            self.frozen,
+            np.stack([v for v, _ in crossflow]),
+            np.stack([w for _, w in crossflow]),
             np.stack([draw.region.mask for draw in draws]),
             np.array([reference.density for reference in references]),
             np.array([reference.speed for reference in references]),
+            np.array([_walls_drag(draw.forces) for draw in draws]),
         )
         for name, values in found.items():
             vectors[:, OUTPUTS.index(name)] = values
         return vectors
-
-    def _on_frozen_geometry(
-        self, v: Array, w: Array, mask: Mask, density: Array | float, speed: Array | float
-    ) -> dict[str, Array]:
-        """Wake line and vortex sum of fields of shape (..., nz, ny), noise bias subtracted."""
-        found, bias = {}, self.frozen.bias
-        if self.frozen.cuts is not None:
-            line = evaluate_wake_line(self.frozen.cuts, v, w, density, speed, mask=mask)
-            for row, value in (("induced_drag", line.induced_drag), ("lift", line.lift)):
-                name = estimate_of(row, "wake_line")
-                found[name] = value - bias.get(name, 0.0)
-        if self.frozen.parts is not None:
-            name = estimate_of("induced_drag", "vortex_sum")
-            found[name] = evaluate_vortex_sum(self.frozen.parts, v, w, density) - bias.get(name, 0.0)
-        return found
 
     def _region(self, loss: Array, vorticity: Array, grid: UniformGrid, vary: Variation) -> WakeRegion:
         settings = self.settings
@@ -377,84 +418,23 @@ class Chain:
             exclude=region_of(settings.exclude, grid) if settings.exclude else None,
         )
 
-    def _zeroed(self, flow: Flow, reference: Reference, zero: float) -> Flow:
-        """The plane with its total pressure raised by a constant, and what depends on it following.
-
-        A measured speed stays, and a static pressure that rests on the total one follows; where the speed itself comes
-        from the pressures, it follows, at the same static pressure and the same measured, else total, temperature.
-        Where the flow's direction was measured, the crossflow follows the speed; where v and w themselves were, they
-        stay.
-        """
-        total = flow.total_pressure + zero
-        raised = total / flow.total_pressure
-        if self.settings.primary == "velocity":
-            if not reference.compressible:
-                implied = zero if "total_pressure" in self.measured else 0.0
-                return replace(flow, total_pressure=total, static_pressure=flow.static_pressure + implied)
-            return replace(
-                flow,
-                total_pressure=total,
-                static_pressure=flow.static_pressure * raised,
-                density=flow.density * raised,
-            )
-        if not reference.compressible:
-            square = 2 * (total - flow.static_pressure) / reference.density
-            return replace(self._with_speed(flow, square), total_pressure=total)
-        exponent = reference.gas_constant / reference.heat_capacity
-        ratio = np.maximum(total / flow.static_pressure, 1.0) ** exponent
-        if {"temperature", "density"} & self.measured:
-            # The static temperature was measured and stays.
-            temperature = flow.static_pressure / (reference.gas_constant * flow.density)
-            total_temperature, density = temperature * ratio, flow.density
-        else:
-            total_temperature, density = flow.total_temperature, flow.density * raised**exponent
-        square = 2 * reference.heat_capacity * total_temperature * (1 - 1 / ratio)
-        return replace(
-            self._with_speed(flow, square), total_pressure=total, density=density, total_temperature=total_temperature
-        )
-
-    def _with_speed(self, flow: Flow, square: Array) -> Flow:
-        """The plane with another square of the speed, m²/s², in the measured direction or at the measured crossflow."""
-        crossflow = flow.v**2 + flow.w**2
-        if self.traverse is None and not {"u", "pitch"} & self.measured:
-            return replace(flow, u=_axial(square - crossflow, flow.u))
-        factor = np.sqrt(np.maximum(square, 0.0) / (flow.u**2 + crossflow))
-        return replace(flow, u=factor * flow.u, v=factor * flow.v, w=factor * flow.w)
-
-    def _estimate(
-        self,
-        values: dict[str, float],
-        flow: Flow,
-        reference: Reference,
-        region: WakeRegion,
-        forces: VorticityForces,
-        near: NearField,
-        vary: Variation,
-        geometric: bool,
-    ) -> tuple[tuple[float, float], float]:
-        """Fill in the cross-checks; gives the crossflow offset and the area without a real expansion."""
-        grid, mask, bias = flow.grid, region.mask, self.frozen.bias
-        entropy, invalid = entropy_profile_drag(flow, reference, mask)
-        values[estimate_of("profile_drag", "entropy_area")] = float(entropy)
-        own = induced_crossflow(forces.stream_function, grid)
-        outer = (~mask).astype(float)
-        offset: Array = np.zeros(2)
-        if outer.sum() > 0:
-            offset = crossflow_offset(flow.v, flow.w, own, near, outer)
-        offset = offset + np.asarray(vary.crossflow_shift)
-        v, w = flow.v - offset[0], flow.w - offset[1]
-        energy = float(crossflow_energy(v, w, grid, density=reference.density))
-        name = estimate_of("induced_drag", "energy_area")
-        values[name] = energy - bias.get(name, 0.0)
-        # Turning the flow keeps its speed.
-        square = flow.u**2 + (flow.v**2 - v**2) + (flow.w**2 - w**2)
-        aligned = replace(flow, u=np.sqrt(np.maximum(square, 0.0)), v=v, w=w)
-        name = estimate_of("total_drag", "momentum_area")
-        values[name] = float(momentum_drag(aligned, reference)) - bias.get(name, 0.0)
-        if geometric:
-            found = self._on_frozen_geometry(flow.v, flow.w, mask, reference.density, reference.speed)
-            values |= {name: float(value) for name, value in found.items()}
-        return (float(offset[0]), float(offset[1])), float(invalid)
+    def _unswirled(self, flow: Flow, vorticity: Array, mask: Mask, vary: Variation) -> tuple[Flow, Array, float]:
+        """The plane without the stream's own rotation, as it shows outside the wake in a tunnel not surveyed empty."""
+        settings, grid = self.settings, flow.grid
+        if not self.swirls:
+            return flow, vorticity, 0.0
+        boundary = settings.boundary.whole
+        own = induced_crossflow(wall_stream_function(np.where(mask, vorticity, 0.0), grid, boundary), grid)
+        turned = self.frozen.turned
+        if turned is None:
+            turned = turned_crossflow(mask, grid, boundary)
+        near = self.frozen.near_field
+        if near is None:
+            near = self.near_field(np.where(mask, vorticity, 0.0), grid)
+        left = np.stack([flow.v - near.v, flow.w - near.w]) - own
+        swirl = stream_swirl(left, turned, grid, (~mask).astype(float)) + vary.swirl_shift
+        yy, zz = grid.mesh()
+        return replace(flow, v=flow.v + swirl * zz, w=flow.w - swirl * yy), vorticity - 2 * swirl, swirl
 
     def near_field(self, vorticity: Array, grid: UniformGrid) -> NearField:
         """Disturbance that the bound vortex adds at the plane, m/s; zero where the plane is not behind it."""
@@ -464,9 +444,14 @@ class Chain:
         return near_field(vorticity, grid, distance=distance)
 
 
-def _axial(square: Array, measured: Array) -> Array:
-    """Axial velocity of a given square, in the direction measured; as measured where the square is not positive."""
-    return np.where(square > 0, np.copysign(np.sqrt(np.maximum(square, 0.0)), measured), measured)
+def turned_crossflow(mask: Mask, grid: UniformGrid, boundary: Boundary) -> Array:
+    """Crossflow that the vorticity 2 s⁻¹ of a unit rotation of the stream induces from the wake region, (2, nz, ny)."""
+    return induced_crossflow(wall_stream_function(np.where(mask, 2.0, 0.0), grid, boundary), grid)
+
+
+def _walls_drag(forces: VorticityForces) -> Array:
+    """What the walls add to the induced drag, N."""
+    return forces.induced_drag - forces.free_air_drag
 
 
 def default_grow(gridding: Gridding) -> float:

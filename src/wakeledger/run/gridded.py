@@ -9,16 +9,20 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from wakeledger.core.errors import SurveyError
-from wakeledger.core.grid import Array
+from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.intake.gridding import Gridding, check_duplicates, make_gridding
 from wakeledger.intake.gridding.lattice import find_lattice
+from wakeledger.intake.gridding.mirror import make_mirrored
 from wakeledger.intake.gridding.window import covered_window
 from wakeledger.intake.state import State, check_state
+from wakeledger.physics.fields.boundary import Boundary, FreeAir, Rectangle, Reflection, points_inside
 from wakeledger.physics.fields.wake_region import region_of
 from wakeledger.physics.vortices.identify import Vortex
 from wakeledger.physics.vortices.vortex_sum import VortexSum, WakeParts, find_parts, summarise
 from wakeledger.run.chain import Chain
+from wakeledger.run.empty_tunnel import EmptyTunnel
 from wakeledger.run.load import SurveyInput
+from wakeledger.run.outer_alignment import aligned
 from wakeledger.run.rake import prepare_raw
 from wakeledger.run.reduction import Reduction, Settings
 from wakeledger.run.traverse import RawSurvey, corrected_points
@@ -28,6 +32,8 @@ from wakeledger.stream.reference import Reference
 POINTS_PER_CORE = 2.0
 #: Most cells of a resampled plane.
 MOST_CELLS = 120_000
+#: Most of a window that may lie outside a round or many-sided section: the corners of a rectangle about it.
+_MOST_OUTSIDE = 0.25
 #: The same where scattered points are only looked at: working out the interpolation takes most of the time.
 MOST_CELLS_QUICK = 12_000
 
@@ -80,24 +86,28 @@ def grid_survey(survey: SurveyInput, *, quick: bool = False) -> Gridded:
         If the survey or its data are wrong.
     """
     file, points = survey.survey, survey.points
-    reference = file.reference.resolve()
-    settings = settings_of(survey, reference)
-    raw = prepare_raw(survey, reference) if file.plane.primary == "hole_pressures" else None
-    check_duplicates(points if raw is None else corrected_points(points, raw.traverse, reference))
-    empty = Chain(points, None, settings)  # type: ignore[arg-type]
-    if raw is not None:
-        empty = replace(empty, traverse=raw.traverse, displacement=raw.displacement)
-    state = empty.state(reference)
-    check_state(state, points=points, reference=reference)
-    regrid = Regrid(points.y, points.z, usable_points(state), points.row)
+    bare = bare_chain(survey)
+    settings, empty, state, raw = bare.chain.settings, bare.chain, bare.state, bare.raw
+    regrid = regrid_of(survey, state)
     coarse = quick and find_lattice(points.y, points.z) is None
     gridding = regrid(most_cells=MOST_CELLS_QUICK if coarse else MOST_CELLS)
     if settings.exclude and region_of(settings.exclude, gridding.grid).all():
         raise SurveyError(
             "the shapes cover the whole window", file=file.path, place="[wake] exclude", remedy="leave some of it free"
         )
+    check_section(settings.boundary, gridding.grid)
+    if survey.empty_tunnel is not None:
+        stream = empty_tunnel(
+            survey.empty_tunnel, settings, names=(file.path.name, survey.empty_tunnel.survey.path.name)
+        )
+        stream.check_cover(gridding.grid, place="[empty_tunnel] survey")
+        empty = replace(empty, empty=stream)
     chain = replace(empty, gridding=gridding)
     first = chain.reduce(estimates=False)
+    if raw is not None and any(probe.misalignment == "outer_flow" for probe in file.probe):
+        raw = aligned(survey, chain, first, raw)
+        empty, chain = (replace(one, traverse=raw.traverse) for one in (empty, chain))
+        state, first = chain.state(first.reference), chain.reduce(estimates=False)
     parts, vortices = find_vortices(first, settings)
     if gridding.kind != "uniform" and vortices.vortices and not coarse:
         finer = min(vortex.core_length for vortex in vortices.vortices) / POINTS_PER_CORE
@@ -107,6 +117,125 @@ def grid_survey(survey: SurveyInput, *, quick: bool = False) -> Gridded:
             first = chain.reduce(estimates=False)
             parts, vortices = find_vortices(first, settings)
     return Gridded(chain, first, state, parts, vortices, raw)
+
+
+@dataclass(frozen=True)
+class Bare:
+    """A survey's points as flow states, not yet on a grid.
+
+    Attributes
+    ----------
+    chain : Chain
+        Without a gridding.
+    state : State
+        The flow state at the points.
+    raw : RawSurvey or None
+        What a traverse of hole pressures adds.
+    """
+
+    chain: Chain
+    state: State
+    raw: RawSurvey | None
+
+
+def bare_chain(survey: SurveyInput) -> Bare:
+    """A survey's points, checked, as flow states.
+
+    Raises
+    ------
+    InputError
+        If the survey or its data are wrong.
+    """
+    file, points = survey.survey, survey.points
+    reference = file.reference.resolve()
+    settings = settings_of(survey, reference)
+    raw = prepare_raw(survey, reference) if file.plane.primary == "hole_pressures" else None
+    check_duplicates(points if raw is None else corrected_points(points, raw.traverse, reference))
+    chain = Chain(points, None, settings)  # type: ignore[arg-type]
+    if raw is not None:
+        chain = replace(chain, traverse=raw.traverse, displacement=raw.displacement)
+    state = chain.state(reference)
+    check_state(state, points=points, reference=reference)
+    return Bare(chain, state, raw)
+
+
+def regrid_of(survey: SurveyInput, state: State) -> Regrid:
+    """What grids a survey's points, those inside an inboard cut left out."""
+    boundary, points = survey.survey.boundary, survey.points
+    usable = usable_points(state)
+    cut = None if boundary is None else boundary.inboard_cut
+    if cut is not None:
+        usable = usable & (points.y >= cut)
+    reflection = None if boundary is None else boundary.reflection
+    return Regrid(points.y, points.z, usable, points.row, reflection)
+
+
+def empty_tunnel(survey: SurveyInput, settings: Settings, *, names: tuple[str, str]) -> EmptyTunnel:
+    """The stream without the model from its own survey.
+
+    Parameters
+    ----------
+    survey : SurveyInput
+        Of the empty tunnel.
+    settings : Settings
+        Of the survey with the model.
+    names : (str, str)
+        Files of the survey with the model and of that without it, for messages.
+
+    Returns
+    -------
+    EmptyTunnel
+
+    Raises
+    ------
+    InputError
+        If the survey or its data are wrong, or its surroundings are others.
+    """
+    bare = bare_chain(survey)
+    own = bare.chain.settings
+    if own.boundary != settings.boundary:
+        raise SurveyError(
+            f"[boundary] of {names[1]} is not that of {names[0]}",
+            place="[empty_tunnel] survey",
+            remedy="describe the same test section and reflection plane in both",
+        )
+    if own.station != settings.station:
+        raise SurveyError(
+            f"its station is {own.station:g} m, that of the survey with the model {settings.station:g} m",
+            file=survey.survey.path,
+            place="[plane] station",
+            remedy="survey the empty tunnel at the same station",
+        )
+    gridding = regrid_of(survey, bare.state)(most_cells=MOST_CELLS)
+    return EmptyTunnel(replace(bare.chain, gridding=gridding))
+
+
+def check_section(boundary: Boundary, grid: UniformGrid) -> None:
+    """Refuse a window that reaches through the walls.
+
+    Raises
+    ------
+    SurveyError
+        If more than a few cells of the window lie outside the section, beyond half a spacing.
+    """
+    if isinstance(boundary, FreeAir):
+        return
+    section = boundary.section
+    outside = ~points_inside(section, *grid.mesh(), margin=0.75 * max(grid.dy, grid.dz))
+    if isinstance(section, Rectangle) and outside.any():
+        raise SurveyError(
+            f"the survey reaches y {grid.y[0]:.4g} to {grid.y[-1]:.4g} m, z {grid.z[0]:.4g} to {grid.z[-1]:.4g} m,"
+            f" through the walls at y = {section.y[0]:g} and {section.y[1]:g} m, z = {section.z[0]:g} and"
+            f" {section.z[1]:g} m",
+            place="[boundary] y, z",
+            remedy="give the walls in the survey's own axes, those of the whole configuration",
+        )
+    if outside.mean() > _MOST_OUTSIDE:
+        raise SurveyError(
+            f"{outside.mean():.0%} of the survey's window lies outside the section",
+            place="[boundary] section",
+            remedy="give the section in the survey's own axes",
+        )
 
 
 def usable_points(state: State) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
@@ -140,7 +269,22 @@ def settings_of(survey: SurveyInput, reference: Reference) -> Settings:
         include=tuple(file.wake.include),
         exclude=tuple(file.wake.exclude),
         crossflow=file.directed,
+        boundary=FreeAir() if file.boundary is None else file.boundary.surroundings(),
+        given=_given(survey),
+        model_place=None if file.boundary is None else file.boundary.model_centre,
     )
+
+
+def _given(survey: SurveyInput) -> dict[str, float]:
+    """What is known of the tunnel beforehand, by input; forces of the half model on the ledger's both halves."""
+    boundary = survey.survey.boundary
+    if boundary is None:
+        return {}
+    doubled = 2.0 if boundary.reflection == "y" else 1.0
+    return {
+        name: entry.value * (1.0 if name == "boundary.solid_blockage" else doubled)
+        for name, entry in boundary.given_values().items()
+    }
 
 
 @dataclass(frozen=True)
@@ -151,6 +295,7 @@ class Regrid:
     z: Array
     usable: np.ndarray[tuple[int], np.dtype[np.bool_]]
     row: np.ndarray[tuple[int], np.dtype[np.int64]] | None
+    reflection: Reflection | None = None
 
     def __call__(
         self,
@@ -162,9 +307,20 @@ class Regrid:
     ) -> Gridding:
         """Gridding with other usable points, another largest spacing (along y and z, m), spline degree or size."""
         chosen = self.usable if usable is None else usable
-        return covered_window(
-            make_gridding(self.y, self.z, chosen, row=self.row, spacing=spacing, degree=degree, max_cells=most_cells)
-        )
+
+        def make(
+            y: Array,
+            z: Array,
+            usable: np.ndarray[tuple[int], np.dtype[np.bool_]],
+            row: np.ndarray[tuple[int], np.dtype[np.int64]] | None,
+        ) -> Gridding:
+            return covered_window(
+                make_gridding(y, z, usable, row=row, spacing=spacing, degree=degree, max_cells=most_cells)
+            )
+
+        if self.reflection is None:
+            return make(self.y, self.z, chosen, self.row)
+        return make_mirrored(make, self.y, self.z, chosen, self.row, axis=self.reflection)
 
 
 def find_vortices(nominal: Reduction, settings: Settings) -> tuple[WakeParts, VortexSum]:

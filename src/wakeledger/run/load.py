@@ -41,6 +41,8 @@ class SurveyInput:
         Which tube of a rake took which point.
     read : Points or None
         The points of a rake as read; None where `points` are.
+    empty_tunnel : SurveyInput or None
+        The survey of the tunnel without the model.
     """
 
     survey: Survey
@@ -49,6 +51,7 @@ class SurveyInput:
     calibrations: Mapping[str, Calibration] = field(default_factory=dict)
     rake: RakePoints | None = None
     read: Points | None = None
+    empty_tunnel: SurveyInput | None = None
 
     @property
     def as_read(self) -> Points:
@@ -170,7 +173,45 @@ def load_survey(survey: Survey) -> SurveyInput:
         calibration = calibrations[name] = load_calibration(survey.resolve(name))
         inputs[name] = hashlib.sha256(survey.resolve(name).read_bytes()).hexdigest()
         inputs |= {own: digest for own, digest in calibration.inputs.items() if own not in inputs}
-    return _assembled(SurveyInput(survey, points, inputs, calibrations))
+    empty = _empty_tunnel(survey)
+    if empty is not None:
+        inputs |= {name: digest for name, digest in empty.inputs.items() if name not in inputs}
+    return _assembled(SurveyInput(survey, points, inputs, calibrations, empty_tunnel=empty))
+
+
+def _empty_tunnel(survey: Survey) -> SurveyInput | None:
+    """The survey of the tunnel without the model that a survey names."""
+    if survey.empty_tunnel is None:
+        return None
+    file = survey.resolve(survey.empty_tunnel.survey)
+    if file.resolve() == survey.path.resolve():
+        raise SurveyError(
+            "it is this survey itself",
+            file=survey.path,
+            place="[empty_tunnel] survey",
+            remedy="name the survey file of the tunnel without the model",
+        )
+    empty = read_survey(file)
+    check_empty_tunnel(empty)
+    return load_survey(empty)
+
+
+def check_empty_tunnel(empty: Survey) -> None:
+    """Refuse a survey that cannot stand for the tunnel without the model.
+
+    Raises
+    ------
+    SurveyError
+        If it is a line traverse, or subtracts an empty tunnel itself.
+    """
+    if empty.section is not None or empty.empty_tunnel is not None:
+        what = "a line traverse" if empty.section is not None else "a survey that names an empty tunnel itself"
+        raise SurveyError(
+            f"the survey of the empty tunnel is {what}",
+            file=empty.path,
+            place="[section]" if empty.section is not None else "[empty_tunnel]",
+            remedy="survey the same plane without the model",
+        )
 
 
 def _assembled(survey: SurveyInput) -> SurveyInput:

@@ -12,7 +12,8 @@ from wakeledger.confidence.noise import NoiseEstimate, estimate_noise
 from wakeledger.confidence.noise_bias import quadratic_noise_bias
 from wakeledger.confidence.sampling import SourceErrors
 from wakeledger.confidence.sources import InputLayout, Source
-from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.core.grid import Array
+from wakeledger.intake.gridding import Gridding
 from wakeledger.physics.fields.differences import difference_matrix
 from wakeledger.physics.fields.poisson import green_weights
 from wakeledger.physics.fields.wake_region import Mask
@@ -24,6 +25,7 @@ from wakeledger.physics.methods.wake_line import noise_bias as wake_line_bias
 from wakeledger.physics.vortices.vortex_sum import evaluate as evaluate_vortex_sum
 from wakeledger.physics.vortices.vortex_sum import noise_bias as vortex_sum_bias
 from wakeledger.run.chain import Chain
+from wakeledger.run.estimates import counted_mask
 from wakeledger.run.outputs import estimate_of
 from wakeledger.run.reduction import Reduction
 
@@ -92,7 +94,9 @@ def declared_noise(
         if source.effect == "systematic":
             continue
         correlation = _correlation(source, chain)
+        # A point beside a reflection plane carries the error of its twin: only drawn fields hold that.
         independent = correlation is not None and all(matrix is None for matrix in correlation)
+        independent = independent and chain.gridding.mirror is None
         count = _DRAWS
         if independent:
             count = min(_DRAWS, max(_FEWEST_DRAWS, _MOST_ERRORS // chain.points.n))
@@ -104,9 +108,20 @@ def declared_noise(
         if not np.nanmax(np.abs(errors)) > 0:
             continue
         inner, outer = _mean_square(errors[:, :, wake]), _mean_square(errors)
-        fields = None if independent else chain.gridding.apply(np.nan_to_num(errors))
+        fields = None if independent else _on_grid(chain, errors)
         found.append(Noise(source.name, inner, outer, correlation or (None, None), fields))
     return tuple(found)
+
+
+def _on_grid(chain: Chain, errors: Array) -> Array:
+    """Errors of v and w at the points, shape (2, k, n), as fields of shape (2, k, nz, ny)."""
+    gridding = chain.gridding
+    return np.stack(
+        [
+            gridding.apply(np.nan_to_num(error), odd=gridding.is_odd(name))
+            for name, error in zip("vw", errors, strict=True)
+        ]
+    )
 
 
 def _mean_square(errors: Array) -> tuple[float, float]:
@@ -182,12 +197,12 @@ def _white_together(noises: Sequence[Noise]) -> list[Noise]:
 
 def _bias_of(chain: Chain, nominal: Reduction, noise: Noise) -> dict[str, float]:
     grid, mask, reference = nominal.flow.grid, nominal.region.mask, nominal.reference
-    operators = chain.gridding.operators()
+    gridding, counted = chain.gridding, chain.settings.counted
     density = reference.density
     energy = estimate_of("induced_drag", "energy_area")
     line, vortices = estimate_of("induced_drag", "wake_line"), estimate_of("induced_drag", "vortex_sum")
     cuts, parts = chain.frozen.cuts, chain.frozen.parts
-    if operators is None:
+    if gridding.operators() is None:
         if noise.fields is None:
             return {}
         v, w = noise.fields
@@ -197,47 +212,60 @@ def _bias_of(chain: Chain, nominal: Reduction, noise: Noise) -> dict[str, float]
             energy: _mean(crossflow_energy(v, w, grid, density=density)),
         }
     else:
-        found = _closed_forms(grid, mask, operators, noise, density)
-        gain = np.outer((operators[0] ** 2).sum(axis=1), (operators[1] ** 2).sum(axis=1))
-        found[energy] = 0.5 * density * float(grid.integrate(gain)) * sum(noise.outer_variance)
-        white = noise.is_white and chain.gridding.kind == "uniform"
+        found = _closed_forms(gridding, mask, noise, density)
+        found[energy] = 0.5 * density * _energy_gain(gridding, noise.outer_variance)
+        white = noise.is_white and gridding.kind == "uniform" and gridding.mirror is None
         if white and cuts is not None:
             by_v, by_w = (np.full(grid.shape, variance) for variance in noise.variance)
             found[line] = wake_line_bias(cuts, by_v, by_w, density)
         if white and parts is not None:
             found[vortices] = vortex_sum_bias(parts, *noise.variance, density)
+    found = {name: value if name == line else counted * value for name, value in found.items()}
     if noise.fields is not None:
+        above = counted_mask(chain.settings, mask, grid)
         if cuts is not None and line not in found:
             found[line] = _paired_mean(
-                lambda v, w: evaluate_wake_line(cuts, v, w, density, reference.speed).induced_drag,
+                lambda v, w: evaluate_wake_line(cuts, v, w, density, reference.speed, mask=above).induced_drag,
                 nominal,
                 noise.fields,
             )
         if parts is not None and vortices not in found:
-            found[vortices] = _paired_mean(
+            found[vortices] = counted * _paired_mean(
                 lambda v, w: evaluate_vortex_sum(parts, v, w, density), nominal, noise.fields
             )
     found[estimate_of("total_drag", "momentum_area")] = found[energy]
     return found
 
 
-def _closed_forms(
-    grid: UniformGrid, mask: Mask, operators: tuple[Array, Array], noise: Noise, density: float
-) -> dict[str, float]:
-    wz, wy = operators
-    slope_z = difference_matrix(grid.nz) @ wz / grid.dz
-    slope_y = difference_matrix(grid.ny) @ wy / grid.dy
+def _energy_gain(gridding: Gridding, variance: tuple[float, float]) -> float:
+    """∬(σ_v² + σ_w²) dA of the gridded field, from the variances of v and w at a point, m⁴/s²."""
+    total = 0.0
+    for name, size in zip("vw", variance, strict=True):
+        operators = gridding.operators(odd=gridding.is_odd(name))
+        assert operators is not None
+        gain = np.outer((operators[0] ** 2).sum(axis=1), (operators[1] ** 2).sum(axis=1))
+        total += size * float(gridding.grid.integrate(gain))
+    return total
+
+
+def _closed_forms(gridding: Gridding, mask: Mask, noise: Noise, density: float) -> dict[str, float]:
+    grid = gridding.grid
     kernel = density * grid.cell_area * green_weights(grid.nz, grid.ny, grid.dz, grid.dy)
     region = mask.astype(float)
-    variance_v, variance_w = noise.variance
-
-    def bias(left_z: Array, left_y: Array, variance: float) -> float:
-        return quadratic_noise_bias(left_z, left_y, kernel, region, variance, correlation=noise.correlation)
-
-    return {
-        "induced_drag": bias(slope_z, wy, variance_v) + bias(wz, slope_y, variance_w),
-        "residual_drag": bias(wz, slope_y, variance_v) + bias(slope_z, wy, variance_w),
-    }
+    # D = ∂/∂y of w and −∂/∂z of v for the vorticity, ∂/∂y of v and ∂/∂z of w for the divergence.
+    across = {"v": ("z", "y"), "w": ("y", "z")}
+    found = {"induced_drag": 0.0, "residual_drag": 0.0}
+    for name, variance in zip("vw", noise.variance, strict=True):
+        operators = gridding.operators(odd=gridding.is_odd(name))
+        assert operators is not None
+        wz, wy = operators
+        slopes = {
+            "z": (difference_matrix(grid.nz) @ wz / grid.dz, wy),
+            "y": (wz, difference_matrix(grid.ny) @ wy / grid.dy),
+        }
+        for form, axis in zip(found, across[name], strict=True):
+            found[form] += quadratic_noise_bias(*slopes[axis], kernel, region, variance, correlation=noise.correlation)
+    return found
 
 
 def _mean(values: Array) -> float:

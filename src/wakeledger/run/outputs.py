@@ -6,13 +6,20 @@ from __future__ import annotations
 ROWS = (
     "profile_drag",
     "induced_drag",
+    "induced_drag_free_air",
     "residual_drag",
     "total_drag",
     "lift",
     "side_force",
     "rolling_moment",
+    "root_bending_moment",
     "span_efficiency",
 )
+#: Rows that are moments: their coefficients are on span as well.
+MOMENTS = ("rolling_moment", "root_bending_moment")
+#: Figures about the tunnel that the chain gives, NaN in free air: the boundary factor δ, the wake-blockage velocity and
+#: the upwash of the walls at the model as shares of the stream's speed, and the angle that corrects the incidence, rad.
+TUNNEL = ("boundary_factor", "wake_blockage", "wall_upwash", "angle_correction")
 #: Cross-checks the chain gives beside them, as (row, method).
 ESTIMATES = (
     ("profile_drag", "entropy_area"),
@@ -29,6 +36,11 @@ def coefficient_of(row: str) -> str:
     return f"{row} coefficient"
 
 
+def corrected_coefficient_of(row: str) -> str:
+    """Name of a row's coefficient on the blockage-corrected dynamic pressure."""
+    return f"{row} corrected coefficient"
+
+
 def estimate_of(row: str, method: str) -> str:
     """Name of an estimate among the chain's outputs."""
     return f"{row} {method}"
@@ -38,6 +50,8 @@ def estimate_of(row: str, method: str) -> str:
 OUTPUTS: tuple[str, ...] = (
     *ROWS,
     *(coefficient_of(row) for row in ROWS),
+    *(corrected_coefficient_of(row) for row in ROWS),
+    *TUNNEL,
     *(estimate_of(row, method) for row, method in ESTIMATES),
 )
 
@@ -46,5 +60,7 @@ OUTPUTS: tuple[str, ...] = (
 WITHOUT_CROSSFLOW: tuple[str, ...] = (
     "profile_drag",
     coefficient_of("profile_drag"),
+    corrected_coefficient_of("profile_drag"),
+    "wake_blockage",
     estimate_of("profile_drag", "entropy_area"),
 )

@@ -9,6 +9,7 @@ from types import MappingProxyType
 import numpy as np
 
 from wakeledger.core.grid import Array
+from wakeledger.physics.fields.boundary import Boundary, ClosedWalls, FreeAir, Reflection
 from wakeledger.physics.fields.flow import Flow
 from wakeledger.physics.fields.lifting_line import NearField
 from wakeledger.physics.fields.wake_region import Mask, WakeRegion
@@ -17,6 +18,8 @@ from wakeledger.physics.methods.wake_line import WakeCuts
 from wakeledger.physics.vortices.vortex_sum import WakeParts
 from wakeledger.run.outputs import OUTPUTS
 from wakeledger.stream.reference import Reference
+
+FREE_AIR = FreeAir()
 
 
 @dataclass(frozen=True)
@@ -49,6 +52,13 @@ class Settings:
         Whether the direction of the flow was measured; else the profile drag is all that can be had.
     turning_pressure : bool
         Whether a static pressure that was not measured includes what turns the crossflow, beside −½ρ(v² + w²).
+    boundary : FreeAir, ClosedWalls or OpenJet
+        What surrounds the survey, its reflection plane included.
+    given : mapping of str to float
+        What is known of the tunnel beforehand by its input (``boundary.solid_blockage`` as a share of the speed,
+        ``boundary.support_tare`` in N), SI.
+    model_place : (float, float) or None
+        y and z of the model between the walls, m.
     """
 
     reference: Mapping[str, float]
@@ -66,6 +76,29 @@ class Settings:
     exclude: tuple[Array, ...] = ()
     crossflow: bool = True
     turning_pressure: bool = True
+    boundary: Boundary = FREE_AIR
+    given: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
+    model_place: tuple[float, float] | None = None
+
+    @property
+    def reflection(self) -> Reflection | None:
+        """The reflection plane; the plane of data then holds both sides of it."""
+        return self.boundary.reflection
+
+    @property
+    def counted(self) -> float:
+        """Share of the whole plane's sums that the ledger counts: both halves of a half model, none below ground."""
+        return 0.5 if self.reflection == "z" else 1.0
+
+    @property
+    def bounded(self) -> bool:
+        """Whether walls or the edge of a jet surround the survey."""
+        return not isinstance(self.boundary, FreeAir)
+
+    @property
+    def blocked(self) -> bool:
+        """Whether the stream at the model differs from the reference by blockage."""
+        return isinstance(self.boundary, ClosedWalls) or "boundary.solid_blockage" in self.given
 
 
 @dataclass(frozen=True)
@@ -84,6 +117,8 @@ class Frozen:
         Wake region of the nominal plane, in which every draw is integrated.
     bias : mapping of str to float
         Noise bias of each output, in its unit, subtracted from it.
+    turned : ndarray, shape (2, nz, ny), or None
+        Crossflow that a unit rotation of the stream leaves behind through the wake region.
 
     Notes
     -----
@@ -97,6 +132,7 @@ class Frozen:
     parts: WakeParts | None = None
     region: Mask | None = None
     bias: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
+    turned: Array | None = None
 
 
 @dataclass(frozen=True)
@@ -113,12 +149,15 @@ class Variation:
         Added to the loss zero, Pa.
     crossflow_shift : (float, float)
         Added to the crossflow offset, m/s.
+    swirl_shift : float
+        Added to the stream's swirl, s⁻¹.
     """
 
     grow_factor: float = 1.0
     mask: Mask | None = None
     loss_shift: float = 0.0
     crossflow_shift: tuple[float, float] = (0.0, 0.0)
+    swirl_shift: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -151,6 +190,10 @@ class Reduction:
         Area where the expansion to the stream's pressure has no real value, m².
     residual_parts : (float, float)
         Divergence and axial part of the residual, N.
+    wake_blockage : float
+        Velocity u_b that the wake adds at the model between closed walls, m/s.
+    swirl : float
+        Solid rotation of the stream found outside the wake and taken out, s⁻¹, counter-clockwise seen from behind.
     """
 
     reference: Reference
@@ -165,6 +208,8 @@ class Reduction:
     values: Mapping[str, float]
     invalid_area: float
     residual_parts: tuple[float, float]
+    wake_blockage: float = 0.0
+    swirl: float = 0.0
 
     @property
     def drag(self) -> str:

@@ -36,15 +36,16 @@ from wakeledger.run.assembly import (
     made_unknown,
     require_rows,
 )
-from wakeledger.run.chain import Chain
+from wakeledger.run.chain import Chain, turned_crossflow
 from wakeledger.run.checks import Facts, all_checks
-from wakeledger.run.gridded import Regrid, core_spacings, grid_survey, usable_points
+from wakeledger.run.estimates import counted_mask, without_walls
+from wakeledger.run.gridded import core_spacings, grid_survey, regrid_of
 from wakeledger.run.inputs import gradients, layouts, sources
 from wakeledger.run.inspection import inspect_plane, inspect_section
 from wakeledger.run.load import SurveyInput, load, refuse_unsupported
 from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
 from wakeledger.run.numerics import numerical_terms
-from wakeledger.run.outputs import ESTIMATES, OUTPUTS, ROWS, estimate_of
+from wakeledger.run.outputs import ESTIMATES, MOMENTS, OUTPUTS, ROWS, estimate_of
 from wakeledger.run.probe_range import probe_range
 from wakeledger.run.reduction import Frozen, Reduction
 from wakeledger.run.section.survey import reduce_section
@@ -65,7 +66,7 @@ _SEES_THE_BOUND_VORTEX = {
 }
 _UNBALANCED = "the net circulation is not zero, so the induced drag depends on where the window ends"
 #: Outputs that hang on the induced drag.
-_INDUCED = ("induced_drag", "total_drag", "span_efficiency")
+_INDUCED = ("induced_drag", "induced_drag_free_air", "total_drag", "span_efficiency")
 _ASSUMED_STATIC = "at the stream's static pressure it is the algebra of the row: it tests the arithmetic, not the flow"
 _SAME_ALGEBRA = "the same algebra as the sum of the rows: it tests the arithmetic, not the flow"
 
@@ -209,10 +210,13 @@ def _prepare(survey: SurveyInput) -> Prepared:
     chain, first, vortices = gridded.chain.with_frozen_shear(), gridded.first, gridded.vortices
     reference, gridding = first.reference, chain.gridding
     near_field = chain.near_field(first.vorticity, first.flow.grid)
-    line = _line(first)
+    line = _line(chain, first)
     found = first.region.mask.any() and not math.isnan(vortices.induced_drag)
     kept = gridded.parts if found else None
-    chain = replace(chain, frozen=Frozen(near_field, line.cuts if line.reason is None else None, kept))
+    turned = None
+    if chain.swirls:
+        turned = turned_crossflow(first.region.mask, first.flow.grid, chain.settings.boundary.whole)
+    chain = replace(chain, frozen=Frozen(near_field, line.cuts if line.reason is None else None, kept, turned=turned))
     raw = gridded.raw
     declared = sources(file, points, reference) + (() if raw is None else raw.sources)
     names = sorted({name for source in declared for name in source.applies_to})
@@ -232,6 +236,7 @@ def _prepare(survey: SurveyInput) -> Prepared:
         nominal.flow.grid,
         mask=nominal.region.mask,
         near_field=near_field,
+        turned=turned if chain.swirls else None,
     )
     expected = _expected(chain, nominal)
     made = () if raw is None else traverse_notes(raw, chain, nominal)
@@ -239,10 +244,11 @@ def _prepare(survey: SurveyInput) -> Prepared:
     return Prepared(chain, nominal, outer, line, vortices, expected, declared, inputs, noises, notes)
 
 
-def _line(nominal: Reduction) -> WakeLine:
+def _line(chain: Chain, nominal: Reduction) -> WakeLine:
     flow, reference = nominal.flow, nominal.reference
     loss = reference.total_pressure - flow.total_pressure
-    return wake_line(flow.v, flow.w, flow.grid, reference.density, reference.speed, mask=nominal.region.mask, loss=loss)
+    v, w = without_walls(chain.settings, flow, nominal.forces)
+    return wake_line(v, w, flow.grid, reference.density, reference.speed, mask=nominal.region.mask, loss=loss)
 
 
 def _noises(
@@ -285,35 +291,41 @@ def _expected(chain: Chain, nominal: Reduction) -> dict[str, float]:
     """What each estimate reads above the primary one because of the bound vortex."""
     near = chain.frozen.near_field
     zero = dict.fromkeys((estimate_of(row, method) for row, method in ESTIMATES), 0.0)
+    reference, settings = nominal.reference, chain.settings
+    # The loss expands to the stream's pressure at U, and between walls to that of the faster stream, U + 2u_b.
+    share = nominal.wake_blockage / reference.speed
+    zero[estimate_of("profile_drag", "entropy_area")] = share * nominal.values["profile_drag"]
     if near is None or not (np.any(near[0]) or np.any(near[1])):
         return zero
-    flow, reference, cuts = nominal.flow, nominal.reference, chain.frozen.cuts
+    flow, cuts = nominal.flow, chain.frozen.cuts
     v0, w0 = nominal.crossflow_offset
     energy = [
-        float(crossflow_energy(v - v0, w - w0, flow.grid, density=reference.density))
+        settings.counted * float(crossflow_energy(v - v0, w - w0, flow.grid, density=reference.density))
         for v, w in ((flow.v, flow.w), (flow.v - near[0], flow.w - near[1]))
     ]
     excess = energy[0] - energy[1]
     zero[estimate_of("induced_drag", "energy_area")] = excess
     # The momentum balance over the window holds the axial disturbance as well, with the other sign.
-    axial = 0.5 * reference.density * float(flow.grid.integrate(near.u**2))
+    axial = 0.5 * reference.density * settings.counted * float(flow.grid.integrate(near.u**2))
     zero[estimate_of("total_drag", "momentum_area")] = excess - axial
     if cuts is not None:
-        here = evaluate_wake_line(cuts, flow.v, flow.w, reference.density, reference.speed)
-        there = evaluate_wake_line(cuts, flow.v - near[0], flow.w - near[1], reference.density, reference.speed)
+        v, w = without_walls(settings, flow, nominal.forces)
+        mask = counted_mask(settings, nominal.region.mask, flow.grid)
+        here, there = (
+            evaluate_wake_line(cuts, *field, reference.density, reference.speed, mask=mask)
+            for field in ((v, w), (v - near[0], w - near[1]))
+        )
         zero[estimate_of("induced_drag", "wake_line")] = float(here.induced_drag - there.induced_drag)
         zero[estimate_of("lift", "wake_line")] = float(here.lift - there.lift)
     return zero
 
 
 def _terms(prepared: Prepared, survey: SurveyInput) -> tuple[NumericalTerm, ...]:
-    points = survey.points
-    usable = usable_points(prepared.chain.state(prepared.nominal.reference))
     return numerical_terms(
         prepared.chain,
         prepared.nominal,
         outer=prepared.outer,
-        regrid=Regrid(points.y, points.z, usable, points.row),
+        regrid=regrid_of(survey, prepared.chain.state(prepared.nominal.reference)),
         method_uncertainty=_method_uncertainty(prepared),
         noise=_noise_draws(prepared, seed=survey.survey.uncertainty.seed),
     )
@@ -329,8 +341,14 @@ def _method_uncertainty(prepared: Prepared) -> dict[str, float]:
     }
     if chain.frozen.cuts is not None and near is not None:
         # The bound vortex makes families of paths differ as predicted; what is left over is the method's doubt.
+        v, w = without_walls(chain.settings, flow, nominal.forces)
         far = evaluate_wake_line(
-            chain.frozen.cuts, flow.v - near[0], flow.w - near[1], reference.density, reference.speed
+            chain.frozen.cuts,
+            v - near[0],
+            w - near[1],
+            reference.density,
+            reference.speed,
+            mask=counted_mask(chain.settings, nominal.region.mask, flow.grid),
         )
         found[estimate_of("induced_drag", "wake_line")] = float(path_scatter(far.family_drag))
     return found
@@ -489,4 +507,4 @@ def _scales(prepared: Prepared) -> dict[str, float]:
     """Force, or moment, of a unit coefficient by row."""
     settings = prepared.chain.settings
     force = prepared.nominal.reference.dynamic_pressure * settings.reference_area
-    return dict.fromkeys(ROWS, force) | {"rolling_moment": force * settings.span}
+    return dict.fromkeys(ROWS, force) | dict.fromkeys(MOMENTS, force * settings.span)

@@ -171,6 +171,11 @@ class FreeAir:
         """The same configuration in free air: itself."""
         return self
 
+    @property
+    def whole(self) -> FreeAir:
+        """What surrounds both halves together, for a window that holds both."""
+        return FreeAir()
+
 
 @dataclass(frozen=True)
 class ClosedWalls:
@@ -199,6 +204,11 @@ class ClosedWalls:
     def free(self) -> FreeAir:
         """The same configuration in free air."""
         return FreeAir(self.reflection)
+
+    @property
+    def whole(self) -> ClosedWalls:
+        """What surrounds both halves together, for a window that holds both."""
+        return ClosedWalls(self.section)
 
     @property
     def flow_area(self) -> float:
@@ -238,6 +248,11 @@ class OpenJet:
     def free(self) -> FreeAir:
         """The same configuration in free air."""
         return FreeAir(self.reflection)
+
+    @property
+    def whole(self) -> OpenJet:
+        """What surrounds both halves together, for a window that holds both."""
+        return OpenJet(self.section)
 
     @property
     def flow_area(self) -> float:

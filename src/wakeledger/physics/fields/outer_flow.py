@@ -33,6 +33,8 @@ class OuterFlow:
         Mean crossflow not explained by the wake's vorticity, m/s.
     offset_uncertainty : float
         Standard uncertainty of each offset from the scatter between blocks, m/s.
+    swirl_uncertainty : float
+        Standard uncertainty of the stream's rotation, s⁻¹; NaN where it was not looked for.
     """
 
     share: float
@@ -41,6 +43,7 @@ class OuterFlow:
     v_offset: float
     w_offset: float
     offset_uncertainty: float
+    swirl_uncertainty: float = float("nan")
 
 
 def loss_zero(loss: Array, mask: Mask) -> float:
@@ -76,13 +79,61 @@ def crossflow_offset(v: Array, w: Array, psi: Array, near_field: tuple[Array, ..
     return result
 
 
+def stream_swirl(left_over: Array, turned: Array, grid: UniformGrid, outer: Array) -> float:
+    """Solid rotation of the stream that fits the crossflow left over outside the wake, s⁻¹.
+
+    Parameters
+    ----------
+    left_over : ndarray, shape (2, nz, ny)
+        Measured crossflow less that of the wake's vorticity, m/s.
+    turned : ndarray, shape (2, nz, ny)
+        Crossflow that the vorticity of a unit rotation inside the wake region induces, which the wake's own holds, m.
+    grid : UniformGrid
+        The grid.
+    outer : ndarray, shape (nz, ny)
+        Weight of each place, 1 outside the wake.
+
+    Returns
+    -------
+    float
+        ω of v = v0 − ωz, w = w0 + ωy by least squares, counter-clockwise seen from behind; 0 without outer flow.
+    """
+    if np.count_nonzero(outer) < LEAST_SHARE * outer.size:
+        return 0.0
+    weight = outer / outer.sum()
+    yy, zz = grid.mesh()
+    shape = np.stack([-zz, yy]) - turned
+    shape = shape - np.einsum("kzy,zy->k", shape, weight)[:, None, None]
+    return float(np.sum(weight * shape * left_over) / np.sum(weight * shape**2))
+
+
+def swirl_scatter(left_over: Array, turned: Array, grid: UniformGrid, outer: Array) -> float:
+    """Standard uncertainty of `stream_swirl` by leaving out one block of the window after the other, s⁻¹."""
+    found = []
+    for rows in np.array_split(np.arange(grid.nz), _BLOCKS):
+        for columns in np.array_split(np.arange(grid.ny), _BLOCKS):
+            kept = outer.copy()
+            kept[np.ix_(rows, columns)] = 0.0
+            found.append(stream_swirl(left_over, turned, grid, kept))
+    count = len(found)
+    return float(np.sqrt((count - 1) / count * np.sum((np.array(found) - np.mean(found)) ** 2)))
+
+
 def induced_crossflow(psi: Array, grid: UniformGrid) -> Array:
     """Crossflow (∂ψ/∂z, −∂ψ/∂y) of a stream function, stacked on a new first axis, m/s."""
     return np.stack([ddz(psi, grid), -ddy(psi, grid)])
 
 
 def outer_flow(
-    loss: Array, v: Array, w: Array, psi: Array, grid: UniformGrid, *, mask: Mask, near_field: tuple[Array, ...]
+    loss: Array,
+    v: Array,
+    w: Array,
+    psi: Array,
+    grid: UniformGrid,
+    *,
+    mask: Mask,
+    near_field: tuple[Array, ...],
+    turned: Array | None = None,
 ) -> OuterFlow:
     """Zeros of the survey from the flow outside the wake.
 
@@ -100,6 +151,8 @@ def outer_flow(
         The wake region.
     near_field : NearField, or any tuple of two or more ndarrays of shape (nz, ny)
         Crossflow that the bound vortex adds, m/s (`wakeledger.physics.fields.lifting_line`).
+    turned : ndarray, shape (2, nz, ny), optional
+        As in `stream_swirl`, where the stream may rotate.
 
     Returns
     -------
@@ -122,6 +175,7 @@ def outer_flow(
         float(v_offset),
         float(w_offset),
         float(scatter),
+        float("nan") if turned is None else swirl_scatter(np.stack([left_v, left_w]), turned, grid, outer),
     )
 
 

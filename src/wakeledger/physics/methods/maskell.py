@@ -78,7 +78,7 @@ def wake_blockage(
     """
     star = loss_free_axial_velocity(flow, reference) if loss_free is None else loss_free
     drag = flow.grid.integrate(np.where(mask, profile_integrand(flow, reference, star), 0.0))
-    return _blocked(drag, wake_deficit(flow, star, mask), reference, boundary)
+    return with_blockage(drag, wake_deficit(flow, star, mask), reference, boundary)
 
 
 def wake_deficit(flow: Flow, loss_free: Array, mask: Mask) -> Array:
@@ -100,8 +100,28 @@ def wake_deficit(flow: Flow, loss_free: Array, mask: Mask) -> Array:
     return flow.grid.integrate(np.where(mask, loss_free - flow.u, 0.0))
 
 
-def _blocked(betz: Array, deficit: Array, reference: Reference, boundary: Boundary) -> WakeBlockage:
-    """Betz's drag less ρu_b∬(u* − u) dA, which is the same integral with U + u_b instead of U."""
+def with_blockage(betz: Array, deficit: Array, reference: Reference, boundary: Boundary) -> WakeBlockage:
+    """Wake blockage from Betz's integral of a plane and the volume flow that its wake lacks.
+
+    Parameters
+    ----------
+    betz : ndarray, shape (...)
+        Betz's integral over the wake region, N.
+    deficit : ndarray, shape (...)
+        `wake_deficit` over the same region, m³/s.
+    reference : Reference
+        The undisturbed stream.
+    boundary : FreeAir, ClosedWalls or OpenJet
+        What surrounds the plane.
+
+    Returns
+    -------
+    WakeBlockage
+
+    Notes
+    -----
+    D_p is Betz's drag less ρu_b∬(u* − u), which is the same integral with U + u_b instead of U.
+    """
     density, speed = reference.density, reference.speed
     betz, deficit = np.asarray(betz, float), np.asarray(deficit, float)
     if not isinstance(boundary, ClosedWalls):

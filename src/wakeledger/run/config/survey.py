@@ -15,6 +15,7 @@ from wakeledger.core.errors import SurveyError
 from wakeledger.run.config.errors import survey_error
 from wakeledger.run.config.plan import PlanTable
 from wakeledger.run.config.plane import Plane, check_positions, check_primary
+from wakeledger.run.config.probe_corrections import check_probe_corrections
 from wakeledger.run.config.quantities import Label, Table, below, fail, one_or_more_tables, tables
 from wakeledger.run.config.rake import check_rake, check_static, is_directed, is_rake
 from wakeledger.run.config.stream import ModelTable, ReferenceTable
@@ -118,6 +119,7 @@ class Survey(Table):
             edge_static = self.section.edge_static if self.section else None
             if plane.primary == "hole_pressures" and self.probe:
                 check_rake(plane, self.probe)
+                check_probe_corrections(plane, self.probe, empty_tunnel=self.empty_tunnel is not None)
                 if self.section is not None and edge_static != "stream":
                     check_static(plane, self.probe)
             try:
@@ -204,21 +206,22 @@ class Survey(Table):
                 "[plane.columns] tube",
                 'tubes are only told apart with primary = "hole_pressures"; give each point\'s position',
             )
+            add(
+                "roll" in plane.columns and not raw,
+                "[plane.columns] roll",
+                'the roll of each point is only used with primary = "hole_pressures"; turn the components beforehand',
+            )
         holes_measured = any(plane.primary == "hole_pressures" for plane in self.planes)
         add(
             self.probe and not holes_measured,
             "[probe]",
             'a probe is only used with primary = "hole_pressures"; leave it out',
         )
-        add(self.empty_tunnel, "[empty_tunnel]", "an empty-tunnel survey is not subtracted yet; leave it out")
-        if self.boundary is not None:
-            add(
-                self.boundary.reflection,
-                "[boundary] reflection",
-                "half models and ground planes are not computed yet; leave it out and survey both sides",
-            )
-        if self.boundary is not None and self.boundary.kind != "free_air":
-            add(True, "[boundary] kind", f'"{self.boundary.kind}" is not computed yet; only "free_air" is')
+        add(
+            self.empty_tunnel and self.section is not None,
+            "[empty_tunnel]",
+            "the empty tunnel is not taken out of a line traverse; leave it out",
+        )
         add(self.body, "[[body]]", "bodies are not told apart yet; leave it out")
         add(self.loading, "[loading]", "the least induced drag of a trailing edge is not computed yet; leave it out")
         for source in self.uncertainty.source:

@@ -7,6 +7,16 @@ from typing import Annotated, Any, Literal
 
 from pydantic import Field, PlainValidator, model_validator
 
+from wakeledger.physics.fields.boundary import (
+    Boundary,
+    Circle,
+    ClosedWalls,
+    FreeAir,
+    OpenJet,
+    Rectangle,
+    Section,
+)
+from wakeledger.physics.fields.boundary import Polygon as PolygonSection
 from wakeledger.run.config.quantities import (
     Angle,
     Duration,
@@ -32,6 +42,7 @@ from wakeledger.run.config.quantities import (
     listed,
     parse_quantity,
 )
+from wakeledger.run.config.tunnel import TunnelCorrections
 
 
 def _date(value: Any) -> str:
@@ -93,6 +104,22 @@ def _backlash(value: Any) -> float | Literal["estimate"]:
     return parse_quantity(value, "m", least=0.0)
 
 
+def _places(value: Any) -> tuple[float, ...]:
+    def parse(item: Any) -> float:
+        return parse_quantity(item, "m")
+
+    many: Validator = listed(parse, 'one place, or a list of them: ["-0.45 m", "0.45 m"]')
+    found: tuple[float, ...] = many(value if isinstance(value, list) else [value])
+    return found
+
+
+class ProbeWalls(Table):
+    """Walls near a probe's way: places of those that stand across y, and of those across z, m."""
+
+    y: Annotated[tuple[float, ...], PlainValidator(_places)] = ()
+    z: Annotated[tuple[float, ...], PlainValidator(_places)] = ()
+
+
 class ProbeTable(Table):
     """``[probe]``, or one tube of a rake in ``[[probe]]``."""
 
@@ -108,6 +135,8 @@ class ProbeTable(Table):
     lag: Duration | None = None
     displacement: NumberFromZero | None = None
     backlash: Annotated[float | Literal["estimate"], PlainValidator(_backlash)] | None = None
+    walls: ProbeWalls | None = None
+    misalignment: Literal["roll_pair", "outer_flow"] | None = None
 
 
 class EmptyTunnelTable(Table):
@@ -116,7 +145,7 @@ class EmptyTunnelTable(Table):
     survey: Text = Field(description='survey = "empty.toml" (the survey of the empty tunnel)')
 
 
-class BoundaryTable(Table):
+class BoundaryTable(TunnelCorrections):
     """``[boundary]``: what surrounds the survey.
 
     Attributes
@@ -129,8 +158,10 @@ class BoundaryTable(Table):
         Of a circle, or of a polygon, m.
     reflection : {"y", "z"} or None
         Half model (plane y = 0), or ground plane (z = 0).
-    inboard_cut : float
-        Distance from the symmetry plane that was not surveyed, m.
+    inboard_cut : float or None
+        Distance from the symmetry plane inside which points are left out and filled from outside it, m.
+    model_centre : (float, float) or None
+        y and z of the model, m, where the upwash of the walls is wanted.
     """
 
     kind: Literal["free_air", "closed_walls", "open_jet"] = Field(
@@ -144,6 +175,29 @@ class BoundaryTable(Table):
     vertices: Polygon | None = None
     reflection: Literal["y", "z"] | None = None
     inboard_cut: LengthFromZero | None = None
+    model_centre: Point | None = None
+
+    def surroundings(self) -> Boundary:
+        """The boundary in the terms of the physics, its reflection plane included.
+
+        Raises
+        ------
+        SurveyError
+            If the section does not fit the reflection plane.
+        """
+        if self.kind == "free_air":
+            return FreeAir(self.reflection)
+        found: Section
+        if self.diameter is not None:
+            found = Circle(self.diameter, self.centre or (0.0, 0.0))
+        elif self.vertices is not None:
+            found = PolygonSection(tuple((float(y), float(z)) for y, z in self.vertices))
+        else:
+            assert self.y is not None
+            assert self.z is not None
+            found = Rectangle(self.y, self.z)
+        kind = ClosedWalls if self.kind == "closed_walls" else OpenJet
+        return kind(found, self.reflection)
 
     @model_validator(mode="after")
     def _belongs_together(self) -> BoundaryTable:
@@ -151,12 +205,12 @@ class BoundaryTable(Table):
         allowed = {**needed, "circle": ("diameter", "centre")}
         section = self.section or "rectangle"
         walls = self.kind != "free_air"
-        for key in ("section", "y", "z", "diameter", "centre", "vertices"):
+        for key in ("section", "y", "z", "diameter", "centre", "vertices", "model_centre"):
             if getattr(self, key) is None:
                 continue
             if not walls:
                 raise fail(f'{key} is given in kind = "free_air"', "leave it out, or say which kind of walls", key)
-            if key != "section" and key not in allowed[section]:
+            if key not in ("section", "model_centre") and key not in allowed[section]:
                 raise fail(
                     f"{key} is given for a {section}", f"a {section} takes {' and '.join(allowed[section])}", key
                 )
