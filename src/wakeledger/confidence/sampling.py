@@ -163,7 +163,8 @@ class SourceErrors:
         if source.from_samples and layout.std is not None:
             scale *= layout.std
         scale[~np.isfinite(nominal) | ~np.isfinite(scale)] = 0.0
-        latents, expand = layout.size, None
+        latents = layout.size
+        expand: Expansion | None = None
         if source.effect == "systematic":
             latents, expand = 1, _Repeated(layout.size)
         elif source.effect == "per_row" and layout.row is not None:

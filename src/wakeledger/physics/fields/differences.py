@@ -79,8 +79,8 @@ def ddz(field: Array, grid: UniformGrid, *, order: int = ORDER) -> Array:
 
 
 @lru_cache(maxsize=32)
-def _ends(n: int, order: int) -> tuple[Array, Array, Array, int]:
-    """Interior stencil, the rows of the matrix near either end as dense blocks, and how many rows those are."""
+def end_blocks(n: int, order: int) -> tuple[Array, Array, Array, int]:
+    """Interior stencil, the rows of `difference_matrix` near either end as dense blocks, and their number."""
     weights = _CENTRAL[order]
     edge = min(len(weights), (n + 1) // 2)
     width = min(n, edge + len(weights) + 1)
@@ -93,7 +93,7 @@ def _along(field: Array, axis: int, order: int) -> Array:
     n = field.shape[axis]
     if n < 3:
         raise ValueError(f"a derivative needs at least 3 points along each axis, {n} were given")
-    stencil, first, last, edge = _ends(n, order)
+    stencil, first, last, edge = end_blocks(n, order)
     out: Array = ndimage.correlate1d(field, stencil, axis=axis, mode="nearest")
     # The ends are done again with the shorter stencils that fit there.
     source, target = (field, out) if axis == -1 else (np.swapaxes(field, -1, -2), np.swapaxes(out, -1, -2))

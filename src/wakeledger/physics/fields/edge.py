@@ -60,7 +60,7 @@ def edge_integrals(v: Array, w: Array, grid: UniformGrid) -> Edge:
     -------
     Edge
     """
-    shape = _edge_shape(grid)
+    shape = edge_shape(grid)
     # Side by side: tangential and outward velocity along the direction of travel.
     sides = (
         (v[..., 0, :], -w[..., 0, :], grid.dy),
@@ -92,7 +92,7 @@ def edge_integrals(v: Array, w: Array, grid: UniformGrid) -> Edge:
 
 
 @dataclass(frozen=True, eq=False)
-class _EdgeShape:
+class EdgeShape:
     """Places along the edge, the share of it travelled at each, and the functional that gives ψ its constant."""
 
     y: Array
@@ -103,7 +103,7 @@ class _EdgeShape:
 
 
 @lru_cache(maxsize=8)
-def _edge_shape(grid: UniformGrid) -> _EdgeShape:
+def edge_shape(grid: UniformGrid) -> EdgeShape:
     """The constant c in ψ = c − (Γ/2π) ln r + decaying multipoles is linear in ψ: a row of a least-squares inverse."""
     y, z = grid.y, grid.z
     ys = np.concatenate([y, np.full(grid.nz, y[-1]), y[::-1], np.full(grid.nz, y[0])])
@@ -117,4 +117,4 @@ def _edge_shape(grid: UniformGrid) -> _EdgeShape:
         decay = (distance.max() / distance) ** n
         columns += [decay * np.cos(n * angle), decay * np.sin(n * angle)]
     constant: Array = np.linalg.pinv(np.stack(columns, axis=1))[0]
-    return _EdgeShape(ys, zs, travelled / travelled[-1], constant, float(constant @ np.log(distance)) / (2 * np.pi))
+    return EdgeShape(ys, zs, travelled / travelled[-1], constant, float(constant @ np.log(distance)) / (2 * np.pi))

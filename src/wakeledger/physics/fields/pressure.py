@@ -12,6 +12,7 @@ p + ½ρV² then sees the crossflow through p' alone.
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.differences import axial_vorticity, ddy, ddz
@@ -40,10 +41,17 @@ def crossflow_pressure(v: Array, w: Array, grid: UniformGrid, *, density: float)
         the axial disturbance of a body close by.
     """
     xi = axial_vorticity(v, w, grid)
-    # One-sided differences are correlated with the value at their own place, so they would rectify noise.
+    xi = np.where(inner_window(grid), xi, 0.0)
+    source = ddy(xi * w, grid) - ddz(xi * v, grid)
+    return -0.5 * density * (v**2 + w**2) - density * stream_function(source, grid)
+
+
+def inner_window(grid: UniformGrid) -> NDArray[np.bool_]:
+    """Places whose vorticity counts as a source of pressure, shape (nz, ny).
+
+    One-sided differences, in the rim, are correlated with the value at their own place, so they would rectify noise.
+    """
     rim_z, rim_y = min(_RIM, grid.nz // 4), min(_RIM, grid.ny // 4)
     inner = np.zeros(grid.shape, dtype=bool)
     inner[rim_z : grid.nz - rim_z, rim_y : grid.ny - rim_y] = True
-    xi = np.where(inner, xi, 0.0)
-    source = ddy(xi * w, grid) - ddz(xi * v, grid)
-    return -0.5 * density * (v**2 + w**2) - density * stream_function(source, grid)
+    return inner
