@@ -30,6 +30,7 @@ from wakeledger.run.config.tables import (
     WakeTable,
 )
 from wakeledger.run.config.text_file import read_toml_text
+from wakeledger.run.config.tunnel import check_walls
 from wakeledger.run.config.uncertainty import Comparison, UncertaintyTable, allowed_targets, refuse_twice
 
 
@@ -113,6 +114,8 @@ class Survey(Table):
                 "table [boundary] is missing",
                 'add [boundary] with kind = "free_air", "closed_walls" or "open_jet": it is never assumed',
             )
+        if self.boundary is not None:
+            check_walls(self.boundary, None if self.section is None else self.plane)
         bound_line = None if self.model is None else self.model.quarter_chord()
         for index, plane in enumerate(self.planes):
             place: tuple[str | int, ...] = ("plane", index)

@@ -214,7 +214,9 @@ class BoundaryTable(TunnelCorrections):
                 raise fail(
                     f"{key} is given for a {section}", f"a {section} takes {' and '.join(allowed[section])}", key
                 )
-        for key in needed[section] if walls else ():
+        # Two walls are enough beside a section's line traverse; whether there is one is for the survey to say.
+        two_walls = self.kind == "closed_walls" and section == "rectangle" and not (self.y is None and self.z is None)
+        for key in needed[section] if walls and not two_walls else ():
             if getattr(self, key) is None:
                 raise fail(
                     f"key {key!r} is missing", f"a {section} of {self.kind} needs {' and '.join(needed[section])}"

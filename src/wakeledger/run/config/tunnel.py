@@ -16,13 +16,17 @@ import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from types import MappingProxyType
-from typing import Any, ClassVar
+from typing import TYPE_CHECKING, Any, ClassVar
 
 from pydantic import Field, PrivateAttr, model_validator
 from pydantic_core import PydanticCustomError
 
 from wakeledger.core.units import DIMENSIONS
 from wakeledger.run.config.quantities import PositiveNumber, Table, Text, below, fail, parse_quantity
+
+if TYPE_CHECKING:
+    from wakeledger.run.config.plane import Plane
+    from wakeledger.run.config.tables import BoundaryTable
 
 
 @dataclass(frozen=True)
@@ -213,3 +217,74 @@ def parse_below(written: Any, si_unit: str, key: str, *, difference: bool = Fals
         return parse_quantity(written, si_unit, difference=difference, least=least)
     except PydanticCustomError as error:
         raise below(error, key) from error
+
+
+def section_height(boundary: BoundaryTable | None, along: str) -> float | None:
+    """Distance of the walls beside a section's line traverse, m; None where there are none.
+
+    Parameters
+    ----------
+    boundary : BoundaryTable or None
+        ``[boundary]`` of a survey with a ``[section]``.
+    along : {"y", "z"}
+        Along which axis the traverse runs, and across which the walls stand.
+
+    Returns
+    -------
+    float or None
+    """
+    if boundary is None or boundary.kind == "free_air":
+        return None
+    walls: tuple[float, float] = getattr(boundary, along)
+    return walls[1] - walls[0]
+
+
+def check_walls(boundary: BoundaryTable, line: Plane | None) -> None:
+    """Refuse walls that do not fit what was surveyed.
+
+    Parameters
+    ----------
+    boundary : BoundaryTable
+        ``[boundary]``.
+    line : Plane or None
+        The line traverse of a survey with a ``[section]``; None for a plane.
+
+    Raises
+    ------
+    PydanticCustomError
+        If a rectangle round a plane has only two walls, or what surrounds a section's traverse is not two parallel
+        closed walls across it.
+    """
+    place = "boundary"
+    if line is None:
+        if boundary.kind != "free_air" and boundary.diameter is None and boundary.vertices is None:
+            for key in ("y", "z"):
+                if getattr(boundary, key) is None:
+                    raise fail(f"key {key!r} is missing", f"a rectangle of {boundary.kind} needs y and z", place)
+        return
+    along = "y" if line.axes.file_axis("y") in line.columns else "z"
+    for key in ("reflection", "inboard_cut", "model_centre", "buoyancy", "support_tare"):
+        if getattr(boundary, key, None) is not None:
+            raise fail(
+                f"{key} is given beside a [section]", "a line traverse does not use it: leave it out", place, key
+            )
+    if boundary.kind == "free_air":
+        return
+    if boundary.kind != "closed_walls":
+        raise fail(
+            f'kind = "{boundary.kind}" is given beside a [section]',
+            'the two-dimensional wall corrections are those of closed walls: write "closed_walls" or "free_air"',
+            place,
+            "kind",
+        )
+    if boundary.diameter is not None or boundary.vertices is not None:
+        raise fail(
+            f'section = "{boundary.section}" is given beside a [section]',
+            f"its walls are two parallel ones: give {along} alone, as {along} = ['-0.5 m', '0.5 m']",
+            place,
+            "section",
+        )
+    if getattr(boundary, along) is None:
+        raise fail(
+            f"key {along!r} is missing", f"the traverse runs along {along}: give the walls at both ends of it", place
+        )
