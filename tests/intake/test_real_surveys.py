@@ -65,9 +65,3 @@ def test_sampled_slice_of_a_flow_solution():
     assert points.line[0] == 3
     assert points.z[0] == -0.00496467449
     assert points.channels["u"].values[0] == 29.9609356
-
-
-@pytest.mark.parametrize(("name", "kind"), [("slice_x1.0.vtp", "VTK XML"), ("slice_x2.0_legacy.vtk", "legacy VTK")])
-def test_solution_formats_are_recognised(name, kind):
-    with pytest.raises(DataError, match=kind):
-        read_points(REFERENCE / "cfd_wing" / name, {key: Column(key, "m") for key in "yzu"}, axes=np.eye(3))

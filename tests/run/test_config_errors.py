@@ -127,7 +127,7 @@ BROKEN = [
     ([('"U", unit = "m/s"', '"U", unit = "m/s", normalised_by = "speed"')],
      "[plane.columns] u.unit", "a velocity", 'unit = "1"'),
     ([('"T", unit = "degC"', '"T", unit = "1", normalised_by = "speed"')],
-     "[plane.columns] temperature.normalised_by", "temperature is normalised_by", "leave it out"),
+     "[plane.columns] temperature.normalised_by", "temperature is normalised_by", '"total_temperature"'),
     ([('"ps", unit = "Pa", relative_to = "static"', '"ps", unit = "m^2/s^2"')],
      "[plane.columns] static_pressure.unit", "a velocity squared", "kinematic = true"),
     ([('"ps", unit = "Pa"', '"ps", unit = "Pa", kinematic = true')],

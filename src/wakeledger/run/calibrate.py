@@ -102,8 +102,12 @@ def read_calibration_table(probe: ProbeFile) -> CalibrationTable:
     from wakeledger.intake.readers.table import read_table
 
     columns = dict(probe.columns)
-    reader = {"table": read_table, "netcdf": read_netcdf}[recognise(probe.file)]
-    raw = reader(probe.file, columns)
+    kind = recognise(probe.file)
+    if kind not in {"table", "netcdf"}:
+        raise DataError(
+            "a calibration is read from tables and netCDF only", file=probe.file, remedy="write it as one of these"
+        )
+    raw = read_table(probe.file, columns) if kind == "table" else read_netcdf(probe.file, columns)
     values = {}
     for name, column in columns.items():
         numbers = raw.values[name]

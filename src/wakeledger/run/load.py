@@ -153,19 +153,23 @@ def load_survey(survey: Survey) -> SurveyInput:
         If the survey asks for what this version does not do, or its data are wrong.
     """
     refuse_unsupported(survey)
-    from wakeledger.intake.readers import read_points
+    from wakeledger.intake.readers import digest_of, read_points
 
     plane = survey.plane
-    file = survey.resolve(plane.file)
+    files = [survey.resolve(name) for name in plane.files]
     points = read_points(
-        file,
+        files,
         plane.columns,
         axes=plane.axes.matrix(),
         std=plane.std,
         samples=plane.samples,
         coordinates=2 if survey.section is None else 1,
+        station=plane.station,
+        trailing_edge_x=plane.trailing_edge_x,
+        time=plane.time,
     )
-    inputs = {survey.path.name: survey.sha256, plane.file: hashlib.sha256(file.read_bytes()).hexdigest()}
+    inputs = {survey.path.name: survey.sha256}
+    inputs |= {name: digest_of(file) for name, file in zip(plane.files, files, strict=True)}
     calibrations = {}
     for name in _calibrations_named(survey):
         from wakeledger.run.calibrate import load_calibration

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import hashlib
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from types import MappingProxyType
 
@@ -12,34 +13,40 @@ from numpy.typing import NDArray
 from wakeledger.core.errors import DataError
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Channel, Column, Points
-from wakeledger.intake.readers.columns import POSITIONS, RawColumns
+from wakeledger.intake.readers.cfd import KINDS, files_of, read_mesh
+from wakeledger.intake.readers.columns import POSITIONS, Cut, RawColumns
+from wakeledger.intake.readers.joining import read_joined
+from wakeledger.intake.readers.matlab import read_matlab
 from wakeledger.intake.readers.netcdf import read_netcdf
 from wakeledger.intake.readers.recognise import recognise
 from wakeledger.intake.readers.table import read_table
 
-__all__ = ["read_points", "recognise"]
+__all__ = ["digest_of", "read_points", "recognise"]
 
-_READERS = {"table": read_table, "netcdf": read_netcdf}
 _NO_STD: Mapping[str, Column] = MappingProxyType({})
 #: Largest spread of the streamwise position of one plane, as a share of the plane's size.
 _PLANE_THICKNESS = 0.02
 
 
 def read_points(
-    path: Path | str,
+    path: Path | str | Sequence[Path | str],
     columns: Mapping[str, Column],
     *,
     axes: Array,
     std: Mapping[str, Column] = _NO_STD,
     samples: Column | None = None,
     coordinates: int = 2,
+    station: float | None = None,
+    trailing_edge_x: float = 0.0,
+    time: float | None = None,
 ) -> Points:
     """Read the points of one plane from a file.
 
     Parameters
     ----------
-    path : path
-        A delimited text table or a netCDF file.
+    path : path, or sequence of paths
+        A delimited text table, netCDF, MATLAB, VTK or CGNS file, or the folder of an OpenFOAM case. Several are of one
+        plane, with other variables each, and joined by position.
     columns : mapping of str to Column
         Where each variable stands, by name. Positions are two of ``x``, ``y``, ``z`` along the file's axes, or ``r``
         and ``theta`` with y = r cos(theta), z = r sin(theta) in wind axes, theta positive from starboard towards up.
@@ -52,6 +59,12 @@ def read_points(
         Number of samples behind each point.
     coordinates : {1, 2}
         How many positions across the stream place a point; with one, as of a line traverse, the other is 0.
+    station : float, optional
+        Distance of the plane behind the trailing edge, m: where volumes are cut, and where a mesh must have its plane.
+    trailing_edge_x : float, optional
+        Where the trailing edge stands along the wind x axis in the file's coordinates, m.
+    time : float, optional
+        Instant of a case that holds several; the latest by default.
 
     Returns
     -------
@@ -62,14 +75,27 @@ def read_points(
     ------
     DataError
         If the file cannot be read, or what it holds is no plane of points; names file, line and column.
+    MissingPackageError
+        If the package that reads the file's format is not installed.
     """
-    file = Path(path)
+    paths = [Path(path)] if isinstance(path, str | Path) else [Path(one) for one in path]
+    file = paths[0]
     axes = np.asarray(axes, dtype=float)
     wanted = dict(columns) | {f"std.{name}": column for name, column in std.items()}
     if samples is not None:
         wanted["samples"] = samples
-    _require_positions(columns, axes, file, coordinates)
-    raw = _READERS[recognise(file)](file, wanted)
+    kinds = [recognise(one) for one in paths]
+    if all(kind in KINDS for kind in kinds):
+        wanted = _with_mesh_positions(wanted)
+        columns = wanted
+    else:
+        _require_positions(columns, axes, file, coordinates)
+    cut = _cut(axes, station, trailing_edge_x, time, line=coordinates == 1)
+    if len(paths) == 1:
+        raw = _read(file, kinds[0], wanted, cut)
+    else:
+        kind_of = dict(zip(paths, kinds, strict=True))
+        raw = read_joined(paths, wanted, lambda one, some: _read(one, kind_of[one], some, cut))
     named = _named(wanted)
     _refuse_infinite(raw, named, file)
     y, z = _positions(raw, columns, axes, file)
@@ -90,12 +116,60 @@ def read_points(
         z=z,
         channels=MappingProxyType(channels),
         line=raw.line,
-        source=str(path),
+        source=", ".join(str(one) for one in paths),
         axes=axes,
         std=MappingProxyType(_deviations(raw, named, file)),
         samples=_integers(raw, "samples", named, file, least=1),
         row=_integers(raw, "row", named, file),
+        triangles=raw.triangles,
+        areas=None if raw.areas is None else named["x"].scale ** 2 * raw.areas,
+        how=raw.how,
     )
+
+
+def digest_of(path: Path) -> str:
+    """SHA-256 of a data file and of all that it rests on, in hexadecimal digits.
+
+    Parameters
+    ----------
+    path : Path
+        A file, or the folder of a case.
+
+    Returns
+    -------
+    str
+        Of a single file the usual one; of several, of all of them one after the other.
+    """
+    digest = hashlib.sha256()
+    for file in files_of(path, recognise(path)):
+        with file.open("rb") as stream:
+            while block := stream.read(1 << 20):
+                digest.update(block)
+    return digest.hexdigest()
+
+
+def _read(path: Path, kind: str, columns: Mapping[str, Column], cut: Cut) -> RawColumns:
+    if kind in KINDS:
+        return read_mesh(path, kind, columns, cut)
+    if cut.time is not None:
+        raise DataError("time is given, and the file holds one instant", file=path, remedy="leave time out of [plane]")
+    volume = None if np.isnan(cut.position) else cut
+    if kind == "matlab":
+        return read_matlab(path, columns, volume)
+    return read_table(path, columns) if kind == "table" else read_netcdf(path, columns, volume)
+
+
+def _cut(axes: Array, station: float | None, trailing_edge_x: float, time: float | None, *, line: bool) -> Cut:
+    letter, sign = _wind_axis(axes, 0)
+    place = float("nan") if station is None else station
+    position = sign * (place + trailing_edge_x) + 0.0
+    return Cut("xyz".index(letter), position, place, trailing_edge_x, line=line, time=time)
+
+
+def _with_mesh_positions(columns: Mapping[str, Column]) -> dict[str, Column]:
+    """Columns with all three positions: a mesh has them, and one unit of length."""
+    given = next((columns[key] for key in "xyz" if key in columns), Column("x", "m"))
+    return {key: Column(key, given.unit, given.scale) for key in "xyz"} | dict(columns)
 
 
 def _named(wanted: Mapping[str, Column]) -> dict[str, Column]:

@@ -20,6 +20,7 @@ POSITIONS: Mapping[str, str] = {"x": "m", "y": "m", "z": "m", "r": "m", "theta":
 _OTHER_UNITS: Mapping[str, str] = {
     "row": "1",
     "tube": "1",
+    "roll": "rad",
     "samples": "1",
     "time": "s",
     "velocity": "m s-1",
@@ -41,11 +42,76 @@ class RawColumns:
         Line of the file (or flat index into its arrays) of each point, counted from 1.
     place : callable
         ``place(i, column)`` says where the value of point i in a column of the file stands.
+    triangles : ndarray of int, shape (m, 3), or None
+        Triangles between the points, where the file connects them and its values stand at the corners.
+    areas : ndarray, shape (n,), or None
+        Area of the cell that each point is the centre of, in the square of the file's unit of length, where the values
+        stand for cells.
+    how : str
+        How the points came out of a file that holds more than them.
     """
 
     values: Mapping[str, Array]
     line: NDArray[np.int64]
     place: Callable[[int, str], str]
+    triangles: NDArray[np.int64] | None = None
+    areas: Array | None = None
+    how: str = ""
+
+
+@dataclass(frozen=True)
+class Cut:
+    """The plane that is wanted of a file that may hold more.
+
+    Attributes
+    ----------
+    axis : {0, 1, 2}
+        The file's axis along the stream.
+    position : float
+        Where the plane lies along that axis of the file, m.
+    station, trailing_edge_x : float
+        What the survey file says of it, m.
+    tolerance : float
+        By how much points may be off the plane, as a share of its size.
+    line : bool
+        Whether a line across the stream is wanted instead of a plane.
+    time : float or None
+        The instant that is wanted; None for the latest.
+    """
+
+    axis: int
+    position: float
+    station: float
+    trailing_edge_x: float = 0.0
+    tolerance: float = 0.001
+    line: bool = False
+    time: float | None = None
+
+
+class MissingColumnError(DataError):
+    """A column that was asked for is not in the file."""
+
+    column: str = ""
+
+    def located(self, *, file: object = None, place: str | None = None) -> MissingColumnError:
+        """The same error with the file or place filled in where it was still missing."""
+        error = type(self)(self.found, file=self.file or file, place=self.place or place, remedy=self.remedy)
+        error.column = self.column
+        return error
+
+
+#: Suffixes by which tables and meshes name the components of a vector, one set after the other.
+COMPONENTS: tuple[tuple[str, str, str], ...] = (
+    ("_x", "_y", "_z"),
+    ("x", "y", "z"),
+    ("_X", "_Y", "_Z"),
+    ("X", "Y", "Z"),
+    (":0", ":1", ":2"),
+    (":X", ":Y", ":Z"),
+    ("_0", "_1", "_2"),
+    ("[0]", "[1]", "[2]"),
+    ("0", "1", "2"),
+)
 
 
 def si_unit(key: str, column: Column) -> str | None:
@@ -115,7 +181,7 @@ def refuse_contradicting_unit(stated: str, key: str, column: Column, *, strict: 
         )
 
 
-def missing_column(name: str, present: list[str], *, what: str) -> DataError:
+def missing_column(name: str, present: list[str], *, what: str) -> MissingColumnError:
     """The error for a column that is not there.
 
     Parameters
@@ -129,7 +195,7 @@ def missing_column(name: str, present: list[str], *, what: str) -> DataError:
 
     Returns
     -------
-    DataError
+    MissingColumnError
         Offering the nearest name and listing all; without file and place.
     """
     folded = {entry.casefold(): entry for entry in present}
@@ -138,4 +204,6 @@ def missing_column(name: str, present: list[str], *, what: str) -> DataError:
     guess = f"did you mean {close!r}? The" if close else "the"
     shown = [repr(entry) for entry in present if entry]
     listed = ", ".join(shown[:40]) + (f" and {len(shown) - 40} more" if len(shown) > 40 else "")
-    return DataError(f"there is no {what} {name!r}", remedy=f"{guess} file has {listed}" if shown else None)
+    error = MissingColumnError(f"there is no {what} {name!r}", remedy=f"{guess} file has {listed}" if shown else None)
+    error.column = name
+    return error

@@ -1,4 +1,4 @@
-"""NetCDF-3 and netCDF-4: arrays of points, or fields on (z, y) with coordinate variables."""
+"""NetCDF-3 and netCDF-4: arrays of points, fields on (z, y) with coordinate variables, or a structured volume."""
 
 from __future__ import annotations
 
@@ -11,10 +11,11 @@ import numpy as np
 from wakeledger.core.errors import DataError
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Column
-from wakeledger.intake.readers.columns import RawColumns, missing_column, refuse_contradicting_unit
+from wakeledger.intake.readers.columns import Cut, RawColumns, missing_column, refuse_contradicting_unit
+from wakeledger.intake.readers.fields import as_points
 
 
-def read_netcdf(path: Path, columns: Mapping[str, Column]) -> RawColumns:
+def read_netcdf(path: Path, columns: Mapping[str, Column], cut: Cut | None = None) -> RawColumns:
     """Read the named variables of a netCDF file as points.
 
     Parameters
@@ -24,6 +25,8 @@ def read_netcdf(path: Path, columns: Mapping[str, Column]) -> RawColumns:
     columns : mapping of str to Column
         What to read, by key; a column is the name of a variable, ``group/name`` within a group. The key ``velocity``
         is an array with one dimension of length 3 and becomes the keys u, v, w.
+    cut : Cut, optional
+        Where a volume is cut.
 
     Returns
     -------
@@ -48,16 +51,9 @@ def read_netcdf(path: Path, columns: Mapping[str, Column]) -> RawColumns:
             f"the file begins like netCDF but cannot be read ({error})", file=path, remedy="write the file again"
         ) from None
     try:
-        values, shape = _flatten(_split_vector(arrays), columns)
+        return as_points(arrays, columns, cut, path, what="variable")
     except DataError as error:
         raise error.located(file=path) from None
-    line = np.arange(1, int(np.prod(shape)) + 1, dtype=np.int64)
-
-    def place(i: int, column: str) -> str:
-        index = ", ".join(str(int(k)) for k in np.unravel_index(i, shape))
-        return f"variable {column!r}, index ({index})"
-
-    return RawColumns(values, line, place)
 
 
 def _read(dataset: Any, key: str, column: Column) -> tuple[tuple[str, ...], Array]:
@@ -88,53 +84,3 @@ def _names(group: Any, prefix: str = "") -> list[str]:
     for name, inner in group.groups.items():
         names += _names(inner, f"{prefix}{name}/")
     return names
-
-
-def _split_vector(arrays: Mapping[str, tuple[tuple[str, ...], Array]]) -> dict[str, tuple[tuple[str, ...], Array]]:
-    split: dict[str, tuple[tuple[str, ...], Array]] = {}
-    for key, (dimensions, values) in arrays.items():
-        name = key.removeprefix("std.")
-        if name != "velocity":
-            split[key] = (dimensions, values)
-            continue
-        axes = [i for i, length in enumerate(values.shape) if length == 3]
-        axis = axes[-1] if axes and axes[-1] == values.ndim - 1 else (axes[0] if axes else None)
-        if axis is None:
-            raise DataError(
-                f"the velocity array has shape {values.shape}", remedy="one dimension must hold the three components"
-            )
-        rest = tuple(d for i, d in enumerate(dimensions) if i != axis)
-        for component, letter in enumerate("uvw"):
-            split[key.replace("velocity", letter)] = (rest, np.take(values, component, axis=axis))
-    return split
-
-
-def _flatten(
-    arrays: Mapping[str, tuple[tuple[str, ...], Array]], columns: Mapping[str, Column]
-) -> tuple[dict[str, Array], tuple[int, ...]]:
-    """Spread every array over the dimensions of the largest one, and lay it out flat in that order."""
-    dimensions, largest = max(arrays.values(), key=lambda entry: (len(entry[0]), entry[1].size))
-    shape = largest.shape
-    if len(dimensions) > 2:
-        listed = ", ".join(f"{name} = {length}" for name, length in zip(dimensions, shape, strict=True))
-        raise DataError(
-            f"the arrays have {len(dimensions)} dimensions ({listed})",
-            remedy="give one plane at one instant: arrays of points, or fields with two dimensions",
-        )
-    if len(set(dimensions)) < len(dimensions):
-        raise DataError(f"a dimension is used twice ({', '.join(dimensions)})", remedy="name each dimension once")
-    values = {}
-    for key, (own, array) in arrays.items():
-        extra = [name for name in own if name not in dimensions]
-        if extra:
-            column = columns[key].column if key in columns else key
-            raise DataError(
-                f"{column!r} has the dimension {extra[0]!r}, the other arrays have {', '.join(dimensions) or 'none'}",
-                remedy="all arrays must share the dimensions of the plane",
-            )
-        order = [own.index(name) for name in dimensions if name in own]
-        expanded = array.transpose(order).reshape(
-            tuple(length if name in own else 1 for name, length in zip(dimensions, shape, strict=True))
-        )
-        values[key] = np.broadcast_to(expanded, shape).reshape(-1).copy()
-    return values, shape if shape else (1,)

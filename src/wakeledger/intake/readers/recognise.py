@@ -14,7 +14,7 @@ _HDF5 = b"\x89HDF\r\n\x1a\n"
 _HDF5_OFFSETS = (0, 512, 1024, 2048)
 #: What text never holds: control characters other than tab, newline, form feed, carriage return, end of file.
 _CONTROL = bytes(set(range(32)) - {9, 10, 11, 12, 13, 26}) + b"\x7f"
-_REMEDY = "write the plane as a delimited text table or as netCDF: this version reads these two"
+_REMEDY = "write the plane as a delimited text table, netCDF, VTK, CGNS or MATLAB file"
 
 
 def recognise(path: Path) -> str:
@@ -23,29 +23,36 @@ def recognise(path: Path) -> str:
     Parameters
     ----------
     path : Path
-        The file.
+        The file, or the folder of an OpenFOAM case.
 
     Returns
     -------
     str
-        ``"table"`` or ``"netcdf"``.
+        ``"table"``, ``"netcdf"``, ``"matlab"`` (of any version, and HDF5 of no other kind), ``"vtk_xml"``,
+        ``"vtk_legacy"``, ``"vtk_hdf"``, ``"cgns"`` or ``"openfoam"``.
 
     Raises
     ------
     DataError
-        If the file is missing, a directory, unreadable, empty, in a recognised format that is not read, or binary data
-        of an unknown kind.
+        If the file is missing, a directory that is no case, unreadable, empty, in a recognised format that is not read,
+        or binary data of an unknown kind.
     """
+    if _is_case(path):
+        return "openfoam"
     head = _head(path)
     if not head.strip():
         raise DataError("the file is empty", file=path, remedy="give a file that holds the points of the plane")
     if head[:3] == b"CDF" and head[3:4] in (b"\x01", b"\x02", b"\x05"):
         return "netcdf"
     if any(head[offset : offset + 8] == _HDF5 for offset in _HDF5_OFFSETS):
-        kind = _kind_of_hdf5(path, head)
-        if kind == "netcdf":
-            return kind
-        raise DataError(f"this is {kind}", file=path, remedy=_REMEDY)
+        return _kind_of_hdf5(path)
+    start = head.removeprefix(b"\xef\xbb\xbf").lstrip()
+    if b"<VTKFile" in head:
+        return "vtk_xml"
+    if start.startswith(b"# vtk DataFile"):
+        return "vtk_legacy"
+    if head.startswith(b"MATLAB 5.0 MAT-file") or head[124:128] in (b"\x00\x01IM", b"\x01\x00MI"):
+        return "matlab"
     other = _other_format(head)
     if other:
         raise DataError(f"this is {other}", file=path, remedy=_REMEDY)
@@ -54,6 +61,20 @@ def recognise(path: Path) -> str:
     if head.translate(None, _CONTROL) != head:
         raise DataError("the file holds binary data in no format that is known here", file=path, remedy=_REMEDY)
     return "table"
+
+
+def _is_case(path: Path) -> bool:
+    """Whether a path is an OpenFOAM case, its controlDict, or the empty file by which viewers open it."""
+    try:
+        if path.is_dir():
+            return (path / "system" / "controlDict").is_file() or (path / "constant" / "polyMesh").is_dir()
+        if not path.is_file():
+            return False
+        if path.stat().st_size == 0:
+            return (path.parent / "system" / "controlDict").is_file()
+        return path.name == "controlDict" and path.parent.name == "system" and b"FoamFile" in path.read_bytes()[:_HEAD]
+    except (OSError, ValueError):
+        return False
 
 
 def is_stream(path: Path) -> bool:
@@ -77,7 +98,9 @@ def _head(path: Path) -> bytes:
         ) from None
     except IsADirectoryError:
         raise DataError(
-            "this is a directory", file=path, remedy="give the file that holds the points of the plane"
+            "this is a directory, and no OpenFOAM case (which has system/controlDict)",
+            file=path,
+            remedy="give the file that holds the points of the plane",
         ) from None
     except (OSError, ValueError) as error:
         reason = (getattr(error, "strerror", None) or str(error)).lower()
@@ -86,28 +109,23 @@ def _head(path: Path) -> bytes:
         ) from None
 
 
-def _kind_of_hdf5(path: Path, head: bytes) -> str:
-    if head.startswith(b"MATLAB 7.3"):
-        return "a MATLAB 7.3 file (MAT, HDF5)"
+def _kind_of_hdf5(path: Path) -> str:
     with path.open("rb") as stream, mmap.mmap(stream.fileno(), 0, access=mmap.ACCESS_READ) as content:
         if content.find(b"CGNSLibraryVersion") >= 0:
-            return "a CGNS file (HDF5)"
+            return "cgns"
+        if content.find(b"MATLAB_class") >= 0:
+            return "matlab"
+        if content.find(b"VTKHDF") >= 0:
+            return "vtk_hdf"
         netcdf = any(content.find(mark) >= 0 for mark in (b"_NCProperties", b"_Netcdf4", b"DIMENSION_SCALE"))
-    return "netcdf" if netcdf else "an HDF5 file that is not netCDF-4"
+    return "netcdf" if netcdf else "matlab"
 
 
 def _other_format(head: bytes) -> str | None:
-    start = head.removeprefix(b"\xef\xbb\xbf").lstrip()
-    if b"<VTKFile" in head:
-        return "a VTK XML file"
-    if start.startswith(b"# vtk DataFile"):
-        return "a legacy VTK file"
     if b"FoamFile" in head:
-        return "an OpenFOAM file"
-    if head.startswith(b"MATLAB 5.0 MAT-file"):
-        return "a MATLAB file (MAT)"
+        return "a single file of an OpenFOAM case (give the case folder)"
     if b"CGNSLibraryVersion" in head:
-        return "a CGNS file (ADF)"
+        return "a CGNS file in the old layout (ADF; adf2hdf converts it)"
     for magic, kind in (
         (b"PK\x03\x04", "a zip archive or a spreadsheet workbook"),
         (b"\xd0\xcf\x11\xe0", "an old spreadsheet workbook"),

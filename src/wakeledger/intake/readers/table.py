@@ -9,7 +9,7 @@ from __future__ import annotations
 import csv
 import re
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -17,7 +17,13 @@ import numpy as np
 from wakeledger.core.errors import DataError
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Column
-from wakeledger.intake.readers.columns import RawColumns, missing_column, refuse_contradicting_unit
+from wakeledger.intake.readers.columns import (
+    COMPONENTS,
+    MissingColumnError,
+    RawColumns,
+    missing_column,
+    refuse_contradicting_unit,
+)
 
 _COMMENT = ("#", "%", "!", '"')
 #: Separators in the order in which they are tried; None stands for any run of blanks.
@@ -51,7 +57,8 @@ def read_table(path: Path, columns: Mapping[str, Column]) -> RawColumns:
         The file.
     columns : mapping of str to Column
         What to read, by key. A column is named as in the header line, or given by its number ("3", counted from 1)
-        where there is none.
+        where there is none. The key ``velocity`` is three columns named after it, such as ``U_x``, ``U_y``, ``U_z``,
+        and becomes the keys u, v, w.
 
     Returns
     -------
@@ -65,6 +72,7 @@ def read_table(path: Path, columns: Mapping[str, Column]) -> RawColumns:
     """
     try:
         lines = _decode(path)
+        columns = _with_components(lines, columns)
         layout = _layout(lines, columns)
         numbers, rows = _split_rows(lines, layout)
         rows, numbers = _drop_units_row(rows, numbers, layout, columns)
@@ -78,6 +86,34 @@ def read_table(path: Path, columns: Mapping[str, Column]) -> RawColumns:
         raise error.located(file=path) from None
     line = np.array(numbers, dtype=np.int64)
     return RawColumns(values, line, lambda i, column: f"line {line[i]}, column {column!r}")
+
+
+def _with_components(lines: Sequence[str], columns: Mapping[str, Column]) -> dict[str, Column]:
+    """Columns with every velocity taken apart into the three that the header names after it."""
+    found: dict[str, Column] = {}
+    for key, column in columns.items():
+        if key.removeprefix("std.") != "velocity":
+            found[key] = column
+            continue
+        name = column.column.strip()
+        sets = [[name + suffix for suffix in suffixes] for suffixes in COMPONENTS]
+        names = next((names for names in sets if _find_header(lines, names)), None)
+        if names is None:
+            raise _no_vector(name)
+        found |= {
+            key.replace("velocity", letter): replace(column, column=part)
+            for letter, part in zip("uvw", names, strict=True)
+        }
+    return found
+
+
+def _no_vector(name: str) -> MissingColumnError:
+    error = MissingColumnError(
+        f"there are no three columns {name}_x, {name}_y, {name}_z",
+        remedy="name the part they share, or give u, v and w with a column each",
+    )
+    error.column = name
+    return error
 
 
 def _decode(path: Path) -> list[str]:
@@ -205,7 +241,7 @@ def _no_header(lines: Sequence[str], wanted: Sequence[str]) -> DataError:
         else:
             return DataError("the table has no data", remedy="give a table with a header and one line for each point")
     absent = next(name for name in wanted if name not in names)
-    return missing_column(absent, names, what="column").located(place=f"line {index + 1}")  # type: ignore[return-value]
+    return missing_column(absent, names, what="column").located(place=f"line {index + 1}")
 
 
 def _layout_by_number(lines: Sequence[str], wanted: Sequence[str]) -> _Layout:

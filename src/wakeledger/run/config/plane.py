@@ -63,6 +63,7 @@ COLUMN_UNITS: Mapping[str, str] = MappingProxyType(
         "velocity": "m s-1",
         "row": "1",
         "tube": "1",
+        "roll": "rad",
     }
 )
 
@@ -178,7 +179,7 @@ else:
         **{
             name: (Annotated[ColumnEntry, AfterValidator(partial(_std_column, name))] | None, None)
             for name in COLUMN_UNITS
-            if name not in (*POSITIONS, "row", "tube", "time")
+            if name not in (*POSITIONS, "row", "tube", "time", "roll")
         },
     )
     ColumnsTable = create_model(
@@ -256,8 +257,8 @@ class Axes(Table):
 
 def _files(value: Any) -> str | tuple[str, ...]:
     if not isinstance(value, list):
-        return parse_text(value)
-    names = listed(parse_text, 'the files as file = ["U_plane.raw", "p_plane.raw"]')(value)
+        return str(parse_text(value))
+    names: tuple[str, ...] = listed(parse_text, 'the files as file = ["U_plane.raw", "p_plane.raw"]')(value)
     for name in names:
         if names.count(name) > 1:
             raise fail(f"{name!r} is listed {names.count(name)} times", "list each file once")
@@ -488,7 +489,7 @@ def column_targets(raw: Any) -> dict[str, tuple[str, bool]]:
     for plane in raw if isinstance(raw, list) else [raw]:
         columns = plane.get("columns") if isinstance(plane, dict) else None
         for name, entry in columns.items() if isinstance(columns, dict) else ():
-            if name not in COLUMN_UNITS or name in (*POSITIONS, "row", "tube", "time"):
+            if name not in COLUMN_UNITS or name in (*POSITIONS, "row", "tube", "time", "roll"):
                 continue
             normalised = isinstance(entry, dict) and entry.get("normalised_by") is not None
             for each in ("u", "v", "w") if name == "velocity" else (name,):
