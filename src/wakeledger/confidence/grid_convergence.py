@@ -92,7 +92,7 @@ def cell_size(cells: float, *, dimensions: int = 3) -> float:
     """
     if not cells > 0 or dimensions not in (1, 2, 3):
         raise ValueError(f"{cells} cells in {dimensions} dimensions; a positive number in 1, 2 or 3 is needed")
-    return float(cells) ** (-1.0 / dimensions)
+    return math.pow(cells, -1.0 / dimensions)
 
 
 def grid_convergence(values: Sequence[float], sizes: Sequence[float]) -> GridConvergence:
@@ -153,8 +153,9 @@ def grid_convergence(values: Sequence[float], sizes: Sequence[float]) -> GridCon
     if convergence == "oscillatory":
         reasons.append("the values oscillate from grid to grid")
         uncertainty = max(uncertainty, spread)
-    reason = "; ".join(reasons) or None
-    return GridConvergence(convergence, p, extrapolated, approximate, error, index, (r21, r32), uncertainty, reason)
+    return GridConvergence(
+        convergence, p, extrapolated, approximate, error, index, (r21, r32), uncertainty, "; ".join(reasons) or None
+    )
 
 
 def observed_order(ratio: float, r21: float, r32: float) -> float:
