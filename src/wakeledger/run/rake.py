@@ -15,15 +15,21 @@ from wakeledger.core.grid import Array
 from wakeledger.core.points import Points
 from wakeledger.intake.probe.pitot import STATIC_INPUT, PitotReduction
 from wakeledger.intake.probe.static_tubes import interpolate_static
-from wakeledger.intake.probe.traverse import Addition, StaticTubes, Traverse, Tube, correction_input
+from wakeledger.intake.probe.traverse import (
+    MISALIGNMENT,
+    Addition,
+    StaticTubes,
+    Traverse,
+    Tube,
+    correction_input,
+)
 from wakeledger.intake.probe.tube_offsets import TubeOffsets, offsets_from_outer_flow, offsets_from_overlap
 from wakeledger.run.config.tables import ProbeTable
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.shear import Displacement
+from wakeledger.run.to_and_fro import BACKLASH, LAG, Apart
 from wakeledger.run.traverse import (
-    BACKLASH,
     DRIFT,
-    LAG,
     REFERENCE,
     SHEAR,
     ZEROS,
@@ -32,6 +38,7 @@ from wakeledger.run.traverse import (
     quantile,
 )
 from wakeledger.run.tubes import RakePoints, listed, subset
+from wakeledger.run.wall_proximity import WALL
 from wakeledger.stream.reference import Reference
 
 #: Name of the correction of the tubes' offsets.
@@ -39,9 +46,9 @@ TUBES = "tube offsets"
 #: Standard uncertainty of a static pressure that is taken from the stream, as a share of q (common practice).
 ASSUMED_STATIC = 0.01
 _STATIC_SOURCE = "static pressure at the pitots"
-_ORDER = (ZEROS, REFERENCE, LAG, BACKLASH, DRIFT, SHEAR)
+_ORDER = (ZEROS, REFERENCE, LAG, BACKLASH, DRIFT, WALL, MISALIGNMENT, SHEAR)
 #: Corrections whose error is each tube's own; that of the others is taken as one error of all tubes.
-_OWN = (ZEROS,)
+_OWN = (ZEROS, MISALIGNMENT)
 _MOST_TEXTS = 4
 
 
@@ -88,7 +95,7 @@ def _prepare_rake(survey: SurveyInput, rake: RakePoints, reference: Reference) -
         at = np.flatnonzero(rake.tube == index)
         parts.append(_Part(table.tube, at, _alone(survey, table, subset(survey.points, at), reference)))
     n = survey.points.n
-    tubes = tuple(replace(part.raw.traverse.tubes[0], points=part.at) for part in parts)
+    tubes = tuple(tube for part in parts for tube in _of_all(part))
     kinds = {name: kind for part in parts for name, kind in part.raw.traverse.kinds.items()}
     traverse = Traverse(tubes, kinds, _additions(parts, n))
     sources = _sources([(part.number, part.raw.sources) for part in parts])
@@ -114,7 +121,39 @@ def _prepare_rake(survey: SurveyInput, rake: RakePoints, reference: Reference) -
         traverse = replace(traverse, additions=(*traverse.additions, addition))
         said[TUBES] = sentence
         sources.append(Source("tube offsets (correction)", tuple(addition.per_sigma), "systematic", 1.0))
-    return RawSurvey(traverse, _displacement(parts), tuple(sources), tuple(notes), said)
+    return RawSurvey(traverse, _displacement(parts), tuple(sources), tuple(notes), said, _apart(parts, n))
+
+
+def _of_all(part: _Part) -> list[Tube]:
+    """A part's tube, or one for each roll of it, with its points among those of all."""
+    found = []
+    for tube in part.raw.traverse.tubes:
+        at = part.at if tube.points is None else part.at[tube.points]
+        turn = tube.turn
+        if turn is not None:
+            first, second = (_renamed(name, part.number) for name in turn.inputs)
+            tube = tube.with_turn(replace(turn, inputs=(first, second)))
+        found.append(replace(tube, points=at))
+    return found
+
+
+def _apart(parts: Sequence[_Part], n: int) -> Apart | None:
+    """How far rows to and fro stand apart, by all tubes together: they are on one gear."""
+    found = [(part, part.raw.apart) for part in parts if part.raw.apart is not None]
+    found = [(part, one) for part, one in found if one.standard_uncertainty > 0]
+    if not found:
+        return None
+    weight = np.array([one.standard_uncertainty**-2 for _, one in found])
+    value, step, lag = (
+        float(weight @ [getattr(one, name) for _, one in found] / weight.sum()) for name in ("value", "step", "lag")
+    )
+    names = set.intersection(*(set(one.additions) for _, one in found))
+    additions = {
+        name: tuple(_merged(name, [(part, each) for part, one in found for each in one.additions[name]], n))
+        for name in sorted(names)
+    }
+    sigma = float(weight.sum() ** -0.5)
+    return Apart(value, sigma, step, lag, any(one.rest for _, one in found), additions)
 
 
 def _alone(survey: SurveyInput, table: ProbeTable, points: Points, reference: Reference) -> RawSurvey:
@@ -145,24 +184,27 @@ def _additions(parts: Sequence[_Part], n: int) -> tuple[Addition, ...]:
     found: list[Addition] = []
     for name in _ORDER:
         ones = [(part, one) for part in parts for one in part.raw.traverse.additions if one.name == name]
-        size: dict[str, Array] = {}
-        per_sigma: dict[str, dict[str, Array]] = {}
-        for part, one in ones:
-            for hole, values in one.size.items():
-                size[hole] = size.get(hole, 0.0) + part.spread(values, n)
-            for key, changes in one.per_sigma.items():
-                mine = per_sigma.setdefault(_renamed(key, part.number), {})
-                for hole, values in changes.items():
-                    mine[hole] = mine.get(hole, 0.0) + part.spread(values, n)
-        lags = [
-            Addition(name, {}, lag=replace(one.lag, order=part.at[one.lag.order]))
-            for part, one in ones
-            if one.lag is not None
-        ]
-        found += lags
-        if ones:
-            found.append(Addition(name, size, per_sigma, raw=ones[0][1].raw))
+        found += _merged(name, ones, n)
     return tuple(found)
+
+
+def _merged(name: str, ones: Sequence[tuple[_Part, Addition]], n: int) -> list[Addition]:
+    """One correction of several tubes among the points of all."""
+    size: dict[str, Array] = {}
+    per_sigma: dict[str, dict[str, Array]] = {}
+    for part, one in ones:
+        for hole, values in one.size.items():
+            size[hole] = size.get(hole, 0.0) + part.spread(values, n)
+        for key, changes in one.per_sigma.items():
+            mine = per_sigma.setdefault(_renamed(key, part.number), {})
+            for hole, values in changes.items():
+                mine[hole] = mine.get(hole, 0.0) + part.spread(values, n)
+    lags = [
+        Addition(name, {}, lag=replace(one.lag, order=part.at[one.lag.order]))
+        for part, one in ones
+        if one.lag is not None
+    ]
+    return [*lags, Addition(name, size, per_sigma, raw=ones[0][1].raw)] if ones else lags
 
 
 def _renamed(name: str, number: int | None) -> str:

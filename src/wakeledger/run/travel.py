@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,6 +13,7 @@ from wakeledger.core.grid import Array
 from wakeledger.core.points import Points
 from wakeledger.intake.gridding.lattice import find_lattice, rows_in_order
 
+_T = TypeVar("_T", bound=np.generic)
 #: Fewer points tell no rows.
 _FEWEST_OF_A_ROW = 3
 
@@ -55,11 +57,11 @@ class Travel:
         by_y, by_z = (float(np.abs(np.diff(x))[same].sum()) for x in (self.y, self.z))
         return (self.y, self.z) if by_y >= by_z else (self.z, self.y)
 
-    def taken(self, values: Array) -> Array:
+    def taken(self, values: NDArray[_T]) -> NDArray[_T]:
         """Values of the file's order in the order in which they were taken, shape (..., n)."""
         return values[..., self.order]
 
-    def filed(self, values: Array) -> Array:
+    def filed(self, values: NDArray[_T]) -> NDArray[_T]:
         """Undo `taken`."""
         found = np.empty_like(values)
         found[..., self.order] = values
@@ -96,7 +98,11 @@ def travel_of(points: Points) -> Travel:
     order = np.arange(points.n) if time is None else np.argsort(time, kind="stable")
     y, z = points.y[order], points.z[order]
     row = points.row[order] if points.row is not None else _rows_travelled(y, z)
-    row = np.cumsum(np.concatenate([[0], np.diff(row) != 0])).astype(np.int64)
+    new = np.diff(row) != 0
+    roll = points.channels.get("roll")
+    if roll is not None:
+        new |= np.diff(roll.values[order]) != 0
+    row = np.cumsum(np.concatenate([[0], new])).astype(np.int64)
     return Travel(order, None if time is None else time[order], row, y, z)
 
 

@@ -1,6 +1,7 @@
 """The raw traverse of a survey file: its probe, and the corrections of its readings worked out once.
 
-In this order: zeros, reference condition, lag, backlash, drift; the displacement in shear acts on the gridded plane.
+In this order: zeros, reference condition, lag, backlash, drift, wall proximity, misalignment from a roll pair; the
+displacement in shear and a misalignment from the outer flow act on the gridded plane.
 """
 
 from __future__ import annotations
@@ -10,14 +11,15 @@ from collections.abc import Mapping
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from wakeledger.confidence.sources import Source
-from wakeledger.core.errors import DataError, SurveyError
+from wakeledger.core.errors import SurveyError
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Channel, Points
-from wakeledger.intake.probe.backlash import correct_backlash, estimate_backlash
+from wakeledger.intake.probe.backlash import correct_backlash
 from wakeledger.intake.probe.displacement import COEFFICIENT, STANDARD_UNCERTAINTY
-from wakeledger.intake.probe.lag import correct_lag, estimate_lag, make_rate_filter
+from wakeledger.intake.probe.lag import correct_lag, make_rate_filter
 from wakeledger.intake.probe.mounting import Mounting
 from wakeledger.intake.probe.pitot import PitotReduction
 from wakeledger.intake.probe.readings import (
@@ -27,26 +29,29 @@ from wakeledger.intake.probe.readings import (
     progress,
     subtract_zeros,
 )
-from wakeledger.intake.probe.record import Calibration
 from wakeledger.intake.probe.reduction import CALIBRATION_INPUTS, HoleReduction
-from wakeledger.intake.probe.traverse import DYNAMIC, STATIC, Addition, LagFilter, Traverse, Tube, correction_input
+from wakeledger.intake.probe.traverse import (
+    DYNAMIC,
+    MISALIGNMENT,
+    STATIC,
+    Addition,
+    LagFilter,
+    Traverse,
+    Tube,
+    correction_input,
+)
+from wakeledger.run.calibration_use import calibration_notes, calibration_of, check_columns
 from wakeledger.run.config.tables import HoleReadings, ProbeTable
 from wakeledger.run.load import SurveyInput
+from wakeledger.run.roll_pair import by_roll, head_turn, refuse_contrary_rolls
 from wakeledger.run.shear import Displacement
+from wakeledger.run.to_and_fro import BACKLASH, LAG, STATED, Apart, estimated_backlash, find_apart, lag_uncertainty
 from wakeledger.run.travel import travel_of
+from wakeledger.run.wall_proximity import WALL, wall_correction
 from wakeledger.stream.reference import Reference
 
 #: Names of the corrections.
-ZEROS, REFERENCE, LAG, BACKLASH, DRIFT, SHEAR = (
-    "zeros",
-    "reference readings",
-    "lag",
-    "backlash",
-    "drift",
-    "displacement",
-)
-#: How well a lag or a backlash is known that the survey file states, as a share of it.
-STATED = 0.1
+ZEROS, REFERENCE, DRIFT, SHEAR = "zeros", "reference readings", "drift", "displacement"
 #: A drift is taken out if it is this unlikely to be the scatter of the repeats, else it is carried as an uncertainty.
 SIGNIFICANCE = 0.05
 _CALIBRATION = "probe calibration"
@@ -68,6 +73,8 @@ class RawSurvey:
         Sentences about what was found and what was not corrected.
     said : mapping of str to str
         Half a sentence about each correction that is made, by name, to be completed by what it is worth.
+    apart : Apart or None
+        How far rows taken to and fro stand apart where nothing was asked for that takes it out.
     """
 
     traverse: Traverse
@@ -75,6 +82,7 @@ class RawSurvey:
     sources: tuple[Source, ...]
     notes: tuple[str, ...]
     said: Mapping[str, str]
+    apart: Apart | None = None
 
 
 def prepare_traverse(survey: SurveyInput, reference: Reference) -> RawSurvey:
@@ -106,16 +114,19 @@ class _Preparation:
         self.survey, self.points, self.reference = survey.survey, survey.points, reference
         self.probe: ProbeTable = self.survey.probe[0]
         self.values = {name: channel.values for name, channel in self.points.channels.items()}
-        self.calibration = None if self.probe.calibration is None else _calibration(survey, self.probe)
+        self.calibration = calibration_of(survey, self.probe)
         reduction = self._reduction()
         self.holes = tuple(name for name in reduction.names if name != "static_pressure")
-        self._check_columns()
+        if self.calibration is not None:
+            check_columns(self.values, self.holes)
         self.path = travel_of(self.points)
         self.sources: list[Source] = []
         self.notes: list[str] = []
         self.said: dict[str, str] = {}
         kinds = {name: replace(self.points.channels[name], values=np.empty(0)) for name in reduction.names}
-        self.traverse = Traverse((Tube(reduction),), kinds)
+        tubes = (Tube(reduction),) if isinstance(reduction, PitotReduction) else by_roll(reduction, self.points)
+        self.traverse = Traverse(tubes, kinds)
+        self.apart: Apart | None = None
 
     def _reduction(self) -> HoleReduction | PitotReduction:
         probe = self.probe
@@ -133,13 +144,12 @@ class _Preparation:
         self._readings()
         self._lag()
         self._backlash()
+        self._to_and_fro()
         self._drift()
+        self._walls()
+        self._misalignment()
         displacement = self._shear()
-        if self.calibration is not None:
-            self.notes.append(
-                "The probe was not corrected for the nearness of walls (none are given), nor for a misalignment of its"
-                " head (the outer flow's angles below show the sum of that and of the stream's own)."
-            )
+        self._not_corrected()
         traverse = self.traverse.frozen_on(self.values, self.reference)
         beyond = int(np.count_nonzero(traverse.out_of_range(self.values, self.reference)))
         if beyond:
@@ -147,47 +157,14 @@ class _Preparation:
                 f"{beyond} of {self.points.n} points lie outside the calibrated range: they are flagged out_of_range"
                 " and count as missing."
             )
-        return RawSurvey(traverse, displacement, tuple(self.sources), tuple(self.notes), self.said)
+        return RawSurvey(traverse, displacement, tuple(self.sources), tuple(self.notes), self.said, self.apart)
 
     # -- what is there ----------------------------------------------------------------------------------------------
-
-    def _check_columns(self) -> None:
-        if self.calibration is None:
-            return
-        for hole in self.holes:
-            if hole not in self.values:
-                raise DataError(
-                    f"hole {hole} has no column, and the probe is calibrated with {len(self.holes)} holes",
-                    place="[plane.columns]",
-                    remedy=f"add {hole}, or give the calibration of the probe that was used",
-                )
-        extra = sorted(
-            name for name in self.values if name[:1] == "p" and name[1:].isdigit() and name not in self.holes
-        )
-        if extra:
-            raise DataError(
-                f"{', '.join(extra)} has a column, and the probe is calibrated with {len(self.holes)} holes",
-                place="[plane.columns]",
-                remedy="leave it out, or give the calibration of the probe that was used",
-            )
 
     def _calibrated(self) -> None:
         if self.calibration is None:
             return
-        bad = self.calibration.bad_points
-        if bad:
-            lines = ", ".join(str(point.line) for point in bad[:5]) + (", ..." if len(bad) > 5 else "")
-            lines = f"{'line' if len(bad) == 1 else 'lines'} {lines}"
-            self.notes.append(
-                f"The calibration does not rest on {len(bad)} of its {self.calibration.table.n} points, which lie off"
-                f" the smooth surface through all others ({lines} of its table)."
-            )
-        pitch, yaw, total, static = self.calibration.standard_uncertainty()
-        self.notes.append(
-            f"The calibration ({self.calibration.holes} holes, {self.calibration.table.n} points) is known to"
-            f" {math.degrees(pitch):.2g} deg in pitch, {math.degrees(yaw):.2g} deg in yaw, {total:.2%} of q in total"
-            f" and {static:.2%} in static pressure, by points left out."
-        )
+        self.notes += calibration_notes(self.calibration)
         declared = self.survey.uncertainty.source
         if not any("calibration" in source.applies_to for source in declared):
             self.sources.append(Source(_CALIBRATION, CALIBRATION_INPUTS, "systematic", 1.0))
@@ -289,17 +266,8 @@ class _Preparation:
                 "a lag needs the time of each point", place="[probe] lag", remedy="add time to [plane.columns]"
             )
         pressures = self._pressures()
-        along, across = path.along_and_across
         rates = make_rate_filter(path.time, path.row, values=pressures)
-        sigma, how = STATED * lag, f"taken as known to {STATED:.0%}"
-        if not self.probe.backlash:
-            found = estimate_lag(along, across, path.row, path.time, pressures)
-            if math.isfinite(found.value) and math.isfinite(found.standard_uncertainty):
-                sigma = math.hypot(found.standard_uncertainty, found.value - lag)
-                how = (
-                    f"rows taken both ways show {1e3 * found.value:.3g} +- {1e3 * found.standard_uncertainty:.2g} ms,"
-                    " and the difference is its uncertainty"
-                )
+        sigma, how = lag_uncertainty(path, self._comparable(pressures), lag=lag, backlash=bool(self.probe.backlash))
         correction = correct_lag(pressures, rates, lag=lag, standard_uncertainty=sigma)
         parts = self._one_for_all(LAG, path.filed(correction.per_sigma))
         self._add(LAG, None, parts, lag=LagFilter(rates, lag, path.order))
@@ -312,15 +280,13 @@ class _Preparation:
             self.notes.append("No backlash of the traverse is given: none was taken out.")
             return
         path, pressures = self.path, self._pressures()
-        along, across = path.along_and_across
+        along, _ = path.along_and_across
         if asked == "estimate":
-            found = estimate_backlash(along, across, path.row, pressures)
-            if found.reason is not None or not math.isfinite(found.standard_uncertainty):
-                why = found.reason or "its uncertainty cannot be told"
-                self.notes.append(f"The backlash of the traverse could not be estimated ({why}): none was taken out.")
-                return
+            found, how = estimated_backlash(path, self._comparable(pressures))
             value, sigma = found.value, found.standard_uncertainty
-            how = f"estimated from {found.rows} rows, +- {1e3 * sigma:.2g} mm"
+            if not math.isfinite(sigma):
+                self.notes.append(f"The backlash of the traverse could not be estimated ({how}): none was taken out.")
+                return
         else:
             value, sigma, how = asked, STATED * asked, f"taken as known to {STATED:.0%}"
         correction = correct_backlash(pressures, along, path.row, backlash=value, standard_uncertainty=sigma)
@@ -332,11 +298,20 @@ class _Preparation:
         self.said[BACKLASH] = f"A backlash of the traverse of {1e3 * value:.3g} mm ({how}) was taken out"
         self._carry(BACKLASH, "backlash of the traverse", (correction_input(BACKLASH),))
 
+    def _to_and_fro(self) -> None:
+        """What the rows still say of a lag or a backlash that the survey file does not tell."""
+        probe = self.probe
+        if probe.role == "static" or probe.backlash == "estimate":
+            return
+        rest = bool(probe.lag or probe.backlash)
+        pressures = self._comparable(self._pressures())
+        self.apart = find_apart(self.path, pressures, self.holes, rest=rest, lag=not rest)
+
     def _drift(self) -> None:
         if self.probe.role == "static":
             return
         path = self.path
-        place = find_revisits(path.y, path.z)
+        place = np.where(self._as_most, find_revisits(path.y, path.z), -1)
         state = self.traverse.state(self.values, self.reference)
         assert state.total_pressure is not None and state.static_pressure is not None
         total, static = path.taken(state.total_pressure), path.taken(state.static_pressure)
@@ -387,6 +362,45 @@ class _Preparation:
         )
         self._carry(DRIFT, "drift of the readings", tuple(parts))
 
+    def _walls(self) -> None:
+        if self.probe.walls is None:
+            return
+        pressures = self.traverse.pressures(self.values, self.reference)
+        holes = np.stack([pressures[hole] for hole in self.holes])
+        static = self.traverse.state(self.values, self.reference).static_pressure
+        assert static is not None
+        correction, sentence = wall_correction(self.survey, self.probe, self.points, holes, static)
+        if correction is None:
+            self.notes.append(sentence)
+            return
+        parts = self._one_for_all(WALL, correction.per_sigma)
+        self._add(WALL, correction.size, parts)
+        self.said[WALL] = sentence
+        self._carry(WALL, "nearness of walls", tuple(parts))
+
+    def _misalignment(self) -> None:
+        row = self.path.filed(self.path.row)
+        if self.probe.misalignment is None:
+            refuse_contrary_rolls(self.traverse, self.values, self.points, row, self.reference)
+        if self.probe.misalignment != "roll_pair":
+            return
+        turn, sentence = head_turn(self.traverse, self.values, self.points, row, self.reference)
+        self.traverse = replace(self.traverse, tubes=tuple(tube.with_turn(turn) for tube in self.traverse.tubes))
+        self.said[MISALIGNMENT] = sentence
+        self._carry(MISALIGNMENT, "misalignment of the head", turn.inputs)
+
+    def _not_corrected(self) -> None:
+        walls = "for the nearness of walls (none are given)"
+        seen = "the outer flow's angles below show the sum of that and of the stream's own"
+        head = f"for a misalignment of its head ({seen})"
+        if self.calibration is None:
+            if self.probe.role == "flow" and self.probe.walls is None:
+                self.notes.append(f"The tube was not corrected {walls}.")
+            return
+        left = [walls] * (self.probe.walls is None) + [head] * (self.probe.misalignment is None)
+        if left:
+            self.notes.append(f"The probe was not corrected {', nor '.join(left)}.")
+
     def _shear(self) -> Displacement | None:
         if self.probe.role == "static":
             return None
@@ -416,6 +430,17 @@ class _Preparation:
         """Hole pressures as corrected so far, in the order in which they were taken, shape (holes, n)."""
         found = self.traverse.pressures(self.values, self.reference)
         return self.path.taken(np.stack([found[hole] for hole in self.holes]))
+
+    @property
+    def _as_most(self) -> NDArray[np.bool_]:
+        """Points at the roll of most of them, in the order in which they were taken, shape (n,)."""
+        most = self.traverse.tubes[0].points
+        every = np.arange(self.path.n)
+        return self.path.taken(every >= 0 if most is None else np.isin(every, most))
+
+    def _comparable(self, pressures: Array) -> Array:
+        """Pressures that follow each other from row to row: those of a probe rolled otherwise are left out as NaN."""
+        return np.where(self._as_most, pressures, np.nan)
 
     def _one_for_all(self, name: str, per_sigma: Array) -> dict[str, dict[str, Array]]:
         return {correction_input(name): dict(zip(self.holes, np.nan_to_num(per_sigma), strict=True))}
@@ -449,17 +474,6 @@ def quantile(freedom: int) -> float:
     from scipy.special import stdtrit
 
     return float(stdtrit(freedom, 1 - SIGNIFICANCE / 2)) if freedom > 0 else math.inf
-
-
-def _calibration(survey: SurveyInput, probe: ProbeTable) -> Calibration:
-    found = survey.calibrations.get(probe.calibration or "")
-    if found is None:
-        raise SurveyError(
-            f"the calibration {probe.calibration!r} was not read",
-            place="[probe] calibration",
-            remedy="load the survey from its file, or from a ledger that holds the calibration",
-        )
-    return found
 
 
 def corrected_points(points: Points, traverse: Traverse, reference: Reference) -> Points:

@@ -9,7 +9,8 @@ from dataclasses import replace
 import numpy as np
 
 from wakeledger.core.grid import Array
-from wakeledger.intake.probe.traverse import Traverse, correction_input
+from wakeledger.intake.probe.traverse import MISALIGNMENT, Traverse, correction_input
+from wakeledger.physics.methods.energy_area import crossflow_energy
 from wakeledger.run import tables
 from wakeledger.run.chain import Chain
 from wakeledger.run.probe_range import tip_notes
@@ -52,14 +53,50 @@ def traverse_notes(raw: RawSurvey, chain: Chain, nominal: Reduction) -> tuple[st
             worth += f"{of}, +- {tables.counts_text(doubt, nominal, chain).lstrip('+')}"
         else:
             worth += of
+        if name == MISALIGNMENT:
+            worth += _in_the_energy_form(chain, nominal, inputs)
         made.append(f"{sentence}: {worth}.")
-    return (*made, *raw.notes, *tip_notes(chain))
+    return (*apart_notes(raw, chain, nominal), *made, *raw.notes, *tip_notes(chain))
+
+
+def _in_the_energy_form(chain: Chain, nominal: Reduction, inputs: tuple[str, ...]) -> str:
+    """What a misalignment is worth where the crossflow is squared."""
+
+    def energy(other: Chain, errors: Mapping[str, Array]) -> float:
+        flow = other.reduce(errors, vary=Variation(mask=nominal.region.mask), estimates=False).flow
+        return float(crossflow_energy(flow.v, flow.w, flow.grid, density=nominal.reference.density))
+
+    here = energy(chain, {})
+    worth = here - energy(without(chain, MISALIGNMENT), {})
+    doubt = math.hypot(*(here - energy(chain, {each: np.ones(())}) for each in inputs))
+    counts, half = (tables.counts_text(force, nominal, chain) for force in (worth, doubt))
+    return (
+        "; the vorticity form is blind to it, and the energy form would see"
+        f" {counts}, +- {half.lstrip('+')}, if the outer flow's angle were left in it"
+    )
+
+
+def apart_notes(raw: RawSurvey, chain: Chain, nominal: Reduction) -> list[str]:
+    """A sentence about rows to and fro that stand apart, with what it is worth as a backlash and as a lag; or none."""
+    found = raw.apart
+    if found is None or not found.clear or chain.traverse is None:
+        return []
+    row, worth = nominal.drag, []
+    for name, additions in found.additions.items():
+        traverse = replace(chain.traverse, additions=(*chain.traverse.additions, *additions))
+        other = replace(chain, traverse=traverse).reduce({}, vary=Variation(mask=nominal.region.mask), estimates=False)
+        counts = tables.counts_text(nominal.values[row] - other.values[row], nominal, chain)
+        worth.append(f"{counts} if it is a {name}")
+    said = f"{found.sentence}: left in, it is worth {' and '.join(worth)}, of {row.replace('_', ' ')}"
+    return [f"{said}. {found.remedy}."]
 
 
 def _inputs(chain: Chain, name: str) -> tuple[str, ...]:
     """Inputs that errors of one correction are drawn for."""
     if name == SHEAR:
         return (correction_input(SHEAR),)
+    if name == MISALIGNMENT and chain.traverse is not None:
+        return chain.traverse.turn_inputs
     return () if chain.traverse is None else inputs_of(chain.traverse, name)
 
 

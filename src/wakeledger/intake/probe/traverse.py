@@ -18,6 +18,7 @@ from wakeledger.core.flags import Flag
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Channel
 from wakeledger.intake.probe.lag import RateFilter
+from wakeledger.intake.probe.mounting import Turn
 from wakeledger.intake.probe.pitot import STATIC_INPUT, PitotReduction
 from wakeledger.intake.probe.readings import at_reference_condition
 from wakeledger.intake.probe.reduction import HoleReduction, ProbeStream
@@ -26,6 +27,8 @@ from wakeledger.intake.state import State
 
 #: Readings of the stream that were taken beside the holes.
 DYNAMIC, STATIC, TEMPERATURE = "reference_dynamic_pressure", "reference_static_pressure", "temperature"
+#: Name of the correction of the measuring axes.
+MISALIGNMENT = "misalignment"
 #: What may be measured in the flow beside the holes.
 _IN_THE_FLOW = ("density", "total_temperature")
 _NO_ERRORS: Mapping[str, Array | float] = MappingProxyType({})
@@ -110,6 +113,18 @@ class Tube:
     reduction: HoleReduction | PitotReduction
     points: NDArray[np.intp] | None = None
 
+    @property
+    def turn(self) -> Turn | None:
+        """What its axes turned out to be turned by."""
+        return self.reduction.mounting.turn if isinstance(self.reduction, HoleReduction) else None
+
+    def with_turn(self, turn: Turn | None) -> Tube:
+        """The same with its axes turned; a pitot has none."""
+        if not isinstance(self.reduction, HoleReduction):
+            return self
+        mounting = replace(self.reduction.mounting, turn=turn)
+        return replace(self, reduction=replace(self.reduction, mounting=mounting))
+
 
 @dataclass(frozen=True, eq=False)
 class StaticTubes:
@@ -167,8 +182,8 @@ class Traverse:
 
     Notes
     -----
-    p* = p∞ + (p + zeros − p_i) q∞/q_i + lag + backlash + drift, then calibration and mounting. Every parameter is
-    frozen: nothing is estimated anew under errors.
+    p* = p∞ + (p + zeros − p_i) q∞/q_i + lag + backlash + drift + wall, then calibration, misalignment and mounting.
+    Every parameter is frozen: nothing is estimated anew under errors.
     """
 
     tubes: tuple[Tube, ...]
@@ -185,13 +200,21 @@ class Traverse:
     @property
     def inputs(self) -> tuple[str, ...]:
         """Names of the inputs that errors of the corrections are drawn for."""
-        found = tuple(name for addition in self.additions for name in addition.per_sigma)
+        found = tuple(name for addition in self.additions for name in addition.per_sigma) + self.turn_inputs
         if self.statics is not None:
             found += tuple(name for traverse in self.statics.traverses for name in traverse.inputs)
         return found
 
+    @property
+    def turn_inputs(self) -> tuple[str, ...]:
+        """Names of the inputs that errors of the tubes' misalignment are drawn for."""
+        turns = [tube.turn for tube in self.tubes]
+        return tuple(dict.fromkeys(name for turn in turns if turn is not None for name in turn.inputs))
+
     def without(self, name: str) -> Traverse:
         """The same traverse without one of its corrections."""
+        if name == MISALIGNMENT:
+            return replace(self, tubes=tuple(tube.with_turn(None) for tube in self.tubes))
         statics = self.statics
         if statics is not None:
             statics = replace(statics, traverses=tuple(one.without(name) for one in statics.traverses))
