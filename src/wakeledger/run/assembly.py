@@ -18,7 +18,7 @@ from wakeledger.ledger.contributions import Contributions
 from wakeledger.ledger.crosscheck import check_estimate, compare
 from wakeledger.ledger.rows import BudgetLine, Comparison, CrossCheck, Row
 from wakeledger.run.config import Survey
-from wakeledger.run.outputs import coefficient_of, estimate_of
+from wakeledger.run.outputs import coefficient_of, corrected_coefficient_of, estimate_of
 
 NO_SOURCE = "the survey file gives no uncertainty source"
 
@@ -58,14 +58,16 @@ def ledger_row(
     if math.isnan(value):
         return None
     coefficient = values.get(coefficient_of(name), math.nan)
+    between_walls = values.get(corrected_coefficient_of(name), math.nan)
+    corrected = None if math.isnan(between_walls) else between_walls
     unknown = (math.nan, math.nan, math.nan, math.nan)
     unit = ROWS[name].unit
     if samples is None:
-        return Row(name, value, unit, *unknown, coefficient, math.nan, reason=reason)
+        return Row(name, value, unit, *unknown, coefficient, math.nan, corrected, reason=reason)
     at = samples.names.index(name)
     why = samples.unknown[at]
     if why:
-        return Row(name, value, unit, *unknown, coefficient, math.nan, reason=why)
+        return Row(name, value, unit, *unknown, coefficient, math.nan, corrected, reason=why)
     u = float(samples.standard_uncertainty[at])
     half_width = float(samples.interval().half_width[at])
     coefficient_u = math.nan
@@ -81,6 +83,7 @@ def ledger_row(
         degrees_of_freedom=effective_degrees_of_freedom(budget, name, sources),
         coefficient=coefficient,
         coefficient_standard_uncertainty=coefficient_u,
+        coefficient_corrected=corrected,
     )
 
 
@@ -226,6 +229,7 @@ def comparisons(survey: Survey, rows: Sequence[Row], scales: Mapping[str, float]
     Returns
     -------
     tuple of Comparison
+        A total drag less the buoyancy that the survey file gives.
 
     Raises
     ------
@@ -236,21 +240,40 @@ def comparisons(survey: Survey, rows: Sequence[Row], scales: Mapping[str, float]
     by_name = {row.name: row for row in rows}
     found = []
     for entry in survey.compare:
+        value, coefficient = entry.value, entry.coefficient
+        scale, as_measured = scales.get(entry.row, math.nan), entry.as_measured or "whole"
         uncertainty = entry.standard_uncertainty
         if uncertainty is None:
             uncertainty = entry.coefficient_standard_uncertainty
+        uncertainty = math.nan if uncertainty is None else uncertainty
+        pushed = _buoyancy(survey, entry.row, whole=coefficient is not None or as_measured == "whole")
+        if pushed is not None:
+            # What the empty tunnel's pressure does to the model is in a balance's reading and in no wake.
+            unit = 1.0 if coefficient is None else 1.0 / scale
+            value = None if value is None else value - pushed[0]
+            coefficient = None if coefficient is None else coefficient - unit * pushed[0]
+            uncertainty = math.hypot(uncertainty, unit * pushed[1])
         found.append(
             compare(
                 by_name[entry.row],
                 name=entry.name,
-                value=entry.value,
-                coefficient=entry.coefficient,
-                coefficient_scale=scales.get(entry.row, math.nan),
-                standard_uncertainty=math.nan if uncertainty is None else uncertainty,
-                as_measured=entry.as_measured or "whole",
+                value=value,
+                coefficient=coefficient,
+                coefficient_scale=scale,
+                standard_uncertainty=uncertainty,
+                as_measured=as_measured,
             )
         )
     return tuple(found)
+
+
+def _buoyancy(survey: Survey, row: str, *, whole: bool) -> tuple[float, float] | None:
+    """Drag that the empty tunnel's falling pressure adds to a balance's, N, and its standard uncertainty."""
+    boundary = survey.boundary
+    if row != "total_drag" or boundary is None or boundary.buoyancy is None:
+        return None
+    factor = 2.0 if whole and boundary.reflection == "y" else 1.0
+    return factor * boundary.buoyancy.value, factor * boundary.buoyancy.standard_uncertainty
 
 
 def budget_lines(budget: Budget | None, names: Sequence[str]) -> tuple[BudgetLine, ...]:

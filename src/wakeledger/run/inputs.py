@@ -82,6 +82,9 @@ def layouts(survey: Survey, points: Points, gridding: HasRows, names: Sequence[s
             found[name] = InputLayout(points.channels[key].values, positions=places, row=row, std=std)
         elif room == "position":
             found[name] = InputLayout(getattr(points, key), positions=places, row=row)
+        elif room == "boundary":
+            assert survey.boundary is not None
+            found[name] = InputLayout(survey.boundary.chain_inputs()[name].value)
         elif room == "angle":
             offset = float(getattr(survey.probe[0], key) if raw else getattr(survey.plane.axes, f"{key}_offset"))
             if name in pointwise:
@@ -106,7 +109,7 @@ def standard_errors(points: Points) -> dict[str, Array]:
 
 
 def sources(survey: Survey, points: Points, reference: Reference) -> tuple[Source, ...]:
-    """The survey's sources in the units of its channels, those of the file's own samples included.
+    """The survey's sources in the units of its channels, with those of the file's own samples and of given values.
 
     Parameters
     ----------
@@ -127,6 +130,10 @@ def sources(survey: Survey, points: Points, reference: Reference) -> tuple[Sourc
     if points.std and not any(source.name == SAMPLES_SOURCE for source in found):
         names = tuple(f"plane.{name}" for name in points.std)
         found.append(Source(SAMPLES_SOURCE, names, "random", 1.0, from_samples=True))
+    # Where nothing is known of the measurement's errors, those of given values alone would pass for all there are.
+    if survey.boundary is not None and (found or survey.plane.primary == "hole_pressures"):
+        for name, each in survey.boundary.chain_inputs().items():
+            found.append(Source(each.label, (name,), "systematic", each.standard_uncertainty))
     return tuple(found)
 
 

@@ -45,6 +45,10 @@ class TunnelInput:
     standard_uncertainty: float
     label: str
 
+    def times(self, factor: float) -> TunnelInput:
+        """A multiple of it."""
+        return TunnelInput(factor * self.value, factor * self.standard_uncertainty, self.label)
+
 
 class GivenValue(Table):
     """A value that somebody else found, with its uncertainty.
@@ -196,6 +200,13 @@ class TunnelCorrections(Table):
             if entry is not None and math.isfinite(entry.value):
                 found[f"boundary.{name}"] = TunnelInput(entry.value, entry.standard_uncertainty, label)
         return found
+
+    def chain_inputs(self) -> dict[str, TunnelInput]:
+        """Those of the given values that act on the rows, forces of a half model doubled as the ledger does."""
+        factor = 2.0 if getattr(self, "reflection", None) == "y" else 1.0
+        found = self.given_values()
+        found.pop("boundary.buoyancy", None)
+        return {name: each if name == "boundary.solid_blockage" else each.times(factor) for name, each in found.items()}
 
     @model_validator(mode="after")
     def _walls_block(self) -> TunnelCorrections:

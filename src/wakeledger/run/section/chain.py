@@ -18,7 +18,8 @@ from wakeledger.intake.probe.traverse import Traverse
 from wakeledger.physics.fields.traverse_window import WakeWindow, edge_levels, outer_levels, wake_edges
 from wakeledger.physics.methods.section_drag import EdgeStatic
 from wakeledger.physics.methods.section_kernels import KERNELS, speed_at, static_at, total_at, window_weights
-from wakeledger.run.outputs import coefficient_of, estimate_of
+from wakeledger.physics.methods.section_walls import SectionWalls, section_wake_blockage
+from wakeledger.run.outputs import coefficient_of, corrected_coefficient_of, estimate_of
 from wakeledger.run.section.state import SectionState, section_state
 from wakeledger.stream.reference import Reference, resolve_reference
 
@@ -26,8 +27,14 @@ from wakeledger.stream.reference import Reference, resolve_reference
 ROW = "section_drag"
 METHODS = ("betz", "momentum")
 ESTIMATES = tuple((ROW, method) for method in METHODS)
+_COEFFICIENTS = (coefficient_of(ROW), corrected_coefficient_of(ROW))
 #: Everything the chain gives, in the order of its output vector.
-OUTPUTS: tuple[str, ...] = (ROW, coefficient_of(ROW), *(estimate_of(ROW, method) for method in METHODS))
+OUTPUTS: tuple[str, ...] = (
+    ROW,
+    coefficient_of(ROW),
+    corrected_coefficient_of(ROW),
+    *(estimate_of(ROW, method) for method in METHODS),
+)
 
 
 @dataclass(frozen=True)
@@ -54,6 +61,10 @@ class SectionSettings:
         How far the window is moved out beyond the edges that were found, m.
     include : tuple of (float, float)
         Stretches of the traverse that belong to the window whatever was found, m.
+    height : float or None
+        Distance of the walls above and below the section, m; None without walls.
+    solid_blockage : float
+        What the section's thickness adds to the stream's speed at it, Λσ, as a share of the speed.
     """
 
     reference: Mapping[str, float]
@@ -65,6 +76,8 @@ class SectionSettings:
     level: float = 3.0
     grow: float = 0.0
     include: tuple[tuple[float, float], ...] = ()
+    height: float | None = None
+    solid_blockage: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -104,6 +117,10 @@ class SectionReduction:
         there is no outer flow on either side, zero where the total pressure follows from the edge speeds.
     values : mapping of str to float
         The outputs by name.
+    height : float or None
+        Distance of the walls, m.
+    wake_blockage : float
+        Velocity u_b that the wake adds at the model between walls, m/s.
     """
 
     reference: Reference
@@ -115,6 +132,8 @@ class SectionReduction:
     window: WakeWindow
     loss_zero: tuple[float, float]
     values: Mapping[str, float]
+    height: float | None = None
+    wake_blockage: float = 0.0
 
     @property
     def vector(self) -> Array:
@@ -147,22 +166,40 @@ class SectionReduction:
         part = slice(phase, None, every)
         z = self.coordinate[part]
         weights = window_weights(z, self.window.lower, self.window.upper)
+        drags = self.drags(part, weights)
+        ratios = [self.values[name] / self.values[ROW] if self.values else math.nan for name in _COEFFICIENTS]
+        return np.array([drags[0], *(drags[0] * ratio for ratio in ratios), *drags[1:]])
+
+    def drags(self, part: slice, weights: Array) -> list[float]:
+        """Jones, Betz and momentum over a part of the places, N/m; between walls less what these hold back."""
+        total, static = self.total_pressure[part], self.static_pressure[part]
         heat = None if self.total_temperature is None else self.total_temperature[part]
-        drags = [
-            float(
-                KERNELS[name](
-                    z,
-                    self.total_pressure[part],
-                    self.static_pressure[part],
-                    self.reference,
-                    weights=weights,
-                    total_temperature=heat,
-                )
-            )
+        excess, ref = self._blockage(part, weights)[1], self.reference
+        return [
+            float(KERNELS[name](self.coordinate[part], total, static, ref, weights=weights, total_temperature=heat))
+            - excess
             for name in ("jones", *METHODS)
         ]
-        scale = self.values[coefficient_of(ROW)] / self.values[ROW] if self.values else math.nan
-        return np.array([drags[0], drags[0] * scale, *drags[1:]])
+
+    def _blockage(self, part: slice, weights: Array) -> tuple[float, float]:
+        """Wake-blockage velocity, m/s, and the drag that goes with it, N/m; both zero without walls."""
+        if self.height is None:
+            return 0.0, 0.0
+        heat = None if self.total_temperature is None else self.total_temperature[part]
+        velocity, excess = section_wake_blockage(
+            self.total_pressure[part],
+            self.static_pressure[part],
+            self.reference,
+            weights=weights,
+            height=self.height,
+            total_temperature=heat,
+        )
+        return float(velocity), float(excess)
+
+    def with_blockage(self) -> SectionReduction:
+        """The same pass with the wake-blockage velocity filled in."""
+        weights = window_weights(self.coordinate, self.window.lower, self.window.upper)
+        return replace(self, wake_blockage=self._blockage(slice(None), weights)[0])
 
 
 _NO_ERRORS: Mapping[str, Array] = MappingProxyType({})
@@ -280,12 +317,28 @@ class SectionChain:
                 total = total + np.interp(z, (window.lower, window.upper), zero)
         if speed is None or settings.primary == "total_pressure":
             speed = speed_at(total, static, reference.total_temperature if heat is None else heat, reference)
-        found = SectionReduction(reference, z, total, static, speed, heat, window, zero, {})
-        drags = found.integrated()
-        scale = reference.dynamic_pressure * settings.chord
-        values = {ROW: float(drags[0]), coefficient_of(ROW): float(drags[0]) / scale}
-        values |= {estimate_of(ROW, method): float(drag) for method, drag in zip(METHODS, drags[2:], strict=True)}
+        found = SectionReduction(reference, z, total, static, speed, heat, window, zero, {}, settings.height)
+        found = found.with_blockage()
+        drags = found.drags(slice(None), window_weights(z, window.lower, window.upper))
+        coefficient = drags[0] / (reference.dynamic_pressure * settings.chord)
+        values = {ROW: drags[0], coefficient_of(ROW): coefficient}
+        values[corrected_coefficient_of(ROW)] = self._corrected(coefficient, reference, errors)
+        values |= {estimate_of(ROW, method): drag for method, drag in zip(METHODS, drags[1:], strict=True)}
         return replace(found, values=values)
+
+    def _corrected(self, coefficient: float, reference: Reference, errors: Mapping[str, Array]) -> float:
+        """The coefficient in an unbounded stream; NaN without walls."""
+        walls = self.walls(reference, errors)
+        return math.nan if walls is None else float(walls.corrected_drag(coefficient))
+
+    def walls(self, reference: Reference, errors: Mapping[str, Array] = _NO_ERRORS) -> SectionWalls | None:
+        """The walls' corrections under an error of the given solid blockage; None without walls."""
+        settings = self.settings
+        if settings.height is None:
+            return None
+        solid = settings.solid_blockage + float(errors.get("boundary.solid_blockage", 0.0))
+        mach = reference.mach if settings.compressible else 0.0
+        return SectionWalls(settings.chord, settings.height, solid, mach)
 
     def vectors(self, errors: dict[str, Array], *, vary: SectionVariation = _AS_FOUND) -> Array:
         """Many passes, one row of outputs each: what Monte Carlo calls.

@@ -14,6 +14,7 @@ from wakeledger.intake.probe.traverse import Traverse
 from wakeledger.physics.methods.section_drag import SectionDrag
 from wakeledger.physics.methods.section_kernels import jones, window_weights
 from wakeledger.run.load import SurveyInput
+from wakeledger.run.outputs import coefficient_of, corrected_coefficient_of
 from wakeledger.run.section.chain import ROW, SectionChain, SectionReduction, SectionVariation
 from wakeledger.run.section.state import SectionState
 from wakeledger.run.traverse import SHEAR, RawSurvey
@@ -78,6 +79,7 @@ def section_notes(
     if chain.drifting:
         found.append("The total pressure beside the wake drifts along the traverse; the wake was found above that.")
     found += _static_notes(chain, nominal)
+    found += _wall_notes(survey, chain, nominal)
     lower, upper = nominal.loss_zero
     if math.isfinite(lower) and (lower or upper):
         worth = 0.5 * (lower + upper) * window.width / (nominal.reference.dynamic_pressure * settings.chord)
@@ -90,6 +92,34 @@ def section_notes(
             "Places where the total pressure lies below a static pressure, so that the flow is taken as brought to"
             f" rest: {drag.stalled_points}."
         )
+    return found
+
+
+def _wall_notes(survey: SurveyInput, chain: SectionChain, nominal: SectionReduction) -> list[str]:
+    """What the walls do to the drag and to its coefficient."""
+    walls, settings = chain.walls(nominal.reference), chain.settings
+    if walls is None or settings.height is None:
+        return []
+    measured, corrected = nominal.values[coefficient_of(ROW)], nominal.values[corrected_coefficient_of(ROW)]
+    scale = nominal.reference.dynamic_pressure * settings.chord
+    excess = 2 * nominal.reference.density * settings.height * nominal.wake_blockage**2 / scale
+    found = [
+        f"Between walls {settings.height:.4g} m apart the wake makes the stream at the section"
+        f" {nominal.wake_blockage / nominal.reference.speed:+.3%} faster (c_d c/4h gives {walls.tau * measured:+.3%});"
+        f" the methods for an unbounded stream read {1e4 * excess:+.2f} counts too high there, which was taken off."
+    ]
+    boundary = survey.survey.boundary
+    solid = None if boundary is None else boundary.solid_blockage
+    thickness = (
+        "The section's own thickness blocks too, which no solid_blockage was given for: it is not corrected."
+        if solid is None
+        else f"Its thickness does {solid.value:+.2%} +- {solid.standard_uncertainty:.2%} more, as given."
+    )
+    found.append(
+        f"{thickness} In an unbounded stream the coefficient is {corrected:.5f} ({1e4 * (corrected - measured):+.2f}"
+        f" counts; Allen and Vincenti, at Mach {walls.mach:.3f}); a lift coefficient measured with"
+        f" it is to be multiplied by {float(walls.corrected_lift(1.0, measured)):.4f}."
+    )
     return found
 
 

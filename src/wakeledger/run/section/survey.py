@@ -35,6 +35,7 @@ from wakeledger.run.assembly import (
     ledger_row,
     require_rows,
 )
+from wakeledger.run.config.tunnel import section_height
 from wakeledger.run.inputs import layouts, sources
 from wakeledger.run.load import SurveyInput, refuse_unsupported
 from wakeledger.run.outputs import estimate_of
@@ -195,6 +196,8 @@ def section_settings(survey: SurveyInput, reference: Reference) -> SectionSettin
     file = survey.survey
     assert file.section is not None
     along: Literal["y", "z"] = "y" if file.plane.axes.file_axis("y") in file.plane.columns else "z"
+    given = {} if file.boundary is None else file.boundary.chain_inputs()
+    solid = given.get("boundary.solid_blockage")
     return SectionSettings(
         reference=file.reference.given(),
         compressible=reference.compressible,
@@ -205,6 +208,8 @@ def section_settings(survey: SurveyInput, reference: Reference) -> SectionSettin
         level=file.wake.level if file.wake.level is not None else SectionSettings.level,
         grow=file.wake.grow or 0.0,
         include=_stretches(file.wake.include, along),
+        height=section_height(file.boundary, along),
+        solid_blockage=0.0 if solid is None else solid.value,
     )
 
 
