@@ -8,6 +8,7 @@ import click
 
 from wakeledger.cli.calibrate import calibrate
 from wakeledger.cli.exits import run
+from wakeledger.cli.increment import increment
 from wakeledger.cli.inspect import inspect
 from wakeledger.cli.reduce import reduce
 from wakeledger.cli.show import show
@@ -25,7 +26,7 @@ def wakeledger() -> None:
     """
 
 
-for command in (reduce, inspect, show, calibrate):
+for command in (reduce, inspect, show, increment, calibrate):
     wakeledger.add_command(command)
 
 

@@ -11,7 +11,14 @@ from wakeledger.cli import exits, screen
 _FORMATS = ("pdf", "png", "svg")
 
 
-def _formats(_context: click.Context, _parameter: click.Parameter, given: str | None) -> tuple[str, ...]:
+def figure_formats(_context: click.Context, _parameter: click.Parameter, given: str | None) -> tuple[str, ...]:
+    """Formats of figures as given on the command line.
+
+    Raises
+    ------
+    click.BadParameter
+        If one is not known.
+    """
     names = tuple(dict.fromkeys(name.strip().lower() for name in given.split(",") if name.strip())) if given else ()
     for name in names:
         if name not in _FORMATS:
@@ -28,7 +35,9 @@ def _formats(_context: click.Context, _parameter: click.Parameter, given: str | 
     metavar="N",
     help="Monte Carlo draws instead of the survey's.",
 )
-@click.option("--figures", callback=_formats, metavar="pdf,png,svg", help="Also write the figures in these formats.")
+@click.option(
+    "--figures", callback=figure_formats, metavar="pdf,png,svg", help="Also write the figures in these formats."
+)
 @click.option("--overwrite", is_flag=True, help="Replace existing products.")
 @click.option("--quiet", is_flag=True, help="Print neither progress nor the ledger.")
 @click.pass_obj

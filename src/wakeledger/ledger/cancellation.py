@@ -14,7 +14,7 @@ from wakeledger.core.grid import Array
 from wakeledger.ledger.contributions import Contributions
 
 #: What the budget of an increment calls the errors that are not followed one by one.
-SCATTER = "errors of single points or rows, and interaction"
+SCATTER = "random errors and interaction"
 
 
 @dataclass(frozen=True)

@@ -2,15 +2,18 @@
 
 from __future__ import annotations
 
+import json
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass, field
+from pathlib import Path
 from types import MappingProxyType
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from wakeledger.ledger.encoding import write_group
 from wakeledger.ledger.rounding import rounded
 from wakeledger.ledger.rows import COUNT, BudgetLine
 from wakeledger.ledger.tabular import MANY_DEGREES_OF_FREEDOM
@@ -400,6 +403,34 @@ def increment_csv(increment: Increment) -> str:
         lineterminator="\n"
     )
     return text
+
+
+def write_increment_archive(increment: Increment, path: Path) -> None:
+    """Write an increment as a netCDF-4 file: the rows at the root, the difference of the planes in the group ``plane``.
+
+    Parameters
+    ----------
+    increment : Increment
+        The increment.
+    path : Path
+        A file that is not there yet.
+
+    Raises
+    ------
+    OSError
+        If it cannot be written.
+    """
+    root = increment.to_dataset()
+    root.attrs = {
+        "Conventions": "CF-1.11",
+        "title": f"{increment.b.title} minus {increment.a.title}",
+        "history": f"{increment.provenance.get('time', '')} {increment.provenance.get('command', '')}".strip(),
+        "source": f"wakeledger {increment.provenance.get('version wakeledger', '')}".strip(),
+        "document": json.dumps(increment_json(increment), ensure_ascii=False, allow_nan=False),
+    }
+    write_group(root, path, group=None, mode="w")
+    if increment.plane is not None:
+        write_group(increment.plane, path, group="plane", mode="a")
 
 
 def ordered_budget(rows: Sequence[str], variances: Mapping[str, NDArray[np.float64]]) -> tuple[BudgetLine, ...]:

@@ -6,10 +6,11 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.interpolate import RectBivariateSpline
+from scipy.interpolate import PchipInterpolator, RectBivariateSpline
 
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.core.plane import grid_of
+from wakeledger.core.traverse import axis_of
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -51,8 +52,9 @@ def plane_difference(a: Ledger, b: Ledger) -> tuple[xr.Dataset | None, str]:
     """
     import xarray as xr
 
-    if min(*a.plane["y"].shape, *a.plane["z"].shape, *b.plane["y"].shape, *b.plane["z"].shape) < 2:
-        return None, "Line traverses have no difference of planes."
+    along = axis_of(a.plane), axis_of(b.plane)
+    if along != (None, None):
+        return _traverse_difference(a, b, along)
     grids = grid_of(a.plane), grid_of(b.plane)
     same = _same(grids[0].y, grids[1].y, grids[0].dy) and _same(grids[0].z, grids[1].z, grids[0].dz)
     y, z = (grids[0].y, grids[0].z) if same else (_common(*grids, "y"), _common(*grids, "z"))
@@ -88,6 +90,34 @@ def plane_difference(a: Ledger, b: Ledger) -> tuple[xr.Dataset | None, str]:
         "windows, by bicubic splines"
     )
     return dataset, f"{how} ({y.size} x {z.size} places, {steps}, {window})."
+
+
+def _traverse_difference(a: Ledger, b: Ledger, along: tuple[str | None, str | None]) -> tuple[xr.Dataset | None, str]:
+    """The same along a line."""
+    import xarray as xr
+
+    axis = along[0]
+    if axis is None or axis != along[1]:
+        return None, "The two traverses do not run along the same axis, so there is no difference of their profiles."
+    x, y = (np.asarray(one.plane[axis].values, dtype=float) for one in (a, b))
+    places, other = (x, y) if np.diff(x).mean() >= np.diff(y).mean() else (y, x)
+    places = places[(places >= other[0]) & (places <= other[-1])]
+    if places.size < 2:
+        return None, "The two traverses have no stretch in common, so there is no difference of their profiles."
+    dataset = xr.Dataset(coords={axis: (axis, places, {"units": "m"})})
+    name = "total_pressure_loss"
+    for side, one, at in (("a", a, x), ("b", b, y)):
+        field = PchipInterpolator(at, np.ravel(one.plane[name].values))(places) / one.reference["dynamic_pressure"]
+        dataset[f"{name}_{side}"] = (
+            axis,
+            field,
+            {"units": "1", "long_name": f"total-pressure loss over q, {side.upper()}"},
+        )
+    dataset[name] = dataset[f"{name}_b"] - dataset[f"{name}_a"]
+    dataset[name].attrs = {"units": "1", "long_name": "total-pressure loss over q, B minus A"}
+    ends = f"{axis} {places[0]:.4g} to {places[-1]:.4g} m"
+    note = f"For the difference of profiles the finer traverse was brought onto the {places.size} places of the coarser"
+    return dataset, f"{note} one that both cover ({ends})."
 
 
 def _same(x: Array, y: Array, step: float) -> bool:

@@ -6,7 +6,7 @@ import errno
 import os
 import shutil
 import tempfile
-from collections.abc import Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -14,40 +14,49 @@ from typing import TYPE_CHECKING
 from wakeledger.core.errors import DataError, ProductExistsError
 
 if TYPE_CHECKING:
+    from matplotlib.figure import Figure
+
+    from wakeledger.ledger.increment import Increment
     from wakeledger.ledger.rows import Ledger
 
 #: Files every reduction writes.
 FILES = ("ledger.nc", "ledger.json", "ledger.csv", "report.html")
 
+#: Files every increment writes.
+INCREMENT_FILES = ("increment.nc", "increment.json", "increment.csv", "report.html")
+
 #: Folder of the figures, where they are asked for.
 FIGURES = "figures"
 
 
-def existing_products(directory: Path) -> tuple[Path, ...]:
-    """Products of an earlier reduction in a folder.
+def existing_products(directory: Path, *, files: Sequence[str] = FILES) -> tuple[Path, ...]:
+    """Products of an earlier run in a folder.
 
     Parameters
     ----------
     directory : Path
         The folder; it need not exist.
+    files : sequence of str
+        Names of the products beside the figures.
 
     Returns
     -------
     tuple of Path
         Relative to the folder.
     """
-    found = [Path(name) for name in FILES if (directory / name).exists()]
+    found = [Path(name) for name in files if (directory / name).exists()]
     folder = directory / FIGURES
     if folder.is_dir():
         from wakeledger.present.figures import FORMATS
         from wakeledger.present.figures.gallery import DRAWINGS
+        from wakeledger.present.figures.increment import DRAWINGS as OF_INCREMENTS
 
-        ours = {f"{name}.{kind}" for name in DRAWINGS for kind in FORMATS}
+        ours = {f"{name}.{kind}" for name in (*DRAWINGS, *OF_INCREMENTS) for kind in FORMATS}
         found += sorted(path.relative_to(directory) for path in folder.iterdir() if path.name in ours)
     return tuple(found)
 
 
-def require_free(directory: Path, *, overwrite: bool) -> None:
+def require_free(directory: Path, *, overwrite: bool, files: Sequence[str] = FILES) -> None:
     """Refuse a folder that already holds products, before any work is done.
 
     Parameters
@@ -56,6 +65,8 @@ def require_free(directory: Path, *, overwrite: bool) -> None:
         Where the products are to go.
     overwrite : bool
         Whether existing ones may be replaced.
+    files : sequence of str
+        Names of the products beside the figures.
 
     Raises
     ------
@@ -66,11 +77,11 @@ def require_free(directory: Path, *, overwrite: bool) -> None:
     """
     try:
         _require_writable(directory)
-        found = existing_products(directory)
+        found = existing_products(directory, files=files)
     except OSError as error:
         raise _unwritable(directory, error) from error
     for name in found:
-        if name.name in FILES and (directory / name).is_dir():
+        if name.name in files and (directory / name).is_dir():
             raise DataError(
                 f"{name} is a folder there", file=directory, remedy="move it, or choose another folder with --out"
             )
@@ -130,7 +141,47 @@ def write_products(
     DataError
         If the folder cannot be written.
     """
-    require_free(directory, overwrite=overwrite)
+
+    def build(folder: Path) -> tuple[Path, ...]:
+        return _build(ledger, folder, figures)
+
+    return _write_whole(directory, build, files=FILES, overwrite=overwrite)
+
+
+def write_increment(
+    increment: Increment, directory: Path, *, figures: Sequence[str] = (), overwrite: bool = False
+) -> tuple[Path, ...]:
+    """Write every product of an increment.
+
+    Parameters
+    ----------
+    increment : Increment
+        The increment.
+    directory, figures, overwrite
+        As in `write_products`.
+
+    Returns
+    -------
+    tuple of Path
+        The files, relative to the folder.
+
+    Raises
+    ------
+    ProductExistsError, DataError
+        As in `write_products`.
+    """
+
+    def build(folder: Path) -> tuple[Path, ...]:
+        return _build_increment(increment, folder, figures)
+
+    return _write_whole(directory, build, files=INCREMENT_FILES, overwrite=overwrite)
+
+
+def _write_whole(
+    directory: Path, build: Callable[[Path], tuple[Path, ...]], *, files: Sequence[str], overwrite: bool
+) -> tuple[Path, ...]:
+    """Build the products aside and put them in their place together."""
+    require_free(directory, overwrite=overwrite, files=files)
     made: list[Path] = []
     try:
         for missing in reversed(directory.parents):
@@ -142,11 +193,11 @@ def write_products(
         fresh = aside / "fresh"
         try:
             fresh.mkdir()
-            names = _build(ledger, fresh, figures)
+            names = build(fresh)
             # Another run may have written there meanwhile.
-            require_free(directory, overwrite=overwrite)
+            require_free(directory, overwrite=overwrite, files=files)
             if directory.is_dir():
-                _exchange(directory, fresh, aside / "earlier", names, existing_products(directory))
+                _exchange(directory, fresh, aside / "earlier", names, existing_products(directory, files=files))
             else:
                 fresh.rename(directory)
         finally:
@@ -186,6 +237,37 @@ def _build(ledger: Ledger, folder: Path, figures: Sequence[str]) -> tuple[Path, 
         (folder / FIGURES).mkdir()
         names += [path.relative_to(folder) for path in save_figures(ledger, folder / FIGURES, figures)]
     return tuple(names)
+
+
+def _build_increment(increment: Increment, folder: Path, figures: Sequence[str]) -> tuple[Path, ...]:
+    from wakeledger.ledger.increment import increment_csv, increment_json, write_increment_archive
+    from wakeledger.ledger.tabular import json_text
+    from wakeledger.present.figures.increment import draw_increment
+    from wakeledger.present.report.increment import increment_html
+
+    write_increment_archive(increment, folder / "increment.nc")
+    texts = {
+        "increment.json": json_text(increment_json(increment)),
+        "increment.csv": increment_csv(increment),
+        "report.html": increment_html(increment),
+    }
+    for name, text in texts.items():
+        (folder / name).write_text(text, encoding="utf-8", newline="\n")
+    names = [Path(name) for name in INCREMENT_FILES]
+    if figures:
+        (folder / FIGURES).mkdir()
+        names += [path.relative_to(folder) for path in _save(draw_increment(increment), folder / FIGURES, figures)]
+    return tuple(names)
+
+
+def _save(drawn: Mapping[str, Figure], folder: Path, formats: Sequence[str]) -> Iterator[Path]:
+    from wakeledger.present.figures import figure_bytes
+
+    for name, figure in drawn.items():
+        for kind in formats:
+            path = folder / f"{name}.{kind}"
+            path.write_bytes(figure_bytes(figure, kind))
+            yield path
 
 
 def _exchange(directory: Path, fresh: Path, earlier: Path, names: Sequence[Path], old: Sequence[Path]) -> None:

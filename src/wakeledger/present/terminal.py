@@ -2,19 +2,27 @@
 
 from __future__ import annotations
 
-import io
 import math
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterable, Sequence
 from typing import TYPE_CHECKING
 
-from wakeledger.ledger.rounding import UNKNOWN, rounded, significant
+from wakeledger.ledger.rounding import rounded, significant
 from wakeledger.present.map_text import map_lines, plain
+from wakeledger.present.printing import (
+    bullet,
+    heading,
+    joined,
+    new_console,
+    new_table,
+    section,
+    sentences_of,
+    text_of,
+)
 from wakeledger.present.wording import (
     STATEMENT,
     VERDICT_WORDS,
     coefficient_text,
     grouped_reasons,
-    printable,
     signed,
     unit_text,
     words,
@@ -26,9 +34,6 @@ if TYPE_CHECKING:
 
     from wakeledger.ledger.inspection import AngleRange, ChannelSummary, EdgeState, Inspection
     from wakeledger.ledger.rows import Check, Comparison, CrossCheck, Ledger, Row
-
-#: Lines longer than this are hard to read, however wide the terminal is.
-LONGEST_LINE = 140
 
 #: From this width on, estimates show their value.
 ROOMY = 92
@@ -65,28 +70,28 @@ def ledger_text(ledger: Ledger, *, width: int = 100, colour: bool = False) -> st
     str
         Lines without trailing blanks, ended by a line feed.
     """
-    console = _console(width, colour)
-    _heading(console, ledger.title, ledger.test)
+    console = new_console(width, colour)
+    heading(console, ledger.title, ledger.test)
     console.print(_rows_table(ledger.rows))
     for sentence in grouped_reasons((words(row.name), row.reason) for row in ledger.rows):
-        _bullet(console, sentence)
+        bullet(console, sentence)
     if ledger.estimates:
-        _section(console, "Other methods against the primary one")
+        section(console, "Other methods against the primary one")
         console.print(_estimates_table(ledger.estimates, roomy=console.width >= ROOMY))
         reasons = [(f"{words(line.row)}, {words(line.method)}", line.reason) for line in ledger.estimates]
         for sentence in grouped_reasons(reasons):
-            _bullet(console, sentence)
+            bullet(console, sentence)
     if ledger.comparisons:
-        _section(console, "Comparison with other values")
+        section(console, "Comparison with other values")
         console.print(_comparisons_table(ledger.comparisons))
         reasons = [(f"{line.name}, {words(line.row)}", line.reason) for line in ledger.comparisons]
         for sentence in grouped_reasons(reasons):
-            _bullet(console, sentence)
+            bullet(console, sentence)
     _checks(console, ledger.checks)
-    _sentences(console, "Notes", ledger.notes)
+    sentences_of(console, "Notes", ledger.notes)
     console.print()
     console.print(STATEMENT, style="dim")
-    return _text(console)
+    return text_of(console)
 
 
 def inspection_text(inspection: Inspection, *, width: int = 100, colour: bool = False, unicode: bool = True) -> str:
@@ -109,30 +114,30 @@ def inspection_text(inspection: Inspection, *, width: int = 100, colour: bool = 
         Lines without trailing blanks, ended by a line feed.
     """
     # Some characters become several in ASCII.
-    console = _console(width if unicode else width - 4, colour)
-    _heading(console, inspection.title, inspection.test)
-    facts = _table(("", "left"), ("", "left"), header=False)
+    console = new_console(width if unicode else width - 4, colour)
+    heading(console, inspection.title, inspection.test)
+    facts = new_table(("", "left"), ("", "left"), header=False)
     for name, fact in _facts(inspection):
         facts.add_row(name, fact)
     console.print(facts)
     if inspection.map is not None:
         line = inspection.map.is_line
-        _section(console, "Places along the traverse" if line else "Map of the points, seen from behind")
+        section(console, "Places along the traverse" if line else "Map of the points, seen from behind")
         for text in map_lines(inspection.map, width=console.width, unicode=unicode):
             console.print(text, no_wrap=True, crop=False)
     if inspection.channels:
-        _section(console, "Measured variables")
+        section(console, "Measured variables")
         console.print(_channels_table(inspection.channels))
     if inspection.angles:
-        _section(console, "Flow angles, with where they occur (y, z in m)")
+        section(console, "Flow angles, with where they occur (y, z in m)")
         console.print(_angles_table(inspection.angles))
     if inspection.edges:
-        _section(console, "Edges of the window, inside the wake region")
+        section(console, "Edges of the window, inside the wake region")
         console.print(_edges_table(inspection.edges))
     _checks(console, inspection.checks)
-    _sentences(console, "What to do", [advice.message for advice in inspection.recommendations])
-    _sentences(console, "Notes", inspection.notes)
-    return _text(console) if unicode else plain(_text(console))
+    sentences_of(console, "What to do", [advice.message for advice in inspection.recommendations])
+    sentences_of(console, "Notes", inspection.notes)
+    return text_of(console) if unicode else plain(text_of(console))
 
 
 def _channels_table(channels: Sequence[ChannelSummary]) -> Table:
@@ -145,7 +150,7 @@ def _channels_table(channels: Sequence[ChannelSummary]) -> Table:
         ("variable", "left"), ("from", "right"), ("to", "right"), ("unit", "left"), ("noise", "right"),
         ("declared", "right"), ("repeats", "right"), ("missing", "right"),
     )  # fmt: skip
-    table = _table(*(head for head, kept in zip(heads, shown, strict=True) if kept))
+    table = new_table(*(head for head, kept in zip(heads, shown, strict=True) if kept))
     for channel in channels:
         cells = (
             words(channel.name),
@@ -162,7 +167,7 @@ def _channels_table(channels: Sequence[ChannelSummary]) -> Table:
 
 
 def _angles_table(angles: Sequence[AngleRange]) -> Table:
-    table = _table(
+    table = new_table(
         ("angle", "left"), ("from", "right"), ("at", "right"), ("to", "right"), ("at", "right"), ("unit", "left")
     )
     for angle in angles:
@@ -178,7 +183,7 @@ def _edges_table(edges: Sequence[EdgeState]) -> Table:
     heads = [("edge", "left"), ("loss / q", "right"), ("of the loss", "right")]
     if turning:
         heads += [("vorticity / largest", "right"), ("of the vorticity", "right")]
-    table = _table(*heads, ("", "left"))
+    table = new_table(*heads, ("", "left"))
     for edge in edges:
         cells = [edge.side, _figure(edge.total_pressure_loss, 2), _share(edge.loss_share)]
         if turning:
@@ -219,81 +224,12 @@ def _facts(inspection: Inspection) -> Iterable[tuple[str, str]]:
         yield "repeats", f"{where} measured {repeats.points} times{again}"
 
 
-def _console(width: int, colour: bool) -> Console:
-    from rich.console import Console
-
-    return Console(
-        file=io.StringIO(),
-        width=max(60, min(width, LONGEST_LINE)),
-        force_terminal=colour,
-        color_system="standard" if colour else None,
-        no_color=not colour,
-        highlight=False,
-        markup=False,
-        emoji=False,
-        legacy_windows=False,
-    )
-
-
-def _text(console: Console) -> str:
-    file = console.file
-    assert isinstance(file, io.StringIO)
-    return "\n".join(line.rstrip() for line in file.getvalue().splitlines()) + "\n"
-
-
-def _table(*columns: tuple[str, str], header: bool = True) -> Table:
-    from rich import box
-    from rich.table import Table
-
-    style = box.SIMPLE_HEAD if header else None
-    gap = (0, 1, 0, 0) if header else (0, 2, 0, 0)
-    table = Table(box=style, show_header=header, show_edge=False, pad_edge=False, padding=gap)
-    for name, side in columns:
-        table.add_column(name, justify="right" if side == "right" else "left", overflow="fold", header_style="bold")
-    return table
-
-
-def _heading(console: Console, title: str, test: Mapping[str, str]) -> None:
-    from rich.text import Text
-
-    console.print(Text(printable(title), style="bold"))
-    if test:
-        console.print(Text(printable(" · ".join(f"{key} {value}" for key, value in test.items()))))
-    console.print()
-
-
-def _section(console: Console, title: str) -> None:
-    from rich.text import Text
-
-    console.print()
-    console.print(Text(title, style="bold"))
-
-
-def _bullet(console: Console, sentence: str) -> None:
-    from rich.padding import Padding
-    from rich.table import Table
-    from rich.text import Text
-
-    grid = Table.grid(padding=(0, 1, 0, 0))
-    grid.add_column(width=1)
-    grid.add_column(ratio=1)
-    grid.add_row("-", Text(printable(sentence)))
-    console.print(Padding(grid, (0, 0, 0, 1)))
-
-
-def _sentences(console: Console, title: str, sentences: Sequence[str]) -> None:
-    if sentences:
-        _section(console, title)
-        for sentence in sentences:
-            _bullet(console, sentence)
-
-
 def _rows_table(rows: Sequence[Row]) -> Table:
     figures = [rounded(row.value, row.expanded_uncertainty) for row in rows]
     coefficients = [coefficient_text(row) for row in rows]
-    values = _joined(figures)
-    shares = _joined([text[:2] for text in coefficients])
-    table = _table(
+    values = joined(figures)
+    shares = joined([text[:2] for text in coefficients])
+    table = new_table(
         ("", "left"), ("value ± U95", "left"), ("unit", "left"), ("u (k = 1)", "right"), ("coefficient ± U95", "left"),
         ("", "left"),
     )  # fmt: skip
@@ -303,25 +239,12 @@ def _rows_table(rows: Sequence[Row]) -> Table:
     return table
 
 
-def _joined(pairs: Sequence[tuple[str, ...]]) -> list[str]:
-    """Pairs of figures as ``a ± b`` with every part under its like."""
-    left = max((len(first) for first, _ in pairs), default=0)
-    right = max((len(second) for _, second in pairs if second != UNKNOWN), default=0)
-    joined = []
-    for first, second in pairs:
-        if not first or first == UNKNOWN:
-            joined.append(first.rjust(left))
-        else:
-            joined.append(f"{first.rjust(left)} ± {'?' if second == UNKNOWN else second.rjust(right)}")
-    return joined
-
-
 def _estimates_table(estimates: Sequence[CrossCheck], *, roomy: bool) -> Table:
-    table = _table(
+    table = new_table(
         ("", "left"), ("method", "left"), *([("estimate ± u", "left")] if roomy else []), ("difference", "right"),
         ("expected", "right"), ("", "left"), ("E_n", "right"), ("verdict", "left"),
     )  # fmt: skip
-    values = _joined([rounded(line.value, line.standard_uncertainty) for line in estimates])
+    values = joined([rounded(line.value, line.standard_uncertainty) for line in estimates])
     for line, value in zip(estimates, values, strict=True):
         digits = line.standard_uncertainty
         difference, expected = (signed(figure, digits) for figure in (line.difference, line.expected_difference))
@@ -332,11 +255,11 @@ def _estimates_table(estimates: Sequence[CrossCheck], *, roomy: bool) -> Table:
 
 
 def _comparisons_table(comparisons: Sequence[Comparison]) -> Table:
-    table = _table(
+    table = new_table(
         ("", "left"), ("row", "left"), ("value ± u", "left"), ("row − value", "right"), ("", "left"), ("E_n", "right"),
         ("verdict", "left"),
     )  # fmt: skip
-    values = _joined([rounded(line.value, line.standard_uncertainty) for line in comparisons])
+    values = joined([rounded(line.value, line.standard_uncertainty) for line in comparisons])
     for line, value in zip(comparisons, values, strict=True):
         difference = signed(line.difference, line.standard_uncertainty)
         verdict = _verdict(line.verdict)
@@ -352,7 +275,7 @@ def _checks(console: Console, checks: Sequence[Check]) -> None:
 
     if not checks:
         return
-    _section(console, "Checks")
+    section(console, "Checks")
     wide = console.width >= WIDE
     widths = (4, 24, 8, 14)
     for check in checks:

@@ -11,6 +11,7 @@ from wakeledger.present.wording import words
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
+    from wakeledger.ledger.increment import Increment
     from wakeledger.ledger.rows import Ledger
 
 #: Rows that get a panel where the budget has them, in this order.
@@ -21,12 +22,12 @@ PANELS = ("profile_drag", "induced_drag", "wave_drag", "total_drag", "section_dr
 SMALL = 1.0
 
 
-def pooled_shares(ledger: Ledger) -> tuple[list[str], list[str], dict[tuple[str, str], float]]:
+def pooled_shares(ledger: Ledger | Increment) -> tuple[list[str], list[str], dict[tuple[str, str], float]]:
     """Rows and sources of the figure, and every share.
 
     Parameters
     ----------
-    ledger : Ledger
+    ledger : Ledger or Increment
         With a budget.
 
     Returns
@@ -54,12 +55,12 @@ def pooled_shares(ledger: Ledger) -> tuple[list[str], list[str], dict[tuple[str,
     return rows, sources, {key: share for key, share in shares.items() if key[0] in rows and key[1] in sources}
 
 
-def budget_figure(ledger: Ledger) -> Figure:
+def budget_figure(ledger: Ledger | Increment) -> Figure:
     """Share of each source in the variance of the main rows, one panel per row.
 
     Parameters
     ----------
-    ledger : Ledger
+    ledger : Ledger or Increment
         With a budget.
 
     Returns

@@ -33,8 +33,22 @@ ARROWS = 32
 
 
 @dataclass(frozen=True)
-class _Shade:
-    """How one field is coloured."""
+class Shade:
+    """How one field is coloured.
+
+    Attributes
+    ----------
+    values : ndarray, shape (nz, ny)
+        The field.
+    label : str
+        What it is, with its unit.
+    colours : str
+        Name of the colour map.
+    lowest, highest : float
+        Values of its ends.
+    beyond : {"both", "min", "max", "neither"}
+        Where there are values beyond them.
+    """
 
     values: Array
     label: str
@@ -62,7 +76,7 @@ def loss_map(ledger: Ledger) -> Figure:
     loss = loss / q if known else loss
     label = "total-pressure loss / q" if known else "total-pressure loss, Pa"
     highest = float(np.nanpercentile(loss, 99.7)) or 1.0
-    return _map(ledger, "Total-pressure loss", _Shade(loss, label, "GnBu", 0.0, max(highest, 1e-12), "both"))
+    return _map(ledger, "Total-pressure loss", Shade(loss, label, "GnBu", 0.0, max(highest, 1e-12), "both"))
 
 
 def vorticity_map(ledger: Ledger) -> Figure:
@@ -84,7 +98,7 @@ def vorticity_map(ledger: Ledger) -> Figure:
     # Four standard deviations of the scatter outside the wake stay pale, so that the wake stands out of the noise.
     noise = 4 * 1.4826 * float(np.median(quiet)) if quiet.size else 0.0
     limit = max(float(np.percentile(strong, 99.0)) if strong.size else 0.0, noise, 1e-12)
-    shade = _Shade(xi, "axial vorticity, 1/s", "RdBu_r", -limit, limit, "both")
+    shade = Shade(xi, "axial vorticity, 1/s", "RdBu_r", -limit, limit, "both")
     return _map(ledger, "Axial vorticity and crossflow", shade, arrows=True)
 
 
@@ -105,14 +119,14 @@ def axial_velocity_map(ledger: Ledger) -> Figure:
     if speed > 0:
         excess = u / speed - 1
         limit = max(float(np.nanpercentile(np.abs(excess), 99.7)), 1e-12)
-        shade = _Shade(excess, "u / U − 1", "PuOr", -limit, limit, "both")
+        shade = Shade(excess, "u / U − 1", "PuOr", -limit, limit, "both")
     else:
         low, high = (float(bound) for bound in np.nanpercentile(u, (0.3, 100)))
-        shade = _Shade(u, "u, m/s", "cividis", low, high, "min")
+        shade = Shade(u, "u, m/s", "cividis", low, high, "min")
     return _map(ledger, "Axial velocity", shade)
 
 
-def _map(ledger: Ledger, title: str, shade: _Shade, *, arrows: bool = False) -> Figure:
+def _map(ledger: Ledger, title: str, shade: Shade, *, arrows: bool = False) -> Figure:
     from matplotlib.figure import Figure
 
     grid = grid_of(ledger.plane)
@@ -121,34 +135,51 @@ def _map(ledger: Ledger, title: str, shade: _Shade, *, arrows: bool = False) -> 
         height = float(np.clip((WIDTH - 1.5) * height_m / width_m, 1.2, 7.5)) + 1.15
         figure = Figure(figsize=(WIDTH, height), layout="constrained")
         axes = figure.add_subplot()
-        image = axes.imshow(
-            shade.values,
-            origin="lower",
-            extent=(
-                grid.y[0] - grid.dy / 2,
-                grid.y[-1] + grid.dy / 2,
-                grid.z[0] - grid.dz / 2,
-                grid.z[-1] + grid.dz / 2,
-            ),
-            cmap=shade.colours,
-            vmin=shade.lowest,
-            vmax=shade.highest,
-            interpolation="nearest",
-            aspect="equal",
-            rasterized=True,
-        )
-        bar = figure.colorbar(image, ax=axes, extend=shade.beyond, fraction=0.05, pad=0.02, shrink=0.9)
-        bar.set_label(shade.label)
-        bar.outline.set_linewidth(0.5)
-        axes.set_title(title)
-        axes.set_xlabel("y to starboard, m (seen from behind)")
-        axes.set_ylabel("z up, m")
+        shaded(figure, axes, grid, shade, title)
         named = _overlay(axes, ledger)
         if arrows:
-            _arrows(axes, ledger)
+            draw_arrows(axes, grid, ledger.plane["v"].values, ledger.plane["w"].values, "m/s")
         if named:
             figure.legend(handles=named, loc="outside lower left", ncols=len(named))
     return figure
+
+
+def shaded(figure: Figure, axes: Axes, grid: UniformGrid, shade: Shade, title: str) -> None:
+    """Draw one field of a plane, seen from behind, with its colour bar.
+
+    Parameters
+    ----------
+    figure, axes : Figure, Axes
+        Where to draw it.
+    grid : UniformGrid
+        The plane's grid.
+    shade : Shade
+        The field and its colours.
+    title : str
+        What it is.
+    """
+    image = axes.imshow(
+        shade.values,
+        origin="lower",
+        extent=(
+            grid.y[0] - grid.dy / 2,
+            grid.y[-1] + grid.dy / 2,
+            grid.z[0] - grid.dz / 2,
+            grid.z[-1] + grid.dz / 2,
+        ),
+        cmap=shade.colours,
+        vmin=shade.lowest,
+        vmax=shade.highest,
+        interpolation="nearest",
+        aspect="equal",
+        rasterized=True,
+    )
+    bar = figure.colorbar(image, ax=axes, extend=shade.beyond, fraction=0.05, pad=0.02, shrink=0.9)
+    bar.set_label(shade.label)
+    bar.outline.set_linewidth(0.5)
+    axes.set_title(title)
+    axes.set_xlabel("y to starboard, m (seen from behind)")
+    axes.set_ylabel("z up, m")
 
 
 def _overlay(axes: Axes, ledger: Ledger) -> list[object]:
@@ -169,7 +200,7 @@ def _overlay(axes: Axes, ledger: Ledger) -> list[object]:
     if "flag" in plane:
         untrusted = (plane["flag"].values & UNTRUSTED) != 0
         if untrusted.any():
-            _hatch(axes, grid_of(plane), untrusted)
+            hatch(axes, grid_of(plane), untrusted)
             drawn.append(Patch(facecolor=VEIL, edgecolor=INK, hatch=HATCH, linewidth=0, label="no trusted measurement"))
     if ledger.wake_line is not None:
         trace = ledger.wake_line
@@ -196,8 +227,18 @@ def _overlay(axes: Axes, ledger: Ledger) -> list[object]:
     return drawn
 
 
-def _hatch(axes: Axes, grid: UniformGrid, cells: NDArray[np.bool_]) -> None:
-    """Veil and hatch whole cells; neighbours along y share one rectangle."""
+def hatch(axes: Axes, grid: UniformGrid, cells: NDArray[np.bool_]) -> None:
+    """Veil and hatch whole cells; neighbours along y share one rectangle.
+
+    Parameters
+    ----------
+    axes : Axes
+        Where to draw them.
+    grid : UniformGrid
+        The plane's grid.
+    cells : ndarray of bool, shape (nz, ny)
+        Which cells.
+    """
     from matplotlib.collections import PatchCollection
     from matplotlib.patches import Rectangle
 
@@ -213,15 +254,26 @@ def _hatch(axes: Axes, grid: UniformGrid, cells: NDArray[np.bool_]) -> None:
     axes.add_collection(hatched, autolim=False)
 
 
-def _arrows(axes: Axes, ledger: Ledger) -> None:
-    plane = ledger.plane
-    grid = grid_of(plane)
+def draw_arrows(axes: Axes, grid: UniformGrid, across: Array, up: Array, unit: str) -> None:
+    """Draw arrows of a crossflow over a plane, with their key.
+
+    Parameters
+    ----------
+    axes : Axes
+        Where to draw them.
+    grid : UniformGrid
+        The plane's grid.
+    across, up : ndarray, shape (nz, ny)
+        Components to starboard and up.
+    unit : str
+        Their unit.
+    """
     apart = max(grid.ny * grid.dy, grid.nz * grid.dz) / ARROWS
     along_y = min(max(1, round(apart / grid.dy)), grid.ny)
     along_z = min(max(1, round(apart / grid.dz)), grid.nz)
     y, z = grid.mesh()
     some = (slice(along_z // 2, None, along_z), slice(along_y // 2, None, along_y))
-    v, w = plane["v"].values[some], plane["w"].values[some]
+    v, w = across[some], up[some]
     typical = float(np.nanpercentile(np.hypot(v, w), 98))
     if not typical > 0:
         return
@@ -231,4 +283,4 @@ def _arrows(axes: Axes, ledger: Ledger) -> None:
         width=0.0016, alpha=0.85, zorder=2.5,
     )  # fmt: skip
     length = float(f"{typical:.0e}")
-    axes.quiverkey(arrows, 0.93, 1.04, length, f"{length:g} m/s", labelpos="W", coordinates="axes")
+    axes.quiverkey(arrows, 0.93, 1.04, length, f"{length:g} {unit}", labelpos="W", coordinates="axes")

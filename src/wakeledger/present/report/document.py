@@ -20,6 +20,7 @@ from wakeledger.present.wording import (
 )
 
 if TYPE_CHECKING:
+    from jinja2 import Environment
     from matplotlib.figure import Figure
 
     from wakeledger.ledger.rows import Ledger
@@ -75,45 +76,73 @@ def report_html(ledger: Ledger) -> str:
     str
         A whole HTML document without external resources; the same ledger gives the same text.
     """
-    from jinja2 import Environment, PackageLoader, StrictUndefined
-
     from wakeledger.present.figures import draw
 
-    environment = Environment(
+    pictures = {name: picture(name, figure, CAPTIONS[name]) for name, figure in draw(ledger).items()}
+    return (
+        environment()
+        .get_template("report.html")
+        .render(
+            ledger=ledger,
+            statement=STATEMENT,
+            verdicts=VERDICT_WORDS,
+            rows=_rows(ledger),
+            row_reasons=grouped_reasons((words(row.name), row.reason) for row in ledger.rows),
+            estimate_reasons=grouped_reasons(
+                (f"{words(x.row)}, {words(x.method)}", x.reason) for x in ledger.estimates
+            ),
+            comparison_reasons=grouped_reasons((f"{x.name}, {words(x.row)}", x.reason) for x in ledger.comparisons),
+            corrected=any(row.coefficient_corrected is not None for row in ledger.rows),
+            estimates=_estimates(ledger),
+            comparisons=_comparisons(ledger),
+            sources=_sources(ledger),
+            summary=_summary(ledger),
+            reference={name: value for name, value in ledger.reference.items() if math.isfinite(value)},
+            units=_scalar_units(),
+            maps=[pictures[name] for name in _MAPS if name in pictures],
+            pictures=pictures,
+            versions={
+                key.removeprefix("version "): text for key, text in ledger.provenance.items() if "version " in key
+            },
+        )
+    )
+
+
+def environment() -> Environment:
+    """Templates of the reports, with their filters."""
+    from jinja2 import Environment, PackageLoader, StrictUndefined
+
+    found = Environment(
         loader=PackageLoader("wakeledger.present.report", package_path=""),
         autoescape=True,
         undefined=StrictUndefined,
         trim_blocks=True,
         lstrip_blocks=True,
     )
-    environment.filters |= {"words": words, "unit": unit_text, "digits": _digits, "scalar": _scalar, "cell": _cell}
-    pictures = {name: _picture(name, figure) for name, figure in draw(ledger).items()}
-    return environment.get_template("report.html").render(
-        ledger=ledger,
-        statement=STATEMENT,
-        verdicts=VERDICT_WORDS,
-        rows=_rows(ledger),
-        row_reasons=grouped_reasons((words(row.name), row.reason) for row in ledger.rows),
-        estimate_reasons=grouped_reasons((f"{words(x.row)}, {words(x.method)}", x.reason) for x in ledger.estimates),
-        comparison_reasons=grouped_reasons((f"{x.name}, {words(x.row)}", x.reason) for x in ledger.comparisons),
-        corrected=any(row.coefficient_corrected is not None for row in ledger.rows),
-        estimates=_estimates(ledger),
-        comparisons=_comparisons(ledger),
-        sources=_sources(ledger),
-        summary=_summary(ledger),
-        reference={name: value for name, value in ledger.reference.items() if math.isfinite(value)},
-        units=_scalar_units(),
-        maps=[pictures[name] for name in _MAPS if name in pictures],
-        pictures=pictures,
-        versions={key.removeprefix("version "): text for key, text in ledger.provenance.items() if "version " in key},
-    )
+    found.filters |= {"words": words, "unit": unit_text, "digits": digits, "scalar": _scalar, "cell": _cell}
+    return found
 
 
-def _picture(name: str, figure: Figure) -> Picture:
+def picture(name: str, figure: Figure, caption: str) -> Picture:
+    """A figure as it stands in a report.
+
+    Parameters
+    ----------
+    name : str
+        Its name.
+    figure : Figure
+        The figure.
+    caption : str
+        What it shows.
+
+    Returns
+    -------
+    Picture
+    """
     from wakeledger.present.figures import figure_bytes
 
     encoded = base64.b64encode(figure_bytes(figure, "svg")).decode("ascii")
-    return Picture(name, f"data:image/svg+xml;base64,{encoded}", CAPTIONS[name])
+    return Picture(name, f"data:image/svg+xml;base64,{encoded}", caption)
 
 
 def _scalar_units() -> dict[str, str]:
@@ -122,8 +151,9 @@ def _scalar_units() -> dict[str, str]:
     return {name: unit_text(unit) for name, unit in SCALAR_UNITS.items()}
 
 
-def _digits(value: float, digits: int = 4) -> str:
-    return significant(value, digits) if math.isfinite(value) else "–"
+def digits(value: float, count: int = 4) -> str:
+    """A figure to so many significant digits, a dash where it is unknown."""
+    return significant(value, count) if math.isfinite(value) else "–"
 
 
 def _scalar(value: object) -> str:
@@ -161,8 +191,8 @@ def _rows(ledger: Ledger) -> list[dict[str, Any]]:
                 "value": value,
                 "expanded": _shown(expanded),
                 "unit": unit_text(row.unit),
-                "u": _digits(row.standard_uncertainty, 2),
-                "k": _digits(row.coverage_factor, 3),
+                "u": digits(row.standard_uncertainty, 2),
+                "k": digits(row.coverage_factor, 3),
                 "dof": "∞" if math.isinf(dof) or dof >= 1e6 else "–" if math.isnan(dof) else f"{dof:.0f}",
                 "coefficient": coefficient,
                 "u_coefficient": _shown(u_coefficient),
@@ -224,12 +254,12 @@ def _sources(ledger: Ledger) -> list[dict[str, Any]]:
         entries = [
             {
                 "source": line.source,
-                "u": _digits(scale * line.standard_uncertainty, 2),
+                "u": digits(scale * line.standard_uncertainty, 2),
                 "share": f"{100 * line.share:.1f}" if math.isfinite(line.share) else "–",
             }
             for line in lines
         ]
-        total = _digits(scale * row.standard_uncertainty, 2)
+        total = digits(scale * row.standard_uncertainty, 2)
         blocks.append({"row": words(row.name), "unit": unit, "lines": entries, "total": total})
     return blocks
 

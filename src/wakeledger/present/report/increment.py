@@ -1,0 +1,133 @@
+"""The report of an increment, in the manner of a ledger's."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING, Any
+
+from wakeledger.ledger.rows import COUNT
+from wakeledger.present.increment_text import OUTCOMES, figure_text, main_row
+from wakeledger.present.report.document import digits, environment, picture
+from wakeledger.present.wording import STATEMENT, grouped_reasons, unit_text, words
+
+if TYPE_CHECKING:
+    from wakeledger.ledger.increment import Increment
+
+#: What each figure shows, by its name.
+CAPTIONS = {
+    "increments": "Each row's change over its expanded uncertainty. Outside the grey band it is resolved; the wide "
+    "bars show the uncertainty if nothing cancelled.",
+    "loss_difference": "Change of the total-pressure loss over the dynamic pressure, seen from behind: orange where B "
+    "loses more. Outlines are the two wake regions.",
+    "vorticity_difference": "Change of the axial vorticity over the stream's speed, with arrows of the change of the "
+    "crossflow. Counter-clockwise is positive; the colours are centred at zero.",
+    "traverse_difference": "Loss along both traverses and its change.",
+    "increment_budget": "Share of each source in the variance of the main increments.",
+}
+_MAPS = ("loss_difference", "vorticity_difference", "traverse_difference")
+_CLASSES = {True: "pass", False: "not_applicable", None: "unknown"}
+
+
+def increment_html(increment: Increment) -> str:
+    """The report of an increment.
+
+    Parameters
+    ----------
+    increment : Increment
+        The increment.
+
+    Returns
+    -------
+    str
+        A whole HTML document without external resources; the same increment gives the same text.
+    """
+    from wakeledger.present.figures.increment import draw_increment
+
+    drawn = draw_increment(increment)
+    pictures = {name: picture(name, figure, CAPTIONS[name]) for name, figure in drawn.items()}
+    main = main_row(increment)
+    return (
+        environment()
+        .get_template("increment.html")
+        .render(
+            increment=increment,
+            statement=STATEMENT,
+            rows=_rows(increment),
+            reasons=grouped_reasons((words(row.name), row.reason) for row in increment.rows),
+            sentences=[_capital(row.statement) for row in increment.rows],
+            cancelled=_cancelled(increment),
+            kept=grouped_reasons((line.source, line.reason) for line in increment.not_cancelled),
+            attention=[
+                *increment.warnings,
+                *(f"In {name} a check failed: {text}" for name, side in _sides(increment) for text in side.failed),
+            ],
+            sides=_sides(increment),
+            main=main,
+            maps=[pictures[name] for name in _MAPS if name in pictures],
+            pictures=pictures,
+            versions={
+                key.removeprefix("version "): text for key, text in increment.provenance.items() if "version " in key
+            },
+        )
+    )
+
+
+def _sides(increment: Increment) -> tuple[tuple[str, Any], ...]:
+    return ("A", increment.a), ("B", increment.b)
+
+
+def _capital(text: str) -> str:
+    return text[:1].upper() + text[1:]
+
+
+def _rows(increment: Increment) -> list[dict[str, Any]]:
+    lines = []
+    for row in increment.rows:
+        value, expanded = figure_text(row.value)
+        counts, counts_expanded = figure_text(row.coefficient, COUNT)
+        judged = row.judged
+        ratio = (
+            judged.uncancelled_uncertainty / judged.standard_uncertainty if judged.standard_uncertainty else math.nan
+        )
+        nu = judged.degrees_of_freedom
+        lines.append(
+            {
+                "name": words(row.name),
+                "main": row.name in ("total_drag", "section_drag"),
+                "a": digits(row.value.a, 5),
+                "b": digits(row.value.b, 5),
+                "value": value or "–",
+                "expanded": expanded if row.resolved is not None else "",
+                "unit": unit_text(row.unit),
+                "counts": counts,
+                "counts_expanded": counts_expanded if row.coefficient.resolved is not None else "",
+                "u": digits(row.value.standard_uncertainty, 2),
+                "k": digits(judged.coverage_factor, 3),
+                "dof": "∞" if math.isinf(nu) or nu >= 1e6 else "–" if math.isnan(nu) else f"{nu:.0f}",
+                "ratio": digits(ratio, 3),
+                "outcome": OUTCOMES[row.resolved],
+                "class": _CLASSES[row.resolved],
+            }
+        )
+    return lines
+
+
+def _cancelled(increment: Increment) -> list[dict[str, Any]]:
+    """Shared sources, one block per row."""
+    blocks = []
+    for row in increment.rows:
+        lines = [line for line in increment.cancellations if line.row == row.name]
+        if not lines:
+            continue
+        in_counts = row.judged is row.coefficient
+        entries = []
+        for line in lines:
+            figures = (line.in_a, line.in_b, line.left)
+            if in_counts:
+                figures = (line.coefficient_in_a, line.coefficient_in_b, line.coefficient_left)
+            name = line.source_a if line.source_a == line.source_b else f"{line.source_a} / {line.source_b}"
+            shown = [digits(figure / (COUNT if in_counts else 1.0), 2) for figure in figures]
+            entries.append({"source": name, "shared_id": line.shared_id, "figures": shown})
+        unit = "counts" if in_counts else unit_text(row.unit)
+        blocks.append({"row": words(row.name), "unit": unit, "lines": entries})
+    return blocks
