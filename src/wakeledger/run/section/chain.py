@@ -319,12 +319,24 @@ class SectionChain:
             speed = speed_at(total, static, reference.total_temperature if heat is None else heat, reference)
         found = SectionReduction(reference, z, total, static, speed, heat, window, zero, {}, settings.height)
         found = found.with_blockage()
+        if settings.edge_static == "stream" and settings.height is not None and state.total_pressure is not None:
+            found = self._behind_the_model(found)
         drags = found.drags(slice(None), window_weights(z, window.lower, window.upper))
         coefficient = drags[0] / (reference.dynamic_pressure * settings.chord)
         values = {ROW: drags[0], coefficient_of(ROW): coefficient}
         values[corrected_coefficient_of(ROW)] = self._corrected(coefficient, reference, errors)
         values |= {estimate_of(ROW, method): drag for method, drag in zip(METHODS, drags[1:], strict=True)}
         return replace(found, values=values)
+
+    def _behind_the_model(self, found: SectionReduction) -> SectionReduction:
+        """The pass with the stream's static pressure lowered by the 2u_b that the walls add behind the model."""
+        reference = found.reference
+        heat = reference.total_temperature if found.total_temperature is None else found.total_temperature
+        for _ in range(3):
+            lower = static_at(np.full(found.coordinate.size, reference.speed + 2 * found.wake_blockage), reference)
+            speed = speed_at(found.total_pressure, lower, heat, reference)
+            found = replace(found, static_pressure=lower, speed=speed).with_blockage()
+        return found
 
     def _corrected(self, coefficient: float, reference: Reference, errors: Mapping[str, Array]) -> float:
         """The coefficient in an unbounded stream; NaN without walls."""

@@ -145,9 +145,11 @@ def _static_notes(chain: SectionChain, nominal: SectionReduction) -> list[str]:
         total_temperature=nominal.total_temperature,
     )
     change = float(shifted) / nominal.values[ROW] - 1.0
+    off = float(np.mean(nominal.static_pressure) - reference.static_pressure) / q
+    lower = f", lower by what the walls add behind the model ({off:+.4f} q)" if off else ""
     return [
-        "The static pressure across the wake is taken as the stream's. Whether it is cannot be told from this traverse"
-        f" and is not in the uncertainty: a pressure 0.01 q higher would change the drag by {change:+.2%}."
+        f"The static pressure across the wake is taken as the stream's{lower}. Whether it is cannot be told from this"
+        f" traverse and is not in the uncertainty: a pressure 0.01 q higher would change the drag by {change:+.2%}."
     ]
 
 
