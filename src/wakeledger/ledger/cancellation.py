@@ -8,7 +8,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from wakeledger.confidence.components import NUMERICAL, Component, half_width
+from wakeledger.confidence.components import MODEL_DRAWS, NUMERICAL, Component, half_width
 from wakeledger.core.errors import InputError
 from wakeledger.core.grid import Array
 from wakeledger.ledger.contributions import Contributions
@@ -97,10 +97,10 @@ class Difference:
         result: Array = np.divide(total**2, loss, out=np.full(shape, math.inf), where=loss > 0)
         return result
 
-    def half_width(self) -> Array:
-        """Half the length of the 95 % interval of each difference, shape (2, m)."""
+    def half_width(self, *, draws: int = MODEL_DRAWS) -> Array:
+        """Half the length of the 95 % interval of each difference, shape (2, m), from so many draws of the errors."""
         scatters = [(np.sqrt(np.einsum("qrr->qr", covariance)), nu) for _, covariance, nu in self.scatters]
-        return half_width(self.components, self.groups, scatters)
+        return half_width(self.components, self.groups, scatters, draws=draws)
 
 
 def opaque(rows: Sequence[str], uncertainty: Array, degrees_of_freedom: Array) -> Contributions:
