@@ -1,0 +1,95 @@
+"""The zero of the loss under wander of known correlation: coverage of the integrated loss."""
+
+import numpy as np
+import pytest
+
+from wakeledger.core.grid import UniformGrid
+from wakeledger.physics.fields.loss_level import loss_level
+from wakeledger.physics.fields.outer_flow import outer_flow
+
+GRID = UniformGrid(-1.0, -0.75, 0.025, 0.025, 81, 61)
+
+
+def wander(rng, length, draws):
+    """Fields of unit variance correlated as exp(-(d/L)²/2), by square roots of one matrix per axis."""
+    roots = []
+    for axis in (GRID.z, GRID.y):
+        values, vectors = np.linalg.eigh(np.exp(-0.5 * ((axis[:, None] - axis) / length) ** 2))
+        roots.append(vectors * np.sqrt(np.maximum(values, 0.0)))
+    return roots[0] @ rng.normal(size=(draws, GRID.nz, GRID.ny)) @ roots[1].T
+
+
+def wake_mask(kind):
+    y, z = GRID.mesh()
+    if kind == "strip":
+        return (np.abs(z) < 0.12) & (np.abs(y) < 0.6)
+    return (np.hypot(y - 0.5, z) < 0.2) | ((np.abs(z) < 0.08) & (y > -0.9) & (y < 0.5))
+
+
+@pytest.mark.parametrize("kind", ["strip", "one-sided"])
+@pytest.mark.parametrize("length", [0.0, 0.05, 0.15, 0.4, 1.0])
+def test_integrated_loss_is_covered(length, kind):
+    """∬_W of a wander that is no loss at all must lie within 2 u of zero in 95 % of cases."""
+    rng = np.random.default_rng([int(100 * length), len(kind)])
+    draws = 500
+    fields = 0.07 * (wander(rng, length, draws) if length else rng.normal(size=(draws, GRID.nz, GRID.ny)))
+    mask = wake_mask(kind)
+    found = loss_level(fields + 3.0, GRID, mask=mask)
+    assert found.zero == pytest.approx((fields + 3.0)[:, ~mask].mean(axis=1), rel=1e-12)
+    error = GRID.cell_area * np.where(mask, fields + 3.0 - found.zero[:, None, None], 0.0).sum(axis=(1, 2))
+    ratio = error / found.integral_uncertainty
+    # 500 draws: 95 % is known to 1 %. Where patches are as large as the window the length is not to be had from one
+    # plane, and all that are likely share the answer.
+    assert 0.92 <= np.mean(np.abs(ratio) <= 2) <= 0.995
+    # Not by being wide: the typical uncertainty is that of the error.
+    assert 0.75 < np.sqrt(np.mean(found.integral_uncertainty**2)) / error.std() < 1.6
+    area = np.count_nonzero(mask) * GRID.cell_area
+    assert found.zero_uncertainty == pytest.approx(found.integral_uncertainty / area, rel=1e-12)
+
+
+def test_points_that_err_together_are_worth_few():
+    rng = np.random.default_rng(5)
+    fields = 0.07 * wander(rng, 0.4, 50)
+    mask = wake_mask("strip")
+    found = loss_level(fields, GRID, mask=mask)
+    naive = fields[:, ~mask].std(axis=1) / np.sqrt(np.count_nonzero(~mask))
+    assert np.median(found.zero_uncertainty / naive) > 10
+    assert 2 < np.median(found.patches) < 12
+    assert np.median(found.correlation_length) == pytest.approx(0.4, rel=0.35)
+    assert np.median(found.wander) == pytest.approx(0.07, rel=0.3)
+    # Blocks of a sixteenth of the window count as independent there: too small by half under such patches.
+    still = np.zeros(GRID.shape)
+    blocks = outer_flow(fields[0], still, still, still, GRID, mask=mask, near_field=(still, still))
+    assert blocks.loss_zero_uncertainty < found.zero_uncertainty[0]
+
+
+def test_white_noise_is_as_certain_as_its_points():
+    rng = np.random.default_rng(6)
+    fields = 0.07 * rng.normal(size=(50, GRID.nz, GRID.ny))
+    mask = wake_mask("strip")
+    found = loss_level(fields, GRID, mask=mask)
+    outside, inside = np.count_nonzero(~mask), np.count_nonzero(mask)
+    expected = 0.07 * GRID.cell_area * np.sqrt(inside + inside**2 / outside)
+    assert np.median(found.integral_uncertainty) == pytest.approx(expected, rel=0.25)
+
+
+def test_the_uncertainty_acts_on_the_area():
+    rng = np.random.default_rng(7)
+    field = 0.07 * wander(rng, 0.15, 1)[0]
+    y, z = GRID.mesh()
+    small, large = ((np.abs(y) < a) & (np.abs(z) < a / 2) for a in (0.3, 0.8))
+    narrow, wide = (loss_level(field, GRID, mask=mask).integral_uncertainty for mask in (small, large))
+    assert wide > 3 * narrow
+
+
+def test_too_little_outer_flow_is_said():
+    mask = np.ones(GRID.shape, bool)
+    mask[:, :3] = False
+    found = loss_level(np.ones(GRID.shape), GRID, mask=mask)
+    assert found.zero == 0.0 and np.isnan(found.integral_uncertainty) and "10 %" in found.reason
+
+
+def test_a_flat_outer_flow_has_a_level_without_doubt():
+    found = loss_level(np.full(GRID.shape, 2.0), GRID, mask=wake_mask("strip"))
+    assert found.zero == pytest.approx(2.0, rel=1e-14)
+    assert found.integral_uncertainty < 1e-12
