@@ -172,7 +172,8 @@ class SourceErrors:
             latents, expand = rows.size, _ByRow(inverse, rows.size)
         elif source.correlation_length is not None and layout.positions is not None:
             latents, expand = correlated_field(layout.positions, source.correlation_length)
-        return _InputErrors(name, f"{self._key}|{name}", latents, scale, expand, layout.is_scalar)
+        key = f"{self._key}|{name.removeprefix(self.source.prefix)}"
+        return _InputErrors(name, key, latents, scale, expand, layout.is_scalar)
 
     @property
     def latents(self) -> int:

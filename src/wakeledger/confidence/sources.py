@@ -48,6 +48,8 @@ class Source:
         How well `standard_uncertainty` is known; infinite when it is taken as exact.
     shared_id : str or None
         Names an instrument: every survey with this identity has the same errors, draw for draw, whatever its seed.
+    prefix : str
+        What the names of inputs of another survey begin with here; their errors are those of the inputs without it.
 
     Raises
     ------
@@ -74,6 +76,7 @@ class Source:
     correlation_length: float | None = None
     degrees_of_freedom: float = math.inf
     shared_id: str | None = None
+    prefix: str = ""
 
     def __post_init__(self) -> None:
         for key, value, allowed in (

@@ -18,7 +18,16 @@ import numpy as np
 from wakeledger.core.errors import DataError
 from wakeledger.ledger import encoding
 from wakeledger.ledger.contributions import Contributions
-from wakeledger.ledger.rows import BudgetLine, Check, Comparison, CrossCheck, Ledger, Row
+from wakeledger.ledger.rows import (
+    BudgetLine,
+    Check,
+    Comparison,
+    CrossCheck,
+    KeptSurvey,
+    Ledger,
+    Row,
+    TunnelFigure,
+)
 from wakeledger.ledger.tabular import rows_dataset
 from wakeledger.ledger.units import scalar
 
@@ -41,6 +50,9 @@ _RECORDS: tuple[tuple[str, type, str], ...] = (
     ("budget", BudgetLine, "line"),
     ("checks", Check, "check"),
 )
+
+#: Group of what the walls of a tunnel do, absent in free air, and groups of other surveys that a ledger rests on.
+_TUNNEL, _COMPANIONS = "tunnel", ("empty_tunnel", "support_tare")
 
 #: Groups that hold a dataset and may be absent.
 _TABLES = ("wake_line", "vortices", "span", "repeats")
@@ -198,6 +210,10 @@ def _groups(ledger: Ledger) -> dict[str, xr.Dataset]:
     for number, (name, calibration) in enumerate(ledger.calibrations.items(), start=1):
         group = _CALIBRATION if number == 1 else f"{_CALIBRATION}_{number}"
         groups[group] = calibration.assign_attrs({_CALIBRATION_NAME: name})
+    if ledger.tunnel:
+        groups[_TUNNEL] = encoding.records_dataset(ledger.tunnel, TunnelFigure, "figure")
+    for name, kept in ledger.companions.items():
+        groups[name] = encoding.points_dataset(kept.raw).assign_attrs(survey_text=kept.survey_text)
     groups["model"] = xr.Dataset({name: scalar(name, value, "model") for name, value in ledger.model.items()})
     groups["raw"] = encoding.points_dataset(ledger.raw)
     return groups
@@ -216,6 +232,13 @@ def _ledger(root: xr.Dataset, source: Path) -> Ledger:
     contributions = None
     if _CONTRIBUTIONS in present:
         contributions = Contributions.from_dataset(encoding.read_group(source, group=_CONTRIBUTIONS))
+    if _TUNNEL in present:
+        tables["tunnel"] = encoding.dataset_records(encoding.read_group(source, group=_TUNNEL), TunnelFigure)
+    companions = {}
+    for name in _COMPANIONS:
+        if name in present:
+            dataset = encoding.read_group(source, group=name)
+            companions[name] = KeptSurvey(str(dataset.attrs["survey_text"]), encoding.dataset_points(dataset))
     calibrations = [
         encoding.read_group(source, group=name)
         for name in sorted((name for name in present if name.startswith(_CALIBRATION)), key=_number)
@@ -233,6 +256,7 @@ def _ledger(root: xr.Dataset, source: Path) -> Ledger:
         model={str(name): float(variable) for name, variable in model.data_vars.items()},
         calibrations={str(dataset.attrs.pop(_CALIBRATION_NAME)): dataset for dataset in calibrations},
         contributions=contributions,
+        companions=companions,
         **tables,
     )
 

@@ -36,6 +36,7 @@ _LONG_NAMES = {
     "share": "part of the row's variance",
     "limit": "largest value that passes",
     "message": "what it means and what to do",
+    "meaning": "what it is, with its sign",
     "name": "name",
 }
 _DIMENSIONLESS = frozenset({"normalised_error", "share"})

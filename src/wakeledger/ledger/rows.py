@@ -240,6 +240,48 @@ class Check:
         _require(bool(self.message), f"check {self.name} needs a message")
 
 
+@dataclass(frozen=True)
+class TunnelFigure:
+    """What the walls of a tunnel do to the flow at the model (``tunnel`` of ledger.json).
+
+    Attributes
+    ----------
+    name : str
+        Of the figure.
+    value, standard_uncertainty : float
+        In `unit`; NaN where unknown.
+    unit : str
+        UDUNITS string.
+    meaning : str
+        What it is, with its sign.
+    reason : str or None
+        Why something is unknown.
+    """
+
+    name: str
+    value: float
+    unit: str
+    standard_uncertainty: float
+    meaning: str
+    reason: str | None = None
+
+
+@dataclass(frozen=True, eq=False)
+class KeptSurvey:
+    """Another survey that a ledger rests on, whole.
+
+    Attributes
+    ----------
+    survey_text : str
+        Its survey file's text.
+    raw : Points
+        Its points as read.
+    """
+
+    survey_text: str
+    raw: Points
+
+
 def _empty() -> Mapping[str, str]:
     return MappingProxyType({})
 
@@ -289,6 +331,10 @@ class Ledger:
         Of a ledger that combines several surveys: their rows, weights and scatter (`wakeledger.run.repeats`).
     calibrations : mapping of str to Dataset
         Calibrations of the probes whose hole pressures were reduced, whole, by the name the survey file gives them.
+    tunnel : tuple of TunnelFigure
+        What the walls do, where there are any.
+    companions : mapping of str to KeptSurvey
+        Surveys that this one rests on, by what they stand for ("empty_tunnel", "support_tare").
     inputs : mapping of str to str
         SHA-256 of each input file by name.
     provenance : mapping of str to str
@@ -321,6 +367,8 @@ class Ledger:
     contributions: Contributions | None = None
     repeats: xr.Dataset | None = None
     calibrations: Mapping[str, xr.Dataset] = field(default_factory=lambda: MappingProxyType({}))
+    tunnel: tuple[TunnelFigure, ...] = ()
+    companions: Mapping[str, KeptSurvey] = field(default_factory=lambda: MappingProxyType({}))
     inputs: Mapping[str, str] = field(default_factory=_empty)
     provenance: Mapping[str, str] = field(default_factory=_empty)
 

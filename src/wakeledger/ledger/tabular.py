@@ -40,10 +40,10 @@ def ledger_json(ledger: Ledger) -> dict[str, Any]:
     dict
         Made of dict, list, str, bool, int, float and None only, without NaN or infinity: ``format``, ``title``,
         ``test``, ``compressible``, ``rows``, ``estimates``, ``comparisons``, ``budget``, ``checks``, ``notes``,
-        ``reference``. A number that is not known is None, and the record it stands in has a ``reason``. Infinitely many
+        ``reference``, and in a tunnel ``tunnel``. A number that is not known is None, and the record it stands in has a ``reason``. Infinitely many
         degrees of freedom are written as 1e6.
     """
-    return {
+    document: dict[str, Any] = {
         "format": JSON_FORMAT,
         "title": ledger.title,
         "test": dict(ledger.test),
@@ -56,6 +56,9 @@ def ledger_json(ledger: Ledger) -> dict[str, Any]:
         "notes": list(ledger.notes),
         "reference": {name: float(value) for name, value in ledger.reference.items() if math.isfinite(value)},
     }
+    if ledger.tunnel:
+        document["tunnel"] = [_plain(asdict(figure), "it has no such figure") for figure in ledger.tunnel]
+    return document
 
 
 def _row_entry(row: Row) -> dict[str, Any]:

@@ -16,10 +16,13 @@ import numpy as np
 
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.ledger.rows import Check, CheckVerdict
+from wakeledger.physics.fields.boundary import Boundary, ClosedWalls, FreeAir, OpenJet, wall_distance
 from wakeledger.physics.fields.edge import edge_integrals
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.run.probe_range import ProbeRange
 from wakeledger.run.reduction import Reduction
+
+FREE_AIR = FreeAir()
 
 #: First and second limit of each check.
 LIMITS: dict[str, tuple[float, float]] = {
@@ -35,6 +38,8 @@ LIMITS: dict[str, tuple[float, float]] = {
 }
 #: Width of the strip along the window's edge that must be quiet, in cells.
 EDGE_CELLS = 3
+#: A window whose edge lies within so many spacings of a wall meets it.
+WALL_CELLS = 1.5
 #: Closed lines around the wake that the net circulation is averaged over, at most.
 _CONTOURS = 5
 #: Share of the strongest circulation below which a vortex's core does not matter: its drag goes with the square.
@@ -85,6 +90,8 @@ class Facts:
         Whether the direction of the flow was measured.
     probe : ProbeRange or None
         Where the probe was used, against where it was calibrated, if its calibration tells a Mach or Reynolds number.
+    boundary : FreeAir, ClosedWalls or OpenJet
+        What surrounds the survey, its reflection plane included.
     """
 
     vortices: Sequence[Core]
@@ -95,6 +102,7 @@ class Facts:
     spacings: tuple[float, ...] = ()
     crossflow: bool = True
     probe: ProbeRange | None = None
+    boundary: Boundary = FREE_AIR
 
 
 #: Why checks do not apply where the direction of the flow was not measured.
@@ -122,10 +130,10 @@ def all_checks(reduction: Reduction, facts: Facts) -> tuple[Check, ...]:
         The last one only where a calibration tells its Mach or Reynolds number.
     """
     found: tuple[Check, ...] = (
-        net_circulation(reduction),
+        net_circulation(reduction, facts.boundary),
         mass_balance(reduction),
-        edge_vorticity(reduction),
-        edge_total_pressure_loss(reduction),
+        edge_vorticity(reduction, facts.boundary),
+        edge_total_pressure_loss(reduction, facts.boundary),
         core_resolution(facts),
         noise_bias(reduction, facts),
         outer_flow(reduction, facts),
@@ -158,8 +166,11 @@ def _check(name: str, value: float, messages: dict[str, str]) -> Check:
     return Check(name, verdict, value, LIMITS[name][0], messages[verdict] if verdict in messages else messages["warn"])
 
 
-def net_circulation(reduction: Reduction) -> Check:
+def net_circulation(reduction: Reduction, boundary: Boundary = FREE_AIR) -> Check:
     """Net circulation of the window over the circulation of the sign that prevails."""
+    if boundary.reflection is not None:
+        message = "The mirrored half balances the circulation: it says nothing about what the window misses."
+        return _check("net_circulation", math.nan, {"not_applicable": message})
     forces = reduction.forces
     prevailing = float(forces.gross_circulation) + abs(float(forces.net_circulation)) / 2
     if prevailing == 0:
@@ -171,7 +182,8 @@ def net_circulation(reduction: Reduction) -> Check:
         {
             "pass": f"{value:.1%} of the wake's circulation is unbalanced around the wake.",
             "warn": f"{value:.1%} of the wake's circulation is unbalanced, so the induced drag depends on where the"
-            " window ends; widen the survey on the side whose vortex is cut, or check the crossflow's calibration.",
+            f" {'jet' if isinstance(boundary, OpenJet) else 'window'} ends; widen the survey on the side whose vortex"
+            " is cut, or check the crossflow's calibration.",
         },
     )
 
@@ -203,64 +215,141 @@ def mass_balance(reduction: Reduction) -> Check:
     outer = ~reduction.region.mask
     if not outer.any():
         return _check("mass_balance", math.nan, {"not_applicable": "The wake fills the window: no outer flow is left."})
-    excess = float((reduction.flow.u[outer] / reduction.reference.speed - 1).mean())
+    faster = 2 * reduction.wake_blockage / reduction.reference.speed
+    excess = float((reduction.flow.u[outer] / reduction.reference.speed - 1).mean()) - faster
     value = abs(excess)
+    stream = "the stream's" if faster == 0 else f"the stream's and what the wake adds between the walls ({faster:+.2%})"
     return _check(
         "mass_balance",
         value,
         {
-            "pass": f"Outside the wake the axial velocity is the stream's within {value:.2%}.",
-            "warn": f"Outside the wake the axial velocity is {excess:+.2%} off the stream's; check the reference speed,"
+            "pass": f"Outside the wake the axial velocity is {stream} within {value:.2%}.",
+            "warn": f"Outside the wake the axial velocity is {excess:+.2%} off {stream}; check the reference speed,"
             " the static pressure and the probe's calibration, or blockage if the stream is bounded.",
         },
     )
 
 
-def _edge_share(field: Array, mask: Mask, grid: UniformGrid) -> tuple[float, str]:
-    """Share of a field's absolute integral that lies in the strip along the edge, and the side with most of it."""
+@dataclass(frozen=True)
+class EdgeShare:
+    """What lies in the strip along the window's edge.
+
+    Attributes
+    ----------
+    cut : float
+        Share of a field's absolute integral along edges beyond which there is more flow; NaN where the field is zero.
+    side : str
+        The side with most of that.
+    at_walls : float
+        Share along edges that meet a wall.
+    walls : tuple of str
+        Sides that meet a wall.
+    short : float
+        Distance of that side from the wall beyond it, m; NaN where there is none.
+    """
+
+    cut: float
+    side: str
+    at_walls: float
+    walls: tuple[str, ...]
+    short: float
+
+
+def _edge_share(field: Array, mask: Mask, grid: UniformGrid, boundary: Boundary) -> EdgeShare:
     inside = np.where(mask, np.abs(field), 0.0)
     total = float(inside.sum())
+    gaps = _distances(grid, boundary)
+    walls = tuple(side for side, gap in gaps.items() if gap <= WALL_CELLS * max(grid.dy, grid.dz))
     if total == 0:
-        return math.nan, ""
+        return EdgeShare(math.nan, "", math.nan, walls, math.nan)
     n = EDGE_CELLS
-    sides = {
-        "port": inside[:, :n].sum(),
-        "starboard": inside[:, -n:].sum(),
-        "lower": inside[:n].sum(),
-        "upper": inside[-n:].sum(),
+    strips = {
+        "starboard": (slice(None), slice(-n, None)),
+        "port": (slice(None), slice(None, n)),
+        "lower": (slice(None, n), slice(None)),
+        "upper": (slice(-n, None), slice(None)),
     }
-    strip = np.ones(grid.shape, dtype=bool)
-    strip[n:-n, n:-n] = False
-    return float(inside[strip].sum()) / total, max(sides, key=lambda side: float(sides[side]))
+    amounts = {side: float(inside[strip].sum()) for side, strip in strips.items() if side not in _inner(boundary)}
+    cut = np.zeros(grid.shape, dtype=bool)
+    at_walls = cut.copy()
+    for side in amounts:
+        (at_walls if side in walls else cut)[strips[side]] = True
+    open_sides = {side: amount for side, amount in amounts.items() if side not in walls}
+    worst = max(open_sides, key=lambda side: open_sides[side]) if open_sides else ""
+    shares = [float(inside[strip].sum()) / total for strip in (cut, at_walls & ~cut)]
+    return EdgeShare(shares[0], worst, shares[1], walls, gaps.get(worst, math.nan))
 
 
-def edge_vorticity(reduction: Reduction) -> Check:
-    """Share of the wake's vorticity that touches the window's edge."""
-    value, side = _edge_share(reduction.vorticity, reduction.region.mask, reduction.flow.grid)
+def _inner(boundary: Boundary) -> tuple[str, ...]:
+    """Sides of a mirrored window that say nothing of their own."""
+    return {"y": ("port",), "z": ("lower",), None: ()}[boundary.reflection]
+
+
+def _distances(grid: UniformGrid, boundary: Boundary) -> dict[str, float]:
+    """Distance of each side of the window from the wall beyond it, m: the nearest along that side."""
+    if not isinstance(boundary, ClosedWalls):
+        return {}
+    y, z = grid.y, grid.z
+    found = {}
+    for side, edge_y, edge_z in (
+        ("starboard", np.full(grid.nz, y[-1]), z),
+        ("port", np.full(grid.nz, y[0]), z),
+        ("lower", y, np.full(grid.ny, z[0])),
+        ("upper", y, np.full(grid.ny, z[-1])),
+    ):
+        # Of a slanting or round wall the middle of the side counts: its ends come close to it in any window.
+        gap = wall_distance(boundary.section, edge_y, edge_z)
+        found[side] = float(np.median(gap))
+    return found
+
+
+def _at_walls(share: EdgeShare, what: str) -> str:
+    """Half a sentence about what meets the walls."""
+    if not share.walls or not share.at_walls > 0:
+        return ""
+    return (
+        f" {share.at_walls:.1%} of {what} lies where the window meets the {_listed(share.walls)} wall: it ends there."
+    )
+
+
+def _short(share: EdgeShare) -> str:
+    if math.isnan(share.short):
+        return ""
+    return f" That side ends {1e3 * share.short:.3g} mm short of the wall, with more of it in between."
+
+
+def _listed(sides: Sequence[str]) -> str:
+    return sides[0] if len(sides) == 1 else ", ".join(sides[:-1]) + " and " + sides[-1]
+
+
+def edge_vorticity(reduction: Reduction, boundary: Boundary = FREE_AIR) -> Check:
+    """Share of the wake's vorticity that touches the window's edge where the flow goes on beyond it."""
+    share = _edge_share(reduction.vorticity, reduction.region.mask, reduction.flow.grid, boundary)
     return _check(
         "edge_vorticity",
-        value,
+        share.cut,
         {
-            "pass": "The window encloses the wake's vorticity.",
-            "warn": f"{value:.1%} of the wake's vorticity lies along the window's edge, most of it on the {side} side:"
-            " the survey does not enclose its wake; widen it there. Lift and induced drag are those of the part"
-            " inside.",
+            "pass": "The window encloses the wake's vorticity." + _at_walls(share, "it"),
+            "warn": f"{share.cut:.1%} of the wake's vorticity lies along the window's edge, most of it on the"
+            f" {share.side} side: the survey does not enclose its wake; widen it there. Lift and induced drag are those"
+            " of the part inside." + _short(share) + _at_walls(share, "the vorticity"),
             "not_applicable": "No vorticity was found in the plane.",
         },
     )
 
 
-def edge_total_pressure_loss(reduction: Reduction) -> Check:
-    """Share of the total-pressure loss that touches the window's edge."""
+def edge_total_pressure_loss(reduction: Reduction, boundary: Boundary = FREE_AIR) -> Check:
+    """Share of the total-pressure loss that touches the window's edge where the flow goes on beyond it."""
     loss = reduction.reference.total_pressure - reduction.flow.total_pressure
-    value, side = _edge_share(loss, reduction.region.mask, reduction.flow.grid)
+    share = _edge_share(loss, reduction.region.mask, reduction.flow.grid, boundary)
     return _check(
         "edge_total_pressure_loss",
-        value,
+        share.cut,
         {
-            "pass": "The window encloses the wake's total-pressure loss.",
-            "warn": f"{value:.1%} of the total-pressure loss lies along the window's edge, most of it on the {side}"
-            " side: the wake still touches it; widen the survey there. The profile drag is that of the part inside.",
+            "pass": "The window encloses the wake's total-pressure loss." + _at_walls(share, "it"),
+            "warn": f"{share.cut:.1%} of the total-pressure loss lies along the window's edge, most of it on the"
+            f" {share.side} side: the wake still touches it; widen the survey there. The profile drag is that of the"
+            " part inside." + _short(share) + _at_walls(share, "the loss"),
             "not_applicable": "No loss was found in the plane.",
         },
     )

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from wakeledger.confidence.sources import Source
 from wakeledger.core.errors import SurveyError
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.flow import Flow
@@ -16,6 +17,7 @@ from wakeledger.stream.reference import Reference
 
 if TYPE_CHECKING:
     from wakeledger.run.chain import Chain
+    from wakeledger.run.gridded import Regrid
 
 #: What names of inputs of the empty-tunnel survey begin with.
 PREFIX = "empty_tunnel."
@@ -31,9 +33,22 @@ class EmptyTunnel:
     ----------
     chain : Chain
         Its own chain, gridded on its own points.
+    regrid : Regrid
+        Makes griddings of the same points with one choice made differently.
+    sources : tuple of Source
+        Of its probe's calibration and corrections.
     """
 
     chain: Chain
+    regrid: Regrid
+    sources: tuple[Source, ...] = ()
+
+    def with_cut(self, factor: float) -> EmptyTunnel:
+        """The same with another inboard cut, as a multiple of the one asked for."""
+        grid = self.chain.gridding.grid
+        spacing = None if self.chain.gridding.kind == "uniform" else (grid.dy, grid.dz)
+        gridding = self.regrid(cut_factor=factor, spacing=spacing)
+        return replace(self, chain=replace(self.chain, gridding=gridding))
 
     def flow(self, reference: Reference, grid: UniformGrid, errors: Mapping[str, Array]) -> tuple[Array, ...]:
         """What the stream itself has at a station, on another grid and at another speed.

@@ -98,7 +98,7 @@ def grid_survey(survey: SurveyInput, *, quick: bool = False) -> Gridded:
     check_section(settings.boundary, gridding.grid)
     if survey.empty_tunnel is not None:
         stream = empty_tunnel(
-            survey.empty_tunnel, settings, names=(file.path.name, survey.empty_tunnel.survey.path.name)
+            survey.empty_tunnel, settings, cut=regrid.cut, names=(file.path.name, survey.empty_tunnel.survey.path.name)
         )
         stream.check_cover(gridding.grid, place="[empty_tunnel] survey")
         empty = replace(empty, empty=stream)
@@ -162,15 +162,12 @@ def bare_chain(survey: SurveyInput) -> Bare:
 def regrid_of(survey: SurveyInput, state: State) -> Regrid:
     """What grids a survey's points, those inside an inboard cut left out."""
     boundary, points = survey.survey.boundary, survey.points
-    usable = usable_points(state)
     cut = None if boundary is None else boundary.inboard_cut
-    if cut is not None:
-        usable = usable & (points.y >= cut)
     reflection = None if boundary is None else boundary.reflection
-    return Regrid(points.y, points.z, usable, points.row, reflection)
+    return Regrid(points.y, points.z, usable_points(state), points.row, reflection, cut or 0.0)
 
 
-def empty_tunnel(survey: SurveyInput, settings: Settings, *, names: tuple[str, str]) -> EmptyTunnel:
+def empty_tunnel(survey: SurveyInput, settings: Settings, *, cut: float, names: tuple[str, str]) -> EmptyTunnel:
     """The stream without the model from its own survey.
 
     Parameters
@@ -179,6 +176,8 @@ def empty_tunnel(survey: SurveyInput, settings: Settings, *, names: tuple[str, s
         Of the empty tunnel.
     settings : Settings
         Of the survey with the model.
+    cut : float
+        Its inboard cut, m.
     names : (str, str)
         Files of the survey with the model and of that without it, for messages.
 
@@ -206,8 +205,11 @@ def empty_tunnel(survey: SurveyInput, settings: Settings, *, names: tuple[str, s
             place="[plane] station",
             remedy="survey the empty tunnel at the same station",
         )
-    gridding = regrid_of(survey, bare.state)(most_cells=MOST_CELLS)
-    return EmptyTunnel(replace(bare.chain, gridding=gridding))
+    # What is left out next to the reflection plane is left out of both, and filled alike.
+    regrid = regrid_of(survey, bare.state)
+    regrid = replace(regrid, cut=max(regrid.cut, cut))
+    gridding = regrid(most_cells=MOST_CELLS)
+    return EmptyTunnel(replace(bare.chain, gridding=gridding), regrid, () if bare.raw is None else bare.raw.sources)
 
 
 def check_section(boundary: Boundary, grid: UniformGrid) -> None:
@@ -250,7 +252,7 @@ def usable_points(state: State) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
 def settings_of(survey: SurveyInput, reference: Reference) -> Settings:
     """The chain's settings from the survey file."""
     file, plane = survey.survey, survey.survey.plane
-    model = file.model
+    model, boundary = file.model, file.boundary
     quarter_chord = None if model is None else model.quarter_chord()
     axes = plane.axes
     return Settings(
@@ -269,22 +271,10 @@ def settings_of(survey: SurveyInput, reference: Reference) -> Settings:
         include=tuple(file.wake.include),
         exclude=tuple(file.wake.exclude),
         crossflow=file.directed,
-        boundary=FreeAir() if file.boundary is None else file.boundary.surroundings(),
-        given=_given(survey),
-        model_place=None if file.boundary is None else file.boundary.model_centre,
+        boundary=FreeAir() if boundary is None else boundary.surroundings(),
+        given={name: each.value for name, each in survey.given.items()},
+        model_place=None if boundary is None else boundary.model_centre,
     )
-
-
-def _given(survey: SurveyInput) -> dict[str, float]:
-    """What is known of the tunnel beforehand, by input; forces of the half model on the ledger's both halves."""
-    boundary = survey.survey.boundary
-    if boundary is None:
-        return {}
-    doubled = 2.0 if boundary.reflection == "y" else 1.0
-    return {
-        name: entry.value * (1.0 if name == "boundary.solid_blockage" else doubled)
-        for name, entry in boundary.given_values().items()
-    }
 
 
 @dataclass(frozen=True)
@@ -296,6 +286,7 @@ class Regrid:
     usable: np.ndarray[tuple[int], np.dtype[np.bool_]]
     row: np.ndarray[tuple[int], np.dtype[np.int64]] | None
     reflection: Reflection | None = None
+    cut: float = 0.0
 
     def __call__(
         self,
@@ -304,9 +295,12 @@ class Regrid:
         spacing: tuple[float, float] | None = None,
         degree: int = 3,
         most_cells: int = MOST_CELLS,
+        cut_factor: float = 1.0,
     ) -> Gridding:
-        """Gridding with other usable points, another largest spacing (along y and z, m), spline degree or size."""
+        """Gridding with other usable points, largest spacing (along y and z, m), spline degree, size or inboard cut."""
         chosen = self.usable if usable is None else usable
+        if self.cut:
+            chosen = chosen & (self.y >= self.cut * cut_factor)
 
         def make(
             y: Array,
@@ -314,13 +308,12 @@ class Regrid:
             usable: np.ndarray[tuple[int], np.dtype[np.bool_]],
             row: np.ndarray[tuple[int], np.dtype[np.int64]] | None,
         ) -> Gridding:
-            return covered_window(
-                make_gridding(y, z, usable, row=row, spacing=spacing, degree=degree, max_cells=most_cells)
-            )
+            return make_gridding(y, z, usable, row=row, spacing=spacing, degree=degree, max_cells=most_cells)
 
         if self.reflection is None:
-            return make(self.y, self.z, chosen, self.row)
-        return make_mirrored(make, self.y, self.z, chosen, self.row, axis=self.reflection)
+            return covered_window(make(self.y, self.z, chosen, self.row))
+        whole = make_mirrored(make, self.y, self.z, chosen, self.row, axis=self.reflection)
+        return covered_window(whole, mirrored=self.reflection)
 
 
 def find_vortices(nominal: Reduction, settings: Settings) -> tuple[WakeParts, VortexSum]:

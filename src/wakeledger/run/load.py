@@ -15,11 +15,17 @@ from wakeledger.core.names import VARIABLES
 from wakeledger.core.points import Points
 from wakeledger.intake.probe.record import Calibration
 from wakeledger.run.config import Survey, parse_survey, read_survey
+from wakeledger.run.config.tunnel import TunnelInput
 from wakeledger.run.tubes import RakePoints, assemble
 
 if TYPE_CHECKING:
     import xarray as xr
 
+    from wakeledger.ledger.rows import Ledger
+
+#: What other surveys stand for, and where the survey file names them.
+EMPTY_TUNNEL, SUPPORT_TARE = "empty_tunnel", "support_tare"
+_PLACES = {EMPTY_TUNNEL: "[empty_tunnel] survey", SUPPORT_TARE: "[boundary] support_tare survey"}
 _NETCDF = (b"\x89HDF\r\n\x1a\n", b"CDF")
 
 
@@ -41,8 +47,10 @@ class SurveyInput:
         Which tube of a rake took which point.
     read : Points or None
         The points of a rake as read; None where `points` are.
-    empty_tunnel : SurveyInput or None
-        The survey of the tunnel without the model.
+    companions : mapping of str to SurveyInput
+        Surveys that this one names: the tunnel without the model ("empty_tunnel"), the support alone ("support_tare").
+    tare : TunnelInput or None
+        What the survey of the support came to, N, of both halves of a half model.
     """
 
     survey: Survey
@@ -51,7 +59,24 @@ class SurveyInput:
     calibrations: Mapping[str, Calibration] = field(default_factory=dict)
     rake: RakePoints | None = None
     read: Points | None = None
-    empty_tunnel: SurveyInput | None = None
+    companions: Mapping[str, SurveyInput] = field(default_factory=dict)
+    tare: TunnelInput | None = None
+
+    @property
+    def empty_tunnel(self) -> SurveyInput | None:
+        """The survey of the tunnel without the model."""
+        return self.companions.get(EMPTY_TUNNEL)
+
+    @property
+    def given(self) -> dict[str, TunnelInput]:
+        """What is known of the tunnel beforehand and acts on the rows, by input."""
+        boundary = self.survey.boundary
+        if boundary is None:
+            return {}
+        found = boundary.chain_inputs()
+        if self.tare is not None:
+            found["boundary.support_tare"] = self.tare
+        return found
 
     @property
     def as_read(self) -> Points:
@@ -87,10 +112,25 @@ def load(path: str | Path) -> SurveyInput:
         from wakeledger.ledger.archive import open_archive
 
         ledger = open_archive(path)
-        survey = _kept_survey(ledger.survey_text, ledger.raw, path)
-        calibrations = _kept_calibrations(survey, ledger.calibrations, path)
-        return _assembled(SurveyInput(survey, ledger.raw, ledger.inputs, calibrations))
+        return _kept(ledger.survey_text, ledger.raw, ledger, path)
     return load_survey(read_survey(path))
+
+
+def _kept(text: str, points: Points, ledger: Ledger, path: Path) -> SurveyInput:
+    """A survey kept in an archive, with those that it names."""
+    survey = _kept_survey(text, points, path)
+    calibrations = _kept_calibrations(survey, ledger.calibrations, path)
+    companions = {}
+    for name in companion_files(survey):
+        if name not in ledger.companions:
+            raise DataError(
+                f"the survey of {_PLACES[name]} is not kept inside",
+                file=path,
+                remedy="take the file from its backup, or reduce the survey again",
+            )
+        kept = ledger.companions[name]
+        companions[name] = _kept(kept.survey_text, kept.raw, ledger, path)
+    return _assembled(SurveyInput(survey, points, ledger.inputs, calibrations, companions=companions))
 
 
 def _kept_survey(text: object, points: Points, path: Path) -> Survey:
@@ -177,45 +217,61 @@ def load_survey(survey: Survey) -> SurveyInput:
         calibration = calibrations[name] = load_calibration(survey.resolve(name))
         inputs[name] = hashlib.sha256(survey.resolve(name).read_bytes()).hexdigest()
         inputs |= {own: digest for own, digest in calibration.inputs.items() if own not in inputs}
-    empty = _empty_tunnel(survey)
-    if empty is not None:
-        inputs |= {name: digest for name, digest in empty.inputs.items() if name not in inputs}
-    return _assembled(SurveyInput(survey, points, inputs, calibrations, empty_tunnel=empty))
+    companions = {}
+    for name, file in companion_files(survey).items():
+        companion = read_survey(file)
+        check_companion(companion, name)
+        companions[name] = load_survey(companion)
+        inputs |= {own: digest for own, digest in companions[name].inputs.items() if own not in inputs}
+    return _assembled(SurveyInput(survey, points, inputs, calibrations, companions=companions))
 
 
-def _empty_tunnel(survey: Survey) -> SurveyInput | None:
-    """The survey of the tunnel without the model that a survey names."""
-    if survey.empty_tunnel is None:
-        return None
-    file = survey.resolve(survey.empty_tunnel.survey)
-    if file.resolve() == survey.path.resolve():
-        raise SurveyError(
-            "it is this survey itself",
-            file=survey.path,
-            place="[empty_tunnel] survey",
-            remedy="name the survey file of the tunnel without the model",
-        )
-    empty = read_survey(file)
-    check_empty_tunnel(empty)
-    return load_survey(empty)
-
-
-def check_empty_tunnel(empty: Survey) -> None:
-    """Refuse a survey that cannot stand for the tunnel without the model.
+def companion_files(survey: Survey) -> dict[str, Path]:
+    """Survey files that a survey names, by what they stand for.
 
     Raises
     ------
     SurveyError
-        If it is a line traverse, or subtracts an empty tunnel itself.
+        If a survey names itself.
     """
-    if empty.section is not None or empty.empty_tunnel is not None:
-        what = "a line traverse" if empty.section is not None else "a survey that names an empty tunnel itself"
-        raise SurveyError(
-            f"the survey of the empty tunnel is {what}",
-            file=empty.path,
-            place="[section]" if empty.section is not None else "[empty_tunnel]",
-            remedy="survey the same plane without the model",
-        )
+    named: dict[str, str] = {}
+    if survey.empty_tunnel is not None:
+        named[EMPTY_TUNNEL] = survey.empty_tunnel.survey
+    tare = None if survey.boundary is None else survey.boundary.support_tare
+    if tare is not None and tare.survey is not None:
+        named[SUPPORT_TARE] = tare.survey
+    found = {}
+    for name, file in named.items():
+        path = survey.resolve(file)
+        if path.resolve() == survey.path.resolve():
+            raise SurveyError(
+                "it is this survey itself",
+                file=survey.path,
+                place=_PLACES[name],
+                remedy="name the survey file of the tunnel without the model",
+            )
+        found[name] = path
+    return found
+
+
+def check_companion(companion: Survey, name: str) -> None:
+    """Refuse a survey that cannot stand for the tunnel without the model, or for its support.
+
+    Raises
+    ------
+    SurveyError
+        If it is a line traverse, or names such surveys itself.
+    """
+    own = companion_files(companion)
+    if companion.section is None and not own:
+        return
+    what = "a line traverse" if companion.section is not None else "a survey that names another one"
+    raise SurveyError(
+        f"{_PLACES[name]} is {what}",
+        file=companion.path,
+        place="[section]" if companion.section is not None else _PLACES[next(iter(own))],
+        remedy="survey the same plane without the model, and nothing taken out of it",
+    )
 
 
 def _assembled(survey: SurveyInput) -> SurveyInput:

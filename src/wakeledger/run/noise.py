@@ -52,6 +52,8 @@ class Noise:
         Correlation matrices along z and y of the raw tensor grid; None where points are independent.
     fields : ndarray, shape (2, k, nz, ny), or None
         Drawn errors of v and w on the grid, m/s; None where they are not needed.
+    drawn : bool
+        Whether the drawn fields are all that is known of it.
     """
 
     name: str
@@ -59,6 +61,7 @@ class Noise:
     outer_variance: tuple[float, float]
     correlation: tuple[Array | None, Array | None] = (None, None)
     fields: Array | None = None
+    drawn: bool = False
 
     @property
     def is_white(self) -> bool:
@@ -93,6 +96,9 @@ def declared_noise(
     for source in sources:
         if source.effect == "systematic":
             continue
+        if source.prefix and all(name.startswith(source.prefix) for name in source.applies_to):
+            found += _of_empty_tunnel(chain, nominal, source, layouts, seed=seed)
+            continue
         correlation = _correlation(source, chain)
         # A point beside a reflection plane carries the error of its twin: only drawn fields hold that.
         independent = correlation is not None and all(matrix is None for matrix in correlation)
@@ -111,6 +117,28 @@ def declared_noise(
         fields = None if independent else _on_grid(chain, errors)
         found.append(Noise(source.name, inner, outer, correlation or (None, None), fields))
     return tuple(found)
+
+
+def _of_empty_tunnel(
+    chain: Chain, nominal: Reduction, source: Source, layouts: Mapping[str, InputLayout], *, seed: int
+) -> list[Noise]:
+    """Noise that taking out the empty tunnel brings in, as drawn fields on the survey's own grid."""
+    if chain.empty is None:
+        return []
+    grid, mask = nominal.flow.grid, nominal.region.mask
+    _, v, w, _, _ = chain.empty.flow(nominal.reference, grid, {})
+    draws = SourceErrors(source, layouts, seed=seed).draw(0, _DRAWS)
+    fields = [
+        chain.empty.flow(nominal.reference, grid, {name: array[k] for name, array in draws.items()})[1:3]
+        for k in range(_DRAWS)
+    ]
+    errors = np.stack([[v - one[0] for one in fields], [w - one[1] for one in fields]])
+    if not np.abs(errors).max() > 0:
+        return []
+    white = source.effect == "random" and source.correlation_length is None
+    none = (None, None) if white else (np.eye(0), np.eye(0))
+    inner, outer = _mean_square(errors[:, :, mask]), _mean_square(errors)
+    return [Noise(source.name, inner, outer, none, errors, drawn=True)]
 
 
 def _on_grid(chain: Chain, errors: Array) -> Array:
@@ -202,7 +230,7 @@ def _bias_of(chain: Chain, nominal: Reduction, noise: Noise) -> dict[str, float]
     energy = estimate_of("induced_drag", "energy_area")
     line, vortices = estimate_of("induced_drag", "wake_line"), estimate_of("induced_drag", "vortex_sum")
     cuts, parts = chain.frozen.cuts, chain.frozen.parts
-    if gridding.operators() is None:
+    if noise.drawn or gridding.operators() is None:
         if noise.fields is None:
             return {}
         v, w = noise.fields

@@ -6,7 +6,7 @@ spacing of the points, the spline between them, the filling of gaps, the zeros t
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -14,11 +14,11 @@ import numpy as np
 from wakeledger.confidence.terms import NumericalTerm
 from wakeledger.core.errors import DataError
 from wakeledger.core.grid import Array
-from wakeledger.intake.gridding import Gridding
 from wakeledger.physics.fields.outer_flow import OuterFlow
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.physics.methods.residual import residual_drag
 from wakeledger.run.chain import Chain, sampled_mask
+from wakeledger.run.gridded import Regrid
 from wakeledger.run.outputs import OUTPUTS, coefficient_of, estimate_of
 from wakeledger.run.reduction import Reduction, Variation
 
@@ -28,6 +28,8 @@ RESAMPLING = "spline between the points"
 GAPS = "filled points"
 LOSS_ZERO = "zero of the total pressure"
 OFFSET_ZERO = "zero of the flow angles"
+SWIRL = "rotation of the stream"
+CUT = "inboard cut"
 PAIR = "bound vortex in the residual"
 PRESSURE = "static pressure that was not measured"
 METHOD = "choices inside {}"
@@ -58,7 +60,7 @@ def numerical_terms(
     nominal: Reduction,
     *,
     outer: OuterFlow,
-    regrid: Callable[..., Gridding],
+    regrid: Regrid,
     method_uncertainty: Mapping[str, float],
     noise: Sequence[Mapping[str, Array]] = (),
 ) -> tuple[NumericalTerm, ...]:
@@ -72,8 +74,8 @@ def numerical_terms(
         Its nominal reduction.
     outer : OuterFlow
         Zeros found in the outer flow, with their uncertainties.
-    regrid : callable
-        Makes a gridding of the same points: ``regrid(usable=..., degree=..., spacing=...)``.
+    regrid : Regrid
+        Makes a gridding of the same points with one choice made differently.
     method_uncertainty : mapping of str to float
         Standard uncertainty that an estimate's own method adds, by output, N.
     noise : sequence of mapping
@@ -95,6 +97,10 @@ def numerical_terms(
         _deviation(chain, nominal, Variation(crossflow_shift=pair)) if np.isfinite(shift) else None
         for pair in ((shift, 0.0), (0.0, shift))
     ]
+    if np.isfinite(outer.swirl_uncertainty):
+        terms.append(NumericalTerm(SWIRL, _deviation(chain, nominal, Variation(swirl_shift=outer.swirl_uncertainty))))
+    if regrid.cut:
+        terms.append(_cut_term(chain, nominal, regrid))
     known = [one for one in both if one is not None]
     if known:
         terms.append(NumericalTerm(OFFSET_ZERO, np.sqrt(sum(one**2 for one in known))))
@@ -156,7 +162,7 @@ def _resolution_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
     return NumericalTerm(RESOLUTION, change)
 
 
-def _resampling_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gridding]) -> NumericalTerm:
+def _resampling_term(chain: Chain, nominal: Reduction, regrid: Regrid) -> NumericalTerm:
     other = chain.with_gridding(regrid(degree=5, spacing=(nominal.flow.grid.dy, nominal.flow.grid.dz)))
     same = other.gridding.grid.shape == nominal.flow.grid.shape
     vary = Variation(mask=nominal.region.mask if same else None)
@@ -185,7 +191,7 @@ def _pair_term(nominal: Reduction) -> NumericalTerm:
     return NumericalTerm(PAIR, vector)
 
 
-def _gap_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gridding]) -> NumericalTerm:
+def _gap_term(chain: Chain, nominal: Reduction, regrid: Regrid) -> NumericalTerm:
     """Remove measured points in the same pattern beside the true gaps, fill them, and see what that does."""
     state = chain.state(nominal.reference)
     usable = np.isfinite(state.v) & np.isfinite(state.w)
@@ -219,6 +225,24 @@ def _gap_term(chain: Chain, nominal: Reduction, regrid: Callable[..., Gridding])
         without = nominal.region.mask & ~chain.gridding.filled
         return NumericalTerm(GAPS, _deviation(chain, nominal, Variation(mask=without)))
     return NumericalTerm(GAPS, np.sqrt(np.mean(np.square(changes), axis=0)))
+
+
+def _cut_term(chain: Chain, nominal: Reduction, regrid: Regrid) -> NumericalTerm | None:
+    """What half the inboard cut, and half as much again, would have given."""
+    grid = chain.gridding.grid
+    spacing = None if chain.gridding.kind == "uniform" else (grid.dy, grid.dz)
+    found = []
+    for factor in SWEEP:
+        gridding = regrid(cut_factor=factor, spacing=spacing)
+        vary = Variation(mask=sampled_mask(nominal.region.mask, grid, gridding.grid))
+        other = chain.with_gridding(gridding)
+        if chain.empty is not None:
+            other = replace(other, empty=chain.empty.with_cut(factor))
+        found.append(_difference(other.reduce(vary=vary).vector, nominal))
+    frozen = [OUTPUTS.index(name) for name in _FROZEN]
+    size = np.abs(found).max(axis=0)
+    size[frozen] = 0.0
+    return NumericalTerm(CUT, size / np.sqrt(3), "rectangular")
 
 
 def _filled_places(chain: Chain) -> Array:

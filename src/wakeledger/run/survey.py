@@ -14,10 +14,10 @@ from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.confidence.terms import NumericalTerm, add_terms
-from wakeledger.core.errors import InputError
+from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.core.grid import Array
 from wakeledger.ledger.inspection import Inspection
-from wakeledger.ledger.rows import Check, CrossCheck, Ledger, Row
+from wakeledger.ledger.rows import Check, CrossCheck, KeptSurvey, Ledger, Row
 from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
 from wakeledger.physics.loading.span import span_loading
 from wakeledger.physics.methods.energy_area import crossflow_energy
@@ -38,11 +38,12 @@ from wakeledger.run.assembly import (
 )
 from wakeledger.run.chain import Chain, turned_crossflow
 from wakeledger.run.checks import Facts, all_checks
+from wakeledger.run.config.tunnel import GIVEN, TunnelInput
 from wakeledger.run.estimates import counted_mask, without_walls
 from wakeledger.run.gridded import core_spacings, grid_survey, regrid_of
 from wakeledger.run.inputs import gradients, layouts, sources
 from wakeledger.run.inspection import inspect_plane, inspect_section
-from wakeledger.run.load import SurveyInput, load, refuse_unsupported
+from wakeledger.run.load import SUPPORT_TARE, SurveyInput, load, refuse_unsupported
 from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
 from wakeledger.run.numerics import numerical_terms
 from wakeledger.run.outputs import ESTIMATES, MOMENTS, OUTPUTS, ROWS, estimate_of
@@ -50,6 +51,7 @@ from wakeledger.run.probe_range import probe_range
 from wakeledger.run.reduction import Frozen, Reduction
 from wakeledger.run.section.survey import reduce_section
 from wakeledger.run.traverse_notes import traverse_notes
+from wakeledger.run.tunnel import tunnel_figures, tunnel_notes, tunnel_sources
 
 __all__ = ["SurveyInput", "inspect", "load", "prepare", "reduce"]
 
@@ -136,6 +138,7 @@ def reduce(
     """
     if survey.survey.section is not None:
         return reduce_section(survey, draws=draws, progress=progress, command=command)
+    survey = _with_tare(survey, draws=draws)
     prepared = prepare(survey)
     require_rows(survey.survey, [name for name in ROWS if not math.isnan(prepared.nominal.values[name])])
     uncertainty = survey.survey.uncertainty
@@ -152,6 +155,22 @@ def reduce(
     if samples is not None and any(check.name == "net_circulation" and check.verdict == "fail" for check in checks):
         samples = made_unknown(samples, _INDUCED, _UNBALANCED)
     return _ledger(survey, prepared, samples, budget, checks, command=command)
+
+
+def _with_tare(survey: SurveyInput, *, draws: int | None) -> SurveyInput:
+    """The survey with what its survey of the support alone came to."""
+    support = survey.companions.get(SUPPORT_TARE)
+    if support is None or survey.tare is not None:
+        return survey
+    row = next(row for row in reduce(support, draws=draws).rows if row.name == "profile_drag")
+    if not math.isfinite(row.standard_uncertainty):
+        raise SurveyError(
+            "the profile drag of the support alone has no known uncertainty",
+            file=support.survey.path,
+            place="[[uncertainty.source]]",
+            remedy="declare the sources of that survey, or give the tare as a value with its uncertainty",
+        )
+    return replace(survey, tare=TunnelInput(row.value, row.standard_uncertainty, GIVEN[SUPPORT_TARE]))
 
 
 def inspect(survey: SurveyInput) -> Inspection:
@@ -221,6 +240,8 @@ def _prepare(survey: SurveyInput) -> Prepared:
     declared = sources(file, points, reference) + (() if raw is None else raw.sources)
     names = sorted({name for source in declared for name in source.applies_to})
     inputs = layouts(file, points, gridding, names)
+    declared, of_tunnel = tunnel_sources(survey, chain, declared)
+    inputs |= of_tunnel
     if any(name.startswith("position.") for name in names):
         chain = replace(chain, gradients=gradients(chain))
     plain = chain.reduce()
@@ -240,7 +261,13 @@ def _prepare(survey: SurveyInput) -> Prepared:
     )
     expected = _expected(chain, nominal)
     made = () if raw is None else traverse_notes(raw, chain, nominal)
-    notes = (*file.notes(), *made, *tables.notes(survey, chain, nominal, gridded.state), *noise_notes)
+    notes = (
+        *file.notes(),
+        *made,
+        *tables.notes(survey, chain, nominal, gridded.state),
+        *tunnel_notes(survey, chain, nominal),
+        *noise_notes,
+    )
     return Prepared(chain, nominal, outer, line, vortices, expected, declared, inputs, noises, notes)
 
 
@@ -442,6 +469,8 @@ def _ledger(
             crossflow=prepared.chain.settings.crossflow,
         ),
         calibrations=tables.calibration_tables(survey.calibrations),
+        tunnel=tunnel_figures(prepared.chain, nominal, samples),
+        companions={name: KeptSurvey(one.survey.text, one.as_read) for name, one in survey.companions.items()},
         inputs=dict(survey.inputs),
         provenance=tables.provenance(command),
     )
@@ -457,6 +486,7 @@ def _facts(prepared: Prepared) -> Facts:
         spacings=core_spacings(prepared.chain, prepared.vortices.vortices),
         crossflow=prepared.chain.settings.crossflow,
         probe=probe_range(prepared.chain),
+        boundary=prepared.chain.settings.boundary,
     )
 
 

@@ -60,16 +60,18 @@ class CutScheme:
 
     def decimated(self, step: int, phase: tuple[int, int]) -> Gridding:
         """The same with every `step`-th row and column only, cut to what is covered then."""
-        return covered_window(self.whole.decimated(step, phase))
+        return covered_window(self.whole.decimated(step, phase), mirrored=self.mirrored)
 
 
-def covered_window(gridding: Gridding) -> Gridding:
+def covered_window(gridding: Gridding, *, mirrored: str | None = None) -> Gridding:
     """Cut a gridding to the largest rectangle that its points cover.
 
     Parameters
     ----------
     gridding : Gridding
         The gridding.
+    mirrored : {"y", "z"}, optional
+        Reflection plane between two halves of the points, next to which nothing need be measured.
 
     Returns
     -------
@@ -82,7 +84,7 @@ def covered_window(gridding: Gridding) -> Gridding:
     DataError
         If no rectangle of at least 5 x 5 cells is covered.
     """
-    outside = _outside(gridding.flag)
+    outside = _outside(gridding.flag, gridding.grid, mirrored)
     if not outside.any():
         return gridding
     rows, columns = _largest_rectangle(~outside)
@@ -110,9 +112,12 @@ def covered_window(gridding: Gridding) -> Gridding:
     )
 
 
-def _outside(flag: NDArray[np.int32]) -> NDArray[np.bool_]:
-    """Cells far from the data that hang together with the window's edge."""
+def _outside(flag: NDArray[np.int32], grid: UniformGrid, mirrored: str | None) -> NDArray[np.bool_]:
+    """Cells far from the data that hang together with the window's edge, not through the gap between two halves."""
     far = (flag & Flag.FAR_FROM_DATA.value) != 0
+    if mirrored is not None and not far.all():
+        across = np.abs(grid.mesh()[0 if mirrored == "y" else 1])
+        far &= across >= across[~far].min()
     labels, _ = ndimage.label(far)
     edge = np.unique(np.concatenate([labels[0], labels[-1], labels[:, 0], labels[:, -1]]))
     found: NDArray[np.bool_] = np.isin(labels, edge[edge > 0])

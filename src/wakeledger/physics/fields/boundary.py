@@ -308,14 +308,38 @@ def points_inside(section: Section, y: Array, z: Array, *, margin: float = 0.0) 
         return np.asarray(radius <= section.diameter / 2 + margin)
     corners = section.corners
     inside = np.zeros(y.shape, dtype=bool)
-    close = np.zeros(y.shape, dtype=bool)
     for (y0, z0), (y1, z1) in zip(corners, np.roll(corners, -1, axis=0), strict=True):
         crosses = (z0 > z) != (z1 > z)
         with np.errstate(divide="ignore", invalid="ignore"):
             inside ^= crosses & (y < (y1 - y0) * (z - z0) / (z1 - z0) + y0)
+    return inside | (wall_distance(section, y, z) <= margin)
+
+
+def wall_distance(section: Section, y: Array, z: Array) -> Array:
+    """Distance of points from the nearest wall of a section, on either side of it.
+
+    Parameters
+    ----------
+    section : Rectangle, Circle or Polygon
+        The section.
+    y, z : ndarray, any common shape
+        Points, m.
+
+    Returns
+    -------
+    ndarray
+        m, not negative.
+    """
+    y, z = np.broadcast_arrays(np.asarray(y, float), np.asarray(z, float))
+    if isinstance(section, Circle):
+        radius = np.hypot(y - section.centre[0], z - section.centre[1])
+        return np.abs(radius - section.diameter / 2)
+    nearest = np.full(y.shape, np.inf)
+    corners = section.corners
+    for (y0, z0), (y1, z1) in zip(corners, np.roll(corners, -1, axis=0), strict=True):
         along = np.clip(((y - y0) * (y1 - y0) + (z - z0) * (z1 - z0)) / ((y1 - y0) ** 2 + (z1 - z0) ** 2), 0, 1)
-        close |= np.hypot(y - y0 - along * (y1 - y0), z - z0 - along * (z1 - z0)) <= margin
-    return inside | close
+        nearest = np.minimum(nearest, np.hypot(y - y0 - along * (y1 - y0), z - z0 - along * (z1 - z0)))
+    return nearest
 
 
 def check_window(grid: UniformGrid, boundary: Boundary) -> None:
