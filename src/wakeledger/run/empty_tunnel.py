@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection, Mapping
+from collections.abc import Mapping, Set
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
@@ -94,7 +94,7 @@ class EmptyTunnel:
         errors: Mapping[str, Array],
         *,
         primary: str,
-        measured: Collection[str],
+        measured: Set[str],
     ) -> Flow:
         """A plane less what the stream itself has there.
 
@@ -108,7 +108,7 @@ class EmptyTunnel:
             Errors by input.
         primary : {"total_pressure", "velocity"}
             Which variables were measured with the model.
-        measured : collection of str
+        measured : set of str
             Their names.
 
         Returns

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.physics.fields.boundary import ClosedWalls
 from wakeledger.physics.fields.flow import Flow
 from wakeledger.physics.fields.lifting_line import NearField
 from wakeledger.physics.fields.outer_flow import crossflow_offset, induced_crossflow
@@ -100,10 +101,10 @@ def area_estimates(
 
 def _beside_the_window(settings: Settings, grid: UniformGrid, reference: Reference, wake_blockage: float) -> float:
     """What the faster stream between the window and closed walls takes off the momentum balance, ½ρ∬(2u_b)² dA, N."""
-    if wake_blockage == 0.0:
+    if not isinstance(settings.boundary, ClosedWalls):
         return 0.0
     width, height = (grid.ny - 1) * grid.dy, (grid.nz - 1) * grid.dz
-    beside = max(getattr(settings.boundary, "section").area - width * height, 0.0)  # noqa: B009
+    beside = max(settings.boundary.section.area - width * height, 0.0)
     return 2 * reference.density * wake_blockage**2 * beside
 
 

@@ -339,8 +339,8 @@ def _expected(chain: Chain, nominal: Reduction) -> dict[str, float]:
         v, w = without_walls(settings, flow, nominal.forces)
         mask = counted_mask(settings, nominal.region.mask, flow.grid)
         here, there = (
-            evaluate_wake_line(cuts, *field, reference.density, reference.speed, mask=mask)
-            for field in ((v, w), (v - near[0], w - near[1]))
+            evaluate_wake_line(cuts, at_v, at_w, reference.density, reference.speed, mask=mask)
+            for at_v, at_w in ((v, w), (v - near[0], w - near[1]))
         )
         zero[estimate_of("induced_drag", "wake_line")] = float(here.induced_drag - there.induced_drag)
         zero[estimate_of("lift", "wake_line")] = float(here.lift - there.lift)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection
+from collections.abc import Set
 from dataclasses import replace
 
 import numpy as np
@@ -13,7 +13,7 @@ from wakeledger.stream.reference import Reference
 
 
 def zeroed(
-    flow: Flow, reference: Reference, zero: float, *, primary: str, measured: Collection[str], directed: bool
+    flow: Flow, reference: Reference, zero: float, *, primary: str, measured: Set[str], directed: bool
 ) -> Flow:
     """The plane with a constant added to its total pressure.
 
@@ -27,7 +27,7 @@ def zeroed(
         Added to the total pressure, Pa.
     primary : {"total_pressure", "velocity"}
         Which variables were measured.
-    measured : collection of str
+    measured : set of str
         Their names.
     directed : bool
         Whether the flow's direction was measured.

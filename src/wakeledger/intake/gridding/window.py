@@ -30,6 +30,8 @@ class CutScheme:
         The scheme that grids the points.
     rows, columns : slice
         The rectangle.
+    mirrored : {"y", "z"} or None
+        Reflection plane between two halves of the points.
     shape : (int, int)
         Shape of the whole grid.
     """

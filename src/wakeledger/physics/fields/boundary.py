@@ -333,7 +333,8 @@ def wall_distance(section: Section, y: Array, z: Array) -> Array:
     y, z = np.broadcast_arrays(np.asarray(y, float), np.asarray(z, float))
     if isinstance(section, Circle):
         radius = np.hypot(y - section.centre[0], z - section.centre[1])
-        return np.abs(radius - section.diameter / 2)
+        distance: Array = np.abs(radius - section.diameter / 2)
+        return distance
     nearest = np.full(y.shape, np.inf)
     corners = section.corners
     for (y0, z0), (y1, z1) in zip(corners, np.roll(corners, -1, axis=0), strict=True):
