@@ -111,7 +111,7 @@ class Chain:
 
     def with_gridding(self, gridding: Gridding) -> Chain:
         """The same survey on another grid, without what was found on this one."""
-        frozen = replace(self.frozen, near_field=None, cuts=None, parts=None, region=None)
+        frozen = replace(self.frozen, near_field=None, cuts=None, parts=None, region=None, turned=None)
         displacement = None if self.displacement is None else self.displacement.frozen_on(None)
         return replace(self, gridding=gridding, frozen=frozen, displacement=displacement)
 
