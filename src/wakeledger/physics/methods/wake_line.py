@@ -325,7 +325,7 @@ def edge_scatter(edge_change: Array) -> Array:
 
 
 def sensitivity(
-    cuts: WakeCuts, v: Array, w: Array, density: float, speed: float
+    cuts: WakeCuts, v: Array, w: Array, density: float, speed: float, *, mask: Mask | None = None
 ) -> tuple[tuple[Array, Array], tuple[Array, Array]]:
     """Exact derivatives of drag and lift with respect to every measured velocity.
 
@@ -337,15 +337,18 @@ def sensitivity(
         Crossflow, m/s.
     density, speed : float
         Undisturbed stream, kg/m³ and m/s.
+    mask : ndarray of bool, shape (nz, ny), optional
+        Wake region, where it is not that of the cuts.
 
     Returns
     -------
     (drag_v, drag_w), (lift_v, lift_w) : ndarray, shape (nz, ny)
         N per m/s, the offset being read from the field itself.
     """
-    drag_v, drag_w = path_sensitivity(cuts, v, w)
+    form = cuts if mask is None else PathForm(cuts.grid, _cells(mask), cuts.outer)
+    drag_v, drag_w = path_sensitivity(form, v, w)
     y = cuts.grid.y0 + cuts.grid.dy * (np.arange(cuts.grid.ny - 1) + 0.5)
-    lift_v, lift_w = adjoint_of_circulation(cuts.cells * y, cuts.grid)
+    lift_v, lift_w = adjoint_of_circulation(form.cells * y, cuts.grid)
     half, impulse = density / 2, density * speed
     return (half * drag_v, half * drag_w), (impulse * lift_v, impulse * lift_w)
 

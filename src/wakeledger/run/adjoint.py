@@ -1,0 +1,446 @@
+"""Exact derivatives of every output of the chain with respect to every input, backwards through the chain.
+
+One pass forwards gives the plane, one pass backwards the derivative of each output by every value at every point:
+
+    output → plane → (swirl, zero, empty tunnel, relations) → gridded state → points → channels.
+
+Each step is the transpose of the chain's own. The last one, from the state of a point to what was measured there, acts
+on each point alone, so that the chain's own state, shifted by a small step at all points at once, gives all its
+derivatives. What acts on the survey as a whole through the reference state is differenced by whole passes.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, fields, replace
+
+import numpy as np
+
+from wakeledger.confidence.sources import InputLayout
+from wakeledger.core.grid import Array
+from wakeledger.intake.probe.traverse import correction_input
+from wakeledger.intake.state import State
+from wakeledger.physics.fields.boundary import ClosedWalls, FreeAir
+from wakeledger.physics.fields.flow import Flow
+from wakeledger.physics.methods import gradients
+from wakeledger.physics.methods.gradients import FlowGradient
+from wakeledger.physics.methods.vorticity_area import own_share
+from wakeledger.physics.methods.wake_line import sensitivity as wake_line_sensitivity
+from wakeledger.physics.vortices.vortex_sum import sensitivities as vortex_sum_sensitivities
+from wakeledger.run.adjoint_plane import (
+    Gradient,
+    before_empty_tunnel,
+    before_relations,
+    before_swirl,
+    before_zero,
+    crossflow_functional,
+)
+from wakeledger.run.chain import Chain
+from wakeledger.run.empty_tunnel import PREFIX, _onto
+from wakeledger.run.estimates import counted_mask, without_walls
+from wakeledger.run.outputs import (
+    MOMENTS,
+    OUTPUTS,
+    ROWS,
+    coefficient_of,
+    corrected_coefficient_of,
+    estimate_of,
+)
+from wakeledger.run.reduction import Reduction
+
+FREE_AIR = FreeAir()
+#: Wake-blockage velocity, m/s, among the figures that are differentiated; the outputs hold its share of the speed.
+_BLOCKAGE = "wake blockage velocity"
+#: Step of a point's own derivative, as a share of the range of its input: errors of 1e-10 from curvature and rounding.
+_STEP = 1e-5
+#: The same for flow angles, rad, and for errors counted in standard uncertainties.
+_ANGLE_STEP, _SIGMA_STEP = 1e-5, 1e-3
+
+
+@dataclass(frozen=True)
+class PointGradient:
+    """Derivatives by the flow state at the points.
+
+    Attributes
+    ----------
+    names : tuple of str
+        The k figures that are differentiated.
+    by : dict of str to ndarray, shape (k, n)
+        By u, v, w, total_pressure, static_pressure, density and temperature of each point, where there are any.
+    outputs : ndarray, shape (m, k)
+        Derivatives of the chain's outputs (`wakeledger.run.outputs.OUTPUTS`) by the figures; NaN for an output that is
+        not known or not differentiated.
+    empty : PointGradient or None
+        The same by the points of the empty tunnel.
+    """
+
+    names: tuple[str, ...]
+    by: Gradient
+    outputs: Array
+    empty: PointGradient | None = None
+
+
+def point_gradient(chain: Chain, nominal: Reduction, *, estimates: bool = True) -> PointGradient:
+    """Derivatives of the outputs by the flow state at every point.
+
+    Parameters
+    ----------
+    chain : Chain
+        The survey, with what was frozen on the nominal plane.
+    nominal : Reduction
+        Its reduction.
+    estimates : bool
+        Whether the cross-checks are among the outputs; they are NaN otherwise.
+
+    Returns
+    -------
+    PointGradient
+    """
+    reference, mask = nominal.reference, nominal.region.mask
+    figures = _figures(chain, nominal, estimates=estimates)
+    names = tuple(figures)
+    gradient = _stacked([figures[name] for name in names], nominal.flow)
+    before = chain.flow(reference)
+    gradient = before_swirl(gradient, chain, nominal.flow, mask)
+    gradient = before_zero(gradient, chain, reference, before, zero=nominal.loss_zero, mask=mask)
+    empty = None
+    if chain.empty is not None:
+        gradient, by_stream = before_empty_tunnel(gradient, chain, chain.empty, reference, before)
+        empty = _empty_gradient(chain, names, by_stream, nominal)
+        with_stream = replace(chain, empty=None).flow(reference)
+        gradient = before_relations(gradient, chain, reference, with_stream)
+    else:
+        gradient = before_relations(gradient, chain, reference, before)
+    return PointGradient(names, _to_points(gradient, chain), _outputs(chain, nominal, names), empty)
+
+
+def _empty_gradient(chain: Chain, names: tuple[str, ...], by_stream: Gradient, nominal: Reduction) -> PointGradient:
+    """By the points of the empty tunnel, through its scaling and its own relations."""
+    assert chain.empty is not None
+    own = chain.empty.chain
+    stream = own.reference()
+    flow = own.flow(stream)
+    speed = nominal.reference.speed / stream.speed
+    pressure = nominal.reference.dynamic_pressure / stream.dynamic_pressure
+    grid = nominal.flow.grid
+    along_z, along_y = _onto(flow.grid.z, grid.z), _onto(flow.grid.y, grid.y)
+    gradient: Gradient = {}
+    for name, by in by_stream.items():
+        scaled = by * (pressure if name.endswith("pressure") else speed)
+        if along_z is not None:
+            scaled = along_z.T @ scaled
+        gradient[name] = scaled if along_y is None else scaled @ along_y
+    gradient = before_relations(gradient, own, stream, flow)
+    return PointGradient(names, _to_points(gradient, own), np.zeros((len(OUTPUTS), len(names))))
+
+
+def _to_points(gradient: Gradient, chain: Chain) -> Gradient:
+    gridding = chain.gridding
+    return {
+        name: gridding.transposed(by, odd=gridding.is_odd(name) if name in ("v", "w") else False)
+        for name, by in gradient.items()
+        if np.any(by)
+    }
+
+
+def _stacked(found: Sequence[FlowGradient], flow: Flow) -> Gradient:
+    result: Gradient = {}
+    for entry in fields(FlowGradient):
+        parts = [getattr(one, entry.name) for one in found]
+        if any(np.ndim(part) for part in parts):
+            result[entry.name] = np.stack([np.broadcast_to(np.asarray(part, float), flow.grid.shape) for part in parts])
+    return result
+
+
+def _figures(chain: Chain, nominal: Reduction, *, estimates: bool) -> dict[str, FlowGradient]:
+    """Derivatives of what the outputs are made of by the plane that the methods see."""
+    settings, flow, reference = chain.settings, nominal.flow, nominal.reference
+    grid, mask, star, forces = flow.grid, nominal.region.mask, nominal.loss_free, nominal.forces
+    counted, boundary = settings.counted, settings.boundary.whole
+    weights = np.where(mask, grid.weights, 0.0)
+    blockage = nominal.wake_blockage
+    near = chain.frozen.near_field
+    shift: Array | float = 0.0 if near is None else near.u
+    profile = gradients.profile_gradient(flow, reference, star, weights)
+    axial = gradients.axial_gradient(flow, reference, star, weights, shift=shift + 2 * blockage)
+    found: dict[str, FlowGradient] = {}
+    if isinstance(boundary, ClosedWalls):
+        deficit = gradients.deficit_gradient(flow, reference, star, weights)
+        found[_BLOCKAGE] = deficit * (1 / (2 * boundary.surveyed_area))
+        # ρu_b∬(u* − u) is quadratic in the deficit, which u_b is a multiple of.
+        profile = profile + deficit * (-2 * reference.density * blockage)
+        if not reference.compressible:
+            by_blockage = (
+                2 * reference.density * float((weights * (star - shift - 2 * blockage - reference.speed)).sum())
+            )
+            axial = axial + found[_BLOCKAGE] * by_blockage
+    found["profile_drag"] = profile * counted
+    if settings.crossflow:
+        divergence = gradients.divergence_gradient(flow, mask, density=reference.density, near=near, boundary=boundary)
+        found["residual_drag"] = (divergence + axial) * counted
+        induced = gradients.induced_gradient(forces.stream_function, mask, grid, density=reference.density)
+        found["induced_drag"] = induced * counted
+        if settings.bounded:
+            free = gradients.induced_gradient(forces.free_air_stream_function, mask, grid, density=reference.density)
+            found["induced_drag_free_air"] = free * counted
+        found |= _impulses(chain, nominal)
+    if estimates:
+        name = estimate_of("profile_drag", "entropy_area")
+        found[name] = gradients.entropy_gradient(flow, reference, weights) * counted
+        if settings.crossflow:
+            found |= _energies(chain, nominal, found.get(_BLOCKAGE))
+            found |= _on_frozen_geometry(chain, nominal, found)
+    return found
+
+
+def _impulses(chain: Chain, nominal: Reduction) -> dict[str, FlowGradient]:
+    settings, flow, reference = chain.settings, nominal.flow, nominal.reference
+    grid, reflection = flow.grid, settings.reflection
+    yy, zz = grid.mesh()
+    about_y, about_z = yy - settings.moment_centre[0], zz - settings.moment_centre[1]
+    arms = {"lift": yy}
+    if reflection == "y":
+        arms["root_bending_moment"] = 0.5 * np.maximum(yy, 0.0) ** 2
+    else:
+        arms |= {"side_force": -zz, "rolling_moment": -0.5 * (about_y**2 + about_z**2)}
+    counted = nominal.region.mask * own_share(grid, reflection)[:, None]
+    impulse = reference.density * reference.speed
+    return {name: gradients.impulse_gradient(arm, counted, grid, impulse=impulse) for name, arm in arms.items()}
+
+
+def _energies(chain: Chain, nominal: Reduction, by_blockage: FlowGradient | None) -> dict[str, FlowGradient]:
+    """Energy form and momentum balance, whose crossflow offset is read from the plane itself."""
+    settings, flow, reference = chain.settings, nominal.flow, nominal.reference
+    grid, mask, counted = flow.grid, nominal.region.mask, chain.settings.counted
+    v, w = (component - offset for component, offset in zip((flow.v, flow.w), nominal.crossflow_offset, strict=True))
+    energy = gradients.energy_gradient(v, w, grid, density=reference.density)
+    square = flow.u**2 + (flow.v**2 - v**2) + (flow.w**2 - w**2)
+    along = np.sqrt(np.maximum(square, 0.0))
+    aligned = Flow(grid, along, v, w, flow.total_pressure, flow.static_pressure, flow.density, flow.total_temperature)
+    balance = gradients.momentum_gradient(aligned, reference)
+    # u² = u² + (v² − v'²) + (w² − w'²): turning the flow keeps its speed.
+    share = np.where(square > 0, np.asarray(balance.u) / np.where(square > 0, along, 1.0), 0.0)
+    momentum = FlowGradient(
+        u=share * flow.u,
+        v=np.asarray(balance.v) - share * v,
+        w=np.asarray(balance.w) - share * w,
+        total_pressure=balance.total_pressure,
+        static_pressure=balance.static_pressure,
+        density=balance.density,
+    )
+    direct = FlowGradient(v=share * flow.v, w=share * flow.w)
+    if by_blockage is not None and nominal.wake_blockage:
+        width, height = (grid.ny - 1) * grid.dy, (grid.nz - 1) * grid.dz
+        beside = max(getattr(settings.boundary, "section").area - width * height, 0.0)  # noqa: B009
+        direct = direct + by_blockage * (-4 * reference.density * nominal.wake_blockage * beside)
+    outer = (~mask).astype(float)
+    found = {}
+    for name, inner, rest in (
+        (estimate_of("induced_drag", "energy_area"), energy, FlowGradient()),
+        (estimate_of("total_drag", "momentum_area"), momentum, direct),
+    ):
+        total = inner + rest
+        if outer.sum() > 0:
+            # Both act on the crossflow less its offset: what they lose by the offset goes to where that was read.
+            by = [
+                0.0 if settings.reflection == axis else -float(np.sum(part))
+                for axis, part in (("y", inner.v), ("z", inner.w))
+            ]
+            each = outer / outer.sum()
+            from_v, from_w = crossflow_functional(by[0] * each, by[1] * each, flow, mask, settings.boundary.whole)
+            total = total + FlowGradient(v=from_v, w=from_w)
+        found[name] = total * counted
+    return found
+
+
+def _on_frozen_geometry(chain: Chain, nominal: Reduction, rows: Mapping[str, FlowGradient]) -> dict[str, FlowGradient]:
+    """Wake line and vortex sum, which see the crossflow without that of the walls."""
+    settings, frozen, flow, reference = chain.settings, chain.frozen, nominal.flow, nominal.reference
+    grid, mask = flow.grid, nominal.region.mask
+    v, w = without_walls(settings, flow, nominal.forces)
+    found: dict[str, tuple[Array, Array]] = {}
+    if frozen.cuts is not None and frozen.cuts.enclosed:
+        above = counted_mask(settings, mask, grid)
+        drag, lift = wake_line_sensitivity(frozen.cuts, v, w, reference.density, reference.speed, mask=above)
+        found[estimate_of("induced_drag", "wake_line")] = drag
+        found[estimate_of("lift", "wake_line")] = lift
+    if frozen.parts is not None:
+        by_v, by_w = vortex_sum_sensitivities(frozen.parts, v, w, reference.density)
+        found[estimate_of("induced_drag", "vortex_sum")] = (settings.counted * by_v, settings.counted * by_w)
+    result = {}
+    for name, (by_v, by_w) in found.items():
+        gradient = FlowGradient(v=by_v, w=by_w)
+        if settings.bounded:
+            gradient = gradient + _through_walls(by_v, by_w, chain, nominal)
+            if name.startswith("induced_drag"):
+                gradient = gradient + rows["induced_drag"] + rows["induced_drag_free_air"] * -1.0
+        result[name] = gradient
+    return result
+
+
+def _through_walls(by_v: Array, by_w: Array, chain: Chain, nominal: Reduction) -> FlowGradient:
+    """What the crossflow of the walls, itself made by the wake's vorticity, hands back to the plane."""
+    flow, mask, boundary = nominal.flow, nominal.region.mask, chain.settings.boundary.whole
+    walled = crossflow_functional(by_v, by_w, flow, mask, boundary)
+    free = crossflow_functional(by_v, by_w, flow, mask, FREE_AIR)
+    return FlowGradient(v=walled[0] - free[0], w=walled[1] - free[1])
+
+
+def _outputs(chain: Chain, nominal: Reduction, names: tuple[str, ...]) -> Array:
+    """Derivatives of the outputs by the figures, shape (m, k)."""
+    settings, reference, values = chain.settings, nominal.reference, nominal.values
+    q, area, span = reference.dynamic_pressure, settings.reference_area, settings.span
+    rows: dict[str, Array] = {}
+    unknown = np.full(len(names), np.nan)
+
+    def of(name: str) -> Array:
+        """Derivatives of one output by the figures."""
+        if name in rows:
+            return rows[name]
+        if name in names:
+            row: Array = np.eye(len(names))[names.index(name)]
+            return row
+        return unknown
+
+    rows["total_drag"] = of("profile_drag") + of("induced_drag") + of("residual_drag")
+    free = "induced_drag_free_air" if settings.bounded else "induced_drag"
+    if values["span_efficiency"] > 0:
+        e = values["span_efficiency"]
+        rows["span_efficiency"] = 2 * e / values["lift"] * of("lift") - e / values[free] * of(free)
+    blockage = of(_BLOCKAGE) if _BLOCKAGE in names else np.zeros(len(names))
+    solid = settings.given.get("boundary.solid_blockage", 0.0)
+    faster = 1 + solid + nominal.wake_blockage / reference.speed
+    for row in ROWS:
+        if row == "span_efficiency":
+            continue
+        scale = q * area * (span if row in MOMENTS else 1.0)
+        rows[coefficient_of(row)] = of(row) / scale
+        by_blockage = -2 * values[row] / (scale * faster**3 * reference.speed)
+        rows[corrected_coefficient_of(row)] = of(row) / (scale * faster**2) + by_blockage * blockage
+    if settings.bounded:
+        flow_area = getattr(settings.boundary, "flow_area")  # noqa: B009
+        lift = values["lift"]
+        if lift:
+            by_drag = q * flow_area / lift**2 * (of("induced_drag_free_air") - of("induced_drag"))
+            rows["boundary_factor"] = by_drag - 2 * values["boundary_factor"] / lift * of("lift")
+            angle = values["angle_correction"]
+            per_factor = lift / (q * flow_area)
+            rows["angle_correction"] = per_factor * rows["boundary_factor"] + angle / lift * of("lift")
+        rows["wake_blockage"] = of(_BLOCKAGE) / reference.speed
+    found = np.stack([of(name) for name in OUTPUTS])
+    found[np.isnan(nominal.vector)] = np.nan
+    return found
+
+
+def input_gradients(
+    chain: Chain, nominal: Reduction, gradient: PointGradient, layouts: Mapping[str, InputLayout]
+) -> tuple[dict[str, Array], tuple[str, ...]]:
+    """Derivatives of the outputs by the inputs that act on the points.
+
+    Parameters
+    ----------
+    chain : Chain
+        The survey.
+    nominal : Reduction
+        Its reduction.
+    gradient : PointGradient
+        From `point_gradient`.
+    layouts : mapping of str to InputLayout
+        The inputs wanted.
+
+    Returns
+    -------
+    slopes : dict of str to ndarray, shape (m, n), or (m,) for single numbers
+        By input, those that act through the flow state of the points.
+    left : tuple of str
+        The other inputs: what changes the reference state, the model or the relations on the plane.
+    """
+    slopes: dict[str, Array] = {}
+    left = []
+    for name, layout in layouts.items():
+        part, own, at = chain, name, gradient
+        if name.startswith(PREFIX) and chain.empty is not None and gradient.empty is not None:
+            part, own, at = chain.empty.chain, name.removeprefix(PREFIX), gradient.empty
+        room = own.split(".", 1)[0]
+        through = room in ("plane", "probe", "position", "angle", "calibration", "correction")
+        if not through or own == correction_input("displacement"):
+            left.append(name)
+            continue
+        by = _by_input(part, own, at, layout)
+        # Figures that no point moves through this input are zero; those that are unknown stay so.
+        slopes[name] = gradient.outputs @ by
+    return slopes, tuple(left)
+
+
+def _by_input(chain: Chain, name: str, gradient: PointGradient, layout: InputLayout) -> Array:
+    """Derivatives of the figures by one input, shape (k, n), or (k,) for a single number."""
+    reference = chain.reference()
+    step = _step(name, layout)
+    size: Array | float = step if layout.is_scalar else np.full(layout.size, step)
+    up, down = (chain.state(reference, {name: np.asarray(sign * size)}) for sign in (1.0, -1.0))
+    result: Array = np.zeros((len(gradient.names), chain.points.n))
+    for field, by in gradient.by.items():
+        above, below = _state_field(up, field), _state_field(down, field)
+        if above is None or below is None:
+            continue
+        slope = np.nan_to_num((above - below) / (2 * step))
+        if np.any(slope):
+            result += by * slope
+    return result.sum(axis=1) if layout.is_scalar else result
+
+
+def _state_field(state: State, name: str) -> Array | None:
+    value: Array | None = getattr(state, name)
+    return value
+
+
+def _step(name: str, layout: InputLayout) -> float:
+    room = name.split(".", 1)[0]
+    if room == "angle":
+        return _ANGLE_STEP
+    if room in ("calibration", "correction"):
+        return _SIGMA_STEP
+    if room == "position":
+        return 1e-6
+    values = np.asarray(layout.nominal, float)
+    finite = values[np.isfinite(values)]
+    spread = float(np.ptp(finite)) if finite.size else 0.0
+    return _STEP * (spread or float(np.abs(finite).max(initial=0.0)) or 1.0)
+
+
+def scalar_gradients(
+    chain: Chain, names: Sequence[str], steps: Mapping[str, float], layouts: Mapping[str, InputLayout]
+) -> tuple[dict[str, Array], dict[str, Array]]:
+    """Derivatives of the outputs by what acts on the survey as a whole, by differences of whole passes.
+
+    Parameters
+    ----------
+    chain : Chain
+        The survey.
+    names : sequence of str
+        The inputs.
+    steps : mapping of str to float
+        Step of each input, its standard uncertainty in SI (GUM 5.1.3, note 2).
+    layouts : mapping of str to InputLayout
+        The inputs, single numbers all of them.
+
+    Returns
+    -------
+    slopes, curvatures : dict of str to ndarray, shape (m,)
+        (f₊ − f₋)/2h and (f₊ + f₋ − 2f₀)/h².
+    """
+    used = [name for name in names if layouts[name].is_scalar and steps[name] > 0]
+    slopes: dict[str, Array] = {name: np.zeros(len(OUTPUTS)) for name in names if layouts[name].is_scalar}
+    curvatures: dict[str, Array] = {name: np.zeros(len(OUTPUTS)) for name in slopes}
+    if not used:
+        return slopes, curvatures
+    count = 1 + 2 * len(used)
+    errors = {name: np.zeros(count) for name in used}
+    for k, name in enumerate(used):
+        errors[name][1 + 2 * k], errors[name][2 + 2 * k] = steps[name], -steps[name]
+    values = chain.vectors(errors)
+    for k, name in enumerate(used):
+        up, down = values[1 + 2 * k], values[2 + 2 * k]
+        slopes[name] = (up - down) / (2 * steps[name])
+        curvatures[name] = (up + down - 2 * values[0]) / steps[name] ** 2
+    return slopes, curvatures
