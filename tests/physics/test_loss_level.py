@@ -44,7 +44,9 @@ def test_integrated_loss_is_covered(length, kind):
     # Not by being wide: the typical uncertainty is that of the error.
     assert 0.75 < np.sqrt(np.mean(found.integral_uncertainty**2)) / error.std() < 1.6
     area = np.count_nonzero(mask) * GRID.cell_area
-    assert found.zero_uncertainty == pytest.approx(found.integral_uncertainty / area, rel=1e-12)
+    assert (found.zero_uncertainty <= found.integral_uncertainty / area * (1 + 1e-12)).all()
+    if length >= 0.15:
+        assert found.zero_uncertainty == pytest.approx(found.integral_uncertainty / area, rel=0.02)
 
 
 def test_points_that_err_together_are_worth_few():
@@ -69,6 +71,8 @@ def test_white_noise_is_as_certain_as_its_points():
     mask = wake_mask("strip")
     found = loss_level(fields, GRID, mask=mask)
     outside, inside = np.count_nonzero(~mask), np.count_nonzero(mask)
+    # The noise of the region's points is not the level's.
+    assert np.median(found.zero_uncertainty) == pytest.approx(0.07 / np.sqrt(outside), rel=1.5)
     expected = 0.07 * GRID.cell_area * np.sqrt(inside + inside**2 / outside)
     assert np.median(found.integral_uncertainty) == pytest.approx(expected, rel=0.25)
 

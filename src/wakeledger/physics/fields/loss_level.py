@@ -47,11 +47,12 @@ class LossLevel:
     zero : ndarray
         Mean loss outside the region, Pa.
     zero_uncertainty : ndarray
-        Its standard uncertainty as the level inside the region, Pa.
+        Its standard uncertainty as the level inside the region, Pa, to act on the region's whole area. The noise of the
+        region's own points is not in it: that is a source of its own.
     integral_uncertainty : ndarray
-        Standard uncertainty of the loss integrated over the region, counted from the zero, N: the zero's own and the
-        wander inside the region, covariance included; the region's area times `zero_uncertainty`. Twice of it covers
-        95 %, few patches taken into account. NaN where too little of the window is outside.
+        Standard uncertainty of the loss integrated over the region, counted from the zero, N: the zero's own, the
+        wander inside the region, covariance included, and the noise of its points. Twice of it covers 95 %, few patches
+        taken into account. NaN where too little of the window is outside.
     wander, noise : ndarray
         Standard deviation of the part that is alike over patches, and of the part independent from cell to cell, Pa.
     correlation_length : ndarray
@@ -111,14 +112,16 @@ def loss_level(loss: Array, grid: UniformGrid, *, mask: Mask) -> LossLevel:
     patches = np.maximum(np.count_nonzero(outer) * grid.cell_area / (np.pi * length**2), _FEWEST)
     factor = special.stdtrit(2 * patches, (1 + _PROBABILITY) / 2) / _COVERAGE
     integral = factor * np.sqrt(wander2 * smooth[index] + noise2 * white)
-    area = np.count_nonzero(mask) * grid.cell_area
+    inside, outside = np.count_nonzero(mask), np.count_nonzero(outer)
+    area = inside * grid.cell_area
+    level = factor * np.sqrt(wander2 * smooth[index] + noise2 * white * inside / (inside + outside))
 
     def shaped(array: Array) -> Array:
         return np.reshape(array, lead)
 
     return LossLevel(
         zero=zero,
-        zero_uncertainty=shaped(integral / area if area else np.zeros(integral.shape)),
+        zero_uncertainty=shaped(level / area if area else np.zeros(level.shape)),
         integral_uncertainty=shaped(integral),
         wander=shaped(np.sqrt(wander2)),
         noise=shaped(np.sqrt(noise2)),
