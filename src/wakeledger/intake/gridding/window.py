@@ -34,12 +34,15 @@ class CutScheme:
         Reflection plane between two halves of the points.
     shape : (int, int)
         Shape of the whole grid.
+    mirrored : {"y", "z"} or None
+        Reflection plane between two halves of the points.
     """
 
     whole: Scheme
     rows: slice
     columns: slice
     shape: tuple[int, int]
+    mirrored: str | None = None
 
     def fields(self, values: Array) -> Array:
         """Grid values of shape (draws, n) to (draws, nz, ny)."""
