@@ -113,7 +113,7 @@ def covered_window(gridding: Gridding, *, mirrored: str | None = None) -> Griddi
         flag=gridding.flag[rows, columns],
         filled=filled,
         filled_fraction=float(filled.mean()),
-        scheme=CutScheme(gridding.scheme, rows, columns, gridding.grid.shape),
+        scheme=CutScheme(gridding.scheme, rows, columns, gridding.grid.shape, mirrored),
     )
 
 
