@@ -85,7 +85,7 @@ def _plane_of(blocks: list[Any], fields: Mapping[str, Column], cut: Cut, scale: 
 def _length_scale(columns: Mapping[str, Column]) -> float:
     """Metres in the mesh's unit of length."""
     scales: dict[float, str] = {}
-    for key in POSITIONS:
+    for key in ("y", "z", *POSITIONS):
         if key not in columns:
             continue
         column = columns[key]

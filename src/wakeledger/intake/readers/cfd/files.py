@@ -9,8 +9,8 @@ from typing import Any
 
 import numpy as np
 
-from wakeledger.core.errors import DataError
-from wakeledger.intake.readers.cfd.package import caught_messages, optional_package
+from wakeledger.core.errors import DataError, InputError
+from wakeledger.intake.readers.cfd.package import caught_messages, damaged, optional_package
 
 #: What each kind of file is, for messages.
 KINDS = {
@@ -65,18 +65,26 @@ def open_blocks(path: Path, kind: str, time: float | None) -> list[Any]:
         raise DataError(
             f"time is given, and this is {KINDS[kind]}, which holds one instant", file=path, remedy="leave time out"
         )
-    with caught_messages(KINDS[kind], path):
-        if kind == "openfoam":
-            read = _read_case(pyvista, case_folder(path), time)
-        elif kind == "cgns":
-            read = _read_cgns(pyvista, path)
-        else:
-            extension = {"vtk_legacy": ".vtk", "vtk_hdf": ".vtkhdf"}.get(kind) or _xml_extension(path)
-            read = pyvista.get_reader(str(path), force_ext=extension).read()
+    try:
+        with caught_messages(KINDS[kind], path):
+            read = _read(pyvista, path, kind, time)
+    except (InputError, MemoryError):
+        raise
+    except Exception as error:  # whatever a damaged file sets off in the package
+        raise damaged(str(error) or type(error).__name__, KINDS[kind], path) from error
     blocks = [block for block in _leaves(read) if block.n_points]
     if not blocks:
         raise DataError("the file holds no points", file=path, remedy="write the plane or the volume with its fields")
     return blocks
+
+
+def _read(pyvista: Any, path: Path, kind: str, time: float | None) -> Any:
+    if kind == "openfoam":
+        return _read_case(pyvista, case_folder(path), time)
+    if kind == "cgns":
+        return _read_cgns(pyvista, path)
+    extension = {"vtk_legacy": ".vtk", "vtk_hdf": ".vtkhdf"}.get(kind) or _xml_extension(path)
+    return pyvista.get_reader(str(path), force_ext=extension).read()
 
 
 def _leaves(block: Any) -> Iterator[Any]:
@@ -133,7 +141,9 @@ def _read_case(pyvista: Any, case: Path, time: float | None) -> Any:
     reader = pyvista.POpenFOAMReader(str(control))
     reader.case_type = "decomposed" if _decomposed(case) else "reconstructed"
     reader.cell_to_point_creation = False
-    reader.decompose_polyhedra = False
+    if hasattr(reader.reader, "SetDecomposePolyhedra"):
+        # Later versions keep polyhedra whole without being told.
+        reader.decompose_polyhedra = False
     times = np.asarray(reader.time_values, dtype=float)
     if not times.size:
         raise DataError("the case holds no instant", file=case, remedy="give a case with a folder of results")

@@ -60,7 +60,7 @@ def hidden(block: Any) -> NDArray[np.bool_]:
 
 def corners(block: Any) -> Polygons:
     """Corners of each cell of an unstructured block, in no particular order around it."""
-    return Polygons(np.asarray(block.cell_connectivity, dtype=np.int64), np.asarray(block.offset, dtype=np.int64))
+    return _cell_array(block.GetCells())
 
 
 def reach(block: Any, axis: int) -> tuple[Array, Array]:

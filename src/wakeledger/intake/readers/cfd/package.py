@@ -59,7 +59,7 @@ def caught_messages(what: str, path: Path) -> Iterator[None]:
     Raises
     ------
     DataError
-        With the first message, where there is one, or where reading raises anything else.
+        With the first message, where there is one.
     """
     from vtkmodules.vtkCommonCore import vtkOutputWindow, vtkStringOutputWindow
 
@@ -67,15 +67,11 @@ def caught_messages(what: str, path: Path) -> Iterator[None]:
     vtkOutputWindow.SetInstance(window)
     try:
         yield
-    except (DataError, MissingPackageError, MemoryError):
-        raise
-    except Exception as error:  # whatever a damaged file sets off in the package
-        raise _damaged(str(error) or type(error).__name__, what, path) from error
     finally:
         vtkOutputWindow.SetInstance(previous)
     message = _first_error(window.GetOutput())
     if message:
-        raise _damaged(message, what, path)
+        raise damaged(message, what, path)
 
 
 def _first_error(text: str) -> str | None:
@@ -84,7 +80,23 @@ def _first_error(text: str) -> str | None:
     return found[1].strip() if found else None
 
 
-def _damaged(message: str, what: str, path: Path) -> DataError:
+def damaged(message: str, what: str, path: Path) -> DataError:
+    """The error for a file that the package fails on.
+
+    Parameters
+    ----------
+    message : str
+        What the package says.
+    what : str
+        What kind of file it is.
+    path : Path
+        The file.
+
+    Returns
+    -------
+    DataError
+        On one line.
+    """
     line = " ".join(message.split())
     return DataError(
         f"this is {what}, and it cannot be read ({line[:160]})",

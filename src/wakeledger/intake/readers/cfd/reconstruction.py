@@ -1,12 +1,13 @@
 """Values of cells carried to places off the cells' centres, exactly for linear fields.
 
 A finite-volume solver's unknown stands for a cell, to second order at its centre of volume. Taking it to the mesh's
-points first, as viewers do, means over the cells about a point without regard to their sizes: first order on a
-stretched mesh, wrong by a good part of a cell at hanging nodes, and a smoothing by a quarter of a cell's second
-derivative everywhere. On the stretched mesh with hanging nodes of tests/intake/test_cfd_cells.py, of a vortex with six
-cells across its core, that loses 11 % of the largest crossflow against 1.0 % here. So the centres are kept as the points of the plane, and the value moves only from
-the cell's centre to the centre of what the plane cuts out of it, with the gradient of a least-squares fit through the
-cells that share a corner.
+points first, as viewers do, means over the cells about a point without regard to their sizes: first order where the
+mesh is stretched, wrong by a good part of a cell at hanging nodes, and everywhere a smoothing in all three directions.
+So the centres are kept as the points of the plane, and a value moves only along x, from the centre of its cell to the
+plane (to the centre of what the plane cuts out of the cell), with the gradient of a least-squares fit through the cells
+that share a corner. On a stretched mesh with hanging nodes and seven cells across a vortex core this errs by less than
+0.02 % of the largest crossflow at the points and 0.8 % on the uniform grid made of them; means at the mesh's points err
+by 6 % on either, and fill the wake in the core by 5 % of its depth (tests/intake/test_cfd_cells.py).
 """
 
 from __future__ import annotations
