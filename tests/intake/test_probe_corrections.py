@@ -423,8 +423,8 @@ def test_backlash_in_noise():
     for seed in range(16):
         backlash, _ = found_backlash(TO_AND_FRO, backlash=0.018, noise=4.0, seed=seed)
         errors.append((backlash.value - 0.018) / backlash.standard_uncertainty)
-        # 4 Pa is 0.4 % of q; 30 mm steps: a hundredth of a step is seen.
-        assert backlash.standard_uncertainty < 4e-4
+        # 4 Pa is 0.4 % of q; 30 mm steps: a hundredth of a step is seen, and 21 rows widen that by a fifth.
+        assert backlash.standard_uncertainty < 5e-4
     assert abs(np.mean(errors)) < 4 / np.sqrt(16)
     assert 0.4 < rms(errors) < 1.6
 

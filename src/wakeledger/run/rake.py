@@ -138,22 +138,27 @@ def _of_all(part: _Part) -> list[Tube]:
 
 
 def _apart(parts: Sequence[_Part], n: int) -> Apart | None:
-    """How far rows to and fro stand apart, by all tubes together: they are on one gear."""
-    found = [(part, part.raw.apart) for part in parts if part.raw.apart is not None]
-    found = [(part, one) for part, one in found if one.standard_uncertainty > 0]
+    """How far rows to and fro stand apart, by the mean of those tubes where they clearly do; None where none does."""
+    seen = [(part, part.raw.apart) for part in parts if part.raw.apart is not None]
+    # One of many tubes stands apart by chance more often than the only one.
+    seen = [(part, replace(one, chance=min(1.0, one.chance * len(seen)))) for part, one in seen]
+    found = [(part, one) for part, one in seen if one.clear]
     if not found:
         return None
     weight = np.array([one.standard_uncertainty**-2 for _, one in found])
     value, step, lag = (
         float(weight @ [getattr(one, name) for _, one in found] / weight.sum()) for name in ("value", "step", "lag")
     )
-    names = set.intersection(*(set(one.additions) for _, one in found))
+    names = [name for name in (BACKLASH, LAG) if all(name in one.additions for _, one in found)]
     additions = {
         name: tuple(_merged(name, [(part, each) for part, one in found for each in one.additions[name]], n))
-        for name in sorted(names)
+        for name in names
     }
-    sigma = float(weight.sum() ** -0.5)
-    return Apart(value, sigma, step, lag, any(one.rest for _, one in found), additions)
+    numbers = [part.number or 0 for part, _ in found]
+    whose = "" if len(found) == len(parts) else f"tube{'s' if len(numbers) > 1 else ''} {listed(numbers)}"
+    chance = min(one.chance for _, one in found)
+    rest = any(one.rest for _, one in found)
+    return Apart(value, float(weight.sum() ** -0.5), step, chance, lag, rest, additions, whose)
 
 
 def _alone(survey: SurveyInput, table: ProbeTable, points: Points, reference: Reference) -> RawSurvey:

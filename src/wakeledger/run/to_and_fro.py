@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -22,10 +22,10 @@ from wakeledger.run.travel import Travel
 LAG, BACKLASH = "lag", "backlash"
 #: How well a lag or a backlash is known that the survey file states, as a share of it.
 STATED = 0.1
-#: Rows stand apart if it is by more than this many standard uncertainties, and by this share of the step.
-CLEAR, LEAST = 5.0, 0.005
-#: An estimate within this many standard uncertainties of zero is not clear of them.
-_DOUBTFUL = 2.0
+#: Rows stand apart if their scatter gives it less than this chance, and if it is more than this share of the step.
+CHANCE, LEAST = 0.005, 0.005
+#: An estimate that the scatter gives more than this chance is not clear of it.
+_DOUBTFUL = 0.05
 
 
 @dataclass(frozen=True, eq=False)
@@ -38,32 +38,39 @@ class Apart:
         As a backlash, m.
     step : float
         Typical distance between the points of a row, m.
+    chance : float
+        How likely the scatter between the rows alone is to do so.
     lag : float
         The time constant that would do the same at the speed of the traverse, s; NaN where the time is not known.
     rest : bool
         Whether a lag or a backlash was taken out before.
     additions : mapping of str to tuple of Addition
         What taking it out would add to the holes, by `BACKLASH` and `LAG`, as either of them.
+    whose : str
+        Which tubes of a rake it is true of; empty for all.
     """
 
     value: float
     standard_uncertainty: float
     step: float
+    chance: float
     lag: float
     rest: bool
     additions: Mapping[str, tuple[Addition, ...]] = field(default_factory=dict)
+    whose: str = ""
 
     @property
     def clear(self) -> bool:
         """Whether it is more than the scatter between the rows, and worth a word."""
-        return abs(self.value) > max(CLEAR * self.standard_uncertainty, LEAST * self.step)
+        return self.chance < CHANCE and abs(self.value) > LEAST * self.step
 
     @property
     def sentence(self) -> str:
         """What is seen, without its worth."""
         left = "still stand apart, after what was taken out," if self.rest else "stand apart"
+        rows = f"Rows of {self.whose} taken to and fro" if self.whose else "Rows taken to and fro"
         found = (
-            f"Rows taken to and fro {left} by {1e3 * self.value:+.3g} mm (+- {1e3 * self.standard_uncertainty:.2g} mm),"
+            f"{rows} {left} by {1e3 * self.value:+.3g} mm (+- {1e3 * self.standard_uncertainty:.2g} mm),"
             " as by a backlash of the traverse"
         )
         if LAG in self.additions:
@@ -114,14 +121,19 @@ def lag_uncertainty(path: Travel, pressures: Array, *, lag: float, backlash: boo
 
 
 def estimated_backlash(path: Travel, pressures: Array) -> tuple[Backlash, str]:
-    """Backlash between the rows, and how well it is known; why it cannot be had, where its uncertainty is NaN."""
+    """Backlash between the rows, and how well it is known; why it cannot be had, where its uncertainty is NaN.
+
+    One that is not clear of the scatter between the rows is 0, its uncertainty what was found and that of it together.
+    """
     found = estimate_backlash(*path.along_and_across, path.row, pressures)
     if found.reason is not None or not math.isfinite(found.standard_uncertainty):
         return found, found.reason or "its uncertainty cannot be told"
     how = f"estimated from {found.rows} rows, +- {1e3 * found.standard_uncertainty:.2g} mm"
-    if abs(found.value) < _DOUBTFUL * found.standard_uncertainty:
-        how += "; it is not clear of its uncertainty: rows to and fro agree"
-    elif found.value < 0:
+    if not found.chance < _DOUBTFUL:
+        how = f"{1e3 * found.value:+.2g} mm were {how}: not clear of the scatter between rows, so carried alone"
+        carried = math.hypot(found.value, found.standard_uncertainty)
+        return replace(found, value=0.0, standard_uncertainty=carried), how
+    if found.value < 0:
         how += (
             "; a play is never negative: check the order and the times of the points, and what the traverse does about"
             " its play"
@@ -164,7 +176,7 @@ def find_apart(path: Travel, pressures: Array, holes: tuple[str, ...], *, rest: 
         assert path.time is not None
         rates = make_rate_filter(path.time, path.row, values=pressures)
         additions[LAG] = (Addition(LAG, {}, lag=LagFilter(rates, tau, path.order)),)
-    return Apart(found.value, found.standard_uncertainty, typical, tau, rest, additions)
+    return Apart(found.value, found.standard_uncertainty, typical, found.chance, tau, rest, additions)
 
 
 def _equal_lag(path: Travel, pressures: Array, value: float) -> float:

@@ -40,17 +40,20 @@ class Backlash:
         b, m: distance between the places of one indicated position reached from either side; positive where the probe
         lags behind. 0 where it cannot be seen.
     standard_uncertainty : float
-        m; NaN with a reason where it is unknown.
+        m; with few rows widened as Student's t at 95 %; NaN with a reason where it is unknown.
     rows : int
         Rows it rests on.
     reason : str or None
         Why it is unknown.
+    chance : float
+        How likely rows without any backlash are to stand apart as far as these do, by their own scatter; NaN likewise.
     """
 
     value: float
     standard_uncertainty: float
     rows: int
     reason: str | None = None
+    chance: float = float("nan")
 
 
 def row_senses(along: Array, row: NDArray[np.integer]) -> Array:
@@ -92,7 +95,9 @@ def estimate_backlash(along: Array, across: Array, row: NDArray[np.integer], val
     fourth order across five neighbouring rows, Σ c_j f_j, leaves nothing of a field that varies smoothly from row to
     row but keeps what alternates: Σ c_j f_j = −(b/2) Σ c_j σ_j ∂F_j/∂y. b is found by least squares over all places,
     rows and channels, the rows being moved by cubic splines until nothing is left; its standard uncertainty comes
-    from the scatter between rows. What varies from row to row with an alternating sign looks the same, so does a lag.
+    from the scatter between rows. The chance is that of a first linear step from b = 0, by Student's t: noise so large
+    that the steps lead astray leaves it right. What varies from row to row with an alternating sign looks the same, so
+    does a lag.
     """
     table = _rows(along, across, row, values)
     senses = np.array([entry.sense for entry in table])
@@ -105,8 +110,12 @@ def estimate_backlash(along: Array, across: Array, row: NDArray[np.integer], val
     score = _Score(table)
     if not score.windows:
         return Backlash(0.0, np.nan, len(table), "no neighbouring rows were taken in opposite directions")
+    from scipy.special import stdtr
+
     half, slope = 0.0, 1.0
     step = score(half)
+    sigma, freedom = score.scatter(half)
+    chance = 2.0 * float(stdtr(freedom, -abs(step) / sigma)) if sigma > 0 else float("nan")
     reach = 4 * score.spacing
     for _ in range(_ITERATIONS):
         # Noise in the slopes makes the first step too short; the secant learns by how much.
@@ -118,7 +127,8 @@ def estimate_backlash(along: Array, across: Array, row: NDArray[np.integer], val
         if abs(step - after) > 0.05 * abs(move):
             slope = float(np.clip((step - after) / move, 0.2, 2.0))
         step = after
-    return Backlash(2 * half, 2 * score.scatter(half) / slope, len(table))
+    sigma, freedom = score.scatter(half)
+    return Backlash(2 * half, 2 * sigma * _widened(freedom) / slope, len(table), chance=chance)
 
 
 def correct_backlash(
@@ -169,6 +179,13 @@ def correct_backlash(
         if here.size >= FEWEST_POINTS and places.size == here.size:
             slope[..., here[first]] = 0.5 * sense[here[0]] * _spline(places, values[..., here[first]])(places, 1)
     return Correction(values + size, size, standard_uncertainty * slope)
+
+
+def _widened(freedom: float) -> float:
+    """Factor that gives a normal distribution the 95 % interval of Student's t."""
+    from scipy.special import ndtri, stdtrit
+
+    return float(stdtrit(freedom, 0.975) / ndtri(0.975))
 
 
 def _spline(places: Array, values: Array) -> Any:
@@ -257,22 +274,25 @@ class _Score:
         total = float(np.einsum("kcy,kcy,c->", g, g, trust))
         return float(np.einsum("kcy,kcy,c->", d, g, trust)) / total if total > 0 else 0.0
 
-    def scatter(self, half: float) -> float:
+    def scatter(self, half: float) -> tuple[float, float]:
         """Standard uncertainty of the remaining half backlash, m, from the scatter of the windows' own sums.
 
-        Neighbouring windows share rows, and the fit has made the sums add to nothing; what either does to their scatter
-        follows from the weights, the rows being independent.
+        Neighbouring windows share rows, and the fit makes the sums add to nothing; what either does to their scatter,
+        and how many degrees of freedom it leaves (Satterthwaite), follows from the weights, the rows being independent.
         """
         d, g, trust = self.parts(half)
         pulls = np.einsum("kcy,kcy,c->k", d, g, trust)
         model = np.einsum("kcy,lcy,c->kl", g, g, trust)
         total = float(np.trace(model))
         if pulls.size < 2 or not total > 0:
-            return float("nan")
+            return float("nan"), float("nan")
+        pulls = pulls - np.diag(model) * pulls.sum() / total
         spread = np.zeros((pulls.size, len(self.table)))
         for k, (window, weight) in enumerate(zip(self.windows, self.weights, strict=True)):
             spread[k, window] = weight
         covariance = (spread @ spread.T) * model
         fitted = np.eye(pulls.size) - np.diag(model)[:, None] / total
-        scatter = float(np.trace(fitted @ covariance @ fitted.T))
-        return float(np.sqrt(covariance.sum() / scatter * np.sum(pulls**2))) / total
+        left = fitted @ covariance @ fitted.T
+        scatter = float(np.trace(left))
+        sigma = float(np.sqrt(covariance.sum() / scatter * np.sum(pulls**2))) / total
+        return sigma, scatter**2 / float(np.sum(left**2))

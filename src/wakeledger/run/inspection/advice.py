@@ -109,6 +109,7 @@ def recommendations(
     out_of_range: Sequence[tuple[float, float]] = (),
     spacing: Mapping[str, float] | None = None,
     place: Callable[[tuple[float, float]], str] | None = None,
+    remarks: Sequence[str] = (),
 ) -> tuple[Recommendation, ...]:
     """What to do next, the most urgent first.
 
@@ -134,6 +135,8 @@ def recommendations(
         Spacing of the points along "y" and "z", m, to count lines by.
     place : callable, optional
         Writes a position; y and z in mm by default.
+    remarks : sequence of str
+        What else is to be looked into, in sentences.
 
     Returns
     -------
@@ -163,7 +166,7 @@ def recommendations(
     if "core_resolution" in wrong and core is not None:
         found.append(_refine(wrong.pop("core_resolution"), core, written))
     left = sorted(wrong.values(), key=lambda check: check.verdict != "fail")
-    found += [Recommendation("check", check.message) for check in left]
+    found += [Recommendation("check", message) for message in (*(check.message for check in left), *remarks)]
     found += _noise(channels)
     found += _scatter(channels, repeats)
     if not found:

@@ -26,6 +26,7 @@ from wakeledger.run.inspection.places import Places, places_of
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.probe_range import probe_range, tip_notes
 from wakeledger.run.traverse import RawSurvey, corrected_points
+from wakeledger.run.traverse_notes import apart_notes
 from wakeledger.stream.reference import Reference
 
 #: Checks whose value needs the noise bias or a reduction's uncertainty; they are left to `reduce`.
@@ -85,6 +86,7 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
     corrected = (
         () if raw is None else (*(f"{sentence}." for sentence in raw.said.values()), *raw.notes, *tip_notes(chain))
     )
+    apart = [] if raw is None else apart_notes(raw, chain, nominal)
     spacing = {"y": gridding.raw_spacing[0], "z": gridding.raw_spacing[1]}
     return Inspection(
         title=survey.survey.title,
@@ -110,6 +112,7 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
             repeats=repeats,
             out_of_range=[(float(points.y[k]), float(points.z[k])) for k in beyond],
             spacing=spacing,
+            remarks=apart,
         ),
         notes=(*survey.survey.notes(), *corrected, *tables.notes(survey, chain, nominal, state)),
         reference=tables.reference_scalars(nominal.reference),
