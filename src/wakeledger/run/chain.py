@@ -434,7 +434,13 @@ class Chain:
         left = np.stack([flow.v - near.v, flow.w - near.w]) - own
         swirl = stream_swirl(left, turned, grid, (~mask).astype(float)) + vary.swirl_shift
         yy, zz = grid.mesh()
-        return replace(flow, v=flow.v + swirl * zz, w=flow.w - swirl * yy), vorticity - 2 * swirl, swirl
+        v, w = flow.v + swirl * zz, flow.w - swirl * yy
+        turned_flow = replace(flow, v=v, w=w)
+        if settings.primary == "total_pressure":
+            # The speed follows from the pressures and stays.
+            square = flow.u**2 + (flow.v**2 - v**2) + (flow.w**2 - w**2)
+            turned_flow = replace(turned_flow, u=axial_velocity(square, flow.u))
+        return turned_flow, vorticity - 2 * swirl, swirl
 
     def near_field(self, vorticity: Array, grid: UniformGrid) -> NearField:
         """Disturbance that the bound vortex adds at the plane, m/s; zero where the plane is not behind it."""

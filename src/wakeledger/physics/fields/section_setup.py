@@ -82,7 +82,7 @@ class SectionSetup:
         return moments
 
 
-@lru_cache(maxsize=8)
+@lru_cache(maxsize=16)
 def section_setup(
     grid: UniformGrid, boundary: ClosedWalls | OpenJet, condition: Condition, parity: float
 ) -> SectionSetup:

@@ -194,7 +194,7 @@ class _Solver:
         return psi if self.inside is None else np.where(self.inside, psi, 0.0)
 
 
-@lru_cache(maxsize=8)
+@lru_cache(maxsize=16)
 def _solver(grid: UniformGrid, boundary: Boundary, condition: Condition, parity: float) -> _Solver:
     if isinstance(boundary, FreeAir):
         check_window(grid, boundary)
