@@ -79,7 +79,7 @@ def near_field(vorticity: Array, grid: UniformGrid, *, distance: float) -> NearF
     source = transform(vorticity)
     dv = window(source * transform(-zz * shortfall))
     dw = window(source * transform(yy * shortfall))
-    bound_y, bound_z = _bound_circulation(vorticity, grid)
+    bound_y, bound_z = bound_circulation(vorticity, grid)
     kernel = transform(bound_kernel)
     along_y = transform(bound_y)
     dw -= window(along_y * kernel)
@@ -91,7 +91,7 @@ def near_field(vorticity: Array, grid: UniformGrid, *, distance: float) -> NearF
     return NearField(dv, dw, du)
 
 
-def _bound_circulation(vorticity: Array, grid: UniformGrid) -> tuple[Array, Array | None]:
+def bound_circulation(vorticity: Array, grid: UniformGrid) -> tuple[Array, Array | None]:
     """Bound vorticity along y and along z, s⁻¹, that joins the legs in the plane of the bound line."""
     # Half of a cell's own vorticity lies to port of its centre.
     along_y = -(np.cumsum(vorticity, axis=1) - 0.5 * vorticity) * grid.dy
