@@ -30,7 +30,9 @@ def raw_sample():
 
 def slopes_of(prepared):
     chain, nominal = prepared.chain, prepared.nominal
-    return input_gradients(chain, nominal, point_gradient(chain, nominal), prepared.layouts)
+    gradient = point_gradient(chain, nominal)
+    slopes, left = input_gradients(chain, gradient, prepared.layouts)
+    return {name: gradient.outputs @ by for name, by in slopes.items()}, left
 
 
 def directional(chain, name, direction, step):

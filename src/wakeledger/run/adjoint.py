@@ -12,6 +12,7 @@ derivatives. What acts on the survey as a whole through the reference state is d
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, fields, replace
 
 import numpy as np
@@ -36,7 +37,7 @@ from wakeledger.run.adjoint_plane import (
     crossflow_functional,
 )
 from wakeledger.run.chain import Chain
-from wakeledger.run.empty_tunnel import PREFIX, _onto
+from wakeledger.run.empty_tunnel import PREFIX, EmptyTunnel, _onto
 from wakeledger.run.estimates import counted_mask, without_walls
 from wakeledger.run.outputs import (
     MOMENTS,
@@ -80,7 +81,7 @@ class PointGradient:
     empty: PointGradient | None = None
 
 
-def point_gradient(chain: Chain, nominal: Reduction, *, estimates: bool = True) -> PointGradient:
+def point_gradient(chain: Chain, nominal: Reduction, *, estimates: bool = True, workers: int = 2) -> PointGradient:
     """Derivatives of the outputs by the flow state at every point.
 
     Parameters
@@ -91,33 +92,56 @@ def point_gradient(chain: Chain, nominal: Reduction, *, estimates: bool = True) 
         Its reduction.
     estimates : bool
         Whether the cross-checks are among the outputs; they are NaN otherwise.
+    workers : int
+        Number of threads.
 
     Returns
     -------
     PointGradient
     """
-    reference, mask = nominal.reference, nominal.region.mask
     figures = _figures(chain, nominal, estimates=estimates)
     names = tuple(figures)
-    gradient = _stacked([figures[name] for name in names], nominal.flow)
-    before = chain.flow(reference)
-    gradient = before_swirl(gradient, chain, nominal.flow, mask)
-    gradient = before_zero(gradient, chain, reference, before, zero=nominal.loss_zero, mask=mask)
+    before = chain.flow(nominal.reference)
+    count = -(-len(names) // workers)
+    parts = [[figures[name] for name in names[k : k + count]] for k in range(0, len(names), count)]
+    with ThreadPoolExecutor(workers) as pool:
+        found = list(pool.map(lambda part: _backwards(part, chain, nominal, before), parts))
+    outputs = _outputs(chain, nominal, names)
     empty = None
     if chain.empty is not None:
-        gradient, by_stream = before_empty_tunnel(gradient, chain, chain.empty, reference, before)
-        empty = _empty_gradient(chain, names, by_stream, nominal)
-        with_stream = replace(chain, empty=None).flow(reference)
-        gradient = before_relations(gradient, chain, reference, with_stream)
-    else:
-        gradient = before_relations(gradient, chain, reference, before)
-    return PointGradient(names, _to_points(gradient, chain), _outputs(chain, nominal, names), empty)
+        empty = PointGradient(names, _joined([by_empty for _, by_empty in found]), outputs)
+    return PointGradient(names, _joined([by for by, _ in found]), outputs, empty)
 
 
-def _empty_gradient(chain: Chain, names: tuple[str, ...], by_stream: Gradient, nominal: Reduction) -> PointGradient:
-    """By the points of the empty tunnel, through its scaling and its own relations."""
-    assert chain.empty is not None
-    own = chain.empty.chain
+def _joined(parts: Sequence[tuple[int, Gradient]]) -> Gradient:
+    """Derivatives of several groups of figures as one, from the number and the derivatives of each group."""
+    joined: Gradient = {}
+    for name in dict.fromkeys(name for _, part in parts for name in part):
+        points = next(part[name].shape[1] for _, part in parts if name in part)
+        joined[name] = np.concatenate([part.get(name, np.zeros((count, points))) for count, part in parts])
+    return joined
+
+
+def _backwards(
+    figures: Sequence[FlowGradient], chain: Chain, nominal: Reduction, before: Flow
+) -> tuple[tuple[int, Gradient], tuple[int, Gradient]]:
+    """Derivatives of some figures by the state of the points, and by that of the empty tunnel's points."""
+    reference, mask = nominal.reference, nominal.region.mask
+    gradient = _stacked(figures, nominal.flow)
+    gradient = before_swirl(gradient, chain, nominal.flow, mask, swirl=nominal.swirl)
+    gradient = before_zero(gradient, chain, reference, before, zero=nominal.loss_zero, mask=mask)
+    by_empty: Gradient = {}
+    if chain.empty is not None:
+        gradient, by_stream = before_empty_tunnel(gradient, chain, reference, before)
+        by_empty = _empty_gradient(chain.empty, by_stream, nominal)
+        before = replace(chain, empty=None).flow(reference)
+    gradient = before_relations(gradient, chain, reference, before)
+    return (len(figures), _to_points(gradient, chain)), (len(figures), by_empty)
+
+
+def _empty_gradient(empty: EmptyTunnel, by_stream: Gradient, nominal: Reduction) -> Gradient:
+    """Derivatives by the points of the empty tunnel, through its scaling and its own relations."""
+    own = empty.chain
     stream = own.reference()
     flow = own.flow(stream)
     speed = nominal.reference.speed / stream.speed
@@ -130,8 +154,7 @@ def _empty_gradient(chain: Chain, names: tuple[str, ...], by_stream: Gradient, n
         if along_z is not None:
             scaled = along_z.T @ scaled
         gradient[name] = scaled if along_y is None else scaled @ along_y
-    gradient = before_relations(gradient, own, stream, flow)
-    return PointGradient(names, _to_points(gradient, own), np.zeros((len(OUTPUTS), len(names))))
+    return _to_points(before_relations(gradient, own, stream, flow), own)
 
 
 def _to_points(gradient: Gradient, chain: Chain) -> Gradient:
@@ -333,30 +356,30 @@ def _outputs(chain: Chain, nominal: Reduction, names: tuple[str, ...]) -> Array:
 
 
 def input_gradients(
-    chain: Chain, nominal: Reduction, gradient: PointGradient, layouts: Mapping[str, InputLayout]
+    chain: Chain, gradient: PointGradient, layouts: Mapping[str, InputLayout], *, workers: int = 2
 ) -> tuple[dict[str, Array], tuple[str, ...]]:
-    """Derivatives of the outputs by the inputs that act on the points.
+    """Derivatives by the inputs that act on the points.
 
     Parameters
     ----------
     chain : Chain
         The survey.
-    nominal : Reduction
-        Its reduction.
     gradient : PointGradient
         From `point_gradient`.
     layouts : mapping of str to InputLayout
         The inputs wanted.
+    workers : int
+        Number of threads.
 
     Returns
     -------
-    slopes : dict of str to ndarray, shape (m, n), or (m,) for single numbers
-        By input, those that act through the flow state of the points.
+    slopes : dict of str to ndarray, shape (k, n), or (k,) for single numbers
+        Derivatives of the figures by those inputs that act through the flow state of the points; times
+        `PointGradient.outputs` they are those of the outputs.
     left : tuple of str
         The other inputs: what changes the reference state, the model or the relations on the plane.
     """
-    slopes: dict[str, Array] = {}
-    left = []
+    tasks, left = {}, []
     for name, layout in layouts.items():
         part, own, at = chain, name, gradient
         if name.startswith(PREFIX) and chain.empty is not None and gradient.empty is not None:
@@ -366,10 +389,10 @@ def input_gradients(
         if not through or own == correction_input("displacement"):
             left.append(name)
             continue
-        by = _by_input(part, own, at, layout)
-        # Figures that no point moves through this input are zero; those that are unknown stay so.
-        slopes[name] = gradient.outputs @ by
-    return slopes, tuple(left)
+        tasks[name] = (part, own, at, layout)
+    with ThreadPoolExecutor(workers) as pool:
+        found = pool.map(lambda task: _by_input(*task), tasks.values())
+        return dict(zip(tasks, found, strict=True)), tuple(left)
 
 
 def _by_input(chain: Chain, name: str, gradient: PointGradient, layout: InputLayout) -> Array:
@@ -378,15 +401,27 @@ def _by_input(chain: Chain, name: str, gradient: PointGradient, layout: InputLay
     step = _step(name, layout)
     size: Array | float = step if layout.is_scalar else np.full(layout.size, step)
     up, down = (chain.state(reference, {name: np.asarray(sign * size)}) for sign in (1.0, -1.0))
-    result: Array = np.zeros((len(gradient.names), chain.points.n))
+    result: Array | None = None
     for field, by in gradient.by.items():
         above, below = _state_field(up, field), _state_field(down, field)
         if above is None or below is None:
             continue
-        slope = np.nan_to_num((above - below) / (2 * step))
-        if np.any(slope):
-            result += by * slope
-    return result.sum(axis=1) if layout.is_scalar else result
+        slope = (above - below) / (2 * step)
+        # Points without a state have no weight on the plane either.
+        np.copyto(slope, 0.0, where=~np.isfinite(slope))
+        if not slope.any():
+            continue
+        if layout.is_scalar:
+            part: Array = by @ slope
+        else:
+            part = by * slope
+        if result is None:
+            result = part
+        else:
+            result += part
+    if result is not None:
+        return result
+    return np.zeros(len(gradient.names) if layout.is_scalar else (len(gradient.names), layout.size))
 
 
 def _state_field(state: State, name: str) -> Array | None:

@@ -29,7 +29,6 @@ from wakeledger.physics.fields.transposed import (
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.physics.fields.wall_correction import wall_stream_function
 from wakeledger.run.chain import Chain
-from wakeledger.run.empty_tunnel import EmptyTunnel
 from wakeledger.run.shear import Displacement
 from wakeledger.stream.reference import Reference
 
@@ -96,14 +95,26 @@ def swirl_gradient(chain: Chain, flow: Flow, mask: Mask) -> tuple[Array, Array]:
     return crossflow_functional(by[0], by[1], flow, mask, boundary)
 
 
-def before_swirl(gradient: Gradient, chain: Chain, flow: Flow, mask: Mask) -> Gradient:
-    """Derivatives by the plane before the stream's swirl was taken out of it."""
+def before_swirl(gradient: Gradient, chain: Chain, flow: Flow, mask: Mask, *, swirl: float) -> Gradient:
+    """Derivatives by the plane before the stream's swirl was taken out of it, from those by the plane after."""
     if not chain.swirls:
         return gradient
     yy, zz = flow.grid.mesh()
-    by_swirl = np.tensordot(gradient["v"], zz, 2) - np.tensordot(gradient["w"], yy, 2)
-    from_v, from_w = swirl_gradient(chain, flow, mask)
     found = dict(gradient)
+    if chain.settings.primary == "total_pressure" and "u" in found:
+        # The speed stays: u² = u₀² + (v₀² − v²) + (w₀² − w²), the index marking the plane before.
+        v, w = flow.v - swirl * zz, flow.w + swirl * yy
+        square = flow.u**2
+        before = np.copysign(np.sqrt(np.maximum(square + flow.v**2 - v**2 + flow.w**2 - w**2, 0.0)), flow.u)
+        share = np.where(square > 0, found["u"] / np.where(square > 0, flow.u, 1.0), 0.0)
+        found["u"] = share * before
+        for name, old, new in (("v", v, flow.v), ("w", w, flow.w)):
+            _added(found, name, -share * new)
+            found[f"{name} before"] = share * old
+    by_swirl = np.tensordot(found["v"], zz, 2) - np.tensordot(found["w"], yy, 2)
+    from_v, from_w = swirl_gradient(chain, flow, mask)
+    for name in ("v", "w"):
+        _added(found, name, found.pop(f"{name} before", 0.0))
     _added(found, "v", by_swirl[:, None, None] * from_v)
     _added(found, "w", by_swirl[:, None, None] * from_w)
     return found
@@ -216,11 +227,10 @@ def _before_speed(found: Gradient, flow: Flow, square: Array, *, directed: bool)
     real = square > 0
     factor = np.sqrt(np.where(real, square, 0.0) / before)
     by_factor = u * flow.u + v * flow.v + w * flow.w
-    half = by_factor * (0.5 * factor)
-    by_square = np.where(real, half / np.where(real, square, 1.0), 0.0)
-    twice = half * (2 / before)
+    by_square = by_factor * np.where(real, 0.5 * factor / np.where(real, square, 1.0), 0.0)
+    by_factor = by_factor * (factor / before)
     for name in "uvw":
-        found[name] = _of(found, name) * factor - twice * getattr(flow, name)
+        found[name] = _of(found, name) * factor - by_factor * getattr(flow, name)
     return found, by_square
 
 
@@ -236,7 +246,7 @@ def _before_axial(found: Gradient, flow: Flow, square: Array) -> Array:
 
 
 def before_empty_tunnel(
-    gradient: Gradient, chain: Chain, empty: EmptyTunnel, reference: Reference, flow: Flow
+    gradient: Gradient, chain: Chain, reference: Reference, flow: Flow
 ) -> tuple[Gradient, Gradient]:
     """Derivatives by the plane before the empty tunnel was taken out, and by the disturbances that were.
 
@@ -244,8 +254,10 @@ def before_empty_tunnel(
     ----------
     gradient : dict of str to ndarray, shape (k, nz, ny)
         By the plane after.
-    chain, empty, reference
-        The survey, that of the empty tunnel, and the undisturbed stream.
+    chain : Chain
+        The survey.
+    reference : Reference
+        Its undisturbed stream.
     flow : Flow
         The plane after.
 

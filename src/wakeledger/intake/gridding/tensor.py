@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -77,13 +78,23 @@ class TensorScheme:
             weights = weights @ self.wy
         raw = weights.reshape(weights.shape[0], -1).copy()
         self._gaps.back(raw)
-        result = np.zeros((raw.shape[0], self.usable.size))
-        single = np.ones(raw.shape[1], dtype=bool)
-        single[self._gaps.missing] = single[self._repeated] = False
-        result[:, self._gather[single]] = raw[:, single]
+        cell, off = self._cell_of_point
+        result = raw if cell is None else raw.take(cell, axis=1)
+        result[:, off] = 0.0
         if self._repeated.size:
             result += (self._mean.T @ raw[:, self._repeated].T).T
         return result
+
+    @cached_property
+    def _cell_of_point(self) -> tuple[NDArray[np.intp] | None, NDArray[np.intp]]:
+        """Cell that each point alone gives its value to, None where points and cells agree; points that give none."""
+        single = np.ones(self._gather.size, dtype=bool)
+        single[self._gaps.missing] = single[self._repeated] = False
+        alone = np.full(self.usable.size, -1, dtype=np.intp)
+        alone[self._gather[single]] = np.flatnonzero(single)
+        off = np.flatnonzero(alone < 0)
+        same = alone.size == single.size and not off.size and bool(np.all(alone == np.arange(alone.size)))
+        return None if same else np.maximum(alone, 0), off
 
     def operators(self) -> tuple[Array, Array]:
         """Dense operators along z and y, identities for kept axes."""
