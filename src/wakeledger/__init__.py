@@ -26,6 +26,8 @@ if TYPE_CHECKING:
     from wakeledger.physics.fields.wall_correction import wall_stream_function
     from wakeledger.run.increment import increment
     from wakeledger.run.load import load as read_survey
+    from wakeledger.run.planning import plan
+    from wakeledger.run.repeats import combine
     from wakeledger.run.survey import reduce
     from wakeledger.stream.reference import Reference
 
@@ -37,7 +39,9 @@ _HOMES = {
     "OpenJet": (_BOUNDARY, "OpenJet"),
     "Polygon": (_BOUNDARY, "Polygon"),
     "Rectangle": (_BOUNDARY, "Rectangle"),
+    "combine": ("wakeledger.run.repeats", "combine"),
     "Estimate": ("wakeledger.core.estimate", "Estimate"),
+    "plan": ("wakeledger.run.planning.planner", "plan"),
     "plane": ("wakeledger.core.plane", "plane"),
     "open_ledger": ("wakeledger.ledger.archive", "open_archive"),
     "Ledger": ("wakeledger.ledger.rows", "Ledger"),
@@ -60,10 +64,12 @@ __all__ = [
     "Polygon",
     "Rectangle",
     "Reference",
+    "combine",
     "find_wake",
     "increment",
     "methods",
     "open_ledger",
+    "plan",
     "plane",
     "read_survey",
     "reduce",

@@ -46,13 +46,14 @@ _UNITS = {
 }
 _SYSTEMATIC = {
     "plane.total_pressure": 1.0,
-    "plane.static_pressure": 8.0,
-    "angle.pitch": 0.006,
-    "angle.yaw": 0.006,
-    "reference.speed": 0.6,
-    "reference.density": 0.018,
+    "plane.static_pressure": 4.0,
+    "angle.pitch": 0.004,
+    "angle.yaw": 0.004,
+    "reference.speed": 0.2,
+    "reference.density": 0.006,
 }
-_QUIET = {"u": 0.01, "v": 0.01, "w": 0.01, "total_pressure": 0.1, "static_pressure": 0.1}
+#: Long samples, so that the systematic errors rule.
+_QUIET = {"u": 0.003, "v": 0.003, "w": 0.003, "total_pressure": 0.04, "static_pressure": 0.04}
 _NOISY = {"u": 0.16, "v": 0.16, "w": 0.16, "total_pressure": 1.5, "static_pressure": 2.0}
 
 

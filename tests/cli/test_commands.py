@@ -200,8 +200,15 @@ def test_help_lists_the_commands_that_exist(cli):
     status, out, _ = cli("--help")
     assert status == 0
     commands = out[out.index("Commands:") :].splitlines()[1:]
-    assert [line.split()[0] for line in commands if line.strip()] == ["calibrate", "inspect", "reduce", "show"]
-    for command in ("reduce", "inspect", "show"):
+    assert [line.split()[0] for line in commands if line.strip()] == [
+        "calibrate",
+        "increment",
+        "inspect",
+        "reduce",
+        "repeats",
+        "show",
+    ]
+    for command in ("reduce", "inspect", "show", "increment", "repeats"):
         status, out, _ = cli(command, "-h")
         assert status == 0 and "Usage: wakeledger" in out
     assert cli()[0] == 2

@@ -10,7 +10,9 @@ from wakeledger.cli.calibrate import calibrate
 from wakeledger.cli.exits import run
 from wakeledger.cli.increment import increment
 from wakeledger.cli.inspect import inspect
+from wakeledger.cli.plan import plan
 from wakeledger.cli.reduce import reduce
+from wakeledger.cli.repeats import repeats
 from wakeledger.cli.show import show
 
 
@@ -26,7 +28,7 @@ def wakeledger() -> None:
     """
 
 
-for command in (reduce, inspect, show, increment, calibrate):
+for command in (reduce, inspect, show, increment, repeats, plan, calibrate):
     wakeledger.add_command(command)
 
 

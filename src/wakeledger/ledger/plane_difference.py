@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -56,8 +57,8 @@ def plane_difference(a: Ledger, b: Ledger) -> tuple[xr.Dataset | None, str]:
     if along != (None, None):
         return _traverse_difference(a, b, along)
     grids = grid_of(a.plane), grid_of(b.plane)
-    same = _same(grids[0].y, grids[1].y, grids[0].dy) and _same(grids[0].z, grids[1].z, grids[0].dz)
-    y, z = (grids[0].y, grids[0].z) if same else (_common(*grids, "y"), _common(*grids, "z"))
+    same = same_places(grids[0].y, grids[1].y) and same_places(grids[0].z, grids[1].z)
+    y, z = (grids[0].y, grids[0].z) if same else (common_places(grids, "y"), common_places(grids, "z"))
     if y.size < 2 or z.size < 2:
         return None, "The two planes have no window in common, so there is no difference of planes."
     dataset = xr.Dataset(
@@ -70,7 +71,7 @@ def plane_difference(a: Ledger, b: Ledger) -> tuple[xr.Dataset | None, str]:
         if not (variable in a.plane and variable in b.plane and scale in a.reference and scale in b.reference):
             continue
         fields = [
-            _brought(one.plane[variable].values, grid, y, z) / one.reference[scale]
+            brought(one.plane[variable].values, grid, y, z) / one.reference[scale]
             for one, grid in zip((a, b), grids, strict=True)
         ]
         dataset[name] = (("z", "y"), fields[1] - fields[0], {"units": unit, "long_name": f"{meaning}, B minus A"})
@@ -78,7 +79,7 @@ def plane_difference(a: Ledger, b: Ledger) -> tuple[xr.Dataset | None, str]:
         for name in ("wake_mask", "flag"):
             if name in one.plane:
                 dataset[f"{name}_{side}"] = (
-                    ("z", "y"), _nearest(one.plane[name].values, grid, y, z),
+                    ("z", "y"), nearest_places(one.plane[name].values, grid, y, z),
                     {"units": "1", "long_name": f"{name.replace('_', ' ')} of {side.upper()}"},
                 )  # fmt: skip
     steps = f"{1e3 * (y[1] - y[0]):.3g} mm x {1e3 * (z[1] - z[0]):.3g} mm"
@@ -120,22 +121,66 @@ def _traverse_difference(a: Ledger, b: Ledger, along: tuple[str | None, str | No
     return dataset, f"{note} one that both cover ({ends})."
 
 
-def _same(x: Array, y: Array, step: float) -> bool:
-    return x.size == y.size and bool(np.abs(x - y).max() < _SAME * step)
+def same_places(x: Array, y: Array) -> bool:
+    """Whether two axes have the same places.
+
+    Parameters
+    ----------
+    x, y : ndarray, shape (n,), (m,)
+        Ascending places, m.
+
+    Returns
+    -------
+    bool
+    """
+    if x.size != y.size:
+        return False
+    step = abs(float(x[-1] - x[0])) / max(x.size - 1, 1) or 1.0
+    return bool(np.abs(x - y).max() < _SAME * step)
 
 
-def _common(a: UniformGrid, b: UniformGrid, axis: str) -> Array:
-    """Places of the coarser grid along an axis that lie inside both windows."""
-    coarse, fine = sorted((a, b), key=lambda grid: -getattr(grid, f"d{axis}"))
+def common_places(grids: Sequence[UniformGrid], axis: str) -> Array:
+    """Places of the coarsest grid along an axis that lie inside every window.
+
+    Parameters
+    ----------
+    grids : sequence of UniformGrid
+        The grids.
+    axis : {"y", "z"}
+        The axis.
+
+    Returns
+    -------
+    ndarray, shape (n,)
+        m; empty where the windows do not overlap.
+    """
+    coarse = max(grids, key=lambda grid: float(getattr(grid, f"d{axis}")))
     places: Array = getattr(coarse, axis)
-    other, slack = getattr(fine, axis), _SAME * getattr(fine, f"d{axis}")
-    inside: Array = places[(places >= other[0] - slack) & (places <= other[-1] + slack)]
+    slack = _SAME * min(float(getattr(grid, f"d{axis}")) for grid in grids)
+    low = max(float(getattr(grid, axis)[0]) for grid in grids) - slack
+    high = min(float(getattr(grid, axis)[-1]) for grid in grids) + slack
+    inside: Array = places[(places >= low) & (places <= high)]
     return inside
 
 
-def _brought(field: NDArray[np.generic], grid: UniformGrid, y: Array, z: Array) -> Array:
+def brought(field: NDArray[np.generic], grid: UniformGrid, y: Array, z: Array) -> Array:
+    """A field at other places of its plane, by a bicubic spline; as it stands where they are its own.
+
+    Parameters
+    ----------
+    field : ndarray, shape (nz, ny)
+        The field.
+    grid : UniformGrid
+        Its grid.
+    y, z : ndarray, shape (my,), (mz,)
+        The places wanted, m.
+
+    Returns
+    -------
+    ndarray, shape (mz, my)
+    """
     values = np.asarray(field, dtype=float)
-    if values.shape == (z.size, y.size) and _same(grid.y, y, grid.dy) and _same(grid.z, z, grid.dz):
+    if same_places(grid.y, y) and same_places(grid.z, z):
         return values
     orders = min(3, grid.nz - 1), min(3, grid.ny - 1)
     spline = RectBivariateSpline(grid.z, grid.y, values, kx=orders[0], ky=orders[1])
@@ -143,7 +188,18 @@ def _brought(field: NDArray[np.generic], grid: UniformGrid, y: Array, z: Array) 
     return result
 
 
-def _nearest(field: NDArray[np.generic], grid: UniformGrid, y: Array, z: Array) -> NDArray[np.int32]:
+def nearest_places(field: NDArray[np.generic], grid: UniformGrid, y: Array, z: Array) -> NDArray[np.int32]:
+    """Marks of a plane at other places, each that of the nearest place.
+
+    Parameters
+    ----------
+    field, grid, y, z
+        As for `brought`.
+
+    Returns
+    -------
+    ndarray of int, shape (mz, my)
+    """
     iz = np.clip(np.rint((z - grid.z0) / grid.dz).astype(int), 0, grid.nz - 1)
     iy = np.clip(np.rint((y - grid.y0) / grid.dy).astype(int), 0, grid.ny - 1)
     return np.asarray(field)[np.ix_(iz, iy)].astype(np.int32)

@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from wakeledger.core.names import ROWS
+from wakeledger.ledger.repeats import repeats_json
 from wakeledger.ledger.rounding import UNKNOWN, rounded
 from wakeledger.ledger.rows import COUNT, Ledger, Row
 from wakeledger.ledger.units import scalar
@@ -40,7 +41,8 @@ def ledger_json(ledger: Ledger) -> dict[str, Any]:
     dict
         Made of dict, list, str, bool, int, float and None only, without NaN or infinity: ``format``, ``title``,
         ``test``, ``compressible``, ``rows``, ``estimates``, ``comparisons``, ``budget``, ``checks``, ``notes``,
-        ``reference``, and in a tunnel ``tunnel``. A number that is not known is None, and the record it stands in has a ``reason``. Infinitely many
+        ``reference``, in a tunnel ``tunnel``, and of combined repeats ``repeats``. A number that is not known is None,
+        and the record it stands in has a ``reason``. Infinitely many
         degrees of freedom are written as 1e6.
     """
     document: dict[str, Any] = {
@@ -56,6 +58,8 @@ def ledger_json(ledger: Ledger) -> dict[str, Any]:
         "notes": list(ledger.notes),
         "reference": {name: float(value) for name, value in ledger.reference.items() if math.isfinite(value)},
     }
+    if ledger.repeats is not None:
+        document["repeats"] = repeats_json(ledger.repeats)
     if ledger.tunnel:
         document["tunnel"] = [_plain(asdict(figure), "it has no such figure") for figure in ledger.tunnel]
     return document

@@ -18,6 +18,7 @@ from wakeledger.present.printing import (
     sentences_of,
     text_of,
 )
+from wakeledger.present.repeats_text import repeats_table
 from wakeledger.present.wording import (
     STATEMENT,
     VERDICT_WORDS,
@@ -75,6 +76,9 @@ def ledger_text(ledger: Ledger, *, width: int = 100, colour: bool = False) -> st
     console.print(_rows_table(ledger.rows))
     for sentence in grouped_reasons((words(row.name), row.reason) for row in ledger.rows):
         bullet(console, sentence)
+    if ledger.repeats is not None:
+        section(console, f"The {ledger.repeats.sizes['run']} runs, and how far they lie apart (k = 1)")
+        console.print(repeats_table(ledger, ledger.repeats))
     if ledger.estimates:
         section(console, "Other methods against the primary one")
         console.print(_estimates_table(ledger.estimates, roomy=console.width >= ROOMY))

@@ -96,7 +96,7 @@ def increment(a: Ledger | str | PathLike[str], b: Ledger | str | PathLike[str], 
             remedy=f"A has {_listed(row.name for row in first.rows)}; B has {_listed(row.name for row in second.rows)}",
         )
     surveys = declared_surveys(first, files[0]), declared_surveys(second, files[1])
-    _refuse_conflicts(*surveys)
+    refuse_conflicts(zip(("A", "B"), surveys, strict=True))
     known = [name for name in names if all(math.isfinite(one.row(name).standard_uncertainty) for one in ledgers)]
     difference = subtract(*(contributions_of(one, known) for one in ledgers))
     rows = _rows(first, second, names, known, difference)
@@ -117,7 +117,7 @@ def increment(a: Ledger | str | PathLike[str], b: Ledger | str | PathLike[str], 
         cancellations=_cancellations(difference),
         not_cancelled=_not_cancelled(first, second, *surveys, difference),
         budget=ordered_budget(known, {name: variance[0] for name, variance in difference.by_source.items()}),
-        warnings=tuple(_warnings(first, second, *surveys)),
+        warnings=tuple(unlike(first, second, *surveys)),
         notes=(*only, note),
         plane=plane,
         provenance=tables.provenance(command),
@@ -165,10 +165,21 @@ def contributions_of(ledger: Ledger, names: Sequence[str]) -> Contributions:
     return opaque(names, u, np.where(np.isfinite(nu), nu, math.inf))
 
 
-def _refuse_conflicts(a: Iterable[Survey], b: Iterable[Survey]) -> None:
-    """Refuse surveys that give one identity to two different errors: one of their error bars would be wrong."""
+def refuse_conflicts(declared: Iterable[tuple[str, Iterable[Survey]]]) -> None:
+    """Refuse surveys that give one identity to two different errors: one of their error bars would be wrong.
+
+    Parameters
+    ----------
+    declared : iterable of (str, iterable of Survey)
+        What messages call each ledger, and its survey files.
+
+    Raises
+    ------
+    InputError
+        Naming the identity and what differs.
+    """
     seen: dict[str, tuple[str, Source]] = {}
-    for side, surveys in (("A", a), ("B", b)):
+    for side, surveys in declared:
         for survey in surveys:
             for source in survey.uncertainty.source:
                 if source.shared_id is None:
@@ -323,7 +334,30 @@ def _budget_names(ledger: Ledger, kind: str) -> tuple[str, ...]:
     return tuple(name for name in names if (name in terms) == (kind == NUMERICAL))
 
 
-def _warnings(a: Ledger, b: Ledger, surveys_a: Sequence[Survey], surveys_b: Sequence[Survey]) -> list[str]:
+def unlike(
+    a: Ledger,
+    b: Ledger,
+    surveys_a: Sequence[Survey],
+    surveys_b: Sequence[Survey],
+    *,
+    names: tuple[str, str] = ("A", "B"),
+) -> list[str]:
+    """What makes two ledgers unlike, in sentences.
+
+    Parameters
+    ----------
+    a, b : Ledger
+        The ledgers.
+    surveys_a, surveys_b : sequence of Survey
+        Their survey files.
+    names : (str, str)
+        What the sentences call them.
+
+    Returns
+    -------
+    list of str
+    """
+    one_name, other_name = names
     found = []
     for name, slack in _REFERENCES.items():
         one, other = ({**ledger.model, **ledger.reference}.get(name, math.nan) for ledger in (a, b))
@@ -338,10 +372,15 @@ def _warnings(a: Ledger, b: Ledger, surveys_a: Sequence[Survey], surveys_b: Sequ
                 else "the two flows are not alike"
             )
             shown = [_scalar_text(name, value) for value in (one, other)]
-            found.append(f"The {name.replace('_', ' ')} is {shown[0]} in A and {shown[1]} in B: {effect}.")
+            found.append(
+                f"The {name.replace('_', ' ')} is {shown[0]} in {one_name} and {shown[1]} in {other_name}: {effect}."
+            )
     if a.compressible != b.compressible:
         ways = ["compressible" if ledger.compressible else "incompressible" for ledger in (a, b)]
-        found.append(f"A was reduced by the {ways[0]}, B by the {ways[1]} relations: their rows are not the same.")
+        found.append(
+            f"{one_name} was reduced by the {ways[0]}, {other_name} by the {ways[1]} relations: "
+            "their rows are not the same."
+        )
     for what, read in (
         ("boundary", lambda survey: None if survey.boundary is None else survey.boundary.kind),
         ("reflection", lambda survey: None if survey.boundary is None else survey.boundary.reflection),
@@ -353,8 +392,11 @@ def _warnings(a: Ledger, b: Ledger, surveys_a: Sequence[Survey], surveys_b: Sequ
             for surveys in (surveys_a, surveys_b)
         ]
         if texts[0] != texts[1]:
-            found.append(f"The {what} is {texts[0]} in A and {texts[1]} in B: part of the difference may be its doing.")
-    for side, ledger in (("A", a), ("B", b)):
+            found.append(
+                f"The {what} is {texts[0]} in {one_name} and {texts[1]} in {other_name}: "
+                "part of the difference may be its doing."
+            )
+    for side, ledger in ((one_name, a), (other_name, b)):
         if ledger.contributions is None and any(math.isfinite(row.standard_uncertainty) for row in ledger.rows):
             found.append(
                 f"The archive of {side} does not hold what each error does, so nothing cancels: reduce it again."
@@ -362,8 +404,8 @@ def _warnings(a: Ledger, b: Ledger, surveys_a: Sequence[Survey], surveys_b: Sequ
     common = sorted(set(a.inputs.values()) & set(b.inputs.values()) & (_data(a, surveys_a) | _data(b, surveys_b)))
     if common:
         found.append(
-            "A and B are made from the same data: their random errors are the same ones, which the uncertainty of the "
-            "increment takes as independent."
+            f"{one_name} and {other_name} are made from the same data: their random errors are the same ones, "
+            "which the uncertainty takes as independent."
         )
     return found
 

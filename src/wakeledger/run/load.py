@@ -112,6 +112,12 @@ def load(path: str | Path) -> SurveyInput:
         from wakeledger.ledger.archive import open_archive
 
         ledger = open_archive(path)
+        if ledger.repeats is not None:
+            raise DataError(
+                "this archive combines several surveys and holds none of their points",
+                file=path,
+                remedy="reduce the archive of each run, and combine them again",
+            )
         return _kept(ledger.survey_text, ledger.raw, ledger, path)
     return load_survey(read_survey(path))
 

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from wakeledger.ledger.rounding import UNKNOWN, rounded, significant
+from wakeledger.present.repeats_text import repeats_cells
 from wakeledger.present.wording import (
     STATEMENT,
     VERDICT_WORDS,
@@ -97,6 +98,7 @@ def report_html(ledger: Ledger) -> str:
             comparisons=_comparisons(ledger),
             sources=_sources(ledger),
             summary=_summary(ledger),
+            repeats=[] if ledger.repeats is None else repeats_cells(ledger, ledger.repeats),
             reference={name: value for name, value in ledger.reference.items() if math.isfinite(value)},
             units=_scalar_units(),
             maps=[pictures[name] for name in _MAPS if name in pictures],
