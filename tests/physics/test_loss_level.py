@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from wakeledger.core.grid import UniformGrid
-from wakeledger.physics.fields.loss_level import loss_level
+from wakeledger.physics.fields.loss_level import beyond, loss_level
 from wakeledger.physics.fields.outer_flow import outer_flow
 
 GRID = UniformGrid(-1.0, -0.75, 0.025, 0.025, 81, 61)
@@ -90,10 +90,31 @@ def test_too_little_outer_flow_is_said():
     mask = np.ones(GRID.shape, bool)
     mask[:, :3] = False
     found = loss_level(np.ones(GRID.shape), GRID, mask=mask)
-    assert found.zero == 0.0 and np.isnan(found.integral_uncertainty) and "10 %" in found.reason
+    assert found.zero == 0.0 and np.isnan(found.integral_uncertainty) and "10 % of the window" in found.reason
 
 
 def test_a_flat_outer_flow_has_a_level_without_doubt():
     found = loss_level(np.full(GRID.shape, 2.0), GRID, mask=wake_mask("strip"))
     assert found.zero == pytest.approx(2.0, rel=1e-14)
     assert found.integral_uncertainty < 1e-12
+
+
+def test_a_broad_loss_beside_the_wake_does_not_move_the_level():
+    """The level is taken beyond it: the wake keeps its loss, and the broad loss shows as its own."""
+    rng = np.random.default_rng(8)
+    _, z = GRID.mesh()
+    broad = 0.5 * np.exp(-((z / 0.3) ** 2))
+    mask = np.abs(z) < 0.12
+    near, covered = [], []
+    for one in 0.02 * wander(rng, 0.15, 100):
+        everywhere = loss_level(broad + one, GRID, mask=mask)
+        far = loss_level(broad + one, GRID, mask=mask, outer=beyond(mask, GRID, 0.52))
+        near.append(float(everywhere.zero))
+        inside = np.where(mask, one - far.zero, 0.0).sum() * GRID.cell_area
+        covered.append(abs(inside) <= 2 * far.integral_uncertainty)
+    assert np.mean(near) > 0.05
+    assert np.mean(covered) >= 0.9
+    with pytest.raises(ValueError, match="outside the region"):
+        loss_level(broad, GRID, mask=mask, outer=np.ones(GRID.shape, bool))
+    assert beyond(np.zeros(GRID.shape, bool), GRID, 1.0).all()
+    assert beyond(mask, GRID, 0.1)[:, 0].sum() == np.count_nonzero(np.abs(GRID.z) > 0.101 + 0.1)

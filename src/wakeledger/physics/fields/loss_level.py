@@ -18,7 +18,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import fft, special
+from scipy import fft, ndimage, special
 
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.outer_flow import LEAST_SHARE
@@ -45,7 +45,7 @@ class LossLevel:
     Attributes
     ----------
     zero : ndarray
-        Mean loss outside the region, Pa.
+        Mean loss of the outer flow, Pa.
     zero_uncertainty : ndarray
         Its standard uncertainty as the level inside the region, Pa, to act on the region's whole area. The noise of the
         region's own points is not in it: that is a source of its own.
@@ -73,7 +73,20 @@ class LossLevel:
     reason: str | None = None
 
 
-def loss_level(loss: Array, grid: UniformGrid, *, mask: Mask) -> LossLevel:
+def beyond(mask: Mask, grid: UniformGrid, distance: float) -> Mask:
+    """Places further than a distance, m, from a region, shape (nz, ny).
+
+    A computed wake often has a weak, broad loss about it that is no part of the stream: where the level is taken from
+    all of the outer flow, that loss is taken out of the wake as well.
+    """
+    if not mask.any():
+        return np.ones(mask.shape, dtype=bool)
+    nearest: Array = ndimage.distance_transform_edt(~mask, sampling=(grid.dz, grid.dy))
+    far: Mask = nearest > distance
+    return far
+
+
+def loss_level(loss: Array, grid: UniformGrid, *, mask: Mask, outer: Mask | None = None) -> LossLevel:
     """Zero of the loss in the outer flow, with an uncertainty that acts on the integrated area.
 
     Parameters
@@ -83,11 +96,18 @@ def loss_level(loss: Array, grid: UniformGrid, *, mask: Mask) -> LossLevel:
     grid : UniformGrid
         The grid.
     mask : ndarray of bool, shape (nz, ny)
-        The region over which the loss is integrated; the rest is the outer flow.
+        The region over which the loss is integrated.
+    outer : ndarray of bool, shape (nz, ny), optional
+        Where the level is taken (`beyond`); all that is outside the region unless given.
 
     Returns
     -------
     LossLevel
+
+    Raises
+    ------
+    ValueError
+        If the level is to be taken inside the region.
 
     Notes
     -----
@@ -95,11 +115,13 @@ def loss_level(loss: Array, grid: UniformGrid, *, mask: Mask) -> LossLevel:
     two values for each patch of area πL² in the outer flow, by Student's distribution.
     """
     loss = np.asarray(loss, float)
-    outer = ~mask
+    outer = ~mask if outer is None else outer
+    if (outer & mask).any():
+        raise ValueError("the level is to be taken outside the region over which the loss is integrated")
     lead = loss.shape[:-2]
     if np.count_nonzero(outer) < LEAST_SHARE * outer.size:
         unknown = np.full(lead, np.nan)
-        reason = f"less than {100 * LEAST_SHARE:g} % of the window lies outside the wake region"
+        reason = f"the level would rest on less than {100 * LEAST_SHARE:g} % of the window"
         return LossLevel(np.zeros(lead), unknown, unknown, unknown, unknown, unknown, unknown, reason)
     zero = np.where(outer, loss, 0.0).sum(axis=(-2, -1)) / np.count_nonzero(outer)
     fields = np.where(outer, loss - zero[..., None, None], 0.0).reshape(-1, *grid.shape)
@@ -108,7 +130,7 @@ def loss_level(loss: Array, grid: UniformGrid, *, mask: Mask) -> LossLevel:
     lengths = np.geomspace(max(grid.dy, grid.dz), 2 * extent, _LENGTHS)
     noise2, wander2, index = _fitted(distance, half_square, pairs, lengths)
     length = lengths[index]
-    smooth, white = _of_the_integral(mask, grid, lengths)
+    smooth, white = _of_the_integral(mask, outer, grid, lengths)
     patches = np.maximum(np.count_nonzero(outer) * grid.cell_area / (np.pi * length**2), _FEWEST)
     factor = special.stdtrit(2 * patches, (1 + _PROBABILITY) / 2) / _COVERAGE
     integral = factor * np.sqrt(wander2 * smooth[index] + noise2 * white)
@@ -186,10 +208,10 @@ def _fitted(distance: Array, values: Array, pairs: Array, lengths: Array) -> tup
     return noise * scale[:, 0], wander * scale[:, 0], index
 
 
-def _of_the_integral(mask: Mask, grid: UniformGrid, lengths: Array) -> tuple[Array, float]:
+def _of_the_integral(mask: Mask, outer: Mask, grid: UniformGrid, lengths: Array) -> tuple[Array, float]:
     """Variance of ∬_W (loss − zero) dA for unit wander of each length, and for unit noise, m⁴."""
-    inside, outside = np.count_nonzero(mask), np.count_nonzero(~mask)
-    weights = np.where(mask, 1.0, -inside / outside) * grid.cell_area
+    inside, outside = np.count_nonzero(mask), np.count_nonzero(outer)
+    weights = (mask - inside / outside * outer) * grid.cell_area
     white = float(np.sum(weights**2))
     places = []
     for axis, x in enumerate((grid.z, grid.y)):

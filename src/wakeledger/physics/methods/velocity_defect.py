@@ -10,7 +10,9 @@ the first part is viscous and wave drag, the second the induced drag in flux for
 
     ½ρ∞[v² + w² − (1 − M²)(u − U − Δū)²]
 
-up to third order in the disturbances, lossy streamtubes included. For a loss-free axial disturbance the remainder is
+up to third order in the disturbances, lossy streamtubes included; with the local one the product of loss and pressure
+disturbance is left over. In incompressible flow −ρuΔu with the local defect is Betz's integrand less ρ(u* − u)(u* − U),
+which Betz counts as profile drag. For a loss-free axial disturbance the remainder is
 ρ∞U²M²[1 − (2 − γ)M²/3]((u − U)/U)³; a crossflow adds nothing at third order.
 """
 
