@@ -58,6 +58,9 @@ def test_field_of_the_bound_line_with_all_its_images(closed):
     largest = max(np.abs(values).max() for values in exact.values())
     for name, values in exact.items():
         at = np.array([getattr(found, name)[place] for place in places])
+        if closed and name == "u":
+            # The order of summation leaves a uniform axial velocity; what passes the section is what comes in.
+            values, at = values - values.mean(), at - at.mean()
         # The bound line is as thick as the sheet: (a/X)² of it or so.
         assert_allclose(at, values, atol=0.01 * largest)
     assert largest > 0.02
@@ -83,6 +86,12 @@ def test_it_dies_away_with_the_sections_own_wavenumber():
     assert_allclose(np.abs(far.w).max() / np.abs(near.w).max(), np.exp(-np.pi * 0.5 / 1.1), rtol=0.02)
     free = near_field(vorticity, grid, distance=1.5)
     assert np.abs(near.w).max() < 0.6 * np.abs(free.w).max()
+
+
+def test_between_walls_nothing_is_added_to_what_passes():
+    grid = UniformGrid(Y[0] + 0.005, Z[0] + 0.005, 0.01, 0.01, 150, 110)
+    found = duct_near_field(elements().vorticity_on(grid), grid, ClosedWalls(Rectangle(Y, Z)), distance=DISTANCE)
+    assert abs(found.u.mean()) < 1e-10 * np.abs(found.u).max()
 
 
 def test_on_the_walls_it_is_tangent_and_at_a_jets_edge_it_is_normal():

@@ -21,8 +21,9 @@ from wakeledger.core.rotation import rotation_matrix
 from wakeledger.intake.gridding import Gridding
 from wakeledger.intake.probe.traverse import Traverse, correction_input
 from wakeledger.intake.state import State, point_state
-from wakeledger.physics.fields.boundary import Boundary
+from wakeledger.physics.fields.boundary import Boundary, FreeAir
 from wakeledger.physics.fields.differences import axial_vorticity
+from wakeledger.physics.fields.duct_near_field import duct_near_field
 from wakeledger.physics.fields.flow import Flow
 from wakeledger.physics.fields.lifting_line import NearField, near_field
 from wakeledger.physics.fields.outer_flow import induced_crossflow, loss_zero, stream_swirl
@@ -447,6 +448,9 @@ class Chain:
         distance = self.settings.station - self.settings.bound_line
         if not distance > 0:
             return NearField(*np.zeros((3, *grid.shape)))
+        boundary = self.settings.boundary.whole
+        if not isinstance(boundary, FreeAir):
+            return duct_near_field(vorticity, grid, boundary, distance=distance)
         return near_field(vorticity, grid, distance=distance)
 
 
