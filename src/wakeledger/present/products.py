@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
     from wakeledger.ledger.increment import Increment
+    from wakeledger.ledger.plan import Plan
     from wakeledger.ledger.rows import Ledger
 
 #: Files every reduction writes.
@@ -24,6 +25,9 @@ FILES = ("ledger.nc", "ledger.json", "ledger.csv", "report.html")
 
 #: Files every increment writes.
 INCREMENT_FILES = ("increment.nc", "increment.json", "increment.csv", "report.html")
+
+#: Files every plan writes.
+PLAN_FILES = ("plan.json", "report.html")
 
 #: Folder of the figures, where they are asked for.
 FIGURES = "figures"
@@ -175,6 +179,39 @@ def write_increment(
         return _build_increment(increment, folder, figures)
 
     return _write_whole(directory, build, files=INCREMENT_FILES, overwrite=overwrite)
+
+
+def write_plan(plan: Plan, directory: Path, *, overwrite: bool = False) -> tuple[Path, ...]:
+    """Write every product of a plan.
+
+    Parameters
+    ----------
+    plan : Plan
+        The plan.
+    directory, overwrite
+        As in `write_products`.
+
+    Returns
+    -------
+    tuple of Path
+        The files, relative to the folder.
+
+    Raises
+    ------
+    ProductExistsError, DataError
+        As in `write_products`.
+    """
+
+    def build(folder: Path) -> tuple[Path, ...]:
+        from wakeledger.ledger.tabular import json_text
+        from wakeledger.present.report.plan import plan_html
+
+        texts = {"plan.json": json_text(plan.to_dict()), "report.html": plan_html(plan)}
+        for name, text in texts.items():
+            (folder / name).write_text(text, encoding="utf-8", newline="\n")
+        return tuple(Path(name) for name in PLAN_FILES)
+
+    return _write_whole(directory, build, files=PLAN_FILES, overwrite=overwrite)
 
 
 def _write_whole(

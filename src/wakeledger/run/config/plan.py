@@ -63,7 +63,8 @@ SpeedNoise = Annotated[tuple[float, ...], _instruments("m s-1")]
 PressureNoise = Annotated[tuple[float, ...], _instruments("Pa")]
 
 _NOISES = ("noise", "total_pressure_noise", "static_pressure_noise", "hole_noise")
-_FLOW = ("loading", "lift", "lift_coefficient", "tip_core", "profile_drag", "profile_drag_coefficient", "wake_width",
+#: Keys that say what flow to expect.
+FLOW = ("loading", "lift", "lift_coefficient", "tip_core", "profile_drag", "profile_drag_coefficient", "wake_width",
          "rolled_up")  # fmt: skip
 
 
@@ -83,6 +84,8 @@ class PlanTable(Table):
     angle_accuracy, reference_accuracy, density_accuracy, reference_drift : tuple of float or None
         Standard uncertainties of what is wrong for a whole survey (rad; parts of the dynamic pressure and density), and
         from row to row (Pa).
+    rows_along : {"y", "z"}
+        Along which the probe goes to and fro.
     repeats : tuple of int
     settling_time, traverse_speed, time_limit : float or None
         s, m/s, s.
@@ -112,6 +115,7 @@ class PlanTable(Table):
     reference_accuracy: Shares | None = None
     density_accuracy: Shares | None = None
     reference_drift: Pressures | None = None
+    rows_along: Literal["y", "z"] = "y"
     repeats: Annotated[tuple[int, ...], _several(_count)] = (1,)
     settling_time: Duration | None = None
     traverse_speed: Speed | None = None
@@ -130,7 +134,7 @@ class PlanTable(Table):
     def _flow_is_known(self) -> PlanTable:
         given = self.model_fields_set
         if self.ledger is not None:
-            both = [name for name in _FLOW if name in given]
+            both = [name for name in FLOW if name in given]
             if both:
                 raise fail(
                     f"{both[0]} and ledger are both given",

@@ -1,0 +1,207 @@
+"""A planned survey as text for a terminal; a pure function, nothing is printed here."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING
+
+from wakeledger.ledger.rounding import rounded, significant
+from wakeledger.present.printing import heading, new_console, new_table, section, sentences_of, text_of
+from wakeledger.present.wording import STATEMENT, printable, unit_text, words
+
+if TYPE_CHECKING:
+    from rich.table import Table
+
+    from wakeledger.ledger.plan import Plan, SetUp
+
+#: Beyond so many, sources, numerical terms and improvements are left out of what is printed, and counted.
+MOST_LINES = 8
+#: Lines of the budget below this share are counted as small.
+SMALL = 0.002
+
+
+def plan_text(plan: Plan, *, width: int = 100, colour: bool = False) -> str:
+    """A plan as text: the outcome, the set-up, its budget, the map, what would help, and what was assumed.
+
+    Parameters
+    ----------
+    plan : Plan
+        The plan.
+    width : int
+        Columns of the terminal.
+    colour : bool
+        Whether to write the terminal's colour codes; nothing is said by colour alone.
+
+    Returns
+    -------
+    str
+        Lines without trailing blanks, ended by a line feed.
+    """
+    from rich.text import Text
+
+    console = new_console(width, colour)
+    heading(console, printable(plan.title), {})
+    console.print(Text(outcome(plan), style="bold green" if plan.reached else "bold red"))
+    if plan.chosen is not None:
+        section(console, "The set-up" if plan.reached else "The best set-up found")
+        facts = new_table(("", "left"), ("", "left"), header=False)
+        for name, fact in set_up_facts(plan.chosen):
+            facts.add_row(name, printable(fact))
+        console.print(facts)
+        section(console, f"Its budget, standard uncertainty in {unit_of(plan)}")
+        console.print(_budget(plan))
+        console.print(Text(checked(plan)))
+        section(console, f"U95 in {unit_of(plan)}, everything else as above (x: a check would fail)")
+        console.print(_map(plan))
+        section(console, "The cheapest set-up with each probe")
+        console.print(_by_probe(plan))
+        section(console, "What a single improvement would gain")
+        console.print(_improvements(plan))
+    sentences_of(console, "Notes", plan.notes)
+    console.print()
+    console.print(STATEMENT, style="dim")
+    return text_of(console)
+
+
+def unit_of(plan: Plan) -> str:
+    """The plan's unit in words."""
+    return "the coefficient" if plan.unit == "1" else plan.unit if plan.unit == "counts" else unit_text(plan.unit)
+
+
+def with_unit(plan: Plan, value: float, digits: int = 3) -> str:
+    """A figure in the plan's unit."""
+    unit = "" if plan.unit == "1" else f" {plan.unit if plan.unit == 'counts' else unit_text(plan.unit)}"
+    return f"{significant(value, digits)}{unit}"
+
+
+def outcome(plan: Plan) -> str:
+    """One sentence: whether some set-up reaches the target, and what it takes."""
+    row, target = words(plan.row), with_unit(plan, plan.target)
+    if plan.chosen is None:
+        return f"No set-up can be reduced: nothing can be said about U95 of the {row} (target {target})."
+    figure, uncertainty = rounded(plan.value, plan.monte_carlo)
+    known = f"{row} {figure} ± {uncertainty} {'' if plan.unit == '1' else plan.unit}".strip()
+    if plan.reached:
+        cost = time_text(plan.chosen.minutes) if math.isfinite(plan.chosen.minutes) else "the fewest points of all"
+        return f"The target of {target} is reached: {known} (U95), in {cost}."
+    within = f" within {time_text(plan.time_limit)}" if math.isfinite(plan.time_limit) else ""
+    sentence = f"No set-up tried reaches {target}{within}; the best one found: {known} (U95)"
+    if math.isfinite(plan.chosen.minutes):
+        sentence += f", in {time_text(plan.chosen.minutes)}"
+    if plan.chosen.failing:
+        sentence += f", and {', '.join(map(words, plan.chosen.failing))} would fail"
+    if plan.beyond is not None:
+        sentence += f". Without the limit {time_text(plan.beyond.minutes)} would do"
+    return f"{sentence}."
+
+
+def time_text(minutes: float) -> str:
+    """A time as it is printed.
+
+    Examples
+    --------
+    >>> time_text(84.7), time_text(211.7)
+    ('85 min', '3 h 32 min')
+    """
+    if not math.isfinite(minutes):
+        return "an unknown time"
+    whole = round(minutes)
+    if whole < 1:
+        return f"{60 * minutes:.0f} s"
+    return f"{whole} min" if whole < 120 else f"{whole // 60} h {whole % 60:02d} min"
+
+
+def set_up_facts(one: SetUp) -> list[tuple[str, str]]:
+    """A set-up as names and facts."""
+    lines = f"{one.lines_y} × {one.lines_z} (y × z), every {significant(1e3 * one.spacing, 3)} mm"
+    found = [
+        ("points", f"{one.points}, {lines}"),
+        ("window", f"{significant(1e3 * one.window, 3)} mm beyond the wake on every side"),
+        (
+            "surveys",
+            f"{one.repeats}, {time_text(one.minutes)} together" if math.isfinite(one.minutes) else str(one.repeats),
+        ),
+        ("probe", f"noise {one.probe}"),
+    ]
+    accuracies = (
+        ("flow angles", math.degrees(one.angle_accuracy), "deg"),
+        ("dynamic pressure", 100 * one.reference_accuracy, "%"),
+        ("density", 100 * one.density_accuracy, "%"),
+        ("drift of the reference", one.reference_drift, "Pa from row to row"),
+    )
+    found += [(name, f"u = {significant(value, 3)} {unit}") for name, value, unit in accuracies if value > 0]
+    return found
+
+
+def checked(plan: Plan) -> str:
+    """What the full Monte Carlo said of the derivatives."""
+    percent = 100 * plan.non_linearity
+    left = with_unit(plan, plan.left, 2)
+    return (
+        f"A full Monte Carlo of {plan.draws} draws gives the declared sources {percent:+.1f} % against their"
+        f" derivatives; the figures hold this. Without any noise the survey would be off by {left}."
+    )
+
+
+def _budget(plan: Plan) -> Table:
+    table = new_table(("", "left"), ("u", "right"), ("share", "right"), ("", "left"))
+    shown = [line for line in plan.budget if line.share >= SMALL]
+    for line in shown:
+        table.add_row(line.source, significant(line.standard_uncertainty, 2), f"{100 * line.share:.1f} %", line.kind)
+    small = [line for line in plan.budget if line.share < SMALL]
+    if small:
+        u = math.sqrt(sum(line.standard_uncertainty**2 for line in small))
+        table.add_row(f"{len(small)} smaller ones", significant(u, 2), "", "")
+    return table
+
+
+def _map(plan: Plan) -> Table:
+    table = new_table(
+        ("probe's noise", "left"), ("window", "right"), *((f"{1e3 * h:.3g} mm", "right") for h in plan.spacings)
+    )
+    for c, probe in enumerate(plan.probes):
+        for j, margin in enumerate(plan.windows):
+            cells = []
+            for i in range(len(plan.spacings)):
+                u = plan.uncertainty[c, j, i]
+                text = "–" if math.isnan(u) else significant(u, 2)
+                cells.append(f"{text} x" if plan.failing[c, j, i] else text)
+            table.add_row(probe if j == 0 else "", f"{1e3 * margin:.3g} mm", *cells)
+    return table
+
+
+def _by_probe(plan: Plan) -> Table:
+    table = new_table(
+        ("probe's noise", "left"), ("every", "right"), ("window", "right"), ("surveys", "right"), ("time", "right"),
+        ("U95", "right"), ("", "left"),
+    )  # fmt: skip
+    for one in plan.by_probe:
+        reaches = one.expanded_uncertainty <= plan.target and not one.failing and not one.minutes > plan.time_limit
+        table.add_row(
+            one.probe,
+            f"{1e3 * one.spacing:.3g} mm",
+            f"{1e3 * one.window:.3g} mm",
+            str(one.repeats),
+            time_text(one.minutes) if math.isfinite(one.minutes) else f"{one.points * one.repeats} points",
+            significant(one.expanded_uncertainty, 2),
+            "reaches the target" if reaches else "does NOT reach it",
+        )
+    return table
+
+
+def _improvements(plan: Plan) -> Table:
+    table = new_table(
+        ("", "left"), ("U95 then", "right"), ("gain", "right"), ("takes", "right"), ("gain per hour", "right")
+    )
+    for one in plan.improvements[:MOST_LINES]:
+        more = one.minutes if abs(one.minutes) >= 0.5 else 0.0
+        takes = (
+            "–"
+            if math.isnan(one.minutes)
+            else "no time"
+            if more == 0
+            else f"{'+' if more > 0 else '−'}{time_text(abs(more))}"
+        )
+        rate = significant(60 * one.gain_per_minute, 2) if math.isfinite(one.gain_per_minute) else "–"
+        table.add_row(one.what, significant(one.expanded_uncertainty, 3), significant(one.gain, 2), takes, rate)
+    return table
