@@ -158,7 +158,8 @@ def _apart(parts: Sequence[_Part], n: int) -> Apart | None:
     whose = "" if len(found) == len(parts) else f"tube{'s' if len(numbers) > 1 else ''} {listed(numbers)}"
     chance = min(one.chance for _, one in found)
     rest = any(one.rest for _, one in found)
-    return Apart(value, float(weight.sum() ** -0.5), step, chance, lag, rest, additions, whose)
+    sigma, carried = float(weight.sum() ** -0.5), max(one.carried for _, one in found)
+    return Apart(value, sigma, step, chance, lag, rest, carried, additions, whose)
 
 
 def _alone(survey: SurveyInput, table: ProbeTable, points: Points, reference: Reference) -> RawSurvey:

@@ -26,6 +26,8 @@ STATED = 0.1
 CHANCE, LEAST = 0.005, 0.005
 #: An estimate that the scatter gives more than this chance is not clear of it.
 _DOUBTFUL = 0.05
+#: What is within this many standard uncertainties of what was taken out is carried with it.
+_COVERED = 2.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -44,6 +46,8 @@ class Apart:
         The time constant that would do the same at the speed of the traverse, s; NaN where the time is not known.
     rest : bool
         Whether a lag or a backlash was taken out before.
+    carried : float
+        What of it is carried as an uncertainty by then, m.
     additions : mapping of str to tuple of Addition
         What taking it out would add to the holes, by `BACKLASH` and `LAG`, as either of them.
     whose : str
@@ -56,13 +60,14 @@ class Apart:
     chance: float
     lag: float
     rest: bool
+    carried: float = 0.0
     additions: Mapping[str, tuple[Addition, ...]] = field(default_factory=dict)
     whose: str = ""
 
     @property
     def clear(self) -> bool:
         """Whether it is more than the scatter between the rows, and worth a word."""
-        return self.chance < CHANCE and abs(self.value) > LEAST * self.step
+        return self.chance < CHANCE and abs(self.value) > max(LEAST * self.step, _COVERED * self.carried)
 
     @property
     def sentence(self) -> str:
@@ -141,7 +146,9 @@ def estimated_backlash(path: Travel, pressures: Array) -> tuple[Backlash, str]:
     return found, how
 
 
-def find_apart(path: Travel, pressures: Array, holes: tuple[str, ...], *, rest: bool, lag: bool) -> Apart | None:
+def find_apart(
+    path: Travel, pressures: Array, holes: tuple[str, ...], *, lag: float | None = None, backlash: float | None = None
+) -> Apart | None:
     """How far rows taken to and fro stand apart.
 
     Parameters
@@ -152,31 +159,35 @@ def find_apart(path: Travel, pressures: Array, holes: tuple[str, ...], *, rest: 
         As corrected so far, in the order in which they were taken, Pa; NaN ones are not used.
     holes : tuple of str
         Names of the holes.
-    rest : bool
-        Whether a lag or a backlash was taken out already.
-    lag : bool
-        Whether it may be that of the tubing.
+    lag, backlash : float, optional
+        Standard uncertainties of those that were taken out already, s and m.
 
     Returns
     -------
     Apart or None
-        None where rows run one way, or too few do to tell.
+        None where the scatter between rows may do it, rows run one way, or too few do to tell.
     """
     along, across = path.along_and_across
-    found = estimate_backlash(along, across, path.row, pressures)
+    found = estimate_backlash(along, across, path.row, pressures, below=CHANCE)
     if found.reason is not None or not math.isfinite(found.standard_uncertainty):
         return None
     step = np.abs(np.diff(along)[np.diff(path.row) == 0])
     step = step[step > 0]
     typical = float(np.median(step))
+    if not found.chance < CHANCE:
+        return None
     size = correct_backlash(pressures, along, path.row, backlash=found.value).size
+    rest = lag is not None or backlash is not None
+    carried = 0.0 if backlash is None else backlash
+    if lag is not None:
+        carried = math.hypot(carried, 2.0 * lag * _speed(path))
     additions = {BACKLASH: (Addition(BACKLASH, _by_hole(holes, path.filed(size))),)}
-    tau = _equal_lag(path, pressures, found.value) if lag else math.nan
+    tau = math.nan if rest else _equal_lag(path, pressures, found.value)
     if tau > 0:
         assert path.time is not None
         rates = make_rate_filter(path.time, path.row, values=pressures)
         additions[LAG] = (Addition(LAG, {}, lag=LagFilter(rates, tau, path.order)),)
-    return Apart(found.value, found.standard_uncertainty, typical, found.chance, tau, rest, additions)
+    return Apart(found.value, found.standard_uncertainty, typical, found.chance, tau, rest, carried, additions)
 
 
 def _equal_lag(path: Travel, pressures: Array, value: float) -> float:
@@ -184,14 +195,20 @@ def _equal_lag(path: Travel, pressures: Array, value: float) -> float:
     if path.time is None or not value > 0:
         return math.nan
     along, across = path.along_and_across
-    within = np.diff(path.row) == 0
-    took = np.diff(path.time)[within]
-    if not (took > 0).all():
+    if not (np.diff(path.time)[np.diff(path.row) == 0] > 0).all():
         return math.nan
     found = estimate_lag(along, across, path.row, path.time, pressures)
     if math.isfinite(found.value) and found.value > 0:
         return found.value
-    return value / (2.0 * float(np.median(np.abs(np.diff(along)[within]) / took)))
+    return value / (2.0 * _speed(path))
+
+
+def _speed(path: Travel) -> float:
+    """Typical speed along the rows, m/s."""
+    assert path.time is not None
+    within = np.diff(path.row) == 0
+    along, _ = path.along_and_across
+    return float(np.median(np.abs(np.diff(along)[within]) / np.diff(path.time)[within]))
 
 
 def _by_hole(holes: tuple[str, ...], values: Array) -> dict[str, Array]:

@@ -127,6 +127,7 @@ class _Preparation:
         tubes = (Tube(reduction),) if isinstance(reduction, PitotReduction) else by_roll(reduction, self.points)
         self.traverse = Traverse(tubes, kinds)
         self.apart: Apart | None = None
+        self._known: dict[str, float] = {}
 
     def _reduction(self) -> HoleReduction | PitotReduction:
         probe = self.probe
@@ -271,6 +272,7 @@ class _Preparation:
         correction = correct_lag(pressures, rates, lag=lag, standard_uncertainty=sigma)
         parts = self._one_for_all(LAG, path.filed(correction.per_sigma))
         self._add(LAG, None, parts, lag=LagFilter(rates, lag, path.order))
+        self._known[LAG] = sigma
         self.said[LAG] = f"A lag of the tubing of {1e3 * lag:.3g} ms ({how}) was taken out"
         self._carry(LAG, "lag of the tubing", (correction_input(LAG),))
 
@@ -295,6 +297,7 @@ class _Preparation:
             return
         parts = self._one_for_all(BACKLASH, path.filed(correction.per_sigma))
         self._add(BACKLASH, path.filed(correction.size), parts)
+        self._known[BACKLASH] = sigma
         self.said[BACKLASH] = f"A backlash of the traverse of {1e3 * value:.3g} mm ({how}) was taken out"
         self._carry(BACKLASH, "backlash of the traverse", (correction_input(BACKLASH),))
 
@@ -303,9 +306,8 @@ class _Preparation:
         probe = self.probe
         if probe.role == "static" or probe.backlash == "estimate":
             return
-        rest = bool(probe.lag or probe.backlash)
         pressures = self._comparable(self._pressures())
-        self.apart = find_apart(self.path, pressures, self.holes, rest=rest, lag=not rest)
+        self.apart = find_apart(self.path, pressures, self.holes, **self._known)
 
     def _drift(self) -> None:
         if self.probe.role == "static":

@@ -81,13 +81,18 @@ def apart_notes(raw: RawSurvey, chain: Chain, nominal: Reduction) -> list[str]:
     found = raw.apart
     if found is None or not found.clear or chain.traverse is None:
         return []
-    row, worth = nominal.drag, []
+    rows = [row for row in ("profile_drag", "induced_drag") if math.isfinite(nominal.values[row])]
+    worth = []
     for name, additions in found.additions.items():
         traverse = replace(chain.traverse, additions=(*chain.traverse.additions, *additions))
-        other = replace(chain, traverse=traverse).reduce({}, vary=Variation(mask=nominal.region.mask), estimates=False)
-        counts = tables.counts_text(nominal.values[row] - other.values[row], nominal, chain)
-        worth.append(f"{counts} if it is a {name}")
-    said = f"{found.sentence}: left in, it is worth {' and '.join(worth)}, of {row.replace('_', ' ')}"
+        # Rows that stand apart widen the wake region, too: it is found anew.
+        other = replace(chain, traverse=traverse).reduce(estimates=False)
+        counts = [
+            f"{tables.counts_text(nominal.values[row] - other.values[row], nominal, chain)} of {row.replace('_', ' ')}"
+            for row in rows
+        ]
+        worth.append(f"{' and '.join(counts)} if it is a {name}")
+    said = f"{found.sentence}: left in, it is worth {', '.join(worth)}"
     return [f"{said}. {found.remedy}."]
 
 

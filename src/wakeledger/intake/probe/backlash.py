@@ -73,7 +73,9 @@ def row_senses(along: Array, row: NDArray[np.integer]) -> Array:
     return sense
 
 
-def estimate_backlash(along: Array, across: Array, row: NDArray[np.integer], values: Array) -> Backlash:
+def estimate_backlash(
+    along: Array, across: Array, row: NDArray[np.integer], values: Array, *, below: float = 1.0
+) -> Backlash:
     """Backlash of a traverse whose rows run to and fro.
 
     Parameters
@@ -84,6 +86,8 @@ def estimate_backlash(along: Array, across: Array, row: NDArray[np.integer], val
         Traverse row of each point.
     values : ndarray, shape (channels, n)
         Any readings; NaN where one is missing. Channels are weighted by their own scatter.
+    below : float
+        Chance from which on the first linear step is not refined: it is not worth the time.
 
     Returns
     -------
@@ -116,6 +120,8 @@ def estimate_backlash(along: Array, across: Array, row: NDArray[np.integer], val
     step = score(half)
     sigma, freedom = score.scatter(half)
     chance = 2.0 * float(stdtr(freedom, -abs(step) / sigma)) if sigma > 0 else float("nan")
+    if chance >= below:
+        return Backlash(2 * step, 2 * sigma * _widened(freedom), len(table), chance=chance)
     reach = 4 * score.spacing
     for _ in range(_ITERATIONS):
         # Noise in the slopes makes the first step too short; the secant learns by how much.

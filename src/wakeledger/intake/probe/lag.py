@@ -210,10 +210,10 @@ def estimate_lag(along: Array, across: Array, row: NDArray[np.integer], time: Ar
     adds to Σ w s is known from the splines and is taken out. Backlash moves the two ways apart just as lag does: they
     can be told apart only by traversing at another speed.
     """
-    smooth = make_rate_filter(time, row, values=values)
-    pairs = _pairs(along, across, row, smooth.usable)
+    pairs = _pairs(along, across, row, np.isfinite(values).all(axis=0))
     if not pairs:
         return Lag(np.nan, np.nan, 0, "no row was traversed in both directions")
+    smooth = make_rate_filter(time, row, values=values)
     close = make_rate_filter(time, row, smoothing_time=_SHORTEST / 2 * smooth.interval, usable=smooth.usable)
     signs = np.sign(np.random.default_rng(0).standard_normal((_PROBES, row.size)))
     rough = signs - smooth.smooth(signs)
