@@ -27,6 +27,8 @@ _FLANK_WIDTH = float(np.sqrt(np.log(1 / _FLANK)))
 _LEAST_PEAK = 0.002
 #: A profile wider than this part of the line it stands on is no narrow peak.
 _WIDEST = 0.25
+#: Peaks looked for on one line.
+_MOST_PEAKS = 6
 #: Flanks that differ by more than this factor are those of a layer with an edge, as a shock's alone, and of no wake.
 _UNLIKE = 3.0
 
@@ -71,26 +73,43 @@ def viscous_region(
         region: Mask = ndimage.binary_fill_holes(turbulent_viscosity > outer + VISCOSITY_SHARE * (peak - outer))
         return region
     mask = np.zeros(grid.shape, dtype=bool)
-    peaks = np.argmax(entropy, axis=0)
-    heights = entropy[peaks, np.arange(grid.ny)]
-    least = max(level, _LEAST_PEAK * float(heights.max()), 0.0)
-    for column in np.flatnonzero(heights > least):
-        line, peak = entropy[:, column], int(peaks[column])
-        below, above = _flank(line[peak::-1]), _flank(line[peak:])
-        if not below + above < _WIDEST * grid.nz or max(below, above) > _UNLIKE * max(min(below, above), 1.0):
-            continue
-        first = int(np.floor(peak - reach * below / _FLANK_WIDTH))
-        last = int(np.ceil(peak + reach * above / _FLANK_WIDTH))
-        mask[max(first, 0) : last + 1, column] = True
+    least = max(level, _LEAST_PEAK * float(entropy.max()), 0.0)
+    for column in np.flatnonzero(entropy.max(axis=0) > least):
+        mask[:, column] = _profiles(entropy[:, column], least, reach)
+    return mask
+
+
+def _profiles(line: Array, least: float, reach: float) -> Mask:
+    """Where the narrow peaks of one line stand, shape (nz,)."""
+    mask = np.zeros(line.size, dtype=bool)
+    seen = np.zeros(line.size, dtype=bool)
+    for _ in range(_MOST_PEAKS):
+        peak = int(np.argmax(np.where(seen, -np.inf, line)))
+        if seen[peak] or not line[peak] > least:
+            break
+        # A peak that hangs on what was seen already has no flank on that side: it is what lies over the other's.
+        whole = np.where(seen, np.inf, line)
+        below, above = _flank(whole[peak::-1]), _flank(whole[peak:])
+        narrow = below + above < _WIDEST * line.size and max(below, above) <= _UNLIKE * max(min(below, above), 1.0)
+        if narrow:
+            first = int(np.floor(peak - reach * below / _FLANK_WIDTH))
+            last = int(np.ceil(peak + reach * above / _FLANK_WIDTH))
+            mask[max(first, 0) : last + 1] = True
+            seen |= mask
+        else:
+            labels, _ = ndimage.label((line > _FLANK * line[peak]) & ~seen)
+            seen |= labels == labels[peak]
     return mask
 
 
 def _flank(line: Array) -> float:
-    """Distance in cells from a peak at the first place to 60 % of it; infinite where the line never falls so far."""
+    """Distance in cells from a peak at the first place to 60 % of it; infinite where the line does not fall so far."""
     under = np.flatnonzero(line <= _FLANK * line[0])
     if not under.size:
         return float("inf")
     k = int(under[0])
+    if np.isinf(line[:k]).any():
+        return float("inf")
     return k - 1 + float((line[k - 1] - _FLANK * line[0]) / (line[k - 1] - line[k]))
 
 
