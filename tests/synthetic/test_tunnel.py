@@ -140,6 +140,26 @@ def test_rows_add_up_to_the_momentum_balance_of_the_section(closed):
     assert (truth.induced_drag < truth.induced_drag_free_air) == closed
 
 
+@pytest.mark.parametrize("distance", [0.25, 0.8])
+def test_a_bound_line_disturbs_the_flow_and_not_the_drag(distance):
+    # Its images one by one are summed in tests/physics/test_duct_near_field.py.
+    section = RectangularDuct(Y, Z)
+    far, near = wing(section=section), wing(section=section, bound_distance=distance)
+    step = 0.01
+    grid = UniformGrid(Y[0] + step / 2, Z[0] + step / 2, step, step, 210, 130)
+    state, still = near.state_on(grid), far.state_on(grid)
+    assert np.abs(state.w - still.w).max() > 0.02
+    assert np.abs(state.u - still.u).max() > 0.01
+    density, speed = REFERENCE.density, REFERENCE.speed
+    assert_allclose(float(state.u.sum()) * step**2, speed * np.ptp(Y) * np.ptp(Z), rtol=1e-13)
+    through = (REFERENCE.static_pressure + density * speed**2) - (state.static_pressure + density * state.u**2)
+    assert_allclose(near.truth.total_drag, float(through.sum()) * step**2, rtol=1e-10)
+    assert near.truth.induced_drag == far.truth.induced_drag
+    assert_allclose(near.truth.total_drag, far.truth.total_drag, rtol=2e-3)
+    with pytest.raises(ValueError, match="rectangular section"):
+        wing(bound_distance=distance)
+
+
 def test_half_a_model_has_the_rows_of_the_whole_one():
     section = RectangularDuct((-1.0, 1.0), Z)
     half, whole = wing("y", section), wing(section=section)

@@ -10,18 +10,31 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from types import MappingProxyType
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Channel, Points
-from wakeledger.synthetic.wakes import SyntheticWake
+from wakeledger.stream.reference import Reference
+from wakeledger.synthetic.wakes import FlowState
 
 #: What a pneumatic probe gives at each point.
 PROBE_VARIABLES = ("u", "v", "w", "total_pressure", "static_pressure")
 _RELATIVE_TO = MappingProxyType({"total_pressure": "total", "static_pressure": "static"})
 _NONE: Mapping[str, float] = MappingProxyType({})
+
+
+class Flow(Protocol):
+    """What can be recorded: a stream and its state at points."""
+
+    @property
+    def reference(self) -> Reference:
+        """The undisturbed stream."""
+
+    def state(self, y: Array, z: Array) -> FlowState:
+        """The flow at points, m."""
 
 
 @dataclass(frozen=True)
@@ -174,7 +187,7 @@ class Recording:
 
 
 def record(
-    wake: SyntheticWake,
+    wake: Flow,
     positions: Positions,
     *,
     generator: np.random.Generator,
@@ -186,8 +199,8 @@ def record(
 
     Parameters
     ----------
-    wake : SyntheticWake
-        The flow.
+    wake : Flow
+        A wake, or a tunnel without its model.
     positions : Positions
         Where.
     generator : numpy.random.Generator

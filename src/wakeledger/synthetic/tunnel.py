@@ -28,7 +28,7 @@ from wakeledger.stream.reference import Reference
 from wakeledger.synthetic.elements import GaussianElements
 from wakeledger.synthetic.losses import GaussianLosses, no_losses
 from wakeledger.synthetic.wakes import FlowState, SyntheticWake
-from wakeledger.synthetic.walls import Duct
+from wakeledger.synthetic.walls import Duct, RectangularDuct, bound_field
 
 #: Relative change of the compact integrals at which their spacing is fine enough.
 _CLOSE = 1e-10
@@ -91,7 +91,7 @@ class TunnelTruth:
     induced_drag_free_air : float
         Of the same vorticity without them, the reflection plane staying, N.
     residual_drag : float
-        What is left of the momentum balance, −½ρ∬(u* − U − 2u_b)² dA, N.
+        What is left of the momentum balance, −½ρ∬[(u* − U − 2u_b)² − u'²] dA with the bound line's u', N.
     total_drag : float
         Force on the model in the tunnel, N.
     lift, side_force, rolling_moment : float
@@ -145,11 +145,18 @@ class TunnelWake:
         Concentrated vortices whose low pressure is put into the state; they add no vorticity.
     empty : EmptyTunnel or None
         What the tunnel adds to the flow.
+    bound_distance : float or None
+        Distance of the plane behind the bound line, m, in a rectangular section; None for a plane far downstream, where
+        the crossflow is two-dimensional.
 
     Raises
     ------
     ValueError
-        If the stream is compressible.
+        If the stream is compressible, or a bound line is asked for elsewhere than in a rectangular section.
+
+    Notes
+    -----
+    The vortices stand three core lengths or more clear of the walls, but may reach across the reflection plane.
     """
 
     reference: Reference
@@ -159,10 +166,13 @@ class TunnelWake:
     reflection: Literal["y", "z"] | None = None
     cores: GaussianElements | None = None
     empty: EmptyTunnel | None = None
+    bound_distance: float | None = None
 
     def __post_init__(self) -> None:
         if self.reference.compressible:
             raise ValueError("a wake between walls is exact only in incompressible flow; set compressible = False")
+        if self.bound_distance is not None and not isinstance(self.section, RectangularDuct):
+            raise ValueError("a bound line has its images in a rectangular section only")
 
     # -- both halves ----------------------------------------------------------------------------------------------
 
@@ -203,7 +213,24 @@ class TunnelWake:
 
     def crossflow(self, y: Array, z: Array) -> tuple[Array, Array]:
         """Crossflow v, w of the model's wake, m/s, at points of any shape (m)."""
-        return self._velocity(self.whole, y, z)
+        v, w = self._velocity(self.whole, y, z)
+        _, near_v, near_w = self._bound(y, z)
+        return v + near_v, w + near_w
+
+    def _bound(self, y: Array, z: Array) -> tuple[Array, Array, Array]:
+        """Disturbance u', v, w of the bound line and the legs' beginning, m/s."""
+        still: Array = np.zeros(np.broadcast(y, z).shape)
+        if self.bound_distance is None or not isinstance(self.section, RectangularDuct):
+            return still, still, still
+        lines = [self.elements]
+        if self.reflection == "y":
+            # From the port tip over the plane of symmetry to the starboard one.
+            lines = [self.elements.mirrored("y")[::-1] + self.elements]
+        elif self.reflection == "z":
+            lines.append(self.elements.mirrored("z"))
+        parts = [bound_field(line, self.section, self.bound_distance, y, z) for line in lines]
+        u, v, w = (np.sum([part[k] for part in parts], axis=0) for k in range(3))
+        return u, v, w
 
     def _velocity(self, elements: GaussianElements, y: Array, z: Array) -> tuple[Array, Array]:
         return elements.velocity(y, z) if self.section is None else self.section.velocity(elements, y, z)
@@ -226,6 +253,11 @@ class TunnelWake:
     def empty_state(self, y: Array, z: Array) -> FlowState:
         """The flow at points without the model, as a survey of the empty tunnel meets it."""
         return self._state(np.asarray(y, float), np.asarray(z, float), model=False)
+
+    @property
+    def without_model(self) -> WithoutModel:
+        """The empty tunnel, to be recorded like the flow with the model."""
+        return WithoutModel(self)
 
     def state_on(self, grid: UniformGrid) -> FlowState:
         """The flow on a grid, arrays of shape (nz, ny)."""
@@ -256,49 +288,51 @@ class TunnelWake:
 
     def _lossless_square(self, y: Array, z: Array) -> Array:
         """u*², m²/s²: the stream's, faster by 2u_b between closed walls, and more in the low pressure of the cores."""
-        low = self._still.core_pressure(y, z)
-        square: Array = (self.reference.speed + self._faster) ** 2 - 2 * low / self.reference.density
+        low, bound = self._still.core_pressure(y, z), self._bound(y, z)[0]
+        square: Array = (self.reference.speed + self._faster + bound) ** 2 - 2 * low / self.reference.density
         return square
 
     # -- truth ----------------------------------------------------------------------------------------------------
 
     @cached_property
-    def _compact(self) -> tuple[UniformGrid, Array, Array]:
-        """A grid over the losses and cores of both halves, with loss and core pressure on it."""
+    def _compact(self) -> tuple[UniformGrid, Array, Array, Array]:
+        """A grid over losses and cores of both halves, with loss, core pressure and the bound line's u' on it."""
         return self._on(1 / 3.5)
 
-    def _on(self, fraction: float) -> tuple[UniformGrid, Array, Array]:
+    def _on(self, fraction: float) -> tuple[UniformGrid, Array, Array, Array]:
         grid = self._still.compact_window(fraction)
         y, z = grid.mesh()
-        return grid, self._still.losses.loss(y, z), self._still.core_pressure(y, z)
+        return grid, self._still.losses.loss(y, z), self._still.core_pressure(y, z), self._bound(y, z)[0]
 
     @cached_property
     def _faster(self) -> float:
         """How much faster the stream is beside the wake, m/s, so that the section passes UC; 0 without walls."""
         if self.section is None or not self._closed:
             return 0.0
-        grid, loss, core = self._compact
+        grid, loss, core, bound = self._compact
         speed, density, area = self.reference.speed, self.reference.density, self.section.area
 
         def surplus(faster: float) -> float:
-            star = (speed + faster) ** 2 - 2 * core / density
-            return faster * area + float(grid.integrate(np.sqrt(star - 2 * loss / density) - (speed + faster)))
+            beside = speed + faster + bound
+            slower = np.sqrt(beside**2 - 2 * (core + loss) / density) - beside
+            return faster * area + float(grid.integrate(slower))
 
         return float(brentq(surplus, -0.2 * speed, 0.5 * speed, xtol=1e-14 * speed, rtol=1e-14))
 
     def _integrals(self, fraction: float) -> tuple[float, float, float]:
         """Profile and residual drag on the whole plane, N, and the volume flow that the wake lacks, m³/s."""
         ref = self.reference
-        grid, loss, core = self._on(fraction)
-        star = np.sqrt((ref.speed + self._faster) ** 2 - 2 * core / ref.density)
+        grid, loss, core, bound = self._on(fraction)
+        star = np.sqrt((ref.speed + self._faster + bound) ** 2 - 2 * core / ref.density)
         u = np.sqrt(star**2 - 2 * loss / ref.density)
         deficit = float(grid.integrate(star - u))
         blocked = deficit / (2 * self.section.area) if self.section is not None and self._closed else 0.0
         profile = loss + ref.density * (star - u) * (star + u - 2 * (ref.speed + blocked)) / 2
-        beside = star - ref.speed - self._faster
-        residual = -ref.density * float(grid.integrate(beside**2)) / 2
+        # The bound line's own u'² is the energy of its crossflow, which is no row's.
+        beside = star - ref.speed - self._faster - bound
+        residual = -ref.density * float(grid.integrate((beside + bound) ** 2 - bound**2)) / 2
         if self.section is not None and self._closed:
-            # ∬(u* − U − 2u_b)² over the section, of which the compact part is ∬(u* − U − e)².
+            # ∬(u* − U − 2u_b)² over the section, of which the compact part is that with e for 2u_b.
             off = self._faster - 2 * blocked
             residual -= ref.density * (off * float(grid.integrate(beside)) + off**2 * self.section.area / 2)
         return float(grid.integrate(profile)), residual, deficit
@@ -335,6 +369,28 @@ class TunnelWake:
             wake_blockage=blocked,
             quadrature_error=share * (abs(fine[0] - coarse[0]) + abs(fine[1] - coarse[1])),
         )
+
+
+@dataclass(frozen=True)
+class WithoutModel:
+    """A test section without its model.
+
+    Attributes
+    ----------
+    flow : TunnelWake
+        The section with it.
+    """
+
+    flow: TunnelWake
+
+    @property
+    def reference(self) -> Reference:
+        """The undisturbed stream."""
+        return self.flow.reference
+
+    def state(self, y: Array, z: Array) -> FlowState:
+        """The flow at points; see `TunnelWake.empty_state`."""
+        return self.flow.empty_state(y, z)
 
 
 def root_bending_moment(elements: GaussianElements, *, speed: float, density: float) -> float:

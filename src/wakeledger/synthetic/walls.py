@@ -198,6 +198,64 @@ class RoundDuct:
 Duct = RectangularDuct | RoundDuct
 
 
+def bound_field(
+    line: GaussianElements, duct: RectangularDuct, distance: float, y: Array, z: Array
+) -> tuple[Array, Array, Array]:
+    """What a bound line and the beginning of its legs add at a station, with all their images.
+
+    Parameters
+    ----------
+    line : GaussianElements
+        Cross-section of the legs, in order along the bound line, which runs straight from one to the next.
+    duct : RectangularDuct
+        The section.
+    distance : float
+        Distance of the station behind the bound line, m, positive.
+    y, z : ndarray, any shape
+        Points, m.
+
+    Returns
+    -------
+    u, v, w : ndarray, shape of the points
+        To be added to the stream and to the endless legs' crossflow, m/s.
+
+    Notes
+    -----
+    Behind the line the disturbance is Φ = Σ A f e^{−kx} over modes f of unit square, cosines between closed walls and
+    sines in a jet. Half the jump of the crossflow across the plane of the bound line belongs to either side, so that
+    k²A = −½∫Γ_b (∂f/∂z dy − ∂f/∂y dz) along it.
+    """
+    (y0, y1), (z0, z1) = duct.y, duct.z
+    first = 0 if duct.closed else 1
+    number_y, number_z = (
+        np.pi * np.arange(first, 2 + math.ceil(40.0 * size / (np.pi * distance))) / size for size in (y1 - y0, z1 - z0)
+    )
+    nodes, weights = np.polynomial.legendre.leggauss(3)
+    bound = -np.cumsum(line.circulation)[:-1]
+    step_y, step_z = np.diff(line.y), np.diff(line.z)
+    at_y = ((line.y[1:] + line.y[:-1]) / 2 + step_y / 2 * nodes[:, None]).ravel()
+    at_z = ((line.z[1:] + line.z[:-1]) / 2 + step_z / 2 * nodes[:, None]).ravel()
+    along_y, along_z = ((weights[:, None] / 2 * bound * step).ravel() for step in (step_y, step_z))
+
+    def modes(number: Array, place: Array) -> tuple[Array, Array]:
+        phase = np.outer(number, place)
+        if duct.closed:
+            return np.cos(phase), -number[:, None] * np.sin(phase)
+        return np.sin(phase), number[:, None] * np.cos(phase)
+
+    (fy, dfy), (fz, dfz) = modes(number_y, at_y - y0), modes(number_z, at_z - z0)
+    source = 0.5 * ((dfz * along_y) @ fy.T - (fz * along_z) @ dfy.T)
+    square = number_z[:, None] ** 2 + number_y**2
+    k = np.sqrt(square)
+    unit = np.where(number_z == 0, 1, 2)[:, None] * np.where(number_y == 0, 1, 2) / duct.area
+    amplitude = -unit * source * np.exp(-k * distance) / np.where(square > 0, square, np.inf)
+    yy, zz = np.broadcast_arrays(np.asarray(y, float), np.asarray(z, float))
+    (fy, dfy), (fz, dfz) = modes(number_y, yy.ravel() - y0), modes(number_z, zz.ravel() - z0)
+    parts = ((-k * amplitude, fz, fy), (amplitude, fz, dfy), (amplitude, dfz, fy))
+    u, v, w = (np.einsum("mp,mn,np->p", up, a, across, optimize=True).reshape(yy.shape) for a, up, across in parts)
+    return u, v, w
+
+
 def _no_net_circulation(elements: GaussianElements) -> None:
     if abs(elements.net_circulation) > _NET * np.abs(elements.circulation).sum():
         raise ValueError(f"an open jet holds no net circulation, {elements.net_circulation} m²/s was given")
