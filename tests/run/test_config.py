@@ -193,9 +193,6 @@ def test_flight_inputs():
     ("edits", "place"),
     [
         ((PROBE,), "[probe]"),
-        (('[empty_tunnel]\nsurvey = "empty.toml"\n',), "[empty_tunnel]"),
-        (((FREE_AIR, WALLS),), "[boundary] kind"),
-        (((FREE_AIR, 'kind = "open_jet"\nsection = "circle"\ndiameter = "2 m"'),), "[boundary] kind"),
         ((BODY,), "[[body]]"),
         ((LOADING,), "[loading]"),
         ((("row = {", 'tube = { column = "tube" }\nrow = {'),), "[plane.columns] tube"),
@@ -204,13 +201,6 @@ def test_flight_inputs():
         ((("pitch_offset", "turn_positions = true\npitch_offset"),), "[plane.axes] turn_positions"),
         ((("row = {", 'p1 = { column = "p1", unit = "Pa" }\nrow = {'),), "[plane.columns] p1"),
         ((PROBE, ('["angle.pitch", "angle.yaw"]', '["calibration"]'), ('"0.05 deg"', '"0.5 %"')), "[probe]"),
-        (
-            (("[plane]\n", "[[plane]]\n"),
-             ("[boundary]", '[[plane]]\nfile = "b.csv"\nstation = "2 m"\nprimary = "velocity"\n[plane.columns]\n'
-              + "".join(f'{n} = {{ column = "{n}", unit = "m" }}\n' for n in "yz")
-              + "".join(f'{n} = {{ column = "{n}", unit = "m/s" }}\n' for n in "uvw") + "[boundary]")),
-            "[[plane]]",
-        ),
     ],
 )  # fmt: skip
 def test_later_work_validates_and_is_refused_in_words(edits, place):
@@ -218,6 +208,22 @@ def test_later_work_validates_and_is_refused_in_words(edits, place):
     assert found
     assert found[0].startswith(place + ":")
     assert all(len(sentence.split()) > 5 for sentence in found)
+
+
+@pytest.mark.parametrize(
+    "edits",
+    [
+        ('[empty_tunnel]\nsurvey = "empty.toml"\n',),
+        ((FREE_AIR, WALLS),),
+        ((FREE_AIR, 'kind = "open_jet"\nsection = "circle"\ndiameter = "2 m"'),),
+        (("[plane]\n", "[[plane]]\n"),
+         ("[boundary]", '[[plane]]\nfile = "b.csv"\nstation = "2 m"\nprimary = "velocity"\n[plane.columns]\n'
+          + "".join(f'{n} = {{ column = "{n}", unit = "m" }}\n' for n in "yz")
+          + "".join(f'{n} = {{ column = "{n}", unit = "m/s" }}\n' for n in "uvw") + "[boundary]")),
+    ],
+)  # fmt: skip
+def test_tunnels_and_several_planes_are_acted_on(edits):
+    assert parse_survey(edited(GOOD, *edits), "survey.toml").unsupported() == []
 
 
 def test_what_is_lost_is_said():

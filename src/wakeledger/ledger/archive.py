@@ -21,6 +21,7 @@ from wakeledger.ledger.contributions import Contributions
 from wakeledger.ledger.rows import (
     BudgetLine,
     Check,
+    Combined,
     Comparison,
     CrossCheck,
     KeptSurvey,
@@ -59,6 +60,9 @@ _TABLES = ("wake_line", "vortices", "span", "repeats")
 
 #: Group of what each error does to the rows.
 _CONTRIBUTIONS = "contributions"
+
+#: Groups of the ledgers of several planes, numbered from 1, and the attribute that says how they were combined.
+_STATION, _COMBINED = "station_", "combined"
 
 #: Group of the first probe calibration; further ones are numbered. Its attribute says which file it comes from.
 _CALIBRATION, _CALIBRATION_NAME = "calibration", "survey_name"
@@ -216,40 +220,46 @@ def _groups(ledger: Ledger) -> dict[str, xr.Dataset]:
         groups[name] = encoding.points_dataset(kept.raw).assign_attrs(survey_text=kept.survey_text)
     groups["model"] = xr.Dataset({name: scalar(name, value, "model") for name, value in ledger.model.items()})
     groups["raw"] = encoding.points_dataset(ledger.raw)
+    if ledger.combined is not None:
+        root.attrs[_COMBINED] = json.dumps(dataclasses.asdict(ledger.combined))
+    for number, station in enumerate(ledger.stations, start=1):
+        for name, dataset in _groups(station).items():
+            groups[f"{_STATION}{number}/{name}".rstrip("/")] = dataset
     return groups
 
 
-def _ledger(root: xr.Dataset, source: Path) -> Ledger:
-    present = encoding.group_names(source)
-    tables: dict[str, Any] = {
-        name: encoding.read_group(source, group=name) if name in present else None for name in _TABLES
-    }
+def _ledger(root: xr.Dataset, source: Path, *, within: str = "") -> Ledger:
+    def read(name: str) -> xr.Dataset:
+        return encoding.read_group(source, group=f"{within}/{name}" if within else name)
+
+    present = encoding.group_names(source, within=within)
+    tables: dict[str, Any] = {name: read(name) if name in present else None for name in _TABLES}
     for name, record, _ in _RECORDS:
-        tables[name] = encoding.dataset_records(encoding.read_group(source, group=name), record)
+        tables[name] = encoding.dataset_records(read(name), record)
     for name in _MAPPINGS:
         tables[name] = json.loads(root.attrs[name])
-    model = encoding.read_group(source, group="model")
-    contributions = None
-    if _CONTRIBUTIONS in present:
-        contributions = Contributions.from_dataset(encoding.read_group(source, group=_CONTRIBUTIONS))
+    model = read("model")
+    contributions = Contributions.from_dataset(read(_CONTRIBUTIONS)) if _CONTRIBUTIONS in present else None
     if _TUNNEL in present:
-        tables["tunnel"] = encoding.dataset_records(encoding.read_group(source, group=_TUNNEL), TunnelFigure)
+        tables["tunnel"] = encoding.dataset_records(read(_TUNNEL), TunnelFigure)
     companions = {}
     for name in _COMPANIONS:
         if name in present:
-            dataset = encoding.read_group(source, group=name)
+            dataset = read(name)
             companions[name] = KeptSurvey(str(dataset.attrs["survey_text"]), encoding.dataset_points(dataset))
-    calibrations = [
-        encoding.read_group(source, group=name)
-        for name in sorted((name for name in present if name.startswith(_CALIBRATION)), key=_number)
-    ]
+    numbered = sorted((name for name in present if name.startswith(_CALIBRATION)), key=_number)
+    calibrations = [read(name) for name in numbered]
+    stations = sorted(
+        (name for name in present if name.startswith(_STATION)), key=lambda name: int(name[len(_STATION) :])
+    )
+    combined = root.attrs.get(_COMBINED)
     return Ledger(
         title=root.attrs["title"],
         compressible=bool(root.attrs["compressible"]),
         rows=_rows(root),
         covariance=root["covariance"].values,
-        plane=encoding.without_ancillaries(encoding.read_group(source, group="plane")),
-        raw=encoding.dataset_points(encoding.read_group(source, group="raw")),
+        plane=encoding.without_ancillaries(read("plane")),
+        raw=encoding.dataset_points(read("raw")),
         survey_text=root.attrs["survey_text"],
         notes=tuple(json.loads(root.attrs["notes"])),
         reference={name: float(root[name]) for name in json.loads(root.attrs["reference_names"])},
@@ -257,6 +267,8 @@ def _ledger(root: xr.Dataset, source: Path) -> Ledger:
         calibrations={str(dataset.attrs.pop(_CALIBRATION_NAME)): dataset for dataset in calibrations},
         contributions=contributions,
         companions=companions,
+        stations=tuple(_ledger(read(name), source, within=f"{within}/{name}".lstrip("/")) for name in stations),
+        combined=None if combined is None else Combined(**json.loads(combined)),
         **tables,
     )
 

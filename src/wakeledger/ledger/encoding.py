@@ -118,13 +118,15 @@ def read_group(path: Path, *, group: str | None = None) -> xr.Dataset:
     return dataset
 
 
-def group_names(path: Path) -> frozenset[str]:
+def group_names(path: Path, *, within: str = "") -> frozenset[str]:
     """Names of the groups of a netCDF-4 file.
 
     Parameters
     ----------
     path : Path
         The file.
+    within : str
+        Path of a group whose own groups are wanted; empty for the root.
 
     Returns
     -------
@@ -133,7 +135,7 @@ def group_names(path: Path) -> frozenset[str]:
     import netCDF4
 
     with netCDF4.Dataset(path) as dataset:
-        return frozenset(dataset.groups)
+        return frozenset((dataset[within] if within else dataset).groups)
 
 
 def with_ancillaries(plane: xr.Dataset) -> xr.Dataset:

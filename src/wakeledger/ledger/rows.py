@@ -266,6 +266,42 @@ class TunnelFigure:
     reason: str | None = None
 
 
+@dataclass(frozen=True)
+class Combined:
+    """How the planes of several stations were made into one set of rows.
+
+    Attributes
+    ----------
+    method : {"extrapolated", "weighted_mean"}
+        Whether the drags are those at the trailing edge by a resolved trend, or means weighted with the covariance.
+    reason : str
+        Why, and what limits it.
+    diffusivity, diffusivity_uncertainty : float
+        Effective diffusivity of the trailing vortices and its standard uncertainty, m²/s; NaN where unknown.
+    chi_square : float
+        Misfit of the planes with each other.
+    degrees_of_freedom : int
+        Data less parameters.
+    decay : tuple of float
+        Induced drag that the vortices have lost by each station, N, added back in an extrapolation.
+    decay_uncertainty : tuple of float
+        Its standard uncertainty, N.
+    """
+
+    method: str
+    reason: str
+    diffusivity: float
+    diffusivity_uncertainty: float
+    chi_square: float
+    degrees_of_freedom: int
+    decay: tuple[float, ...]
+    decay_uncertainty: tuple[float, ...]
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "decay", tuple(self.decay))
+        object.__setattr__(self, "decay_uncertainty", tuple(self.decay_uncertainty))
+
+
 @dataclass(frozen=True, eq=False)
 class KeptSurvey:
     """Another survey that a ledger rests on, whole.
@@ -335,6 +371,11 @@ class Ledger:
         What the walls do, where there are any.
     companions : mapping of str to KeptSurvey
         Surveys that this one rests on, by what they stand for ("empty_tunnel", "support_tare").
+    stations : tuple of Ledger
+        Ledgers of several planes, each of one station; empty where there is one plane. `plane`, `raw`, the wake line,
+        the vortices and the span loading are then those of the first.
+    combined : Combined or None
+        How the stations were made into the rows.
     inputs : mapping of str to str
         SHA-256 of each input file by name.
     provenance : mapping of str to str
@@ -369,6 +410,8 @@ class Ledger:
     calibrations: Mapping[str, xr.Dataset] = field(default_factory=lambda: MappingProxyType({}))
     tunnel: tuple[TunnelFigure, ...] = ()
     companions: Mapping[str, KeptSurvey] = field(default_factory=lambda: MappingProxyType({}))
+    stations: tuple[Ledger, ...] = ()
+    combined: Combined | None = None
     inputs: Mapping[str, str] = field(default_factory=_empty)
     provenance: Mapping[str, str] = field(default_factory=_empty)
 
@@ -400,6 +443,11 @@ class Ledger:
             if row.name == name:
                 return row
         raise KeyError(f"the ledger has no row {name!r}; it has {', '.join(row.name for row in self.rows)}")
+
+    @property
+    def station(self) -> float:
+        """Distance of the plane behind the trailing edge, m; of the first of several."""
+        return float(self.plane.coords["x"])
 
     @property
     def failed(self) -> bool:

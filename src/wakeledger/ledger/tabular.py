@@ -60,6 +60,13 @@ def ledger_json(ledger: Ledger) -> dict[str, Any]:
     }
     if ledger.repeats is not None:
         document["repeats"] = repeats_json(ledger.repeats)
+    if ledger.combined is not None:
+        document["combined"] = _plain(asdict(ledger.combined), ledger.combined.reason)
+        parts = ("rows", "estimates", "budget", "checks", "notes", "tunnel")
+        planes = [(one.station, ledger_json(one)) for one in ledger.stations]
+        document["planes"] = [
+            {"station": station} | {part: plane[part] for part in parts if part in plane} for station, plane in planes
+        ]
     if ledger.tunnel:
         document["tunnel"] = [_plain(asdict(figure), "it has no such figure") for figure in ledger.tunnel]
     return document

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -15,6 +15,7 @@ from wakeledger.core.names import VARIABLES
 from wakeledger.core.points import Points
 from wakeledger.intake.probe.record import Calibration
 from wakeledger.run.config import Survey, parse_survey, read_survey
+from wakeledger.run.config.plane import Plane
 from wakeledger.run.config.tunnel import TunnelInput
 from wakeledger.run.tubes import RakePoints, assemble
 
@@ -51,6 +52,8 @@ class SurveyInput:
         Surveys that this one names: the tunnel without the model ("empty_tunnel"), the support alone ("support_tare").
     tare : TunnelInput or None
         What the survey of the support came to, N, of both halves of a half model.
+    stations : tuple of SurveyInput
+        The survey of each plane by itself, where there are several; `points` are then those of the first.
     """
 
     survey: Survey
@@ -61,6 +64,7 @@ class SurveyInput:
     read: Points | None = None
     companions: Mapping[str, SurveyInput] = field(default_factory=dict)
     tare: TunnelInput | None = None
+    stations: tuple[SurveyInput, ...] = ()
 
     @property
     def empty_tunnel(self) -> SurveyInput | None:
@@ -118,7 +122,17 @@ def load(path: str | Path) -> SurveyInput:
                 file=path,
                 remedy="reduce the archive of each run, and combine them again",
             )
-        return _kept(ledger.survey_text, ledger.raw, ledger, path)
+        kept = _kept(ledger.survey_text, ledger.raw, ledger, path)
+        planes = len(kept.survey.planes)
+        if planes == 1:
+            return kept
+        if len(ledger.stations) != planes:
+            raise DataError(
+                f"{len(ledger.stations)} planes are kept inside, the survey file kept beside them names {planes}",
+                file=path,
+                remedy="take the file from its backup, or reduce the survey again",
+            )
+        return _with_stations(kept, [station.raw for station in ledger.stations])
     return load_survey(read_survey(path))
 
 
@@ -199,23 +213,12 @@ def load_survey(survey: Survey) -> SurveyInput:
         If the survey asks for what this version does not do, or its data are wrong.
     """
     refuse_unsupported(survey)
-    from wakeledger.intake.readers import digest_of, read_points
-
-    plane = survey.plane
-    files = [survey.resolve(name) for name in plane.files]
-    points = read_points(
-        files,
-        plane.columns,
-        axes=plane.axes.matrix(),
-        std=plane.std,
-        samples=plane.samples,
-        coordinates=2 if survey.section is None else 1,
-        station=plane.station,
-        trailing_edge_x=plane.trailing_edge_x,
-        time=plane.time,
-    )
     inputs = {survey.path.name: survey.sha256}
-    inputs |= {name: digest_of(file) for name, file in zip(plane.files, files, strict=True)}
+    planes = []
+    for plane in survey.planes:
+        points, digests = _read_plane(survey, plane)
+        planes.append(points)
+        inputs |= digests
     calibrations = {}
     for name in _calibrations_named(survey):
         from wakeledger.run.calibrate import load_calibration
@@ -229,7 +232,35 @@ def load_survey(survey: Survey) -> SurveyInput:
         check_companion(companion, name)
         companions[name] = load_survey(companion)
         inputs |= {own: digest for own, digest in companions[name].inputs.items() if own not in inputs}
-    return _assembled(SurveyInput(survey, points, inputs, calibrations, companions=companions))
+    found = _assembled(SurveyInput(survey, planes[0], inputs, calibrations, companions=companions))
+    return found if len(planes) == 1 else _with_stations(found, planes)
+
+
+def _read_plane(survey: Survey, plane: Plane) -> tuple[Points, dict[str, str]]:
+    """The points of one plane, and the SHA-256 of its files by name."""
+    from wakeledger.intake.readers import digest_of, read_points
+
+    files = [survey.resolve(name) for name in plane.files]
+    points = read_points(
+        files,
+        plane.columns,
+        axes=plane.axes.matrix(),
+        std=plane.std,
+        samples=plane.samples,
+        coordinates=2 if survey.section is None else 1,
+        station=plane.station,
+        trailing_edge_x=plane.trailing_edge_x,
+        time=plane.time,
+    )
+    return points, {name: digest_of(file) for name, file in zip(plane.files, files, strict=True)}
+
+
+def _with_stations(survey: SurveyInput, planes: Sequence[Points]) -> SurveyInput:
+    """A survey of several planes with that of each plane by itself."""
+    stations = tuple(
+        replace(survey, survey=survey.survey.of_plane(index), points=points) for index, points in enumerate(planes)
+    )
+    return replace(survey, stations=stations)
 
 
 def companion_files(survey: Survey) -> dict[str, Path]:

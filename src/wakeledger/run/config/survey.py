@@ -86,6 +86,10 @@ class Survey(Table):
         """Whether the points were taken by tubes that have to be put together first."""
         return self.plane.primary == "hole_pressures" and is_rake(self.probe)
 
+    def of_plane(self, index: int) -> Survey:
+        """The same survey with one of its planes only, held against nothing."""
+        return self.model_copy(update={"planes": (self.planes[index],), "compare": ()})
+
     @property
     def path(self) -> Path:
         """The survey file."""
@@ -179,7 +183,16 @@ class Survey(Table):
             if present:
                 found.append(f"{place}: {what}")
 
-        add(len(self.planes) > 1, "[[plane]]", "several planes are not combined yet; keep one [plane] per survey file")
+        add(
+            len(self.planes) > 1 and self.section is not None,
+            "[[plane]]",
+            "line traverses at several stations are not combined; keep one [plane] per survey file",
+        )
+        add(
+            len(self.planes) > 1 and any(plane.primary == "hole_pressures" for plane in self.planes),
+            "[[plane]]",
+            "raw traverses at several stations are not combined; reduce each by itself",
+        )
         for plane in self.planes:
             holes = sorted(name for name in plane.columns if re.fullmatch(r"p\d", name))
             raw = plane.primary == "hole_pressures"
