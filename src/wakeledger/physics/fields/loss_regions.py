@@ -27,6 +27,12 @@ _FLANK_WIDTH = float(np.sqrt(np.log(1 / _FLANK)))
 _LEAST_PEAK = 0.002
 #: A profile wider than this part of the line it stands on is no narrow peak.
 _WIDEST = 0.25
+#: A profile ends at its base, where the loss no longer falls by e within this part of the width s; and at the latest
+#: this many reaches from the peak.
+_KNEE = 0.75
+_FARTHEST = 2.5
+#: Smoothing of a line on which its slope is taken, cells.
+_SMOOTHING = 1.5
 #: Peaks looked for on one line.
 _MOST_PEAKS = 6
 #: Flanks that differ by more than this factor are those of a layer with an edge, as a shock's alone, and of no wake.
@@ -40,6 +46,7 @@ def viscous_region(
     turbulent_viscosity: Array | None = None,
     level: float = 0.0,
     reach: float = PROFILE_REACH,
+    to_base: bool = True,
 ) -> Mask:
     """Region of the viscous wake.
 
@@ -54,7 +61,9 @@ def viscous_region(
     level : float
         Loss below which nothing counts, in the entropy's unit.
     reach : float
-        Half width of the region in widths of the entropy's profile; without turbulent viscosity.
+        Least half width of the region in widths of the entropy's profile; without turbulent viscosity.
+    to_base : bool
+        Whether a profile with longer tails is followed down to its base, where the loss stops falling steeply.
 
     Returns
     -------
@@ -64,8 +73,8 @@ def viscous_region(
     -----
     The turbulent viscosity's level is `VISCOSITY_SHARE` of its largest value above its median. The entropy's profile is
     read on each line of constant y: from the peak to where it falls to 60 %, on either side, which a loss lying under
-    one flank hardly moves. A profile broader than a quarter of the line, or with one flank three times as long as the
-    other, is no viscous wake.
+    one flank hardly moves, and from there outward to its base. A profile broader than a quarter of the line, or with
+    one flank three times as long as the other, is no viscous wake.
     """
     if turbulent_viscosity is not None:
         outer = float(np.median(turbulent_viscosity))
@@ -75,11 +84,11 @@ def viscous_region(
     mask = np.zeros(grid.shape, dtype=bool)
     least = max(level, _LEAST_PEAK * float(entropy.max()), 0.0)
     for column in np.flatnonzero(entropy.max(axis=0) > least):
-        mask[:, column] = _profiles(entropy[:, column], least, reach)
+        mask[:, column] = _profiles(entropy[:, column], least, reach, level if to_base else None)
     return mask
 
 
-def _profiles(line: Array, least: float, reach: float) -> Mask:
+def _profiles(line: Array, least: float, reach: float, level: float | None) -> Mask:
     """Where the narrow peaks of one line stand, shape (nz,)."""
     mask = np.zeros(line.size, dtype=bool)
     seen = np.zeros(line.size, dtype=bool)
@@ -92,14 +101,29 @@ def _profiles(line: Array, least: float, reach: float) -> Mask:
         below, above = _flank(whole[peak::-1]), _flank(whole[peak:])
         narrow = below + above < _WIDEST * line.size and max(below, above) <= _UNLIKE * max(min(below, above), 1.0)
         if narrow:
-            first = int(np.floor(peak - reach * below / _FLANK_WIDTH))
-            last = int(np.ceil(peak + reach * above / _FLANK_WIDTH))
+            down, up = below / _FLANK_WIDTH, above / _FLANK_WIDTH
+            first, last = int(np.floor(peak - reach * down)), int(np.ceil(peak + reach * up))
+            if level is not None:
+                smooth = ndimage.gaussian_filter1d(line, _SMOOTHING, mode="nearest")
+                first = peak - _base(smooth[peak::-1], peak - first, down, level, reach)
+                last = peak + _base(smooth[peak:], last - peak, up, level, reach)
             mask[max(first, 0) : last + 1] = True
             seen |= mask
         else:
             labels, _ = ndimage.label((line > _FLANK * line[peak]) & ~seen)
             seen |= labels == labels[peak]
     return mask
+
+
+def _base(line: Array, start: int, width: float, level: float, reach: float) -> int:
+    """Distance in cells from a peak to the base of its profile, from a start outward."""
+    at = start
+    while at + 1 < min(line.size, _FARTHEST * reach * width):
+        # Still the profile's own tail where the loss falls by e within a part of its width.
+        if line[at] < 0.5 * level or line[at + 1] > line[at] * np.exp(-1 / (_KNEE * width)):
+            break
+        at += 1
+    return at
 
 
 def _flank(line: Array) -> float:

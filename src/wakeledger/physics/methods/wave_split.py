@@ -86,6 +86,10 @@ class WaveSplit:
         Irreversible drag of slipstreams and heated flow, negative for thrust.
     continued_drag : float
         Part of the wave drag that was continued under the viscous wake.
+    tail_drag : float
+        What the wave drag would have more if the steep tails of the viscous profile were a shock's. A shock whose loss
+        falls by e within three quarters of the wake's width, so one no higher than about four widths, looks like them
+        and is counted as viscous; the turbulent viscosity tells the two apart.
     invalid_area : float
         Area of the regions where the defect has no real value, m².
     regions : LossRegions
@@ -102,6 +106,7 @@ class WaveSplit:
     numerical_drag: float
     energised_drag: float
     continued_drag: float
+    tail_drag: float
     invalid_area: float
     regions: LossRegions
     base_loss: Array
@@ -155,8 +160,9 @@ def wave_split(
     in the cube root of the loss, which is as M² − 1 ahead of a weak shock, by first and second degree, or in the loss
     itself by second; both sides joined by a step at the peak or by a straight ramp across the region. The uncertainty
     combines half the range of the central 68 % of the choices, the scatter of the points about each line's fit, the
-    shock below the level that may hide under a wake beside which none was seen, and the border where the shock's loss
-    fades out.
+    shock below the level that may hide under a wake beside which none was seen, the border where the shock's loss
+    fades out, and the tails of the viscous profile, which a shock no higher than a few widths of the wake would look
+    like.
     """
     if not reference.compressible:
         raise InputError("wave drag needs a compressible stream", remedy="set compressible = true in [reference]")
@@ -170,13 +176,14 @@ def wave_split(
     slip = np.zeros(grid.shape, bool) if energised is None else energised
     allowed = ~slip if shock is None else shock & ~slip
 
-    def viscous_with(factor: float) -> Mask:
+    def viscous_with(factor: float, *, to_base: bool = True) -> Mask:
         if viscous is not None:
             region = _stretched(viscous, factor)
         elif turbulent_viscosity is not None:
             region = _stretched(viscous_region(loss, grid, turbulent_viscosity=turbulent_viscosity), factor)
         else:
-            region = viscous_region(np.where(slip, 0.0, loss), grid, level=level, reach=PROFILE_REACH * factor)
+            apart = np.where(slip, 0.0, loss)
+            region = viscous_region(apart, grid, level=level, reach=PROFILE_REACH * factor, to_base=to_base)
         return region & ~slip
 
     def drag_of(base: Array) -> float:
@@ -204,7 +211,11 @@ def wave_split(
     low, high = np.quantile(drags, _CENTRAL)
     # The border where the loss fades out: what lies between once and twice the level, all of it or nothing.
     fading = drag_of(np.where(wave & ~_wave_region(loss, inner, allowed, 2 * level)[1], loss, 0.0)) / np.sqrt(12)
-    uncertainty = float(np.linalg.norm([(high - low) / 2, np.median(scatters), fading]))
+    # The tails of the viscous profile beyond its least width, if they were a shock's close above it.
+    bare, tails = _wave_region(loss, viscous_with(1.0, to_base=False), allowed, level)
+    base, _ = next(_continued(loss, bare, tails, level=level, quantity="loss", degree=1))
+    tail_drag = max(drag_of(np.where(bare, base, np.where(tails, loss, 0.0))) - value, 0.0)
+    uncertainty = float(np.linalg.norm([(high - low) / 2, np.median(scatters), fading, tail_drag / np.sqrt(3)]))
     total = float(grid.integrate(np.where(both, irreversible, 0.0)))
     return WaveSplit(
         viscous_drag=total - value,
@@ -213,6 +224,7 @@ def wave_split(
         numerical_drag=float(grid.integrate(np.where(both | slip, 0.0, irreversible))),
         energised_drag=float(grid.integrate(np.where(slip, irreversible, 0.0))),
         continued_drag=value - drag_of(np.where(wave, base_loss, 0.0)),
+        tail_drag=tail_drag,
         invalid_area=float(np.count_nonzero((both | slip) & ~found.valid) * grid.cell_area),
         regions=LossRegions(inner, wave, slip),
         base_loss=base_loss,
