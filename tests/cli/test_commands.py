@@ -204,6 +204,7 @@ def test_help_lists_the_commands_that_exist(cli):
         "calibrate",
         "increment",
         "inspect",
+        "plan",
         "reduce",
         "repeats",
         "show",
