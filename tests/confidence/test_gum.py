@@ -5,7 +5,7 @@ import math
 import numpy as np
 import pytest
 
-from wakeledger.confidence.linear import coverage_factor, propagate, sensitivities
+from wakeledger.confidence.linear import coverage_factor, propagate, second_order_variance, sensitivities
 from wakeledger.core.errors import InputError
 
 
@@ -35,6 +35,32 @@ def test_h1_gauge_block():
     k = coverage_factor(0.99, degrees_of_freedom=16)
     assert k == pytest.approx(2.92, abs=0.005)
     assert k * 32 == pytest.approx(93, abs=0.5)
+
+
+def test_h1_with_second_order_terms():
+    # GUM H.1.7: the products of expansion and temperature raise 32 nm to 34 nm (seen as restated publicly).
+    def length(x):
+        standard, difference, d1, d2, expansion, mean_temperature, expansion_difference, temperature_difference = x
+        warming = expansion_difference * mean_temperature + expansion * temperature_difference
+        return standard * (1 - warming) + difference + d1 + d2 - 50_000_000.0
+
+    half = 1 / math.sqrt(3)
+    # Temperature: mean u 0.2, cyclic 0.5 arcsine, together 0.41.
+    values = [50_000_623.0, 215.0, 0.0, 0.0, 11.5e-6, -0.1, 0.0, 0.0]
+    u = [25.0, 5.8, 3.9, 6.7, 2e-6 * half, math.hypot(0.2, 0.5 / math.sqrt(2)), 1e-6 * half, 0.05 * half]
+    first = propagate(sensitivities(length, values, u), u).standard_uncertainty[0]
+    second = second_order_variance(length, values, u)[0]
+    assert first == pytest.approx(31.66, abs=0.015)
+    assert math.sqrt(first**2 + second) == pytest.approx(34.0, abs=0.5)
+    # The products of expansion difference and temperature, expansion and temperature difference: 11.7 and 1.7 nm.
+    expected = (5e7 * u[5] * u[6]) ** 2 + (5e7 * u[4] * u[7]) ** 2
+    assert second == pytest.approx(expected, rel=1e-4)
+
+
+def test_second_order_of_a_cubic():
+    # y = x^3 at 1 has the terms (36/2 + 3 6) u^4; at 0 they vanish, though a normal cube scatters by 15 u^6.
+    assert second_order_variance(lambda x: x[0] ** 3, [1.0], [0.1])[0] == pytest.approx(36e-4, rel=0.02)
+    assert second_order_variance(lambda x: x[0] ** 3, [0.0], [0.1])[0] == pytest.approx(0.0, abs=1e-4)
 
 
 H2 = np.array(

@@ -66,10 +66,28 @@ class LinearPropagation:
                 remedy="the Welch-Satterthwaite formula needs independent ones; "
                 "take the coverage interval from a Monte Carlo run",
             )
-        with np.errstate(divide="ignore"):
-            loss = (self.components**4 / self.degrees_of_freedom).sum(axis=1)
-            nu: Array = np.where(loss > 0, self.standard_uncertainty**4 / np.where(loss > 0, loss, 1.0), math.inf)
-        return nu
+        return welch_satterthwaite(self.components**2, self.degrees_of_freedom)
+
+
+def welch_satterthwaite(variances: ArrayLike, degrees_of_freedom: ArrayLike) -> Array:
+    """Effective degrees of freedom ν_eff = (Σ u_i²)²/Σ(u_i⁴/ν_i) of a sum of independent contributions (GUM G.2b).
+
+    Parameters
+    ----------
+    variances : array_like, shape (..., n)
+        u_i², the contributions to the variance of each output.
+    degrees_of_freedom : array_like, shape (n,)
+        Of each contribution; infinite where its size is taken as exact.
+
+    Returns
+    -------
+    ndarray, shape (...)
+        Infinite where every contribution is taken as exact; NaN where one is unknown.
+    """
+    squares, freedom = np.asarray(variances, dtype=float), np.asarray(degrees_of_freedom, dtype=float)
+    total, loss = squares.sum(axis=-1), (squares**2 / freedom).sum(axis=-1)
+    nu: Array = np.where(loss > 0, total**2 / np.where(loss > 0, loss, 1.0), np.where(np.isnan(loss), np.nan, math.inf))
+    return nu
 
 
 def propagate(
@@ -154,6 +172,47 @@ def sensitivities(function: Callable[[Array], ArrayLike], values: ArrayLike, unc
         width = 2 * step.sum()
         columns.append((rise - fall) / width if width else np.zeros_like(rise))
     return np.stack(columns, axis=1)
+
+
+def second_order_variance(function: Callable[[Array], ArrayLike], values: ArrayLike, uncertainties: ArrayLike) -> Array:
+    """Second-order terms of the variance for independent normal inputs (GUM, 5.1.2, note).
+
+    Parameters
+    ----------
+    function : callable
+        Takes the inputs, shape (n,), gives the outputs, shape (m,) or one number.
+    values, uncertainties : array_like, shape (n,)
+        Where, and the standard uncertainties, which are the steps.
+
+    Returns
+    -------
+    ndarray, shape (m,)
+        Σ_ij (½ f_ij² + f_i f_ijj) u_i² u_j², to be added to the first-order variance.
+
+    Notes
+    -----
+    Exact for polynomials of second degree. Inputs with no uncertainty take no part.
+    """
+    x, u = np.asarray(values, dtype=float), np.asarray(uncertainties, dtype=float)
+    steps = [step for step in np.diag(u) if step.any()]
+
+    def at(*moves: Array) -> Array:
+        return np.atleast_1d(np.asarray(function(x + sum(moves, np.zeros(x.size))), dtype=float))
+
+    still = at()
+    total = np.zeros_like(still)
+    for first in steps:
+        slope = (at(first) - at(-first)) / 2
+        for other in steps:
+            if first is other:
+                mixed = at(first) + at(-first) - 2 * still
+                bent = (at(2 * first) - at(-2 * first)) / 2 - 2 * slope
+            else:
+                corners = [at(a * first, b * other) for a, b in ((1, 1), (1, -1), (-1, 1), (-1, -1))]
+                mixed = (corners[0] - corners[1] - corners[2] + corners[3]) / 4
+                bent = (corners[0] + corners[1] - corners[2] - corners[3]) / 2 - 2 * slope
+            total = total + 0.5 * mixed**2 + slope * bent
+    return total
 
 
 def coverage_factor(probability: float = 0.95, *, degrees_of_freedom: float = math.inf) -> float:

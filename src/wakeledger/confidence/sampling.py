@@ -217,6 +217,26 @@ class SourceErrors:
         """
         return np.concatenate(self._latents(start, stop), axis=1) / self.source.spread
 
+    def expanded(self, variables: Array) -> dict[str, Array]:
+        """Errors that given independent variables of unit variance make.
+
+        Parameters
+        ----------
+        variables : ndarray, shape (latents,)
+            In the order of `deviation`.
+
+        Returns
+        -------
+        dict of str to ndarray, shape (n,), or () for single numbers
+            Additive errors in SI by input.
+        """
+        errors, start = {}, 0
+        for one in self._inputs:
+            part = self.source.spread * variables[None, start : start + one.latents]
+            errors[one.name] = one.errors(part)[0]
+            start += one.latents
+        return errors
+
     def effects(self, slopes: Mapping[str, Array]) -> dict[str, Array]:
         """What one standard deviation of each independent variable does to outputs, to first order.
 

@@ -14,6 +14,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, fields, replace
+from types import MappingProxyType
 
 import numpy as np
 
@@ -50,6 +51,7 @@ from wakeledger.run.outputs import (
 from wakeledger.run.reduction import Reduction
 
 FREE_AIR = FreeAir()
+_NO_ERRORS: Mapping[str, Array] = MappingProxyType({})
 #: Wake-blockage velocity, m/s, among the figures that are differentiated; the outputs hold its share of the speed.
 _BLOCKAGE = "wake blockage velocity"
 #: Step of a point's own derivative, as a share of the range of its input: errors of 1e-10 from curvature and rounding.
@@ -81,7 +83,14 @@ class PointGradient:
     empty: PointGradient | None = None
 
 
-def point_gradient(chain: Chain, nominal: Reduction, *, estimates: bool = True, workers: int = 2) -> PointGradient:
+def point_gradient(
+    chain: Chain,
+    nominal: Reduction,
+    *,
+    estimates: bool = True,
+    errors: Mapping[str, Array] = _NO_ERRORS,
+    workers: int = 2,
+) -> PointGradient:
     """Derivatives of the outputs by the flow state at every point.
 
     Parameters
@@ -92,6 +101,8 @@ def point_gradient(chain: Chain, nominal: Reduction, *, estimates: bool = True, 
         Its reduction.
     estimates : bool
         Whether the cross-checks are among the outputs; they are NaN otherwise.
+    errors : mapping of str to ndarray
+        Errors under which that reduction was made.
     workers : int
         Number of threads.
 
@@ -101,11 +112,11 @@ def point_gradient(chain: Chain, nominal: Reduction, *, estimates: bool = True, 
     """
     figures = _figures(chain, nominal, estimates=estimates)
     names = tuple(figures)
-    before = chain.flow(nominal.reference)
+    before = chain.flow(nominal.reference, errors)
     count = -(-len(names) // workers)
     parts = [[figures[name] for name in names[k : k + count]] for k in range(0, len(names), count)]
     with ThreadPoolExecutor(workers) as pool:
-        found = list(pool.map(lambda part: _backwards(part, chain, nominal, before), parts))
+        found = list(pool.map(lambda part: _backwards(part, chain, nominal, before, errors), parts))
     outputs = _outputs(chain, nominal, names)
     empty = None
     if chain.empty is not None:
@@ -123,7 +134,7 @@ def _joined(parts: Sequence[tuple[int, Gradient]]) -> Gradient:
 
 
 def _backwards(
-    figures: Sequence[FlowGradient], chain: Chain, nominal: Reduction, before: Flow
+    figures: Sequence[FlowGradient], chain: Chain, nominal: Reduction, before: Flow, errors: Mapping[str, Array]
 ) -> tuple[tuple[int, Gradient], tuple[int, Gradient]]:
     """Derivatives of some figures by the state of the points, and by that of the empty tunnel's points."""
     reference, mask = nominal.reference, nominal.region.mask
@@ -133,17 +144,20 @@ def _backwards(
     by_empty: Gradient = {}
     if chain.empty is not None:
         gradient, by_stream = before_empty_tunnel(gradient, chain, reference, before)
-        by_empty = _empty_gradient(chain.empty, by_stream, nominal)
-        before = replace(chain, empty=None).flow(reference)
+        by_empty = _empty_gradient(chain.empty, by_stream, nominal, errors)
+        before = replace(chain, empty=None).flow(reference, errors)
     gradient = before_relations(gradient, chain, reference, before)
     return (len(figures), _to_points(gradient, chain)), (len(figures), by_empty)
 
 
-def _empty_gradient(empty: EmptyTunnel, by_stream: Gradient, nominal: Reduction) -> Gradient:
+def _empty_gradient(
+    empty: EmptyTunnel, by_stream: Gradient, nominal: Reduction, errors: Mapping[str, Array]
+) -> Gradient:
     """Derivatives by the points of the empty tunnel, through its scaling and its own relations."""
     own = empty.chain
-    stream = own.reference()
-    flow = own.flow(stream)
+    theirs = {name.removeprefix(PREFIX): array for name, array in errors.items() if name.startswith(PREFIX)}
+    stream = own.reference(theirs)
+    flow = own.flow(stream, theirs)
     speed = nominal.reference.speed / stream.speed
     pressure = nominal.reference.dynamic_pressure / stream.dynamic_pressure
     grid = nominal.flow.grid
@@ -356,7 +370,12 @@ def _outputs(chain: Chain, nominal: Reduction, names: tuple[str, ...]) -> Array:
 
 
 def input_gradients(
-    chain: Chain, gradient: PointGradient, layouts: Mapping[str, InputLayout], *, workers: int = 2
+    chain: Chain,
+    gradient: PointGradient,
+    layouts: Mapping[str, InputLayout],
+    *,
+    errors: Mapping[str, Array] = _NO_ERRORS,
+    workers: int = 2,
 ) -> tuple[dict[str, Array], tuple[str, ...]]:
     """Derivatives by the inputs that act on the points.
 
@@ -368,6 +387,8 @@ def input_gradients(
         From `point_gradient`.
     layouts : mapping of str to InputLayout
         The inputs wanted.
+    errors : mapping of str to ndarray
+        Errors under which the derivatives are wanted.
     workers : int
         Number of threads.
 
@@ -389,18 +410,23 @@ def input_gradients(
         if not through or own == correction_input("displacement"):
             left.append(name)
             continue
-        tasks[name] = (part, own, at, layout)
+        there = errors
+        if part is not chain:
+            there = {key.removeprefix(PREFIX): array for key, array in errors.items() if key.startswith(PREFIX)}
+        tasks[name] = (part, own, at, layout, there)
     with ThreadPoolExecutor(workers) as pool:
         found = pool.map(lambda task: _by_input(*task), tasks.values())
         return dict(zip(tasks, found, strict=True)), tuple(left)
 
 
-def _by_input(chain: Chain, name: str, gradient: PointGradient, layout: InputLayout) -> Array:
+def _by_input(
+    chain: Chain, name: str, gradient: PointGradient, layout: InputLayout, errors: Mapping[str, Array]
+) -> Array:
     """Derivatives of the figures by one input, shape (k, n), or (k,) for a single number."""
-    reference = chain.reference()
+    reference = chain.reference(errors)
     step = _step(name, layout)
-    size: Array | float = step if layout.is_scalar else np.full(layout.size, step)
-    up, down = (chain.state(reference, {name: np.asarray(sign * size)}) for sign in (1.0, -1.0))
+    here = np.asarray(errors.get(name, 0.0 if layout.is_scalar else np.zeros(layout.size)))
+    up, down = (chain.state(reference, {**errors, name: here + sign * step}) for sign in (1.0, -1.0))
     result: Array | None = None
     for field, by in gradient.by.items():
         above, below = _state_field(up, field), _state_field(down, field)

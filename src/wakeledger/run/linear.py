@@ -1,0 +1,181 @@
+"""The linear budget of a survey: derivatives of the chain, propagated in closed form and held against Monte Carlo."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from wakeledger.confidence.components import MEASURED, Component
+from wakeledger.confidence.linear_budget import (
+    NEGLIGIBLE,
+    LinearBudget,
+    SecondOrder,
+    Slopes,
+    linear_budget,
+    probed_curvature,
+)
+from wakeledger.confidence.sampling import ErrorSampler, SourceErrors
+from wakeledger.confidence.sources import InputLayout, Source
+from wakeledger.core.grid import Array
+from wakeledger.run.adjoint import input_gradients, point_gradient, scalar_gradients
+from wakeledger.run.chain import Chain
+from wakeledger.run.outputs import OUTPUTS
+from wakeledger.run.reduction import Reduction, Variation
+
+#: Share of one draw of all errors at which the derivatives are tried on the chain.
+_TRIAL = 0.02
+#: By how much the change that they predict may miss, as a share of the same draw's standard deviation.
+_TRIAL_MISS = 0.02
+#: Inputs of single numbers that are differenced by whole passes move by their standard uncertainty.
+_LEAST_STEP = 1e-12
+
+
+def linear_slopes(
+    chain: Chain,
+    nominal: Reduction,
+    sources: Sequence[Source],
+    layouts: Mapping[str, InputLayout],
+    *,
+    estimates: bool = True,
+) -> Slopes:
+    """Derivatives of the chain's outputs by every input that a source acts on.
+
+    Parameters
+    ----------
+    chain : Chain
+        The survey, with what was frozen on the nominal plane.
+    nominal : Reduction
+        Its reduction.
+    sources : sequence of Source
+        The sources; they tell how far single numbers are moved.
+    layouts : mapping of str to InputLayout
+        The inputs by name.
+    estimates : bool
+        Whether the cross-checks are among the outputs; they are unknown otherwise.
+
+    Returns
+    -------
+    Slopes
+    """
+    gradient = point_gradient(chain, nominal, estimates=estimates)
+    figures, left = input_gradients(chain, gradient, layouts)
+    steps = {name: _step(name, sources, layouts[name]) for name in left}
+    direct, curvatures = scalar_gradients(chain, left, steps, layouts)
+    return Slopes(gradient.outputs, figures, direct, curvatures)
+
+
+def _step(name: str, sources: Sequence[Source], layout: InputLayout) -> float:
+    sizes = [
+        source.standard_uncertainty * (abs(float(np.max(layout.nominal))) if source.relative else 1.0)
+        for source in sources
+        if name in source.applies_to
+    ]
+    return max(math.sqrt(sum(size**2 for size in sizes)), _LEAST_STEP)
+
+
+def tried(chain: Chain, slopes: Slopes, sources: Sequence[Source], layouts: Mapping[str, InputLayout]) -> Slopes:
+    """Derivatives tried on the chain itself: an output whose change they do not predict is left unknown.
+
+    Parameters
+    ----------
+    chain : Chain
+        The survey.
+    slopes : Slopes
+        Its derivatives.
+    sources, layouts
+        What errs.
+
+    Returns
+    -------
+    Slopes
+        NaN for outputs that fail, so that no figure rests on a derivative that is not the chain's own.
+    """
+    sampler = ErrorSampler(sources, layouts, seed=0)
+    errors = {name: _TRIAL * array for name, array in sampler.draw(0, 1).items()}
+    both = {name: np.concatenate([array, -array]) for name, array in errors.items()}
+    values = chain.vectors(both)
+    found = (values[0] - values[1]) / 2
+    expected = slopes.change(errors)[0]
+    size = _TRIAL * linear_budget(slopes, sources, layouts, names=OUTPUTS).standard_uncertainty
+    rounding = 1e-9 * np.abs(values).max(axis=0)
+    with np.errstate(invalid="ignore"):
+        wrong = np.abs(found - expected) > _TRIAL_MISS * np.maximum(size, np.abs(expected)) + rounding
+    outputs = slopes.outputs.copy()
+    outputs[wrong] = np.nan
+    return replace(slopes, outputs=outputs)
+
+
+def survey_budget(
+    chain: Chain,
+    nominal: Reduction,
+    slopes: Slopes,
+    sources: Sequence[Source],
+    layouts: Mapping[str, InputLayout],
+    *,
+    components: Sequence[Component] = (),
+) -> LinearBudget:
+    """Linear budget of a survey, with a second order where the first does not tell all.
+
+    Parameters
+    ----------
+    chain, nominal
+        The survey and its reduction.
+    slopes : Slopes
+        From `linear_slopes`.
+    sources, layouts
+        What errs.
+    components : sequence of Component
+        Effects of single errors, as far as they are known: those of sources with few errors, both orders.
+
+    Returns
+    -------
+    LinearBudget
+
+    Notes
+    -----
+    A quadratic form that noise can only raise has a second-order variance of at most twice the square of its noise
+    bias, because the squares of the eigenvalues of such a form add to no more than the square of their sum. Where that
+    is below 1 % of the first order, nothing is worked out. The value of a row has its noise bias subtracted already;
+    the second-order variance is the scatter about that mean and does not hold it.
+    """
+    second = _from_components(components)
+    first = linear_budget(slopes, sources, layouts, names=OUTPUTS, second=second)
+    variance = np.nan_to_num(np.diag(first.total))
+    bias = np.array([chain.frozen.bias.get(name, 0.0) for name in OUTPUTS])
+    if not np.any(2 * bias**2 > NEGLIGIBLE * variance):
+        return first
+    for source in sources:
+        noisy = source.effect != "systematic" and SourceErrors(source, layouts, seed=0).latents > 1
+        if noisy and source.name not in second and all(name in slopes.figures for name in source.applies_to):
+            second[source.name] = probed_curvature(_Displaced(chain, nominal, slopes, layouts), source, layouts)
+    return linear_budget(slopes, sources, layouts, names=OUTPUTS, second=second)
+
+
+def _from_components(components: Sequence[Component]) -> dict[str, SecondOrder]:
+    """Second order of the sources whose errors were shifted one by one."""
+    found: dict[str, SecondOrder] = {}
+    for one in components:
+        if one.kind == MEASURED:
+            before = found.get(one.source, SecondOrder(np.zeros(one.curved.shape), np.zeros(one.curved.shape)))
+            added = one.variance - one.linear**2
+            found[one.source] = SecondOrder(before.variance + added, before.shift + one.curved)
+    return found
+
+
+class _Displaced:
+    """Derivatives of the chain at displaced inputs."""
+
+    def __init__(self, chain: Chain, nominal: Reduction, slopes: Slopes, layouts: Mapping[str, InputLayout]) -> None:
+        self.chain, self.layouts, self.known = chain, layouts, slopes
+        self.vary = Variation(mask=nominal.region.mask)
+
+    def __call__(self, errors: Mapping[str, Array]) -> Slopes:
+        there = self.chain.reduce(errors, vary=self.vary)
+        gradient = point_gradient(self.chain, there, errors=errors)
+        own = {name: self.layouts[name] for name in errors}
+        figures, _ = input_gradients(self.chain, gradient, own, errors=errors)
+        outputs = np.where(np.isnan(self.known.outputs), np.nan, gradient.outputs)
+        return Slopes(outputs, figures)
