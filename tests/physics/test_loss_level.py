@@ -105,15 +105,12 @@ def test_a_broad_loss_beside_the_wake_does_not_move_the_level():
     _, z = GRID.mesh()
     broad = 0.5 * np.exp(-((z / 0.3) ** 2))
     mask = np.abs(z) < 0.12
-    near, covered = [], []
-    for one in 0.02 * wander(rng, 0.15, 100):
-        everywhere = loss_level(broad + one, GRID, mask=mask)
-        far = loss_level(broad + one, GRID, mask=mask, outer=beyond(mask, GRID, 0.52))
-        near.append(float(everywhere.zero))
-        inside = np.where(mask, one - far.zero, 0.0).sum() * GRID.cell_area
-        covered.append(abs(inside) <= 2 * far.integral_uncertainty)
-    assert np.mean(near) > 0.05
-    assert np.mean(covered) >= 0.9
+    still = 0.02 * wander(rng, 0.15, 100)
+    everywhere = loss_level(broad + still, GRID, mask=mask)
+    far = loss_level(broad + still, GRID, mask=mask, outer=beyond(mask, GRID, 0.52))
+    assert everywhere.zero.mean() > 0.05
+    inside = GRID.cell_area * np.where(mask, still - far.zero[:, None, None], 0.0).sum(axis=(1, 2))
+    assert np.mean(np.abs(inside) <= 2 * far.integral_uncertainty) >= 0.9
     with pytest.raises(ValueError, match="outside the region"):
         loss_level(broad, GRID, mask=mask, outer=np.ones(GRID.shape, bool))
     assert beyond(np.zeros(GRID.shape, bool), GRID, 1.0).all()
