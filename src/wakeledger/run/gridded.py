@@ -164,7 +164,8 @@ def regrid_of(survey: SurveyInput, state: State) -> Regrid:
     boundary, points = survey.survey.boundary, survey.points
     cut = None if boundary is None else boundary.inboard_cut
     reflection = None if boundary is None else boundary.reflection
-    return Regrid(points.y, points.z, usable_points(state), points.row, reflection, cut or 0.0)
+    mesh = points.triangles is not None or points.areas is not None
+    return Regrid(points.y, points.z, usable_points(state), points.row, reflection, cut or 0.0, mesh)
 
 
 def empty_tunnel(survey: SurveyInput, settings: Settings, *, cut: float, names: tuple[str, str]) -> EmptyTunnel:
@@ -287,6 +288,7 @@ class Regrid:
     row: np.ndarray[tuple[int], np.dtype[np.int64]] | None
     reflection: Reflection | None = None
     cut: float = 0.0
+    mesh: bool = False
 
     def __call__(
         self,
@@ -308,7 +310,9 @@ class Regrid:
             usable: np.ndarray[tuple[int], np.dtype[np.bool_]],
             row: np.ndarray[tuple[int], np.dtype[np.int64]] | None,
         ) -> Gridding:
-            return make_gridding(y, z, usable, row=row, spacing=spacing, degree=degree, max_cells=most_cells)
+            return make_gridding(
+                y, z, usable, row=row, spacing=spacing, degree=degree, max_cells=most_cells, mesh=self.mesh
+            )
 
         if self.reflection is None:
             return covered_window(make(self.y, self.z, chosen, self.row))

@@ -28,6 +28,7 @@ def make_gridding(
     spacing: float | tuple[float, float] | None = None,
     degree: int = 3,
     max_cells: int = 400_000,
+    mesh: bool = False,
 ) -> Gridding:
     """Work out how values at points become fields on a uniform grid.
 
@@ -46,6 +47,8 @@ def make_gridding(
         Degree of the splines.
     max_cells : int, optional
         Most cells of a resampled grid.
+    mesh : bool, optional
+        Whether the points are those of a mesh that was made for the flow, as stretched as it.
 
     Returns
     -------
@@ -75,7 +78,7 @@ def make_gridding(
         raise ValueError(f"row must have one entry for each of the {y.size} points, {rows.shape} was given")
     if lattice is not None:
         return make_tensor(lattice, usable, rows, spacing=steps, degree=degree, max_cells=max_cells)
-    return make_scattered(y, z, usable, rows, spacing=steps, max_cells=max_cells)
+    return make_scattered(y, z, usable, rows, spacing=steps, max_cells=max_cells, mesh=mesh)
 
 
 def _refuse_degenerate(y: Array, z: Array, usable: NDArray[np.bool_]) -> None:

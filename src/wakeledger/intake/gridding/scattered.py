@@ -23,6 +23,7 @@ from wakeledger.core.flags import Flag
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.intake.gridding.fill import FAR, GapFill, make_gap_fill
 from wakeledger.intake.gridding.record import Gridding
+from wakeledger.intake.gridding.stretching import STEP, stretch_levels
 
 _NEIGHBOURS = 30
 _POWERS = [(i, j) for i in range(4) for j in range(4 - i)]
@@ -30,6 +31,8 @@ _LINEAR_POWERS = [(0, 0), (1, 0), (0, 1)]
 #: Weights that miss a polynomial by more than this belong to neighbours that do not carry it.
 _MISSED = 1e-6
 _CHUNK = 4096
+#: Sum of the weights' magnitudes beyond which an interpolant is not trusted among stretched points; 1 is linear.
+_WILD = 2.5
 #: Points closer than this share of the typical spacing are one place.
 _SAME_PLACE = 0.02
 FEWEST_PLACES = 25
@@ -55,6 +58,7 @@ class ScatteredScheme:
     _gaps: GapFill
     _nearest_point: NDArray[np.intp]
     _places: NDArray[np.intp]
+    mesh: bool = False
 
     def fields(self, values: Array) -> Array:
         """Grid values of shape (draws, n) to (draws, nz, ny)."""
@@ -80,7 +84,7 @@ class ScatteredScheme:
     def decimated(self, step: int, phase: tuple[int, int]) -> Gridding:
         """The same with every `step`-th place only."""
         kept = (self._places >= 0) & (self._places % step == phase[1])
-        return make_scattered(self.y, self.z, kept, self.row_index, grid=self.grid, present=kept)
+        return make_scattered(self.y, self.z, kept, self.row_index, grid=self.grid, present=kept, mesh=self.mesh)
 
 
 def make_scattered(
@@ -93,6 +97,7 @@ def make_scattered(
     max_cells: int = 400_000,
     grid: UniformGrid | None = None,
     present: NDArray[np.bool_] | None = None,
+    mesh: bool = False,
 ) -> Gridding:
     """Grid scattered points.
 
@@ -112,6 +117,8 @@ def make_scattered(
         The grid itself, instead of spacing and max_cells.
     present : ndarray of bool, shape (n,), optional
         Points that count at all, usable or not; all by default.
+    mesh : bool
+        Whether the points are those of a mesh that was made for the flow; else that is told from how they stand.
 
     Returns
     -------
@@ -131,21 +138,42 @@ def make_scattered(
     scale, label, places = _places(y[used], z[used])
     _require_places(places.shape[0])
     scaled = places / scale
-    mesh = Delaunay(scaled)
-    spacings, reach = _spacings(mesh)
+    net = Delaunay(scaled)
+    spacings, reach = _spacings(net)
     if grid is None:
         fine = float(np.percentile(spacings, _FINE_PERCENT))
         grid = _grid(places, spacing or (fine * scale[0], fine * scale[1]), max_cells)
     zz, yy = np.meshgrid(grid.z, grid.y, indexing="ij")
     cells = np.column_stack([yy.ravel() / scale[0], zz.ravel() / scale[1]])
-    tree = cKDTree(scaled)
-    distance, nearest = tree.query(cells)
-    close = distance <= FAR * reach[nearest]
-    inside = np.flatnonzero((mesh.find_simplex(cells, tol=1e-9) >= 0) & close)
+    simplex = net.find_simplex(cells, tol=1e-9)
+    distance, nearest = cKDTree(scaled).query(cells)
+    apart = distance / reach[nearest]
+    levels = stretch_levels(scaled, _edges(net))
+    level = levels[nearest]
+    for each in np.unique(level[level != 0]):
+        # Distances, and how far is far, in units of the spacings that hold about these cells.
+        chosen = np.flatnonzero(level == each)
+        squeezed = np.array([1.0, STEP ** float(each)])
+        own_distance, own_nearest = cKDTree(scaled / squeezed).query(cells[chosen] / squeezed)
+        apart[chosen] = own_distance / _spacings(net, squeezed)[1][own_nearest]
+    inside = np.flatnonzero((simplex >= 0) & (apart <= FAR))
     if not inside.size:
         raise DataError("no cell of the grid lies among the points", remedy="give a finer spacing or more points")
     averaging = sparse.csr_array((1.0 / np.bincount(label)[label], (label, used)), shape=(places.shape[0], usable.size))
-    matrix = _interpolation(scaled, tree, cells[inside], stretch=np.array(scale) / min(scale)) @ averaging
+    # The flow is as stretched as a mesh made for it: what lies between two columns follows from both. Rows of a
+    # traverse are as dense about a round vortex as elsewhere.
+    mesh_like = mesh or bool(levels.any())
+    stretch = np.ones(2) if mesh_like else np.array(scale) / min(scale)
+    blocks, order = [], []
+    for each in np.unique(level[inside]):
+        part = np.flatnonzero(level[inside] == each)
+        squeezed = np.array([1.0, STEP ** float(each)])
+        tree = cKDTree(scaled / squeezed)
+        block = _interpolation(scaled / squeezed, tree, cells[inside[part]] / squeezed, stretch=stretch)
+        blocks.append(_tamed(block, net, cells[inside[part]], simplex[inside[part]]) if mesh_like else block)
+        order.append(part)
+    back = np.argsort(np.concatenate(order), kind="stable")
+    matrix = sparse.vstack(blocks, format="csr")[back] @ averaging
     measured = np.zeros(cells.shape[0], dtype=bool)
     measured[inside] = True
     counted = np.arange(y.size) if present is None else np.flatnonzero(present)
@@ -153,7 +181,7 @@ def make_scattered(
     nearest_point = counted[all_points.query(cells)[1]]
     flag = np.full(cells.shape[0], Flag.INTERPOLATED.value, dtype=np.int32)
     flag[~measured] |= Flag.FAR_FROM_DATA.value
-    flag[~usable[nearest_point] & (distance > reach[nearest] / 2)] |= Flag.MISSING.value
+    flag[~usable[nearest_point] & (apart > 0.5)] |= Flag.MISSING.value
     flag[np.bincount(label)[nearest] > 1] |= Flag.AVERAGED.value
     flag = flag.reshape(grid.shape)
     filled = (flag & (Flag.MISSING | Flag.FAR_FROM_DATA).value) != 0
@@ -171,6 +199,7 @@ def make_scattered(
         _gaps=make_gap_fill(measured.reshape(grid.shape), grid.y, grid.z),
         _nearest_point=nearest_point,
         _places=index,
+        mesh=mesh,
     )
     typical = float(np.median(spacings))
     return Gridding(
@@ -251,14 +280,16 @@ def _scale(places: Array) -> tuple[float, float]:
     return typical, typical * ratio
 
 
-def _spacings(mesh: Any) -> tuple[Array, Array]:
+def _spacings(mesh: Any, squeezed: Array | float = 1.0) -> tuple[Array, Array]:
     """Spacing of the places about each place, and what may count as such at the edge of a hole.
+
+    Lengths along y and z are divided by `squeezed` first.
 
     The first is the median length of the mesh edges that meet in a place; the second the lower quartile of these among
     the place and its neighbours, in which the long edges across a hole do not count.
     """
     edges = _edges(mesh)
-    length = np.linalg.norm(mesh.points[edges[:, 0]] - mesh.points[edges[:, 1]], axis=1)
+    length = np.linalg.norm((mesh.points[edges[:, 0]] - mesh.points[edges[:, 1]]) / squeezed, axis=1)
     ends = np.concatenate([edges[:, 0], edges[:, 1]])
     median = _quantile_by_group(ends, np.concatenate([length, length]), 0.5)
     own = np.arange(median.size)
@@ -285,6 +316,23 @@ def _grid(places: Array, spacing: tuple[float, float], max_cells: int) -> Unifor
     return UniformGrid(
         float(start[0]), float(start[1]), float(extent[0]) / (ny - 1), float(extent[1]) / (nz - 1), ny, nz
     )
+
+
+def _tamed(matrix: Any, mesh: Any, cells: Array, simplex: NDArray[np.intp]) -> Any:
+    """Rows whose weights swing far beyond one, replaced by linear interpolation within the triangle of the cell."""
+    wild = np.asarray(abs(matrix).sum(axis=1)).ravel() > _WILD
+    if not wild.any():
+        return matrix
+    rows = np.flatnonzero(wild)
+    transform = mesh.transform[simplex[rows]]
+    first = np.einsum("cij,cj->ci", transform[:, :2], cells[rows] - transform[:, 2])
+    weights = np.column_stack([first, 1.0 - first.sum(axis=1)])
+    # Flat triangles have no such transform, or a wild one.
+    weights = np.clip(np.where(np.isfinite(weights), weights, 1.0), 0.0, 1.0)
+    weights /= weights.sum(axis=1, keepdims=True)
+    corners = mesh.simplices[simplex[rows]]
+    linear = sparse.csr_array((weights.ravel(), (np.repeat(rows, 3), corners.ravel())), shape=matrix.shape)
+    return sparse.csr_array(sparse.diags_array((~wild).astype(float)) @ matrix + linear)
 
 
 def _interpolation(places: Array, tree: Any, cells: Array, *, stretch: Array) -> Any:
