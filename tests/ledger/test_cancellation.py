@@ -71,7 +71,7 @@ def test_random_parts_and_numerical_terms_add():
 
 def test_what_is_said_of_a_shared_source():
     a = contributions(component(3.0), component(2.0, input="plane.v"))
-    b = contributions(component(4.0, source="new name"), component(5.0, input="plane.w"))
+    b = contributions(component(4.0, source="new name"), component(5.0, source="new name", input="plane.w"))
     (said,) = subtract(a, b).cancelled
     assert (said.shared_id, said.source_a, said.source_b) == ("rig", "zero", "new name")
     # Of three errors one is in both: 4 − 3; the others stay whole.

@@ -149,11 +149,31 @@ def test_one_identity_with_two_sizes_is_refused(kit, room, tmp_path, cli):
     path = survey(kit, tmp_path, seed=4, peak=2.08, declared=sources(kit, speed="0.4 %"))
     other = tmp_path / "other.nc"
     write_archive(reduce(load(path)), other)
-    with pytest.raises(InputError, match=r"tunnel speed.*0\.005.*0\.004"):
+    with pytest.raises(InputError, match=r"tunnel speed.*reference\.speed.*0\.005.*0\.004"):
         wl.increment(room / "a.nc", other)
     status, out, err = cli("increment", room / "a.nc", other, "--out", tmp_path / "out")
     assert (status, out) == (2, "") and err.count("\n") == 1 and "two different errors" in err
     assert not (tmp_path / "out").exists()
+
+
+def test_one_instrument_may_have_several_errors(kit, room, tmp_path):
+    declared = [
+        kit.source("noise", ["plane.v", "plane.w"], "0.02 m/s", "random", shared_id="probe-17"),
+        kit.source("pitch of the probe", "angle.pitch", "0.2 deg", shared_id="probe-17"),
+        kit.source("yaw of the probe", "angle.yaw", "0.1 deg", shared_id="probe-17"),
+        kit.source("zero", "plane.total_pressure", "0.5 Pa", shared_id="transducer"),
+    ]
+    others = [*declared[:3], kit.source("zero", "plane.static_pressure", "0.5 Pa", shared_id="transducer")]
+    a, b = (
+        reduce(load(survey(kit, tmp_path / str(number), seed=number, declared=sources)))
+        for number, sources in enumerate((declared, others))
+    )
+    found = wl.increment(a, b)
+    lines = [line for line in found.cancellations if line.row == "induced_drag"]
+    assert {line.source_a for line in lines} == {"pitch of the probe", "yaw of the probe"}
+    reasons = {line.source: line.reason for line in found.not_cancelled}
+    assert "for each point or row" in reasons["noise"]
+    assert "acts on plane.total_pressure in A and on plane.static_pressure in B" in reasons["zero"]
 
 
 def test_a_ledger_minus_itself(room):

@@ -163,13 +163,13 @@ def subtract(a: Contributions, b: Contributions) -> Difference:
         components.append(
             replace(one, source=f"{name} (left)", linear=one.linear - other.linear, curved=one.curved - other.curved)
         )
-        groups.append(("shared", key[0]))
+        groups.append(_shared_group(one))
     common = set(own_a) & set(own_b)
     for side, given, own in (("A", a, own_a), ("B", b, own_b)):
         alone = [one for one in given.components if one.key is None or one.kind == NUMERICAL]
         for one in (*(own[key] for key in own if key not in common), *alone):
             components.append(replace(one, source=f"{one.source} ({side})"))
-            groups.append(("shared", one.shared_id) if one.shared_id else (side, one.kind, one.source))
+            groups.append(_shared_group(one) if one.shared_id else (side, one.kind, one.source))
     scatters = tuple(
         (f"{SCATTER} ({side})", given.scatter, given.scatter_degrees_of_freedom) for side, given in (("A", a), ("B", b))
     )
@@ -189,20 +189,30 @@ def _by_key(given: Contributions) -> dict[tuple[str, str, int], Component]:
     return found
 
 
+def _shared_group(one: Component) -> Hashable:
+    """Errors of one instrument whose sizes were assessed together."""
+    return "shared", one.shared_id, one.distribution, one.degrees_of_freedom
+
+
 def _cancelled(
     a: dict[tuple[str, str, int], Component], b: dict[tuple[str, str, int], Component]
 ) -> tuple[Cancelled, ...]:
     """What the shared sources came to, source by source; errors that only one ledger has are among what is left."""
     found = []
-    for identity in dict.fromkeys(key[0] for key in b if key in a):
-        ours = [key for key in {**a, **b} if key[0] == identity]
-        one = next(key for key in b if key in a and key[0] == identity)
-        nothing = replace(b[one], linear=0 * b[one].linear, curved=0 * b[one].curved)
-        sums = np.zeros((3, *b[one].linear.shape))
-        for key in ours:
+    pairs = dict.fromkeys((key[0], a[key].source, b[key].source) for key in b if key in a)
+    for identity, source_a, source_b in pairs:
+        common = [
+            key for key in b if key in a and (key[0], a[key].source, b[key].source) == (identity, source_a, source_b)
+        ]
+        alone = [key for key in a if key not in b and (key[0], a[key].source) == (identity, source_a)]
+        alone += [key for key in b if key not in a and (key[0], b[key].source) == (identity, source_b)]
+        one = b[common[0]]
+        nothing = replace(one, linear=0 * one.linear, curved=0 * one.curved)
+        sums = np.zeros((3, *one.linear.shape))
+        for key in (*common, *alone):
             x, y = a.get(key, nothing), b.get(key, nothing)
             sums[0] += x.variance
             sums[1] += y.variance
             sums[2] += replace(y, linear=y.linear - x.linear, curved=y.curved - x.curved).variance
-        found.append(Cancelled(identity, a[one].source, b[one].source, *np.sqrt(sums)))
+        found.append(Cancelled(identity, source_a, source_b, *np.sqrt(sums)))
     return tuple(found)

@@ -9,6 +9,7 @@ from dataclasses import replace
 import numpy as np
 
 from wakeledger.confidence.budget import Budget
+from wakeledger.confidence.components import MEASURED
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sources import Source
 from wakeledger.core.errors import SurveyError
@@ -322,7 +323,8 @@ def contributions(budget: Budget | None, names: Sequence[str]) -> Contributions 
     components = tuple(
         replace(one, linear=one.linear[at], curved=one.curved[at])
         for one in budget.components
-        if np.any(one.linear[at]) or np.any(one.curved[at])
+        # A term of another row is no part of these; a declared source is, even at zero.
+        if one.kind == MEASURED or np.any(one.linear[at])
     )
     scatter = np.stack([budget.scatter[np.ix_(one, one)] for one in at])
     return Contributions(tuple(names), components, scatter, np.full(at.shape, math.inf))

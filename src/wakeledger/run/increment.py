@@ -178,32 +178,33 @@ def refuse_conflicts(declared: Iterable[tuple[str, Iterable[Survey]]]) -> None:
     InputError
         Naming the identity and what differs.
     """
-    seen: dict[str, tuple[str, Source]] = {}
+    seen: dict[tuple[str, str], tuple[str, Source]] = {}
     for side, surveys in declared:
         for survey in surveys:
             for source in survey.uncertainty.source:
                 if source.shared_id is None:
                     continue
-                _, earlier = seen.setdefault(source.shared_id, (side, source))
-                unlike = [
-                    (what, _said(one), _said(other))
-                    for what, one, other in zip(_DECLARED, _declaration(earlier), _declaration(source), strict=True)
-                    if one != other
-                ]
-                if unlike:
-                    what, one, other = unlike[0]
-                    raise InputError(
-                        f"shared_id {source.shared_id!r} is declared as two different errors: {what} is {one} for"
-                        f" {earlier.name!r} in {seen[source.shared_id][0]}, and {other} for {source.name!r} in {side}",
-                        remedy="one of the two error bars is wrong: declare the same error in both survey files, or "
-                        "give two errors two identities, and reduce again",
-                    )
+                for target in source.applies_to:
+                    where, earlier = seen.setdefault((source.shared_id, target), (side, source))
+                    unlike_in = [
+                        (what, _said(one), _said(other))
+                        for what, one, other in zip(_DECLARED, _declaration(earlier), _declaration(source), strict=True)
+                        if one != other
+                    ]
+                    if unlike_in:
+                        what, one, other = unlike_in[0]
+                        raise InputError(
+                            f"shared_id {source.shared_id!r} is declared as two different errors of {target}: {what} is"
+                            f" {one} for {earlier.name!r} in {where}, and {other} for {source.name!r} in {side}",
+                            remedy="one of the two error bars is wrong: declare the same error in both survey files, or"
+                            " give two errors two identities, and reduce again",
+                        )
 
 
 _DECLARED = (
     "effect",
+    "the scale of standard_uncertainty",
     "standard_uncertainty",
-    "its scale",
     "distribution",
     "degrees_of_freedom",
     "correlation_length",
@@ -213,9 +214,9 @@ _DECLARED = (
 def _declaration(source: Source) -> tuple[object, ...]:
     return (
         source.effect,
+        source.scale,
         # The same size written in two units differs by rounding.
         float(f"{source.standard_uncertainty:.9g}"),
-        source.scale,
         source.distribution,
         source.degrees_of_freedom,
         source.correlation_length,
@@ -280,48 +281,62 @@ def _not_cancelled(
     a: Ledger, b: Ledger, surveys_a: Sequence[Survey], surveys_b: Sequence[Survey], difference: Difference
 ) -> tuple[NotCancelled, ...]:
     """Sources and terms that both ledgers have under one name or identity, and why they were added."""
-    done = {one.shared_id for one in difference.cancelled}
-    identities = [_identities(surveys) for surveys in (surveys_a, surveys_b)]
+    done = [{(one.shared_id, one.source_a) for one in difference.cancelled}]
+    done.append({(one.shared_id, one.source_b) for one in difference.cancelled})
+    declared = [_shared_sources(surveys) for surveys in (surveys_a, surveys_b)]
     named = [_budget_names(ledger, MEASURED) for ledger in (a, b)]
     unrecorded = a.contributions is None or b.contributions is None
     found = []
     for name in named[0]:
         if name not in named[1]:
             continue
-        ids = [_identity(name, known) for known in identities]
-        if ids[0] is not None and ids[0] in done and ids[0] == ids[1]:
+        own = [_shared_source(name, known) for known in declared]
+        ids = [None if source is None else source.shared_id for source in own]
+        if any((identity, name) in side for identity, side in zip(ids, done, strict=True)):
             continue
-        if ids[0] is not None and ids[0] == ids[1]:
-            reason = _NO_RECORD if unrecorded else _PER_POINT
-        elif ids[0] is not None and ids[1] is not None:
-            reason = f"its shared_id is {ids[0]!r} in A and {ids[1]!r} in B: two errors, which were added"
+        if own[0] is not None and own[1] is not None:
+            if ids[0] == ids[1]:
+                reason = _why_not(own[0], own[1], unrecorded=unrecorded)
+            else:
+                reason = f"its shared_id is {ids[0]!r} in A and {ids[1]!r} in B: two errors, which were added"
         else:
             where = "either" if ids == [None, None] else "A" if ids[0] is None else "B"
             reason = f"it has no shared_id in {where}; a name alone does not make it the same error, so it was added"
         found.append(NotCancelled(name, reason))
     said = {line.source for line in found}
-    for identity in dict.fromkeys(identities[0].values()):
-        if identity in identities[1].values() and identity not in done:
-            name = next(key for key, value in identities[1].items() if value == identity)
-            if name not in said:
-                reason = _NO_RECORD if unrecorded else _PER_POINT
-                found.append(NotCancelled(name, f"shared_id {identity!r} is in both: {reason}"))
+    for name, source in declared[0].items():
+        others = [other for other in declared[1].values() if other.shared_id == source.shared_id]
+        if not others or name in said or any(identity == source.shared_id for identity, _ in done[0]):
+            continue
+        reason = _why_not(source, others[0], unrecorded=unrecorded)
+        found.append(NotCancelled(name, f"shared_id {source.shared_id!r} is in both: {reason}"))
     terms = [_budget_names(ledger, NUMERICAL) for ledger in (a, b)]
     found += [NotCancelled(name, _NUMERICAL) for name in terms[0] if name in terms[1]]
     return tuple(found)
 
 
-def _identities(surveys: Iterable[Survey]) -> dict[str, str]:
+def _why_not(a: Source, b: Source, *, unrecorded: bool) -> str:
+    """Why one identity in both surveys does not cancel."""
+    if unrecorded:
+        return _NO_RECORD
+    if a.effect != "systematic":
+        return _PER_POINT
+    if not set(a.applies_to) & set(b.applies_to):
+        return f"it acts on {', '.join(a.applies_to)} in A and on {', '.join(b.applies_to)} in B: two errors, added"
+    return "its errors are too many to be followed one by one, so that it was added"
+
+
+def _shared_sources(surveys: Iterable[Survey]) -> dict[str, Source]:
     return {
-        source.name: source.shared_id
+        source.name: source
         for survey in surveys
         for source in survey.uncertainty.source
         if source.shared_id is not None
     }
 
 
-def _identity(name: str, known: dict[str, str]) -> str | None:
-    """Identity of a source of the budget, which may be a part of a declared one ("name (inputs)")."""
+def _shared_source(name: str, known: dict[str, Source]) -> Source | None:
+    """Declaration of a source of the budget, which may be a part of a declared one ("name (inputs)")."""
     return known.get(name, next((known[key] for key in known if name.startswith(f"{key} (")), None))
 
 

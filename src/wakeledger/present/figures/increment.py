@@ -22,6 +22,9 @@ if TYPE_CHECKING:
 
     from wakeledger.ledger.increment import Increment, IncrementRow
 
+#: Bars longer than so many U95 run out of the figure.
+_LONGEST = 6.0
+
 #: Share of the places whose change the colours span.
 _SPANNED = 99.7
 
@@ -164,7 +167,7 @@ def increments_figure(increment: Increment) -> Figure:
     from matplotlib.patches import Patch
 
     rows = [row for row in increment.rows if _drawable(row)]
-    reach = max(1.6, *(abs(_ratio(row)) + 1.15 * max(1.0, _uncancelled(row)) for row in rows))
+    reach = max(1.6, *(abs(_ratio(row)) + 1.15 * min(max(1.0, _uncancelled(row)), _LONGEST) for row in rows))
     with style():
         figure = Figure(figsize=(WIDTH, 0.3 * len(rows) + 1.2), layout="constrained")
         axes = figure.add_subplot()
