@@ -23,6 +23,7 @@ from wakeledger.run.config.quantities import (
     frozen,
     listed,
     parse_quantity,
+    parse_shape,
     parse_text,
 )
 
@@ -265,6 +266,12 @@ def _files(value: Any) -> str | tuple[str, ...]:
     return names[0] if len(names) == 1 else names
 
 
+def _window(value: Any) -> Array:
+    what = 'two opposite corners as [["-5 m", "-2 m"], ["5 m", "2 m"]]'
+    box = parse_shape(listed(lambda corner: corner, what, least=2, most=2)(value))
+    return frozen(box)
+
+
 def _time(value: Any) -> float:
     # Steady solvers count iterations where others have seconds, and name their folders alike.
     return parse_quantity(value, "s" if isinstance(value, str) else "1")
@@ -279,6 +286,9 @@ class Plane(Table):
         The data file or files, relative to the survey file.
     station : float
         Distance of the plane behind the trailing edge, m.
+    window : ndarray, shape (2, 2), or None
+        Lower port and upper starboard corner of the part that is used, (y, z) in m; None where that is left to the
+        program.
     trailing_edge_x : float
         Where the trailing edge stands along the project's x axis in a file of computed flow, m.
     time : float or None
@@ -301,6 +311,7 @@ class Plane(Table):
         description='[plane.columns] (where each variable stands, as u = { column = "U", unit = "m/s" })',
     )
     axes: Axes = Axes()
+    window: Annotated[Array, PlainValidator(_window)] | None = None
     trailing_edge_x: Length = 0.0
     time: Annotated[float, PlainValidator(_time)] | None = None
 
@@ -421,6 +432,10 @@ def check_positions(plane: Plane, *, coordinates: int) -> None:
         )
 
 
+#: What to do with the total pressures of tubes that tell no direction.
+_PITOTS = 'of pitot tubes give p1, with primary = "hole_pressures" and a [probe] without calibration'
+
+
 def check_primary(plane: Plane, *, edge_static: str | None, calibrated: bool = True) -> None:
     """Refuse a plane without the columns its primary quantity needs.
 
@@ -450,8 +465,11 @@ def check_primary(plane: Plane, *, edge_static: str | None, calibrated: bool = T
             angles = bool(names & {"pitch", "yaw"})
             for name in ("pitch", "yaw") if angles else ("v", "w"):
                 both = "pitch and yaw" if angles else "v and w, or pitch and yaw"
-                need(name in names, f"the flow direction, and {name!r} is missing", f"add {both}")
-        if edge_static in (None, "measured"):
+                need(name in names, f"the flow direction, and {name!r} is missing", f"add {both}; {_PITOTS}")
+            by_speed = {"u", "v", "w"} <= names or {"speed", "pitch", "yaw"} <= names
+            remedy = 'set primary = "velocity": the total pressure is used beside the speed' if by_speed else "add it"
+            need("static_pressure" in names, "static_pressure", remedy)
+        if edge_static == "measured":
             given = bool(names & {"static_pressure", "speed", "u"})
             need(given, "static_pressure, or else u or speed", "add one of them")
     elif plane.primary == "velocity":
@@ -467,9 +485,10 @@ def check_primary(plane: Plane, *, edge_static: str | None, calibrated: bool = T
                 need(name in names, f"u, v and w, or speed, pitch and yaw, and {name!r} is missing", "add it")
     else:
         if not calibrated:
-            need("p1" in names, "the reading of the tubes, and 'p1' is missing", "add it")
+            need("p1" in names, "the reading of the tubes, and 'p1' is missing", "add it: what a pitot reads is p1")
+        pitot = "add it; a pitot reads p1 alone, and its [probe] has no calibration"
         for name in HOLES[:5] if calibrated else ():
-            need(name in names, f"the holes p1 to p5 (or p7), and {name!r} is missing", "add it")
+            need(name in names, f"the holes p1 to p5 (or p7), and {name!r} is missing", pitot)
 
 
 def column_targets(raw: Any) -> dict[str, tuple[str, bool]]:
