@@ -18,6 +18,7 @@ import numpy as np
 from wakeledger.core.errors import DataError
 from wakeledger.ledger import encoding
 from wakeledger.ledger.contributions import Contributions
+from wakeledger.ledger.propagation import dataset_propagation, propagation_dataset
 from wakeledger.ledger.rows import (
     BudgetLine,
     Check,
@@ -60,6 +61,9 @@ _TABLES = ("wake_line", "vortices", "span", "repeats")
 
 #: Group of what each error does to the rows.
 _CONTRIBUTIONS = "contributions"
+
+#: Group of how each row's uncertainty came about.
+_PROPAGATION = "propagation"
 
 #: Groups of the ledgers of several planes, numbered from 1, and the attribute that says how they were combined.
 _STATION, _COMBINED = "station_", "combined"
@@ -209,6 +213,8 @@ def _groups(ledger: Ledger) -> dict[str, xr.Dataset]:
         table = getattr(ledger, name)
         if table is not None:
             groups[name] = table
+    if ledger.propagation:
+        groups[_PROPAGATION] = propagation_dataset(ledger.propagation)
     if ledger.contributions is not None:
         groups[_CONTRIBUTIONS] = ledger.contributions.to_dataset()
     for number, (name, calibration) in enumerate(ledger.calibrations.items(), start=1):
@@ -240,6 +246,8 @@ def _ledger(root: xr.Dataset, source: Path, *, within: str = "") -> Ledger:
         tables[name] = json.loads(root.attrs[name])
     model = read("model")
     contributions = Contributions.from_dataset(read(_CONTRIBUTIONS)) if _CONTRIBUTIONS in present else None
+    if _PROPAGATION in present:
+        tables["propagation"] = dataset_propagation(read(_PROPAGATION))
     if _TUNNEL in present:
         tables["tunnel"] = encoding.dataset_records(read(_TUNNEL), TunnelFigure)
     companions = {}

@@ -23,6 +23,7 @@ if TYPE_CHECKING:
 
     from wakeledger.core.points import Points
     from wakeledger.ledger.contributions import Contributions
+    from wakeledger.ledger.propagation import Propagation
 
 #: How an estimate or a compared value stands to the row.
 Verdict = Literal["agrees", "disagrees", "not_independent", "unknown"]
@@ -342,6 +343,8 @@ class Ledger:
         Values from elsewhere the rows are held against.
     budget : tuple of BudgetLine
         Every row's uncertainty by source, largest first.
+    propagation : tuple of Propagation
+        How the uncertainty of each row came about (`wakeledger.ledger.propagation`).
     checks : tuple of Check
         The checks of the survey.
     covariance : ndarray, shape (m, m)
@@ -397,6 +400,7 @@ class Ledger:
     estimates: tuple[CrossCheck, ...] = ()
     comparisons: tuple[Comparison, ...] = ()
     budget: tuple[BudgetLine, ...] = ()
+    propagation: tuple[Propagation, ...] = ()
     checks: tuple[Check, ...] = ()
     notes: tuple[str, ...] = ()
     test: Mapping[str, str] = field(default_factory=_empty)

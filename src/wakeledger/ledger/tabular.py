@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from wakeledger.core.names import ROWS
+from wakeledger.ledger.propagation import propagation_entry
 from wakeledger.ledger.repeats import repeats_json
 from wakeledger.ledger.rounding import UNKNOWN, rounded
 from wakeledger.ledger.rows import COUNT, Ledger, Row
@@ -41,8 +42,8 @@ def ledger_json(ledger: Ledger) -> dict[str, Any]:
     dict
         Made of dict, list, str, bool, int, float and None only, without NaN or infinity: ``format``, ``title``,
         ``test``, ``compressible``, ``rows``, ``estimates``, ``comparisons``, ``budget``, ``checks``, ``notes``,
-        ``reference``, in a tunnel ``tunnel``, and of combined repeats ``repeats``. A number that is not known is None,
-        and the record it stands in has a ``reason``. Infinitely many
+        ``reference``, where they are known ``propagation``, in a tunnel ``tunnel``, and of combined repeats
+        ``repeats``. A number that is not known is None, and the record it stands in has a ``reason``. Infinitely many
         degrees of freedom are written as 1e6.
     """
     document: dict[str, Any] = {
@@ -58,6 +59,11 @@ def ledger_json(ledger: Ledger) -> dict[str, Any]:
         "notes": list(ledger.notes),
         "reference": {name: float(value) for name, value in ledger.reference.items() if math.isfinite(value)},
     }
+    if ledger.propagation:
+        document["propagation"] = [
+            _plain(propagation_entry(one, many=MANY_DEGREES_OF_FREEDOM), "it was not worked out")
+            for one in ledger.propagation
+        ]
     if ledger.repeats is not None:
         document["repeats"] = repeats_json(ledger.repeats)
     if ledger.combined is not None:

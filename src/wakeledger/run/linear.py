@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -17,7 +17,9 @@ from wakeledger.confidence.linear_budget import (
     linear_budget,
     probed_curvature,
 )
-from wakeledger.confidence.sampling import ErrorSampler, SourceErrors
+from wakeledger.confidence.montecarlo import Evaluate
+from wakeledger.confidence.samples import Samples
+from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.core.grid import Array
 from wakeledger.run.adjoint import input_gradients, point_gradient, scalar_gradients
@@ -115,6 +117,7 @@ def survey_budget(
     sources: Sequence[Source],
     layouts: Mapping[str, InputLayout],
     *,
+    noisy: Collection[str],
     components: Sequence[Component] = (),
 ) -> LinearBudget:
     """Linear budget of a survey, with a second order where the first does not tell all.
@@ -127,6 +130,8 @@ def survey_budget(
         From `linear_slopes`.
     sources, layouts
         What errs.
+    noisy : collection of str
+        Sources whose errors make the crossflow differ from point to point, on which rows hang quadratically.
     components : sequence of Component
         Effects of single errors, as far as they are known: those of sources with few errors, both orders.
 
@@ -138,7 +143,8 @@ def survey_budget(
     -----
     A quadratic form that noise can only raise has a second-order variance of at most twice the square of its noise
     bias, because the squares of the eigenvalues of such a form add to no more than the square of their sum. Where that
-    is below 1 % of the first order, nothing is worked out. The value of a row has its noise bias subtracted already;
+    is below 1 % of the first order, nothing is worked out. It is worked out for the rows; for the cross-checks it is
+    then unknown. The value of a row has its noise bias subtracted already;
     the second-order variance is the scatter about that mean and does not hold it.
     """
     second = _from_components(components)
@@ -148,8 +154,8 @@ def survey_budget(
     if not np.any(2 * bias**2 > NEGLIGIBLE * variance):
         return first
     for source in sources:
-        noisy = source.effect != "systematic" and SourceErrors(source, layouts, seed=0).latents > 1
-        if noisy and source.name not in second and all(name in slopes.figures for name in source.applies_to):
+        through = all(name in slopes.figures for name in source.applies_to)
+        if source.name in noisy and source.name not in second and through:
             second[source.name] = probed_curvature(_Displaced(chain, nominal, slopes, layouts), source, layouts)
     return linear_budget(slopes, sources, layouts, names=OUTPUTS, second=second)
 
@@ -173,9 +179,37 @@ class _Displaced:
         self.vary = Variation(mask=nominal.region.mask)
 
     def __call__(self, errors: Mapping[str, Array]) -> Slopes:
-        there = self.chain.reduce(errors, vary=self.vary)
-        gradient = point_gradient(self.chain, there, errors=errors)
+        there = self.chain.reduce(errors, vary=self.vary, estimates=False)
+        gradient = point_gradient(self.chain, there, estimates=False, errors=errors)
         own = {name: self.layouts[name] for name in errors}
         figures, _ = input_gradients(self.chain, gradient, own, errors=errors)
-        outputs = np.where(np.isnan(self.known.outputs), np.nan, gradient.outputs)
-        return Slopes(outputs, figures)
+        unknown = np.asarray(np.isnan(self.known.outputs).any(axis=1))
+        return Slopes(np.where(unknown[:, None], np.nan, gradient.outputs), figures)
+
+
+def with_prediction(evaluate: Evaluate, slopes: Slopes) -> Evaluate:
+    """A callable of errors that gives its outputs, and beside them the changes that derivatives predict.
+
+    Parameters
+    ----------
+    evaluate : callable
+        As `wakeledger.confidence.montecarlo.run` takes it, with m outputs.
+    slopes : Slopes
+        Its derivatives.
+
+    Returns
+    -------
+    callable
+        With 2 m outputs. Both see the same draws, so that their difference is free of the draws' sampling error.
+    """
+
+    def both(errors: dict[str, Array]) -> Array:
+        return np.concatenate([evaluate(errors), slopes.change(errors)], axis=1)
+
+    return both
+
+
+def separated(samples: Samples) -> tuple[Samples, Samples]:
+    """The outputs and the predicted changes of draws of `with_prediction`, each over `OUTPUTS`."""
+    m = len(OUTPUTS)
+    return Samples(OUTPUTS, samples.values[:, :m]), Samples(OUTPUTS, samples.values[:, m:])

@@ -9,6 +9,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from wakeledger.confidence.budget import Budget, make_budget
+from wakeledger.confidence.linear_budget import NEGLIGIBLE, LinearBudget
 from wakeledger.confidence.montecarlo import run as run_montecarlo
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler
@@ -17,6 +18,7 @@ from wakeledger.confidence.terms import NumericalTerm, add_terms
 from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.core.grid import Array
 from wakeledger.ledger.inspection import Inspection
+from wakeledger.ledger.propagation import Propagation
 from wakeledger.ledger.rows import Check, CrossCheck, KeptSurvey, Ledger, Row
 from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
 from wakeledger.physics.loading.span import span_loading
@@ -43,13 +45,16 @@ from wakeledger.run.estimates import counted_mask, without_walls
 from wakeledger.run.gridded import core_spacings, grid_survey, regrid_of
 from wakeledger.run.inputs import gradients, layouts, sources
 from wakeledger.run.inspection import inspect_plane, inspect_section
+from wakeledger.run.linear import linear_slopes, separated, survey_budget, tried, with_prediction
 from wakeledger.run.load import SUPPORT_TARE, SurveyInput, load, refuse_unsupported
 from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
 from wakeledger.run.numerics import numerical_terms
 from wakeledger.run.outputs import ESTIMATES, MOMENTS, OUTPUTS, ROWS, estimate_of
 from wakeledger.run.probe_range import probe_range
+from wakeledger.run.propagation import propagation, propagation_notes
 from wakeledger.run.reduction import Frozen, Reduction
 from wakeledger.run.section.survey import reduce_section
+from wakeledger.run.stations import reduce_stations
 from wakeledger.run.traverse_notes import traverse_notes
 from wakeledger.run.tunnel import tunnel_figures, tunnel_notes, tunnel_sources
 
@@ -139,22 +144,31 @@ def reduce(
     if survey.survey.section is not None:
         return reduce_section(survey, draws=draws, progress=progress, command=command)
     survey = _with_tare(survey, draws=draws)
+    if survey.stations:
+        stations = tuple(replace(one, tare=survey.tare) for one in survey.stations)
+        return reduce_stations(
+            replace(survey, stations=stations),
+            lambda one: reduce(one, draws=draws, progress=progress, command=command),
+            command=command,
+        )
     prepared = prepare(survey)
     require_rows(survey.survey, [name for name in ROWS if not math.isnan(prepared.nominal.values[name])])
     uncertainty = survey.survey.uncertainty
     count = uncertainty.draws if draws is None else draws
     terms: tuple[NumericalTerm, ...] = ()
     samples, budget = None, None
+    found: Propagated | None = None
     if prepared.sources and prepared.nominal.region.mask.any():
         try:
             terms = _terms(prepared, survey)
-            samples, budget = _propagate(prepared, terms, draws=count, seed=uncertainty.seed, progress=progress)
+            found = _propagate(prepared, terms, draws=count, seed=uncertainty.seed, progress=progress)
+            samples, budget = found.samples, found.budget
         except InputError as error:
             raise error.located(file=survey.survey.path) from error
     checks = all_checks(prepared.nominal, _facts(prepared))
     if samples is not None and any(check.name == "net_circulation" and check.verdict == "fail" for check in checks):
         samples = made_unknown(samples, _INDUCED, _UNBALANCED)
-    return _ledger(survey, prepared, samples, budget, checks, command=command)
+    return _ledger(survey, prepared, samples, budget, checks, found=found, command=command)
 
 
 def _with_tare(survey: SurveyInput, *, draws: int | None) -> SurveyInput:
@@ -391,30 +405,45 @@ def _noise_draws(prepared: Prepared, *, seed: int) -> list[dict[str, Array]]:
     return [{name: array[k] for name, array in draws.items()} for k in range(_NOISE_DRAWS)]
 
 
+@dataclass(frozen=True)
+class Propagated:
+    """Uncertainty of the outputs: draws with numerical terms, and without; what derivatives make of the same errors."""
+
+    samples: Samples
+    budget: Budget
+    plain: Samples
+    predicted: Samples
+    linear: LinearBudget
+
+
 def _propagate(
     prepared: Prepared, terms: Sequence[NumericalTerm], *, draws: int, seed: int, progress: Progress | None
-) -> tuple[Samples, Budget]:
-    chain = prepared.chain
-
-    plain = run_montecarlo(
-        chain.vectors,
-        prepared.sources,
-        prepared.layouts,
-        names=OUTPUTS,
+) -> Propagated:
+    chain, nominal, given, inputs = prepared.chain, prepared.nominal, prepared.sources, prepared.layouts
+    slopes = tried(chain, linear_slopes(chain, nominal, given, inputs), given, inputs)
+    drawn = run_montecarlo(
+        with_prediction(chain.vectors, slopes),
+        given,
+        inputs,
+        names=(*OUTPUTS, *(f"{name} by derivatives" for name in OUTPUTS)),
         draws=draws,
         seed=seed,
         progress=progress,
     )
+    plain, predicted = separated(drawn)
     budget = make_budget(
         chain.vectors,
-        prepared.sources,
-        prepared.layouts,
+        given,
+        inputs,
         plain,
         seed=seed,
         terms=terms,
         draws=max(50, draws // 5),
     )
-    return add_terms(plain, terms, seed=seed), budget
+    whole = sum(sum(noise.variance) for noise in prepared.noises)
+    noisy = {noise.name for noise in prepared.noises if sum(noise.variance) >= NEGLIGIBLE * whole}
+    linear = survey_budget(chain, nominal, slopes, given, inputs, noisy=noisy, components=budget.components)
+    return Propagated(add_terms(plain, terms, seed=seed), budget, plain, predicted, linear)
 
 
 def _ledger(
@@ -424,21 +453,32 @@ def _ledger(
     budget: Budget | None,
     checks: tuple[Check, ...],
     *,
+    found: Propagated | None,
     command: str,
 ) -> Ledger:
     file, nominal = survey.survey, prepared.nominal
     reason = NO_SOURCE if nominal.region.mask.any() else _NO_WAKE
-    found = (
+    made = (
         ledger_row(name, nominal.values, samples, budget=budget, sources=prepared.sources, reason=reason)
         for name in ROWS
     )
-    rows = tuple(row for row in found if row is not None)
+    rows = tuple(row for row in made if row is not None)
     names = [row.name for row in rows]
     known = [row.name for row in rows if math.isfinite(row.standard_uncertainty)]
     covariance = np.full((len(names), len(names)), np.nan)
     if samples is not None:
         at = [OUTPUTS.index(name) for name in names]
         covariance = samples.covariance[np.ix_(at, at)]
+    came_about: tuple[Propagation, ...] = ()
+    if found is not None:
+        came_about = propagation(
+            known,
+            found.budget,
+            prepared.sources,
+            plain=found.plain,
+            predicted=found.predicted,
+            linear=found.linear,
+        )
     return Ledger(
         title=file.title,
         compressible=nominal.reference.compressible,
@@ -451,8 +491,9 @@ def _ledger(
         comparisons=comparisons(file, rows, _scales(prepared)),
         budget=budget_lines(budget, known),
         contributions=contributions(budget, known),
+        propagation=came_about,
         checks=checks,
-        notes=prepared.notes,
+        notes=(*prepared.notes, *propagation_notes(came_about)),
         test=file.test.given(),
         reference=tables.reference_scalars(nominal.reference),
         model={} if file.model is None else file.model.given(),
