@@ -234,6 +234,37 @@ def trace(ledger: Ledger) -> Figure:
     return figure
 
 
+def increment_coverage() -> Figure:
+    """Coverage of the increments' U95, and what cancelling is worth, from the table of the study in its page."""
+    text = (measured.DOCS / "increments.md").read_text(encoding="utf-8")
+    block = text.split("<!-- generated: begin -->")[1].split("<!-- generated: end -->")[0]
+    lines = [[cell.strip() for cell in line.split("|")[1:-1]] for line in block.splitlines() if line.startswith("|")][2:]
+    cases = list(dict.fromkeys(line[0] for line in lines))
+    rows = list(dict.fromkeys(line[1] for line in lines))
+    with drawing(7.1, 2.9, 2) as (figure, (left, right)):
+        left.axvspan(93.5, 96.5, color=GREEN, alpha=0.18, lw=0)
+        left.axvline(95, color=GREEN, lw=1)
+        right.axvline(3, color=GREY, lw=1, ls=(0, (4, 2)))
+        for k, (row, colour) in enumerate(zip(rows, (BLUE, VERMILION, INK, PURPLE), strict=True)):
+            own = [line for line in lines if line[1] == row]
+            at = [cases.index(line[0]) + 0.17 * (k - 1.5) for line in own]
+            inside, doubt = np.array([[float(x) for x in line[3].rstrip(" %").split(" ± ")] for line in own]).T
+            left.errorbar(inside, at, xerr=doubt, fmt="o", ms=4, lw=1, color=colour, label=row.replace("_", " "))
+            right.plot([float(line[7]) for line in own], at, "o", ms=4, color=colour)
+        left.set_yticks(range(len(cases)), cases)
+        right.set_yticks(range(len(cases)), [""] * len(cases))
+        for panel in (left, right):
+            panel.set_ylim(len(cases) - 0.5, -0.5)
+        left.set_xlabel("true increment inside U95, %")
+        left.set_xlim(88, 100)
+        right.set_xscale("log")
+        right.set_xticks([1, 3, 10, 20], ["1", "3", "10", "20"])
+        right.minorticks_off()
+        right.set_xlabel("u if nothing cancelled / u")
+        figure.legend(loc="outside lower left", ncols=4)
+    return figure
+
+
 #: Figures that need no ledger, and those drawn from the sample survey's, by the name of their file.
 DRAWN: dict[str, Callable[[], Figure]] = {
     "axes.svg": axes,
@@ -241,6 +272,7 @@ DRAWN: dict[str, Callable[[], Figure]] = {
     "holes.svg": holes,
     "accuracy.svg": accuracy,
     "station.svg": station,
+    "increment_coverage.svg": increment_coverage,
 }
 FROM_LEDGER: dict[str, Callable[[Ledger], Figure]] = {
     "loss.png": loss_map,

@@ -26,6 +26,9 @@ if TYPE_CHECKING:
 
     from wakeledger.ledger.increment import Cancellation, Figure, Increment, IncrementRow
 
+#: From this width on, the coverage factor and the uncertainty of two separate surveys are shown.
+ROOMY = 92
+
 #: Rows whose cancellations are printed: the first that there is.
 MAIN_ROWS = ("total_drag", "section_drag", "profile_drag")
 
@@ -57,7 +60,7 @@ def increment_text(increment: Increment, *, width: int = 100, colour: bool = Fal
         run = " · ".join(f"{key} {value}" for key, value in side.test.items() if key in ("run", "point"))
         console.print(printable(f"{name}: {side.title}" + (f" ({run})" if run else "")))
     console.print()
-    console.print(_rows_table(increment.rows))
+    console.print(_rows_table(increment.rows, roomy=console.width >= ROOMY))
     for sentence in grouped_reasons((words(row.name), row.reason) for row in increment.rows):
         bullet(console, sentence)
     main = main_row(increment)
@@ -117,13 +120,13 @@ def figure_text(figure: Figure, scale: float = 1.0) -> tuple[str, str]:
     return (difference if plain else f"+{difference}"), expanded
 
 
-def _rows_table(rows: Sequence[IncrementRow]) -> Table:
+def _rows_table(rows: Sequence[IncrementRow], *, roomy: bool) -> Table:
     from rich.text import Text
 
+    apart = [("k", "right"), ("u, nothing cancelled", "right")] if roomy else []
     table = new_table(
-        ("", "left"), ("B − A ± U95", "left"), ("unit", "left"), ("counts ± U95", "left"), ("k", "right"),
-        ("u, nothing cancelled", "right"), ("", "left"),
-    )  # fmt: skip
+        ("", "left"), ("B − A ± U95", "left"), ("unit", "left"), ("counts ± U95", "left"), *apart, ("", "left")
+    )
     values = joined([figure_text(row.value) for row in rows])
     counts = joined([figure_text(row.coefficient, COUNT) for row in rows])
     for row, value, count in zip(rows, values, counts, strict=True):
@@ -132,7 +135,8 @@ def _rows_table(rows: Sequence[IncrementRow]) -> Table:
             judged.uncancelled_uncertainty / judged.standard_uncertainty if judged.standard_uncertainty else math.nan
         )
         cells: list[RenderableType] = [words(row.name), value, unit_text(row.unit), count]
-        cells += [_digits(judged.coverage_factor, 3), f"{_digits(ratio, 3)} u" if math.isfinite(ratio) else "–"]
+        if roomy:
+            cells += [_digits(judged.coverage_factor, 3), f"{_digits(ratio, 3)} u" if math.isfinite(ratio) else "–"]
         cells.append(Text(OUTCOMES[row.resolved], style=_STYLES[row.resolved]))
         table.add_row(*cells)
     return table

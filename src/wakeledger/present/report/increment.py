@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from typing import TYPE_CHECKING, Any
 
+from wakeledger.ledger.rounding import rounded
 from wakeledger.ledger.rows import COUNT
 from wakeledger.present.increment_text import OUTCOMES, figure_text, main_row
 from wakeledger.present.report.document import digits, environment, picture
@@ -94,8 +95,8 @@ def _rows(increment: Increment) -> list[dict[str, Any]]:
             {
                 "name": words(row.name),
                 "main": row.name in ("total_drag", "section_drag"),
-                "a": digits(row.value.a, 5),
-                "b": digits(row.value.b, 5),
+                "a": rounded(row.value.a, row.value.expanded_uncertainty)[0],
+                "b": rounded(row.value.b, row.value.expanded_uncertainty)[0],
                 "value": value or "–",
                 "expanded": expanded if row.resolved is not None else "",
                 "unit": unit_text(row.unit),
