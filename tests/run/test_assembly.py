@@ -36,3 +36,11 @@ def test_sources_taken_as_exact_have_infinite_degrees_of_freedom():
     one = Source("one", ("a",), "systematic", 3.0)
     assert effective_degrees_of_freedom(budget_of(one), "lift", (one,)) == math.inf
     assert effective_degrees_of_freedom(None, "lift", ()) == math.inf
+
+
+def test_correlated_sources_have_no_degrees_of_freedom():
+    # Welch and Satterthwaite's formula is for independent inputs (GUM G.4.1).
+    smooth = Source("s", ("plane.v",), "random", 0.1, correlation_length=0.1, degrees_of_freedom=9)
+    assert math.isnan(effective_degrees_of_freedom(budget_of(smooth), "lift", (smooth,)))
+    exact = Source("s", ("plane.v",), "random", 0.1, correlation_length=0.1)
+    assert effective_degrees_of_freedom(budget_of(exact), "lift", (exact,)) == math.inf

@@ -10,6 +10,8 @@ import numpy as np
 
 from wakeledger.confidence.budget import Budget
 from wakeledger.confidence.components import MEASURED
+from wakeledger.confidence.linear import welch_satterthwaite
+from wakeledger.confidence.linear_budget import correlated_sources
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sources import Source
 from wakeledger.core.errors import SurveyError
@@ -85,7 +87,13 @@ def ledger_row(
         coefficient=coefficient,
         coefficient_standard_uncertainty=coefficient_u,
         coefficient_corrected=corrected,
+        reason=_no_freedom(sources),
     )
+
+
+def _no_freedom(sources: Sequence[Source]) -> str | None:
+    why = correlated_sources(sources)
+    return None if why is None else f"its degrees of freedom are unknown: {why}"
 
 
 def made_unknown(samples: Samples, rows: Sequence[str], reason: str) -> Samples:
@@ -124,15 +132,20 @@ def effective_degrees_of_freedom(budget: Budget | None, row: str, sources: Seque
     Returns
     -------
     float
-        Infinite where every contributing source's uncertainty is taken as exact.
+        Infinite where every contributing source's uncertainty is taken as exact; NaN where the sources are correlated
+        (`wakeledger.confidence.linear_budget.correlated_sources`), to which the formula does not apply.
     """
     if budget is None:
         return math.inf
+    if correlated_sources(sources):
+        return math.nan
     freedom = {source.name: source.degrees_of_freedom for source in sources}
     lines = budget.of(row)
-    total = sum(line.standard_uncertainty**2 for line in lines)
-    loss = sum(line.standard_uncertainty**4 / freedom.get(line.source, math.inf) for line in lines)
-    return total**2 / loss if loss > 0 else math.inf
+    return float(
+        welch_satterthwaite(
+            [line.standard_uncertainty**2 for line in lines], [freedom.get(line.source, math.inf) for line in lines]
+        )
+    )
 
 
 def cross_check(
