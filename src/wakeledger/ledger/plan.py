@@ -138,8 +138,11 @@ class Plan:
         reduced at all.
     beyond : SetUp or None
         The cheapest one that reaches the target in more than the time limit, where none does within it.
-    monte_carlo : float
-        Expanded uncertainty of the chosen set-up by a full Monte Carlo with the numerical terms.
+    expanded_uncertainty : float
+        Of the row with the chosen set-up (95 %): the declared sources by a full Monte Carlo, and the numerical terms.
+    stated : float
+        What the ledger of such a survey would state: the scatter of the outer flow's zeros, which is noise that the
+        declared sources hold already, counts once more there.
     non_linearity : float
         Standard uncertainty of the declared sources by the full Monte Carlo over that from unit errors, less 1.
     left : float
@@ -179,7 +182,8 @@ class Plan:
     reached: bool
     chosen: SetUp | None
     beyond: SetUp | None
-    monte_carlo: float
+    expanded_uncertainty: float
+    stated: float
     non_linearity: float
     left: float
     draws: int

@@ -79,7 +79,7 @@ def outcome(plan: Plan) -> str:
     row, target = words(plan.row), with_unit(plan, plan.target)
     if plan.chosen is None:
         return f"No set-up can be reduced: nothing can be said about U95 of the {row} (target {target})."
-    figure, uncertainty = rounded(plan.value, plan.monte_carlo)
+    figure, uncertainty = rounded(plan.value, plan.expanded_uncertainty)
     known = f"{row} {figure} ± {uncertainty} {'' if plan.unit == '1' else plan.unit}".strip()
     if plan.reached:
         cost = time_text(plan.chosen.minutes) if math.isfinite(plan.chosen.minutes) else "the fewest points of all"
@@ -137,9 +137,15 @@ def checked(plan: Plan) -> str:
     """What the full Monte Carlo said of the derivatives."""
     percent = 100 * plan.non_linearity
     left = with_unit(plan, plan.left, 2)
+    stated = ""
+    if plan.stated > 1.05 * plan.expanded_uncertainty:
+        stated = (
+            f" The ledger of such a survey would state U95 = {with_unit(plan, plan.stated, 2)}, because it counts the"
+            " noise in the zeros of the outer flow once more."
+        )
     return (
         f"A full Monte Carlo of {plan.draws} draws gives the declared sources {percent:+.1f} % against their"
-        f" derivatives; the figures hold this. Without any noise the survey would be off by {left}."
+        f" derivatives; the figures hold this. Without any noise the survey would be off by {left}.{stated}"
     )
 
 

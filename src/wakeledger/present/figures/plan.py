@@ -127,14 +127,14 @@ def cost_figure(plan: Plan) -> Figure:
         if math.isfinite(plan.time_limit):
             axes.axvline(plan.time_limit, color=GREY, linewidth=0.9, linestyle=(0, (4, 3)))
         if plan.chosen is not None:
-            axes.plot(plan.chosen.minutes, plan.monte_carlo, "o", markersize=11, markerfacecolor="none",
+            axes.plot(plan.chosen.minutes, plan.expanded_uncertainty, "o", markersize=11, markerfacecolor="none",
                       markeredgecolor=VERMILION, markeredgewidth=1.8)  # fmt: skip
         axes.set_yscale("log")
         axes.set_xscale("log")
         _plain_ticks(axes)
         axes.set_xlabel("time of all surveys, minutes")
         axes.set_ylabel(f"U95 of the {words(plan.row)}{_unit(plan)}")
-        axes.legend(title="probe's noise", title_fontsize=8, loc="upper right", bbox_to_anchor=(1.0, 1.0))
+        axes.legend(title="probe's noise", title_fontsize=8, loc="lower left")
     return figure
 
 
@@ -174,7 +174,7 @@ def plan_budget(plan: Plan) -> Figure:
         for kind, colour in colours.items():
             if any(line.kind == kind for line in lines):
                 left.barh(0, 0, color=colour, label=kind)
-        left.legend(loc="lower right")
+        figure.legend(*left.get_legend_handles_labels(), loc="outside lower left", ncols=3)
         left.set_yticks(range(len(lines)), [line.source for line in lines])
         left.set_title("Standard uncertainty")
         left.set_xlabel(f"u{_unit(plan)}")

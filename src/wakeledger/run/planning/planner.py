@@ -244,13 +244,15 @@ def _record(
     uncertainty, failing, minutes = np.full(shape, np.nan), np.zeros(shape, dtype=bool), np.full(shape[1:], np.nan)
     lines: tuple[PlanLine, ...] = ()
     better: tuple[Improvement, ...] = ()
-    expanded = left = math.nan
+    expanded = stated = left = math.nan
     by_probe: list[SetUp] = []
     slower = None if reached else design.beyond()
     if choice is not None:
         lines = _budget(design, choice)
         total = sum(line.standard_uncertainty**2 for line in lines)
         expanded = FACTOR * math.sqrt(total)
+        beyond = design.responses[choice.key].stated_beyond(choice.repeats)
+        stated = FACTOR * math.sqrt(total + beyond * target.scale**2)
         better = improvements(design, choice, _halves(lines, design, choice), total)
         uncertainty, failing, minutes = map_of(design, choice)
         left = design.responses[choice.key].error * target.scale
@@ -268,7 +270,8 @@ def _record(
         reached=reached,
         chosen=None if choice is None else design.set_up(choice),
         beyond=None if slower is None else design.set_up(slower),
-        monte_carlo=expanded,
+        expanded_uncertainty=expanded,
+        stated=stated,
         non_linearity=ratio - 1,
         left=left,
         draws=table.draws,
@@ -313,6 +316,14 @@ def _notes(table: PlanTable, design: Design) -> list[str]:
             f"No survey every {1e3 * design.spacings[i]:.3g} mm with a window {1e3 * design.margins[j]:.3g} mm beyond"
             f" the wake can be reduced: {reason}"
         )
+    failing: dict[str, list[str]] = {}
+    for (i, j, _), response in design.responses.items():
+        for name in response.failing:
+            where = f"{1e3 * design.spacings[i]:.3g} mm with {1e3 * design.margins[j]:.3g} mm"
+            if where not in failing.setdefault(name, []):
+                failing[name].append(where)
+    for name, places in failing.items():
+        found.append(f"The check {name} would fail with some probe at spacing and window: {', '.join(places)}")
     if len(design.windows) < len(design.spacings) * len(design.margins):
         found.append("Spacings and windows beyond what the ledger holds were left out")
     found.append(
@@ -331,8 +342,7 @@ def _budget(design: Design, choice: Choice) -> tuple[PlanLine, ...]:
     found.append((DRIFT, "random", float(response.drift.at(choice.accuracies.reference_drift)) / repeats))
     for name, key in SYSTEMATIC.items():
         found.append((name, "systematic", float(response.systematic[key].at(getattr(choice.accuracies, key)))))
-    for name, variance in response.numerical.items():
-        found.append((name, "numerical", variance + response.averaged.get(name, 0.0) / repeats))
+    found += [(name, "numerical", variance) for name, variance in response.numerical.items()]
     found.append((LEFT, "numerical", response.left))
     total = sum(variance for _, _, variance in found)
     lines = [
@@ -346,15 +356,12 @@ def _budget(design: Design, choice: Choice) -> tuple[PlanLine, ...]:
 def _halves(lines: Sequence[PlanLine], design: Design, choice: Choice) -> dict[str, float]:
     """What a better instrument would halve, with the variance it causes now."""
     of = {line.source: line.standard_uncertainty**2 for line in lines}
-    response, scale = design.responses[choice.key], design.target.scale
-    # The zeros' own scatter is the probe's noise as well.
-    zeros = sum(response.averaged.values()) / choice.repeats * scale**2
     noise = sum(of.get(name, 0.0) for name in NOISES)
-    halves = {"probe's noise, all of it": noise + zeros}
+    halves = {"probe's noise": noise}
     if math.isnan(design.probes[choice.probe].hole):
-        halves |= {name: of.get(name, 0.0) for name in NOISES}
+        halves |= {f"{name} alone": of.get(name, 0.0) for name in NOISES}
     else:
-        halves = {"noise of the holes": noise + zeros}
+        halves = {"noise of the holes": noise}
     words = {DYNAMIC: "error of the dynamic pressure", DENSITY: "error of the density"}
     for name in (*SYSTEMATIC, DRIFT):
         label = words.get(name, "drift of the reference" if name == DRIFT else "error of the flow angles")

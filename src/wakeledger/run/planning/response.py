@@ -70,7 +70,8 @@ class Response:
     numerical : mapping of str to float
         Of each numerical term, by its name, that repeating does not make smaller.
     averaged : mapping of str to float
-        The part of each term that is noise, and gets smaller.
+        The part of each term that is the probe's own noise. The declared noise holds it already, so that it is none of
+        the scatter; a ledger states it all the same.
     left : float
         Mean square of what a survey without any noise leaves and the terms do not cover.
     error : float
@@ -102,9 +103,14 @@ class Response:
         common = sum(float(power.at(getattr(accuracies, key))) for key, power in self.systematic.items())
         return random / repeats + common
 
-    def numerics(self, repeats: int) -> float:
+    @property
+    def numerics(self) -> float:
         """Variance from the numerical terms and what they do not cover."""
-        return sum(self.numerical.values()) + sum(self.averaged.values()) / repeats + self.left
+        return sum(self.numerical.values()) + self.left
+
+    def stated_beyond(self, repeats: int) -> float:
+        """Variance that a ledger states beyond the rest: the noise in the zeros of the outer flow once more."""
+        return sum(self.averaged.values()) / repeats
 
     def scaled(self, factor: float) -> Response:
         """With the variances of all sources multiplied: what a full Monte Carlo found different."""

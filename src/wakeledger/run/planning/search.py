@@ -18,6 +18,8 @@ from wakeledger.run.planning.target import Target
 
 #: Factor of a 95 % interval of a normal distribution.
 FACTOR = 1.959964
+#: Improvements that gain less than this part of the uncertainty are left out.
+SMALLEST_GAIN = 1e-3
 _ACCURACIES = ("angle_accuracy", "reference_accuracy", "density_accuracy", "reference_drift")
 
 Key = tuple[int, int, int]
@@ -110,7 +112,7 @@ class Design:
     def uncertainty(self, choice: Choice) -> float:
         """Expanded uncertainty as shown; NaN where no such survey can be reduced."""
         response = self.responses[choice.key]
-        variance = response.measured(choice.accuracies, choice.repeats) + response.numerics(choice.repeats)
+        variance = response.measured(choice.accuracies, choice.repeats) + response.numerics
         return FACTOR * math.sqrt(variance) * self.target.scale if variance >= 0 else math.nan
 
     def looseness(self, choice: Choice) -> tuple[float, ...]:
@@ -217,7 +219,7 @@ def improvements(design: Design, choice: Choice, sources: Mapping[str, float], t
         if variance <= 0:
             continue
         after = FACTOR * math.sqrt(max(total - 0.75 * variance, 0.0))
-        found.append(Improvement(f"half the {name}", after, now - after, 0.0))
+        found.append(Improvement(f"half of the {name}", after, now - after, 0.0))
     predicted = design.uncertainty(choice)
     ratio = now / predicted if predicted > 0 else math.nan
     for what, other in _neighbours(design, choice):
@@ -225,7 +227,7 @@ def improvements(design: Design, choice: Choice, sources: Mapping[str, float], t
         if math.isfinite(after):
             minutes = design.minutes(other) - design.minutes(choice)
             found.append(Improvement(what, after, now - after, minutes))
-    return tuple(sorted((one for one in found if one.gain > 0), key=lambda one: -one.gain))
+    return tuple(sorted((one for one in found if one.gain > SMALLEST_GAIN * now), key=lambda one: -one.gain))
 
 
 def _neighbours(design: Design, choice: Choice) -> Iterator[tuple[str, Choice]]:
