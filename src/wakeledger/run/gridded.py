@@ -23,6 +23,7 @@ from wakeledger.run.chain import Chain
 from wakeledger.run.empty_tunnel import EmptyTunnel
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.outer_alignment import aligned
+from wakeledger.run.plane_window import Window, window_of
 from wakeledger.run.rake import prepare_raw
 from wakeledger.run.reduction import Reduction, Settings
 from wakeledger.run.traverse import RawSurvey, corrected_points
@@ -34,6 +35,8 @@ POINTS_PER_CORE = 2.0
 MOST_CELLS = 120_000
 #: Most of a window that may lie outside a round or many-sided section: the corners of a rectangle about it.
 _MOST_OUTSIDE = 0.25
+#: Chord of a wing whose mean chord is not given, as a share of its span.
+_CHORD_OF_SPAN = 0.15
 #: The same where scattered points are only looked at: working out the interpolation takes most of the time.
 MOST_CELLS_QUICK = 12_000
 
@@ -165,7 +168,17 @@ def regrid_of(survey: SurveyInput, state: State) -> Regrid:
     cut = None if boundary is None else boundary.inboard_cut
     reflection = None if boundary is None else boundary.reflection
     mesh = points.triangles is not None or points.areas is not None
-    return Regrid(points.y, points.z, usable_points(state), points.row, reflection, cut or 0.0, mesh)
+    usable = usable_points(state)
+    window = survey_window(survey, state)
+    if window is not None:
+        usable &= window.holds(points.y, points.z)
+    return Regrid(points.y, points.z, usable, points.row, reflection, cut or 0.0, mesh)
+
+
+def survey_window(survey: SurveyInput, state: State) -> Window | None:
+    """The part of a survey's plane that is gridded, None where all of it is."""
+    total = survey.survey.reference.resolve().total_pressure
+    return window_of(survey, state, usable_points(state), loss_free=total, most_cells=MOST_CELLS)
 
 
 def empty_tunnel(survey: SurveyInput, settings: Settings, *, cut: float, names: tuple[str, str]) -> EmptyTunnel:
@@ -275,7 +288,20 @@ def settings_of(survey: SurveyInput, reference: Reference) -> Settings:
         boundary=FreeAir() if boundary is None else boundary.surroundings(),
         given={name: each.value for name, each in survey.given.items()},
         model_place=None if boundary is None else boundary.model_centre,
+        computed=survey.computed,
+        zero_beyond=_zero_beyond(survey),
+        core=survey.core,
     )
+
+
+def _zero_beyond(survey: SurveyInput) -> float:
+    """A computed wake has a weak, broad loss of a chord about it, which the zero must not take out of it, m."""
+    model = survey.survey.model
+    if not survey.computed or model is None:
+        return 0.0
+    if model.mean_chord is not None:
+        return model.mean_chord
+    return 0.0 if model.span is None else _CHORD_OF_SPAN * model.span
 
 
 @dataclass(frozen=True)
@@ -336,6 +362,9 @@ def core_spacings(chain: Chain, vortices: Sequence[Vortex]) -> tuple[float, ...]
         return ()
 
     def about(lines: Array, place: float) -> float:
+        if not lines[0] <= place <= lines[-1] and lines[0] <= -place <= lines[-1]:
+            # In the mirrored half, whose points are those of the other.
+            place = -place
         upper = min(max(int(np.searchsorted(lines, place)), 1), lines.size - 1)
         return float(lines[upper] - lines[upper - 1])
 

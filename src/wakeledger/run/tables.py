@@ -22,6 +22,7 @@ from wakeledger.physics.loading.span import SpanLoading
 from wakeledger.physics.methods.wake_line import WakeLine
 from wakeledger.physics.vortices.identify import Vortex
 from wakeledger.run.chain import Chain, default_grow
+from wakeledger.run.gridded import survey_window
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.reduction import Reduction
 from wakeledger.stream.reference import Reference
@@ -205,7 +206,21 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
         | (survey.points.z < grid.z[0] - grid.dz)
         | (survey.points.z > grid.z[-1] + grid.dz)
     )
-    if beyond:
+    window = survey_window(survey, state)
+    if survey.points.how:
+        found.append(f"The points come from a computed flow: {survey.points.how}.")
+    if beyond and window is not None:
+        why = (
+            "as [plane] window has it"
+            if window.given
+            else "that holds the vorticity and the loss and half as much again, as a grid of the whole plane would be"
+            " too coarse for them; [plane] window gives another"
+        )
+        found.append(
+            f"The plane was cut to a window {why}: y {grid.y[0]:.4g} to {grid.y[-1]:.4g} m,"
+            f" z {grid.z[0]:.4g} to {grid.z[-1]:.4g} m; {beyond} points lie outside it."
+        )
+    elif beyond:
         found.append(
             f"The plane was cut to the largest rectangle that the points cover, y {grid.y[0]:.4g} to"
             f" {grid.y[-1]:.4g} m, z {grid.z[0]:.4g} to {grid.z[-1]:.4g} m; {beyond} points lie outside it."
