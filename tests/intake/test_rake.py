@@ -1,12 +1,14 @@
 """Tubes of a rake: offsets between them, static pressures from elsewhere, pitots; each against what was put in."""
 
+import dataclasses
+
 import numpy as np
 import pytest
 
 from wakeledger.core.flags import Flag
 from wakeledger.intake.probe.pitot import STATIC_INPUT, PitotReduction
 from wakeledger.intake.probe.static_tubes import interpolate_static
-from wakeledger.intake.probe.tube_offsets import offsets_from_outer_flow, offsets_from_overlap
+from wakeledger.intake.probe.tube_offsets import offsets_from_both, offsets_from_outer_flow, offsets_from_overlap
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic.aircraft import wing_wake
 from wakeledger.synthetic.rakes import RakeTube, pitot_tube, record_rake, static_tube
@@ -74,6 +76,36 @@ def test_offsets_from_the_outer_flow():
     assert np.all(found.standard_uncertainty < 0.03)
     assert found.value == pytest.approx(OFFSETS, abs=4 * 0.03)
     assert np.all(np.abs(found.value - OFFSETS) < 4 * found.standard_uncertainty)
+
+
+def test_overlap_and_outer_flow_together_know_better_than_either():
+    y, z, tube = moved_rake(pitch=0.22)
+    rng = np.random.default_rng(3)
+    errors = {"overlap": [], "outer flow": [], "both": []}
+    said = []
+    for _ in range(200):
+        total = 1960.0 - loss(y, z) + OFFSETS[tube] + 0.3 * rng.standard_normal(y.size)
+        # One row of 15 places leads from each tube to the next.
+        overlap = offsets_from_overlap(total, tube, y, z, tubes=4)
+        outer = offsets_from_outer_flow(total, tube, tubes=4, dynamic_pressure=960.0)
+        both = offsets_from_both(overlap, outer)
+        for found in (overlap, outer, both):
+            errors[found.source].append(found.value - OFFSETS)
+        said.append(both.standard_uncertainty)
+        assert both.second == outer.count and abs(both.value.sum()) < 1e-9
+    rms = {name: np.sqrt(np.mean(np.square(each))) for name, each in errors.items()}
+    assert rms["both"] < 0.6 * rms["overlap"] and rms["both"] < 1.02 * rms["outer flow"]
+    # Cautious, since some readings count in both.
+    assert 0.9 * rms["both"] < np.sqrt(np.mean(np.square(said))) < 1.6 * rms["both"]
+
+
+def test_an_outer_flow_that_contradicts_the_overlap_is_not_used():
+    y, z, tube = moved_rake()
+    total = 1960.0 - loss(y, z) + OFFSETS[tube] + 0.3 * np.random.default_rng(4).standard_normal(y.size)
+    overlap = offsets_from_overlap(total, tube, y, z, tubes=4)
+    outer = offsets_from_outer_flow(total, tube, tubes=4, dynamic_pressure=960.0)
+    wrong = dataclasses.replace(outer, value=outer.value + np.array([0.0, 2.0, 0.0, 0.0]))
+    assert offsets_from_both(overlap, wrong) is overlap
 
 
 def test_a_tube_that_stays_in_the_wake_has_no_offset_from_the_outer_flow():

@@ -5,6 +5,8 @@ from __future__ import annotations
 import math
 from collections.abc import Collection, Sequence
 
+import numpy as np
+
 from wakeledger.core.errors import DataError, SurveyError
 from wakeledger.intake.probe.record import Calibration
 from wakeledger.run.config.tables import ProbeTable
@@ -68,6 +70,7 @@ def calibration_notes(calibration: Calibration) -> list[str]:
             f"The calibration does not rest on {len(bad)} of its {calibration.table.n} points, which lie off"
             f" the smooth surface through all others ({lines} of its table)."
         )
+    found += _folded(calibration)
     pitch, yaw, total, static = calibration.standard_uncertainty()
     found.append(
         f"The calibration ({calibration.holes} holes, {calibration.table.n} points) is known to"
@@ -75,3 +78,16 @@ def calibration_notes(calibration: Calibration) -> list[str]:
         f" and {static:.2%} in static pressure, by points left out."
     )
     return found
+
+
+def _folded(calibration: Calibration) -> list[str]:
+    """A sentence about calibrated directions that their pressures do not tell, if there are any."""
+    blind = ~calibration.covered & ~calibration.bad
+    if not blind.any():
+        return []
+    table = calibration.table
+    cone = np.degrees(np.arccos(np.cos(table.yaw[blind]) * np.cos(table.pitch[blind])))
+    return [
+        f"The pressures at {np.count_nonzero(blind)} of the calibration's {table.n} points, from {cone.min():.3g} deg"
+        " off the axis on, do not tell their direction from others: readings like them count as outside the range."
+    ]

@@ -23,7 +23,12 @@ from wakeledger.intake.probe.traverse import (
     Tube,
     correction_input,
 )
-from wakeledger.intake.probe.tube_offsets import TubeOffsets, offsets_from_outer_flow, offsets_from_overlap
+from wakeledger.intake.probe.tube_offsets import (
+    TubeOffsets,
+    offsets_from_both,
+    offsets_from_outer_flow,
+    offsets_from_overlap,
+)
 from wakeledger.run.config.tables import ProbeTable
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.shear import Displacement
@@ -338,10 +343,11 @@ def _offsets(
         return None
     total = traverse.state(values, reference).total_pressure
     assert total is not None
-    found = offsets_from_overlap(total, rake.tube, points.y, points.z, tubes=count)
-    if found is None:
-        found = offsets_from_outer_flow(total, rake.tube, tubes=count, dynamic_pressure=reference.dynamic_pressure)
-    return found
+    overlap = offsets_from_overlap(total, rake.tube, points.y, points.z, tubes=count)
+    outer = offsets_from_outer_flow(total, rake.tube, tubes=count, dynamic_pressure=reference.dynamic_pressure)
+    if overlap is None or outer is None:
+        return outer if overlap is None else overlap
+    return offsets_from_both(overlap, outer)
 
 
 def _offset_addition(offsets: TubeOffsets, parts: Sequence[_Part], traverse: Traverse, n: int) -> tuple[Addition, str]:
@@ -364,6 +370,8 @@ def _offset_addition(offsets: TubeOffsets, parts: Sequence[_Part], traverse: Tra
     where = {
         "overlap": f"from {offsets.count} places that several tubes have seen",
         "outer flow": f"from {offsets.count} points in the outer flow",
+        "both": f"from {offsets.count} places that several tubes have seen and {offsets.second} points in the outer"
+        " flow, weighted",
     }
     sentence = (
         f"Total pressures of the tubes off their mean, {where[offsets.source]}: tube {', '.join(texts)}; they were"

@@ -8,7 +8,7 @@ look-up in a grid twice as fine.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 from typing import Any
 
@@ -28,7 +28,9 @@ OVERLAP = 0.15
 #: A table reaches one spacing of the calibration, and at least this far, beyond the hull, rad: a reading near the edge
 #: under errors still finds a value, and the cubic between the last nodes stays away from the range.
 MARGIN = 0.05
-_MESH = 121
+#: Readings that give back a direction further off than this come from a fold of the coefficients, rad.
+FOLD = np.radians(1.0)
+_MESH, _FINER = 121, 4
 _ITERATIONS = 12
 _STEP = 1e-5
 _REACHED = 1e-9
@@ -290,7 +292,61 @@ def build_tables(model: HoleModel, hull: DirectionHull, *, sectors: int) -> Inve
     InverseTables
     """
     parts = [_sector_table(model, hull, sector) for sector in range(sectors)]
-    return InverseTables(*(np.stack([part[i] for part in parts]) for i in range(6)))
+    return without_folds(InverseTables(*(np.stack([part[i] for part in parts]) for i in range(6))), model, hull)
+
+
+def without_folds(tables: InverseTables, model: HoleModel, hull: DirectionHull) -> InverseTables:
+    """The tables without the readings that two calibrated directions have in common.
+
+    Parameters
+    ----------
+    tables : InverseTables
+        As inverted.
+    model : HoleModel
+        Hole pressures as a function of direction.
+    hull : DirectionHull
+        Range of calibrated directions.
+
+    Returns
+    -------
+    InverseTables
+        Where the coefficients fold, as behind the separation on a probe far off its axis, a direction reads like
+        another one: nodes about readings that give back another direction than theirs by more than `FOLD` count as not
+        solved, so that such readings are out of range.
+    """
+    from scipy.ndimage import binary_dilation
+
+    image = np.stack(model.mesh).reshape(2, -1)
+    if not _misread(tables, image, model.samples.reshape(len(model.samples), -1), hull)[0].any():
+        return tables
+    fine = (np.linspace(low, high, _FINER * (_MESH - 1) + 1) for low, high in zip(model.low, model.high, strict=True))
+    image = np.stack(np.meshgrid(*fine, indexing="ij")).reshape(2, -1)
+    image = image[:, hull.holds(*angles(from_plane(image)))]
+    holes = model(image)
+    wrong, lead, across, up = _misread(tables, image, holes, hull)
+    spoilt = np.zeros(tables.solved.shape, dtype=bool)
+    for i, j in ((0, 0), (0, 1), (1, 0), (1, 1)):
+        spoilt[lead[wrong], up[wrong] + i, across[wrong] + j] = True
+    spoilt = binary_dilation(spoilt, structure=np.ones((1, 3, 3)))
+    return replace(tables, solved=tables.solved & ~spoilt)
+
+
+def _misread(
+    tables: InverseTables, image: Array, holes: Array, hull: DirectionHull
+) -> tuple[NDArray[np.bool_], NDArray[np.intp], NDArray[np.intp], NDArray[np.intp]]:
+    """Calibrated directions whose pressures give back another one; sector and cell (along x and y) of all, (n,)."""
+    direction = from_plane(image)
+    inverted = tables.look_up(holes)
+    assert inverted.found is not None
+    cosine = np.sum(inverted.direction * direction, axis=0)
+    wrong = inverted.found & hull.holds(*angles(direction)) & (cosine < np.cos(FOLD))
+    lead = inverted.sector
+    x, y, _ = sector_terms(holes, lead).compressed()
+    cells = []
+    for coefficient, axis in ((x, 0), (y, 1)):
+        place = np.nan_to_num((coefficient - tables.origin[lead, axis]) / tables.step[lead, axis])
+        cells.append(np.clip(place, 0, NODES - 2).astype(np.intp))
+    return wrong, lead, cells[0], cells[1]
 
 
 def _sector_table(model: HoleModel, hull: DirectionHull, sector: int) -> tuple[NDArray[Any], ...]:

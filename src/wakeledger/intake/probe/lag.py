@@ -210,7 +210,7 @@ def estimate_lag(along: Array, across: Array, row: NDArray[np.integer], time: Ar
     adds to Σ w s is known from the splines and is taken out. Backlash moves the two ways apart just as lag does: they
     can be told apart only by traversing at another speed.
     """
-    pairs = _pairs(along, across, row, np.isfinite(values).all(axis=0))
+    pairs = _pairs(along, across, row, np.asarray(np.isfinite(values).all(axis=0)))
     if not pairs:
         return Lag(np.nan, np.nan, 0, "no row was traversed in both directions")
     smooth = make_rate_filter(time, row, values=values)

@@ -17,6 +17,8 @@ FEWEST = 8
 LEVEL_SHARE = 0.25
 #: A level further below the highest one than this share of the dynamic pressure is no outer flow.
 LARGEST_OFFSET = 0.03
+#: Overlap and outer flow that differ by this many times what their uncertainties allow contradict each other.
+CONTRARY = 3.0
 _CLIP = 3.0
 _ROUNDS = 20
 
@@ -32,9 +34,11 @@ class TubeOffsets:
     degrees_of_freedom : ndarray of int, shape (tubes,)
         Of the uncertainty.
     source : str
-        "overlap" or "outer flow".
+        "overlap", "outer flow", or "both".
     count : int
         Places seen by several tubes, or points in the outer flow.
+    second : int
+        Points in the outer flow where both tell.
     """
 
     value: Array
@@ -42,6 +46,47 @@ class TubeOffsets:
     degrees_of_freedom: NDArray[np.int64]
     source: str
     count: int
+    second: int = 0
+
+
+def offsets_from_both(overlap: TubeOffsets, outer: TubeOffsets) -> TubeOffsets:
+    """Offsets from overlap and outer flow together, by the inverse squares of their uncertainties.
+
+    Parameters
+    ----------
+    overlap, outer : TubeOffsets
+        From `offsets_from_overlap` and `offsets_from_outer_flow`.
+
+    Returns
+    -------
+    TubeOffsets
+        The means add to zero again. A tube of which either tells nothing, or not how well, keeps what the overlap says
+        of it; the outer flow's offsets are brought to the overlap's mean over the tubes that both know. Where the two
+        contradict each other, the overlap alone: a wake that reaches into a tube's outer flow does not touch it.
+
+    Notes
+    -----
+    Places in the outer flow that several tubes have seen count in both, so the uncertainty of the mean is that of two
+    errors that are one: the mean of the two by the same weights. Where both disagree by more than independent errors
+    allow, it is widened by the Birge ratio, beyond `CONTRARY` of which they contradict each other.
+    """
+    both = np.isfinite(overlap.standard_uncertainty + outer.standard_uncertainty)
+    both &= (overlap.standard_uncertainty > 0) & (outer.standard_uncertainty > 0)
+    if np.count_nonzero(both) < 2:
+        return overlap
+    shifted = outer.value - np.mean((outer.value - overlap.value)[both])
+    weights = np.stack([overlap.standard_uncertainty, outer.standard_uncertainty])[:, both] ** -2
+    total = weights.sum(axis=0)
+    value, sigma = overlap.value.copy(), overlap.standard_uncertainty.copy()
+    freedom = overlap.degrees_of_freedom.copy()
+    value[both] = (weights[0] * overlap.value[both] + weights[1] * shifted[both]) / total
+    apart = (overlap.value - shifted)[both] ** 2 / (1.0 / weights).sum(axis=0)
+    ratio = float(np.sqrt(max(1.0, apart.sum() / (np.count_nonzero(both) - 1))))
+    if ratio > CONTRARY:
+        return overlap
+    sigma[both] = ratio * np.sum(np.sqrt(weights), axis=0) / total
+    freedom[both] += outer.degrees_of_freedom[both]
+    return TubeOffsets(value - value.mean(), sigma, freedom, "both", overlap.count, outer.count)
 
 
 def offsets_from_overlap(total: Array, tube: NDArray[np.intp], y: Array, z: Array, *, tubes: int) -> TubeOffsets | None:
