@@ -15,11 +15,13 @@ from pathlib import Path
 import numpy as np
 from tests.benchmarks.timing import Result, Timing, timed
 
+from wakeledger.confidence.linear_budget import linear_budget
 from wakeledger.confidence.montecarlo import run as run_montecarlo
 from wakeledger.physics.fields.poisson import stream_function
 from wakeledger.run.chain import Chain
 from wakeledger.run.config import parse_survey
 from wakeledger.run.gridded import Regrid, find_vortices, settings_of
+from wakeledger.run.linear import linear_slopes
 from wakeledger.run.load import SurveyInput, load
 from wakeledger.run.noise import noise_bias, white_noise
 from wakeledger.run.outputs import OUTPUTS
@@ -75,7 +77,7 @@ def large_plane() -> list[Result]:
             (one_pass + bias) / solve,
             6.0,
             SOLVES,
-            "points to rows and estimates, and the noise bias in closed form; the linear budget is not built yet",
+            "points to rows and estimates, and the noise bias in closed form",
         ),
         Result("  of it rows and estimates", one_pass / solve, None, SOLVES, "points to rows on frozen geometry"),
         Result("  of these, points to plane", points_to_plane / solve, None, SOLVES, "state at the points, gridding"),
@@ -109,6 +111,45 @@ def small_plane() -> list[Result]:
         how = f"{draws} draws, scaled; 2 threads; one draw is {taken.cpu / draws / solve.cpu:.0f} solves of CPU time"
         found.append(Result(f"100 x 150 plane: 1000 draws, {what}", scaled, target, "s", how, cores=2))
     return found
+
+
+def linear() -> list[Result]:
+    """Linear budget of a 200 x 300 plane beyond the reduction itself."""
+    prepared = prepare(plane(200, 300, core=0.03, elements=24))
+    chain, nominal = prepared.chain, prepared.nominal
+    solve = timed(lambda: stream_function(nominal.vorticity, nominal.flow.grid), runs=41)
+    one_pass = timed(lambda: chain.reduce(estimates=False), runs=15)
+    layouts = {name: one for name, one in prepared.layouts.items() if not name.startswith("reference.")}
+    sources = [source for source in prepared.sources if set(source.applies_to) <= set(layouts)]
+
+    def budget() -> object:
+        slopes = linear_slopes(chain, nominal, sources, layouts, estimates=False)
+        return linear_budget(slopes, sources, layouts, names=OUTPUTS)
+
+    first = timed(budget, runs=15)
+    whole = timed(lambda: linear_slopes(chain, nominal, prepared.sources, prepared.layouts), runs=5)
+    size = "200 x 300 plane"
+    return [
+        Result(f"{size}: one free-space solve", solve, None, "s", "the yardstick; one thread"),
+        Result(f"{size}: reduction, rows", one_pass, None, "s", "points to rows"),
+        Result(
+            f"{size}: linear budget of the rows",
+            first,
+            0.05,
+            "s",
+            f"{len(sources)} sources on points and angles, derivatives included; 2 threads;"
+            f" {first.cpu / solve.cpu:.0f} solves of CPU time",
+            cores=2,
+        ),
+        Result(
+            "  with the reference and every estimate",
+            whole,
+            None,
+            "s",
+            "two passes for each number of [reference]",
+            cores=2,
+        ),
+    ]
 
 
 def start() -> list[Result]:
@@ -176,6 +217,7 @@ GROUPS: dict[str, Callable[[], list[Result]]] = {
     "start": start,
     "large plane": large_plane,
     "small plane": small_plane,
+    "linear budget": linear,
     "tables": tables,
     "whole survey": whole_survey,
     "memory": memory,

@@ -131,6 +131,9 @@ class _InputErrors:
 
     def weights(self, slopes: Array) -> Array:
         """Effects of the unit variables, (m, latents), from derivatives by the input, (m, n) or (m,)."""
+        if isinstance(self.expand, _Repeated) and not self.is_scalar:
+            together: Array = (slopes @ self.scale)[:, None]
+            return together
         effects: Array = (slopes[:, None] if self.is_scalar else slopes) * self.scale
         return effects if self.expand is None else self.expand.transposed(effects)
 

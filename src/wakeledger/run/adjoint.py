@@ -36,6 +36,7 @@ from wakeledger.run.adjoint_plane import (
     before_swirl,
     before_zero,
     crossflow_functional,
+    swirl_gradient,
 )
 from wakeledger.run.chain import Chain
 from wakeledger.run.empty_tunnel import PREFIX, EmptyTunnel, _onto
@@ -49,6 +50,7 @@ from wakeledger.run.outputs import (
     estimate_of,
 )
 from wakeledger.run.reduction import Reduction
+from wakeledger.stream.reference import Reference
 
 FREE_AIR = FreeAir()
 _NO_ERRORS: Mapping[str, Array] = MappingProxyType({})
@@ -112,11 +114,10 @@ def point_gradient(
     """
     figures = _figures(chain, nominal, estimates=estimates)
     names = tuple(figures)
-    before = chain.flow(nominal.reference, errors)
-    count = -(-len(names) // workers)
-    parts = [[figures[name] for name in names[k : k + count]] for k in range(0, len(names), count)]
+    plane = _plane(chain, nominal, errors)
+    # One figure at a time stays in the processor's cache, and carries only the fields it depends on.
     with ThreadPoolExecutor(workers) as pool:
-        found = list(pool.map(lambda part: _backwards(part, chain, nominal, before, errors), parts))
+        found = list(pool.map(lambda one: _backwards([one], chain, nominal, plane), figures.values()))
     outputs = _outputs(chain, nominal, names)
     empty = None
     if chain.empty is not None:
@@ -133,31 +134,64 @@ def _joined(parts: Sequence[tuple[int, Gradient]]) -> Gradient:
     return joined
 
 
+@dataclass(frozen=True)
+class _Plane:
+    """What the way back passes, the same for every figure.
+
+    Attributes
+    ----------
+    before : Flow
+        The plane before its total pressure was zeroed.
+    with_stream : Flow
+        The same before the empty tunnel was taken out.
+    swirl : (ndarray, ndarray) or None
+        Derivatives of the stream's swirl by the crossflow.
+    stream : Reference or None
+        Of the survey of the empty tunnel.
+    empty : Flow or None
+        Its plane.
+    """
+
+    before: Flow
+    with_stream: Flow
+    swirl: tuple[Array, Array] | None
+    stream: Reference | None = None
+    empty: Flow | None = None
+
+
+def _plane(chain: Chain, nominal: Reduction, errors: Mapping[str, Array]) -> _Plane:
+    before = chain.flow(nominal.reference, errors)
+    swirl = swirl_gradient(chain, nominal.flow, nominal.region.mask) if chain.swirls else None
+    if chain.empty is None:
+        return _Plane(before, before, swirl)
+    own = chain.empty.chain
+    theirs = {name.removeprefix(PREFIX): array for name, array in errors.items() if name.startswith(PREFIX)}
+    stream = own.reference(theirs)
+    with_stream = replace(chain, empty=None).flow(nominal.reference, errors)
+    return _Plane(before, with_stream, swirl, stream, own.flow(stream, theirs))
+
+
 def _backwards(
-    figures: Sequence[FlowGradient], chain: Chain, nominal: Reduction, before: Flow, errors: Mapping[str, Array]
+    figures: Sequence[FlowGradient], chain: Chain, nominal: Reduction, plane: _Plane
 ) -> tuple[tuple[int, Gradient], tuple[int, Gradient]]:
     """Derivatives of some figures by the state of the points, and by that of the empty tunnel's points."""
     reference, mask = nominal.reference, nominal.region.mask
     gradient = _stacked(figures, nominal.flow)
-    gradient = before_swirl(gradient, chain, nominal.flow, mask, swirl=nominal.swirl)
-    gradient = before_zero(gradient, chain, reference, before, zero=nominal.loss_zero, mask=mask)
+    if plane.swirl is not None:
+        gradient = before_swirl(gradient, chain, nominal.flow, swirl=nominal.swirl, by_crossflow=plane.swirl)
+    gradient = before_zero(gradient, chain, reference, plane.before, zero=nominal.loss_zero, mask=mask)
     by_empty: Gradient = {}
-    if chain.empty is not None:
-        gradient, by_stream = before_empty_tunnel(gradient, chain, reference, before)
-        by_empty = _empty_gradient(chain.empty, by_stream, nominal, errors)
-        before = replace(chain, empty=None).flow(reference, errors)
-    gradient = before_relations(gradient, chain, reference, before)
+    if chain.empty is not None and plane.empty is not None and plane.stream is not None:
+        gradient, by_stream = before_empty_tunnel(gradient, chain, reference, plane.before)
+        by_empty = _empty_gradient(chain.empty, by_stream, nominal, plane.stream, plane.empty)
+    gradient = before_relations(gradient, chain, reference, plane.with_stream)
     return (len(figures), _to_points(gradient, chain)), (len(figures), by_empty)
 
 
 def _empty_gradient(
-    empty: EmptyTunnel, by_stream: Gradient, nominal: Reduction, errors: Mapping[str, Array]
+    empty: EmptyTunnel, by_stream: Gradient, nominal: Reduction, stream: Reference, flow: Flow
 ) -> Gradient:
     """Derivatives by the points of the empty tunnel, through its scaling and its own relations."""
-    own = empty.chain
-    theirs = {name.removeprefix(PREFIX): array for name, array in errors.items() if name.startswith(PREFIX)}
-    stream = own.reference(theirs)
-    flow = own.flow(stream, theirs)
     speed = nominal.reference.speed / stream.speed
     pressure = nominal.reference.dynamic_pressure / stream.dynamic_pressure
     grid = nominal.flow.grid
@@ -168,7 +202,7 @@ def _empty_gradient(
         if along_z is not None:
             scaled = along_z.T @ scaled
         gradient[name] = scaled if along_y is None else scaled @ along_y
-    return _to_points(before_relations(gradient, own, stream, flow), own)
+    return _to_points(before_relations(gradient, empty.chain, stream, flow), empty.chain)
 
 
 def _to_points(gradient: Gradient, chain: Chain) -> Gradient:
@@ -432,11 +466,13 @@ def _by_input(
         above, below = _state_field(up, field), _state_field(down, field)
         if above is None or below is None:
             continue
-        slope = (above - below) / (2 * step)
-        # Points without a state have no weight on the plane either.
-        np.copyto(slope, 0.0, where=~np.isfinite(slope))
+        slope = above - below
         if not slope.any():
             continue
+        slope *= 0.5 / step
+        if not np.isfinite(slope.sum()):
+            # Points without a state have no weight on the plane either.
+            np.copyto(slope, 0.0, where=~np.isfinite(slope))
         if layout.is_scalar:
             part: Array = by @ slope
         else:

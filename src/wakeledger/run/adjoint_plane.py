@@ -41,8 +41,20 @@ def _of(gradient: Mapping[str, Array], name: str) -> Array | float:
     return gradient.get(name, 0.0)
 
 
+def _counts(by: Array | float) -> bool:
+    """Whether a derivative is there: what a figure does not depend on stays zero without the figures' axis."""
+    return np.ndim(by) > 2
+
+
+def _put(gradient: Gradient, name: str, by: Array | float) -> None:
+    if _counts(by):
+        gradient[name] = np.asarray(by)
+    else:
+        gradient.pop(name, None)
+
+
 def _added(gradient: Gradient, name: str, by: Array | float) -> None:
-    if np.ndim(by):
+    if _counts(by):
         gradient[name] = gradient[name] + by if name in gradient else np.asarray(by)
 
 
@@ -95,10 +107,28 @@ def swirl_gradient(chain: Chain, flow: Flow, mask: Mask) -> tuple[Array, Array]:
     return crossflow_functional(by[0], by[1], flow, mask, boundary)
 
 
-def before_swirl(gradient: Gradient, chain: Chain, flow: Flow, mask: Mask, *, swirl: float) -> Gradient:
-    """Derivatives by the plane before the stream's swirl was taken out of it, from those by the plane after."""
-    if not chain.swirls:
-        return gradient
+def before_swirl(
+    gradient: Gradient, chain: Chain, flow: Flow, *, swirl: float, by_crossflow: tuple[Array, Array]
+) -> Gradient:
+    """Derivatives by the plane before the stream's swirl was taken out of it.
+
+    Parameters
+    ----------
+    gradient : dict of str to ndarray, shape (k, nz, ny)
+        By the plane after.
+    chain : Chain
+        The survey.
+    flow : Flow
+        The plane after.
+    swirl : float
+        What was taken out, s⁻¹.
+    by_crossflow : (ndarray, ndarray)
+        From `swirl_gradient`.
+
+    Returns
+    -------
+    dict of str to ndarray, shape (k, nz, ny)
+    """
     yy, zz = flow.grid.mesh()
     found = dict(gradient)
     if chain.settings.primary == "total_pressure" and "u" in found:
@@ -112,7 +142,7 @@ def before_swirl(gradient: Gradient, chain: Chain, flow: Flow, mask: Mask, *, sw
             _added(found, name, -share * new)
             found[f"{name} before"] = share * old
     by_swirl = np.tensordot(found["v"], zz, 2) - np.tensordot(found["w"], yy, 2)
-    from_v, from_w = swirl_gradient(chain, flow, mask)
+    from_v, from_w = by_crossflow
     for name in ("v", "w"):
         _added(found, name, found.pop(f"{name} before", 0.0))
     _added(found, "v", by_swirl[:, None, None] * from_v)
@@ -156,7 +186,7 @@ def before_zero(
             raised = total / flow.total_pressure
             by_raised = _of(found, "static_pressure") * flow.static_pressure + _of(found, "density") * flow.density
             by_zero = _of(found, "total_pressure") + by_raised / flow.total_pressure
-            found["total_pressure"] = np.asarray(by_zero - by_raised * raised / flow.total_pressure)
+            _put(found, "total_pressure", by_zero - by_raised * raised / flow.total_pressure)
             for name in ("static_pressure", "density"):
                 if name in found:
                     found[name] = found[name] * raised
@@ -166,10 +196,10 @@ def before_zero(
         by_total = 2 / reference.density * by_square
         _added(found, "total_pressure", by_total)
         _added(found, "static_pressure", -by_total)
-        by_zero = found["total_pressure"]
+        by_zero = _of(found, "total_pressure")
     else:
         found, by_zero = _before_hot_zero(found, chain, reference, flow, total)
-    if np.ndim(by_zero):
+    if _counts(by_zero):
         outer = ~mask
         if np.count_nonzero(outer) >= LEAST_SHARE * outer.size:
             # The zero is the mean loss outside the wake, which falls as the total pressure there rises.
@@ -202,7 +232,7 @@ def _before_hot_zero(
         found.pop("total_temperature", None)
         own: Array | float = 0.0
     else:
-        found["total_temperature"] = np.asarray(by_stagnation)
+        _put(found, "total_temperature", by_stagnation)
         by_raised = _of(found, "density") * flow.density * exponent * raised ** (exponent - 1)
         if "density" in found:
             found["density"] = found["density"] * raised**exponent
@@ -211,11 +241,11 @@ def _before_hot_zero(
     by_ratio = np.where(above, by_ratio * exponent * ratio, 0.0)
     by_total = by_total + by_ratio / total
     _added(found, "static_pressure", -by_ratio / flow.static_pressure)
-    found["total_pressure"] = np.asarray(by_total + own)
+    _put(found, "total_pressure", by_total + own)
     return found, np.asarray(by_total)
 
 
-def _before_speed(found: Gradient, flow: Flow, square: Array, *, directed: bool) -> tuple[Gradient, Array]:
+def _before_speed(found: Gradient, flow: Flow, square: Array, *, directed: bool) -> tuple[Gradient, Array | float]:
     """Derivatives by the plane before its speed was changed to a given square, and by that square."""
     u, v, w = (_of(found, name) for name in "uvw")
     crossflow = flow.v**2 + flow.w**2
@@ -230,13 +260,15 @@ def _before_speed(found: Gradient, flow: Flow, square: Array, *, directed: bool)
     by_square = by_factor * np.where(real, 0.5 * factor / np.where(real, square, 1.0), 0.0)
     by_factor = by_factor * (factor / before)
     for name in "uvw":
-        found[name] = _of(found, name) * factor - by_factor * getattr(flow, name)
+        _put(found, name, _of(found, name) * factor - by_factor * getattr(flow, name))
     return found, by_square
 
 
-def _before_axial(found: Gradient, flow: Flow, square: Array) -> Array:
+def _before_axial(found: Gradient, flow: Flow, square: Array) -> Array | float:
     """Undo u = √square − v² − w² in place, `square` being that of u; gives the derivative by V²."""
-    by_u = np.asarray(_of(found, "u"))
+    by_u = _of(found, "u")
+    if not _counts(by_u):
+        return 0.0
     real = square > 0
     by_square = np.where(real, by_u / (2 * np.where(real, np.copysign(np.sqrt(np.abs(square)), flow.u), 1.0)), 0.0)
     found["u"] = np.where(real, 0.0, by_u)
@@ -358,7 +390,7 @@ def _before_gas(found: Gradient, chain: Chain, reference: Reference, flow: Flow)
         power = heat / reference.gas_constant
         by_temperature = by_temperature + share * power / temperature
         by_stagnation = by_stagnation - share * power / flow.total_temperature
-    if np.ndim(by_stagnation):
+    if _counts(by_stagnation):
         for name in "uvw":
             _added(found, name, by_stagnation * getattr(flow, name) / heat)
     by_temperature = by_temperature + by_stagnation

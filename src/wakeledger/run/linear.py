@@ -27,9 +27,9 @@ from wakeledger.run.chain import Chain
 from wakeledger.run.outputs import OUTPUTS
 from wakeledger.run.reduction import Reduction, Variation
 
-#: Share of one draw of all errors at which the derivatives are tried on the chain.
-_TRIAL = 0.02
-#: By how much the change that they predict may miss, as a share of the same draw's standard deviation.
+#: Draws of all errors, and the share of them at which the derivatives are tried on the chain.
+_TRIALS, _TRIAL = 3, 0.02
+#: By how much the change that they predict may miss, as a share of the standard uncertainty at that size.
 _TRIAL_MISS = 0.02
 #: Inputs of single numbers that are differenced by whole passes move by their standard uncertainty.
 _LEAST_STEP = 1e-12
@@ -96,17 +96,17 @@ def tried(chain: Chain, slopes: Slopes, sources: Sequence[Source], layouts: Mapp
         NaN for outputs that fail, so that no figure rests on a derivative that is not the chain's own.
     """
     sampler = ErrorSampler(sources, layouts, seed=0)
-    errors = {name: _TRIAL * array for name, array in sampler.draw(0, 1).items()}
+    errors = {name: _TRIAL * array for name, array in sampler.draw(0, _TRIALS).items()}
     both = {name: np.concatenate([array, -array]) for name, array in errors.items()}
     values = chain.vectors(both)
-    found = (values[0] - values[1]) / 2
-    expected = slopes.change(errors)[0]
+    found = (values[:_TRIALS] - values[_TRIALS:]) / 2
+    expected = slopes.change(errors)
     size = _TRIAL * linear_budget(slopes, sources, layouts, names=OUTPUTS).standard_uncertainty
     rounding = 1e-9 * np.abs(values).max(axis=0)
     with np.errstate(invalid="ignore"):
         wrong = np.abs(found - expected) > _TRIAL_MISS * np.maximum(size, np.abs(expected)) + rounding
     outputs = slopes.outputs.copy()
-    outputs[wrong] = np.nan
+    outputs[wrong.any(axis=0)] = np.nan
     return replace(slopes, outputs=outputs)
 
 
