@@ -21,6 +21,7 @@ from wakeledger.ledger.cancellation import SCATTER, Difference
 from wakeledger.ledger.contributions import QUANTITIES, Contributions
 from wakeledger.ledger.increment import ordered_budget
 from wakeledger.ledger.plane_mean import plane_mean
+from wakeledger.ledger.rounding import significant
 from wakeledger.ledger.rows import COUNT, Check, Ledger, Row
 from wakeledger.run import tables
 from wakeledger.run.increment import contributions_of, declared_surveys, refuse_conflicts, unlike
@@ -277,16 +278,19 @@ def _rows(
             found.append(Row(name, value.mean, unit, *nan, of_coefficient, reason="; ".join(reasons)))
             continue
         k = known.index(name)
-        size, width = float(u[0, k]), float(half[0, k])
+        size = float(u[0, k])
+        # The row has one factor for value and coefficient: the larger one covers both.
+        factors = [half[q, k] / u[q, k] for q in (0, 1) if u[q, k] > 0]
+        factor = float(np.nanmax(factors)) if factors else math.nan
         found.append(
             Row(
                 name,
                 value.mean,
                 unit,
                 standard_uncertainty=size,
-                expanded_uncertainty=width,
-                coverage_factor=width / size if size > 0 else math.nan,
-                degrees_of_freedom=float(freedom[0, k]),
+                expanded_uncertainty=factor * size if size > 0 else 0.0,
+                coverage_factor=factor,
+                degrees_of_freedom=float(np.nanmin(freedom[:, k])),
                 coefficient=of_coefficient,
                 coefficient_standard_uncertainty=float(u[1, k]) if coefficient is not None else math.nan,
             )
@@ -316,13 +320,13 @@ def _verdicts(names: Sequence[str], means: dict[str, tuple[RepeatedMean, Repeate
         name, count = main.replace("_", " "), one.degrees_of_freedom + 1
         if one.between > 0:
             found.append(
-                f"Between the runs the {name} varies by {one.between / scale:.2g} {unit} (k = 1) beyond what was"
-                " declared."
+                f"Between the runs the {name} varies by {significant(one.between / scale, 2)} {unit} (k = 1) beyond"
+                " what was declared."
             )
         if math.isfinite(one.between_upper):
             found.append(
-                f"A variation of the {name} of up to {one.between_upper / scale:.2g} {unit} (k = 1) between the runs"
-                f" could not be told from the scatter of {count} runs."
+                f"A variation of the {name} of up to {significant(one.between_upper / scale, 2)} {unit} (k = 1) between"
+                f" the runs could not be told from the scatter of {count} runs."
             )
     return found
 
