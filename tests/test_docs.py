@@ -226,6 +226,7 @@ TABLES = {
     "`[plane.columns]`": plane_tables.ColumnsTable,
     "`[plane.axes]`": plane_tables.Axes,
     "`[probe]`": small_tables.ProbeTable,
+    "`[empty_tunnel]`": small_tables.EmptyTunnelTable,
     "`[boundary]`": small_tables.BoundaryTable,
     "`[wake]`": small_tables.WakeTable,
     "`[section]`": small_tables.SectionTable,
@@ -234,7 +235,6 @@ TABLES = {
     "`[[compare]]`": uncertainty.Comparison,
 }
 REFUSED = {
-    "empty_tunnel": small_tables.EmptyTunnelTable,
     "body": small_tables.BodyTable,
     "loading": small_tables.LoadingTable,
     "plan": small_tables.PlanTable,
@@ -278,7 +278,6 @@ BASE = (
     )
 )
 WANTS = {
-    "empty_tunnel": '[empty_tunnel]\nsurvey = "empty.toml"\n',
     "body": '[[body]]\nname = "tail"\nregion = [["-0.3 m", "0.1 m"], ["0.3 m", "0.3 m"]]\n',
     "loading": '[loading]\ntrailing_edge = [["-0.6 m", "0 m"], ["0.6 m", "0 m"]]\n',
     "plan": "[plan]\nrepeats = 2\n",
@@ -293,11 +292,10 @@ def test_what_the_page_says_is_refused_is_refused(name):
         refuse_unsupported(parse_survey(BASE + WANTS[name], "survey.toml"))
 
 
-def test_walls_and_several_planes_are_refused():
+def test_walls_and_the_empty_tunnel_are_not_refused():
     refuse_unsupported(parse_survey(BASE, "survey.toml"))
-    walls = BASE.replace('"free_air"', '"closed_walls"\ny = ["-1 m", "1 m"]\nz = ["-1 m", "1 m"]')
-    with pytest.raises(SurveyError, match="closed_walls"):
-        refuse_unsupported(parse_survey(walls, "survey.toml"))
+    walls = BASE.replace('"free_air"', '"closed_walls"\ny = ["-1 m", "1 m"]\nz = ["-1 m", "1 m"]\nreflection = "y"')
+    refuse_unsupported(parse_survey(walls + '[empty_tunnel]\nsurvey = "empty.toml"\n', "survey.toml"))
 
 
 def test_defaults_are_those_of_the_program():
