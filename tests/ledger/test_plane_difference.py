@@ -42,6 +42,18 @@ def test_planes_are_brought_onto_the_coarser_places_of_the_common_window(ledger)
     np.testing.assert_array_equal(found["wake_mask_b"] > 0, np.abs(y) < 0.31)
 
 
+def test_unknown_places_stay_unknown(ledger):
+    a = of(ledger, UniformGrid(-1.0, -0.5, 0.02, 0.05, 101, 21), 1.0)
+    b = of(ledger, UniformGrid(-0.9, -0.4, 0.05, 0.02, 31, 41), 3.0)
+    b.plane["v"] = b.plane["v"].copy(deep=True)
+    b.plane["v"].values[20, 15] = np.nan
+    found, _ = plane_difference(a, b)
+    unknown = np.isnan(found["v"].values)
+    # z = 0.0, y = -0.15.
+    assert unknown.sum() == 1 and unknown[8, 15]
+    assert not np.isnan(found["w"].values).any()
+
+
 def test_like_planes_are_subtracted_as_they_stand(ledger):
     grid = UniformGrid(-1.0, -0.5, 0.02, 0.05, 101, 21)
     found, note = plane_difference(of(ledger, grid, 1.0), of(ledger, grid, 1.0))

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 from scipy.interpolate import PchipInterpolator, RectBivariateSpline
+from scipy.ndimage import distance_transform_edt
 
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.core.plane import grid_of
@@ -166,6 +167,8 @@ def common_places(grids: Sequence[UniformGrid], axis: str) -> Array:
 def brought(field: NDArray[np.generic], grid: UniformGrid, y: Array, z: Array) -> Array:
     """A field at other places of its plane, by a bicubic spline; as it stands where they are its own.
 
+    Places nearest to an unknown one (NaN) stay unknown.
+
     Parameters
     ----------
     field : ndarray, shape (nz, ny)
@@ -182,9 +185,17 @@ def brought(field: NDArray[np.generic], grid: UniformGrid, y: Array, z: Array) -
     values = np.asarray(field, dtype=float)
     if same_places(grid.y, y) and same_places(grid.z, z):
         return values
+    unknown = ~np.isfinite(values)
+    if unknown.all():
+        return np.full((z.size, y.size), np.nan)
+    if unknown.any():
+        nearest = distance_transform_edt(unknown, return_distances=False, return_indices=True)
+        values = values[tuple(nearest)]
     orders = min(3, grid.nz - 1), min(3, grid.ny - 1)
     spline = RectBivariateSpline(grid.z, grid.y, values, kx=orders[0], ky=orders[1])
     result: Array = spline(np.clip(z, grid.z[0], grid.z[-1]), np.clip(y, grid.y[0], grid.y[-1]))
+    if unknown.any():
+        result[nearest_places(unknown, grid, y, z) > 0] = np.nan
     return result
 
 

@@ -282,7 +282,13 @@ def _build_increment(increment: Increment, folder: Path, figures: Sequence[str])
     from wakeledger.present.figures.increment import draw_increment
     from wakeledger.present.report.increment import increment_html
 
-    write_increment_archive(increment, folder / "increment.nc")
+    try:
+        write_increment_archive(increment, folder / "increment.nc")
+    except RuntimeError as error:
+        # The netCDF library reports a full disk as an error of its own.
+        if not str(error).startswith("NetCDF:"):
+            raise
+        raise OSError(errno.EIO, str(error)) from error
     texts = {
         "increment.json": json_text(increment_json(increment)),
         "increment.csv": increment_csv(increment),

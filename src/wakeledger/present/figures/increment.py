@@ -87,7 +87,7 @@ def _noise(increment: Increment, values: Array) -> float:
     if plane is None or "wake_mask_a" not in plane or "wake_mask_b" not in plane:
         return 0.0
     quiet = np.abs(values[(plane["wake_mask_a"].values == 0) & (plane["wake_mask_b"].values == 0)])
-    return 4 * 1.4826 * float(np.median(quiet)) if quiet.size else 0.0
+    return 4 * 1.4826 * float(np.nanmedian(quiet)) if np.isfinite(quiet).any() else 0.0
 
 
 def _overlay(axes: Axes, increment: Increment) -> list[object]:
