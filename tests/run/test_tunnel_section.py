@@ -132,6 +132,7 @@ def test_without_solid_blockage_that_is_said(reduced):
         (WALLS | {"reflection": "y"}, "beside a \\[section\\]"),
         (WALLS | {"buoyancy": {"value": "1 N", "standard_uncertainty": "0.1 N"}}, "does not use it"),
         (WALLS | {"solid_blockage": {"value": "0.4 %"}}, "never taken as exact"),
+        (WALLS | {"solid_blockage": {"value": "0.4", "standard_uncertainty": "0.1"}}, "is 40% of the speed"),
         (WALLS | {"solid_blockage": {"value": 0.4, "standard_uncertainty": "0.1 %"}}, "bare number"),
     ],
 )
@@ -139,6 +140,14 @@ def test_walls_that_do_not_fit_are_refused(reduced, boundary, match):
     data, _, _ = duct()
     with pytest.raises(InputError, match=match):
         reduced("walls", boundary, data)
+
+
+def test_a_supersonic_section_has_no_wall_correction(reduced):
+    data, _, _ = duct()
+    fast = {"mach": 1.4, "static_pressure": "50 kPa", "temperature": "220 K", "compressible": True}
+    absolute = {"z": data["z"], "pt": 150_000.0 - 20 * (data["pt"].max() - data["pt"]), "ps": 0 * data["ps"] + 50_000.0}
+    with pytest.raises(InputError, match="subsonic"):
+        reduced("walls", WALLS, absolute, reference=fast)
 
 
 def test_two_walls_are_not_enough_round_a_plane(kit, tmp_path):

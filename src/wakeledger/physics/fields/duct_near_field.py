@@ -56,8 +56,8 @@ def duct_near_field(
     closed = isinstance(boundary, ClosedWalls)
     first = 0 if closed else 1
     number_y, number_z = (
-        np.pi * np.arange(first, max(int(np.ceil(_FALLEN * width / (np.pi * distance))), 1) + first + 1) / width
-        for width in (y1 - y0, z1 - z0)
+        np.pi * np.arange(first, _modes(width, step, distance) + first) / width
+        for width, step in ((y1 - y0, grid.dy), (z1 - z0, grid.dz))
     )
     phase_y, phase_z = number_y[:, None] * (grid.y - y0), number_z[:, None] * (grid.z - z0)
     if closed:
@@ -78,6 +78,12 @@ def duct_near_field(
     w: Array = slope_z.T @ amplitude @ even_y
     u: Array = even_z.T @ (-k * amplitude) @ even_y
     return NearField(v, w, u)
+
+
+def _modes(width: float, step: float, distance: float) -> int:
+    """Number of modes across a section: those not yet fallen at the plane, as far as the grid resolves them."""
+    fallen, resolved = _FALLEN * width / (np.pi * distance), width / step
+    return int(np.ceil(min(fallen, resolved))) + 2
 
 
 def _rectangle(section: Section) -> tuple[tuple[float, float], tuple[float, float]]:

@@ -29,6 +29,10 @@ if TYPE_CHECKING:
     from wakeledger.run.config.tables import BoundaryTable
 
 
+#: A larger share of the speed is no correction any more, or lacks its per cent sign.
+_LARGEST_SHARE = 0.1
+
+
 @dataclass(frozen=True)
 class TunnelInput:
     """One given value as the chain takes it.
@@ -127,8 +131,12 @@ class GivenShare(GivenValue):
 
     @model_validator(mode="after")
     def _is_small(self) -> GivenShare:
-        if not abs(self.value) < 0.5:
-            raise fail(f"{self.written_value!r} is not allowed", "a share of the speed below 50 % is needed", "value")
+        if not abs(self.value) < _LARGEST_SHARE:
+            raise fail(
+                f"{self.written_value!r} is {self.value:.0%} of the speed",
+                f"a share below {_LARGEST_SHARE:.0%} is needed, as in '0.3 %': corrections are for small models",
+                "value",
+            )
         return self
 
 

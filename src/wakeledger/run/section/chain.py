@@ -10,7 +10,7 @@ from typing import Literal
 
 import numpy as np
 
-from wakeledger.core.errors import DataError, InputError
+from wakeledger.core.errors import DataError, InputError, SurveyError
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Channel, Points
 from wakeledger.intake.gridding.line import Line
@@ -350,6 +350,12 @@ class SectionChain:
             return None
         solid = settings.solid_blockage + float(errors.get("boundary.solid_blockage", 0.0))
         mach = reference.mach if settings.compressible else 0.0
+        if not mach < 1:
+            raise SurveyError(
+                f"the stream's Mach number is {mach:.3g}",
+                place="[boundary] kind",
+                remedy='the wall corrections of a section are for subsonic streams: write "free_air"',
+            )
         return SectionWalls(settings.chord, settings.height, solid, mach)
 
     def vectors(self, errors: dict[str, Array], *, vary: SectionVariation = _AS_FOUND) -> Array:
