@@ -16,6 +16,7 @@ from wakeledger.core.grid import Array
 from wakeledger.core.plane import make_plane
 from wakeledger.intake.probe.record import Calibration
 from wakeledger.intake.state import State, nonphysical
+from wakeledger.physics.fields.boundary import Boundary, Circle, ClosedWalls, FreeAir
 from wakeledger.physics.fields.differences import axial_vorticity, crossflow_divergence
 from wakeledger.physics.fields.outer_flow import LEAST_SHARE
 from wakeledger.physics.loading.span import SpanLoading
@@ -32,6 +33,8 @@ if TYPE_CHECKING:
 
 #: Doubt about a predicted difference as a fraction of it (k = 1): the bound line is taken as straight and level.
 EXPECTED_DOUBT = 0.2
+#: Corners of the polygon that stands for a circular section.
+_CIRCLE_CORNERS = 72
 _PACKAGES = ("wakeledger", "numpy", "scipy", "xarray", "netCDF4", "pandas", "pint", "pydantic")
 
 
@@ -58,7 +61,41 @@ def plane_table(chain: Chain, nominal: Reduction) -> xr.Dataset:
         fields["density"] = np.asarray(flow.density)
         heat = 2 * reference.heat_capacity
         fields["temperature"] = flow.total_temperature - (flow.u**2 + flow.v**2 + flow.w**2) / heat
-    return make_plane(flow.grid, fields, station=chain.settings.station)
+    return make_plane(flow.grid, fields, station=chain.settings.station).assign_attrs(
+        section_attributes(chain.settings.boundary)
+    )
+
+
+def section_attributes(boundary: Boundary) -> dict[str, str | Array]:
+    """What surrounds the plane, as attributes of its table.
+
+    Parameters
+    ----------
+    boundary : FreeAir, ClosedWalls or OpenJet
+        What surrounds it.
+
+    Returns
+    -------
+    dict
+        Empty in free air without a reflection plane. Else ``boundary`` and ``reflection`` ("y", "z" or empty), and of
+        walls or a jet the corners of the whole section, ``section_y`` and ``section_z``, m, once around.
+    """
+    if isinstance(boundary, FreeAir):
+        return {"boundary": "free_air", "reflection": boundary.reflection} if boundary.reflection else {}
+    section = boundary.section
+    if isinstance(section, Circle):
+        angle = np.linspace(0, 2 * np.pi, _CIRCLE_CORNERS, endpoint=False)
+        y, z = (
+            centre + section.diameter / 2 * f(angle) for centre, f in zip(section.centre, (np.cos, np.sin), strict=True)
+        )
+    else:
+        y, z = section.corners.T
+    return {
+        "boundary": "closed_walls" if isinstance(boundary, ClosedWalls) else "open_jet",
+        "reflection": boundary.reflection or "",
+        "section_y": np.array(y),
+        "section_z": np.array(z),
+    }
 
 
 def out_of_range(chain: Chain) -> NDArray[np.bool_]:
