@@ -140,8 +140,8 @@ def checked(plan: Plan) -> str:
     stated = ""
     if plan.stated > 1.05 * plan.expanded_uncertainty:
         stated = (
-            f" The ledger of such a survey would state U95 = {with_unit(plan, plan.stated, 2)}, because it counts the"
-            " noise in the zeros of the outer flow once more."
+            f" The ledger of such a survey would state U95 = {with_unit(plan, plan.stated, 2)}, because its"
+            " numerical terms hold noise that the declared sources hold already."
         )
     return (
         f"A full Monte Carlo of {plan.draws} draws gives the declared sources {percent:+.1f} % against their"

@@ -87,7 +87,7 @@ def _ranges(survey: Survey, plane: Any, path: Path) -> dict[str, Any]:
     rows, columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
     if not rows.size:
         raise SurveyError("it holds no wake", file=path, remedy="plan from a loading")
-    room = min(y[columns[0]] - y[0], y[-1] - y[columns[-1]], z[rows[0]] - z[0], z[-1] - z[rows[-1]])
+    room = float(min(y[columns[0]] - y[0], y[-1] - y[columns[-1]], z[rows[0]] - z[0], z[-1] - z[rows[-1]]))
     spacing = float(max(np.diff(y).min(), np.diff(z).min()))
     declared = _declared(survey)
     if "hole_noise" not in declared and not {"noise", "total_pressure_noise"} <= set(declared):

@@ -359,7 +359,8 @@ def _halves(lines: Sequence[PlanLine], design: Design, choice: Choice) -> dict[s
     noise = sum(of.get(name, 0.0) for name in NOISES)
     halves = {"probe's noise": noise}
     if math.isnan(design.probes[choice.probe].hole):
-        halves |= {f"{name} alone": of.get(name, 0.0) for name in NOISES}
+        # Where one of them is all there is, it is not said twice.
+        halves |= {f"{name} alone": of[name] for name in NOISES if 0 < of.get(name, 0.0) < 0.999 * noise}
     else:
         halves = {"noise of the holes": noise}
     words = {DYNAMIC: "error of the dynamic pressure", DENSITY: "error of the density"}

@@ -14,10 +14,11 @@ from wakeledger.core.errors import InputError
 from wakeledger.core.grid import Array
 from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
 from wakeledger.run.adjoint import input_gradients, point_gradient
+from wakeledger.run.chain import Chain
 from wakeledger.run.checks import all_checks
 from wakeledger.run.config import Survey
 from wakeledger.run.inputs import layouts, sources
-from wakeledger.run.numerics import LOSS_ZERO, OFFSET_ZERO
+from wakeledger.run.numerics import LOSS_ZERO, MASK, OFFSET_ZERO, SWEEP
 from wakeledger.run.outputs import OUTPUTS
 from wakeledger.run.planning.flow import ExpectedFlow
 from wakeledger.run.planning.instrument import Probe
@@ -68,7 +69,7 @@ class Response:
     systematic : mapping of str to Power
         From each systematic source, by its key in ``[plan]``.
     numerical : mapping of str to float
-        Of each numerical term, by its name, that repeating does not make smaller.
+        Of each numerical term, by its name, in a survey without noise.
     averaged : mapping of str to float
         The part of each term that is the probe's own noise. The declared noise holds it already, so that it is none of
         the scatter; a ledger states it all the same.
@@ -212,7 +213,7 @@ class _Pass:
             mask=mask,
             near_field=chain.near_field(exact.vorticity, exact.flow.grid),
         )
-        self.fixed, self.averaged = _split(terms, prepared.outer, zeros, at)
+        self.fixed, self.averaged = _split(terms, prepared.outer, zeros, self._edge(still), at)
         self.failing = tuple(
             check.name for check in all_checks(prepared.nominal, _facts(prepared)) if check.verdict == "fail"
         )
@@ -225,6 +226,15 @@ class _Pass:
         self.systematic = {
             key: _per_unit(self._shifted(name), float(getattr(largest, key))) for name, key in SYSTEMATIC.items()
         }
+
+    def _edge(self, still: Chain) -> float:
+        """What another edge of the wake region would make of a survey without noise, as its numerical term has it."""
+        chain, own = self.prepared.chain, self.prepared.nominal.region.mask
+        regions = [chain.reduce(vary=Variation(grow_factor=factor), estimates=False).region.mask for factor in SWEEP]
+        same, *others = (
+            float(still.reduce(vary=Variation(mask=mask), estimates=False).vector[self.at]) for mask in (own, *regions)
+        )
+        return max(abs(other - same) for other in others) / float(np.sqrt(3))
 
     def _errors(self, name: str) -> SourceErrors | None:
         source = next((one for one in self.sources if one.name == name), None)
@@ -285,12 +295,12 @@ def _per_unit(variances: tuple[float, float], size: float) -> tuple[float, float
 
 
 def _split(
-    terms: Sequence[NumericalTerm], noisy: OuterFlow, still: OuterFlow, at: int
+    terms: Sequence[NumericalTerm], noisy: OuterFlow, still: OuterFlow, edge: float, at: int
 ) -> tuple[dict[str, float], dict[str, float]]:
-    """Squares of the terms as far as repeating does not, and as far as it does make them smaller.
+    """Squares of the terms without the survey's own noise, and what that adds.
 
-    The zeros found in the outer flow are uncertain by the noise there, which averages out, and by what the flow itself
-    differs from the one expected.
+    The zeros found in the outer flow are uncertain by the noise there and by what the flow itself differs from the one
+    expected; an edge of the wake region found anew takes in other noise and other parts of the wake.
     """
     fixed, averaged = {}, {}
     lasting = {
@@ -303,9 +313,9 @@ def _split(
             continue
         without, with_noise = lasting.get(term.name, (1.0, 1.0))
         share = min(1.0, (without / with_noise) ** 2) if with_noise > 0 else 1.0
-        fixed[term.name] = square * share
-        if share < 1:
-            averaged[term.name] = square * (1 - share)
+        fixed[term.name] = edge**2 if term.name == MASK else square * share
+        if fixed[term.name] < square:
+            averaged[term.name] = square - fixed[term.name]
     return fixed, averaged
 
 
