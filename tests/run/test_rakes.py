@@ -1,5 +1,6 @@
 """Rakes of several tubes from readings to the ledger: the same rows as one probe, offsets found, pitots alone."""
 
+import dataclasses
 import runpy
 from pathlib import Path
 from types import SimpleNamespace
@@ -215,6 +216,54 @@ def test_a_lag_is_taken_out_of_each_tube_along_its_own_way(kit, wake, exact, pro
     # 20 mm of lag on a core of 50 mm, rows to and fro, cost 2 % of the induced drag; a tenth of it is left.
     assert abs(left["induced_drag"] / exact["induced_drag"] - 1) > 0.01
     assert found["induced_drag"] == pytest.approx(exact["induced_drag"], rel=3e-3)
+
+
+def test_each_tube_has_a_misalignment_of_its_own(kit, wake, exact, calibrated, write, tmp_path):
+    tubes, tables = calibrated
+    angles = np.array([0.4, -0.3, 0.0, 0.2, -0.1])
+    turned = [
+        dataclasses.replace(tube, conditions=dataclasses.replace(tube.conditions, head_pitch=np.radians(angle)))
+        for tube, angle in zip(tubes, angles, strict=True)
+    ]
+    own = [{**table, "misalignment": "outer_flow"} for table in tables]
+    prepared = prepare(load(write(tmp_path, wake, turned, own, rows_of(kit, 5, 5))))
+    found = np.degrees([tube.turn.pitch for tube in prepared.chain.traverse.tubes])
+    # The outer flow of a fifth of the points: the crossflow of the wake itself is known to some 0.01 deg there.
+    assert found == pytest.approx(angles, abs=0.02)
+    assert prepared.nominal.values["induced_drag"] == pytest.approx(exact["induced_drag"], rel=3e-3)
+    source = next(one for one in prepared.sources if one.name == "misalignment of the probe (correction)")
+    assert len(source.applies_to) == 10 and "correction.misalignment.tube 3.yaw" in source.applies_to
+    said = next(note for note in prepared.notes if "as the outer flow shows" in note)
+    assert "tube 1 +0.4" in said and "counts of total drag, +-" in said
+    reference = prepared.nominal.reference
+    first = prepared.chain.state(reference, {"correction.misalignment.tube 1.pitch": 1.0}).w
+    changed = first != prepared.chain.state(reference).w
+    assert np.array_equal(np.flatnonzero(changed), np.sort(prepared.chain.traverse.tubes[0].points))
+
+
+def test_rows_to_and_fro_of_a_rake_are_held_against_each_other(kit, wake, calibrated, write, tmp_path):
+    tubes, tables = (both[:2] for both in calibrated)
+    late = [dataclasses.replace(tube, conditions=dataclasses.replace(tube.conditions, backlash=8e-3)) for tube in tubes]
+    at = rows_of(kit, 2, 2)
+    said = [note for note in prepare(load(write(tmp_path, wake, late, tables, at))).notes if "to and fro" in note]
+    assert len(said) == 1
+    assert float(said[0].split("apart by ")[1].split(" mm")[0]) == pytest.approx(8.0, abs=0.4)
+    clean = prepare(load(write(tmp_path / "clean", wake, tubes, tables, at)))
+    assert not any("to and fro" in note for note in clean.notes)
+
+
+def test_a_wall_takes_speed_from_the_tubes_that_come_near_it(kit, wake, calibrated, write, tmp_path):
+    tubes, tables = calibrated
+    own = [{**table, "tip_diameter": "6 mm", "displacement": 0, "walls": {"z": "-0.705 m"}} for table in tables]
+    prepared = prepare(load(write(tmp_path, wake, tubes, own, rows_of(kit, 5, 5))))
+    assert any("The nearness of walls (" in note and "Tube 1: " in note for note in prepared.notes)
+    assert sum("there is nothing to correct" in note for note in prepared.notes) == 1
+    reference = prepared.nominal.reference
+    more = prepared.chain.state(reference, {"correction.wall proximity": 1.0}).u - prepared.chain.state(reference).u
+    near = prepared.chain.points.z < -0.69
+    # Half of 0.015 exp(−3.5 (5/6 − 0.5)).
+    assert more[near] == pytest.approx(20.0 * 0.015 * np.exp(-3.5 / 3), rel=0.05)
+    assert not np.any(more[~near])
 
 
 def test_a_polar_traverse_needs_no_turning_of_the_directions(kit, raw, wake, exact, probes, tmp_path):

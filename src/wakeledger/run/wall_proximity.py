@@ -60,8 +60,8 @@ def wall_correction(
     near = int(np.count_nonzero(distance < REACH * diameter))
     if not near:
         return None, (
-            f"No point lies within {REACH:g} tip diameters of a wall, the nearest at {1e3 * distance.min():.3g} mm:"
-            " there is nothing to correct for the nearness of walls."
+            f"No point lies within {REACH:g} tip diameters of a wall: there is nothing to correct for the nearness of"
+            " walls."
         )
     return correction, (
         f"The nearness of walls ({near} of {points.n} points within {REACH:g} tip diameters, the nearest at"
