@@ -90,6 +90,7 @@ ROWS: Mapping[str, Variable] = _table(
     induced_drag_free_air=Variable("induced drag the same wake has in free air, positive downstream", "N"),
     wave_drag=Variable("wave drag, positive downstream", "N"),
     residual_drag=Variable("drag of the axial velocity disturbance and the crossflow's divergence, paired", "N"),
+    numerical_drag=Variable("drag of the loss away from wake and shock, in no other row, positive downstream", "N"),
     total_drag=Variable("total drag, positive downstream", "N"),
     lift=Variable("lift, positive up", "N"),
     side_force=Variable("side force, positive to starboard", "N"),

@@ -26,14 +26,16 @@ from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.duct_near_field import duct_near_field
 from wakeledger.physics.fields.flow import Flow
 from wakeledger.physics.fields.lifting_line import NearField, near_field
-from wakeledger.physics.fields.outer_flow import induced_crossflow, loss_zero, stream_swirl
+from wakeledger.physics.fields.loss_level import beyond
+from wakeledger.physics.fields.outer_flow import LEAST_SHARE, induced_crossflow, loss_zero, stream_swirl
 from wakeledger.physics.fields.pressure import crossflow_pressure
-from wakeledger.physics.fields.wake_region import Mask, WakeRegion, region_of, wake_region
+from wakeledger.physics.fields.wake_region import Mask, WakeRegion, grown_region, region_of, wake_region
 from wakeledger.physics.fields.wall_correction import wall_stream_function
 from wakeledger.physics.methods.betz_area import loss_free_axial_velocity, profile_integrand
 from wakeledger.physics.methods.maskell import wake_deficit, with_blockage
 from wakeledger.physics.methods.residual import residual_drag
 from wakeledger.physics.methods.vorticity_area import VorticityForces, vorticity_forces
+from wakeledger.physics.methods.wave_split import wave_split
 from wakeledger.run.coefficients import coefficients, tunnel_figures
 from wakeledger.run.empty_tunnel import EmptyTunnel
 from wakeledger.run.estimates import area_estimates, on_frozen_geometry, without_walls
@@ -270,7 +272,7 @@ class Chain:
         whole_vorticity = axial_vorticity(flow.v, flow.w, grid)
         region = self._region(loss, whole_vorticity, grid, vary)
         mask = region.mask
-        zero = loss_zero(loss, mask) + vary.loss_shift
+        zero = loss_zero(loss, ~zero_places(mask, grid, settings.zero_beyond)) + vary.loss_shift
         measured = flow
         flow = zeroed(flow, reference, zero, primary=settings.primary, measured=self.measured, directed=self.directed)
         if flow.v is not measured.v:
@@ -304,11 +306,20 @@ class Chain:
         free_air = float(forces.free_air_drag) - bias.get("induced_drag", 0.0)
         residual = divergence_part + axial_part - bias.get("residual_drag", 0.0)
         values = dict.fromkeys(OUTPUTS, np.nan)
+        wave, split_uncertainty = 0.0, 0.0
+        if self.frozen.shock_level is not None:
+            split = wave_split(flow, reference, level=self.frozen.shock_level)
+            wave, split_uncertainty = (settings.counted * one for one in (split.wave_drag, split.split_uncertainty))
+            profile -= wave
+            values["wave_drag"] = wave
+        if settings.computed:
+            beside = np.where(mask, 0.0, profile_integrand(flow, reference, loss_free))
+            values["numerical_drag"] = settings.counted * float(grid.integrate(beside))
         values |= {
             "profile_drag": profile,
             "induced_drag": induced,
             "residual_drag": residual,
-            "total_drag": profile + induced + residual,
+            "total_drag": profile + induced + wave + residual,
             "lift": float(forces.lift),
             "side_force": float(forces.side_force),
             "rolling_moment": float(forces.rolling_moment),
@@ -356,6 +367,7 @@ class Chain:
             (divergence_part, axial_part),
             blockage,
             swirl,
+            split_uncertainty,
         )
 
     def vectors(self, errors: Mapping[str, Array], *, estimates: bool = True) -> Array:
@@ -409,15 +421,13 @@ class Chain:
         grow = settings.grow
         if grow is None:
             grow = default_grow(self.gridding)
-        return wake_region(
-            loss,
-            vorticity,
-            grid,
-            level=settings.level,
-            grow=grow * vary.grow_factor,
-            include=region_of(settings.include, grid) if settings.include else None,
-            exclude=region_of(settings.exclude, grid) if settings.exclude else None,
-        )
+        grow *= vary.grow_factor
+        include = region_of(settings.include, grid) if settings.include else None
+        exclude = region_of(settings.exclude, grid) if settings.exclude else None
+        if settings.core is not None:
+            core = sampled_mask(settings.core[1], settings.core[0], grid)
+            return grown_region(core, grid, grow=grow, include=include, exclude=exclude)
+        return wake_region(loss, vorticity, grid, level=settings.level, grow=grow, include=include, exclude=exclude)
 
     def _unswirled(self, flow: Flow, vorticity: Array, mask: Mask, vary: Variation) -> tuple[Flow, Array, float]:
         """The plane without the stream's own rotation, as it shows outside the wake in a tunnel not surveyed empty."""
@@ -454,6 +464,16 @@ class Chain:
         return near_field(vorticity, grid, distance=distance)
 
 
+def zero_places(mask: Mask, grid: UniformGrid, distance: float) -> Mask:
+    """Places at which the zero of the total pressure is taken: so far from the wake region, if enough is left there."""
+    if distance > 0:
+        far = beyond(mask, grid, distance)
+        if far.mean() >= LEAST_SHARE:
+            return far
+    outside: Mask = ~mask
+    return outside
+
+
 def turned_crossflow(mask: Mask, grid: UniformGrid, boundary: Boundary) -> Array:
     """Crossflow that the vorticity 2 s⁻¹ of a unit rotation of the stream induces from the wake region, (2, nz, ny)."""
     return induced_crossflow(wall_stream_function(np.where(mask, 2.0, 0.0), grid, boundary), grid)
@@ -472,7 +492,8 @@ def default_grow(gridding: Gridding) -> float:
 
 
 def sampled_mask(mask: Mask, grid: UniformGrid, onto: UniformGrid) -> NDArray[np.bool_]:
-    """A wake region brought onto another grid of the same plane, by nearest place."""
-    iz = np.clip(np.rint((onto.z - grid.z0) / grid.dz).astype(int), 0, grid.nz - 1)
-    iy = np.clip(np.rint((onto.y - grid.y0) / grid.dy).astype(int), 0, grid.ny - 1)
-    return mask[np.ix_(iz, iy)]
+    """A wake region brought onto another grid of the same plane, by nearest place; none beyond its own grid."""
+    iz, iy = np.rint((onto.z - grid.z0) / grid.dz).astype(int), np.rint((onto.y - grid.y0) / grid.dy).astype(int)
+    inside = np.outer((iz >= 0) & (iz < grid.nz), (iy >= 0) & (iy < grid.ny))
+    found: Mask = mask[np.ix_(np.clip(iz, 0, grid.nz - 1), np.clip(iy, 0, grid.ny - 1))] & inside
+    return found

@@ -9,8 +9,10 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
+from numpy.typing import NDArray
 
 from wakeledger.core.errors import DataError, SurveyError
+from wakeledger.core.grid import UniformGrid
 from wakeledger.core.names import VARIABLES
 from wakeledger.core.points import Points
 from wakeledger.intake.probe.record import Calibration
@@ -52,6 +54,8 @@ class SurveyInput:
         Surveys that this one names: the tunnel without the model ("empty_tunnel"), the support alone ("support_tare").
     tare : TunnelInput or None
         What the survey of the support came to, N, of both halves of a half model.
+    core : (UniformGrid, ndarray of bool) or None
+        The wake region before it is grown, where it is common to several planes.
     stations : tuple of SurveyInput
         The survey of each plane by itself, where there are several; `points` are then those of the first.
     """
@@ -64,12 +68,18 @@ class SurveyInput:
     read: Points | None = None
     companions: Mapping[str, SurveyInput] = field(default_factory=dict)
     tare: TunnelInput | None = None
+    core: tuple[UniformGrid, NDArray[np.bool_]] | None = None
     stations: tuple[SurveyInput, ...] = ()
 
     @property
     def empty_tunnel(self) -> SurveyInput | None:
         """The survey of the tunnel without the model."""
         return self.companions.get(EMPTY_TUNNEL)
+
+    @property
+    def computed(self) -> bool:
+        """Whether the points come from a computed flow: from a mesh, or cut out of a volume."""
+        return self.points.triangles is not None or self.points.areas is not None or bool(self.points.how)
 
     @property
     def given(self) -> dict[str, TunnelInput]:

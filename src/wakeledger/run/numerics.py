@@ -31,6 +31,7 @@ OFFSET_ZERO = "zero of the flow angles"
 SWIRL = "rotation of the stream"
 CUT = "inboard cut"
 PAIR = "bound vortex in the residual"
+SPLIT = "border between profile and wave drag"
 PRESSURE = "static pressure that was not measured"
 METHOD = "choices inside {}"
 
@@ -107,6 +108,8 @@ def numerical_terms(
     if chain.settings.primary == "velocity" and not {"total_pressure", "static_pressure"} & chain.measured:
         terms.append(_pressure_term(chain, nominal))
     terms.append(_pair_term(nominal))
+    if nominal.split_uncertainty:
+        terms.append(_split_term(nominal))
     for name, value in method_uncertainty.items():
         vector = np.zeros(len(OUTPUTS))
         vector[OUTPUTS.index(name)] = value if np.isfinite(value) else 0.0
@@ -189,6 +192,17 @@ def _pair_term(nominal: Reduction) -> NumericalTerm:
         coefficient, value = nominal.values[coefficient_of(row)], nominal.values[row]
         vector[OUTPUTS.index(coefficient_of(row))] = np.nan_to_num(doubt * coefficient / value) if value else 0.0
     return NumericalTerm(PAIR, vector)
+
+
+def _split_term(nominal: Reduction) -> NumericalTerm:
+    """The border between profile and wave drag: what one gains, the other loses."""
+    vector = np.zeros(len(OUTPUTS))
+    for row, sign in (("profile_drag", -1.0), ("wave_drag", 1.0)):
+        vector[OUTPUTS.index(row)] = sign * nominal.split_uncertainty
+        coefficient, value = nominal.values[coefficient_of(row)], nominal.values[row]
+        scale = coefficient / value if value else np.nan
+        vector[OUTPUTS.index(coefficient_of(row))] = np.nan_to_num(sign * nominal.split_uncertainty * scale)
+    return NumericalTerm(SPLIT, vector)
 
 
 def _gap_term(chain: Chain, nominal: Reduction, regrid: Regrid) -> NumericalTerm:

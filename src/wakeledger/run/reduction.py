@@ -8,7 +8,7 @@ from types import MappingProxyType
 
 import numpy as np
 
-from wakeledger.core.grid import Array
+from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.boundary import Boundary, ClosedWalls, FreeAir, Reflection
 from wakeledger.physics.fields.flow import Flow
 from wakeledger.physics.fields.lifting_line import NearField
@@ -59,6 +59,12 @@ class Settings:
         ``boundary.support_tare`` in N), SI.
     model_place : (float, float) or None
         y and z of the model between the walls, m.
+    computed : bool
+        Whether the plane is from a computed flow, with entropy of its own making away from wake and shock.
+    zero_beyond : float
+        How far from the wake region the zero of the total pressure is taken, m.
+    core : (UniformGrid, ndarray of bool) or None
+        The wake region before it is grown, common to several planes; None to find it on the plane itself.
     """
 
     reference: Mapping[str, float]
@@ -79,6 +85,9 @@ class Settings:
     boundary: Boundary = FREE_AIR
     given: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
     model_place: tuple[float, float] | None = None
+    computed: bool = False
+    zero_beyond: float = 0.0
+    core: tuple[UniformGrid, Mask] | None = None
 
     @property
     def reflection(self) -> Reflection | None:
@@ -119,6 +128,8 @@ class Frozen:
         Noise bias of each output, in its unit, subtracted from it.
     turned : ndarray, shape (2, nz, ny), or None
         Crossflow that a unit rotation of the stream leaves behind through the wake region.
+    shock_level : float or None
+        Loss above which smooth loss outside the viscous wake is a shock's, Pa; None where no shock is looked for.
 
     Notes
     -----
@@ -133,6 +144,7 @@ class Frozen:
     region: Mask | None = None
     bias: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
     turned: Array | None = None
+    shock_level: float | None = None
 
 
 @dataclass(frozen=True)
@@ -194,6 +206,8 @@ class Reduction:
         Velocity u_b that the wake adds at the model between closed walls, m/s.
     swirl : float
         Solid rotation of the stream found outside the wake and taken out, s⁻¹, counter-clockwise seen from behind.
+    split_uncertainty : float
+        Standard uncertainty of the border between profile and wave drag, N.
     """
 
     reference: Reference
@@ -210,6 +224,7 @@ class Reduction:
     residual_parts: tuple[float, float]
     wake_blockage: float = 0.0
     swirl: float = 0.0
+    split_uncertainty: float = 0.0
 
     @property
     def drag(self) -> str:

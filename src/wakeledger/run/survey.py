@@ -20,6 +20,8 @@ from wakeledger.core.grid import Array
 from wakeledger.ledger.inspection import Inspection
 from wakeledger.ledger.propagation import Propagation
 from wakeledger.ledger.rows import Check, CrossCheck, KeptSurvey, Ledger, Row
+from wakeledger.physics.fields.entropy import entropy_loss
+from wakeledger.physics.fields.loss_level import loss_level
 from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
 from wakeledger.physics.loading.span import span_loading
 from wakeledger.physics.methods.energy_area import crossflow_energy
@@ -38,7 +40,7 @@ from wakeledger.run.assembly import (
     made_unknown,
     require_rows,
 )
-from wakeledger.run.chain import Chain, turned_crossflow
+from wakeledger.run.chain import Chain, turned_crossflow, zero_places
 from wakeledger.run.checks import Facts, all_checks
 from wakeledger.run.config.tunnel import GIVEN, TunnelInput
 from wakeledger.run.estimates import counted_mask, without_walls
@@ -71,6 +73,10 @@ _SEES_THE_BOUND_VORTEX = {
     ("induced_drag", "wake_line"),
     ("total_drag", "momentum_area"),
 }
+#: What sums of cells and sums of differences may differ by on the same vorticity, as a share.
+DISCRETISATION = 1e-4
+#: A shock's loss stands this many times above the noise and wander of the outer flow, and above this share of q.
+_SHOCK_LEVELS, _SHOCK_FLOOR = 5.0, 1e-4
 _UNBALANCED = "the net circulation is not zero, so the induced drag depends on where the window ends"
 #: Outputs that hang on the induced drag.
 _INDUCED = ("induced_drag", "induced_drag_free_air", "total_drag", "span_efficiency")
@@ -165,6 +171,8 @@ def reduce(
             samples, budget = found.samples, found.budget
         except InputError as error:
             raise error.located(file=survey.survey.path) from error
+    elif survey.computed and prepared.nominal.region.mask.any():
+        samples, budget = _numerical_only(prepared, _terms(prepared, survey), draws=count, seed=uncertainty.seed)
     checks = all_checks(prepared.nominal, _facts(prepared))
     if samples is not None and any(check.name == "net_circulation" and check.verdict == "fail" for check in checks):
         samples = made_unknown(samples, _INDUCED, _UNBALANCED)
@@ -258,6 +266,7 @@ def _prepare(survey: SurveyInput) -> Prepared:
     inputs |= of_tunnel
     if any(name.startswith("position.") for name in names):
         chain = replace(chain, gradients=gradients(chain))
+    chain = replace(chain, frozen=replace(chain.frozen, shock_level=_shock_level(chain, first)))
     plain = chain.reduce()
     noises, noise_notes = _noises(chain, plain, declared, inputs, seed=file.uncertainty.seed)
     chain = replace(chain, frozen=replace(chain.frozen, bias=noise_bias(chain, plain, noises)))
@@ -273,16 +282,40 @@ def _prepare(survey: SurveyInput) -> Prepared:
         near_field=near_field,
         turned=turned if chain.swirls else None,
     )
+    level = loss_level(
+        reference.total_pressure - nominal.flow.total_pressure,
+        nominal.flow.grid,
+        mask=nominal.region.mask,
+        outer=zero_places(nominal.region.mask, nominal.flow.grid, chain.settings.zero_beyond),
+    )
+    outer = replace(outer, loss_zero_uncertainty=float(level.zero_uncertainty))
     expected = _expected(chain, nominal)
     made = () if raw is None else traverse_notes(raw, chain, nominal)
+    said = file.notes()
+    if survey.computed:
+        said = [note for note in said if not note.startswith("[[uncertainty.source]]")]
     notes = (
-        *file.notes(),
+        *said,
         *made,
         *tables.notes(survey, chain, nominal, gridded.state),
         *tunnel_notes(survey, chain, nominal),
         *noise_notes,
     )
     return Prepared(chain, nominal, outer, line, vortices, expected, declared, inputs, noises, notes)
+
+
+def _shock_level(chain: Chain, first: Reduction) -> float | None:
+    """Loss above which smooth loss beside the wake of a computed compressible plane is a shock's, Pa."""
+    reference, grid = first.reference, first.flow.grid
+    if not (chain.settings.computed and reference.compressible):
+        return None
+    loss = entropy_loss(first.flow, reference)
+    mask = first.region.mask
+    found = loss_level(loss, grid, mask=mask, outer=zero_places(mask, grid, chain.settings.zero_beyond))
+    wander = float(np.hypot(found.noise, found.wander))
+    if not math.isfinite(wander):
+        return None
+    return max(_SHOCK_LEVELS * wander, _SHOCK_FLOOR * reference.dynamic_pressure)
 
 
 def _line(chain: Chain, nominal: Reduction) -> WakeLine:
@@ -379,6 +412,7 @@ def _method_uncertainty(prepared: Prepared) -> dict[str, float]:
     found = {
         estimate_of("induced_drag", "vortex_sum"): prepared.vortices.method_uncertainty,
         estimate_of("profile_drag", "entropy_area"): expansion_doubt(flow, reference, nominal.profile_integrand),
+        estimate_of("lift", "wake_line"): DISCRETISATION * abs(nominal.values["lift"]),
     }
     if chain.frozen.cuts is not None and near is not None:
         # The bound vortex makes families of paths differ as predicted; what is left over is the method's doubt.
@@ -444,6 +478,15 @@ def _propagate(
     noisy = {noise.name for noise in prepared.noises if sum(noise.variance) >= NEGLIGIBLE * whole}
     linear = survey_budget(chain, nominal, slopes, given, inputs, noisy=noisy, components=budget.components)
     return Propagated(add_terms(plain, terms, seed=seed), budget, plain, predicted, linear)
+
+
+def _numerical_only(
+    prepared: Prepared, terms: Sequence[NumericalTerm], *, draws: int, seed: int
+) -> tuple[Samples, Budget]:
+    """Nothing was measured in a computed flow: numerical terms are all the uncertainty there is."""
+    plain = Samples(OUTPUTS, np.tile(prepared.nominal.vector, (draws, 1)))
+    budget = make_budget(prepared.chain.vectors, (), {}, plain, seed=seed, terms=terms)
+    return add_terms(plain, terms, seed=seed), budget
 
 
 def _ledger(

@@ -12,9 +12,7 @@ from wakeledger.physics.fields.flow import Flow
 from wakeledger.stream.reference import Reference
 
 
-def zeroed(
-    flow: Flow, reference: Reference, zero: float, *, primary: str, measured: Set[str], directed: bool
-) -> Flow:
+def zeroed(flow: Flow, reference: Reference, zero: float, *, primary: str, measured: Set[str], directed: bool) -> Flow:
     """The plane with a constant added to its total pressure.
 
     Parameters

@@ -130,6 +130,36 @@ def wake_region(
     return WakeRegion(mask, zero, loss_noise, vorticity_noise, loss_level, vorticity_level, reach)
 
 
+def grown_region(
+    core: Mask, grid: UniformGrid, *, grow: float, include: Mask | None = None, exclude: Mask | None = None
+) -> WakeRegion:
+    """A wake region from a core that is known already.
+
+    Parameters
+    ----------
+    core : ndarray of bool, shape (nz, ny)
+        The region before it is grown.
+    grid : UniformGrid
+        The grid.
+    grow : float
+        Distance by which it is grown, m.
+    include, exclude : ndarray of bool, shape (nz, ny), optional
+        As in `wake_region`.
+
+    Returns
+    -------
+    WakeRegion
+        Without noise and levels (NaN).
+    """
+    mask = ndimage.binary_fill_holes(_grown(core, grid, grow))
+    if include is not None:
+        mask |= include
+    if exclude is not None:
+        mask &= ~exclude
+    nan = float("nan")
+    return WakeRegion(mask, nan, nan, nan, nan, nan, grow)
+
+
 @lru_cache(maxsize=8)
 def _noise_gain(grid: UniformGrid) -> Array:
     """Noise of the smoothed vorticity at each place relative to the middle of the window, shape (nz, ny)."""
