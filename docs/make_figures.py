@@ -265,6 +265,32 @@ def increment_coverage() -> Figure:
     return figure
 
 
+def plan_map() -> Figure:
+    """What each set-up of the sample plan would know."""
+    from wakeledger.present.figures.plan import uncertainty_map
+    from wakeledger.run.planning import plan
+
+    return uncertainty_map(plan(measured.DOCS.parent / "sample_surveys" / "plan_a_survey" / "plan.toml"))
+
+
+def plan_check() -> Figure:
+    """U95 of plans over that of the surveys simulated at them, from the table in the page."""
+    text = (measured.DOCS / "planning.md").read_text(encoding="utf-8")
+    block = text.split("<!-- generated: begin -->")[1].split("<!-- generated: end -->")[0]
+    lines = [[cell.strip() for cell in line.split("|")[1:-1]] for line in block.splitlines() if line.startswith("|")][2:]
+    ratio, doubt = np.array([[float(x) for x in line[5].split(" ± ")] for line in lines]).T
+    at = np.arange(len(lines))
+    with drawing(7.1, 0.26 * len(lines) + 0.7) as (figure, (panel,)):
+        panel.axvspan(0.8, 1.2, color=GREEN, alpha=0.18, lw=0)
+        panel.axvline(1, color=GREEN, lw=1)
+        panel.errorbar(ratio, at, xerr=doubt, fmt="o", ms=4, lw=1, color=BLUE)
+        panel.set_yticks(at, [line[0] for line in lines])
+        panel.set_ylim(len(lines) - 0.5, -0.5)
+        panel.set_xlim(0.6, 1.4)
+        panel.set_xlabel("U95 of the plan / (1.96 × rms error of the surveys)")
+    return figure
+
+
 #: Figures that need no ledger, and those drawn from the sample survey's, by the name of their file.
 DRAWN: dict[str, Callable[[], Figure]] = {
     "axes.svg": axes,
@@ -273,6 +299,8 @@ DRAWN: dict[str, Callable[[], Figure]] = {
     "accuracy.svg": accuracy,
     "station.svg": station,
     "increment_coverage.svg": increment_coverage,
+    "plan_map.svg": plan_map,
+    "plan_check.svg": plan_check,
 }
 FROM_LEDGER: dict[str, Callable[[Ledger], Figure]] = {
     "loss.png": loss_map,

@@ -22,6 +22,7 @@ from wakeledger.ledger.crosscheck import COVERAGE_FACTOR
 from wakeledger.ledger.encoding import group_names
 from wakeledger.ledger.rows import CHECK_VERDICTS, VERDICTS
 from wakeledger.run import checks, numerics, outputs, reduction, tables
+from wakeledger.run.config import plan
 from wakeledger.run.config import plane as plane_tables
 from wakeledger.run.config import stream, uncertainty
 from wakeledger.run.config import tables as small_tables
@@ -233,11 +234,11 @@ TABLES = {
     "`[uncertainty]`": uncertainty.UncertaintyTable,
     "`[[uncertainty.source]]`": uncertainty.Source,
     "`[[compare]]`": uncertainty.Comparison,
+    "`[plan]`": plan.PlanTable,
 }
 REFUSED = {
     "body": small_tables.BodyTable,
     "loading": small_tables.LoadingTable,
-    "plan": small_tables.PlanTable,
 }
 
 

@@ -209,7 +209,7 @@ BROKEN = [
     (["[loading]\n"], "[loading]", "key 'trailing_edge' is missing", "trailing_edge = "),
     ([LOADING.replace(', ["0.6 m", "0.0 m"]', "")], "[loading] trailing_edge", "a list of 1", "at least 2"),
     ([PLAN.replace('"0.1 m/s"', '"0.1 m"')], "[plan] noise item 1", "a length", "a velocity"),
-    ([PLAN.replace("[1, 2]", "[0]")], "[plan] repeats", "a list", "at least 1"),
+    ([PLAN.replace("[1, 2]", "[0]")], "[plan] repeats item 1", "the bare number 0", "at least 1"),
     ([PLAN.replace("elliptic", "eliptic")], "[plan] loading", "'eliptic'", "'elliptic'"),
     # [uncertainty]
     ([("draws = 1000", "draws = 10")], "[uncertainty] draws", "bare number 10", "at least 100"),
