@@ -19,6 +19,20 @@ from wakeledger.present.printing import (
     text_of,
 )
 from wakeledger.present.repeats_text import repeats_table
+from wakeledger.present.stations_text import (
+    fit_sentence,
+    stations_tables,
+    verdict_lines,
+    verdict_reasons,
+    verdict_tables,
+)
+from wakeledger.present.tunnel_text import (
+    corrected_cells,
+    corrected_table,
+    tunnel_planes,
+    tunnel_reasons,
+    tunnel_tables,
+)
 from wakeledger.present.wording import (
     STATEMENT,
     VERDICT_WORDS,
@@ -79,6 +93,8 @@ def ledger_text(ledger: Ledger, *, width: int = 100, colour: bool = False) -> st
     if ledger.repeats is not None:
         section(console, f"The {ledger.repeats.sizes['run']} runs, and how far they lie apart (k = 1)")
         console.print(repeats_table(ledger, ledger.repeats))
+    _stations(console, ledger)
+    _tunnel(console, ledger)
     if ledger.estimates:
         section(console, "Other methods against the primary one")
         console.print(_estimates_table(ledger.estimates, roomy=console.width >= ROOMY))
@@ -226,6 +242,42 @@ def _facts(inspection: Inspection) -> Iterable[tuple[str, str]]:
         again = f"; {repeats.revisited} of them left and visited again" if repeats.revisited else ""
         where = "1 place" if repeats.places == 1 else f"{repeats.places} places"
         yield "repeats", f"{where} measured {repeats.points} times{again}"
+
+
+def _stations(console: Console, ledger: Ledger) -> None:
+    """The planes of several stations beside each other, and what the other methods say of each."""
+    if ledger.combined is None:
+        return
+    section(console, f"The {len(ledger.stations)} planes, ± U95, by their distance behind the trailing edge")
+    _blocks(console, stations_tables(ledger, console.width))
+    fitted = fit_sentence(ledger.combined)
+    if fitted:
+        bullet(console, fitted)
+    if verdict_lines(ledger):
+        section(console, "Other methods against the primary one on each plane: verdict and E_n")
+        _blocks(console, verdict_tables(ledger, console.width))
+        for sentence in grouped_reasons(verdict_reasons(ledger)):
+            bullet(console, sentence)
+
+
+def _blocks(console: Console, tables: Sequence[Table]) -> None:
+    """Print the blocks of a table that is wider than the terminal."""
+    for k, table in enumerate(tables):
+        if k:
+            console.print()
+        console.print(table)
+
+
+def _tunnel(console: Console, ledger: Ledger) -> None:
+    """What the walls do at the model, and the coefficients corrected for blockage."""
+    if tunnel_planes(ledger):
+        section(console, "What the walls do at the model")
+        _blocks(console, tunnel_tables(ledger, console.width))
+        for sentence in grouped_reasons(tunnel_reasons(ledger)):
+            bullet(console, sentence)
+    if corrected_cells(ledger):
+        section(console, "Coefficients on the dynamic pressure corrected for blockage")
+        console.print(corrected_table(ledger))
 
 
 def _rows_table(rows: Sequence[Row]) -> Table:
