@@ -193,7 +193,7 @@ def write_cgns(path, x, y, z, fields, location):
         return np.frombuffer(value.encode(), dtype=np.int8)
 
     def node(parent, name, label, data=None, kind="MT"):
-        group = parent.create_group(name)
+        group = parent.create_group(name, track_order=True)
         for key, value, length in (("name", name, 33), ("label", label, 33), ("type", kind, 3)):
             group.attrs.create(key, np.bytes_(value), dtype=f"S{length}")
         group.attrs.create("flags", np.array([1], dtype=np.int32))
@@ -202,7 +202,7 @@ def write_cgns(path, x, y, z, fields, location):
         return group
 
     nk, nj, ni = x.shape
-    with h5py.File(path, "w") as file:
+    with h5py.File(path, "w", track_order=True) as file:
         for key, value, length in (("name", "HDF5 MotherNode", 33), ("label", "Root Node of HDF5 File", 33)):
             file.attrs.create(key, np.bytes_(value), dtype=f"S{length}")
         file.attrs.create("type", np.bytes_("MT"), dtype="S3")
