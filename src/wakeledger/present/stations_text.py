@@ -104,6 +104,11 @@ class StationsLine:
     combined: tuple[str, str]
     how: str
 
+    @property
+    def figures(self) -> tuple[tuple[str, str], ...]:
+        """Those of the stations, then the combined ones."""
+        return (*self.stations, self.combined)
+
 
 def stations_lines(ledger: Ledger) -> tuple[StationsLine, ...]:
     """Every row at every station, and what the trailing vortices have lost by each.

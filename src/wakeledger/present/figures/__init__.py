@@ -5,7 +5,9 @@ from wakeledger.present.figures.canvas import FORMATS, figure_bytes
 from wakeledger.present.figures.crosschecks import estimates_figure
 from wakeledger.present.figures.gallery import draw, save_figures
 from wakeledger.present.figures.maps import axial_velocity_map, loss_map, vorticity_map
+from wakeledger.present.figures.section import section_figure
 from wakeledger.present.figures.spanwise import span_figure
+from wakeledger.present.figures.stations import stations_figure
 from wakeledger.present.figures.traverse import traverse_figure
 
 __all__ = [
@@ -17,7 +19,9 @@ __all__ = [
     "figure_bytes",
     "loss_map",
     "save_figures",
+    "section_figure",
     "span_figure",
+    "stations_figure",
     "traverse_figure",
     "vorticity_map",
 ]

@@ -63,7 +63,7 @@ def estimates_figure(ledger: Ledger) -> Figure:
         axes.tick_params(axis="y", length=0)
         axes.spines["left"].set_visible(False)
         axes.set_xlabel("difference from the primary row, % of the row")
-        axes.set_title("Estimates and compared values against the primary rows (bars: k = 2)")
+        axes.set_title("Estimates and compared values (bars: k = 2)")
         handles: list[object] = [Patch(facecolor=GREY, alpha=0.3, label="row ± U95")]
         used = {line.verdict for line in lines}
         for verdict, (colour, marker, filled) in _MARKS.items():

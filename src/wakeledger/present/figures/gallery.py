@@ -6,7 +6,7 @@ from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from wakeledger.present.figures import budget, canvas, crosschecks, maps, spanwise, traverse
+from wakeledger.present.figures import budget, canvas, crosschecks, maps, section, spanwise, stations, traverse
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -27,6 +27,11 @@ Drawing = tuple[Callable[["Ledger"], "Figure"], Callable[["Ledger"], bool]]
 
 #: Name of each figure's file, how to draw it, and whether a ledger has what it needs.
 DRAWINGS: dict[str, Drawing] = {
+    "stations": (
+        stations.stations_figure,
+        lambda ledger: bool(ledger.stations) and bool(stations.stations_rows(ledger)),
+    ),
+    "section": (section.section_figure, section.has_section),
     "total_pressure_loss": (maps.loss_map, _in_plane("total_pressure_loss")),
     "axial_vorticity": (maps.vorticity_map, _in_plane("axial_vorticity", "v", "w")),
     "axial_velocity": (maps.axial_velocity_map, _in_plane("u")),

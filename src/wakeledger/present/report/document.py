@@ -9,6 +9,8 @@ from typing import TYPE_CHECKING, Any
 
 from wakeledger.ledger.rounding import UNKNOWN, rounded, significant
 from wakeledger.present.repeats_text import repeats_cells
+from wakeledger.present.stations_text import fit_sentence, head_of, stations_lines, verdict_lines, verdict_reasons
+from wakeledger.present.tunnel_text import tunnel_cells, tunnel_planes, tunnel_reasons
 from wakeledger.present.wording import (
     STATEMENT,
     VERDICT_WORDS,
@@ -28,6 +30,10 @@ if TYPE_CHECKING:
 
 #: What each figure shows, by the name of its file.
 CAPTIONS = {
+    "stations": "Each drag against the station of the plane, bars U95. Where a trend is resolved, the ledger's drags "
+    "are those at the trailing edge, and what the vortices lose on their way goes from induced to profile drag.",
+    "section": "The survey's window, its wake region and vortices in what surrounds them, seen from behind, looking "
+    "upstream.",
     "total_pressure_loss": "Total-pressure loss, seen from behind, looking upstream. Profile drag is integrated inside "
     "the outlined wake region; hatched cells hold no measurement that can be trusted and were filled.",
     "axial_vorticity": "Axial vorticity with arrows of the crossflow. Counter-clockwise is positive; the colours are "
@@ -99,6 +105,8 @@ def report_html(ledger: Ledger) -> str:
             sources=_sources(ledger),
             summary=_summary(ledger),
             repeats=[] if ledger.repeats is None else repeats_cells(ledger, ledger.repeats),
+            stations=_stations(ledger),
+            tunnel=_tunnel(ledger),
             reference={name: value for name, value in ledger.reference.items() if math.isfinite(value)},
             units=_scalar_units(),
             maps=[pictures[name] for name in _MAPS if name in pictures],
@@ -244,6 +252,31 @@ def _comparisons(ledger: Ledger) -> list[dict[str, Any]]:
     return lines
 
 
+def _stations(ledger: Ledger) -> dict[str, Any] | None:
+    """The planes of several stations beside each other; None where there is one plane."""
+    if ledger.combined is None:
+        return None
+    return {
+        "heads": [head_of(one.station) for one in ledger.stations],
+        "lines": stations_lines(ledger),
+        "verdicts": verdict_lines(ledger),
+        "reasons": grouped_reasons(verdict_reasons(ledger)),
+        "fit": fit_sentence(ledger.combined),
+    }
+
+
+def _tunnel(ledger: Ledger) -> list[dict[str, Any]]:
+    """What the walls do at the model, of each plane that has such figures."""
+    return [
+        {
+            "head": head_of(one.station) if ledger.stations else "",
+            "cells": tunnel_cells(one),
+            "reasons": grouped_reasons(tunnel_reasons(one)),
+        }
+        for one in tunnel_planes(ledger)
+    ]
+
+
 def _sources(ledger: Ledger) -> list[dict[str, Any]]:
     """The budget, one block per row, in counts where the row is a drag with a coefficient."""
     blocks: list[dict[str, Any]] = []
@@ -276,6 +309,13 @@ def _summary(ledger: Ledger) -> list[str]:
     sentences += [
         f"{words(line.method)} disagrees with the primary {words(line.row)} (E_n = {line.normalised_error:.2f})."
         for line in ledger.estimates
+        if line.verdict == "disagrees"
+    ]
+    sentences += [
+        f"at {head_of(one.station)} {words(line.method)} disagrees with the primary {words(line.row)}"
+        f" (E_n = {line.normalised_error:.2f})."
+        for one in ledger.stations
+        for line in one.estimates
         if line.verdict == "disagrees"
     ]
     sentences += [
