@@ -219,7 +219,8 @@ def test_help_lists_the_commands_that_exist(cli):
 def test_starting_up_loads_nothing_heavy():
     script = (
         "import sys; from wakeledger.cli import wakeledger\n"
-        "heavy = {'numpy', 'scipy', 'xarray', 'pandas', 'matplotlib', 'rich', 'pydantic', 'pint', 'netCDF4'}\n"
+        "heavy = {'numpy', 'scipy', 'xarray', 'pandas', 'matplotlib', 'rich', 'pydantic', 'pint', 'netCDF4',"
+        " 'pyvista', 'vtkmodules', 'h5py'}\n"
         "print(sorted(heavy & set(sys.modules)))"
     )
     done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True, check=True)

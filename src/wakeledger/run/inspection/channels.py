@@ -64,6 +64,8 @@ def channel_summaries(
 
 
 def _unit(name: str, channel: Channel) -> str:
+    if channel.kinematic and not channel.normalised_by:
+        return "m2 s-1" if name == "turbulent_viscosity" else "m2 s-2"
     return "1" if channel.normalised_by else VARIABLES[name].unit if name in VARIABLES else "1"
 
 
