@@ -238,7 +238,9 @@ def increment_coverage() -> Figure:
     """Coverage of the increments' U95, and what cancelling is worth, from the table of the study in its page."""
     text = (measured.DOCS / "increments.md").read_text(encoding="utf-8")
     block = text.split("<!-- generated: begin -->")[1].split("<!-- generated: end -->")[0]
-    lines = [[cell.strip() for cell in line.split("|")[1:-1]] for line in block.splitlines() if line.startswith("|")][2:]
+    lines = [[cell.strip() for cell in line.split("|")[1:-1]] for line in block.splitlines() if line.startswith("|")][
+        2:
+    ]
     cases = list(dict.fromkeys(line[0] for line in lines))
     rows = list(dict.fromkeys(line[1] for line in lines))
     with drawing(7.1, 2.9, 2) as (figure, (left, right)):
@@ -277,7 +279,9 @@ def plan_check() -> Figure:
     """U95 of plans over that of the surveys simulated at them, from the table in the page."""
     text = (measured.DOCS / "planning.md").read_text(encoding="utf-8")
     block = text.split("<!-- generated: begin -->")[1].split("<!-- generated: end -->")[0]
-    lines = [[cell.strip() for cell in line.split("|")[1:-1]] for line in block.splitlines() if line.startswith("|")][2:]
+    lines = [[cell.strip() for cell in line.split("|")[1:-1]] for line in block.splitlines() if line.startswith("|")][
+        2:
+    ]
     ratio, doubt = np.array([[float(x) for x in line[5].split(" ± ")] for line in lines]).T
     at = np.arange(len(lines))
     with drawing(7.1, 0.26 * len(lines) + 0.7) as (figure, (panel,)):

@@ -1,14 +1,12 @@
 """Do the error bars of increments cover? Many pairs of small synthetic surveys whose shared errors really are shared.
 
 ``python -m tests.benchmarks.increment_coverage --pairs 250`` runs all cases and prints the table; ``--write
-docs/increments.md`` puts it into that page, ``--data docs/increment_coverage.json`` keeps the figure's data. One pair
-takes about half a second on one core.
+docs/increments.md`` puts it into that page. One pair takes about half a second on one core.
 """
 
 from __future__ import annotations
 
 import argparse
-import json
 import math
 import os
 import sys
@@ -343,7 +341,6 @@ def main(arguments: Sequence[str] | None = None) -> None:
     parser.add_argument("--seed", type=int, default=1)
     parser.add_argument("--numerical", action="store_true", help="add the numerical terms, which takes longer")
     parser.add_argument("--write", type=Path, help="page whose generated block is replaced")
-    parser.add_argument("--data", type=Path, help="file for the data of the figure")
     options = parser.parse_args(arguments)
     os.environ.setdefault("OMP_NUM_THREADS", "1")
     studies = []
@@ -366,17 +363,6 @@ def main(arguments: Sequence[str] | None = None) -> None:
         )
     text = table(studies)
     print(text)
-    if options.data:
-        kept = {
-            one.case: {
-                "rows": list(JUDGED),
-                "pairs": one.pairs,
-                "coverage": one.coverage[1].round(4).tolist(),
-                "tightening": one.tightening[1].round(3).tolist(),
-            }
-            for one in studies
-        }
-        options.data.write_text(json.dumps(kept, indent=1) + "\n", encoding="utf-8")
     if options.write:
         page = options.write.read_text(encoding="utf-8")
         before, rest = page.split(_BEGIN)
