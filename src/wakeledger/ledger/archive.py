@@ -17,6 +17,7 @@ import numpy as np
 
 from wakeledger.core.errors import DataError
 from wakeledger.ledger import encoding
+from wakeledger.ledger.closure import Cause, Closure
 from wakeledger.ledger.contributions import Contributions
 from wakeledger.ledger.propagation import dataset_propagation, propagation_dataset
 from wakeledger.ledger.rows import (
@@ -67,6 +68,9 @@ _PROPAGATION = "propagation"
 
 #: Groups of the ledgers of several planes, numbered from 1, and the attribute that says how they were combined.
 _STATION, _COMBINED = "station_", "combined"
+
+#: Attribute that holds what surface forces and wake differ by.
+_CLOSURES = "closures"
 
 #: Group of the first probe calibration; further ones are numbered. Its attribute says which file it comes from.
 _CALIBRATION, _CALIBRATION_NAME = "calibration", "survey_name"
@@ -226,6 +230,8 @@ def _groups(ledger: Ledger) -> dict[str, xr.Dataset]:
         groups[name] = encoding.points_dataset(kept.raw).assign_attrs(survey_text=kept.survey_text)
     groups["model"] = xr.Dataset({name: scalar(name, value, "model") for name, value in ledger.model.items()})
     groups["raw"] = encoding.points_dataset(ledger.raw)
+    if ledger.closures:
+        root.attrs[_CLOSURES] = json.dumps([dataclasses.asdict(one) for one in ledger.closures])
     if ledger.combined is not None:
         root.attrs[_COMBINED] = json.dumps(dataclasses.asdict(ledger.combined))
     for number, station in enumerate(ledger.stations, start=1):
@@ -276,9 +282,15 @@ def _ledger(root: xr.Dataset, source: Path, *, within: str = "") -> Ledger:
         contributions=contributions,
         companions=companions,
         stations=tuple(_ledger(read(name), source, within=f"{within}/{name}".lstrip("/")) for name in stations),
+        closures=tuple(_closure(entry) for entry in json.loads(root.attrs.get(_CLOSURES, "[]"))),
         combined=None if combined is None else Combined(**json.loads(combined)),
         **tables,
     )
+
+
+def _closure(entry: dict[str, Any]) -> Closure:
+    causes = tuple(Cause(**cause) for cause in entry.pop("causes"))
+    return Closure(causes=causes, errors=tuple(entry.pop("errors")), **entry)
 
 
 def _number(group: str) -> int:

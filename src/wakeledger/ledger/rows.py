@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     import xarray as xr
 
     from wakeledger.core.points import Points
+    from wakeledger.ledger.closure import Closure
     from wakeledger.ledger.contributions import Contributions
     from wakeledger.ledger.propagation import Propagation
 
@@ -379,6 +380,8 @@ class Ledger:
         the vortices and the span loading are then those of the first.
     combined : Combined or None
         How the stations were made into the rows.
+    closures : tuple of Closure
+        Drags of computed planes held against the solver's surface forces, taken apart by cause.
     inputs : mapping of str to str
         SHA-256 of each input file by name.
     provenance : mapping of str to str
@@ -416,6 +419,7 @@ class Ledger:
     companions: Mapping[str, KeptSurvey] = field(default_factory=lambda: MappingProxyType({}))
     stations: tuple[Ledger, ...] = ()
     combined: Combined | None = None
+    closures: tuple[Closure, ...] = ()
     inputs: Mapping[str, str] = field(default_factory=_empty)
     provenance: Mapping[str, str] = field(default_factory=_empty)
 

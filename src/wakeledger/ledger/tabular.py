@@ -22,6 +22,8 @@ if TYPE_CHECKING:
     import pandas as pd
     import xarray as xr
 
+    from wakeledger.ledger.closure import Closure
+
 #: Version of the document `ledger_json` makes.
 JSON_FORMAT = 1
 
@@ -66,6 +68,8 @@ def ledger_json(ledger: Ledger) -> dict[str, Any]:
         ]
     if ledger.repeats is not None:
         document["repeats"] = repeats_json(ledger.repeats)
+    if ledger.closures:
+        document["closures"] = [_closure_entry(one) for one in ledger.closures]
     if ledger.combined is not None:
         document["combined"] = _plain(asdict(ledger.combined), ledger.combined.reason)
         parts = ("rows", "estimates", "budget", "checks", "notes", "tunnel")
@@ -76,6 +80,13 @@ def ledger_json(ledger: Ledger) -> dict[str, Any]:
     if ledger.tunnel:
         document["tunnel"] = [_plain(asdict(figure), "it has no such figure") for figure in ledger.tunnel]
     return document
+
+
+def _closure_entry(closure: Closure) -> dict[str, Any]:
+    entry = _plain(asdict(closure), "it has no such figure")
+    entry["causes"] = [_plain(asdict(cause), cause.note) for cause in closure.causes]
+    entry["errors"] = list(closure.errors)
+    return entry
 
 
 def _row_entry(row: Row) -> dict[str, Any]:

@@ -49,6 +49,7 @@ from wakeledger.run.inputs import gradients, layouts, sources
 from wakeledger.run.inspection import inspect_plane, inspect_section
 from wakeledger.run.linear import linear_slopes, separated, survey_budget, tried, with_prediction
 from wakeledger.run.load import SUPPORT_TARE, SurveyInput, load, refuse_unsupported
+from wakeledger.run.near_field import with_closures
 from wakeledger.run.noise import Noise, declared_noise, estimated_noise, noise_bias, white_noise
 from wakeledger.run.numerics import numerical_terms
 from wakeledger.run.outputs import ESTIMATES, MOMENTS, OUTPUTS, ROWS, estimate_of
@@ -152,11 +153,12 @@ def reduce(
     survey = _with_tare(survey, draws=draws)
     if survey.stations:
         stations = tuple(replace(one, tare=survey.tare) for one in survey.stations)
-        return reduce_stations(
+        whole = reduce_stations(
             replace(survey, stations=stations),
             lambda one: reduce(one, draws=draws, progress=progress, command=command),
             command=command,
         )
+        return with_closures(whole) if survey.computed else whole
     prepared = prepare(survey)
     require_rows(survey.survey, [name for name in ROWS if not math.isnan(prepared.nominal.values[name])])
     uncertainty = survey.survey.uncertainty
@@ -176,7 +178,8 @@ def reduce(
     checks = all_checks(prepared.nominal, _facts(prepared))
     if samples is not None and any(check.name == "net_circulation" and check.verdict == "fail" for check in checks):
         samples = made_unknown(samples, _INDUCED, _UNBALANCED)
-    return _ledger(survey, prepared, samples, budget, checks, found=found, command=command)
+    ledger = _ledger(survey, prepared, samples, budget, checks, found=found, command=command)
+    return with_closures(ledger) if survey.computed else ledger
 
 
 def _with_tare(survey: SurveyInput, *, draws: int | None) -> SurveyInput:
