@@ -281,7 +281,6 @@ BASE = (
 WANTS = {
     "body": '[[body]]\nname = "tail"\nregion = [["-0.3 m", "0.1 m"], ["0.3 m", "0.3 m"]]\n',
     "loading": '[loading]\ntrailing_edge = [["-0.6 m", "0 m"], ["0.6 m", "0 m"]]\n',
-    "plan": "[plan]\nrepeats = 2\n",
 }
 
 

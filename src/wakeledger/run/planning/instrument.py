@@ -92,7 +92,7 @@ def of_holes(noise: float, reference: Reference) -> Probe:
 
     Notes
     -----
-    With holes 45 degrees off the axis of a sphere an angle is (p5 − p4)/(2 · 9/4 q), the total pressure is p1, and the
+    With holes 45 degrees off the axis of a sphere an angle is (p4 − p5)/(2 · 9/4 q), the total pressure is p1, and the
     static pressure p1 − (p1 − p̄)/(9/8), p̄ being the mean of the outer four.
     """
     q = reference.dynamic_pressure

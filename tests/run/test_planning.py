@@ -1,0 +1,367 @@
+"""Planned surveys: the flow they expect, what they find, and whether simulated surveys scatter as the plan says."""
+
+import importlib.util
+import json
+import math
+import sys
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+import wakeledger as wl
+from wakeledger.core.errors import InputError, SurveyError
+from wakeledger.ledger.plan import PLAN_FORMAT
+from wakeledger.run.config.plan_file import parse_plan, read_plan
+from wakeledger.run.outputs import coefficient_of
+from wakeledger.run.planning.flow import expected_flow
+from wakeledger.run.planning.instrument import of_holes
+from wakeledger.run.planning.search import FACTOR
+from wakeledger.run.planning.simulate import Accuracies, declared, simulated, visit, window_of
+from wakeledger.run.planning.target import read_target
+from wakeledger.run.survey import prepare
+from wakeledger.stream.reference import Reference
+from wakeledger.synthetic.probes import direction_of, sphere_probe
+
+ROOT = Path(__file__).resolve().parents[2]
+SAMPLE = ROOT / "sample_surveys" / "plan_a_survey" / "plan.toml"
+STREAM = """title = "small"
+[reference]
+speed = "40.0 m/s"
+density = "1.190 kg/m^3"
+static_pressure = "100.9 kPa"
+[model]
+reference_area = "0.165 m^2"
+span = "1.10 m"
+mean_chord = "0.15 m"
+"""
+PLAN = """[plan]
+station = "0.90 m"
+target = "4 counts"
+lift_coefficient = 0.40
+profile_drag_coefficient = 0.0110
+tip_core = "60 mm"
+wake_width = "60 mm"
+spacing = ["25 mm", "30 mm"]
+window = "300 mm"
+noise = ["0.05 m/s", "0.20 m/s"]
+total_pressure_noise = ["0.5 Pa", "2.0 Pa"]
+angle_accuracy = "0.1 deg"
+reference_accuracy = ["0.1 %", "0.3 %"]
+repeats = [1, 2]
+settling_time = "1 s"
+traverse_speed = "50 mm/s"
+draws = 200
+"""
+SMALL = STREAM + PLAN
+
+
+def edited(*edits):
+    text = SMALL
+    for old, new in edits:
+        assert old in text, old
+        text = text.replace(old, new, 1)
+    return text
+
+
+@pytest.fixture(scope="module")
+def folder(tmp_path_factory):
+    return tmp_path_factory.mktemp("plan")
+
+
+@pytest.fixture(scope="module")
+def flow():
+    return expected_flow(parse_plan(SMALL, "plan.toml"))
+
+
+@pytest.fixture(scope="module")
+def small(folder):
+    path = folder / "small.toml"
+    path.write_text(SMALL, encoding="utf-8")
+    return wl.plan(path, workers=1)
+
+
+@pytest.fixture(scope="module")
+def check():
+    """The benchmark that simulates surveys at a planned set-up."""
+    spec = importlib.util.spec_from_file_location("plan_check", ROOT / "tests" / "benchmarks" / "plan_check.py")
+    module = importlib.util.module_from_spec(spec)
+    sys.modules["plan_check"] = module
+    spec.loader.exec_module(module)
+    return module
+
+
+# The flow
+
+
+def test_a_loading_gives_the_lift_and_the_profile_drag_asked_for(flow):
+    # The lift of the elements is that of the loading to rounding; the loss is fitted in two steps of a fast iteration.
+    assert flow.values["lift coefficient"] == pytest.approx(0.40, rel=1e-10)
+    assert flow.values["profile_drag coefficient"] == pytest.approx(0.0110, rel=1e-6)
+    # Thin elliptic loading: C_Di = C_L² S/(π b²) (lifting line); a sheet of finite thickness has less.
+    thin = 0.40**2 * 0.165 / (math.pi * 1.10**2)
+    assert 0.7 * thin < flow.values["induced_drag coefficient"] < thin
+    slender = expected_flow(parse_plan(SMALL.replace('"60 mm"', '"30 mm"'), "plan.toml"))
+    assert 0.85 * thin < slender.values["induced_drag coefficient"] < thin
+
+
+def test_rolling_up_changes_no_force_and_moves_the_wake_down(flow):
+    rolled = flow
+    flat = expected_flow(parse_plan(edited(("tip_core", "rolled_up = false\ntip_core")), "plan.toml"))
+    # The Hamiltonian and the impulse are kept by the roll-up; its time steps cost less than 1e-4.
+    for row in ("lift", "induced_drag"):
+        assert rolled.values[row] == pytest.approx(flat.values[row], rel=1e-4)
+    assert rolled.box[2] < flat.box[2] - 0.002
+
+
+def test_a_survey_without_noise_gives_the_exact_rows(flow):
+    window = window_of(flow, 0.025, 0.3)
+    survey = declared(flow, of_holes(0.0, Reference(speed=40.0, density=1.19)), Accuracies())
+    values = prepare(simulated(survey, visit(flow, window, (0.2, -0.3)).points())).nominal.values
+    # h/a = 0.42: the reduction's own target there is 1e-3 of the induced drag.
+    for row in ("profile_drag", "induced_drag", "total_drag", "lift"):
+        assert values[row] == pytest.approx(flow.values[row], rel=1e-3)
+
+
+def test_a_window_reaches_as_far_as_asked_and_counts_its_points(flow):
+    window = window_of(flow, 0.025, 0.3)
+    y0, y1, z0, z1 = flow.box
+    for lines, low, high in ((window.y, y0, y1), (window.z, z0, z1)):
+        assert 0.3 <= low - lines[0] < 0.3 + 0.025
+        assert 0.3 <= lines[-1] - high < 0.3 + 0.025
+        assert np.allclose(np.diff(lines), 0.025, rtol=1e-12)
+    assert window.points == window.y.size * window.z.size
+    assert window.path == pytest.approx(0.025 * (window.points - 1), rel=1e-12)
+    rows = [visit(flow, window_of(flow, 0.025, 0.3, rows_along=axis), (0, 0)).row for axis in "yz"]
+    assert [row.max() + 1 for row in rows] == [window.z.size, window.y.size]
+
+
+def test_noise_of_holes_is_that_of_a_spherical_probe():
+    """Hole noise through the sphere's own relations, by drawn readings."""
+    reference = Reference(speed=40.0, density=1.19)
+    q = reference.dynamic_pressure
+    sphere = sphere_probe(5)
+    holes = sphere.pressures(direction_of(0.02, -0.01), q, 0.0)
+    # Upwash raises the pressure at the lower hole, p4; the sphere's sine is straight to 1e-3 at 0.02 rad.
+    assert (holes[3] - holes[4]) / (4.5 * holes[0]) == pytest.approx(0.02, rel=2e-3)
+    generator = np.random.default_rng(3)
+    noisy = sphere.pressures(direction_of(0.0, 0.0), q, 0.0)[:, None] + 2.0 * generator.standard_normal((5, 4000))
+    mean = noisy[1:].mean(axis=0)
+    static = noisy[0] - (noisy[0] - mean) / (9 / 8)
+    speed = 40.0 * (noisy[4] - noisy[3]) / (4.5 * q)
+    probe = of_holes(2.0, reference)
+    # 4000 draws: a standard deviation is known to 1.1 %.
+    assert probe.static_pressure == pytest.approx(static.std(), rel=0.04)
+    assert probe.velocity == pytest.approx(speed.std(), rel=0.04)
+    assert probe.total_pressure == 2.0
+
+
+# The plan
+
+
+def test_the_cheapest_set_up_that_reaches_the_target_is_chosen(small):
+    one = small.chosen
+    assert small.reached and one is not None
+    assert small.expanded_uncertainty <= small.target == 4.0
+    assert one.minutes == pytest.approx((one.points * 1.0 + (one.points - 1) * one.spacing / 0.05) / 60, rel=1e-12)
+    assert one.reference_accuracy == 0.003  # the loosest that will do
+    # No cell of the map that costs less reaches the target.
+    for c in range(2):
+        for i, _ in enumerate(small.spacings):
+            if small.minutes[0, i] < one.minutes - 1e-9:
+                assert small.uncertainty[c, 0, i] > small.target or small.failing[c, 0, i]
+    assert abs(small.non_linearity) < 0.1  # 200 draws: u is known to 5 %
+
+
+def test_the_budget_closes_and_the_map_holds_the_chosen_cell(small):
+    total = math.sqrt(sum(line.standard_uncertainty**2 for line in small.budget))
+    assert FACTOR * total == pytest.approx(small.expanded_uncertainty, rel=1e-12)
+    assert sum(line.share for line in small.budget) == pytest.approx(1.0, rel=1e-12)
+    one = small.chosen
+    cell = small.uncertainty[small.probes.index(one.probe), 0, small.spacings.index(one.spacing)]
+    assert cell == pytest.approx(small.expanded_uncertainty, rel=1e-12)
+    assert one.expanded_uncertainty == pytest.approx(cell, rel=1e-12)
+    assert small.stated >= small.expanded_uncertainty
+
+
+def test_a_better_probe_knows_more_and_a_finer_grid_too(small):
+    good, poor = small.uncertainty[:, 0, :]
+    assert (good < poor).all()
+    assert (small.uncertainty[:, 0, 0] < small.uncertainty[:, 0, 1]).all()
+    # The poor probe's noise is four times the good one's, and noise is not all there is.
+    assert (poor < 5 * good).all() and (poor > 2 * good).all()
+
+
+def test_improvements_gain_what_halving_a_source_gains(small):
+    by_source = {line.source: line for line in small.budget}
+    better = {one.what: one for one in small.improvements}
+    line = by_source["total pressure noise"]
+    u2 = (small.expanded_uncertainty / FACTOR) ** 2
+    after = FACTOR * math.sqrt(u2 - 0.75 * line.standard_uncertainty**2)
+    found = better["half of the total pressure noise alone"]
+    assert found.expanded_uncertainty == pytest.approx(after, rel=1e-12)
+    assert found.gain == pytest.approx(small.expanded_uncertainty - after, rel=1e-9)
+    assert found.minutes == 0 and math.isnan(found.gain_per_minute)
+    again = better["2 surveys instead of 1"]
+    random = sum(one.standard_uncertainty**2 for one in small.budget if one.kind == "random")
+    assert again.expanded_uncertainty == pytest.approx(FACTOR * math.sqrt(u2 - random / 2), rel=1e-9)
+    assert again.minutes == pytest.approx(small.chosen.minutes, rel=1e-12)
+    gains = [one.gain for one in small.improvements]
+    assert gains == sorted(gains, reverse=True) and min(gains) > 0
+
+
+def test_the_document_is_plain_and_complete(small):
+    document = json.loads(json.dumps(small.to_dict(), allow_nan=False))
+    assert document["format"] == PLAN_FORMAT
+    assert document["time_limit"] is None and document["beyond"] is None
+    assert document["chosen"]["points"] == small.chosen.points
+    assert np.shape(document["uncertainty"]) == small.uncertainty.shape
+    assert document["inputs"].keys() == {"small.toml"}
+    assert any("density_accuracy" in note for note in small.notes)  # what counts as zero is said
+
+
+def test_the_same_plan_gives_the_same_numbers_whatever_the_threads(folder):
+    path = folder / "again.toml"
+    path.write_text(edited(('["25 mm", "30 mm"]', '"36 mm"'), ('["0.05 m/s", "0.20 m/s"]', '"0.05 m/s"'),
+                           ('["0.5 Pa", "2.0 Pa"]', '"0.5 Pa"')), encoding="utf-8")  # fmt: skip
+    one, two = (wl.plan(path, workers=workers) for workers in (1, 2))
+    assert one.expanded_uncertainty == pytest.approx(two.expanded_uncertainty, rel=1e-12)
+    assert np.allclose(one.uncertainty, two.uncertainty, rtol=1e-12)
+
+
+def test_no_set_up_reaches_too_small_a_target(folder):
+    path = folder / "never.toml"
+    single = edited(('["25 mm", "30 mm"]', '"36 mm"'), ("[1, 2]", "1"), ('"0.1 %", "0.3 %"', '"0.1 %"'))
+    path.write_text(single + 'time_limit = "1 min"\n', encoding="utf-8")
+    found = wl.plan(path, target="0.01 counts", workers=1)
+    assert not found.reached and found.beyond is None
+    assert found.chosen is None  # nothing takes a minute
+    path.write_text(single, encoding="utf-8")
+    found = wl.plan(path, target="0.01 counts", workers=1)
+    assert not found.reached and found.chosen is not None
+    assert found.chosen.velocity_noise == 0.05
+    assert found.expanded_uncertainty > 0.01
+
+
+def test_a_time_limit_alone_in_the_way_is_said(folder):
+    path = folder / "slow.toml"
+    text = edited(('"25 mm", "30 mm"', '"30 mm"'), ("[1, 2]", "[1, 3]"), ('"4 counts"', '"3.2 counts"'))
+    path.write_text(text.replace('["0.05 m/s", "0.20 m/s"]', '"0.05 m/s"').replace('["0.5 Pa", "2.0 Pa"]', '"0.5 Pa"')
+                    + 'time_limit = "50 min"\n', encoding="utf-8")  # fmt: skip
+    found = wl.plan(path, workers=1)
+    one = found.chosen
+    assert one is not None and one.repeats == 1 and one.minutes < 50
+    if not found.reached:
+        assert found.beyond is not None and found.beyond.repeats == 3 and found.beyond.minutes > 50
+
+
+# Against simulated surveys
+
+
+@pytest.mark.parametrize(
+    "changes",
+    [
+        {"tip_core": "60 mm", "wake_width": "60 mm", "spacing": "32 mm", "window": "300 mm", "draws": 400},
+        {"tip_core": "60 mm", "wake_width": "60 mm", "spacing": "32 mm", "window": "300 mm", "draws": 400,
+         "row": "induced_drag", "reference_accuracy": "1 %", "density_accuracy": "2 %", "noise": "0.02 m/s"},
+    ],
+    ids=["noise", "systematic"],
+)  # fmt: skip
+def test_surveys_scatter_as_the_plan_says(check, tmp_path, changes):
+    found, flow, window, _ = check.planned(changes, tmp_path, workers=1)
+    errors = check.errors_of(found, flow, window, range(40))
+    scatter = FACTOR * math.sqrt(np.mean(errors**2))
+    # The target is 20 %; 40 surveys know their scatter to 11 % (k = 1).
+    assert found.expanded_uncertainty == pytest.approx(scatter, rel=0.30)
+
+
+# What is refused
+
+
+@pytest.mark.parametrize(
+    ("edits", "place", "words"),
+    [
+        ([("tip_core", "tip_cor")], "[plan] tip_cor", "'tip_core'"),
+        ([("lift_coefficient = 0.40\n", "")], "[plan]", "lift_coefficient"),
+        ([("lift_coefficient = 0.40\n", 'lift_coefficient = 0.4\nlift = "20 N"\n')], "[plan] lift_coefficient", "both"),
+        ([('"60 mm"', "60")], "[plan] tip_core", "a length"),
+        ([('["0.5 Pa", "2.0 Pa"]', '["0.5 Pa", "1 Pa", "2.0 Pa"]')], "[plan]", "differ in length"),
+        ([("total_pressure_noise", "hole_noise")], "[plan] noise", "both given"),
+        ([('["25 mm", "30 mm"]', '["25 mm", "25 mm"]')], "[plan] spacing", "twice"),
+        ([('["25 mm", "30 mm"]', '"0 mm"')], "[plan] spacing", "greater than 0"),
+        ([('span = "1.10 m"\n', "")], "[model]", "span"),
+        ([('station = "0.90 m"\n', "")], "[plan]", "station"),
+        ([('"60 mm"', '"400 mm"')], "[plan] tip_core", "quarter of the span"),
+        ([("[model]", "[models]")], "[models]", "'model'"),
+        ([("repeats", 'ledger = "a.nc"\nrepeats')], "[plan]", "both given"),
+        ([('"0.90 m"', '"-0.2 m"')], "[plan] station", "not behind"),
+    ],
+)
+def test_a_broken_plan_is_told_in_one_line(edits, place, words):
+    with pytest.raises(SurveyError) as caught:
+        parse_plan(edited(*edits), "plan.toml")
+    text = str(caught.value)
+    assert place in text and words in text and "\n" not in text
+
+
+def test_a_survey_file_needs_a_plan_in_it():
+    survey = (ROOT / "sample_surveys" / "wing_and_tail" / "survey.toml").read_text(encoding="utf-8")
+    with pytest.raises(SurveyError, match=r"\[plan\] is missing"):
+        parse_plan(survey, "survey.toml")
+    text = survey + PLAN.replace('station = "0.90 m"\n', "")
+    request = parse_plan(text, "survey.toml")
+    assert request.station == 1.5 and request.plan.spacing == (0.025, 0.03)
+    assert any("uncertainty" in note for note in request.notes)
+    with pytest.raises(SurveyError, match="station"):
+        parse_plan(survey + PLAN, "survey.toml")
+
+
+@pytest.mark.parametrize(
+    ("text", "row", "unit", "limit"),
+    [
+        ("2 counts", "total_drag", "counts", 2.0),
+        ("1 count", "induced_drag", "counts", 1.0),
+        ("0.0002", "total_drag", "counts", 2.0),
+        ("1 %", "total_drag", "counts", 2.5),
+        ("0.5 N", "total_drag", "N", 0.5),
+        ("0.5 lbf", "lift", "N", 2.2241),
+        ("0.002", "lift", "1", 0.002),
+        ("2 %", "span_efficiency", "1", 0.0196),
+    ],
+)
+def test_targets_are_read(text, row, unit, limit):
+    values = {coefficient_of("total_drag"): 0.025, coefficient_of("induced_drag"): 0.01, coefficient_of("lift"): 0.5}
+    found = read_target(text, row, {**values, "span_efficiency": 0.98})
+    assert found.unit == unit
+    assert found.limit == pytest.approx(limit, rel=1e-4)
+
+
+@pytest.mark.parametrize("text", ["2 cts", "two counts", "-1 N", "0", "3 m", ""])
+def test_targets_that_are_none_are_refused(text):
+    with pytest.raises(SurveyError, match="target"):
+        read_target(text, "total_drag", {coefficient_of("total_drag"): 0.025}, place="--target")
+    with pytest.raises(SurveyError, match="counts"):
+        read_target("2 counts", "lift", {coefficient_of("lift"): 0.5})
+    with pytest.raises(SurveyError, match="'lift'"):
+        read_target("2 counts", "lfit", {})
+
+
+def test_a_target_is_needed(folder):
+    path = folder / "none.toml"
+    path.write_text(edited(('target = "4 counts"\n', "")), encoding="utf-8")
+    with pytest.raises(InputError, match="no target is given"):
+        wl.plan(path)
+
+
+def test_too_few_and_too_many_points_are_refused(folder):
+    path = folder / "size.toml"
+    for spacing in ("0.4 m", "1 mm"):
+        path.write_text(edited(('["25 mm", "30 mm"]', f'"{spacing}"')), encoding="utf-8")
+        with pytest.raises(InputError, match=r"points every"):
+            wl.plan(path)
+
+
+def test_the_sample_plan_is_valid():
+    request = read_plan(SAMPLE)
+    assert request.plan.target == "2 counts" and request.plan.instruments == 3
+    assert request.plan.rows_along == "z"
