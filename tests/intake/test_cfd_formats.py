@@ -204,6 +204,30 @@ def test_one_surface_file_for_each_variable(cfd, tmp_path):
     assert points.triangles is not None
 
 
+def test_a_mesh_and_a_table_are_not_joined(cfd, tmp_path):
+    import pyvista
+
+    _, y, z = lines(cfd)
+    cfd.with_fields(pyvista.RectilinearGrid([STATION], y, z), "point").save(tmp_path / "plane.vtr")
+    paths = [tmp_path / "plane.vtr", sampled(cfd, tmp_path)[1]]
+    with pytest.raises(
+        DataError, match="is a mesh and another one of the same plane is none; write all of them in one"
+    ):
+        read_points(paths, cfd.COLUMNS, axes=IDENTITY, station=STATION)
+
+
+def test_the_digest_of_a_multiblock_file_follows_its_blocks(cfd, tmp_path):
+    import pyvista
+
+    _, y, z = lines(cfd)
+    block = cfd.with_fields(pyvista.RectilinearGrid([STATION], y, z), "point")
+    pyvista.MultiBlock([block]).save(tmp_path / "plane.vtm")
+    before = digest_of(tmp_path / "plane.vtm")
+    piece = next(path for path in (tmp_path / "plane").iterdir())
+    piece.write_bytes(piece.read_bytes() + b"\n")
+    assert digest_of(tmp_path / "plane.vtm") != before
+
+
 def test_a_table_with_a_vector_in_three_columns(cfd, tmp_path):
     yy, zz, fields = plane(cfd)
     for names in (("U:0", "U:1", "U:2"), ("Ux", "Uy", "Uz"), ("U_X", "U_Y", "U_Z")):

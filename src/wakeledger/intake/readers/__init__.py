@@ -85,7 +85,16 @@ def read_points(
     if samples is not None:
         wanted["samples"] = samples
     kinds = [recognise(one) for one in paths]
-    if all(kind in KINDS for kind in kinds):
+    meshes = [kind in KINDS for kind in kinds]
+    if any(meshes) and not all(meshes):
+        raise DataError(
+            "the file is a mesh and another one of the same plane is none"
+            if meshes[0]
+            else "the file is no mesh and another one of the same plane is",
+            file=file,
+            remedy="write all of them in one format",
+        )
+    if all(meshes):
         wanted = _with_mesh_positions(wanted)
         columns = wanted
     else:
