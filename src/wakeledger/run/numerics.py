@@ -17,9 +17,11 @@ from wakeledger.core.grid import Array
 from wakeledger.physics.fields.outer_flow import OuterFlow
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.physics.methods.residual import residual_drag
-from wakeledger.run.chain import Chain, sampled_mask
+from wakeledger.run.chain import Chain
+from wakeledger.run.gaps import gap_draws
 from wakeledger.run.gridded import Regrid
 from wakeledger.run.outputs import OUTPUTS, coefficient_of, estimate_of
+from wakeledger.run.places import sampled_mask
 from wakeledger.run.reduction import Reduction, Variation
 
 MASK = "edge of the wake region"
@@ -91,7 +93,7 @@ def numerical_terms(
     if chain.gridding.kind == "tensor":
         terms.append(_resampling_term(chain, nominal, regrid))
     if chain.gridding.filled.any():
-        terms.append(_gap_term(chain, nominal, regrid))
+        terms.append(_gap_term(chain, nominal, regrid, noise))
     terms.append(_shift_term(chain, nominal, LOSS_ZERO, Variation(loss_shift=outer.loss_zero_uncertainty)))
     shift = outer.offset_uncertainty
     both = [
@@ -205,7 +207,19 @@ def _split_term(nominal: Reduction) -> NumericalTerm:
     return NumericalTerm(SPLIT, vector)
 
 
-def _gap_term(chain: Chain, nominal: Reduction, regrid: Regrid) -> NumericalTerm:
+def _gap_term(chain: Chain, nominal: Reduction, regrid: Regrid, noise: Sequence[Mapping[str, Array]]) -> NumericalTerm:
+    """What the gaps may have held, given the data around them; where those do not tell, what filling does beside."""
+    changes = gap_draws(chain, nominal, noise)
+    if changes is None:
+        return _pattern_term(chain, nominal, regrid)
+    known = np.nan_to_num(changes)
+    size = np.sqrt(np.mean(np.square(known), axis=0))
+    # Rows that the gaps move together with the drag have its sign.
+    together = np.sign(known.T @ known[:, OUTPUTS.index(nominal.drag)])
+    return NumericalTerm(GAPS, np.where(together < 0, -size, size))
+
+
+def _pattern_term(chain: Chain, nominal: Reduction, regrid: Regrid) -> NumericalTerm:
     """Remove measured points in the same pattern beside the true gaps, fill them, and see what that does."""
     state = chain.state(nominal.reference)
     usable = np.isfinite(state.v) & np.isfinite(state.w)

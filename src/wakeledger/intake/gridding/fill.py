@@ -61,6 +61,10 @@ class GapFill:
             solved = self._factor.solve(right).reshape((self.missing.size, *known.shape[1:]))
             fields[..., self.missing] = np.moveaxis(solved, 0, -1)
 
+    def energy(self) -> Array:
+        """Matrix of the energy in the missing cells, shape (n, n), the measured ones held; dense, for small gaps."""
+        return np.asarray(self._normal.toarray())
+
     def back(self, weights: Array) -> None:
         """Move weights of the missing cells, in place, to the measured cells they depend on: the transpose of `into`.
 

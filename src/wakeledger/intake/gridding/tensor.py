@@ -59,11 +59,25 @@ class TensorScheme:
 
     def fields(self, values: Array) -> Array:
         """Grid values of shape (draws, n) to (draws, nz, ny)."""
+        return self.resampled(self.lattice_fields(values))
+
+    def lattice_fields(self, values: Array) -> Array:
+        """Values of shape (draws, n) on the lattice, gaps filled, (draws, nr, nc)."""
         raw = values[:, self._gather]
         if self._repeated.size:
             raw[:, self._repeated] = (self._mean @ values.T).T
         self._gaps.into(raw)
-        fields = raw.reshape(-1, self.lattice.z.size, self.lattice.y.size)
+        return raw.reshape(-1, self.lattice.z.size, self.lattice.y.size)
+
+    @property
+    def missing(self) -> NDArray[np.bool_]:
+        """Places of the lattice without a measurement, shape (nr, nc)."""
+        found = np.zeros(self._gather.size, dtype=bool)
+        found[self._gaps.missing] = True
+        return found.reshape(self.lattice.z.size, self.lattice.y.size)
+
+    def resampled(self, fields: Array) -> Array:
+        """Lattice fields, (draws, nr, nc), on the grid, (draws, nz, ny)."""
         if self.wy is not None:
             fields = fields @ self.wy.T
         if self.wz is not None:
