@@ -370,3 +370,33 @@ def test_time_is_refused_where_there_is_one_instant(cfd, tmp_path):
     cfd.with_fields(mesh, "point").save(tmp_path / "plane.vtp")
     with pytest.raises(DataError, match="time is given"):
         read(cfd, tmp_path / "plane.vtp", time=3.0)
+
+
+@pytest.mark.parametrize("at", ["point", "cell"])
+def test_a_line_is_cut_out_of_a_plane_flow(cfd, tmp_path, at):
+    # Flow about an airfoil in the plane of x and z: across the stream there is a line left.
+    import pyvista
+
+    mesh = pyvista.StructuredGrid(*np.meshgrid(cfd.STRETCHED_X, [0.0], cfd.STRETCHED_Z, indexing="ij"))
+    cfd.with_fields(mesh.cast_to_unstructured_grid(), at).save(tmp_path / "flow.vtu")
+    points = read(cfd, tmp_path / "flow.vtu", coordinates=1)
+    z = cfd.STRETCHED_Z if at == "point" else (cfd.STRETCHED_Z[1:] + cfd.STRETCHED_Z[:-1]) / 2
+    np.testing.assert_allclose(np.sort(points.z), np.sort(z), atol=1e-6)
+    cfd.check(points, STATION)
+
+
+def test_triangles_areas_and_origin_are_kept_in_the_archive(cfd, tmp_path):
+    from wakeledger.ledger.encoding import dataset_points, points_dataset
+
+    mesh, extension = volumes(cfd)["hexahedra"]
+    for at in ("point", "cell"):
+        path = tmp_path / f"{at}{extension}"
+        cfd.with_fields(mesh, at).save(path)
+        points = read(cfd, path)
+        again = dataset_points(points_dataset(points))
+        assert again.how == points.how != ""
+        for name in ("triangles", "areas"):
+            kept, was = getattr(again, name), getattr(points, name)
+            assert (kept is None) == (was is None)
+            if was is not None:
+                np.testing.assert_array_equal(kept, was)

@@ -230,7 +230,7 @@ def _cut_cells(
 
 def _pieces(cut: Any, across: list[int]) -> tuple[Array, Array]:
     """Centre, shape (m, 2), and area of each piece of a cut; of lines, cut out of a surface, the middles."""
-    if cut.n_lines and not cut.n_faces_strict:
+    if cut.n_lines and not cut.GetNumberOfPolys():
         ends = np.asarray(cut.lines).reshape(-1, 3)[:, 1:]
         return np.asarray(cut.points)[ends].mean(axis=1)[:, across], np.zeros(ends.shape[0])
     points, polygons, _, _ = mesh.surface_polygons(cut)
