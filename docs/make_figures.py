@@ -282,12 +282,14 @@ def plan_check() -> Figure:
     lines = [[cell.strip() for cell in line.split("|")[1:-1]] for line in block.splitlines() if line.startswith("|")][
         2:
     ]
-    ratio, doubt = np.array([[float(x) for x in line[5].split(" ± ")] for line in lines]).T
     at = np.arange(len(lines))
-    with drawing(7.1, 0.26 * len(lines) + 0.7) as (figure, (panel,)):
+    with drawing(7.1, 0.28 * len(lines) + 0.9) as (figure, (panel,)):
         panel.axvspan(0.8, 1.2, color=GREEN, alpha=0.18, lw=0)
         panel.axvline(1, color=GREEN, lw=1)
-        panel.errorbar(ratio, at, xerr=doubt, fmt="o", ms=4, lw=1, color=BLUE)
+        for column, colour, name, shift in ((4, BLUE, "whole", -0.12), (5, GREY, "declared sources alone", 0.12)):
+            ratio, doubt = np.array([[float(x) for x in line[column].split(" ± ")] for line in lines]).T
+            panel.errorbar(ratio, at + shift, xerr=doubt, fmt="o", ms=4, lw=1, color=colour, label=name)
+        figure.legend(loc="outside lower left", ncols=2)
         panel.set_yticks(at, [line[0] for line in lines])
         panel.set_ylim(len(lines) - 0.5, -0.5)
         panel.set_xlim(0.6, 1.4)
