@@ -7,7 +7,8 @@ representative cell sizes h1 < h2 < h3, r21 = h2/h1, r32 = h3/h2, ε21 = φ2 −
     φext = (r21^p φ1 − φ2)/(r21^p − 1),   GCI = 1.25 |(φ1 − φ2)/φ1|/(r21^p − 1).
 
 The absolute value of p is left out here: a root that is not positive says that the grids diverge, and that is what is
-reported.
+reported. Two grids show no order; with an assumed one the index has the factor 3 instead of 1.25 (P. J. Roache, J.
+Fluids Eng. 116 (1994) 405).
 """
 
 from __future__ import annotations
@@ -21,6 +22,8 @@ import numpy as np
 
 #: Safety factor of the index for three and more grids.
 SAFETY_FACTOR = 1.25
+#: The same for two grids, whose order is assumed.
+SAFETY_FACTOR_ASSUMED = 3.0
 #: Coverage factor the index is taken to have when it is turned into a standard uncertainty: it was fitted to hold in
 #: about 95 % of cases.
 COVERAGE_FACTOR = 2.0
@@ -30,19 +33,19 @@ LEAST_RATIO = 1.3
 #: larger one would make the index too small.
 ORDER_LIMITS = (0.5, 4.0)
 
-Convergence = Literal["monotone", "oscillatory", "divergent", "converged"]
+Convergence = Literal["monotone", "oscillatory", "divergent", "converged", "assumed"]
 
 
 @dataclass(frozen=True)
 class GridConvergence:
-    """What three grids say about the discretisation error of the finest.
+    """What three grids, or two and an assumed order, say about the discretisation error of the finest.
 
     Attributes
     ----------
-    convergence : {"monotone", "oscillatory", "divergent", "converged"}
-        How the three values approach each other; converged where the two finest are equal.
+    convergence : {"monotone", "oscillatory", "divergent", "converged", "assumed"}
+        How the three values approach each other; converged where the two finest are equal, assumed of two grids.
     order : float
-        Observed order p; NaN where there is none.
+        Observed, or assumed, order p; NaN where there is none.
     extrapolated : float
         Value extrapolated to zero cell size, the number's unit.
     approximate_error : float
@@ -52,10 +55,11 @@ class GridConvergence:
     index : float
         Grid convergence index of the finest grid, relative to φ1; NaN where it cannot be had.
     ratios : (float, float)
-        r21 and r32.
+        r21 and r32; the latter NaN of two grids.
     standard_uncertainty : float
         Of the finest grid's value, in its unit: the index over its coverage factor, or, where the grids do not converge
-        or the order lies outside `ORDER_LIMITS`, half the spread of the three values if that is more.
+        or the order lies outside `ORDER_LIMITS`, half the spread of the three values if that is more. NaN where all
+        values are equal.
     reason : str or None
         What limits the statement.
     """
@@ -121,7 +125,8 @@ def grid_convergence(values: Sequence[float], sizes: Sequence[float]) -> GridCon
         raise ValueError(f"three values on grids of three sizes are needed; {list(values)} on {list(sizes)} were given")
     r21, r32 = float(h[1] / h[0]), float(h[2] / h[1])
     e21, e32 = float(phi[1] - phi[0]), float(phi[2] - phi[1])
-    spread = float(np.ptp(phi)) / 2
+    # Values that do not differ at all say nothing about the error.
+    spread = float(np.ptp(phi)) / 2 or math.nan
     fine = float(phi[0])
     approximate = abs(e21 / fine) if fine else math.nan
     if e21 == 0.0:
@@ -155,6 +160,58 @@ def grid_convergence(values: Sequence[float], sizes: Sequence[float]) -> GridCon
         uncertainty = max(uncertainty, spread)
     return GridConvergence(
         convergence, p, extrapolated, approximate, error, index, (r21, r32), uncertainty, "; ".join(reasons) or None
+    )
+
+
+def assumed_convergence(values: Sequence[float], sizes: Sequence[float], *, order: float) -> GridConvergence:
+    """Grid convergence index of two grids with an assumed order.
+
+    Parameters
+    ----------
+    values : sequence of float
+        The number on the two grids, either order of grids.
+    sizes : sequence of float
+        Their representative cell sizes (`cell_size`), any unit; different.
+    order : float
+        Order p of the scheme, positive.
+
+    Returns
+    -------
+    GridConvergence
+        Its index has the factor `SAFETY_FACTOR_ASSUMED`.
+
+    Raises
+    ------
+    ValueError
+        If there are not two finite values with two different positive sizes, or the order is not positive.
+    """
+    at = np.argsort(sizes)
+    h = np.asarray(sizes, float)[at]
+    phi = np.asarray(values, float)[at]
+    if phi.shape != (2,) or h.shape != (2,) or not np.isfinite(phi).all() or not 0 < h[0] < h[1] or not order > 0:
+        raise ValueError(
+            f"two values on grids of two sizes and a positive order are needed; {list(values)} on {list(sizes)}"
+            f" with {order} were given"
+        )
+    r21, fine, change = float(h[1] / h[0]), float(phi[0]), float(phi[1] - phi[0])
+    growth = r21**order - 1
+    extrapolated = fine - change / growth
+    approximate = abs(change / fine) if fine else math.nan
+    reasons = [f"two grids show no order; {order:g} is assumed"]
+    if change == 0.0:
+        reasons = ["both grids give the same value, which says nothing about the error"]
+    if r21 < LEAST_RATIO:
+        reasons.append(f"a refinement ratio of {r21:.3g} is below {LEAST_RATIO:g}")
+    return GridConvergence(
+        "assumed",
+        float(order),
+        extrapolated,
+        approximate,
+        abs((extrapolated - fine) / extrapolated) if extrapolated else math.nan,
+        SAFETY_FACTOR_ASSUMED * approximate / growth if change else math.nan,
+        (r21, math.nan),
+        SAFETY_FACTOR_ASSUMED * abs(change) / growth / COVERAGE_FACTOR if change else math.nan,
+        "; ".join(reasons),
     )
 
 
