@@ -26,8 +26,9 @@ from wakeledger.run.chain import Chain
 from wakeledger.run.config import parse_survey
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.outputs import ROWS
+from wakeledger.run.prepared import prepare
+from wakeledger.run.propagate import terms_of
 from wakeledger.run.reduction import Variation
-from wakeledger.run.survey import _terms, prepare
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import SyntheticWake, wing_wake
 from wakeledger.synthetic.recordings import Errors, Positions, Recording, grid_positions, record
@@ -214,7 +215,7 @@ def judge(case: Case, generator: np.random.Generator, *, draws: int = DRAWS, num
     if numerical:
         terms = [
             replace(term, standard_uncertainty=term.standard_uncertainty[: len(ROWS)])
-            for term in _terms(prepared, given)
+            for term in terms_of(prepared, given)
         ]
         wider = add_terms(samples, terms, seed=seed)
     truth = wake().truth.rows()

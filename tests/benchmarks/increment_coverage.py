@@ -26,7 +26,8 @@ from wakeledger.ledger.contributions import Contributions
 from wakeledger.run.config import parse_survey
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.outputs import OUTPUTS, coefficient_of
-from wakeledger.run.survey import _terms, prepare
+from wakeledger.run.prepared import prepare
+from wakeledger.run.propagate import terms_of
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import SyntheticWake, wing_wake
 from wakeledger.synthetic.recordings import Errors, grid_positions, record
@@ -216,7 +217,7 @@ def contributions(given: SurveyInput, *, draws: int, numerical: bool) -> tuple[n
     left = scatter(samples, few, found).reshape(2, len(JUDGED), 2, len(JUDGED))
     parts = [_over(one, at.shape) for one in found]
     if numerical:
-        parts += [_over(one, at.shape, flat) for one in term_components(_terms(prepared, given))]
+        parts += [_over(one, at.shape, flat) for one in term_components(terms_of(prepared, given))]
     covariance = np.stack([left[0, :, 0], left[1, :, 1]])
     values = np.array([prepared.nominal.values[OUTPUTS[k]] for k in flat]).reshape(at.shape)
     return values, Contributions(JUDGED, tuple(parts), covariance, np.full(at.shape, math.inf))

@@ -25,8 +25,9 @@ from wakeledger.run.linear import linear_slopes
 from wakeledger.run.load import SurveyInput, load
 from wakeledger.run.noise import noise_bias, white_noise
 from wakeledger.run.outputs import OUTPUTS
+from wakeledger.run.prepared import _line, prepare
 from wakeledger.run.reduction import Frozen
-from wakeledger.run.survey import _line, inspect, prepare
+from wakeledger.run.survey import inspect
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import Errors, Recording, grid_positions, record, wing_wake
 

@@ -26,6 +26,7 @@ from wakeledger.ledger.rows import (
     Combined,
     Comparison,
     CrossCheck,
+    Diagnostic,
     KeptSurvey,
     Ledger,
     Row,
@@ -68,6 +69,9 @@ _PROPAGATION = "propagation"
 
 #: Groups of the ledgers of several planes, numbered from 1, and the attribute that says how they were combined.
 _STATION, _COMBINED = "station_", "combined"
+
+#: Group of other forms of the drag of a computed plane.
+_DIAGNOSTICS = "diagnostics"
 
 #: Attribute that holds what surface forces and wake differ by.
 _CLOSURES = "closures"
@@ -224,6 +228,8 @@ def _groups(ledger: Ledger) -> dict[str, xr.Dataset]:
     for number, (name, calibration) in enumerate(ledger.calibrations.items(), start=1):
         group = _CALIBRATION if number == 1 else f"{_CALIBRATION}_{number}"
         groups[group] = calibration.assign_attrs({_CALIBRATION_NAME: name})
+    if ledger.diagnostics:
+        groups[_DIAGNOSTICS] = encoding.records_dataset(ledger.diagnostics, Diagnostic, "figure")
     if ledger.tunnel:
         groups[_TUNNEL] = encoding.records_dataset(ledger.tunnel, TunnelFigure, "figure")
     for name, kept in ledger.companions.items():
@@ -254,6 +260,8 @@ def _ledger(root: xr.Dataset, source: Path, *, within: str = "") -> Ledger:
     contributions = Contributions.from_dataset(read(_CONTRIBUTIONS)) if _CONTRIBUTIONS in present else None
     if _PROPAGATION in present:
         tables["propagation"] = dataset_propagation(read(_PROPAGATION))
+    if _DIAGNOSTICS in present:
+        tables["diagnostics"] = encoding.dataset_records(read(_DIAGNOSTICS), Diagnostic)
     if _TUNNEL in present:
         tables["tunnel"] = encoding.dataset_records(read(_TUNNEL), TunnelFigure)
     companions = {}

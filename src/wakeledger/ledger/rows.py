@@ -269,6 +269,28 @@ class TunnelFigure:
 
 
 @dataclass(frozen=True)
+class Diagnostic:
+    """Another form of a computed plane's drag, or a power, that is in no row (``diagnostics`` of ledger.json).
+
+    Attributes
+    ----------
+    name : str
+        Of the figure.
+    value : float
+        In `unit`.
+    unit : str
+        UDUNITS string.
+    meaning : str
+        What it is, with its sign.
+    """
+
+    name: str
+    value: float
+    unit: str
+    meaning: str
+
+
+@dataclass(frozen=True)
 class Combined:
     """How the planes of several stations were made into one set of rows.
 
@@ -380,6 +402,8 @@ class Ledger:
         the vortices and the span loading are then those of the first.
     combined : Combined or None
         How the stations were made into the rows.
+    diagnostics : tuple of Diagnostic
+        Other forms of the drag of a computed plane, for information.
     closures : tuple of Closure
         Drags of computed planes held against the solver's surface forces, taken apart by cause.
     inputs : mapping of str to str
@@ -419,6 +443,7 @@ class Ledger:
     companions: Mapping[str, KeptSurvey] = field(default_factory=lambda: MappingProxyType({}))
     stations: tuple[Ledger, ...] = ()
     combined: Combined | None = None
+    diagnostics: tuple[Diagnostic, ...] = ()
     closures: tuple[Closure, ...] = ()
     inputs: Mapping[str, str] = field(default_factory=_empty)
     provenance: Mapping[str, str] = field(default_factory=_empty)

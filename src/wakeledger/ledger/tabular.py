@@ -68,11 +68,13 @@ def ledger_json(ledger: Ledger) -> dict[str, Any]:
         ]
     if ledger.repeats is not None:
         document["repeats"] = repeats_json(ledger.repeats)
+    if ledger.diagnostics:
+        document["diagnostics"] = [_plain(asdict(one), "it has no value") for one in ledger.diagnostics]
     if ledger.closures:
         document["closures"] = [_closure_entry(one) for one in ledger.closures]
     if ledger.combined is not None:
         document["combined"] = _plain(asdict(ledger.combined), ledger.combined.reason)
-        parts = ("rows", "estimates", "budget", "checks", "notes", "tunnel")
+        parts = ("rows", "estimates", "budget", "checks", "notes", "tunnel", "diagnostics")
         planes = [(one.station, ledger_json(one)) for one in ledger.stations]
         document["planes"] = [
             {"station": station} | {part: plane[part] for part in parts if part in plane} for station, plane in planes

@@ -12,7 +12,6 @@ from types import MappingProxyType
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 
 from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.core.grid import Array, UniformGrid
@@ -26,8 +25,7 @@ from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.duct_near_field import duct_near_field
 from wakeledger.physics.fields.flow import Flow
 from wakeledger.physics.fields.lifting_line import NearField, near_field
-from wakeledger.physics.fields.loss_level import beyond
-from wakeledger.physics.fields.outer_flow import LEAST_SHARE, induced_crossflow, loss_zero, stream_swirl
+from wakeledger.physics.fields.outer_flow import induced_crossflow, loss_zero, stream_swirl
 from wakeledger.physics.fields.pressure import crossflow_pressure
 from wakeledger.physics.fields.wake_region import Mask, WakeRegion, grown_region, region_of, wake_region
 from wakeledger.physics.fields.wall_correction import wall_stream_function
@@ -40,6 +38,7 @@ from wakeledger.run.coefficients import coefficients, tunnel_figures
 from wakeledger.run.empty_tunnel import EmptyTunnel
 from wakeledger.run.estimates import area_estimates, on_frozen_geometry, without_walls
 from wakeledger.run.outputs import OUTPUTS, WITHOUT_CROSSFLOW
+from wakeledger.run.places import default_grow, sampled_mask, zero_places
 from wakeledger.run.reduction import Frozen, Reduction, Settings, Variation
 from wakeledger.run.shear import Displacement
 from wakeledger.run.zeroing import axial_velocity, zeroed
@@ -289,11 +288,13 @@ class Chain:
             reflection=settings.reflection,
         )
         loss_free = loss_free_axial_velocity(flow, reference)
-        integrand = np.where(mask, profile_integrand(flow, reference, loss_free), 0.0)
-        deficit = wake_deficit(flow, loss_free, mask)
+        energised = self.frozen.energised
+        lossy = mask if energised is None else mask & ~energised
+        integrand = np.where(lossy, profile_integrand(flow, reference, loss_free), 0.0)
+        deficit = wake_deficit(flow, loss_free, lossy)
         blockage = float(with_blockage(grid.integrate(integrand), deficit, reference, boundary).velocity)
         if blockage:
-            integrand = integrand - np.where(mask, reference.density * blockage * (loss_free - flow.u), 0.0)
+            integrand = integrand - np.where(lossy, reference.density * blockage * (loss_free - flow.u), 0.0)
         near = self.frozen.near_field
         if near is None:
             near = self.near_field(vorticity, grid)
@@ -308,12 +309,13 @@ class Chain:
         values = dict.fromkeys(OUTPUTS, np.nan)
         wave, split_uncertainty = 0.0, 0.0
         if self.frozen.shock_level is not None:
-            split = wave_split(flow, reference, level=self.frozen.shock_level)
+            split = wave_split(flow, reference, level=self.frozen.shock_level, energised=energised)
             wave, split_uncertainty = (settings.counted * one for one in (split.wave_drag, split.split_uncertainty))
             profile -= wave
             values["wave_drag"] = wave
         if settings.computed:
-            beside = np.where(mask, 0.0, profile_integrand(flow, reference, loss_free))
+            away = ~mask if energised is None else ~(mask | energised)
+            beside = np.where(away, profile_integrand(flow, reference, loss_free), 0.0)
             values["numerical_drag"] = settings.counted * float(grid.integrate(beside))
         values |= {
             "profile_drag": profile,
@@ -464,16 +466,6 @@ class Chain:
         return near_field(vorticity, grid, distance=distance)
 
 
-def zero_places(mask: Mask, grid: UniformGrid, distance: float) -> Mask:
-    """Places at which the zero of the total pressure is taken: so far from the wake region, if enough is left there."""
-    if distance > 0:
-        far = beyond(mask, grid, distance)
-        if far.mean() >= LEAST_SHARE:
-            return far
-    outside: Mask = ~mask
-    return outside
-
-
 def turned_crossflow(mask: Mask, grid: UniformGrid, boundary: Boundary) -> Array:
     """Crossflow that the vorticity 2 s⁻¹ of a unit rotation of the stream induces from the wake region, (2, nz, ny)."""
     return induced_crossflow(wall_stream_function(np.where(mask, 2.0, 0.0), grid, boundary), grid)
@@ -482,18 +474,3 @@ def turned_crossflow(mask: Mask, grid: UniformGrid, boundary: Boundary) -> Array
 def _walls_drag(forces: VorticityForces) -> Array:
     """What the walls add to the induced drag, N."""
     return forces.induced_drag - forces.free_air_drag
-
-
-def default_grow(gridding: Gridding) -> float:
-    """How far the wake region is grown where the survey file does not say, m: four spacings of the measured points."""
-    from wakeledger.physics.fields.wake_region import GROW_CELLS
-
-    return GROW_CELLS * max(gridding.raw_spacing)
-
-
-def sampled_mask(mask: Mask, grid: UniformGrid, onto: UniformGrid) -> NDArray[np.bool_]:
-    """A wake region brought onto another grid of the same plane, by nearest place; none beyond its own grid."""
-    iz, iy = np.rint((onto.z - grid.z0) / grid.dz).astype(int), np.rint((onto.y - grid.y0) / grid.dy).astype(int)
-    inside = np.outer((iz >= 0) & (iz < grid.nz), (iy >= 0) & (iy < grid.ny))
-    found: Mask = mask[np.ix_(np.clip(iz, 0, grid.nz - 1), np.clip(iy, 0, grid.ny - 1))] & inside
-    return found

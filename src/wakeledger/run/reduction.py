@@ -128,6 +128,8 @@ class Frozen:
         Noise bias of each output, in its unit, subtracted from it.
     turned : ndarray, shape (2, nz, ny), or None
         Crossflow that a unit rotation of the stream leaves behind through the wake region.
+    energised : ndarray of bool or None
+        Slipstreams and heated flow, kept out of the profile drag.
     shock_level : float or None
         Loss above which smooth loss outside the viscous wake is a shock's, Pa; None where no shock is looked for.
 
@@ -144,6 +146,7 @@ class Frozen:
     region: Mask | None = None
     bias: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
     turned: Array | None = None
+    energised: Mask | None = None
     shock_level: float | None = None
 
 

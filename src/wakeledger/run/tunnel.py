@@ -56,6 +56,9 @@ def tunnel_sources(
     """
     found = list(declared)
     added: dict[str, InputLayout] = {}
+    if not found:
+        # Where nothing is known of the measurement's errors, those of other surveys alone would pass for all there are.
+        return (), added
     if survey.tare is not None:
         found.append(
             Source(survey.tare.label, ("boundary.support_tare",), "systematic", survey.tare.standard_uncertainty)

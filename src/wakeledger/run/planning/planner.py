@@ -40,8 +40,8 @@ from wakeledger.run.planning.simulate import (
     window_of,
 )
 from wakeledger.run.planning.target import Target, read_target
+from wakeledger.run.prepared import prepare
 from wakeledger.run.reduction import Variation
-from wakeledger.run.survey import prepare
 
 Progress = Callable[[int, int], None]
 

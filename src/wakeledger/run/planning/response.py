@@ -32,8 +32,10 @@ from wakeledger.run.planning.simulate import (
     noise_of,
     simulated,
 )
+from wakeledger.run.prepared import Prepared, prepare
+from wakeledger.run.propagate import terms_of
 from wakeledger.run.reduction import Variation
-from wakeledger.run.survey import Prepared, _facts, _terms, prepare
+from wakeledger.run.survey import facts_of
 
 #: Line of the budget for what a survey without any noise leaves that no numerical term covers.
 LEFT = "window and spacing, beyond the terms above"
@@ -168,7 +170,7 @@ def respond(
             prepared = prepare(given)
             if not prepared.nominal.region.mask.any():
                 return Response(reason="no wake is found")
-            terms = _terms(prepared, given)
+            terms = terms_of(prepared, given)
         except InputError as error:
             return Response(reason=error.found)
         found.append(
@@ -215,7 +217,7 @@ class _Pass:
         )
         self.fixed, self.averaged = _split(terms, prepared.outer, zeros, self._edge(still), at)
         self.failing = tuple(
-            check.name for check in all_checks(prepared.nominal, _facts(prepared)) if check.verdict == "fail"
+            check.name for check in all_checks(prepared.nominal, facts_of(prepared)) if check.verdict == "fail"
         )
         gradient = point_gradient(chain, prepared.nominal, estimates=False, workers=workers)
         slopes, _ = input_gradients(chain, gradient, self.layouts, workers=workers)

@@ -1,0 +1,162 @@
+"""What errors and numerical choices make of a prepared survey: terms, draws and budget."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from wakeledger.confidence.budget import Budget, make_budget
+from wakeledger.confidence.linear_budget import NEGLIGIBLE, LinearBudget
+from wakeledger.confidence.montecarlo import run as run_montecarlo
+from wakeledger.confidence.samples import Samples
+from wakeledger.confidence.sampling import ErrorSampler
+from wakeledger.confidence.terms import NumericalTerm, add_terms
+from wakeledger.core.grid import Array
+from wakeledger.physics.methods.entropy_area import expansion_doubt
+from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
+from wakeledger.physics.methods.wake_line import path_scatter
+from wakeledger.run.computed import mesh_term
+from wakeledger.run.estimates import counted_mask, without_walls
+from wakeledger.run.gridded import regrid_of
+from wakeledger.run.linear import linear_slopes, separated, survey_budget, tried, with_prediction
+from wakeledger.run.load import SurveyInput
+from wakeledger.run.numerics import numerical_terms
+from wakeledger.run.outputs import OUTPUTS, estimate_of
+from wakeledger.run.prepared import Prepared
+
+#: Draws that tell the wake region's own effect from that of noise.
+_NOISE_DRAWS = 16
+#: What sums of cells and sums of differences may differ by on the same vorticity, as a share.
+DISCRETISATION = 1e-4
+
+
+Progress = Callable[[int, int], None]
+
+
+def terms_of(prepared: Prepared, survey: SurveyInput) -> tuple[NumericalTerm, ...]:
+    """Numerical terms of a prepared survey.
+
+    Parameters
+    ----------
+    prepared : Prepared
+        The survey.
+    survey : SurveyInput
+        As it was loaded.
+
+    Returns
+    -------
+    tuple of NumericalTerm
+    """
+    own = mesh_term(survey, prepared.chain, prepared.nominal) if survey.computed else None
+    found = numerical_terms(
+        prepared.chain,
+        prepared.nominal,
+        outer=prepared.outer,
+        regrid=regrid_of(survey, prepared.chain.state(prepared.nominal.reference)),
+        method_uncertainty=_method_uncertainty(prepared),
+        noise=_noise_draws(prepared, seed=survey.survey.uncertainty.seed),
+    )
+    return found if own is None else (*found, own)
+
+
+def _method_uncertainty(prepared: Prepared) -> dict[str, float]:
+    """Standard uncertainty that each estimate's own choices add, N."""
+    chain, nominal, near = prepared.chain, prepared.nominal, prepared.chain.frozen.near_field
+    flow, reference = nominal.flow, nominal.reference
+    found = {
+        estimate_of("induced_drag", "vortex_sum"): prepared.vortices.method_uncertainty,
+        estimate_of("profile_drag", "entropy_area"): expansion_doubt(flow, reference, nominal.profile_integrand),
+        estimate_of("lift", "wake_line"): DISCRETISATION * abs(nominal.values["lift"]),
+    }
+    if chain.frozen.cuts is not None and near is not None:
+        # The bound vortex makes families of paths differ as predicted; what is left over is the method's doubt.
+        v, w = without_walls(chain.settings, flow, nominal.forces)
+        far = evaluate_wake_line(
+            chain.frozen.cuts,
+            v - near[0],
+            w - near[1],
+            reference.density,
+            reference.speed,
+            mask=counted_mask(chain.settings, nominal.region.mask, flow.grid),
+        )
+        found[estimate_of("induced_drag", "wake_line")] = float(path_scatter(far.family_drag))
+    return found
+
+
+def _noise_draws(prepared: Prepared, *, seed: int) -> list[dict[str, Array]]:
+    """A few draws of the errors that differ from point to point."""
+    random = [source for source in prepared.sources if source.effect != "systematic"]
+    if not random:
+        return []
+    inputs = {name: prepared.layouts[name] for source in random for name in source.applies_to}
+    draws = ErrorSampler(random, inputs, seed=seed).draw(0, _NOISE_DRAWS)
+    return [{name: array[k] for name, array in draws.items()} for k in range(_NOISE_DRAWS)]
+
+
+@dataclass(frozen=True)
+class Propagated:
+    """Uncertainty of the outputs: draws with numerical terms, and without; what derivatives make of the same errors."""
+
+    samples: Samples
+    budget: Budget
+    plain: Samples
+    predicted: Samples
+    linear: LinearBudget
+
+
+def propagate(
+    prepared: Prepared, terms: Sequence[NumericalTerm], *, draws: int, seed: int, progress: Progress | None
+) -> Propagated:
+    """Monte Carlo draws of a prepared survey, its budget, and what derivatives make of the same errors.
+
+    Parameters
+    ----------
+    prepared : Prepared
+        The survey, with sources.
+    terms : sequence of NumericalTerm
+        From `terms_of`.
+    draws, seed : int
+        Of the Monte Carlo.
+    progress : callable or None
+        Called with the draws done and their number.
+
+    Returns
+    -------
+    Propagated
+    """
+    chain, nominal, given, inputs = prepared.chain, prepared.nominal, prepared.sources, prepared.layouts
+    slopes = tried(chain, linear_slopes(chain, nominal, given, inputs), given, inputs)
+    drawn = run_montecarlo(
+        with_prediction(chain.vectors, slopes),
+        given,
+        inputs,
+        names=(*OUTPUTS, *(f"{name} by derivatives" for name in OUTPUTS)),
+        draws=draws,
+        seed=seed,
+        progress=progress,
+    )
+    plain, predicted = separated(drawn)
+    budget = make_budget(
+        chain.vectors,
+        given,
+        inputs,
+        plain,
+        seed=seed,
+        terms=terms,
+        draws=max(50, draws // 5),
+    )
+    whole = sum(sum(noise.variance) for noise in prepared.noises)
+    noisy = {noise.name for noise in prepared.noises if sum(noise.variance) >= NEGLIGIBLE * whole}
+    linear = survey_budget(chain, nominal, slopes, given, inputs, noisy=noisy, components=budget.components)
+    return Propagated(add_terms(plain, terms, seed=seed), budget, plain, predicted, linear)
+
+
+def numerical_only(
+    prepared: Prepared, terms: Sequence[NumericalTerm], *, draws: int, seed: int
+) -> tuple[Samples, Budget]:
+    """Nothing was measured in a computed flow: numerical terms are all the uncertainty there is."""
+    plain = Samples(OUTPUTS, np.tile(prepared.nominal.vector, (draws, 1)))
+    budget = make_budget(prepared.chain.vectors, (), {}, plain, seed=seed, terms=terms)
+    return add_terms(plain, terms, seed=seed), budget
