@@ -8,7 +8,6 @@ from dataclasses import dataclass
 import numpy as np
 
 from wakeledger.confidence.correlation import squared_exponential
-from wakeledger.confidence.noise import NoiseEstimate, estimate_noise
 from wakeledger.confidence.noise_bias import quadratic_noise_bias
 from wakeledger.confidence.sampling import SourceErrors
 from wakeledger.confidence.sources import InputLayout, Source
@@ -157,24 +156,6 @@ def _mean_square(errors: Array) -> tuple[float, float]:
     known = [component[np.isfinite(component)] for component in errors]
     v, w = (float(np.mean(component**2)) if component.size else 0.0 for component in known)
     return v, w
-
-
-def estimated_noise(nominal: Reduction, filled: Mask) -> tuple[NoiseEstimate, NoiseEstimate]:
-    """Noise of v and w estimated from the outer flow of a plane that was measured on its own uniform grid.
-
-    Parameters
-    ----------
-    nominal : Reduction
-        The nominal reduction.
-    filled : ndarray of bool, shape (nz, ny)
-        Places that were filled in.
-
-    Returns
-    -------
-    (NoiseEstimate, NoiseEstimate)
-    """
-    skip = nominal.region.mask | filled
-    return estimate_noise(nominal.flow.v, mask=skip), estimate_noise(nominal.flow.w, mask=skip)
 
 
 def white_noise(name: str, v: float, w: float) -> Noise:
