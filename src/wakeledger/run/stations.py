@@ -10,7 +10,7 @@ alike on all planes: the choice is the same, the flow it acts on is not.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Collection, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -26,11 +26,11 @@ from wakeledger.ledger.rows import Check, Combined, Ledger, Row
 from wakeledger.physics.methods.station_fit import StationFit, station_fit
 from wakeledger.run import tables
 from wakeledger.run.assembly import comparisons, require_rows
-from wakeledger.run.chain import sampled_mask
 from wakeledger.run.gridded import grid_survey
 from wakeledger.run.increment import contributions_of
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.outputs import MOMENTS, ROWS
+from wakeledger.run.places import sampled_mask
 from wakeledger.run.reduction import Variation
 from wakeledger.stream.reference import Reference
 
@@ -80,11 +80,12 @@ def reduce_stations(survey: SurveyInput, reduce_one: Callable[[SurveyInput], Led
     require_rows(file, names)
     known = [name for name in names if all(math.isfinite(one.row(name).standard_uncertainty) for one in ledgers)]
     values = np.array([[one.row(name).value for name in names] for one in ledgers])
-    parts = [_split(contributions_of(one, known), number) for number, one in enumerate(ledgers)]
+    own = {one.name for one in file.uncertainty.source if one.effect != "systematic" and one.shared_id is None}
+    parts = [_split(contributions_of(one, known), number, own) for number, one in enumerate(ledgers)]
     joint = _joint_covariance(parts, known, names)
     weights, combined_values, fit = _combine(ledgers, stations, names, values, joint, file.reference.resolve())
     of_known = np.array([names.index(name) for name in known], dtype=int)
-    whole = _contributions(parts, known, weights[of_known][:, :, of_known], fit)
+    whole = _contributions(parts, known, weights[of_known][:, :, of_known], fit, combined_values[of_known])
     rows = _rows(ledgers, names, known, weights, combined_values, whole)
     covariance = np.full((len(names), len(names)), np.nan)
     if known:
@@ -142,14 +143,17 @@ def _key(one: Component) -> tuple[str, str, str, int]:
     return one.kind, one.source, one.input, one.number
 
 
-def _split(part: Contributions, number: int) -> Contributions:
-    """The same with every numerical term as one that all planes share and one of this plane's own."""
+def _split(part: Contributions, number: int, own: Collection[str]) -> Contributions:
+    """The same with every numerical term as one that all planes share and one of this plane's own.
+
+    `own` are sources whose errors change from point to point or row to row: another plane has others.
+    """
     found: list[Component] = []
     for one in part.components:
         # A row without a coefficient has no effect on one.
         one = replace(one, linear=np.nan_to_num(one.linear), curved=np.nan_to_num(one.curved))
         if one.kind != NUMERICAL:
-            found.append(one)
+            found.append(replace(one, input=f"{one.input} of plane {number + 1}") if one.source in own else one)
             continue
         found.append(one.times(math.sqrt(_ALIKE)))
         found.append(replace(one.times(math.sqrt(1 - _ALIKE)), number=number + 1))
@@ -282,9 +286,35 @@ def _follow(
         p = names.index("profile_drag")
         weights[p] = weights[t] - weights[i] - sum((weights[other] for other in others), np.zeros_like(weights[p]))
         combined[p] = combined[t] - combined[i] - sum(combined[other] for other in others)
+    if "induced_drag_free_air" in names:
+        # What the walls add does not decay: it is a mean, and the vortices' decay that of the induced drag.
+        f = names.index("induced_drag_free_air")
+        share = weights[f, :, f].copy()
+        weights[f] = weights[i]
+        weights[f, :, f] += share
+        weights[f, :, i] -= share
+        combined[f] = combined[i] + share @ (values[:, f] - values[:, i])
+    if {"span_efficiency", "lift"} <= set(names) and combined[i] > 0:
+        # e = L²/(πqb²D_i), of the combined lift and drag; an error of q is that of the planes' own values.
+        e, lift = names.index("span_efficiency"), names.index("lift")
+        d = names.index(_efficiency_drag(names))
+        constant = float(np.mean(values[:, e] * values[:, d] / values[:, lift] ** 2))
+        combined[e] = constant * combined[lift] ** 2 / combined[d]
+        share = weights[e, :, e].copy()
+        weights[e] = 2 * combined[e] / combined[lift] * weights[lift] - combined[e] / combined[d] * weights[d]
+        weights[e, :, e] += share
+        weights[e, :, lift] -= 2 * combined[e] / combined[lift] * share
+        weights[e, :, d] += combined[e] / combined[d] * share
 
 
-def _contributions(parts: Sequence[Contributions], known: Sequence[str], weights: Array, fit: _Fit) -> Difference:
+def _efficiency_drag(names: Sequence[str]) -> str:
+    """The induced drag that the span efficiency is of: between walls that of free air."""
+    return "induced_drag_free_air" if "induced_drag_free_air" in names else "induced_drag"
+
+
+def _contributions(
+    parts: Sequence[Contributions], known: Sequence[str], weights: Array, fit: _Fit, combined: Array
+) -> Difference:
     """Contributions to the combined rows, `weights` of shape (m, k, m)."""
     m = len(known)
     components: dict[tuple[str, str, str, int], Component] = {}
@@ -303,13 +333,13 @@ def _contributions(parts: Sequence[Contributions], known: Sequence[str], weights
     found = list(components.values())
     groups = [("shared", one.shared_id) if one.shared_id else (one.kind, one.source) for one in found]
     whole = Difference(tuple(known), tuple(found), tuple(groups), ((SCATTER, scatter, freedom),), ())
-    trend = _trend(whole, known, fit)
+    trend = _trend(whole, known, fit, combined)
     if trend is None:
         return whole
     return replace(whole, components=(*found, trend), groups=(*groups, (NUMERICAL, TREND)))
 
 
-def _trend(whole: Difference, known: Sequence[str], fit: _Fit) -> Component | None:
+def _trend(whole: Difference, known: Sequence[str], fit: _Fit, combined: Array) -> Component | None:
     """What speaks against the planes' own uncertainties: a decay that is in doubt, and scatter between the planes."""
     own = np.einsum("qrr->qr", whole.covariance)
     excess = {name: size for name, size in fit.scatter.items() if name in known}
@@ -319,6 +349,14 @@ def _trend(whole: Difference, known: Sequence[str], fit: _Fit) -> Component | No
         signs["profile_drag"] = -1.0
         for name, size in zip(_DRAGS, fit.result.standard_uncertainty, strict=True):
             excess[name] = math.sqrt(max(float(size) ** 2 - float(own[0, known.index(name)]), 0.0))
+        of_induced = excess["induced_drag"]
+        if "induced_drag_free_air" in known:
+            excess["induced_drag_free_air"] = of_induced
+        if {"span_efficiency", "lift"} <= set(known):
+            e, drag = (float(combined[known.index(one)]) for one in ("span_efficiency", _efficiency_drag(known)))
+            moment = excess.get("lift", 0.0) / float(combined[known.index("lift")])
+            excess["span_efficiency"] = e * math.hypot(of_induced / drag, 2 * moment)
+            signs["span_efficiency"] = -1.0
     if not any(excess.values()):
         return None
     linear = np.zeros((2, len(known)))
