@@ -1,4 +1,4 @@
-"""Noise that the data show against noise that the survey file declares: wrong declarations are reported, right ones not.
+"""Noise that the data show against noise that the survey file declares: what is wrong is reported, right is not.
 
 Rates over seeds on the surveys of this file: twice or half the declared noise, and noise of one or two cells' length
 declared as each point's own, are reported in every one; right declarations in none. A length of half a cell correlates
