@@ -21,7 +21,8 @@ if TYPE_CHECKING:
 _FOLLOWED = ("induced_drag", "profile_drag", "total_drag")
 #: What the last line of the table shows.
 DECAY = "lost by vortex decay"
-_GAP = 1
+#: Blanks between two columns.
+_GAP = 2
 
 
 @dataclass(frozen=True)
@@ -187,9 +188,10 @@ def stations_tables(ledger: Ledger, width: int) -> list[Table]:
     found = []
     for block in blocks:
         final = block[-1] is combined
-        table = new_table(("", "left"), *((column[0], "left") for column in block), ("", "left"), ("", "left"))
+        ends = [("", "left")] * (2 if final else 1)
+        table = new_table(("", "left"), *((column[0], "left") for column in block), *ends)
         for k, line in enumerate(lines, start=1):
-            table.add_row(line.label, *(column[k] for column in block), line.unit, last[k] if final else "")
+            table.add_row(line.label, *(column[k] for column in block), line.unit, *([last[k]] if final else []))
         found.append(table)
     return found
 
