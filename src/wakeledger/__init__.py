@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     from wakeledger.physics.fields.boundary import Circle, ClosedWalls, FreeAir, OpenJet, Polygon, Rectangle
     from wakeledger.physics.fields.flow import find_wake
     from wakeledger.physics.fields.wall_correction import wall_stream_function
+    from wakeledger.run.grid_series import grid_series
     from wakeledger.run.increment import increment
     from wakeledger.run.load import load as read_survey
     from wakeledger.run.planning import plan
@@ -46,6 +47,7 @@ _HOMES = {
     "open_ledger": ("wakeledger.ledger.archive", "open_archive"),
     "Ledger": ("wakeledger.ledger.rows", "Ledger"),
     "find_wake": ("wakeledger.physics.fields.flow", "find_wake"),
+    "grid_series": ("wakeledger.run.grid_series", "grid_series"),
     "increment": ("wakeledger.run.increment", "increment"),
     "methods": ("wakeledger.physics.methods", None),
     "read_survey": ("wakeledger.run.load", "load"),
@@ -66,6 +68,7 @@ __all__ = [
     "Reference",
     "combine",
     "find_wake",
+    "grid_series",
     "increment",
     "methods",
     "open_ledger",

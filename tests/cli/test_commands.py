@@ -202,6 +202,7 @@ def test_help_lists_the_commands_that_exist(cli):
     commands = out[out.index("Commands:") :].splitlines()[1:]
     assert [line.split()[0] for line in commands if line.strip()] == [
         "calibrate",
+        "grids",
         "increment",
         "inspect",
         "plan",
@@ -209,7 +210,7 @@ def test_help_lists_the_commands_that_exist(cli):
         "repeats",
         "show",
     ]
-    for command in ("reduce", "inspect", "show", "increment", "repeats"):
+    for command in ("reduce", "inspect", "show", "increment", "repeats", "grids"):
         status, out, _ = cli(command, "-h")
         assert status == 0 and "Usage: wakeledger" in out
     assert cli()[0] == 2

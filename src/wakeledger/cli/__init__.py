@@ -8,6 +8,7 @@ import click
 
 from wakeledger.cli.calibrate import calibrate
 from wakeledger.cli.exits import run
+from wakeledger.cli.grids import grids
 from wakeledger.cli.increment import increment
 from wakeledger.cli.inspect import inspect
 from wakeledger.cli.plan import plan
@@ -28,7 +29,7 @@ def wakeledger() -> None:
     """
 
 
-for command in (reduce, inspect, show, increment, repeats, plan, calibrate):
+for command in (reduce, inspect, show, increment, repeats, grids, plan, calibrate):
     wakeledger.add_command(command)
 
 

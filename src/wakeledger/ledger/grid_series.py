@@ -26,6 +26,8 @@ JSON_FORMAT = 1
 Verdict = Literal[
     "monotone", "assumed", "close_grids", "out_of_range", "oscillatory", "divergent", "unchanged", "unknown"
 ]
+#: Those whose extrapolated value is near enough to be shown in a figure or a difference.
+EXTRAPOLATED: tuple[Verdict, ...] = ("monotone", "assumed", "close_grids")
 #: Name of the field that the rows of the ledgers are of.
 FAR_FIELD = "far field"
 
@@ -146,7 +148,7 @@ class Series:
     def within_own(self) -> bool:
         """Whether all values that were used differ by less than the row's own standard uncertainty."""
         used = self.values[-3:]
-        return self.found is not None and max(used) - min(used) < self.own_uncertainty
+        return self.found is not None and 0 < max(used) - min(used) < self.own_uncertainty
 
     @property
     def statement(self) -> str:
@@ -202,8 +204,9 @@ class Pair:
 
     @property
     def extrapolated(self) -> float:
-        """Difference of the two extrapolated values; NaN where there is none."""
-        return self.far.extrapolated - self.near.extrapolated
+        """Difference of the two extrapolated values; NaN where one is not to be relied on."""
+        usable = all(one.verdict in EXTRAPOLATED for one in (self.far, self.near))
+        return self.far.extrapolated - self.near.extrapolated if usable else math.nan
 
     @property
     def standard_uncertainty(self) -> float:

@@ -16,6 +16,7 @@ from wakeledger.core.errors import DataError, ProductExistsError
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
+    from wakeledger.ledger.grid_series import GridSeries
     from wakeledger.ledger.increment import Increment
     from wakeledger.ledger.plan import Plan
     from wakeledger.ledger.rows import Ledger
@@ -25,6 +26,9 @@ FILES = ("ledger.nc", "ledger.json", "ledger.csv", "report.html")
 
 #: Files every increment writes.
 INCREMENT_FILES = ("increment.nc", "increment.json", "increment.csv", "report.html")
+
+#: Files every grid series writes.
+GRID_FILES = ("grids.json", "grids.csv", "report.html")
 
 #: Files every plan writes.
 PLAN_FILES = ("plan.json", "report.html")
@@ -53,9 +57,10 @@ def existing_products(directory: Path, *, files: Sequence[str] = FILES) -> tuple
     if folder.is_dir():
         from wakeledger.present.figures import FORMATS
         from wakeledger.present.figures.gallery import DRAWINGS
+        from wakeledger.present.figures.grid_series import NAME as OF_GRIDS
         from wakeledger.present.figures.increment import DRAWINGS as OF_INCREMENTS
 
-        ours = {f"{name}.{kind}" for name in (*DRAWINGS, *OF_INCREMENTS) for kind in FORMATS}
+        ours = {f"{name}.{kind}" for name in (*DRAWINGS, *OF_INCREMENTS, OF_GRIDS) for kind in FORMATS}
         found += sorted(path.relative_to(directory) for path in folder.iterdir() if path.name in ours)
     return tuple(found)
 
@@ -179,6 +184,51 @@ def write_increment(
         return _build_increment(increment, folder, figures)
 
     return _write_whole(directory, build, files=INCREMENT_FILES, overwrite=overwrite)
+
+
+def write_grid_series(
+    series: GridSeries, directory: Path, *, figures: Sequence[str] = (), overwrite: bool = False
+) -> tuple[Path, ...]:
+    """Write every product of a grid series.
+
+    Parameters
+    ----------
+    series : GridSeries
+        The series.
+    directory, figures, overwrite
+        As in `write_products`.
+
+    Returns
+    -------
+    tuple of Path
+        The files, relative to the folder.
+
+    Raises
+    ------
+    ProductExistsError, DataError
+        As in `write_products`.
+    """
+
+    def build(folder: Path) -> tuple[Path, ...]:
+        from wakeledger.ledger.grid_series import grid_series_csv, grid_series_json
+        from wakeledger.ledger.tabular import json_text
+        from wakeledger.present.figures.grid_series import draw_grid_series
+        from wakeledger.present.report.grid_series import grid_series_html
+
+        texts = {
+            "grids.json": json_text(grid_series_json(series)),
+            "grids.csv": grid_series_csv(series),
+            "report.html": grid_series_html(series),
+        }
+        for name, text in texts.items():
+            (folder / name).write_text(text, encoding="utf-8", newline="\n")
+        names = [Path(name) for name in GRID_FILES]
+        if figures:
+            (folder / FIGURES).mkdir()
+            names += [path.relative_to(folder) for path in _save(draw_grid_series(series), folder / FIGURES, figures)]
+        return tuple(names)
+
+    return _write_whole(directory, build, files=GRID_FILES, overwrite=overwrite)
 
 
 def write_plan(plan: Plan, directory: Path, *, overwrite: bool = False) -> tuple[Path, ...]:

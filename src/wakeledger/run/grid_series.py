@@ -260,7 +260,12 @@ def _series(
     unknown = [k for k in range(len(values))[used] if not math.isfinite(values[k])]
     found = reason = None
     if unknown:
-        reason = "; ".join(f"unknown on grid {k + 1}: {reasons[k]}" for k in unknown)
+        alike: dict[str, list[str]] = {}
+        for k in unknown:
+            alike.setdefault(reasons[k], []).append(str(k + 1))
+        reason = "; ".join(
+            f"unknown on grid{'s' if len(at) > 1 else ''} {', '.join(at)}: {why}" for why, at in alike.items()
+        )
     elif order is not None:
         found = assumed_convergence(values, sizes, order=order)
     else:
