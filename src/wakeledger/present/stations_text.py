@@ -17,8 +17,8 @@ if TYPE_CHECKING:
 
     from wakeledger.ledger.rows import Combined, Ledger, Row
 
-#: Drags that a resolved trend gives at the trailing edge; all other rows are means.
-_FOLLOWED = ("induced_drag", "profile_drag", "total_drag")
+#: Rows that a resolved trend gives at the trailing edge; all others are means.
+_FOLLOWED = ("induced_drag", "induced_drag_free_air", "profile_drag", "total_drag", "span_efficiency")
 #: What the last line of the table shows.
 DECAY = "lost by vortex decay"
 #: Blanks between two columns.

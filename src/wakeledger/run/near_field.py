@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 from dataclasses import replace
 
 from wakeledger.ledger.closure import Cause, Closure, NearField, close
-from wakeledger.ledger.rows import Comparison, Ledger
+from wakeledger.ledger.rows import COUNT, Comparison, Ledger
 from wakeledger.run import numerics
+from wakeledger.run.computed import MESH
 from wakeledger.run.stations import TREND
 
 #: Budget lines behind each cause whose size is in the row's own uncertainty.
@@ -15,8 +17,10 @@ _BEHIND: dict[str, tuple[str, ...]] = {
     "station": (TREND,),
     "mask": (numerics.MASK,),
     "reference_level": (numerics.LOSS_ZERO,),
-    "resolution": (numerics.RESOLUTION, numerics.RESAMPLING, numerics.GAPS),
+    "resolution": (numerics.RESOLUTION, numerics.RESAMPLING, numerics.GAPS, MESH),
 }
+#: Rows between which the decay of the trailing vortices moves drag.
+_DECAYING = ("induced_drag", "profile_drag", "total_drag")
 
 
 def with_closures(ledger: Ledger) -> Ledger:
@@ -39,34 +43,14 @@ def with_closures(ledger: Ledger) -> Ledger:
 
 
 def _closure(ledger: Ledger, entry: Comparison) -> Closure | None:
-    if not entry.row.endswith("_drag"):
+    if not entry.row.endswith("_drag") or entry.row == "numerical_drag":
         return None
     row = ledger.row(entry.row)
     if not (math.isfinite(row.standard_uncertainty) and math.isfinite(entry.standard_uncertainty)):
         return None
     scale = row.value / row.coefficient if math.isfinite(row.coefficient) and row.coefficient else math.nan
-    lines = {line.source: line.standard_uncertainty for line in ledger.budget if line.row == entry.row}
-    causes = []
-    for name, sources in _BEHIND.items():
-        size = math.hypot(*(lines.get(source, 0.0) for source in sources))
-        if size > 0:
-            causes.append(Cause(name, 0.0, 0.0, f"{size:.3g} {row.unit} (k = 1), in the row's own uncertainty"))
-    names = [each.name for each in ledger.rows]
-    if entry.row in ("total_drag", "profile_drag") and "numerical_drag" in names:
-        outside = ledger.row("numerical_drag")
-        if math.isfinite(outside.standard_uncertainty):
-            note = "loss away from wake and shock, which the surface forces hold where the body made it"
-            causes.append(Cause("numerical", -outside.value, outside.standard_uncertainty, note))
-    if "induced_drag_free_air" in names and entry.row in ("total_drag", "induced_drag"):
-        walls = ledger.row("induced_drag").value - ledger.row("induced_drag_free_air").value
-        note = f"the walls' {walls:+.3g} {row.unit} are in both; in free air the far field would have that much less"
-        causes.append(Cause("walls", 0.0, 0.0, note))
-    combined = ledger.combined
-    if combined is not None and entry.row == "induced_drag" and combined.method == "weighted_mean":
-        decay = sum(combined.decay) / len(combined.decay)
-        doubt = sum(combined.decay_uncertainty) / len(combined.decay_uncertainty)
-        if math.isfinite(decay + doubt):
-            causes.append(Cause("decay", -decay, 0.0, f"decay of the vortices, {doubt:.2g} {row.unit} (k = 1)"))
+    others = (_numerical(ledger, entry.row), _walls(ledger, entry.row, scale), _decay(ledger, entry.row, scale))
+    causes = [*_in_its_uncertainty(ledger, entry.row, scale), *(one for one in others if one is not None)]
     return close(
         entry.row,
         far=row.value,
@@ -77,17 +61,70 @@ def _closure(ledger: Ledger, entry: Comparison) -> Closure | None:
     )
 
 
+def _sized(value: float, scale: float, unit: str, *, sign: str = "") -> str:
+    """A drag in counts, where it has a coefficient, else in its unit."""
+    return f"{value / scale / COUNT:{sign}.2f} counts" if math.isfinite(scale) else f"{value:{sign}.3g} {unit}"
+
+
+def _in_its_uncertainty(ledger: Ledger, name: str, scale: float) -> Iterator[Cause]:
+    lines = {line.source: line.standard_uncertainty for line in ledger.budget if line.row == name}
+    for cause, sources in _BEHIND.items():
+        size = math.hypot(*(lines.get(source, 0.0) for source in sources))
+        if size > 0:
+            said = f"± {_sized(2 * size, scale, ledger.row(name).unit)} (k = 2) in its uncertainty"
+            yield Cause(cause, 0.0, 0.0, said)
+
+
+def _numerical(ledger: Ledger, name: str) -> Cause | None:
+    names = [each.name for each in ledger.rows]
+    if name not in ("total_drag", "profile_drag") or "numerical_drag" not in names:
+        return None
+    outside = ledger.row("numerical_drag")
+    if not math.isfinite(outside.standard_uncertainty):
+        return None
+    # What moves both, such as the reference level, counts with the sign with which it does.
+    both = float(ledger.covariance[names.index(name), names.index("numerical_drag")])
+    beyond = math.sqrt(max(outside.standard_uncertainty**2 + 2 * both, 0.0))
+    note = "loss away from wake and shock is in the surface forces, in no other row here"
+    return Cause("numerical", -outside.value, beyond, note)
+
+
+def _walls(ledger: Ledger, name: str, scale: float) -> Cause | None:
+    names = [row.name for row in ledger.rows]
+    if name not in ("total_drag", "induced_drag") or "induced_drag_free_air" not in names:
+        return None
+    induced = ledger.row("induced_drag")
+    walls = _sized(induced.value - ledger.row("induced_drag_free_air").value, scale, induced.unit, sign="+")
+    return Cause("walls", 0.0, 0.0, f"{walls} that the walls make are in both")
+
+
+def _decay(ledger: Ledger, name: str, scale: float) -> Cause | None:
+    combined = ledger.combined
+    if combined is None or name not in _DECAYING or not all(math.isfinite(lost) for lost in combined.decay):
+        return None
+    places = zip(combined.decay, ledger.stations, strict=True)
+    unit = ledger.row(name).unit
+    lost = ", ".join(f"{_sized(each, scale, unit)} by {one.station:g} m" for each, one in places)
+    if name == "total_drag":
+        return Cause("decay", 0.0, 0.0, f"{lost} turned from induced into profile drag; the sum stays")
+    if combined.method == "extrapolated":
+        moved = "added back to it" if name == "induced_drag" else "taken back from it"
+        return Cause("decay", 0.0, 0.0, f"{lost}, {moved}")
+    mean = sum(combined.decay) / len(combined.decay)
+    return Cause("decay", -mean if name == "induced_drag" else mean, 0.0, f"{lost}, not resolved")
+
+
 def _note(found: Closure) -> str:
     scale, unit = (found.counts_per_unit, "counts") if math.isfinite(found.counts_per_unit) else (1.0, "N")
     parts = ", ".join(
         f"{cause.name.replace('_', ' ')} {scale * cause.difference:+.2f}" for cause in found.causes if cause.difference
     )
-    sizes = ", ".join(cause.name.replace("_", " ") for cause in found.causes if not cause.difference)
     said = (
-        f"Far field less near field, {found.row.replace('_', ' ')}: {scale * found.difference:+.2f} {unit}"
-        f" (E_n {found.normalised_error:.2f})"
+        f"Far field less near field, {found.row.replace('_', ' ')}: {scale * found.difference:+.2f} ±"
+        f" {2 * scale * found.standard_uncertainty:.2f} {unit} (E_n {found.normalised_error:.2f})"
     )
     if parts:
         said += f"; explained by {parts}; left over {scale * found.left_over:+.2f} ±"
         said += f" {2 * scale * found.left_over_uncertainty:.2f} {unit} (E_n {found.left_over_error:.2f})"
-    return said + (f"; in its uncertainty: {sizes}." if sizes else ".")
+    notes = "".join(f"; {cause.name.replace('_', ' ')}: {cause.note}" for cause in found.causes)
+    return f"{said}{notes}."
