@@ -31,6 +31,7 @@ from wakeledger.run.places import zero_places
 from wakeledger.run.reduction import Frozen, Reduction
 from wakeledger.run.traverse_notes import traverse_notes
 from wakeledger.run.tunnel import tunnel_notes, tunnel_sources
+from wakeledger.run.wandering import wandering_notes
 
 #: A shock's loss stands this many times above the noise and wander of the outer flow, and above this share of q.
 _SHOCK_LEVELS, _SHOCK_FLOOR = 5.0, 1e-4
@@ -157,6 +158,7 @@ def _prepare(survey: SurveyInput) -> Prepared:
         *tables.notes(survey, chain, nominal, gridded.state),
         *tunnel_notes(survey, chain, nominal),
         *slipstream_notes(chain, nominal),
+        *wandering_notes(file.wake, vortices, chain, nominal),
         *noise_notes,
     )
     cut = 0.0 if file.boundary is None else file.boundary.inboard_cut or 0.0

@@ -241,12 +241,16 @@ class WakeTable(Table):
         Dilation of the mask, m.
     include, exclude : tuple of ndarray, shape (2, 2) or (n, 2)
         Boxes (two corners) and polygons (y, z), m, that are always or never in the wake.
+    wandering, wandering_standard_uncertainty : float or None
+        Standard deviation along each axis of how far vortices wandered while they were averaged, m; and of that.
     """
 
     level: PositiveNumber | None = None
     grow: LengthFromZero | None = None
     include: Shapes = ()
     exclude: Shapes = ()
+    wandering: LengthFromZero | None = None
+    wandering_standard_uncertainty: LengthFromZero | None = None
 
 
 class SectionTable(Table):
