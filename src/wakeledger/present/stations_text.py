@@ -20,7 +20,7 @@ if TYPE_CHECKING:
 #: Rows that a resolved trend gives at the trailing edge; all others are means.
 _FOLLOWED = ("induced_drag", "induced_drag_free_air", "profile_drag", "total_drag", "span_efficiency")
 #: What the last line of the table shows.
-DECAY = "lost by vortex decay"
+DECAY = "vortex decay"
 #: Blanks between two columns.
 _GAP = 2
 

@@ -10,7 +10,7 @@ from wakeledger.ledger.rounding import rounded, significant
 from wakeledger.ledger.rows import COUNT
 from wakeledger.present.printing import new_table
 from wakeledger.present.stations_text import blocks_of, column_width, figures_joined, head_of
-from wakeledger.present.wording import coefficient_text, in_counts, words
+from wakeledger.present.wording import coefficient_text, in_counts, unit_text, words
 
 if TYPE_CHECKING:
     from rich.table import Table
@@ -64,7 +64,7 @@ def tunnel_cells(ledger: Ledger) -> list[dict[str, str | bool]]:
 
 
 def _cells(figure: TunnelFigure) -> dict[str, str | bool]:
-    shown = _FIGURES.get(figure.name) or _Shown(words(figure.name), figure.unit.replace("1", "", 1), 1.0)
+    shown = _FIGURES.get(figure.name) or _Shown(words(figure.name), unit_text(figure.unit), 1.0)
     value, u = shown.scale * figure.value, shown.scale * figure.standard_uncertainty
     texts = (significant(value, _DIGITS), "") if shown.classical else rounded(value, 2 * u)
     return {

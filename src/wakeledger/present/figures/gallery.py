@@ -23,13 +23,17 @@ def _in_plane(*names: str) -> Callable[[Ledger], bool]:
     return has
 
 
+def _of_stations(ledger: Ledger) -> bool:
+    return ledger.combined is not None and bool(stations.stations_rows(ledger))
+
+
 Drawing = tuple[Callable[["Ledger"], "Figure"], Callable[["Ledger"], bool]]
 
 #: Name of each figure's file, how to draw it, and whether a ledger has what it needs.
 DRAWINGS: dict[str, Drawing] = {
     "stations": (
         stations.stations_figure,
-        lambda ledger: bool(ledger.stations) and bool(stations.stations_rows(ledger)),
+        _of_stations,
     ),
     "section": (section.section_figure, section.has_section),
     "total_pressure_loss": (maps.loss_map, _in_plane("total_pressure_loss")),

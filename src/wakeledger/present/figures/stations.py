@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 _PANELS = {
     "total_drag": (INK, "o"),
     "induced_drag": (BLUE, "s"),
+    "induced_drag_free_air": (BLUE, "P"),
     "profile_drag": (GREEN, "^"),
     "wave_drag": (PURPLE, "D"),
     "residual_drag": (GREY, "v"),
@@ -29,7 +30,7 @@ _PANELS = {
 #: A residual that is smaller than this part of the total drag and than its own U95 gets no panel.
 _NOTABLE = 0.01
 #: What the decay of the vortices does to a row: it goes out of the induced drag and into the profile drag.
-_DECAY_SIGN = {"induced_drag": -1.0, "profile_drag": 1.0, "total_drag": 0.0}
+_DECAY_SIGN = {"induced_drag": -1.0, "induced_drag_free_air": -1.0, "profile_drag": 1.0, "total_drag": 0.0}
 _CURVE_POINTS = 200
 
 
@@ -115,7 +116,7 @@ def _panel(axes: Axes, ledger: Ledger, name: str) -> list[object]:
     scale = scale_of(ledger, name)
     value, expanded = scale.figures(ledger.row(name))
     followed = how(name, combined) != "mean"
-    sign = _DECAY_SIGN[name] if followed else 0.0
+    sign = _DECAY_SIGN.get(name, 0.0) if followed else 0.0
     drawn: list[object] = []
     if sign == 0:
         axes.axhline(value, color=GREY, linewidth=0.9)
