@@ -38,7 +38,7 @@ from wakeledger.run.planning.simulate import (
     visit,
     window_of,
 )
-from wakeledger.run.survey import prepare
+from wakeledger.run.prepared import prepare
 from wakeledger.synthetic.recordings import Errors
 
 WING: Mapping[str, Any] = {

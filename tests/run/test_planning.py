@@ -19,7 +19,7 @@ from wakeledger.run.planning.instrument import of_holes
 from wakeledger.run.planning.search import FACTOR
 from wakeledger.run.planning.simulate import Accuracies, declared, simulated, visit, window_of
 from wakeledger.run.planning.target import read_target
-from wakeledger.run.survey import prepare
+from wakeledger.run.prepared import prepare
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic.probes import direction_of, sphere_probe
 

@@ -134,7 +134,7 @@ def cost_figure(plan: Plan) -> Figure:
         _plain_ticks(axes)
         axes.set_xlabel("time of all surveys, minutes")
         axes.set_ylabel(f"U95 of the {words(plan.row)}{_unit(plan)}")
-        axes.legend(title="probe's noise", title_fontsize=8, loc="lower left")
+        figure.legend(title="probe's noise", title_fontsize=8, loc="outside right upper")
     return figure
 
 
