@@ -180,7 +180,7 @@ def before_zero(
     if chain.settings.primary == "velocity":
         if not reference.compressible:
             by_zero = _of(found, "total_pressure")
-            if "total_pressure" in chain.measured:
+            if {"total_pressure", "static_pressure"} & chain.measured:
                 by_zero = by_zero + _of(found, "static_pressure")
         else:
             raised = total / flow.total_pressure

@@ -33,7 +33,7 @@ def zeroed(flow: Flow, reference: Reference, zero: float, *, primary: str, measu
     Returns
     -------
     Flow
-        A measured speed stays, and a static pressure that rests on the total one follows; where the speed itself comes
+        A measured speed stays, and the static pressure follows if a pressure was measured at all; where the speed itself comes
         from the pressures, it follows, at the same static pressure and the same measured, else total, temperature.
         Where the flow's direction was measured, the crossflow follows the speed; where v and w themselves were, they
         stay.
@@ -42,7 +42,8 @@ def zeroed(flow: Flow, reference: Reference, zero: float, *, primary: str, measu
     raised = total / flow.total_pressure
     if primary == "velocity":
         if not reference.compressible:
-            implied = zero if "total_pressure" in measured else 0.0
+            # Beside a measured velocity it is the pressure that is off, whichever of the two was measured.
+            implied = zero if {"total_pressure", "static_pressure"} & measured else 0.0
             return replace(flow, total_pressure=total, static_pressure=flow.static_pressure + implied)
         return replace(
             flow,
