@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from wakeledger.confidence.grid_convergence import cell_size, grid_convergence
+from wakeledger.confidence.grid_convergence import assumed_convergence, cell_size, grid_convergence
 
 # Celik, Ghia, Roache, Freitas & Raad, J. Fluids Eng. 130 (2008) 078001, Table 1: reattachment length; axial velocity
 # with p < 1; axial velocity, oscillatory. N of the second and third column from memory; they give the printed ratios.
@@ -79,6 +79,27 @@ def test_what_cannot_be_said_is_said():
         grid_convergence((1.0, 2.0), (1.0, 2.0))
     with pytest.raises(ValueError, match="three values"):
         grid_convergence((1.0, 2.0, 3.0), (1.0, 2.0, 2.0))
+
+
+@pytest.mark.parametrize("order", [1.0, 2.0])
+def test_two_grids_with_an_assumed_order(order):
+    values = [5.0 - 0.02 * h**order for h in (2.0, 1.0)]
+    found = assumed_convergence(values, (2.0, 1.0), order=order)
+    assert found.extrapolated == pytest.approx(5.0, rel=1e-14)
+    # P. J. Roache, J. Fluids Eng. 116 (1994) 405: factor 3 for two grids.
+    assert found.index == pytest.approx(3 * 0.02 / 4.98, rel=1e-12)
+    assert found.standard_uncertainty == pytest.approx(1.5 * 0.02, rel=1e-11)
+    assert found.convergence == "assumed" and "two grids show no order" in found.reason
+    assert "1.2 is below 1.3" in assumed_convergence(values, (1.2, 1.0), order=order).reason
+    for wrong in (((1.0,), (1.0,), order), ((1.0, 2.0), (1.0, 1.0), order), ((1.0, 2.0), (1.0, 2.0), 0.0)):
+        with pytest.raises(ValueError, match="two values"):
+            assumed_convergence(*wrong[:2], order=wrong[2])
+
+
+def test_values_without_any_difference_have_no_known_error():
+    assert np.isnan(grid_convergence((1.0, 1.0, 1.0), (1.0, 2.0, 4.0)).standard_uncertainty)
+    alike = assumed_convergence((1.0, 1.0), (1.0, 2.0), order=2)
+    assert np.isnan(alike.standard_uncertainty) and "same value" in alike.reason
 
 
 def test_real_grid_series_of_an_airfoil():

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 from wakeledger.ledger.grid_series import FAR_FIELD
@@ -28,8 +29,8 @@ OUTCOMES = {
     "unknown": "unknown",
 }
 _STYLES = {"monotone": "bold green", "assumed": "dim", "unchanged": "dim"}
-#: More grids than this are not printed one by one; the finest are.
-MOST_GRIDS = 4
+#: Width of the terminal from which on so many of the finest grids are printed one by one, the widest first.
+_GRIDS_SHOWN = ((112, 4), (92, 3), (0, 1))
 
 
 def grid_series_text(series: GridSeries, *, width: int = 100, colour: bool = False) -> str:
@@ -54,7 +55,9 @@ def grid_series_text(series: GridSeries, *, width: int = 100, colour: bool = Fal
     for number, line in enumerate(grid_lines(series), 1):
         console.print(printable(f"grid {number}: {line}"))
     console.print()
-    console.print(_table(series))
+    most = next(number for least, number in _GRIDS_SHOWN if console.width >= least)
+    shown = range(len(series.grids))[-most:]
+    console.print(_table(series, shown))
     doubts = [
         (f"{words(one.row)}, {one.source}", one.reason if one.found is None else one.found.reason)
         for one in series.series
@@ -64,7 +67,7 @@ def grid_series_text(series: GridSeries, *, width: int = 100, colour: bool = Fal
         bullet(console, sentence)
     if series.pairs:
         section(console, "Far field less near field")
-        console.print(_pairs(series))
+        console.print(_pairs(series, shown))
     sentences_of(console, "Warnings", series.warnings)
     failed = [f"grid {number}: {text}" for number, grid in enumerate(series.grids, 1) for text in grid.failed]
     sentences_of(console, "Failed checks", failed)
@@ -180,33 +183,34 @@ def pair_cells(pair: Pair) -> dict[str, object]:
     }
 
 
-def _table(series: GridSeries) -> Table:
+def _table(series: GridSeries, shown: Sequence[int]) -> Table:
     from rich.text import Text
 
-    shown = list(range(len(series.grids)))[-MOST_GRIDS:]
+    roomy = len(shown) > 1
     table = new_table(
         ("", "left"),
         *((f"grid {k + 1}", "right") for k in shown),
         ("h → 0", "right"),
-        ("unit", "left"),
         ("order", "right"),
-        ("e, %", "right"),
+        *([("e, %", "right")] if roomy else []),
         ("GCI, %", "right"),
-        ("u", "right"),
+        *([("u", "right")] if roomy else []),
         ("", "left"),
     )
     for one in series.series:
         cells, values = series_cells(one), value_cells(one)
-        head = words(one.row) if one.source == FAR_FIELD else f"  {printable(one.source)}"
-        line: list[RenderableType] = [head, *(values[k] for k in shown), cells["extrapolated"], cells["unit"]]
-        line += [cells["order"], cells["error"], cells["index"], cells["u"]]
+        head = f"  {printable(one.source)}"
+        if one.source == FAR_FIELD:
+            head = ", ".join(part for part in (words(one.row), cells["unit"]) if part)
+        line: list[RenderableType] = [head, *(values[k] for k in shown), cells["extrapolated"]]
+        keys = ("order", "error", "index", "u") if roomy else ("order", "index")
+        line += [cells[key] for key in keys]
         line.append(Text(OUTCOMES[one.verdict], style=_STYLES.get(one.verdict, "bold yellow")))
         table.add_row(*line)
     return table
 
 
-def _pairs(series: GridSeries) -> Table:
-    shown = list(range(len(series.grids)))[-MOST_GRIDS:]
+def _pairs(series: GridSeries, shown: Sequence[int]) -> Table:
     table = new_table(
         ("", "left"),
         *((f"grid {k + 1}", "right") for k in shown),

@@ -80,9 +80,12 @@ def grid_series_figure(series: GridSeries) -> Figure:
                 line[1].set_title(f"{words(name)}, {', '.join(one.source for one in near)}")
             else:
                 line[1].set_axis_off()
-        for axes in panels[-1]:
-            axes.set_xlabel("cell size over that of the finest grid")
-            axes.set_xlim(0.0, 1.08 * series.grids[0].size)
+        for column in panels.T:
+            lowest = [axes for axes in column if axes.axison][-1:]
+            for axes in lowest:
+                axes.set_xlabel("cell size over that of the finest grid")
+                axes.tick_params(labelbottom=True)
+        panels[0, 0].set_xlim(0.0, 1.08 * series.grids[0].size)
         figure.align_ylabels(panels[:, 0])
         figure.legend(
             handles=[
@@ -90,7 +93,7 @@ def grid_series_figure(series: GridSeries) -> Figure:
                 Line2D([], [], color=INK, linestyle=(0, (5, 2)), label="observed or assumed order"),
                 Line2D([], [], color=INK, marker="*", markersize=8, markerfacecolor="white", linestyle="none",
                        label="extrapolated"),
-                Patch(color=GREY, alpha=0.3, label="GCI, or spread where not trusted"),
+                Patch(color=GREY, alpha=0.3, label="GCI, or 2 u where not trusted"),
             ],
             loc="outside lower left",
             ncols=4,
