@@ -325,38 +325,66 @@ def probed_curvature(
     variables as directions are taken one by one, which is exact.
     """
     errors = SourceErrors(source, layouts, seed=0)
-    exact = errors.latents <= probes
-    if exact:
-        directions = np.eye(errors.latents)
-    else:
-        directions = np.sign(np.random.default_rng([seed, 5]).random((probes, errors.latents)) - 0.5)
-    images = np.stack([_image(gradient_at, source, errors, direction) for direction in directions])
     fourth = source.kurtosis if math.isfinite(source.kurtosis) else 3.0
-    if exact:
+    if errors.latents <= probes:
         # The images of the single variables are the columns of A.
+        directions = np.eye(errors.latents)
+        images = np.stack([_image(gradient_at, source, errors, one, directions).by_direction for one in directions])
         diagonal = np.einsum("jmj->mj", images)
         variance = 0.5 * np.square(images).sum(axis=(0, 2)) + 0.25 * (fourth - 3.0) * np.square(diagonal).sum(axis=1)
         return SecondOrder(np.maximum(variance, 0.0), 0.5 * diagonal.sum(axis=1))
-    products = np.einsum("jl,kml->jkm", directions, images)
+    directions = np.sign(np.random.default_rng([seed, 5]).random((probes, errors.latents)) - 0.5)
+    found: list[_Image] = []
+    weighted: Array | float = 0.0
+    for direction in directions:
+        image = _image(gradient_at, source, errors, direction, directions)
+        found.append(image)
+        if fourth != 3.0:
+            weighted = weighted + direction * image.effects / probes
+    products = np.stack([image.by_direction for image in found])
     others = ~np.eye(probes, dtype=bool)
-    frobenius = np.square(products[others]).mean(axis=0)
-    trace = products[~others].mean(axis=0)
+    frobenius = np.square(np.moveaxis(products, 1, -1)[others]).mean(axis=0)
+    trace = np.moveaxis(products, 1, -1)[~others].mean(axis=0)
     variance = 0.5 * frobenius
     if fourth != 3.0:
-        estimate = np.square(np.einsum("jl,jml->ml", directions, images) / probes).sum(axis=1)
+        outputs = np.mean([image.outputs for image in found], axis=0)
+        estimate = np.diag(outputs @ (weighted @ np.transpose(weighted)) @ outputs.T)
         squares = (probes * estimate - frobenius) / (probes - 1)
         variance = variance + 0.25 * (fourth - 3.0) * np.clip(squares, 0.0, frobenius)
     return SecondOrder(np.maximum(variance, 0.0), 0.5 * trace)
 
 
+@dataclass(frozen=True)
+class _Image:
+    """Second derivatives applied to one direction of a source's variables.
+
+    Attributes
+    ----------
+    outputs : ndarray, shape (m, k)
+        Derivatives of the outputs by the figures.
+    effects : ndarray, shape (k, latents)
+        Of the figures; never of the outputs, which are many on as many points.
+    by_direction : ndarray, shape (m, directions)
+        Of the outputs, applied to further directions.
+    """
+
+    outputs: Array
+    effects: Array
+    by_direction: Array
+
+
 def _image(
-    gradient_at: Callable[[Mapping[str, Array]], Slopes], source: Source, errors: SourceErrors, direction: Array
-) -> Array:
-    """Second derivatives of the outputs applied to a direction of the source's variables, shape (m, latents)."""
+    gradient_at: Callable[[Mapping[str, Array]], Slopes],
+    source: Source,
+    errors: SourceErrors,
+    direction: Array,
+    directions: Array,
+) -> _Image:
     drawn = errors.expanded(direction)
     up, down = (gradient_at({name: sign * array for name, array in drawn.items()}) for sign in (1.0, -1.0))
     change = {name: (up.figures[name] - down.figures[name]) / 2 for name in source.applies_to}
     mean = {name: (up.figures[name] + down.figures[name]) / 2 for name in source.applies_to}
-    effects, level = errors.effects(change), errors.effects(mean)
+    effects = np.concatenate(list(errors.effects(change).values()), axis=1)
+    level = np.concatenate(list(errors.effects(mean).values()), axis=1)
     outputs, turned = (up.outputs + down.outputs) / 2, (up.outputs - down.outputs) / 2
-    return np.concatenate([outputs @ effects[name] + turned @ level[name] for name in change], axis=1)
+    return _Image(outputs, effects, outputs @ (effects @ directions.T) + turned @ (level @ directions.T))

@@ -66,6 +66,10 @@ def linear_slopes(
     figures, left = input_gradients(chain, gradient, layouts)
     steps = {name: _step(name, sources, layouts[name]) for name in left}
     direct, curvatures = scalar_gradients(chain, left, steps, layouts)
+    for name in left:
+        if not layouts[name].is_scalar:
+            # No way back leads there: what it does is unknown, not nothing.
+            figures[name] = np.full((len(gradient.names), layouts[name].size), np.nan)
     return Slopes(gradient.outputs, figures, direct, curvatures)
 
 
