@@ -22,6 +22,7 @@ from wakeledger.core.traverse import make_traverse
 from wakeledger.intake.gridding import check_duplicates
 from wakeledger.intake.gridding.line import Line, make_line
 from wakeledger.intake.probe.traverse import correction_input
+from wakeledger.ledger.propagation import Propagation
 from wakeledger.ledger.rows import CrossCheck, Ledger, Row
 from wakeledger.physics.fields.traverse_window import TAIL
 from wakeledger.physics.methods.section_drag import SectionDrag, section_drag
@@ -39,6 +40,7 @@ from wakeledger.run.config.tunnel import section_height
 from wakeledger.run.inputs import layouts, sources
 from wakeledger.run.load import SurveyInput, refuse_unsupported
 from wakeledger.run.outputs import estimate_of
+from wakeledger.run.propagation import propagation
 from wakeledger.run.rake import prepare_raw
 from wakeledger.run.section.chain import (
     METHODS,
@@ -67,6 +69,7 @@ _NOISE_DRAWS = 16
 _DRIFT = 0.8
 #: Fewer places than this beside the wake do not show its noise.
 _FEWEST_OUTER = 8
+_BY_DRAWS = "a line traverse is propagated by Monte Carlo alone"
 _NO_DRAWS = "no Monte Carlo draws were made"
 #: Differences smaller than this share of the drag are rounding.
 _ROUNDING = 1e-6
@@ -156,13 +159,13 @@ def reduce_section(
     prepared = prepare_section(survey)
     uncertainty = survey.survey.uncertainty
     count = uncertainty.draws if draws is None else draws
-    samples, budget = None, None
+    samples, budget, plain = None, None, None
     if prepared.sources and count >= 2:
         try:
-            samples, budget = _propagate(prepared, draws=count, seed=uncertainty.seed, progress=progress)
+            samples, budget, plain = _propagate(prepared, draws=count, seed=uncertainty.seed, progress=progress)
         except InputError as error:
             raise error.located(file=survey.survey.path) from error
-    return _ledger(survey, prepared, samples, budget, command=command)
+    return _ledger(survey, prepared, samples, budget, plain, command=command)
 
 
 def prepare_section(survey: SurveyInput) -> PreparedSection:
@@ -322,7 +325,7 @@ def _outer_noise(chain: SectionChain, nominal: SectionReduction, noise: Sequence
 
 def _propagate(
     prepared: PreparedSection, *, draws: int, seed: int, progress: Progress | None
-) -> tuple[Samples, Budget]:
+) -> tuple[Samples, Budget, Samples]:
     plain = run_montecarlo(
         prepared.vectors,
         prepared.sources,
@@ -343,11 +346,17 @@ def _propagate(
         draws=max(50, draws // 5),
         workers=1,
     )
-    return add_terms(plain, prepared.terms, seed=seed), budget
+    return add_terms(plain, prepared.terms, seed=seed), budget, plain
 
 
 def _ledger(
-    survey: SurveyInput, prepared: PreparedSection, samples: Samples | None, budget: Budget | None, *, command: str
+    survey: SurveyInput,
+    prepared: PreparedSection,
+    samples: Samples | None,
+    budget: Budget | None,
+    plain: Samples | None,
+    *,
+    command: str,
 ) -> Ledger:
     file, nominal = survey.survey, prepared.nominal
     settings = prepared.chain.settings
@@ -356,6 +365,9 @@ def _ledger(
     assert row is not None
     variance = math.nan if samples is None else float(samples.covariance[0, 0])
     model = {} if file.model is None else file.model.given()
+    came_about: tuple[Propagation, ...] = ()
+    if budget is not None and plain is not None and math.isfinite(row.standard_uncertainty):
+        came_about = propagation((ROW,), budget, prepared.sources, plain=plain, reason=_BY_DRAWS)
     return Ledger(
         title=file.title,
         compressible=nominal.reference.compressible,
@@ -368,6 +380,7 @@ def _ledger(
         comparisons=comparisons(file, (row,), {ROW: nominal.reference.dynamic_pressure * settings.chord}),
         budget=budget_lines(budget, (ROW,)),
         contributions=contributions(budget, (ROW,)),
+        propagation=came_about,
         checks=section_checks(nominal, prepared.facts),
         notes=prepared.notes,
         test=file.test.given(),
