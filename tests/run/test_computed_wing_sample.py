@@ -69,7 +69,9 @@ def test_the_vortices_decay_and_the_sum_stays(ledger):
     assert fall == pytest.approx(0.95, abs=0.15)
     assert 0 < combined.decay[0] < combined.decay[1]
     assert combined.decay[1] - combined.decay[0] == pytest.approx(fall, abs=0.05)
-    assert ledger.row("induced_drag").value == pytest.approx(near.row("induced_drag").value + combined.decay[0], abs=0.05)
+    assert ledger.row("induced_drag").value == pytest.approx(
+        near.row("induced_drag").value + combined.decay[0], abs=0.05
+    )
     # Per plane the sums differ by less than their uncertainties.
     sums = [one.row("total_drag") for one in ledger.stations]
     assert abs(sums[0].value - sums[1].value) < sums[0].expanded_uncertainty

@@ -87,7 +87,7 @@ def ledger_json(ledger: Ledger) -> dict[str, Any]:
 def _closure_entry(closure: Closure) -> dict[str, Any]:
     entry = _plain(asdict(closure), "it has no such figure")
     entry["causes"] = [_plain(asdict(cause), cause.note) for cause in closure.causes]
-    entry["errors"] = list(closure.errors)
+    entry["errors"] = [_number(error) for error in closure.errors]
     return entry
 
 
@@ -104,14 +104,20 @@ def _plain(entry: Mapping[str, Any], why: str) -> dict[str, Any]:
     """Numbers as plain floats, NaN as None with a reason; a reason only where there is something to explain."""
     plain: dict[str, Any] = {}
     for key, value in entry.items():
-        number = isinstance(value, float | int | np.floating | np.integer)
-        plain[key] = (float(value) if math.isfinite(value) else None) if number else value
+        plain[key] = [_number(one) for one in value] if isinstance(value, tuple) else _number(value)
     reason = plain.pop("reason", None)
-    if None in plain.values():
+    if any(value is None or (isinstance(value, list) and None in value) for value in plain.values()):
         reason = reason or why
     if reason:
         plain["reason"] = reason
     return plain
+
+
+def _number(value: Any) -> Any:
+    """A number as a plain float, None where it is not finite; anything else as it is."""
+    if not isinstance(value, float | int | np.floating | np.integer):
+        return value
+    return float(value) if math.isfinite(value) else None
 
 
 def json_text(document: Mapping[str, Any]) -> str:

@@ -22,7 +22,7 @@ from wakeledger.core.grid import Array
 from wakeledger.ledger.cancellation import SCATTER, Difference
 from wakeledger.ledger.contributions import Contributions
 from wakeledger.ledger.increment import ordered_budget
-from wakeledger.ledger.rows import Check, Combined, Ledger, Row
+from wakeledger.ledger.rows import Combined, Ledger, Row
 from wakeledger.physics.methods.station_fit import StationFit, station_fit
 from wakeledger.run import tables
 from wakeledger.run.assembly import comparisons, require_rows
@@ -32,6 +32,7 @@ from wakeledger.run.load import SurveyInput
 from wakeledger.run.outputs import MOMENTS, ROWS
 from wakeledger.run.places import sampled_mask
 from wakeledger.run.reduction import Variation
+from wakeledger.run.worst_checks import worst_checks
 from wakeledger.stream.reference import Reference
 
 #: What the budget calls the doubt about the trend along the stations.
@@ -40,8 +41,9 @@ TREND = "trend along the stations"
 _FAINT = 0.1
 #: Share of a numerical term's variance that is common to all planes.
 _ALIKE = 0.5
-_WORST = ("fail", "warn", "pass", "not_applicable")
 _DRAGS = ("induced_drag", "profile_drag", "total_drag")
+#: Rows that add up to the total drag.
+_SUMMED = ("profile_drag", "induced_drag", "wave_drag", "residual_drag", "total_drag")
 
 
 def reduce_stations(survey: SurveyInput, reduce_one: Callable[[SurveyInput], Ledger], *, command: str) -> Ledger:
@@ -104,7 +106,7 @@ def reduce_stations(survey: SurveyInput, reduce_one: Callable[[SurveyInput], Led
         budget=ordered_budget(known, {name: variance[0] for name, variance in whole.by_source.items()})
         if known
         else (),
-        checks=_worst_checks(ledgers, stations),
+        checks=worst_checks([one.checks for one in ledgers], stations),
         notes=(*_notes(ledgers, stations, fit, first), *_common_notes(ledgers)),
         survey_text=file.text,
         contributions=_as_contributions(whole) if known else None,
@@ -205,10 +207,12 @@ def _combine(
     scatter: dict[str, float] = {}
     for r, name in enumerate(names):
         covariance = joint[:, r, :, r]
-        share = _weights(covariance)
+        # Rows that add up have the weights of their sum.
+        leader = names.index("total_drag") if name in _SUMMED and "total_drag" in names else r
+        share = _weights(joint[:, leader, :, leader])
         weights[r, :, r] = share
         combined[r] = share @ values[:, r]
-        if np.isfinite(covariance).all():
+        if np.isfinite(covariance).all() and covariance.diagonal().min() > 0:
             # Planes that scatter more than they may say so themselves.
             mean = weighted_mean(values[:, r], covariance)
             if not mean.consistent:
@@ -436,17 +440,6 @@ def _rows(
             )
         )
     return tuple(found)
-
-
-def _worst_checks(ledgers: Sequence[Ledger], stations: Sequence[float]) -> tuple[Check, ...]:
-    """Of each check the worst outcome of the planes."""
-    found: dict[str, tuple[float, Check]] = {}
-    for station, ledger in zip(stations, ledgers, strict=True):
-        for check in ledger.checks:
-            earlier = found.get(check.name)
-            if earlier is None or _WORST.index(check.verdict) < _WORST.index(earlier[1].verdict):
-                found[check.name] = (station, check)
-    return tuple(replace(check, message=f"At {station:g} m: {check.message}") for station, check in found.values())
 
 
 def _record(fit: _Fit, stations: Sequence[float]) -> Combined:

@@ -32,6 +32,7 @@ from wakeledger.run.computed import diagnostics
 from wakeledger.run.config.tunnel import GIVEN, TunnelInput
 from wakeledger.run.gridded import core_spacings, grid_survey
 from wakeledger.run.inspection import inspect_plane, inspect_section
+from wakeledger.run.inspection.stations import inspect_stations
 from wakeledger.run.load import SUPPORT_TARE, SurveyInput, load, refuse_unsupported
 from wakeledger.run.near_field import with_closures
 from wakeledger.run.outputs import ESTIMATES, MOMENTS, OUTPUTS, ROWS, estimate_of
@@ -156,6 +157,8 @@ def inspect(survey: SurveyInput) -> Inspection:
     if survey.survey.section is not None:
         return inspect_section(survey)
     refuse_unsupported(survey.survey)
+    if survey.stations:
+        return inspect_stations(survey, inspect)
     try:
         return inspect_plane(survey, grid_survey(survey, quick=True))
     except InputError as error:
