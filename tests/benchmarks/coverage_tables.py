@@ -1,0 +1,137 @@
+"""Tables of the coverage study, and the page that holds them."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+import numpy as np
+from tests.benchmarks.coverage import CASES, COVERED, JUDGED, NUMERICAL, column
+
+from wakeledger.run.numerics import MASK, RESOLUTION
+
+
+def _share(hits: np.ndarray) -> str:
+    count, share = hits.size, float(hits.mean())
+    doubt = math.sqrt(max(share * (1 - share), 0.25 / count) / count)
+    return f"{100 * share:.1f} ± {100 * doubt:.1f} %"
+
+
+def _table(heads: Sequence[str], lines: Sequence[Sequence[str]]) -> str:
+    rows = [heads, ["---"] * len(heads), *lines]
+    return "\n".join(f"| {' | '.join(row)} |" for row in rows)
+
+
+def coverage_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
+    """Coverage of the measured sources' intervals."""
+    lines = []
+    for case, found in studies.items():
+        if case not in COVERED:
+            continue
+        error, u, half = (column(found, name) for name in ("error", "u", "half_width"))
+        inside = np.abs(error) <= half
+        wide = [one for one in found if "half_width_all" in one]
+        wider = np.abs(column(wide, "error")) <= column(wide, "half_width_all")
+        for k, row in enumerate(JUDGED):
+            sd, mean_u = error[:, k].std(ddof=1), math.sqrt(float((u[:, k] ** 2).mean()))
+            lines.append(
+                [
+                    case,
+                    row,
+                    str(len(found)),
+                    _share(inside[:, k]),
+                    f"{100 * wider[:, k].mean():.1f} %",
+                    f"{sd:.4f} N",
+                    f"{mean_u / sd:.3f} ± {1 / math.sqrt(2 * len(found)):.3f}",
+                    f"{error[:, k].mean():+.4f} ± {sd / math.sqrt(len(found)):.4f} N",
+                ]
+            )
+    heads = "case, row, surveys, truth inside U95, with numerical terms, scatter of the errors, u / scatter, mean error"
+    return _table(heads.split(", "), lines)
+
+
+def closed_form_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
+    """U95 in closed form over that of Monte Carlo."""
+    lines = []
+    for case, found in studies.items():
+        own = [one for one in found if "mc_u" in one]
+        if not own:
+            continue
+        cells = [case, str(len(own))]
+        for key in ("u", "half_width"):
+            ratio = column(own, key) / column(own, f"mc_{key}")
+            doubt = ratio.std(axis=0, ddof=1) / math.sqrt(len(own))
+            cells += [f"{mean:.3f} ± {by:.3f}" for mean, by in zip(ratio.mean(axis=0), doubt, strict=True)]
+        lines.append(cells)
+    names = [f"{kind}, {row.replace('_', ' ')}" for kind in ("u", "U95") for row in JUDGED]
+    return _table(["case", "surveys", *names], lines)
+
+
+def bias_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
+    """Noise bias of the induced drag."""
+    lines = []
+    for case, found in studies.items():
+        if case not in COVERED or not CASES[case].random:
+            continue
+        bias, held = column(found, "bias"), column(found, "held")
+        cells = [case, f"{bias.mean():+.5f} N"]
+        for real in (held, column(found, "anew")):
+            left, doubt = (real - bias).mean(), (real - bias).std(ddof=1) / math.sqrt(len(found))
+            cells += [f"{real.mean():+.5f} N", f"{100 * left / held.mean():+.1f} ± {100 * doubt / held.mean():.1f} %"]
+        cells.append(f"{100 * (column(found, 'anew') - bias).mean() / column(found, 'u')[:, 1].mean():+.1f} %")
+        lines.append(cells)
+    heads = (
+        "case | subtracted | found in the survey's region | share left | found, region drawn anew | share left | "
+        "that over u"
+    )
+    return _table(heads.split(" | "), lines)
+
+
+def numerical_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
+    """Numerical terms held against what they stand for, one by one."""
+    lines = []
+    for case in NUMERICAL:
+        found = studies.get(case, ())
+        for term, key in ((MASK, "mask"), (RESOLUTION, "resolution")):
+            if not found:
+                continue
+            error, half = column(found, f"{key}_error"), column(found, f"{key}_half_width")
+            for k, row in enumerate(JUDGED):
+                inside = np.abs(error[:, k]) <= half[:, k]
+                typical, told = (np.sqrt(np.mean(np.square(one[:, k]))) for one in (error, half))
+                lines.append([term, row, str(len(found)), _share(inside), f"{typical:.5f} N", f"{told:.5f} N"])
+    heads = "term, row, surveys, true effect inside U95 of the term, rms of the true effect, rms of the term's U95"
+    return _table(heads.split(", "), lines)
+
+
+def report_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
+    """How often a survey's noise is called not the declared one, or shared by neighbours."""
+    lines = []
+    for case, found in studies.items():
+        if case in NUMERICAL:
+            continue
+        wrong = CASES[case].factor != 1.0, CASES[case].length > 0
+        cells = [case, str(len(found))]
+        for key, hit in zip(("size", "shared"), wrong, strict=True):
+            cells.append(f"{_share(column(found, key))} ({'hits' if hit else 'false alarms'})")
+        lines.append(cells)
+    return _table(["case", "surveys", "size called wrong", "called shared by neighbours"], lines)
+
+
+TABLES = {
+    "coverage": coverage_table,
+    "closed form": closed_form_table,
+    "bias": bias_table,
+    "numerical": numerical_table,
+    "reports": report_table,
+}
+
+
+def written(page: str, studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
+    """A page with its tables made again."""
+    for name, table in TABLES.items():
+        begin, end = f"<!-- generated: {name} -->", "<!-- end -->"
+        before, rest = page.split(begin)
+        page = f"{before}{begin}\n\n{table(studies)}\n\n{end}{rest.split(end, 1)[1]}"
+    return page
