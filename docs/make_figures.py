@@ -14,7 +14,15 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from wakeledger.present.figures import budget_figure, estimates_figure, figure_bytes, loss_map, span_figure
+from wakeledger.present.figures import (
+    budget_figure,
+    estimates_figure,
+    figure_bytes,
+    loss_map,
+    section_figure,
+    span_figure,
+    stations_figure,
+)
 from wakeledger.present.figures.canvas import BLUE, GREEN, GREY, INK, PURPLE, VERMILION, style
 
 sys.path.insert(0, str(Path(__file__).resolve().parent))
@@ -315,6 +323,19 @@ FROM_LEDGER: dict[str, Callable[[Ledger], Figure]] = {
     "budget.svg": budget_figure,
     "span.svg": span_figure,
 }
+#: Figures drawn from the ledgers of other sample surveys, with their folders.
+FROM_SAMPLES: dict[str, tuple[str, Callable[[Ledger], Figure]]] = {
+    "between_walls.svg": ("half_model", section_figure),
+    "drag_at_stations.svg": ("computed_wing", stations_figure),
+}
+
+
+def of_samples() -> dict[str, Figure]:
+    """Figures of the other sample surveys; the computed one needs the packages of the extra ``cfd``."""
+    from wakeledger.run.survey import load, reduce
+
+    samples = measured.DOCS.parent / "sample_surveys"
+    return {name: draw(reduce(load(samples / folder / "survey.toml"))) for name, (folder, draw) in FROM_SAMPLES.items()}
 
 
 def main() -> None:
@@ -328,6 +349,7 @@ def main() -> None:
         ledger = open_archive(sample.folder / "survey-ledger" / "ledger.nc")
         made = {name: draw() for name, draw in DRAWN.items()}
         made |= {name: draw(ledger) for name, draw in FROM_LEDGER.items()}
+    made |= of_samples()
     for name, figure in made.items():
         (FOLDER / name).write_bytes(figure_bytes(figure, name.rpartition(".")[2]))
 

@@ -114,14 +114,14 @@ def test_section_figure_has_walls_window_and_wake(tunnel):
     axes = figure.axes[0]
     assert axes.get_aspect() == 1.0
     assert axes.get_xlabel() == "y to starboard, m (seen from behind)"
-    assert axes.get_title(loc="left") == "The survey in the test section"
+    assert axes.get_title(loc="left") == "The plane between walls"
     walls = next(patch for patch in axes.patches if isinstance(patch, Polygon))
     assert np.allclose(walls.get_xy()[:4], np.column_stack([Y, Z]))
     window = next(patch for patch in axes.patches if isinstance(patch, Rectangle))
     assert window.get_bbox().extents == pytest.approx([-0.75, -0.3, 0.75, 0.3])
     texts = [text.get_text() for text in figure.legends[0].get_texts()]
     assert texts == [
-        "walls", "window of the survey", "wake region", "vortex, counter-clockwise", "vortex, clockwise",
+        "walls", "window", "wake region", "vortex, counter-clockwise", "vortex, clockwise",
     ]  # fmt: skip
     turning = {line.get_label(): line for line in axes.lines}
     assert turning["vortex, counter-clockwise"].get_xdata()[0] > 0 > turning["vortex, clockwise"].get_xdata()[0]
@@ -132,7 +132,7 @@ def test_the_mirrored_side_was_not_surveyed(ledger, reflection):
     figure = section_figure(between_walls(ledger, reflection=reflection))
     boxes = {patch.get_label(): patch for patch in figure.axes[0].patches}
     low = {"y": (0.0, -0.3), "z": (-0.75, 0.0)}[reflection]
-    assert boxes["window of the survey"].get_xy() == pytest.approx(low)
+    assert boxes["window"].get_xy() == pytest.approx(low)
     mirrored = boxes["mirrored"].get_bbox().extents
     assert mirrored == pytest.approx([-1.2, -0.5, 0.0, 0.7] if reflection == "y" else [-1.2, -0.5, 1.2, 0.0])
     assert "reflection plane" in [text.get_text() for text in figure.legends[0].get_texts()]
@@ -140,7 +140,7 @@ def test_the_mirrored_side_was_not_surveyed(ledger, reflection):
 
 def test_ground_alone_and_open_jet(ledger):
     jet = section_figure(between_walls(ledger, boundary="open_jet")).axes[0]
-    assert jet.get_title(loc="left") == "The survey in the open jet"
+    assert jet.get_title(loc="left") == "The plane in the open jet"
     ground = between_walls(ledger, boundary="free_air", reflection="z", found=())
     axes = section_figure(ground).axes[0]
     assert not any(isinstance(patch, Polygon) and patch.get_label() == "walls" for patch in axes.patches)

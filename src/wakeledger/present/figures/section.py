@@ -18,7 +18,7 @@ if TYPE_CHECKING:
 
 _EDGES = {"closed_walls": "walls", "open_jet": "edge of the jet", "free_air": ""}
 _PALE = "#eef0f2"
-_TITLES = {"closed_walls": "The survey in the test section", "open_jet": "The survey in the open jet"}
+_TITLES = {"closed_walls": "The plane between walls", "open_jet": "The plane in the open jet"}
 #: The mirrored half shows through it.
 VEIL, HATCH = (1.0, 1.0, 1.0, 0.55), "////"
 
@@ -57,7 +57,7 @@ def section_figure(ledger: Ledger) -> Figure:
         axes.set_aspect("equal")
         axes.set_xlim(low[0] - margin, high[0] + margin)
         axes.set_ylim(low[1] - margin, high[1] + margin)
-        axes.set_title(_TITLES.get(str(ledger.plane.attrs.get("boundary")), "The survey and its reflection plane"))
+        axes.set_title(_TITLES.get(str(ledger.plane.attrs.get("boundary")), "The plane and its reflection plane"))
         axes.set_xlabel("y to starboard, m (seen from behind)")
         axes.set_ylabel("z up, m")
         figure.legend(handles=handles, loc="outside lower left", ncols=min(len(handles), 4))
@@ -117,9 +117,7 @@ def _window(axes: Axes, ledger: Ledger) -> list[object]:
         max(float(grid.z[0]), 0.0) if reflection == "z" else float(grid.z[0]),
     )
     size = float(grid.y[-1]) - corner[0], float(grid.z[-1]) - corner[1]
-    window = Rectangle(
-        corner, *size, facecolor=_PALE, edgecolor=GREY, linewidth=0.9, label="window of the survey", zorder=1
-    )
+    window = Rectangle(corner, *size, facecolor=_PALE, edgecolor=GREY, linewidth=0.9, label="window", zorder=1)
     axes.add_patch(window)
     drawn: list[object] = [window]
     if "wake_mask" in plane and plane["wake_mask"].values.any():

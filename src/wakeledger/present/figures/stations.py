@@ -26,8 +26,10 @@ _PANELS = {
     "profile_drag": (GREEN, "^"),
     "wave_drag": (PURPLE, "D"),
     "residual_drag": (GREY, "v"),
+    "numerical_drag": (GREY, "X"),
 }
-#: A residual that is smaller than this part of the total drag and than its own U95 gets no panel.
+#: Rows that get no panel where they are smaller than this part of the total drag or than their own U95.
+_MINOR = ("residual_drag", "numerical_drag")
 _NOTABLE = 0.01
 #: What the decay of the vortices does to a row: it goes out of the induced drag and into the profile drag.
 _DECAY_SIGN = {"induced_drag": -1.0, "induced_drag_free_air": -1.0, "profile_drag": 1.0, "total_drag": 0.0}
@@ -78,7 +80,7 @@ def stations_rows(ledger: Ledger) -> tuple[str, ...]:
     Returns
     -------
     tuple of str
-        Those drags that the ledger has with known values; the residual only where it can be seen.
+        Those drags that the ledger has with known values, the minor ones only where they can be seen.
     """
     present = {row.name: row for row in ledger.rows}
     found = []
@@ -93,7 +95,7 @@ def stations_rows(ledger: Ledger) -> tuple[str, ...]:
             if math.isnan(row.expanded_uncertainty)
             else max(row.expanded_uncertainty, _NOTABLE * total)
         )
-        if name == "residual_drag" and max(map(abs, values)) < least:
+        if name in _MINOR and max(map(abs, values)) < least:
             continue
         found.append(name)
     return tuple(found)

@@ -32,8 +32,8 @@ if TYPE_CHECKING:
 CAPTIONS = {
     "stations": "Each drag against the station of the plane, bars U95. Where a trend is resolved, the ledger's drags "
     "are those at the trailing edge, and what the vortices lose on their way goes from induced to profile drag.",
-    "section": "The survey's window, its wake region and vortices in what surrounds them, seen from behind, looking "
-    "upstream.",
+    "section": "The window of the plane, its wake region and vortices in what surrounds them, seen from behind, "
+    "looking upstream.",
     "total_pressure_loss": "Total-pressure loss, seen from behind, looking upstream. Profile drag is integrated inside "
     "the outlined wake region; hatched cells hold no measurement that can be trusted and were filled.",
     "axial_vorticity": "Axial vorticity with arrows of the crossflow. Counter-clockwise is positive; the colours are "
