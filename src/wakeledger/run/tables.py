@@ -275,7 +275,7 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
     grow = default_grow(gridding) if chain.settings.grow is None else chain.settings.grow
     found.append(
         f"The wake region is bounded at {chain.settings.level:g} times the noise of the smoothed loss and vorticity and"
-        f" grown by {1e3 * grow:.3g} mm;"
+        f" grown by {1e3 * grow:.4g} mm;"
         f" it covers {region.mask.mean():.0%} of the window."
     )
     if chain.settings.include or chain.settings.exclude:
