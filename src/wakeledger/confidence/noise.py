@@ -140,19 +140,21 @@ def _axis_noise(field: Array) -> _AxisNoise:
         return _AxisNoise(math.nan, math.nan, 0.0)
     deviation = _clipped_deviation(values)
     # Errors common to neighbouring lines, as in a traverse row, leave fewer independent values.
-    across = _robust_correlation(differences[:-1], differences[1:])
+    across, _ = _robust_correlation(differences[:-1], differences[1:])
+    across = 0.0 if math.isnan(across) else across
     repeated = min((1 + across**2) / max(1 - across**2, 1e-12), float(len(field)))
     count = values.size / repeated
     white, errors = _white_filter()
-    lag_one = _robust_correlation(differences[:, :-1], differences[:, 1:])
-    lag_two = _robust_correlation(differences[:, :-2], differences[:, 2:])
+    lag_one, pairs_one = _robust_correlation(differences[:, :-1], differences[:, 1:])
+    lag_two, pairs_two = _robust_correlation(differences[:, :-2], differences[:, 2:])
+    # Short stretches have far fewer pairs than values.
     departs = (
-        abs(lag_one - white[1]) > 4 * errors[0] / math.sqrt(count),
-        abs(lag_two - white[2]) > 4 * errors[1] / math.sqrt(count),
+        abs(lag_one - white[1]) > 4 * errors[0] * math.sqrt(repeated / max(pairs_one, 1)),
+        abs(lag_two - white[2]) > 4 * errors[1] * math.sqrt(repeated / max(pairs_two, 1)),
     )
     if deviation <= _ROUNDING * float(np.nanmax(np.abs(field))):
         return _AxisNoise(0.0, math.nan, count * _independent_share(white))
-    if not any(departs):
+    if not any(departs) or math.isnan(lag_one):
         return _AxisNoise(deviation, math.nan, count * _independent_share(white))
     lengths, first, gain = _correlated_filter()
     length = float(np.interp(lag_one, first, lengths))
@@ -174,14 +176,15 @@ def _clipped_deviation(values: Array) -> float:
     return deviation
 
 
-def _robust_correlation(a: Array, b: Array) -> float:
-    """Correlation from the spreads of sum and difference; zero where there is too little to tell."""
+def _robust_correlation(a: Array, b: Array) -> tuple[float, int]:
+    """Correlation from the spreads of sum and difference, and from how many pairs; NaN where they are too few."""
     good = np.isfinite(a) & np.isfinite(b)
-    if good.sum() < _FEWEST:
-        return 0.0
+    count = int(good.sum())
+    if count < _FEWEST:
+        return math.nan, count
     plus = _clipped_deviation(a[good] + b[good]) ** 2
     minus = _clipped_deviation(a[good] - b[good]) ** 2
-    return (plus - minus) / (plus + minus) if plus + minus > 0 else 0.0
+    return (plus - minus) / (plus + minus) if plus + minus > 0 else 0.0, count
 
 
 def _autocovariance(correlation: Array) -> Array:

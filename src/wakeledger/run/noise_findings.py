@@ -18,6 +18,9 @@ from wakeledger.confidence.noise import estimate_noise
 from wakeledger.confidence.sampling import SourceErrors
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.core.grid import Array
+from wakeledger.intake.gridding import Gridding
+from wakeledger.intake.gridding.mirror import ON_PLANE
+from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.run.chain import Chain
 from wakeledger.run.noise import Noise, declared_noise, white_noise
 from wakeledger.run.reduction import Reduction
@@ -131,7 +134,7 @@ def shown_noise(chain: Chain, nominal: Reduction) -> dict[str, Shown]:
     """
     grid, mask = nominal.flow.grid, nominal.region.mask
     if chain.gridding.kind == "uniform":
-        skip = mask | chain.gridding.filled
+        skip = mask | chain.gridding.filled | _twins(chain.gridding)
         found = {}
         for name in _CHANNELS:
             estimate = estimate_noise(getattr(nominal.flow, name), mask=skip)
@@ -156,6 +159,16 @@ def shown_noise(chain: Chain, nominal: Reduction) -> dict[str, Shown]:
     return {
         name: Shown(float(one), (math.nan, math.nan), size) for name, one in zip(_CHANNELS, deviations, strict=True)
     }
+
+
+def _twins(gridding: Gridding) -> Mask:
+    """Places on or beyond a reflection plane, whose values are those of the measured half and no news."""
+    grid, mirror = gridding.grid, gridding.mirror
+    if mirror is None:
+        return np.zeros(grid.shape, dtype=bool)
+    if mirror.axis == "y":
+        return np.broadcast_to(grid.y <= ON_PLANE * grid.dy, grid.shape)
+    return np.broadcast_to(grid.z[:, None] <= ON_PLANE * grid.dz, grid.shape)
 
 
 def disagreements(shown: Mapping[str, Shown], declared: Mapping[str, _Declared], *, crossflow: bool) -> list[str]:
