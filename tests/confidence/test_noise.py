@@ -106,3 +106,23 @@ def test_too_few_points_are_unknown_with_a_reason():
     assert "seven" in found.reason
     with pytest.raises(ValueError, match="mask"):
         estimate_noise(noise(1), mask=CORE.T)
+
+
+def test_short_stretches_beside_a_wake_raise_no_alarm():
+    # A window that the wake nearly fills: seven good points in a row are few, pairs two apart are half as many.
+    z, y = np.mgrid[0:34, 0:56]
+    wake = ((z - 17) / 11) ** 2 + ((y - 28) / 27) ** 2 < 1
+    found = estimates(lambda seed: np.random.default_rng([seed, 7]).standard_normal(z.shape), count=400, mask=wake)
+    # Two lags on two axes beyond four standard errors: 0.1 expected of 400. Counting values as pairs let 5 through.
+    assert sum(not one.is_white for one in found) <= 1
+
+
+def test_too_few_pairs_are_no_correlation():
+    # Seven good points in each row, one sixth difference: nothing tells whether neighbours share anything.
+    field = np.random.default_rng(0).standard_normal((60, 9))
+    field[:, 7:] = np.nan
+    field[6::7] = np.nan
+    found = estimate_noise(field)
+    assert found.is_white
+    # 52 values that overlap nowhere: a standard deviation within 10 %; three times that.
+    assert found.standard_deviation == pytest.approx(1.0, rel=0.3)
