@@ -226,7 +226,8 @@ def _verify(flow: ExpectedFlow, design: Design, choice: Choice, workers: int) ->
         evaluate, prepared.sources, prepared.layouts, names=names, draws=table.draws, seed=table.seed, workers=workers
     )
     found = float(samples.standard_uncertainty[0])
-    expected = math.sqrt(design.responses[choice.key].measured(choice.accuracies, 1))
+    response = design.responses[choice.key]
+    expected = math.sqrt((response.first or response).measured(choice.accuracies, 1))
     return found / expected if expected > 0 else 1.0
 
 

@@ -83,6 +83,8 @@ class Response:
         Checks that would fail.
     reason : str or None
         Why no survey is possible.
+    first : Response or None
+        Of the first simulated survey alone, which a full Monte Carlo can be held against.
     """
 
     noise: Mapping[str, float] = field(default_factory=dict)
@@ -94,6 +96,7 @@ class Response:
     error: float = np.nan
     failing: tuple[str, ...] = ()
     reason: str | None = None
+    first: Response | None = None
 
     @property
     def usable(self) -> bool:
@@ -176,7 +179,7 @@ def respond(
         found.append(
             _Pass(flow, prepared, whole, terms, places, largest, output, (*seed, number), len(surveys), workers)
         )
-    return _together(found)
+    return replace(_together(found), first=_together(found[:1]))
 
 
 class _Pass:
