@@ -27,7 +27,7 @@ from numpy.typing import NDArray
 from wakeledger.confidence.correlation import correlated_field
 from wakeledger.confidence.linear_budget import LinearBudget, SecondOrder, linear_budget
 from wakeledger.confidence.samples import Samples
-from wakeledger.confidence.sampling import ErrorSampler
+from wakeledger.confidence.sampling import ErrorSampler, SourceErrors
 from wakeledger.confidence.terms import NumericalTerm, add_terms
 from wakeledger.run.chain import Chain
 from wakeledger.run.config import parse_survey
@@ -175,15 +175,7 @@ def flow(half: str) -> SyntheticWake | TunnelWake:
 
 @dataclass(frozen=True)
 class Simulated:
-    """One survey.
-
-    Attributes
-    ----------
-    given : SurveyInput
-        Its file and points.
-    noisy, still, exact : Recording
-        The points with all errors, without those of each point and row, and without any.
-    """
+    """One survey: its file and points; these with all errors, without those of each point and row, without any."""
 
     given: SurveyInput
     noisy: Recording
@@ -288,6 +280,34 @@ def closed_form(prepared: Prepared, second: Mapping[str, SecondOrder]) -> Linear
     return linear_budget(slopes, prepared.sources, prepared.layouts, names=OUTPUTS, second=second)
 
 
+def curvature(prepared: Prepared) -> np.ndarray:
+    """Variance that the second order of few errors of the whole survey adds, alone and in pairs, over `OUTPUTS`.
+
+    ½ Σ H_ij² with the second derivatives H by errors of unit variance, from the chain at single errors and at pairs.
+    The package's budget has the diagonal only. The total drag holds −½ρ∬(u* − U)², to which the errors of speed and
+    static pressure go as their product.
+    """
+    single: list[dict[str, np.ndarray]] = []
+    for source in prepared.sources:
+        errors = SourceErrors(source, prepared.layouts, seed=0)
+        single += [errors.deviation(latent) for latent in range(errors.latents)]
+    names = sorted({name for one in single for name in one})
+    zero = {name: 0 * next(one[name] for one in single if name in one) for name in names}
+    many = [zero | one for one in single]
+    pairs = [(i, j) for i in range(len(many)) for j in range(i)]
+    moved = [*many, *({name: -one[name] for name in names} for one in many)]
+    moved += [{name: many[i][name] + many[j][name] for name in names} for i, j in pairs]
+    found = prepared.chain.vectors(
+        {name: np.concatenate([one[name] for one in moved]) for name in names}, estimates=False
+    )
+    change = found - prepared.nominal.vector
+    up, down, both = np.split(change, [len(many), 2 * len(many)])
+    variance: np.ndarray = 0.5 * np.square(up + down).sum(axis=0)
+    for (i, j), together in zip(pairs, both, strict=True):
+        variance += np.square(together - up[i] - up[j])
+    return variance
+
+
 @cache
 def second_order(case: str) -> dict[str, SecondOrder]:
     """Second order of the sources of a case that the crossflow's noise comes from, of one survey for all of them.
@@ -308,25 +328,12 @@ def second_order(case: str) -> dict[str, SecondOrder]:
 def judge(name: str, seed: int, k: int, *, draws: int = 0, numerical: bool = False) -> dict[str, Any]:
     """Reduce survey k of a case as its file says, and hold it against the truth.
 
-    Parameters
-    ----------
-    name : str
-        The case.
-    seed, k : int
-        They settle everything about the survey.
-    draws : int
-        Monte Carlo draws to hold against the closed form; none for 0.
-    numerical : bool
-        Whether to work out the numerical terms.
-
-    Returns
-    -------
-    dict
-        ``error``, value minus truth, ``u`` and ``half_width`` of the 95 % interval, measured sources alone, over
-        `JUDGED`, N; ``bias``, the noise bias of the induced drag that was subtracted, and ``held`` and ``anew``, that
-        which there is in the survey's own wake region, and with a region found in the noise; ``size`` and ``shared``,
-        whether the file's noise was called wrong or shared by neighbours; ``mc_u`` and ``mc_half_width``;
-        ``half_width_all`` with numerical terms; those of the case ``numerical`` apart.
+    They settle everything about it. Gives ``error``, value minus truth, ``u`` and ``half_width`` of the 95 % interval,
+    measured sources alone, over `JUDGED`, N; ``bias``, the noise bias of the induced drag that was subtracted, and
+    ``held`` and ``anew``, that which there is in the survey's own wake region, and with a region found in the noise;
+    ``size`` and ``shared``, whether the file's noise was called wrong or shared by neighbours; ``mc_u`` and
+    ``mc_half_width`` of so many Monte Carlo draws, where there are any; ``half_width_all`` with numerical terms, where
+    they are wanted; those of the case ``numerical`` apart.
     """
     case = CASES[name]
     made = survey(case, np.random.default_rng([seed, list(CASES).index(name), k]))
@@ -342,6 +349,9 @@ def judge(name: str, seed: int, k: int, *, draws: int = 0, numerical: bool = Fal
         return found | _numerical_terms(prepared, made, truth)
     budget = closed_form(prepared, second_order(name))
     u = budget.standard_uncertainty
+    if not case.random:
+        first = np.diagonal(budget.covariance, axis1=1, axis2=2).sum(axis=0)
+        u = np.sqrt(first + curvature(prepared))
     found |= {"u": u[AT].tolist(), "half_width": (budget.coverage_factor() * u)[AT].tolist()}
     if case.random:
         found |= _paired(prepared, made)
