@@ -115,3 +115,20 @@ def test_a_broad_loss_beside_the_wake_does_not_move_the_level():
         loss_level(broad, GRID, mask=mask, outer=np.ones(GRID.shape, bool))
     assert beyond(np.zeros(GRID.shape, bool), GRID, 1.0).all()
     assert beyond(mask, GRID, 0.1)[:, 0].sum() == np.count_nonzero(np.abs(GRID.z) > 0.101 + 0.1)
+
+
+def test_noise_that_is_a_source_of_its_own_is_not_in_the_zero_again():
+    rng = np.random.default_rng(8)
+    mask = np.zeros(GRID.shape, bool)
+    mask[GRID.nz // 3 : GRID.nz // 2, GRID.ny // 3 : GRID.ny // 2] = True
+    plain = rng.normal(0.0, 2.0, (40, *GRID.shape))
+    unknown, known = (loss_level(plain, GRID, mask=mask, noise_known=each).zero_uncertainty for each in (False, True))
+    assert (unknown > 0).all()
+    # One in twenty shows wander by chance.
+    assert np.count_nonzero(known) <= 6
+    # Where there is wander it stays, noise beside it or not: 1 Pa over a fifth of the window.
+    drifting = plain + wander(rng, 0.3, 40)
+    unknown, known = (
+        loss_level(drifting, GRID, mask=mask, noise_known=each).zero_uncertainty for each in (False, True)
+    )
+    assert (known > 0.9 * unknown).all()

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -145,6 +145,7 @@ def _prepare(survey: SurveyInput) -> Prepared:
         nominal.flow.grid,
         mask=nominal.region.mask,
         outer=zero_places(nominal.region.mask, nominal.flow.grid, chain.settings.zero_beyond),
+        noise_known=_declares_noise_of_loss(declared),
     )
     outer = replace(outer, loss_zero_uncertainty=float(level.zero_uncertainty))
     expected = _expected(chain, nominal)
@@ -163,6 +164,14 @@ def _prepare(survey: SurveyInput) -> Prepared:
     )
     cut = 0.0 if file.boundary is None else file.boundary.inboard_cut or 0.0
     return Prepared(chain, nominal, outer, line, vortices, expected, declared, inputs, noises, notes, cut)
+
+
+def _declares_noise_of_loss(declared: Sequence[Source]) -> bool:
+    """Whether the draws hold the noise of the total pressure already, and with it that of its zero."""
+    causes = ("plane.total_pressure", "plane.static_pressure", "plane.u", "plane.speed", "probe.")
+    return any(
+        source.effect == "random" and any(name.startswith(causes) for name in source.applies_to) for source in declared
+    )
 
 
 def _shock_level(chain: Chain, first: Reduction) -> float | None:

@@ -34,6 +34,8 @@ _FINEST = 160
 #: Coverage factor that the uncertainties are made for, and the probability.
 _COVERAGE = 2.0
 _PROBABILITY = 0.954500
+#: Blocks along each axis whose means tell wander from noise, the share of one that must be outside, the probability.
+_BLOCKS, _LEAST_OF_BLOCK, _SEEN = 4, 0.3, 0.95
 #: Least number of independent patches that is believed.
 _FEWEST = 2.0
 
@@ -86,7 +88,9 @@ def beyond(mask: Mask, grid: UniformGrid, distance: float) -> Mask:
     return far
 
 
-def loss_level(loss: Array, grid: UniformGrid, *, mask: Mask, outer: Mask | None = None) -> LossLevel:
+def loss_level(
+    loss: Array, grid: UniformGrid, *, mask: Mask, outer: Mask | None = None, noise_known: bool = False
+) -> LossLevel:
     """Zero of the loss in the outer flow, with an uncertainty that acts on the integrated area.
 
     Parameters
@@ -99,6 +103,8 @@ def loss_level(loss: Array, grid: UniformGrid, *, mask: Mask, outer: Mask | None
         The region over which the loss is integrated.
     outer : ndarray of bool, shape (nz, ny), optional
         Where the level is taken (`beyond`); all that is outside the region unless given.
+    noise_known : bool
+        Whether the points' own noise is a source of uncertainty of its own: the zero then holds the wander's part only.
 
     Returns
     -------
@@ -136,7 +142,12 @@ def loss_level(loss: Array, grid: UniformGrid, *, mask: Mask, outer: Mask | None
     integral = factor * np.sqrt(wander2 * smooth[index] + noise2 * white)
     inside, outside = np.count_nonzero(mask), np.count_nonzero(outer)
     area = inside * grid.cell_area
-    level = factor * np.sqrt(wander2 * smooth[index] + noise2 * white * inside / (inside + outside))
+    points = noise2 * white * inside / (inside + outside)
+    if noise_known:
+        # White noise alone fits with a little wander, too: it counts where blocks of the window show it.
+        points = 0.0
+        wander2 = np.where(_wanders(fields, outer, noise2), wander2, 0.0)
+    level = factor * np.sqrt(wander2 * smooth[index] + points)
 
     def shaped(array: Array) -> Array:
         return np.reshape(array, lead)
@@ -150,6 +161,24 @@ def loss_level(loss: Array, grid: UniformGrid, *, mask: Mask, outer: Mask | None
         correlation_length=shaped(length),
         patches=shaped(patches),
     )
+
+
+def _wanders(fields: Array, outer: Mask, noise2: Array) -> NDArray[np.bool_]:
+    """Whether means of blocks of the outer flow differ by more than its noise explains, shape (fields,)."""
+    chi_square, blocks = np.zeros(fields.shape[0]), 0
+    for rows in np.array_split(np.arange(outer.shape[0]), _BLOCKS):
+        for columns in np.array_split(np.arange(outer.shape[1]), _BLOCKS):
+            block = np.ix_(rows, columns)
+            count = np.count_nonzero(outer[block])
+            if count > _LEAST_OF_BLOCK * outer[block].size:
+                # The fields are zero inside the region and have mean zero outside.
+                chi_square += fields[:, rows[:, None], columns].sum(axis=(1, 2)) ** 2 / count
+                blocks += 1
+    if blocks < 3:
+        return np.ones(fields.shape[0], dtype=bool)
+    limit = special.chdtri(blocks - 1, 1 - _SEEN)
+    found: NDArray[np.bool_] = chi_square > limit * np.maximum(noise2, 1e-300)
+    return found
 
 
 def _variogram(fields: Array, outer: Mask, grid: UniformGrid) -> tuple[Array, Array, Array]:
