@@ -1,13 +1,18 @@
 """The sample survey of a computed wing: two real slices whose ledger closes on the solver's surface forces."""
 
+import os
 import re
 from pathlib import Path
 
 import pytest
 
+from wakeledger.run.gridded import grid_survey
 from wakeledger.run.survey import load, reduce
 
 FOLDER = Path(__file__).parents[2] / "sample_surveys" / "computed_wing"
+REFERENCE = Path(
+    os.environ.get("WAKELEDGER_REFERENCE_DATA", Path(__file__).resolve().parents[3] / "shared" / "reference")
+)
 #: Drag of one count on 6 m² at q = 551.25 Pa, N.
 COUNT = 0.33075
 #: Surface forces of both halves, from the solver's integration, N.
@@ -22,6 +27,12 @@ def ledger():
 
 def test_the_data_are_small():
     assert sum(path.stat().st_size for path in FOLDER.iterdir()) < 1_300_000
+
+
+@pytest.mark.skipif(not REFERENCE.is_dir(), reason="the reference data are not beside the project")
+def test_the_slices_are_those_of_the_reference_data():
+    for path in FOLDER.glob("*.vtp"):
+        assert path.read_bytes() == (REFERENCE / "cfd_wing" / path.name).read_bytes()
 
 
 def test_the_drags_close_on_the_surface_forces(ledger):
@@ -58,6 +69,16 @@ def test_the_walls_take_from_the_induced_drag_what_they_must(ledger):
     found = ledger.row("induced_drag").value / ledger.row("induced_drag_free_air").value - 1
     # The README of the data: images change it by about -1.6 %.
     assert found == pytest.approx(-0.016, abs=0.001)
+
+
+def test_a_free_air_reading_has_more_induced_drag(ledger, tmp_path):
+    text = (FOLDER / "survey.toml").read_text(encoding="utf-8")
+    text = re.sub(r'"closed_walls"\ny = .*\nz = .*\n', '"free_air"\n', text)
+    assert '"free_air"' in text and "16 m" not in text.split("[boundary]")[1]
+    (tmp_path / "survey.toml").write_text(text.replace('"slice', f'"{FOLDER}/slice'), encoding="utf-8")
+    free = grid_survey(load(tmp_path / "survey.toml").stations[0]).first.values["induced_drag"]
+    walls = ledger.stations[0].row("induced_drag").value
+    assert walls / free - 1 == pytest.approx(-0.016, abs=0.001)
 
 
 def test_the_vortices_decay_and_the_sum_stays(ledger):
