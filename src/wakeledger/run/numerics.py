@@ -32,6 +32,9 @@ LOSS_ZERO = "zero of the total pressure"
 OFFSET_ZERO = "zero of the flow angles"
 SWIRL = "rotation of the stream"
 CUT = "inboard cut"
+EDGE = "edge of the window"
+#: Width of the strip along the window's edge, in cells.
+EDGE_CELLS = 3
 PAIR = "bound vortex in the residual"
 SPLIT = "border between profile and wave drag"
 PRESSURE = "static pressure that was not measured"
@@ -102,6 +105,7 @@ def numerical_terms(
     ]
     if np.isfinite(outer.swirl_uncertainty):
         terms.append(NumericalTerm(SWIRL, _deviation(chain, nominal, Variation(swirl_shift=outer.swirl_uncertainty))))
+    terms.append(_edge_term(chain, nominal))
     if regrid.cut:
         terms.append(_cut_term(chain, nominal, regrid))
     known = [one for one in both if one is not None]
@@ -109,7 +113,7 @@ def numerical_terms(
         terms.append(NumericalTerm(OFFSET_ZERO, np.sqrt(sum(one**2 for one in known))))
     if chain.settings.primary == "velocity" and not {"total_pressure", "static_pressure"} & chain.measured:
         terms.append(_pressure_term(chain, nominal))
-    terms.append(_pair_term(nominal))
+    terms.append(_pair_term(chain, nominal))
     if nominal.split_uncertainty:
         terms.append(_split_term(nominal))
     for name, value in method_uncertainty.items():
@@ -151,6 +155,17 @@ def _mask_term(chain: Chain, nominal: Reduction, noise: Sequence[Mapping[str, Ar
     return NumericalTerm(MASK, vector, "rectangular")
 
 
+def _edge_term(chain: Chain, nominal: Reduction) -> NumericalTerm | None:
+    """What lies along the window's edge: as much may lie beyond it. None where the wake keeps clear of the edge."""
+    strip = np.ones(nominal.flow.grid.shape, dtype=bool)
+    strip[EDGE_CELLS:-EDGE_CELLS, EDGE_CELLS:-EDGE_CELLS] = False
+    mask = nominal.region.mask
+    if not (mask & strip).any():
+        return None
+    without = chain.reduce(vary=Variation(mask=mask & ~strip), estimates=False).vector
+    return NumericalTerm(EDGE, _difference(without, nominal), "rectangular")
+
+
 def _resolution_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
     found = []
     for phase in ((0, 0), (0, 1), (1, 0), (1, 1)):
@@ -184,10 +199,17 @@ def _pressure_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
     return NumericalTerm(PRESSURE, _deviation(without, nominal, Variation(mask=nominal.region.mask)) / 2)
 
 
-def _pair_term(nominal: Reduction) -> NumericalTerm:
+def _pair_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
     """Doubt of the residual, which the total drag shares."""
-    whole = residual_drag(nominal.flow, nominal.reference, nominal.loss_free, nominal.region.mask)
-    doubt = PAIR_DOUBT * abs(float(sum(whole)) - sum(nominal.residual_parts))
+    whole = residual_drag(
+        nominal.flow,
+        nominal.reference,
+        nominal.loss_free,
+        nominal.region.mask,
+        boundary=chain.settings.boundary.whole,
+        blockage=nominal.wake_blockage,
+    )
+    doubt = PAIR_DOUBT * abs(chain.settings.counted * float(sum(whole)) - sum(nominal.residual_parts))
     vector = np.zeros(len(OUTPUTS))
     for row in ("residual_drag", "total_drag"):
         vector[OUTPUTS.index(row)] = doubt

@@ -29,6 +29,7 @@ from wakeledger.run.noise_findings import crossflow_noises
 from wakeledger.run.outputs import ESTIMATES, estimate_of
 from wakeledger.run.places import zero_places
 from wakeledger.run.reduction import Frozen, Reduction
+from wakeledger.run.resolution import resolution_notes
 from wakeledger.run.traverse_notes import traverse_notes
 from wakeledger.run.tunnel import tunnel_notes, tunnel_sources
 from wakeledger.run.wandering import wandering_notes
@@ -159,6 +160,7 @@ def _prepare(survey: SurveyInput) -> Prepared:
         *tables.notes(survey, chain, nominal, gridded.state),
         *tunnel_notes(survey, chain, nominal),
         *slipstream_notes(chain, nominal),
+        *resolution_notes(chain, nominal),
         *wandering_notes(file.wake, vortices, chain, nominal),
         *noise_notes,
     )
