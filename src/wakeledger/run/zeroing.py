@@ -33,8 +33,9 @@ def zeroed(flow: Flow, reference: Reference, zero: float, *, primary: str, measu
     Returns
     -------
     Flow
-        A measured speed stays, and the static pressure follows if a pressure was measured at all; where the speed itself
-        comes from the pressures, it follows, at the same static pressure and the same measured, else total, temperature.
+        A measured speed stays, and the static pressure follows if a pressure was measured at all; where the speed
+        itself comes from the pressures, it follows, at the same static pressure and the same measured, else total,
+        temperature.
         Where the flow's direction was measured, the crossflow follows the speed; where v and w themselves were, they
         stay.
     """
