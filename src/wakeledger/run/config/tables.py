@@ -1,4 +1,4 @@
-"""The small tables: test, probe, empty tunnel, boundary, wake, section, bodies, loading and plan."""
+"""The small tables: test, probe, empty tunnel, boundary, wake, section, bodies and loading."""
 
 from __future__ import annotations
 
@@ -32,7 +32,6 @@ from wakeledger.run.config.quantities import (
     Pressure,
     Shape,
     Shapes,
-    Speed,
     Table,
     Text,
     Validator,
@@ -274,34 +273,3 @@ class LoadingTable(Table):
     """``[loading]``: the trailing edge the wake leaves."""
 
     trailing_edge: Polyline = Field(description='trailing_edge = [["-0.6 m", "0 m"], ["0.6 m", "0 m"]]')
-
-
-def _range(si_unit: str, *, difference: bool = False) -> PlainValidator:
-    """One value or a list of values to try."""
-
-    def parse(value: Any) -> float:
-        return parse_quantity(value, si_unit, difference=difference, least=0.0)
-
-    many: Validator = listed(parse, "one value, or a list of values to try")
-    return PlainValidator(lambda value: many(value if isinstance(value, list) else [value]))
-
-
-def _counts(value: Any) -> tuple[int, ...]:
-    values = value if isinstance(value, list) else [value]
-    if not values or not all(isinstance(item, int) and not isinstance(item, bool) and item >= 1 for item in values):
-        raise fail(f"{kind_of(value)} stands here", "write a whole number of at least 1, or a list of them")
-    return tuple(values)
-
-
-class PlanTable(Table):
-    """``[plan]``: ranges to try when a survey is planned; single values are kept as ranges of one."""
-
-    spacing: Annotated[tuple[float, ...], _range("m")] | None = None
-    window: Annotated[tuple[float, ...], _range("m")] | None = None
-    noise: Annotated[tuple[float, ...], _range("m s-1")] | None = None
-    angle_accuracy: Annotated[tuple[float, ...], _range("rad")] | None = None
-    reference_accuracy: Annotated[tuple[float, ...], _range("1")] | None = None
-    repeats: Annotated[tuple[int, ...], PlainValidator(_counts)] | None = None
-    settling_time: Duration | None = None
-    traverse_speed: Speed | None = None
-    loading: Literal["elliptic", "parabolic", "linear", "bell"] | None = None
