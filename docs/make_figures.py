@@ -275,6 +275,38 @@ def increment_coverage() -> Figure:
     return figure
 
 
+def coverage() -> Figure:
+    """Coverage of U95 by case and row, and u over the scatter of the errors, from the table in the page."""
+    text = (measured.DOCS / "coverage.md").read_text(encoding="utf-8")
+    block = text.split("<!-- generated: coverage -->")[1].split("<!-- end -->")[0]
+    lines = [[cell.strip() for cell in line.split("|")[1:-1]] for line in block.splitlines() if line.startswith("|")][
+        2:
+    ]
+    cases = list(dict.fromkeys(line[0] for line in lines))
+    rows = list(dict.fromkeys(line[1] for line in lines))
+    with drawing(7.1, 3.4, 2) as (figure, (left, right)):
+        left.axvspan(93.5, 96.5, color=GREEN, alpha=0.18, lw=0)
+        left.axvline(95, color=GREEN, lw=1)
+        right.axvline(1, color=GREEN, lw=1)
+        for k, (row, colour) in enumerate(zip(rows, (BLUE, VERMILION, INK, PURPLE), strict=True)):
+            own = [line for line in lines if line[1] == row]
+            at = [cases.index(line[0]) + 0.17 * (k - 1.5) for line in own]
+            for panel, number in ((left, 3), (right, 6)):
+                mean, doubt = np.array([[float(x) for x in line[number].rstrip(" %").split(" ± ")] for line in own]).T
+                name = row.replace("_", " ") if panel is left else None
+                panel.errorbar(mean, at, xerr=doubt, fmt="o", ms=4, lw=1, color=colour, label=name)
+        left.set_yticks(range(len(cases)), [case.replace("_", " ") for case in cases])
+        right.set_yticks(range(len(cases)), [""] * len(cases))
+        for panel in (left, right):
+            panel.set_ylim(len(cases) - 0.5, -0.5)
+        left.set_xlabel("truth inside U95, %")
+        left.set_xlim(90, 100)
+        right.set_xlabel("u / scatter of the errors")
+        right.set_xlim(0.88, 1.12)
+        figure.legend(loc="outside lower left", ncols=4)
+    return figure
+
+
 def plan_map() -> Figure:
     """What each set-up of the sample plan would know."""
     from wakeledger.present.figures.plan import uncertainty_map
@@ -312,6 +344,7 @@ DRAWN: dict[str, Callable[[], Figure]] = {
     "holes.svg": holes,
     "accuracy.svg": accuracy,
     "station.svg": station,
+    "coverage.svg": coverage,
     "increment_coverage.svg": increment_coverage,
     "plan_map.svg": plan_map,
     "plan_check.svg": plan_check,
