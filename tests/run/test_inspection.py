@@ -7,7 +7,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from wakeledger.run import survey as survey_module
+from wakeledger.run import prepared, propagate
 from wakeledger.run.inspection.advice import recommendations
 from wakeledger.run.survey import inspect, load, reduce
 
@@ -53,8 +53,14 @@ def test_a_good_survey_may_be_left(kit, wing, tmp_path):
 
 
 def test_inspecting_makes_no_noise_bias_and_no_frozen_geometry(kit, wing, tmp_path, monkeypatch):
-    for name in ("declared_noise", "noise_bias", "_line", "numerical_terms", "run_montecarlo"):
-        monkeypatch.setattr(survey_module, name, None)
+    for module, name in (
+        (prepared, "crossflow_noises"),
+        (prepared, "noise_bias"),
+        (prepared, "_line"),
+        (propagate, "numerical_terms"),
+        (propagate, "run_montecarlo"),
+    ):
+        monkeypatch.setattr(module, name, None)
     looked(kit, tmp_path, kit.table(wing, *kit.axes()))
 
 

@@ -392,3 +392,17 @@ def test_every_plane_is_looked_at(kit, tmp_path):
     assert all(check.message.startswith("At 1500 m: ") for check in failed)
     assert any(each.action == "widen" and each.message.startswith("At 1500 m: ") for each in cut.recommendations)
     assert cut.station == 500.0 and cut.points < alike.points
+
+
+def test_a_list_of_points_may_be_said_to_be_computed(kit, tmp_path):
+    data = kit.table(kit.wing(), *kit.axes(spacing=0.05))
+    said = [
+        kit.ledger(tmp_path / str(computed), data, kit.description(plane={"computed": computed}))
+        for computed in (True, False)
+    ]
+    rows = [{row.name: row for row in ledger.rows} for ledger in said]
+    assert "numerical_drag" in rows[0]
+    assert "numerical_drag" not in rows[1]
+    # Without noise numerical terms are all the uncertainty a computed plane has; a measured one's is unknown.
+    assert 0 < rows[0]["total_drag"].standard_uncertainty < 0.02 * rows[0]["total_drag"].value
+    assert np.isnan(rows[1]["total_drag"].standard_uncertainty)

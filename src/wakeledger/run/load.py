@@ -78,7 +78,10 @@ class SurveyInput:
 
     @property
     def computed(self) -> bool:
-        """Whether the points come from a computed flow: from a mesh, or cut out of a volume."""
+        """Whether the flow was computed: as the survey file says, else by its coming from a mesh or out of a volume."""
+        said = self.survey.plane.computed
+        if said is not None:
+            return said
         return self.points.triangles is not None or self.points.areas is not None or bool(self.points.how)
 
     @property

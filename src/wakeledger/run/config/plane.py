@@ -291,6 +291,8 @@ class Plane(Table):
         program.
     trailing_edge_x : float
         Where the trailing edge stands along the project's x axis in a file of computed flow, m.
+    computed : bool or None
+        Whether the flow was computed, so that it has no noise; told by the file's mesh where it is left out.
     time : float or None
         Instant of a case folder that holds several, in s or as the solver counts; None for the latest.
     primary : {"total_pressure", "velocity", "hole_pressures"}
@@ -313,6 +315,7 @@ class Plane(Table):
     axes: Axes = Axes()
     window: Annotated[Array, PlainValidator(_window)] | None = None
     trailing_edge_x: Length = 0.0
+    computed: bool | None = None
     time: Annotated[float, PlainValidator(_time)] | None = None
 
     @property
