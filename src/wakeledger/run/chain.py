@@ -37,7 +37,7 @@ from wakeledger.physics.methods.wave_split import wave_split
 from wakeledger.run.coefficients import coefficients, tunnel_figures
 from wakeledger.run.empty_tunnel import EmptyTunnel
 from wakeledger.run.estimates import area_estimates, on_frozen_geometry, without_walls
-from wakeledger.run.outputs import OUTPUTS, WITHOUT_CROSSFLOW
+from wakeledger.run.outputs import OUTPUTS, WITH_SUPPORT, WITHOUT_CROSSFLOW
 from wakeledger.run.places import default_grow, sampled_mask, zero_places
 from wakeledger.run.reduction import Frozen, Reduction, Settings, Variation
 from wakeledger.run.shear import Displacement
@@ -344,7 +344,8 @@ class Chain:
                 wake_blockage=blockage,
                 vary=vary,
             )
-            values |= found.values
+            # Integrals over the whole window hold the support's wake too.
+            values |= {name: value - tare if name in WITH_SUPPORT else value for name, value in found.values.items()}
             offset, invalid = found.offset, found.invalid_area
             if geometric:
                 v, w = without_walls(settings, flow, forces)

@@ -172,22 +172,25 @@ def _check(name: str, value: float, messages: dict[str, str]) -> Check:
 def net_circulation(reduction: Reduction, boundary: Boundary = FREE_AIR) -> Check:
     """Net circulation of the window over the circulation of the sign that prevails.
 
-    Between closed walls the drag is finite with it, as the walls carry the rest, so that it warns at most.
+    Between closed walls and over the ground the drag is finite with it, as walls or image carry the rest, so that it
+    warns at most. Over the ground it is that of the upper half: the mirrored one balances any.
     """
-    if boundary.reflection is not None:
+    if boundary.reflection == "y":
         message = "The mirrored half balances the circulation: it says nothing about what the window misses."
         return _check("net_circulation", math.nan, {"not_applicable": message})
     forces = reduction.forces
     prevailing = float(forces.gross_circulation) + abs(float(forces.net_circulation)) / 2
     if prevailing == 0:
         return _check("net_circulation", math.nan, {"not_applicable": "No vorticity was found in the plane."})
-    value = abs(_surrounding_circulation(reduction)) / prevailing
+    ground, walls = boundary.reflection == "z", isinstance(boundary, ClosedWalls)
+    value = abs(_surrounding_circulation(reduction, above_ground=ground)) / prevailing
     limit = LIMITS["net_circulation"][0]
-    if isinstance(boundary, ClosedWalls) and value > limit:
+    if (ground or walls) and value > limit:
+        where, what = ("Over the ground", "with its image") if ground else ("Between closed walls", "as tested")
         message = (
-            f"{value:.1%} of the wake's circulation is unbalanced. Between closed walls the induced drag as tested does"
-            " not depend on where the window ends, but that of free air does, and so do both if a vortex is cut: see"
-            " edge_vorticity, or check the crossflow's calibration."
+            f"{value:.1%} of the wake's circulation is unbalanced. {where} the induced drag {what} does not depend on"
+            f" where the window ends{'' if ground else ', but that of free air does'}; if a vortex is cut, lift and"
+            " drag are those of the part inside: see edge_vorticity, or check the crossflow's calibration."
         )
         return Check("net_circulation", "warn", value, limit, message)
     return _check(
@@ -202,24 +205,21 @@ def net_circulation(reduction: Reduction, boundary: Boundary = FREE_AIR) -> Chec
     )
 
 
-def _surrounding_circulation(reduction: Reduction) -> float:
+def _surrounding_circulation(reduction: Reduction, *, above_ground: bool = False) -> float:
     """Circulation around the wake, m²/s: the mean over a few closed lines between it and the window's edge."""
     grid, mask = reduction.flow.grid, reduction.region.mask
+    ground = int(np.argmax(grid.z > -0.25 * grid.dz))
     rows, columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
     room = 0
     if rows.size:
-        room = int(min(rows[0], grid.nz - 1 - rows[-1], columns[0], grid.ny - 1 - columns[-1]))
+        below = grid.nz if above_ground else rows[0]
+        room = int(min(below, grid.nz - 1 - rows[-1], columns[0], grid.ny - 1 - columns[-1]))
     found = []
     for inset in range(min(room, _CONTOURS - 1) + 1):
-        window = (slice(inset, grid.nz - inset), slice(inset, grid.ny - inset))
-        inner = UniformGrid(
-            grid.y0 + inset * grid.dy,
-            grid.z0 + inset * grid.dz,
-            grid.dy,
-            grid.dz,
-            grid.ny - 2 * inset,
-            grid.nz - 2 * inset,
-        )
+        low = ground if above_ground else inset
+        window = (slice(low, grid.nz - inset), slice(inset, grid.ny - inset))
+        y, z = grid.y[window[1]], grid.z[window[0]]
+        inner = UniformGrid(y[0], z[0], grid.dy, grid.dz, y.size, z.size)
         found.append(float(edge_integrals(reduction.flow.v[window], reduction.flow.w[window], inner).circulation))
     return float(np.mean(found))
 
@@ -273,7 +273,8 @@ def _edge_share(field: Array, mask: Mask, grid: UniformGrid, boundary: Boundary)
     inside = np.where(mask, np.abs(field), 0.0)
     total = float(inside.sum())
     gaps = _distances(grid, boundary)
-    walls = tuple(side for side, gap in gaps.items() if gap <= WALL_CELLS * max(grid.dy, grid.dz))
+    reach = WALL_CELLS * max(grid.dy, grid.dz)
+    walls = tuple(side for side, gap in gaps.items() if gap <= reach and side not in _inner(boundary))
     if total == 0:
         return EdgeShare(math.nan, "", math.nan, walls, math.nan)
     n = EDGE_CELLS

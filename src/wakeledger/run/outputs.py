@@ -66,3 +66,7 @@ WITHOUT_CROSSFLOW: tuple[str, ...] = (
     "wake_blockage",
     estimate_of("profile_drag", "entropy_area"),
 )
+#: Estimates that hold the wake of the model's support, whose drag is taken off them as off the rows.
+WITH_SUPPORT: frozenset[str] = frozenset(
+    (estimate_of("profile_drag", "entropy_area"), estimate_of("total_drag", "momentum_area"))
+)

@@ -15,6 +15,7 @@ from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.ledger.inspection import Inspection
 from wakeledger.ledger.propagation import Propagation
 from wakeledger.ledger.rows import Check, CrossCheck, KeptSurvey, Ledger, Row
+from wakeledger.physics.fields.boundary import Boundary
 from wakeledger.physics.loading.span import span_loading
 from wakeledger.run import tables
 from wakeledger.run.assembly import (
@@ -29,6 +30,7 @@ from wakeledger.run.assembly import (
 )
 from wakeledger.run.checks import Facts, all_checks
 from wakeledger.run.computed import diagnostics
+from wakeledger.run.config import Survey
 from wakeledger.run.config.tunnel import GIVEN, TunnelInput
 from wakeledger.run.gridded import core_spacings, grid_survey
 from wakeledger.run.inspection import inspect_plane, inspect_section
@@ -126,6 +128,14 @@ def _with_tare(survey: SurveyInput, *, draws: int | None) -> SurveyInput:
     support = survey.companions.get(SUPPORT_TARE)
     if support is None or survey.tare is not None:
         return survey
+    own, whole = support.survey, survey.survey
+    if _surroundings(own) != _surroundings(whole):
+        raise SurveyError(
+            f"[boundary] of {own.path.name} is not that of {whole.path.name}",
+            file=whole.path,
+            place="[boundary] support_tare survey",
+            remedy="describe the same test section and reflection plane in both",
+        )
     row = next(row for row in reduce(support, draws=draws).rows if row.name == "profile_drag")
     if not math.isfinite(row.standard_uncertainty):
         raise SurveyError(
@@ -134,7 +144,14 @@ def _with_tare(survey: SurveyInput, *, draws: int | None) -> SurveyInput:
             place="[[uncertainty.source]]",
             remedy="declare the sources of that survey, or give the tare as a value with its uncertainty",
         )
-    return replace(survey, tare=TunnelInput(row.value, row.standard_uncertainty, GIVEN[SUPPORT_TARE]))
+    # At another speed the support's drag goes with the dynamic pressure.
+    scale = whole.reference.resolve().dynamic_pressure / own.reference.resolve().dynamic_pressure
+    tare = TunnelInput(row.value, row.standard_uncertainty, GIVEN[SUPPORT_TARE])
+    return replace(survey, tare=tare.times(scale))
+
+
+def _surroundings(survey: Survey) -> Boundary | None:
+    return None if survey.boundary is None else survey.boundary.surroundings()
 
 
 def inspect(survey: SurveyInput) -> Inspection:

@@ -16,6 +16,7 @@ from wakeledger.physics.fields.boundary import ClosedWalls, FreeAir
 from wakeledger.physics.loading.boundary_factor import classical_boundary_factor
 from wakeledger.run.chain import Chain
 from wakeledger.run.empty_tunnel import PREFIX
+from wakeledger.run.increment import refuse_conflicts
 from wakeledger.run.inputs import layouts, sources
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.outputs import TUNNEL
@@ -53,6 +54,11 @@ def tunnel_sources(
         The declared ones first. One that carries the `shared_id` of a source of the empty tunnel acts on both surveys.
     layouts : dict of str to InputLayout
         Of the inputs added.
+
+    Raises
+    ------
+    InputError
+        If the survey has sources and that of the empty tunnel none, or both mean another error by one `shared_id`.
     """
     found = list(declared)
     added: dict[str, InputLayout] = {}
@@ -68,12 +74,21 @@ def tunnel_sources(
     if empty is None or own is None:
         return tuple(found), added
     theirs = (*sources(empty.survey, empty.points, own.chain.reference()), *own.sources)
+    if not theirs:
+        raise SurveyError(
+            "the survey of the empty tunnel declares no source of uncertainty, so that what is taken out would pass for"
+            " exact",
+            file=empty.survey.path,
+            place="[[uncertainty.source]]",
+            remedy="declare the noise of that survey, with the shared_id of what both surveys have in common",
+        )
+    refuse_conflicts((("the survey", (survey.survey,)), ("that of the empty tunnel", (empty.survey,))))
     names = sorted({name for source in theirs for name in source.applies_to})
     places = layouts(empty.survey, empty.points, own.chain.gridding, names)
     added |= {PREFIX + name: layout for name, layout in places.items()}
     for source in theirs:
         inputs = tuple(PREFIX + name for name in source.applies_to)
-        twin = next((k for k, one in enumerate(found) if _same_instrument(one, source)), None)
+        twin = _twin(found, source)
         if twin is not None:
             found[twin] = replace(found[twin], applies_to=(*found[twin].applies_to, *inputs), prefix=PREFIX)
         else:
@@ -81,10 +96,15 @@ def tunnel_sources(
     return tuple(found), added
 
 
-def _same_instrument(one: Source, other: Source) -> bool:
-    """Whether two surveys declare one and the same error."""
+def _twin(found: Sequence[Source], source: Source) -> int | None:
+    """Which of a survey's own sources is one and the same error of one input as a source of the empty tunnel's."""
     same = ("effect", "standard_uncertainty", "relative", "distribution", "degrees_of_freedom", "shared_id")
-    return one.shared_id is not None and all(getattr(one, name) == getattr(other, name) for name in same)
+    for k, one in enumerate(found):
+        if one.shared_id is None or not set(one.applies_to) & set(source.applies_to):
+            continue
+        if all(getattr(one, name) == getattr(source, name) for name in same):
+            return k
+    return None
 
 
 def tunnel_figures(chain: Chain, nominal: Reduction, samples: Samples | None) -> tuple[TunnelFigure, ...]:
@@ -126,15 +146,13 @@ def tunnel_figures(chain: Chain, nominal: Reduction, samples: Samples | None) ->
         )
         found.append(TunnelFigure(f"classical_{loading}", factor, "1", 0.0, meaning))
     if isinstance(boundary, ClosedWalls):
-        reference = nominal.reference
-        expected = nominal.values["profile_drag"] / (4 * reference.dynamic_pressure * boundary.flow_area)
         found.append(
             TunnelFigure(
                 "expected_wake_blockage",
-                expected,
+                _classical_blockage(chain, nominal, boundary),
                 "1",
                 math.nan,
-                "classical wake blockage C_D S/(4C) of the profile drag, as a share of the speed",
+                "classical wake blockage C_D S/(4C) of all profile drag in the wake, as a share of the speed",
                 reason="it is held beside the measured one only",
             )
         )
@@ -234,11 +252,17 @@ def _cut_note(survey: SurveyInput, chain: Chain) -> list[str]:
     return []
 
 
+def _classical_blockage(chain: Chain, nominal: Reduction, boundary: ClosedWalls) -> float:
+    """C_D S/(4C) of all drag in the surveyed wake, that of the support too: both slow the stream."""
+    drag = nominal.values["profile_drag"] + chain.settings.given.get("boundary.support_tare", 0.0)
+    return drag / (4 * nominal.reference.dynamic_pressure * boundary.flow_area)
+
+
 def _blockage_note(chain: Chain, nominal: Reduction) -> str:
     reference, boundary = nominal.reference, chain.settings.boundary
     assert isinstance(boundary, ClosedWalls)
     share = nominal.wake_blockage / reference.speed
-    expected = nominal.values["profile_drag"] / (4 * reference.dynamic_pressure * boundary.flow_area)
+    expected = _classical_blockage(chain, nominal, boundary)
     solid = chain.settings.given.get("boundary.solid_blockage")
     wake = (
         f"The wake adds {share:.3%} to the speed at the model (C_D S/4C of the profile drag: {expected:.3%}); that is"
