@@ -27,6 +27,7 @@ from wakeledger.run.assembly import (
     ledger_row,
     made_unknown,
     require_rows,
+    spread_notes,
 )
 from wakeledger.run.checks import Facts, all_checks
 from wakeledger.run.computed import diagnostics
@@ -215,6 +216,7 @@ def _ledger(
             predicted=found.predicted,
             linear=found.linear,
         )
+    estimates = _crosschecks(prepared, rows, samples, reason)
     return Ledger(
         title=file.title,
         compressible=nominal.reference.compressible,
@@ -223,13 +225,13 @@ def _ledger(
         plane=tables.plane_table(prepared.chain, nominal),
         raw=survey.as_read,
         survey_text=file.text,
-        estimates=_crosschecks(prepared, rows, samples, reason),
+        estimates=estimates,
         comparisons=comparisons(file, rows, _scales(prepared)),
         budget=budget_lines(budget, known),
         contributions=contributions(budget, known),
         propagation=came_about,
         checks=checks,
-        notes=(*prepared.notes, *propagation_notes(came_about)),
+        notes=(*prepared.notes, *spread_notes(estimates, rows), *propagation_notes(came_about)),
         test=file.test.given(),
         reference=tables.reference_scalars(nominal.reference),
         model={} if file.model is None else file.model.given(),
