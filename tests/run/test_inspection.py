@@ -7,7 +7,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from wakeledger.run import prepared, propagate
+from wakeledger.run import draws, prepared
 from wakeledger.run.inspection.advice import recommendations
 from wakeledger.run.survey import inspect, load, reduce
 
@@ -57,8 +57,8 @@ def test_inspecting_makes_no_noise_bias_and_no_frozen_geometry(kit, wing, tmp_pa
         (prepared, "crossflow_noises"),
         (prepared, "noise_bias"),
         (prepared, "_line"),
-        (propagate, "numerical_terms"),
-        (propagate, "run_montecarlo"),
+        (draws, "numerical_terms"),
+        (draws, "run_montecarlo"),
     ):
         monkeypatch.setattr(module, name, None)
     looked(kit, tmp_path, kit.table(wing, *kit.axes()))

@@ -17,6 +17,7 @@ from wakeledger.run.adjoint import input_gradients, point_gradient
 from wakeledger.run.chain import Chain
 from wakeledger.run.checks import all_checks
 from wakeledger.run.config import Survey
+from wakeledger.run.draws import terms_of
 from wakeledger.run.inputs import layouts, sources
 from wakeledger.run.numerics import LOSS_ZERO, MASK, OFFSET_ZERO, SWEEP
 from wakeledger.run.outputs import OUTPUTS
@@ -33,7 +34,6 @@ from wakeledger.run.planning.simulate import (
     simulated,
 )
 from wakeledger.run.prepared import Prepared, prepare
-from wakeledger.run.propagate import terms_of
 from wakeledger.run.reduction import Variation
 from wakeledger.run.survey import facts_of
 
