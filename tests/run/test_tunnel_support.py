@@ -154,3 +154,19 @@ def test_one_identity_for_two_errors_of_both_surveys_is_refused(kit, tunnel, tmp
     assert lines["lift", "yaw"] < 2e-3 * lift
     with pytest.raises(InputError, match="two different errors of"):
         run("other", [{**angles[0], "standard_uncertainty": "0.1 deg"}, angles[1]])
+
+
+@pytest.mark.parametrize(
+    ("more", "says"),
+    [
+        ({"model_centre": ["0 m", "2 m"]}, r"survey.toml, \[boundary\] model_centre: the model's centre"),
+        ({"y": ["-0.5 m", "1.04 m"]}, r"survey.toml, \[boundary\] y, z: the survey reaches"),
+        ({"y": ["-0.96 m", "1.04 m"], "reflection": "y"}, r"survey.toml, \[boundary\] section: .* not symmetric"),
+    ],
+)
+def test_what_is_wrong_with_the_section_names_the_survey_file(kit, tunnel, tmp_path, more, says):
+    y, z = tunnel.points(*WINDOW)
+    data = tunnel.columns(tunnel.wing(DUCT).state(y, z), y, z)
+    survey = load(kit.write(tmp_path, data, tunnel.description(kit, tunnel.table(DUCT) | more)))
+    with pytest.raises(InputError, match=says):
+        reduce(survey)

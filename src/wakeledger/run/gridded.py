@@ -98,7 +98,11 @@ def grid_survey(survey: SurveyInput, *, quick: bool = False) -> Gridded:
         raise SurveyError(
             "the shapes cover the whole window", file=file.path, place="[wake] exclude", remedy="leave some of it free"
         )
-    check_section(settings.boundary, gridding.grid)
+    try:
+        check_section(settings.boundary, gridding.grid)
+        check_model_place(settings)
+    except SurveyError as error:
+        raise error.located(file=file.path) from error
     if survey.empty_tunnel is not None:
         stream = empty_tunnel(
             survey.empty_tunnel, settings, cut=regrid.cut, names=(file.path.name, survey.empty_tunnel.survey.path.name)
@@ -209,7 +213,8 @@ def empty_tunnel(survey: SurveyInput, settings: Settings, *, cut: float, names: 
     if own.boundary != settings.boundary:
         raise SurveyError(
             f"[boundary] of {names[1]} is not that of {names[0]}",
-            place="[empty_tunnel] survey",
+            file=survey.survey.path,
+            place="[boundary]",
             remedy="describe the same test section and reflection plane in both",
         )
     if own.station != settings.station:
@@ -254,6 +259,26 @@ def check_section(boundary: Boundary, grid: UniformGrid) -> None:
         )
 
 
+def check_model_place(settings: Settings) -> None:
+    """Refuse a model that does not stand in the stream.
+
+    Raises
+    ------
+    SurveyError
+        If its centre lies outside the section, or below the ground.
+    """
+    boundary, place = settings.boundary, settings.model_place
+    if place is None or isinstance(boundary, FreeAir):
+        return
+    inside = bool(points_inside(boundary.section, np.array(place[0]), np.array(place[1])))
+    if not inside or (boundary.reflection == "z" and place[1] <= 0):
+        raise SurveyError(
+            f"the model's centre y = {place[0]:g} m, z = {place[1]:g} m does not lie in the stream",
+            place="[boundary] model_centre",
+            remedy="give it in the survey's own axes, as the walls",
+        )
+
+
 def usable_points(state: State) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
     """Points where everything that was measured is known and possible, shape (n,)."""
     usable = np.isfinite(state.u) & np.isfinite(state.v) & np.isfinite(state.w)
@@ -285,13 +310,21 @@ def settings_of(survey: SurveyInput, reference: Reference) -> Settings:
         include=tuple(file.wake.include),
         exclude=tuple(file.wake.exclude),
         crossflow=file.directed,
-        boundary=FreeAir() if boundary is None else boundary.surroundings(),
+        boundary=_surroundings(survey),
         given={name: each.value for name, each in survey.given.items()},
         model_place=None if boundary is None else boundary.model_centre,
         computed=survey.computed,
         zero_beyond=_zero_beyond(survey),
         core=survey.core,
     )
+
+
+def _surroundings(survey: SurveyInput) -> Boundary:
+    file = survey.survey
+    try:
+        return FreeAir() if file.boundary is None else file.boundary.surroundings()
+    except SurveyError as error:
+        raise error.located(file=file.path) from error
 
 
 def _zero_beyond(survey: SurveyInput) -> float:

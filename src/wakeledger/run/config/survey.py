@@ -238,6 +238,11 @@ class Survey(Table):
             "[empty_tunnel]",
             "the empty tunnel is not taken out of a line traverse; leave it out",
         )
+        add(
+            self.empty_tunnel and len(self.planes) > 1,
+            "[empty_tunnel]",
+            "the empty tunnel is surveyed at one station, and there are several planes; reduce each by itself",
+        )
         add(self.body, "[[body]]", "bodies are not told apart yet; leave it out")
         add(self.loading, "[loading]", "the least induced drag of a trailing edge is not computed yet; leave it out")
         for source in self.uncertainty.source:
