@@ -145,7 +145,7 @@ def loss_level(
     points = noise2 * white * inside / (inside + outside)
     if noise_known:
         # White noise alone fits with a little wander, too: it counts where blocks of the window show it.
-        points = 0.0
+        points = np.zeros_like(points)
         wander2 = np.where(_wanders(fields, outer, noise2), wander2, 0.0)
     level = factor * np.sqrt(wander2 * smooth[index] + points)
 
