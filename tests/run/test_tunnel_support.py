@@ -10,7 +10,7 @@ import pytest
 from numpy.testing import assert_allclose
 
 from wakeledger.core.errors import InputError
-from wakeledger.run.survey import load, reduce
+from wakeledger.run.survey import load, prepare, reduce
 from wakeledger.synthetic import EmptyTunnel, GaussianElements, GaussianLosses, RectangularDuct, TunnelWake
 
 DUCT = RectangularDuct((-0.96, 1.04), (-0.6, 0.68))
@@ -170,3 +170,25 @@ def test_what_is_wrong_with_the_section_names_the_survey_file(kit, tunnel, tmp_p
     survey = load(kit.write(tmp_path, data, tunnel.description(kit, tunnel.table(DUCT) | more)))
     with pytest.raises(InputError, match=says):
         reduce(survey)
+
+
+def test_noise_of_both_surveys_is_two_noises_whatever_its_identity(kit, tunnel, tmp_path):
+    flow = tunnel.wing(DUCT, empty=EmptyTunnel(upflow=0.2))
+    y, z = tunnel.points(*WINDOW)
+    bias = []
+    for more in ({}, {"shared_id": "probe-1"}):
+        noise = {
+            "name": "crossflow noise",
+            "applies_to": ["plane.v", "plane.w"],
+            "effect": "random",
+            "standard_uncertainty": "0.5 m/s",
+        }
+        content = tunnel.description(kit, tunnel.table(DUCT), uncertainty=UNCERTAINTY | {"source": [noise | more]})
+        folder = tmp_path / str(len(more))
+        kit.write(folder / "empty", tunnel.columns(flow.empty_state(y, z), y, z, noise=0.5, seed=2), content)
+        content = content | {"empty_tunnel": {"survey": "empty/survey.toml"}}
+        data = tunnel.columns(flow.state(y, z), y, z, noise=0.5, seed=3)
+        bias.append(prepare(load(kit.write(folder, data, content))).chain.frozen.bias["induced_drag"])
+    assert bias[0] > 0
+    # Half of it is the empty tunnel's. Its fields are drawn.
+    assert_allclose(bias[1], bias[0], rtol=0.05)

@@ -97,7 +97,12 @@ def tunnel_sources(
 
 
 def _twin(found: Sequence[Source], source: Source) -> int | None:
-    """Which of a survey's own sources is one and the same error of one input as a source of the empty tunnel's."""
+    """Which of a survey's own sources is one and the same error of one input as a source of the empty tunnel's.
+
+    What errs at each point or row on its own does so anew in the other survey, whatever its `shared_id`.
+    """
+    if source.effect != "systematic":
+        return None
     same = ("effect", "standard_uncertainty", "relative", "distribution", "degrees_of_freedom", "shared_id")
     for k, one in enumerate(found):
         if one.shared_id is None or not set(one.applies_to) & set(source.applies_to):
