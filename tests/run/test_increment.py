@@ -14,6 +14,7 @@ from wakeledger.core.errors import DataError, InputError
 from wakeledger.ledger.archive import open_archive, write_archive
 from wakeledger.ledger.increment import increment_json
 from wakeledger.ledger.tabular import json_text, ledger_json
+from wakeledger.run.increment import declared_surveys, unlike
 from wakeledger.run.survey import load, reduce
 
 RIG = {"v": 0.05, "total_pressure": 0.8}
@@ -63,6 +64,19 @@ def cli(capfd):
         return status, out, err
 
     return call
+
+
+def test_every_plane_of_a_survey_counts_in_what_is_unlike(room):
+    a = open_archive(room / "a.nc")
+    one = declared_surveys(a)[0]
+    far = one.plane.model_copy(update={"station": one.plane.station + 1, "file": "far.csv"})
+    two = one.model_copy(update={"planes": (one.plane, far)})
+    listed = f"{one.plane.station:g} m, {far.station:g} m"
+    assert any(listed in sentence for sentence in unlike(a, a, (one,), (two,)))
+    # The second plane's data alone are the same.
+    shared = "c" * 64
+    others = [dataclasses.replace(a, inputs={"survey.toml": name, "far.csv": shared}) for name in "pq"]
+    assert any("same data" in sentence for sentence in unlike(*others, (two,), (two,)))
 
 
 def test_contributions_add_up_to_each_row(room):

@@ -11,6 +11,7 @@ import pytest
 
 import wakeledger as wl
 from wakeledger.core.errors import InputError, SurveyError
+from wakeledger.ledger.archive import write_archive
 from wakeledger.ledger.plan import PLAN_FORMAT
 from wakeledger.run.config.plan_file import parse_plan, read_plan
 from wakeledger.run.outputs import coefficient_of
@@ -344,6 +345,20 @@ def test_targets_that_are_none_are_refused(text):
         read_target("2 counts", "lift", {coefficient_of("lift"): 0.5})
     with pytest.raises(SurveyError, match="'lift'"):
         read_target("2 counts", "lfit", {})
+
+
+def test_a_target_without_a_unit_that_is_more_than_the_drag_is_refused():
+    # A plain 2 is a coefficient of 2, 20000 counts: every survey would reach it.
+    with pytest.raises(SurveyError, match="20000 counts, more than the total drag itself"):
+        read_target("2", "total_drag", {coefficient_of("total_drag"): 0.025}, place="--target")
+
+
+def test_the_ledger_of_a_line_traverse_is_refused(tmp_path):
+    sample = ROOT / "sample_surveys" / "wing_section" / "survey.toml"
+    path = tmp_path / "ledger.nc"
+    write_archive(wl.reduce(wl.read_survey(sample), draws=50), path)
+    with pytest.raises(InputError, match="line traverse"):
+        wl.plan(path, target="2 counts")
 
 
 def test_a_target_is_needed(folder):

@@ -400,7 +400,7 @@ def unlike(
         ("boundary", lambda survey: None if survey.boundary is None else survey.boundary.kind),
         ("reflection", lambda survey: None if survey.boundary is None else survey.boundary.reflection),
         ("primary measurement", lambda survey: survey.plane.primary),
-        ("station", lambda survey: None if math.isnan(survey.plane.station) else f"{survey.plane.station:g} m"),
+        ("station", _stations),
     ):
         texts = [
             " or ".join(sorted({str(read(survey) or "none") for survey in surveys}))
@@ -427,8 +427,14 @@ def unlike(
 
 def _data(ledger: Ledger, surveys: Iterable[Survey]) -> set[str]:
     """Digests of the data files; a combined ledger's names have the run before them."""
-    names = {str(survey.plane.file) for survey in surveys}
+    names = {name for survey in surveys for plane in survey.planes for name in plane.files}
     return {digest for name, digest in ledger.inputs.items() if name.rpartition(": ")[2] in names}
+
+
+def _stations(survey: Survey) -> str | None:
+    """Where the planes of a survey stand; None where it does not say."""
+    known = [f"{plane.station:g} m" for plane in survey.planes if not math.isnan(plane.station)]
+    return ", ".join(known) or None
 
 
 def _scalar_text(name: str, value: float) -> str:

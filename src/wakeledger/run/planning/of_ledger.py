@@ -67,6 +67,12 @@ def request_of_ledger(path: Path) -> PlanRequest:
     ledger = open_archive(path)
     text = str(ledger.survey_text)
     survey = parse_survey(text, path)
+    if survey.section is not None:
+        raise SurveyError(
+            "it is the ledger of a line traverse",
+            file=path,
+            remedy="plan from the ledger of an area survey, or a loading",
+        )
     digest = hashlib.sha256(path.read_bytes()).hexdigest()
     note = (
         f"The ranges are those of {path.name}: its spacing times 1, 2 and 3, its noise and accuracies times ½, 1 and 2"

@@ -89,6 +89,13 @@ def read_target(text: str | None, row: str, values: Mapping[str, float], *, plac
         limit, output = abs(float(number) / 100 * values[coefficient]) * shown[1], coefficient
     elif not unit:
         limit, output = float(number) * shown[1], coefficient
+        if in_counts and limit > abs(values[coefficient]) * shown[1]:
+            # A coefficient of a drag is a small number: what is larger than the drag itself was meant in another unit.
+            raise SurveyError(
+                f"{text!r} without a unit is a coefficient, {limit:g} counts, more than the {row.replace('_', ' ')} itself",
+                place=place,
+                remedy=_EXAMPLES,
+            )
     else:
         wanted = NAMED_ROWS[row].unit
         try:
