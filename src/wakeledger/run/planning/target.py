@@ -92,7 +92,8 @@ def read_target(text: str | None, row: str, values: Mapping[str, float], *, plac
         if in_counts and limit > abs(values[coefficient]) * shown[1]:
             # A coefficient of a drag is a small number: what is larger than the drag itself was meant in another unit.
             raise SurveyError(
-                f"{text!r} without a unit is a coefficient, {limit:g} counts, more than the {row.replace('_', ' ')} itself",
+                f"{text!r} without a unit is a coefficient, {limit:g} counts, more than the {row.replace('_', ' ')}"
+                " itself",
                 place=place,
                 remedy=_EXAMPLES,
             )
