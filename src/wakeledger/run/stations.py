@@ -82,10 +82,13 @@ def reduce_stations(survey: SurveyInput, reduce_one: Callable[[SurveyInput], Led
     require_rows(file, names)
     known = [name for name in names if all(math.isfinite(one.row(name).standard_uncertainty) for one in ledgers)]
     values = np.array([[one.row(name).value for name in names] for one in ledgers])
-    own = {one.name for one in file.uncertainty.source if one.effect != "systematic" and one.shared_id is None}
+    own = {one.name for one in file.uncertainty.source if one.effect != "systematic"}
     parts = [_split(contributions_of(one, known), number, own) for number, one in enumerate(ledgers)]
     joint = _joint_covariance(parts, known, names)
-    weights, combined_values, fit = _combine(ledgers, stations, names, values, joint, file.reference.resolve())
+    grounded = file.boundary is not None and file.boundary.reflection == "z"
+    weights, combined_values, fit = _combine(
+        ledgers, stations, names, values, joint, file.reference.resolve(), above_ground=grounded
+    )
     of_known = np.array([names.index(name) for name in known], dtype=int)
     whole = _contributions(parts, known, weights[of_known][:, :, of_known], fit, combined_values[of_known])
     rows = _rows(ledgers, names, known, weights, combined_values, whole)
@@ -155,7 +158,9 @@ def _split(part: Contributions, number: int, own: Collection[str]) -> Contributi
         # A row without a coefficient has no effect on one.
         one = replace(one, linear=np.nan_to_num(one.linear), curved=np.nan_to_num(one.curved))
         if one.kind != NUMERICAL:
-            found.append(replace(one, input=f"{one.input} of plane {number + 1}") if one.source in own else one)
+            # An error with an identity that is followed is the same one everywhere.
+            apart = one.source in own and one.shared_id is None
+            found.append(replace(one, input=f"{one.input} of plane {number + 1}") if apart else one)
             continue
         found.append(one.times(math.sqrt(_ALIKE)))
         found.append(replace(one.times(math.sqrt(1 - _ALIKE)), number=number + 1))
@@ -199,6 +204,8 @@ def _combine(
     values: Array,
     joint: Array,
     reference: Reference,
+    *,
+    above_ground: bool,
 ) -> tuple[Array, Array, _Fit]:
     """Weights of every row of every plane in each combined row, (m, k, m), and the combined values, (m,)."""
     count, m = values.shape
@@ -222,7 +229,8 @@ def _combine(
     if all(name in names for name in ("induced_drag", "total_drag")):
         i, t = names.index("induced_drag"), names.index("total_drag")
         both = joint[:, [i, t]][:, :, :, [i, t]]
-        fit = replace(_fitted(ledgers, stations, values[:, i], values[:, t], both, reference), scatter=scatter)
+        fit = _fitted(ledgers, stations, values[:, i], values[:, t], both, reference, above_ground=above_ground)
+        fit = replace(fit, scatter=scatter)
         if fit.result is not None:
             _follow(fit.result, names, values, weights, combined, joint)
     return weights, combined, fit
@@ -235,6 +243,8 @@ def _fitted(
     total: Array,
     covariance: Array,
     reference: Reference,
+    *,
+    above_ground: bool,
 ) -> _Fit:
     count = len(stations)
     if not np.isfinite(covariance).all():
@@ -248,7 +258,7 @@ def _fitted(
         turn[count + k, k] = (-1.0, 1.0)
     flat = turn.reshape(2 * count, 2 * count)
     both = flat @ covariance.reshape(2 * count, 2 * count) @ flat.T
-    circulation, core = _vortices(ledgers[int(np.argmin(stations))])
+    circulation, core = _vortices(ledgers[int(np.argmin(stations))], above_ground=above_ground)
     if circulation.size == 0:
         return _Fit(None, {}, "no vortex was found whose decay could be followed: means are given")
     result = station_fit(
@@ -257,13 +267,15 @@ def _fitted(
     return _Fit(result, {}, result.reason)
 
 
-def _vortices(ledger: Ledger) -> tuple[Array, Array]:
-    """Circulation and core length of the vortices that count on one plane."""
+def _vortices(ledger: Ledger, *, above_ground: bool) -> tuple[Array, Array]:
+    """Circulation and core length of the vortices that count on one plane; below ground there are images only."""
     table = ledger.vortices
     if table is None:
         return np.zeros(0), np.zeros(0)
     circulation, core = table["circulation"].values, table["core_length"].values
     counts = (np.abs(circulation) >= _FAINT * np.abs(circulation).max()) & (core > 0)
+    if above_ground:
+        counts &= table["z"].values > 0
     return circulation[counts], core[counts]
 
 
