@@ -309,7 +309,7 @@ class Chain:
         values = dict.fromkeys(OUTPUTS, np.nan)
         wave, split_uncertainty = 0.0, 0.0
         if self.frozen.shock_level is not None:
-            split = wave_split(flow, reference, level=self.frozen.shock_level, energised=energised)
+            split = wave_split(flow, reference, level=self.frozen.shock_level, within=mask, energised=energised)
             wave, split_uncertainty = (settings.counted * one for one in (split.wave_drag, split.split_uncertainty))
             profile -= wave
             values["wave_drag"] = wave

@@ -122,6 +122,7 @@ def wave_split(
     viscous: Mask | None = None,
     shock: Mask | None = None,
     energised: Mask | None = None,
+    within: Mask | None = None,
 ) -> WaveSplit:
     """Split the irreversible drag of one plane into viscous and wave drag.
 
@@ -142,6 +143,9 @@ def wave_split(
         Where a shock's loss can be at all; everywhere unless given.
     energised : ndarray of bool, shape (nz, ny), optional
         Slipstreams and heated flow, kept apart (`wakeledger.physics.fields.loss_regions.energised_region`).
+    within : ndarray of bool, shape (nz, ny), optional
+        Where drag is counted as viscous or wave drag, such as the wake region that a profile drag is of; everywhere
+        unless given. The regions are found, and the base is fitted, wherever they lie.
 
     Returns
     -------
@@ -175,6 +179,7 @@ def wave_split(
     irreversible = flux * found.defect
     slip = np.zeros(grid.shape, bool) if energised is None else energised
     allowed = ~slip if shock is None else shock & ~slip
+    counted = np.ones(grid.shape, bool) if within is None else within
 
     def viscous_with(factor: float, *, to_base: bool = True) -> Mask:
         if viscous is not None:
@@ -192,7 +197,7 @@ def wave_split(
             total_pressure=reference.total_pressure * np.exp(-base / reference.static_pressure),
             total_temperature=np.full(grid.shape, reference.total_temperature),
         )
-        return float(grid.integrate(flux * velocity_defect(shocked, reference).defect))
+        return float(grid.integrate(np.where(counted, flux * velocity_defect(shocked, reference).defect, 0.0)))
 
     drags, bases, scatters, borders = [], [], [], []
     for factor in REACHES:
@@ -207,7 +212,7 @@ def wave_split(
     inner, wave = borders[1]
     base_loss = np.median(bases, axis=0)
     value = float(np.median(drags))
-    both = inner | wave
+    both = (inner | wave) & counted
     low, high = np.quantile(drags, _CENTRAL)
     # The border where the loss fades out: what lies between once and twice the level, all of it or nothing.
     fading = drag_of(np.where(wave & ~_wave_region(loss, inner, allowed, 2 * level)[1], loss, 0.0)) / np.sqrt(12)
