@@ -1,5 +1,6 @@
 """A support in the surveyed wake, ground planes cut short, and what an empty tunnel must declare."""
 
+import re
 import runpy
 from dataclasses import replace
 from pathlib import Path
@@ -192,3 +193,18 @@ def test_noise_of_both_surveys_is_two_noises_whatever_its_identity(kit, tunnel, 
     assert bias[0] > 0
     # Half of it is the empty tunnel's. Its fields are drawn.
     assert_allclose(bias[1], bias[0], rtol=0.05)
+
+
+def test_a_net_source_between_walls_is_told(kit, tunnel, tmp_path):
+    y, z = tunnel.points(*WINDOW)
+    data = tunnel.columns(tunnel.wing(DUCT).state(y, z), y, z)
+    # A Gaussian source of 0.3 m²/s in the middle of the wake.
+    along, up = y - 0.04, z - 0.04
+    square = along**2 + up**2
+    radial = 0.3 / (2 * np.pi) * -np.expm1(-square / 0.08**2) / np.maximum(square, 1e-12)
+    data["v"], data["w"] = data["v"] + radial * along, data["w"] + radial * up
+    survey = load(kit.write(tmp_path, data, tunnel.description(kit, tunnel.table(DUCT))))
+    said = " ".join(reduce(survey).notes)
+    found = re.search(r"net source in the wake region, ([+-][\d.]+) m2/s", said)
+    assert found is not None
+    assert_allclose(float(found[1]), 0.3, rtol=0.05)

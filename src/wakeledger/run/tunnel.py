@@ -13,6 +13,8 @@ from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.core.errors import SurveyError
 from wakeledger.ledger.rows import TunnelFigure
 from wakeledger.physics.fields.boundary import ClosedWalls, FreeAir
+from wakeledger.physics.fields.differences import crossflow_divergence
+from wakeledger.physics.fields.solvability import solvability
 from wakeledger.physics.loading.boundary_factor import classical_boundary_factor
 from wakeledger.run.chain import Chain
 from wakeledger.run.empty_tunnel import PREFIX
@@ -232,6 +234,8 @@ def tunnel_notes(survey: SurveyInput, chain: Chain, nominal: Reduction) -> list[
         found.append(f"In free air the model would have this lift at an incidence {degrees:+.3f} deg higher.")
     if isinstance(boundary, ClosedWalls):
         found.append(_blockage_note(chain, nominal))
+        if settings.crossflow:
+            found.append(_source_note(chain, nominal))
     found += _stream_notes(chain, nominal)
     tare = settings.given.get("boundary.support_tare")
     if tare:
@@ -276,6 +280,22 @@ def _blockage_note(chain: Chain, nominal: Reduction) -> str:
     if solid is None:
         return wake + " and in the corrected coefficients; the model's own volume is not: give solid_blockage."
     return wake + f", and with the given solid blockage of {solid:.3%} in the corrected coefficients."
+
+
+def _source_note(chain: Chain, nominal: Reduction) -> str:
+    """What had to be taken out of the divergence so that nothing goes through the walls."""
+    flow, mask = nominal.flow, nominal.region.mask
+    near = chain.frozen.near_field
+    v, w = (flow.v, flow.w) if near is None else (flow.v - near.v, flow.w - near.w)
+    divergence = np.where(mask, crossflow_divergence(v, w, flow.grid), 0.0)
+    whole = solvability(divergence, flow.grid, chain.settings.boundary.whole, of="divergence")
+    net = chain.settings.counted * float(whole.net)
+    gross = float(nominal.forces.gross_circulation)
+    share = f" ({abs(net) / gross:.1%} of the wake's circulation)" if gross > 0 else ""
+    return (
+        f"The crossflow's net source in the wake region, {net:+.3g} m2/s{share}, was taken out ahead of the residual"
+        " drag: closed walls let nothing through."
+    )
 
 
 def _stream_notes(chain: Chain, nominal: Reduction) -> list[str]:
