@@ -22,13 +22,14 @@ from wakeledger.ledger.crosscheck import COVERAGE_FACTOR
 from wakeledger.ledger.encoding import group_names
 from wakeledger.ledger.rows import CHECK_VERDICTS, VERDICTS
 from wakeledger.run import checks, numerics, outputs, reduction, tables
-from wakeledger.run.config import plan
+from wakeledger.run.computed import MESH
+from wakeledger.run.config import plan, stream, uncertainty
 from wakeledger.run.config import plane as plane_tables
-from wakeledger.run.config import stream, uncertainty
 from wakeledger.run.config import tables as small_tables
 from wakeledger.run.config.survey import Survey, parse_survey
 from wakeledger.run.load import refuse_unsupported
 from wakeledger.run.section import terms as section_terms
+from wakeledger.run.stations import TREND
 
 ROOT = Path(__file__).resolve().parents[1]
 DOCS = ROOT / "docs"
@@ -199,7 +200,8 @@ def test_numerical_terms_of_the_budget_are_documented(sample):
     listed = part("uncertainty.md", "Numerical terms")
     names = [line.split("|")[1].strip() for line in listed.splitlines() if line.startswith("| ")][1:]
     constants = ("MASK", "RESOLUTION", "RESAMPLING", "GAPS", "PAIR", "PRESSURE", "LOSS_ZERO", "OFFSET_ZERO")
-    known = [getattr(numerics, name) for name in constants]
+    constants = (*constants, "SWIRL", "EDGE", "CUT", "SPLIT")
+    known = [*(getattr(numerics, name) for name in constants), MESH, TREND]
     lines = [getattr(section_terms, name) for name in ("WINDOW", "RESOLUTION", "GAPS", "LEVEL")]
     assert names == [*known, "choices inside *estimate*", "Term of a line traverse", *lines]
     assert numerics.METHOD == "choices inside {}"

@@ -14,7 +14,7 @@ import numpy as np
 from wakeledger.confidence.components import MEASURED, NUMERICAL
 from wakeledger.core.errors import DataError, InputError, SurveyError
 from wakeledger.ledger.archive import open_archive
-from wakeledger.ledger.cancellation import Difference, opaque, subtract
+from wakeledger.ledger.cancellation import SCATTER, Difference, opaque, subtract
 from wakeledger.ledger.contributions import Contributions
 from wakeledger.ledger.increment import (
     Cancellation,
@@ -345,7 +345,8 @@ def _budget_names(ledger: Ledger, kind: str) -> tuple[str, ...]:
     terms = set()
     if ledger.contributions is not None:
         terms = {one.source for one in ledger.contributions.components if one.kind == NUMERICAL}
-    names = dict.fromkeys(line.source for line in ledger.budget if line.source != "remainder")
+    # What is left of all sources together is none of its own.
+    names = dict.fromkeys(line.source for line in ledger.budget if line.source not in ("remainder", SCATTER))
     return tuple(name for name in names if (name in terms) == (kind == NUMERICAL))
 
 
