@@ -100,8 +100,14 @@ def numerical_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
             for k, row in enumerate(JUDGED):
                 inside = np.abs(error[:, k]) <= half[:, k]
                 typical, told = (np.sqrt(np.mean(np.square(one[:, k]))) for one in (error, half))
-                lines.append([term, row, str(len(found)), _share(inside), f"{typical:.5f} N", f"{told:.5f} N"])
-    heads = "term, row, surveys, true effect inside U95 of the term, rms of the true effect, rms of the term's U95"
+                scatter = column(found, "error")[:, k].std(ddof=1)
+                largest = 100 * np.abs(error[:, k]).max() / scatter
+                cells = [_share(inside), f"{typical:.5f} N", f"{told:.5f} N", f"{largest:.1f} %"]
+                lines.append([term, row, str(len(found)), *cells])
+    heads = (
+        "term, row, surveys, true effect inside U95 of the term, rms of the true effect, rms of the term's U95, "
+        "largest true effect / scatter of the errors"
+    )
     return _table(heads.split(", "), lines)
 
 

@@ -125,6 +125,21 @@ def test_spacing_is_covered_by_its_own_term(coverage, column):
     assert (error > 0).all()
 
 
+@pytest.mark.parametrize("case", ["random", "half_model"])
+def test_what_is_left_out_of_the_study_changes_nothing(coverage, case):
+    given = coverage.survey(coverage.CASES[case], np.random.default_rng(8)).given
+    whole, short = coverage.prepare(given), coverage.made_ready(given)
+    for row in coverage.JUDGED:
+        assert short.nominal.values[row] == whole.nominal.values[row]
+    kept = {name: whole.chain.frozen.bias[name] for name in short.chain.frozen.bias}
+    assert short.chain.frozen.bias == kept
+    assert short.chain.frozen.bias["induced_drag"] > 0
+    np.testing.assert_array_equal(
+        coverage.closed_form(short, {}).total[np.ix_(coverage.AT, coverage.AT)],
+        coverage.closed_form(whole, {}).total[np.ix_(coverage.AT, coverage.AT)],
+    )
+
+
 def test_results_are_continued(coverage, tmp_path):
     one = coverage.judge("half", 3, 5)
     assert coverage.judge("half", 3, 5) == one
