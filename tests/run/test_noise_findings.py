@@ -6,11 +6,15 @@ neighbours by 0.14 and mostly goes unseen.
 """
 
 import math
+import runpy
+from pathlib import Path
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
 
 from wakeledger.confidence.correlation import correlated_field
+from wakeledger.confidence.noise import estimate_noise
 from wakeledger.run.noise_findings import shown_noise
 from wakeledger.run.survey import load, prepare
 
@@ -116,3 +120,24 @@ def test_scattered_points_are_asked_too(kit, survey):
     assert [one.name for one in bare.noises] == ["noise in the data"]
     expected = right.chain.frozen.bias["induced_drag"]
     assert bare.chain.frozen.bias["induced_drag"] == pytest.approx(expected, rel=0.3)
+
+
+def test_the_mirrored_half_is_no_evidence(kit, tmp_path):
+    # Points half a spacing off the plane: the two lines beside it share their noise, because they are one line.
+    tunnel = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("tunnel_kit.py"))))
+    flow = tunnel.wing(None, "y")
+    y, z = tunnel.points((0.02, 0.98), (-0.6, 0.68))
+    alarms = 0
+    for seed in range(SEEDS):
+        data = tunnel.columns(flow.state(y, z), y, z, noise=0.12, seed=seed)
+        content = tunnel.description(kit, {"kind": "free_air", "reflection": "y"})
+        names = ["plane.u", "plane.v", "plane.w"]
+        content["uncertainty.source"] = [kit.source("noise", names, "0.12 m/s", "random")]
+        prepared = prepare(load(kit.write(tmp_path / str(seed), data, content)))
+        shown = shown_noise(prepared.chain, prepared.nominal)["w"]
+        assert shown.deviation == pytest.approx(0.12, rel=0.3)
+        grid = prepared.nominal.flow.grid
+        half, wake = (field[:, grid.y > 0] for field in (prepared.nominal.flow.w, prepared.nominal.region.mask))
+        assert shown.size == pytest.approx(estimate_noise(half, mask=wake).effective_size)
+        alarms += any(reported(prepared))
+    assert alarms == 0
