@@ -6,7 +6,7 @@ spacing of the points, the spline between them, the filling of gaps, the zeros t
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -105,7 +105,7 @@ def numerical_terms(
     ]
     if np.isfinite(outer.swirl_uncertainty):
         terms.append(NumericalTerm(SWIRL, _deviation(chain, nominal, Variation(swirl_shift=outer.swirl_uncertainty))))
-    terms.append(_edge_term(chain, nominal))
+    terms.append(_edge_term(chain, nominal, noise))
     if regrid.cut:
         terms.append(_cut_term(chain, nominal, regrid))
     known = [one for one in both if one is not None]
@@ -143,27 +143,46 @@ def _mask_term(chain: Chain, nominal: Reduction, noise: Sequence[Mapping[str, Ar
         )
         return np.nan_to_num(np.stack([smaller - same, larger - same]))
 
-    found = sweep({})
-    if noise:
-        by_noise = np.mean([np.square(sweep(errors) - found) for errors in noise], axis=0)
-        found = np.sign(found) * np.sqrt(np.maximum(np.square(found) - by_noise, 0.0))
+    found = _beyond_noise(sweep, noise)
     # One latent choice of the edge moves all outputs together, each in the direction in which it grows.
     size = np.abs(found).max(axis=0)
     vector = np.where(found[1] - found[0] < 0, -size, size) / np.sqrt(3)
+    return NumericalTerm(MASK, _followed(vector), "rectangular")
+
+
+def _beyond_noise(change: Callable[[Mapping[str, Array]], Array], noise: Sequence[Mapping[str, Array]]) -> Array:
+    """What a choice changes, less what the points' noise makes of it: that is a source of its own."""
+    found = change({})
+    if not noise:
+        return found
+    by_noise = np.mean([np.square(change(errors) - found) for errors in noise], axis=0)
+    less: Array = np.sign(found) * np.sqrt(np.maximum(np.square(found) - by_noise, 0.0))
+    return less
+
+
+def _followed(vector: Array) -> Array:
+    """Changes in which estimates over the same region as a row have those of the row."""
     for follower, leader in _SAME_REGION.items():
         vector[OUTPUTS.index(follower)] = vector[OUTPUTS.index(leader)]
-    return NumericalTerm(MASK, vector, "rectangular")
+    return vector
 
 
-def _edge_term(chain: Chain, nominal: Reduction) -> NumericalTerm | None:
+def _edge_term(chain: Chain, nominal: Reduction, noise: Sequence[Mapping[str, Array]]) -> NumericalTerm | None:
     """What lies along the window's edge: as much may lie beyond it. None where the wake keeps clear of the edge."""
     strip = np.ones(nominal.flow.grid.shape, dtype=bool)
     strip[EDGE_CELLS:-EDGE_CELLS, EDGE_CELLS:-EDGE_CELLS] = False
     mask = nominal.region.mask
     if not (mask & strip).any():
         return None
-    without = chain.reduce(vary=Variation(mask=mask & ~strip), estimates=False).vector
-    return NumericalTerm(EDGE, _difference(without, nominal), "rectangular")
+
+    def change(errors: Mapping[str, Array]) -> Array:
+        without, same = (
+            chain.reduce(errors, vary=Variation(mask=region), estimates=False).vector
+            for region in (mask & ~strip, mask)
+        )
+        return np.nan_to_num(without - same)
+
+    return NumericalTerm(EDGE, _followed(_beyond_noise(change, noise)), "rectangular")
 
 
 def _resolution_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
