@@ -391,6 +391,7 @@ def judge(name: str, seed: int, k: int, *, draws: int = 0, numerical: bool = Fal
     budget = closed_form(prepared, second_order(name))
     u = budget.standard_uncertainty
     if not case.random:
+        found["linear_u"] = u[AT].tolist()
         first = np.diagonal(budget.covariance, axis1=1, axis2=2).sum(axis=0)
         u = np.sqrt(first + curvature(prepared))
     found |= {"u": u[AT].tolist(), "half_width": (budget.coverage_factor() * u)[AT].tolist()}

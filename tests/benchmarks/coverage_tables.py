@@ -30,25 +30,33 @@ def coverage_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
         if case not in COVERED:
             continue
         error, u, half = (column(found, name) for name in ("error", "u", "half_width"))
-        inside = np.abs(error) <= half
         wide = [one for one in found if "half_width_all" in one]
         wider = np.abs(column(wide, "error")) <= column(wide, "half_width_all")
-        for k, row in enumerate(JUDGED):
-            sd, mean_u = error[:, k].std(ddof=1), math.sqrt(float((u[:, k] ** 2).mean()))
-            lines.append(
-                [
-                    case,
-                    row,
-                    str(len(found)),
-                    _share(inside[:, k]),
-                    f"{100 * wider[:, k].mean():.1f} %",
-                    f"{sd:.4f} N",
-                    f"{mean_u / sd:.3f} ± {1 / math.sqrt(2 * len(found)):.3f}",
-                    f"{error[:, k].mean():+.4f} ± {sd / math.sqrt(len(found)):.4f} N",
-                ]
-            )
+        lines += _lines(case, error, u, half, wider)
+        linear = column(found, "linear_u")
+        if linear.size:
+            lines += _lines(f"{case}, linear", error, linear, 1.96 * linear, None)
     heads = "case, row, surveys, truth inside U95, with numerical terms, scatter of the errors, u / scatter, mean error"
     return _table(heads.split(", "), lines)
+
+
+def _lines(case: str, error: np.ndarray, u: np.ndarray, half: np.ndarray, wider: np.ndarray | None) -> list[list[str]]:
+    count = len(error)
+    inside, sd = np.abs(error) <= half, error.std(axis=0, ddof=1)
+    ratio = np.sqrt(np.mean(np.square(u), axis=0)) / sd
+    return [
+        [
+            case,
+            row,
+            str(count),
+            _share(inside[:, k]),
+            "" if wider is None else f"{100 * wider[:, k].mean():.1f} %",
+            f"{sd[k]:.4f} N",
+            f"{ratio[k]:.3f} ± {1 / math.sqrt(2 * count):.3f}",
+            f"{error[:, k].mean():+.4f} ± {sd[k] / math.sqrt(count):.4f} N",
+        ]
+        for k, row in enumerate(JUDGED)
+    ]
 
 
 def closed_form_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
