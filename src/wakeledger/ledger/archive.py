@@ -310,14 +310,16 @@ def _rows(root: xr.Dataset) -> tuple[Row, ...]:
     rows = []
     names = [field.name for field in dataclasses.fields(Row) if field.name not in ("name", "unit", "reason")]
     for index, name in enumerate(root["row"].values):
-        numbers = {key: float(root[key].values[index]) for key in names}
-        corrected = numbers.pop("coefficient_corrected")
+        # An archive of an earlier version lacks what came later.
+        numbers = {key: float(root[key].values[index]) if key in root else np.nan for key in names}
+        corrected, u_corrected = (numbers.pop(f"coefficient_corrected{key}") for key in ("", "_standard_uncertainty"))
         rows.append(
             Row(
                 name=str(name),
                 unit=str(root["unit"].values[index]),
                 reason=str(root["reason"].values[index]) or None,
                 coefficient_corrected=None if np.isnan(corrected) else corrected,
+                coefficient_corrected_standard_uncertainty=None if np.isnan(u_corrected) else u_corrected,
                 **numbers,
             )
         )

@@ -72,6 +72,8 @@ class Row:
         a row that has no coefficient.
     coefficient_corrected : float or None
         The coefficient on the blockage-corrected dynamic pressure, between walls only.
+    coefficient_corrected_standard_uncertainty : float or None
+        Its uncertainty (k = 1), that of the blockage included; None where it is unknown or there is no such figure.
     reason : str or None
         Why the value or its uncertainty is unknown.
     """
@@ -87,6 +89,7 @@ class Row:
     coefficient_standard_uncertainty: float = math.nan
     coefficient_corrected: float | None = None
     reason: str | None = None
+    coefficient_corrected_standard_uncertainty: float | None = None
 
     def __post_init__(self) -> None:
         _known_row(self.name)

@@ -27,6 +27,9 @@ if TYPE_CHECKING:
 #: Version of the document `ledger_json` makes.
 JSON_FORMAT = 1
 
+#: Fields of a row that only blockage gives.
+_CORRECTED = ("coefficient_corrected", "coefficient_corrected_standard_uncertainty")
+
 #: JSON has no infinity: from here on a Student distribution is the normal one to 7 digits.
 MANY_DEGREES_OF_FREEDOM = 1_000_000.0
 
@@ -95,8 +98,9 @@ def _row_entry(row: Row) -> dict[str, Any]:
     entry = asdict(row)
     if math.isinf(row.degrees_of_freedom):
         entry["degrees_of_freedom"] = MANY_DEGREES_OF_FREEDOM
-    if row.coefficient_corrected is None:
-        del entry["coefficient_corrected"]
+    for name in _CORRECTED:
+        if entry[name] is None:
+            del entry[name]
     return entry
 
 
@@ -172,7 +176,7 @@ def rows_frame(ledger: Ledger) -> pd.DataFrame:
     -------
     DataFrame
         Indexed by the row's name; the fields of `Row` in their order, with ``counts`` and
-        ``counts_expanded_uncertainty`` after the coefficient's, without ``coefficient_corrected`` where no row has it.
+        ``counts_expanded_uncertainty`` after the coefficient's, without the corrected coefficient where no row has it.
     """
     import pandas as pd
 
@@ -183,9 +187,7 @@ def rows_frame(ledger: Ledger) -> pd.DataFrame:
     frame.insert(position, "counts", counts)
     expanded = [row.coefficient_expanded_uncertainty / COUNT for row in ledger.rows]
     frame.insert(position + 1, "counts_expanded_uncertainty", expanded)
-    if all(row.coefficient_corrected is None for row in ledger.rows):
-        frame = frame.drop(columns="coefficient_corrected")
-    return frame
+    return frame.drop(columns=[name for name in _CORRECTED if all(getattr(row, name) is None for row in ledger.rows)])
 
 
 def rows_dataset(ledger: Ledger) -> xr.Dataset:
@@ -201,8 +203,8 @@ def rows_dataset(ledger: Ledger) -> xr.Dataset:
     Dataset
         Dimensions row and row_b; ``value``, ``unit``, ``standard_uncertainty``, ``expanded_uncertainty``,
         ``coverage_factor``, ``degrees_of_freedom``, ``coefficient``, ``coefficient_standard_uncertainty``,
-        ``coefficient_corrected``, ``reason``, ``long_name`` over row, ``covariance`` over both, and one scalar for each
-        entry of the reference state.
+        ``coefficient_corrected`` and its standard uncertainty, ``reason``, ``long_name`` over row, ``covariance`` over
+        both, and one scalar for each entry of the reference state.
     """
     import xarray as xr
 
@@ -220,6 +222,7 @@ def rows_dataset(ledger: Ledger) -> xr.Dataset:
         "coefficient": "coefficient on the reference dynamic pressure",
         "coefficient_standard_uncertainty": "standard uncertainty of the coefficient (k = 1)",
         "coefficient_corrected": "coefficient on the blockage-corrected dynamic pressure",
+        "coefficient_corrected_standard_uncertainty": "standard uncertainty of the corrected coefficient (k = 1)",
     }
     for name, meaning in meanings.items():
         raw = [getattr(row, name) for row in ledger.rows]

@@ -147,9 +147,12 @@ def corrected_cells(ledger: Ledger) -> list[dict[str, str]]:
         if row.coefficient_corrected is None or not math.isfinite(row.coefficient):
             continue
         scale = COUNT if in_counts(row.name) else 1.0
-        expanded = row.coefficient_expanded_uncertainty / scale
-        corrected, _ = rounded(row.coefficient_corrected / scale, expanded)
+        u = row.coefficient_corrected_standard_uncertainty
+        expanded = (row.coefficient_expanded_uncertainty if u is None else row.coverage_factor * u) / scale
+        corrected, doubt = rounded(row.coefficient_corrected / scale, expanded)
         coefficient, _, unit = coefficient_text(row)
+        if u is not None:
+            corrected = f"{corrected} ± {doubt}"
         found.append({"row": words(row.name), "coefficient": coefficient, "corrected": corrected, "unit": unit})
     return found
 

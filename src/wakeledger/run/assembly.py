@@ -87,6 +87,7 @@ def ledger_row(
         coefficient=coefficient,
         coefficient_standard_uncertainty=coefficient_u,
         coefficient_corrected=corrected,
+        coefficient_corrected_standard_uncertainty=_known(samples, corrected_coefficient_of(name)),
         reason=_no_freedom(sources),
     )
 
@@ -94,6 +95,14 @@ def ledger_row(
 def _no_freedom(sources: Sequence[Source]) -> str | None:
     why = correlated_sources(sources)
     return None if why is None else f"its degrees of freedom are unknown: {why}"
+
+
+def _known(samples: Samples, output: str) -> float | None:
+    """Standard uncertainty of an output, None where it has none."""
+    if output not in samples.names:
+        return None
+    u = float(samples.standard_uncertainty[samples.names.index(output)])
+    return u if math.isfinite(u) else None
 
 
 def made_unknown(samples: Samples, rows: Sequence[str], reason: str) -> Samples:

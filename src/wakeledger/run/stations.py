@@ -449,9 +449,18 @@ def _rows(
                 coefficient=value * scale,
                 coefficient_standard_uncertainty=float(u[1, k]) if math.isfinite(scale) else math.nan,
                 coefficient_corrected=on_corrected,
+                coefficient_corrected_standard_uncertainty=_of_corrected(like, float(u[1, k]), on_corrected),
             )
         )
     return tuple(found)
+
+
+def _of_corrected(like: Row, size: float, corrected: float | None) -> float | None:
+    """Standard uncertainty of a combined corrected coefficient: that of the plain one, wider as on the first plane."""
+    own, plain = like.coefficient_corrected_standard_uncertainty, like.coefficient_standard_uncertainty
+    if corrected is None or own is None or not plain > 0:
+        return None
+    return size * own / plain
 
 
 def _record(fit: _Fit, stations: Sequence[float]) -> Combined:

@@ -278,8 +278,11 @@ def _blockage_note(chain: Chain, nominal: Reduction) -> str:
         " in the profile drag"
     )
     if solid is None:
-        return wake + " and in the corrected coefficients; the model's own volume is not: give solid_blockage."
-    return wake + f", and with the given solid blockage of {solid:.3%} in the corrected coefficients."
+        wake += " and in the corrected coefficients; the model's own volume is not: give solid_blockage."
+    else:
+        wake += f", and with the given solid blockage of {solid:.3%} in the corrected coefficients."
+    faster = share + (solid or 0.0)
+    return f"{wake} The lift is the wake's impulse at the reference speed; at the model's it would be {faster:+.2%}."
 
 
 def _source_note(chain: Chain, nominal: Reduction) -> str:

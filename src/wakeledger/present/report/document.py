@@ -190,9 +190,12 @@ def _rows(ledger: Ledger) -> list[dict[str, Any]]:
         coefficient, u_coefficient, counts = coefficient_text(row)
         corrected = row.coefficient_corrected
         scale = 1e-4 if in_counts(row.name) else 1.0
-        corrected_text = (
-            "" if corrected is None else rounded(corrected / scale, row.coefficient_expanded_uncertainty / scale)[0]
-        )
+        own = row.coefficient_corrected_standard_uncertainty
+        expanded_own = (row.coefficient_expanded_uncertainty if own is None else row.coverage_factor * own) / scale
+        corrected_text = ""
+        if corrected is not None:
+            figure, doubt = rounded(corrected / scale, expanded_own)
+            corrected_text = figure if own is None else f"{figure} ± {doubt}"
         dof = row.degrees_of_freedom
         lines.append(
             {
