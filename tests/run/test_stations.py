@@ -5,6 +5,7 @@ closed form, and the losses that ride in the cores are chosen so that profile an
 """
 
 import json
+from dataclasses import replace
 
 import netCDF4
 import numpy as np
@@ -12,9 +13,12 @@ import pytest
 from scipy.optimize import brentq
 
 from wakeledger.core.errors import SurveyError
+from wakeledger.core.points import Channel
 from wakeledger.ledger.archive import open_archive, write_archive
 from wakeledger.ledger.tabular import json_text, ledger_json
+from wakeledger.run.gridded import grid_survey
 from wakeledger.run.load import load
+from wakeledger.run.reduction import Frozen
 from wakeledger.run.survey import inspect, reduce
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import GaussianLosses, ShockedWake, SyntheticWake, vortex_pair
@@ -362,6 +366,26 @@ def test_a_shock_has_a_row_of_its_own(shocked):
         # What one gains the other loses.
         names = [row.name for row in ledger.rows]
         assert ledger.covariance[names.index("wave_drag"), names.index("profile_drag")] < 0
+
+
+def test_turbulent_viscosity_tells_the_wake_from_the_shock(kit, tmp_path):
+    wake = ShockedWake(TRANSONIC)
+    reference = {"speed": "250 m/s", "density": "0.5 kg/m^3", "static_pressure": "35 kPa", "compressible": True}
+    loaded = load(computed(kit, tmp_path, (wake, wake), STATIONS, reference=reference)).stations[0]
+    chain = grid_survey(loaded).chain
+    points = chain.points
+
+    def wave(eddy):
+        channels = dict(points.channels) | ({} if eddy is None else {"turbulent_viscosity": Channel(eddy)})
+        seen = replace(chain, points=replace(points, channels=channels), frozen=Frozen(shock_level=50.0))
+        return seen.reduce(estimates=False).values["wave_drag"]
+
+    spread = np.exp(-((points.z / (2 * np.ptp(points.z))) ** 2))
+    narrow = np.exp(-((points.z / (0.15 * np.ptp(points.z))) ** 2) * 40)
+    assert wave(None) == pytest.approx(wake.wave_drag, rel=0.15)
+    # Where all of the plane is turbulent nothing is a shock's; where the wake alone is, the rest still is.
+    assert wave(spread + 1e-3 * points.y) < 0.3 * wake.wave_drag
+    assert wave(narrow) > 0.6 * wake.wave_drag
 
 
 def test_combined_rows_add_up(shocked):

@@ -309,7 +309,16 @@ class Chain:
         values = dict.fromkeys(OUTPUTS, np.nan)
         wave, split_uncertainty = 0.0, 0.0
         if self.frozen.shock_level is not None:
-            split = wave_split(flow, reference, level=self.frozen.shock_level, within=mask, energised=energised)
+            eddy = self.points.channels.get("turbulent_viscosity")
+            split = wave_split(
+                flow,
+                reference,
+                level=self.frozen.shock_level,
+                within=mask,
+                energised=energised,
+                # Its level is relative, so that its unit and what it was divided by do not matter.
+                turbulent_viscosity=None if eddy is None else self.gridding.apply(eddy.values),
+            )
             wave, split_uncertainty = (settings.counted * one for one in (split.wave_drag, split.split_uncertainty))
             profile -= wave
             values["wave_drag"] = wave

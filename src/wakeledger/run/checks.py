@@ -436,7 +436,8 @@ def outer_flow(reduction: Reduction, facts: Facts) -> Check:
     if outer.mean() < 0.1:
         message = "The wake fills the window: too little outer flow is left to zero the total pressure and flow angles."
         return Check("outer_flow", "fail", math.nan, LIMITS["outer_flow"][0], message)
-    worth = reduction.loss_zero * float(region.mask.sum()) * reduction.flow.grid.cell_area
+    counted = 0.5 if facts.boundary.reflection == "z" else 1.0
+    worth = counted * reduction.loss_zero * float(region.mask.sum()) * reduction.flow.grid.cell_area
     total = abs(reduction.values[reduction.drag])
     value = abs(worth) / total if total > 0 else math.nan
     pitch = math.degrees(math.atan2(reduction.crossflow_offset[1], reference.speed))

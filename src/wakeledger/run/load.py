@@ -84,6 +84,11 @@ class SurveyInput:
             return said
         return self.points.triangles is not None or self.points.areas is not None or bool(self.points.how)
 
+    def notes(self) -> list[str]:
+        """What the survey file leaves open, as far as it matters: a computed flow needs no source of uncertainty."""
+        said = self.survey.notes()
+        return [note for note in said if not (self.computed and note.startswith("[[uncertainty.source]]"))]
+
     @property
     def given(self) -> dict[str, TunnelInput]:
         """What is known of the tunnel beforehand and acts on the rows, by input."""

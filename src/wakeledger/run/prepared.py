@@ -151,11 +151,8 @@ def _prepare(survey: SurveyInput) -> Prepared:
     outer = replace(outer, loss_zero_uncertainty=float(level.zero_uncertainty))
     expected = _expected(chain, nominal)
     made = () if raw is None else traverse_notes(raw, chain, nominal)
-    said = file.notes()
-    if survey.computed:
-        said = [note for note in said if not note.startswith("[[uncertainty.source]]")]
     notes = (
-        *said,
+        *survey.notes(),
         *made,
         *tables.notes(survey, chain, nominal, gridded.state),
         *tunnel_notes(survey, chain, nominal),

@@ -114,7 +114,7 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
             spacing=spacing,
             remarks=apart,
         ),
-        notes=(*survey.survey.notes(), *corrected, *tables.notes(survey, chain, nominal, state)),
+        notes=(*survey.notes(), *corrected, *tables.notes(survey, chain, nominal, state)),
         reference=tables.reference_scalars(nominal.reference),
         test=survey.survey.test.given(),
         angles=angle_ranges(state.u, state.v, state.w, y=points.y, z=points.z) if facts.crossflow else (),
