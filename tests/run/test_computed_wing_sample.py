@@ -98,3 +98,11 @@ def test_the_vortices_decay_and_the_sum_stays(ledger):
     assert abs(sums[0].value - sums[1].value) < sums[0].expanded_uncertainty
     # Elliptic loading has L²/(pi q b²): a straight wing of aspect ratio 6 needs 0 to 6 % more.
     assert 0.94 < ledger.row("span_efficiency").value < 1.01
+
+
+def test_each_station_is_held_against_the_near_field(ledger):
+    closure = next(one for one in ledger.closures if one.row == "total_drag")
+    note = next(cause.note for cause in closure.causes if cause.name == "station")
+    for station in ledger.stations:
+        difference = station.row("total_drag").value - closure.near
+        assert f"{difference * closure.counts_per_unit:+.2f} counts at {station.station:g} m (E_n " in note

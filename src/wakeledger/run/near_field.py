@@ -7,6 +7,7 @@ from collections.abc import Iterator
 from dataclasses import replace
 
 from wakeledger.ledger.closure import Cause, Closure, NearField, close
+from wakeledger.ledger.crosscheck import COVERAGE_FACTOR
 from wakeledger.ledger.rows import COUNT, Comparison, Ledger
 from wakeledger.run import numerics
 from wakeledger.run.computed import MESH
@@ -50,7 +51,14 @@ def _closure(ledger: Ledger, entry: Comparison) -> Closure | None:
         return None
     scale = row.value / row.coefficient if math.isfinite(row.coefficient) and row.coefficient else math.nan
     others = (_numerical(ledger, entry.row), _walls(ledger, entry.row, scale), _decay(ledger, entry.row, scale))
-    causes = [*_in_its_uncertainty(ledger, entry.row, scale), *(one for one in others if one is not None)]
+    each = _each_station(ledger, entry, scale)
+    within = [
+        replace(one, note=f"{each}; {one.note}") if each and one.name == "station" else one
+        for one in _in_its_uncertainty(ledger, entry.row, scale)
+    ]
+    if each and all(one.name != "station" for one in within):
+        within.append(Cause("station", 0.0, 0.0, each))
+    causes = [*within, *(one for one in others if one is not None)]
     return close(
         entry.row,
         far=row.value,
@@ -64,6 +72,17 @@ def _closure(ledger: Ledger, entry: Comparison) -> Closure | None:
 def _sized(value: float, scale: float, unit: str, *, sign: str = "") -> str:
     """A drag in counts, where it has a coefficient, else in its unit."""
     return f"{value / scale / COUNT:{sign}.2f} counts" if math.isfinite(scale) else f"{value:{sign}.3g} {unit}"
+
+
+def _each_station(ledger: Ledger, entry: Comparison, scale: float) -> str:
+    """Each plane by itself against the near field; empty where there is one plane."""
+    found = []
+    for one in ledger.stations:
+        row = one.row(entry.row)
+        difference = row.value - entry.value
+        error = abs(difference) / (COVERAGE_FACTOR * math.hypot(row.standard_uncertainty, entry.standard_uncertainty))
+        found.append(f"{_sized(difference, scale, row.unit, sign='+')} at {one.station:g} m (E_n {error:.2f})")
+    return ", ".join(found)
 
 
 def _in_its_uncertainty(ledger: Ledger, name: str, scale: float) -> Iterator[Cause]:
