@@ -59,7 +59,7 @@ def large_plane() -> list[Result]:
     grid = first.flow.grid
     solve = timed(lambda: stream_function(first.vorticity, grid), runs=7)
     parts, _ = find_vortices(first, chain.settings)
-    line = _line(first)
+    line = _line(chain, first)
     near = chain.near_field(first.vorticity, grid)
     chain = replace(chain, frozen=Frozen(near, line.cuts if line.reason is None else None, parts))
     nominal = chain.reduce()
@@ -68,7 +68,7 @@ def large_plane() -> list[Result]:
     one_pass = timed(lambda: chain.reduce(), runs=5)
     points_to_plane = timed(lambda: chain.flow(reference), runs=3)
     bias = timed(lambda: noise_bias(chain, nominal, noise), runs=3)
-    geometry = timed(lambda: (find_vortices(first, chain.settings), _line(first)), runs=1, warm=False)
+    geometry = timed(lambda: (find_vortices(first, chain.settings), _line(chain, first)), runs=1, warm=False)
     del state
     size = "512 x 1024 plane"
     return [
