@@ -1,6 +1,7 @@
 """Walls, misalignment, and rows to and fro through the survey file: what was put in comes out, and is said."""
 
 import runpy
+from dataclasses import replace
 from pathlib import Path
 from types import SimpleNamespace
 
@@ -11,6 +12,7 @@ from wakeledger.core.errors import InputError
 from wakeledger.intake.probe.backlash import estimate_backlash
 from wakeledger.ledger.archive import write_archive
 from wakeledger.physics.methods.energy_area import crossflow_energy
+from wakeledger.run import outer_alignment
 from wakeledger.run.config import parse_survey
 from wakeledger.run.survey import inspect, load, prepare, reduce
 from wakeledger.synthetic.probes import TraverseConditions, record_traverse, sphere_probe
@@ -283,6 +285,18 @@ def test_a_mounting_off_its_statement_shows_in_the_outer_flow_alone(raw, kit, wa
         nominal, worth = prepared.nominal, number(said, "would see ", " counts")
         lift = nominal.values["lift"] / (nominal.reference.dynamic_pressure * kit.AREA)
         assert worth == pytest.approx(0.5e4 * lift * 0.6 * DEGREE if name == "pitch" else 0.0, rel=0.03, abs=0.5)
+
+
+def test_a_misalignment_of_unknown_uncertainty_is_not_taken_out(raw, wake, probe, tmp_path, monkeypatch):
+    found = outer_alignment.outer_flow
+    monkeypatch.setattr(
+        outer_alignment, "outer_flow", lambda *a, **k: replace(found(*a, **k), offset_uncertainty=float("nan"))
+    )
+    own, at = {"pitch": "0 deg", "misalignment": "outer_flow"}, raw.positions(spacing=COARSE)
+    path = raw.traverse(tmp_path, wake, *probe, how=TraverseConditions(noise=0.2), at=at, probe=own)
+    prepared = prepare(load(path))
+    assert only(prepared.notes, "misalignment was not taken out: too few parts of the window")
+    assert "misalignment of the probe (correction)" not in {source.name for source in prepared.sources}
 
 
 def test_the_axes_that_the_outer_flow_turns_are_those_of_the_survey(raw, wake, probe, tmp_path):

@@ -115,7 +115,13 @@ def _turn(chain: Chain, first: Reduction, number: int, table: ProbeTable, *, sev
         mask=first.region.mask,
         near_field=near,
     ).offset_uncertainty
-    slow = np.nan_to_num(blocks) / first.reference.speed
+    if not math.isfinite(blocks):
+        raise DataError(
+            "too few parts of the window hold outer flow to tell how well the misalignment is known",
+            place="[probe] misalignment",
+            remedy="survey more of the flow outside the wake, or measure a roll pair",
+        )
+    slow = blocks / first.reference.speed
     pitch, yaw = (float(math.hypot(sigma, slow)) for sigma in found.standard_uncertainty)
     start = correction_input(f"{MISALIGNMENT}.tube {table.tube}")
     inputs = (f"{start}.pitch", f"{start}.yaw") if several else TURN_INPUTS
