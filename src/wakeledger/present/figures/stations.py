@@ -140,9 +140,11 @@ def _panel(axes: Axes, ledger: Ledger, name: str) -> list[object]:
             )
         )  # fmt: skip
     figures = np.array([scale.figures(one.row(name)) for one in ledger.stations])
-    bars = np.nan_to_num(figures[:, 1])
+    # An unknown uncertainty has no bar, rather than one of no length.
+    bars = np.asarray(figures[:, 1], dtype=float)
+    known = bars if np.isfinite(bars).any() else None
     axes.errorbar(
-        [one.station for one in ledger.stations], figures[:, 0], yerr=bars if bars.any() else None, color=colour,
+        [one.station for one in ledger.stations], figures[:, 0], yerr=known, color=colour,
         marker=marker, markersize=5, capsize=2.5, elinewidth=1.2, linestyle="none", zorder=3,
     )  # fmt: skip
     axes.set_title(words(name))
