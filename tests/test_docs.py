@@ -21,7 +21,8 @@ from wakeledger.core.units import UnitError, to_si
 from wakeledger.ledger.crosscheck import COVERAGE_FACTOR
 from wakeledger.ledger.encoding import group_names
 from wakeledger.ledger.rows import CHECK_VERDICTS, VERDICTS
-from wakeledger.run import checks, numerics, outputs, reduction, tables
+from wakeledger.run import checks, tables
+from wakeledger.run.chain import outputs, reduction
 from wakeledger.run.computed import MESH
 from wakeledger.run.config import plan, stream, uncertainty
 from wakeledger.run.config import plane as plane_tables
@@ -30,6 +31,7 @@ from wakeledger.run.config.survey import Survey, parse_survey
 from wakeledger.run.load import refuse_unsupported
 from wakeledger.run.section import terms as section_terms
 from wakeledger.run.stations import TREND
+from wakeledger.run.uncertainty import numerics
 
 ROOT = Path(__file__).resolve().parents[1]
 DOCS = ROOT / "docs"

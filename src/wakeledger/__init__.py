@@ -24,11 +24,11 @@ if TYPE_CHECKING:
     from wakeledger.physics.fields.boundary import Circle, ClosedWalls, FreeAir, OpenJet, Polygon, Rectangle
     from wakeledger.physics.fields.flow import find_wake
     from wakeledger.physics.fields.wall_correction import wall_stream_function
-    from wakeledger.run.grid_series import grid_series
-    from wakeledger.run.increment import increment
+    from wakeledger.run.ledgers.grid_series import grid_series
+    from wakeledger.run.ledgers.increment import increment
+    from wakeledger.run.ledgers.repeats import combine
     from wakeledger.run.load import load as read_survey
     from wakeledger.run.planning import plan
-    from wakeledger.run.repeats import combine
     from wakeledger.run.survey import reduce
     from wakeledger.stream.reference import Reference
 
@@ -40,15 +40,15 @@ _HOMES = {
     "OpenJet": (_BOUNDARY, "OpenJet"),
     "Polygon": (_BOUNDARY, "Polygon"),
     "Rectangle": (_BOUNDARY, "Rectangle"),
-    "combine": ("wakeledger.run.repeats", "combine"),
+    "combine": ("wakeledger.run.ledgers.repeats", "combine"),
     "Estimate": ("wakeledger.core.estimate", "Estimate"),
     "plan": ("wakeledger.run.planning.planner", "plan"),
     "plane": ("wakeledger.core.plane", "plane"),
     "open_ledger": ("wakeledger.ledger.archive", "open_archive"),
     "Ledger": ("wakeledger.ledger.rows", "Ledger"),
     "find_wake": ("wakeledger.physics.fields.flow", "find_wake"),
-    "grid_series": ("wakeledger.run.grid_series", "grid_series"),
-    "increment": ("wakeledger.run.increment", "increment"),
+    "grid_series": ("wakeledger.run.ledgers.grid_series", "grid_series"),
+    "increment": ("wakeledger.run.ledgers.increment", "increment"),
     "methods": ("wakeledger.physics.methods", None),
     "read_survey": ("wakeledger.run.load", "load"),
     "wall_stream_function": ("wakeledger.physics.fields.wall_correction", "wall_stream_function"),

@@ -32,15 +32,15 @@ from wakeledger.confidence.sampling import ErrorSampler, SourceErrors
 from wakeledger.confidence.terms import NumericalTerm, add_terms
 from wakeledger.physics.vortices.vortex_sum import VortexSum
 from wakeledger.run import gridded
-from wakeledger.run.chain import Chain
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.outputs import OUTPUTS
+from wakeledger.run.chain.reduction import Variation
 from wakeledger.run.config import parse_survey
-from wakeledger.run.draws import terms_of
-from wakeledger.run.linear import linear_slopes, survey_budget
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.numerics import MASK, RESOLUTION
-from wakeledger.run.outputs import OUTPUTS
 from wakeledger.run.prepared import Prepared, prepare
-from wakeledger.run.reduction import Variation
+from wakeledger.run.uncertainty.draws import terms_of
+from wakeledger.run.uncertainty.linear import linear_slopes, survey_budget
+from wakeledger.run.uncertainty.numerics import MASK, RESOLUTION
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import (
     GaussianLosses,

@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 from tests.benchmarks.coverage import CASES, COVERED, JUDGED, NUMERICAL, column
 
-from wakeledger.run.numerics import MASK, RESOLUTION
+from wakeledger.run.uncertainty.numerics import MASK, RESOLUTION
 
 
 def _share(hits: np.ndarray) -> str:

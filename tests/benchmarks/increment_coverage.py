@@ -23,11 +23,11 @@ from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.ledger.cancellation import subtract
 from wakeledger.ledger.contributions import Contributions
+from wakeledger.run.chain.outputs import OUTPUTS, coefficient_of
 from wakeledger.run.config import parse_survey
-from wakeledger.run.draws import terms_of
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.outputs import OUTPUTS, coefficient_of
 from wakeledger.run.prepared import prepare
+from wakeledger.run.uncertainty.draws import terms_of
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import SyntheticWake, wing_wake
 from wakeledger.synthetic.recordings import Errors, grid_positions, record

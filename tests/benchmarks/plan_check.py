@@ -20,10 +20,10 @@ from typing import Any
 import numpy as np
 
 from wakeledger.ledger.plan import Plan, SetUp
+from wakeledger.run.chain.outputs import coefficient_of
 from wakeledger.run.config import Survey
 from wakeledger.run.config.plan_file import parse_plan
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.outputs import coefficient_of
 from wakeledger.run.planning import plan
 from wakeledger.run.planning.flow import ExpectedFlow, expected_flow
 from wakeledger.run.planning.instrument import Probe

@@ -18,16 +18,16 @@ from tests.benchmarks.timing import Result, Timing, timed
 from wakeledger.confidence.linear_budget import linear_budget
 from wakeledger.confidence.montecarlo import run as run_montecarlo
 from wakeledger.physics.fields.poisson import stream_function
-from wakeledger.run.chain import Chain
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.outputs import OUTPUTS
+from wakeledger.run.chain.reduction import Frozen
 from wakeledger.run.config import parse_survey
 from wakeledger.run.gridded import Regrid, find_vortices, settings_of
-from wakeledger.run.linear import linear_slopes
 from wakeledger.run.load import SurveyInput, load
-from wakeledger.run.noise import noise_bias, white_noise
-from wakeledger.run.outputs import OUTPUTS
 from wakeledger.run.prepared import _line, prepare
-from wakeledger.run.reduction import Frozen
 from wakeledger.run.survey import inspect
+from wakeledger.run.uncertainty.linear import linear_slopes
+from wakeledger.run.uncertainty.noise import noise_bias, white_noise
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import Errors, Recording, grid_positions, record, wing_wake
 

@@ -405,7 +405,7 @@ def test_an_interruption_leaves_nothing(cli, tmp_path, monkeypatch, quick):
 
 
 def test_an_interruption_in_the_monte_carlo(cli, tmp_path, monkeypatch):
-    from wakeledger.run.chain import Chain
+    from wakeledger.run.chain.chain import Chain
 
     def interrupt(*_arguments, **_options):
         raise KeyboardInterrupt

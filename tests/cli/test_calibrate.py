@@ -10,7 +10,7 @@ from wakeledger.cli import exits, wakeledger
 from wakeledger.intake.probe.stored import read_calibration
 from wakeledger.present.calibration_text import calibration_text
 from wakeledger.present.figures.calibration import calibration_figure
-from wakeledger.run.calibrate import load_calibration
+from wakeledger.run.traverse.calibrate import load_calibration
 
 Q = 600.0
 

@@ -12,8 +12,8 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from wakeledger.run.adjoint import input_gradients, point_gradient
-from wakeledger.run.outputs import OUTPUTS
+from wakeledger.run.chain.adjoint import input_gradients, point_gradient
+from wakeledger.run.chain.outputs import OUTPUTS
 from wakeledger.run.survey import load, prepare
 from wakeledger.stream.reference import Reference
 

@@ -13,9 +13,9 @@ from wakeledger.physics.fields.flow import Flow
 from wakeledger.physics.fields.wake_region import wake_region
 from wakeledger.physics.methods.vorticity_area import vorticity_forces
 from wakeledger.run import checks
-from wakeledger.run.outputs import OUTPUTS
-from wakeledger.run.probe_range import ProbeRange
-from wakeledger.run.reduction import Reduction
+from wakeledger.run.chain.outputs import OUTPUTS
+from wakeledger.run.chain.reduction import Reduction
+from wakeledger.run.traverse.probe_range import ProbeRange
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic.aircraft import wing_wake
 

@@ -3,8 +3,8 @@
 import numpy as np
 
 from wakeledger.run.load import load
-from wakeledger.run.numerics import EDGE
 from wakeledger.run.survey import reduce
+from wakeledger.run.uncertainty.numerics import EDGE
 
 NOISE = 0.02
 

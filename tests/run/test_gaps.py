@@ -5,10 +5,10 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from wakeledger.run.gaps import gap_draws
-from wakeledger.run.outputs import OUTPUTS
-from wakeledger.run.reduction import Variation
+from wakeledger.run.chain.outputs import OUTPUTS
+from wakeledger.run.chain.reduction import Variation
 from wakeledger.run.survey import load, prepare
+from wakeledger.run.uncertainty.gaps import gap_draws
 
 ROWS = ("profile_drag", "induced_drag", "lift", "side_force")
 AT = [OUTPUTS.index(name) for name in ROWS]

@@ -7,9 +7,10 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from wakeledger.run import draws, prepared
+from wakeledger.run import prepared
 from wakeledger.run.inspection.advice import recommendations
 from wakeledger.run.survey import inspect, load, reduce
+from wakeledger.run.uncertainty import draws
 
 NOISE = {"u": 0.1, "v": 0.1, "w": 0.1, "total_pressure": 1.0, "static_pressure": 1.0}
 

@@ -11,10 +11,10 @@ from wakeledger.confidence.linear_budget import linear_budget
 from wakeledger.confidence.montecarlo import run as run_montecarlo
 from wakeledger.ledger.archive import open_archive, write_archive
 from wakeledger.ledger.tabular import ledger_json
-from wakeledger.run.linear import linear_slopes, separated, survey_budget, tried, with_prediction
-from wakeledger.run.outputs import OUTPUTS
-from wakeledger.run.propagation import propagation_notes
+from wakeledger.run.chain.outputs import OUTPUTS
 from wakeledger.run.survey import load, prepare, reduce
+from wakeledger.run.uncertainty.linear import linear_slopes, separated, survey_budget, tried, with_prediction
+from wakeledger.run.uncertainty.propagation import propagation_notes
 
 JUDGED = ("profile_drag", "induced_drag", "residual_drag", "total_drag", "lift", "side_force", "rolling_moment")
 AT = [OUTPUTS.index(name) for name in JUDGED]

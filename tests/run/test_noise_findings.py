@@ -15,8 +15,8 @@ import pytest
 
 from wakeledger.confidence.correlation import correlated_field
 from wakeledger.confidence.noise import estimate_noise
-from wakeledger.run.noise_findings import shown_noise
 from wakeledger.run.survey import load, prepare
+from wakeledger.run.uncertainty.noise_findings import shown_noise
 
 SPACING = 0.0375
 SIZES = {"v": 0.12, "w": 0.12, "total_pressure": 1.5}

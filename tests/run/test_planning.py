@@ -13,8 +13,8 @@ import wakeledger as wl
 from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.ledger.archive import write_archive
 from wakeledger.ledger.plan import PLAN_FORMAT
+from wakeledger.run.chain.outputs import coefficient_of
 from wakeledger.run.config.plan_file import parse_plan, read_plan
-from wakeledger.run.outputs import coefficient_of
 from wakeledger.run.planning.flow import expected_flow
 from wakeledger.run.planning.instrument import of_holes
 from wakeledger.run.planning.search import FACTOR

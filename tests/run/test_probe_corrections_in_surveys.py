@@ -12,9 +12,9 @@ from wakeledger.core.errors import InputError
 from wakeledger.intake.probe.backlash import estimate_backlash
 from wakeledger.ledger.archive import write_archive
 from wakeledger.physics.methods.energy_area import crossflow_energy
-from wakeledger.run import outer_alignment
 from wakeledger.run.config import parse_survey
 from wakeledger.run.survey import inspect, load, prepare, reduce
+from wakeledger.run.traverse import outer_alignment
 from wakeledger.synthetic.probes import TraverseConditions, record_traverse, sphere_probe
 
 DEGREE = np.pi / 180

@@ -4,8 +4,8 @@ import numpy as np
 import pytest
 
 from wakeledger.core.errors import DataError, InputError, SurveyError
-from wakeledger.run.calibrate import read_calibration_table
 from wakeledger.run.config.probe_file import parse_probe_file, read_probe_file
+from wakeledger.run.traverse.calibrate import read_calibration_table
 
 GOOD = """\
 title = "Probe 17"

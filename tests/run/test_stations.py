@@ -16,9 +16,9 @@ from wakeledger.core.errors import SurveyError
 from wakeledger.core.points import Channel
 from wakeledger.ledger.archive import open_archive, write_archive
 from wakeledger.ledger.tabular import json_text, ledger_json
+from wakeledger.run.chain.reduction import Frozen
 from wakeledger.run.gridded import grid_survey
 from wakeledger.run.load import load
-from wakeledger.run.reduction import Frozen
 from wakeledger.run.survey import inspect, reduce
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import GaussianLosses, ShockedWake, SyntheticWake, vortex_pair

@@ -17,7 +17,7 @@ from wakeledger.intake.probe.reduction import CALIBRATION_INPUTS
 from wakeledger.intake.probe.traverse import Tube
 from wakeledger.ledger.archive import write_archive
 from wakeledger.run.survey import load, prepare, reduce
-from wakeledger.run.traverse import prepare_traverse
+from wakeledger.run.traverse.traverse import prepare_traverse
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic.probes import TraverseConditions, sphere_probe
 

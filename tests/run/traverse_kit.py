@@ -6,7 +6,7 @@ from pathlib import Path
 import numpy as np
 
 from wakeledger.intake.probe.stored import write_calibration
-from wakeledger.run.calibrate import calibrate_probe
+from wakeledger.run.traverse.calibrate import calibrate_probe
 from wakeledger.synthetic.probes import TraverseConditions, record_traverse, sphere_probe, with_revisits
 from wakeledger.synthetic.recordings import grid_positions
 

@@ -41,7 +41,7 @@ def calibrate(command: str, probe: Path, out: Path | None, overwrite: bool, quie
         )
 
     from wakeledger.intake.probe.stored import write_calibration
-    from wakeledger.run.calibrate import calibrate_probe
+    from wakeledger.run.traverse.calibrate import calibrate_probe
 
     found = calibrate_probe(probe, command=command)
 

@@ -74,7 +74,7 @@ def grids(
     if out is not None:
         require_free(out, overwrite=overwrite, files=GRID_FILES)
 
-    from wakeledger.run.grid_series import grid_series
+    from wakeledger.run.ledgers.grid_series import grid_series
 
     found = grid_series(ledgers, cells=cells, dimensions=int(dimensions), order=order, command=command)
     names = write_grid_series(found, out, figures=figures, overwrite=overwrite) if out is not None else ()

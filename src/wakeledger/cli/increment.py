@@ -38,7 +38,7 @@ def increment(
     if out is not None:
         require_free(out, overwrite=overwrite, files=INCREMENT_FILES)
 
-    from wakeledger.run.increment import increment as take_increment
+    from wakeledger.run.ledgers.increment import increment as take_increment
 
     found = take_increment(a, b, command=command)
     names = write_increment(found, out, figures=figures, overwrite=overwrite) if out is not None else ()

@@ -42,7 +42,7 @@ def repeats(
     if out is not None:
         require_free(out, overwrite=overwrite)
 
-    from wakeledger.run.repeats import combine
+    from wakeledger.run.ledgers.repeats import combine
 
     ledger = combine(ledgers, command=command)
     names = write_products(ledger, out, figures=figures, overwrite=overwrite) if out is not None else ()

@@ -393,7 +393,7 @@ class Ledger:
     contributions : Contributions or None
         What each error does to the rows, with its sign; None where no uncertainty is known.
     repeats : Dataset or None
-        Of a ledger that combines several surveys: their rows, weights and scatter (`wakeledger.run.repeats`).
+        Of a ledger that combines several surveys: their rows, weights and scatter (`wakeledger.run.ledgers.repeats`).
     calibrations : mapping of str to Dataset
         Calibrations of the probes whose hole pressures were reduced, whole, by the name the survey file gives them.
     tunnel : tuple of TunnelFigure

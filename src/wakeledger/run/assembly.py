@@ -20,8 +20,8 @@ from wakeledger.core.names import ROWS
 from wakeledger.ledger.contributions import Contributions
 from wakeledger.ledger.crosscheck import COVERAGE_FACTOR, check_estimate, compare
 from wakeledger.ledger.rows import COUNT, BudgetLine, Comparison, CrossCheck, Row
+from wakeledger.run.chain.outputs import coefficient_of, corrected_coefficient_of, estimate_of
 from wakeledger.run.config import Survey
-from wakeledger.run.outputs import coefficient_of, corrected_coefficient_of, estimate_of
 
 NO_SOURCE = "the survey file gives no uncertainty source"
 

@@ -19,8 +19,8 @@ from wakeledger.ledger.rows import Check, CheckVerdict
 from wakeledger.physics.fields.boundary import Boundary, ClosedWalls, FreeAir, OpenJet, wall_distance
 from wakeledger.physics.fields.edge import edge_integrals
 from wakeledger.physics.fields.wake_region import Mask
-from wakeledger.run.probe_range import ProbeRange
-from wakeledger.run.reduction import Reduction
+from wakeledger.run.chain.reduction import Reduction
+from wakeledger.run.traverse.probe_range import ProbeRange
 
 FREE_AIR = FreeAir()
 

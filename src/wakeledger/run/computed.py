@@ -19,12 +19,12 @@ from wakeledger.physics.methods.power_balance import exergy_integrands, power_in
 from wakeledger.physics.methods.slipstream import slipstream
 from wakeledger.physics.methods.velocity_defect import drag_split
 from wakeledger.physics.methods.vorticity_area import vorticity_forces
-from wakeledger.run.chain import Chain
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.outputs import OUTPUTS, coefficient_of
+from wakeledger.run.chain.reduction import Reduction
+from wakeledger.run.chain.zeroing import zeroed
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.outputs import OUTPUTS, coefficient_of
-from wakeledger.run.reduction import Reduction
 from wakeledger.run.tables import counts_text
-from wakeledger.run.zeroing import zeroed
 
 MESH = "integral on the points' own mesh"
 #: Excess of total pressure or enthalpy over the stream's that is a slipstream's, as a share of q, and its fewest cells.

@@ -19,14 +19,14 @@ from wakeledger.physics.fields.boundary import Boundary, FreeAir, Rectangle, Ref
 from wakeledger.physics.fields.wake_region import region_of
 from wakeledger.physics.vortices.identify import Vortex
 from wakeledger.physics.vortices.vortex_sum import VortexSum, WakeParts, find_parts, summarise
-from wakeledger.run.chain import Chain
-from wakeledger.run.empty_tunnel import EmptyTunnel
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.empty_tunnel import EmptyTunnel
+from wakeledger.run.chain.reduction import Reduction, Settings
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.outer_alignment import aligned
 from wakeledger.run.plane_window import Window, window_of
-from wakeledger.run.rake import prepare_raw
-from wakeledger.run.reduction import Reduction, Settings
-from wakeledger.run.traverse import RawSurvey, corrected_points
+from wakeledger.run.traverse.outer_alignment import aligned
+from wakeledger.run.traverse.rake import prepare_raw
+from wakeledger.run.traverse.traverse import RawSurvey, corrected_points
 from wakeledger.stream.reference import Reference
 
 #: Points per core length that the plane is resampled to where its own points are uneven.

@@ -16,7 +16,7 @@ from wakeledger.core.points import Points
 from wakeledger.intake.probe.reduction import CALIBRATION_INPUTS
 from wakeledger.intake.state import normalisation
 from wakeledger.physics.fields.differences import ddy, ddz
-from wakeledger.run.chain import STATE, Chain
+from wakeledger.run.chain.chain import STATE, Chain
 from wakeledger.run.config import Source as DeclaredSource
 from wakeledger.run.config import Survey
 from wakeledger.stream.reference import Reference

@@ -19,7 +19,7 @@ from wakeledger.intake.probe.record import Calibration
 from wakeledger.run.config import Survey, parse_survey, read_survey
 from wakeledger.run.config.plane import Plane
 from wakeledger.run.config.tunnel import TunnelInput
-from wakeledger.run.tubes import RakePoints, assemble
+from wakeledger.run.traverse.tubes import RakePoints, assemble
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -239,7 +239,7 @@ def load_survey(survey: Survey) -> SurveyInput:
         inputs |= digests
     calibrations = {}
     for name in _calibrations_named(survey):
-        from wakeledger.run.calibrate import load_calibration
+        from wakeledger.run.traverse.calibrate import load_calibration
 
         calibration = calibrations[name] = load_calibration(survey.resolve(name))
         inputs[name] = hashlib.sha256(survey.resolve(name).read_bytes()).hexdigest()

@@ -9,9 +9,9 @@ from dataclasses import replace
 from wakeledger.ledger.closure import Cause, Closure, NearField, close
 from wakeledger.ledger.crosscheck import COVERAGE_FACTOR
 from wakeledger.ledger.rows import COUNT, Comparison, Ledger
-from wakeledger.run import numerics
 from wakeledger.run.computed import MESH
 from wakeledger.run.stations import TREND
+from wakeledger.run.uncertainty import numerics
 
 #: Budget lines behind each cause whose size is in the row's own uncertainty.
 _BEHIND: dict[str, tuple[str, ...]] = {

@@ -18,21 +18,21 @@ from wakeledger.physics.methods.wake_line import WakeLine, wake_line
 from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
 from wakeledger.physics.vortices.vortex_sum import VortexSum
 from wakeledger.run import tables
-from wakeledger.run.chain import Chain, turned_crossflow
+from wakeledger.run.chain.chain import Chain, turned_crossflow
+from wakeledger.run.chain.estimates import counted_mask, without_walls
+from wakeledger.run.chain.outputs import ESTIMATES, estimate_of
+from wakeledger.run.chain.places import zero_places
+from wakeledger.run.chain.reduction import Frozen, Reduction
 from wakeledger.run.computed import slipstream_notes, slipstream_region
-from wakeledger.run.estimates import counted_mask, without_walls
 from wakeledger.run.gridded import grid_survey
 from wakeledger.run.inputs import gradients, layouts, sources
 from wakeledger.run.load import SurveyInput, refuse_unsupported
-from wakeledger.run.noise import Noise, noise_bias
-from wakeledger.run.noise_findings import crossflow_noises
-from wakeledger.run.outputs import ESTIMATES, estimate_of
-from wakeledger.run.places import zero_places
-from wakeledger.run.reduction import Frozen, Reduction
-from wakeledger.run.resolution import resolution_notes
-from wakeledger.run.traverse_notes import traverse_notes
+from wakeledger.run.traverse.notes import traverse_notes
 from wakeledger.run.tunnel import tunnel_notes, tunnel_sources
-from wakeledger.run.wandering import wandering_notes
+from wakeledger.run.uncertainty.noise import Noise, noise_bias
+from wakeledger.run.uncertainty.noise_findings import crossflow_noises
+from wakeledger.run.uncertainty.resolution import resolution_notes
+from wakeledger.run.uncertainty.wandering import wandering_notes
 
 #: A shock's loss stands this many times above the noise and wander of the outer flow, and above this share of q.
 _SHOCK_LEVELS, _SHOCK_FLOOR = 5.0, 1e-4

@@ -26,12 +26,12 @@ from wakeledger.ledger.rows import Combined, Ledger, Row
 from wakeledger.physics.methods.station_fit import StationFit, station_fit
 from wakeledger.run import tables
 from wakeledger.run.assembly import comparisons, require_rows
+from wakeledger.run.chain.outputs import MOMENTS, ROWS
+from wakeledger.run.chain.places import sampled_mask
+from wakeledger.run.chain.reduction import Variation
 from wakeledger.run.gridded import grid_survey
-from wakeledger.run.increment import contributions_of
+from wakeledger.run.ledgers.increment import contributions_of
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.outputs import MOMENTS, ROWS
-from wakeledger.run.places import sampled_mask
-from wakeledger.run.reduction import Variation
 from wakeledger.run.worst_checks import worst_checks
 from wakeledger.stream.reference import Reference
 

@@ -29,23 +29,23 @@ from wakeledger.run.assembly import (
     require_rows,
     spread_notes,
 )
+from wakeledger.run.chain.outputs import ESTIMATES, MOMENTS, OUTPUTS, ROWS, estimate_of
 from wakeledger.run.checks import Facts, all_checks
 from wakeledger.run.computed import diagnostics
 from wakeledger.run.config import Survey
 from wakeledger.run.config.tunnel import GIVEN, TunnelInput
-from wakeledger.run.draws import Propagated, numerical_only, propagate, terms_of
 from wakeledger.run.gridded import core_spacings, grid_survey
 from wakeledger.run.inspection import inspect_plane, inspect_section
 from wakeledger.run.inspection.stations import inspect_stations
 from wakeledger.run.load import SUPPORT_TARE, SurveyInput, load, refuse_unsupported
 from wakeledger.run.near_field import with_closures
-from wakeledger.run.outputs import ESTIMATES, MOMENTS, OUTPUTS, ROWS, estimate_of
 from wakeledger.run.prepared import Prepared, prepare
-from wakeledger.run.probe_range import probe_range
-from wakeledger.run.propagation import propagation, propagation_notes
 from wakeledger.run.section.survey import reduce_section
 from wakeledger.run.stations import reduce_stations
+from wakeledger.run.traverse.probe_range import probe_range
 from wakeledger.run.tunnel import tunnel_figures
+from wakeledger.run.uncertainty.draws import Propagated, numerical_only, propagate, terms_of
+from wakeledger.run.uncertainty.propagation import propagation, propagation_notes
 
 __all__ = ["SurveyInput", "inspect", "load", "prepare", "reduce"]
 

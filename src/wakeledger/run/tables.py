@@ -22,11 +22,11 @@ from wakeledger.physics.fields.outer_flow import LEAST_SHARE
 from wakeledger.physics.loading.span import SpanLoading
 from wakeledger.physics.methods.wake_line import WakeLine
 from wakeledger.physics.vortices.identify import Vortex
-from wakeledger.run.chain import Chain
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.places import default_grow
+from wakeledger.run.chain.reduction import Reduction
 from wakeledger.run.gridded import survey_window
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.places import default_grow
-from wakeledger.run.reduction import Reduction
 from wakeledger.stream.reference import Reference
 
 if TYPE_CHECKING:

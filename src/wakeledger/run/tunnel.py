@@ -16,13 +16,13 @@ from wakeledger.physics.fields.boundary import ClosedWalls, FreeAir
 from wakeledger.physics.fields.differences import crossflow_divergence
 from wakeledger.physics.fields.solvability import solvability
 from wakeledger.physics.loading.boundary_factor import classical_boundary_factor
-from wakeledger.run.chain import Chain
-from wakeledger.run.empty_tunnel import PREFIX
-from wakeledger.run.increment import refuse_conflicts
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.empty_tunnel import PREFIX
+from wakeledger.run.chain.outputs import TUNNEL
+from wakeledger.run.chain.reduction import Reduction, Variation
 from wakeledger.run.inputs import layouts, sources
+from wakeledger.run.ledgers.increment import refuse_conflicts
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.outputs import TUNNEL
-from wakeledger.run.reduction import Reduction, Variation
 from wakeledger.run.tables import counts_text
 
 #: Unit and meaning of each figure.

@@ -12,8 +12,8 @@ from scipy import ndimage
 from wakeledger.core.grid import Array
 from wakeledger.ledger.inspection import EdgeState
 from wakeledger.physics.fields.wake_region import Mask
+from wakeledger.run.chain.reduction import Reduction
 from wakeledger.run.checks import EDGE_CELLS, LIMITS
-from wakeledger.run.reduction import Reduction
 
 #: Lines next to the edge from which the decay of the wake is read.
 _TAIL_LINES = 6

@@ -24,9 +24,9 @@ from wakeledger.run.inspection.channels import angle_ranges, channel_summaries, 
 from wakeledger.run.inspection.edges import plane_edges
 from wakeledger.run.inspection.places import Places, places_of
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.probe_range import probe_range, tip_notes
-from wakeledger.run.traverse import RawSurvey, corrected_points
-from wakeledger.run.traverse_notes import apart_notes
+from wakeledger.run.traverse.notes import apart_notes
+from wakeledger.run.traverse.probe_range import probe_range, tip_notes
+from wakeledger.run.traverse.traverse import RawSurvey, corrected_points
 from wakeledger.stream.reference import Reference
 
 #: Checks whose value needs the noise bias or a reduction's uncertainty; they are left to `reduce`.

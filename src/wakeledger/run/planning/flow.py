@@ -13,9 +13,9 @@ import numpy as np
 
 from wakeledger.core.errors import DataError, SurveyError
 from wakeledger.core.grid import Array
+from wakeledger.run.chain.outputs import ROWS, coefficient_of
 from wakeledger.run.config.plan_file import PlanRequest
 from wakeledger.run.config.stream import ModelTable, ReferenceTable
-from wakeledger.run.outputs import ROWS, coefficient_of
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic.elements import GaussianElements
 from wakeledger.synthetic.loadings import shed, straight_edge

@@ -14,10 +14,11 @@ from wakeledger.confidence.montecarlo import run as run_montecarlo
 from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.ledger.plan import Improvement, Kind, Plan, PlanLine, SetUp
 from wakeledger.run import tables
+from wakeledger.run.chain.outputs import OUTPUTS
+from wakeledger.run.chain.reduction import Variation
 from wakeledger.run.config.plan import PlanTable
 from wakeledger.run.config.plan_file import PlanRequest, read_plan
 from wakeledger.run.config.stream import ReferenceTable
-from wakeledger.run.outputs import OUTPUTS
 from wakeledger.run.planning.flow import ExpectedFlow, expected_flow
 from wakeledger.run.planning.instrument import probes
 from wakeledger.run.planning.of_ledger import is_archive, request_of_ledger
@@ -41,7 +42,6 @@ from wakeledger.run.planning.simulate import (
 )
 from wakeledger.run.planning.target import Target, read_target
 from wakeledger.run.prepared import prepare
-from wakeledger.run.reduction import Variation
 
 Progress = Callable[[int, int], None]
 

@@ -13,14 +13,13 @@ from wakeledger.confidence.terms import NumericalTerm
 from wakeledger.core.errors import InputError
 from wakeledger.core.grid import Array
 from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
-from wakeledger.run.adjoint import input_gradients, point_gradient
-from wakeledger.run.chain import Chain
+from wakeledger.run.chain.adjoint import input_gradients, point_gradient
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.outputs import OUTPUTS
+from wakeledger.run.chain.reduction import Variation
 from wakeledger.run.checks import all_checks
 from wakeledger.run.config import Survey
-from wakeledger.run.draws import terms_of
 from wakeledger.run.inputs import layouts, sources
-from wakeledger.run.numerics import LOSS_ZERO, MASK, OFFSET_ZERO, SWEEP
-from wakeledger.run.outputs import OUTPUTS
 from wakeledger.run.planning.flow import ExpectedFlow
 from wakeledger.run.planning.instrument import Probe
 from wakeledger.run.planning.simulate import (
@@ -34,8 +33,9 @@ from wakeledger.run.planning.simulate import (
     simulated,
 )
 from wakeledger.run.prepared import Prepared, prepare
-from wakeledger.run.reduction import Variation
 from wakeledger.run.survey import facts_of
+from wakeledger.run.uncertainty.draws import terms_of
+from wakeledger.run.uncertainty.numerics import LOSS_ZERO, MASK, OFFSET_ZERO, SWEEP
 
 #: Line of the budget for what a survey without any noise leaves that no numerical term covers.
 LEFT = "window and spacing, beyond the terms above"

@@ -9,7 +9,7 @@ from dataclasses import dataclass
 from wakeledger.core.errors import SurveyError, nearest
 from wakeledger.core.names import ROWS as NAMED_ROWS
 from wakeledger.core.units import UnitError, split, to_si
-from wakeledger.run.outputs import ROWS, coefficient_of
+from wakeledger.run.chain.outputs import ROWS, coefficient_of
 
 _EXAMPLES = 'write "2 counts" (of a drag coefficient), "0.5 %", a value in the row\'s unit, or one of its coefficient'
 #: One count of a drag coefficient.

@@ -19,7 +19,7 @@ from wakeledger.physics.fields.traverse_window import WakeWindow, edge_levels, o
 from wakeledger.physics.methods.section_drag import EdgeStatic
 from wakeledger.physics.methods.section_kernels import KERNELS, speed_at, static_at, total_at, window_weights
 from wakeledger.physics.methods.section_walls import SectionWalls, section_wake_blockage
-from wakeledger.run.outputs import coefficient_of, corrected_coefficient_of, estimate_of
+from wakeledger.run.chain.outputs import coefficient_of, corrected_coefficient_of, estimate_of
 from wakeledger.run.section.state import SectionState, section_state
 from wakeledger.stream.reference import Reference, resolve_reference
 

@@ -13,12 +13,12 @@ from wakeledger.core.grid import Array
 from wakeledger.intake.probe.traverse import Traverse
 from wakeledger.physics.methods.section_drag import SectionDrag
 from wakeledger.physics.methods.section_kernels import jones, window_weights
+from wakeledger.run.chain.outputs import coefficient_of, corrected_coefficient_of
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.outputs import coefficient_of, corrected_coefficient_of
 from wakeledger.run.section.chain import ROW, SectionChain, SectionReduction, SectionVariation
 from wakeledger.run.section.state import SectionState
-from wakeledger.run.traverse import SHEAR, RawSurvey
-from wakeledger.run.traverse_notes import inputs_of, traverse_without
+from wakeledger.run.traverse.notes import inputs_of, traverse_without
+from wakeledger.run.traverse.traverse import SHEAR, RawSurvey
 
 
 def section_notes(

@@ -36,12 +36,10 @@ from wakeledger.run.assembly import (
     ledger_row,
     require_rows,
 )
+from wakeledger.run.chain.outputs import estimate_of
 from wakeledger.run.config.tunnel import section_height
 from wakeledger.run.inputs import layouts, sources
 from wakeledger.run.load import SurveyInput, refuse_unsupported
-from wakeledger.run.outputs import estimate_of
-from wakeledger.run.propagation import propagation
-from wakeledger.run.rake import prepare_raw
 from wakeledger.run.section.chain import (
     METHODS,
     OUTPUTS,
@@ -55,7 +53,9 @@ from wakeledger.run.section.checks import SectionFacts, section_checks
 from wakeledger.run.section.notes import raw_notes, section_notes
 from wakeledger.run.section.state import SectionState, check_section_state
 from wakeledger.run.section.terms import LEVEL, section_terms
-from wakeledger.run.traverse import SHEAR, RawSurvey, corrected_points
+from wakeledger.run.traverse.rake import prepare_raw
+from wakeledger.run.traverse.traverse import SHEAR, RawSurvey, corrected_points
+from wakeledger.run.uncertainty.propagation import propagation
 from wakeledger.stream.reference import Reference
 
 if TYPE_CHECKING:

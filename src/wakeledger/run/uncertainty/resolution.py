@@ -5,9 +5,9 @@ from __future__ import annotations
 import math
 
 from wakeledger.core.errors import DataError
-from wakeledger.run.chain import Chain
-from wakeledger.run.places import sampled_mask
-from wakeledger.run.reduction import Reduction, Variation
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.places import sampled_mask
+from wakeledger.run.chain.reduction import Reduction, Variation
 from wakeledger.run.tables import counts_text
 
 #: Change of the induced drag below which no order can be told, as a share of it.

@@ -23,10 +23,10 @@ from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
 from wakeledger.physics.methods.wake_line import noise_bias as wake_line_bias
 from wakeledger.physics.vortices.vortex_sum import evaluate as evaluate_vortex_sum
 from wakeledger.physics.vortices.vortex_sum import noise_bias as vortex_sum_bias
-from wakeledger.run.chain import Chain
-from wakeledger.run.estimates import counted_mask
-from wakeledger.run.outputs import estimate_of
-from wakeledger.run.reduction import Reduction
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.estimates import counted_mask
+from wakeledger.run.chain.outputs import estimate_of
+from wakeledger.run.chain.reduction import Reduction
 
 #: Drawn error fields of each source: for its variance, and for a bias that has no closed form.
 _DRAWS = 64

@@ -12,11 +12,11 @@ from wakeledger.confidence.sources import Source
 from wakeledger.core.errors import SurveyError
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.flow import Flow
-from wakeledger.run.zeroing import axial_velocity
+from wakeledger.run.chain.zeroing import axial_velocity
 from wakeledger.stream.reference import Reference
 
 if TYPE_CHECKING:
-    from wakeledger.run.chain import Chain
+    from wakeledger.run.chain.chain import Chain
     from wakeledger.run.gridded import Regrid
 
 #: What names of inputs of the empty-tunnel survey begin with.

@@ -24,7 +24,7 @@ from wakeledger.ledger.plane_mean import plane_mean
 from wakeledger.ledger.rounding import significant
 from wakeledger.ledger.rows import COUNT, Check, Ledger, Row
 from wakeledger.run import tables
-from wakeledger.run.increment import contributions_of, declared_surveys, refuse_conflicts, unlike
+from wakeledger.run.ledgers.increment import contributions_of, declared_surveys, refuse_conflicts, unlike
 
 if TYPE_CHECKING:
     import xarray as xr

@@ -19,8 +19,8 @@ from wakeledger.intake.gridding.conditional import Hole, drawn_deviations, find_
 from wakeledger.intake.gridding.tensor import TensorScheme
 from wakeledger.intake.gridding.window import CutScheme
 from wakeledger.intake.state import State
-from wakeledger.run.chain import Chain
-from wakeledger.run.reduction import Reduction, Variation
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.reduction import Reduction, Variation
 from wakeledger.stream.reference import Reference
 
 #: Draws of the gaps; the size of the term is then known within a seventh.

@@ -61,7 +61,7 @@ def increment(a: Ledger | str | PathLike[str], b: Ledger | str | PathLike[str], 
     Parameters
     ----------
     a, b : Ledger or path
-        The ledgers, or their archives; combined ones too (`wakeledger.run.repeats.combine`).
+        The ledgers, or their archives; combined ones too (`wakeledger.run.ledgers.repeats.combine`).
     command : str
         The command line, for the record.
 

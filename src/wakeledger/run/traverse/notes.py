@@ -12,10 +12,10 @@ from wakeledger.core.grid import Array
 from wakeledger.intake.probe.traverse import MISALIGNMENT, Traverse, correction_input
 from wakeledger.physics.methods.energy_area import crossflow_energy
 from wakeledger.run import tables
-from wakeledger.run.chain import Chain
-from wakeledger.run.probe_range import tip_notes
-from wakeledger.run.reduction import Reduction, Variation
-from wakeledger.run.traverse import REFERENCE, SHEAR, RawSurvey
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.reduction import Reduction, Variation
+from wakeledger.run.traverse.probe_range import tip_notes
+from wakeledger.run.traverse.traverse import REFERENCE, SHEAR, RawSurvey
 
 
 def traverse_notes(raw: RawSurvey, chain: Chain, nominal: Reduction) -> tuple[str, ...]:

@@ -20,7 +20,7 @@ from wakeledger.ledger.grid_series import FAR_FIELD, Grid, GridSeries, Series, c
 from wakeledger.ledger.rows import Comparison, Ledger
 from wakeledger.run import tables
 from wakeledger.run.config import Survey
-from wakeledger.run.increment import declared_surveys
+from wakeledger.run.ledgers.increment import declared_surveys
 
 #: Scalars of model and stream that one case has alike on all grids, with the relative difference that is rounding.
 _ALIKE = {

@@ -28,8 +28,8 @@ from wakeledger.physics.fields.transposed import (
 )
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.physics.fields.wall_correction import wall_stream_function
-from wakeledger.run.chain import Chain
-from wakeledger.run.shear import Displacement
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.shear import Displacement
 from wakeledger.stream.reference import Reference
 
 #: Derivatives by the fields of a plane, or by the gridded state (there with "temperature" for "total_temperature").
@@ -90,7 +90,7 @@ def crossflow_functional(by_v: Array, by_w: Array, flow: Flow, mask: Mask, bound
 
 def swirl_gradient(chain: Chain, flow: Flow, mask: Mask) -> tuple[Array, Array]:
     """Derivatives of the stream's swirl (`wakeledger.physics.fields.outer_flow.stream_swirl`) by the crossflow."""
-    from wakeledger.run.chain import turned_crossflow
+    from wakeledger.run.chain.chain import turned_crossflow
 
     grid, boundary = flow.grid, chain.settings.boundary.whole
     outer = (~mask).astype(float)

@@ -17,12 +17,12 @@ from wakeledger.intake.probe.misalignment import from_outer_flow
 from wakeledger.intake.probe.mounting import TURN_INPUTS, Turn
 from wakeledger.intake.probe.traverse import MISALIGNMENT, Traverse, correction_input
 from wakeledger.physics.fields.outer_flow import LEAST_SHARE, induced_crossflow, outer_flow
-from wakeledger.run.chain import Chain
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.reduction import Reduction
 from wakeledger.run.config.tables import ProbeTable
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.reduction import Reduction
-from wakeledger.run.roll_pair import turn_text
-from wakeledger.run.traverse import RawSurvey
+from wakeledger.run.traverse.roll_pair import turn_text
+from wakeledger.run.traverse.traverse import RawSurvey
 
 #: Once with the wake as it was read, once with it as it is then.
 _ROUNDS = 2

@@ -16,7 +16,7 @@ from wakeledger.physics.fields.wake_region import Mask, WakeRegion
 from wakeledger.physics.methods.vorticity_area import VorticityForces
 from wakeledger.physics.methods.wake_line import WakeCuts
 from wakeledger.physics.vortices.vortex_sum import WakeParts
-from wakeledger.run.outputs import OUTPUTS
+from wakeledger.run.chain.outputs import OUTPUTS
 from wakeledger.stream.reference import Reference
 
 FREE_AIR = FreeAir()

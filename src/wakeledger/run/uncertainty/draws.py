@@ -17,14 +17,14 @@ from wakeledger.core.grid import Array
 from wakeledger.physics.methods.entropy_area import expansion_doubt
 from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
 from wakeledger.physics.methods.wake_line import path_scatter
+from wakeledger.run.chain.estimates import counted_mask, without_walls
+from wakeledger.run.chain.outputs import OUTPUTS, estimate_of
 from wakeledger.run.computed import mesh_term
-from wakeledger.run.estimates import counted_mask, without_walls
 from wakeledger.run.gridded import regrid_of
-from wakeledger.run.linear import linear_slopes, separated, survey_budget, tried, with_prediction
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.numerics import numerical_terms
-from wakeledger.run.outputs import OUTPUTS, estimate_of
 from wakeledger.run.prepared import Prepared
+from wakeledger.run.uncertainty.linear import linear_slopes, separated, survey_budget, tried, with_prediction
+from wakeledger.run.uncertainty.numerics import numerical_terms
 
 #: Draws that tell the wake region's own effect from that of noise.
 _NOISE_DRAWS = 16

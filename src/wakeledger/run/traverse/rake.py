@@ -29,11 +29,11 @@ from wakeledger.intake.probe.tube_offsets import (
     offsets_from_outer_flow,
     offsets_from_overlap,
 )
+from wakeledger.run.chain.shear import Displacement
 from wakeledger.run.config.tables import ProbeTable
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.shear import Displacement
-from wakeledger.run.to_and_fro import BACKLASH, LAG, Apart
-from wakeledger.run.traverse import (
+from wakeledger.run.traverse.to_and_fro import BACKLASH, LAG, Apart
+from wakeledger.run.traverse.traverse import (
     DRIFT,
     REFERENCE,
     SHEAR,
@@ -42,8 +42,8 @@ from wakeledger.run.traverse import (
     prepare_traverse,
     quantile,
 )
-from wakeledger.run.tubes import RakePoints, listed, subset
-from wakeledger.run.wall_proximity import WALL
+from wakeledger.run.traverse.tubes import RakePoints, listed, subset
+from wakeledger.run.traverse.wall_proximity import WALL
 from wakeledger.stream.reference import Reference
 
 #: Name of the correction of the tubes' offsets.

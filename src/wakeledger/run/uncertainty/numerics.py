@@ -17,12 +17,12 @@ from wakeledger.core.grid import Array
 from wakeledger.physics.fields.outer_flow import OuterFlow
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.physics.methods.residual import residual_drag
-from wakeledger.run.chain import Chain
-from wakeledger.run.gaps import gap_draws
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.outputs import OUTPUTS, coefficient_of, estimate_of
+from wakeledger.run.chain.places import sampled_mask
+from wakeledger.run.chain.reduction import Reduction, Variation
 from wakeledger.run.gridded import Regrid
-from wakeledger.run.outputs import OUTPUTS, coefficient_of, estimate_of
-from wakeledger.run.places import sampled_mask
-from wakeledger.run.reduction import Reduction, Variation
+from wakeledger.run.uncertainty.gaps import gap_draws
 
 MASK = "edge of the wake region"
 RESOLUTION = "spacing of the points"
@@ -90,7 +90,7 @@ def numerical_terms(
     Returns
     -------
     tuple of NumericalTerm
-        Over `wakeledger.run.outputs.OUTPUTS`; terms that do not apply are left out.
+        Over `wakeledger.run.chain.outputs.OUTPUTS`; terms that do not apply are left out.
     """
     terms: list[NumericalTerm | None] = [_mask_term(chain, nominal, noise), _resolution_term(chain, nominal)]
     if chain.gridding.kind == "tensor":

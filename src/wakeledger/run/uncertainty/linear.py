@@ -22,10 +22,10 @@ from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.core.grid import Array
-from wakeledger.run.adjoint import input_gradients, point_gradient, scalar_gradients
-from wakeledger.run.chain import Chain
-from wakeledger.run.outputs import OUTPUTS
-from wakeledger.run.reduction import Reduction, Variation
+from wakeledger.run.chain.adjoint import input_gradients, point_gradient, scalar_gradients
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.outputs import OUTPUTS
+from wakeledger.run.chain.reduction import Reduction, Variation
 
 #: Draws of all errors, and the share of them at which the derivatives are tried on the chain.
 _TRIALS, _TRIAL = 3, 0.02

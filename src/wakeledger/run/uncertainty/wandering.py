@@ -6,9 +6,9 @@ import math
 
 from wakeledger.physics.vortices.smearing import smearing_loss
 from wakeledger.physics.vortices.vortex_sum import VortexSum
-from wakeledger.run.chain import Chain
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.reduction import Reduction
 from wakeledger.run.config.tables import WakeTable
-from wakeledger.run.reduction import Reduction
 from wakeledger.run.tables import counts_text
 
 

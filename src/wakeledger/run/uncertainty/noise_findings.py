@@ -21,9 +21,9 @@ from wakeledger.core.grid import Array
 from wakeledger.intake.gridding import Gridding
 from wakeledger.intake.gridding.mirror import ON_PLANE
 from wakeledger.physics.fields.wake_region import Mask
-from wakeledger.run.chain import Chain
-from wakeledger.run.noise import Noise, declared_noise, white_noise
-from wakeledger.run.reduction import Reduction
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.reduction import Reduction
+from wakeledger.run.uncertainty.noise import Noise, declared_noise, white_noise
 
 #: Factor between shown and declared noise from which on it is told.
 FACTOR = 1.5

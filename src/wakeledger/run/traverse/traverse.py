@@ -40,14 +40,22 @@ from wakeledger.intake.probe.traverse import (
     Tube,
     correction_input,
 )
-from wakeledger.run.calibration_use import calibration_notes, calibration_of, check_columns
+from wakeledger.run.chain.shear import Displacement
 from wakeledger.run.config.tables import HoleReadings, ProbeTable
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.roll_pair import by_roll, head_turn, refuse_contrary_rolls
-from wakeledger.run.shear import Displacement
-from wakeledger.run.to_and_fro import BACKLASH, LAG, STATED, Apart, estimated_backlash, find_apart, lag_uncertainty
-from wakeledger.run.travel import travel_of
-from wakeledger.run.wall_proximity import WALL, wall_correction
+from wakeledger.run.traverse.calibration_use import calibration_notes, calibration_of, check_columns
+from wakeledger.run.traverse.roll_pair import by_roll, head_turn, refuse_contrary_rolls
+from wakeledger.run.traverse.to_and_fro import (
+    BACKLASH,
+    LAG,
+    STATED,
+    Apart,
+    estimated_backlash,
+    find_apart,
+    lag_uncertainty,
+)
+from wakeledger.run.traverse.travel import travel_of
+from wakeledger.run.traverse.wall_proximity import WALL, wall_correction
 from wakeledger.stream.reference import Reference
 
 #: Names of the corrections.

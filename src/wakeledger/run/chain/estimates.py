@@ -18,8 +18,8 @@ from wakeledger.physics.methods.momentum_area import momentum_drag
 from wakeledger.physics.methods.vorticity_area import VorticityForces, own_share
 from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
 from wakeledger.physics.vortices.vortex_sum import evaluate as evaluate_vortex_sum
-from wakeledger.run.outputs import estimate_of
-from wakeledger.run.reduction import Frozen, Settings, Variation
+from wakeledger.run.chain.outputs import estimate_of
+from wakeledger.run.chain.reduction import Frozen, Settings, Variation
 from wakeledger.stream.reference import Reference
 
 

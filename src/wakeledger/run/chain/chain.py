@@ -34,14 +34,14 @@ from wakeledger.physics.methods.maskell import wake_deficit, with_blockage
 from wakeledger.physics.methods.residual import residual_drag
 from wakeledger.physics.methods.vorticity_area import VorticityForces, vorticity_forces
 from wakeledger.physics.methods.wave_split import wave_split
-from wakeledger.run.coefficients import coefficients, tunnel_figures
-from wakeledger.run.empty_tunnel import EmptyTunnel
-from wakeledger.run.estimates import area_estimates, on_frozen_geometry, without_walls
-from wakeledger.run.outputs import OUTPUTS, WITH_SUPPORT, WITHOUT_CROSSFLOW
-from wakeledger.run.places import default_grow, sampled_mask, zero_places
-from wakeledger.run.reduction import Frozen, Reduction, Settings, Variation
-from wakeledger.run.shear import Displacement
-from wakeledger.run.zeroing import axial_velocity, zeroed
+from wakeledger.run.chain.coefficients import coefficients, tunnel_figures
+from wakeledger.run.chain.empty_tunnel import EmptyTunnel
+from wakeledger.run.chain.estimates import area_estimates, on_frozen_geometry, without_walls
+from wakeledger.run.chain.outputs import OUTPUTS, WITH_SUPPORT, WITHOUT_CROSSFLOW
+from wakeledger.run.chain.places import default_grow, sampled_mask, zero_places
+from wakeledger.run.chain.reduction import Frozen, Reduction, Settings, Variation
+from wakeledger.run.chain.shear import Displacement
+from wakeledger.run.chain.zeroing import axial_velocity, zeroed
 from wakeledger.stream.reference import Reference, resolve_reference
 
 #: What of a flow state changes with the place.

@@ -29,7 +29,7 @@ from wakeledger.physics.methods.gradients import FlowGradient
 from wakeledger.physics.methods.vorticity_area import own_share
 from wakeledger.physics.methods.wake_line import sensitivity as wake_line_sensitivity
 from wakeledger.physics.vortices.vortex_sum import sensitivities as vortex_sum_sensitivities
-from wakeledger.run.adjoint_plane import (
+from wakeledger.run.chain.adjoint_plane import (
     Gradient,
     before_empty_tunnel,
     before_relations,
@@ -38,10 +38,10 @@ from wakeledger.run.adjoint_plane import (
     crossflow_functional,
     swirl_gradient,
 )
-from wakeledger.run.chain import Chain
-from wakeledger.run.empty_tunnel import PREFIX, EmptyTunnel, _onto
-from wakeledger.run.estimates import counted_mask, without_walls
-from wakeledger.run.outputs import (
+from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.empty_tunnel import PREFIX, EmptyTunnel, _onto
+from wakeledger.run.chain.estimates import counted_mask, without_walls
+from wakeledger.run.chain.outputs import (
     MOMENTS,
     OUTPUTS,
     ROWS,
@@ -49,7 +49,7 @@ from wakeledger.run.outputs import (
     corrected_coefficient_of,
     estimate_of,
 )
-from wakeledger.run.reduction import Reduction
+from wakeledger.run.chain.reduction import Reduction
 from wakeledger.stream.reference import Reference
 
 FREE_AIR = FreeAir()
@@ -73,8 +73,8 @@ class PointGradient:
     by : dict of str to ndarray, shape (k, n)
         By u, v, w, total_pressure, static_pressure, density and temperature of each point, where there are any.
     outputs : ndarray, shape (m, k)
-        Derivatives of the chain's outputs (`wakeledger.run.outputs.OUTPUTS`) by the figures; NaN for an output that is
-        not known or not differentiated.
+        Derivatives of the chain's outputs (`wakeledger.run.chain.outputs.OUTPUTS`) by the figures; NaN for an output
+        that is not known or not differentiated.
     empty : PointGradient or None
         The same by the points of the empty tunnel.
     """

@@ -10,7 +10,7 @@ import numpy as np
 from wakeledger.core.grid import Array
 from wakeledger.intake.probe.pitot import PitotReduction
 from wakeledger.intake.probe.reduction import HoleReduction
-from wakeledger.run.chain import Chain
+from wakeledger.run.chain.chain import Chain
 from wakeledger.stream.gas import mach_from_pressure_ratio, sutherland_viscosity
 from wakeledger.stream.reference import Reference
 

@@ -10,8 +10,8 @@ from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.boundary import ClosedWalls, FreeAir
 from wakeledger.physics.fields.wall_correction import wall_crossflow
 from wakeledger.physics.loading.boundary_factor import angle_correction, boundary_factor
-from wakeledger.run.outputs import MOMENTS, ROWS, coefficient_of, corrected_coefficient_of
-from wakeledger.run.reduction import Settings
+from wakeledger.run.chain.outputs import MOMENTS, ROWS, coefficient_of, corrected_coefficient_of
+from wakeledger.run.chain.reduction import Settings
 from wakeledger.stream.reference import Reference
 
 
@@ -87,7 +87,7 @@ def tunnel_figures(
     Returns
     -------
     dict of str to float
-        The outputs `wakeledger.run.outputs.TUNNEL`, as far as they can be had.
+        The outputs `wakeledger.run.chain.outputs.TUNNEL`, as far as they can be had.
     """
     boundary = settings.boundary
     if isinstance(boundary, FreeAir):

@@ -16,7 +16,7 @@ from wakeledger.core.grid import Array
 from wakeledger.intake.probe.backlash import Backlash, correct_backlash, estimate_backlash
 from wakeledger.intake.probe.lag import estimate_lag, make_rate_filter
 from wakeledger.intake.probe.traverse import Addition, LagFilter
-from wakeledger.run.travel import Travel
+from wakeledger.run.traverse.travel import Travel
 
 #: Names of the corrections.
 LAG, BACKLASH = "lag", "backlash"

@@ -1,0 +1,1 @@
+"""What is made of finished ledgers: increments, means of repeats, series of grids."""

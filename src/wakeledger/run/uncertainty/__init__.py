@@ -1,0 +1,1 @@
+"""Error bars of one survey: noise, draws, derivatives, numerical terms."""
