@@ -198,7 +198,6 @@ def test_flight_inputs():
         ((("row = {", 'tube = { column = "tube" }\nrow = {'),), "[plane.columns] tube"),
         ((("row = {", 'reference_dynamic_pressure = { column = "q", unit = "Pa" }\nrow = {'),),
          "[plane.columns] reference_dynamic_pressure"),
-        ((("pitch_offset", "turn_positions = true\npitch_offset"),), "[plane.axes] turn_positions"),
         ((("row = {", 'p1 = { column = "p1", unit = "Pa" }\nrow = {'),), "[plane.columns] p1"),
         ((PROBE, ('["angle.pitch", "angle.yaw"]', '["calibration"]'), ('"0.05 deg"', '"0.5 %"')), "[probe]"),
     ],

@@ -15,11 +15,13 @@ from wakeledger.core.errors import DataError, SurveyError
 from wakeledger.core.grid import UniformGrid
 from wakeledger.core.names import VARIABLES
 from wakeledger.core.points import Points
+from wakeledger.core.rotation import rotation_matrix
 from wakeledger.intake.probe.record import Calibration
 from wakeledger.run.config import Survey, parse_survey, read_survey
 from wakeledger.run.config.plane import Plane
 from wakeledger.run.config.tunnel import TunnelInput
 from wakeledger.run.traverse.tubes import RakePoints, assemble
+from wakeledger.run.turned_positions import turned
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -49,7 +51,9 @@ class SurveyInput:
     rake : RakePoints or None
         Which tube of a rake took which point.
     read : Points or None
-        The points of a rake as read; None where `points` are.
+        The points as read, where `points` are those of a rake's tubes or turned; None where `points` are as read.
+    lean : float
+        Largest distance of a point from the station where the positions are turned, m.
     companions : mapping of str to SurveyInput
         Surveys that this one names: the tunnel without the model ("empty_tunnel"), the support alone ("support_tare").
     tare : TunnelInput or None
@@ -66,6 +70,7 @@ class SurveyInput:
     calibrations: Mapping[str, Calibration] = field(default_factory=dict)
     rake: RakePoints | None = None
     read: Points | None = None
+    lean: float = 0.0
     companions: Mapping[str, SurveyInput] = field(default_factory=dict)
     tare: TunnelInput | None = None
     core: tuple[UniformGrid, NDArray[np.bool_]] | None = None
@@ -87,6 +92,11 @@ class SurveyInput:
     def notes(self) -> list[str]:
         """What the survey file leaves open, as far as it matters: a computed flow needs no source of uncertainty."""
         said = self.survey.notes()
+        if self.lean > 0:
+            said.append(
+                "[plane.axes] turn_positions: the plane of the points leans, and they lie up to"
+                f" {1e3 * self.lean:.2g} mm from the station, which is taken for all of them"
+            )
         return [note for note in said if not (self.computed and note.startswith("[[uncertainty.source]]"))]
 
     @property
@@ -276,7 +286,8 @@ def _read_plane(survey: Survey, plane: Plane) -> tuple[Points, dict[str, str]]:
 def _with_stations(survey: SurveyInput, planes: Sequence[Points]) -> SurveyInput:
     """A survey of several planes with that of each plane by itself."""
     stations = tuple(
-        replace(survey, survey=survey.survey.of_plane(index), points=points) for index, points in enumerate(planes)
+        _assembled(replace(survey, survey=survey.survey.of_plane(index), points=points, read=None))
+        for index, points in enumerate(planes)
     )
     return replace(survey, stations=stations)
 
@@ -330,7 +341,11 @@ def check_companion(companion: Survey, name: str) -> None:
 
 
 def _assembled(survey: SurveyInput) -> SurveyInput:
-    """The same with the points of a rake where its tubes were."""
+    """The same with the points of a rake where its tubes were, and positions turned where that is asked for."""
+    axes = survey.survey.plane.axes
+    if axes.turn_positions:
+        points, lean = turned(survey.points, rotation_matrix(axes.pitch_offset, axes.yaw_offset, axes.roll_offset))
+        return replace(survey, points=points, read=survey.points, lean=lean)
     if not survey.survey.rake:
         return survey
     points, rake = assemble(survey.survey, survey.points)

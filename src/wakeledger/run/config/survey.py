@@ -213,9 +213,10 @@ class Survey(Table):
                 "the reference of each point is not used yet; leave it out, and give the drift as an uncertainty",
             )
             add(
-                plane.axes.turn_positions,
+                plane.axes.turn_positions and (raw or self.section is not None),
                 "[plane.axes] turn_positions",
-                "positions are not turned yet; leave it out, or turn them in the file",
+                "the places of a raw traverse and of a line are along the axes of the traverse, and are not turned;"
+                " leave it out, or turn them in the file",
             )
             add(
                 "tube" in plane.columns and not raw,
