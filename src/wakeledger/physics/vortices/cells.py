@@ -18,8 +18,9 @@ from numpy.typing import NDArray
 from scipy import ndimage, sparse, special
 
 from wakeledger.core.grid import Array, UniformGrid
-from wakeledger.physics.fields.circulation import cell_circulations, cell_circulations_adjoint, interval_weights
+from wakeledger.physics.fields.circulation import cell_circulations, cell_circulations_adjoint
 from wakeledger.physics.fields.gaussian_elements import Reflection
+from wakeledger.physics.vortices.lattice import TentLattice, circulation_covariance
 
 Mask = NDArray[np.bool_]
 
@@ -55,6 +56,8 @@ class WakeCells:
         Sum of the second moments along y and z about the centre, m²: a² of the Gaussian that is as wide.
     weights : sparse array, shape (n, (nz − 1)(ny − 1))
         Weight of each cell on the squares between grid points.
+    lattices : tuple of TentLattice
+        The tents that the cells are: those of the wake and those of the outer flow.
     """
 
     grid: UniformGrid
@@ -63,6 +66,7 @@ class WakeCells:
     area: Array
     spread: Array
     weights: sparse.csr_array
+    lattices: tuple[TentLattice, ...]
 
     @property
     def count(self) -> int:
@@ -112,13 +116,7 @@ class WakeCells:
         sparse array, shape (n, n)
             m⁴/s².
         """
-        grid = self.grid
-        along_y, along_z = interval_weights(grid.ny) * grid.dy, interval_weights(grid.nz) * grid.dz
-        # v runs along the lower edge to starboard and back along the upper one; w up one side and down the other.
-        from_v = _clean(self.weights @ sparse.kron(-_steps(grid.nz), along_y, format="csr"))
-        from_w = _clean(self.weights @ sparse.kron(along_z, _steps(grid.ny), format="csr"))
-        spread_v, spread_w = (np.broadcast_to(x, grid.shape).ravel()[None, :] for x in (variance_v, variance_w))
-        return sparse.csr_array((from_v * spread_v) @ from_v.T + (from_w * spread_w) @ from_w.T)
+        return circulation_covariance(self.lattices, self.grid, variance_v, variance_w)
 
     def gaussian_share(self, y: float, z: float, core: float) -> Array:
         """Share of one Gaussian vortex's circulation that falls to each cell, shape (n,).
@@ -164,22 +162,39 @@ def share_out(
     wake = np.asarray(wake, bool)
     if excluded is not None:
         wake = wake & ~np.asarray(excluded, bool)
-    presence = _presence(grid, wake, excluded, reflection).ravel()
-    fine = _tents(grid, step)
-    near = _squares(_within(grid, wake, _MARGIN * step)).ravel()
-    fine = sparse.csr_array(fine[np.flatnonzero(fine @ near.astype(float) > 0)])
+    presence = _presence(grid, wake, excluded, reflection)
+    fine_y, fine_z = _tents_along(grid.ny - 1, step / grid.dy), _tents_along(grid.nz - 1, step / grid.dz)
+    near = _squares(_within(grid, wake, _MARGIN * step))
+    fine = sparse.csr_array(sparse.kron(fine_z, fine_y, format="csr"))
+    in_wake = np.flatnonzero(fine @ near.ravel().astype(float) > 0)
+    fine = sparse.csr_array(fine[in_wake])
     left = 1.0 - np.asarray(fine.sum(axis=0)).ravel()
     left[left < _CANCELLED] = 0.0
     outer_step = max(OUTER_STEP * step, float(np.sqrt(grid.area / _MOST_OUTER)))
-    outer = _tents(grid, outer_step) * left[None, :]
-    weights = sparse.csr_array(sparse.vstack([fine, outer]) * presence[None, :])
+    outer_y, outer_z = _tents_along(grid.ny - 1, outer_step / grid.dy), _tents_along(grid.nz - 1, outer_step / grid.dz)
+    outer = sparse.csr_array(sparse.kron(outer_z, outer_y, format="csr")) * left[None, :]
+    weights = sparse.csr_array(sparse.vstack([fine, outer]) * presence.ravel()[None, :])
     weights.eliminate_zeros()
     area = np.asarray(weights.sum(axis=1)).ravel() * grid.cell_area
-    weights = sparse.csr_array(weights[np.flatnonzero(area > _EMPTY * step**2)])
-    return _with_moments(grid, weights)
+    kept = area > _EMPTY * step**2
+    number = np.where(kept, np.cumsum(kept) - 1, -1)
+    fine_number = np.full(fine_z.shape[0] * fine_y.shape[0], -1)
+    fine_number[in_wake] = number[: in_wake.size]
+    lattices = (
+        _lattice(fine_z, fine_y, presence, fine_number),
+        _lattice(outer_z, outer_y, left.reshape(presence.shape) * presence, number[in_wake.size :]),
+    )
+    return _with_moments(grid, sparse.csr_array(weights[np.flatnonzero(kept)]), lattices)
 
 
-def _with_moments(grid: UniformGrid, weights: sparse.csr_array) -> WakeCells:
+def _lattice(
+    along_z: sparse.csr_array, along_y: sparse.csr_array, share: Array, number: NDArray[np.int64]
+) -> TentLattice:
+    shape = along_z.shape[0], along_y.shape[0]
+    return TentLattice(along_z.toarray(), along_y.toarray(), share, number.reshape(shape))
+
+
+def _with_moments(grid: UniformGrid, weights: sparse.csr_array, lattices: tuple[TentLattice, ...]) -> WakeCells:
     yy, zz = np.meshgrid(grid.y[:-1] + grid.dy / 2, grid.z[:-1] + grid.dz / 2)
     yy, zz = yy.ravel(), zz.ravel()
     total = np.asarray(weights.sum(axis=1)).ravel()
@@ -189,14 +204,8 @@ def _with_moments(grid: UniformGrid, weights: sparse.csr_array) -> WakeCells:
     square = weights @ ((yy - middle_y) ** 2 + (zz - middle_z) ** 2) / total
     own = (grid.dy**2 + grid.dz**2) / 12
     spread = square - (y - middle_y) ** 2 - (z - middle_z) ** 2 + own
-    return WakeCells(grid=grid, y=y, z=z, area=total * grid.cell_area, spread=spread, weights=weights)
-
-
-def _tents(grid: UniformGrid, step: float) -> sparse.csr_array:
-    """Weights of all tents of one step on the squares between grid points, shape (tents, squares)."""
-    along_y = _tents_along(grid.ny - 1, step / grid.dy)
-    along_z = _tents_along(grid.nz - 1, step / grid.dz)
-    return sparse.csr_array(sparse.kron(along_z, along_y, format="csr"))
+    area = total * grid.cell_area
+    return WakeCells(grid=grid, y=y, z=z, area=area, spread=spread, weights=weights, lattices=lattices)
 
 
 def _tents_along(intervals: int, step: float) -> sparse.csr_array:
@@ -235,14 +244,3 @@ def _squares(mask: Mask) -> Mask:
     """Squares with any corner inside."""
     result: Mask = mask[:-1, :-1] | mask[1:, :-1] | mask[:-1, 1:] | mask[1:, 1:]
     return result
-
-
-def _steps(points: int) -> sparse.csr_array:
-    return sparse.csr_array(sparse.diags_array([-1.0, 1.0], offsets=[0, 1], shape=(points - 1, points)))
-
-
-def _clean(matrix: sparse.csr_array) -> sparse.csr_array:
-    matrix = sparse.csr_array(matrix)
-    matrix.data[np.abs(matrix.data) < _CANCELLED * np.abs(matrix.data).max(initial=0.0)] = 0.0
-    matrix.eliminate_zeros()
-    return matrix

@@ -364,8 +364,9 @@ def noise_bias(parts: WakeParts, variance_v: Array | float, variance_w: Array | 
     float
         ½ρ tr(K C), C the covariance of the cells' circulations, N.
     """
-    covariance = parts.cells.covariance(variance_v, variance_w)
-    return 0.5 * density * float(covariance.multiply(parts.among_cells).sum())
+    covariance = parts.cells.covariance(variance_v, variance_w).tocoo()
+    rows, columns = covariance.coords
+    return 0.5 * density * float(covariance.data @ parts.among_cells[rows, columns])
 
 
 def vortex_sum(
