@@ -67,9 +67,9 @@ def circulation_covariance(
 
     Notes
     -----
-    Γ_i = Σ_p t_i(p) s(p) c_p over the squares p with c = −D_z I_y v + I_z D_y w, D the difference of neighbours and I the
-    integral from point to point. With white noise cov(c_p, c_q) from v is (D_z D_zᵀ)(I_y I_yᵀ), three diagonals along z
-    and fifteen along y.
+    Γ_i = Σ_p t_i(p) s(p) c_p over the squares p with c = −D_z I_y v + I_z D_y w, D the difference of neighbours and I
+    the integral from point to point. With white noise cov(c_p, c_q) from v is (D_z D_zᵀ)(I_y I_yᵀ), three diagonals
+    along z and fifteen along y.
     """
     turned = [lattice.transposed for lattice in lattices]
     from_v = _from_velocity(lattices, _Stencil.of(grid.ny), np.asarray(variance_v, float) * grid.dy**2)
@@ -126,45 +126,50 @@ def _between(
     first: TentLattice, second: TentLattice, stencil: _Stencil, variance: Array
 ) -> tuple[Numbers, Numbers, Array]:
     """Entries of the covariance between the tents of two lattices."""
-    rows_of_squares = first.along_z.shape[1]
+    count = first.along_z.shape[1]
     padded_share, padded_z = np.pad(second.share, ((1, 1), (0, 0))), np.pad(second.along_z, ((0, 0), (1, 1)))
     # Along y: for every triangle of the first lattice those of the second that its noise reaches.
+    (starts_z, stops_z), (starts_y, stops_y) = _supports(first.along_z), _supports(first.along_y)
+    starts_other, stops_other = _supports(second.along_y)
     pairs_y: list[tuple[int, int]] = []
     sums: list[tuple[slice, list[Array]]] = []
     for b, triangle in enumerate(first.along_y):
         kept = first.number[:, b] >= 0
         if not kept.any():
             continue
-        rows, squares = _support(first.along_z[kept].any(axis=0)), _support(triangle)
+        rows = slice(int(starts_z[kept].min()), int(stops_z[kept].max()))
+        squares = slice(int(starts_y[b]), int(stops_y[b]))
         reach = stencil.reach(squares)
-        facing = _support(second.along_y[:, reach].any(axis=1))
-        map_rows = variance if not variance.ndim else variance[rows.start : rows.stop + 1]
-        spreads = stencil.spread(first.share[rows, squares] * triangle[squares], squares, reach, map_rows)
+        facing = range(
+            int(np.searchsorted(stops_other, reach.start, "right")), int(np.searchsorted(starts_other, reach.stop))
+        )
+        here = variance if not variance.ndim else variance[rows.start : rows.stop + 1]
+        spreads = stencil.spread(first.share[rows, squares] * triangle[squares], squares, reach, here)
         shares = (padded_share[rows.start + shift : rows.stop + shift, reach] for shift in range(3))
-        along = second.along_y[facing, reach].T
+        along = second.along_y[facing.start : facing.stop, reach].T
         sums.append((rows, [spread * share @ along for spread, share in zip(spreads, shares, strict=True)]))
-        pairs_y += [(b, other) for other in range(facing.start, facing.stop)]
+        pairs_y += [(b, other) for other in facing]
     # Along z: products of triangles in the same row and in neighbouring ones.
     nearby = padded_z[:, :-2] + padded_z[:, 1:-1] + padded_z[:, 2:]
     a, other_a = np.nonzero((first.along_z @ nearby.T) > 0)
     total = np.zeros((a.size, len(pairs_y)))
     for shift in range(3):
-        by_row = np.zeros((rows_of_squares, len(pairs_y)))
+        by_row = np.zeros((count, len(pairs_y)))
         column = 0
         for rows, parts in sums:
             width = parts[shift].shape[1]
             by_row[rows, column : column + width] = parts[shift]
             column += width
-        products = first.along_z[a] * padded_z[other_a, shift : shift + rows_of_squares]
+        products = first.along_z[a] * padded_z[other_a, shift : shift + count]
         total += sparse.csr_array(products) @ by_row
-    b, other_b = np.array(pairs_y, dtype=np.int64).reshape(-1, 2).T
-    numbers = first.number[a[:, None], b]
-    others = second.number[other_a[:, None], other_b]
+    along_first, along_second = np.array(pairs_y, dtype=np.int64).reshape(-1, 2).T
+    numbers = first.number[a[:, None], along_first]
+    others = second.number[other_a[:, None], along_second]
     held = (numbers >= 0) & (others >= 0) & (total != 0)
     return numbers[held], others[held], total[held]
 
 
-def _support(weights: Array | NDArray[np.bool_]) -> slice:
-    """Where the first and the last weight that is not zero stand."""
-    places = np.flatnonzero(weights)
-    return slice(int(places[0]), int(places[-1]) + 1) if places.size else slice(0, 0)
+def _supports(triangles: Array) -> tuple[Numbers, Numbers]:
+    """First square of each triangle and the one behind its last."""
+    held = triangles > 0
+    return held.argmax(axis=1), held.shape[1] - held[:, ::-1].argmax(axis=1)
