@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+from scipy import sparse
 
 from wakeledger.confidence.correlation import squared_exponential
 from wakeledger.confidence.noise_bias import quadratic_noise_bias
@@ -70,6 +71,22 @@ def test_variance_map_of_independent_noise_is_exact(operators):
     for variance in (RNG.random((z.size, y.size)), 1 + 0.1 * z + 0.02 * z * y):
         expected = dense(left_z, left_y, KERNEL, MASK, variance, (None, None))
         assert quadratic_noise_bias(left_z, left_y, KERNEL, MASK, variance) == pytest.approx(expected, rel=1e-11)
+
+
+@pytest.mark.parametrize("correlated", [False, True])
+def test_long_window_and_sparse_operators(correlated):
+    """More columns than are worked on at once; operators without their zeros."""
+    nz, ny = 5, 150
+    rng = np.random.default_rng(23)
+    left_z, left_y = rng.normal(size=(nz, nz)), derivative(ny)
+    kernel, mask = rng.normal(size=(2 * nz - 1, 2 * ny - 1)), rng.random((nz, ny))
+    along_y = squared_exponential(np.arange(ny) * 1.0, 2.0) if correlated else None
+    expected = dense(left_z, left_y, kernel, mask, 0.5, (None, along_y))
+    found = [
+        quadratic_noise_bias(z, y, kernel, mask, 0.5, correlation=(None, along_y))
+        for z, y in ((left_z, left_y), (sparse.csr_array(left_z), sparse.csr_array(left_y)))
+    ]
+    assert found == pytest.approx([expected] * 2, rel=1e-11)
 
 
 def test_slowly_varying_variance_with_correlation():

@@ -3,22 +3,28 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from typing import TypeAlias
 
 import numpy as np
 from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
+from scipy import sparse
 
 from wakeledger.core.grid import Array
 
-Kernel = Array | Callable[[NDArray[np.int64], NDArray[np.int64]], Array]
+Operator: TypeAlias = Array | sparse.csr_array
+Kernel: TypeAlias = Array | Callable[[NDArray[np.int64], NDArray[np.int64]], Array]
 
 _NEGLIGIBLE = 1e-10
+_ROUNDING = 1e-17
 _LOW_RANK = 8
+# Columns worked on at once, of which each meets only those within the covariance's reach.
+_COLUMNS = 64
 
 
 def quadratic_noise_bias(
-    left_z: Array,
-    left_y: Array,
+    left_z: Operator,
+    left_y: Operator,
     kernel: Kernel,
     mask: Array,
     variance: float | Array,
@@ -29,9 +35,9 @@ def quadratic_noise_bias(
 
     Parameters
     ----------
-    left_z : ndarray, shape (nz, nz_raw)
+    left_z : ndarray or sparse array, shape (nz, nz_raw)
         Operator along z from the data to the field that enters the form (a derivative, an interpolation, the identity).
-    left_y : ndarray, shape (ny, ny_raw)
+    left_y : ndarray or sparse array, shape (ny, ny_raw)
         Operator along y.
     kernel : ndarray, shape (2 nz - 1, 2 ny - 1), or callable
         Weights g at the offsets (dz, dy) in cells, g(0, 0) in the middle; a callable takes two integer arrays that
@@ -63,12 +69,12 @@ def quadratic_noise_bias(
     A variance that differs from point to point is exact for independent noise; with correlation it is taken as slowly
     varying: √(σ²_i σ²_j) at the two points of the form, each a mean weighted with the operators' squares.
     """
-    left_z, left_y, mask = (np.asarray(a, dtype=float) for a in (left_z, left_y, mask))
-    spread = np.asarray(variance, dtype=float)
+    onto_z, onto_y = (sparse.csr_array(left, dtype=float) for left in (left_z, left_y))
+    mask, spread = np.asarray(mask, dtype=float), np.asarray(variance, dtype=float)
     nz, ny = mask.shape
-    raw = left_z.shape[1], left_y.shape[1]
-    if (left_z.shape[0], left_y.shape[0]) != mask.shape:
-        raise ValueError(f"the operators give shape {(left_z.shape[0], left_y.shape[0])}; the mask has {mask.shape}")
+    raw = onto_z.shape[1], onto_y.shape[1]
+    if (onto_z.shape[0], onto_y.shape[0]) != mask.shape:
+        raise ValueError(f"the operators give shape {(onto_z.shape[0], onto_y.shape[0])}; the mask has {mask.shape}")
     if spread.ndim and spread.shape != raw:
         raise ValueError(f"variance has shape {spread.shape}; the data have {raw}")
     weights = _offset_weights(kernel, nz, ny)
@@ -77,23 +83,31 @@ def quadratic_noise_bias(
         return 0.0
     # Only the box around the region takes part.
     box = slice(rows[0], rows[-1] + 1), slice(columns[0], columns[-1] + 1)
-    mask, left_z, left_y = mask[box], left_z[box[0]], left_y[box[1]]
+    mask, onto_z, onto_y = mask[box], onto_z[box[0]], onto_y[box[1]]
     reach_z, reach_y = mask.shape[0] - 1, mask.shape[1] - 1
     weights = weights[nz - 1 - reach_z : nz + reach_z, ny - 1 - reach_y : ny + reach_y]
     if spread.ndim and spread.min() == spread.max():
         spread = spread[0, 0]
     if spread.ndim:
         if all(matrix is None for matrix in correlation):
-            return 0.5 * _independent(left_z, left_y, weights, mask, spread)
-        total = np.outer((left_z**2).sum(axis=1), (left_y**2).sum(axis=1))
-        local = left_z**2 @ spread @ (left_y**2).T
+            return 0.5 * _independent(onto_z, onto_y, weights, mask, spread)
+        square_z, square_y = onto_z.power(2), onto_y.power(2)
+        total = np.outer(square_z.sum(axis=1), square_y.sum(axis=1))
+        local = square_z @ spread @ square_y.T
         mask = mask * np.sqrt(np.divide(local, total, out=np.zeros_like(local), where=total > 0))
         spread = np.array(1.0)
     covariance_z, covariance_y = (
-        left @ left.T if matrix is None else left @ matrix @ left.T
-        for left, matrix in zip((left_z, left_y), correlation, strict=True)
+        _product(left) if matrix is None else np.asarray(left @ matrix @ left.T)
+        for left, matrix in zip((onto_z, onto_y), correlation, strict=True)
     )
     return 0.5 * float(spread) * _separable(covariance_z, covariance_y, weights, mask)
+
+
+def _product(left: sparse.csr_array, variance: Array | None = None) -> Array:
+    """Covariance of a linear map of independent noise."""
+    inner = left if variance is None else left * variance[None, :]
+    covariance: Array = sparse.csr_array(inner @ left.T).toarray()
+    return covariance
 
 
 def _offset_weights(kernel: Kernel, nz: int, ny: int) -> Array:
@@ -105,25 +119,32 @@ def _offset_weights(kernel: Kernel, nz: int, ny: int) -> Array:
     return weights
 
 
-def _band(covariance: Array) -> int:
+def _band(covariance: Array, least: float = _NEGLIGIBLE) -> int:
     """Largest offset at which a covariance matrix is not negligible."""
-    i, j = np.nonzero(np.abs(covariance) > _NEGLIGIBLE * np.abs(covariance).max())
+    i, j = np.nonzero(np.abs(covariance) > least * np.abs(covariance).max())
     return int(np.abs(i - j).max()) if i.size else 0
 
 
 def _separable(covariance_z: Array, covariance_y: Array, weights: Array, mask: Array) -> float:
     """Σ g C M M for a covariance that is a product of one symmetric matrix per axis."""
-    if _band(covariance_y) < _band(covariance_z):
+    band_z, band_y = _band(covariance_z), _band(covariance_y)
+    if band_y < band_z:
         covariance_z, covariance_y, weights, mask = covariance_y, covariance_z, weights.T, mask.T
+        band_z = band_y
     nz, ny = mask.shape
+    reach_y = _band(covariance_y, _ROUNDING)
     total = 0.0
-    for offset in range(_band(covariance_z) + 1):
-        coupling = _toeplitz(weights[nz - 1 + offset], ny)
-        if offset:
-            coupling = coupling + _toeplitz(weights[nz - 1 - offset], ny).T
-        coupling = coupling * covariance_y
+    for offset in range(band_z + 1):
+        forward, backward = _toeplitz(weights[nz - 1 + offset], ny), _toeplitz(weights[nz - 1 - offset], ny).T
         left = mask[: nz - offset] * np.diagonal(covariance_z, offset)[:, None]
-        total += float(np.vdot(left @ coupling, mask[offset:]))
+        for start in range(0, ny, _COLUMNS):
+            columns = slice(start, min(start + _COLUMNS, ny))
+            reach = slice(max(start - reach_y, 0), columns.stop + reach_y)
+            coupling = forward[reach, columns]
+            if offset:
+                coupling = coupling + backward[reach, columns]
+            coupling = coupling * covariance_y[reach, columns]
+            total += float(np.vdot(left[:, reach] @ coupling, mask[offset:, columns]))
     return total
 
 
@@ -132,17 +153,18 @@ def _toeplitz(row: Array, ny: int) -> Array:
     return sliding_window_view(row, ny)[::-1]
 
 
-def _independent(left_z: Array, left_y: Array, weights: Array, mask: Array, variance: Array) -> float:
+def _independent(
+    left_z: sparse.csr_array, left_y: sparse.csr_array, weights: Array, mask: Array, variance: Array
+) -> float:
     """Σ g C M M for independent noise whose variance differs from point to point."""
     along_z, sizes, along_y = np.linalg.svd(variance, full_matrices=False)
     rank = int((sizes > _NEGLIGIBLE * sizes[0]).sum())
     if rank <= _LOW_RANK:
         return sum(
-            float(sizes[r])
-            * _separable((left_z * along_z[:, r]) @ left_z.T, (left_y * along_y[r]) @ left_y.T, weights, mask)
+            float(sizes[r]) * _separable(_product(left_z, along_z[:, r]), _product(left_y, along_y[r]), weights, mask)
             for r in range(rank)
         )
-    return _point_by_point(left_z, left_y, weights, mask, variance)
+    return _point_by_point(left_z.toarray(), left_y.toarray(), weights, mask, variance)
 
 
 def _point_by_point(left_z: Array, left_y: Array, weights: Array, mask: Array, variance: Array) -> float:
