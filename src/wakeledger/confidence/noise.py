@@ -18,6 +18,9 @@ _CLIP = 3.0
 _CLIPPED_VARIANCE = 0.9733369
 _MAD_TO_SIGMA = 1.482602
 _FEWEST = 50
+#: The same on a line, whose outer flow has few points.
+_FEWEST_ON_A_LINE = 12
+_LINE_ORDER = 2
 _LONGEST = 2.0
 # Differences of exact data are a few units of rounding.
 _ROUNDING = 16 * np.finfo(float).eps
@@ -127,6 +130,45 @@ def _agree(one: _AxisNoise, other: _AxisNoise) -> bool:
     return abs(math.log(one.deviation / other.deviation)) < 4 * scatter
 
 
+def line_noise(position: Array, values: Array, *, skip: NDArray[np.bool_] | None = None) -> NoiseEstimate:
+    """Noise of a channel along a line, from how each point departs from its two neighbours.
+
+    Parameters
+    ----------
+    position : ndarray, shape (n,)
+        Places along the line, ascending; any spacing.
+    values : ndarray, shape (n,)
+        The channel; NaN where there is no value.
+    skip : ndarray of bool, shape (n,), optional
+        True where it is to be left out, as in the wake.
+
+    Returns
+    -------
+    NoiseEstimate
+        Its second axis is the line, in steps; NaN where fewer than 12 points have both neighbours.
+
+    Notes
+    -----
+    As `estimate_noise`, with the departure from the straight line between the neighbours, divided by √(1 + a² + b²)
+    for their shares a and b, in place of the sixth difference: of even steps it is the second one.
+    """
+    field = np.array(values, dtype=float)
+    if skip is not None:
+        field[skip] = np.nan
+    nan = math.nan
+    found = _AxisNoise(nan, nan, 0.0)
+    if field.size >= 3:
+        steps = np.diff(position)
+        before, after = steps[1:] / (steps[:-1] + steps[1:]), steps[:-1] / (steps[:-1] + steps[1:])
+        departures = (before * field[:-2] + after * field[2:] - field[1:-1]) / np.sqrt(1 + before**2 + after**2)
+        size = float(np.nanmax(np.abs(field), initial=0.0))
+        found = _noise_of_differences(departures[None, :], size, order=_LINE_ORDER, fewest=_FEWEST_ON_A_LINE)
+    reason = None
+    if not found.size >= 1:
+        reason = f"fewer than {_FEWEST_ON_A_LINE} points with both neighbours"
+    return NoiseEstimate(found.deviation, (nan, found.length), found.size, (nan, found.deviation), reason)
+
+
 def _axis_noise(field: Array) -> _AxisNoise:
     """Noise from differences along the last axis."""
     columns = field.shape[1] - _ORDER
@@ -135,16 +177,23 @@ def _axis_noise(field: Array) -> _AxisNoise:
     weights = comb(_ORDER, np.arange(_ORDER + 1)) * (-1.0) ** np.arange(_ORDER + 1)
     weights /= math.sqrt(float((weights**2).sum()))
     differences = sum(w * field[:, k : k + columns] for k, w in enumerate(weights))
+    return _noise_of_differences(differences, float(np.nanmax(np.abs(field), initial=0.0)))
+
+
+def _noise_of_differences(
+    differences: Array, largest: float, *, order: int = _ORDER, fewest: int = _FEWEST
+) -> _AxisNoise:
+    """Noise from differences of some order along the last axis, that leave the size of white noise as it is."""
     values = differences[np.isfinite(differences)]
-    if values.size < _FEWEST:
+    if values.size < fewest:
         return _AxisNoise(math.nan, math.nan, 0.0)
     deviation = _clipped_deviation(values)
     # Errors common to neighbouring lines, as in a traverse row, leave fewer independent values.
     across, _ = _robust_correlation(differences[:-1], differences[1:])
     across = 0.0 if math.isnan(across) else across
-    repeated = min((1 + across**2) / max(1 - across**2, 1e-12), float(len(field)))
+    repeated = min((1 + across**2) / max(1 - across**2, 1e-12), float(len(differences)))
     count = values.size / repeated
-    white, errors = _white_filter()
+    white, errors = _white_filter(order)
     lag_one, pairs_one = _robust_correlation(differences[:, :-1], differences[:, 1:])
     lag_two, pairs_two = _robust_correlation(differences[:, :-2], differences[:, 2:])
     # Short stretches have far fewer pairs than values.
@@ -152,14 +201,14 @@ def _axis_noise(field: Array) -> _AxisNoise:
         abs(lag_one - white[1]) > 4 * errors[0] * math.sqrt(repeated / max(pairs_one, 1)),
         abs(lag_two - white[2]) > 4 * errors[1] * math.sqrt(repeated / max(pairs_two, 1)),
     )
-    if deviation <= _ROUNDING * float(np.nanmax(np.abs(field))):
+    if deviation <= _ROUNDING * largest:
         return _AxisNoise(0.0, math.nan, count * _independent_share(white))
     if not any(departs) or math.isnan(lag_one):
         return _AxisNoise(deviation, math.nan, count * _independent_share(white))
-    lengths, first, gain = _correlated_filter()
+    lengths, first, gain = _correlated_filter(order)
     length = float(np.interp(lag_one, first, lengths))
     passed = float(np.interp(length, lengths, gain))
-    share = _independent_share(_autocovariance(_correlation_at_lags(length, 6 * _ORDER)))
+    share = _independent_share(_autocovariance(_correlation_at_lags(length, 6 * order), order))
     slope = float(np.interp(lag_one, first, np.gradient(np.log(gain), first))) / 2
     relative_variance = 1 / (2 * count * share) + (slope * errors[0]) ** 2 / count
     return _AxisNoise(deviation / math.sqrt(passed), length, 1 / (2 * relative_variance), lag_one > first[-1])
@@ -187,11 +236,11 @@ def _robust_correlation(a: Array, b: Array) -> tuple[float, int]:
     return (plus - minus) / (plus + minus) if plus + minus > 0 else 0.0, count
 
 
-def _autocovariance(correlation: Array) -> Array:
+def _autocovariance(correlation: Array, order: int) -> Array:
     """Autocovariance at lags 0, 1, 2 … of the filtered noise, from the noise's correlation at lags 0, 1, …."""
-    lags = np.arange(-_ORDER, _ORDER + 1)
-    taps = comb(2 * _ORDER, lags + _ORDER) * (-1.0) ** lags / comb(2 * _ORDER, _ORDER)
-    shifts = np.arange(correlation.size - _ORDER)
+    lags = np.arange(-order, order + 1)
+    taps = comb(2 * order, lags + order) * (-1.0) ** lags / comb(2 * order, order)
+    shifts = np.arange(correlation.size - order)
     result: Array = (taps[None, :] * correlation[np.abs(shifts[:, None] + lags[None, :])]).sum(axis=1)
     return result
 
@@ -209,10 +258,10 @@ def _independent_share(autocovariance: Array) -> float:
 
 
 @cache
-def _white_filter() -> tuple[Array, tuple[float, float]]:
+def _white_filter(order: int) -> tuple[Array, tuple[float, float]]:
     """Autocorrelation of filtered white noise, and Bartlett's standard errors at lags 1 and 2, times √n."""
-    correlation = _autocovariance(np.eye(1, 6 * _ORDER)[0])
-    lags = np.arange(1, 3 * _ORDER)
+    correlation = _autocovariance(np.eye(1, 6 * order)[0], order)
+    lags = np.arange(1, 3 * order)
     errors = []
     for lag in (1, 2):
         terms = correlation[lags + lag] + correlation[np.abs(lags - lag)] - 2 * correlation[lag] * correlation[lags]
@@ -221,11 +270,11 @@ def _white_filter() -> tuple[Array, tuple[float, float]]:
 
 
 @cache
-def _correlated_filter() -> tuple[Array, Array, Array]:
+def _correlated_filter(order: int) -> tuple[Array, Array, Array]:
     """Correlation lengths in cells, lag-one autocorrelation after the filter, share of the variance that it passes."""
     lengths = np.linspace(0.2, _LONGEST, 181)
     first, gain = np.empty_like(lengths), np.empty_like(lengths)
     for k, length in enumerate(lengths):
-        covariance = _autocovariance(_correlation_at_lags(float(length), _ORDER + 2))
+        covariance = _autocovariance(_correlation_at_lags(float(length), order + 2), order)
         first[k], gain[k] = covariance[1] / covariance[0], covariance[0]
     return lengths, first, gain
