@@ -9,29 +9,33 @@ a seventh of a second on one core.
 from __future__ import annotations
 
 import argparse
-import json
 import math
 import os
-import sys
-import time
-from collections.abc import Iterator, Mapping, Sequence
-from concurrent.futures import ProcessPoolExecutor
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cache
 from pathlib import Path
 from typing import Any
-from unittest import mock
 
 import numpy as np
 from numpy.typing import NDArray
+from tests.benchmarks.small_surveys import (
+    JUDGED,
+    closed_form,
+    continued,
+    curvature,
+    made_ready,
+    noise_second_order,
+    read,
+    source_text,
+    survey_text,
+)
 
 from wakeledger.confidence.correlation import correlated_field
-from wakeledger.confidence.linear_budget import LinearBudget, SecondOrder, linear_budget
+from wakeledger.confidence.linear_budget import LinearBudget, SecondOrder
 from wakeledger.confidence.samples import Samples
-from wakeledger.confidence.sampling import ErrorSampler, SourceErrors
+from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.terms import NumericalTerm, add_terms
-from wakeledger.physics.vortices.vortex_sum import VortexSum
-from wakeledger.run import gridded
 from wakeledger.run.chain.chain import Chain
 from wakeledger.run.chain.outputs import OUTPUTS
 from wakeledger.run.chain.reduction import Variation
@@ -39,7 +43,6 @@ from wakeledger.run.config import parse_survey
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.prepared import Prepared, prepare
 from wakeledger.run.uncertainty.draws import terms_of
-from wakeledger.run.uncertainty.linear import linear_slopes, survey_budget
 from wakeledger.run.uncertainty.numerics import MASK, RESOLUTION
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import (
@@ -65,7 +68,6 @@ CORE, SPACING = 0.06, 0.03
 WINDOW_Y, WINDOW_Z = (-0.84, 0.84), (-0.53, 0.49)
 HALF_Y, HALF_Z = (0.0, 0.84), (-0.42, 0.54)
 SECTION = RectangularDuct((-1.0, 1.0), (-0.6, 0.7))
-JUDGED = ("profile_drag", "induced_drag", "total_drag", "lift")
 AT = [OUTPUTS.index(name) for name in JUDGED]
 #: Draws of the surveys in which Monte Carlo is held against the closed form.
 DRAWS = 400
@@ -109,26 +111,16 @@ class Case:
     length: float = 0.0
     spacings: tuple[float, float] = (1.0, 1.0)
 
-    def sources(self) -> str:
+    def sources(self) -> list[str]:
         """The ``[[uncertainty.source]]`` tables that declare these errors."""
         text = []
         for effect, sizes in (("random", self.random), ("per_row", self.per_row), ("systematic", self.systematic)):
             for names, size in sizes.items():
                 targets = [name if "." in name else f"plane.{name}" for name in names.split()]
-                unit = _UNITS[targets[0].split(".")[1]]
-                text.append(
-                    f'[[uncertainty.source]]\nname = "{effect} {names}"\napplies_to = {json.dumps(targets)}\n'
-                    f'effect = "{effect}"\nstandard_uncertainty = "{size!r} {unit}"\n'
-                )
-        return "\n".join(text)
+                text.append(source_text(f"{effect} {names}", targets, effect, size))
+        return text
 
 
-_UNITS = {
-    **dict.fromkeys(("u", "v", "w", "speed"), "m/s"),
-    **dict.fromkeys(("total_pressure", "static_pressure"), "Pa"),
-    **dict.fromkeys(("pitch", "yaw"), "rad"),
-    "density": "kg/m^3",
-}
 _SYSTEMATIC = {
     "total_pressure": 1.0,
     "static_pressure": 3.0,
@@ -236,33 +228,17 @@ def survey(case: Case, generator: np.random.Generator) -> Simulated:
         )
     if case.half:
         boundary += '\nreflection = "y"'
-    text = f"""
-title = "coverage"
-[reference]
-speed = "{SPEED + wrong.get("reference.speed", 0.0)!r} m/s"
-density = "{DENSITY + wrong.get("reference.density", 0.0)!r} kg/m^3"
-static_pressure = "{REFERENCE.static_pressure!r} Pa"
-[model]
-reference_area = "0.180 m^2"
-span = "{SPAN!r} m"
-[plane]
-file = "plane.csv"
-station = "1000 m"
-primary = "total_pressure"
-[plane.columns]
-y = {{ column = "y", unit = "m" }}
-z = {{ column = "z", unit = "m" }}
-u = {{ column = "u", unit = "m/s" }}
-v = {{ column = "v", unit = "m/s" }}
-w = {{ column = "w", unit = "m/s" }}
-total_pressure = {{ column = "pt", unit = "Pa", relative_to = "total" }}
-static_pressure = {{ column = "ps", unit = "Pa", relative_to = "static" }}
-[boundary]
-{boundary}
-[uncertainty]
-seed = {int(generator.integers(2**31))}
-{case.sources()}
-"""
+    text = survey_text(
+        "coverage",
+        speed=SPEED + wrong.get("reference.speed", 0.0),
+        density=DENSITY + wrong.get("reference.density", 0.0),
+        static_pressure=REFERENCE.static_pressure,
+        area=0.18,
+        span=SPAN,
+        boundary=boundary,
+        seed=int(generator.integers(2**31)),
+        sources=case.sources(),
+    )
     noisy = Recording(at, values)
     return Simulated(SurveyInput(parse_survey(text, "coverage.toml"), noisy.points(), {}), noisy, still, exact)
 
@@ -304,66 +280,12 @@ def _missing(case: Case, at: Positions, spacing: float, generator: np.random.Gen
 # -- one survey ---------------------------------------------------------------------------------------------------
 
 
-def made_ready(given: SurveyInput) -> Prepared:
-    """A survey as it is prepared from its file, but for the vortices of a cross-check, on which no row hangs.
-
-    To fit them takes a third of the time.
-    """
-    nan = math.nan
-    none = VortexSum(nan, nan, (), 0.0, 0.0, 0.0, 0, 0.0, "left out of the study")
-    with mock.patch.object(gridded, "find_vortices", lambda *_: (None, none)):
-        return prepare(given)
-
-
-def closed_form(prepared: Prepared, second: Mapping[str, SecondOrder]) -> LinearBudget:
-    """Uncertainty of a prepared survey from exact derivatives; its second order is that of the case."""
-    slopes = linear_slopes(prepared.chain, prepared.nominal, prepared.sources, prepared.layouts, estimates=False)
-    return linear_budget(slopes, prepared.sources, prepared.layouts, names=OUTPUTS, second=second)
-
-
-def curvature(prepared: Prepared) -> np.ndarray:
-    """Variance that the second order of few errors of the whole survey adds, alone and in pairs, over `OUTPUTS`.
-
-    ½ Σ H_ij² with the second derivatives H by errors of unit variance, from the chain at single errors and at pairs.
-    The package's budget has the diagonal only. The total drag holds −½ρ∬(u* − U)², to which the errors of speed and
-    static pressure go as their product.
-    """
-    single: list[dict[str, np.ndarray]] = []
-    for source in prepared.sources:
-        errors = SourceErrors(source, prepared.layouts, seed=0)
-        single += [errors.deviation(latent) for latent in range(errors.latents)]
-    names = sorted({name for one in single for name in one})
-    zero = {name: 0 * next(one[name] for one in single if name in one) for name in names}
-    many = [zero | one for one in single]
-    pairs = [(i, j) for i in range(len(many)) for j in range(i)]
-    moved = [*many, *({name: -one[name] for name in names} for one in many)]
-    moved += [{name: many[i][name] + many[j][name] for name in names} for i, j in pairs]
-    found = prepared.chain.vectors(
-        {name: np.concatenate([one[name] for one in moved]) for name in names}, estimates=False
-    )
-    change = found - prepared.nominal.vector
-    up, down, both = np.split(change, [len(many), 2 * len(many)])
-    variance: np.ndarray = 0.5 * np.square(up + down).sum(axis=0)
-    for (i, j), together in zip(pairs, both, strict=True):
-        variance += np.square(together - up[i] - up[j])
-    return variance
-
-
 @cache
 def second_order(case: str) -> dict[str, SecondOrder]:
-    """Second order of the sources of a case that the crossflow's noise comes from, of one survey for all of them.
-
-    It is a thousandth of the variance of every judged row and takes four times as long as everything else.
-    """
+    """Second order of the noise of a case, of one survey for all of them."""
     if not CASES[case].random:
         return {}
-    prepared = prepare(survey(CASES[case], np.random.default_rng([0, list(CASES).index(case)])).given)
-    chain, nominal, given, layouts = prepared.chain, prepared.nominal, prepared.sources, prepared.layouts
-    slopes = linear_slopes(chain, nominal, given, layouts, estimates=False)
-    noisy = {noise.name for noise in prepared.noises}
-    whole = survey_budget(chain, nominal, slopes, given, layouts, noisy=noisy)
-    orders = zip(whole.sources, whole.second, strict=True)
-    return {source.name: order for source, order in orders if source.name in noisy}
+    return noise_second_order(prepare(survey(CASES[case], np.random.default_rng([0, list(CASES).index(case)])).given))
 
 
 def judge(name: str, seed: int, k: int, *, draws: int = 0, numerical: bool = False) -> dict[str, Any]:
@@ -393,7 +315,7 @@ def judge(name: str, seed: int, k: int, *, draws: int = 0, numerical: bool = Fal
     if not case.random:
         found["linear_u"] = u[AT].tolist()
         first = np.diagonal(budget.covariance, axis1=1, axis2=2).sum(axis=0)
-        u = np.sqrt(first + curvature(prepared))
+        u = np.sqrt(first + sum(curvature(prepared)))
     found |= {"u": u[AT].tolist(), "half_width": (budget.coverage_factor() * u)[AT].tolist()}
     if case.random:
         found |= _paired(prepared, made)
@@ -453,10 +375,10 @@ def _numerical_terms(prepared: Prepared, made: Simulated, truth: Mapping[str, fl
 
 # -- many surveys -------------------------------------------------------------------------------------------------
 
-Task = tuple[str, int, int, int, bool]
 
-
-def tasks(case: str, surveys: int, *, seed: int = 1, checked: int = CHECKED, every: int = EVERY) -> list[Task]:
+def tasks(
+    case: str, surveys: int, *, seed: int = 1, checked: int = CHECKED, every: int = EVERY
+) -> list[tuple[str, int, int, int, bool]]:
     """What is to be done for a case; survey k is the same whatever their number is and whoever does it."""
     found = []
     for k in range(surveys):
@@ -465,38 +387,10 @@ def tasks(case: str, surveys: int, *, seed: int = 1, checked: int = CHECKED, eve
     return found
 
 
-def done(task: Task) -> dict[str, Any]:
+def done(task: tuple[str, int, int, int, bool]) -> dict[str, Any]:
     """One survey of a study."""
     case, seed, k, draws, numerical = task
     return judge(case, seed, k, draws=draws, numerical=numerical)
-
-
-def study(wanted: Sequence[Task], *, jobs: int = 1) -> Iterator[dict[str, Any]]:
-    """Judge surveys, in their order."""
-    if jobs == 1:
-        yield from map(done, wanted)
-        return
-    with ProcessPoolExecutor(jobs) as pool:
-        yield from pool.map(done, wanted, chunksize=8)
-
-
-def read(results: Path, *, seed: int = 1) -> dict[str, list[dict[str, Any]]]:
-    """The surveys in a file of results by case, in the order of their numbers; a line cut short is left out."""
-    found: dict[str, dict[int, dict[str, Any]]] = {}
-    if results.exists():
-        for line in results.read_text(encoding="utf-8").splitlines():
-            try:
-                one = json.loads(line)
-            except json.JSONDecodeError:
-                continue
-            if one["seed"] == seed:
-                found.setdefault(one["case"], {})[one["k"]] = one
-    return {case: [own[k] for k in sorted(own)] for case, own in found.items()}
-
-
-def column(found: Sequence[Mapping[str, Any]], name: str) -> np.ndarray:
-    """One figure of the surveys that have it, shape (surveys, ...)."""
-    return np.array([one[name] for one in found if name in one])
 
 
 def main(arguments: Sequence[str] | None = None) -> None:
@@ -513,15 +407,7 @@ def main(arguments: Sequence[str] | None = None) -> None:
     known = {(case, one["k"]) for case, own in read(options.results, seed=options.seed).items() for one in own}
     wanted = [task for case in options.case or CASES for task in tasks(case, options.surveys, seed=options.seed)]
     wanted = [task for task in wanted if (task[0], task[2]) not in known]
-    start = time.perf_counter()
-    with options.results.open("a", encoding="utf-8") as file:
-        for count, one in enumerate(study(wanted, jobs=options.jobs), 1):
-            file.write(json.dumps(one) + "\n")
-            file.flush()
-            if count % 100 == 0:
-                print(
-                    f"{one['case']}: {count} of {len(wanted)} in {time.perf_counter() - start:.0f} s", file=sys.stderr
-                )
+    continued(options.results, done, wanted, jobs=options.jobs)
     found = read(options.results, seed=options.seed)
     studies = {case: found[case] for case in options.case or CASES if case in found}
     # The tables know the cases from here.

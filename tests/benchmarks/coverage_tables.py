@@ -7,20 +7,10 @@ from collections.abc import Mapping, Sequence
 from typing import Any
 
 import numpy as np
-from tests.benchmarks.coverage import CASES, COVERED, JUDGED, NUMERICAL, column
+from tests.benchmarks.coverage import CASES, COVERED, NUMERICAL
+from tests.benchmarks.small_surveys import JUDGED, column, markdown_table, share_text, with_block
 
 from wakeledger.run.uncertainty.numerics import MASK, RESOLUTION
-
-
-def _share(hits: np.ndarray) -> str:
-    count, share = hits.size, float(hits.mean())
-    doubt = math.sqrt(max(share * (1 - share), 0.25 / count) / count)
-    return f"{100 * share:.1f} ± {100 * doubt:.1f} %"
-
-
-def _table(heads: Sequence[str], lines: Sequence[Sequence[str]]) -> str:
-    rows = [heads, ["---"] * len(heads), *lines]
-    return "\n".join(f"| {' | '.join(row)} |" for row in rows)
 
 
 def coverage_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
@@ -37,7 +27,7 @@ def coverage_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
         if linear.size:
             lines += _lines(f"{case}, linear", error, linear, 1.96 * linear, None)
     heads = "case, row, surveys, truth inside U95, with numerical terms, scatter of the errors, u / scatter, mean error"
-    return _table(heads.split(", "), lines)
+    return markdown_table(heads.split(", "), lines)
 
 
 def _lines(case: str, error: np.ndarray, u: np.ndarray, half: np.ndarray, wider: np.ndarray | None) -> list[list[str]]:
@@ -49,7 +39,7 @@ def _lines(case: str, error: np.ndarray, u: np.ndarray, half: np.ndarray, wider:
             case,
             row,
             str(count),
-            _share(inside[:, k]),
+            share_text(inside[:, k]),
             "" if wider is None else f"{100 * wider[:, k].mean():.1f} %",
             f"{sd[k]:.4f} N",
             f"{ratio[k]:.3f} ± {1 / math.sqrt(2 * count):.3f}",
@@ -73,7 +63,7 @@ def closed_form_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str
             cells += [f"{mean:.3f} ± {by:.3f}" for mean, by in zip(ratio.mean(axis=0), doubt, strict=True)]
         lines.append(cells)
     names = [f"{kind}, {row.replace('_', ' ')}" for kind in ("u", "U95") for row in JUDGED]
-    return _table(["case", "surveys", *names], lines)
+    return markdown_table(["case", "surveys", *names], lines)
 
 
 def bias_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
@@ -93,7 +83,7 @@ def bias_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
         "case | subtracted | found in the survey's region | share left | found, region drawn anew | share left | "
         "that over u"
     )
-    return _table(heads.split(" | "), lines)
+    return markdown_table(heads.split(" | "), lines)
 
 
 def numerical_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
@@ -110,13 +100,13 @@ def numerical_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
                 typical, told = (np.sqrt(np.mean(np.square(one[:, k]))) for one in (error, half))
                 scatter = column(found, "error")[:, k].std(ddof=1)
                 largest = 100 * np.abs(error[:, k]).max() / scatter
-                cells = [_share(inside), f"{typical:.5f} N", f"{told:.5f} N", f"{largest:.1f} %"]
+                cells = [share_text(inside), f"{typical:.5f} N", f"{told:.5f} N", f"{largest:.1f} %"]
                 lines.append([term, row, str(len(found)), *cells])
     heads = (
         "term, row, surveys, true effect inside U95 of the term, rms of the true effect, rms of the term's U95, "
         "largest true effect / scatter of the errors"
     )
-    return _table(heads.split(", "), lines)
+    return markdown_table(heads.split(", "), lines)
 
 
 def report_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
@@ -128,9 +118,9 @@ def report_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
         wrong = CASES[case].factor != 1.0, CASES[case].length > 0
         cells = [case, str(len(found))]
         for key, hit in zip(("size", "shared"), wrong, strict=True):
-            cells.append(f"{_share(column(found, key))} ({'hits' if hit else 'false alarms'})")
+            cells.append(f"{share_text(column(found, key))} ({'hits' if hit else 'false alarms'})")
         lines.append(cells)
-    return _table(["case", "surveys", "size called wrong", "called shared by neighbours"], lines)
+    return markdown_table(["case", "surveys", "size called wrong", "called shared by neighbours"], lines)
 
 
 TABLES = {
@@ -145,7 +135,5 @@ TABLES = {
 def written(page: str, studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
     """A page with its tables made again."""
     for name, table in TABLES.items():
-        begin, end = f"<!-- generated: {name} -->", "<!-- end -->"
-        before, rest = page.split(begin)
-        page = f"{before}{begin}\n\n{table(studies)}\n\n{end}{rest.split(end, 1)[1]}"
+        page = with_block(page, f"<!-- generated: {name} -->", "<!-- end -->", table(studies))
     return page

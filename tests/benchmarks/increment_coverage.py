@@ -1,7 +1,9 @@
 """Do the error bars of increments cover? Many pairs of small synthetic surveys whose shared errors really are shared.
 
-``python -m tests.benchmarks.increment_coverage --pairs 250`` runs all cases and prints the table; ``--write
-docs/increments.md`` puts it into that page. One pair takes about half a second on one core.
+``python -m tests.benchmarks.increment_coverage --pairs 1000 --results increments.jsonl`` runs all cases. Every pair is
+appended to the file of results as soon as it is done, and a later run does only what is missing there. ``--write
+docs/increments.md`` puts the table into that page. One pair takes a third of a second on one core: what noise does is
+found in closed form, what each error of a whole survey does as the program finds it for its archive.
 """
 
 from __future__ import annotations
@@ -9,16 +11,31 @@ from __future__ import annotations
 import argparse
 import math
 import os
-import sys
-import time
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cache
 from pathlib import Path
+from typing import Any
 
 import numpy as np
+from tests.benchmarks.small_surveys import (
+    JUDGED,
+    closed_form,
+    column,
+    continued,
+    curvature,
+    made_ready,
+    markdown_table,
+    noise_second_order,
+    read,
+    share_text,
+    source_text,
+    survey_text,
+    with_block,
+)
 
 from wakeledger.confidence.components import Component, scatter, shifted_components, term_components
+from wakeledger.confidence.linear_budget import SecondOrder
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.ledger.cancellation import subtract
@@ -26,7 +43,7 @@ from wakeledger.ledger.contributions import Contributions
 from wakeledger.run.chain.outputs import OUTPUTS, coefficient_of
 from wakeledger.run.config import parse_survey
 from wakeledger.run.load import SurveyInput
-from wakeledger.run.prepared import prepare
+from wakeledger.run.prepared import Prepared, prepare
 from wakeledger.run.uncertainty.draws import terms_of
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import SyntheticWake, wing_wake
@@ -34,15 +51,13 @@ from wakeledger.synthetic.recordings import Errors, grid_positions, record
 
 DENSITY, PRESSURE, AREA, SPAN = 1.2, 100_000.0, 0.18, 1.2
 CORE, SPACING, COUNT_Y, COUNT_Z = 0.05, 0.025, 68, 36
-JUDGED = ("profile_drag", "induced_drag", "total_drag", "lift")
-DRAWS = 100
+#: Draws of the surveys in which Monte Carlo is held against the closed form.
+DRAWS = 400
+#: Every which pair that is done in, and every which has numerical terms.
+CHECKED, EVERY = 32, 16
+AT = np.array([[OUTPUTS.index(name) for name in JUDGED], [OUTPUTS.index(coefficient_of(name)) for name in JUDGED]])
 
-_UNITS = {
-    **dict.fromkeys(("u", "v", "w", "speed"), "m/s"),
-    **dict.fromkeys(("total_pressure", "static_pressure"), "Pa"),
-    **dict.fromkeys(("pitch", "yaw"), "rad"),
-    "density": "kg/m^3",
-}
+
 _SYSTEMATIC = {
     "plane.total_pressure": 1.0,
     "plane.static_pressure": 4.0,
@@ -114,28 +129,16 @@ def truth(side: int, speed: float) -> np.ndarray:
     return np.stack([forces, forces / (0.5 * DENSITY * speed**2 * AREA)])
 
 
-def _sources(case: Case) -> str:
-    text = [_source(f"noise {name}", f"plane.{name}", "random", size) for name, size in case.random.items()]
+def _sources(case: Case) -> list[str]:
     shape = "rectangular" if case.rectangular else "normal"
-    for target, size in case.shared.items():
-        text.append(_source(f"shared {target}", target, "systematic", size, shared_id=f"rig {target}", shape=shape))
-    text += [_source(f"own {target}", target, "systematic", size) for target, size in case.own.items()]
-    return "\n".join(text)
-
-
-def _source(
-    name: str, target: str, effect: str, size: float, *, shared_id: str | None = None, shape: str = "normal"
-) -> str:
-    unit = _UNITS[target.split(".")[1]]
-    lines = [
-        "[[uncertainty.source]]",
-        f'name = "{name}"',
-        f'applies_to = ["{target}"]',
-        f'effect = "{effect}"',
-        f'standard_uncertainty = "{size!r} {unit}"',
-        f'distribution = "{shape}"',
+    return [
+        *(source_text(f"noise {name}", [f"plane.{name}"], "random", size) for name, size in case.random.items()),
+        *(
+            source_text(f"shared {name}", [name], "systematic", size, shape=shape, shared_id=f"rig {name}")
+            for name, size in case.shared.items()
+        ),
+        *(source_text(f"own {name}", [name], "systematic", size) for name, size in case.own.items()),
     ]
-    return "\n".join([*lines, *([] if shared_id is None else [f'shared_id = "{shared_id}"']), ""])
 
 
 def pair(case: Case, generator: np.random.Generator) -> tuple[SurveyInput, SurveyInput]:
@@ -169,206 +172,182 @@ def _survey(
         yaw=wrong.get("angle.yaw", 0.0),
     )
     recording = record(wake(side, speed), grid_positions(y, z), generator=generator, errors=errors)
-    text = f"""
-title = "pair, {"AB"[side]}"
-[reference]
-speed = "{speed + wrong.get("reference.speed", 0.0)!r} m/s"
-density = "{DENSITY + wrong.get("reference.density", 0.0)!r} kg/m^3"
-static_pressure = "{PRESSURE!r} Pa"
-[model]
-reference_area = "{AREA!r} m^2"
-span = "{SPAN!r} m"
-[plane]
-file = "plane.csv"
-station = "1000 m"
-primary = "total_pressure"
-[plane.columns]
-y = {{ column = "y", unit = "m" }}
-z = {{ column = "z", unit = "m" }}
-u = {{ column = "u", unit = "m/s" }}
-v = {{ column = "v", unit = "m/s" }}
-w = {{ column = "w", unit = "m/s" }}
-total_pressure = {{ column = "pt", unit = "Pa", relative_to = "total" }}
-static_pressure = {{ column = "ps", unit = "Pa", relative_to = "static" }}
-[boundary]
-kind = "free_air"
-[uncertainty]
-draws = {DRAWS}
-seed = {int(generator.integers(2**31))}
-{_sources(case)}
-"""
+    text = survey_text(
+        f"pair, {'AB'[side]}",
+        speed=speed + wrong.get("reference.speed", 0.0),
+        density=DENSITY + wrong.get("reference.density", 0.0),
+        static_pressure=PRESSURE,
+        area=AREA,
+        span=SPAN,
+        seed=int(generator.integers(2**31)),
+        sources=_sources(case),
+    )
     return SurveyInput(parse_survey(text, "pair.toml"), recording.points(), {})
 
 
-def contributions(given: SurveyInput, *, draws: int, numerical: bool) -> tuple[np.ndarray, Contributions]:
-    """Rows and coefficients of one survey, (2, rows), and what each error does to them, as the archive keeps it."""
-    prepared = prepare(given)
-    chain, seed = prepared.chain, given.survey.uncertainty.seed
+@cache
+def second_order(case: str, side: int) -> dict[str, SecondOrder]:
+    """Second order of the noise of a case in A or in B, of one survey for all of them."""
+    given = pair(CASES[case], np.random.default_rng([0, list(CASES).index(case)]))[side]
+    return noise_second_order(prepare(given))
+
+
+def _followed(prepared: Prepared, *, seed: int) -> tuple[ErrorSampler, tuple[Component, ...]]:
+    """Every error of the whole survey by itself, over `OUTPUTS`, as the archive keeps it."""
     sampler = ErrorSampler(prepared.sources, prepared.layouts, seed=seed)
-    at = np.array([[OUTPUTS.index(name) for name in JUDGED], [OUTPUTS.index(coefficient_of(name)) for name in JUDGED]])
-    flat = at.ravel()
+    few = [one for one in sampler.by_source if one.source.effect == "systematic"]
 
     def evaluate(errors: dict[str, np.ndarray]) -> np.ndarray:
-        return chain.vectors(errors, estimates=False)[:, flat]
+        return prepared.chain.vectors(errors, estimates=False)
 
+    if not few:
+        return sampler, ()
+    return sampler, shifted_components(evaluate, sampler, few, len(OUTPUTS), batch=64, workers=1)
+
+
+def _kept(components: Sequence[Component], covariance: np.ndarray) -> Contributions:
+    """Contributions over `JUDGED` from figures over `OUTPUTS`."""
+    parts = tuple(replace(one, linear=one.linear[AT], curved=one.curved[AT]) for one in components)
+    left = np.stack([covariance[np.ix_(at, at)] for at in AT])
+    return Contributions(JUDGED, parts, left, np.full(AT.shape, math.inf))
+
+
+def contributions(prepared: Prepared, second: Mapping[str, SecondOrder], *, seed: int) -> Contributions:
+    """What each error does to the rows of one survey, in closed form."""
+    _, found = _followed(prepared, seed=seed)
+    budget = closed_form(prepared, second)
+    noisy = [k for k, source in enumerate(budget.sources) if source.effect != "systematic"]
+    left = budget.covariance[noisy].sum(axis=0) + np.diag(budget.contributions[noisy].sum(axis=0))
+    left -= np.diag(np.diag(budget.covariance[noisy].sum(axis=0)))
+    if found:
+        # What pairs of errors do is in nobody's share: the archive has it in the scatter of the draws.
+        left += np.diag(curvature(prepared)[1])
+    return _kept(found, left)
+
+
+def drawn_contributions(prepared: Prepared, *, draws: int, seed: int) -> Contributions:
+    """The same from draws, as the program finds it."""
+    sampler, found = _followed(prepared, seed=seed)
     few = [one for one in sampler.by_source if one.source.effect == "systematic"]
-    samples = Samples(tuple(map(str, flat)), evaluate(sampler.draw(0, draws)))
-    found = shifted_components(evaluate, sampler, few, flat.size, batch=draws, workers=1) if few else ()
-    left = scatter(samples, few, found).reshape(2, len(JUDGED), 2, len(JUDGED))
-    parts = [_over(one, at.shape) for one in found]
-    if numerical:
-        parts += [_over(one, at.shape, flat) for one in term_components(terms_of(prepared, given))]
-    covariance = np.stack([left[0, :, 0], left[1, :, 1]])
-    values = np.array([prepared.nominal.values[OUTPUTS[k]] for k in flat]).reshape(at.shape)
-    return values, Contributions(JUDGED, tuple(parts), covariance, np.full(at.shape, math.inf))
+    samples = Samples(OUTPUTS, prepared.chain.vectors(sampler.draw(0, draws), estimates=False))
+    return _kept(found, np.nan_to_num(scatter(samples, few, found)))
 
 
-def _over(one: Component, shape: tuple[int, ...], pick: np.ndarray | None = None) -> Component:
-    linear, curved = (x if pick is None else x[pick] for x in (one.linear, one.curved))
-    return replace(one, linear=linear.reshape(shape), curved=curved.reshape(shape))
+def judge(name: str, seed: int, k: int, *, draws: int = 0, numerical: bool = False) -> dict[str, Any]:
+    """Reduce pair k of a case, take its increment by the program's own algebra, and hold it to the truth.
 
-
-@dataclass(frozen=True)
-class Outcome:
-    """One pair judged against the truth; arrays of shape (2, rows), values and coefficients.
-
-    Attributes
-    ----------
-    error : ndarray
-        Increment minus true increment.
-    u, half_width : ndarray
-        Its standard uncertainty and the half width of its 95 % interval.
-    apart : ndarray
-        Root of the sum of squares of the standard uncertainties of A and B.
+    They settle everything about it. Over values and coefficients and `JUDGED`: ``error``, increment minus true
+    increment; ``u`` and ``half_width`` of its 95 % interval, measured sources alone; ``apart``, the root of the sum of
+    squares of the standard uncertainties of A and B; ``mc_u`` and ``mc_half_width`` of so many Monte Carlo draws of
+    each survey, where there are any; ``half_width_all`` with numerical terms, where they are wanted.
     """
-
-    error: np.ndarray
-    u: np.ndarray
-    half_width: np.ndarray
-    apart: np.ndarray
-
-
-def judge(case: Case, generator: np.random.Generator, *, draws: int = DRAWS, numerical: bool = False) -> Outcome:
-    """Reduce one pair by the chain, take its increment by the program's own algebra, and hold it to the truth."""
-    values, parts = zip(
-        *(contributions(one, draws=draws, numerical=numerical) for one in pair(case, generator)), strict=True
-    )
-    difference = subtract(*parts)
+    case = CASES[name]
+    given = pair(case, np.random.default_rng([seed, list(CASES).index(name), k]))
+    ready = [made_ready(one) for one in given]
+    seeds = [one.survey.uncertainty.seed for one in given]
+    parts = [contributions(ready[side], second_order(name, side), seed=seeds[side]) for side in (0, 1)]
+    values = [one.nominal.vector[AT] for one in ready]
     exact = truth(1, case.speeds[1]) - truth(0, case.speeds[0])
     variances = [np.einsum("qrr->qr", one.covariance) for one in parts]
-    return Outcome(
-        values[1] - values[0] - exact,
-        np.sqrt(np.einsum("qrr->qr", difference.covariance)),
-        difference.half_width(draws=4000),
-        np.sqrt(variances[0] + variances[1]),
-    )
+    found: dict[str, Any] = {"case": name, "seed": seed, "k": k}
+    found["error"] = (values[1] - values[0] - exact).tolist()
+    found["apart"] = np.sqrt(variances[0] + variances[1]).tolist()
+    ways = {"": parts}
+    if draws:
+        ways["mc_"] = [
+            drawn_contributions(one, draws=draws, seed=number) for one, number in zip(ready, seeds, strict=True)
+        ]
+    for prefix, own in ways.items():
+        difference = subtract(*own)
+        found[f"{prefix}u"] = np.sqrt(np.einsum("qrr->qr", difference.covariance)).tolist()
+        found[f"{prefix}half_width"] = difference.half_width().tolist()
+    if numerical:
+        terms = [
+            _kept(term_components(terms_of(one, each)), np.zeros((len(OUTPUTS), len(OUTPUTS)))).components
+            for one, each in zip(ready, given, strict=True)
+        ]
+        wide = [replace(one, components=(*one.components, *more)) for one, more in zip(parts, terms, strict=True)]
+        found["half_width_all"] = subtract(*wide).half_width().tolist()
+    return found
 
 
-@dataclass(frozen=True)
-class Study:
-    """All pairs of one case; arrays of shape (pairs, 2, rows)."""
-
-    case: str
-    error: np.ndarray
-    u: np.ndarray
-    half_width: np.ndarray
-    apart: np.ndarray
-
-    @property
-    def pairs(self) -> int:
-        """Number of pairs."""
-        return len(self.error)
-
-    @property
-    def coverage(self) -> np.ndarray:
-        """Share of the pairs whose interval holds the true increment, shape (2, rows)."""
-        return (np.abs(self.error) <= self.half_width).mean(axis=0)
-
-    @property
-    def tightening(self) -> np.ndarray:
-        """Uncertainty if nothing cancelled over that of the increment, root mean squares, shape (2, rows)."""
-        return np.sqrt((self.apart**2).mean(axis=0) / (self.u**2).mean(axis=0))
+Task = tuple[str, int, int, int, bool]
 
 
-def study(
-    case: str,
-    pairs: int,
-    *,
-    seed: int = 1,
-    draws: int = DRAWS,
-    numerical: bool = False,
-    progress: Callable[[int], None] | None = None,
-) -> Study:
-    """Judge many pairs of a case; pair k is the same whatever their number is."""
-    found = []
-    for k in range(pairs):
-        generator = np.random.default_rng([seed, list(CASES).index(case), k])
-        found.append(judge(CASES[case], generator, draws=draws, numerical=numerical))
-        if progress is not None:
-            progress(k + 1)
-    columns = {name: np.array([getattr(one, name) for one in found]) for name in Outcome.__dataclass_fields__}
-    return Study(case, **columns)
+def tasks(case: str, pairs: int, *, seed: int = 1) -> list[Task]:
+    """What is to be done for a case; pair k is the same whatever their number is and whoever does it."""
+    return [(case, seed, k, DRAWS if k % CHECKED == 1 else 0, k % EVERY == 0) for k in range(pairs)]
 
 
-def table(studies: Sequence[Study]) -> str:
-    """Markdown table of the studies, in counts."""
-    lines = [
-        "| case | row | pairs | true increment inside U95 | scatter of the errors | mean u | ratio | "
-        "u if nothing cancelled / u |",
-        "| --- | --- | ---: | ---: | ---: | ---: | ---: | ---: |",
-    ]
-    for one in studies:
+def done(task: Task) -> dict[str, Any]:
+    """One pair of a study."""
+    case, seed, k, draws, numerical = task
+    return judge(case, seed, k, draws=draws, numerical=numerical)
+
+
+def tightening(found: Sequence[Mapping[str, Any]]) -> np.ndarray:
+    """Uncertainty if nothing cancelled over that of the increment, root mean squares, shape (2, rows)."""
+    apart, u = (np.square(column(found, name)).mean(axis=0) for name in ("apart", "u"))
+    ratio: np.ndarray = np.sqrt(apart / u)
+    return ratio
+
+
+def table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
+    """Markdown table of the studies; the coefficients, in counts."""
+    lines = []
+    for case, found in studies.items():
+        error, u, half = (column(found, name)[:, 1] for name in ("error", "u", "half_width"))
+        wide = [one for one in found if "half_width_all" in one]
+        wider = np.abs(column(wide, "error")) <= column(wide, "half_width_all") if wide else None
+        drawn = [one for one in found if "mc_half_width" in one]
+        scattered = 1e4 * np.sqrt(np.square(error).mean(axis=0))
+        typical = 1e4 * np.sqrt(np.square(u).mean(axis=0))
         for k, row in enumerate(JUDGED):
-            inside = one.coverage[1, k]
-            doubt = 100 * math.sqrt(max(inside * (1 - inside), 0.25 / one.pairs) / one.pairs)
-            scattered = 1e4 * math.sqrt(float((one.error[:, 1, k] ** 2).mean()))
-            u = 1e4 * math.sqrt(float((one.u[:, 1, k] ** 2).mean()))
+            ratios = [one["half_width"][1][k] / one["mc_half_width"][1][k] for one in drawn]
             lines.append(
-                f"| {one.case} | {row} | {one.pairs} | {100 * inside:.1f} ± {doubt:.1f} % | {scattered:.2f} counts | "
-                f"{u:.2f} counts | {u / scattered:.2f} | {one.tightening[1, k]:.1f} |"
+                [
+                    case,
+                    row,
+                    str(len(found)),
+                    share_text(np.abs(error[:, k]) <= half[:, k]),
+                    f"{scattered[k]:.2f} counts",
+                    f"{typical[k]:.2f} counts",
+                    f"{typical[k] / scattered[k]:.3f} ± {1 / math.sqrt(2 * len(found)):.3f}",
+                    f"{tightening(found)[1, k]:.1f}",
+                    "" if wider is None else f"{100 * wider[:, 1, k].mean():.1f} %",
+                    f"{np.mean(ratios):.3f}" if ratios else "",
+                ]
             )
-    return "\n".join(lines)
+    heads = (
+        "case, row, pairs, true increment inside U95, scatter of the errors, mean u, u / scatter, "
+        "u if nothing cancelled / u, with numerical terms, U95 over Monte Carlo's"
+    )
+    return markdown_table(heads.split(", "), lines)
 
 
 _BEGIN, _END = "<!-- generated: begin -->", "<!-- generated: end -->"
 
 
 def main(arguments: Sequence[str] | None = None) -> None:
-    """Run the study and print or write its table."""
+    """Run what is missing in the study, and print or write its table."""
     parser = argparse.ArgumentParser(prog="python -m tests.benchmarks.increment_coverage", description=__doc__)
     parser.add_argument("--pairs", type=int, default=50, help="pairs per case (default 50)")
     parser.add_argument("--case", action="append", choices=list(CASES), help="a case; all if not given")
-    parser.add_argument("--draws", type=int, default=DRAWS, help=f"Monte Carlo draws per survey (default {DRAWS})")
     parser.add_argument("--seed", type=int, default=1)
-    parser.add_argument("--numerical", action="store_true", help="add the numerical terms, which takes longer")
-    parser.add_argument("--write", type=Path, help="page whose generated block is replaced")
+    parser.add_argument("--jobs", type=int, default=1, help="processes (default 1)")
+    parser.add_argument("--results", type=Path, required=True, help="file of results, which is continued")
+    parser.add_argument("--write", type=Path, help="page whose table is replaced")
     options = parser.parse_args(arguments)
     os.environ.setdefault("OMP_NUM_THREADS", "1")
-    studies = []
-    for case in options.case or CASES:
-        start = time.perf_counter()
-
-        def show(done: int, case: str = case, start: float = start) -> None:
-            if done % 20 == 0:
-                print(f"{case}: {done} in {time.perf_counter() - start:.0f} s", file=sys.stderr)
-
-        studies.append(
-            study(
-                case,
-                options.pairs,
-                seed=options.seed,
-                draws=options.draws,
-                numerical=options.numerical,
-                progress=show,
-            )
-        )
-    text = table(studies)
+    known = {(case, one["k"]) for case, own in read(options.results, seed=options.seed).items() for one in own}
+    wanted = [task for case in options.case or CASES for task in tasks(case, options.pairs, seed=options.seed)]
+    continued(options.results, done, [task for task in wanted if (task[0], task[2]) not in known], jobs=options.jobs)
+    found = read(options.results, seed=options.seed)
+    text = table({case: found[case] for case in options.case or CASES if case in found})
     print(text)
     if options.write:
         page = options.write.read_text(encoding="utf-8")
-        before, rest = page.split(_BEGIN)
-        after = rest.split(_END)[1]
-        options.write.write_text(f"{before}{_BEGIN}\n\n{text}\n\n{_END}{after}", encoding="utf-8")
+        options.write.write_text(with_block(page, _BEGIN, _END, text), encoding="utf-8")
 
 
 if __name__ == "__main__":

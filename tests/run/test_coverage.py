@@ -11,6 +11,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 from scipy.stats import binom, chi2
+from tests.benchmarks.small_surveys import column as read_column
 
 #: Surveys of each case, and of each kind of wrong declaration; all numbers below are the same in every run.
 SURVEYS, WRONG = 14, 4
@@ -38,8 +39,8 @@ def studies(coverage):
 
 
 @pytest.fixture(scope="module")
-def column(coverage):
-    return coverage.column
+def column():
+    return read_column
 
 
 def bounds(count, probability):
