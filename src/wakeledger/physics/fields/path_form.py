@@ -8,6 +8,7 @@ derivatives and what noise adds to it are exact and in closed form.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -98,15 +99,14 @@ def path_fields(
     inside: Mask = form.cells[..., rows, columns]
     mid_z, mid_y = cell_weights(grid.nz)[rows], cell_weights(grid.ny)[columns]
     run_z, run_y = centred_integral(grid.nz) * grid.dz, centred_integral(grid.ny) * grid.dy
-    edge_z, edge_y = grid.dz * cell_integrals(grid.nz)[rows], grid.dy * cell_integrals(grid.ny)[columns]
-    along_z = edge_z @ w[..., :, columns.start : columns.stop + 1]
-    along_y = v[..., rows.start : rows.stop + 1, :] @ edge_y.T
-    circulation = np.diff(along_z, axis=-1) - np.diff(along_y, axis=-2)
-    upward = (mid_z @ run_z) @ v
-    across = w @ (mid_y @ run_y).T
-    straight_z = upward @ mid_y.T
-    straight_y = mid_z @ across
-    psi = (straight_z - straight_y + upward.mean(axis=-1)[..., :, None] - across.mean(axis=-2)[..., None, :]) / 2
+    to_z, to_y = _path_to_cells(grid.nz)[rows] * grid.dz, _path_to_cells(grid.ny)[columns] * grid.dy
+    circulation = _block_circulation(v, w, grid, rows, columns)
+    # Only the points about the block and the means along whole rows and columns enter.
+    about_z, about_y = _held(mid_z), _held(mid_y)
+    straight_z = (to_z @ v[..., about_y]) @ mid_y[:, about_y].T
+    straight_y = mid_z[:, about_z] @ (w[..., about_z, :] @ to_y.T)
+    upward, across = v.mean(axis=-1) @ to_z.T, w.mean(axis=-2) @ to_y.T
+    psi = (straight_z - straight_y + upward[..., :, None] - across[..., None, :]) / 2
     held = circulation * inside
     in_y = held.sum(axis=-2) @ mid_y
     in_z = held.sum(axis=-1) @ mid_z
@@ -128,6 +128,20 @@ def path_fields(
     foreign = outer.constant(v, w)[..., None, None]
     foreign = foreign + v0[..., None, None] * (z - outer.z0)[:, None] - w0[..., None, None] * (y - outer.y0)
     return PathFields(y, z, inside, circulation, psi - foreign, by_row - middle, by_column - middle, v0, w0)
+
+
+@lru_cache(maxsize=16)
+def _path_to_cells(n: int) -> Array:
+    """Integral from all starting points alike to the value of each cell, for unit spacing, shape (n − 1, n)."""
+    matrix: Array = cell_weights(n) @ centred_integral(n)
+    matrix.flags.writeable = False
+    return matrix
+
+
+def _held(weights: Array) -> slice:
+    """Points from the first to the last that any row of weights takes."""
+    places = np.flatnonzero(weights.any(axis=0))
+    return slice(int(places[0]), int(places[-1]) + 1)
 
 
 def _block(cells: Mask) -> tuple[slice, slice]:
@@ -201,19 +215,48 @@ def path_noise_bias(form: PathForm, variance_v: Array, variance_w: Array) -> flo
     Σ a_i b_i with a and b linear in the data gains Σ cov(a_i, b_i); every term is separable along the axes.
     """
     grid, outer = form.grid, form.outer
-    cells = form.cells.astype(float)
-    mid_z, mid_y = cell_weights(grid.nz), cell_weights(grid.ny)
-    step_z, step_y = np.diff(np.eye(grid.nz), axis=0), np.diff(np.eye(grid.ny), axis=0)
-    path_z, path_y = grid.dz * mid_z @ centred_integral(grid.nz), grid.dy * mid_y @ centred_integral(grid.ny)
-    share_z = grid.dz * cell_integrals(grid.nz) * (mid_z + 1 / grid.nz) / 2
-    share_y = grid.dy * cell_integrals(grid.ny) * (mid_y + 1 / grid.ny) / 2
-    bias = -np.sum(cells * ((step_z * path_z) @ variance_v @ share_y.T))
-    bias -= np.sum(cells * (share_z @ variance_w @ (step_y * path_y).T))
-    y, z = _cell_centres(grid, slice(0, grid.nz - 1), slice(0, grid.ny - 1))
-    net = adjoint_of_circulation(cells, grid)
-    in_y = adjoint_of_circulation(cells * (y - outer.y0), grid)
-    in_z = adjoint_of_circulation(cells * (z - outer.z0)[:, None], grid)
+    cells = form.cells
+    # A cell's edge and the paths to its middle share the points of the edge, each along its own axis.
+    ends_z, ends_y = grid.dz * _path_to_ends(grid.nz), grid.dy * _path_to_ends(grid.ny)
+    share_z, share_y = (
+        step * integrals * (weights + 1 / weights.shape[1]) / 2
+        for step, integrals, weights in (
+            (grid.dz, cell_integrals(grid.nz), cell_weights(grid.nz)),
+            (grid.dy, cell_integrals(grid.ny), cell_weights(grid.ny)),
+        )
+    )
+    rows, columns = _block(cells)
+    inside = cells[rows, columns].astype(float)
+    from_v = ends_z[0, rows, None] * variance_v[:-1][rows] + ends_z[1, rows, None] * variance_v[1:][rows]
+    from_w = ends_y[0, columns] * variance_w[:, :-1][:, columns] + ends_y[1, columns] * variance_w[:, 1:][:, columns]
+    bias = -np.vdot(from_v, inside @ share_y[columns]) - np.vdot(from_w, share_z[rows].T @ inside)
+    # What the outer flow takes off ψ: its constant, and the offset times the distance from where it is read.
+    y, z = _cell_centres(grid, rows, columns)
     a, b = outer.v_from_v, outer.v_from_w
-    bias -= np.sum(variance_v * (net[0] * outer.constant_from_v + in_z[0] * a + in_y[0] * b))
-    bias -= np.sum(variance_w * (net[1] * outer.constant_from_w + in_z[1] * b - in_y[1] * a))
+    for on_v, on_w, weight in (
+        (outer.constant_from_v, outer.constant_from_w, inside),
+        (a, b, inside * (z - outer.z0)[:, None]),
+        (b, -a, inside * (y - outer.y0)),
+    ):
+        bias -= np.vdot(weight, _block_circulation(variance_v * on_v, variance_w * on_w, grid, rows, columns))
     return float(bias)
+
+
+@lru_cache(maxsize=32)
+def _path_to_ends(n: int) -> Array:
+    """Minus and plus the integral to each cell's value from the point before it and the point behind, shape (2, n − 1).
+
+    The integral runs from all starting points alike, for unit spacing.
+    """
+    path, cell = _path_to_cells(n), np.arange(n - 1)
+    return np.stack([-path[cell, cell], path[cell, cell + 1]])
+
+
+def _block_circulation(v: Array, w: Array, grid: UniformGrid, rows: slice, columns: slice) -> Array:
+    """Circulation around the cells of a block."""
+    edge_z, edge_y = grid.dz * cell_integrals(grid.nz)[rows], grid.dy * cell_integrals(grid.ny)[columns]
+    about_z, about_y = _held(edge_z), _held(edge_y)
+    along_z = edge_z[:, about_z] @ w[..., about_z, columns.start : columns.stop + 1]
+    along_y = v[..., rows.start : rows.stop + 1, about_y] @ edge_y[:, about_y].T
+    circulation: Array = np.diff(along_z, axis=-1) - np.diff(along_y, axis=-2)
+    return circulation
