@@ -15,7 +15,7 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from wakeledger.cli import exits, wakeledger
-from wakeledger.present.products import FILES
+from wakeledger.present.products import OF_LEDGER
 
 SAMPLE = Path(__file__).resolve().parents[2] / "sample_surveys" / "wing_and_tail"
 SURVEY = (SAMPLE / "survey.toml").read_text("utf-8").replace("draws = 300", "draws = 100")
@@ -138,12 +138,11 @@ def refused(cli, tmp_path):
 @pytest.fixture(scope="module")
 def finished(tmp_path_factory):
     """A finished reduction, its ledger and its folder."""
-    from wakeledger.present.products import write_products
     from wakeledger.run.survey import load, reduce
 
     folder = tmp_path_factory.mktemp("finished")
     ledger = reduce(load(write(folder)))
-    write_products(ledger, folder / "survey-ledger")
+    OF_LEDGER.write(ledger, folder / "survey-ledger")
     return SimpleNamespace(folder=folder, ledger=ledger, archive=folder / "survey-ledger" / "ledger.nc")
 
 
@@ -154,7 +153,7 @@ def quick(monkeypatch, finished):
     from wakeledger.present import report
 
     monkeypatch.setattr(room, "reduce", lambda *_, **__: finished.ledger)
-    monkeypatch.setattr(report, "report_html", lambda ledger: "<!DOCTYPE html>")
+    monkeypatch.setattr(report, "report_html", lambda *_: "<!DOCTYPE html>")
     return finished
 
 
@@ -422,7 +421,7 @@ def test_two_runs_into_one_folder(cli, tmp_path, monkeypatch, quick):
 
     survey, out, inner = write(tmp_path), tmp_path / "out", []
 
-    def meanwhile(ledger):
+    def meanwhile(ledger, _figures):
         if not inner:
             inner.append(None)
             inner[0] = exits.run(wakeledger, ["reduce", str(survey), "--out", str(out), "--quiet"])
@@ -432,7 +431,7 @@ def test_two_runs_into_one_folder(cli, tmp_path, monkeypatch, quick):
     done = cli("reduce", survey, "--out", out)
     assert inner[0] in (exits.DONE, exits.CHECK_FAILED)
     assert done.status == exits.INPUT_WRONG and "exist already" in done.err
-    assert {path.name for path in out.iterdir()} == set(FILES)
+    assert {path.name for path in out.iterdir()} == set(OF_LEDGER.files)
     assert {path.name for path in tmp_path.iterdir()} == {"survey.toml", "traverse.csv", "out"}
 
 
@@ -540,7 +539,7 @@ def plain_report(monkeypatch):
     """The report without its figures, which other tests draw."""
     from wakeledger.present import report
 
-    monkeypatch.setattr(report, "report_html", lambda ledger: "<!DOCTYPE html>")
+    monkeypatch.setattr(report, "report_html", lambda *_: "<!DOCTYPE html>")
 
 
 @pytest.mark.usefixtures("plain_report")
@@ -590,7 +589,7 @@ def test_names_with_blanks_and_umlauts_from_another_folder(cli, tmp_path, monkey
     monkeypatch.chdir("/")
     done = cli("reduce", folder / "Flügel ①.toml")
     assert done.err == "" and done.status in (exits.DONE, exits.CHECK_FAILED)
-    assert {path.name for path in (folder / "Flügel ①-ledger").iterdir()} == set(FILES)
+    assert {path.name for path in (folder / "Flügel ①-ledger").iterdir()} == set(OF_LEDGER.files)
 
 
 def mutations():

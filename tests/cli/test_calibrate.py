@@ -109,9 +109,28 @@ def test_wrong_input_is_one_line_and_nothing_is_written(cli, tmp_path):
     assert "does not exist" in err
     status, _, err = cli("calibrate", probe, "--out", tmp_path)
     assert (status, "this is a directory" in err) == (exits.INPUT_WRONG, True)
-    status, _, err = cli("calibrate", write_probe(tmp_path), "--out", tmp_path / "no" / "such.nc")
+    status, _, err = cli("calibrate", write_probe(tmp_path), "--out", tmp_path / "table.csv" / "such.nc")
     assert status == exits.INPUT_WRONG
-    assert "cannot be written" in err
+    assert err.count("\n") == 1
+    assert "is a file" in err
+
+
+def test_calibration_and_figure_appear_together_or_not_at_all(cli, tmp_path, monkeypatch):
+    probe = write_probe(tmp_path)
+    before = sorted(tmp_path.rglob("*"))
+
+    def full(*_):
+        raise OSError(28, "No space left on device")
+
+    with monkeypatch.context() as patch:
+        patch.setattr("wakeledger.present.figures.canvas.figure_bytes", full)
+        status, out, err = cli("calibrate", probe, "--out", tmp_path / "new" / "probe.nc")
+    assert (status, out) == (exits.INPUT_WRONG, "")
+    assert "No space left on device" in err
+    assert str(tmp_path / "new") in err
+    assert sorted(tmp_path.rglob("*")) == before
+    assert cli("calibrate", probe, "--out", tmp_path / "new" / "probe.nc")[0] == exits.DONE
+    assert {path.name for path in (tmp_path / "new").iterdir()} == {"probe.nc", "probe.svg"}
 
 
 def test_figure_shows_grid_range_and_errors(tmp_path):

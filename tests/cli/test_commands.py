@@ -15,7 +15,7 @@ from wakeledger.core.errors import SurveyError
 from wakeledger.ledger.archive import open_archive, write_archive
 from wakeledger.ledger.inspection import Inspection
 from wakeledger.ledger.tabular import json_text, ledger_json
-from wakeledger.present.products import FILES
+from wakeledger.present.products import OF_LEDGER
 
 
 @pytest.fixture
@@ -54,7 +54,7 @@ def survey_room(monkeypatch, ledger):
     room.load, room.reduce, room.inspect = load, reduce, inspect
     monkeypatch.setitem(sys.modules, "wakeledger.run.survey", room)
     monkeypatch.setattr(wakeledger_run, "survey", room, raising=False)
-    monkeypatch.setattr(report, "report_html", lambda ledger: "<!DOCTYPE html>")
+    monkeypatch.setattr(report, "report_html", lambda *_: "<!DOCTYPE html>")
     return room
 
 
@@ -86,7 +86,7 @@ def test_reduce_writes_the_products_and_prints_the_ledger(cli, survey_room, surv
     status, out, err = cli("reduce", survey)
     assert (status, err) == (0, "")
     folder = survey.parent / "clean wing-ledger"
-    assert {path.name for path in folder.iterdir()} == set(FILES)
+    assert {path.name for path in folder.iterdir()} == set(OF_LEDGER.files)
     assert "induced drag" in out and "WARN  edge vorticity" in out
     assert f"Written to {folder}: ledger.nc, ledger.json, ledger.csv, report.html" in out
     assert json.loads((folder / "ledger.json").read_text("utf-8")) == ledger_json(passing)
@@ -105,7 +105,8 @@ def test_a_failed_check_is_status_1_with_the_products_written(cli, survey_room, 
 def test_options_reach_the_reduction(cli, survey_room, survey, passing, monkeypatch):
     from wakeledger.present.figures import gallery
 
-    monkeypatch.setattr(gallery, "DRAWINGS", {"budget": gallery.DRAWINGS["budget"]})
+    monkeypatch.setattr(gallery, "OF_LEDGER", {"budget": gallery.OF_LEDGER["budget"]})
+    monkeypatch.setattr(gallery, "OF_PLANE", {})
     survey_room.ledger = passing
     out_folder = survey.parent / "a" / "b"
     status, out, err = cli("reduce", survey, "--out", out_folder, "--draws", 150, "--figures", "svg, PNG", "--quiet")

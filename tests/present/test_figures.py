@@ -33,7 +33,7 @@ def labels(axes):
 
 def test_every_figure_is_drawn(drawn):
     assert list(drawn) == [
-        "total_pressure_loss", "axial_vorticity", "axial_velocity", "span_loading", "estimates", "budget",
+        "estimates", "budget", "total_pressure_loss", "axial_vorticity", "axial_velocity", "span_loading",
     ]  # fmt: skip
 
 
@@ -208,9 +208,8 @@ def test_the_style_leaves_no_trace(ledger):
 
 
 def test_saving(ledger, tmp_path, monkeypatch):
-    few = {name: gallery.DRAWINGS[name] for name in ("estimates", "budget")}
-    monkeypatch.setattr(gallery, "DRAWINGS", few)
-    names = [path.name for path in figures.save_figures(ledger, tmp_path, ("png", "svg"))]
+    monkeypatch.setattr(gallery, "OF_PLANE", {})
+    names = [path.name for path in figures.save(figures.draw(ledger), tmp_path, ("png", "svg"))]
     assert len(names) == 4
     assert {path.name for path in tmp_path.iterdir()} == set(names)
     with pytest.raises(ValueError, match="allowed: pdf, png, svg"):

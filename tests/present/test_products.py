@@ -9,8 +9,9 @@ import pytest
 from wakeledger.core.errors import DataError, ProductExistsError
 from wakeledger.ledger.archive import open_archive
 from wakeledger.ledger.tabular import ledger_csv, ledger_json
-from wakeledger.present import products
-from wakeledger.present.products import FILES, existing_products, write_products
+from wakeledger.present.products import OF_LEDGER
+
+FILES = OF_LEDGER.files
 
 
 def tree(folder):
@@ -23,17 +24,18 @@ def quick(monkeypatch):
     import wakeledger.present.report as report
     from wakeledger.present.figures import gallery
 
-    monkeypatch.setattr(gallery, "DRAWINGS", {"budget": gallery.DRAWINGS["budget"]})
+    monkeypatch.setattr(gallery, "OF_LEDGER", {"budget": gallery.OF_LEDGER["budget"]})
+    monkeypatch.setattr(gallery, "OF_PLANE", {})
 
-    monkeypatch.setattr(report, "report_html", lambda ledger: f"<p>{ledger.title}</p>")
+    monkeypatch.setattr(report, "report_html", lambda ledger, figures: f"<p>{ledger.title}</p>")
 
 
 def test_every_product_holds_the_ledger(ledger, tmp_path, monkeypatch):
     from wakeledger.present.figures import gallery
 
-    monkeypatch.setattr(gallery, "DRAWINGS", {name: gallery.DRAWINGS[name] for name in ("estimates", "budget")})
+    monkeypatch.setattr(gallery, "OF_PLANE", {})
     out = tmp_path / "deep" / "er" / "out"
-    names = write_products(ledger, out, figures=("svg",))
+    names = OF_LEDGER.write(ledger, out, figures=("svg",))
     assert [str(name) for name in names[:4]] == list(FILES)
     assert len(names) == 6 and all((out / name).is_file() for name in names)
     assert json.loads((out / "ledger.json").read_text("utf-8")) == ledger_json(ledger)
@@ -47,20 +49,20 @@ def test_every_product_holds_the_ledger(ledger, tmp_path, monkeypatch):
 def test_any_existing_product_stops_it(ledger, tmp_path, quick, name):
     (tmp_path / name).write_text("old")
     with pytest.raises(ProductExistsError, match=f"{name} exist.*--overwrite"):
-        write_products(ledger, tmp_path)
+        OF_LEDGER.write(ledger, tmp_path)
     assert tree(tmp_path) == {name: b"old"}
 
 
 def test_overwriting_replaces_products_and_keeps_the_rest(ledger, tmp_path, quick):
     (tmp_path / "notes.txt").write_text("mine")
-    write_products(ledger, tmp_path, figures=("png",))
+    OF_LEDGER.write(ledger, tmp_path, figures=("png",))
     (tmp_path / "figures" / "mine.png").write_bytes(b"mine")
-    assert len(existing_products(tmp_path)) == 5
-    write_products(ledger, tmp_path, overwrite=True)
+    assert len(OF_LEDGER.existing(tmp_path)) == 5
+    OF_LEDGER.write(ledger, tmp_path, overwrite=True)
     assert set(tree(tmp_path)) == {*FILES, "notes.txt", "figures/mine.png"}
     (tmp_path / "figures" / "mine.png").unlink()
-    write_products(ledger, tmp_path, figures=("svg",), overwrite=True)
-    write_products(ledger, tmp_path, overwrite=True)
+    OF_LEDGER.write(ledger, tmp_path, figures=("svg",), overwrite=True)
+    OF_LEDGER.write(ledger, tmp_path, overwrite=True)
     assert not (tmp_path / "figures").exists()
 
 
@@ -72,21 +74,21 @@ def test_a_failure_while_building_leaves_nothing(ledger, tmp_path, monkeypatch, 
         (out / "ledger.json").write_text("old")
     before = tree(tmp_path)
 
-    def fail(_ledger):
+    def fail(_ledger, _figures):
         raise RuntimeError("the report failed")
 
     import wakeledger.present.report as report
 
     monkeypatch.setattr(report, "report_html", fail)
     with pytest.raises(RuntimeError, match="the report failed"):
-        write_products(ledger, out, overwrite=True)
+        OF_LEDGER.write(ledger, out, overwrite=True)
     assert tree(tmp_path) == before
     assert out.exists() == existing
     assert out.parent.exists() == existing
 
 
 def test_a_failure_while_moving_puts_everything_back(ledger, tmp_path, monkeypatch, quick):
-    write_products(ledger, tmp_path)
+    OF_LEDGER.write(ledger, tmp_path)
     before = tree(tmp_path)
     rename = Path.rename
 
@@ -97,16 +99,16 @@ def test_a_failure_while_moving_puts_everything_back(ledger, tmp_path, monkeypat
 
     monkeypatch.setattr(Path, "rename", fail)
     with pytest.raises(DataError, match="No space left on device"):
-        write_products(ledger, tmp_path, overwrite=True)
+        OF_LEDGER.write(ledger, tmp_path, overwrite=True)
     assert tree(tmp_path) == before
 
 
 def test_the_output_folder_is_a_file(ledger, tmp_path):
     (tmp_path / "out").write_text("x")
     with pytest.raises(DataError, match="is a file"):
-        write_products(ledger, tmp_path / "out")
+        OF_LEDGER.write(ledger, tmp_path / "out")
     with pytest.raises(DataError, match="cannot be written"):
-        write_products(ledger, tmp_path / "out" / "below")
+        OF_LEDGER.write(ledger, tmp_path / "out" / "below")
     assert tree(tmp_path) == {"out": b"x"}
 
 
@@ -114,9 +116,9 @@ def test_the_output_folder_is_a_file(ledger, tmp_path):
 def test_a_folder_without_permission(ledger, tmp_path):
     tmp_path.chmod(0o500)
     with pytest.raises(DataError, match="cannot be written"):
-        write_products(ledger, tmp_path / "out")
+        OF_LEDGER.write(ledger, tmp_path / "out")
     tmp_path.chmod(0o700)
 
 
 def test_the_names_are_the_documented_ones():
-    assert products.FILES == ("ledger.nc", "ledger.json", "ledger.csv", "report.html")
+    assert FILES == ("ledger.nc", "ledger.json", "ledger.csv", "report.html")

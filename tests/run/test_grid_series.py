@@ -340,14 +340,14 @@ def test_command(cli, room, tmp_path, monkeypatch):
     status, text, err = cli("grids", *files, *cells, "--out", out, "--figures", "svg")
     assert (status, err) == (0, "")
     assert "total drag, counts" in text and f"Written to {out}: grids.json, grids.csv, report.html, figures/" in text
-    assert {path.name for path in out.iterdir()} == {*products.GRID_FILES, "figures"}
+    assert {path.name for path in out.iterdir()} == {*products.OF_GRID_SERIES.files, "figures"}
     assert [path.name for path in (out / "figures").iterdir()] == ["grid_series.svg"]
     status, text, err = cli("grids", *files, *cells, "--json")
     assert (status, text) == (0, (out / "grids.json").read_text("utf-8"))
     assert json.loads(text)["grids"][0]["file"] == str(files[0])
     status, text, err = cli("grids", *files, *cells, "--out", out)
     assert status == 2 and "exist already" in err and not text
-    monkeypatch.setattr(report, "grid_series_html", lambda series: "<!DOCTYPE html>")
+    monkeypatch.setattr(report, "grid_series_html", lambda *_: "<!DOCTYPE html>")
     assert cli("grids", *files, *cells, "--out", out, "--overwrite")[0] == 0
     assert not (out / "figures").exists()  # none is left that is out of date
     assert cli("grids", *files[1:], "--cells", "220000,667000", "--order", "2", "--dimensions", "2")[0] == 0
@@ -385,10 +385,10 @@ def test_a_failed_check_is_status_1(cli, room, power_law, base, tmp_path):
 def test_products_appear_whole_or_not_at_all(found, tmp_path, monkeypatch):
     from wakeledger.present.report import grid_series as report
 
-    def fails(series):
+    def fails(*_):
         raise OSError(28, "No space left on device")
 
     monkeypatch.setattr(report, "grid_series_html", fails)
     with pytest.raises(DataError, match="No space left"):
-        products.write_grid_series(found, tmp_path / "a" / "b")
+        products.OF_GRID_SERIES.write(found, tmp_path / "a" / "b")
     assert list(tmp_path.iterdir()) == []

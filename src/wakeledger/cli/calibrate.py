@@ -26,19 +26,15 @@ def calibrate(command: str, probe: Path, out: Path | None, overwrite: bool, quie
     residuals beside it (SVG). Prints the calibration's standard uncertainty and names every bad point. The exit status
     is 1 where more than one point in twenty cannot be used.
     """
-    from wakeledger.core.errors import DataError, ProductExistsError
+    from wakeledger.core.errors import DataError
+    from wakeledger.present import placing
 
     target = out if out is not None else probe.with_suffix(".nc")
     picture = target.with_suffix(".svg")
     if target.is_dir():
         raise DataError("this is a directory", file=target, remedy="give a file with --out")
-    taken = [path for path in (target, picture) if path.exists()]
-    if taken and not overwrite:
-        raise ProductExistsError(
-            f"{' and '.join(path.name for path in taken)} exist already and nothing was changed",
-            file=target.parent,
-            remedy="add --overwrite to replace them, or choose another file with --out",
-        )
+    files = target.name, picture.name
+    placing.require_free(target.parent, files, overwrite=overwrite)
 
     from wakeledger.intake.probe.stored import write_calibration
     from wakeledger.run.traverse.calibrate import calibrate_probe
@@ -48,13 +44,16 @@ def calibrate(command: str, probe: Path, out: Path | None, overwrite: bool, quie
     from wakeledger.present.figures.calibration import calibration_figure
     from wakeledger.present.figures.canvas import figure_bytes
 
-    drawn = figure_bytes(calibration_figure(found), "svg")
-    write_calibration(found, target)
-    picture.write_bytes(drawn)
+    def build(folder: Path) -> tuple[Path, ...]:
+        (folder / picture.name).write_bytes(figure_bytes(calibration_figure(found), "svg"))
+        write_calibration(found, folder / target.name)
+        return tuple(map(Path, files))
+
+    names = placing.write_whole(target.parent, build, files=files, overwrite=overwrite)
     if not quiet:
         from wakeledger.present.calibration_text import calibration_text
 
         screen.show(calibration_text(found, width=screen.width()))
-        screen.show(f"\nWritten to {target.parent}: {target.name}, {picture.name}\n")
+        screen.show_written(target.parent, names)
     lost = (found.bad | ~found.covered).mean()
     return exits.CHECK_FAILED if lost > _FAILING else exits.DONE

@@ -7,7 +7,7 @@ from pathlib import Path
 import click
 
 from wakeledger.cli import exits, screen
-from wakeledger.cli.reduce import figure_formats
+from wakeledger.cli.delivery import Delivery, delivered
 
 
 def _numbers(_context: click.Context, _parameter: click.Parameter, given: str) -> tuple[int, ...]:
@@ -40,12 +40,7 @@ def _numbers(_context: click.Context, _parameter: click.Parameter, given: str) -
     help="Dimensions in which the grids are refined.",
 )
 @click.option("--order", type=float, metavar="P", help="Order of the scheme, for two grids, which show none.")
-@click.option("--json", "as_json", is_flag=True, help="Print a JSON document instead.")
-@click.option("--out", type=click.Path(path_type=Path), metavar="DIR", help="Also write the products into this folder.")
-@click.option(
-    "--figures", callback=figure_formats, metavar="pdf,png,svg", help="Also write the figure in these formats."
-)
-@click.option("--overwrite", is_flag=True, help="Replace existing products.")
+@delivered(json_help="Print a JSON document instead.")
 @click.pass_obj
 def grids(
     command: str,
@@ -53,10 +48,7 @@ def grids(
     cells: tuple[int, ...],
     dimensions: str,
     order: float | None,
-    as_json: bool,
-    out: Path | None,
-    figures: tuple[str, ...],
-    overwrite: bool,
+    delivery: Delivery,
 ) -> int:
     """Compare one computed case on several grids.
 
@@ -66,28 +58,22 @@ def grids(
     whether the order can be trusted. With --out it writes grids.json, grids.csv and report.html. The exit status is 1
     where a check of any ledger failed.
     """
-    if figures and out is None:
-        raise click.UsageError("--figures needs --out DIR, the folder to write them into")
+    from wakeledger.present.products import OF_GRID_SERIES
 
-    from wakeledger.present.products import GRID_FILES, require_free, write_grid_series
-
-    if out is not None:
-        require_free(out, overwrite=overwrite, files=GRID_FILES)
+    delivery.require_free(OF_GRID_SERIES)
 
     from wakeledger.run.ledgers.grid_series import grid_series
 
     found = grid_series(ledgers, cells=cells, dimensions=int(dimensions), order=order, command=command)
-    names = write_grid_series(found, out, figures=figures, overwrite=overwrite) if out is not None else ()
-    if as_json:
-        from wakeledger.ledger.grid_series import grid_series_json
-        from wakeledger.ledger.tabular import json_text
 
-        screen.show(json_text(grid_series_json(found)))
-    else:
-        from wakeledger.present.grid_series_text import grid_series_text
+    from wakeledger.ledger.grid_series import grid_series_json
+    from wakeledger.ledger.tabular import json_text
+    from wakeledger.present.grid_series_text import grid_series_text
 
-        screen.show(grid_series_text(found, width=screen.width(), colour=screen.colour()))
-        if out is not None:
-            folders = dict.fromkeys(str(name) if len(name.parts) == 1 else f"{name.parts[0]}/" for name in names)
-            screen.show(f"\nWritten to {out}: {', '.join(folders)}\n")
+    delivery.finish(
+        found,
+        OF_GRID_SERIES,
+        document=lambda: json_text(grid_series_json(found)),
+        text=lambda: grid_series_text(found, width=screen.width(), colour=screen.colour()),
+    )
     return exits.CHECK_FAILED if found.failed else exits.DONE

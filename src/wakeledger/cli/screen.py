@@ -6,8 +6,9 @@ import io
 import os
 import shutil
 import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
+from pathlib import Path
 
 import click
 
@@ -43,6 +44,20 @@ def show(text: str) -> None:
     if isinstance(sys.stdout, io.TextIOWrapper):
         sys.stdout.reconfigure(errors="replace")
     click.echo(text, nl=False, color=colour())
+
+
+def show_written(directory: Path, names: Sequence[Path]) -> None:
+    """Say which files were written; of a folder among them its name.
+
+    Parameters
+    ----------
+    directory : Path
+        Where.
+    names : sequence of Path
+        The files, relative to it.
+    """
+    listed = dict.fromkeys(str(name) if len(name.parts) == 1 else f"{name.parts[0]}/" for name in names)
+    show(f"\nWritten to {directory}: {', '.join(listed)}\n")
 
 
 @contextmanager

@@ -8,8 +8,17 @@ from typing import TYPE_CHECKING
 
 from wakeledger.ledger.grid_series import FAR_FIELD
 from wakeledger.ledger.rounding import UNKNOWN, rounded, significant
-from wakeledger.present.printing import bullet, heading, new_console, new_table, section, sentences_of, text_of
-from wakeledger.present.wording import STATEMENT, VERDICT_WORDS, grouped_reasons, printable, signed, unit_text, words
+from wakeledger.present.printing import bullet, heading, new_console, new_table, section, sentences_of, with_statement
+from wakeledger.present.wording import (
+    VERDICT_WORDS,
+    digits,
+    error_text,
+    grouped_reasons,
+    printable,
+    signed,
+    unit_text,
+    words,
+)
 
 if TYPE_CHECKING:
     from rich.console import RenderableType
@@ -72,9 +81,7 @@ def grid_series_text(series: GridSeries, *, width: int = 100, colour: bool = Fal
     failed = [f"grid {number}: {text}" for number, grid in enumerate(series.grids, 1) for text in grid.failed]
     sentences_of(console, "Failed checks", failed)
     sentences_of(console, "Notes", [*series.notes, *own_sentences(series)])
-    console.print()
-    console.print(STATEMENT, style="dim")
-    return text_of(console)
+    return with_statement(console)
 
 
 def grid_lines(series: GridSeries) -> list[str]:
@@ -136,7 +143,7 @@ def series_cells(one: Series) -> dict[str, str]:
         "extrapolated": "–" if limit == UNKNOWN else limit,
         "error": _per_cent(math.nan if found is None else found.approximate_error),
         "index": _per_cent(math.nan if found is None else found.index),
-        "u": significant(u, 2) if math.isfinite(u) else "–",
+        "u": digits(u, 2),
         "unit": unit_text(unit),
     }
 
@@ -176,9 +183,9 @@ def pair_cells(pair: Pair) -> dict[str, object]:
     return {
         "differences": [signed(scale * difference, expanded) for difference in pair.differences],
         "extrapolated": signed(scale * pair.extrapolated, expanded),
-        "expanded": significant(expanded, 2) if math.isfinite(expanded) else "–",
+        "expanded": digits(expanded, 2),
         "unit": unit_text(unit),
-        "error": f"{pair.normalised_error:.2f}" if math.isfinite(pair.normalised_error) else "–",
+        "error": error_text(pair.normalised_error),
         "verdict": VERDICT_WORDS[pair.agreement],
     }
 

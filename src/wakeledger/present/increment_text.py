@@ -6,7 +6,7 @@ import math
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
-from wakeledger.ledger.rounding import UNKNOWN, rounded, significant
+from wakeledger.ledger.rounding import UNKNOWN, rounded
 from wakeledger.ledger.rows import COUNT
 from wakeledger.present.printing import (
     bullet,
@@ -16,9 +16,9 @@ from wakeledger.present.printing import (
     new_table,
     section,
     sentences_of,
-    text_of,
+    with_statement,
 )
-from wakeledger.present.wording import STATEMENT, grouped_reasons, printable, unit_text, words
+from wakeledger.present.wording import digits, grouped_reasons, printable, unit_text, words
 
 if TYPE_CHECKING:
     from rich.console import RenderableType
@@ -76,9 +76,7 @@ def increment_text(increment: Increment, *, width: int = 100, colour: bool = Fal
     failed = [f"{name}: {text}" for name, side in (("A", increment.a), ("B", increment.b)) for text in side.failed]
     sentences_of(console, "Failed checks", failed)
     sentences_of(console, "Notes", increment.notes)
-    console.print()
-    console.print(STATEMENT, style="dim")
-    return text_of(console)
+    return with_statement(console)
 
 
 def main_row(increment: Increment) -> IncrementRow | None:
@@ -136,7 +134,7 @@ def _rows_table(rows: Sequence[IncrementRow], *, roomy: bool) -> Table:
         )
         cells: list[RenderableType] = [words(row.name), value, unit_text(row.unit), count]
         if roomy:
-            cells += [_digits(judged.coverage_factor, 3), f"{_digits(ratio, 3)} u" if math.isfinite(ratio) else "–"]
+            cells += [digits(judged.coverage_factor, 3), f"{digits(ratio, 3)} u" if math.isfinite(ratio) else "–"]
         cells.append(Text(OUTCOMES[row.resolved], style=_STYLES[row.resolved]))
         table.add_row(*cells)
     return table
@@ -152,13 +150,9 @@ def _cancellation_table(lines: Sequence[Cancellation], *, in_counts: bool) -> Ta
             figures = (line.coefficient_in_a, line.coefficient_in_b, line.coefficient_left)
         scale = COUNT if in_counts else 1.0
         name = line.source_a if line.source_a == line.source_b else f"{line.source_a} / {line.source_b}"
-        table.add_row(printable(name), printable(line.shared_id), *(_digits(figure / scale, 2) for figure in figures))
+        table.add_row(printable(name), printable(line.shared_id), *(digits(figure / scale, 2) for figure in figures))
     return table
 
 
 def _unit(row: IncrementRow) -> str:
     return "counts" if row.judged is row.coefficient else unit_text(row.unit)
-
-
-def _digits(value: float, digits: int) -> str:
-    return significant(value, digits) if math.isfinite(value) else "–"

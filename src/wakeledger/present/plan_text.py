@@ -6,8 +6,8 @@ import math
 from typing import TYPE_CHECKING
 
 from wakeledger.ledger.rounding import rounded, significant
-from wakeledger.present.printing import heading, new_console, new_table, section, sentences_of, text_of
-from wakeledger.present.wording import STATEMENT, printable, unit_text, words
+from wakeledger.present.printing import heading, new_console, new_table, section, sentences_of, with_statement
+from wakeledger.present.wording import printable, unit_text, words
 
 if TYPE_CHECKING:
     from rich.table import Table
@@ -58,9 +58,7 @@ def plan_text(plan: Plan, *, width: int = 100, colour: bool = False) -> str:
         section(console, "What a single improvement would gain")
         console.print(_improvements(plan))
     sentences_of(console, "Notes", plan.notes)
-    console.print()
-    console.print(STATEMENT, style="dim")
-    return text_of(console)
+    return with_statement(console)
 
 
 def unit_of(plan: Plan) -> str:

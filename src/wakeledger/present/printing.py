@@ -7,7 +7,7 @@ from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
 from wakeledger.ledger.rounding import UNKNOWN
-from wakeledger.present.wording import printable
+from wakeledger.present.wording import STATEMENT, printable
 
 if TYPE_CHECKING:
     from rich.console import Console
@@ -51,6 +51,13 @@ def text_of(console: Console) -> str:
     file = console.file
     assert isinstance(file, io.StringIO)
     return "\n".join(line.rstrip() for line in file.getvalue().splitlines()) + "\n"
+
+
+def with_statement(console: Console) -> str:
+    """What was printed, closed by the sentence that stands below every printed result."""
+    console.print()
+    console.print(STATEMENT, style="dim")
+    return text_of(console)
 
 
 def new_table(*columns: tuple[str, str], header: bool = True) -> Table:

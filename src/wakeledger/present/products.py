@@ -1,17 +1,14 @@
-"""The products of a reduction: built aside, then put in their place together, so they appear whole or not at all."""
+"""The products of each command: which files there are, and what is written into them."""
 
 from __future__ import annotations
 
-import errno
-import os
-import shutil
-import tempfile
-from collections.abc import Callable, Iterator, Mapping, Sequence
-from contextlib import suppress
+import re
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Generic, TypeVar
 
-from wakeledger.core.errors import DataError, ProductExistsError
+from wakeledger.present import placing
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -21,361 +18,189 @@ if TYPE_CHECKING:
     from wakeledger.ledger.plan import Plan
     from wakeledger.ledger.rows import Ledger
 
-#: Files every reduction writes.
-FILES = ("ledger.nc", "ledger.json", "ledger.csv", "report.html")
-
-#: Files every increment writes.
-INCREMENT_FILES = ("increment.nc", "increment.json", "increment.csv", "report.html")
-
-#: Files every grid series writes.
-GRID_FILES = ("grids.json", "grids.csv", "report.html")
-
-#: Files every plan writes.
-PLAN_FILES = ("plan.json", "report.html")
-
-#: Folder of the figures, where they are asked for.
-FIGURES = "figures"
+Record = TypeVar("Record")
+Figures = Mapping[str, "Figure"]
 
 
-def existing_products(directory: Path, *, files: Sequence[str] = FILES) -> tuple[Path, ...]:
-    """Products of an earlier run in a folder.
+@dataclass(frozen=True)
+class Products(Generic[Record]):
+    """What is written of one kind of record.
 
-    Parameters
+    Attributes
     ----------
-    directory : Path
-        The folder; it need not exist.
-    files : sequence of str
-        Names of the products beside the figures.
-
-    Returns
-    -------
-    tuple of Path
-        Relative to the folder.
-    """
-    found = [Path(name) for name in files if (directory / name).exists()]
-    folder = directory / FIGURES
-    if folder.is_dir():
-        from wakeledger.present.figures import FORMATS
-        from wakeledger.present.figures.gallery import DRAWINGS
-        from wakeledger.present.figures.grid_series import NAME as OF_GRIDS
-        from wakeledger.present.figures.increment import DRAWINGS as OF_INCREMENTS
-
-        ours = {f"{name}.{kind}" for name in (*DRAWINGS, *OF_INCREMENTS, OF_GRIDS) for kind in FORMATS}
-        found += sorted(path.relative_to(directory) for path in folder.iterdir() if path.name in ours)
-    return tuple(found)
-
-
-def require_free(directory: Path, *, overwrite: bool, files: Sequence[str] = FILES) -> None:
-    """Refuse a folder that already holds products, before any work is done.
-
-    Parameters
-    ----------
-    directory : Path
-        Where the products are to go.
-    overwrite : bool
-        Whether existing ones may be replaced.
-    files : sequence of str
-        Names of the products beside the figures.
-
-    Raises
-    ------
-    ProductExistsError
-        If there are products and they must not be replaced.
-    DataError
-        If the place is taken by a file, or nothing can be written there.
-    """
-    try:
-        _require_writable(directory)
-        found = existing_products(directory, files=files)
-    except OSError as error:
-        raise _unwritable(directory, error) from error
-    for name in found:
-        if name.name in files and (directory / name).is_dir():
-            raise DataError(
-                f"{name} is a folder there", file=directory, remedy="move it, or choose another folder with --out"
-            )
-    if found and not overwrite:
-        names = ", ".join(str(name) for name in found[:4])
-        raise ProductExistsError(
-            f"{names} exist already and nothing was changed",
-            file=directory,
-            remedy="add --overwrite to replace them, or choose another folder with --out",
-        )
-
-
-def _require_writable(directory: Path) -> None:
-    """Refuse a place where no folder can be made, or none can be filled, before any work is done."""
-    nearest = next(folder for folder in (directory, *directory.absolute().parents) if os.path.lexists(folder))
-    if not nearest.is_dir():
-        if nearest == directory:
-            raise DataError("the output folder is a file", file=directory, remedy="give a folder with --out")
-        raise NotADirectoryError(errno.ENOTDIR, f"{nearest} is a file")
-    if not os.access(nearest, os.W_OK | os.X_OK):
-        raise PermissionError(errno.EACCES, f"{nearest} is not writable")
-
-
-def _unwritable(directory: Path, error: OSError) -> DataError:
-    return DataError(
-        f"the products cannot be written ({error.strerror or error})",
-        file=directory,
-        remedy="choose another folder with --out",
-    )
-
-
-def write_products(
-    ledger: Ledger, directory: Path, *, figures: Sequence[str] = (), overwrite: bool = False
-) -> tuple[Path, ...]:
-    """Write every product of a ledger.
-
-    Parameters
-    ----------
-    ledger : Ledger
-        The ledger.
-    directory : Path
-        The folder; it is made where it is missing. Other files in it stay as they are.
-    figures : sequence of {"pdf", "png", "svg"}
-        Formats in which the figures are written beside the report.
-    overwrite : bool
-        Whether existing products are replaced. Figures of an earlier reduction go too, so that none is out of date.
-
-    Returns
-    -------
-    tuple of Path
-        The files, relative to the folder.
-
-    Raises
-    ------
-    ProductExistsError
-        If there are products and they must not be replaced.
-    DataError
-        If the folder cannot be written.
+    files : tuple of str
+        Names of the files every run writes; the archive first, where there is one.
+    draw : callable
+        Draws the figures of a record: those of its report, or every one.
+    texts : callable
+        Texts of the files but the archive, in their order, of a record and its figures.
+    archive : callable or None
+        Writes the archive of a record.
     """
 
-    def build(folder: Path) -> tuple[Path, ...]:
-        return _build(ledger, folder, figures)
+    files: tuple[str, ...]
+    draw: Callable[[Record, bool], Figures]
+    texts: Callable[[Record, Figures], Sequence[str]]
+    archive: Callable[[Record, Path], None] | None = None
 
-    return _write_whole(directory, build, files=FILES, overwrite=overwrite)
+    def existing(self, directory: Path) -> tuple[Path, ...]:
+        """Products of an earlier run in a folder, which need not exist; relative to it."""
+        return placing.existing(directory, self.files, _is_figure)
 
+    def require_free(self, directory: Path, *, overwrite: bool) -> None:
+        """Refuse a folder that already holds products, before any work is done.
 
-def write_increment(
-    increment: Increment, directory: Path, *, figures: Sequence[str] = (), overwrite: bool = False
-) -> tuple[Path, ...]:
-    """Write every product of an increment.
+        Parameters
+        ----------
+        directory : Path
+            Where the products are to go.
+        overwrite : bool
+            Whether existing ones may be replaced.
 
-    Parameters
-    ----------
-    increment : Increment
-        The increment.
-    directory, figures, overwrite
-        As in `write_products`.
+        Raises
+        ------
+        ProductExistsError
+            If there are products and they must not be replaced.
+        DataError
+            If the place is taken by a file, or nothing can be written there.
+        """
+        placing.require_free(directory, self.files, _is_figure, overwrite=overwrite)
 
-    Returns
-    -------
-    tuple of Path
-        The files, relative to the folder.
+    def write(
+        self, record: Record, directory: Path, *, figures: Sequence[str] = (), overwrite: bool = False
+    ) -> tuple[Path, ...]:
+        """Write every product of a record, all or none.
 
-    Raises
-    ------
-    ProductExistsError, DataError
-        As in `write_products`.
-    """
+        Parameters
+        ----------
+        record : object
+            The record.
+        directory : Path
+            The folder; it is made where it is missing. Other files in it stay as they are.
+        figures : sequence of {"pdf", "png", "svg"}
+            Formats in which the figures are written beside the report.
+        overwrite : bool
+            Whether existing products are replaced. Figures of an earlier run go too, so that none is out of date.
 
-    def build(folder: Path) -> tuple[Path, ...]:
-        return _build_increment(increment, folder, figures)
+        Returns
+        -------
+        tuple of Path
+            The files, relative to the folder.
 
-    return _write_whole(directory, build, files=INCREMENT_FILES, overwrite=overwrite)
+        Raises
+        ------
+        ProductExistsError
+            If there are products and they must not be replaced.
+        DataError
+            If the folder cannot be written.
+        """
 
+        def build(folder: Path) -> tuple[Path, ...]:
+            return self._build(record, folder, figures)
 
-def write_grid_series(
-    series: GridSeries, directory: Path, *, figures: Sequence[str] = (), overwrite: bool = False
-) -> tuple[Path, ...]:
-    """Write every product of a grid series.
+        return placing.write_whole(directory, build, files=self.files, ours=_is_figure, overwrite=overwrite)
 
-    Parameters
-    ----------
-    series : GridSeries
-        The series.
-    directory, figures, overwrite
-        As in `write_products`.
-
-    Returns
-    -------
-    tuple of Path
-        The files, relative to the folder.
-
-    Raises
-    ------
-    ProductExistsError, DataError
-        As in `write_products`.
-    """
-
-    def build(folder: Path) -> tuple[Path, ...]:
-        from wakeledger.ledger.grid_series import grid_series_csv, grid_series_json
-        from wakeledger.ledger.tabular import json_text
-        from wakeledger.present.figures.grid_series import draw_grid_series
-        from wakeledger.present.report.grid_series import grid_series_html
-
-        texts = {
-            "grids.json": json_text(grid_series_json(series)),
-            "grids.csv": grid_series_csv(series),
-            "report.html": grid_series_html(series),
-        }
-        for name, text in texts.items():
+    def _build(self, record: Record, folder: Path, figures: Sequence[str]) -> tuple[Path, ...]:
+        if self.archive is not None:
+            self.archive(record, folder / self.files[0])
+        drawn = self.draw(record, bool(figures))
+        names = [Path(name) for name in self.files]
+        written = self.files[0 if self.archive is None else 1 :]
+        for name, text in zip(written, self.texts(record, drawn), strict=True):
             (folder / name).write_text(text, encoding="utf-8", newline="\n")
-        names = [Path(name) for name in GRID_FILES]
         if figures:
-            (folder / FIGURES).mkdir()
-            names += [path.relative_to(folder) for path in _save(draw_grid_series(series), folder / FIGURES, figures)]
+            from wakeledger.present.figures import save
+
+            (folder / placing.FIGURES).mkdir()
+            names += [path.relative_to(folder) for path in save(drawn, folder / placing.FIGURES, figures)]
         return tuple(names)
 
-    return _write_whole(directory, build, files=GRID_FILES, overwrite=overwrite)
+
+def _is_figure(name: str) -> bool:
+    """Whether a file of this name is a figure that one of the commands writes."""
+    from wakeledger.present.figures import FORMATS, gallery, grid_series, increment
+
+    whole = "|".join((*gallery.OF_LEDGER, *gallery.OF_PLANE, *increment.DRAWINGS, *grid_series.DRAWINGS))
+    return re.fullmatch(rf"({whole})(_plane_\d+)?\.({'|'.join(FORMATS)})", name) is not None
 
 
-def write_plan(plan: Plan, directory: Path, *, overwrite: bool = False) -> tuple[Path, ...]:
-    """Write every product of a plan.
+def _draw_ledger(ledger: Ledger, every: bool) -> Figures:
+    from wakeledger.present import figures
 
-    Parameters
-    ----------
-    plan : Plan
-        The plan.
-    directory, overwrite
-        As in `write_products`.
-
-    Returns
-    -------
-    tuple of Path
-        The files, relative to the folder.
-
-    Raises
-    ------
-    ProductExistsError, DataError
-        As in `write_products`.
-    """
-
-    def build(folder: Path) -> tuple[Path, ...]:
-        from wakeledger.ledger.tabular import json_text
-        from wakeledger.present.report.plan import plan_html
-
-        texts = {"plan.json": json_text(plan.to_dict()), "report.html": plan_html(plan)}
-        for name, text in texts.items():
-            (folder / name).write_text(text, encoding="utf-8", newline="\n")
-        return tuple(Path(name) for name in PLAN_FILES)
-
-    return _write_whole(directory, build, files=PLAN_FILES, overwrite=overwrite)
+    return figures.draw(ledger, most_planes=None) if every else figures.draw(ledger)
 
 
-def _write_whole(
-    directory: Path, build: Callable[[Path], tuple[Path, ...]], *, files: Sequence[str], overwrite: bool
-) -> tuple[Path, ...]:
-    """Build the products aside and put them in their place together."""
-    require_free(directory, overwrite=overwrite, files=files)
-    made: list[Path] = []
-    try:
-        for missing in reversed(directory.parents):
-            if not missing.exists():
-                missing.mkdir()
-                made.append(missing)
-        home = directory if directory.is_dir() else directory.parent
-        aside = Path(tempfile.mkdtemp(prefix=".wakeledger-", suffix=".part", dir=home))
-        fresh = aside / "fresh"
-        try:
-            fresh.mkdir()
-            names = build(fresh)
-            # Another run may have written there meanwhile.
-            require_free(directory, overwrite=overwrite, files=files)
-            if directory.is_dir():
-                _exchange(directory, fresh, aside / "earlier", names, existing_products(directory, files=files))
-            else:
-                fresh.rename(directory)
-        finally:
-            shutil.rmtree(aside, ignore_errors=True)
-    except BaseException as error:
-        for folder in reversed(made):
-            with suppress(OSError):
-                folder.rmdir()
-        if isinstance(error, OSError):
-            raise _unwritable(directory, error) from error
-        if isinstance(error, DataError):
-            raise error.located(file=directory) from error
-        raise
-    return names
-
-
-def _build(ledger: Ledger, folder: Path, figures: Sequence[str]) -> tuple[Path, ...]:
-    from wakeledger.ledger.archive import write_archive
+def _ledger_texts(ledger: Ledger, drawn: Figures) -> Sequence[str]:
     from wakeledger.ledger.tabular import json_text, ledger_csv, ledger_json
-    from wakeledger.present.figures import save_figures
-    from wakeledger.present.report import report_html
+    from wakeledger.present import report
 
-    try:
-        write_archive(ledger, folder / "ledger.nc")
-    except DataError as error:
-        # It names a file that is there only while the products are built.
-        raise DataError(error.found, remedy=error.remedy) from error
-    texts = {
-        "ledger.json": json_text(ledger_json(ledger)),
-        "ledger.csv": ledger_csv(ledger),
-        "report.html": report_html(ledger),
-    }
-    for name, text in texts.items():
-        (folder / name).write_text(text, encoding="utf-8", newline="\n")
-    names = [Path(name) for name in FILES]
-    if figures:
-        (folder / FIGURES).mkdir()
-        names += [path.relative_to(folder) for path in save_figures(ledger, folder / FIGURES, figures)]
-    return tuple(names)
+    return json_text(ledger_json(ledger)), ledger_csv(ledger), report.report_html(ledger, drawn)
 
 
-def _build_increment(increment: Increment, folder: Path, figures: Sequence[str]) -> tuple[Path, ...]:
-    from wakeledger.ledger.increment import increment_csv, increment_json, write_increment_archive
-    from wakeledger.ledger.tabular import json_text
+def _write_ledger(ledger: Ledger, file: Path) -> None:
+    from wakeledger.ledger.archive import write_archive
+
+    write_archive(ledger, file)
+
+
+def _draw_increment(increment: Increment, _every: bool) -> Figures:
     from wakeledger.present.figures.increment import draw_increment
-    from wakeledger.present.report.increment import increment_html
 
-    try:
-        write_increment_archive(increment, folder / "increment.nc")
-    except RuntimeError as error:
-        # The netCDF library reports a full disk as an error of its own.
-        if not str(error).startswith("NetCDF:"):
-            raise
-        raise OSError(errno.EIO, str(error)) from error
-    texts = {
-        "increment.json": json_text(increment_json(increment)),
-        "increment.csv": increment_csv(increment),
-        "report.html": increment_html(increment),
-    }
-    for name, text in texts.items():
-        (folder / name).write_text(text, encoding="utf-8", newline="\n")
-    names = [Path(name) for name in INCREMENT_FILES]
-    if figures:
-        (folder / FIGURES).mkdir()
-        names += [path.relative_to(folder) for path in _save(draw_increment(increment), folder / FIGURES, figures)]
-    return tuple(names)
+    return draw_increment(increment)
 
 
-def _save(drawn: Mapping[str, Figure], folder: Path, formats: Sequence[str]) -> Iterator[Path]:
-    from wakeledger.present.figures import figure_bytes
+def _increment_texts(increment: Increment, drawn: Figures) -> Sequence[str]:
+    from wakeledger.ledger.increment import increment_csv, increment_json
+    from wakeledger.ledger.tabular import json_text
+    from wakeledger.present.report import increment as report
 
-    for name, figure in drawn.items():
-        for kind in formats:
-            path = folder / f"{name}.{kind}"
-            path.write_bytes(figure_bytes(figure, kind))
-            yield path
+    return json_text(increment_json(increment)), increment_csv(increment), report.increment_html(increment, drawn)
 
 
-def _exchange(directory: Path, fresh: Path, earlier: Path, names: Sequence[Path], old: Sequence[Path]) -> None:
-    """Put the fresh files in the place of the old ones; if a step fails, put everything back."""
-    moves = [(directory / name, earlier / name) for name in old] + [(fresh / name, directory / name) for name in names]
-    done: list[tuple[Path, Path]] = []
-    try:
-        for source, target in moves:
-            target.parent.mkdir(parents=True, exist_ok=True)
-            source.rename(target)
-            done.append((source, target))
-    except BaseException:
-        for source, target in reversed(done):
-            target.rename(source)
-        raise
-    folder = directory / FIGURES
-    if folder.is_dir() and not any(folder.iterdir()):
-        folder.rmdir()
+def _write_increment(increment: Increment, file: Path) -> None:
+    from wakeledger.ledger.increment import write_increment_archive
+
+    write_increment_archive(increment, file)
+
+
+def _draw_grid_series(series: GridSeries, _every: bool) -> Figures:
+    from wakeledger.present.figures.grid_series import draw_grid_series
+
+    return draw_grid_series(series)
+
+
+def _grid_series_texts(series: GridSeries, drawn: Figures) -> Sequence[str]:
+    from wakeledger.ledger.grid_series import grid_series_csv, grid_series_json
+    from wakeledger.ledger.tabular import json_text
+    from wakeledger.present.report import grid_series as report
+
+    return json_text(grid_series_json(series)), grid_series_csv(series), report.grid_series_html(series, drawn)
+
+
+def _draw_plan(plan: Plan, _every: bool) -> Figures:
+    from wakeledger.present.figures.plan import draw_plan
+
+    return draw_plan(plan)
+
+
+def _plan_texts(plan: Plan, drawn: Figures) -> Sequence[str]:
+    from wakeledger.ledger.tabular import json_text
+    from wakeledger.present.report.plan import plan_html
+
+    return json_text(plan.to_dict()), plan_html(plan, drawn)
+
+
+#: What a reduction writes, and what combined repeats are written as.
+OF_LEDGER: Products[Ledger] = Products(
+    ("ledger.nc", "ledger.json", "ledger.csv", "report.html"), _draw_ledger, _ledger_texts, _write_ledger
+)
+OF_INCREMENT: Products[Increment] = Products(
+    ("increment.nc", "increment.json", "increment.csv", "report.html"),
+    _draw_increment,
+    _increment_texts,
+    _write_increment,
+)
+OF_GRID_SERIES: Products[GridSeries] = Products(
+    ("grids.json", "grids.csv", "report.html"), _draw_grid_series, _grid_series_texts
+)
+OF_PLAN: Products[Plan] = Products(("plan.json", "report.html"), _draw_plan, _plan_texts)

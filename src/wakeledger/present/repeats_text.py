@@ -2,14 +2,13 @@
 
 from __future__ import annotations
 
-import math
 from typing import TYPE_CHECKING
 
 from wakeledger.ledger.repeats import RepeatLine, repeat_lines
-from wakeledger.ledger.rounding import rounded, significant
+from wakeledger.ledger.rounding import rounded
 from wakeledger.ledger.rows import COUNT
 from wakeledger.present.printing import new_table
-from wakeledger.present.wording import in_counts, unit_text, words
+from wakeledger.present.wording import digits, in_counts, unit_text, words
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -58,9 +57,9 @@ def _cells(ledger: Ledger, line: RepeatLine) -> dict[str, str | list[str]]:
         "row": words(line.row),
         "figures": [rounded(figure / scale, expanded / scale)[0] for figure in line.figures],
         "unit": unit,
-        "between": _digits(line.between / scale),
-        "upper": _digits(line.between_upper / scale),
-        "birge": _digits(line.birge_ratio),
+        "between": digits(line.between / scale, 2),
+        "upper": digits(line.between_upper / scale, 2),
+        "birge": digits(line.birge_ratio, 2),
         "verdict": VERDICTS[line.verdict],
     }
 
@@ -89,7 +88,3 @@ def repeats_table(ledger: Ledger, repeats: xr.Dataset) -> Table:
             str(cells["row"]), *figures, *(str(cells[key]) for key in ("unit", "between", "upper", "birge", "verdict"))
         )
     return table
-
-
-def _digits(value: float) -> str:
-    return significant(value, 2) if math.isfinite(value) else "–"

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING
 from wakeledger.ledger.rounding import rounded, significant
 from wakeledger.ledger.rows import COUNT
 from wakeledger.present.printing import joined, new_table
-from wakeledger.present.wording import VERDICT_WORDS, in_counts, unit_text, words
+from wakeledger.present.wording import VERDICT_WORDS, error_text, in_counts, unit_text, words
 
 if TYPE_CHECKING:
     from rich.table import Table
@@ -257,8 +257,7 @@ def verdict_lines(ledger: Ledger) -> tuple[VerdictsLine, ...]:
         planes = []
         for one in ledger.stations:
             line = next((line for line in one.estimates if (line.row, line.method) == (row, method)), None)
-            error = math.nan if line is None else line.normalised_error
-            text = "" if math.isnan(error) else f"{error:.2f}" if error < 100 else f"{error:.0f}"
+            text = "" if line is None or math.isnan(line.normalised_error) else error_text(line.normalised_error)
             planes.append(("" if line is None else line.verdict, text))
         found.append(VerdictsLine(words(row), words(method), tuple(planes)))
     return tuple(found)

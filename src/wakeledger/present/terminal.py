@@ -7,6 +7,13 @@ from collections.abc import Iterable, Sequence
 from typing import TYPE_CHECKING
 
 from wakeledger.ledger.rounding import rounded, significant
+from wakeledger.present.computed_text import (
+    closure_notes,
+    closure_table,
+    diagnostic_lines,
+    diagnostic_meanings,
+    diagnostic_tables,
+)
 from wakeledger.present.map_text import map_lines, plain
 from wakeledger.present.printing import (
     bullet,
@@ -17,6 +24,7 @@ from wakeledger.present.printing import (
     section,
     sentences_of,
     text_of,
+    with_statement,
 )
 from wakeledger.present.repeats_text import repeats_table
 from wakeledger.present.stations_text import (
@@ -34,9 +42,11 @@ from wakeledger.present.tunnel_text import (
     tunnel_tables,
 )
 from wakeledger.present.wording import (
-    STATEMENT,
+    VERDICT_STYLES,
     VERDICT_WORDS,
     coefficient_text,
+    digits,
+    error_text,
     grouped_reasons,
     signed,
     unit_text,
@@ -55,17 +65,6 @@ ROOMY = 92
 
 #: From this width on, a check's message stands beside its figures.
 WIDE = 120
-
-_STYLES = {
-    "pass": "green",
-    "agrees": "green",
-    "warn": "bold yellow",
-    "fail": "bold red",
-    "disagrees": "bold red",
-    "unknown": "yellow",
-    "not_independent": "dim",
-    "not_applicable": "dim",
-}
 
 
 def ledger_text(ledger: Ledger, *, width: int = 100, colour: bool = False) -> str:
@@ -107,11 +106,11 @@ def ledger_text(ledger: Ledger, *, width: int = 100, colour: bool = False) -> st
         reasons = [(f"{line.name}, {words(line.row)}", line.reason) for line in ledger.comparisons]
         for sentence in grouped_reasons(reasons):
             bullet(console, sentence)
+    _closures(console, ledger)
     _checks(console, ledger.checks)
+    _diagnostics(console, ledger)
     sentences_of(console, "Notes", ledger.notes)
-    console.print()
-    console.print(STATEMENT, style="dim")
-    return text_of(console)
+    return with_statement(console)
 
 
 def inspection_text(inspection: Inspection, *, width: int = 100, colour: bool = False, unicode: bool = True) -> str:
@@ -174,12 +173,12 @@ def _channels_table(channels: Sequence[ChannelSummary]) -> Table:
     for channel in channels:
         cells = (
             words(channel.name),
-            _figure(channel.minimum),
-            _figure(channel.maximum),
+            digits(channel.minimum),
+            digits(channel.maximum),
             unit_text(channel.unit),
-            _figure(channel.noise, 2),
-            _figure(channel.declared_noise, 2),
-            _figure(channel.repeatability, 2),
+            digits(channel.noise, 2),
+            digits(channel.declared_noise, 2),
+            digits(channel.repeatability, 2),
             str(channel.missing) if channel.missing else "–",
         )
         table.add_row(*(cell for cell, kept in zip(cells, shown, strict=True) if kept))
@@ -205,9 +204,9 @@ def _edges_table(edges: Sequence[EdgeState]) -> Table:
         heads += [("vorticity / largest", "right"), ("of the vorticity", "right")]
     table = new_table(*heads, ("", "left"))
     for edge in edges:
-        cells = [edge.side, _figure(edge.total_pressure_loss, 2), _share(edge.loss_share)]
+        cells = [edge.side, digits(edge.total_pressure_loss, 2), _share(edge.loss_share)]
         if turning:
-            cells += [_figure(edge.vorticity, 2), _share(edge.vorticity_share)]
+            cells += [digits(edge.vorticity, 2), _share(edge.vorticity_share)]
         table.add_row(*cells, "quiet" if edge.quiet else "TOUCHED")
     return table
 
@@ -280,6 +279,26 @@ def _tunnel(console: Console, ledger: Ledger) -> None:
         console.print(corrected_table(ledger))
 
 
+def _closures(console: Console, ledger: Ledger) -> None:
+    """Far field less near field, and what is known to make them differ."""
+    if not ledger.closures:
+        return
+    section(console, "Far field against near field, and what makes them differ")
+    console.print(closure_table(ledger))
+    for sentence in closure_notes(ledger):
+        bullet(console, sentence)
+
+
+def _diagnostics(console: Console, ledger: Ledger) -> None:
+    """Other forms of the drag and where the power goes, of every plane that has such figures."""
+    if not diagnostic_lines(ledger):
+        return
+    section(console, "For information: figures of the computed planes that are in no row; without uncertainty")
+    _blocks(console, diagnostic_tables(ledger, console.width))
+    for sentence in diagnostic_meanings(ledger):
+        bullet(console, sentence)
+
+
 def _rows_table(rows: Sequence[Row]) -> Table:
     figures = [rounded(row.value, row.expanded_uncertainty) for row in rows]
     coefficients = [coefficient_text(row) for row in rows]
@@ -302,10 +321,10 @@ def _estimates_table(estimates: Sequence[CrossCheck], *, roomy: bool) -> Table:
     )  # fmt: skip
     values = joined([rounded(line.value, line.standard_uncertainty) for line in estimates])
     for line, value in zip(estimates, values, strict=True):
-        digits = line.standard_uncertainty
-        difference, expected = (signed(figure, digits) for figure in (line.difference, line.expected_difference))
+        u = line.standard_uncertainty
+        difference, expected = (signed(figure, u) for figure in (line.difference, line.expected_difference))
         cells: list[RenderableType] = [words(line.row), words(line.method), *([value] if roomy else [])]
-        cells += [difference, expected, unit_text(line.unit), _error(line.normalised_error), _verdict(line.verdict)]
+        cells += [difference, expected, unit_text(line.unit), error_text(line.normalised_error), _verdict(line.verdict)]
         table.add_row(*cells)
     return table
 
@@ -319,7 +338,7 @@ def _comparisons_table(comparisons: Sequence[Comparison]) -> Table:
     for line, value in zip(comparisons, values, strict=True):
         difference = signed(line.difference, line.standard_uncertainty)
         verdict = _verdict(line.verdict)
-        error = _error(line.normalised_error)
+        error = error_text(line.normalised_error)
         table.add_row(line.name, words(line.row), value, difference, unit_text(line.unit), error, verdict)
     return table
 
@@ -338,8 +357,8 @@ def _checks(console: Console, checks: Sequence[Check]) -> None:
         grid = Table.grid(padding=(0, 2, 0, 0))
         for width, side in zip(widths, ("left", "left", "right", "right"), strict=True):
             grid.add_column(width=width, justify="right" if side == "right" else "left")
-        cells: list[RenderableType] = [_verdict(check.verdict), words(check.name), _figure(check.value, 2)]
-        cells.append(f"limit {_figure(check.limit, 2)}")
+        cells: list[RenderableType] = [_verdict(check.verdict), words(check.name), digits(check.value, 2)]
+        cells.append(f"limit {digits(check.limit, 2)}")
         if wide:
             grid.add_column(ratio=1)
             cells.append(Text(check.message))
@@ -352,12 +371,4 @@ def _checks(console: Console, checks: Sequence[Check]) -> None:
 def _verdict(verdict: str) -> RenderableType:
     from rich.text import Text
 
-    return Text(VERDICT_WORDS[verdict], style=_STYLES[verdict])
-
-
-def _error(error: float) -> str:
-    return "–" if math.isnan(error) else f"{error:.2f}" if error < 100 else f"{error:.0f}"
-
-
-def _figure(value: float, digits: int = 4) -> str:
-    return significant(value, digits) if math.isfinite(value) else "–"
+    return Text(VERDICT_WORDS[verdict], style=VERDICT_STYLES[verdict])

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Mapping
 from types import MappingProxyType
 from typing import TYPE_CHECKING
 
-from wakeledger.ledger.rounding import UNKNOWN, rounded
+from wakeledger.ledger.rounding import UNKNOWN, rounded, significant
 from wakeledger.ledger.rows import COUNT
 
 if TYPE_CHECKING:
@@ -42,6 +43,20 @@ VERDICT_WORDS: Mapping[str, str] = MappingProxyType(
         "disagrees": "DISAGREES",
         "not_independent": "same algebra",
         "unknown": "unknown",
+    }
+)
+
+#: How verdicts are shown on a terminal that has colours; nothing is said by these alone.
+VERDICT_STYLES: Mapping[str, str] = MappingProxyType(
+    {
+        "pass": "green",
+        "agrees": "green",
+        "warn": "bold yellow",
+        "fail": "bold red",
+        "disagrees": "bold red",
+        "unknown": "yellow",
+        "not_independent": "dim",
+        "not_applicable": "dim",
     }
 )
 
@@ -160,6 +175,55 @@ def signed(difference: float, uncertainty: float) -> str:
     if figure == UNKNOWN:
         return "–"
     return figure if figure.startswith("-") or not figure.strip("0.") else f"+{figure}"
+
+
+def digits(value: float, count: int = 4) -> str:
+    """A figure to so many significant digits.
+
+    Parameters
+    ----------
+    value : float
+        The figure.
+    count : int
+        How many.
+
+    Returns
+    -------
+    str
+        A dash where it is unknown.
+
+    Examples
+    --------
+    >>> digits(0.031234, 2), digits(float("nan"))
+    ('0.031', '–')
+    """
+    return significant(value, count) if math.isfinite(value) else "–"
+
+
+def error_text(error: float) -> str:
+    """A normalised error E_n as it is printed.
+
+    Parameters
+    ----------
+    error : float
+        The error.
+
+    Returns
+    -------
+    str
+        A dash where it is unknown.
+
+    Examples
+    --------
+    >>> error_text(0.5), error_text(234.5), error_text(float("nan"))
+    ('0.50', '234', '–')
+    """
+    return "–" if math.isnan(error) else f"{error:.2f}" if error < 100 else f"{error:.0f}"
+
+
+def capital(sentence: str) -> str:
+    """A sentence with a capital letter in front."""
+    return sentence[:1].upper() + sentence[1:]
 
 
 def grouped_reasons(reasons: Iterable[tuple[str, str | None]]) -> list[str]:

@@ -3,7 +3,8 @@
 from wakeledger.present.figures.budget import budget_figure
 from wakeledger.present.figures.canvas import FORMATS, figure_bytes
 from wakeledger.present.figures.crosschecks import estimates_figure
-from wakeledger.present.figures.gallery import draw, save_figures
+from wakeledger.present.figures.drawing import save
+from wakeledger.present.figures.gallery import draw
 from wakeledger.present.figures.maps import axial_velocity_map, loss_map, vorticity_map
 from wakeledger.present.figures.section import section_figure
 from wakeledger.present.figures.spanwise import span_figure
@@ -18,7 +19,7 @@ __all__ = [
     "estimates_figure",
     "figure_bytes",
     "loss_map",
-    "save_figures",
+    "save",
     "section_figure",
     "span_figure",
     "stations_figure",

@@ -9,6 +9,7 @@ import numpy as np
 
 from wakeledger.ledger.grid_series import EXTRAPOLATED, FAR_FIELD
 from wakeledger.present.figures.canvas import BLUE, GREY, INK, VERMILION, WIDTH, style
+from wakeledger.present.figures.drawing import Drawing, drawn
 from wakeledger.present.wording import unit_text, words
 
 if TYPE_CHECKING:
@@ -122,20 +123,18 @@ def _panel(axes: Axes, series: GridSeries, one: Series, colour: str, marker: str
     axes.margins(y=0.2)
 
 
-#: Name of the figure's file, and how to draw it.
-NAME = "grid_series"
+#: The figure by the name of its file.
+DRAWINGS: dict[str, Drawing[GridSeries]] = {
+    "grid_series": Drawing(
+        grid_series_figure,
+        lambda series: bool(drawn_rows(series)),
+        "Values against the size of the cells, far field and near field on one scale. Dashed: the order, down to no "
+        "cell size (star). Band: the grid convergence index about the finest grid's value; where the order is not "
+        "trusted (open markers), the spread of the grids.",
+    )
+}
 
 
 def draw_grid_series(series: GridSeries) -> dict[str, Figure]:
-    """The figure by its name, if anything is known.
-
-    Parameters
-    ----------
-    series : GridSeries
-        The series.
-
-    Returns
-    -------
-    dict of str to Figure
-    """
-    return {NAME: grid_series_figure(series)} if drawn_rows(series) else {}
+    """The figure by its name, if anything is known."""
+    return drawn(DRAWINGS, series)

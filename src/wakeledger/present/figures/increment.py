@@ -13,6 +13,7 @@ from wakeledger.core.plane import grid_of
 from wakeledger.ledger.rounding import rounded
 from wakeledger.present.figures.budget import budget_figure
 from wakeledger.present.figures.canvas import BLUE, GREY, INK, VERMILION, WIDTH, style
+from wakeledger.present.figures.drawing import Drawing, drawn
 from wakeledger.present.figures.maps import HATCH, UNTRUSTED, VEIL, Shade, draw_arrows, hatch, shaded
 from wakeledger.present.wording import unit_text, words
 
@@ -238,27 +239,37 @@ def _along_line(increment: Increment) -> bool:
     return increment.plane is not None and len(increment.plane.sizes) == 1
 
 
-#: Name of each figure's file, how to draw it, and whether an increment has what it needs.
-DRAWINGS: dict[str, tuple[Callable[[Increment], Figure], Callable[[Increment], bool]]] = {
-    "increments": (increments_figure, lambda increment: any(_drawable(row) for row in increment.rows)),
-    "loss_difference": (loss_difference_map, _in_plane("total_pressure_loss")),
-    "vorticity_difference": (vorticity_difference_map, _in_plane("axial_vorticity", "v", "w")),
-    "traverse_difference": (traverse_difference_figure, _along_line),
-    "increment_budget": (budget_figure, lambda increment: any(math.isfinite(line.share) for line in increment.budget)),
+#: Figures of an increment by the names of their files.
+DRAWINGS: dict[str, Drawing[Increment]] = {
+    "increments": Drawing(
+        increments_figure,
+        lambda increment: any(_drawable(row) for row in increment.rows),
+        "Each row's change over its expanded uncertainty. Outside the grey band it is resolved; the wide bars show the "
+        "uncertainty if nothing cancelled.",
+    ),
+    "loss_difference": Drawing(
+        loss_difference_map,
+        _in_plane("total_pressure_loss"),
+        "Change of the total-pressure loss over the dynamic pressure, seen from behind: orange where B loses more. "
+        "Outlines are the two wake regions.",
+    ),
+    "vorticity_difference": Drawing(
+        vorticity_difference_map,
+        _in_plane("axial_vorticity", "v", "w"),
+        "Change of the axial vorticity over the stream's speed, with arrows of the change of the crossflow. "
+        "Counter-clockwise is positive; the colours are centred at zero.",
+    ),
+    "traverse_difference": Drawing(
+        traverse_difference_figure, _along_line, "Loss along both traverses and its change."
+    ),
+    "increment_budget": Drawing(
+        budget_figure,
+        lambda increment: any(math.isfinite(line.share) for line in increment.budget),
+        "Share of each source in the variance of the main increments.",
+    ),
 }
 
 
 def draw_increment(increment: Increment) -> dict[str, Figure]:
-    """Every figure the increment has what is needed for.
-
-    Parameters
-    ----------
-    increment : Increment
-        The increment.
-
-    Returns
-    -------
-    dict of str to Figure
-        By the name of `DRAWINGS`.
-    """
-    return {name: make(increment) for name, (make, has) in DRAWINGS.items() if has(increment)}
+    """Every figure the increment has what is needed for, by the names of `DRAWINGS`."""
+    return drawn(DRAWINGS, increment)

@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from wakeledger.ledger.rounding import significant
 from wakeledger.present.figures.canvas import BLUE, GREY, INK, VERMILION, WIDTH, style
+from wakeledger.present.figures.drawing import Drawing, drawn
 from wakeledger.present.wording import unit_text, words
 
 if TYPE_CHECKING:
@@ -196,28 +196,33 @@ def plan_budget(plan: Plan) -> Figure:
     return figure
 
 
+def _known(plan: Plan) -> bool:
+    return plan.chosen is not None and bool(np.isfinite(plan.uncertainty).any())
+
+
 #: Figures of a plan by name, in the order of the report.
-DRAWINGS: dict[str, Callable[[Plan], Figure]] = {
-    "plan_map": uncertainty_map,
-    "plan_cost": cost_figure,
-    "plan_budget": plan_budget,
+DRAWINGS: dict[str, Drawing[Plan]] = {
+    "plan_map": Drawing(
+        uncertainty_map,
+        _known,
+        "Expanded uncertainty (95 %) over the spacing of the points and the probe's noise, everything else as in the "
+        "set-up that is outlined. Figures that reach the target are bold; in hatched cells a check would fail.",
+    ),
+    "plan_cost": Drawing(
+        cost_figure,
+        lambda plan: _known(plan) and bool(np.isfinite(plan.minutes).any()),
+        "The same against the time it takes; the ring is the set-up chosen, crosses are surveys in which a check would "
+        "fail, the broken line is the time limit.",
+    ),
+    "plan_budget": Drawing(
+        plan_budget,
+        _known,
+        "What the chosen set-up's doubt consists of, and what doing one thing better would gain: half of a source "
+        "(dark), or more time (light).",
+    ),
 }
 
 
 def draw_plan(plan: Plan) -> dict[str, Figure]:
-    """Every figure of a plan, by name.
-
-    Parameters
-    ----------
-    plan : Plan
-        The plan.
-
-    Returns
-    -------
-    dict of str to Figure
-        Empty where no survey can be reduced; without times, no figure of them.
-    """
-    if plan.chosen is None or not np.isfinite(plan.uncertainty).any():
-        return {}
-    timed = bool(np.isfinite(plan.minutes).any())
-    return {name: make(plan) for name, make in DRAWINGS.items() if timed or name != "plan_cost"}
+    """Every figure of a plan, by the names of `DRAWINGS`: none where no survey can be reduced."""
+    return drawn(DRAWINGS, plan)

@@ -2,19 +2,21 @@
 
 from __future__ import annotations
 
-import base64
 import math
-from dataclasses import dataclass
+from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
-from wakeledger.ledger.rounding import UNKNOWN, rounded, significant
+from wakeledger.ledger.rounding import UNKNOWN, rounded
+from wakeledger.present.computed_text import closure_lines, diagnostic_heads, diagnostic_lines
 from wakeledger.present.repeats_text import repeats_cells
+from wakeledger.present.report.page import page, pictures
 from wakeledger.present.stations_text import fit_sentence, head_of, stations_lines, verdict_lines, verdict_reasons
 from wakeledger.present.tunnel_text import tunnel_cells, tunnel_planes, tunnel_reasons
 from wakeledger.present.wording import (
-    STATEMENT,
-    VERDICT_WORDS,
+    capital,
     coefficient_text,
+    digits,
+    error_text,
     grouped_reasons,
     in_counts,
     signed,
@@ -23,160 +25,94 @@ from wakeledger.present.wording import (
 )
 
 if TYPE_CHECKING:
-    from jinja2 import Environment
     from matplotlib.figure import Figure
 
     from wakeledger.ledger.rows import Ledger
 
-#: What each figure shows, by the name of its file.
-CAPTIONS = {
-    "stations": "Each drag against the station of the plane, bars U95. Where a trend is resolved, the ledger's drags "
-    "are those at the trailing edge, and what the vortices lose on their way goes from induced to profile drag.",
-    "section": "The window of the plane, its wake region and vortices in what surrounds them, seen from behind, "
-    "looking upstream.",
-    "total_pressure_loss": "Total-pressure loss, seen from behind, looking upstream. Profile drag is integrated inside "
-    "the outlined wake region; hatched cells hold no measurement that can be trusted and were filled.",
-    "axial_vorticity": "Axial vorticity with arrows of the crossflow. Counter-clockwise is positive; the colours are "
-    "centred at zero.",
-    "axial_velocity": "Velocity along the stream as a part of the stream's speed.",
-    "traverse": "Loss, static pressure and speed along the traverse. The drag is integrated over the shaded wake; open "
-    "circles were not measured but filled in.",
-    "span_loading": "Loading along the span and the drag of each strip, with expanded uncertainties (k = 2) where they "
-    "are known.",
-    "estimates": "Every estimate and compared value beside its primary row; the short stroke is the difference that is "
-    "to be expected of the method at this station.",
-    "budget": "Share of each source in the variance of the main rows.",
-}
 
-_MAPS = ("total_pressure_loss", "axial_vorticity", "axial_velocity", "traverse")
-
-
-@dataclass(frozen=True)
-class Picture:
-    """One figure as it stands in the report.
-
-    Attributes
-    ----------
-    name : str
-        Name of the figure.
-    source : str
-        Data address of its SVG.
-    caption : str
-        What it shows.
-    """
-
-    name: str
-    source: str
-    caption: str
-
-
-def report_html(ledger: Ledger) -> str:
+def report_html(ledger: Ledger, figures: Mapping[str, Figure] | None = None) -> str:
     """The report of a ledger.
 
     Parameters
     ----------
     ledger : Ledger
         The ledger.
+    figures : mapping of str to Figure, optional
+        Its figures, where they have been drawn.
 
     Returns
     -------
     str
         A whole HTML document without external resources; the same ledger gives the same text.
     """
-    from wakeledger.present.figures import draw
+    from wakeledger.present.figures import draw, gallery
 
-    pictures = {name: picture(name, figure, CAPTIONS[name]) for name, figure in draw(ledger).items()}
-    return (
-        environment()
-        .get_template("report.html")
-        .render(
-            ledger=ledger,
-            statement=STATEMENT,
-            verdicts=VERDICT_WORDS,
-            rows=_rows(ledger),
-            row_reasons=grouped_reasons((words(row.name), row.reason) for row in ledger.rows),
-            estimate_reasons=grouped_reasons(
-                (f"{words(x.row)}, {words(x.method)}", x.reason) for x in ledger.estimates
-            ),
-            comparison_reasons=grouped_reasons((f"{x.name}, {words(x.row)}", x.reason) for x in ledger.comparisons),
-            corrected=any(row.coefficient_corrected is not None for row in ledger.rows),
-            estimates=_estimates(ledger),
-            comparisons=_comparisons(ledger),
-            sources=_sources(ledger),
-            summary=_summary(ledger),
-            repeats=[] if ledger.repeats is None else repeats_cells(ledger, ledger.repeats),
-            stations=_stations(ledger),
-            tunnel=_tunnel(ledger),
-            reference={name: value for name, value in ledger.reference.items() if math.isfinite(value)},
-            units=_scalar_units(),
-            maps=[pictures[name] for name in _MAPS if name in pictures],
-            pictures=pictures,
-            versions={
-                key.removeprefix("version "): text for key, text in ledger.provenance.items() if "version " in key
-            },
+    drawn = draw(ledger) if figures is None else figures
+    return page(
+        "report.html",
+        provenance=ledger.provenance,
+        ledger=ledger,
+        rows=_rows(ledger),
+        row_reasons=grouped_reasons((words(row.name), row.reason) for row in ledger.rows),
+        estimate_reasons=grouped_reasons((f"{words(x.row)}, {words(x.method)}", x.reason) for x in ledger.estimates),
+        comparison_reasons=grouped_reasons((f"{x.name}, {words(x.row)}", x.reason) for x in ledger.comparisons),
+        corrected=any(row.coefficient_corrected is not None for row in ledger.rows),
+        estimates=_estimates(ledger),
+        comparisons=_comparisons(ledger),
+        closures=closure_lines(ledger),
+        sources=_sources(ledger),
+        summary=_summary(ledger),
+        repeats=[] if ledger.repeats is None else repeats_cells(ledger, ledger.repeats),
+        stations=_stations(ledger),
+        tunnel=_tunnel(ledger),
+        diagnostics={"heads": diagnostic_heads(ledger), "lines": diagnostic_lines(ledger)},
+        reference={name: value for name, value in ledger.reference.items() if math.isfinite(value)},
+        units=_scalar_units(),
+        planes=_planes(ledger, drawn),
+        not_drawn=_not_drawn(ledger),
+        pictures=pictures(drawn, gallery.OF_LEDGER),
+    )
+
+
+def _planes(ledger: Ledger, drawn: Mapping[str, Figure]) -> list[dict[str, Any]]:
+    """What is shown of each plane: its maps, vortices and loading along the span."""
+    from wakeledger.present.figures import gallery
+
+    planes = gallery.planes_of(ledger)
+    found: list[dict[str, Any]] = []
+    for k in gallery.planes_drawn(ledger):
+        named = {name: drawn[own] for name in gallery.OF_PLANE if (own := gallery.name_in(ledger, name, k)) in drawn}
+        shown = pictures(named, gallery.OF_PLANE)
+        found.append(
+            {
+                "head": head_of(planes[k].station) if ledger.stations else "",
+                "maps": [one for name, one in shown.items() if name != "span_loading"],
+                "traverse": "traverse" in shown,
+                "span": shown.get("span_loading"),
+                "vortices": planes[k].vortices,
+            }
         )
-    )
-
-
-def environment() -> Environment:
-    """Templates of the reports, with their filters."""
-    from jinja2 import Environment, PackageLoader, StrictUndefined
-
-    found = Environment(
-        loader=PackageLoader("wakeledger.present.report", package_path=""),
-        autoescape=True,
-        undefined=StrictUndefined,
-        trim_blocks=True,
-        lstrip_blocks=True,
-    )
-    found.filters |= {"words": words, "unit": unit_text, "digits": digits, "scalar": _scalar, "cell": _cell}
     return found
 
 
-def picture(name: str, figure: Figure, caption: str) -> Picture:
-    """A figure as it stands in a report.
+def _not_drawn(ledger: Ledger) -> str:
+    """Which planes the report does not draw, in a sentence; empty where it draws all."""
+    from wakeledger.present.figures import gallery
 
-    Parameters
-    ----------
-    name : str
-        Its name.
-    figure : Figure
-        The figure.
-    caption : str
-        What it shows.
-
-    Returns
-    -------
-    Picture
-    """
-    from wakeledger.present.figures import figure_bytes
-
-    encoded = base64.b64encode(figure_bytes(figure, "svg")).decode("ascii")
-    return Picture(name, f"data:image/svg+xml;base64,{encoded}", caption)
+    shown = gallery.planes_drawn(ledger)
+    left = [head_of(one.station) for k, one in enumerate(gallery.planes_of(ledger)) if k not in shown]
+    if not left:
+        return ""
+    return (
+        f"The planes at {', '.join(left)} are not drawn here, to keep this file small: --figures writes the maps of all"
+        " planes, and the archive holds their fields."
+    )
 
 
 def _scalar_units() -> dict[str, str]:
     from wakeledger.ledger.units import SCALAR_UNITS
 
     return {name: unit_text(unit) for name, unit in SCALAR_UNITS.items()}
-
-
-def digits(value: float, count: int = 4) -> str:
-    """A figure to so many significant digits, a dash where it is unknown."""
-    return significant(value, count) if math.isfinite(value) else "–"
-
-
-def _scalar(value: object) -> str:
-    return f"{value:.6g}" if isinstance(value, float) else str(value)
-
-
-def _cell(value: object) -> str:
-    """One entry of a table whose columns the report does not know: a number, a count or a word."""
-    try:
-        number = float(value)  # type: ignore[arg-type]
-    except (TypeError, ValueError):
-        return str(value)
-    return f"{number:.4g}" if math.isfinite(number) else "–"
 
 
 def _shown(figure: str) -> str:
@@ -229,7 +165,7 @@ def _estimates(ledger: Ledger) -> list[dict[str, Any]]:
                 "unit": unit_text(line.unit),
                 "difference": signed(line.difference, line.standard_uncertainty),
                 "expected": signed(line.expected_difference, line.standard_uncertainty),
-                "error": f"{line.normalised_error:.2f}" if math.isfinite(line.normalised_error) else "–",
+                "error": error_text(line.normalised_error),
                 "verdict": line.verdict,
             }
         )
@@ -248,7 +184,7 @@ def _comparisons(ledger: Ledger) -> list[dict[str, Any]]:
                 "u": _shown(u),
                 "unit": unit_text(line.unit),
                 "difference": signed(line.difference, line.standard_uncertainty),
-                "error": f"{line.normalised_error:.2f}" if math.isfinite(line.normalised_error) else "–",
+                "error": error_text(line.normalised_error),
                 "verdict": line.verdict,
             }
         )
@@ -326,4 +262,4 @@ def _summary(ledger: Ledger) -> list[str]:
         for line in ledger.comparisons
         if line.verdict == "disagrees"
     ]
-    return [sentence[0].upper() + sentence[1:] for sentence in sentences]
+    return [capital(sentence) for sentence in sentences]

@@ -3,82 +3,63 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
 from wakeledger.ledger.rounding import rounded
 from wakeledger.ledger.rows import COUNT
-from wakeledger.present.increment_text import OUTCOMES, figure_text, main_row
-from wakeledger.present.report.document import digits, environment, picture
-from wakeledger.present.wording import STATEMENT, grouped_reasons, unit_text, words
+from wakeledger.present.increment_text import OUTCOMES, figure_text
+from wakeledger.present.report.page import page, pictures
+from wakeledger.present.wording import capital, digits, grouped_reasons, unit_text, words
 
 if TYPE_CHECKING:
+    from matplotlib.figure import Figure
+
     from wakeledger.ledger.increment import Increment
 
-#: What each figure shows, by its name.
-CAPTIONS = {
-    "increments": "Each row's change over its expanded uncertainty. Outside the grey band it is resolved; the wide "
-    "bars show the uncertainty if nothing cancelled.",
-    "loss_difference": "Change of the total-pressure loss over the dynamic pressure, seen from behind: orange where B "
-    "loses more. Outlines are the two wake regions.",
-    "vorticity_difference": "Change of the axial vorticity over the stream's speed, with arrows of the change of the "
-    "crossflow. Counter-clockwise is positive; the colours are centred at zero.",
-    "traverse_difference": "Loss along both traverses and its change.",
-    "increment_budget": "Share of each source in the variance of the main increments.",
-}
 _MAPS = ("loss_difference", "vorticity_difference", "traverse_difference")
 _CLASSES = {True: "pass", False: "not_applicable", None: "unknown"}
 
 
-def increment_html(increment: Increment) -> str:
+def increment_html(increment: Increment, figures: Mapping[str, Figure] | None = None) -> str:
     """The report of an increment.
 
     Parameters
     ----------
     increment : Increment
         The increment.
+    figures : mapping of str to Figure, optional
+        Its figures, where they have been drawn.
 
     Returns
     -------
     str
         A whole HTML document without external resources; the same increment gives the same text.
     """
-    from wakeledger.present.figures.increment import draw_increment
+    from wakeledger.present.figures.increment import DRAWINGS, draw_increment
 
-    drawn = draw_increment(increment)
-    pictures = {name: picture(name, figure, CAPTIONS[name]) for name, figure in drawn.items()}
-    main = main_row(increment)
-    return (
-        environment()
-        .get_template("increment.html")
-        .render(
-            increment=increment,
-            statement=STATEMENT,
-            rows=_rows(increment),
-            reasons=grouped_reasons((words(row.name), row.reason) for row in increment.rows),
-            sentences=[_capital(row.statement) for row in increment.rows],
-            cancelled=_cancelled(increment),
-            kept=grouped_reasons((line.source, line.reason) for line in increment.not_cancelled),
-            attention=[
-                *increment.warnings,
-                *(f"In {name} a check failed: {text}" for name, side in _sides(increment) for text in side.failed),
-            ],
-            sides=_sides(increment),
-            main=main,
-            maps=[pictures[name] for name in _MAPS if name in pictures],
-            pictures=pictures,
-            versions={
-                key.removeprefix("version "): text for key, text in increment.provenance.items() if "version " in key
-            },
-        )
+    shown = pictures(draw_increment(increment) if figures is None else figures, DRAWINGS)
+    return page(
+        "increment.html",
+        provenance=increment.provenance,
+        increment=increment,
+        rows=_rows(increment),
+        reasons=grouped_reasons((words(row.name), row.reason) for row in increment.rows),
+        sentences=[capital(row.statement) for row in increment.rows],
+        cancelled=_cancelled(increment),
+        kept=grouped_reasons((line.source, line.reason) for line in increment.not_cancelled),
+        attention=[
+            *increment.warnings,
+            *(f"In {name} a check failed: {text}" for name, side in _sides(increment) for text in side.failed),
+        ],
+        sides=_sides(increment),
+        maps=[shown[name] for name in _MAPS if name in shown],
+        pictures=shown,
     )
 
 
 def _sides(increment: Increment) -> tuple[tuple[str, Any], ...]:
     return ("A", increment.a), ("B", increment.b)
-
-
-def _capital(text: str) -> str:
-    return text[:1].upper() + text[1:]
 
 
 def _rows(increment: Increment) -> list[dict[str, Any]]:

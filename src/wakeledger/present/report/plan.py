@@ -3,58 +3,49 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
 from wakeledger.ledger.rounding import significant
 from wakeledger.present.plan_text import checked, outcome, set_up_facts, time_text, unit_of
-from wakeledger.present.report.document import environment, picture
-from wakeledger.present.wording import STATEMENT, words
+from wakeledger.present.report.page import page, pictures
+from wakeledger.present.wording import digits, words
 
 if TYPE_CHECKING:
+    from matplotlib.figure import Figure
+
     from wakeledger.ledger.plan import Plan
 
-#: What each figure shows, by its name.
-CAPTIONS = {
-    "plan_map": "Expanded uncertainty (95 %) over the spacing of the points and the probe's noise, everything else as "
-    "in the set-up that is outlined. Figures that reach the target are bold; in hatched cells a check would fail.",
-    "plan_cost": "The same against the time it takes; the ring is the set-up chosen, crosses are surveys in which a "
-    "check would fail, the broken line is the time limit.",
-    "plan_budget": "What the chosen set-up's doubt consists of, and what doing one thing better would gain: half of a "
-    "source (dark), or more time (light).",
-}
 
-
-def plan_html(plan: Plan) -> str:
+def plan_html(plan: Plan, figures: Mapping[str, Figure] | None = None) -> str:
     """The report of a plan.
 
     Parameters
     ----------
     plan : Plan
         The plan.
+    figures : mapping of str to Figure, optional
+        Its figures, where they have been drawn.
 
     Returns
     -------
     str
         A whole HTML document without external resources; the same plan gives the same text.
     """
-    from wakeledger.present.figures.plan import draw_plan
+    from wakeledger.present.figures.plan import DRAWINGS, draw_plan
 
-    return (
-        environment()
-        .get_template("plan.html")
-        .render(
-            plan=plan,
-            statement=STATEMENT,
-            outcome=outcome(plan),
-            unit=unit_of(plan),
-            facts=[] if plan.chosen is None else set_up_facts(plan.chosen),
-            checked="" if plan.chosen is None else checked(plan),
-            budget=_budget(plan),
-            by_probe=_by_probe(plan),
-            improvements=_improvements(plan),
-            pictures=[picture(name, figure, CAPTIONS[name]) for name, figure in draw_plan(plan).items()],
-            versions={key.removeprefix("version "): text for key, text in plan.provenance.items() if "version " in key},
-        )
+    return page(
+        "plan.html",
+        provenance=plan.provenance,
+        plan=plan,
+        outcome=outcome(plan),
+        unit=unit_of(plan),
+        facts=[] if plan.chosen is None else set_up_facts(plan.chosen),
+        checked="" if plan.chosen is None else checked(plan),
+        budget=_budget(plan),
+        by_probe=_by_probe(plan),
+        improvements=_improvements(plan),
+        pictures=list(pictures(draw_plan(plan) if figures is None else figures, DRAWINGS).values()),
     )
 
 
@@ -96,7 +87,7 @@ def _improvements(plan: Plan) -> list[dict[str, Any]]:
             "u": significant(one.expanded_uncertainty, 3),
             "gain": significant(one.gain, 2),
             "time": "–" if not abs(one.minutes) >= 0.5 else f"{one.minutes:+.0f}",
-            "rate": significant(60 * one.gain_per_minute, 2) if math.isfinite(one.gain_per_minute) else "–",
+            "rate": digits(60 * one.gain_per_minute, 2),
         }
         for one in plan.improvements
     ]
