@@ -31,7 +31,7 @@ from wakeledger.run.config.survey import Survey, parse_survey
 from wakeledger.run.load import refuse_unsupported
 from wakeledger.run.section import terms as section_terms
 from wakeledger.run.stations import TREND
-from wakeledger.run.uncertainty import numerics
+from wakeledger.run.uncertainty import method_choice, numerics
 
 ROOT = Path(__file__).resolve().parents[1]
 DOCS = ROOT / "docs"
@@ -205,7 +205,8 @@ def test_numerical_terms_of_the_budget_are_documented(sample):
     constants = (*constants, "SWIRL", "EDGE", "CUT", "SPLIT")
     known = [*(getattr(numerics, name) for name in constants), MESH, TREND]
     lines = [getattr(section_terms, name) for name in ("WINDOW", "RESOLUTION", "GAPS", "LEVEL")]
-    assert names == [*known, "choices inside *estimate*", "Term of a line traverse", *lines]
+    last = ["choices inside *estimate*", method_choice.CHOICE.format("*row*")]
+    assert names == [*known, *last, "Term of a line traverse", *lines]
     assert numerics.METHOD == "choices inside {}"
     assert (numerics.SWEEP, numerics.ORDER) == ((0.5, 1.5), 3.0)
 

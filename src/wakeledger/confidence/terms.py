@@ -8,6 +8,8 @@ from functools import partial
 from typing import get_args
 
 import numpy as np
+from numpy.typing import ArrayLike
+from scipy.optimize import brentq
 
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import Seed, draw_blocks, unit_variables
@@ -80,3 +82,43 @@ def add_terms(samples: Samples, terms: Sequence[NumericalTerm], *, seed: Seed) -
         for k in np.flatnonzero(~np.isfinite(vector)):
             unknown[k] = unknown[k] or f"the term {term.name!r} is unknown"
     return replace(samples, values=values, unknown=tuple(unknown))
+
+
+def spread_beyond(differences: ArrayLike, uncertainties: ArrayLike) -> float:
+    """Standard deviation of differences from one value beyond their own uncertainties.
+
+    Parameters
+    ----------
+    differences : array_like, shape (k,)
+        Of k values from the one, any unit.
+    uncertainties : array_like, shape (k,)
+        Standard uncertainty of each difference, that unit.
+
+    Returns
+    -------
+    float
+        τ ≥ 0, that unit; zero where the uncertainties explain the differences.
+
+    Raises
+    ------
+    ValueError
+        If shapes do not fit, nothing is given, or an uncertainty is not known or not positive.
+
+    Notes
+    -----
+    Σ d_i²/(u_i² + τ²) = k: R. C. Paule and J. Mandel, J. Res. NBS 87 (1982) 377, about a given value instead of the
+    mean, so that no degree of freedom is lost.
+    """
+    d, u = np.asarray(differences, float), np.asarray(uncertainties, float)
+    if d.ndim != 1 or d.shape != u.shape or not d.size or not (np.isfinite(d).all() and np.isfinite(u).all()):
+        raise ValueError(f"{d.shape} differences with uncertainties of shape {u.shape} have no known spread")
+    if u.min() <= 0:
+        raise ValueError("an uncertainty is not positive")
+
+    def excess(variance: float) -> float:
+        return float(np.sum(d**2 / (u**2 + variance))) - d.size
+
+    if excess(0.0) <= 0:
+        return 0.0
+    # At the mean square of the differences the sum is below k.
+    return float(np.sqrt(brentq(excess, 0.0, float(np.mean(d**2)))))

@@ -18,8 +18,8 @@ from wakeledger.core.errors import SurveyError
 from wakeledger.core.estimate import Estimate
 from wakeledger.core.names import ROWS
 from wakeledger.ledger.contributions import Contributions
-from wakeledger.ledger.crosscheck import COVERAGE_FACTOR, check_estimate, compare
-from wakeledger.ledger.rows import COUNT, BudgetLine, Comparison, CrossCheck, Row
+from wakeledger.ledger.crosscheck import check_estimate, compare
+from wakeledger.ledger.rows import BudgetLine, Comparison, CrossCheck, Row
 from wakeledger.run.chain.outputs import coefficient_of, corrected_coefficient_of, estimate_of
 from wakeledger.run.config import Survey
 
@@ -354,47 +354,3 @@ def contributions(budget: Budget | None, names: Sequence[str]) -> Contributions 
 
 def _outputs_of(names: Sequence[str]) -> tuple[list[str], list[str]]:
     return list(names), [coefficient_of(name) for name in names]
-
-
-def spread_notes(checks: Sequence[CrossCheck], rows: Sequence[Row]) -> list[str]:
-    """How far the independent methods spread about their row, expected differences taken out.
-
-    Parameters
-    ----------
-    checks : sequence of CrossCheck
-        Estimates held against their rows.
-    rows : sequence of Row
-        The rows.
-
-    Returns
-    -------
-    list of str
-        A sentence for each row with two or more independent estimates of known uncertainty.
-    """
-    found = []
-    for row in rows:
-        own = [check for check in checks if check.row == row.name and check.verdict in ("agrees", "disagrees")]
-        if len(own) < 2:
-            continue
-        apart = [check.difference - check.expected_difference for check in own]
-        spread = math.sqrt(sum(one**2 for one in apart) / len(apart))
-        # E_n is over the expanded uncertainty of the difference.
-        doubts = [
-            abs(one) / (COVERAGE_FACTOR * check.normalised_error)
-            for one, check in zip(apart, own, strict=True)
-            if check.normalised_error
-        ]
-        if not doubts:
-            continue
-        explained = math.sqrt(sum(one**2 for one in doubts) / len(doubts))
-        scale, unit = (row.coefficient / row.value / COUNT, "counts") if _in_counts(row) else (1.0, row.unit)
-        found.append(
-            f"{len(own)} other methods for the {row.name.replace('_', ' ')} lie {abs(scale) * spread:.2g} {unit} from"
-            " it (root mean square, expected differences taken out); their uncertainties explain"
-            f" {abs(scale) * explained:.2g}."
-        )
-    return found
-
-
-def _in_counts(row: Row) -> bool:
-    return row.name.endswith("_drag") and math.isfinite(row.coefficient) and row.value != 0

@@ -27,7 +27,6 @@ from wakeledger.run.assembly import (
     ledger_row,
     made_unknown,
     require_rows,
-    spread_notes,
 )
 from wakeledger.run.chain.outputs import ESTIMATES, MOMENTS, OUTPUTS, ROWS, estimate_of
 from wakeledger.run.checks import Facts, all_checks
@@ -45,6 +44,7 @@ from wakeledger.run.stations import reduce_stations
 from wakeledger.run.traverse.probe_range import probe_range
 from wakeledger.run.tunnel import tunnel_figures
 from wakeledger.run.uncertainty.draws import Propagated, numerical_only, propagate, terms_of
+from wakeledger.run.uncertainty.method_choice import choice_terms, spread_notes
 from wakeledger.run.uncertainty.propagation import propagation, propagation_notes
 
 __all__ = ["SurveyInput", "inspect", "load", "prepare", "reduce"]
@@ -105,22 +105,37 @@ def reduce(
     require_rows(survey.survey, [name for name in ROWS if not math.isnan(prepared.nominal.values[name])])
     uncertainty = survey.survey.uncertainty
     count = uncertainty.draws if draws is None else draws
-    terms: tuple[NumericalTerm, ...] = ()
-    samples, budget = None, None
+    checks = all_checks(prepared.nominal, facts_of(prepared))
+    unbalanced = any(check.name == "net_circulation" and check.verdict == "fail" for check in checks)
+    reason = NO_SOURCE if prepared.nominal.region.mask.any() else _NO_WAKE
+
+    def known(draws: Samples) -> Samples:
+        return made_unknown(draws, _INDUCED, _UNBALANCED) if unbalanced else draws
+
+    def estimates_of(draws: Samples | None) -> tuple[CrossCheck, ...]:
+        return _crosschecks(prepared, _rows(prepared, draws, reason=reason), draws, reason)
+
+    def choice(draws: Samples) -> tuple[NumericalTerm, ...]:
+        return choice_terms(estimates_of(known(draws)), prepared.nominal.values, OUTPUTS)
+
+    samples, held, budget = None, None, None
     found: Propagated | None = None
     if prepared.sources and prepared.nominal.region.mask.any():
         try:
             terms = terms_of(prepared, survey)
-            found = propagate(prepared, terms, draws=count, seed=uncertainty.seed, progress=progress)
-            samples, budget = found.samples, found.budget
+            found = propagate(prepared, terms, draws=count, seed=uncertainty.seed, progress=progress, choice=choice)
+            samples, held, budget = known(found.samples), known(found.held), found.budget
         except InputError as error:
             raise error.located(file=survey.survey.path) from error
     elif survey.computed and prepared.nominal.region.mask.any():
-        samples, budget = numerical_only(prepared, terms_of(prepared, survey), draws=count, seed=uncertainty.seed)
-    checks = all_checks(prepared.nominal, facts_of(prepared))
-    if samples is not None and any(check.name == "net_circulation" and check.verdict == "fail" for check in checks):
-        samples = made_unknown(samples, _INDUCED, _UNBALANCED)
-    ledger = _ledger(survey, prepared, samples, budget, checks, found=found, command=command)
+        samples, held, budget = numerical_only(
+            prepared, terms_of(prepared, survey), draws=count, seed=uncertainty.seed, choice=choice
+        )
+        samples, held = known(samples), known(held)
+    rows = _rows(prepared, samples, budget=budget, reason=reason)
+    ledger = _ledger(
+        survey, prepared, rows, samples, budget, checks, estimates=estimates_of(held), found=found, command=command
+    )
     return with_closures(ledger) if survey.computed else ledger
 
 
@@ -183,23 +198,25 @@ def inspect(survey: SurveyInput) -> Inspection:
         raise error.located(file=survey.points.source) from error
 
 
+def _rows(prepared: Prepared, samples: Samples | None, *, budget: Budget | None = None, reason: str) -> tuple[Row, ...]:
+    values, sources = prepared.nominal.values, prepared.sources
+    made = (ledger_row(name, values, samples, budget=budget, sources=sources, reason=reason) for name in ROWS)
+    return tuple(row for row in made if row is not None)
+
+
 def _ledger(
     survey: SurveyInput,
     prepared: Prepared,
+    rows: tuple[Row, ...],
     samples: Samples | None,
     budget: Budget | None,
     checks: tuple[Check, ...],
     *,
+    estimates: tuple[CrossCheck, ...],
     found: Propagated | None,
     command: str,
 ) -> Ledger:
     file, nominal = survey.survey, prepared.nominal
-    reason = NO_SOURCE if nominal.region.mask.any() else _NO_WAKE
-    made = (
-        ledger_row(name, nominal.values, samples, budget=budget, sources=prepared.sources, reason=reason)
-        for name in ROWS
-    )
-    rows = tuple(row for row in made if row is not None)
     names = [row.name for row in rows]
     known = [row.name for row in rows if math.isfinite(row.standard_uncertainty)]
     covariance = np.full((len(names), len(names)), np.nan)
@@ -216,7 +233,6 @@ def _ledger(
             predicted=found.predicted,
             linear=found.linear,
         )
-    estimates = _crosschecks(prepared, rows, samples, reason)
     return Ledger(
         title=file.title,
         compressible=nominal.reference.compressible,
@@ -267,6 +283,7 @@ def facts_of(prepared: Prepared) -> Facts:
         spacings=core_spacings(prepared.chain, prepared.vortices.vortices),
         crossflow=prepared.chain.settings.crossflow,
         probe=probe_range(prepared.chain),
+        noise=None if prepared.chain.settings.computed else prepared.findings,
         boundary=prepared.chain.settings.boundary,
         cut=prepared.cut,
     )

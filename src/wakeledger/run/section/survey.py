@@ -55,6 +55,7 @@ from wakeledger.run.section.state import SectionState, check_section_state
 from wakeledger.run.section.terms import LEVEL, section_terms
 from wakeledger.run.traverse.rake import prepare_raw
 from wakeledger.run.traverse.traverse import SHEAR, RawSurvey, corrected_points
+from wakeledger.run.uncertainty.method_choice import choice_terms, spread_notes
 from wakeledger.run.uncertainty.propagation import propagation
 from wakeledger.stream.reference import Reference
 
@@ -159,13 +160,13 @@ def reduce_section(
     prepared = prepare_section(survey)
     uncertainty = survey.survey.uncertainty
     count = uncertainty.draws if draws is None else draws
-    samples, budget, plain = None, None, None
+    found: _Propagated | None = None
     if prepared.sources and count >= 2:
         try:
-            samples, budget, plain = _propagate(prepared, draws=count, seed=uncertainty.seed, progress=progress)
+            found = _propagate(prepared, draws=count, seed=uncertainty.seed, progress=progress)
         except InputError as error:
             raise error.located(file=survey.survey.path) from error
-    return _ledger(survey, prepared, samples, budget, plain, command=command)
+    return _ledger(survey, prepared, found, command=command)
 
 
 def prepare_section(survey: SurveyInput) -> PreparedSection:
@@ -323,9 +324,17 @@ def _outer_noise(chain: SectionChain, nominal: SectionReduction, noise: Sequence
     return _OuterNoise(nominal.window.noise, math.sqrt(float(np.mean(squares))), unit)
 
 
-def _propagate(
-    prepared: PreparedSection, *, draws: int, seed: int, progress: Progress | None
-) -> tuple[Samples, Budget, Samples]:
+@dataclass(frozen=True)
+class _Propagated:
+    """Draws with numerical terms, those that the cross-checks are made with, those without any, and the budget."""
+
+    samples: Samples
+    held: Samples
+    plain: Samples
+    budget: Budget
+
+
+def _propagate(prepared: PreparedSection, *, draws: int, seed: int, progress: Progress | None) -> _Propagated:
     plain = run_montecarlo(
         prepared.vectors,
         prepared.sources,
@@ -336,38 +345,46 @@ def _propagate(
         workers=1,
         progress=progress,
     )
+    held = add_terms(plain, prepared.terms, seed=seed)
+    checks = _crosschecks(prepared, _row(prepared, held), held)
+    terms = (*prepared.terms, *choice_terms(checks, prepared.nominal.values, OUTPUTS))
     budget = make_budget(
         prepared.vectors,
         prepared.sources,
         prepared.layouts,
         plain,
         seed=seed,
-        terms=prepared.terms,
+        terms=terms,
         draws=max(50, draws // 5),
         workers=1,
     )
-    return add_terms(plain, prepared.terms, seed=seed), budget, plain
+    return _Propagated(add_terms(plain, terms, seed=seed), held, plain, budget)
 
 
-def _ledger(
-    survey: SurveyInput,
-    prepared: PreparedSection,
-    samples: Samples | None,
-    budget: Budget | None,
-    plain: Samples | None,
-    *,
-    command: str,
-) -> Ledger:
+def _why(prepared: PreparedSection) -> str:
+    """Why there are no draws, where there are none."""
+    return _NO_DRAWS if prepared.sources else NO_SOURCE
+
+
+def _row(prepared: PreparedSection, samples: Samples | None, *, budget: Budget | None = None) -> Row:
+    row = ledger_row(
+        ROW, prepared.nominal.values, samples, budget=budget, sources=prepared.sources, reason=_why(prepared)
+    )
+    assert row is not None
+    return row
+
+
+def _ledger(survey: SurveyInput, prepared: PreparedSection, found: _Propagated | None, *, command: str) -> Ledger:
     file, nominal = survey.survey, prepared.nominal
     settings = prepared.chain.settings
-    why = _NO_DRAWS if prepared.sources else NO_SOURCE
-    row = ledger_row(ROW, nominal.values, samples, budget=budget, sources=prepared.sources, reason=why)
-    assert row is not None
-    variance = math.nan if samples is None else float(samples.covariance[0, 0])
+    budget = None if found is None else found.budget
+    row = _row(prepared, None if found is None else found.samples, budget=budget)
+    estimates = _crosschecks(prepared, row, None if found is None else found.held)
+    variance = math.nan if found is None else float(found.samples.covariance[0, 0])
     model = {} if file.model is None else file.model.given()
     came_about: tuple[Propagation, ...] = ()
-    if budget is not None and plain is not None and math.isfinite(row.standard_uncertainty):
-        came_about = propagation((ROW,), budget, prepared.sources, plain=plain, reason=_BY_DRAWS)
+    if found is not None and math.isfinite(row.standard_uncertainty):
+        came_about = propagation((ROW,), found.budget, prepared.sources, plain=found.plain, reason=_BY_DRAWS)
     return Ledger(
         title=file.title,
         compressible=nominal.reference.compressible,
@@ -376,13 +393,13 @@ def _ledger(
         plane=_traverse(prepared, survey.survey.plane.station),
         raw=survey.as_read,
         survey_text=file.text,
-        estimates=_crosschecks(prepared, row, samples, why),
+        estimates=estimates,
         comparisons=comparisons(file, (row,), {ROW: nominal.reference.dynamic_pressure * settings.chord}),
         budget=budget_lines(budget, (ROW,)),
         contributions=contributions(budget, (ROW,)),
         propagation=came_about,
         checks=section_checks(nominal, prepared.facts),
-        notes=prepared.notes,
+        notes=(*prepared.notes, *spread_notes(estimates, (row,))),
         test=file.test.given(),
         reference=tables.reference_scalars(nominal.reference),
         model={**model, "chord": settings.chord},
@@ -391,7 +408,7 @@ def _ledger(
     )
 
 
-def _crosschecks(prepared: PreparedSection, row: Row, samples: Samples | None, why: str) -> tuple[CrossCheck, ...]:
+def _crosschecks(prepared: PreparedSection, row: Row, samples: Samples | None) -> tuple[CrossCheck, ...]:
     """Betz and the momentum balance against Jones.
 
     What is expected of them is of first order in the loss; the rest grows as the loss over what is left of the total
@@ -414,7 +431,7 @@ def _crosschecks(prepared: PreparedSection, row: Row, samples: Samples | None, w
             expected=expected[method],
             expected_uncertainty=doubt,
             same_algebra=same[method],
-            no_samples=why,
+            no_samples=_why(prepared),
         )
         for method in METHODS
     )

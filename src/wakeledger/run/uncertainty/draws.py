@@ -33,6 +33,8 @@ DISCRETISATION = 1e-4
 
 
 Progress = Callable[[int, int], None]
+#: What the choice among methods is worth, given draws of the outputs that hold everything else.
+Choice = Callable[[Samples], Sequence[NumericalTerm]]
 
 
 def terms_of(prepared: Prepared, survey: SurveyInput) -> tuple[NumericalTerm, ...]:
@@ -97,9 +99,13 @@ def _noise_draws(prepared: Prepared, *, seed: int) -> list[dict[str, Array]]:
 
 @dataclass(frozen=True)
 class Propagated:
-    """Uncertainty of the outputs: draws with numerical terms, and without; what derivatives make of the same errors."""
+    """Uncertainty of the outputs: draws with numerical terms, and without; what derivatives make of the same errors.
+
+    `held` are those that the cross-checks are made with: all terms but the choice among methods.
+    """
 
     samples: Samples
+    held: Samples
     budget: Budget
     plain: Samples
     predicted: Samples
@@ -107,7 +113,13 @@ class Propagated:
 
 
 def propagate(
-    prepared: Prepared, terms: Sequence[NumericalTerm], *, draws: int, seed: int, progress: Progress | None
+    prepared: Prepared,
+    terms: Sequence[NumericalTerm],
+    *,
+    draws: int,
+    seed: int,
+    progress: Progress | None,
+    choice: Choice = lambda _: (),
 ) -> Propagated:
     """Monte Carlo draws of a prepared survey, its budget, and what derivatives make of the same errors.
 
@@ -121,6 +133,8 @@ def propagate(
         Of the Monte Carlo.
     progress : callable or None
         Called with the draws done and their number.
+    choice : callable
+        Gives the terms of the choice among methods.
 
     Returns
     -------
@@ -138,6 +152,8 @@ def propagate(
         progress=progress,
     )
     plain, predicted = separated(drawn)
+    held = add_terms(plain, terms, seed=seed)
+    terms = (*terms, *choice(held))
     budget = make_budget(
         chain.vectors,
         given,
@@ -145,18 +161,24 @@ def propagate(
         plain,
         seed=seed,
         terms=terms,
+        slopes=slopes,
         draws=max(50, draws // 5),
     )
     whole = sum(sum(noise.variance) for noise in prepared.noises)
     noisy = {noise.name for noise in prepared.noises if sum(noise.variance) >= NEGLIGIBLE * whole}
     linear = survey_budget(chain, nominal, slopes, given, inputs, noisy=noisy, components=budget.components)
-    return Propagated(add_terms(plain, terms, seed=seed), budget, plain, predicted, linear)
+    return Propagated(add_terms(plain, terms, seed=seed), held, budget, plain, predicted, linear)
 
 
 def numerical_only(
-    prepared: Prepared, terms: Sequence[NumericalTerm], *, draws: int, seed: int
-) -> tuple[Samples, Budget]:
-    """Nothing was measured in a computed flow: numerical terms are all the uncertainty there is."""
+    prepared: Prepared, terms: Sequence[NumericalTerm], *, draws: int, seed: int, choice: Choice = lambda _: ()
+) -> tuple[Samples, Samples, Budget]:
+    """Nothing was measured in a computed flow: numerical terms are all the uncertainty there is.
+
+    Gives the draws, those without the choice among methods, and the budget.
+    """
     plain = Samples(OUTPUTS, np.tile(prepared.nominal.vector, (draws, 1)))
+    held = add_terms(plain, terms, seed=seed)
+    terms = (*terms, *choice(held))
     budget = make_budget(prepared.chain.vectors, (), {}, plain, seed=seed, terms=terms)
-    return add_terms(plain, terms, seed=seed), budget
+    return add_terms(plain, terms, seed=seed), held, budget
