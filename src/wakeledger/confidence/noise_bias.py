@@ -103,6 +103,65 @@ def quadratic_noise_bias(
     return 0.5 * float(spread) * _separable(covariance_z, covariance_y, weights, mask)
 
 
+def modal_noise_bias(
+    left_z: Operator,
+    left_y: Operator,
+    strengths: Array,
+    modes: Array,
+    mask: Array,
+    variance: float | Array,
+    *,
+    correlation: tuple[Array | None, Array | None] = (None, None),
+) -> float:
+    """Expected value that the noise of one data field adds to a quadratic form given as a sum of few squares.
+
+    Parameters
+    ----------
+    left_z, left_y, mask, variance, correlation
+        As in `quadratic_noise_bias`.
+    strengths : ndarray, shape (r,)
+        Weight λ of each square.
+    modes : ndarray, shape (r, nz, ny)
+        Weights φ of the field in each.
+
+    Returns
+    -------
+    float
+        The expectation, in the unit of the form.
+
+    Raises
+    ------
+    ValueError
+        If the shapes do not fit together.
+
+    Notes
+    -----
+    Q(f) = ½ Σ_r λ_r (Σ_i M_i φ_r(i) f_i)² and f = R_z n R_yᵀ: each square gains the variance of one linear functional
+    of the data, whose weights are R_zᵀ (M φ_r) R_y.
+    """
+    onto_z, onto_y = (sparse.csr_array(left, dtype=float) for left in (left_z, left_y))
+    spread = np.asarray(variance, dtype=float)
+    if (onto_z.shape[0], onto_y.shape[0]) != mask.shape:
+        raise ValueError(f"the operators give shape {(onto_z.shape[0], onto_y.shape[0])}; the mask has {mask.shape}")
+    if modes.shape[1:] != mask.shape:
+        raise ValueError(f"modes have shape {modes.shape[1:]}; the mask has {mask.shape}")
+    if strengths.shape != modes.shape[:1]:
+        raise ValueError(f"{strengths.size} strengths do not fit {len(modes)} modes")
+    raw = onto_z.shape[1], onto_y.shape[1]
+    if spread.ndim and spread.shape != raw:
+        raise ValueError(f"variance has shape {spread.shape}; the data have {raw}")
+    deviation = np.sqrt(spread)
+    along_z, along_y = correlation
+    total = 0.0
+    for strength, mode in zip(strengths, modes, strict=True):
+        weights = deviation * (onto_z.T @ (mask * mode) @ onto_y)
+        spreading = weights if along_z is None else along_z @ weights
+        if along_y is not None:
+            spreading = spreading @ along_y
+        total += float(strength) * float(np.vdot(weights, spreading))
+    return 0.5 * total
+
+
 def _product(left: sparse.csr_array, variance: Array | None = None) -> Array:
     """Covariance of a linear map of independent noise."""
     inner = left if variance is None else left * variance[None, :]

@@ -1,0 +1,48 @@
+"""The response of walls as a few modes, against the walled solve itself."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+from wakeledger.core.grid import UniformGrid
+from wakeledger.physics.fields.boundary import Circle, ClosedWalls, FreeAir, OpenJet, Rectangle
+from wakeledger.physics.fields.poisson import stream_function, velocity_potential
+from wakeledger.physics.fields.wall_correction import wall_stream_function, wall_velocity_potential
+from wakeledger.physics.fields.wall_modes import wall_modes
+
+GRID = UniformGrid(-0.6, -0.32, 0.06, 0.05, 21, 14)
+YY, ZZ = GRID.mesh()
+MASK = (YY / 0.5) ** 2 + (ZZ / 0.22) ** 2 < 1
+BOUNDARIES = {
+    "closed": ClosedWalls(Rectangle((-1.0, 1.0), (-0.7, 0.7))),
+    "near walls": ClosedWalls(Rectangle((-0.66, 0.66), (-0.36, 0.45))),
+    "jet": OpenJet(Circle(1.9)),
+    # The corners of the window lie outside.
+    "round": ClosedWalls(Circle(1.3)),
+}
+
+
+@pytest.mark.parametrize("name", BOUNDARIES)
+@pytest.mark.parametrize("of", ["vorticity", "divergence"])
+def test_modes_give_what_the_walls_add(name: str, of: str) -> None:
+    boundary = BOUNDARIES[name]
+    fields = np.random.default_rng(5).standard_normal((6, *GRID.shape)) * MASK
+    if of == "vorticity":
+        walls = wall_stream_function(fields, GRID, boundary) - stream_function(fields, GRID)
+    else:
+        walls = velocity_potential(fields, GRID) - wall_velocity_potential(fields, GRID, boundary)
+    expected = (fields * walls).sum(axis=(-2, -1))
+    strengths, modes = wall_modes(GRID, boundary, MASK, of=of)
+    found = np.einsum("r,kr->k", strengths, np.einsum("rzy,kzy->kr", modes, fields) ** 2)
+    # The tolerance of the modes.
+    np.testing.assert_allclose(found, expected, rtol=0, atol=1e-5 * np.abs(expected).max())
+    assert np.abs(expected).min() > 1e-5
+    assert strengths.size <= 100
+
+
+def test_nothing_around_the_plane_adds_nothing() -> None:
+    for boundary, mask in ((FreeAir(), MASK), (BOUNDARIES["closed"], np.zeros_like(MASK))):
+        strengths, modes = wall_modes(GRID, boundary, mask)
+        assert strengths.size == 0
+        assert modes.shape == (0, *GRID.shape)
