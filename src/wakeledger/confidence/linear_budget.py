@@ -15,6 +15,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from wakeledger.confidence.linear import coverage_factor, welch_satterthwaite
+from wakeledger.confidence.pairs import PairOrder
 from wakeledger.confidence.sampling import SourceErrors
 from wakeledger.confidence.sources import InputLayout, Source, check_sources
 from wakeledger.core.grid import Array
@@ -81,10 +82,36 @@ class SecondOrder:
         Added to the variance of each output: ½ tr(HCHC) for normal errors of covariance C.
     shift : ndarray, shape (m,)
         Added to its mean: ½ tr(HC).
+    inflation : ndarray, shape (m,), or None
+        Added on average to the first-order variance by slopes at measured values, tr(HCHC)
+        (`wakeledger.confidence.curvature`); None for twice the variance, as with normal errors.
+    along : ndarray, shape (m,), or None
+        gᵀCHCg, the curvature along the slope; None where it is not known, which counts as none.
     """
 
     variance: Array
     shift: Array
+    inflation: Array | None = None
+    along: Array | None = None
+
+    @classmethod
+    def none(cls, outputs: int) -> SecondOrder:
+        """No curvature."""
+        return cls(*np.zeros((4, outputs)))
+
+    @property
+    def in_slopes(self) -> Array:
+        """The inflation, shape (m,)."""
+        return 2 * self.variance if self.inflation is None else self.inflation
+
+    def __add__(self, other: SecondOrder) -> SecondOrder:
+        along = [0.0 if one.along is None else one.along for one in (self, other)]
+        return SecondOrder(
+            self.variance + other.variance,
+            self.shift + other.shift,
+            self.in_slopes + other.in_slopes,
+            np.asarray(along[0] + along[1] + np.zeros(self.variance.shape)),
+        )
 
 
 @dataclass(frozen=True)
@@ -101,6 +128,8 @@ class LinearBudget:
         First order, from each source alone.
     second : tuple of SecondOrder
         Second order, from each source alone.
+    pairs : PairOrder
+        Second order of two errors together.
     common : ndarray, shape (m, m)
         Added by errors that two sources share: their covariance.
     correlated : str or None
@@ -111,6 +140,7 @@ class LinearBudget:
     sources: tuple[Source, ...]
     covariance: Array
     second: tuple[SecondOrder, ...]
+    pairs: PairOrder
     common: Array
     correlated: str | None = None
 
@@ -122,8 +152,8 @@ class LinearBudget:
 
     @property
     def total(self) -> Array:
-        """Covariance of the outputs from all sources, shape (m, m); the second order on the diagonal only."""
-        total: Array = self.covariance.sum(axis=0) + self.common
+        """Covariance of the outputs, shape (m, m); the second order of each source alone on the diagonal only."""
+        total: Array = self.covariance.sum(axis=0) + self.common + self.pairs.covariance
         return total + np.diag(np.sum([one.variance for one in self.second], axis=0))
 
     @property
@@ -134,7 +164,21 @@ class LinearBudget:
     @property
     def second_order(self) -> Array:
         """Standard uncertainty that the second order alone would give, shape (m,)."""
-        return np.asarray(np.sqrt(np.sum([one.variance for one in self.second], axis=0)))
+        alone = np.sum([one.variance for one in self.second], axis=0)
+        return np.asarray(np.sqrt(alone + np.diag(self.pairs.covariance)))
+
+    @property
+    def inflation(self) -> Array:
+        """What the second order adds on average to the first at measured values, shape (m,).
+
+        Without what lies along the slope of each output itself (`wakeledger.confidence.curvature`).
+        """
+        whole = np.sum([one.in_slopes for one in self.second], axis=0) + self.pairs.inflation
+        along = np.sum([one.along for one in self.second if one.along is not None], axis=0) + self.pairs.along
+        first = np.diag(self.covariance.sum(axis=0) + self.common)
+        own = np.square(np.divide(along, first, out=np.zeros(whole.shape), where=first > 0))
+        inflation: Array = np.maximum(whole - own, 0.0)
+        return inflation
 
     @property
     def shift(self) -> Array:
@@ -183,6 +227,7 @@ def linear_budget(
     *,
     names: Sequence[str],
     second: Mapping[str, SecondOrder] | None = None,
+    pairs: PairOrder | None = None,
 ) -> LinearBudget:
     """Propagate all sources through given derivatives.
 
@@ -199,6 +244,8 @@ def linear_budget(
     second : mapping of str to SecondOrder, optional
         Second order of sources by name (`probed_curvature`), whole; where it is not given, that of single numbers comes
         from `Slopes.curvatures`.
+    pairs : PairOrder, optional
+        Second order of pairs of single errors (`wakeledger.confidence.pairs.pair_order`); none where it is left out.
 
     Returns
     -------
@@ -223,8 +270,7 @@ def linear_budget(
     for source in sources:
         errors = SourceErrors(source, layouts, seed=0)
         covariance = np.zeros((m, m))
-        order = (second or {}).get(source.name, SecondOrder(np.zeros(m), np.zeros(m)))
-        variance, shift = order.variance.copy(), order.shift.copy()
+        order = (second or {}).get(source.name, SecondOrder.none(m))
         through = {name: slopes.figures[name] for name in source.applies_to if name not in slopes.direct}
         straight = {name: slopes.direct[name] for name in source.applies_to if name in slopes.direct}
         found = errors.effects({**through, **straight})
@@ -234,8 +280,9 @@ def linear_budget(
             if name in straight and source.name not in (second or {}):
                 curved = 0.5 * slopes.curvatures.get(name, np.zeros(m)) * _size(source, layouts[name]) ** 2
                 fourth = source.kurtosis if math.isfinite(source.kurtosis) else 3.0
-                variance += (fourth - 1) * curved**2
-                shift += curved
+                order += SecondOrder(
+                    (fourth - 1) * curved**2, curved, 4 * curved**2, 2 * curved * np.square(effects[:, 0])
+                )
             if source.shared_id is not None:
                 whole = effects if name in straight else slopes.outputs @ effects
                 for other in shared.setdefault((source.shared_id, name), []):
@@ -243,9 +290,16 @@ def linear_budget(
                         common += other @ whole.T + whole @ other.T
                 shared[source.shared_id, name].append(whole)
         covariances.append(covariance)
-        orders.append(SecondOrder(variance, shift))
+        orders.append(order)
+    together = PairOrder.none(m) if pairs is None else pairs
     return LinearBudget(
-        tuple(names), tuple(sources), np.stack(covariances), tuple(orders), common, correlated_sources(sources)
+        tuple(names),
+        tuple(sources),
+        np.stack(covariances),
+        tuple(orders),
+        together,
+        common,
+        correlated_sources(sources),
     )
 
 
@@ -332,7 +386,7 @@ def probed_curvature(
         images = np.stack([_image(gradient_at, source, errors, one, directions).by_direction for one in directions])
         diagonal = np.einsum("jmj->mj", images)
         variance = 0.5 * np.square(images).sum(axis=(0, 2)) + 0.25 * (fourth - 3.0) * np.square(diagonal).sum(axis=1)
-        return SecondOrder(np.maximum(variance, 0.0), 0.5 * diagonal.sum(axis=1))
+        return SecondOrder(np.maximum(variance, 0.0), 0.5 * diagonal.sum(axis=1), np.square(images).sum(axis=(0, 2)))
     directions = np.sign(np.random.default_rng([seed, 5]).random((probes, errors.latents)) - 0.5)
     found: list[_Image] = []
     weighted: Array | float = 0.0
@@ -351,7 +405,7 @@ def probed_curvature(
         estimate = np.diag(outputs @ (weighted @ np.transpose(weighted)) @ outputs.T)
         squares = (probes * estimate - frobenius) / (probes - 1)
         variance = variance + 0.25 * (fourth - 3.0) * np.clip(squares, 0.0, frobenius)
-    return SecondOrder(np.maximum(variance, 0.0), 0.5 * trace)
+    return SecondOrder(np.maximum(variance, 0.0), 0.5 * trace, np.maximum(frobenius, 0.0))
 
 
 @dataclass(frozen=True)

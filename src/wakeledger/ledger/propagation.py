@@ -22,6 +22,7 @@ _MEANINGS = {
     "linear_standard_uncertainty": "from the declared sources by derivatives, first and second order",
     "second_order_standard_uncertainty": "what the second order alone contributes to that",
     "monte_carlo_standard_uncertainty": "from the same sources by Monte Carlo",
+    "curvature_factor": "factor on the draws of the declared sources, so that the curvature of the row counts once",
     "linear_degrees_of_freedom": "effective degrees of freedom (Welch and Satterthwaite); infinite: all sizes exact",
     "linear_coverage_factor": "factor of the expanded uncertainty by Student's t with these degrees of freedom",
     "linear_expanded_uncertainty": "expanded uncertainty (95 %) by derivatives",
@@ -45,7 +46,10 @@ class Propagation:
     linear_standard_uncertainty, second_order_standard_uncertainty : float
         From the declared sources alone, by derivatives, both orders; and the second order's contribution to it.
     monte_carlo_standard_uncertainty : float
-        From the same sources by Monte Carlo, without numerical terms.
+        From the same sources by Monte Carlo, without numerical terms (JCGM 101).
+    curvature_factor : float
+        Factor on these draws in the row's uncertainty. Below 1 the row bends so much over its errors that draws about
+        the measured values, which hold the errors already, are too wide (docs/uncertainty.md); 1 where it does not.
     linear_degrees_of_freedom, linear_coverage_factor, linear_expanded_uncertainty : float
         Welch and Satterthwaite's degrees of freedom, Student's factor for them, and their U95.
     interval_difference, tolerance : float
@@ -65,6 +69,7 @@ class Propagation:
     linear_standard_uncertainty: float = math.nan
     second_order_standard_uncertainty: float = math.nan
     monte_carlo_standard_uncertainty: float = math.nan
+    curvature_factor: float = 1.0
     linear_degrees_of_freedom: float = math.nan
     linear_coverage_factor: float = math.nan
     linear_expanded_uncertainty: float = math.nan
@@ -104,8 +109,10 @@ def propagation_dataset(records: tuple[Propagation, ...]) -> xr.Dataset:
 def dataset_propagation(dataset: xr.Dataset) -> tuple[Propagation, ...]:
     """Undo `propagation_dataset`."""
     found = []
+    # An archive from before a figure was told leaves it at its default.
+    kept = [name for name in _MEANINGS if name in dataset]
     for index, row in enumerate(dataset["row"].values):
-        entry: dict[str, Any] = {name: float(dataset[name].values[index]) for name in _MEANINGS}
+        entry: dict[str, Any] = {name: float(dataset[name].values[index]) for name in kept}
         entry["verdict"] = str(dataset["verdict"].values[index])
         entry["reason"] = str(dataset["reason"].values[index]) or None
         found.append(Propagation(str(row), **entry))

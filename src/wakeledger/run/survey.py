@@ -232,6 +232,7 @@ def _ledger(
             plain=found.plain,
             predicted=found.predicted,
             linear=found.linear,
+            factor=found.factor,
         )
     return Ledger(
         title=file.title,

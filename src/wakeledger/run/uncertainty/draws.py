@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from wakeledger.confidence.budget import Budget, make_budget
+from wakeledger.confidence.curvature import curvature_factor, scaled_budget, scaled_samples
 from wakeledger.confidence.linear_budget import NEGLIGIBLE, LinearBudget
 from wakeledger.confidence.montecarlo import run as run_montecarlo
 from wakeledger.confidence.samples import Samples
@@ -18,18 +19,20 @@ from wakeledger.physics.methods.entropy_area import expansion_doubt
 from wakeledger.physics.methods.wake_line import evaluate as evaluate_wake_line
 from wakeledger.physics.methods.wake_line import path_scatter
 from wakeledger.run.chain.estimates import counted_mask, without_walls
-from wakeledger.run.chain.outputs import OUTPUTS, estimate_of
+from wakeledger.run.chain.outputs import OUTPUTS, ROWS, coefficient_of, corrected_coefficient_of, estimate_of
 from wakeledger.run.computed import mesh_term
 from wakeledger.run.gridded import regrid_of
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.prepared import Prepared
-from wakeledger.run.uncertainty.linear import linear_slopes, separated, survey_budget, tried, with_prediction
+from wakeledger.run.uncertainty.linear import linear_slopes, paired, separated, survey_budget, tried, with_prediction
 from wakeledger.run.uncertainty.numerics import numerical_terms
 
 #: Draws that tell the wake region's own effect from that of noise.
 _NOISE_DRAWS = 16
 #: What sums of cells and sums of differences may differ by on the same vorticity, as a share.
 DISCRETISATION = 1e-4
+#: Which outputs are rows or their coefficients.
+_OF_ROWS = np.isin(OUTPUTS, [name(row) for row in ROWS for name in (str, coefficient_of, corrected_coefficient_of)])
 
 
 Progress = Callable[[int, int], None]
@@ -101,7 +104,9 @@ def _noise_draws(prepared: Prepared, *, seed: int) -> list[dict[str, Array]]:
 class Propagated:
     """Uncertainty of the outputs: draws with numerical terms, and without; what derivatives make of the same errors.
 
-    `held` are those that the cross-checks are made with: all terms but the choice among methods.
+    `held` are those that the cross-checks are made with: all terms but the choice among methods. `factor` is what the
+    deviations of the rows were multiplied by, before the terms were added, so that their curvature counts once; those
+    of `held` and `plain` are as drawn.
     """
 
     samples: Samples
@@ -110,6 +115,7 @@ class Propagated:
     plain: Samples
     predicted: Samples
     linear: LinearBudget
+    factor: Array
 
 
 def propagate(
@@ -166,8 +172,15 @@ def propagate(
     )
     whole = sum(sum(noise.variance) for noise in prepared.noises)
     noisy = {noise.name for noise in prepared.noises if sum(noise.variance) >= NEGLIGIBLE * whole}
-    linear = survey_budget(chain, nominal, slopes, given, inputs, noisy=noisy, components=budget.components)
-    return Propagated(add_terms(plain, terms, seed=seed), held, budget, plain, predicted, linear)
+    variance = plain.standard_uncertainty**2
+    pairs = paired(chain.vectors, given, inputs, budget.components, variance)
+    linear = survey_budget(
+        chain, nominal, slopes, given, inputs, noisy=noisy, components=budget.components, pairs=pairs
+    )
+    factor = np.where(_OF_ROWS, curvature_factor(variance, linear.second_order**2, linear.inflation), 1.0)
+    samples = add_terms(scaled_samples(plain, factor), terms, seed=seed)
+    budget = scaled_budget(budget, factor, samples.standard_uncertainty)
+    return Propagated(samples, held, budget, plain, predicted, linear, factor)
 
 
 def numerical_only(

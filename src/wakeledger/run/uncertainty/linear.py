@@ -18,6 +18,7 @@ from wakeledger.confidence.linear_budget import (
     probed_curvature,
 )
 from wakeledger.confidence.montecarlo import Evaluate
+from wakeledger.confidence.pairs import PairOrder, pair_order
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.confidence.sources import InputLayout, Source
@@ -123,6 +124,7 @@ def survey_budget(
     *,
     noisy: Collection[str],
     components: Sequence[Component] = (),
+    pairs: PairOrder | None = None,
 ) -> LinearBudget:
     """Linear budget of a survey, with a second order where the first does not tell all.
 
@@ -138,6 +140,8 @@ def survey_budget(
         Sources whose errors make the crossflow differ from point to point, on which rows hang quadratically.
     components : sequence of Component
         Effects of single errors, as far as they are known: those of sources with few errors, both orders.
+    pairs : PairOrder, optional
+        What two of them do together (`paired`).
 
     Returns
     -------
@@ -152,7 +156,7 @@ def survey_budget(
     the second-order variance is the scatter about that mean and does not hold it.
     """
     second = _from_components(components)
-    first = linear_budget(slopes, sources, layouts, names=OUTPUTS, second=second)
+    first = linear_budget(slopes, sources, layouts, names=OUTPUTS, second=second, pairs=pairs)
     variance = np.nan_to_num(np.diag(first.total))
     bias = np.array([chain.frozen.bias.get(name, 0.0) for name in OUTPUTS])
     if not np.any(2 * bias**2 > NEGLIGIBLE * variance):
@@ -161,7 +165,41 @@ def survey_budget(
         through = all(name in slopes.figures for name in source.applies_to)
         if source.name in noisy and source.name not in second and through:
             second[source.name] = probed_curvature(_Displaced(chain, nominal, slopes, layouts), source, layouts)
-    return linear_budget(slopes, sources, layouts, names=OUTPUTS, second=second)
+    return linear_budget(slopes, sources, layouts, names=OUTPUTS, second=second, pairs=pairs)
+
+
+def paired(
+    evaluate: Evaluate,
+    sources: Sequence[Source],
+    layouts: Mapping[str, InputLayout],
+    components: Sequence[Component],
+    variance: Array,
+    *,
+    workers: int = 2,
+) -> PairOrder:
+    """What the single errors of a survey do two by two.
+
+    Parameters
+    ----------
+    evaluate : callable
+        The chain, as `wakeledger.confidence.montecarlo.run` takes it.
+    sources, layouts
+        What errs.
+    components : sequence of Component
+        Effects of single errors; those of the sources with few errors are paired.
+    variance : ndarray, shape (m,)
+        Of each output.
+    workers : int
+        Number of threads.
+
+    Returns
+    -------
+    PairOrder
+    """
+    shifted = {one.source for one in components if one.kind == MEASURED}
+    sampler = ErrorSampler(sources, layouts, seed=0)
+    few = [one for one in sampler.by_source if one.source.name in shifted]
+    return pair_order(evaluate, sampler, few, components, variance, workers=workers)
 
 
 def _from_components(components: Sequence[Component]) -> dict[str, SecondOrder]:
@@ -169,9 +207,11 @@ def _from_components(components: Sequence[Component]) -> dict[str, SecondOrder]:
     found: dict[str, SecondOrder] = {}
     for one in components:
         if one.kind == MEASURED:
-            before = found.get(one.source, SecondOrder(np.zeros(one.curved.shape), np.zeros(one.curved.shape)))
-            added = one.variance - one.linear**2
-            found[one.source] = SecondOrder(before.variance + added, before.shift + one.curved)
+            before = found.get(one.source, SecondOrder.none(one.curved.size))
+            added = SecondOrder(
+                one.variance - one.linear**2, one.curved, 4 * one.curved**2, 2 * one.curved * one.linear**2
+            )
+            found[one.source] = before + added
     return found
 
 

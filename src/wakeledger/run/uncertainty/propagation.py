@@ -12,6 +12,7 @@ from wakeledger.confidence.linear_budget import LinearBudget
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sources import Source
 from wakeledger.confidence.validation import compare_with_samples
+from wakeledger.core.grid import Array
 from wakeledger.ledger.propagation import Agreement, Propagation
 
 #: Significant digits of a standard uncertainty that derivatives must give (JCGM 101, 7.9.2: one or two).
@@ -69,6 +70,7 @@ def propagation(
     plain: Samples,
     predicted: Samples | None = None,
     linear: LinearBudget | None = None,
+    factor: Array | None = None,
     reason: str = _NO_DERIVATIVES,
 ) -> tuple[Propagation, ...]:
     """How the uncertainty of some rows came about.
@@ -87,6 +89,8 @@ def propagation(
         Changes that derivatives predict for the same draws, under the same names; None where there are none.
     linear : LinearBudget or None
         The budget by derivatives.
+    factor : ndarray or None
+        By what the draws were scaled, under their names (`wakeledger.confidence.curvature`); None where they were not.
     reason : str
         Why there are no derivatives, where there are none.
 
@@ -99,15 +103,24 @@ def propagation(
         random, systematic, numerical = parts(budget, row, sources)
         at = plain.names.index(row)
         drawn = float(plain.standard_uncertainty[at])
+        scaled = 1.0 if factor is None else float(factor[at])
         if linear is None or predicted is None or not math.isfinite(linear.standard_uncertainty[at]):
             why = reason if linear is None else _OFF
             found.append(
-                Propagation(row, random, systematic, numerical, monte_carlo_standard_uncertainty=drawn, reason=why)
+                Propagation(
+                    row,
+                    random,
+                    systematic,
+                    numerical,
+                    monte_carlo_standard_uncertainty=drawn,
+                    curvature_factor=scaled,
+                    reason=why,
+                )
             )
             continue
         u = float(linear.standard_uncertainty[at])
-        factor = float(linear.coverage_factor()[at])
-        verdict, difference, tolerance = _held_against(plain, at, factor * u)
+        coverage = float(linear.coverage_factor()[at])
+        verdict, difference, tolerance = _held_against(plain, at, coverage * u)
         left = plain.values[:, at] - predicted.values[:, at]
         left = left[np.isfinite(left)]
         found.append(
@@ -119,9 +132,10 @@ def propagation(
                 linear_standard_uncertainty=u,
                 second_order_standard_uncertainty=float(linear.second_order[at]),
                 monte_carlo_standard_uncertainty=drawn,
+                curvature_factor=scaled,
                 linear_degrees_of_freedom=float(linear.degrees_of_freedom()[at]),
-                linear_coverage_factor=factor,
-                linear_expanded_uncertainty=factor * u,
+                linear_coverage_factor=coverage,
+                linear_expanded_uncertainty=coverage * u,
                 interval_difference=difference,
                 tolerance=tolerance,
                 non_linearity=float(np.std(left, ddof=1)) / drawn if drawn > 0 else math.nan,
@@ -145,7 +159,22 @@ def _held_against(plain: Samples, at: int, half_width: float) -> tuple[Agreement
 
 
 def propagation_notes(records: Sequence[Propagation]) -> list[str]:
-    """What the comparison of the two says: the row that departs most from its derivatives, and by how much."""
+    """What draws and derivatives say about each other, and what was done about the curvature of rows.
+
+    Parameters
+    ----------
+    records : sequence of Propagation
+        From `propagation`.
+
+    Returns
+    -------
+    list of str
+        The row that departs most from its derivatives, and by how much; the rows whose draws were scaled.
+    """
+    return [*_departure(records), *_scaling(records)]
+
+
+def _departure(records: Sequence[Propagation]) -> list[str]:
     known = [one for one in records if math.isfinite(one.non_linearity)]
     if not known:
         return []
@@ -156,5 +185,19 @@ def propagation_notes(records: Sequence[Propagation]) -> list[str]:
     name = worst.row.replace("_", " ")
     return [
         f"The {name} departs most from linear propagation: {worst.non_linearity:.0%} of the standard deviation of its"
-        f" draws is not predicted by derivatives (u {u:.3g} by derivatives, {drawn:.3g} by Monte Carlo, which is used)."
+        f" draws is not predicted by derivatives (u {u:.3g} by derivatives, {drawn:.3g} by Monte Carlo)."
+    ]
+
+
+def _scaling(records: Sequence[Propagation]) -> list[str]:
+    scaled = [one for one in records if one.curvature_factor < 1]
+    if not scaled:
+        return []
+    sizes = ", ".join(
+        f"{one.row.replace('_', ' ')} {1 - one.curvature_factor:.1%}"
+        for one in sorted(scaled, key=lambda one: one.curvature_factor)
+    )
+    return [
+        "Draws about measured values count the curvature of a row more than once, because its slopes there hold the"
+        f" errors already; the measured part of the uncertainty is made smaller for it, by this share: {sizes}."
     ]
