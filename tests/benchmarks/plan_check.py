@@ -25,7 +25,8 @@ from wakeledger.run.config import Survey
 from wakeledger.run.config.plan_file import parse_plan
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.planning import plan
-from wakeledger.run.planning.flow import ExpectedFlow, expected_flow
+from wakeledger.run.planning.expected import expected_flow
+from wakeledger.run.planning.flow import ExpectedFlow
 from wakeledger.run.planning.instrument import Probe
 from wakeledger.run.planning.search import FACTOR
 from wakeledger.run.planning.simulate import (
@@ -91,7 +92,7 @@ def survey_of(
 ) -> SurveyInput:
     """A survey with errors drawn for it by a way of its own: the probe is turned and the stream is read wrong."""
     probe = Probe(one.velocity_noise, one.total_pressure_noise, one.static_pressure_noise)
-    places = visit(flow, window, shift_of(flow, window, generator))
+    places = visit(flow, window, shift_of(flow, window, tuple(generator.uniform(size=2))))
     readings = dict(places.readings)
     turn = Errors(pitch=wrong["pitch"], yaw=wrong["yaw"]).mounting
     turned = turn.T @ np.stack([readings[name] for name in "uvw"])
@@ -166,7 +167,9 @@ def planned(changes: Mapping[str, Any], folder: Path, *, workers: int = 2) -> tu
     return found, flow, window, path.read_text(encoding="utf-8")
 
 
-def errors_of(found: Plan, flow: ExpectedFlow, window: Window, numbers: Sequence[int], *, seed: int = 1) -> np.ndarray:
+def errors_of(
+    found: Plan, flow: ExpectedFlow, window: Window, numbers: Sequence[int], *, seed: Sequence[int] = (1,)
+) -> np.ndarray:
     """Errors of surveys in the plan's unit; survey k is the same whatever their number is."""
     one = found.chosen
     assert one is not None
@@ -174,7 +177,7 @@ def errors_of(found: Plan, flow: ExpectedFlow, window: Window, numbers: Sequence
     scale = 1e4 if found.unit == "counts" else 1.0
     errors = []
     for k in numbers:
-        generator = np.random.default_rng([seed, k])
+        generator = np.random.default_rng([*seed, k])
         size = {
             "pitch": one.angle_accuracy,
             "yaw": one.angle_accuracy,
@@ -189,15 +192,18 @@ def errors_of(found: Plan, flow: ExpectedFlow, window: Window, numbers: Sequence
     return np.array(errors)
 
 
-def judge(case: str, changes: Mapping[str, Any], surveys: int, folder: Path, *, workers: int = 1) -> Outcome:
-    """Plan one case and simulate it."""
-    found, flow, window, text = planned(changes, folder)
+def judge(
+    case: str, changes: Mapping[str, Any], surveys: int, folder: Path, *, workers: int = 1, seed: int = 1
+) -> Outcome:
+    """Plan one case and simulate it; every case has errors of its own."""
+    found, flow, window, text = planned(changes, folder, workers=workers)
+    own = (seed, list(CASES).index(case))
     if workers == 1:
-        errors = errors_of(found, flow, window, range(surveys))
+        errors = errors_of(found, flow, window, range(surveys), seed=own)
     else:
         chunks = [range(k, surveys, 4 * workers) for k in range(4 * workers)]
         with ProcessPoolExecutor(workers) as pool:
-            parts = pool.map(_in_process, [(text, found, chunk) for chunk in chunks])
+            parts = pool.map(_in_process, [(text, found, chunk, own) for chunk in chunks])
             errors = np.concatenate(list(parts))
     return _outcome(case, found, errors)
 
@@ -207,14 +213,14 @@ def _outcome(case: str, found: Plan, errors: np.ndarray) -> Outcome:
     return Outcome(case, found.unit, found.expanded_uncertainty, FACTOR * math.sqrt(known), errors)
 
 
-def _in_process(job: tuple[str, Plan, range]) -> np.ndarray:
-    text, found, numbers = job
+def _in_process(job: tuple[str, Plan, range, tuple[int, ...]]) -> np.ndarray:
+    text, found, numbers, seed = job
     request = parse_plan(text, "plan.toml")
     flow = expected_flow(request)
     assert found.chosen is not None
     window = window_of(flow, found.chosen.spacing, found.chosen.window, rows_along=request.plan.rows_along)
     assert window is not None
-    return errors_of(found, flow, window, numbers)
+    return errors_of(found, flow, window, numbers, seed=seed)
 
 
 def table(outcomes: Sequence[Outcome]) -> str:
@@ -256,6 +262,7 @@ def main(arguments: Sequence[str] | None = None) -> None:
     parser = argparse.ArgumentParser(prog="python -m tests.benchmarks.plan_check", description=__doc__)
     parser.add_argument("--surveys", type=int, default=200, help="surveys per case (default 200)")
     parser.add_argument("--case", action="append", choices=list(CASES), help="a case; all if not given")
+    parser.add_argument("--seed", type=int, default=1, help="of the surveys' errors (default 1)")
     parser.add_argument("--workers", type=int, default=1, help="processes (default 1)")
     parser.add_argument("--write", type=Path, help="page whose generated block is replaced")
     parser.add_argument("--json", type=Path, help="file for the figures")
@@ -270,7 +277,9 @@ def main(arguments: Sequence[str] | None = None) -> None:
                 found = planned(CASES[case], Path(folder))[0]
                 outcomes.append(_outcome(case, found, np.array(kept[case]["errors"])))
             else:
-                outcomes.append(judge(case, CASES[case], options.surveys, Path(folder), workers=options.workers))
+                outcomes.append(
+                    judge(case, CASES[case], options.surveys, Path(folder), workers=options.workers, seed=options.seed)
+                )
         if options.json:
             options.json.write_text(json.dumps([_record(one) for one in outcomes], indent=1) + "\n", encoding="utf-8")
         print(table(outcomes[-1:]).splitlines()[-1], file=sys.stderr)

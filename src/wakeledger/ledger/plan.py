@@ -39,7 +39,10 @@ class SetUp:
     minutes : float
         Of all repeats together; NaN where neither settling time nor traverse speed is given.
     expanded_uncertainty : float
-        Of the row (95 %), in the plan's unit; NaN where no such survey can be reduced.
+        Of the row (95 %), in the plan's unit: 1.96 times the root mean square of what such surveys are off the exact
+        row; NaN where no such survey can be reduced.
+    stated : float
+        What the ledger of such a survey would state for it, with its numerical terms; NaN where unknown.
     failing : tuple of str
         Checks that would fail.
     reason : str or None
@@ -62,6 +65,7 @@ class SetUp:
     points: int
     minutes: float
     expanded_uncertainty: float
+    stated: float = math.nan
     failing: tuple[str, ...] = ()
     reason: str | None = None
 
@@ -139,10 +143,11 @@ class Plan:
     beyond : SetUp or None
         The cheapest one that reaches the target in more than the time limit, where none does within it.
     expanded_uncertainty : float
-        Of the row with the chosen set-up (95 %): the declared sources by a full Monte Carlo, and the numerical terms.
+        Of the row with the chosen set-up (95 %): the declared sources by a full Monte Carlo, and what surveys without
+        noise are off the exact row.
     stated : float
-        What the ledger of such a survey would state: the scatter of the outer flow's zeros, which is noise that the
-        declared sources hold already, counts once more there.
+        What the ledger of such a survey would state: the declared sources, and the numerical terms in place of what it
+        cannot know, being off the exact row.
     non_linearity : float
         Standard uncertainty of the declared sources by the full Monte Carlo over that from unit errors, less 1.
     left : float
@@ -151,6 +156,9 @@ class Plan:
         Of that Monte Carlo.
     budget : tuple of PlanLine
         Of the chosen set-up, the largest first.
+    terms : tuple of PlanLine
+        Numerical terms that the ledger of the chosen set-up would state, the largest first; shares are those of
+        `stated`.
     improvements : tuple of Improvement
         The one that gains most first.
     by_probe : tuple of SetUp
@@ -188,6 +196,7 @@ class Plan:
     left: float
     draws: int
     budget: tuple[PlanLine, ...]
+    terms: tuple[PlanLine, ...]
     improvements: tuple[Improvement, ...]
     by_probe: tuple[SetUp, ...]
     spacings: tuple[float, ...]
@@ -206,7 +215,7 @@ class Plan:
         entries = {name: getattr(self, name) for name in self.__dataclass_fields__}
         for name in ("chosen", "beyond"):
             entries[name] = None if entries[name] is None else asdict(entries[name])
-        for name in ("budget", "by_probe"):
+        for name in ("budget", "terms", "by_probe"):
             entries[name] = [asdict(one) for one in entries[name]]
         entries["improvements"] = [asdict(one) | {"gain_per_minute": one.gain_per_minute} for one in self.improvements]
         document: dict[str, Any] = {"format": PLAN_FORMAT, **_plain(entries)}

@@ -65,7 +65,7 @@ PressureNoise = Annotated[tuple[float, ...], _instruments("Pa")]
 _NOISES = ("noise", "total_pressure_noise", "static_pressure_noise", "hole_noise")
 #: Keys that say what flow to expect.
 FLOW = ("loading", "lift", "lift_coefficient", "tip_core", "profile_drag", "profile_drag_coefficient", "wake_width",
-         "rolled_up")  # fmt: skip
+         "rolled_up", "height")  # fmt: skip
 
 
 class PlanTable(Table):
@@ -75,6 +75,8 @@ class PlanTable(Table):
     ----------
     loading, lift, lift_coefficient, tip_core, profile_drag, profile_drag_coefficient, wake_width, rolled_up
         The wake to expect, in SI; `ledger` instead takes the plane of an archive for it.
+    height : float or None
+        Of the trailing edge above z = 0, m.
     station : float or None
         Distance of the plane behind the trailing edge, m, in a file of its own.
     spacing, window : tuple of float
@@ -103,6 +105,7 @@ class PlanTable(Table):
     profile_drag_coefficient: PositiveNumber | None = None
     wake_width: PositiveLength | None = None
     rolled_up: bool = True
+    height: Length | None = None
     ledger: Text | None = None
     station: Length | None = None
     spacing: Lengths = Field(description='spacing = ["10 mm", "15 mm"] (distance of the points)')

@@ -17,8 +17,11 @@ from wakeledger.run.config.plan import PlanTable
 from wakeledger.run.config.quantities import Label, Table, fail
 from wakeledger.run.config.stream import ModelTable, ReferenceTable
 from wakeledger.run.config.survey import Survey, parse_survey
-from wakeledger.run.config.tables import WakeTable
+from wakeledger.run.config.tables import BoundaryTable, WakeTable
 from wakeledger.run.config.text_file import read_toml_text
+
+#: Keys of ``[boundary]`` that change no simulated flow.
+_GIVEN = ("solid_blockage", "buoyancy", "support_tare")
 
 
 class PlanFile(Table):
@@ -27,13 +30,14 @@ class PlanFile(Table):
     Attributes
     ----------
     title : str
-    reference, model, wake, plan
+    reference, model, boundary, wake, plan
         Its tables, as in a survey file.
     """
 
     title: Label = ""
     reference: ReferenceTable | None = None
     model: ModelTable | None = None
+    boundary: BoundaryTable | None = None
     wake: WakeTable = WakeTable()
     plan: PlanTable = Field(description="[plan] (the flow to expect and the ranges to try)")
 
@@ -45,8 +49,8 @@ class PlanFile(Table):
     @model_validator(mode="after")
     def _tables_fit_together(self) -> PlanFile:
         if self.plan.ledger is not None:
-            for name in ("reference", "model"):
-                if getattr(self, name) is not None:
+            for name in ("reference", "model", "boundary", "wake"):
+                if name in self.model_fields_set:
                     raise fail(f"[{name}] and [plan] ledger are both given", "the ledger holds it: leave it out", name)
             if self.plan.station is not None:
                 raise fail("station and ledger are both given", "the ledger holds it: leave it out", "plan", "station")
@@ -69,7 +73,8 @@ class PlanRequest:
     title : str
     plan : PlanTable
     tables : mapping of str to dict
-        ``[reference]``, ``[model]`` and ``[wake]`` as the file writes them; empty where a ledger holds them.
+        ``[reference]``, ``[model]``, ``[boundary]`` and ``[wake]`` as the file writes them; empty where a ledger holds
+        them.
     station : float
         Of the plane, m; NaN where a ledger holds it.
     path : Path
@@ -149,12 +154,40 @@ def parse_plan(text: str, path: Path | str) -> PlanRequest:
         file = PlanFile.model_validate(raw)
     except ValidationError as error:
         raise survey_error(error, raw, path) from error
-    station = float("nan") if file.plan.station is None else file.plan.station
-    return _checked(PlanRequest(file.title, file.plan, _tables(raw), station, path, digest), file.model)
+    if file.plan.ledger is not None:
+        return PlanRequest(file.title, file.plan, {}, float("nan"), path, digest)
+    assert file.plan.station is not None
+    tables, notes = planned_tables(raw)
+    if file.boundary is None:
+        notes = (*notes, "[boundary]: it is absent, so the survey is planned in free air")
+    return _checked(PlanRequest(file.title, file.plan, tables, file.plan.station, path, digest, notes), file.model)
 
 
-def _tables(raw: Mapping[str, Any]) -> dict[str, Mapping[str, Any]]:
-    return {name: raw[name] for name in ("reference", "model", "wake") if name in raw}
+def planned_tables(raw: Mapping[str, Any]) -> tuple[dict[str, dict[str, Any]], tuple[str, ...]]:
+    """Tables of a file that a planned survey has too, and what of them is left out.
+
+    Parameters
+    ----------
+    raw : mapping
+        A survey file or a plan file, as TOML gives it.
+
+    Returns
+    -------
+    (dict of str to dict, tuple of str)
+        ``[reference]``, ``[model]``, ``[boundary]`` (free air where there is none) and ``[wake]``; sentences.
+    """
+    kept = {name: dict(raw[name]) for name in ("reference", "model", "boundary", "wake") if name in raw}
+    boundary = kept.setdefault("boundary", {"kind": "free_air"})
+    notes = [
+        f"[boundary] {key}: planned without it, so that its uncertainty is not in these figures"
+        for key in _GIVEN
+        if boundary.pop(key, None) is not None
+    ]
+    if "empty_tunnel" in raw:
+        notes.append(
+            "[empty_tunnel]: planned without it; the noise of the empty tunnel's survey is not in these figures"
+        )
+    return kept, tuple(notes)
 
 
 def _of_survey(survey: Survey, raw: Mapping[str, Any], path: Path, digest: str) -> PlanRequest:
@@ -169,18 +202,12 @@ def _of_survey(survey: Survey, raw: Mapping[str, Any], path: Path, digest: str) 
         (survey.section is not None, "[section]", "line traverses are not planned: give an area survey"),
         (len(survey.planes) > 1, "[[plane]]", "keep one plane: surveys are planned one by one"),
         (plan.station is not None, "[plan] station", "leave it out: it is that of [plane]"),
-        (
-            survey.boundary is not None and survey.boundary.reflection is not None,
-            "[boundary] reflection",
-            "half models are not planned: leave it out, and plan the survey of both sides",
-        ),
     )
     for present, place, remedy in refuse:
         if present:
             raise SurveyError("this is not planned", file=path, place=place, remedy=remedy)
-    notes = []
-    if survey.boundary is not None and survey.boundary.kind != "free_air":
-        notes.append(f'[boundary] kind = "{survey.boundary.kind}": planned as in free air, without walls')
+    tables, left_out = planned_tables(raw)
+    notes = list(left_out)
     if survey.plane.primary == "hole_pressures" and plan.hole_noise is None:
         notes.append(
             "[plane] primary: planned as a survey of total pressure and flow direction, with noise as in [plan]"
@@ -189,7 +216,7 @@ def _of_survey(survey: Survey, raw: Mapping[str, Any], path: Path, digest: str) 
         notes.append("[[uncertainty.source]]: planned with the accuracies of [plan] alone")
     if plan.ledger is not None:
         return PlanRequest(survey.title, plan, {}, float("nan"), path, digest, tuple(notes))
-    request = PlanRequest(survey.title, plan, _tables(raw), survey.plane.station, path, digest, tuple(notes))
+    request = PlanRequest(survey.title, plan, tables, survey.plane.station, path, digest, tuple(notes))
     return _checked(request, survey.model)
 
 

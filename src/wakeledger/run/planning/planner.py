@@ -15,14 +15,14 @@ from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.ledger.plan import Improvement, Kind, Plan, PlanLine, SetUp
 from wakeledger.run import tables
 from wakeledger.run.chain.outputs import OUTPUTS
-from wakeledger.run.chain.reduction import Variation
 from wakeledger.run.config.plan import PlanTable
 from wakeledger.run.config.plan_file import PlanRequest, read_plan
 from wakeledger.run.config.stream import ReferenceTable
-from wakeledger.run.planning.flow import ExpectedFlow, expected_flow
+from wakeledger.run.planning.expected import expected_flow
+from wakeledger.run.planning.flow import ExpectedFlow
 from wakeledger.run.planning.instrument import probes
 from wakeledger.run.planning.of_ledger import is_archive, request_of_ledger
-from wakeledger.run.planning.response import LEFT, respond
+from wakeledger.run.planning.response import GRID, respond, without_noise
 from wakeledger.run.planning.search import FACTOR, Choice, Design, Key, improvements, map_of
 from wakeledger.run.planning.simulate import (
     DENSITY,
@@ -47,6 +47,11 @@ Progress = Callable[[int, int], None]
 
 #: Simulated surveys of each set-up, their lines shifted by chance.
 SURVEYS = 2
+#: How many more of them where what the grid misses counts.
+FURTHER = 6
+#: From one survey's shift to the next, parts of the spacing: powers of the plastic number, which spread evenly in two
+#: dimensions (from memory: M. Roberts, 2018).
+_STEP = (0.7548776662466927, 0.5698402909980532)
 #: How often a set-up that the full Monte Carlo finds wanting is put aside for the next one.
 _MOST_CHECKS = 4
 _ZERO_NOTES = (
@@ -110,7 +115,7 @@ def _planned(
 ) -> Plan:
     table = request.plan
     flow = expected_flow(request)
-    if flow.limits is not None:
+    if flow.lines is not None:
         flow = _with_own_values(flow, table)
     place = "[plan] target" if target_text is None else "--target"
     target = read_target(table.target if target_text is None else target_text, table.row, flow.values, place=place)
@@ -137,18 +142,12 @@ def _planned(
 
 def _with_own_values(flow: ExpectedFlow, table: PlanTable) -> ExpectedFlow:
     """A measured plane with the rows that the chain gives of it whole, and with its own noise."""
-    assert flow.limits is not None
-    y0, y1, z0, z1 = flow.limits
-    lines = [
-        np.linspace(low, high, max(2, round((high - low) / flow.finest) + 1)) for low, high in ((y0, y1), (z0, z1))
-    ]
-    whole = Window(flow.finest, math.nan, lines[0], lines[1])
+    assert flow.lines is not None
+    whole = Window(flow.finest, math.nan, *flow.lines)
     probe = probes(table, ReferenceTable.model_validate(flow.tables["reference"]).resolve())[0]
     places = visit(flow, whole, (0.0, 0.0))
     prepared = prepare(simulated(declared(flow, probe, Accuracies()), places.points()))
-    chain = replace(prepared.chain, frozen=replace(prepared.chain.frozen, bias={}))
-    values = chain.reduce(vary=Variation(mask=prepared.nominal.region.mask), estimates=False).values
-    return replace(flow, values=values)
+    return replace(flow, values=without_noise(prepared, places))
 
 
 def _design(
@@ -175,7 +174,7 @@ def _design(
     largest = Accuracies(**{key: max(getattr(table, key) or (0.0,)) for key in Accuracies.__dataclass_fields__})
     responses = {}
     for done, ((i, j), window) in enumerate(windows.items()):
-        surveys = _visits(flow, window, (table.seed, i, j))
+        visits = _visits(flow, window, (table.seed, i, j), SURVEYS + FURTHER)
         for c, probe in enumerate(candidates):
             if progress is not None:
                 progress(done * len(candidates) + c, (len(windows) + 1) * len(candidates))
@@ -184,7 +183,8 @@ def _design(
                 probe,
                 largest,
                 output=target.output,
-                surveys=surveys,
+                surveys=visits[:SURVEYS],
+                further=visits[SURVEYS:],
                 seed=(table.seed, i, j, c),
                 workers=workers,
             )
@@ -203,16 +203,18 @@ def _refuse_size(window: Window, path: Path) -> None:
         )
 
 
-def _visits(flow: ExpectedFlow, window: Window, seed: Sequence[int]) -> list[Places]:
-    generator = np.random.default_rng(list(seed))
-    return [visit(flow, window, shift_of(flow, window, generator)) for _ in range(SURVEYS)]
+def _visits(flow: ExpectedFlow, window: Window, seed: Sequence[int], count: int) -> list[Places]:
+    """Surveys whose lines stand elsewhere each time, spread evenly over what a spacing leaves open."""
+    first = np.random.default_rng(list(seed)).uniform(size=2)
+    parts = (first + np.outer(np.arange(count), _STEP)) % 1.0
+    return [visit(flow, window, shift_of(flow, window, (float(y), float(z)))) for y, z in parts]
 
 
 def _verify(flow: ExpectedFlow, design: Design, choice: Choice, workers: int) -> float:
     """Standard uncertainty of the declared sources by a full Monte Carlo over that from derivatives, one survey."""
     table, window, probe = design.plan, design.window_of(choice), design.probes[choice.probe]
     seed = (table.seed, choice.spacing, choice.window)
-    places = _visits(flow, window, seed)[0]
+    places = _visits(flow, window, seed, 1)[0]
     generator = np.random.default_rng([*seed, choice.probe, 0])
     survey = declared(flow, probe, choice.accuracies)
     prepared = prepare(simulated(survey, places.points(noise_of(probe, places.y.size, generator))))
@@ -244,6 +246,7 @@ def _record(
     shape = (len(design.probes), len(design.margins), len(design.spacings))
     uncertainty, failing, minutes = np.full(shape, np.nan), np.zeros(shape, dtype=bool), np.full(shape[1:], np.nan)
     lines: tuple[PlanLine, ...] = ()
+    terms: tuple[PlanLine, ...] = ()
     better: tuple[Improvement, ...] = ()
     expanded = stated = left = math.nan
     by_probe: list[SetUp] = []
@@ -252,8 +255,8 @@ def _record(
         lines = _budget(design, choice)
         total = sum(line.standard_uncertainty**2 for line in lines)
         expanded = FACTOR * math.sqrt(total)
-        beyond = design.responses[choice.key].stated_beyond(choice.repeats)
-        stated = FACTOR * math.sqrt(total + beyond * target.scale**2)
+        stated = design.stated(choice)
+        terms = _terms(design, choice, stated)
         better = improvements(design, choice, _halves(lines, design, choice), total)
         uncertainty, failing, minutes = map_of(design, choice)
         left = design.responses[choice.key].error * target.scale
@@ -277,6 +280,7 @@ def _record(
         left=left,
         draws=table.draws,
         budget=lines,
+        terms=terms,
         improvements=better,
         by_probe=tuple(by_probe),
         spacings=design.spacings,
@@ -343,9 +347,19 @@ def _budget(design: Design, choice: Choice) -> tuple[PlanLine, ...]:
     found.append((DRIFT, "random", float(response.drift.at(choice.accuracies.reference_drift)) / repeats))
     for name, key in SYSTEMATIC.items():
         found.append((name, "systematic", float(response.systematic[key].at(getattr(choice.accuracies, key)))))
-    found += [(name, "numerical", variance) for name, variance in response.numerical.items()]
-    found.append((LEFT, "numerical", response.left))
-    total = sum(variance for _, _, variance in found)
+    found.append((GRID, "numerical", response.missed))
+    return _lines(found, scale, sum(variance for _, _, variance in found))
+
+
+def _terms(design: Design, choice: Choice, stated: float) -> tuple[PlanLine, ...]:
+    """Numerical terms that the ledger of a set-up states, in the plan's unit."""
+    scale = design.target.scale
+    terms = design.responses[choice.key].terms
+    found: list[tuple[str, Kind, float]] = [(name, "numerical", variance) for name, variance in terms.items()]
+    return _lines(found, scale, (stated / FACTOR / scale) ** 2)
+
+
+def _lines(found: Sequence[tuple[str, Kind, float]], scale: float, total: float) -> tuple[PlanLine, ...]:
     lines = [
         PlanLine(name, kind, scale * math.sqrt(variance), variance / total)
         for name, kind, variance in found

@@ -12,9 +12,7 @@ from wakeledger.confidence.sampling import ErrorSampler, SourceErrors
 from wakeledger.confidence.terms import NumericalTerm
 from wakeledger.core.errors import InputError
 from wakeledger.core.grid import Array
-from wakeledger.physics.fields.outer_flow import OuterFlow, outer_flow
 from wakeledger.run.chain.adjoint import input_gradients, point_gradient
-from wakeledger.run.chain.chain import Chain
 from wakeledger.run.chain.outputs import OUTPUTS
 from wakeledger.run.chain.reduction import Variation
 from wakeledger.run.checks import all_checks
@@ -35,14 +33,16 @@ from wakeledger.run.planning.simulate import (
 from wakeledger.run.prepared import Prepared, prepare
 from wakeledger.run.survey import facts_of
 from wakeledger.run.uncertainty.draws import terms_of
-from wakeledger.run.uncertainty.numerics import LOSS_ZERO, MASK, OFFSET_ZERO, SWEEP
 
-#: Line of the budget for what a survey without any noise leaves that no numerical term covers.
-LEFT = "window and spacing, beyond the terms above"
+#: Line of the budget for what a survey without any noise makes of its row.
+GRID = "spacing, window and edge of the wake region"
 #: Line of the budget for what the noise does beyond first order.
 CURVED = "second order of the noise"
 #: Pairs of draws for it.
 PAIRS = 24
+#: Where the mean square of what grids without noise miss is above this part of the declared noise's variance, more
+#: grids are tried.
+_WORTH = 1e-3
 
 
 @dataclass(frozen=True)
@@ -70,15 +70,13 @@ class Response:
         From the drift of the reference, Pa.
     systematic : mapping of str to Power
         From each systematic source, by its key in ``[plan]``.
-    numerical : mapping of str to float
-        Of each numerical term, by its name, in a survey without noise.
-    averaged : mapping of str to float
-        The part of each term that is the probe's own noise. The declared noise holds it already, so that it is none of
-        the scatter; a ledger states it all the same.
-    left : float
-        Mean square of what a survey without any noise leaves and the terms do not cover.
+    missed : float
+        Mean square of what surveys without any noise are off the exact row, over grids shifted by chance.
     error : float
-        Mean of what it leaves, in the output's unit.
+        Their mean error, in the output's unit.
+    terms : mapping of str to float
+        Of each numerical term that the ledger of such a survey states. It does not know the exact row, so that these
+        stand for `missed` there.
     failing : tuple of str
         Checks that would fail.
     reason : str or None
@@ -90,10 +88,9 @@ class Response:
     noise: Mapping[str, float] = field(default_factory=dict)
     drift: Power = field(default_factory=Power)
     systematic: Mapping[str, Power] = field(default_factory=dict)
-    numerical: Mapping[str, float] = field(default_factory=dict)
-    averaged: Mapping[str, float] = field(default_factory=dict)
-    left: float = 0.0
+    missed: float = 0.0
     error: float = np.nan
+    terms: Mapping[str, float] = field(default_factory=dict)
     failing: tuple[str, ...] = ()
     reason: str | None = None
     first: Response | None = None
@@ -109,14 +106,13 @@ class Response:
         common = sum(float(power.at(getattr(accuracies, key))) for key, power in self.systematic.items())
         return random / repeats + common
 
-    @property
-    def numerics(self) -> float:
-        """Variance from the numerical terms and what they do not cover."""
-        return sum(self.numerical.values()) + self.left
+    def scatter(self, accuracies: Accuracies, repeats: int) -> float:
+        """Mean square of what surveys are off the exact row: declared sources, and what their grids miss."""
+        return self.measured(accuracies, repeats) + self.missed
 
-    def stated_beyond(self, repeats: int) -> float:
-        """Variance that a ledger states beyond the rest: the noise in the zeros of the outer flow once more."""
-        return sum(self.averaged.values()) / repeats
+    def stated(self, accuracies: Accuracies, repeats: int) -> float:
+        """Variance that a ledger states: declared sources and numerical terms."""
+        return self.measured(accuracies, repeats) + sum(self.terms.values())
 
     def scaled(self, factor: float) -> Response:
         """With the variances of all sources multiplied: what a full Monte Carlo found different."""
@@ -137,6 +133,7 @@ def respond(
     *,
     output: str,
     surveys: Sequence[Places],
+    further: Sequence[Places] = (),
     seed: Sequence[int],
     workers: int = 2,
 ) -> Response:
@@ -154,6 +151,8 @@ def respond(
         The chain's output that is wanted.
     surveys : sequence of Places
         The same window with its lines shifted by chance.
+    further : sequence of Places
+        More of them, for what the grid misses; left aside where that is little beside the noise.
     seed : sequence of int
         Of the noise.
     workers : int
@@ -165,21 +164,45 @@ def respond(
     """
     # The drift changes the noise bias by next to nothing, and working that out takes most of the time.
     survey, whole = declared(flow, probe, Accuracies()), declared(flow, probe, largest)
-    found = []
-    for number, places in enumerate(surveys):
+    found: list[_Pass] = []
+    errors: list[float] = []
+    for number, places in enumerate((*surveys, *further)):
+        if number == len(surveys):
+            noise = sum(sum(one.noise.values()) for one in found)
+            if sum(error**2 for error in errors) <= _WORTH * noise:
+                break
         generator = np.random.default_rng([*seed, number])
         given = simulated(survey, places.points(noise_of(probe, places.y.size, generator)))
         try:
             prepared = prepare(given)
             if not prepared.nominal.region.mask.any():
                 return Response(reason="no wake is found")
-            terms = terms_of(prepared, given)
+            terms = terms_of(prepared, given) if number < len(surveys) else ()
         except InputError as error:
             return Response(reason=error.found)
-        found.append(
-            _Pass(flow, prepared, whole, terms, places, largest, output, (*seed, number), len(surveys), workers)
-        )
-    return replace(_together(found), first=_together(found[:1]))
+        errors.append(without_noise(prepared, places)[output] - flow.values[output])
+        if number < len(surveys):
+            found.append(_Pass(prepared, whole, terms, largest, output, (*seed, number), len(surveys), workers))
+    return replace(_together(found, errors), first=_together(found[:1], errors[:1]))
+
+
+def without_noise(prepared: Prepared, places: Places) -> Mapping[str, float]:
+    """The chain's outputs of a survey without any noise, in the wake region that was found with it.
+
+    Parameters
+    ----------
+    prepared : Prepared
+        The survey with its noise.
+    places : Places
+        Its points and what a probe without errors reads there.
+
+    Returns
+    -------
+    mapping of str to float
+    """
+    chain = prepared.chain
+    still = replace(chain, points=places.points(), frozen=replace(chain.frozen, bias={}))
+    return still.reduce(vary=Variation(mask=prepared.nominal.region.mask), estimates=False).values
 
 
 class _Pass:
@@ -187,11 +210,9 @@ class _Pass:
 
     def __init__(
         self,
-        flow: ExpectedFlow,
         prepared: Prepared,
         survey: Survey,
         terms: Sequence[NumericalTerm],
-        places: Places,
         largest: Accuracies,
         output: str,
         seed: tuple[int, ...],
@@ -205,20 +226,9 @@ class _Pass:
         self.layouts = layouts(survey, points, prepared.chain.gridding, names)
         self.prepared, self.at, self.workers, self.seed = prepared, at, workers, seed
         chain = prepared.chain
-        mask = prepared.nominal.region.mask
-        still = replace(chain, points=places.points(), frozen=replace(chain.frozen, bias={}))
-        exact = still.reduce(vary=Variation(mask=mask), estimates=False)
-        self.error = exact.values[output] - flow.values[output]
-        zeros = outer_flow(
-            exact.reference.total_pressure - exact.flow.total_pressure + exact.loss_zero,
-            exact.flow.v,
-            exact.flow.w,
-            exact.forces.stream_function,
-            exact.flow.grid,
-            mask=mask,
-            near_field=chain.near_field(exact.vorticity, exact.flow.grid),
-        )
-        self.fixed, self.averaged = _split(terms, prepared.outer, zeros, self._edge(still), at)
+        # A term that is not known is none, as in a ledger's sum.
+        sizes = ((term.name, float(np.nan_to_num(term.standard_uncertainty[at]))) for term in terms)
+        self.terms = {name: size**2 for name, size in sizes if size != 0}
         self.failing = tuple(
             check.name for check in all_checks(prepared.nominal, facts_of(prepared)) if check.verdict == "fail"
         )
@@ -231,15 +241,6 @@ class _Pass:
         self.systematic = {
             key: _per_unit(self._shifted(name), float(getattr(largest, key))) for name, key in SYSTEMATIC.items()
         }
-
-    def _edge(self, still: Chain) -> float:
-        """What another edge of the wake region would make of a survey without noise, as its numerical term has it."""
-        chain, own = self.prepared.chain, self.prepared.nominal.region.mask
-        regions = [chain.reduce(vary=Variation(grow_factor=factor), estimates=False).region.mask for factor in SWEEP]
-        same, *others = (
-            float(still.reduce(vary=Variation(mask=mask), estimates=False).vector[self.at]) for mask in (own, *regions)
-        )
-        return max(abs(other - same) for other in others) / float(np.sqrt(3))
 
     def _errors(self, name: str) -> SourceErrors | None:
         source = next((one for one in self.sources if one.name == name), None)
@@ -299,32 +300,7 @@ def _per_unit(variances: tuple[float, float], size: float) -> tuple[float, float
     return (variances[0] / size**2, variances[1] / size**4) if size > 0 else (0.0, 0.0)
 
 
-def _split(
-    terms: Sequence[NumericalTerm], noisy: OuterFlow, still: OuterFlow, edge: float, at: int
-) -> tuple[dict[str, float], dict[str, float]]:
-    """Squares of the terms without the survey's own noise, and what that adds.
-
-    The zeros found in the outer flow are uncertain by the noise there and by what the flow itself differs from the one
-    expected; an edge of the wake region found anew takes in other noise and other parts of the wake.
-    """
-    fixed, averaged = {}, {}
-    lasting = {
-        LOSS_ZERO: (still.loss_zero_uncertainty, noisy.loss_zero_uncertainty),
-        OFFSET_ZERO: (still.offset_uncertainty, noisy.offset_uncertainty),
-    }
-    for term in terms:
-        square = float(np.nan_to_num(term.standard_uncertainty[at])) ** 2
-        if square == 0:
-            continue
-        without, with_noise = lasting.get(term.name, (1.0, 1.0))
-        share = min(1.0, (without / with_noise) ** 2) if with_noise > 0 else 1.0
-        fixed[term.name] = edge**2 if term.name == MASK else square * share
-        if fixed[term.name] < square:
-            averaged[term.name] = square - fixed[term.name]
-    return fixed, averaged
-
-
-def _together(passes: Sequence[_Pass]) -> Response:
+def _together(passes: Sequence[_Pass], errors: Sequence[float]) -> Response:
     """Means over the surveys of one set-up."""
     count = len(passes)
 
@@ -332,19 +308,14 @@ def _together(passes: Sequence[_Pass]) -> Response:
         names = list(dict.fromkeys(name for one in maps for name in one))
         return {name: sum(one.get(name, 0.0) for one in maps) / count for name in names}
 
-    numerical, averaged = mean([one.fixed for one in passes]), mean([one.averaged for one in passes])
-    errors = np.array([one.error for one in passes])
-    covered = sum(numerical.values())
-    failing = tuple(dict.fromkeys(name for one in passes for name in one.failing))
     return Response(
         noise=mean([one.noise for one in passes]),
         drift=Power(*np.mean([one.drift for one in passes], axis=0)),
         systematic={
             key: Power(*np.mean([one.systematic[key] for one in passes], axis=0)) for key in SYSTEMATIC.values()
         },
-        numerical=numerical,
-        averaged=averaged,
-        left=max(float(np.mean(errors**2)) - covered, 0.0),
-        error=float(errors.mean()),
-        failing=failing,
+        missed=float(np.mean(np.square(errors))),
+        error=float(np.mean(errors)),
+        terms=mean([one.terms for one in passes]),
+        failing=tuple(dict.fromkeys(name for one in passes for name in one.failing)),
     )

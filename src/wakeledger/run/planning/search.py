@@ -111,9 +111,15 @@ class Design:
 
     def uncertainty(self, choice: Choice) -> float:
         """Expanded uncertainty as shown; NaN where no such survey can be reduced."""
-        response = self.responses[choice.key]
-        variance = response.measured(choice.accuracies, choice.repeats) + response.numerics
+        variance = self.responses[choice.key].scatter(choice.accuracies, choice.repeats)
         return FACTOR * math.sqrt(variance) * self.target.scale if variance >= 0 else math.nan
+
+    def stated(self, choice: Choice) -> float:
+        """Expanded uncertainty that the ledgers of such surveys state; NaN where none can be reduced."""
+        response = self.responses[choice.key]
+        if response.reason is not None:
+            return math.nan
+        return FACTOR * math.sqrt(response.stated(choice.accuracies, choice.repeats)) * self.target.scale
 
     def looseness(self, choice: Choice) -> tuple[float, ...]:
         """How little accuracy a choice asks for; more is cheaper to have."""
@@ -181,6 +187,7 @@ class Design:
             points=window.points,
             minutes=self.minutes(choice),
             expanded_uncertainty=self.uncertainty(choice),
+            stated=self.stated(choice),
             failing=response.failing,
             reason=response.reason,
         )

@@ -101,32 +101,81 @@ def window_of(flow: ExpectedFlow, spacing: float, margin: float, *, rows_along: 
     Window or None
     """
     y0, y1, z0, z1 = flow.box
+    wanted = (y0 - margin, y1 + margin), (z0 - margin, z1 + margin)
+    limits = (None, None) if flow.limits is None else (flow.limits[:2], flow.limits[2:])
     lines: list[Array] = []
-    for axis, (low, high) in enumerate(((y0 - margin, y1 + margin), (z0 - margin, z1 + margin))):
-        steps = math.ceil((high - low) / spacing * (1 - 1e-9))
-        if flow.limits is not None:
-            least, most = flow.limits[2 * axis], flow.limits[2 * axis + 1]
-            if low < least - 0.5 * spacing or high > most + 0.5 * spacing:
-                return None
-            steps = min(steps, math.floor((most - least) / spacing + 1e-9))
-        middle = (low + high) / 2
-        places = middle + spacing * (np.arange(steps + 1) - steps / 2)
-        if flow.limits is not None:
-            places += max(0.0, least - float(places[0])) - max(0.0, float(places[-1]) - most)
-        lines.append(places)
+    for axis, span, limit in zip("yz", wanted, limits, strict=True):
+        if flow.reflection == axis:
+            found = _from_plane(flow.nearest, span[1], spacing, limit)
+        else:
+            found = _between(*span, spacing, limit)
+        if found is None:
+            return None
+        lines.append(found)
     y, z = lines
+    half = spacing / 2
+    if not flow.holds(np.array([y[0] - half, y[-1] + half]), np.array([z[0] - half, z[-1] + half])):
+        return None
     return Window(spacing, margin, y, z, rows_along)
 
 
-def shift_of(flow: ExpectedFlow, window: Window, generator: np.random.Generator) -> tuple[float, float]:
-    """By how much of a spacing a survey's lines happen to stand elsewhere; within what is known of the flow."""
-    shift = generator.uniform(-0.5, 0.5, 2)
-    if flow.limits is not None:
-        for axis, lines in enumerate((window.y, window.z)):
-            below = (float(lines[0]) - flow.limits[2 * axis]) / window.spacing
-            above = (flow.limits[2 * axis + 1] - float(lines[-1])) / window.spacing
-            shift[axis] = np.clip(shift[axis], -max(below, 0.0), max(above, 0.0))
-    return float(shift[0]), float(shift[1])
+def _between(low: float, high: float, spacing: float, limit: tuple[float, float] | None) -> Array | None:
+    """Lines that reach from below one place to beyond another, as far as the limits let them; None beyond these."""
+    steps = math.ceil((high - low) / spacing * (1 - 1e-9))
+    if limit is not None:
+        least, most = limit
+        if low < least - 0.5 * spacing or high > most + 0.5 * spacing:
+            return None
+        steps = min(steps, math.floor((most - least) / spacing + 1e-9))
+    places = (low + high) / 2 + spacing * (np.arange(steps + 1) - steps / 2)
+    if limit is not None:
+        places += max(0.0, least - float(places[0])) - max(0.0, float(places[-1]) - most)
+    return places
+
+
+def _from_plane(nearest: float, high: float, spacing: float, limit: tuple[float, float] | None) -> Array | None:
+    """Lines from a reflection plane on, as a lattice of both sides has them, and none too near."""
+    from_limit = 0.0 if limit is None else max(limit[0], 0.0)
+    first = math.ceil(2 * max(nearest, from_limit) / spacing - 1e-9) * spacing / 2
+    if limit is not None and high > limit[1] + 0.5 * spacing:
+        return None
+    steps = math.ceil((high - first) / spacing * (1 - 1e-9))
+    if limit is not None:
+        steps = min(steps, math.floor((limit[1] - first) / spacing + 1e-9))
+    return first + spacing * np.arange(steps + 1)
+
+
+def shift_of(flow: ExpectedFlow, window: Window, part: tuple[float, float]) -> tuple[float, float]:
+    """By how much of a spacing a survey's lines happen to stand elsewhere.
+
+    Parameters
+    ----------
+    flow : ExpectedFlow
+        The flow; lines stay within what is known of it.
+    window : Window
+        The window.
+    part : (float, float)
+        Along y and z, between 0 and 1.
+
+    Returns
+    -------
+    (float, float)
+        Between -0.5 and 0.5 of the spacing. Across a reflection plane 0 or 0.5: there the lines stand as a lattice of
+        both sides has them.
+    """
+    shift = []
+    for number, (axis, lines) in enumerate(zip("yz", (window.y, window.z), strict=True)):
+        mirrored = flow.reflection == axis
+        one = (0.5 if part[number] >= 0.5 else 0.0) if mirrored else part[number] - 0.5
+        if flow.limits is not None:
+            below = (float(lines[0]) - flow.limits[2 * number]) / window.spacing
+            above = (flow.limits[2 * number + 1] - float(lines[-1])) / window.spacing
+            if mirrored:
+                one = one if one <= above + 1e-9 else 0.0
+            else:
+                one = float(np.clip(one, -max(below, 0.0), max(above, 0.0)))
+        shift.append(one)
+    return shift[0], shift[1]
 
 
 @dataclass(frozen=True, eq=False)
@@ -254,7 +303,6 @@ def declared(flow: ExpectedFlow, probe: Probe, accuracies: Accuracies) -> Survey
             "primary": "total_pressure",
             "columns": {name: {"column": name, "unit": unit, **more} for name, (unit, more) in _COLUMNS.items()},
         },
-        "boundary": {"kind": "free_air"},
         "uncertainty": {"source": sources},
     }
     try:

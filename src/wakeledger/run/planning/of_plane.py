@@ -1,0 +1,102 @@
+"""The plane of a finished ledger, taken for the flow that a planned survey meets."""
+
+from __future__ import annotations
+
+import tomllib
+from collections.abc import Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from wakeledger.core.errors import DataError
+from wakeledger.run.config.plan_file import planned_tables
+from wakeledger.run.config.quantities import parse_quantity
+from wakeledger.run.config.stream import ModelTable, ReferenceTable
+from wakeledger.run.config.tables import BoundaryTable
+from wakeledger.run.planning.flow import VARIABLES, ExpectedFlow, with_coefficients
+
+if TYPE_CHECKING:
+    from wakeledger.ledger.rows import Ledger
+
+
+def flow_of_ledger(path: Path) -> ExpectedFlow:
+    """The plane of a finished ledger, taken for the truth.
+
+    Parameters
+    ----------
+    path : Path
+        The archive.
+
+    Returns
+    -------
+    ExpectedFlow
+        Its rows are the ledger's; what the chain gives of the plane is another matter.
+
+    Raises
+    ------
+    DataError
+        If the plane does not tell enough.
+    """
+    from wakeledger.ledger.archive import open_archive
+
+    ledger = open_archive(path)
+    tables = tomllib.loads(str(ledger.survey_text))
+    plane = ledger.plane
+    missing = [name for name in VARIABLES if name not in plane]
+    if missing:
+        raise DataError(
+            f"its plane has no {', '.join(missing)}", file=path, remedy="plan from the ledger of an area survey"
+        )
+    return _of_plane(ledger, tables, path)
+
+
+def _of_plane(ledger: Ledger, tables: Mapping[str, Any], path: Path) -> ExpectedFlow:
+    from scipy.interpolate import RectBivariateSpline
+
+    plane = ledger.plane
+    y, z = (np.asarray(plane[name].values, dtype=float) for name in ("y", "z"))
+    zeros = {
+        "total_pressure": float(ledger.reference["total_pressure"]),
+        "static_pressure": float(ledger.reference["static_pressure"]),
+    }
+    fields = {name: np.asarray(plane[name].values, dtype=float) - zeros.get(name, 0.0) for name in VARIABLES}
+    if not all(np.isfinite(field).all() for field in fields.values()):
+        raise DataError("its plane has places without a value", file=path, remedy="plan from a loading")
+    splines = {name: RectBivariateSpline(z, y, field, kx=3, ky=3, s=0) for name, field in fields.items()}
+    mask = np.asarray(plane["wake_mask"].values, dtype=bool)
+    if not mask.any():
+        raise DataError("it holds no wake", file=path, remedy="plan from a loading")
+    rows, columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
+    kept, left_out = planned_tables(tables)
+    boundary = BoundaryTable.model_validate(kept["boundary"])
+    model = ModelTable.model_validate(tables["model"])
+    found = {row.name: row.value for row in ledger.rows}
+    reference = ReferenceTable.model_validate(tables["reference"]).resolve()
+    # A reflected plane holds both sides, of which one is surveyed.
+    own_y = y[y > -1e-9] if boundary.reflection == "y" else y
+    own_z = z[z > -1e-9] if boundary.reflection == "z" else z
+    low_y = max(float(y[columns[0]]), 0.0) if boundary.reflection == "y" else float(y[columns[0]])
+    low_z = max(float(z[rows[0]]), 0.0) if boundary.reflection == "z" else float(z[rows[0]])
+    return ExpectedFlow(
+        state=lambda at_y, at_z: {name: spline.ev(at_z, at_y) for name, spline in splines.items()},
+        values=with_coefficients(found, reference, model),
+        box=(low_y, float(y[columns[-1]]), low_z, float(z[rows[-1]])),
+        limits=(float(own_y[0]), float(y[-1]), float(own_z[0]), float(z[-1])),
+        tables=kept,
+        station=station_of(tables),
+        notes=(
+            f"The flow is the plane of {path.name}, with the noise it was measured with: what differs between the"
+            " set-ups by no noise of their own holds some of it, so that the plan is rather on the safe side.",
+            *(f"{note}, in {path.name}" for note in left_out),
+        ),
+        reflection=boundary.reflection,
+        nearest=boundary.inboard_cut or 0.0,
+        lines=(own_y, own_z),
+    )
+
+
+def station_of(tables: Mapping[str, Any]) -> float:
+    """Station of a survey's plane, m."""
+    plane = tables["plane"]
+    return parse_quantity((plane[0] if isinstance(plane, list) else plane)["station"], "m")
