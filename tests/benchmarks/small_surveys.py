@@ -14,14 +14,18 @@ from unittest import mock
 
 import numpy as np
 
+from wakeledger.confidence.components import Component, shifted_components
 from wakeledger.confidence.linear_budget import LinearBudget, SecondOrder, linear_budget
-from wakeledger.confidence.sampling import SourceErrors
+from wakeledger.confidence.pairs import PairOrder
+from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.physics.vortices.vortex_sum import VortexSum
 from wakeledger.run import gridded
 from wakeledger.run.chain.outputs import OUTPUTS
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.prepared import Prepared, prepare
-from wakeledger.run.uncertainty.linear import linear_slopes, survey_budget
+from wakeledger.run.uncertainty import noise_findings
+from wakeledger.run.uncertainty.linear import linear_slopes, paired, survey_budget
+from wakeledger.run.uncertainty.noise import Noise
 
 #: The rows that are held against the truth.
 JUDGED = ("profile_drag", "induced_drag", "total_drag", "lift")
@@ -99,14 +103,27 @@ seed = {seed}
 # -- one survey ---------------------------------------------------------------------------------------------------
 
 
-def made_ready(given: SurveyInput) -> Prepared:
+def made_ready(given: SurveyInput, noises: dict[str, tuple[Noise, ...]] | None = None) -> Prepared:
     """A survey as it is prepared from its file, but for the vortices of a cross-check, on which no row hangs.
 
-    To fit them takes a third of the time.
+    To fit them takes a third of the time, and to draw what the declared noise does to the crossflow another: surveys
+    that differ in their errors alone can have a memory of that.
     """
     nan = math.nan
     none = VortexSum(nan, nan, (), 0.0, 0.0, 0.0, 0, 0.0, "left out of the study")
-    with mock.patch.object(gridded, "find_vortices", lambda *_: (None, none)):
+    declared = noise_findings.declared_noise
+
+    def remembered(*arguments: Any, **options: Any) -> tuple[Noise, ...]:
+        if noises is None:
+            return declared(*arguments, **options)
+        if "" not in noises:
+            noises[""] = declared(*arguments, **options)
+        return noises[""]
+
+    with (
+        mock.patch.object(gridded, "find_vortices", lambda *_: (None, none)),
+        mock.patch.object(noise_findings, "declared_noise", remembered),
+    ):
         return prepare(given)
 
 
@@ -130,34 +147,24 @@ def noise_second_order(prepared: Prepared) -> dict[str, SecondOrder]:
     return {source.name: order for source, order in orders if source.name in noisy}
 
 
-def curvature(prepared: Prepared) -> tuple[np.ndarray, np.ndarray]:
-    """Variance that errors of the whole survey add to second order, each alone and in pairs, over `OUTPUTS`.
+def single_errors(prepared: Prepared, budget: LinearBudget) -> tuple[tuple[Component, ...], PairOrder]:
+    """Errors of the whole survey one by one and in pairs, over `OUTPUTS`, beside a budget of all sources."""
 
-    ½ Σ H_ij² with the second derivatives H by errors of unit variance, from the chain at single errors and at pairs.
-    The package's budget has the diagonal only. The total drag holds −½ρ∬(u* − U)², to which the errors of speed and
-    static pressure go as their product.
-    """
-    single: list[dict[str, np.ndarray]] = []
-    for source in prepared.sources:
-        if source.effect == "systematic":
-            errors = SourceErrors(source, prepared.layouts, seed=0)
-            single += [errors.deviation(latent) for latent in range(errors.latents)]
-    names = sorted({name for one in single for name in one})
-    zero = {name: 0 * next(one[name] for one in single if name in one) for name in names}
-    many = [zero | one for one in single]
-    pairs = [(i, j) for i in range(len(many)) for j in range(i)]
-    moved = [*many, *({name: -one[name] for name in names} for one in many)]
-    moved += [{name: many[i][name] + many[j][name] for name in names} for i, j in pairs]
-    found = prepared.chain.vectors(
-        {name: np.concatenate([one[name] for one in moved]) for name in names}, estimates=False
-    )
-    change = found - prepared.nominal.vector
-    up, down, both = np.split(change, [len(many), 2 * len(many)])
-    together = np.zeros(len(OUTPUTS))
-    for (i, j), found_together in zip(pairs, both, strict=True):
-        together += np.square(found_together - up[i] - up[j])
-    alone: np.ndarray = 0.5 * np.square(up + down).sum(axis=0)
-    return alone, together
+    def evaluate(errors: dict[str, np.ndarray]) -> np.ndarray:
+        return prepared.chain.vectors(errors, estimates=False)
+
+    given, layouts = prepared.sources, prepared.layouts
+    sampler = ErrorSampler(given, layouts, seed=0)
+    few = [one for one in sampler.by_source if one.source.effect == "systematic"]
+    components = shifted_components(evaluate, sampler, few, len(OUTPUTS), batch=16, workers=1)
+    return components, paired(evaluate, given, layouts, components, np.diag(budget.total), workers=1)
+
+
+def curvature(prepared: Prepared, budget: LinearBudget) -> tuple[np.ndarray, np.ndarray]:
+    """Variance that errors of the whole survey add to second order, each alone and in pairs, over `OUTPUTS`."""
+    components, pairs = single_errors(prepared, budget)
+    alone: np.ndarray = np.sum([one.variance - one.linear**2 for one in components], axis=0)
+    return alone, np.diag(pairs.covariance)
 
 
 # -- many surveys -------------------------------------------------------------------------------------------------

@@ -14,7 +14,8 @@ from wakeledger.core.errors import DataError, InputError
 from wakeledger.ledger.archive import open_archive, write_archive
 from wakeledger.ledger.increment import increment_json
 from wakeledger.ledger.tabular import json_text, ledger_json
-from wakeledger.run.ledgers.increment import declared_surveys, unlike
+from wakeledger.run.ledgers.increment import declared_surveys
+from wakeledger.run.ledgers.unlike import unlike
 from wakeledger.run.survey import load, reduce
 
 RIG = {"v": 0.05, "total_pressure": 0.8}

@@ -10,7 +10,9 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 
 from wakeledger.confidence.components import Component, scatter, shifted_components, term_components
+from wakeledger.confidence.linear_budget import Slopes
 from wakeledger.confidence.montecarlo import Evaluate, Progress, sample
+from wakeledger.confidence.point_errors import PointErrors, point_errors, predicted, shifted_point_errors
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler, Seed, SourceErrors
 from wakeledger.confidence.sources import InputLayout, Source
@@ -79,8 +81,10 @@ class Budget:
         through sampling or through sources that partly cancel; 1 where they did not.
     components : tuple of Component
         Every error that was shifted by itself and every numerical term, with its signed effect on the rows.
+    points : tuple of PointErrors
+        Errors of points or rows that have a shared identity, with their effects on the rows.
     scatter : ndarray, shape (m, m), or None
-        Covariance of the rows that the components leave unexplained (`wakeledger.confidence.components.scatter`).
+        Covariance of the rows that all these leave unexplained (`wakeledger.confidence.components.scatter`).
     """
 
     rows: tuple[str, ...]
@@ -88,6 +92,7 @@ class Budget:
     standard_uncertainty: Array
     scale: Array
     components: tuple[Component, ...] = ()
+    points: tuple[PointErrors, ...] = ()
     scatter: Array | None = None
 
     def of(self, row: str) -> tuple[BudgetLine, ...]:
@@ -142,6 +147,7 @@ def make_budget(
     *,
     seed: Seed,
     terms: Sequence[NumericalTerm] = (),
+    slopes: Slopes | None = None,
     draws: int = 200,
     batch: int = 16,
     workers: int = 2,
@@ -157,6 +163,9 @@ def make_budget(
         What `run` gave.
     terms : sequence of NumericalTerm
         Numerical terms; the total is that of ``add_terms(samples, terms, seed=seed)``.
+    slopes : Slopes, optional
+        Derivatives of the outputs, for the errors of points that other surveys share; these are shifted one by one
+        where there are no derivatives.
     draws : int
         Draws for each source with many errors.
     batch, workers : int
@@ -218,13 +227,21 @@ def make_budget(
     nothing = np.full(len(samples.names), np.nan)
     parts += [_Part(term.name, "numerical", np.square(term.standard_uncertainty), nothing) for term in terms]
     budget = _close(samples.names, add_terms(samples, terms, seed=seed).standard_uncertainty ** 2, parts)
-    left = scatter(samples, few, components)
-    return replace(budget, components=(*components, *term_components(terms)), scatter=left)
+    points: list[PointErrors] = []
+    for one in many:
+        if slopes is not None:
+            points += point_errors(one, slopes, layouts)
+        else:
+            points += shifted_point_errors(evaluate, sampler, one, len(samples.names), batch=batch, workers=workers)
+    left = scatter(samples, few, components, predicted=predicted(many, points, samples.draws) if points else None)
+    return replace(budget, components=(*components, *term_components(terms)), points=tuple(points), scatter=left)
 
 
 def _is_few(one: SourceErrors) -> bool:
-    followed = one.source.shared_id is not None and one.followed
-    return one.latents <= (FEW_SHARED_ERRORS if followed else FEW_ERRORS)
+    if one.source.shared_id is None:
+        return one.latents <= FEW_ERRORS
+    # Errors of points or rows are followed together (`wakeledger.confidence.point_errors`).
+    return one.followed and one.latents <= FEW_SHARED_ERRORS
 
 
 def _shifted(one: SourceErrors, components: Sequence[Component]) -> _Part:

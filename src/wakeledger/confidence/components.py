@@ -174,7 +174,13 @@ def term_components(terms: Sequence[NumericalTerm]) -> tuple[Component, ...]:
     )
 
 
-def scatter(samples: Samples, few: Sequence[SourceErrors], components: Sequence[Component]) -> Array:
+def scatter(
+    samples: Samples,
+    few: Sequence[SourceErrors],
+    components: Sequence[Component],
+    *,
+    predicted: Array | None = None,
+) -> Array:
     """Covariance of the outputs that components leave unexplained.
 
     Parameters
@@ -185,6 +191,8 @@ def scatter(samples: Samples, few: Sequence[SourceErrors], components: Sequence[
         The sources that were shifted.
     components : sequence of Component
         What `shifted_components` gave for them.
+    predicted : ndarray, shape (draws, m), or None
+        What other errors that are followed do in each draw (`wakeledger.confidence.point_errors.predicted`).
 
     Returns
     -------
@@ -195,6 +203,8 @@ def scatter(samples: Samples, few: Sequence[SourceErrors], components: Sequence[
     known = samples.known
     covariance = np.full((known.size, known.size), np.nan)
     values = samples.values[:, known]
+    if predicted is not None:
+        values = values - predicted[:, known]
     if few:
         variables = np.concatenate([one.variables(0, samples.draws) for one in few], axis=1)
         linear = np.stack([one.linear[known] for one in components])

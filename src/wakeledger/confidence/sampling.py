@@ -262,6 +262,11 @@ class SourceErrors:
         return tuple((one.name, number) for one in self._inputs for number in range(one.latents))
 
     @property
+    def counts(self) -> dict[str, int]:
+        """Number of independent variables of each input, in the order of `deviation`."""
+        return {one.name: one.latents for one in self._inputs}
+
+    @property
     def followed(self) -> bool:
         """Whether its variables can be followed to other surveys: one for each input, not for each point or row."""
         return all(one.is_scalar for one in self._inputs) or self.source.effect == "systematic"

@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Hashable, Sequence
+from collections.abc import Hashable, Iterable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 
 from wakeledger.confidence.components import MODEL_DRAWS, NUMERICAL, Component, half_width
+from wakeledger.confidence.point_errors import PointErrors
+from wakeledger.confidence.sources import spread
 from wakeledger.core.errors import InputError
 from wakeledger.core.grid import Array
 from wakeledger.ledger.contributions import Contributions
@@ -19,7 +21,7 @@ SCATTER = "random errors and interaction"
 
 @dataclass(frozen=True)
 class Cancelled:
-    """One source that both ledgers share; arrays of shape (2, m), over value and coefficient and the rows.
+    """One source that both ledgers share; arrays of shape (q, m), over the quantities and the rows.
 
     Attributes
     ----------
@@ -52,9 +54,13 @@ class Difference:
     groups : tuple of hashable
         Which source each belongs to.
     scatters : tuple of (str, ndarray, ndarray)
-        For each ledger what it is, its covariance (2, m, m) and its degrees of freedom (2, m).
+        For each ledger what it is, its covariance (q, m, m) and its degrees of freedom (q, m).
     cancelled : tuple of Cancelled
         The sources that both share.
+    points : tuple of PointErrors
+        Independent errors of points or rows.
+    unlike : tuple of (str, str, str, str)
+        Shared identity, the two ledgers' sources, and why their errors of points or rows are not the same ones.
     """
 
     rows: tuple[str, ...]
@@ -62,44 +68,59 @@ class Difference:
     groups: tuple[Hashable, ...]
     scatters: tuple[tuple[str, Array, Array], ...]
     cancelled: tuple[Cancelled, ...]
+    points: tuple[PointErrors, ...] = ()
+    unlike: tuple[tuple[str, str, str, str], ...] = ()
 
     @property
     def covariance(self) -> Array:
-        """Covariance of the differences, shape (2, m, m)."""
-        total = sum((covariance for _, covariance, _ in self.scatters), np.zeros((2, len(self.rows), len(self.rows))))
-        return Contributions(self.rows, self.components, total, np.full((2, len(self.rows)), math.inf)).covariance
+        """Covariance of the differences, shape (q, m, m)."""
+        total = np.sum([covariance for _, covariance, _ in self.scatters], axis=0)
+        known = np.full(total.shape[:2], math.inf)
+        return Contributions(self.rows, self.components, total, known, self.points).covariance
 
     @property
     def by_source(self) -> dict[str, Array]:
-        """Variance of each difference by source, shape (2, m) each."""
+        """Variance of each difference by source, shape (q, m) each."""
         found: dict[str, Array] = {}
         for one in self.components:
             found[one.source] = found.get(one.source, 0.0) + one.variance
+        for each in self.points:
+            found[each.source] = found.get(each.source, 0.0) + each.variance
         for name, covariance, _ in self.scatters:
             found[name] = np.einsum("qrr->qr", covariance).copy()
         return found
 
     @property
     def degrees_of_freedom(self) -> Array:
-        """Effective degrees of freedom by Welch and Satterthwaite (GUM G.2b), shape (2, m)."""
+        """Effective degrees of freedom by Welch and Satterthwaite (GUM G.2b), shape (q, m)."""
         variances: dict[Hashable, Array] = {}
         freedom: dict[Hashable, float] = {}
         for one, group in zip(self.components, self.groups, strict=True):
             variances[group] = variances.get(group, 0.0) + one.variance
             freedom[group] = one.degrees_of_freedom
-        shape = (2, len(self.rows))
-        loss = np.zeros(shape)
+        for each in self.points:
+            variances[each.source] = variances.get(each.source, 0.0) + each.variance
+            freedom[each.source] = each.degrees_of_freedom
+        total = np.einsum("qrr->qr", self.covariance)
+        loss = np.zeros(total.shape)
         for group, variance in variances.items():
             loss = loss + variance**2 / freedom[group]
         for _, covariance, nu in self.scatters:
             loss = loss + np.einsum("qrr->qr", covariance) ** 2 / nu
-        total = np.einsum("qrr->qr", self.covariance)
-        result: Array = np.divide(total**2, loss, out=np.full(shape, math.inf), where=loss > 0)
+        result: Array = np.divide(total**2, loss, out=np.full(total.shape, math.inf), where=loss > 0)
         return result
 
     def half_width(self, *, draws: int = MODEL_DRAWS) -> Array:
-        """Half the length of the 95 % interval of each difference, shape (2, m), from so many draws of the errors."""
-        scatters = [(np.sqrt(np.einsum("qrr->qr", covariance)), nu) for _, covariance, nu in self.scatters]
+        """Half the length of the 95 % interval of each difference, shape (q, m), from so many draws of the errors.
+
+        What the errors of many points do together is normal, with one doubt about their size.
+        """
+        scatters: list[tuple[Array, Array | float]] = [
+            (np.sqrt(np.einsum("qrr->qr", covariance)), nu) for _, covariance, nu in self.scatters
+        ]
+        for one in self.points:
+            nu = one.degrees_of_freedom if one.distribution == "normal" else math.inf
+            scatters.append((np.sqrt(one.variance) / spread("normal", nu), nu))
         return half_width(self.components, self.groups, scatters, draws=draws)
 
 
@@ -110,14 +131,14 @@ def opaque(rows: Sequence[str], uncertainty: Array, degrees_of_freedom: Array) -
     ----------
     rows : sequence of str
         The rows.
-    uncertainty, degrees_of_freedom : ndarray, shape (2, m)
-        Of values and coefficients.
+    uncertainty, degrees_of_freedom : ndarray, shape (q, m)
+        Of the quantities.
 
     Returns
     -------
     Contributions
     """
-    scatter = np.zeros((2, len(rows), len(rows)))
+    scatter = np.zeros((len(uncertainty), len(rows), len(rows)))
     diagonal = np.arange(len(rows))
     scatter[:, diagonal, diagonal] = uncertainty**2
     return Contributions(tuple(rows), (), scatter, degrees_of_freedom)
@@ -129,7 +150,7 @@ def subtract(a: Contributions, b: Contributions) -> Difference:
     Parameters
     ----------
     a, b : Contributions
-        Of the same rows.
+        Of the same rows and quantities.
 
     Returns
     -------
@@ -144,7 +165,8 @@ def subtract(a: Contributions, b: Contributions) -> Difference:
     -----
     Errors with the same shared identity, input and number are one error ε: it contributes (a_B - a_A) ε +
     (b_B - b_A)(ε² - 1), with the signed effects a and b of first and second order in each ledger. All others are
-    independent and contribute their own effect.
+    independent and contribute their own effect. Errors of points or rows with the same identity and input are the same
+    where the points are: as many, at the same places, in the same rows. They then differ error by error.
     """
     own_a, own_b = _by_key(a), _by_key(b)
     components: list[Component] = []
@@ -173,7 +195,63 @@ def subtract(a: Contributions, b: Contributions) -> Difference:
     scatters = tuple(
         (f"{SCATTER} ({side})", given.scatter, given.scatter_degrees_of_freedom) for side, given in (("A", a), ("B", b))
     )
-    return Difference(a.rows, tuple(components), tuple(groups), scatters, _cancelled(own_a, own_b))
+    points, cancelled, unlike = _subtracted_points(a.points, b.points)
+    return Difference(
+        a.rows,
+        tuple(components),
+        tuple(groups),
+        scatters,
+        (*_cancelled(own_a, own_b), *cancelled),
+        points,
+        unlike,
+    )
+
+
+def together(points: Iterable[PointErrors]) -> dict[tuple[str, str], PointErrors]:
+    """Errors of points by what tells them; those that come twice in one ledger are one error.
+
+    Parameters
+    ----------
+    points : iterable of PointErrors
+        Of one ledger.
+
+    Returns
+    -------
+    dict
+    """
+    found: dict[tuple[str, str], PointErrors] = {}
+    for one in points:
+        twin = found.get(one.key)
+        found[one.key] = one if twin is None else replace(twin, effects=twin.effects + one.effects)
+    return found
+
+
+def _subtracted_points(
+    a: Sequence[PointErrors], b: Sequence[PointErrors]
+) -> tuple[tuple[PointErrors, ...], tuple[Cancelled, ...], tuple[tuple[str, str, str, str], ...]]:
+    """Errors of points of B - A, those that cancel source by source, and those that are not the same and why."""
+    own_a, own_b = together(a), together(b)
+    left: list[PointErrors] = []
+    unlike: list[tuple[str, str, str, str]] = []
+    sums: dict[tuple[str, str, str], Array] = {}
+    for key, one in own_b.items():
+        other = own_a.get(key)
+        if other is None:
+            continue
+        why = other.unlike(one)
+        named = (key[0], other.source, one.source)
+        if why is not None:
+            unlike.append((*named, why))
+            continue
+        name = one.source if one.source == other.source else f"{other.source} / {one.source}"
+        rest = replace(one, source=f"{name} (left)", effects=one.effects - other.effects)
+        left.append(rest)
+        sums[named] = sums.get(named, 0.0) + np.stack([other.variance, one.variance, rest.variance])
+    apart = {key for key in own_a if key not in own_b or own_a[key].unlike(own_b[key]) is not None}
+    for side, own, rest_of in (("A", own_a, apart), ("B", own_b, apart | (set(own_b) - set(own_a)))):
+        left += [replace(one, source=f"{one.source} ({side})") for key, one in own.items() if key in rest_of]
+    cancelled = tuple(Cancelled(*named, *np.sqrt(total)) for named, total in sums.items())
+    return tuple(left), cancelled, tuple(dict.fromkeys(unlike))
 
 
 def _by_key(given: Contributions) -> dict[tuple[str, str, int], Component]:

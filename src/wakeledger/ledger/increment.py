@@ -24,6 +24,8 @@ if TYPE_CHECKING:
 
 #: Version of the document `increment_json` makes.
 JSON_FORMAT = 1
+#: What the difference of the coefficients between walls is called.
+_CORRECTED = "coefficient_corrected"
 
 _MEANINGS = {
     "unit": "UDUNITS string of the row's unit",
@@ -31,6 +33,7 @@ _MEANINGS = {
     "b": "figure in B",
     "value": "difference of the values B - A, in the row's unit",
     "coefficient": "difference of the coefficients B - A",
+    "coefficient_corrected": "difference of the coefficients on the dynamic pressure corrected for blockage, B - A",
     "standard_uncertainty": "standard uncertainty of the difference (k = 1)",
     "expanded_uncertainty": "expanded uncertainty of the difference (95 %)",
     "coverage_factor": "expanded over standard uncertainty",
@@ -95,6 +98,9 @@ class IncrementRow:
         The row and the unit of its values.
     value, coefficient : Figure
         Difference of the values, and of the coefficients on each ledger's own reference.
+    corrected : Figure or None
+        Difference of the coefficients on the dynamic pressure corrected for blockage; None unless both are between
+        walls.
     reason : str or None
         Why the difference or its uncertainty is unknown.
     """
@@ -103,6 +109,7 @@ class IncrementRow:
     unit: str
     value: Figure
     coefficient: Figure
+    corrected: Figure | None = None
     reason: str | None = None
 
     def __post_init__(self) -> None:
@@ -288,7 +295,16 @@ class Increment:
         """
         import pandas as pd
 
-        return pd.DataFrame([_row_entry(row) for row in self.rows]).set_index("name")
+        return pd.DataFrame(self._entries()).set_index("name")
+
+    def _entries(self) -> list[dict[str, Any]]:
+        """One flat record for each row, all with the same keys."""
+        entries = [_row_entry(row) for row in self.rows]
+        if any(row.corrected is not None for row in self.rows):
+            unknown = Figure(*(math.nan,) * 8)
+            for row, entry in zip(self.rows, entries, strict=True):
+                entry |= _figure_entry(f"{_CORRECTED}_", row.corrected or unknown)
+        return entries
 
     def to_dataset(self) -> xr.Dataset:
         """The rows and their covariance as a dataset.
@@ -300,7 +316,7 @@ class Increment:
         """
         import xarray as xr
 
-        entries = [_row_entry(row) for row in self.rows]
+        entries = self._entries()
         names = np.array([entry["name"] for entry in entries], dtype=str)
         dataset = xr.Dataset(coords={"row": ("row", names), "row_b": ("row_b", names)})
         for key in entries[0]:
@@ -309,7 +325,7 @@ class Increment:
             values = [entry[key] for entry in entries]
             text = key in ("unit", "statement", "reason")
             array = np.array([value or "" for value in values], dtype=str) if text else np.array(values, dtype=float)
-            dataset[key] = ("row", array, {"long_name": _MEANINGS[key.removeprefix("coefficient_")]})
+            dataset[key] = ("row", array, {"long_name": _meaning(key)})
         meaning = "covariance of the differences of two rows, in the product of their units"
         dataset["covariance"] = (("row", "row_b"), self.covariance, {"long_name": meaning})
         return dataset
@@ -324,15 +340,30 @@ def _row_entry(row: IncrementRow) -> dict[str, Any]:
     """One row as a flat record."""
     entry: dict[str, Any] = {"name": row.name, "unit": row.unit}
     for prefix, figure in (("", row.value), ("coefficient_", row.coefficient)):
-        numbers = asdict(figure)
-        entry |= {f"{prefix}a": numbers.pop("a"), f"{prefix}b": numbers.pop("b")}
-        entry[prefix.rstrip("_") or "value"] = numbers.pop("difference")
-        entry |= {f"{prefix}{name}": number for name, number in numbers.items()}
+        entry |= _figure_entry(prefix, figure)
     entry["counts"], entry["counts_expanded_uncertainty"] = row.coefficient.in_counts
     entry["resolved"] = row.resolved
     entry["statement"] = row.statement
     entry["reason"] = row.reason
     return entry
+
+
+def _figure_entry(prefix: str, figure: Figure) -> dict[str, Any]:
+    """One difference as a flat record whose keys begin with a prefix."""
+    numbers = asdict(figure)
+    entry = {f"{prefix}a": numbers.pop("a"), f"{prefix}b": numbers.pop("b")}
+    entry[prefix.rstrip("_") or "value"] = numbers.pop("difference")
+    return entry | {f"{prefix}{name}": number for name, number in numbers.items()}
+
+
+def _meaning(key: str) -> str:
+    """What a column of the rows is."""
+    if key in _MEANINGS:
+        return _MEANINGS[key]
+    for prefix, words in ((f"{_CORRECTED}_", "corrected coefficient: "), ("coefficient_", "coefficient: ")):
+        if key.startswith(prefix):
+            return words + _MEANINGS[key.removeprefix(prefix)]
+    raise KeyError(key)
 
 
 def increment_json(increment: Increment) -> dict[str, Any]:
@@ -353,13 +384,17 @@ def increment_json(increment: Increment) -> dict[str, Any]:
         "format": JSON_FORMAT,
         "a": _side(increment.a),
         "b": _side(increment.b),
-        "rows": [_plain(_row_entry(row)) for row in increment.rows],
+        "rows": [_plain(_row_entry(row) | _corrected_entry(row)) for row in increment.rows],
         "cancelled": [_plain(asdict(line)) for line in increment.cancellations],
         "not_cancelled": [asdict(line) for line in increment.not_cancelled],
         "budget": [_plain(asdict(line)) for line in increment.budget],
         "warnings": list(increment.warnings),
         "notes": list(increment.notes),
     }
+
+
+def _corrected_entry(row: IncrementRow) -> dict[str, Any]:
+    return {} if row.corrected is None else _figure_entry(f"{_CORRECTED}_", row.corrected)
 
 
 def _side(side: Side) -> dict[str, Any]:

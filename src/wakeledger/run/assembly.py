@@ -341,16 +341,23 @@ def contributions(budget: Budget | None, names: Sequence[str]) -> Contributions 
     """
     if budget is None or budget.scatter is None or not names:
         return None
-    at = np.array([[budget.rows.index(name) for name in named] for named in _outputs_of(names)])
+    at = np.array([[budget.rows.index(name) for name in named] for named in _outputs_of(names, budget)])
     components = tuple(
         replace(one, linear=one.linear[at], curved=one.curved[at])
         for one in budget.components
         # A term of another row is no part of these; a declared source is, even at zero.
         if one.kind == MEASURED or np.any(one.linear[at])
     )
+    points = tuple(replace(one, effects=one.effects[at]) for one in budget.points)
     scatter = np.stack([budget.scatter[np.ix_(one, one)] for one in at])
-    return Contributions(tuple(names), components, scatter, np.full(at.shape, math.inf))
+    return Contributions(tuple(names), components, scatter, np.full(at.shape, math.inf), points)
 
 
-def _outputs_of(names: Sequence[str]) -> tuple[list[str], list[str]]:
-    return list(names), [coefficient_of(name) for name in names]
+def _outputs_of(names: Sequence[str], budget: Budget) -> list[list[str]]:
+    """Outputs of the quantities of some rows; the corrected coefficient is one where a row has it."""
+    found = [list(names), [coefficient_of(name) for name in names]]
+    corrected = [corrected_coefficient_of(name) for name in names]
+    known = dict(zip(budget.rows, budget.standard_uncertainty, strict=True))
+    if any(math.isfinite(known.get(name, math.nan)) for name in corrected):
+        found.append(corrected)
+    return found

@@ -16,11 +16,12 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from wakeledger.confidence.components import NUMERICAL, Component
+from wakeledger.confidence.point_errors import PointErrors
 from wakeledger.confidence.weighted_mean import weighted_mean
 from wakeledger.core.errors import SurveyError
 from wakeledger.core.grid import Array
 from wakeledger.ledger.cancellation import SCATTER, Difference
-from wakeledger.ledger.contributions import Contributions
+from wakeledger.ledger.contributions import PLAIN, Contributions
 from wakeledger.ledger.increment import ordered_budget
 from wakeledger.ledger.rows import Combined, Ledger, Row
 from wakeledger.physics.methods.station_fit import StationFit, station_fit
@@ -90,6 +91,9 @@ def reduce_stations(survey: SurveyInput, reduce_one: Callable[[SurveyInput], Led
         ledgers, stations, names, values, joint, file.reference.resolve(), above_ground=grounded
     )
     of_known = np.array([names.index(name) for name in known], dtype=int)
+    # A plane that does not know a quantity leaves it unknown.
+    least = min(len(part.scatter) for part in parts)
+    parts = [part.of(known, quantities=least) for part in parts]
     whole = _contributions(parts, known, weights[of_known][:, :, of_known], fit, combined_values[of_known])
     rows = _rows(ledgers, names, known, weights, combined_values, whole)
     covariance = np.full((len(names), len(names)), np.nan)
@@ -166,7 +170,12 @@ def _split(part: Contributions, number: int, own: Collection[str]) -> Contributi
         found.append(replace(one.times(math.sqrt(1 - _ALIKE)), number=number + 1))
     scatter = np.nan_to_num(part.scatter)
     freedom = np.where(np.isfinite(part.scatter_degrees_of_freedom), part.scatter_degrees_of_freedom, math.inf)
-    return Contributions(part.rows, tuple(found), scatter, freedom)
+    # Another plane has other points, whatever their identity.
+    points = tuple(
+        replace(one, input=f"{one.input} of plane {number + 1}", effects=np.nan_to_num(one.effects))
+        for one in part.points
+    )
+    return Contributions(part.rows, tuple(found), scatter, freedom, points)
 
 
 def _joint_covariance(parts: Sequence[Contributions], known: Sequence[str], names: Sequence[str]) -> Array:
@@ -176,6 +185,8 @@ def _joint_covariance(parts: Sequence[Contributions], known: Sequence[str], name
     shared: dict[tuple[str, str, str, int], Array] = {}
     for k, part in enumerate(parts):
         found[k, :, k, :] += part.scatter[0]
+        for each in part.points:
+            found[k, :, k, :] += each.covariance[0]
         diagonal = np.arange(m)
         for one in part.components:
             found[k, diagonal, k, diagonal] += one.variance[0] - one.linear[0] ** 2
@@ -332,12 +343,14 @@ def _contributions(
     parts: Sequence[Contributions], known: Sequence[str], weights: Array, fit: _Fit, combined: Array
 ) -> Difference:
     """Contributions to the combined rows, `weights` of shape (m, k, m)."""
-    m = len(known)
+    m, q = len(known), len(parts[0].scatter)
     components: dict[tuple[str, str, str, int], Component] = {}
-    scatter = np.zeros((2, m, m))
-    freedom = np.full((2, m), math.inf)
+    points: list[PointErrors] = []
+    scatter = np.zeros((q, m, m))
+    freedom = np.full((q, m), math.inf)
     for k, part in enumerate(parts):
         share = weights[:, k]
+        points += [replace(one, effects=share @ one.effects) for one in part.points]
         scatter = scatter + share @ part.scatter @ share.T
         freedom = np.minimum(freedom, part.scatter_degrees_of_freedom)
         for one in part.components:
@@ -348,7 +361,9 @@ def _contributions(
             components[_key(one)] = mine
     found = list(components.values())
     groups = [("shared", one.shared_id) if one.shared_id else (one.kind, one.source) for one in found]
-    whole = Difference(tuple(known), tuple(found), tuple(groups), ((SCATTER, scatter, freedom),), ())
+    whole = Difference(
+        tuple(known), tuple(found), tuple(groups), ((SCATTER, scatter, freedom),), (), points=tuple(points)
+    )
     trend = _trend(whole, known, fit, combined)
     if trend is None:
         return whole
@@ -375,11 +390,12 @@ def _trend(whole: Difference, known: Sequence[str], fit: _Fit, combined: Array) 
             signs["span_efficiency"] = -1.0
     if not any(excess.values()):
         return None
-    linear = np.zeros((2, len(known)))
+    linear = np.zeros(own.shape)
     for name, size in excess.items():
         r = known.index(name)
         linear[0, r] = signs[name] * size
-        linear[1, r] = linear[0, r] * math.sqrt(float(own[1, r] / own[0, r])) if own[0, r] > 0 else 0.0
+        if own[0, r] > 0:
+            linear[1:, r] = linear[0, r] * np.sqrt(own[1:, r] / own[0, r])
     return Component(TREND, NUMERICAL, linear, np.zeros_like(linear))
 
 
@@ -403,7 +419,7 @@ def _weights(covariance: Array) -> Array:
 
 def _as_contributions(whole: Difference) -> Contributions:
     _, scatter, freedom = whole.scatters[0]
-    return Contributions(whole.rows, whole.components, scatter, freedom)
+    return Contributions(whole.rows, whole.components, scatter, freedom, whole.points)
 
 
 def _rows(
@@ -449,18 +465,17 @@ def _rows(
                 coefficient=value * scale,
                 coefficient_standard_uncertainty=float(u[1, k]) if math.isfinite(scale) else math.nan,
                 coefficient_corrected=on_corrected,
-                coefficient_corrected_standard_uncertainty=_of_corrected(like, float(u[1, k]), on_corrected),
+                coefficient_corrected_standard_uncertainty=_of_corrected(u[:, k], on_corrected),
             )
         )
     return tuple(found)
 
 
-def _of_corrected(like: Row, size: float, corrected: float | None) -> float | None:
-    """Standard uncertainty of a combined corrected coefficient: that of the plain one, wider as on the first plane."""
-    own, plain = like.coefficient_corrected_standard_uncertainty, like.coefficient_standard_uncertainty
-    if corrected is None or own is None or not plain > 0:
+def _of_corrected(sizes: Array, corrected: float | None) -> float | None:
+    """Standard uncertainty of a combined corrected coefficient, where the planes know theirs."""
+    if corrected is None or len(sizes) <= PLAIN or not sizes[PLAIN] > 0:
         return None
-    return size * own / plain
+    return float(sizes[PLAIN])
 
 
 def _record(fit: _Fit, stations: Sequence[float]) -> Combined:

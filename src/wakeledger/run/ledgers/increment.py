@@ -15,7 +15,7 @@ from wakeledger.confidence.components import MEASURED, NUMERICAL
 from wakeledger.core.errors import DataError, InputError, SurveyError
 from wakeledger.ledger.archive import open_archive
 from wakeledger.ledger.cancellation import SCATTER, Difference, opaque, subtract
-from wakeledger.ledger.contributions import Contributions
+from wakeledger.ledger.contributions import QUANTITIES, Contributions
 from wakeledger.ledger.increment import (
     Cancellation,
     Figure,
@@ -27,25 +27,19 @@ from wakeledger.ledger.increment import (
 )
 from wakeledger.ledger.plane_difference import plane_difference
 from wakeledger.ledger.rows import Ledger, Row
-from wakeledger.ledger.units import SCALAR_UNITS
 from wakeledger.run import tables
 from wakeledger.run.config import Survey, parse_survey
+from wakeledger.run.ledgers.unlike import unlike
 
 if TYPE_CHECKING:
     from wakeledger.run.config import Source
 
-#: Scalars of stream and model that two ledgers should have alike, with the relative difference from which it is said.
-_REFERENCES = {
-    "reference_area": 1e-6,
-    "span": 1e-6,
-    "mean_chord": 1e-6,
-    "chord": 1e-6,
-    "dynamic_pressure": 2e-3,
-    "mach": 2e-2,
-}
 _PER_POINT = (
-    "it has an error of its own for each point or row, which is not followed from one survey to the other, so it was "
-    "added"
+    "it has an error of its own for each point or row, and the archive of {side} does not hold what each of them does "
+    "(an earlier version, or too many of them), so that it was added"
+)
+_OTHER_POINTS = (
+    "its errors are those of single points or rows, and these are not the same ({why}), so that it was added"
 )
 _NO_RECORD = "an archive from an earlier version does not hold what each error does; reduce it again"
 #: Why numerical terms are added.
@@ -98,7 +92,9 @@ def increment(a: Ledger | str | PathLike[str], b: Ledger | str | PathLike[str], 
     surveys = declared_surveys(first, files[0]), declared_surveys(second, files[1])
     refuse_conflicts(zip(("A", "B"), surveys, strict=True))
     known = [name for name in names if all(math.isfinite(one.row(name).standard_uncertainty) for one in ledgers)]
-    difference = subtract(*(contributions_of(one, known) for one in ledgers))
+    parts = [contributions_of(one, known) for one in ledgers]
+    common = min(len(part.quantities) for part in parts)
+    difference = subtract(*(part.of(known, quantities=common) for part in parts))
     rows = _rows(first, second, names, known, difference)
     covariance = np.full((len(names), len(names)), np.nan)
     at = [names.index(name) for name in known]
@@ -118,7 +114,7 @@ def increment(a: Ledger | str | PathLike[str], b: Ledger | str | PathLike[str], 
         not_cancelled=_not_cancelled(first, second, *surveys, difference),
         budget=ordered_budget(known, {name: variance[0] for name, variance in difference.by_source.items()}),
         warnings=tuple(unlike(first, second, *surveys)),
-        notes=(*only, note),
+        notes=(*only, *_plane_notes(first, second), note),
         plane=plane,
         provenance=tables.provenance(command),
     )
@@ -160,8 +156,12 @@ def contributions_of(ledger: Ledger, names: Sequence[str]) -> Contributions:
     if ledger.contributions is not None and set(names) <= set(ledger.contributions.rows):
         return ledger.contributions.of(names)
     rows = [ledger.row(name) for name in names]
-    u = np.array([[row.standard_uncertainty for row in rows], [row.coefficient_standard_uncertainty for row in rows]])
-    nu = np.array([[row.degrees_of_freedom for row in rows]] * 2)
+    sizes = [[row.standard_uncertainty for row in rows], [row.coefficient_standard_uncertainty for row in rows]]
+    corrected = [row.coefficient_corrected_standard_uncertainty for row in rows]
+    if any(size is not None for size in corrected):
+        sizes.append([math.nan if size is None else size for size in corrected])
+    u = np.array(sizes)
+    nu = np.array([[row.degrees_of_freedom for row in rows]] * len(u))
     return opaque(names, u, np.where(np.isfinite(nu), nu, math.inf))
 
 
@@ -235,23 +235,29 @@ def _rows(
     found = []
     for name in names:
         one, other = a.row(name), b.row(name)
-        pairs = [(one.value, other.value), (one.coefficient, other.coefficient)]
-        apart = [
-            math.hypot(one.standard_uncertainty, other.standard_uncertainty),
-            math.hypot(one.coefficient_standard_uncertainty, other.coefficient_standard_uncertainty),
-        ]
         figures = []
-        for quantity, (x, y) in enumerate(pairs):
-            if name in known:
+        for quantity in QUANTITIES:
+            x, y = (_figure_of(row, quantity) for row in (one, other))
+            size = width = nu = math.nan
+            at = QUANTITIES.index(quantity)
+            if name in known and at < len(u):
                 k = known.index(name)
-                uncertainty = float(u[quantity, k]), float(half[quantity, k]), float(freedom[quantity, k])
-            else:
-                uncertainty = math.nan, math.nan, math.nan
-            size, width, nu = uncertainty
+                size, width, nu = float(u[at, k]), float(half[at, k]), float(freedom[at, k])
             factor = width / size if size > 0 else math.nan
-            figures.append(Figure(x, y, y - x, size, width, factor, nu, apart[quantity]))
-        found.append(IncrementRow(name, other.unit, figures[0], figures[1], reason=_reason(one, other)))
+            apart = math.hypot(x[1], y[1])
+            figures.append(Figure(x[0], y[0], y[0] - x[0], size, width, factor, nu, apart))
+        corrected = None if math.isnan(figures[2].difference) else figures[2]
+        found.append(IncrementRow(name, other.unit, figures[0], figures[1], corrected, reason=_reason(one, other)))
     return tuple(found)
+
+
+def _figure_of(row: Row, quantity: str) -> tuple[float, float]:
+    """A row's value, coefficient or corrected coefficient, and its standard uncertainty; NaN where there is none."""
+    if quantity == "value":
+        return row.value, row.standard_uncertainty
+    found = getattr(row, quantity), getattr(row, f"{quantity}_standard_uncertainty")
+    value, size = (math.nan if one is None else one for one in found)
+    return value, size
 
 
 def _reason(a: Row, b: Row) -> str | None:
@@ -285,7 +291,6 @@ def _not_cancelled(
     done.append({(one.shared_id, one.source_b) for one in difference.cancelled})
     declared = [_shared_sources(surveys) for surveys in (surveys_a, surveys_b)]
     named = [_budget_names(ledger, MEASURED) for ledger in (a, b)]
-    unrecorded = a.contributions is None or b.contributions is None
     found = []
     for name in named[0]:
         if name not in named[1]:
@@ -296,7 +301,7 @@ def _not_cancelled(
             continue
         if own[0] is not None and own[1] is not None:
             if ids[0] == ids[1]:
-                reason = _why_not(own[0], own[1], unrecorded=unrecorded)
+                reason = _why_not(own[0], own[1], difference, (a, b))
             else:
                 reason = f"its shared_id is {ids[0]!r} in A and {ids[1]!r} in B: two errors, which were added"
         else:
@@ -306,24 +311,38 @@ def _not_cancelled(
     said = {line.source for line in found}
     for name, source in declared[0].items():
         others = [other for other in declared[1].values() if other.shared_id == source.shared_id]
-        if not others or name in said or any(identity == source.shared_id for identity, _ in done[0]):
+        parts = (name, f"{name} (")
+        done_with = any(
+            identity == source.shared_id and (one == parts[0] or one.startswith(parts[1])) for identity, one in done[0]
+        )
+        if not others or name in said or done_with:
             continue
-        reason = _why_not(source, others[0], unrecorded=unrecorded)
+        alike = [other for other in others if set(other.applies_to) & set(source.applies_to)]
+        reason = _why_not(source, (*alike, *others)[0], difference, (a, b))
         found.append(NotCancelled(name, f"shared_id {source.shared_id!r} is in both: {reason}"))
     terms = [_budget_names(ledger, NUMERICAL) for ledger in (a, b)]
     found += [NotCancelled(name, _NUMERICAL) for name in terms[0] if name in terms[1]]
     return tuple(found)
 
 
-def _why_not(a: Source, b: Source, *, unrecorded: bool) -> str:
+def _why_not(a: Source, b: Source, difference: Difference, ledgers: tuple[Ledger, Ledger]) -> str:
     """Why one identity in both surveys does not cancel."""
-    if unrecorded:
+    kept = [one.contributions for one in ledgers]
+    if kept[0] is None or kept[1] is None:
         return _NO_RECORD
-    if a.effect != "systematic":
-        return _PER_POINT
     if not set(a.applies_to) & set(b.applies_to):
         return f"it acts on {', '.join(a.applies_to)} in A and on {', '.join(b.applies_to)} in B: two errors, added"
-    return "its errors are too many to be followed one by one, so that it was added"
+    if a.effect == "systematic":
+        return "its errors are too many to be followed one by one, so that it was added"
+    why = next((why for identity, *_, why in difference.unlike if identity == a.shared_id), None)
+    if why is not None:
+        return _OTHER_POINTS.format(why=why)
+    lacking = [
+        side
+        for side, one in zip("AB", kept, strict=True)
+        if one is not None and not any(each.shared_id == a.shared_id for each in one.points)
+    ]
+    return _PER_POINT.format(side=" and ".join(lacking) or "one")
 
 
 def _shared_sources(surveys: Iterable[Survey]) -> dict[str, Source]:
@@ -350,100 +369,39 @@ def _budget_names(ledger: Ledger, kind: str) -> tuple[str, ...]:
     return tuple(name for name in names if (name in terms) == (kind == NUMERICAL))
 
 
-def unlike(
-    a: Ledger,
-    b: Ledger,
-    surveys_a: Sequence[Survey],
-    surveys_b: Sequence[Survey],
-    *,
-    names: tuple[str, str] = ("A", "B"),
-) -> list[str]:
-    """What makes two ledgers unlike, in sentences.
-
-    Parameters
-    ----------
-    a, b : Ledger
-        The ledgers.
-    surveys_a, surveys_b : sequence of Survey
-        Their survey files.
-    names : (str, str)
-        What the sentences call them.
-
-    Returns
-    -------
-    list of str
-    """
-    one_name, other_name = names
+def _plane_notes(a: Ledger, b: Ledger) -> list[str]:
+    """What is not followed where a ledger combines several planes, or none was measured."""
     found = []
-    for name, slack in _REFERENCES.items():
-        one, other = ({**ledger.model, **ledger.reference}.get(name, math.nan) for ledger in (a, b))
-        if math.isnan(one) and math.isnan(other):
-            continue
-        if not abs(other - one) <= slack * abs(one):
-            effect = (
-                "the coefficients are each on its own; the differences of forces are those of two streams"
-                if name == "dynamic_pressure"
-                else "the coefficients are each on its own"
-                if name in ("reference_area", "span", "chord")
-                else "the two flows are not alike"
-            )
-            shown = [_scalar_text(name, value) for value in (one, other)]
+    for side, ledger in (("A", a), ("B", b)):
+        if ledger.stations:
+            first = _stations_of(ledger)[0]
             found.append(
-                f"The {name.replace('_', ' ')} is {shown[0]} in {one_name} and {shown[1]} in {other_name}: {effect}."
+                f"The rows of {side} are combined from {len(ledger.stations)} planes; the difference of planes is taken"
+                f" with that at {first}. An error of single points counts as another one on each plane of a survey."
             )
-    if a.compressible != b.compressible:
-        ways = ["compressible" if ledger.compressible else "incompressible" for ledger in (a, b)]
+    if all(_is_computed(ledger) for ledger in (a, b)):
         found.append(
-            f"{one_name} was reduced by the {ways[0]}, {other_name} by the {ways[1]} relations: "
-            "their rows are not the same."
-        )
-    for what, read in (
-        ("boundary", lambda survey: None if survey.boundary is None else survey.boundary.kind),
-        ("reflection", lambda survey: None if survey.boundary is None else survey.boundary.reflection),
-        ("primary measurement", lambda survey: survey.plane.primary),
-        ("station", _stations),
-    ):
-        texts = [
-            " or ".join(sorted({str(read(survey) or "none") for survey in surveys}))
-            for surveys in (surveys_a, surveys_b)
-        ]
-        if texts[0] != texts[1]:
-            found.append(
-                f"The {what} is {texts[0]} in {one_name} and {texts[1]} in {other_name}: "
-                "part of the difference may be its doing."
-            )
-    for side, ledger in ((one_name, a), (other_name, b)):
-        if ledger.contributions is None and any(math.isfinite(row.standard_uncertainty) for row in ledger.rows):
-            found.append(
-                f"The archive of {side} does not hold what each error does, so nothing cancels: reduce it again."
-            )
-    common = sorted(set(a.inputs.values()) & set(b.inputs.values()) & (_data(a, surveys_a) | _data(b, surveys_b)))
-    if common:
-        found.append(
-            f"{one_name} and {other_name} are made from the same data: their random errors are the same ones, "
-            "which the uncertainty takes as independent."
+            "Both flows are computed: the uncertainty is numerical alone. What the solver, its mesh and its turbulence"
+            " model do alike in both cancels in B − A, but by how much is not known, so that nothing was taken off."
         )
     return found
 
 
-def _data(ledger: Ledger, surveys: Iterable[Survey]) -> set[str]:
-    """Digests of the data files; a combined ledger's names have the run before them."""
-    names = {name for survey in surveys for plane in survey.planes for name in plane.files}
-    return {digest for name, digest in ledger.inputs.items() if name.rpartition(": ")[2] in names}
+def _stations_of(ledger: Ledger) -> list[str]:
+    """Where the planes of a combined ledger stand."""
+    return [f"{one.station:g} m" for one in ledger.stations]
 
 
-def _stations(survey: Survey) -> str | None:
-    """Where the planes of a survey stand; None where it does not say."""
-    known = [f"{plane.station:g} m" for plane in survey.planes if not math.isnan(plane.station)]
-    return ", ".join(known) or None
-
-
-def _scalar_text(name: str, value: float) -> str:
-    """A scalar of stream or model as it is printed."""
-    if math.isnan(value):
-        return "not given"
-    unit = SCALAR_UNITS.get(name, "1").replace("m2", "m²")
-    return f"{value:.6g}" + ("" if unit == "1" else f" {unit}")
+def _is_computed(ledger: Ledger) -> bool:
+    """Whether no error was measured: all that is known are numerical terms."""
+    kept = ledger.contributions
+    return (
+        kept is not None
+        and bool(kept.components)
+        and all(one.kind == NUMERICAL for one in kept.components)
+        and not kept.points
+        and not np.any(np.nan_to_num(kept.scatter))
+    )
 
 
 def _side(ledger: Ledger, file: str) -> Side:

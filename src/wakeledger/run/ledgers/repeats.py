@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import math
-from collections.abc import Sequence
+from collections.abc import Collection, Sequence
 from dataclasses import replace
 from os import PathLike
 from typing import TYPE_CHECKING
@@ -12,19 +12,21 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from wakeledger.confidence.components import NUMERICAL, Component
+from wakeledger.confidence.point_errors import PointErrors
 from wakeledger.confidence.repeats import RepeatedMean, repeated_mean
 from wakeledger.core.errors import DataError, InputError
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Points
 from wakeledger.ledger.archive import open_archive
-from wakeledger.ledger.cancellation import SCATTER, Difference
-from wakeledger.ledger.contributions import QUANTITIES, Contributions
+from wakeledger.ledger.cancellation import SCATTER, Difference, together
+from wakeledger.ledger.contributions import PLAIN, QUANTITIES, Contributions
 from wakeledger.ledger.increment import ordered_budget
 from wakeledger.ledger.plane_mean import plane_mean
 from wakeledger.ledger.rounding import significant
 from wakeledger.ledger.rows import COUNT, Check, Ledger, Row
 from wakeledger.run import tables
-from wakeledger.run.ledgers.increment import contributions_of, declared_surveys, refuse_conflicts, unlike
+from wakeledger.run.ledgers.increment import contributions_of, declared_surveys, refuse_conflicts
+from wakeledger.run.ledgers.unlike import unlike
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -75,8 +77,11 @@ def combine(ledgers: Sequence[Ledger | str | PathLike[str]], *, command: str = "
         raise DataError("the runs have no row in common", remedy="combine surveys that measured the same")
     known = [name for name in names if all(math.isfinite(run.row(name).standard_uncertainty) for run in runs)]
     parts = [contributions_of(run, known) for run in runs]
-    means = {name: _means(runs, name, parts, known) for name in names}
-    combined, variances = _combined(parts, known, [means[name] for name in known])
+    least = min(len(part.quantities) for part in parts)
+    parts = [part.of(known, quantities=least) for part in parts]
+    apart = _apart(parts)
+    means = {name: _means(runs, name, parts, known, apart) for name in names}
+    combined, variances = _combined(parts, known, [means[name] for name in known], apart)
     rows = _rows(runs, names, known, means, combined)
     covariance = np.full((len(names), len(names)), np.nan)
     at = [names.index(name) for name in known]
@@ -85,6 +90,11 @@ def combine(ledgers: Sequence[Ledger | str | PathLike[str]], *, command: str = "
     notes = [
         f"The mean of {len(runs)} runs, each row weighted by itself, so that rows need not add up to the last digit.",
         *_verdicts(names, means),
+        *(
+            f"The errors of single points or rows with shared_id {identity!r} ({name}) count as each run's own: {why}."
+            for (identity, name), why in apart.items()
+        ),
+        *_not_followed(runs),
         *(
             sentence
             for k in range(1, len(runs))
@@ -157,28 +167,75 @@ def _require_repeats(runs: Sequence[Ledger], files: Sequence[str]) -> None:
                 )
 
 
+#: Means of a row's quantities, None for one that it has not.
+Means = tuple[RepeatedMean | None, ...]
+
+
+def _not_followed(runs: Sequence[Ledger]) -> list[str]:
+    """What is not known of repeats of several planes, or of computed ones."""
+    found = []
+    if any(run.stations for run in runs):
+        found.append(
+            "The runs have several planes: the rows combine those that each run made of its planes, and the mean plane"
+            " is that of the first station of each."
+        )
+    if any(run.diagnostics for run in runs):
+        found.append(
+            "A run is computed: runs of one solver and mesh have their errors in common, so that their scatter says"
+            " nothing about them."
+        )
+    return found
+
+
+def _apart(parts: Sequence[Contributions]) -> dict[tuple[str, str], str]:
+    """Errors of points, by identity and input, that are not the same ones in all runs, and why."""
+    own = [together(part.points) for part in parts]
+    found: dict[tuple[str, str], str] = {}
+    for key in dict.fromkeys(key for run in own for key in run):
+        having = [run[key] for run in own if key in run]
+        if len(having) < len(own):
+            found[key] = "not every run has them"
+            continue
+        why = next((why for one in having[1:] if (why := having[0].unlike(one)) is not None), None)
+        if why is not None:
+            found[key] = why
+    return found
+
+
 def _means(
-    runs: Sequence[Ledger], name: str, parts: Sequence[Contributions], known: Sequence[str]
-) -> tuple[RepeatedMean, RepeatedMean | None]:
-    """Means of a row's values and, where there are any, of its coefficients."""
+    runs: Sequence[Ledger],
+    name: str,
+    parts: Sequence[Contributions],
+    known: Sequence[str],
+    apart: Collection[tuple[str, str]],
+) -> Means:
+    """Means of a row's values and, where there are any, of its coefficients and corrected coefficients."""
     rows = [run.row(name) for run in runs]
-    values = np.array([[row.value for row in rows], [row.coefficient for row in rows]])
-    own = _own_variance(parts)[:, :, known.index(name)] if name in known else np.full(values.shape, np.nan)
-    found = [repeated_mean(y, p) if np.isfinite(y).all() else None for y, p in zip(values, own, strict=True)]
-    value, coefficient = found
-    if value is None:
+    figures = [
+        [row.value for row in rows],
+        [row.coefficient for row in rows],
+        [math.nan if row.coefficient_corrected is None else row.coefficient_corrected for row in rows],
+    ]
+    values = np.array(figures, dtype=float)
+    variances = np.full(values.shape, np.nan)
+    if name in known:
+        own = _own_variance(parts, apart)[:, :, known.index(name)]
+        variances[: len(own)] = own
+    found = [repeated_mean(y, p) if np.isfinite(y).all() else None for y, p in zip(values, variances, strict=True)]
+    if found[0] is None:
         unknown = np.full(len(rows), np.nan)
-        value = replace(repeated_mean(np.zeros(len(rows)), unknown), mean=math.nan, between=math.nan)
-    return value, coefficient
+        found[0] = replace(repeated_mean(np.zeros(len(rows)), unknown), mean=math.nan, between=math.nan)
+    return tuple(found)
 
 
-def _own_variance(parts: Sequence[Contributions]) -> Array:
-    """Variance of each run from errors of its own, shape (2, k, m).
+def _own_variance(parts: Sequence[Contributions], apart: Collection[tuple[str, str]]) -> Array:
+    """Variance of each run from errors of its own, shape (q, k, m).
 
     What a shared error does to a run beside its mean effect on all is the run's own.
     """
     found = np.stack([np.einsum("qrr->qr", part.scatter) for part in parts], axis=1)
     by_key: dict[tuple[str, str, int], Array] = {}
+    by_points: dict[tuple[str, str], list[Array]] = {}
     for k, part in enumerate(parts):
         for one in part.components:
             if one.kind == NUMERICAL:
@@ -188,20 +245,32 @@ def _own_variance(parts: Sequence[Contributions]) -> Array:
             else:
                 effects = by_key.setdefault(one.key, np.zeros(found.shape))
                 effects[:, k] += one.linear
+        for key, each in together(part.points).items():
+            if key in apart:
+                found[:, k] += each.variance
+            else:
+                by_points.setdefault(key, []).append(each.effects)
     for effects in by_key.values():
         found += (effects - effects.mean(axis=1, keepdims=True)) ** 2
+    for of_runs in by_points.values():
+        mean = np.mean(of_runs, axis=0)
+        for k, effects in enumerate(of_runs):
+            found[:, k] += np.square(effects - mean).sum(axis=-1)
     return found
 
 
 def _combined(
-    parts: Sequence[Contributions], rows: Sequence[str], means: Sequence[tuple[RepeatedMean, RepeatedMean | None]]
+    parts: Sequence[Contributions],
+    rows: Sequence[str],
+    means: Sequence[Means],
+    apart: Collection[tuple[str, str]],
 ) -> tuple[Contributions, dict[str, Array]]:
     """Contributions to the weighted means, and their variances by source for the budget."""
-    shape = (2, len(rows))
-    weights = np.full((2, len(parts), len(rows)), np.nan)
+    shape = (len(parts[0].quantities), len(rows))
+    weights = np.full((shape[0], len(parts), len(rows)), np.nan)
     between, freedom = np.full(shape, np.nan), np.full(shape, math.inf)
-    for k, pair in enumerate(means):
-        for quantity, mean in enumerate(pair):
+    for k, of_row in enumerate(means):
+        for quantity, mean in enumerate(of_row[: shape[0]]):
             if mean is not None:
                 weights[quantity, :, k] = mean.weights
                 between[quantity, k] = mean.between**2 * float((mean.weights**2).sum())
@@ -214,10 +283,19 @@ def _combined(
     def count(name: str, variance: Array) -> None:
         variances[name] = variances.get(name, np.zeros(shape)) + variance
 
-    scatter = np.zeros((2, len(rows), len(rows)))
+    scatter = np.zeros((*shape, len(rows)))
+    points: dict[tuple[str, str], PointErrors] = {}
     for number, part in enumerate(parts):
         share = weights[:, number]
         scatter = scatter + part.scatter * share[:, :, None] * share[:, None, :]
+        for key, each in together(part.points).items():
+            own = each.times(share)
+            if key in apart:
+                # Other points in every run: nothing can follow their mean.
+                scatter = scatter + own.covariance
+            else:
+                earlier = points.get(key)
+                points[key] = own if earlier is None else replace(earlier, effects=earlier.effects + own.effects)
         for one in part.components:
             mine = one.times(share)
             if one.kind == NUMERICAL:
@@ -239,18 +317,21 @@ def _combined(
         both = replace(terms[0][0], linear=sign * size)
         components.append(both)
         count(name, both.variance)
+    for each in points.values():
+        count(each.source, each.variance)
     count(SCATTER, np.einsum("qrr->qr", scatter))
     count(BETWEEN, between)
     diagonal = np.arange(len(rows))
     scatter[:, diagonal, diagonal] += between
-    return Contributions(tuple(rows), (*shared.values(), *components), scatter, freedom), variances
+    kept = Contributions(tuple(rows), (*shared.values(), *components), scatter, freedom, tuple(points.values()))
+    return kept, variances
 
 
 def _rows(
     runs: Sequence[Ledger],
     names: Sequence[str],
     known: Sequence[str],
-    means: dict[str, tuple[RepeatedMean, RepeatedMean | None]],
+    means: dict[str, Means],
     combined: Contributions,
 ) -> tuple[Row, ...]:
     groups = [("shared", one.shared_id) if one.shared_id else (one.kind, one.source) for one in combined.components]
@@ -260,13 +341,15 @@ def _rows(
         tuple(groups),
         ((SCATTER, combined.scatter, combined.scatter_degrees_of_freedom),),
         (),
+        points=combined.points,
     )
     u = np.sqrt(np.einsum("qrr->qr", whole.covariance))
     half, freedom = whole.half_width(), whole.degrees_of_freedom
     found = []
     for name in names:
-        value, coefficient = means[name]
+        value, coefficient, corrected = means[name]
         of_coefficient = math.nan if coefficient is None else coefficient.mean
+        of_corrected = None if corrected is None else corrected.mean
         unit = runs[0].row(name).unit
         if name not in known:
             reasons = [
@@ -275,17 +358,19 @@ def _rows(
                 if not math.isfinite(run.row(name).standard_uncertainty)
             ]
             nan = (math.nan,) * 4
-            found.append(Row(name, value.mean, unit, *nan, of_coefficient, reason="; ".join(reasons)))
+            mean = math.nan if value is None else value.mean
+            found.append(Row(name, mean, unit, *nan, of_coefficient, math.nan, of_corrected, reason="; ".join(reasons)))
             continue
         k = known.index(name)
         size = float(u[0, k])
-        # The row has one factor for value and coefficient: the larger one covers both.
-        factors = [half[q, k] / u[q, k] for q in (0, 1) if u[q, k] > 0]
+        # The row has one factor for value and coefficients: the largest one covers all.
+        factors = [half[q, k] / u[q, k] for q in range(len(u)) if u[q, k] > 0]
+        last = float(u[PLAIN, k]) if len(u) > PLAIN else math.nan
         factor = float(np.nanmax(factors)) if factors else math.nan
         found.append(
             Row(
                 name,
-                value.mean,
+                _judged((value,)).mean,
                 unit,
                 standard_uncertainty=size,
                 expanded_uncertainty=factor * size if size > 0 else 0.0,
@@ -293,12 +378,14 @@ def _rows(
                 degrees_of_freedom=float(np.nanmin(freedom[:, k])),
                 coefficient=of_coefficient,
                 coefficient_standard_uncertainty=float(u[1, k]) if coefficient is not None else math.nan,
+                coefficient_corrected=of_corrected,
+                coefficient_corrected_standard_uncertainty=last if math.isfinite(last) else None,
             )
         )
     return tuple(found)
 
 
-def _verdicts(names: Sequence[str], means: dict[str, tuple[RepeatedMean, RepeatedMean | None]]) -> list[str]:
+def _verdicts(names: Sequence[str], means: dict[str, Means]) -> list[str]:
     """What the scatter says about the declared uncertainties."""
     found = []
     for verdict, text in (
@@ -331,9 +418,12 @@ def _verdicts(names: Sequence[str], means: dict[str, tuple[RepeatedMean, Repeate
     return found
 
 
-def _judged(pair: tuple[RepeatedMean, RepeatedMean | None]) -> RepeatedMean:
+def _judged(means: Means) -> RepeatedMean:
     """The mean of the coefficients where there are any: they do not vary with the dynamic pressure."""
-    return pair[0] if pair[1] is None else pair[1]
+    found = next((one for one in (*means[1:PLAIN], means[0]) if one is not None), None)
+    if found is None:
+        raise ValueError("a row of repeats has no mean")
+    return found
 
 
 def _worst_checks(runs: Sequence[Ledger]) -> tuple[Check, ...]:
@@ -351,21 +441,22 @@ def _table(
     runs: Sequence[Ledger],
     files: Sequence[str],
     names: Sequence[str],
-    means: dict[str, tuple[RepeatedMean, RepeatedMean | None]],
+    means: dict[str, Means],
 ) -> xr.Dataset:
     """The runs and their scatter, dimensions quantity, run and row."""
     import xarray as xr
 
+    # The corrected coefficient has a mean, but is judged with the coefficient.
     dataset = xr.Dataset(
         coords={
-            "quantity": ("quantity", np.array(QUANTITIES), {"long_name": "value in its unit, or coefficient"}),
+            "quantity": ("quantity", np.array(QUANTITIES[:PLAIN]), {"long_name": "value in its unit, or coefficient"}),
             "row": ("row", np.array(names, dtype=str), {"long_name": "name of the row"}),
         }
     )
     dataset["title"] = ("run", np.array([run.title for run in runs], dtype=str), {"long_name": "title of the run"})
     dataset["file"] = ("run", np.array(files, dtype=str), {"long_name": "archive of the run"})
     rows = [[run.row(name) for name in names] for run in runs]
-    pairs = [means[name] for name in names]
+    pairs = [means[name][:PLAIN] for name in names]
     figures = np.array(
         [[[row.value for row in run] for run in rows], [[row.coefficient for row in run] for run in rows]], dtype=float
     )
