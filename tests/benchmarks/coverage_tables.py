@@ -23,9 +23,9 @@ def coverage_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
         wide = [one for one in found if "half_width_all" in one]
         wider = np.abs(column(wide, "error")) <= column(wide, "half_width_all")
         lines += _lines(case, error, u, half, wider)
-        linear = column(found, "linear_u")
-        if linear.size:
-            lines += _lines(f"{case}, linear", error, linear, 1.96 * linear, None)
+        plain = [column(found, f"plain_{key}") for key in ("u", "half_width")]
+        if plain[0].size:
+            lines += _lines(f"{case}, as drawn", error, *plain, None)
     heads = "case, row, surveys, truth inside U95, with numerical terms, scatter of the errors, u / scatter, mean error"
     return markdown_table(heads.split(", "), lines)
 
@@ -58,7 +58,8 @@ def closed_form_table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str
             continue
         cells = [case, str(len(own))]
         for key in ("u", "half_width"):
-            ratio = column(own, key) / column(own, f"mc_{key}")
+            plain = column(own, f"plain_{key}")
+            ratio = (plain if plain.size else column(own, key)) / column(own, f"mc_{key}")
             doubt = ratio.std(axis=0, ddof=1) / math.sqrt(len(own))
             cells += [f"{mean:.3f} ± {by:.3f}" for mean, by in zip(ratio.mean(axis=0), doubt, strict=True)]
         lines.append(cells)
