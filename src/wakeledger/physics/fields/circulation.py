@@ -15,6 +15,7 @@ from scipy import sparse
 from scipy.interpolate import RectBivariateSpline
 
 from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.physics.fields.banded import Banded
 
 # Half of the widest stencil of the edge integrals: eight points, exact for polynomials of degree seven.
 _REACH = 4
@@ -66,8 +67,8 @@ def cell_circulations(v: Array, w: Array, grid: UniformGrid) -> Array:
     ndarray, shape (..., nz - 1, ny - 1)
         ∮(v dy + w dz) counter-clockwise, m²/s; sums over neighbouring cells are the line integral around their union.
     """
-    along_y = _intervals(np.asarray(v, float))
-    along_z = np.swapaxes(_intervals(np.swapaxes(np.asarray(w, float), -1, -2)), -1, -2)
+    along_y = _intervals(grid.ny).along_y(np.asarray(v, float))
+    along_z = _intervals(grid.nz).along_z(np.asarray(w, float))
     result: Array = (along_y[..., :-1, :] - along_y[..., 1:, :]) * grid.dy
     result += (along_z[..., 1:] - along_z[..., :-1]) * grid.dz
     return result
@@ -91,34 +92,19 @@ def cell_circulations_adjoint(weights: Array, grid: UniformGrid) -> tuple[Array,
     padded = np.pad(np.asarray(weights, float), [(0, 0)] * (np.ndim(weights) - 2) + [(1, 1), (1, 1)])
     across_z = padded[..., 1:, 1:-1] - padded[..., :-1, 1:-1]
     across_y = padded[..., 1:-1, :-1] - padded[..., 1:-1, 1:]
-    by_v: Array = (across_z @ interval_weights(grid.ny).toarray()) * grid.dy
-    by_w: Array = np.swapaxes(np.swapaxes(across_y, -1, -2) @ interval_weights(grid.nz).toarray(), -1, -2) * grid.dz
+    by_v: Array = _back_on_points(grid.ny).along_y(across_z) * grid.dy
+    by_w: Array = _back_on_points(grid.nz).along_z(across_y) * grid.dz
     return by_v, by_w
 
 
-def _intervals(field: Array) -> Array:
-    """Integrals from each point to the next along the last axis, for unit spacing, in the field's own memory order."""
-    n = field.shape[-1]
-    matrix = interval_weights(n)
-    inner = n - 2 * _REACH + 1
-    if inner <= 0:
-        short: Array = field @ matrix.toarray().T
-        return short
-    # Away from the ends every row holds the same eight weights.
-    weights = matrix[[_REACH - 1]].toarray()[0, : 2 * _REACH]
-    out: Array = np.empty_like(field)[..., : n - 1]
-    middle = out[..., _REACH - 1 : _REACH - 1 + inner]
-    np.add(field[..., :inner], field[..., 2 * _REACH - 1 :], out=middle)
-    middle *= weights[0]
-    for k in range(1, _REACH):
-        opposite = 2 * _REACH - 1 - k
-        pair = field[..., k : k + inner] + field[..., opposite : opposite + inner]
-        pair *= weights[k]
-        middle += pair
-    reach = 2 * _REACH
-    out[..., : _REACH - 1] = field[..., :reach] @ matrix[: _REACH - 1, :reach].toarray().T
-    out[..., n - _REACH :] = field[..., n - reach :] @ matrix[n - _REACH :, n - reach :].toarray().T
-    return out
+@lru_cache(maxsize=32)
+def _intervals(n: int) -> Banded:
+    return Banded.of(interval_weights(n))
+
+
+@lru_cache(maxsize=32)
+def _back_on_points(n: int) -> Banded:
+    return Banded.of(sparse.csr_array(interval_weights(n).T))
 
 
 def circle_weights(grid: UniformGrid, y: float, z: float, radius: float) -> tuple[NDArray[np.intp], Array, Array]:

@@ -11,9 +11,10 @@ from __future__ import annotations
 from functools import lru_cache
 
 import numpy as np
-from scipy import ndimage, sparse
+from scipy import sparse
 
 from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.physics.fields.banded import Banded
 
 #: Central weights for offsets 1, 2, ... (antisymmetric) by order of accuracy.
 _CENTRAL = {
@@ -70,36 +71,21 @@ def difference_matrix(n: int, order: int = ORDER) -> sparse.csr_array:
 
 def ddy(field: Array, grid: UniformGrid, *, order: int = ORDER) -> Array:
     """Derivative along y of a field of shape (..., nz, ny), in the field's unit per metre."""
-    return _along(np.asarray(field, dtype=float), -1, order) / grid.dy
+    slope: Array = _differences(grid.ny, order).along_y(np.asarray(field, dtype=float))
+    slope /= grid.dy
+    return slope
 
 
 def ddz(field: Array, grid: UniformGrid, *, order: int = ORDER) -> Array:
     """Derivative along z of a field of shape (..., nz, ny), in the field's unit per metre."""
-    return _along(np.asarray(field, dtype=float), -2, order) / grid.dz
+    slope: Array = _differences(grid.nz, order).along_z(np.asarray(field, dtype=float))
+    slope /= grid.dz
+    return slope
 
 
 @lru_cache(maxsize=32)
-def end_blocks(n: int, order: int) -> tuple[Array, Array, Array, int]:
-    """Interior stencil, the rows of `difference_matrix` near either end as dense blocks, and their number."""
-    weights = _CENTRAL[order]
-    edge = min(len(weights), (n + 1) // 2)
-    width = min(n, edge + len(weights) + 1)
-    matrix = difference_matrix(n, order)
-    stencil = np.array([*(-x for x in reversed(weights)), 0.0, *weights])
-    return stencil, matrix[:edge, :width].toarray(), matrix[n - edge :, n - width :].toarray(), edge
-
-
-def _along(field: Array, axis: int, order: int) -> Array:
-    n = field.shape[axis]
-    if n < 3:
-        raise ValueError(f"a derivative needs at least 3 points along each axis, {n} were given")
-    stencil, first, last, edge = end_blocks(n, order)
-    out: Array = ndimage.correlate1d(field, stencil, axis=axis, mode="nearest")
-    # The ends are done again with the shorter stencils that fit there.
-    source, target = (field, out) if axis == -1 else (np.swapaxes(field, -1, -2), np.swapaxes(out, -1, -2))
-    target[..., :edge] = source[..., : first.shape[1]] @ first.T
-    target[..., n - edge :] = source[..., n - last.shape[1] :] @ last.T
-    return out
+def _differences(n: int, order: int) -> Banded:
+    return Banded.of(difference_matrix(n, order))
 
 
 def axial_vorticity(v: Array, w: Array, grid: UniformGrid, *, order: int = ORDER) -> Array:

@@ -7,11 +7,14 @@ made of.
 
 from __future__ import annotations
 
+from functools import lru_cache
+
 import numpy as np
-from scipy import ndimage
+from scipy import sparse
 
 from wakeledger.core.grid import Array, UniformGrid
-from wakeledger.physics.fields.differences import ORDER, axial_vorticity, end_blocks
+from wakeledger.physics.fields.banded import Banded
+from wakeledger.physics.fields.differences import axial_vorticity, difference_matrix
 from wakeledger.physics.fields.edge import edge_shape
 from wakeledger.physics.fields.path_integrals import running_integral
 from wakeledger.physics.fields.poisson import stream_function
@@ -20,29 +23,21 @@ from wakeledger.physics.fields.pressure import inner_window
 
 def transposed_ddy(weights: Array, grid: UniformGrid) -> Array:
     """Transpose of `ddy`: weights of the field, shape (..., nz, ny), from those of its derivative, per metre."""
-    return _transposed(weights, -1) / grid.dy
+    by_field: Array = _transposed_differences(grid.ny).along_y(np.asarray(weights, dtype=float))
+    by_field /= grid.dy
+    return by_field
 
 
 def transposed_ddz(weights: Array, grid: UniformGrid) -> Array:
     """Transpose of `ddz`: weights of the field, shape (..., nz, ny), from those of its derivative, per metre."""
-    return _transposed(weights, -2) / grid.dz
+    by_field: Array = _transposed_differences(grid.nz).along_z(np.asarray(weights, dtype=float))
+    by_field /= grid.dz
+    return by_field
 
 
-def _transposed(weights: Array, axis: int) -> Array:
-    n = weights.shape[axis]
-    stencil, first, last, edge = end_blocks(n, ORDER)
-    inner = np.array(weights, dtype=float)
-    ends = inner if axis == -1 else np.swapaxes(inner, -1, -2)
-    low, high = ends[..., :edge].copy(), ends[..., n - edge :].copy()
-    # On a short axis a row in the middle belongs to both ends.
-    low[..., n - edge :] = 0.0
-    ends[..., :edge] = ends[..., n - edge :] = 0.0
-    # The interior stencil is antisymmetric, so its transpose is itself turned round.
-    out: Array = ndimage.correlate1d(inner, stencil[::-1], axis=axis, mode="constant")
-    target = out if axis == -1 else np.swapaxes(out, -1, -2)
-    target[..., : first.shape[1]] += low @ first
-    target[..., n - last.shape[1] :] += high @ last
-    return out
+@lru_cache(maxsize=32)
+def _transposed_differences(n: int) -> Banded:
+    return Banded.of(sparse.csr_array(difference_matrix(n).T))
 
 
 def transposed_vorticity(weights: Array, grid: UniformGrid) -> tuple[Array, Array]:
