@@ -21,6 +21,7 @@ from wakeledger.physics.fields.path_integrals import (
     cell_integrals,
     cell_weights,
     centred_integral,
+    integrals_over_cells,
 )
 
 Mask = NDArray[np.bool_]
@@ -254,9 +255,7 @@ def _path_to_ends(n: int) -> Array:
 
 def _block_circulation(v: Array, w: Array, grid: UniformGrid, rows: slice, columns: slice) -> Array:
     """Circulation around the cells of a block."""
-    edge_z, edge_y = grid.dz * cell_integrals(grid.nz)[rows], grid.dy * cell_integrals(grid.ny)[columns]
-    about_z, about_y = _held(edge_z), _held(edge_y)
-    along_z = edge_z[:, about_z] @ w[..., about_z, columns.start : columns.stop + 1]
-    along_y = v[..., rows.start : rows.stop + 1, about_y] @ edge_y[:, about_y].T
-    circulation: Array = np.diff(along_z, axis=-1) - np.diff(along_y, axis=-2)
+    along_z = integrals_over_cells(grid.nz).along_z(w[..., :, columns.start : columns.stop + 1])[..., rows, :]
+    along_y = integrals_over_cells(grid.ny).along_y(v[..., rows.start : rows.stop + 1, :])[..., columns]
+    circulation: Array = grid.dz * np.diff(along_z, axis=-1) - grid.dy * np.diff(along_y, axis=-2)
     return circulation

@@ -16,8 +16,10 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy import sparse
 
 from wakeledger.core.grid import Array, UniformGrid
+from wakeledger.physics.fields.banded import Banded
 
 #: Points of the symmetric rules inside the window; fewer towards its ends.
 _WIDTH = 10
@@ -70,6 +72,17 @@ def cell_integrals(n: int) -> Array:
         raise ValueError(f"a line integral needs at least 4 points along each axis, {n} were given")
     k = np.arange(_WIDTH)
     return _midpoint_matrix(n, np.where(k % 2 == 0, 0.5**k / (k + 1), 0.0))
+
+
+@lru_cache(maxsize=32)
+def integrals_over_cells(n: int) -> Banded:
+    """`cell_integrals` as a map from the points of an axis to its cells."""
+    return Banded.of(sparse.csr_array(cell_integrals(n)))
+
+
+@lru_cache(maxsize=32)
+def _integrals_on_points(n: int) -> Banded:
+    return Banded.of(sparse.csr_array(cell_integrals(n).T))
 
 
 @lru_cache(maxsize=32)
@@ -139,8 +152,8 @@ def cell_circulation(v: Array, w: Array, grid: UniformGrid) -> Array:
     ndarray, shape (..., nz − 1, ny − 1)
         ∮(v dy + w dz); the sum over any set of cells is the line integral around that set.
     """
-    along_z = grid.dz * (cell_integrals(grid.nz) @ w)
-    along_y = grid.dy * (v @ cell_integrals(grid.ny).T)
+    along_z = grid.dz * integrals_over_cells(grid.nz).along_z(w)
+    along_y = grid.dy * integrals_over_cells(grid.ny).along_y(v)
     circulation: Array = np.diff(along_z, axis=-1) - np.diff(along_y, axis=-2)
     return circulation
 
@@ -327,6 +340,6 @@ def adjoint_of_circulation(weights: Array, grid: UniformGrid) -> tuple[Array, Ar
         Σ weights Γ = Σ(from_v v + from_w w).
     """
     padded = np.pad(weights, 1)
-    from_v = grid.dy * (np.diff(padded, axis=0)[:, 1:-1] @ cell_integrals(grid.ny))
-    from_w = -grid.dz * (cell_integrals(grid.nz).T @ np.diff(padded, axis=1)[1:-1])
+    from_v = grid.dy * _integrals_on_points(grid.ny).along_y(np.diff(padded, axis=0)[:, 1:-1])
+    from_w = -grid.dz * _integrals_on_points(grid.nz).along_z(np.diff(padded, axis=1)[1:-1])
     return from_v, from_w
