@@ -185,9 +185,10 @@ def test_one_instrument_may_have_several_errors(kit, room, tmp_path):
     )
     found = wl.increment(a, b)
     lines = [line for line in found.cancellations if line.row == "induced_drag"]
-    assert {line.source_a for line in lines} == {"pitch of the probe", "yaw of the probe"}
+    # The noise has an error for each point, the very same one by its identity.
+    assert {line.source_a for line in lines} == {"noise", "pitch of the probe", "yaw of the probe"}
+    assert any("'noise' has an error for each point" in note for note in found.notes)
     reasons = {line.source: line.reason for line in found.not_cancelled}
-    assert "for each point or row" in reasons["noise"]
     assert "acts on plane.total_pressure in A and on plane.static_pressure in B" in reasons["zero"]
 
 

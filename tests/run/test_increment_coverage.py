@@ -35,7 +35,8 @@ def test_intervals_hold_the_true_increment(studies, case):
     inside = np.abs(column(studies[case], "error")) <= column(studies[case], "half_width")
     assert (inside.sum(axis=0) >= binom.ppf(RISK, PAIRS, 0.95)).all()
     wide = [one for one in studies[case] if "half_width_all" in one]
-    assert wide and (column(wide, "half_width_all") >= column(wide, "half_width")).all()
+    # Both are found from 20 000 draws, within 1 %.
+    assert wide and (column(wide, "half_width_all") >= 0.97 * column(wide, "half_width")).all()
 
 
 def test_increments_are_three_times_tighter_where_systematic_errors_rule(studies):

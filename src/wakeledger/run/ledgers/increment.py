@@ -29,6 +29,7 @@ from wakeledger.ledger.plane_difference import plane_difference
 from wakeledger.ledger.rows import Ledger, Row
 from wakeledger.run import tables
 from wakeledger.run.config import Survey, parse_survey
+from wakeledger.run.ledgers.shared_points import shared_points_notes, unshared_points
 from wakeledger.run.ledgers.unlike import unlike
 
 if TYPE_CHECKING:
@@ -113,8 +114,8 @@ def increment(a: Ledger | str | PathLike[str], b: Ledger | str | PathLike[str], 
         cancellations=_cancellations(difference),
         not_cancelled=_not_cancelled(first, second, *surveys, difference),
         budget=ordered_budget(known, {name: variance[0] for name, variance in difference.by_source.items()}),
-        warnings=tuple(unlike(first, second, *surveys)),
-        notes=(*only, *_plane_notes(first, second), note),
+        warnings=(*unlike(first, second, *surveys), *unshared_points(first, second, *surveys, difference)),
+        notes=(*only, *shared_points_notes(difference), *_plane_notes(first, second), note),
         plane=plane,
         provenance=tables.provenance(command),
     )
