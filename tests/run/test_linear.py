@@ -7,13 +7,17 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
+from wakeledger.confidence.components import scatter, shifted_components
 from wakeledger.confidence.linear_budget import linear_budget
 from wakeledger.confidence.montecarlo import run as run_montecarlo
+from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.ledger.archive import open_archive, write_archive
+from wakeledger.ledger.propagation import dataset_propagation, propagation_dataset
 from wakeledger.ledger.tabular import ledger_json
 from wakeledger.run.chain.outputs import OUTPUTS
 from wakeledger.run.survey import load, prepare, reduce
-from wakeledger.run.uncertainty.linear import linear_slopes, separated, survey_budget, tried, with_prediction
+from wakeledger.run.uncertainty.draws import propagate
+from wakeledger.run.uncertainty.linear import linear_slopes, paired, separated, survey_budget, tried, with_prediction
 from wakeledger.run.uncertainty.propagation import propagation_notes
 
 JUDGED = ("profile_drag", "induced_drag", "residual_drag", "total_drag", "lift", "side_force", "rolling_moment")
@@ -40,6 +44,9 @@ SOURCES = {
     "pitch": {"applies_to": ["angle.pitch"], "effect": "systematic", "standard_uncertainty": "0.2 deg"},
     "static": {"applies_to": ["plane.static_pressure"], "effect": "systematic", "standard_uncertainty": "3 Pa"},
     "stream": {"applies_to": ["reference.speed"], "effect": "systematic", "standard_uncertainty": "0.3 %"},
+    "large static": {"applies_to": ["plane.static_pressure"], "effect": "systematic", "standard_uncertainty": "6 Pa"},
+    "large stream": {"applies_to": ["reference.speed"], "effect": "systematic", "standard_uncertainty": "5 %"},
+    "density": {"applies_to": ["reference.density"], "effect": "systematic", "standard_uncertainty": "4 %"},
     "places": {"applies_to": ["position.y"], "effect": "random", "standard_uncertainty": "0.3 mm"},
 }
 
@@ -52,10 +59,11 @@ def survey(kit, tmp_path_factory):
     sizes = {"u": 0.1, "v": 0.1, "w": 0.1, "total_pressure": 1.5, "static_pressure": 1.5}
     data = {name: column + sizes.get(name, 0.0) * rng.standard_normal(column.size) for name, column in data.items()}
 
-    def make(*names, **changes):
+    def make(*names, off={}, **changes):  # noqa: B006
         content = kit.description(uncertainty={"seed": 5}, **changes)
         content["uncertainty.source"] = [{"name": name} | SOURCES[name] for name in names]
-        return load(kit.write(tmp_path_factory.mktemp("survey"), data, content))
+        given = {name: column + off.get(name, 0.0) for name, column in data.items()}
+        return load(kit.write(tmp_path_factory.mktemp("survey"), given, content))
 
     return make
 
@@ -189,3 +197,82 @@ def test_the_larger_non_linearity_is_said(ledger):
     assert len(said) == 1
     assert "residual drag" in said[0]
     assert not propagation_notes([replace(worst, non_linearity=0.01)])
+
+
+def test_pairs_of_single_errors_are_what_draws_hold_beyond_each_alone(survey):
+    prepared = prepare(survey("pitch", "large static", "large stream", "density"))
+    chain, nominal, given, layouts = prepared.chain, prepared.nominal, prepared.sources, prepared.layouts
+    plain = run_montecarlo(chain.vectors, given, layouts, names=OUTPUTS, draws=400, seed=4)
+    sampler = ErrorSampler(given, layouts, seed=4)
+    parts = shifted_components(chain.vectors, sampler, sampler.by_source, len(OUTPUTS), batch=16, workers=1)
+    pairs = paired(chain.vectors, given, layouts, parts, plain.standard_uncertainty**2)
+    left = scatter(plain, sampler.by_source, parts)
+    rows = [OUTPUTS.index(name) for name in ("profile_drag", "induced_drag", "lift")]
+    # 400 draws know the standard deviation of a product of normals (kurtosis 9) within 7 %; three times that.
+    np.testing.assert_allclose(np.diag(pairs.covariance)[rows], np.diag(left)[rows], rtol=0.42)
+    drag, lift = rows[1:]
+    assert pairs.covariance[drag, lift] == pytest.approx(left[drag, lift], rel=0.42)
+    # The lift is a product of powers of speed and density, whose effects multiply.
+    stream, density = (one.linear[lift] for one in parts[2:])
+    product = stream * density / nominal.values["lift"]
+    assert math.sqrt(pairs.covariance[lift, lift]) == pytest.approx(abs(product), rel=0.05)
+
+
+def test_closed_form_of_a_total_drag_that_bends(survey):
+    """It holds −½ρ∬(u* − U)², the square of the static pressure's error."""
+    prepared, slopes, first = budgets(survey("pitch", "large static", "stream"))
+    chain, nominal, given, layouts = prepared.chain, prepared.nominal, prepared.sources, prepared.layouts
+    plain = run_montecarlo(chain.vectors, given, layouts, names=OUTPUTS, draws=400, seed=4)
+    sampler = ErrorSampler(given, layouts, seed=4)
+    parts = shifted_components(chain.vectors, sampler, sampler.by_source, len(OUTPUTS), batch=16, workers=1)
+    pairs = paired(chain.vectors, given, layouts, parts, plain.standard_uncertainty**2)
+    both = survey_budget(chain, nominal, slopes, given, layouts, noisy=(), components=parts, pairs=pairs)
+    at = OUTPUTS.index("total_drag")
+    u, error = plain.standard_uncertainty[at], plain.sampling_error().standard_uncertainty[at]
+    assert both.standard_uncertainty[at] == pytest.approx(u, abs=2 * error)
+    assert first.standard_uncertainty[at] < u - 2 * error
+
+
+@pytest.fixture(scope="module")
+def bent(survey):
+    """Static pressure measured so much too low that the total drag hardly slopes with it, and bends all the more."""
+    return survey("pitch", "large static", "stream", off={"static_pressure": -6.0})
+
+
+def test_the_curvature_of_a_row_counts_once(bent):
+    ledger = reduce(bent, draws=200)
+    (one,) = [one for one in ledger.propagation if one.row == "total_drag"]
+    row = ledger.row("total_drag")
+    assert 0.5 < one.curvature_factor < 0.9
+    measured = math.hypot(one.random_standard_uncertainty, one.systematic_standard_uncertainty)
+    numerical = one.numerical_standard_uncertainty
+    assert math.hypot(measured, numerical) == pytest.approx(row.standard_uncertainty, rel=1e-9)
+    assert one.linear_standard_uncertainty == pytest.approx(one.monte_carlo_standard_uncertainty, rel=0.1)
+    lines = [line for line in ledger.budget if line.row == "total_drag"]
+    assert sum(line.standard_uncertainty**2 for line in lines) == pytest.approx(row.standard_uncertainty**2, rel=1e-9)
+    assert sum(line.share for line in lines) == pytest.approx(1.0, rel=1e-9)
+    (said,) = [note for note in ledger.notes if "more than once" in note]
+    assert f"total drag {1 - one.curvature_factor:.1%}" in said
+    (lift,) = [one for one in ledger.propagation if one.row == "lift"]
+    assert lift.curvature_factor == 1.0
+    assert "lift" not in said
+
+
+def test_rows_and_coefficients_are_scaled_and_nothing_else(bent):
+    found = propagate(prepare(bent), (), draws=64, seed=5, progress=None)
+    total, coefficient = OUTPUTS.index("total_drag"), OUTPUTS.index("total_drag coefficient")
+    assert found.factor[total] < 0.9
+    # Its coefficient bends alike and slopes a little more with the speed.
+    assert found.factor[total] < found.factor[coefficient] < 0.9
+    np.testing.assert_array_equal(found.held.values, found.plain.values)
+    known = found.plain.known & ~np.isnan(found.plain.standard_uncertainty)
+    expected = found.factor * found.plain.standard_uncertainty
+    np.testing.assert_allclose(found.samples.standard_uncertainty[known], expected[known], rtol=1e-12)
+    np.testing.assert_allclose(found.samples.coverage_factor()[total], found.plain.coverage_factor()[total], rtol=1e-12)
+    estimates = [k for k, name in enumerate(OUTPUTS) if name.endswith(("_area", "wake_line", "vortex_sum"))]
+    assert (found.factor[estimates] == 1.0).all()
+
+
+def test_an_archive_without_the_factor_opens(ledger):
+    dataset = propagation_dataset(ledger.propagation).drop_vars("curvature_factor")
+    assert all(one.curvature_factor == 1.0 for one in dataset_propagation(dataset))
