@@ -21,7 +21,7 @@ from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.flow import mask_of
 from wakeledger.physics.fields.poisson import stream_function
 from wakeledger.physics.fields.wake_region import Mask
-from wakeledger.physics.fields.wall_correction import wall_stream_function
+from wakeledger.physics.fields.wall_correction import wall_part, wall_stream_function
 from wakeledger.stream.reference import Reference
 
 if TYPE_CHECKING:
@@ -156,10 +156,15 @@ def own_share(grid: UniformGrid, reflection: Reflection | None) -> Array:
     return np.where(np.abs(grid.z) < 0.25 * grid.dz, 0.5, (grid.z > 0).astype(float))
 
 
-def vorticity_drag(v: Array, w: Array, grid: UniformGrid, mask: Mask, *, density: float) -> Array:
+def vorticity_drag(
+    v: Array, w: Array, grid: UniformGrid, mask: Mask, *, density: float, boundary: Boundary = FREE_AIR
+) -> Array:
     """Induced drag ½ρ∬ψξ dA of a crossflow over a wake region, N, shape (...)."""
     xi = np.where(mask, axial_vorticity(v, w, grid), 0.0)
-    drag: Array = 0.5 * density * grid.cell_area * np.einsum("...zy,...zy->...", stream_function(xi, grid), xi)
+    psi = stream_function(xi, grid)
+    if not isinstance(boundary, FreeAir):
+        psi = psi + wall_part(xi, grid, boundary)
+    drag: Array = 0.5 * density * grid.cell_area * np.einsum("...zy,...zy->...", psi, xi)
     return drag
 
 

@@ -304,7 +304,7 @@ class Chain:
         tare = settings.given.get("boundary.support_tare", 0.0) + float(errors.get("boundary.support_tare", 0.0))
         profile = settings.counted * float(grid.integrate(integrand)) - tare
         induced = float(forces.induced_drag) - bias.get("induced_drag", 0.0)
-        free_air = float(forces.free_air_drag) - bias.get("induced_drag", 0.0)
+        free_air = float(forces.free_air_drag) - bias.get("induced_drag_free_air", 0.0)
         residual = divergence_part + axial_part - bias.get("residual_drag", 0.0)
         values = dict.fromkeys(OUTPUTS, np.nan)
         wave, split_uncertainty = 0.0, 0.0

@@ -2,20 +2,26 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
+from scipy import sparse
 
 from wakeledger.confidence.correlation import squared_exponential
-from wakeledger.confidence.noise_bias import quadratic_noise_bias
+from wakeledger.confidence.noise_bias import modal_noise_bias, quadratic_noise_bias
 from wakeledger.confidence.sampling import SourceErrors
 from wakeledger.confidence.sources import InputLayout, Source
-from wakeledger.core.grid import Array
+from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.intake.gridding import Gridding
+from wakeledger.physics.fields.boundary import Boundary
 from wakeledger.physics.fields.differences import difference_matrix
-from wakeledger.physics.fields.poisson import green_weights
+from wakeledger.physics.fields.poisson import green_weights, stream_function
 from wakeledger.physics.fields.wake_region import Mask
+from wakeledger.physics.fields.wall_correction import wall_part
+from wakeledger.physics.fields.wall_modes import wall_modes
 from wakeledger.physics.methods.energy_area import crossflow_energy
 from wakeledger.physics.methods.residual import divergence_drag
 from wakeledger.physics.methods.vorticity_area import vorticity_drag
@@ -183,8 +189,10 @@ def noise_bias(chain: Chain, nominal: Reduction, noises: Sequence[Noise]) -> dic
     Notes
     -----
     D = ½ρ Σ_ij ξ_i g(i − j) ξ_j A with noise in ξ = ∂w/∂y − ∂v/∂z adds ½ρA Σ_ij g(i − j) cov(ξ_i, ξ_j) over the wake
-    region; the crossflow energy adds ½ρ ∬(σ_v² + σ_w²) dA. Where points are scattered, or noise is not white for the
-    wake line and the vortex sum, the mean over drawn noise fields stands in for the closed form.
+    region; the crossflow energy adds ½ρ ∬(σ_v² + σ_w²) dA. Between walls or in a jet their response is added to g, as a
+    few squares (`physics.fields.wall_modes`). Where points are scattered, or noise is not white for the wake line and
+    the vortex sum, the mean over drawn noise fields stands in for the closed form. What the walls' own noise changes
+    in the circulations and paths of these two is left out; it is below 1 % of their bias.
     """
     total: dict[str, float] = {}
     for noise in _white_together(noises):
@@ -207,40 +215,44 @@ def _white_together(noises: Sequence[Noise]) -> list[Noise]:
 def _bias_of(chain: Chain, nominal: Reduction, noise: Noise) -> dict[str, float]:
     grid, mask, reference = nominal.flow.grid, nominal.region.mask, nominal.reference
     gridding, counted = chain.gridding, chain.settings.counted
-    density = reference.density
+    boundary, density = chain.settings.boundary.whole, reference.density
     energy = estimate_of("induced_drag", "energy_area")
     line, vortices = estimate_of("induced_drag", "wake_line"), estimate_of("induced_drag", "vortex_sum")
     cuts, parts = chain.frozen.cuts, chain.frozen.parts
-    if noise.drawn or gridding.operators() is None:
-        if noise.fields is None:
-            return {}
+    closed = not noise.drawn and gridding.operators() is not None
+    if closed:
+        found = _closed_forms(gridding, mask, noise, density, boundary)
+    elif noise.fields is None:
+        return {}
+    else:
         v, w = noise.fields
         found = {
-            "induced_drag": _mean(vorticity_drag(v, w, grid, mask, density=density)),
-            "residual_drag": _mean(divergence_drag(v, w, grid, mask, density=density)),
+            "induced_drag": _mean(vorticity_drag(v, w, grid, mask, density=density, boundary=boundary)),
+            "induced_drag_free_air": _mean(vorticity_drag(v, w, grid, mask, density=density)),
+            "residual_drag": _mean(divergence_drag(v, w, grid, mask, density=density, boundary=boundary)),
             energy: _mean(crossflow_energy(v, w, grid, density=density)),
         }
-    else:
-        found = _closed_forms(gridding, mask, noise, density)
+    walls = found["induced_drag"] - found["induced_drag_free_air"]
+    if closed:
         found[energy] = 0.5 * density * _energy_gain(gridding, noise.outer_variance)
         white = noise.is_white and gridding.kind == "uniform" and gridding.mirror is None
         if white and cuts is not None:
             by_v, by_w = (np.full(grid.shape, variance) for variance in noise.variance)
-            found[line] = wake_line_bias(cuts, by_v, by_w, density)
+            found[line] = wake_line_bias(cuts, by_v, by_w, density) + counted * walls
         if white and parts is not None:
-            found[vortices] = vortex_sum_bias(parts, *noise.variance, density)
+            found[vortices] = vortex_sum_bias(parts, *noise.variance, density) + walls
     found = {name: value if name == line else counted * value for name, value in found.items()}
     if noise.fields is not None:
         above = counted_mask(chain.settings, mask, grid)
         if cuts is not None and line not in found:
-            found[line] = _paired_mean(
+            found[line] = counted * walls + _paired_mean(
                 lambda v, w: evaluate_wake_line(cuts, v, w, density, reference.speed, mask=above).induced_drag,
                 nominal,
                 noise.fields,
             )
         if parts is not None and vortices not in found:
-            found[vortices] = counted * _paired_mean(
-                lambda v, w: evaluate_vortex_sum(parts, v, w, density), nominal, noise.fields
+            found[vortices] = counted * (
+                walls + _paired_mean(lambda v, w: evaluate_vortex_sum(parts, v, w, density), nominal, noise.fields)
             )
     found[estimate_of("total_drag", "momentum_area")] = found[energy]
     return found
@@ -250,31 +262,66 @@ def _energy_gain(gridding: Gridding, variance: tuple[float, float]) -> float:
     """∬(σ_v² + σ_w²) dA of the gridded field, from the variances of v and w at a point, m⁴/s²."""
     total = 0.0
     for name, size in zip("vw", variance, strict=True):
-        operators = gridding.operators(odd=gridding.is_odd(name))
-        assert operators is not None
-        gain = np.outer((operators[0] ** 2).sum(axis=1), (operators[1] ** 2).sum(axis=1))
-        total += size * float(gridding.grid.integrate(gain))
+        along_z, along_y = (one.power(2).sum(axis=1) for one in _operators(gridding, odd=gridding.is_odd(name)))
+        total += size * float(gridding.grid.integrate(np.outer(along_z, along_y)))
     return total
 
 
-def _closed_forms(gridding: Gridding, mask: Mask, noise: Noise, density: float) -> dict[str, float]:
-    grid = gridding.grid
-    kernel = density * grid.cell_area * green_weights(grid.nz, grid.ny, grid.dz, grid.dy)
-    region = mask.astype(float)
+def _operators(gridding: Gridding, *, odd: bool) -> tuple[sparse.csr_array, sparse.csr_array]:
+    """Resampling along z and along y, without zeros."""
+    operators = gridding.operators(odd=odd)
+    assert operators is not None
+    along_z, along_y = operators
+    return sparse.csr_array(along_z), sparse.csr_array(along_y)
+
+
+def _closed_forms(gridding: Gridding, mask: Mask, noise: Noise, density: float, boundary: Boundary) -> dict[str, float]:
+    grid, region = gridding.grid, mask.astype(float)
+    scale = density * grid.cell_area
+    kernel = scale * green_weights(grid.nz, grid.ny, grid.dz, grid.dy)
+    walls = wall_modes(grid, boundary, mask)
+    walls_of_potential = wall_modes(grid, boundary, mask, of="divergence")
+    net = _without_net_source(grid, mask, boundary)
+
+    @cache
+    def gains(axis: str, odd: bool) -> tuple[float, float, float]:
+        """What unit noise adds through the derivative along an axis: in free air, and by walls to either form."""
+        wz, wy = _operators(gridding, odd=odd)
+        slope = (
+            (sparse.csr_array(difference_matrix(grid.nz) @ wz / grid.dz), wy)
+            if axis == "z"
+            else (wz, sparse.csr_array(difference_matrix(grid.ny) @ wy / grid.dy))
+        )
+        free = quadratic_noise_bias(*slope, kernel, region, 1.0, correlation=noise.correlation)
+        of_walls, of_potential, of_net = (
+            scale * modal_noise_bias(*slope, *modes, region, 1.0, correlation=noise.correlation)
+            for modes in (walls, walls_of_potential, net)
+        )
+        return free, free + of_walls, free + of_potential + of_net
+
     # D = ∂/∂y of w and −∂/∂z of v for the vorticity, ∂/∂y of v and ∂/∂z of w for the divergence.
-    across = {"v": ("z", "y"), "w": ("y", "z")}
-    found = {"induced_drag": 0.0, "residual_drag": 0.0}
-    for name, variance in zip("vw", noise.variance, strict=True):
-        operators = gridding.operators(odd=gridding.is_odd(name))
-        assert operators is not None
-        wz, wy = operators
-        slopes = {
-            "z": (difference_matrix(grid.nz) @ wz / grid.dz, wy),
-            "y": (wz, difference_matrix(grid.ny) @ wy / grid.dy),
-        }
-        for form, axis in zip(found, across[name], strict=True):
-            found[form] += quadratic_noise_bias(*slopes[axis], kernel, region, variance, correlation=noise.correlation)
-    return found
+    v, w = noise.variance
+    of_v, of_w = gridding.is_odd("v"), gridding.is_odd("w")
+    return {
+        "induced_drag": v * gains("z", of_v)[1] + w * gains("y", of_w)[1],
+        "induced_drag_free_air": v * gains("z", of_v)[0] + w * gains("y", of_w)[0],
+        "residual_drag": v * gains("y", of_v)[2] + w * gains("z", of_w)[2],
+    }
+
+
+def _without_net_source(grid: UniformGrid, mask: Mask, boundary: Boundary) -> tuple[Array, Array]:
+    """What taking the mean divergence off the region changes in Σ σ g σ, as the difference of two squares.
+
+    With the sum s of σ over the n points and b = g 1, the form loses (2s/n) Σ b σ − (s/n)² Σ b.
+    """
+    count = int(np.count_nonzero(mask))
+    if not count:
+        return np.zeros(0), np.zeros((0, *grid.shape))
+    one = mask.astype(float)
+    response = np.where(mask, stream_function(one, grid) + wall_part(one, grid, boundary, of="divergence"), 0.0)
+    other = one * (response.sum() / count**2) - response * (2 / count)
+    size = math.sqrt(float(np.linalg.norm(other)) / math.sqrt(count))
+    return np.array([0.25, -0.25]), np.stack([size * one + other / size, size * one - other / size])
 
 
 def _mean(values: Array) -> float:
