@@ -20,22 +20,22 @@ from typing import Any
 import numpy as np
 from tests.benchmarks.small_surveys import (
     JUDGED,
-    closed_form,
     column,
     continued,
-    curvature,
     made_ready,
     markdown_table,
     noise_second_order,
     read,
     share_text,
+    single_errors,
     source_text,
     survey_text,
     with_block,
 )
 
-from wakeledger.confidence.components import Component, scatter, shifted_components, term_components
-from wakeledger.confidence.linear_budget import SecondOrder
+from wakeledger.confidence.components import Component, scatter, term_components
+from wakeledger.confidence.linear_budget import SecondOrder, linear_budget
+from wakeledger.confidence.point_errors import PointErrors, point_errors, predicted
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sampling import ErrorSampler
 from wakeledger.ledger.cancellation import subtract
@@ -45,6 +45,7 @@ from wakeledger.run.config import parse_survey
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.prepared import Prepared, prepare
 from wakeledger.run.uncertainty.draws import terms_of
+from wakeledger.run.uncertainty.linear import linear_slopes
 from wakeledger.run.uncertainty.noise import Noise
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic import SyntheticWake, wing_wake
@@ -70,6 +71,9 @@ _SYSTEMATIC = {
 #: Long samples, so that the systematic errors rule.
 _QUIET = {"u": 0.003, "v": 0.003, "w": 0.003, "total_pressure": 0.04, "static_pressure": 0.04}
 _NOISY = {"u": 0.16, "v": 0.16, "w": 0.16, "total_pressure": 1.5, "static_pressure": 2.0}
+#: Means of samples, on a holder that sags and twists from place to place.
+_SAMPLED = {"u": 0.05, "v": 0.05, "w": 0.05, "total_pressure": 0.5, "static_pressure": 0.5}
+_TABLE = {"v": 0.2, "w": 0.2, "total_pressure": 3.0}
 
 
 @dataclass(frozen=True)
@@ -86,6 +90,8 @@ class Case:
         Speed of the stream in A and in B, m/s.
     rectangular : bool
         Whether the shared errors are distributed evenly instead of normally.
+    points : mapping of str to float
+        Errors of each point that a pair has in common.
     """
 
     random: Mapping[str, float]
@@ -93,6 +99,7 @@ class Case:
     own: Mapping[str, float] = field(default_factory=dict)
     speeds: tuple[float, float] = (40.0, 40.0)
     rectangular: bool = False
+    points: Mapping[str, float] = field(default_factory=dict)
 
 
 _OWN = {"plane.static_pressure": 2.0, "reference.density": 0.002}
@@ -103,6 +110,7 @@ CASES = {
     "another speed": Case(_NOISY, shared=_SYSTEMATIC, speeds=(40.0, 46.0), rectangular=True),
     "partly shared": Case(_NOISY, shared=_ALIKE, own=_OWN),
     "nothing shared": Case(_NOISY, own=_SYSTEMATIC),
+    "points shared": Case(_SAMPLED, shared=_ALIKE, points=_TABLE),
 }
 
 
@@ -138,6 +146,10 @@ def _sources(case: Case) -> list[str]:
             source_text(f"shared {name}", [name], "systematic", size, shape=shape, shared_id=f"rig {name}")
             for name, size in case.shared.items()
         ),
+        *(
+            source_text(f"table {name}", [f"plane.{name}"], "random", size, shared_id=f"table {name}")
+            for name, size in case.points.items()
+        ),
         *(source_text(f"own {name}", [name], "systematic", size) for name, size in case.own.items()),
     ]
 
@@ -147,12 +159,13 @@ def pair(case: Case, generator: np.random.Generator) -> tuple[SurveyInput, Surve
     draw = (lambda: generator.uniform(-1, 1) * math.sqrt(3)) if case.rectangular else generator.standard_normal
     common = {name: size * draw() for name, size in case.shared.items()}
     shift = generator.uniform(-0.5, 0.5, 2) * SPACING
+    table = {name: size * generator.standard_normal(COUNT_Y * COUNT_Z) for name, size in case.points.items()}
     found = []
     for side, speed in enumerate(case.speeds):
         wrong = dict(common)
         for name, size in case.own.items():
             wrong[name] = wrong.get(name, 0.0) + size * generator.standard_normal()
-        found.append(_survey(case, side, speed, wrong, shift, generator))
+        found.append(_survey(case, side, speed, wrong, table, shift, generator))
     return found[0], found[1]
 
 
@@ -161,6 +174,7 @@ def _survey(
     side: int,
     speed: float,
     wrong: Mapping[str, float],
+    table: Mapping[str, np.ndarray],
     shift: np.ndarray,
     generator: np.random.Generator,
 ) -> SurveyInput:
@@ -173,6 +187,7 @@ def _survey(
         yaw=wrong.get("angle.yaw", 0.0),
     )
     recording = record(wake(side, speed), grid_positions(y, z), generator=generator, errors=errors)
+    values = {name: value + table.get(name, 0.0) for name, value in recording.values.items()}
     text = survey_text(
         f"pair, {'AB'[side]}",
         speed=speed + wrong.get("reference.speed", 0.0),
@@ -183,7 +198,7 @@ def _survey(
         seed=int(generator.integers(2**31)),
         sources=_sources(case),
     )
-    return SurveyInput(parse_survey(text, "pair.toml"), recording.points(), {})
+    return SurveyInput(parse_survey(text, "pair.toml"), replace(recording, values=values).points(), {})
 
 
 @cache
@@ -199,45 +214,44 @@ def noise_memory(case: str, side: int) -> dict[str, tuple[Noise, ...]]:
     return {}
 
 
-def _followed(prepared: Prepared, *, seed: int) -> tuple[ErrorSampler, tuple[Component, ...]]:
-    """Every error of the whole survey by itself, over `OUTPUTS`, as the archive keeps it."""
-    sampler = ErrorSampler(prepared.sources, prepared.layouts, seed=seed)
-    few = [one for one in sampler.by_source if one.source.effect == "systematic"]
-
-    def evaluate(errors: dict[str, np.ndarray]) -> np.ndarray:
-        return prepared.chain.vectors(errors, estimates=False)
-
-    if not few:
-        return sampler, ()
-    return sampler, shifted_components(evaluate, sampler, few, len(OUTPUTS), batch=64, workers=1)
-
-
-def _kept(components: Sequence[Component], covariance: np.ndarray) -> Contributions:
+def _kept(components: Sequence[Component], covariance: np.ndarray, points: Sequence[PointErrors] = ()) -> Contributions:
     """Contributions over `JUDGED` from figures over `OUTPUTS`."""
     parts = tuple(replace(one, linear=one.linear[AT], curved=one.curved[AT]) for one in components)
     left = np.stack([covariance[np.ix_(at, at)] for at in AT])
-    return Contributions(JUDGED, parts, left, np.full(AT.shape, math.inf))
+    of_points = tuple(replace(one, effects=one.effects[AT]) for one in points)
+    return Contributions(JUDGED, parts, left, np.full(AT.shape, math.inf), of_points)
 
 
 def contributions(prepared: Prepared, second: Mapping[str, SecondOrder], *, seed: int) -> Contributions:
     """What each error does to the rows of one survey, in closed form."""
-    _, found = _followed(prepared, seed=seed)
-    budget = closed_form(prepared, second)
-    noisy = [k for k, source in enumerate(budget.sources) if source.effect != "systematic"]
-    left = budget.covariance[noisy].sum(axis=0) + np.diag(budget.contributions[noisy].sum(axis=0))
-    left -= np.diag(np.diag(budget.covariance[noisy].sum(axis=0)))
-    if found:
-        # What pairs of errors do is in nobody's share: the archive has it in the scatter of the draws.
-        left += np.diag(curvature(prepared, budget)[1])
-    return _kept(found, left)
+    sampler = ErrorSampler(prepared.sources, prepared.layouts, seed=seed)
+    slopes = linear_slopes(prepared.chain, prepared.nominal, prepared.sources, prepared.layouts, estimates=False)
+    budget = linear_budget(slopes, prepared.sources, prepared.layouts, names=OUTPUTS, second=second)
+    found, pairs = single_errors(prepared, budget)
+    left = np.zeros((len(OUTPUTS), len(OUTPUTS)))
+    points: list[PointErrors] = []
+    for one, covariance, order in zip(sampler.by_source, budget.covariance, budget.second, strict=True):
+        if one.source.effect == "systematic":
+            continue
+        own = point_errors(one, slopes, prepared.layouts)
+        points += own
+        left += np.diag(order.variance) + (0 if own else covariance)
+    # What pairs of errors do is in nobody's share: the archive has it in the scatter of the draws.
+    left += pairs.covariance
+    return _kept(found, left, points)
 
 
-def drawn_contributions(prepared: Prepared, *, draws: int, seed: int) -> Contributions:
-    """The same from draws, as the program finds it."""
-    sampler, found = _followed(prepared, seed=seed)
+def _drawn(prepared: Prepared, *, draws: int, seed: int) -> Contributions:
+    """The same with what is left beside single errors from draws, as the program finds it."""
+    slopes = linear_slopes(prepared.chain, prepared.nominal, prepared.sources, prepared.layouts, estimates=False)
+    budget = linear_budget(slopes, prepared.sources, prepared.layouts, names=OUTPUTS)
+    found, _ = single_errors(prepared, budget)
+    sampler = ErrorSampler(prepared.sources, prepared.layouts, seed=seed)
     few = [one for one in sampler.by_source if one.source.effect == "systematic"]
+    points = [each for one in sampler.by_source for each in point_errors(one, slopes, prepared.layouts)]
     samples = Samples(OUTPUTS, prepared.chain.vectors(sampler.draw(0, draws), estimates=False))
-    return _kept(found, np.nan_to_num(scatter(samples, few, found)))
+    known = predicted(sampler.by_source, points, draws) if points else None
+    return _kept(found, np.nan_to_num(scatter(samples, few, found, predicted=known)), points)
 
 
 def judge(name: str, seed: int, k: int, *, draws: int = 0, numerical: bool = False) -> dict[str, Any]:
@@ -261,9 +275,7 @@ def judge(name: str, seed: int, k: int, *, draws: int = 0, numerical: bool = Fal
     found["apart"] = np.sqrt(variances[0] + variances[1]).tolist()
     ways = {"": parts}
     if draws:
-        ways["mc_"] = [
-            drawn_contributions(one, draws=draws, seed=number) for one, number in zip(ready, seeds, strict=True)
-        ]
+        ways["mc_"] = [_drawn(one, draws=draws, seed=number) for one, number in zip(ready, seeds, strict=True)]
     for prefix, own in ways.items():
         difference = subtract(*own)
         found[f"{prefix}u"] = np.sqrt(np.einsum("qrr->qr", difference.covariance)).tolist()
