@@ -106,12 +106,15 @@ class Improvement:
         By how much that is less.
     minutes : float
         What it takes more; 0 for a better instrument, NaN where unknown.
+    points : int
+        Points that it takes more, all repeats together; 0 for a better instrument.
     """
 
     what: str
     expanded_uncertainty: float
     gain: float
     minutes: float
+    points: int = 0
 
     @property
     def gain_per_minute(self) -> float:

@@ -12,7 +12,7 @@ from wakeledger.present.wording import printable, unit_text, words
 if TYPE_CHECKING:
     from rich.table import Table
 
-    from wakeledger.ledger.plan import Plan, SetUp
+    from wakeledger.ledger.plan import Improvement, Plan, SetUp
 
 #: Beyond so many, sources, numerical terms and improvements are left out of what is printed, and counted.
 MOST_LINES = 8
@@ -55,7 +55,7 @@ def plan_text(plan: Plan, *, width: int = 100, colour: bool = False) -> str:
         console.print(_map(plan))
         section(console, "The cheapest set-up with each probe")
         console.print(_by_probe(plan))
-        section(console, "What a single improvement would gain")
+        section(console, "What a single improvement would gain, the largest first")
         console.print(_improvements(plan))
     sentences_of(console, "Notes", plan.notes)
     return with_statement(console)
@@ -80,8 +80,10 @@ def outcome(plan: Plan) -> str:
     figure, uncertainty = rounded(plan.value, plan.expanded_uncertainty)
     known = f"{row} {figure} ± {uncertainty} {'' if plan.unit == '1' else plan.unit}".strip()
     if plan.reached:
-        cost = time_text(plan.chosen.minutes) if math.isfinite(plan.chosen.minutes) else "the fewest points of all"
-        return f"The target of {target} is reached: {known} (U95), in {cost}."
+        sentence = f"The target of {target} is reached: {known} (U95), in {cost_text(plan.chosen)}."
+        if plan.stated > plan.target:
+            sentence += f" The ledger of such a survey would state {with_unit(plan, plan.stated, 2)}."
+        return sentence
     within = f" within {time_text(plan.time_limit)}" if math.isfinite(plan.time_limit) else ""
     sentence = f"No set-up tried reaches {target}{within}; the best one found: {known} (U95)"
     if math.isfinite(plan.chosen.minutes):
@@ -107,6 +109,22 @@ def time_text(minutes: float) -> str:
     if whole < 1:
         return f"{60 * minutes:.0f} s"
     return f"{whole} min" if whole < 120 else f"{whole // 60} h {whole % 60:02d} min"
+
+
+def cost_text(one: SetUp) -> str:
+    """What a set-up costs: its time, or its points where that is not known."""
+    return time_text(one.minutes) if math.isfinite(one.minutes) else f"{one.points * one.repeats} points"
+
+
+def takes_text(one: Improvement) -> str:
+    """What an improvement takes more."""
+    known = math.isfinite(one.minutes)
+    if not known and not one.points:
+        return "–"
+    more = one.minutes if known else float(one.points)
+    if abs(more) < 0.5:
+        return "no time"
+    return f"{'+' if more > 0 else '−'}{time_text(abs(more)) if known else f'{abs(one.points)} points'}"
 
 
 def set_up_facts(one: SetUp) -> list[tuple[str, str]]:
@@ -135,15 +153,15 @@ def checked(plan: Plan) -> str:
     """What the full Monte Carlo said of the derivatives."""
     percent = 100 * plan.non_linearity
     left = with_unit(plan, plan.left, 2)
-    stated = ""
-    if plan.stated > 1.05 * plan.expanded_uncertainty:
-        stated = (
-            f" The ledger of such a survey would state U95 = {with_unit(plan, plan.stated, 2)}, because its"
-            " numerical terms hold noise that the declared sources hold already."
-        )
+    terms = [line for line in plan.terms if line.share >= SMALL][:MOST_LINES]
+    stated = f" The ledger of such a survey would state U95 = {with_unit(plan, plan.stated, 2)}"
+    if terms:
+        named = ", ".join(f"{line.source} {significant(line.standard_uncertainty, 2)}" for line in terms)
+        stated += f": it cannot know that, and has numerical terms for it (u: {named})"
     return (
         f"A full Monte Carlo of {plan.draws} draws gives the declared sources {percent:+.1f} % against their"
-        f" derivatives; the figures hold this. Without any noise the survey would be off by {left}.{stated}"
+        f" derivatives; the figures hold this. Without any noise the survey would be off by {left} on average."
+        f"{stated}."
     )
 
 
@@ -177,7 +195,7 @@ def _map(plan: Plan) -> Table:
 def _by_probe(plan: Plan) -> Table:
     table = new_table(
         ("probe's noise", "left"), ("every", "right"), ("window", "right"), ("surveys", "right"), ("time", "right"),
-        ("U95", "right"), ("", "left"),
+        ("U95", "right"), ("its ledger's", "right"), ("", "left"),
     )  # fmt: skip
     for one in plan.by_probe:
         reaches = one.expanded_uncertainty <= plan.target and not one.failing and not one.minutes > plan.time_limit
@@ -186,8 +204,9 @@ def _by_probe(plan: Plan) -> Table:
             f"{1e3 * one.spacing:.3g} mm",
             f"{1e3 * one.window:.3g} mm",
             str(one.repeats),
-            time_text(one.minutes) if math.isfinite(one.minutes) else f"{one.points * one.repeats} points",
+            cost_text(one),
             significant(one.expanded_uncertainty, 2),
+            significant(one.stated, 2),
             "reaches the target" if reaches else "does NOT reach it",
         )
     return table
@@ -198,14 +217,8 @@ def _improvements(plan: Plan) -> Table:
         ("", "left"), ("U95 then", "right"), ("gain", "right"), ("takes", "right"), ("gain per hour", "right")
     )
     for one in plan.improvements[:MOST_LINES]:
-        more = one.minutes if abs(one.minutes) >= 0.5 else 0.0
-        takes = (
-            "–"
-            if math.isnan(one.minutes)
-            else "no time"
-            if more == 0
-            else f"{'+' if more > 0 else '−'}{time_text(abs(more))}"
-        )
         rate = significant(60 * one.gain_per_minute, 2) if math.isfinite(one.gain_per_minute) else "–"
-        table.add_row(one.what, significant(one.expanded_uncertainty, 3), significant(one.gain, 2), takes, rate)
+        table.add_row(
+            one.what, significant(one.expanded_uncertainty, 3), significant(one.gain, 2), takes_text(one), rate
+        )
     return table

@@ -7,7 +7,7 @@ from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
 from wakeledger.ledger.rounding import significant
-from wakeledger.present.plan_text import checked, outcome, set_up_facts, time_text, unit_of
+from wakeledger.present.plan_text import checked, outcome, set_up_facts, takes_text, time_text, unit_of
 from wakeledger.present.report.page import page, pictures
 from wakeledger.present.wording import digits, words
 
@@ -71,6 +71,7 @@ def _by_probe(plan: Plan) -> list[dict[str, Any]]:
             "points": one.points * one.repeats,
             "time": time_text(one.minutes) if math.isfinite(one.minutes) else "–",
             "u": significant(one.expanded_uncertainty, 2),
+            "stated": significant(one.stated, 2),
             "reaches": one.expanded_uncertainty <= plan.target
             and not one.failing
             and not one.minutes > plan.time_limit,
@@ -86,7 +87,7 @@ def _improvements(plan: Plan) -> list[dict[str, Any]]:
             "what": one.what,
             "u": significant(one.expanded_uncertainty, 3),
             "gain": significant(one.gain, 2),
-            "time": "–" if not abs(one.minutes) >= 0.5 else f"{one.minutes:+.0f}",
+            "takes": takes_text(one),
             "rate": digits(60 * one.gain_per_minute, 2),
         }
         for one in plan.improvements

@@ -95,7 +95,7 @@ def _ranges(survey: Survey, plane: Any, path: Path) -> dict[str, Any]:
         raise SurveyError("it holds no wake", file=path, remedy="plan from a loading")
     room = float(min(y[columns[0]] - y[0], y[-1] - y[columns[-1]], z[rows[0]] - z[0], z[-1] - z[rows[-1]]))
     spacing = float(max(np.diff(y).min(), np.diff(z).min()))
-    declared = _declared(survey)
+    declared = declared_sizes(survey)
     if "hole_noise" not in declared and not {"noise", "total_pressure_noise"} <= set(declared):
         raise SurveyError(
             "its survey file does not declare the random noise of the crossflow and of the total pressure",
@@ -117,8 +117,19 @@ def _ranges(survey: Survey, plane: Any, path: Path) -> dict[str, Any]:
     return found
 
 
-def _declared(survey: Survey) -> dict[str, float]:
-    """What a survey declares, by the keys of ``[plan]``: the root of the sum of squares of its sources."""
+def declared_sizes(survey: Survey) -> dict[str, float]:
+    """What a survey declares, by the keys of ``[plan]``: the root of the sum of squares of its sources.
+
+    Parameters
+    ----------
+    survey : Survey
+        Its file.
+
+    Returns
+    -------
+    dict of str to float
+        Standard uncertainties, SI; parts of the dynamic pressure and density. Without what it does not declare.
+    """
     squares: dict[str, float] = {}
     reference = survey.reference.given()
     for source in survey.uncertainty.source:

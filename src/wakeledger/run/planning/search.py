@@ -107,7 +107,11 @@ class Design:
     def cost(self, choice: Choice) -> float:
         """Minutes, or points where the time is not known."""
         minutes = self.minutes(choice)
-        return minutes if math.isfinite(minutes) else float(self.window_of(choice).points * choice.repeats)
+        return minutes if math.isfinite(minutes) else float(self.points(choice))
+
+    def points(self, choice: Choice) -> int:
+        """Points of all its surveys."""
+        return self.window_of(choice).points * choice.repeats
 
     def uncertainty(self, choice: Choice) -> float:
         """Expanded uncertainty as shown; NaN where no such survey can be reduced."""
@@ -233,7 +237,8 @@ def improvements(design: Design, choice: Choice, sources: Mapping[str, float], t
         after = ratio * design.uncertainty(other)
         if math.isfinite(after):
             minutes = design.minutes(other) - design.minutes(choice)
-            found.append(Improvement(what, after, now - after, minutes))
+            points = design.points(other) - design.points(choice)
+            found.append(Improvement(what, after, now - after, minutes, points))
     return tuple(sorted((one for one in found if one.gain > SMALLEST_GAIN * now), key=lambda one: -one.gain))
 
 
