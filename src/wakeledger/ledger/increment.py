@@ -80,7 +80,7 @@ class Figure:
         """Whether |B - A| is larger than its expanded uncertainty; None where either is unknown."""
         if math.isnan(self.difference) or math.isnan(self.expanded_uncertainty):
             return None
-        return abs(self.difference) > self.expanded_uncertainty
+        return bool(abs(self.difference) > self.expanded_uncertainty)
 
     @property
     def in_counts(self) -> tuple[float, float]:

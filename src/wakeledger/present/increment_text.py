@@ -63,6 +63,10 @@ def increment_text(increment: Increment, *, width: int = 100, colour: bool = Fal
     console.print(_rows_table(increment.rows, roomy=console.width >= ROOMY))
     for sentence in grouped_reasons((words(row.name), row.reason) for row in increment.rows):
         bullet(console, sentence)
+    corrected = corrected_cells(increment)
+    if corrected:
+        section(console, "Coefficients on the dynamic pressure corrected for blockage, B − A in counts")
+        console.print(_corrected_table(corrected))
     main = main_row(increment)
     lines = [line for line in increment.cancellations if main is not None and line.row == main.name]
     if lines and main is not None:
@@ -137,6 +141,54 @@ def _rows_table(rows: Sequence[IncrementRow], *, roomy: bool) -> Table:
             cells += [digits(judged.coverage_factor, 3), f"{digits(ratio, 3)} u" if math.isfinite(ratio) else "–"]
         cells.append(Text(OUTCOMES[row.resolved], style=_STYLES[row.resolved]))
         table.add_row(*cells)
+    return table
+
+
+def corrected_cells(increment: Increment) -> list[dict[str, str]]:
+    """Differences of the coefficients on the dynamic pressure corrected for blockage.
+
+    Parameters
+    ----------
+    increment : Increment
+        The increment.
+
+    Returns
+    -------
+    list of dict
+        ``row``, ``counts``, ``expanded``, ``k``, ``ratio`` of two separate surveys to the increment, ``outcome`` and
+        ``style`` of the rows that have them.
+    """
+    found = []
+    for row in increment.rows:
+        figure = row.corrected
+        if figure is None:
+            continue
+        counts, expanded = figure_text(figure, COUNT)
+        u = figure.standard_uncertainty
+        found.append(
+            {
+                "row": words(row.name),
+                "counts": counts,
+                "expanded": expanded,
+                "k": digits(figure.coverage_factor, 3),
+                "ratio": digits(figure.uncancelled_uncertainty / u, 3) if u else "–",
+                "outcome": OUTCOMES[figure.resolved],
+                "style": _STYLES[figure.resolved],
+            }
+        )
+    return found
+
+
+def _corrected_table(cells: Sequence[dict[str, str]]) -> Table:
+    from rich.text import Text
+
+    table = new_table(
+        ("", "left"), ("counts ± U95", "left"), ("k", "right"), ("u, nothing cancelled", "right"), ("", "left")
+    )
+    shown = joined([(line["counts"], line["expanded"]) for line in cells])
+    for line, counts in zip(cells, shown, strict=True):
+        ratio = "–" if line["ratio"] == "–" else f"{line['ratio']} u"
+        table.add_row(line["row"], counts, line["k"], ratio, Text(line["outcome"], style=line["style"]))
     return table
 
 

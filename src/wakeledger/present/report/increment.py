@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 from wakeledger.ledger.rounding import rounded
 from wakeledger.ledger.rows import COUNT
-from wakeledger.present.increment_text import OUTCOMES, figure_text
+from wakeledger.present.increment_text import OUTCOMES, corrected_cells, figure_text
 from wakeledger.present.report.page import page, pictures
 from wakeledger.present.wording import capital, digits, grouped_reasons, unit_text, words
 
@@ -45,6 +45,7 @@ def increment_html(increment: Increment, figures: Mapping[str, Figure] | None = 
         increment=increment,
         rows=_rows(increment),
         reasons=grouped_reasons((words(row.name), row.reason) for row in increment.rows),
+        corrected=corrected_cells(increment),
         sentences=[capital(row.statement) for row in increment.rows],
         cancelled=_cancelled(increment),
         kept=grouped_reasons((line.source, line.reason) for line in increment.not_cancelled),
