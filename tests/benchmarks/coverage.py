@@ -305,8 +305,9 @@ def judge(name: str, seed: int, k: int, *, draws: int = 0, numerical: bool = Fal
     made = survey(case, np.random.default_rng([seed, list(CASES).index(name), k]))
     prepared = made_ready(made.given)
     found: dict[str, Any] = {"case": name, "seed": seed, "k": k}
-    found["size"] = any("is not the declared one" in note for note in prepared.notes)
-    found["shared"] = any("Neighbouring points share their noise" in note for note in prepared.notes)
+    said = " ".join((*prepared.notes, *prepared.findings.disagreements))
+    found["size"] = "is not the declared one" in said
+    found["shared"] = "Neighbouring points share their noise" in said
     if name in MISDECLARED:
         return found
     truth = flow(case.half).truth.rows()

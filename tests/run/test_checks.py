@@ -16,6 +16,7 @@ from wakeledger.run import checks
 from wakeledger.run.chain.outputs import OUTPUTS
 from wakeledger.run.chain.reduction import Reduction
 from wakeledger.run.traverse.probe_range import ProbeRange
+from wakeledger.run.uncertainty.channel_noise import ChannelNoise, NoiseFindings, Shown, sums_factor
 from wakeledger.stream.reference import Reference
 from wakeledger.synthetic.aircraft import wing_wake
 
@@ -61,18 +62,64 @@ def facts(nominal, **changes):
     return replace(plain, **changes)
 
 
+def findings(*, declared=0.12, shown=0.12, size=900.0, lengths=(math.nan, math.nan), cells=(), name="v"):
+    """Noise of one channel, declared and shown."""
+    by_neighbours = Shown(shown, lengths, size, sums_factor(cells))
+    return NoiseFindings((ChannelNoise(name, by_neighbours, declared, shared=False),), 50.0)
+
+
 GOOD = reduction()
 
 
 def test_a_good_survey_passes_every_check_in_the_ledgers_order():
     probe = ProbeRange("reynolds", (5e3, 2e4), (6e3, 9e3), 0.0, 0.0)
-    found = checks.all_checks(GOOD, facts(GOOD, probe=probe))
+    found = checks.all_checks(GOOD, facts(GOOD, probe=probe, noise=findings()))
     assert tuple(check.name for check in found) == CHECKS
     # Without a calibration that tells its number there is nothing to check.
     assert tuple(check.name for check in checks.all_checks(GOOD, facts(GOOD))) == CHECKS[:-1]
     assert {check.verdict for check in found} == {"pass"}
     assert all(check.limit == checks.LIMITS[check.name][0] for check in found)
     assert all(0 <= check.value <= check.limit for check in found)
+
+
+@pytest.mark.parametrize(("shown", "verdict"), [(0.12, "pass"), (0.16, "pass"), (0.24, "warn"), (0.06, "warn")])
+def test_declared_noise_is_held_against_what_the_data_show(shown, verdict):
+    check = checks.declared_noise(findings(shown=shown))
+    assert check.verdict == verdict
+    # Three standard errors of 900 points, exp(-3/√1800), are taken off the factor, which is never below 1.
+    factor = max(shown / 0.12, 0.12 / shown)
+    assert check.value == pytest.approx(max(factor * 0.9317, 1.0), rel=1e-3)
+    if verdict == "warn":
+        assert f"v {shown:.2g} m/s, declared 0.12 m/s" in check.message and "correct the size" in check.message
+
+
+def test_few_points_do_not_call_a_declaration_wrong():
+    assert checks.declared_noise(findings(shown=0.24, size=30.0)).verdict == "pass"
+    assert checks.declared_noise(findings(shown=0.60, size=30.0)).verdict == "warn"
+
+
+def test_noise_that_neighbours_share_warns_with_what_sums_err_by():
+    check = checks.declared_noise(findings(lengths=(0.012, 0.012), cells=(1.0, 1.0)))
+    # Σ exp(-k²/2) = 2.5066 along each axis, which is √(2π) to five digits.
+    assert check.verdict == "warn" and check.value == pytest.approx(2.5066, rel=1e-4)
+    assert "v over about 12 mm" in check.message and "correlation_length" in check.message
+    faint = checks.declared_noise(findings(lengths=(0.006, math.nan), cells=(0.5, math.nan)))
+    assert faint.verdict == "warn" and faint.value == pytest.approx(1.5)
+
+
+def test_declared_noise_does_not_apply_where_nothing_can_be_compared():
+    for found, said in (
+        (None, "No noise is declared"),
+        (findings(declared=0.0), "No noise is declared"),
+        (findings(shown=math.nan, size=0.0), "Too little flow outside the wake"),
+    ):
+        check = checks.declared_noise(found)
+        assert check.verdict == "not_applicable" and math.isnan(check.value) and said in check.message
+
+
+def test_exact_data_under_declared_noise_give_a_finite_value():
+    check = checks.declared_noise(findings(shown=0.0))
+    assert check.verdict == "warn" and check.value == 1000.0
 
 
 def test_a_window_that_cuts_the_starboard_vortex_is_reported():

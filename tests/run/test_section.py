@@ -481,13 +481,18 @@ def test_checks_and_notes_of_a_good_traverse(tmp_path):
         "edge_total_pressure_loss": "pass",
         "core_resolution": "not_applicable",
         "noise_bias": "pass",
+        "declared_noise": "pass",
         "outer_flow": "pass",
         "missing_points": "pass",
     }
     assert all(check.message for check in found.checks)
-    assert not any("check the sources" in note or "[model]" in note for note in found.notes)
+    assert not any("[model]" in note for note in found.notes)
     loud = ledger(tmp_path / "loud", data, sources=[source("total noise", "plane.total_pressure", "9 Pa")])
-    assert any("check the sources" in note for note in loud.notes)
+    check = next(check for check in loud.checks if check.name == "declared_noise")
+    assert check.verdict == "warn" and "total pressure" in check.message and "declared 9 Pa" in check.message
+    # 9 Pa declared, 2 Pa there, less three standard errors.
+    assert 1.5 < check.value < 4.5
+    assert any("no source declares (static pressure" in note for note in loud.notes)
 
 
 def test_speed_at_the_streams_pressure_is_questioned(tmp_path):

@@ -21,6 +21,8 @@ _FEWEST = 50
 #: The same on a line, whose outer flow has few points.
 _FEWEST_ON_A_LINE = 12
 _LINE_ORDER = 2
+#: Standard errors from which on noise is called correlated: of five channels beside a small wake 0.5 % by chance.
+_DEPARTS = 4.5
 _LONGEST = 2.0
 # Differences of exact data are a few units of rounding.
 _ROUNDING = 16 * np.finfo(float).eps
@@ -92,7 +94,7 @@ def estimate_noise(field: Array, *, mask: NDArray[np.bool_] | None = None) -> No
     takes out whatever is a polynomial of fifth degree over seven points. Its spread is the median absolute deviation,
     refined by discarding what lies beyond three standard deviations until nothing changes, so that single wild values
     do not count. White noise through the filter has autocorrelations -6/7 and 15/28 at lags one and two; where either
-    is off by more than four standard errors, the length of exp(-(d/L)²/2) that gives the first is found and the loss of
+    is off by more than 4.5 standard errors, the length of exp(-(d/L)²/2) that gives the first is found and the loss of
     such noise in the filter is made good. The two axes are pooled where they agree; else the axis on which
     the noise is white is taken, or the smaller value, since a signal can only add.
     """
@@ -198,8 +200,8 @@ def _noise_of_differences(
     lag_two, pairs_two = _robust_correlation(differences[:, :-2], differences[:, 2:])
     # Short stretches have far fewer pairs than values.
     departs = (
-        abs(lag_one - white[1]) > 4 * errors[0] * math.sqrt(repeated / max(pairs_one, 1)),
-        abs(lag_two - white[2]) > 4 * errors[1] * math.sqrt(repeated / max(pairs_two, 1)),
+        abs(lag_one - white[1]) > _DEPARTS * errors[0] * math.sqrt(repeated / max(pairs_one, 1)),
+        abs(lag_two - white[2]) > _DEPARTS * errors[1] * math.sqrt(repeated / max(pairs_two, 1)),
     )
     if deviation <= _ROUNDING * largest:
         return _AxisNoise(0.0, math.nan, count * _independent_share(white))

@@ -120,6 +120,7 @@ CHECKS: tuple[str, ...] = (
     "edge_total_pressure_loss",
     "core_resolution",
     "noise_bias",
+    "declared_noise",
     "outer_flow",
     "missing_points",
     "probe_range",

@@ -21,6 +21,7 @@ from wakeledger.physics.fields.edge import edge_integrals
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.run.chain.reduction import Reduction
 from wakeledger.run.traverse.probe_range import ProbeRange
+from wakeledger.run.uncertainty.channel_noise import FACTOR, NoiseFindings
 
 FREE_AIR = FreeAir()
 
@@ -32,6 +33,7 @@ LIMITS: dict[str, tuple[float, float]] = {
     "edge_total_pressure_loss": (0.005, 0.03),
     "core_resolution": (0.8, 1.5),
     "noise_bias": (0.02, 0.10),
+    "declared_noise": (FACTOR, math.inf),
     "outer_flow": (0.05, 0.25),
     "missing_points": (0.02, 0.10),
     "probe_range": (0.02, 1.0),
@@ -90,6 +92,8 @@ class Facts:
         Whether the direction of the flow was measured.
     probe : ProbeRange or None
         Where the probe was used, against where it was calibrated, if its calibration tells a Mach or Reynolds number.
+    noise : NoiseFindings or None
+        Declared noise beside what the data show; None where nothing is said of it, as on a computed plane.
     boundary : FreeAir, ClosedWalls or OpenJet
         What surrounds the survey, its reflection plane included.
     cut : float
@@ -104,6 +108,7 @@ class Facts:
     spacings: tuple[float, ...] = ()
     crossflow: bool = True
     probe: ProbeRange | None = None
+    noise: NoiseFindings | None = None
     boundary: Boundary = FREE_AIR
     cut: float = 0.0
 
@@ -139,6 +144,7 @@ def all_checks(reduction: Reduction, facts: Facts) -> tuple[Check, ...]:
         edge_total_pressure_loss(reduction, facts.boundary),
         core_resolution(facts),
         noise_bias(reduction, facts),
+        declared_noise(facts.noise),
         outer_flow(reduction, facts),
         missing_points(reduction, facts),
     )
@@ -421,6 +427,25 @@ def noise_bias(reduction: Reduction, facts: Facts) -> Check:
             "not_applicable": "There is no induced drag that noise could bias.",
         },
     )
+
+
+def declared_noise(found: NoiseFindings | None) -> Check:
+    """Factor between the noise that the data show and the declared one, the largest of all channels.
+
+    Parameters
+    ----------
+    found : NoiseFindings or None
+        Both, by channel; None where there is nothing to say.
+
+    Returns
+    -------
+    Check
+        It never fails: the figures may be right, and which of the two noises is wrong is not known.
+    """
+    if found is None:
+        message = "No noise is declared that the data could be held against."
+        return _check("declared_noise", math.nan, {"not_applicable": message})
+    return _check("declared_noise", found.factor, found.messages)
 
 
 def outer_flow(reduction: Reduction, facts: Facts) -> Check:

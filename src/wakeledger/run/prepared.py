@@ -29,6 +29,7 @@ from wakeledger.run.inputs import gradients, layouts, sources
 from wakeledger.run.load import SurveyInput, refuse_unsupported
 from wakeledger.run.traverse.notes import traverse_notes
 from wakeledger.run.tunnel import tunnel_notes, tunnel_sources
+from wakeledger.run.uncertainty.channel_noise import NoiseFindings
 from wakeledger.run.uncertainty.noise import Noise, noise_bias
 from wakeledger.run.uncertainty.noise_findings import crossflow_noises
 from wakeledger.run.uncertainty.resolution import resolution_notes
@@ -60,6 +61,8 @@ class Prepared:
         Sources of uncertainty and the inputs they act on.
     noises : tuple of Noise
         Noise of the crossflow.
+    findings : NoiseFindings
+        Declared noise beside what the data show.
     notes : tuple of str
         Sentences about the choices made.
     cut : float
@@ -75,6 +78,7 @@ class Prepared:
     sources: tuple[Source, ...]
     layouts: Mapping[str, InputLayout]
     noises: tuple[Noise, ...]
+    findings: NoiseFindings
     notes: tuple[str, ...]
     cut: float = 0.0
 
@@ -127,7 +131,7 @@ def _prepare(survey: SurveyInput) -> Prepared:
     apart = slipstream_region(chain, first)
     chain = replace(chain, frozen=replace(chain.frozen, shock_level=_shock_level(chain, first), energised=apart))
     plain = chain.reduce()
-    noises, noise_notes = crossflow_noises(chain, plain, declared, inputs, seed=file.uncertainty.seed)
+    noises, findings, noise_notes = crossflow_noises(chain, plain, declared, inputs, seed=file.uncertainty.seed)
     chain = replace(chain, frozen=replace(chain.frozen, bias=noise_bias(chain, plain, noises)))
     nominal = chain.reduce()
     chain = replace(chain, frozen=replace(chain.frozen, region=nominal.region.mask))
@@ -162,7 +166,7 @@ def _prepare(survey: SurveyInput) -> Prepared:
         *noise_notes,
     )
     cut = 0.0 if file.boundary is None else file.boundary.inboard_cut or 0.0
-    return Prepared(chain, nominal, outer, line, vortices, expected, declared, inputs, noises, notes, cut)
+    return Prepared(chain, nominal, outer, line, vortices, expected, declared, inputs, noises, findings, notes, cut)
 
 
 def _declares_noise_of_loss(declared: Sequence[Source]) -> bool:

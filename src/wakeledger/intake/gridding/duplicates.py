@@ -32,7 +32,7 @@ def check_duplicates(points: Points) -> None:
         If two values at one place differ by more than 8 standard deviations of their difference; the standard deviation
         of a mean comes from the file, or else from how far points scatter about a plane through their neighbours.
     """
-    label = _places(points.y, points.z)
+    label = place_labels(points.y, points.z)
     order = np.argsort(label, kind="stable")
     same = np.flatnonzero(np.diff(label[order]) == 0)
     if not same.size:
@@ -66,8 +66,19 @@ def _range(values: Array) -> float:
     return float(np.ptp(np.quantile(finite, [0.01, 0.99]))) if finite.size else 0.0
 
 
-def _places(y: Array, z: Array) -> NDArray[np.intp]:
-    """Number of the place of each point."""
+def place_labels(y: Array, z: Array) -> NDArray[np.intp]:
+    """Number of the place of each point.
+
+    Parameters
+    ----------
+    y, z : ndarray, shape (n,)
+        Positions, m.
+
+    Returns
+    -------
+    ndarray of int, shape (n,)
+        Points on one node of a tensor grid have one number; of scattered points, those at the very same place.
+    """
     lattice = find_lattice(y, z)
     if lattice is not None:
         return np.asarray(lattice.iz * lattice.y.size + lattice.iy, dtype=np.intp)

@@ -29,8 +29,8 @@ from wakeledger.run.traverse.probe_range import probe_range, tip_notes
 from wakeledger.run.traverse.traverse import RawSurvey, corrected_points
 from wakeledger.stream.reference import Reference
 
-#: Checks whose value needs the noise bias or a reduction's uncertainty; they are left to `reduce`.
-_LATER = frozenset({"noise_bias"})
+#: Checks whose value needs the noise bias or errors drawn from the sources; they are left to `reduce`.
+_LATER = frozenset({"noise_bias", "declared_noise"})
 _ARRANGEMENTS = {
     "uniform": "tensor grid, uniform",
     "tensor": "tensor grid, uneven lines",

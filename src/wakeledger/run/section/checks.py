@@ -11,8 +11,9 @@ from numpy.typing import NDArray
 from wakeledger.core.grid import Array
 from wakeledger.ledger.rows import Check
 from wakeledger.physics.methods.section_kernels import jones, total_at, window_weights
-from wakeledger.run.checks import EDGE_CELLS, LIMITS, verdict_of
+from wakeledger.run.checks import EDGE_CELLS, LIMITS, declared_noise, verdict_of
 from wakeledger.run.section.chain import ROW, SectionReduction, SectionSettings
+from wakeledger.run.uncertainty.channel_noise import NoiseFindings
 
 _SIDES = {"y": ("port", "starboard"), "z": ("lower", "upper")}
 _NO_PLANE = {
@@ -35,11 +36,14 @@ class SectionFacts:
         Places whose value was filled in.
     level_effect : float
         What the choice of the outer flow beside the wake is worth, as a share of the drag.
+    noise : NoiseFindings or None
+        Declared noise beside what the data show.
     """
 
     settings: SectionSettings
     filled: NDArray[np.bool_]
     level_effect: float
+    noise: NoiseFindings | None = None
 
 
 def section_checks(reduction: SectionReduction, facts: SectionFacts) -> tuple[Check, ...]:
@@ -63,6 +67,7 @@ def section_checks(reduction: SectionReduction, facts: SectionFacts) -> tuple[Ch
         edge_total_pressure_loss(reduction, facts.settings.along),
         _not_applicable("core_resolution"),
         noise_bias(reduction, facts.settings),
+        declared_noise(facts.noise),
         outer_flow(reduction, facts),
         missing_points(reduction, facts),
     )

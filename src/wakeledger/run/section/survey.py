@@ -50,11 +50,13 @@ from wakeledger.run.section.chain import (
     SectionVariation,
 )
 from wakeledger.run.section.checks import SectionFacts, section_checks
+from wakeledger.run.section.noise import section_findings
 from wakeledger.run.section.notes import raw_notes, section_notes
 from wakeledger.run.section.state import SectionState, check_section_state
 from wakeledger.run.section.terms import LEVEL, section_terms
 from wakeledger.run.traverse.rake import prepare_raw
 from wakeledger.run.traverse.traverse import SHEAR, RawSurvey, corrected_points
+from wakeledger.run.uncertainty.channel_noise import NoiseFindings
 from wakeledger.run.uncertainty.method_choice import choice_terms, spread_notes
 from wakeledger.run.uncertainty.propagation import propagation
 from wakeledger.stream.reference import Reference
@@ -101,6 +103,8 @@ class PreparedSection:
         Sources of uncertainty and the inputs they act on.
     noise : tuple of mapping
         A few draws of the errors that differ from point to point.
+    findings : NoiseFindings
+        Declared noise beside what the data show.
     terms : tuple of NumericalTerm
         What the numerical choices are worth.
     notes : tuple of str
@@ -115,6 +119,7 @@ class PreparedSection:
     sources: tuple[Source, ...]
     layouts: Mapping[str, InputLayout]
     noise: tuple[Mapping[str, Array], ...]
+    findings: NoiseFindings
     terms: tuple[NumericalTerm, ...]
     notes: tuple[str, ...]
 
@@ -127,7 +132,7 @@ class PreparedSection:
         """What the checks need."""
         level = next(term for term in self.terms if term.name == LEVEL)
         effect = math.sqrt(3.0) * abs(float(level.standard_uncertainty[0])) / abs(self.nominal.values[ROW])
-        return SectionFacts(self.chain.settings, self.chain.line.filled, effect)
+        return SectionFacts(self.chain.settings, self.chain.line.filled, effect, self.findings)
 
 
 def reduce_section(
@@ -264,13 +269,14 @@ def _prepare(survey: SurveyInput) -> PreparedSection:
     names = sorted({name for source in declared for name in source.applies_to})
     inputs = layouts(file, points, chain.line, names)
     noise = _noise_draws(declared, inputs, seed=file.uncertainty.seed)
-    outer_noise = _outer_noise(chain, nominal, noise)
-    terms = section_terms(chain, nominal, line=line, usable=usable, noise=noise, noise_share=outer_noise.share)
+    share = _shown_share(chain, nominal, noise)
+    terms = section_terms(chain, nominal, line=line, usable=usable, noise=noise, noise_share=share)
     notes = section_notes(survey, chain, nominal, drag, state, usable)
-    notes += outer_noise.notes()
+    findings = section_findings(chain, nominal, usable, declared, inputs, seed=file.uncertainty.seed)
+    notes += findings.notes
     if raw is not None:
         notes += raw_notes(raw, chain, nominal)
-    return PreparedSection(chain, nominal, state, usable, drag, declared, inputs, noise, terms, tuple(notes))
+    return PreparedSection(chain, nominal, state, usable, drag, declared, inputs, noise, findings, terms, tuple(notes))
 
 
 def _noise_draws(
@@ -285,43 +291,21 @@ def _noise_draws(
     return tuple({name: array[k] for name, array in drawn.items()} for k in range(_NOISE_DRAWS))
 
 
-@dataclass(frozen=True)
-class _OuterNoise:
-    """Point-to-point noise beside the wake, as the data show it and as the sources say, both in `unit`."""
-
-    shown: float
-    declared: float
-    unit: str
-
-    @property
-    def share(self) -> float:
-        """Which share of the declared variance the data show, 1 where either is unknown."""
-        ratio = self.shown / self.declared if self.declared > 0 else math.nan
-        return 1.0 if math.isnan(ratio) else min(ratio**2, 1.0)
-
-    def notes(self) -> list[str]:
-        """What is to be said where the two differ."""
-        if not self.declared > 0 or not max(self.shown, self.declared) > 1.5 * min(self.shown, self.declared):
-            return []
-        return [
-            f"The point-to-point noise beside the wake ({self.shown:.3g} {self.unit}) is not the declared one"
-            f" ({self.declared:.3g} {self.unit}); check the sources."
-        ]
-
-
-def _outer_noise(chain: SectionChain, nominal: SectionReduction, noise: Sequence[Mapping[str, Array]]) -> _OuterNoise:
+def _shown_share(chain: SectionChain, nominal: SectionReduction, noise: Sequence[Mapping[str, Array]]) -> float:
+    """Which share of the declared variance the scatter beside the wake shows, 1 where either is unknown."""
     by_speed = chain.settings.primary == "velocity" and chain.settings.edge_static != "measured"
-    unit = "m/s" if by_speed else "Pa"
     outer = ~nominal.inside & ~chain.line.filled
     if not noise or np.count_nonzero(outer) < _FEWEST_OUTER:
-        return _OuterNoise(math.nan, math.nan, unit)
+        return 1.0
     held = SectionVariation(window=nominal.window)
     squares = []
     for errors in noise:
         drawn = chain.reduce(errors, vary=held)
         change = drawn.speed - nominal.speed if by_speed else drawn.loss - nominal.loss
         squares.append(np.mean(np.square(change[outer])))
-    return _OuterNoise(nominal.window.noise, math.sqrt(float(np.mean(squares))), unit)
+    declared = math.sqrt(float(np.mean(squares)))
+    ratio = nominal.window.noise / declared if declared > 0 else math.nan
+    return 1.0 if math.isnan(ratio) else min(ratio**2, 1.0)
 
 
 @dataclass(frozen=True)

@@ -1,75 +1,41 @@
-"""Which noise of the crossflow is reckoned with, and what the data say about what the survey file declares of it.
+"""Which noise of the crossflow is reckoned with, and what a plane's data say about what the survey file declares of it.
 
 Declared noise is used where there is any; what the data show stands in where there is none, and is called so. Where the
-two disagree, in size or in that neighbouring points share what the file gives to each point alone, a note says so: one
-of the two is wrong, and nothing is changed on the data's word alone.
+two disagree the check `declared_noise` says so (`wakeledger.run.uncertainty.channel_noise`).
 """
 
 from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from types import MappingProxyType
 
 import numpy as np
+from numpy.typing import NDArray
 
 from wakeledger.confidence.local_noise import local_noise
 from wakeledger.confidence.noise import estimate_noise
-from wakeledger.confidence.sampling import SourceErrors
+from wakeledger.confidence.revisits import Visits, sort_visits
 from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.core.grid import Array
+from wakeledger.core.points import Points
 from wakeledger.intake.gridding import Gridding
+from wakeledger.intake.gridding.duplicates import place_labels
 from wakeledger.intake.gridding.mirror import ON_PLANE
+from wakeledger.intake.state import absolute
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.run.chain.chain import Chain
 from wakeledger.run.chain.reduction import Reduction
+from wakeledger.run.uncertainty.channel_noise import OUTSIDE, WAKE, NoiseFindings, Shown, sums_factor
 from wakeledger.run.uncertainty.noise import Noise, declared_noise, white_noise
+from wakeledger.run.uncertainty.noise_comparison import Recording, compare_noise
 
-#: Factor between shown and declared noise from which on it is told.
-FACTOR = 1.5
-#: Standard errors of what is shown that are allowed for beside it.
-_ERRORS = 3.0
-#: Channels of the flow state that are looked at, their names in sentences and their units.
-_CHANNELS = {"v": ("v", "m/s"), "w": ("w", "m/s"), "total_pressure": ("total pressure", "Pa")}
-#: Draws of each source for the size of what is declared.
-_DRAWS = 8
 #: Draws of noise fields where the points do not stand on lines.
 _FIELDS = 16
 #: Points that the neighbours of a scattered point speak for: its noise estimates overlap.
 _SHARED = 8
 
-
-@dataclass(frozen=True)
-class Shown:
-    """Noise of one channel as the data outside the wake show it.
-
-    Attributes
-    ----------
-    deviation : float
-        Standard deviation of one point, in the channel's unit; NaN where it cannot be had.
-    lengths : (float, float)
-        Length along z and y over which neighbours share it, m; NaN where they do not, or where that is not told.
-    size : float
-        Number of independent values that would fix the deviation equally well.
-    """
-
-    deviation: float
-    lengths: tuple[float, float]
-    size: float
-
-    @property
-    def length(self) -> float:
-        """The larger of the two lengths, m; NaN where neighbours share nothing."""
-        known = [length for length in self.lengths if math.isfinite(length)]
-        return max(known, default=math.nan)
-
-
-@dataclass(frozen=True)
-class _Declared:
-    """Declared noise of one channel: of each point alone, and whether any is shared by neighbours."""
-
-    white: float
-    shared: bool
+_NO_ERRORS: Mapping[str, Array] = MappingProxyType({})
 
 
 def crossflow_noises(
@@ -79,8 +45,8 @@ def crossflow_noises(
     layouts: Mapping[str, InputLayout],
     *,
     seed: int,
-) -> tuple[tuple[Noise, ...], list[str]]:
-    """Noise of the crossflow that is reckoned with, and notes on what the data say about it.
+) -> tuple[tuple[Noise, ...], NoiseFindings, list[str]]:
+    """Noise of the crossflow that is reckoned with, and what the data say about it.
 
     Parameters
     ----------
@@ -97,27 +63,45 @@ def crossflow_noises(
     -------
     noises : tuple of Noise
         As declared, else as the data show it; empty where neither tells.
+    findings : NoiseFindings
+        Shown and declared noise of every channel that was measured.
     notes : list of str
     """
+    findings = plane_findings(chain, nominal, sources, layouts, seed=seed)
+    notes = [] if chain.settings.computed else list(findings.notes)
     if not chain.settings.crossflow:
-        return (), []
+        return (), findings, notes
     noises = declared_noise(chain, nominal, sources, layouts, seed=seed)
-    shown = shown_noise(chain, nominal)
-    v, w = (shown[name].deviation for name in "vw")
-    if not math.isfinite(v + w):
-        if noises:
-            return noises, ["The noise of the crossflow cannot be estimated: too little outer flow is left."]
-        return (), ["The noise of the crossflow is unknown, so its bias was not subtracted from the induced drag."]
-    notes = disagreements(shown, _declared(chain, nominal, sources, layouts, seed=seed), crossflow=bool(noises))
     if noises:
-        return noises, notes
+        return noises, findings, notes
+    (v, by), (w, _) = (findings[name].best() for name in "vw")
+    if chain.empty is not None:
+        # What is taken out of the crossflow brings its own noise.
+        skip = _skipped(chain, nominal)
+        v, w = (estimate_noise(field, mask=skip).standard_deviation for field in (nominal.flow.v, nominal.flow.w))
+        by = "the data"
+    if not math.isfinite(v + w):
+        unknown = "The noise of the crossflow is unknown, so its bias was not subtracted from the induced drag."
+        return (), findings, [unknown, *notes]
     found = f"v {v:.3g} m/s, w {w:.3g} m/s"
-    said = f"No noise of the crossflow was declared; its bias was subtracted with what the data show ({found})."
-    return (_from_data(chain, v, w, seed=seed),), [said, *notes]
+    said = f"No noise of the crossflow was declared; its bias was subtracted with what {by} show ({found})."
+    return (_from_data(chain, v, w, seed=seed),), findings, [said, *notes]
+
+
+def plane_findings(
+    chain: Chain,
+    nominal: Reduction,
+    sources: Sequence[Source],
+    layouts: Mapping[str, InputLayout],
+    *,
+    seed: int,
+) -> NoiseFindings:
+    """Declared noise of every measured channel of a plane beside what the data show; as `crossflow_noises`."""
+    return compare_noise(_recording(chain, nominal), sources, layouts, seed=seed)
 
 
 def shown_noise(chain: Chain, nominal: Reduction) -> dict[str, Shown]:
-    """Noise of v, w and total pressure in the flow outside the wake.
+    """Noise of every measured channel in the flow outside the wake, by its neighbours.
 
     Parameters
     ----------
@@ -132,33 +116,152 @@ def shown_noise(chain: Chain, nominal: Reduction) -> dict[str, Shown]:
         From differences along rows and columns where the points stand evenly, with the length over which neighbours
         share it; else from each point's nearest neighbours, which do not tell a length.
     """
-    grid, mask = nominal.flow.grid, nominal.region.mask
+    return dict(_recording(chain, nominal).shown)
+
+
+def measured_channels(chain: Chain, nominal: Reduction, errors: Mapping[str, Array] = _NO_ERRORS) -> dict[str, Array]:
+    """The channels whose noise is looked at, at the points, as the flow state has them.
+
+    Parameters
+    ----------
+    chain : Chain
+        The survey.
+    nominal : Reduction
+        Its reduction; the reference is held.
+    errors : mapping of str to ndarray
+        Errors of the inputs.
+
+    Returns
+    -------
+    dict of str to ndarray, shape (n,)
+        The crossflow where the flow's direction was measured; pressures that were measured, of hole pressures those
+        that they come to; u as measured, even where it follows from the pressures.
+    """
+    state, reference = chain.state(nominal.reference, errors), nominal.reference
+    channels, raw = chain.points.channels, chain.traverse is not None
+    found: dict[str, Array | None] = {}
+    along = "uvw"[int(np.argmax(np.abs(chain.points.axes[0])))]
+    if not raw and chain.settings.primary == "velocity":
+        found["u"] = state.u
+    elif not raw and along in channels:
+        values = channels[along].values + errors.get(f"plane.{along}", 0.0)
+        found["u"] = absolute(values, channels[along], reference)
+    if chain.settings.crossflow:
+        found |= {"v": state.v, "w": state.w}
+    for name in ("total_pressure", "static_pressure"):
+        if raw or name in channels:
+            found[name] = getattr(state, name)
+    shape = (chain.points.n,)
+    return {name: np.broadcast_to(values, shape) for name, values in found.items() if values is not None}
+
+
+def _recording(chain: Chain, nominal: Reduction) -> Recording:
+    values = measured_channels(chain, nominal)
+    wake = _inside(chain, nominal)
+    usable = np.isfinite(chain.state(nominal.reference).u)
+    place = place_labels(chain.points.y, chain.points.z)
+    idle = frozenset({"u"}) if chain.settings.primary != "velocity" else frozenset()
+    reference = nominal.reference
     if chain.gridding.kind == "uniform":
-        skip = mask | chain.gridding.filled | _twins(chain.gridding)
-        found = {}
-        for name in _CHANNELS:
-            estimate = estimate_noise(getattr(nominal.flow, name), mask=skip)
-            along_z, along_y = estimate.correlation_length_cells
-            found[name] = Shown(
-                estimate.standard_deviation, (along_z * grid.dz, along_y * grid.dy), estimate.effective_size
-            )
-        return found
-    state = chain.state(nominal.reference)
-    usable = np.isfinite(state.u) & ~_inside(chain, nominal)
+        shown, chosen = _along_lines(chain, nominal, values), ~_skipped(chain, nominal)
+
+        def seen(name: str, errors: Array) -> Array:
+            return np.asarray(chain.gridding.apply(errors, odd=chain.gridding.is_odd(name))[..., chosen])
+    else:
+        alone = np.zeros(usable.size, dtype=bool)
+        alone[np.unique(place, return_index=True)[1]] = True
+        alone &= usable & ~wake
+        shown = _by_neighbours(chain, values, alone)
+
+        def seen(name: str, errors: Array) -> Array:
+            return np.asarray(errors[:, alone])
+
+    visits, clock = visits_of(chain.points, np.where(_one_tube(chain) & usable, place, -1))
+    return Recording(
+        values=lambda errors: measured_channels(chain, nominal, errors),
+        shown=shown,
+        seen=seen,
+        visits={OUTSIDE: part_of(visits, ~wake), WAKE: part_of(visits, wake)},
+        clock=clock,
+        pressure_per_speed=reference.density * reference.speed,
+        idle=idle,
+    )
+
+
+def visits_of(points: Points, place: NDArray[np.int64]) -> tuple[Visits, Array]:
+    """Which points repeat each other, and when each was taken.
+
+    Parameters
+    ----------
+    points : Points
+        The points as read, in the order in which they were taken unless they have a time.
+    place : ndarray of int, shape (n,)
+        Place of each; −1 leaves a point out.
+
+    Returns
+    -------
+    visits : Visits
+        Copies of a line, alike in every channel, are no visits.
+    clock : ndarray, shape (n,)
+        Time, s, or the number of the point.
+    """
+    channel = points.channels.get("time")
+    clock = np.arange(points.n, dtype=float)
+    if channel is not None and np.isfinite(channel.values).all():
+        clock = channel.values
+    if np.unique(place[place >= 0]).size == np.count_nonzero(place >= 0):
+        nowhere = np.full(points.n, -1, dtype=np.int64)
+        return Visits(nowhere, nowhere), clock
+    columns = [place, *(each.values for name, each in points.channels.items() if name != "time")]
+    _, first = np.unique(np.column_stack(columns), axis=0, return_index=True)
+    own = np.zeros(points.n, dtype=bool)
+    own[first] = True
+    order = np.argsort(clock, kind="stable")
+    visits = sort_visits(place + 1, order)
+    kept = own & (place >= 0)
+    return part_of(visits, kept), clock
+
+
+def part_of(visits: Visits, kept: NDArray[np.bool_]) -> Visits:
+    """Those visits only whose points are kept."""
+    return Visits(np.where(kept, visits.again, -1), np.where(kept, visits.once, -1))
+
+
+def _one_tube(chain: Chain) -> NDArray[np.bool_]:
+    """Points of the first of several tubes, whose readings at one place are not those of the others."""
+    tubes = () if chain.traverse is None else chain.traverse.tubes
+    taken = None if len(tubes) < 2 else tubes[0].points
+    every = np.arange(chain.points.n)
+    return np.asarray(every >= 0 if taken is None else np.isin(every, taken))
+
+
+def _along_lines(chain: Chain, nominal: Reduction, values: Mapping[str, Array]) -> dict[str, Shown]:
+    gridding, skip = chain.gridding, _skipped(chain, nominal)
+    spacing = np.array([gridding.grid.dz, gridding.grid.dy])
+    found = {}
+    for name, channel in values.items():
+        estimate = estimate_noise(gridding.apply(channel, odd=gridding.is_odd(name)), mask=skip)
+        cells = estimate.correlation_length_cells
+        along_z, along_y = (float(length) for length in np.array(cells) * spacing)
+        found[name] = Shown(
+            estimate.standard_deviation, (along_z, along_y), estimate.effective_size, sums_factor(cells)
+        )
+    return found
+
+
+def _by_neighbours(chain: Chain, values: Mapping[str, Array], chosen: NDArray[np.bool_]) -> dict[str, Shown]:
+    if not values:
+        return {}
     places = np.stack([chain.points.y, chain.points.z], axis=1) / np.asarray(chain.gridding.raw_spacing)
-    _, first = np.unique(np.round(places, 3), axis=0, return_index=True)
-    alone = np.zeros(usable.size, dtype=bool)
-    alone[first] = True
-    chosen = usable & alone
-    values = []
-    for name in _CHANNELS:
-        channel = getattr(state, name)
-        values.append(np.zeros(usable.size) if channel is None else np.broadcast_to(channel, usable.shape))
-    deviations = local_noise(places[chosen], np.stack(values)[:, chosen])
-    size = float(chosen.sum()) / _SHARED
-    return {
-        name: Shown(float(one), (math.nan, math.nan), size) for name, one in zip(_CHANNELS, deviations, strict=True)
-    }
+    deviations = local_noise(places[chosen], np.stack([np.asarray(one)[chosen] for one in values.values()]))
+    size, unknown = float(chosen.sum()) / _SHARED, (math.nan, math.nan)
+    return {name: Shown(float(one), unknown, size) for name, one in zip(values, deviations, strict=True)}
+
+
+def _skipped(chain: Chain, nominal: Reduction) -> Mask:
+    """Places that do not show the noise: those of the wake, filled ones, and the mirrored half."""
+    skipped: Mask = nominal.region.mask | chain.gridding.filled | _twins(chain.gridding)
+    return skipped
 
 
 def _twins(gridding: Gridding) -> Mask:
@@ -171,83 +274,12 @@ def _twins(gridding: Gridding) -> Mask:
     return np.broadcast_to(grid.z[:, None] <= ON_PLANE * grid.dz, grid.shape)
 
 
-def disagreements(shown: Mapping[str, Shown], declared: Mapping[str, _Declared], *, crossflow: bool) -> list[str]:
-    """Sentences about declared noise that is not what the data show.
-
-    Parameters
-    ----------
-    shown : mapping of str to Shown
-        By channel.
-    declared : mapping of str to _Declared
-        The same.
-    crossflow : bool
-        Whether noise of the crossflow was declared at all.
-
-    Returns
-    -------
-    list of str
-    """
-    wrong, together = [], []
-    for name, (words, unit) in _CHANNELS.items():
-        found, said = shown[name], declared[name]
-        if not math.isfinite(found.deviation) or (name in "vw" and not crossflow):
-            continue
-        if said.white > 0 and _far(found, said.white):
-            wrong.append(f"{words} {found.deviation:.3g} {unit}, declared {said.white:.3g} {unit}")
-        if said.white > 0 and not said.shared and math.isfinite(found.length):
-            together.append(f"{words} over about {1e3 * found.length:.2g} mm")
-    notes = []
-    if wrong:
-        notes.append(
-            f"The point-to-point noise shown by the data is not the declared one ({'; '.join(wrong)}); check the"
-            " sources."
-        )
-    if together:
-        notes.append(
-            f"Neighbouring points share their noise ({'; '.join(together)}), which the survey file declares for each"
-            ' point alone: give the source a correlation_length, or effect = "per_row".'
-        )
-    return notes
-
-
-def _far(found: Shown, said: float) -> bool:
-    """Whether shown noise is off the declared by the factor that is told, beyond its own standard error."""
-    allowed = math.log(FACTOR) + _ERRORS / math.sqrt(2 * max(found.size, 1.0))
-    # What is shown may be nothing at all, of exact data.
-    return abs(math.log(max(found.deviation, 1e-12 * said) / said)) > allowed
-
-
-def _declared(
-    chain: Chain, nominal: Reduction, sources: Sequence[Source], layouts: Mapping[str, InputLayout], *, seed: int
-) -> dict[str, _Declared]:
-    """What the sources put on each channel of the flow state, root mean square over the points outside the wake."""
-    still = chain.state(nominal.reference)
-    outside = ~_inside(chain, nominal)
-    white, shared = dict.fromkeys(_CHANNELS, 0.0), dict.fromkeys(_CHANNELS, False)
-    for source in sources:
-        if source.effect == "systematic":
-            continue
-        drawn = SourceErrors(source, layouts, seed=seed).draw(0, _DRAWS)
-        states = [chain.state(nominal.reference, {name: one[k] for name, one in drawn.items()}) for k in range(_DRAWS)]
-        alone = source.effect == "random" and source.correlation_length is None
-        for name in _CHANNELS:
-            if getattr(still, name) is None:
-                continue
-            errors = np.stack([getattr(state, name) - getattr(still, name) for state in states])[:, outside]
-            square = float(np.mean(np.square(errors[np.isfinite(errors)]))) if np.isfinite(errors).any() else 0.0
-            if alone:
-                white[name] += square
-            elif square > 0:
-                shared[name] = True
-    return {name: _Declared(math.sqrt(white[name]), shared[name]) for name in _CHANNELS}
-
-
-def _inside(chain: Chain, nominal: Reduction) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+def _inside(chain: Chain, nominal: Reduction) -> NDArray[np.bool_]:
     """Whether each point lies in the wake region, by the nearest place of the grid."""
     grid = nominal.flow.grid
     iz = np.clip(np.rint((chain.points.z - grid.z0) / grid.dz).astype(int), 0, grid.nz - 1)
     iy = np.clip(np.rint((chain.points.y - grid.y0) / grid.dy).astype(int), 0, grid.ny - 1)
-    inside: np.ndarray[tuple[int], np.dtype[np.bool_]] = nominal.region.mask[iz, iy]
+    inside: NDArray[np.bool_] = nominal.region.mask[iz, iy]
     return inside
 
 
