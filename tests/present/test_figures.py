@@ -47,7 +47,6 @@ def test_maps_are_seen_from_behind_in_equal_scale_with_units(drawn, ledger, name
     assert labels(axes) == ("y to starboard, m (seen from behind)", "z up, m")
     image = image_of(drawn[name])
     assert image.origin == "lower"
-    assert image.get_rasterized()
     # Each cell is drawn around its own point: the edges lie half a cell outside the outermost points.
     assert image.get_extent() == pytest.approx([-0.755, 0.755, -0.305, 0.305], rel=1e-9)
     bar = drawn[name].axes[1]
@@ -58,6 +57,43 @@ def test_diverging_colours_are_centred_at_zero(drawn):
     for name in ("axial_vorticity", "axial_velocity"):
         low, high = image_of(drawn[name]).get_clim()
         assert low == -high < 0
+
+
+def test_cells_of_a_map_are_pixels_of_its_file(drawn, ledger):
+    """The file holds one pixel a cell, in the colour of its value; the viewer enlarges them without smoothing."""
+    import base64
+    import re
+
+    from PIL import Image
+
+    svg = figures.figure_bytes(drawn["axial_vorticity"], "svg").decode()
+    (found,) = re.findall(r'<image[^>]*href="data:image/png;base64,([^"]*)"[^>]*image-rendering:[^>]*pixelated', svg)
+    with Image.open(io.BytesIO(base64.b64decode(found))) as file:
+        pixels = np.asarray(file.convert("RGBA"))
+    assert pixels.shape[:2] == ledger.plane["axial_vorticity"].shape
+    image = image_of(drawn["axial_vorticity"])
+    expected = np.round(255 * image.cmap(image.norm(ledger.plane["axial_vorticity"].values)))
+    # The first row of pixels is the lowest, the file turns the image over; colours are rounded once more on their way.
+    assert re.search(r'<image[^>]*transform="scale\(1 -1\)[^"]*"[^>]*/?>', svg)
+    assert np.abs(pixels.astype(float) - expected).max() <= 1
+
+
+def test_the_longest_arrows_are_cut_and_keep_their_direction(ledger):
+    from matplotlib.quiver import Quiver, QuiverKey
+
+    plane = ledger.plane.copy(deep=True)
+    # Two of the places that have an arrow.
+    plane["v"][12, 2:12:5] = 3e3
+    plane["w"][12, 2:12:5] = -4e3
+    axes = figures.vorticity_map(dataclasses.replace(ledger, plane=plane)).axes[0]
+    (arrows,) = (child for child in axes.get_children() if isinstance(child, Quiver))
+    length = np.hypot(arrows.U, arrows.V)
+    (shown,) = (child for child in axes.get_children() if isinstance(child, QuiverKey))
+    key = float(shown.label.split()[0])
+    assert length.max() == pytest.approx(2 * key, rel=1e-12)
+    longest = np.isclose(length, 2 * key)
+    assert longest.sum() == 2
+    assert np.allclose(arrows.V[longest] / arrows.U[longest], -4 / 3, rtol=1e-12)
 
 
 def test_maps_show_the_fields_unflipped(drawn, ledger):

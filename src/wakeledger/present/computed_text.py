@@ -118,7 +118,7 @@ def closure_table(ledger: Ledger) -> Table:
 
     lines = [line for line in closure_lines(ledger) if line.difference]
     table = new_table(
-        ("far field − near field", "left"), ("difference ± U95", "left"), ("", "left"), ("E_n", "right"),
+        ("", "left"), ("difference ± U95", "left"), ("", "left"), ("E_n", "right"),
         ("verdict", "left"),
     )  # fmt: skip
     pairs = joined([(line.difference, line.expanded if line.expanded != "–" else UNKNOWN) for line in lines])

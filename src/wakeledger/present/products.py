@@ -127,7 +127,7 @@ def _is_figure(name: str) -> bool:
 def _draw_ledger(ledger: Ledger, every: bool) -> Figures:
     from wakeledger.present import figures
 
-    return figures.draw(ledger, most_planes=None) if every else figures.draw(ledger)
+    return figures.draw(ledger, every=every)
 
 
 def _ledger_texts(ledger: Ledger, drawn: Figures) -> Sequence[str]:

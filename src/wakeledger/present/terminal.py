@@ -283,7 +283,7 @@ def _closures(console: Console, ledger: Ledger) -> None:
     """Far field less near field, and what is known to make them differ."""
     if not ledger.closures:
         return
-    section(console, "Far field against near field, and what makes them differ")
+    section(console, "Far field less near field, and what makes them differ")
     console.print(closure_table(ledger))
     for sentence in closure_notes(ledger):
         bullet(console, sentence)

@@ -70,7 +70,8 @@ OF_PLANE: dict[str, Drawing[Ledger]] = {
     "axial_vorticity": Drawing(
         maps.vorticity_map,
         _in_plane("axial_vorticity", "v", "w"),
-        "Axial vorticity with arrows of the crossflow. Counter-clockwise is positive; the colours are centred at zero.",
+        "Axial vorticity with arrows of the crossflow, cut at twice the length of the one in the key. "
+        "Counter-clockwise is positive; the colours are centred at zero.",
     ),
     "axial_velocity": Drawing(
         maps.axial_velocity_map, _in_plane("u"), "Velocity along the stream as a part of the stream's speed."
@@ -94,15 +95,15 @@ def planes_of(ledger: Ledger) -> tuple[Ledger, ...]:
     return ledger.stations or (ledger,)
 
 
-def planes_drawn(ledger: Ledger, most: int | None = MOST_PLANES) -> tuple[int, ...]:
+def planes_drawn(ledger: Ledger, *, every: bool = False) -> tuple[int, ...]:
     """Which of a ledger's planes are drawn.
 
     Parameters
     ----------
     ledger : Ledger
         The ledger.
-    most : int or None
-        How many at the most; None for all.
+    every : bool
+        Whether more than `MOST_PLANES` are.
 
     Returns
     -------
@@ -110,7 +111,7 @@ def planes_drawn(ledger: Ledger, most: int | None = MOST_PLANES) -> tuple[int, .
         Numbers from 0, the first and the last plane among them.
     """
     count = len(planes_of(ledger))
-    shown = count if most is None else min(count, most)
+    shown = count if every else min(count, MOST_PLANES)
     return tuple(int(k) for k in np.unique(np.linspace(0, count - 1, shown).round()))
 
 
@@ -133,15 +134,15 @@ def name_in(ledger: Ledger, name: str, number: int) -> str:
     return f"{name}_plane_{number + 1}" if ledger.stations else name
 
 
-def draw(ledger: Ledger, *, most_planes: int | None = MOST_PLANES) -> dict[str, Figure]:
+def draw(ledger: Ledger, *, every: bool = False) -> dict[str, Figure]:
     """Every figure the ledger has what is needed for.
 
     Parameters
     ----------
     ledger : Ledger
         The ledger.
-    most_planes : int or None
-        How many planes of several stations are drawn at the most; None for all.
+    every : bool
+        Whether more than `MOST_PLANES` planes are drawn.
 
     Returns
     -------
@@ -150,6 +151,6 @@ def draw(ledger: Ledger, *, most_planes: int | None = MOST_PLANES) -> dict[str, 
     """
     planes = planes_of(ledger)
     found = drawn(OF_LEDGER, ledger)
-    for k in planes_drawn(ledger, most_planes):
+    for k in planes_drawn(ledger, every=every):
         found |= {name_in(ledger, name, k): figure for name, figure in drawn(OF_PLANE, planes[k]).items()}
     return found

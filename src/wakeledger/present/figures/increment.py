@@ -256,8 +256,8 @@ DRAWINGS: dict[str, Drawing[Increment]] = {
     "vorticity_difference": Drawing(
         vorticity_difference_map,
         _in_plane("axial_vorticity", "v", "w"),
-        "Change of the axial vorticity over the stream's speed, with arrows of the change of the crossflow. "
-        "Counter-clockwise is positive; the colours are centred at zero.",
+        "Change of the axial vorticity over the stream's speed, with arrows of the change of the crossflow, cut at "
+        "twice the length of the one in the key. Counter-clockwise is positive; the colours are centred at zero.",
     ),
     "traverse_difference": Drawing(
         traverse_difference_figure, _along_line, "Loss along both traverses and its change."

@@ -28,8 +28,14 @@ HATCH = "///////"
 #: More boxes than this are drawn as pixels, so that the file stays small.
 MANY_BOXES = 500
 
+#: More cells than this are brought to the picture's pixels; fewer are kept, one pixel a cell, for viewers to enlarge.
+MANY_CELLS = 100_000
+
 #: Arrows along the longer side of the plane.
 ARROWS = 32
+
+#: Arrows are cut at so many times the length of the one in the key.
+LONGEST_ARROW = 2.0
 
 
 @dataclass(frozen=True)
@@ -158,6 +164,7 @@ def shaded(figure: Figure, axes: Axes, grid: UniformGrid, shade: Shade, title: s
     title : str
         What it is.
     """
+    many = shade.values.size > MANY_CELLS
     image = axes.imshow(
         shade.values,
         origin="lower",
@@ -170,9 +177,9 @@ def shaded(figure: Figure, axes: Axes, grid: UniformGrid, shade: Shade, title: s
         cmap=shade.colours,
         vmin=shade.lowest,
         vmax=shade.highest,
-        interpolation="nearest",
+        interpolation="nearest" if many else "none",
         aspect="equal",
-        rasterized=True,
+        rasterized=many,
     )
     bar = figure.colorbar(image, ax=axes, extend=shade.beyond, fraction=0.05, pad=0.02, shrink=0.9)
     bar.set_label(shade.label)
@@ -255,7 +262,7 @@ def hatch(axes: Axes, grid: UniformGrid, cells: NDArray[np.bool_]) -> None:
 
 
 def draw_arrows(axes: Axes, grid: UniformGrid, across: Array, up: Array, unit: str) -> None:
-    """Draw arrows of a crossflow over a plane, with their key.
+    """Draw arrows of a crossflow over a plane, with their key; the longest are cut, so that they hide no other.
 
     Parameters
     ----------
@@ -277,10 +284,12 @@ def draw_arrows(axes: Axes, grid: UniformGrid, across: Array, up: Array, unit: s
     typical = float(np.nanpercentile(np.hypot(v, w), 98))
     if not typical > 0:
         return
+    length = float(f"{typical:.0e}")
+    cut = np.minimum(1.0, LONGEST_ARROW * length / np.maximum(np.hypot(v, w), 1e-300))
+    v, w = cut * v, cut * w
     spacing = min(along_y * grid.dy, along_z * grid.dz)
     arrows = axes.quiver(
         y[some], z[some], v, w, angles="xy", scale_units="xy", scale=typical / (1.6 * spacing), color=INK,
         width=0.0016, alpha=0.85, zorder=2.5,
     )  # fmt: skip
-    length = float(f"{typical:.0e}")
     axes.quiverkey(arrows, 0.93, 1.04, length, f"{length:g} {unit}", labelpos="W", coordinates="axes")

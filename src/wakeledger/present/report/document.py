@@ -104,7 +104,8 @@ def _not_drawn(ledger: Ledger) -> str:
     if not left:
         return ""
     return (
-        f"The planes at {', '.join(left)} are not drawn here, to keep this file small: --figures writes the maps of all"
+        f"The {'plane' if len(left) == 1 else 'planes'} at {', '.join(left)} {'is' if len(left) == 1 else 'are'}"
+        " not drawn here, to keep this file small: --figures writes the maps of all"
         " planes, and the archive holds their fields."
     )
 
