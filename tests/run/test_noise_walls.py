@@ -16,6 +16,7 @@ from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.outer_flow import induced_crossflow
 from wakeledger.physics.methods.residual import divergence_drag
 from wakeledger.physics.methods.vorticity_area import vorticity_forces
+from wakeledger.physics.methods.wake_line import find_cuts
 from wakeledger.run.chain.estimates import on_frozen_geometry
 from wakeledger.run.load import load
 from wakeledger.run.prepared import prepare
@@ -113,11 +114,29 @@ def test_bias_holds_the_share_of_the_walls(prepared):
     chain, nominal = prepared.chain, prepared.nominal
     expected = expected_bias(chain, nominal)
     found = noise_bias(chain, nominal, (white_noise("noise", SIGMA["v"], SIGMA["w"]),))
-    # The modes of the walls are good to 1e-6 of their largest, the window's own solve to rounding.
+    # The walls respond by a few modes, which leaves 4e-4 where the wake reaches up to them.
     for name in ("induced_drag", "induced_drag_free_air", "residual_drag"):
-        assert found[name] == pytest.approx(expected[name], rel=2e-4)
+        assert found[name] == pytest.approx(expected[name], rel=1e-3)
     # Leaving the walls out fails by far.
     assert abs(expected["induced_drag"] / expected["induced_drag_free_air"] - 1) > 0.05
-    # What the walls add to the noise of the cells and of the paths themselves is left out: measured below 0.5 %.
-    for name in {LINE, VORTICES} & set(found):
-        assert found[name] == pytest.approx(expected[name], rel=1e-2)
+    if VORTICES in found:
+        # What the walls' own noise does to the cells is left out.
+        assert found[VORTICES] == pytest.approx(expected[VORTICES], rel=5e-3)
+
+
+@pytest.mark.parametrize("prepared", ["whole, closed"], indirect=True)
+def test_bias_of_the_wake_line_holds_it_too(prepared):
+    chain, nominal = prepared.chain, prepared.nominal
+    grid, flow = nominal.flow.grid, nominal.flow
+    yy, zz = grid.mesh()
+    # A region that closed lines can surround; what the wake itself is does not matter to what noise adds.
+    mask = (np.abs(yy) < 0.5) & (np.abs(zz - 0.04) < 0.14)
+    cuts = find_cuts(flow.v, flow.w, grid, mask=mask, trace=False)
+    nominal = replace(nominal, region=replace(nominal.region, mask=mask))
+    chain = replace(chain, frozen=replace(chain.frozen, cuts=cuts))
+    expected = expected_bias(chain, nominal)
+    found = noise_bias(chain, nominal, (white_noise("noise", SIGMA["v"], SIGMA["w"]),))
+    walls = expected["induced_drag"] - expected["induced_drag_free_air"]
+    # What the walls' own noise does to the paths is left out.
+    assert found[LINE] == pytest.approx(expected[LINE], rel=1e-2)
+    assert abs(walls) > 0.03 * expected[LINE]

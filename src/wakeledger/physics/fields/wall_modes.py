@@ -20,8 +20,9 @@ from wakeledger.physics.fields.wall_correction import wall_part
 #: Modes tried; the last number is taken as it comes where the wake reaches up to a wall.
 _RANKS = (24, 48, 96)
 #: A probe field's energy beside the walls is met to this part of the largest.
-_TOLERANCE = 1e-6
+_TOLERANCE = 1e-8
 _PROBES = 4
+_LEAST = 1e-13
 
 
 def wall_modes(
@@ -82,7 +83,7 @@ def wall_modes(
         left = at_probes - (vectors * values) @ (vectors.T @ probes)
         if np.abs(left).max() < _TOLERANCE * np.abs(at_probes).max() or range_of.shape[1] == held.size:
             break
-    kept = np.abs(values) > _TOLERANCE**2 * np.abs(values).max()
+    kept = np.abs(values) > _LEAST * np.abs(values).max()
     modes = np.zeros((int(kept.sum()), grid.nz * grid.ny))
     modes[:, held] = vectors[:, kept].T
     return values[kept], modes.reshape(-1, *grid.shape)
