@@ -4,9 +4,9 @@ One pass forwards gives the plane, one pass backwards the derivative of each out
 
     output → plane → (swirl, zero, empty tunnel, relations) → gridded state → points → channels.
 
-Each step is the transpose of the chain's own. The last one, from the state of a point to what was measured there, acts
-on each point alone, so that the chain's own state, shifted by a small step at all points at once, gives all its
-derivatives. What acts on the survey as a whole through the reference state is differenced by whole passes.
+Each step is the transpose of the chain's own. The last one, from the state of a point to what was measured there, is in
+`wakeledger.run.chain.adjoint_state`. What acts on the survey as a whole through the reference state is differenced by
+whole passes.
 """
 
 from __future__ import annotations
@@ -21,7 +21,6 @@ import numpy as np
 from wakeledger.confidence.sources import InputLayout
 from wakeledger.core.grid import Array
 from wakeledger.intake.probe.traverse import correction_input
-from wakeledger.intake.state import State
 from wakeledger.physics.fields.boundary import ClosedWalls, FreeAir
 from wakeledger.physics.fields.flow import Flow
 from wakeledger.physics.methods import gradients
@@ -30,14 +29,19 @@ from wakeledger.physics.methods.vorticity_area import own_share
 from wakeledger.physics.methods.wake_line import sensitivity as wake_line_sensitivity
 from wakeledger.physics.vortices.vortex_sum import sensitivities as vortex_sum_sensitivities
 from wakeledger.run.chain.adjoint_plane import (
+    AxialChange,
     Gradient,
+    SpeedChange,
     before_empty_tunnel,
     before_relations,
     before_swirl,
     before_zero,
     crossflow_functional,
+    pressure_speed,
     swirl_gradient,
+    zero_speed,
 )
+from wakeledger.run.chain.adjoint_state import StateSlopes
 from wakeledger.run.chain.chain import Chain
 from wakeledger.run.chain.empty_tunnel import PREFIX, EmptyTunnel, _onto
 from wakeledger.run.chain.estimates import counted_mask, without_walls
@@ -56,10 +60,8 @@ FREE_AIR = FreeAir()
 _NO_ERRORS: Mapping[str, Array] = MappingProxyType({})
 #: Wake-blockage velocity, m/s, among the figures that are differentiated; the outputs hold its share of the speed.
 _BLOCKAGE = "wake blockage velocity"
-#: Step of a point's own derivative, as a share of the range of its input: errors of 1e-10 from curvature and rounding.
-_STEP = 1e-5
-#: The same for flow angles, rad, and for errors counted in standard uncertainties.
-_ANGLE_STEP, _SIGMA_STEP = 1e-5, 1e-3
+#: Points that are worked on at a time.
+_CHUNK = 4096
 
 
 @dataclass(frozen=True)
@@ -117,7 +119,7 @@ def point_gradient(
     plane = _plane(chain, nominal, errors)
     # One figure at a time stays in the processor's cache, and carries only the fields it depends on.
     with ThreadPoolExecutor(workers) as pool:
-        found = list(pool.map(lambda one: _backwards([one], chain, nominal, plane), figures.values()))
+        found = list(pool.map(lambda one: _backwards(one, chain, nominal, plane), figures.values()))
     outputs = _outputs(chain, nominal, names)
     empty = None
     if chain.empty is not None:
@@ -125,12 +127,14 @@ def point_gradient(
     return PointGradient(names, _joined([by for by, _ in found]), outputs, empty)
 
 
-def _joined(parts: Sequence[tuple[int, Gradient]]) -> Gradient:
-    """Derivatives of several groups of figures as one, from the number and the derivatives of each group."""
+def _joined(parts: Sequence[Gradient]) -> Gradient:
+    """Derivatives of figures, one by one, as one."""
     joined: Gradient = {}
-    for name in dict.fromkeys(name for _, part in parts for name in part):
-        points = next(part[name].shape[1] for _, part in parts if name in part)
-        joined[name] = np.concatenate([part.get(name, np.zeros((count, points))) for count, part in parts])
+    for k, part in enumerate(parts):
+        for name, by in part.items():
+            if name not in joined:
+                joined[name] = np.zeros((len(parts), by.shape[-1]))
+            joined[name][k] = by[0]
     return joined
 
 
@@ -146,6 +150,10 @@ class _Plane:
         The same before the empty tunnel was taken out.
     swirl : (ndarray, ndarray) or None
         Derivatives of the stream's swirl by the crossflow.
+    zeroing : SpeedChange or None
+        What the zero did to the speed.
+    axial : AxialChange or None
+        How u followed from the pressures.
     stream : Reference or None
         Of the survey of the empty tunnel.
     empty : Flow or None
@@ -155,6 +163,8 @@ class _Plane:
     before: Flow
     with_stream: Flow
     swirl: tuple[Array, Array] | None
+    zeroing: SpeedChange | None
+    axial: AxialChange | None
     stream: Reference | None = None
     empty: Flow | None = None
 
@@ -162,30 +172,36 @@ class _Plane:
 def _plane(chain: Chain, nominal: Reduction, errors: Mapping[str, Array]) -> _Plane:
     before = chain.flow(nominal.reference, errors)
     swirl = swirl_gradient(chain, nominal.flow, nominal.region.mask) if chain.swirls else None
+    zeroing = zero_speed(chain, nominal.reference, before, zero=nominal.loss_zero)
     if chain.empty is None:
-        return _Plane(before, before, swirl)
+        return _Plane(before, before, swirl, zeroing, pressure_speed(chain, nominal.reference, before))
     own = chain.empty.chain
     theirs = {name.removeprefix(PREFIX): array for name, array in errors.items() if name.startswith(PREFIX)}
     stream = own.reference(theirs)
     with_stream = replace(chain, empty=None).flow(nominal.reference, errors)
-    return _Plane(before, with_stream, swirl, stream, own.flow(stream, theirs))
+    axial = pressure_speed(chain, nominal.reference, with_stream)
+    return _Plane(before, with_stream, swirl, zeroing, axial, stream, own.flow(stream, theirs))
 
 
-def _backwards(
-    figures: Sequence[FlowGradient], chain: Chain, nominal: Reduction, plane: _Plane
-) -> tuple[tuple[int, Gradient], tuple[int, Gradient]]:
-    """Derivatives of some figures by the state of the points, and by that of the empty tunnel's points."""
+def _backwards(figure: FlowGradient, chain: Chain, nominal: Reduction, plane: _Plane) -> tuple[Gradient, Gradient]:
+    """Derivatives of a figure by the state of the points, and by that of the empty tunnel's points."""
     reference, mask = nominal.reference, nominal.region.mask
-    gradient = _stacked(figures, nominal.flow)
+    gradient = {
+        entry.name: np.broadcast_to(np.asarray(by, float), nominal.flow.grid.shape)[None]
+        for entry in fields(FlowGradient)
+        if np.ndim(by := getattr(figure, entry.name))
+    }
     if plane.swirl is not None:
         gradient = before_swirl(gradient, chain, nominal.flow, swirl=nominal.swirl, by_crossflow=plane.swirl)
-    gradient = before_zero(gradient, chain, reference, plane.before, zero=nominal.loss_zero, mask=mask)
+    gradient = before_zero(
+        gradient, chain, reference, plane.before, zero=nominal.loss_zero, mask=mask, speed=plane.zeroing
+    )
     by_empty: Gradient = {}
     if chain.empty is not None and plane.empty is not None and plane.stream is not None:
         gradient, by_stream = before_empty_tunnel(gradient, chain, reference, plane.before)
         by_empty = _empty_gradient(chain.empty, by_stream, nominal, plane.stream, plane.empty)
-    gradient = before_relations(gradient, chain, reference, plane.with_stream)
-    return (len(figures), _to_points(gradient, chain)), (len(figures), by_empty)
+    gradient = before_relations(gradient, chain, reference, plane.with_stream, speed=plane.axial)
+    return _to_points(gradient, chain), by_empty
 
 
 def _empty_gradient(
@@ -212,15 +228,6 @@ def _to_points(gradient: Gradient, chain: Chain) -> Gradient:
         for name, by in gradient.items()
         if np.any(by)
     }
-
-
-def _stacked(found: Sequence[FlowGradient], flow: Flow) -> Gradient:
-    result: Gradient = {}
-    for entry in fields(FlowGradient):
-        parts = [getattr(one, entry.name) for one in found]
-        if any(np.ndim(part) for part in parts):
-            result[entry.name] = np.stack([np.broadcast_to(np.asarray(part, float), flow.grid.shape) for part in parts])
-    return result
 
 
 def _figures(chain: Chain, nominal: Reduction, *, estimates: bool) -> dict[str, FlowGradient]:
@@ -435,74 +442,45 @@ def input_gradients(
         The other inputs: what changes the reference state, the model or the relations on the plane.
     """
     tasks, left = {}, []
+    parts: dict[bool, StateSlopes] = {}
     for name, layout in layouts.items():
-        part, own, at = chain, name, gradient
-        if name.startswith(PREFIX) and chain.empty is not None and gradient.empty is not None:
-            part, own, at = chain.empty.chain, name.removeprefix(PREFIX), gradient.empty
+        elsewhere = name.startswith(PREFIX) and chain.empty is not None and gradient.empty is not None
+        own = name.removeprefix(PREFIX) if elsewhere else name
         room = own.split(".", 1)[0]
         through = room in ("plane", "probe", "position", "angle", "calibration", "correction")
         if not through or own == correction_input("displacement"):
             left.append(name)
             continue
-        there = errors
-        if part is not chain:
-            there = {key.removeprefix(PREFIX): array for key, array in errors.items() if key.startswith(PREFIX)}
-        tasks[name] = (part, own, at, layout, there)
+        at = gradient
+        if elsewhere and chain.empty is not None and gradient.empty is not None:
+            at = gradient.empty
+            if elsewhere not in parts:
+                there = {key.removeprefix(PREFIX): array for key, array in errors.items() if key.startswith(PREFIX)}
+                parts[elsewhere] = StateSlopes(chain.empty.chain, there)
+        elif elsewhere not in parts:
+            parts[elsewhere] = StateSlopes(chain, errors)
+        tasks[name] = (parts[elsewhere], own, at, layout)
     with ThreadPoolExecutor(workers) as pool:
         found = pool.map(lambda task: _by_input(*task), tasks.values())
         return dict(zip(tasks, found, strict=True)), tuple(left)
 
 
-def _by_input(
-    chain: Chain, name: str, gradient: PointGradient, layout: InputLayout, errors: Mapping[str, Array]
-) -> Array:
+def _by_input(slopes: StateSlopes, name: str, gradient: PointGradient, layout: InputLayout) -> Array:
     """Derivatives of the figures by one input, shape (k, n), or (k,) for a single number."""
-    reference = chain.reference(errors)
-    step = _step(name, layout)
-    here = np.asarray(errors.get(name, 0.0 if layout.is_scalar else np.zeros(layout.size)))
-    up, down = (chain.state(reference, {**errors, name: here + sign * step}) for sign in (1.0, -1.0))
-    result: Array | None = None
-    for field, by in gradient.by.items():
-        above, below = _state_field(up, field), _state_field(down, field)
-        if above is None or below is None:
-            continue
-        slope = above - below
-        if not slope.any():
-            continue
-        slope *= 0.5 / step
-        if not np.isfinite(slope.sum()):
-            # Points without a state have no weight on the plane either.
-            np.copyto(slope, 0.0, where=~np.isfinite(slope))
-        if layout.is_scalar:
-            part: Array = by @ slope
-        else:
-            part = by * slope
-        if result is None:
-            result = part
-        else:
-            result += part
-    if result is not None:
-        return result
-    return np.zeros(len(gradient.names) if layout.is_scalar else (len(gradient.names), layout.size))
-
-
-def _state_field(state: State, name: str) -> Array | None:
-    value: Array | None = getattr(state, name)
-    return value
-
-
-def _step(name: str, layout: InputLayout) -> float:
-    room = name.split(".", 1)[0]
-    if room == "angle":
-        return _ANGLE_STEP
-    if room in ("calibration", "correction"):
-        return _SIGMA_STEP
-    if room == "position":
-        return 1e-6
-    values = np.asarray(layout.nominal, float)
-    finite = values[np.isfinite(values)]
-    spread = float(np.ptp(finite)) if finite.size else 0.0
-    return _STEP * (spread or float(np.abs(finite).max(initial=0.0)) or 1.0)
+    own = slopes(name, layout, frozenset(gradient.by))
+    if layout.is_scalar:
+        return np.sum([gradient.by[field] @ slope for field, slope in own.items()], axis=0) + np.zeros(
+            len(gradient.names)
+        )
+    result = np.zeros((len(gradient.names), layout.size))
+    product = np.empty((len(gradient.names), _CHUNK))
+    # A few thousand points at a time stay in the processor's cache.
+    for start in range(0, layout.size, _CHUNK):
+        part = slice(start, min(start + _CHUNK, layout.size))
+        target, spare = result[:, part], product[:, : part.stop - start]
+        for field, slope in own.items():
+            target += np.multiply(gradient.by[field][:, part], slope[part], out=spare)
+    return result
 
 
 def scalar_gradients(

@@ -150,8 +150,89 @@ def before_swirl(
     return found
 
 
+class AxialChange:
+    """How u = √square − v² − w², `square` being that of the speed, is undone; the same for every figure.
+
+    Parameters
+    ----------
+    flow : Flow
+        The plane whose u became that.
+    square : ndarray, shape (nz, ny)
+        What u² became, m²/s².
+    """
+
+    def __init__(self, flow: Flow, square: Array) -> None:
+        self.flow, real = flow, square > 0
+        root = np.copysign(np.sqrt(np.where(real, square, 1.0)), flow.u)
+        self.share = np.where(real, 0.5 / root, 0.0)
+        self.kept = None if real.all() else ~real
+
+    def undone(self, found: Gradient) -> Array | float:
+        """Take derivatives by u to v and w, in place; gives the derivative by the square of the speed."""
+        by_u = found.pop("u", None)
+        if by_u is None:
+            return 0.0
+        by_square: Array = by_u * self.share
+        if self.kept is not None:
+            found["u"] = by_u * self.kept
+        twice = -2 * by_square
+        _added(found, "v", self.flow.v * twice)
+        _added(found, "w", self.flow.w * twice)
+        return by_square
+
+
+class SpeedChange:
+    """How the change of a plane's speed to a given square is undone; the same for every figure.
+
+    Parameters
+    ----------
+    flow : Flow
+        The plane before.
+    square : ndarray, shape (nz, ny)
+        Square of its speed afterwards, m²/s².
+    directed : bool
+        Whether the direction was kept, rather than v and w.
+    """
+
+    def __init__(self, flow: Flow, square: Array, *, directed: bool) -> None:
+        self.flow, crossflow = flow, flow.v**2 + flow.w**2
+        self.axial = None if directed else AxialChange(flow, square - crossflow)
+        if directed:
+            before, real = flow.u**2 + crossflow, square > 0
+            self.factor = np.sqrt(np.where(real, square, 0.0) / before)
+            self.per_square = np.where(real, 0.5 * self.factor / np.where(real, square, 1.0), 0.0)
+            self.per_speed = self.factor / before
+
+    def undone(self, gradient: Gradient) -> tuple[Gradient, Array | float]:
+        """Derivatives by the plane before, and by the square."""
+        found, flow = dict(gradient), self.flow
+        if self.axial is not None:
+            return found, self.axial.undone(found)
+        given = [name for name in "uvw" if name in found]
+        if not given:
+            return found, 0.0
+        by_factor: Array = found[given[0]] * getattr(flow, given[0])
+        for name in given[1:]:
+            by_factor += found[name] * getattr(flow, name)
+        by_square = by_factor * self.per_square
+        by_factor *= -self.per_speed
+        for name in "uvw":
+            along = by_factor * getattr(flow, name)
+            if name in found:
+                along += found[name] * self.factor
+            found[name] = along
+        return found, by_square
+
+
 def before_zero(
-    gradient: Gradient, chain: Chain, reference: Reference, flow: Flow, *, zero: float, mask: Mask
+    gradient: Gradient,
+    chain: Chain,
+    reference: Reference,
+    flow: Flow,
+    *,
+    zero: float,
+    mask: Mask,
+    speed: SpeedChange | None = None,
 ) -> Gradient:
     """Derivatives by the plane before its total pressure was zeroed.
 
@@ -169,13 +250,14 @@ def before_zero(
         What was added to its total pressure, Pa.
     mask : ndarray of bool, shape (nz, ny)
         The wake region, outside which the zero was read.
+    speed : SpeedChange, optional
+        From `zero_speed`, worked out once for many figures.
 
     Returns
     -------
     dict of str to ndarray, shape (k, nz, ny)
     """
     found = dict(gradient)
-    total = flow.total_pressure + zero
     by_zero: Array | float = 0.0
     if chain.settings.primary == "velocity":
         if not reference.compressible:
@@ -183,7 +265,7 @@ def before_zero(
             if {"total_pressure", "static_pressure"} & chain.measured:
                 by_zero = by_zero + _of(found, "static_pressure")
         else:
-            raised = total / flow.total_pressure
+            raised = (flow.total_pressure + zero) / flow.total_pressure
             by_raised = _of(found, "static_pressure") * flow.static_pressure + _of(found, "density") * flow.density
             by_zero = _of(found, "total_pressure") + by_raised / flow.total_pressure
             _put(found, "total_pressure", by_zero - by_raised * raised / flow.total_pressure)
@@ -191,14 +273,15 @@ def before_zero(
                 if name in found:
                     found[name] = found[name] * raised
     elif not reference.compressible:
-        square = 2 * (total - flow.static_pressure) / reference.density
-        found, by_square = _before_speed(found, flow, square, directed=chain.directed)
+        speed = zero_speed(chain, reference, flow, zero=zero) if speed is None else speed
+        assert speed is not None
+        found, by_square = speed.undone(found)
         by_total = 2 / reference.density * by_square
         _added(found, "total_pressure", by_total)
         _added(found, "static_pressure", -by_total)
         by_zero = _of(found, "total_pressure")
     else:
-        found, by_zero = _before_hot_zero(found, chain, reference, flow, total)
+        found, by_zero = _before_hot_zero(found, chain, reference, flow, flow.total_pressure + zero)
     if _counts(by_zero):
         outer = ~mask
         if np.count_nonzero(outer) >= LEAST_SHARE * outer.size:
@@ -206,6 +289,23 @@ def before_zero(
             each = np.asarray(by_zero).sum(axis=(-2, -1)) / np.count_nonzero(outer)
             _added(found, "total_pressure", -each[:, None, None] * outer)
     return found
+
+
+def zero_speed(chain: Chain, reference: Reference, flow: Flow, *, zero: float) -> SpeedChange | None:
+    """What zeroing the total pressure did to the speed of an incompressible plane; None where it did nothing."""
+    if chain.settings.primary == "velocity" or reference.compressible:
+        return None
+    square = 2 * (flow.total_pressure + zero - flow.static_pressure) / reference.density
+    return SpeedChange(flow, square, directed=chain.directed)
+
+
+def pressure_speed(chain: Chain, reference: Reference, flow: Flow) -> AxialChange | None:
+    """How u of an incompressible plane follows from its two pressures; None where it does not."""
+    measured = chain.traverse is not None or "static_pressure" in chain.points.channels
+    if chain.settings.primary == "velocity" or reference.compressible or not measured:
+        return None
+    square = 2 * (flow.total_pressure - flow.static_pressure) / reference.density - flow.v**2 - flow.w**2
+    return AxialChange(flow, square)
 
 
 def _before_hot_zero(
@@ -220,7 +320,7 @@ def _before_hot_zero(
     temperature = flow.static_pressure / (reference.gas_constant * flow.density)
     stagnation = temperature * ratio if kept else flow.total_temperature
     square = 2 * reference.heat_capacity * stagnation * (1 - 1 / ratio)
-    found, by_square = _before_speed(found, flow, square, directed=chain.directed)
+    found, by_square = SpeedChange(flow, square, directed=chain.directed).undone(found)
     by_stagnation = _of(found, "total_temperature") + 2 * reference.heat_capacity * (1 - 1 / ratio) * by_square
     by_ratio = 2 * reference.heat_capacity * stagnation / ratio**2 * by_square
     by_total = _of(found, "total_pressure")
@@ -243,38 +343,6 @@ def _before_hot_zero(
     _added(found, "static_pressure", -by_ratio / flow.static_pressure)
     _put(found, "total_pressure", by_total + own)
     return found, np.asarray(by_total)
-
-
-def _before_speed(found: Gradient, flow: Flow, square: Array, *, directed: bool) -> tuple[Gradient, Array | float]:
-    """Derivatives by the plane before its speed was changed to a given square, and by that square."""
-    u, v, w = (_of(found, name) for name in "uvw")
-    crossflow = flow.v**2 + flow.w**2
-    found = dict(found)
-    if not directed:
-        by_square = _before_axial(found, flow, square - crossflow)
-        return found, by_square
-    before = flow.u**2 + crossflow
-    real = square > 0
-    factor = np.sqrt(np.where(real, square, 0.0) / before)
-    by_factor = u * flow.u + v * flow.v + w * flow.w
-    by_square = by_factor * np.where(real, 0.5 * factor / np.where(real, square, 1.0), 0.0)
-    by_factor = by_factor * (factor / before)
-    for name in "uvw":
-        _put(found, name, _of(found, name) * factor - by_factor * getattr(flow, name))
-    return found, by_square
-
-
-def _before_axial(found: Gradient, flow: Flow, square: Array) -> Array | float:
-    """Undo u = √square − v² − w² in place, `square` being that of u; gives the derivative by V²."""
-    by_u = _of(found, "u")
-    if not _counts(by_u):
-        return 0.0
-    real = square > 0
-    by_square = np.where(real, by_u / (2 * np.where(real, np.copysign(np.sqrt(np.abs(square)), flow.u), 1.0)), 0.0)
-    found["u"] = np.where(real, 0.0, by_u)
-    _added(found, "v", -2 * flow.v * by_square)
-    _added(found, "w", -2 * flow.w * by_square)
-    return by_square
 
 
 def before_empty_tunnel(
@@ -302,7 +370,7 @@ def before_empty_tunnel(
         crossflow = flow.v**2 + flow.w**2
         if chain.settings.primary == "total_pressure":
             square = 2 * (flow.total_pressure - flow.static_pressure) / reference.density - crossflow
-            by_total = 2 / reference.density * _before_axial(found, flow, square)
+            by_total = 2 / reference.density * AxialChange(flow, square).undone(found)
             _added(found, "total_pressure", by_total)
             _added(found, "static_pressure", -by_total)
         else:
@@ -323,7 +391,9 @@ def _before_kinetic(found: Gradient, reference: Reference, flow: Flow, *, measur
         _added(found, name, by_kinetic * getattr(flow, name))
 
 
-def before_relations(gradient: Gradient, chain: Chain, reference: Reference, flow: Flow) -> Gradient:
+def before_relations(
+    gradient: Gradient, chain: Chain, reference: Reference, flow: Flow, *, speed: AxialChange | None = None
+) -> Gradient:
     """Derivatives by the gridded flow state, from those by the plane that the pressures' relations make of it.
 
     Parameters
@@ -336,6 +406,8 @@ def before_relations(gradient: Gradient, chain: Chain, reference: Reference, flo
         The undisturbed stream.
     flow : Flow
         That plane.
+    speed : AxialChange, optional
+        From `pressure_speed`, worked out once for many figures.
 
     Returns
     -------
@@ -344,14 +416,12 @@ def before_relations(gradient: Gradient, chain: Chain, reference: Reference, flo
     """
     found = dict(gradient)
     names = chain.points.channels
-    raw = chain.traverse is not None
-    pressures = raw or ("static_pressure" in names and ("total_pressure" in names or not reference.compressible))
     if chain.settings.primary == "total_pressure" or reference.compressible:
+        speed = pressure_speed(chain, reference, flow) if speed is None else speed
         if reference.compressible:
             _before_gas(found, chain, reference, flow)
-        elif pressures:
-            square = 2 * (flow.total_pressure - flow.static_pressure) / reference.density - flow.v**2 - flow.w**2
-            by_total = 2 / reference.density * _before_axial(found, flow, square)
+        elif speed is not None:
+            by_total = 2 / reference.density * speed.undone(found)
             _added(found, "total_pressure", by_total)
             _added(found, "static_pressure", -by_total)
         if chain.displacement is not None:
