@@ -129,12 +129,13 @@ class _InputErrors:
             field = self.expand(latents) * self.scale
         return field[:, 0] if self.is_scalar else field
 
-    def weights(self, slopes: Array) -> Array:
-        """Effects of the unit variables, (m, latents), from derivatives by the input, (m, n) or (m,)."""
+    def weights(self, slopes: Array, spread: float) -> Array:
+        """Effects of variables of given spread, (m, latents), from derivatives by the input, (m, n) or (m,)."""
+        scale = spread * self.scale
         if isinstance(self.expand, _Repeated) and not self.is_scalar:
-            together: Array = (slopes @ self.scale)[:, None]
+            together: Array = (slopes @ scale)[:, None]
             return together
-        effects: Array = (slopes[:, None] if self.is_scalar else slopes) * self.scale
+        effects: Array = (slopes[:, None] if self.is_scalar else slopes) * scale
         return effects if self.expand is None else self.expand.transposed(effects)
 
 
@@ -254,7 +255,7 @@ class SourceErrors:
             By input, with signs: the transpose of the map from variables to errors. The covariance of the outputs is
             the sum of its products with itself.
         """
-        return {one.name: self.source.spread * one.weights(slopes[one.name]) for one in self._inputs}
+        return {one.name: one.weights(slopes[one.name], self.source.spread) for one in self._inputs}
 
     @property
     def names(self) -> tuple[tuple[str, int], ...]:

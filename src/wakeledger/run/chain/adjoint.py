@@ -130,11 +130,12 @@ def point_gradient(
 def _joined(parts: Sequence[Gradient]) -> Gradient:
     """Derivatives of figures, one by one, as one."""
     joined: Gradient = {}
-    for k, part in enumerate(parts):
-        for name, by in part.items():
-            if name not in joined:
-                joined[name] = np.zeros((len(parts), by.shape[-1]))
-            joined[name][k] = by[0]
+    for name in dict.fromkeys(name for part in parts for name in part):
+        rows = [part[name][0] if name in part else None for part in parts]
+        array = np.empty((len(parts), next(row.size for row in rows if row is not None)))
+        for k, row in enumerate(rows):
+            array[k] = 0.0 if row is None else row
+        joined[name] = array
     return joined
 
 
@@ -472,13 +473,17 @@ def _by_input(slopes: StateSlopes, name: str, gradient: PointGradient, layout: I
         return np.sum([gradient.by[field] @ slope for field, slope in own.items()], axis=0) + np.zeros(
             len(gradient.names)
         )
-    result = np.zeros((len(gradient.names), layout.size))
+    if not own:
+        return np.zeros((len(gradient.names), layout.size))
+    result = np.empty((len(gradient.names), layout.size))
     product = np.empty((len(gradient.names), _CHUNK))
+    (first, by_first), *others = own.items()
     # A few thousand points at a time stay in the processor's cache.
     for start in range(0, layout.size, _CHUNK):
         part = slice(start, min(start + _CHUNK, layout.size))
         target, spare = result[:, part], product[:, : part.stop - start]
-        for field, slope in own.items():
+        np.multiply(gradient.by[first][:, part], by_first[part], out=target)
+        for field, slope in others:
             target += np.multiply(gradient.by[field][:, part], slope[part], out=spare)
     return result
 
