@@ -13,7 +13,7 @@ from wakeledger.confidence.sources import InputLayout, Source
 from wakeledger.core.grid import Array
 from wakeledger.run.section.chain import SectionChain, SectionReduction
 from wakeledger.run.uncertainty.channel_noise import OUTSIDE, WAKE, NoiseFindings, Shown, sums_factor
-from wakeledger.run.uncertainty.noise_comparison import Recording, compare_noise
+from wakeledger.run.uncertainty.noise_comparison import ON_ALL, Recording, compare_noise
 from wakeledger.run.uncertainty.noise_findings import part_of, visits_of
 
 
@@ -81,6 +81,11 @@ def section_findings(
             visits={OUTSIDE: part_of(visits, ~inside), WAKE: part_of(visits, inside)},
             clock=clock,
             pressure_per_speed=reference.density * reference.speed,
+            direct={
+                "speed": ("plane.u", "plane.v", "plane.w", "plane.speed", *ON_ALL),
+                "total_pressure": ("plane.total_pressure", *ON_ALL),
+                "static_pressure": ("plane.static_pressure", *ON_ALL),
+            },
         ),
         sources,
         layouts,

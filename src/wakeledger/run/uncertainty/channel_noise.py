@@ -138,9 +138,14 @@ class ChannelNoise:
         return CHANNELS[self.name][1]
 
     @property
+    def declares(self) -> bool:
+        """Whether noise of this channel is declared."""
+        return self.white > 0 or self.shared
+
+    @property
     def compared(self) -> bool:
         """Whether there is declared noise that the data can be held against."""
-        by_visits = any(one.declared > 0 and one.scatter.degrees_of_freedom for one in self.again)
+        by_visits = self.declares and any(one.scatter.degrees_of_freedom for one in self.again)
         return (self.white > 0 and math.isfinite(self.shown.deviation)) or by_visits
 
     @property
@@ -247,7 +252,7 @@ class NoiseFindings:
     @property
     def declares(self) -> bool:
         """Whether any noise is declared."""
-        return any(one.white > 0 or one.shared for one in self.channels)
+        return any(one.declares for one in self.channels)
 
     @property
     def compared(self) -> tuple[ChannelNoise, ...]:
@@ -278,7 +283,7 @@ class NoiseFindings:
         together = [f"{one.words} over about {1e3 * one.shown.length:.2g} mm" for one in self.channels if one.together]
         apart = [
             f"{one.words} {each.scatter.deviation:.2g} {one.unit} {each.where}, declared {each.declared:.2g} {one.unit}"
-            for one in self.channels
+            for one in self.compared
             for each in one.again
             if visits_off(each) > FACTOR and not (one.off > FACTOR and each.where == OUTSIDE)
         ]
@@ -334,10 +339,7 @@ class NoiseFindings:
         missing = [
             f"{one.words} {one.shown.deviation:.2g} {one.unit}"
             for one in self.channels
-            if one.matters
-            and one.white == 0
-            and not one.shared
-            and self._as_speed(one, one.shown.deviation) > _MATTERS * declared > 0
+            if one.matters and not one.declares and self._as_speed(one, one.shown.deviation) > _MATTERS * declared > 0
         ]
         if not missing:
             return None

@@ -28,6 +28,8 @@ from wakeledger.run.uncertainty.channel_noise import (
 _DRAWS, _DRAWS_OF_VISITS = 8, 32
 #: Share of the re-visits' variance that an even drift must explain to be called one.
 _EVEN = 0.5
+#: Inputs that act on whatever is measured.
+ON_ALL = ("position.", "probe.", "calibration.")
 #: Kinds of `Visits`.
 _KINDS = ("again", "once")
 
@@ -50,6 +52,9 @@ class Recording:
         Time of each point, or its number in the order in which they were taken.
     pressure_per_speed : float
         ρU, Pa s/m.
+    direct : mapping of str to tuple of str
+        By channel, what the names of the inputs begin with whose noise is its own. What others leave in it, such as the
+        pressures in the direction of the flow, is not taken for a declaration.
     idle : frozenset of str
         Channels that no row depends on.
     """
@@ -60,6 +65,7 @@ class Recording:
     visits: Mapping[str, Visits]
     clock: Array
     pressure_per_speed: float
+    direct: Mapping[str, tuple[str, ...]]
     idle: frozenset[str] = field(default_factory=frozenset)
 
 
@@ -84,6 +90,13 @@ def compare_noise(
     still = recording.values({})
     names = [name for name in CHANNELS if name in still]
     white, shared = dict.fromkeys(names, 0.0), dict.fromkeys(names, False)
+    own = {
+        name: any(
+            source.effect != "systematic" and any(each.startswith(recording.direct[name]) for each in source.applies_to)
+            for source in sources
+        )
+        for name in names
+    }
     labels = {(where, kind): getattr(visits, kind) for where, visits in recording.visits.items() for kind in _KINDS}
     scatters = {
         (name, *key): pooled_scatter(np.asarray(still[name], dtype=float), label)
@@ -130,8 +143,8 @@ def compare_noise(
             ChannelNoise(
                 name,
                 recording.shown[name],
-                math.sqrt(white[name]),
-                shared[name],
+                math.sqrt(white[name]) if own[name] else 0.0,
+                shared[name] and own[name],
                 again[name],
                 matters=name not in recording.idle,
             )

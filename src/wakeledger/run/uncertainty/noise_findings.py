@@ -28,7 +28,7 @@ from wakeledger.run.chain.chain import Chain
 from wakeledger.run.chain.reduction import Reduction
 from wakeledger.run.uncertainty.channel_noise import OUTSIDE, WAKE, NoiseFindings, Shown, sums_factor
 from wakeledger.run.uncertainty.noise import Noise, declared_noise, white_noise
-from wakeledger.run.uncertainty.noise_comparison import Recording, compare_noise
+from wakeledger.run.uncertainty.noise_comparison import ON_ALL, Recording, compare_noise
 
 #: Draws of noise fields where the points do not stand on lines.
 _FIELDS = 16
@@ -72,7 +72,7 @@ def crossflow_noises(
     if not chain.settings.crossflow:
         return (), findings, notes
     noises = declared_noise(chain, nominal, sources, layouts, seed=seed)
-    if noises:
+    if noises and (chain.empty is not None or any(findings[name].declares for name in "vw")):
         return noises, findings, notes
     (v, by), (w, _) = (findings[name].best() for name in "vw")
     if chain.empty is not None:
@@ -140,7 +140,7 @@ def measured_channels(chain: Chain, nominal: Reduction, errors: Mapping[str, Arr
     state, reference = chain.state(nominal.reference, errors), nominal.reference
     channels, raw = chain.points.channels, chain.traverse is not None
     found: dict[str, Array | None] = {}
-    along = "uvw"[int(np.argmax(np.abs(chain.points.axes[0])))]
+    along = _along(chain)
     if not raw and chain.settings.primary == "velocity":
         found["u"] = state.u
     elif not raw and along in channels:
@@ -184,8 +184,27 @@ def _recording(chain: Chain, nominal: Reduction) -> Recording:
         visits={OUTSIDE: part_of(visits, ~wake), WAKE: part_of(visits, wake)},
         clock=clock,
         pressure_per_speed=reference.density * reference.speed,
+        direct=_direct(chain),
         idle=idle,
     )
+
+
+def _direct(chain: Chain) -> dict[str, tuple[str, ...]]:
+    """What the names of the inputs begin with whose noise is a channel's own."""
+    along = _along(chain)
+    across = (*(f"plane.{name}" for name in "uvw" if name != along), "plane.pitch", "plane.yaw", "angle.", *ON_ALL)
+    return {
+        "u": (f"plane.{along}", "plane.speed", *ON_ALL),
+        "v": across,
+        "w": across,
+        "total_pressure": ("plane.total_pressure", *ON_ALL),
+        "static_pressure": ("plane.static_pressure", *ON_ALL),
+    }
+
+
+def _along(chain: Chain) -> str:
+    """The file's velocity component along the stream."""
+    return "uvw"[int(np.argmax(np.abs(chain.points.axes[0])))]
 
 
 def visits_of(points: Points, place: NDArray[np.int64]) -> tuple[Visits, Array]:
