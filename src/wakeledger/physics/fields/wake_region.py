@@ -101,10 +101,8 @@ def wake_region(
     reach = GROW_CELLS * max(grid.dy, grid.dz) if grow is None else grow
     if level < 0 or reach < 0:
         raise ValueError(f"level and grow must not be negative, {level} and {reach} m were given")
-    smooth_loss = ndimage.gaussian_filter(loss, SMOOTHING, mode="nearest")
-    smooth_vorticity = np.abs(ndimage.gaussian_filter(vorticity, SMOOTHING, mode="nearest"))
-    # Differences and smoothing let more noise through near the edges of the window; level it out.
-    smooth_vorticity /= _noise_gain(grid)
+    smooth_loss, smooth_vorticity = smoothed(loss, vorticity, grid)
+    smooth_vorticity = np.abs(smooth_vorticity)
     quiet = np.ones(grid.shape, dtype=bool) if exclude is None else ~exclude
     zero, loss_noise, vorticity_noise = _first_guess(smooth_loss, smooth_vorticity, quiet)
     core = np.zeros(grid.shape, dtype=bool)
@@ -113,7 +111,7 @@ def wake_region(
         excess = np.abs(smooth_loss - zero)
         loss_level = max(level * loss_noise, LOSS_FLOOR * float(excess.max()))
         vorticity_level = max(level * vorticity_noise, VORTICITY_FLOOR * float(smooth_vorticity.max()))
-        core = _joined(excess, loss_level) | _joined(smooth_vorticity, vorticity_level)
+        core = connected(excess, loss_level) | connected(smooth_vorticity, vorticity_level)
         if last:
             break
         outer = quiet & ~_grown(core, grid, reach)
@@ -128,6 +126,27 @@ def wake_region(
     if exclude is not None:
         mask &= ~exclude
     return WakeRegion(mask, zero, loss_noise, vorticity_noise, loss_level, vorticity_level, reach)
+
+
+def smoothed(loss: Array, vorticity: Array, grid: UniformGrid) -> tuple[Array, Array]:
+    """The fields from which the region is drawn.
+
+    Parameters
+    ----------
+    loss, vorticity : ndarray, shape (nz, ny)
+        Total-pressure loss, Pa, and axial vorticity, s⁻¹.
+    grid : UniformGrid
+        The grid.
+
+    Returns
+    -------
+    tuple of ndarray
+        Both smoothed; differences and smoothing let more noise of the vorticity through near the edges of the window,
+        which is levelled out.
+    """
+    smooth_loss = ndimage.gaussian_filter(loss, SMOOTHING, mode="nearest")
+    smooth_vorticity = ndimage.gaussian_filter(vorticity, SMOOTHING, mode="nearest") / _noise_gain(grid)
+    return smooth_loss, smooth_vorticity
 
 
 def grown_region(
@@ -182,8 +201,21 @@ def _first_guess(smooth_loss: Array, smooth_vorticity: Array, quiet: Mask) -> tu
     return zero, loss_noise, vorticity_noise
 
 
-def _joined(magnitude: Array, level: float) -> Mask:
-    """Places above the level that hang together with a place well above it, so that lone noise peaks stay out."""
+def connected(magnitude: Array, level: float) -> Mask:
+    """Places above a level that hang together with a place well above it, so that lone noise peaks stay out.
+
+    Parameters
+    ----------
+    magnitude : ndarray, shape (nz, ny)
+        Size of a smoothed field.
+    level : float
+        The level, the field's unit.
+
+    Returns
+    -------
+    ndarray of bool, shape (nz, ny)
+        Each patch holds a place above `SEED` times the level.
+    """
     weak = magnitude > level
     seeds = magnitude > SEED * level
     labels, count = ndimage.label(weak, structure=np.ones((3, 3)))
@@ -199,8 +231,17 @@ def _joined(magnitude: Array, level: float) -> Mask:
 def _grown(mask: Mask, grid: UniformGrid, distance: float) -> Mask:
     if distance == 0 or not mask.any():
         return mask
-    nearest: Array = ndimage.distance_transform_edt(~mask, sampling=(grid.dz, grid.dy))
-    grown: Mask = nearest <= distance
+    # Only the box about the places within reach takes part.
+    box = tuple(
+        slice(max(int(held[0]) - room, 0), int(held[-1]) + room + 1)
+        for held, room in (
+            (np.flatnonzero(mask.any(axis=1)), int(distance / grid.dz) + 1),
+            (np.flatnonzero(mask.any(axis=0)), int(distance / grid.dy) + 1),
+        )
+    )
+    nearest: Array = ndimage.distance_transform_edt(~mask[box], sampling=(grid.dz, grid.dy))
+    grown: Mask = np.zeros_like(mask)
+    grown[box] = nearest <= distance
     return grown
 
 

@@ -23,8 +23,9 @@ from wakeledger.run.chain.places import sampled_mask
 from wakeledger.run.chain.reduction import Reduction, Variation
 from wakeledger.run.gridded import Regrid
 from wakeledger.run.uncertainty.gaps import gap_draws
+from wakeledger.run.uncertainty.wake_edge import MASK as MASK
+from wakeledger.run.uncertainty.wake_edge import mask_term
 
-MASK = "edge of the wake region"
 RESOLUTION = "spacing of the points"
 RESAMPLING = "spline between the points"
 GAPS = "filled points"
@@ -45,7 +46,7 @@ ORDER = 3.0
 #: Doubt of what the bound vortex's predicted disturbance takes out of the residual, as a share of it (k = 1): the bound
 #: line is taken as straight and level.
 PAIR_DOUBT = 0.2
-#: Factors on the region's growth that bound the plausible choices.
+#: Factors on a distance that bound the plausible choices.
 SWEEP = (0.5, 1.5)
 #: Estimates that integrate over the same region as a row, and so share its doubt.
 _SAME_REGION = {
@@ -92,7 +93,11 @@ def numerical_terms(
     tuple of NumericalTerm
         Over `wakeledger.run.chain.outputs.OUTPUTS`; terms that do not apply are left out.
     """
-    terms: list[NumericalTerm | None] = [_mask_term(chain, nominal, noise), _resolution_term(chain, nominal)]
+    edge = mask_term(chain, nominal, noise)
+    terms: list[NumericalTerm | None] = [
+        replace(edge, standard_uncertainty=_followed(edge.standard_uncertainty)),
+        _resolution_term(chain, nominal),
+    ]
     if chain.gridding.kind == "tensor":
         terms.append(_resampling_term(chain, nominal, regrid))
     if chain.gridding.filled.any():
@@ -130,24 +135,6 @@ def _difference(vector: Array, nominal: Reduction) -> Array:
 
 def _deviation(chain: Chain, nominal: Reduction, vary: Variation) -> Array:
     return _difference(chain.reduce(vary=vary).vector, nominal)
-
-
-def _mask_term(chain: Chain, nominal: Reduction, noise: Sequence[Mapping[str, Array]]) -> NumericalTerm:
-    """What a narrower or a wider region would have given, less what the noise of the added ring alone makes of it."""
-    masks = [chain.reduce(vary=Variation(grow_factor=factor), estimates=False).region.mask for factor in SWEEP]
-    masks.append(nominal.region.mask)
-
-    def sweep(errors: Mapping[str, Array]) -> Array:
-        smaller, larger, same = (
-            chain.reduce(errors, vary=Variation(mask=mask), estimates=False).vector for mask in masks
-        )
-        return np.nan_to_num(np.stack([smaller - same, larger - same]))
-
-    found = _beyond_noise(sweep, noise)
-    # One latent choice of the edge moves all outputs together, each in the direction in which it grows.
-    size = np.abs(found).max(axis=0)
-    vector = np.where(found[1] - found[0] < 0, -size, size) / np.sqrt(3)
-    return NumericalTerm(MASK, _followed(vector), "rectangular")
 
 
 def _beyond_noise(change: Callable[[Mapping[str, Array]], Array], noise: Sequence[Mapping[str, Array]]) -> Array:
