@@ -489,7 +489,14 @@ def _by_input(slopes: StateSlopes, name: str, gradient: PointGradient, layout: I
 
 
 def scalar_gradients(
-    chain: Chain, names: Sequence[str], steps: Mapping[str, float], layouts: Mapping[str, InputLayout]
+    chain: Chain,
+    nominal: Reduction,
+    names: Sequence[str],
+    steps: Mapping[str, float],
+    layouts: Mapping[str, InputLayout],
+    *,
+    estimates: bool = True,
+    workers: int = 2,
 ) -> tuple[dict[str, Array], dict[str, Array]]:
     """Derivatives of the outputs by what acts on the survey as a whole, by differences of whole passes.
 
@@ -497,30 +504,34 @@ def scalar_gradients(
     ----------
     chain : Chain
         The survey.
+    nominal : Reduction
+        Its reduction.
     names : sequence of str
         The inputs.
     steps : mapping of str to float
         Step of each input, its standard uncertainty in SI (GUM 5.1.3, note 2).
     layouts : mapping of str to InputLayout
         The inputs, single numbers all of them.
+    estimates : bool
+        Whether the cross-checks are among the outputs; they are NaN otherwise.
+    workers : int
+        Number of threads.
 
     Returns
     -------
     slopes, curvatures : dict of str to ndarray, shape (m,)
         (f₊ − f₋)/2h and (f₊ + f₋ − 2f₀)/h².
     """
-    used = [name for name in names if layouts[name].is_scalar and steps[name] > 0]
-    slopes: dict[str, Array] = {name: np.zeros(len(OUTPUTS)) for name in names if layouts[name].is_scalar}
-    curvatures: dict[str, Array] = {name: np.zeros(len(OUTPUTS)) for name in slopes}
-    if not used:
-        return slopes, curvatures
-    count = 1 + 2 * len(used)
-    errors = {name: np.zeros(count) for name in used}
-    for k, name in enumerate(used):
-        errors[name][1 + 2 * k], errors[name][2 + 2 * k] = steps[name], -steps[name]
-    values = chain.vectors(errors)
-    for k, name in enumerate(used):
-        up, down = values[1 + 2 * k], values[2 + 2 * k]
-        slopes[name] = (up - down) / (2 * steps[name])
-        curvatures[name] = (up + down - 2 * values[0]) / steps[name] ** 2
+    single = [name for name in names if layouts[name].is_scalar]
+    slopes: dict[str, Array] = {name: np.zeros(len(OUTPUTS)) for name in single}
+    curvatures: dict[str, Array] = {name: np.zeros(len(OUTPUTS)) for name in single}
+    used = [name for name in single if steps[name] > 0]
+
+    def shifted(name: str) -> Array:
+        return chain.vectors({name: np.array([steps[name], -steps[name]])}, estimates=estimates)
+
+    with ThreadPoolExecutor(workers) as pool:
+        for name, (up, down) in zip(used, pool.map(shifted, used), strict=True):
+            slopes[name] = (up - down) / (2 * steps[name])
+            curvatures[name] = (up + down - 2 * nominal.vector) / steps[name] ** 2
     return slopes, curvatures

@@ -66,7 +66,7 @@ def linear_slopes(
     gradient = point_gradient(chain, nominal, estimates=estimates)
     figures, left = input_gradients(chain, gradient, layouts)
     steps = {name: _step(name, sources, layouts[name]) for name in left}
-    direct, curvatures = scalar_gradients(chain, left, steps, layouts)
+    direct, curvatures = scalar_gradients(chain, nominal, left, steps, layouts, estimates=estimates)
     for name in left:
         if not layouts[name].is_scalar:
             # No way back leads there: what it does is unknown, not nothing.
