@@ -1,9 +1,12 @@
 """The budget by source: known parts are found, squares close, nothing unknown becomes zero."""
 
+import dataclasses
+
 import numpy as np
 import pytest
 
-from wakeledger.confidence.budget import REMAINDER, make_budget
+from wakeledger.confidence.budget import REMAINDER, Budget, make_budget, with_scaled_scatter
+from wakeledger.confidence.components import MEASURED, Component, twins_together
 from wakeledger.confidence.montecarlo import run
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sources import InputLayout, Source
@@ -194,3 +197,26 @@ def test_progress_reaches_its_end(samples):
     )
     assert seen[-1][0] == seen[-1][1] == 1 + 2 * 3 + 2 * 50
     assert [done for done, _ in seen] == sorted(done for done, _ in seen)
+
+
+def test_scatter_of_scaled_draws_leaves_single_errors_as_they_are():
+    linear = np.array([3.0, 3.0, 3.0])
+    single = Component("zero", MEASURED, linear, np.zeros(3))
+    scatter = np.array([[16.0, 8.0, 4.0], [8.0, 16.0, 2.0], [4.0, 2.0, 16.0]])
+    before = Budget(("a", "b", "c"), (), np.full(3, 5.0), np.ones(3), components=(single,), scatter=scatter)
+    # 25 falls to 16: 9 stay with the zero, 7 of 16 are left. To a quarter, less than the zero alone: nothing is left.
+    found = with_scaled_scatter(before, np.array([0.8, 1.0, 0.5])).scatter
+    np.testing.assert_allclose(np.diag(found), [7.0, 16.0, 0.0], rtol=1e-12)
+    assert found[0, 1] == pytest.approx(8 * np.sqrt(7 / 16), rel=1e-12) and found[0, 2] == 0.0
+    assert with_scaled_scatter(before, np.ones(3)) is before
+
+
+def test_one_error_of_two_inputs_is_one():
+    own = Component("zero", MEASURED, np.array([3.0]), np.array([0.1]), input="plane.u", shared_id="rig")
+    other = dataclasses.replace(own, input="empty.plane.u", linear=np.array([-3.0]))
+    (both,) = twins_together((own, other), "empty.")
+    assert both.linear[0] == 0.0 and both.curved[0] == pytest.approx(0.2) and both.key == ("rig", "plane.u", 0)
+    # Without an identity, and of another input, they are two.
+    apart = dataclasses.replace(own, shared_id=None), dataclasses.replace(other, shared_id=None)
+    assert twins_together(apart, "empty.") == apart
+    assert len(twins_together((own, dataclasses.replace(other, input="empty.plane.v")), "empty.")) == 2

@@ -9,7 +9,14 @@ from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 
-from wakeledger.confidence.components import Component, scatter, shifted_components, term_components
+from wakeledger.confidence.components import (
+    MEASURED,
+    Component,
+    scatter,
+    shifted_components,
+    term_components,
+    twins_together,
+)
 from wakeledger.confidence.linear_budget import Slopes
 from wakeledger.confidence.montecarlo import Evaluate, Progress, sample
 from wakeledger.confidence.point_errors import PointErrors, point_errors, predicted, shifted_point_errors
@@ -211,7 +218,9 @@ def make_budget(
         components = shifted_components(
             evaluate, sampler, few, len(samples.names), batch=batch, workers=workers, progress=report
         )
-        parts += [_shifted(one, [part for part in components if part.source == one.source.name]) for one in few]
+        for one in few:
+            own = [part for part in components if part.source == one.source.name]
+            parts.append(_shifted(one, twins_together(own, one.source.prefix) if one.source.prefix else own))
         done += counts[0]
     for one in many:
         if redrawn:
@@ -235,6 +244,35 @@ def make_budget(
             points += shifted_point_errors(evaluate, sampler, one, len(samples.names), batch=batch, workers=workers)
     left = scatter(samples, few, components, predicted=predicted(many, points, samples.draws) if points else None)
     return replace(budget, components=(*components, *term_components(terms)), points=tuple(points), scatter=left)
+
+
+def with_scaled_scatter(budget: Budget, factor: Array) -> Budget:
+    """A budget whose scatter is what single errors leave of draws that were scaled.
+
+    Parameters
+    ----------
+    budget : Budget
+        With the scatter of the draws as they were.
+    factor : ndarray, shape (m,)
+        By what the draws' deviations from their mean were multiplied.
+
+    Returns
+    -------
+    Budget
+        With the scatter that makes the variance of all errors the factor's square of what it was, or none.
+    """
+    if budget.scatter is None or not np.any(factor != 1):
+        return budget
+    own = np.diag(budget.scatter)
+    followed = np.zeros(own.shape)
+    for one in budget.components:
+        if one.kind == MEASURED:
+            followed = followed + one.variance
+    for each in budget.points:
+        followed = followed + each.variance
+    wanted = np.maximum(factor**2 * (followed + own) - followed, 0.0)
+    scale = np.sqrt(np.divide(wanted, own, out=np.ones(own.shape), where=(factor != 1) & (own > 0)))
+    return replace(budget, scatter=budget.scatter * np.outer(scale, scale))
 
 
 def _is_few(one: SourceErrors) -> bool:

@@ -91,7 +91,7 @@ def scaled_budget(budget: Budget, factor: Array, standard_uncertainty: Array) ->
     -------
     Budget
         Lines of declared sources by the factor, numerical terms as they were, closed to the new total by the
-        remainder; lines that exceed it are scaled. Components and scatter, what each error does, stay.
+        remainder; lines that exceed it are scaled. Components, what each error does, stay.
     """
     lines: list[BudgetLine] = []
     for row, ratio, u in zip(budget.rows, factor.tolist(), standard_uncertainty.tolist(), strict=True):

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from wakeledger.confidence.budget import Budget, make_budget
+from wakeledger.confidence.budget import Budget, make_budget, with_scaled_scatter
 from wakeledger.confidence.curvature import curvature_factor, scaled_budget, scaled_samples
 from wakeledger.confidence.linear_budget import NEGLIGIBLE, LinearBudget
 from wakeledger.confidence.montecarlo import run as run_montecarlo
@@ -179,7 +179,7 @@ def propagate(
     )
     factor = np.where(_OF_ROWS, curvature_factor(variance, linear.second_order**2, linear.inflation), 1.0)
     samples = add_terms(scaled_samples(plain, factor), terms, seed=seed)
-    budget = scaled_budget(budget, factor, samples.standard_uncertainty)
+    budget = with_scaled_scatter(scaled_budget(budget, factor, samples.standard_uncertainty), factor)
     return Propagated(samples, held, budget, plain, predicted, linear, factor)
 
 
