@@ -21,13 +21,9 @@ import numpy as np
 from wakeledger.confidence.sources import InputLayout
 from wakeledger.core.grid import Array
 from wakeledger.intake.probe.traverse import correction_input
-from wakeledger.physics.fields.boundary import ClosedWalls, FreeAir
 from wakeledger.physics.fields.flow import Flow
-from wakeledger.physics.methods import gradients
 from wakeledger.physics.methods.gradients import FlowGradient
-from wakeledger.physics.methods.vorticity_area import own_share
-from wakeledger.physics.methods.wake_line import sensitivity as wake_line_sensitivity
-from wakeledger.physics.vortices.vortex_sum import sensitivities as vortex_sum_sensitivities
+from wakeledger.run.chain.adjoint_figures import BLOCKAGE, figure_gradients
 from wakeledger.run.chain.adjoint_plane import (
     AxialChange,
     Gradient,
@@ -36,7 +32,6 @@ from wakeledger.run.chain.adjoint_plane import (
     before_relations,
     before_swirl,
     before_zero,
-    crossflow_functional,
     pressure_speed,
     swirl_gradient,
     zero_speed,
@@ -44,22 +39,17 @@ from wakeledger.run.chain.adjoint_plane import (
 from wakeledger.run.chain.adjoint_state import StateSlopes
 from wakeledger.run.chain.chain import Chain
 from wakeledger.run.chain.empty_tunnel import PREFIX, EmptyTunnel, _onto
-from wakeledger.run.chain.estimates import counted_mask, without_walls
 from wakeledger.run.chain.outputs import (
     MOMENTS,
     OUTPUTS,
     ROWS,
     coefficient_of,
     corrected_coefficient_of,
-    estimate_of,
 )
 from wakeledger.run.chain.reduction import Reduction
 from wakeledger.stream.reference import Reference
 
-FREE_AIR = FreeAir()
 _NO_ERRORS: Mapping[str, Array] = MappingProxyType({})
-#: Wake-blockage velocity, m/s, among the figures that are differentiated; the outputs hold its share of the speed.
-_BLOCKAGE = "wake blockage velocity"
 #: Points that are worked on at a time.
 _CHUNK = 4096
 
@@ -114,7 +104,7 @@ def point_gradient(
     -------
     PointGradient
     """
-    figures = _figures(chain, nominal, estimates=estimates)
+    figures = figure_gradients(chain, nominal, estimates=estimates)
     names = tuple(figures)
     plane = _plane(chain, nominal, errors)
     # One figure at a time stays in the processor's cache, and carries only the fields it depends on.
@@ -231,140 +221,6 @@ def _to_points(gradient: Gradient, chain: Chain) -> Gradient:
     }
 
 
-def _figures(chain: Chain, nominal: Reduction, *, estimates: bool) -> dict[str, FlowGradient]:
-    """Derivatives of what the outputs are made of by the plane that the methods see."""
-    settings, flow, reference = chain.settings, nominal.flow, nominal.reference
-    grid, mask, star, forces = flow.grid, nominal.region.mask, nominal.loss_free, nominal.forces
-    counted, boundary = settings.counted, settings.boundary.whole
-    weights = np.where(mask, grid.weights, 0.0)
-    blockage = nominal.wake_blockage
-    near = chain.frozen.near_field
-    shift: Array | float = 0.0 if near is None else near.u
-    profile = gradients.profile_gradient(flow, reference, star, weights)
-    axial = gradients.axial_gradient(flow, reference, star, weights, shift=shift + 2 * blockage)
-    found: dict[str, FlowGradient] = {}
-    if isinstance(boundary, ClosedWalls):
-        deficit = gradients.deficit_gradient(flow, reference, star, weights)
-        found[_BLOCKAGE] = deficit * (1 / (2 * boundary.surveyed_area))
-        # ρu_b∬(u* − u) is quadratic in the deficit, which u_b is a multiple of.
-        profile = profile + deficit * (-2 * reference.density * blockage)
-        if not reference.compressible:
-            by_blockage = (
-                2 * reference.density * float((weights * (star - shift - 2 * blockage - reference.speed)).sum())
-            )
-            axial = axial + found[_BLOCKAGE] * by_blockage
-    found["profile_drag"] = profile * counted
-    if settings.crossflow:
-        divergence = gradients.divergence_gradient(flow, mask, density=reference.density, near=near, boundary=boundary)
-        found["residual_drag"] = (divergence + axial) * counted
-        induced = gradients.induced_gradient(forces.stream_function, mask, grid, density=reference.density)
-        found["induced_drag"] = induced * counted
-        if settings.bounded:
-            free = gradients.induced_gradient(forces.free_air_stream_function, mask, grid, density=reference.density)
-            found["induced_drag_free_air"] = free * counted
-        found |= _impulses(chain, nominal)
-    if estimates:
-        name = estimate_of("profile_drag", "entropy_area")
-        found[name] = gradients.entropy_gradient(flow, reference, weights) * counted
-        if settings.crossflow:
-            found |= _energies(chain, nominal, found.get(_BLOCKAGE))
-            found |= _on_frozen_geometry(chain, nominal, found)
-    return found
-
-
-def _impulses(chain: Chain, nominal: Reduction) -> dict[str, FlowGradient]:
-    settings, flow, reference = chain.settings, nominal.flow, nominal.reference
-    grid, reflection = flow.grid, settings.reflection
-    yy, zz = grid.mesh()
-    about_y, about_z = yy - settings.moment_centre[0], zz - settings.moment_centre[1]
-    arms = {"lift": yy}
-    if reflection == "y":
-        arms["root_bending_moment"] = 0.5 * np.maximum(yy, 0.0) ** 2
-    else:
-        arms |= {"side_force": -zz, "rolling_moment": -0.5 * (about_y**2 + about_z**2)}
-    counted = nominal.region.mask * own_share(grid, reflection)[:, None]
-    impulse = reference.density * reference.speed
-    return {name: gradients.impulse_gradient(arm, counted, grid, impulse=impulse) for name, arm in arms.items()}
-
-
-def _energies(chain: Chain, nominal: Reduction, by_blockage: FlowGradient | None) -> dict[str, FlowGradient]:
-    """Energy form and momentum balance, whose crossflow offset is read from the plane itself."""
-    settings, flow, reference = chain.settings, nominal.flow, nominal.reference
-    grid, mask, counted = flow.grid, nominal.region.mask, chain.settings.counted
-    v, w = (component - offset for component, offset in zip((flow.v, flow.w), nominal.crossflow_offset, strict=True))
-    energy = gradients.energy_gradient(v, w, grid, density=reference.density)
-    square = flow.u**2 + (flow.v**2 - v**2) + (flow.w**2 - w**2)
-    along = np.sqrt(np.maximum(square, 0.0))
-    aligned = Flow(grid, along, v, w, flow.total_pressure, flow.static_pressure, flow.density, flow.total_temperature)
-    balance = gradients.momentum_gradient(aligned, reference)
-    # u² = u² + (v² − v'²) + (w² − w'²): turning the flow keeps its speed.
-    share = np.where(square > 0, np.asarray(balance.u) / np.where(square > 0, along, 1.0), 0.0)
-    momentum = FlowGradient(
-        u=share * flow.u,
-        v=np.asarray(balance.v) - share * v,
-        w=np.asarray(balance.w) - share * w,
-        total_pressure=balance.total_pressure,
-        static_pressure=balance.static_pressure,
-        density=balance.density,
-    )
-    direct = FlowGradient(v=share * flow.v, w=share * flow.w)
-    if by_blockage is not None and nominal.wake_blockage:
-        width, height = (grid.ny - 1) * grid.dy, (grid.nz - 1) * grid.dz
-        beside = max(getattr(settings.boundary, "section").area - width * height, 0.0)  # noqa: B009
-        direct = direct + by_blockage * (-4 * reference.density * nominal.wake_blockage * beside)
-    outer = (~mask).astype(float)
-    found = {}
-    for name, inner, rest in (
-        (estimate_of("induced_drag", "energy_area"), energy, FlowGradient()),
-        (estimate_of("total_drag", "momentum_area"), momentum, direct),
-    ):
-        total = inner + rest
-        if outer.sum() > 0:
-            # Both act on the crossflow less its offset: what they lose by the offset goes to where that was read.
-            by = [
-                0.0 if settings.reflection == axis else -float(np.sum(part))
-                for axis, part in (("y", inner.v), ("z", inner.w))
-            ]
-            each = outer / outer.sum()
-            from_v, from_w = crossflow_functional(by[0] * each, by[1] * each, flow, mask, settings.boundary.whole)
-            total = total + FlowGradient(v=from_v, w=from_w)
-        found[name] = total * counted
-    return found
-
-
-def _on_frozen_geometry(chain: Chain, nominal: Reduction, rows: Mapping[str, FlowGradient]) -> dict[str, FlowGradient]:
-    """Wake line and vortex sum, which see the crossflow without that of the walls."""
-    settings, frozen, flow, reference = chain.settings, chain.frozen, nominal.flow, nominal.reference
-    grid, mask = flow.grid, nominal.region.mask
-    v, w = without_walls(settings, flow, nominal.forces)
-    found: dict[str, tuple[Array, Array]] = {}
-    if frozen.cuts is not None and frozen.cuts.enclosed:
-        above = counted_mask(settings, mask, grid)
-        drag, lift = wake_line_sensitivity(frozen.cuts, v, w, reference.density, reference.speed, mask=above)
-        found[estimate_of("induced_drag", "wake_line")] = drag
-        found[estimate_of("lift", "wake_line")] = lift
-    if frozen.parts is not None:
-        by_v, by_w = vortex_sum_sensitivities(frozen.parts, v, w, reference.density)
-        found[estimate_of("induced_drag", "vortex_sum")] = (settings.counted * by_v, settings.counted * by_w)
-    result = {}
-    for name, (by_v, by_w) in found.items():
-        gradient = FlowGradient(v=by_v, w=by_w)
-        if settings.bounded:
-            gradient = gradient + _through_walls(by_v, by_w, chain, nominal)
-            if name.startswith("induced_drag"):
-                gradient = gradient + rows["induced_drag"] + rows["induced_drag_free_air"] * -1.0
-        result[name] = gradient
-    return result
-
-
-def _through_walls(by_v: Array, by_w: Array, chain: Chain, nominal: Reduction) -> FlowGradient:
-    """What the crossflow of the walls, itself made by the wake's vorticity, hands back to the plane."""
-    flow, mask, boundary = nominal.flow, nominal.region.mask, chain.settings.boundary.whole
-    walled = crossflow_functional(by_v, by_w, flow, mask, boundary)
-    free = crossflow_functional(by_v, by_w, flow, mask, FREE_AIR)
-    return FlowGradient(v=walled[0] - free[0], w=walled[1] - free[1])
-
-
 def _outputs(chain: Chain, nominal: Reduction, names: tuple[str, ...]) -> Array:
     """Derivatives of the outputs by the figures, shape (m, k)."""
     settings, reference, values = chain.settings, nominal.reference, nominal.values
@@ -386,7 +242,7 @@ def _outputs(chain: Chain, nominal: Reduction, names: tuple[str, ...]) -> Array:
     if values["span_efficiency"] > 0:
         e = values["span_efficiency"]
         rows["span_efficiency"] = 2 * e / values["lift"] * of("lift") - e / values[free] * of(free)
-    blockage = of(_BLOCKAGE) if _BLOCKAGE in names else np.zeros(len(names))
+    blockage = of(BLOCKAGE) if BLOCKAGE in names else np.zeros(len(names))
     solid = settings.given.get("boundary.solid_blockage", 0.0)
     faster = 1 + solid + nominal.wake_blockage / reference.speed
     for row in ROWS:
@@ -405,7 +261,7 @@ def _outputs(chain: Chain, nominal: Reduction, names: tuple[str, ...]) -> Array:
             angle = values["angle_correction"]
             per_factor = lift / (q * flow_area)
             rows["angle_correction"] = per_factor * rows["boundary_factor"] + angle / lift * of("lift")
-        rows["wake_blockage"] = of(_BLOCKAGE) / reference.speed
+        rows["wake_blockage"] = of(BLOCKAGE) / reference.speed
     found = np.stack([of(name) for name in OUTPUTS])
     found[np.isnan(nominal.vector)] = np.nan
     return found
@@ -470,9 +326,10 @@ def _by_input(slopes: StateSlopes, name: str, gradient: PointGradient, layout: I
     """Derivatives of the figures by one input, shape (k, n), or (k,) for a single number."""
     own = slopes(name, layout, frozenset(gradient.by))
     if layout.is_scalar:
-        return np.sum([gradient.by[field] @ slope for field, slope in own.items()], axis=0) + np.zeros(
-            len(gradient.names)
-        )
+        together = np.zeros(len(gradient.names))
+        for field, slope in own.items():
+            together += gradient.by[field] @ slope
+        return together
     if not own:
         return np.zeros((len(gradient.names), layout.size))
     result = np.empty((len(gradient.names), layout.size))

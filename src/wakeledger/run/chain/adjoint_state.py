@@ -131,7 +131,7 @@ class StateSlopes:
     def _by_pressure(self, channel: str, wanted: frozenset[str]) -> Slopes:
         size = self.scale[channel]
         share = (size if channel == "total_pressure" else -size) * self.per_pressure
-        found = {
+        found: Slopes = {
             field: share * velocity for field, velocity in zip("uvw", self.velocity, strict=True) if field in wanted
         }
         if channel in wanted:
