@@ -45,6 +45,7 @@ from wakeledger.run.traverse.probe_range import probe_range
 from wakeledger.run.tunnel import tunnel_figures
 from wakeledger.run.uncertainty.draws import Propagated, numerical_only, propagate, terms_of
 from wakeledger.run.uncertainty.method_choice import choice_terms, spread_notes
+from wakeledger.run.uncertainty.noise_alone import noise_alone_notes
 from wakeledger.run.uncertainty.propagation import propagation, propagation_notes
 
 __all__ = ["SurveyInput", "inspect", "load", "prepare", "reduce"]
@@ -248,7 +249,12 @@ def _ledger(
         contributions=contributions(budget, known),
         propagation=came_about,
         checks=checks,
-        notes=(*prepared.notes, *spread_notes(estimates, rows), *propagation_notes(came_about)),
+        notes=(
+            *prepared.notes,
+            *noise_alone_notes(file, prepared),
+            *spread_notes(estimates, rows),
+            *propagation_notes(came_about),
+        ),
         test=file.test.given(),
         reference=tables.reference_scalars(nominal.reference),
         model={} if file.model is None else file.model.given(),

@@ -33,6 +33,8 @@ CHANNELS: Mapping[str, tuple[str, str, bool]] = {
     "v": ("v", "m/s", False),
     "w": ("w", "m/s", False),
     "speed": ("speed", "m/s", False),
+    "pitch": ("pitch", "rad", False),
+    "yaw": ("yaw", "rad", False),
     "total_pressure": ("total pressure", "Pa", True),
     "static_pressure": ("static pressure", "Pa", True),
 }

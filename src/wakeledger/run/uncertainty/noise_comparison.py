@@ -92,7 +92,8 @@ def compare_noise(
     white, shared = dict.fromkeys(names, 0.0), dict.fromkeys(names, False)
     own = {
         name: any(
-            source.effect != "systematic" and any(each.startswith(recording.direct[name]) for each in source.applies_to)
+            source.effect != "systematic"
+            and any(each.startswith(recording.direct.get(name, ())) for each in source.applies_to)
             for source in sources
         )
         for name in names

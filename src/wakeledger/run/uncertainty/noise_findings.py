@@ -7,7 +7,7 @@ two disagree the check `declared_noise` says so (`wakeledger.run.uncertainty.cha
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from types import MappingProxyType
 
 import numpy as np
@@ -26,7 +26,15 @@ from wakeledger.intake.state import absolute
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.run.chain.chain import Chain
 from wakeledger.run.chain.reduction import Reduction
-from wakeledger.run.uncertainty.channel_noise import OUTSIDE, WAKE, NoiseFindings, Shown, sums_factor
+from wakeledger.run.uncertainty.channel_noise import (
+    CHANNELS,
+    OUTSIDE,
+    WAKE,
+    ChannelNoise,
+    NoiseFindings,
+    Shown,
+    sums_factor,
+)
 from wakeledger.run.uncertainty.noise import Noise, declared_noise, white_noise
 from wakeledger.run.uncertainty.noise_comparison import ON_ALL, Recording, compare_noise
 
@@ -119,6 +127,26 @@ def shown_noise(chain: Chain, nominal: Reduction) -> dict[str, Shown]:
     return dict(_recording(chain, nominal).shown)
 
 
+def file_noises(chain: Chain, nominal: Reduction) -> tuple[ChannelNoise, ...]:
+    """Noise of the file's own channels, in their own units: what `shown_noise` is of the flow state.
+
+    Parameters
+    ----------
+    chain : Chain
+        The survey.
+    nominal : Reduction
+        Its reduction.
+
+    Returns
+    -------
+    tuple of ChannelNoise
+        Nothing is declared in them.
+    """
+    given = {name: channel.values for name, channel in chain.points.channels.items() if name in CHANNELS}
+    recording = _recording(chain, nominal, lambda errors: given)
+    return compare_noise(recording, (), {}, seed=0).channels
+
+
 def measured_channels(chain: Chain, nominal: Reduction, errors: Mapping[str, Array] = _NO_ERRORS) -> dict[str, Array]:
     """The channels whose noise is looked at, at the points, as the flow state has them.
 
@@ -155,8 +183,16 @@ def measured_channels(chain: Chain, nominal: Reduction, errors: Mapping[str, Arr
     return {name: np.broadcast_to(values, shape) for name, values in found.items() if values is not None}
 
 
-def _recording(chain: Chain, nominal: Reduction) -> Recording:
-    values = measured_channels(chain, nominal)
+def _recording(
+    chain: Chain, nominal: Reduction, channels: Callable[[Mapping[str, Array]], Mapping[str, Array]] | None = None
+) -> Recording:
+    """The survey as far as its noise is concerned: of the flow state, or of given channels under errors."""
+
+    def measured(errors: Mapping[str, Array]) -> Mapping[str, Array]:
+        return measured_channels(chain, nominal, errors)
+
+    under = measured if channels is None else channels
+    values = under({})
     wake = _inside(chain, nominal)
     usable = np.isfinite(chain.state(nominal.reference).u)
     place = place_labels(chain.points.y, chain.points.z)
@@ -178,7 +214,7 @@ def _recording(chain: Chain, nominal: Reduction) -> Recording:
 
     visits, clock = visits_of(chain.points, np.where(_one_tube(chain) & usable, place, -1))
     return Recording(
-        values=lambda errors: measured_channels(chain, nominal, errors),
+        values=under,
         shown=shown,
         seen=seen,
         visits={OUTSIDE: part_of(visits, ~wake), WAKE: part_of(visits, wake)},
