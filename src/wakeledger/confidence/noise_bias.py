@@ -13,6 +13,7 @@ from scipy import sparse
 from wakeledger.core.grid import Array
 
 Operator: TypeAlias = Array | sparse.csr_array
+Covariance: TypeAlias = Array | sparse.csr_array
 Kernel: TypeAlias = Array | Callable[[NDArray[np.int64], NDArray[np.int64]], Array]
 
 _NEGLIGIBLE = 1e-10
@@ -78,11 +79,10 @@ def quadratic_noise_bias(
     if spread.ndim and spread.shape != raw:
         raise ValueError(f"variance has shape {spread.shape}; the data have {raw}")
     weights = _offset_weights(kernel, nz, ny)
-    rows, columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
-    if not rows.size:
+    if not mask.any():
         return 0.0
     # Only the box around the region takes part.
-    box = slice(rows[0], rows[-1] + 1), slice(columns[0], columns[-1] + 1)
+    box = _box(mask)
     mask, onto_z, onto_y = mask[box], onto_z[box[0]], onto_y[box[1]]
     reach_z, reach_y = mask.shape[0] - 1, mask.shape[1] - 1
     weights = weights[nz - 1 - reach_z : nz + reach_z, ny - 1 - reach_y : ny + reach_y]
@@ -150,11 +150,13 @@ def modal_noise_bias(
     raw = onto_z.shape[1], onto_y.shape[1]
     if spread.ndim and spread.shape != raw:
         raise ValueError(f"variance has shape {spread.shape}; the data have {raw}")
+    box = _box(mask)
+    mask, modes, onto_z, onto_y = mask[box], modes[:, *box], onto_z[box[0]], onto_y[box[1]]
     deviation = np.sqrt(spread)
     along_z, along_y = correlation
     total = 0.0
     for strength, mode in zip(strengths, modes, strict=True):
-        weights = deviation * (onto_z.T @ (mask * mode) @ onto_y)
+        weights = deviation * _pulled_back(mask * mode, onto_z, onto_y)
         spreading = weights if along_z is None else along_z @ weights
         if along_y is not None:
             spreading = spreading @ along_y
@@ -162,11 +164,28 @@ def modal_noise_bias(
     return 0.5 * total
 
 
-def _product(left: sparse.csr_array, variance: Array | None = None) -> Array:
+def _box(mask: Array) -> tuple[slice, slice]:
+    """Rows and columns from the first to the last that the region touches."""
+    rows, columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
+    if not rows.size:
+        return slice(0, 0), slice(0, 0)
+    return slice(int(rows[0]), int(rows[-1]) + 1), slice(int(columns[0]), int(columns[-1]) + 1)
+
+
+def _pulled_back(field: Array, onto_z: sparse.csr_array, onto_y: sparse.csr_array) -> Array:
+    """Weights of the data in a weighted sum of the field, R_zᵀ f R_y."""
+    weights: Array = onto_z.T @ field
+    # Few of the data's rows hold any weight where the box is small.
+    held = np.flatnonzero(weights.any(axis=1))
+    result = np.zeros((weights.shape[0], onto_y.shape[1]))
+    result[held] = (onto_y.T @ weights[held].T).T
+    return result
+
+
+def _product(left: sparse.csr_array, variance: Array | None = None) -> sparse.csr_array:
     """Covariance of a linear map of independent noise."""
     inner = left if variance is None else left * variance[None, :]
-    covariance: Array = sparse.csr_array(inner @ left.T).toarray()
-    return covariance
+    return sparse.csr_array(inner @ left.T)
 
 
 def _offset_weights(kernel: Kernel, nz: int, ny: int) -> Array:
@@ -178,13 +197,13 @@ def _offset_weights(kernel: Kernel, nz: int, ny: int) -> Array:
     return weights
 
 
-def _band(covariance: Array, least: float = _NEGLIGIBLE) -> int:
+def _band(covariance: Covariance, least: float = _NEGLIGIBLE) -> int:
     """Largest offset at which a covariance matrix is not negligible."""
-    i, j = np.nonzero(np.abs(covariance) > least * np.abs(covariance).max())
+    i, j = (abs(covariance) > least * abs(covariance).max()).nonzero()
     return int(np.abs(i - j).max()) if i.size else 0
 
 
-def _separable(covariance_z: Array, covariance_y: Array, weights: Array, mask: Array) -> float:
+def _separable(covariance_z: Covariance, covariance_y: Covariance, weights: Array, mask: Array) -> float:
     """Σ g C M M for a covariance that is a product of one symmetric matrix per axis."""
     band_z, band_y = _band(covariance_z), _band(covariance_y)
     if band_y < band_z:
@@ -192,6 +211,9 @@ def _separable(covariance_z: Array, covariance_y: Array, weights: Array, mask: A
         band_z = band_y
     nz, ny = mask.shape
     reach_y = _band(covariance_y, _ROUNDING)
+    covariance_z, covariance_y = (
+        one.toarray() if isinstance(one, sparse.csr_array) else one for one in (covariance_z, covariance_y)
+    )
     total = 0.0
     for offset in range(band_z + 1):
         forward, backward = _toeplitz(weights[nz - 1 + offset], ny), _toeplitz(weights[nz - 1 - offset], ny).T

@@ -152,6 +152,7 @@ def _between(
     # Along z: products of triangles in the same row and in neighbouring ones.
     nearby = padded_z[:, :-2] + padded_z[:, 1:-1] + padded_z[:, 2:]
     a, other_a = np.nonzero((first.along_z @ nearby.T) > 0)
+    of_first = sparse.csr_array(first.along_z)[a]
     total = np.zeros((a.size, len(pairs_y)))
     for shift in range(3):
         by_row = np.zeros((count, len(pairs_y)))
@@ -160,8 +161,8 @@ def _between(
             width = parts[shift].shape[1]
             by_row[rows, column : column + width] = parts[shift]
             column += width
-        products = first.along_z[a] * padded_z[other_a, shift : shift + count]
-        total += sparse.csr_array(products) @ by_row
+        of_second = sparse.csr_array(padded_z[:, shift : shift + count])[other_a]
+        total += of_first.multiply(of_second).tocsr() @ by_row
     along_first, along_second = np.array(pairs_y, dtype=np.int64).reshape(-1, 2).T
     numbers = first.number[a[:, None], along_first]
     others = second.number[other_a[:, None], along_second]

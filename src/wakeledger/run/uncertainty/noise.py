@@ -269,6 +269,8 @@ def _energy_gain(gridding: Gridding, variance: tuple[float, float]) -> float:
 
 def _operators(gridding: Gridding, *, odd: bool) -> tuple[sparse.csr_array, sparse.csr_array]:
     """Resampling along z and along y, without zeros."""
+    if gridding.kind == "uniform" and gridding.mirror is None:
+        return sparse.eye_array(gridding.grid.nz, format="csr"), sparse.eye_array(gridding.grid.ny, format="csr")
     operators = gridding.operators(odd=odd)
     assert operators is not None
     along_z, along_y = operators
