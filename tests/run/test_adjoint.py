@@ -7,12 +7,15 @@ rounding in absolute pressures of 1e5 Pa, so 1e-7 of the sum of squares is asked
 """
 
 import math
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 
+from wakeledger.confidence.sources import InputLayout
 from wakeledger.run.chain.adjoint import input_gradients, point_gradient
+from wakeledger.run.chain.adjoint_state import StateSlopes
 from wakeledger.run.chain.outputs import OUTPUTS
 from wakeledger.run.survey import load, prepare
 from wakeledger.stream.reference import Reference
@@ -221,3 +224,36 @@ def test_hole_pressures(raw_sample):
     # The inverse of a calibration has kinks between its cells, so that only a small step has the slope of the place.
     _, left = check(raw_sample, agree=1e-3, step=0.01, known=("profile_drag", "induced_drag", "lift"))
     assert "correction.displacement" in left
+
+
+@pytest.mark.parametrize("axes", [np.eye(3), np.array([[0.0, -1.0, 0.0], [0.0, 0.0, 1.0], [-1.0, 0.0, 0.0]])])
+def test_closed_form_of_a_point_is_its_own_difference(prepared, data, axes):
+    """Axes of the file turned and mounted askew, one channel normalised: closed forms against steps of the state."""
+    chain = prepared(VELOCITY + PRESSURE + ANGLES, data=noisy(data)).chain
+    points = chain.points
+    # The file's columns are what these axes make of the same flow.
+    turned = axes.T @ np.stack([points.channels[name].values for name in "uvw"])
+    channels = dict(points.channels) | {
+        name: replace(points.channels[name], values=row) for name, row in zip("uvw", turned, strict=True)
+    }
+    speed = chain.reference().speed
+    channels["v"] = replace(channels["v"], values=channels["v"].values / speed, normalised_by="speed")
+    chain = replace(
+        chain,
+        points=replace(points, channels=channels, axes=axes),
+        settings=replace(chain.settings, offsets=(0.05, -0.03, 0.02)),
+    )
+    errors = {"plane.w": 0.1 * np.sin(np.arange(points.n)), "angle.yaw": np.float64(0.004)}
+    slopes = StateSlopes(chain, errors)
+    assert slopes.pressures
+    wanted = frozenset({"u", "v", "w", "total_pressure", "static_pressure"})
+    for name in ("plane.u", "plane.v", "plane.w", "plane.total_pressure", "plane.static_pressure", "angle.pitch"):
+        single = name.startswith("angle")
+        layout = InputLayout(0.0 if single else channels[name.split(".")[1]].values)
+        closed, stepped = slopes(name, layout, wanted), slopes._by_steps(name, layout, wanted)
+        assert len(closed) >= 3
+        for field in wanted:
+            expected = np.nan_to_num(stepped[field])
+            found = closed.get(field, np.zeros(points.n))
+            # Steps lose what rounding of absolute pressures leaves: 1e-11 Pa over 1e-3 Pa.
+            np.testing.assert_allclose(found, expected, rtol=1e-6, atol=1e-6 * np.abs(expected).max() + 1e-7)
