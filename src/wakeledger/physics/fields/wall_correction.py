@@ -51,7 +51,9 @@ from wakeledger.physics.fields.section_setup import (
 )
 
 
-def wall_stream_function(vorticity: Array, grid: UniformGrid, boundary: Boundary, *, workers: int = 1) -> Array:
+def wall_stream_function(
+    vorticity: Array, grid: UniformGrid, boundary: Boundary, *, workers: int = 1, free: Array | None = None
+) -> Array:
     """Stream function of a window's vorticity with what surrounds it.
 
     Parameters
@@ -64,6 +66,8 @@ def wall_stream_function(vorticity: Array, grid: UniformGrid, boundary: Boundary
         What surrounds it.
     workers : int
         Threads of the transforms.
+    free : ndarray, shape (..., nz, ny), optional
+        Free-space stream function of the same vorticity, where it is known already.
 
     Returns
     -------
@@ -77,7 +81,7 @@ def wall_stream_function(vorticity: Array, grid: UniformGrid, boundary: Boundary
         If the window reaches across the reflection plane, or outside the section on a grid too fine for it.
     """
     condition: Condition = "no_gradient" if isinstance(boundary, OpenJet) else "zero"
-    return _solver(grid, boundary, condition, -1.0)(vorticity, workers=workers)
+    return _solver(grid, boundary, condition, -1.0)(vorticity, workers=workers, free=free)
 
 
 def wall_velocity_potential(divergence: Array, grid: UniformGrid, boundary: Boundary, *, workers: int = 1) -> Array:
@@ -190,13 +194,15 @@ class _Solver:
     factors: tuple[Array, ...] = ()
     inside: NDArray[np.bool_] | None = None
 
-    def __call__(self, field: Array, *, workers: int) -> Array:
+    def __call__(self, field: Array, *, workers: int, free: Array | None = None) -> Array:
         if self.inside is not None:
             field = np.where(self.inside, field, 0.0)
-        if self.base is None:
-            psi = stream_function(field, self.grid, workers=workers)
-        else:
+        if self.base is not None:
             psi = self.base(field, workers=workers)
+        elif free is not None and self.inside is None:
+            psi = free
+        else:
+            psi = stream_function(field, self.grid, workers=workers)
         if self.setup is None:
             return psi
         psi = psi + self._correction(self.setup, field)

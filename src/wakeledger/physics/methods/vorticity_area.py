@@ -107,7 +107,7 @@ def vorticity_forces(
     end-corrected: the vorticity is zero on the edge, where the plain sum is spectrally accurate.
     """
     free = stream_function(vorticity, grid)
-    psi = free if isinstance(boundary, FreeAir) else wall_stream_function(vorticity, grid, boundary)
+    psi = free if isinstance(boundary, FreeAir) else wall_stream_function(vorticity, grid, boundary, free=free)
     area = grid.cell_area
     y, z = grid.y, grid.z
     q = reference.density * reference.speed
