@@ -65,7 +65,7 @@ def facts(nominal, **changes):
 def findings(*, declared=0.12, shown=0.12, size=900.0, lengths=(math.nan, math.nan), cells=(), name="v"):
     """Noise of one channel, declared and shown."""
     by_neighbours = Shown(shown, lengths, size, sums_factor(cells))
-    return NoiseFindings((ChannelNoise(name, by_neighbours, declared, shared=False),), 50.0)
+    return NoiseFindings((ChannelNoise(name, by_neighbours, declared, shared=False, sources=("noise of v",)),), 50.0)
 
 
 GOOD = reduction()
@@ -90,7 +90,10 @@ def test_declared_noise_is_held_against_what_the_data_show(shown, verdict):
     factor = max(shown / 0.12, 0.12 / shown)
     assert check.value == pytest.approx(max(factor * 0.9317, 1.0), rel=1e-3)
     if verdict == "warn":
-        assert f"v {shown:.2g} m/s, declared 0.12 m/s" in check.message and "correct the size" in check.message
+        assert (
+            f"v {shown:.2g} m/s, declared 0.12 m/s" in check.message
+            and "correct the size of 'noise of v'" in check.message
+        )
 
 
 def test_few_points_do_not_call_a_declaration_wrong():

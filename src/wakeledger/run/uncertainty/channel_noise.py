@@ -7,7 +7,7 @@ Only these see what changes slowly. Nothing is changed on the data's word: one o
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -120,6 +120,8 @@ class ChannelNoise:
         By points that were taken again.
     matters : bool
         Whether the rows depend on it.
+    sources : tuple of str
+        Those that declare noise of it.
     """
 
     name: str
@@ -128,6 +130,7 @@ class ChannelNoise:
     shared: bool
     again: tuple[Again, ...] = ()
     matters: bool = True
+    sources: tuple[str, ...] = ()
 
     @property
     def words(self) -> str:
@@ -291,10 +294,9 @@ class NoiseFindings:
         ]
         found = []
         if wrong:
-            size = "size" if len(wrong) == 1 else "sizes"
             found.append(
                 f"The point-to-point noise shown by the data is not the declared one ({'; '.join(wrong)}): correct the"
-                f" {size} of its random source, or find what makes it so."
+                f" size of {self._named(one for one in self.channels if one.off > FACTOR)}, or find what makes it so."
             )
         if together:
             found.append(
@@ -349,6 +351,12 @@ class NoiseFindings:
             f"The data show noise that no source declares ({'; '.join(missing)}), so that it is in no uncertainty:"
             " declare it as a random source."
         )
+
+    @staticmethod
+    def _named(channels: Iterable[ChannelNoise]) -> str:
+        """The sources that declare noise of channels."""
+        names = dict.fromkeys(f"{name!r}" for one in channels for name in one.sources)
+        return " and ".join(names) or "its source"
 
     def _as_speed(self, one: ChannelNoise, deviation: float) -> float:
         return deviation / self.pressure_per_speed if CHANNELS[one.name][2] else deviation

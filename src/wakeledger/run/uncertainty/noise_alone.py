@@ -20,7 +20,7 @@ from wakeledger.run.uncertainty.channel_noise import CHANNELS
 from wakeledger.run.uncertainty.linear import linear_slopes, survey_budget, tried
 from wakeledger.run.uncertainty.noise_findings import file_noises
 
-_ROWS = ("profile_drag", "induced_drag", "total_drag", "lift")
+_DRAGS = ("profile_drag", "induced_drag", "total_drag")
 
 
 def noise_sources(prepared: Prepared) -> tuple[Source, ...]:
@@ -75,9 +75,12 @@ def noise_alone_notes(file: Survey, prepared: Prepared) -> tuple[str, ...]:
     sizes = dict(zip(OUTPUTS, budget.standard_uncertainty, strict=True))
     rows = [
         f"{row.replace('_', ' ')} {tables.counts_text(sizes[row], nominal, chain).lstrip('+')}"
-        for row in _ROWS
+        for row in _DRAGS
         if np.isfinite(sizes[row]) and np.isfinite(nominal.values[row])
     ]
+    share = sizes["lift"] / abs(nominal.values["lift"]) if nominal.values["lift"] else math.nan
+    if math.isfinite(share):
+        rows.append(f"lift {share:.2%}")
     if not rows:
         return ()
     shown = ", ".join(_text(prepared, source) for source in made)

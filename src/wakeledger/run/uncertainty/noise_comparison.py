@@ -91,10 +91,11 @@ def compare_noise(
     names = [name for name in CHANNELS if name in still]
     white, shared = dict.fromkeys(names, 0.0), dict.fromkeys(names, False)
     own = {
-        name: any(
-            source.effect != "systematic"
-            and any(each.startswith(recording.direct.get(name, ())) for each in source.applies_to)
+        name: tuple(
+            source.name
             for source in sources
+            if source.effect != "systematic"
+            and any(each.startswith(recording.direct.get(name, ())) for each in source.applies_to)
         )
         for name in names
     }
@@ -145,9 +146,10 @@ def compare_noise(
                 name,
                 recording.shown[name],
                 math.sqrt(white[name]) if own[name] else 0.0,
-                shared[name] and own[name],
+                shared[name] and bool(own[name]),
                 again[name],
                 matters=name not in recording.idle,
+                sources=own[name],
             )
             for name in names
         ),
