@@ -71,16 +71,33 @@ CASES: Mapping[str, Mapping[str, Any]] = {
     "three surveys": {"repeats": 3, "noise": "0.20 m/s", "total_pressure_noise": "2.0 Pa"},
     "lift": {"row": "lift", "target": "1 %", "noise": "0.30 m/s"},
     "flat sheet, bell loading": {"rolled_up": False, "loading": "bell", "row": "profile_drag"},
+    "half model": {"boundary": {"kind": "free_air", "reflection": "y"}},
+    "above the ground": {"boundary": {"kind": "free_air", "reflection": "z"}, "height": "0.40 m"},
+    "closed walls, half model": {
+        "boundary": {"kind": "closed_walls", "reflection": "y", "y": ["0 m", "1.0 m"], "z": ["-0.8 m", "0.8 m"]},
+        "row": "induced_drag",
+    },
+    "open jet": {
+        "boundary": {"kind": "open_jet", "section": "circle", "diameter": "2.4 m"},
+        "row": "induced_drag",
+        "noise": "0.20 m/s",
+    },
+    "compressible": {"speed": "120 m/s", "noise": "0.60 m/s", "total_pressure_noise": "10 Pa"},
 }
 
 
 def text_of(changes: Mapping[str, Any]) -> str:
     """The plan file of a case."""
     entries = {name: value for name, value in {**WING, **changes}.items() if value is not None}
-    lines = [f"{name} = {json.dumps(value)}" for name, value in entries.items()]
-    stream = '[reference]\nspeed = "40 m/s"\ndensity = "1.19 kg/m^3"\nstatic_pressure = "100.9 kPa"\n'
+    speed, boundary = entries.pop("speed", "40 m/s"), entries.pop("boundary", {"kind": "free_air"})
+    stream = f'[reference]\nspeed = "{speed}"\ndensity = "1.19 kg/m^3"\nstatic_pressure = "100.9 kPa"\n'
     model = '[model]\nreference_area = "0.165 m^2"\nspan = "1.10 m"\nmean_chord = "0.15 m"\n'
-    return stream + model + "[plan]\n" + "\n".join(lines) + "\n"
+    tables = (f"[{name}]\n" + _lines(table) for name, table in (("boundary", boundary), ("plan", entries)))
+    return stream + model + "".join(tables)
+
+
+def _lines(entries: Mapping[str, Any]) -> str:
+    return "".join(f"{name} = {json.dumps(value)}\n" for name, value in entries.items())
 
 
 def survey_of(

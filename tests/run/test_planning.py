@@ -15,12 +15,13 @@ from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.ledger.archive import write_archive
 from wakeledger.ledger.plan import PLAN_FORMAT
 from wakeledger.run.chain.outputs import coefficient_of
+from wakeledger.run.chain.places import zero_places
 from wakeledger.run.config.plan_file import parse_plan, read_plan
 from wakeledger.run.planning.expected import expected_flow
-from wakeledger.run.planning.instrument import of_holes, probes
+from wakeledger.run.planning.instrument import Probe, of_holes, probes
 from wakeledger.run.planning.response import respond, without_noise
 from wakeledger.run.planning.search import FACTOR
-from wakeledger.run.planning.simulate import Accuracies, declared, shift_of, simulated, visit, window_of
+from wakeledger.run.planning.simulate import Accuracies, declared, noise_of, shift_of, simulated, visit, window_of
 from wakeledger.run.planning.target import read_target
 from wakeledger.run.prepared import prepare
 from wakeledger.stream.reference import Reference
@@ -285,6 +286,88 @@ def test_a_better_probe_knows_more_and_a_finer_grid_too(small):
     assert (small.uncertainty[:, 0, 0] < small.uncertainty[:, 0, 1]).all()
     # The poor probe's noise is four times the good one's, and noise is not all there is.
     assert (poor < 5 * good).all() and (poor > 2 * good).all()
+
+
+# Closed forms
+
+
+@pytest.fixture(scope="module")
+def one_set_up(flow):
+    """A survey of the flow with its wake region: every 30 mm, rows along z."""
+    window = window_of(flow, 0.03, 0.3, rows_along="z")
+    places = visit(flow, window, (0.1, -0.2))
+    probe = Probe(0.1, 1.0, 0.0)
+    survey = declared(flow, probe, Accuracies())
+    noise = noise_of(probe, places.y.size, np.random.default_rng([4, 0]))
+    return places, probe, prepare(simulated(survey, places.points(noise)))
+
+
+def answer(flow, one_set_up, output, *, probe=None, largest=None):
+    places, own, _ = one_set_up
+    return respond(flow, probe or own, largest or Accuracies(), output=output, surveys=[places], seed=(4,))
+
+
+def weights(prepared):
+    """What a unit of total pressure at each grid point does to the profile drag, m²: inside less through the zero."""
+    mask = prepared.nominal.region.mask
+    inside = mask * 0.03**2
+    outer = zero_places(mask, prepared.nominal.flow.grid, prepared.chain.settings.zero_beyond)
+    return inside - inside.sum() * outer / outer.sum()
+
+
+def test_noise_of_the_total_pressure_adds_up_over_the_wake_region(flow, one_set_up):
+    """Profile drag is the loss summed over the region: σ times the root of the sum of the cells' squared areas."""
+    found = answer(flow, one_set_up, "profile_drag").noise["total pressure noise"]
+    expected = np.sum(weights(one_set_up[2]) ** 2)
+    # Where the loss is large, 2 − U/u < 1 stands before it: 2 % of the whole.
+    assert math.sqrt(found) == pytest.approx(1.0 * math.sqrt(expected), rel=0.03)
+
+
+@pytest.mark.parametrize("along", ["y", "z"])
+def test_drift_of_the_reference_adds_up_row_by_row(flow, one_set_up, along):
+    """One error for each row: the squares of the rows' own sums, far more than of as many points."""
+    places = visit(flow, window_of(flow, 0.03, 0.3, rows_along=along), (0.1, -0.2))
+    set_up = (places, *one_set_up[1:])
+    found = answer(flow, set_up, "profile_drag", largest=Accuracies(reference_drift=0.5))
+    rows = weights(one_set_up[2]).sum(axis=1 if along == "y" else 0)
+    assert math.sqrt(found.drift.at(0.5)) == pytest.approx(0.5 * math.sqrt(np.sum(rows**2)), rel=0.03)
+    # A tenth of the drift is a tenth of the uncertainty.
+    assert found.drift.at(0.05) == pytest.approx(found.drift.at(0.5) / 100, rel=1e-9)
+
+
+def test_accuracy_of_the_stream_is_that_of_the_coefficients(flow, one_set_up):
+    """A loss of total pressure is measured as such: its coefficient is as wrong as the dynamic pressure is."""
+    output = coefficient_of("profile_drag")
+    sizes = Accuracies(reference_accuracy=0.004, density_accuracy=0.002)
+    found = answer(flow, one_set_up, output, largest=sizes)
+    for key, size in (("reference_accuracy", 0.004), ("density_accuracy", 0.002)):
+        # Terms of the loss's square: 3 % of the drag.
+        assert math.sqrt(found.systematic[key].at(size)) == pytest.approx(size * flow.values[output], rel=0.05)
+    # Crossflow is direction times speed, so that its coefficients do not know the dynamic pressure.
+    lift = answer(flow, one_set_up, coefficient_of("lift"), largest=sizes)
+    u = math.sqrt(lift.systematic["reference_accuracy"].at(0.004))
+    assert u < 0.05 * 0.004 * flow.values[coefficient_of("lift")]
+
+
+def test_half_the_noise_is_half_the_random_part_and_repeats_divide_its_variance(flow, one_set_up):
+    sizes = Accuracies(reference_accuracy=0.004, reference_drift=0.5)
+    output = coefficient_of("total_drag")
+    # Less noise finds a larger wake region, unless that is given.
+    region = {"level": 100.0, "include": [[["-0.7 m", "-0.2 m"], ["0.7 m", "0.2 m"]]]}
+    flow = replace(flow, tables={**flow.tables, "wake": region})
+    full = answer(flow, one_set_up, output, largest=sizes)
+    half = answer(flow, one_set_up, output, largest=sizes, probe=Probe(0.05, 0.5, 0.0))
+    for name in ("velocity noise", "total pressure noise"):
+        # The derivatives are those at the noisy survey itself: 1 % of them is noise.
+        assert half.noise[name] == pytest.approx(full.noise[name] / 4, rel=0.02)
+    random = sum(full.noise.values()) + full.drift.at(0.5)
+    common = full.systematic["reference_accuracy"].at(0.004)
+    for n in (1, 2, 5):
+        assert full.measured(sizes, n) == pytest.approx(random / n + common, rel=1e-12)
+        assert full.scatter(sizes, n) == pytest.approx(random / n + common + full.missed, rel=1e-12)
+
+
+# What a grid misses
 
 
 def test_what_a_grid_misses_is_the_true_error_and_no_term_of_a_ledger(flow):
