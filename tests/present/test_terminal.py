@@ -4,11 +4,12 @@ import dataclasses
 import math
 from unicodedata import east_asian_width
 
+import numpy as np
 import pytest
 
 from wakeledger.core.flags import Flag
 from wakeledger.present.terminal import inspection_text, ledger_text
-from wakeledger.present.wording import STATEMENT, signed, words
+from wakeledger.present.wording import ABOUT_COUNTS, ABOUT_ERROR, ABOUT_U, ABOUT_U95, STATEMENT, signed, words
 
 ESCAPE = "\x1b"
 
@@ -143,3 +144,16 @@ def test_signs_of_differences():
 
 def test_every_flag_has_a_printed_name():
     assert all(words(str(flag.name).lower()) for flag in Flag)
+
+
+def test_the_signs_of_the_tables_are_explained_where_they_stand(ledger):
+    text = " ".join(ledger_text(ledger).split())
+    for sentence in (ABOUT_U95, ABOUT_U, ABOUT_COUNTS, ABOUT_ERROR):
+        assert text.count(sentence) == 1
+    assert text.endswith(STATEMENT)
+    rows = tuple(row for row in ledger.rows if row.name in ("lift", "span_efficiency"))
+    bare = dataclasses.replace(ledger, rows=rows, covariance=np.zeros((2, 2)), estimates=(), comparisons=())
+    text = " ".join(ledger_text(bare).split())
+    assert ABOUT_U95 in text
+    assert ABOUT_COUNTS not in text
+    assert "E_n" not in text

@@ -43,7 +43,8 @@ def run(command: click.Command, arguments: Sequence[str]) -> int:
         return INPUT_WRONG
     except click.UsageError as error:
         path = error.ctx.command_path if error.ctx else "wakeledger"
-        _say(f"{error.format_message().rstrip('.')}; see '{path} --help'")
+        said = error.format_message().rstrip(".")
+        _say(f"{said} See '{path} --help'" if said.endswith("?") else f"{said}; see '{path} --help'")
         return INPUT_WRONG
     except click.ClickException as error:
         _say(error.format_message())

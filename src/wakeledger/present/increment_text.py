@@ -18,7 +18,7 @@ from wakeledger.present.printing import (
     sentences_of,
     with_statement,
 )
-from wakeledger.present.wording import digits, grouped_reasons, printable, unit_text, words
+from wakeledger.present.wording import ABOUT_COUNTS, ABOUT_U95, digits, grouped_reasons, printable, unit_text, words
 
 if TYPE_CHECKING:
     from rich.console import RenderableType
@@ -80,7 +80,8 @@ def increment_text(increment: Increment, *, width: int = 100, colour: bool = Fal
     failed = [f"{name}: {text}" for name, side in (("A", increment.a), ("B", increment.b)) for text in side.failed]
     sentences_of(console, "Failed checks", failed)
     sentences_of(console, "Notes", increment.notes)
-    return with_statement(console)
+    about = "Uncancelled: the uncertainty of two separate surveys, nothing cancelling, in units of u."
+    return with_statement(console, ABOUT_U95, ABOUT_COUNTS, *([about] if console.width >= ROOMY else []))
 
 
 def main_row(increment: Increment) -> IncrementRow | None:
@@ -125,7 +126,7 @@ def figure_text(figure: Figure, scale: float = 1.0) -> tuple[str, str]:
 def _rows_table(rows: Sequence[IncrementRow], *, roomy: bool) -> Table:
     from rich.text import Text
 
-    apart = [("k", "right"), ("u, nothing cancelled", "right")] if roomy else []
+    apart = [("k", "right"), ("uncancelled", "right")] if roomy else []
     table = new_table(
         ("", "left"), ("B − A ± U95", "left"), ("unit", "left"), ("counts ± U95", "left"), *apart, ("", "left")
     )
@@ -182,9 +183,7 @@ def corrected_cells(increment: Increment) -> list[dict[str, str]]:
 def _corrected_table(cells: Sequence[dict[str, str]]) -> Table:
     from rich.text import Text
 
-    table = new_table(
-        ("", "left"), ("counts ± U95", "left"), ("k", "right"), ("u, nothing cancelled", "right"), ("", "left")
-    )
+    table = new_table(("", "left"), ("counts ± U95", "left"), ("k", "right"), ("uncancelled", "right"), ("", "left"))
     shown = joined([(line["counts"], line["expanded"]) for line in cells])
     for line, counts in zip(cells, shown, strict=True):
         ratio = "–" if line["ratio"] == "–" else f"{line['ratio']} u"

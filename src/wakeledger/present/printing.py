@@ -53,9 +53,23 @@ def text_of(console: Console) -> str:
     return "\n".join(line.rstrip() for line in file.getvalue().splitlines()) + "\n"
 
 
-def with_statement(console: Console) -> str:
-    """What was printed, closed by the sentence that stands below every printed result."""
+def with_statement(console: Console, *terms: str) -> str:
+    """What was printed, closed by the sentence that stands below every printed result.
+
+    Parameters
+    ----------
+    console : Console
+        Where it was printed.
+    *terms : str
+        What the signs in its tables mean, a sentence each.
+
+    Returns
+    -------
+    str
+    """
     console.print()
+    if terms:
+        console.print(" ".join(terms), style="dim")
     console.print(STATEMENT, style="dim")
     return text_of(console)
 

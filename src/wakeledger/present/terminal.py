@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from typing import TYPE_CHECKING
 
 from wakeledger.ledger.rounding import rounded, significant
@@ -42,6 +42,10 @@ from wakeledger.present.tunnel_text import (
     tunnel_tables,
 )
 from wakeledger.present.wording import (
+    ABOUT_COUNTS,
+    ABOUT_ERROR,
+    ABOUT_U,
+    ABOUT_U95,
     VERDICT_STYLES,
     VERDICT_WORDS,
     coefficient_text,
@@ -110,7 +114,17 @@ def ledger_text(ledger: Ledger, *, width: int = 100, colour: bool = False) -> st
     _checks(console, ledger.checks)
     _diagnostics(console, ledger)
     sentences_of(console, "Notes", ledger.notes)
-    return with_statement(console)
+    return with_statement(console, *_terms(ledger))
+
+
+def _terms(ledger: Ledger) -> Iterator[str]:
+    """What the signs mean that stand in the tables of this ledger."""
+    yield ABOUT_U95
+    yield ABOUT_U
+    if any(coefficient_text(row)[2] for row in ledger.rows):
+        yield ABOUT_COUNTS
+    if ledger.comparisons or any(one.estimates for one in (ledger, *ledger.stations)):
+        yield ABOUT_ERROR
 
 
 def inspection_text(inspection: Inspection, *, width: int = 100, colour: bool = False, unicode: bool = True) -> str:

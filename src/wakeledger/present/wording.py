@@ -19,6 +19,12 @@ STATEMENT = (
     "procedures or a test authority's limits."
 )
 
+#: Signs of the printed tables, each in a sentence.
+ABOUT_U95 = "U95: expanded uncertainty, half the interval that holds the true value with 95 % probability."
+ABOUT_U = "u: standard uncertainty (k = 1)."
+ABOUT_COUNTS = "One count is 0.0001 of a drag coefficient."
+ABOUT_ERROR = "E_n: difference, less the expected one, over its own expanded uncertainty; up to 1 the two agree."
+
 _SPECIAL: Mapping[str, str] = MappingProxyType(
     {
         "induced_drag_free_air": "induced drag, free air",

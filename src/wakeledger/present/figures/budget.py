@@ -90,8 +90,8 @@ def budget_figure(ledger: Ledger | Increment) -> Figure:
             axes.axvline(0, color=GREY, linewidth=0.6)
             axes.set_xlim(lowest, 118)
             axes.set_xticks([0, 50, 100])
-            axes.set_xlabel("share of variance, %")
             axes.tick_params(axis="y", length=0)
+        figure.supxlabel("share of the row's variance, %", fontsize="medium")
         panels[0].set_yticks(range(len(sources)), sources)
         panels[0].set_ylim(len(sources) - 0.5, -0.5)
     return figure
