@@ -6,6 +6,7 @@ Every bound is that which a sound error bar would break once in ten thousand cho
 import importlib.util
 import json
 import sys
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -149,3 +150,36 @@ def test_results_are_continued(coverage, tmp_path):
     file.write_text(json.dumps(one) + "\n" + json.dumps(one)[:20], encoding="utf-8")
     assert coverage.read(file, seed=3) == {"half": [one]}
     assert coverage.read(file, seed=4) == {}
+
+
+def test_draws_about_measured_values_are_too_wide_and_the_correction_takes_that_back(coverage):
+    """A static pressure off by one standard deviation to either side: the two points of Gauss's rule for its error.
+
+    The variance about the truth, both orders, is that of the errors. Of the quadratic row the mean over the two surveys
+    is that over all surveys.
+    """
+    made = coverage.survey(coverage.CASES["systematic"], np.random.default_rng(3))
+
+    def budget(off):
+        values = dict(made.exact.values)
+        values["static_pressure"] = values["static_pressure"] + off
+        given = replace(made.given, points=replace(made.exact, values=values).points())
+        prepared = coverage.made_ready(given)
+        return coverage.with_single_errors(prepared, coverage.closed_form(prepared, {}))
+
+    at = coverage.OUTPUTS.index("total_drag")
+    size = coverage.CASES["systematic"].systematic["static_pressure"]
+    truth = budget(0.0).total[at, at]
+    drawn, corrected = [], []
+    for off in (size, -size):
+        one = budget(off)
+        variance = np.diag(one.total)
+        drawn.append(variance[at])
+        factor = coverage.curvature_factor(variance, one.second_order**2, one.inflation)
+        corrected.append((factor**2 * variance)[at])
+        for row in ("profile_drag", "induced_drag", "lift"):
+            assert factor[coverage.OUTPUTS.index(row)] == 1.0
+    # The second order is a twelfth of the variance; the slopes hold twice that beside it.
+    assert np.mean(drawn) > 1.1 * truth
+    # The curvature along the row's own slope is left in.
+    assert truth < np.mean(corrected) < 1.06 * truth
