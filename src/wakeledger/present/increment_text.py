@@ -29,6 +29,9 @@ if TYPE_CHECKING:
 #: From this width on, the coverage factor and the uncertainty of two separate surveys are shown.
 ROOMY = 92
 
+#: Share of the largest source below which another is nothing but rounding.
+_ROUNDING = 1e-5
+
 #: Rows whose cancellations are printed: the first that there is.
 MAIN_ROWS = ("total_drag", "section_drag", "profile_drag")
 
@@ -195,14 +198,52 @@ def _cancellation_table(lines: Sequence[Cancellation], *, in_counts: bool) -> Ta
     table = new_table(
         ("source", "left"), ("shared_id", "left"), ("in A", "right"), ("in B", "right"), ("left in B − A", "right")
     )
+    whole = largest_part(lines, in_counts=in_counts)
     for line in lines:
         figures = (line.in_a, line.in_b, line.left)
         if in_counts:
             figures = (line.coefficient_in_a, line.coefficient_in_b, line.coefficient_left)
         scale = COUNT if in_counts else 1.0
         name = line.source_a if line.source_a == line.source_b else f"{line.source_a} / {line.source_b}"
-        table.add_row(printable(name), printable(line.shared_id), *(digits(figure / scale, 2) for figure in figures))
+        shown = (part_text(figure / scale, whole / scale) for figure in figures)
+        table.add_row(printable(name), printable(line.shared_id), *shown)
     return table
+
+
+def largest_part(lines: Sequence[Cancellation], *, in_counts: bool) -> float:
+    """The largest standard uncertainty of A or B from one of some shared sources.
+
+    Parameters
+    ----------
+    lines : sequence of Cancellation
+        The sources in one row.
+    in_counts : bool
+        Whether of the coefficient instead of the value.
+
+    Returns
+    -------
+    float
+    """
+    if in_counts:
+        return max(max(line.coefficient_in_a, line.coefficient_in_b) for line in lines)
+    return max(max(line.in_a, line.in_b) for line in lines)
+
+
+def part_text(figure: float, whole: float) -> str:
+    """What one source comes to, as it is printed; rounding errors of the whole are none.
+
+    Parameters
+    ----------
+    figure : float
+        Standard uncertainty from the source.
+    whole : float
+        Largest of such figures.
+
+    Returns
+    -------
+    str
+    """
+    return "0" if figure <= _ROUNDING * whole else digits(figure, 2)
 
 
 def _unit(row: IncrementRow) -> str:

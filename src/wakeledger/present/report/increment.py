@@ -8,8 +8,9 @@ from typing import TYPE_CHECKING, Any
 
 from wakeledger.ledger.rounding import rounded
 from wakeledger.ledger.rows import COUNT
-from wakeledger.present.increment_text import OUTCOMES, corrected_cells, figure_text
+from wakeledger.present.increment_text import OUTCOMES, corrected_cells, figure_text, largest_part, part_text
 from wakeledger.present.report.page import page, pictures
+from wakeledger.present.stations_text import head_of
 from wakeledger.present.wording import capital, digits, grouped_reasons, unit_text, words
 
 if TYPE_CHECKING:
@@ -104,12 +105,14 @@ def _cancelled(increment: Increment) -> list[dict[str, Any]]:
             continue
         in_counts = row.judged is row.coefficient
         entries = []
+        whole = largest_part(lines, in_counts=in_counts)
         for line in lines:
             figures = (line.in_a, line.in_b, line.left)
             if in_counts:
                 figures = (line.coefficient_in_a, line.coefficient_in_b, line.coefficient_left)
             name = line.source_a if line.source_a == line.source_b else f"{line.source_a} / {line.source_b}"
-            shown = [digits(figure / (COUNT if in_counts else 1.0), 2) for figure in figures]
+            scale = COUNT if in_counts else 1.0
+            shown = [part_text(figure / scale, whole / scale) for figure in figures]
             entries.append({"source": name, "shared_id": line.shared_id, "figures": shown})
         unit = "counts" if in_counts else unit_text(row.unit)
         blocks.append({"row": words(row.name), "unit": unit, "lines": entries})

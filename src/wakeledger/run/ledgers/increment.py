@@ -30,7 +30,7 @@ from wakeledger.ledger.rows import Ledger, Row
 from wakeledger.run import tables
 from wakeledger.run.config import Survey, parse_survey
 from wakeledger.run.ledgers.shared_points import shared_points_notes, unshared_points
-from wakeledger.run.ledgers.unlike import unlike
+from wakeledger.run.ledgers.unlike import is_computed, unlike
 
 if TYPE_CHECKING:
     from wakeledger.run.config import Source
@@ -343,7 +343,9 @@ def _why_not(a: Source, b: Source, difference: Difference, ledgers: tuple[Ledger
         for side, one in zip("AB", kept, strict=True)
         if one is not None and not any(each.shared_id == a.shared_id for each in one.points)
     ]
-    return _PER_POINT.format(side=" and ".join(lacking) or "one")
+    if not lacking:
+        return _OTHER_POINTS.format(why="those of several planes are of each plane by itself")
+    return _PER_POINT.format(side=" and ".join(lacking))
 
 
 def _shared_sources(surveys: Iterable[Survey]) -> dict[str, Source]:
@@ -372,37 +374,20 @@ def _budget_names(ledger: Ledger, kind: str) -> tuple[str, ...]:
 
 def _plane_notes(a: Ledger, b: Ledger) -> list[str]:
     """What is not followed where a ledger combines several planes, or none was measured."""
-    found = []
-    for side, ledger in (("A", a), ("B", b)):
-        if ledger.stations:
-            first = _stations_of(ledger)[0]
-            found.append(
-                f"The rows of {side} are combined from {len(ledger.stations)} planes; the difference of planes is taken"
-                f" with that at {first}. An error of single points counts as another one on each plane of a survey."
-            )
-    if all(_is_computed(ledger) for ledger in (a, b)):
+    sides = [(side, ledger) for side, ledger in (("A", a), ("B", b)) if ledger.stations]
+    found = [
+        f"The rows of {side} are combined from its planes at "
+        f"{', '.join(f'{one.station:g} m' for one in ledger.stations)}; B − A is that of the combined rows."
+        for side, ledger in sides
+    ]
+    if any(ledger.contributions is not None and ledger.contributions.points for _, ledger in sides):
+        found.append("An error of single points or rows counts as another one on each plane of a survey.")
+    if is_computed(a) and is_computed(b):
         found.append(
             "Both flows are computed: the uncertainty is numerical alone. What the solver, its mesh and its turbulence"
             " model do alike in both cancels in B − A, but by how much is not known, so that nothing was taken off."
         )
     return found
-
-
-def _stations_of(ledger: Ledger) -> list[str]:
-    """Where the planes of a combined ledger stand."""
-    return [f"{one.station:g} m" for one in ledger.stations]
-
-
-def _is_computed(ledger: Ledger) -> bool:
-    """Whether no error was measured: all that is known are numerical terms."""
-    kept = ledger.contributions
-    return (
-        kept is not None
-        and bool(kept.components)
-        and all(one.kind == NUMERICAL for one in kept.components)
-        and not kept.points
-        and not np.any(np.nan_to_num(kept.scatter))
-    )
 
 
 def _side(ledger: Ledger, file: str) -> Side:

@@ -26,7 +26,7 @@ from wakeledger.ledger.rounding import significant
 from wakeledger.ledger.rows import COUNT, Check, Ledger, Row
 from wakeledger.run import tables
 from wakeledger.run.ledgers.increment import contributions_of, declared_surveys, refuse_conflicts
-from wakeledger.run.ledgers.unlike import unlike
+from wakeledger.run.ledgers.unlike import is_computed, unlike
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -143,6 +143,12 @@ def _require_repeats(runs: Sequence[Ledger], files: Sequence[str]) -> None:
             raise InputError(
                 f"run {k} is a mean of runs itself", file=file or None, remedy="give the ledger of every single run"
             )
+        if is_computed(run):
+            raise InputError(
+                f"run {k} is computed, not measured: computations do not scatter by chance",
+                file=file or None,
+                remedy="`wakeledger grids` takes grids of one configuration, `wakeledger increment` a difference",
+            )
         digest = "|".join(sorted(run.inputs.values()))
         if digest and digest in seen:
             raise InputError(
@@ -172,19 +178,13 @@ Means = tuple[RepeatedMean | None, ...]
 
 
 def _not_followed(runs: Sequence[Ledger]) -> list[str]:
-    """What is not known of repeats of several planes, or of computed ones."""
-    found = []
-    if any(run.stations for run in runs):
-        found.append(
-            "The runs have several planes: the rows combine those that each run made of its planes, and the mean plane"
-            " is that of the first station of each."
-        )
-    if any(run.diagnostics for run in runs):
-        found.append(
-            "A run is computed: runs of one solver and mesh have their errors in common, so that their scatter says"
-            " nothing about them."
-        )
-    return found
+    """What is not followed where the runs have several planes."""
+    if not any(run.stations for run in runs):
+        return []
+    return [
+        "The runs have several planes: the rows combine those that each run made of its planes, and the mean plane is"
+        " that of the first station of each. The rows of the single stations are in the ledger of each run."
+    ]
 
 
 def _apart(parts: Sequence[Contributions]) -> dict[tuple[str, str], str]:

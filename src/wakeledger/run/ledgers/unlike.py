@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable, Sequence
 
+from wakeledger.confidence.components import MEASURED
 from wakeledger.ledger.rows import Ledger
 from wakeledger.ledger.units import SCALAR_UNITS
 from wakeledger.run.config import Survey
@@ -89,11 +90,30 @@ def unlike(
             )
     common = sorted(set(a.inputs.values()) & set(b.inputs.values()) & (_data(a, surveys_a) | _data(b, surveys_b)))
     if common:
-        found.append(
-            f"{one_name} and {other_name} are made from the same data: their random errors are the same ones, "
-            "which the uncertainty takes as independent."
+        what = (
+            "what its numerical errors have in common cancels, which the uncertainty does not know"
+            if is_computed(a) and is_computed(b)
+            else "their random errors are the same ones, which the uncertainty takes as independent"
         )
+        found.append(f"{one_name} and {other_name} are made from the same data: {what}.")
     return found
+
+
+def is_computed(ledger: Ledger) -> bool:
+    """Whether nothing was measured: the flow is computed, and all that is known are numerical terms.
+
+    Parameters
+    ----------
+    ledger : Ledger
+        A ledger.
+
+    Returns
+    -------
+    bool
+    """
+    kept = ledger.contributions
+    measured = kept is not None and (bool(kept.points) or any(one.kind == MEASURED for one in kept.components))
+    return bool(ledger.diagnostics) and not measured
 
 
 def _data(ledger: Ledger, surveys: Iterable[Survey]) -> set[str]:
