@@ -149,10 +149,10 @@ def test_text_variable(tmp_path):
 
 def test_volume_is_refused(tmp_path):
     def change(dataset):
-        dataset.createDimension("time", 2)
-        dataset.createVariable("series", "f8", ("time", "z", "y"))[...] = np.stack([U, U])
+        dataset.createDimension("level", 2)
+        dataset.createVariable("series", "f8", ("level", "z", "y"))[...] = np.stack([U, U])
 
-    with pytest.raises(DataError, match=r"3 dimensions \(time = 2, z = 3, y = 4\)"):
+    with pytest.raises(DataError, match=r"3 dimensions \(level = 2, z = 3, y = 4\)"):
         read_points(
             write(tmp_path / "plane.nc", change=change), COLUMNS | {"u": Column("series", "m/s")}, axes=IDENTITY
         )

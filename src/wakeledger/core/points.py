@@ -103,6 +103,8 @@ class Points:
     how : str
         How the points came out of a file that holds more than them: cut, taken at cell centres, merged; empty where
         they stand in it as they are.
+    averaged : str
+        What the values are means over, where the file holds many instants; empty where it holds one.
     """
 
     y: Array
@@ -117,6 +119,7 @@ class Points:
     triangles: NDArray[np.int64] | None = None
     areas: Array | None = None
     how: str = ""
+    averaged: str = ""
 
     @property
     def n(self) -> int:

@@ -301,6 +301,8 @@ def points_dataset(points: Points) -> xr.Dataset:
     dataset.attrs = {"file": points.source, "channels": " ".join(points.channels)}
     if points.how:
         dataset.attrs["how"] = points.how
+    if points.averaged:
+        dataset.attrs["averaged"] = points.averaged
     return dataset
 
 
@@ -365,4 +367,5 @@ def dataset_points(dataset: xr.Dataset) -> Points:
         triangles=counts("triangles"),
         areas=dataset["areas"].values if "areas" in dataset else None,
         how=str(dataset.attrs.get("how", "")),
+        averaged=str(dataset.attrs.get("averaged", "")),
     )

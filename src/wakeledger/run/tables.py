@@ -245,6 +245,8 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
         | (survey.points.z > grid.z[-1] + grid.dz)
     )
     window = survey_window(survey, state)
+    if survey.points.averaged:
+        found.append(f"The values are means over {survey.points.averaged}.")
     if survey.points.how:
         found.append(f"The points come from a computed flow: {survey.points.how}.")
     if beyond and window is not None:

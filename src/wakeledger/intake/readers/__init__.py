@@ -106,6 +106,9 @@ def read_points(
         kind_of = dict(zip(paths, kinds, strict=True))
         raw = read_joined(paths, wanted, lambda one, some: _read(one, kind_of[one], some, cut))
     named = _named(wanted)
+    # Of a set of instants the reader has found the scatter itself.
+    named |= {key: named[key.removeprefix("std.")] for key in raw.values if key.startswith("std.") and key not in named}
+    named.setdefault("samples", Column("samples", "1"))
     _refuse_infinite(raw, named, file)
     y, z = _positions(raw, columns, axes, file)
     channels = {}
@@ -133,6 +136,7 @@ def read_points(
         triangles=raw.triangles,
         areas=None if raw.areas is None else named["x"].scale ** 2 * raw.areas,
         how=raw.how,
+        averaged=raw.averaged,
     )
 
 

@@ -49,6 +49,8 @@ class RawColumns:
         stand for cells.
     how : str
         How the points came out of a file that holds more than them.
+    averaged : str
+        What was averaged where the file holds many instants.
     """
 
     values: Mapping[str, Array]
@@ -57,6 +59,7 @@ class RawColumns:
     triangles: NDArray[np.int64] | None = None
     areas: Array | None = None
     how: str = ""
+    averaged: str = ""
 
 
 @dataclass(frozen=True)

@@ -125,4 +125,4 @@ def _joined(parts: Sequence[RawColumns], held: Sequence[Mapping[str, Column]], p
         return f"{name}, {part.place(int(own[i]), column)}"
 
     head = parts[0]
-    return RawColumns(values, head.line, place, head.triangles, head.areas, head.how)
+    return RawColumns(values, head.line, place, head.triangles, head.areas, head.how, head.averaged)

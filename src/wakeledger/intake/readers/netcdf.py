@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -11,8 +12,15 @@ import numpy as np
 from wakeledger.core.errors import DataError
 from wakeledger.core.grid import Array
 from wakeledger.core.points import Column
-from wakeledger.intake.readers.columns import Cut, RawColumns, missing_column, refuse_contradicting_unit
-from wakeledger.intake.readers.fields import as_points
+from wakeledger.intake.readers.columns import (
+    POSITIONS,
+    Cut,
+    RawColumns,
+    missing_column,
+    refuse_contradicting_unit,
+)
+from wakeledger.intake.readers.fields import Dimensioned, as_points
+from wakeledger.intake.readers.instants import Instants, read_instants, time_dimension
 
 
 def read_netcdf(path: Path, columns: Mapping[str, Column], cut: Cut | None = None) -> RawColumns:
@@ -43,7 +51,7 @@ def read_netcdf(path: Path, columns: Mapping[str, Column], cut: Cut | None = Non
 
     try:
         with netCDF4.Dataset(path) as dataset:
-            arrays = {key: _read(dataset, key, column) for key, column in columns.items()}
+            arrays, averaged = _averaged({key: _read(dataset, key, column) for key, column in columns.items()}, columns)
     except DataError as error:
         raise error.located(file=path) from None
     except (OSError, RuntimeError) as error:
@@ -51,12 +59,51 @@ def read_netcdf(path: Path, columns: Mapping[str, Column], cut: Cut | None = Non
             f"the file begins like netCDF but cannot be read ({error})", file=path, remedy="write the file again"
         ) from None
     try:
-        return as_points(arrays, columns, cut, path, what="variable")
+        return replace(as_points(arrays, columns, cut, path, what="variable"), averaged=averaged)
     except DataError as error:
         raise error.located(file=path) from None
 
 
-def _read(dataset: Any, key: str, column: Column) -> tuple[tuple[str, ...], Array]:
+def _averaged(
+    read: Mapping[str, tuple[tuple[str, ...], Array | Instants]], columns: Mapping[str, Column]
+) -> tuple[dict[str, Dimensioned], str]:
+    """Arrays of one plane: sets of instants as means, with the standard deviation and number of samples beside them."""
+    arrays: dict[str, Dimensioned] = {}
+    counts: list[tuple[tuple[str, ...], Instants]] = []
+    for key, (dimensions, values) in read.items():
+        if not isinstance(values, Instants):
+            arrays[key] = dimensions, values
+            continue
+        if key.startswith("std.") or key == "samples" or key in POSITIONS:
+            raise DataError(
+                "the variable changes with time",
+                place=f"variable {columns[key].column!r}",
+                remedy="name a variable of the plane alone; of a set of instants the scatter is found from the values",
+            )
+        arrays[key] = dimensions, values.mean
+        arrays.setdefault(f"std.{key}", (dimensions, values.deviation))
+        if key != "velocity":
+            counts.append((dimensions, values))
+        else:
+            axis = values.count.shape.index(3) if values.count.shape[-1] != 3 else values.count.ndim - 1
+            rest = tuple(name for i, name in enumerate(dimensions) if i != axis)
+            counts.append((rest, replace(values, count=values.count.min(axis=axis))))
+    if not counts:
+        return arrays, ""
+    dimensions, first = counts[0]
+    alike = max((one.alike for _, one in counts if np.isfinite(one.alike)), default=float("nan"))
+    fewest = np.min([one.count for held, one in counts if held == dimensions], axis=0)
+    worth = np.maximum(1, np.rint(fewest / (alike if np.isfinite(alike) else 1.0)))
+    arrays.setdefault("samples", (dimensions, worth))
+    said = f"{int(first.count.max())} instants"
+    if not np.isfinite(alike):
+        said += ", too few to show whether neighbouring ones resemble each other: each counts as independent"
+    elif worth.max() < first.count.max():
+        said += f", which are worth {int(worth.max())} independent ones as neighbouring instants resemble each other"
+    return arrays, said
+
+
+def _read(dataset: Any, key: str, column: Column) -> tuple[tuple[str, ...], Array | Instants]:
     name = column.column.strip()
     place = f"variable {name!r}"
     try:
@@ -72,6 +119,17 @@ def _read(dataset: Any, key: str, column: Column) -> tuple[tuple[str, ...], Arra
             refuse_contradicting_unit(stated, key, column, strict=True)
         except DataError as error:
             raise error.located(place=place) from None
+    holder = variable.group() if hasattr(variable, "group") else dataset
+    instants = time_dimension(holder, variable)
+    if instants is not None and len(dimensions) > 1:
+        found = read_instants(variable, instants)
+        left = tuple(name for i, name in enumerate(dimensions) if i != instants)
+        keep = tuple(i for i, length in enumerate(found.mean.shape) if length != 1)
+        shape = tuple(found.mean.shape[i] for i in keep)
+        plane = Instants(
+            found.mean.reshape(shape), found.deviation.reshape(shape), found.count.reshape(shape), found.alike
+        )
+        return tuple(left[i] for i in keep), plane
     values = np.ma.filled(np.ma.asarray(variable[...]).astype(np.float64), np.nan)
     if values.size == 0:
         raise DataError("the variable is empty", place=place, remedy="give a file that holds the points of the plane")
