@@ -4,6 +4,7 @@ import netCDF4
 import numpy as np
 import pytest
 
+from wakeledger.core.errors import DataError
 from wakeledger.core.points import Column
 from wakeledger.intake.readers import instants, read_points
 
@@ -90,6 +91,27 @@ def test_dimension_that_counts_instants(tmp_path, name, attributes):
 
 def test_few_instants_count_as_they_are(tmp_path):
     assert set(read(write(tmp_path / "set.nc", 20)).samples.tolist()) == {20}
+
+
+def test_a_probe_that_travels_in_time_is_no_set_of_instants(tmp_path):
+    path = tmp_path / "rake.nc"
+    with netCDF4.Dataset(path, "w") as dataset:
+        dataset.createDimension("time", Z.size)
+        dataset.createDimension("tube", Y.size)
+        dataset.createVariable("y", "f8", ("tube",))[:] = Y
+        dataset.createVariable("z", "f8", ("time",))[:] = Z
+        for name, mean in MEAN.items():
+            dataset.createVariable(name, "f8", ("time", "tube"))[...] = mean
+    points = read(path)
+    assert points.n == 54
+    assert not points.std
+    assert not points.averaged
+    np.testing.assert_allclose(points.channels["v"].values, 1.0 + 3.0 * (points.z + points.y), rtol=1e-12)
+
+
+def test_scatter_that_changes_with_time_is_refused(tmp_path):
+    with pytest.raises(DataError, match="changes with time"):
+        read_points(write(tmp_path / "set.nc", 80), COLUMNS, axes=np.eye(3), std={"v": Column("W", "m/s")})
 
 
 class Counted:

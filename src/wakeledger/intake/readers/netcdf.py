@@ -22,6 +22,8 @@ from wakeledger.intake.readers.columns import (
 from wakeledger.intake.readers.fields import Dimensioned, as_points
 from wakeledger.intake.readers.instants import Instants, read_instants, time_dimension
 
+_ALONG_PLACES = frozenset({*POSITIONS, "row", "tube", "roll", "time"})
+
 
 def read_netcdf(path: Path, columns: Mapping[str, Column], cut: Cut | None = None) -> RawColumns:
     """Read the named variables of a netCDF file as points.
@@ -51,7 +53,10 @@ def read_netcdf(path: Path, columns: Mapping[str, Column], cut: Cut | None = Non
 
     try:
         with netCDF4.Dataset(path) as dataset:
-            arrays, averaged = _averaged({key: _read(dataset, key, column) for key, column in columns.items()}, columns)
+            along = _dimensions_of_places(dataset, columns)
+            arrays, averaged = _averaged(
+                {key: _read(dataset, key, column, along) for key, column in columns.items()}, columns
+            )
     except DataError as error:
         raise error.located(file=path) from None
     except (OSError, RuntimeError) as error:
@@ -64,6 +69,17 @@ def read_netcdf(path: Path, columns: Mapping[str, Column], cut: Cut | None = Non
         raise error.located(file=path) from None
 
 
+def _dimensions_of_places(dataset: Any, columns: Mapping[str, Column]) -> frozenset[str]:
+    """Dimensions along which places differ: a probe that travels is somewhere else at every instant."""
+    found: set[str] = set()
+    for key in _ALONG_PLACES & set(columns):
+        try:
+            found |= set(dataset[columns[key].column.strip()].dimensions)
+        except (IndexError, KeyError, AttributeError):
+            continue
+    return frozenset(found)
+
+
 def _averaged(
     read: Mapping[str, tuple[tuple[str, ...], Array | Instants]], columns: Mapping[str, Column]
 ) -> tuple[dict[str, Dimensioned], str]:
@@ -74,7 +90,7 @@ def _averaged(
         if not isinstance(values, Instants):
             arrays[key] = dimensions, values
             continue
-        if key.startswith("std.") or key == "samples" or key in POSITIONS:
+        if key.startswith("std.") or key == "samples":
             raise DataError(
                 "the variable changes with time",
                 place=f"variable {columns[key].column!r}",
@@ -103,7 +119,7 @@ def _averaged(
     return arrays, said
 
 
-def _read(dataset: Any, key: str, column: Column) -> tuple[tuple[str, ...], Array | Instants]:
+def _read(dataset: Any, key: str, column: Column, along: frozenset[str]) -> tuple[tuple[str, ...], Array | Instants]:
     name = column.column.strip()
     place = f"variable {name!r}"
     try:
@@ -121,7 +137,7 @@ def _read(dataset: Any, key: str, column: Column) -> tuple[tuple[str, ...], Arra
             raise error.located(place=place) from None
     holder = variable.group() if hasattr(variable, "group") else dataset
     instants = time_dimension(holder, variable)
-    if instants is not None and len(dimensions) > 1:
+    if instants is not None and len(dimensions) > 1 and dimensions[instants] not in along:
         found = read_instants(variable, instants)
         left = tuple(name for i, name in enumerate(dimensions) if i != instants)
         keep = tuple(i for i, length in enumerate(found.mean.shape) if length != 1)
