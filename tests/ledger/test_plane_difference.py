@@ -7,7 +7,7 @@ import numpy as np
 from wakeledger.core.grid import UniformGrid
 from wakeledger.core.plane import make_plane
 from wakeledger.core.traverse import make_traverse
-from wakeledger.ledger.plane_difference import plane_difference
+from wakeledger.ledger.plane_difference import plane_difference, plane_differences
 from wakeledger.ledger.plane_mean import plane_mean
 
 
@@ -97,3 +97,48 @@ def test_mean_of_planes(ledger):
     y, z = np.meshgrid(mean["y"], mean["z"])
     np.testing.assert_allclose(mean["v"], 2 * field(y, z), rtol=1e-9, atol=1e-12)
     assert "coarsest" in note
+
+
+def stations(ledger, grid, factors):
+    planes = [
+        dataclasses.replace(one, plane=one.plane.assign_coords(x=x))
+        for x, factor in factors.items()
+        for one in [of(ledger, grid, factor)]
+    ]
+    return dataclasses.replace(planes[0], stations=tuple(planes) if len(planes) > 1 else ())
+
+
+def test_planes_are_subtracted_station_by_station_in_any_order(ledger):
+    grid = UniformGrid(-1.0, -0.5, 0.1, 0.1, 21, 11)
+    a = stations(ledger, grid, {1.0: 1.0, 2.0: 10.0, 3.0: 5.0})
+    b = stations(ledger, grid, {2.0: 13.0, 1.0: 3.0})
+    found, notes = plane_differences(a, b)
+    assert [float(one["x"]) for one in found] == [1.0, 2.0]
+    y, z = grid.mesh()
+    for one, change in zip(found, (2.0, 3.0), strict=True):
+        # Planes that stand as they are: rounding alone.
+        np.testing.assert_allclose(one["axial_vorticity"], change * field(y, z) / 40.0, rtol=1e-12, atol=1e-14)
+    assert notes[0].startswith("Planes at 1 m: Both planes have the same places")
+    assert notes[-1] == "Only A has a plane at 3 m: no difference of planes was taken there."
+
+
+def test_a_single_plane_is_held_against_the_one_at_its_station(ledger):
+    grid = UniformGrid(-1.0, -0.5, 0.1, 0.1, 21, 11)
+    a = stations(ledger, grid, {1.0: 1.0, 2.0: 10.0})
+    (found,), notes = plane_differences(a, stations(ledger, grid, {2.0: 7.0}))
+    y, z = grid.mesh()
+    np.testing.assert_allclose(found["axial_vorticity"], -3 * field(y, z) / 40.0, rtol=1e-12, atol=1e-14)
+    assert "Only A has a plane at 1 m" in notes[-1]
+
+
+def test_planes_without_a_common_station_are_said_to_stand_apart(ledger):
+    grid = UniformGrid(-1.0, -0.5, 0.1, 0.1, 21, 11)
+    (found,), (note,) = plane_differences(
+        stations(ledger, grid, {1.0: 1.0, 2.0: 10.0}), stations(ledger, grid, {4.0: 3.0})
+    )
+    assert "x" not in found.coords
+    assert note.startswith("Plane of A at 1 m and of B at 4 m: ")
+    # One plane each: as it always was.
+    single, (said,) = plane_differences(stations(ledger, grid, {1.0: 1.0}), stations(ledger, grid, {1.0: 2.0}))
+    assert said.startswith("Both planes have the same places")
+    assert len(single) == 1

@@ -241,7 +241,10 @@ class Increment:
     notes : tuple of str
         Sentences about the choices that were made.
     plane : Dataset or None
-        Difference of the planes (`wakeledger.ledger.plane_difference`).
+        Difference of the planes (`wakeledger.ledger.plane_difference`); of several stations, at the first that both
+        have, which is its coordinate ``x``.
+    further_planes : tuple of Dataset
+        The same at the other stations that both ledgers have.
     provenance : mapping of str to str
         Package versions, ``command`` and ``time`` (UTC, ISO 8601).
     """
@@ -256,6 +259,7 @@ class Increment:
     warnings: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
     plane: xr.Dataset | None = None
+    further_planes: tuple[xr.Dataset, ...] = ()
     provenance: Mapping[str, str] = field(default_factory=lambda: MappingProxyType({}))
 
     def row(self, name: str) -> IncrementRow:
@@ -443,6 +447,8 @@ def increment_csv(increment: Increment) -> str:
 def write_increment_archive(increment: Increment, path: Path) -> None:
     """Write an increment as a netCDF-4 file: the rows at the root, the difference of the planes in the group ``plane``.
 
+    Differences at further stations are in the groups ``plane_2``, ``plane_3`` and so on.
+
     Parameters
     ----------
     increment : Increment
@@ -466,6 +472,8 @@ def write_increment_archive(increment: Increment, path: Path) -> None:
     write_group(root, path, group=None, mode="w")
     if increment.plane is not None:
         write_group(increment.plane, path, group="plane", mode="a")
+    for number, plane in enumerate(increment.further_planes, start=2):
+        write_group(plane, path, group=f"plane_{number}", mode="a")
 
 
 def ordered_budget(rows: Sequence[str], variances: Mapping[str, NDArray[np.float64]]) -> tuple[BudgetLine, ...]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
@@ -92,6 +93,49 @@ def plane_difference(a: Ledger, b: Ledger) -> tuple[xr.Dataset | None, str]:
         "windows, by bicubic splines"
     )
     return dataset, f"{how} ({y.size} x {z.size} places, {steps}, {window})."
+
+
+def plane_differences(a: Ledger, b: Ledger) -> tuple[tuple[xr.Dataset, ...], tuple[str, ...]]:
+    """Planes of B minus planes of A, at every station that both ledgers have.
+
+    Parameters
+    ----------
+    a, b : Ledger
+        The ledgers, of one plane or of several.
+
+    Returns
+    -------
+    datasets : tuple of Dataset
+        As `plane_difference`, in the order of A's planes; where both stand at one station, with that as the coordinate
+        ``x``. Where there is no common station, the difference of the first planes.
+    notes : tuple of str
+        What was done, and which planes have no counterpart.
+    """
+    of_a, of_b = a.stations or (a,), b.stations or (b,)
+    several = len(of_a) + len(of_b) > 2
+    pairs = [(one, other) for one in of_a for other in of_b if _at_one_station(one, other)]
+    if not pairs:
+        dataset, note = plane_difference(of_a[0], of_b[0])
+        if several:
+            note = f"Plane of A at {of_a[0].station:g} m and of B at {of_b[0].station:g} m: {note}"
+        return () if dataset is None else (dataset,), (note,)
+    found, notes = [], []
+    for one, other in pairs:
+        dataset, note = plane_difference(one, other)
+        if dataset is not None:
+            attributes = {"units": "m", "long_name": "distance behind the trailing edge"}
+            found.append(dataset.assign_coords(x=((), one.station, attributes)))
+        notes.append(f"Planes at {one.station:g} m: {note}" if several else note)
+    for name, planes, others in (("A", of_a, of_b), ("B", of_b, of_a)):
+        left = [one.station for one in planes if not any(_at_one_station(one, other) for other in others)]
+        if left:
+            listed = ", ".join(f"{station:g} m" for station in left)
+            notes.append(f"Only {name} has a plane at {listed}: no difference of planes was taken there.")
+    return tuple(found), tuple(notes)
+
+
+def _at_one_station(a: Ledger, b: Ledger) -> bool:
+    return math.isclose(a.station, b.station, rel_tol=_SAME, abs_tol=_SAME)
 
 
 def _traverse_difference(a: Ledger, b: Ledger, along: tuple[str | None, str | None]) -> tuple[xr.Dataset | None, str]:

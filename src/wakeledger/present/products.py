@@ -120,7 +120,9 @@ def _is_figure(name: str) -> bool:
     """Whether a file of this name is a figure that one of the commands writes."""
     from wakeledger.present.figures import FORMATS, gallery, grid_series, increment
 
-    whole = "|".join((*gallery.OF_LEDGER, *gallery.OF_PLANE, *increment.DRAWINGS, *grid_series.DRAWINGS))
+    whole = "|".join(
+        (*gallery.OF_LEDGER, *gallery.OF_PLANE, *increment.OF_INCREMENT, *increment.OF_PLANES, *grid_series.DRAWINGS)
+    )
     return re.fullmatch(rf"({whole})(_plane_\d+)?\.({'|'.join(FORMATS)})", name) is not None
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from dataclasses import replace
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
@@ -239,14 +240,23 @@ def _along_line(increment: Increment) -> bool:
     return increment.plane is not None and len(increment.plane.sizes) == 1
 
 
-#: Figures of an increment by the names of their files.
-DRAWINGS: dict[str, Drawing[Increment]] = {
+#: Figures of an increment as a whole, by the names of their files.
+OF_INCREMENT: dict[str, Drawing[Increment]] = {
     "increments": Drawing(
         increments_figure,
         lambda increment: any(_drawable(row) for row in increment.rows),
         "Each row's change over its expanded uncertainty. Outside the grey band it is resolved; the wide bars show the "
         "uncertainty if nothing cancelled.",
     ),
+    "increment_budget": Drawing(
+        budget_figure,
+        lambda increment: any(math.isfinite(line.share) for line in increment.budget),
+        "Share of each source in the variance of the main increments.",
+    ),
+}
+
+#: Figures of the difference of two planes.
+OF_PLANES: dict[str, Drawing[Increment]] = {
     "loss_difference": Drawing(
         loss_difference_map,
         _in_plane("total_pressure_loss"),
@@ -262,14 +272,26 @@ DRAWINGS: dict[str, Drawing[Increment]] = {
     "traverse_difference": Drawing(
         traverse_difference_figure, _along_line, "Loss along both traverses and its change."
     ),
-    "increment_budget": Drawing(
-        budget_figure,
-        lambda increment: any(math.isfinite(line.share) for line in increment.budget),
-        "Share of each source in the variance of the main increments.",
-    ),
 }
 
 
+def differences_of(increment: Increment) -> tuple[Increment, ...]:
+    """The increment with the difference of planes of each station; itself where there is one."""
+    if not increment.further_planes:
+        return (increment,)
+    return tuple(
+        replace(increment, plane=plane, further_planes=()) for plane in (increment.plane, *increment.further_planes)
+    )
+
+
+def name_in(increment: Increment, name: str, number: int) -> str:
+    """Name of a figure of one difference, counted from 0: with its number where there are several."""
+    return f"{name}_plane_{number + 1}" if increment.further_planes else name
+
+
 def draw_increment(increment: Increment) -> dict[str, Figure]:
-    """Every figure the increment has what is needed for, by the names of `DRAWINGS`."""
-    return drawn(DRAWINGS, increment)
+    """Every figure the increment has what is needed for, by the names of `OF_INCREMENT` and `OF_PLANES`."""
+    found = drawn(OF_INCREMENT, increment)
+    for k, one in enumerate(differences_of(increment)):
+        found |= {name_in(increment, name, k): figure for name, figure in drawn(OF_PLANES, one).items()}
+    return found

@@ -18,7 +18,6 @@ if TYPE_CHECKING:
 
     from wakeledger.ledger.increment import Increment
 
-_MAPS = ("loss_difference", "vorticity_difference", "traverse_difference")
 _CLASSES = {True: "pass", False: "not_applicable", None: "unknown"}
 
 
@@ -37,9 +36,9 @@ def increment_html(increment: Increment, figures: Mapping[str, Figure] | None = 
     str
         A whole HTML document without external resources; the same increment gives the same text.
     """
-    from wakeledger.present.figures.increment import DRAWINGS, draw_increment
+    from wakeledger.present.figures.increment import OF_INCREMENT, draw_increment
 
-    shown = pictures(draw_increment(increment) if figures is None else figures, DRAWINGS)
+    drawn = draw_increment(increment) if figures is None else figures
     return page(
         "increment.html",
         provenance=increment.provenance,
@@ -55,9 +54,26 @@ def increment_html(increment: Increment, figures: Mapping[str, Figure] | None = 
             *(f"In {name} a check failed: {text}" for name, side in _sides(increment) for text in side.failed),
         ],
         sides=_sides(increment),
-        maps=[shown[name] for name in _MAPS if name in shown],
-        pictures=shown,
+        planes=_planes(increment, drawn),
+        pictures=pictures(drawn, OF_INCREMENT),
     )
+
+
+def _planes(increment: Increment, drawn: Mapping[str, Figure]) -> list[dict[str, Any]]:
+    """Maps of the change at each station."""
+    from wakeledger.present.figures.increment import OF_PLANES, differences_of, name_in
+
+    found = []
+    for k, one in enumerate(differences_of(increment)):
+        named = {name: drawn[own] for name in OF_PLANES if (own := name_in(increment, name, k)) in drawn}
+        known = increment.further_planes and one.plane is not None
+        found.append(
+            {
+                "head": head_of(float(one.plane["x"])) if known and one.plane is not None else "",
+                "maps": list(pictures(named, OF_PLANES).values()),
+            }
+        )
+    return [one for one in found if one["maps"]]
 
 
 def _sides(increment: Increment) -> tuple[tuple[str, Any], ...]:

@@ -25,7 +25,7 @@ from wakeledger.ledger.increment import (
     Side,
     ordered_budget,
 )
-from wakeledger.ledger.plane_difference import plane_difference
+from wakeledger.ledger.plane_difference import plane_differences
 from wakeledger.ledger.rows import Ledger, Row
 from wakeledger.run import tables
 from wakeledger.run.config import Survey, parse_survey
@@ -100,7 +100,7 @@ def increment(a: Ledger | str | PathLike[str], b: Ledger | str | PathLike[str], 
     covariance = np.full((len(names), len(names)), np.nan)
     at = [names.index(name) for name in known]
     covariance[np.ix_(at, at)] = difference.covariance[0]
-    plane, note = plane_difference(first, second)
+    planes, plane_notes = plane_differences(first, second)
     only = [
         f"Only {side} has {_listed(row.name for row in one.rows if row.name not in names)}."
         for side, one in (("A", first), ("B", second))
@@ -115,8 +115,9 @@ def increment(a: Ledger | str | PathLike[str], b: Ledger | str | PathLike[str], 
         not_cancelled=_not_cancelled(first, second, *surveys, difference),
         budget=ordered_budget(known, {name: variance[0] for name, variance in difference.by_source.items()}),
         warnings=(*unlike(first, second, *surveys), *unshared_points(first, second, *surveys, difference)),
-        notes=(*only, *shared_points_notes(difference), *_plane_notes(first, second), note),
-        plane=plane,
+        notes=(*only, *shared_points_notes(difference), *_plane_notes(first, second), *plane_notes),
+        plane=planes[0] if planes else None,
+        further_planes=planes[1:],
         provenance=tables.provenance(command),
     )
 
