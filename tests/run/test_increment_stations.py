@@ -73,6 +73,8 @@ def test_errors_of_points_cancel_plane_by_plane(kit, ledgers):
     assert row.uncancelled_uncertainty > 2 * row.standard_uncertainty
     notes = " ".join(found.notes)
     assert "rows of A are combined from its planes at 500 m, 900 m" in notes
+    assert [float(one["x"]) for one in (found.plane, *found.further_planes)] == [500.0, 900.0]
+    assert "Planes at 900 m: " in notes
     assert "counts as another one on each plane" in notes
 
 
