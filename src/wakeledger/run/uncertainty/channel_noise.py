@@ -352,6 +352,16 @@ class NoiseFindings:
             " declare it as a random source."
         )
 
+    @property
+    def _ratios(self) -> str:
+        """Shown over declared noise by channel; where only re-visits show any, theirs."""
+        found = []
+        for one in self.compared:
+            ratios = [one.ratio] + [each.scatter.deviation / each.declared for each in one.again if each.declared > 0]
+            known = [ratio for ratio in ratios if math.isfinite(ratio)]
+            found += [f"{one.words} {known[0]:.2g}"] if known else []
+        return f"shown over declared: {', '.join(found)}"
+
     @staticmethod
     def _named(channels: Iterable[ChannelNoise]) -> str:
         """The sources that declare noise of channels."""
@@ -379,7 +389,6 @@ class NoiseFindings:
         drift = self.drift
         return {
             "not_applicable": missing,
-            "pass": "The data show the noise that is declared, as far as they tell"
-            f" ({', '.join(one.words for one in self.compared)}).",
+            "pass": f"The data show the noise that is declared, as far as they tell ({self._ratios}).",
             "warn": " ".join([*self.disagreements, *([drift] if drift else [])]),
         }
