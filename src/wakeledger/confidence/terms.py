@@ -30,6 +30,8 @@ class NumericalTerm:
         sign**: outputs that move together have one sign, and so get their covariance. NaN where it is unknown.
     distribution : {"normal", "rectangular", "triangular", "arcsine"}
         Distribution of the cause.
+    note : str
+        A sentence about how it was found; empty where there is nothing to be said.
 
     Raises
     ------
@@ -40,6 +42,7 @@ class NumericalTerm:
     name: str
     standard_uncertainty: Array
     distribution: Distribution = "normal"
+    note: str = ""
 
     def __post_init__(self) -> None:
         allowed = get_args(Distribution)

@@ -43,7 +43,7 @@ from wakeledger.run.section.survey import reduce_section
 from wakeledger.run.stations import reduce_stations
 from wakeledger.run.traverse.probe_range import probe_range
 from wakeledger.run.tunnel import tunnel_figures
-from wakeledger.run.uncertainty.draws import Propagated, numerical_only, propagate, terms_of
+from wakeledger.run.uncertainty.draws import Propagated, numerical_only, propagate, terms_of, with_notes
 from wakeledger.run.uncertainty.method_choice import choice_terms, spread_notes
 from wakeledger.run.uncertainty.noise_alone import noise_alone_notes
 from wakeledger.run.uncertainty.propagation import propagation, propagation_notes
@@ -124,14 +124,15 @@ def reduce(
     if prepared.sources and prepared.nominal.region.mask.any():
         try:
             terms = terms_of(prepared, survey)
+            prepared = with_notes(prepared, terms)
             found = propagate(prepared, terms, draws=count, seed=uncertainty.seed, progress=progress, choice=choice)
             samples, held, budget = known(found.samples), known(found.held), found.budget
         except InputError as error:
             raise error.located(file=survey.survey.path) from error
     elif survey.computed and prepared.nominal.region.mask.any():
-        samples, held, budget = numerical_only(
-            prepared, terms_of(prepared, survey), draws=count, seed=uncertainty.seed, choice=choice
-        )
+        terms = terms_of(prepared, survey)
+        prepared = with_notes(prepared, terms)
+        samples, held, budget = numerical_only(prepared, terms, draws=count, seed=uncertainty.seed, choice=choice)
         samples, held = known(samples), known(held)
     rows = _rows(prepared, samples, budget=budget, reason=reason)
     ledger = _ledger(

@@ -44,7 +44,7 @@ def make_gridding(
         Largest spacing of the grid (along y and z), m. By default uniform lines are kept, and other lines are resampled
         to the finest part of their spacing. Uniform lines that are too far apart are subdivided.
     degree : {3, 5}, optional
-        Degree of the splines.
+        Degree of the splines, or of the radial functions between scattered points.
     max_cells : int, optional
         Most cells of a resampled grid.
     mesh : bool, optional
@@ -78,7 +78,7 @@ def make_gridding(
         raise ValueError(f"row must have one entry for each of the {y.size} points, {rows.shape} was given")
     if lattice is not None:
         return make_tensor(lattice, usable, rows, spacing=steps, degree=degree, max_cells=max_cells)
-    return make_scattered(y, z, usable, rows, spacing=steps, max_cells=max_cells, mesh=mesh)
+    return make_scattered(y, z, usable, rows, spacing=steps, max_cells=max_cells, mesh=mesh, degree=degree)
 
 
 def _refuse_degenerate(y: Array, z: Array, usable: NDArray[np.bool_]) -> None:

@@ -98,6 +98,7 @@ def make_scattered(
     grid: UniformGrid | None = None,
     present: NDArray[np.bool_] | None = None,
     mesh: bool = False,
+    degree: int = 3,
 ) -> Gridding:
     """Grid scattered points.
 
@@ -119,6 +120,8 @@ def make_scattered(
         Points that count at all, usable or not; all by default.
     mesh : bool
         Whether the points are those of a mesh that was made for the flow; else that is told from how they stand.
+    degree : {3, 5}
+        Power of the distance in the radial functions.
 
     Returns
     -------
@@ -169,7 +172,7 @@ def make_scattered(
         part = np.flatnonzero(level[inside] == each)
         squeezed = np.array([1.0, STEP ** float(each)])
         tree = cKDTree(scaled / squeezed)
-        block = _interpolation(scaled / squeezed, tree, cells[inside[part]] / squeezed, stretch=stretch)
+        block = _interpolation(scaled / squeezed, tree, cells[inside[part]] / squeezed, stretch=stretch, degree=degree)
         blocks.append(_tamed(block, net, cells[inside[part]], simplex[inside[part]]) if mesh_like else block)
         order.append(part)
     back = np.argsort(np.concatenate(order), kind="stable")
@@ -335,7 +338,7 @@ def _tamed(matrix: Any, mesh: Any, cells: Array, simplex: NDArray[np.intp]) -> A
     return sparse.csr_array(sparse.diags_array((~wild).astype(float)) @ matrix + linear)
 
 
-def _interpolation(places: Array, tree: Any, cells: Array, *, stretch: Array) -> Any:
+def _interpolation(places: Array, tree: Any, cells: Array, *, stretch: Array, degree: int) -> Any:
     """Interpolation from places to cells, sparse, shape (cells, places).
 
     Neighbours are the nearest in units of the spacing along each axis, so that they surround the cell; the radial
@@ -348,22 +351,22 @@ def _interpolation(places: Array, tree: Any, cells: Array, *, stretch: Array) ->
         part = slice(begin, begin + _CHUNK)
         reach = distance[part, -1][:, None, None]
         offset = (places[index[part]] - cells[part, None, :]) / reach
-        found, missed = _local_weights(offset, offset * stretch, _POWERS)
+        found, missed = _local_weights(offset, offset * stretch, _POWERS, degree)
         poor = np.flatnonzero(missed > _MISSED)
         if poor.size:
             # Neighbours on one circle (the innermost of a polar traverse) or on few lines carry no cubic polynomial.
-            found[poor] = _local_weights(offset[poor], offset[poor] * stretch, _LINEAR_POWERS)[0]
+            found[poor] = _local_weights(offset[poor], offset[poor] * stretch, _LINEAR_POWERS, 3)[0]
         weights[part] = found
     rows = np.repeat(np.arange(cells.shape[0]), k)
     return sparse.csr_array((weights.ravel(), (rows, index.ravel())), shape=(cells.shape[0], places.shape[0]))
 
 
-def _local_weights(offset: Array, true: Array, polynomials: list[tuple[int, int]]) -> tuple[Array, Array]:
+def _local_weights(offset: Array, true: Array, polynomials: list[tuple[int, int]], degree: int) -> tuple[Array, Array]:
     """Weights of the neighbours of each cell, shape (cells, k), and by how much they miss the polynomials there."""
     k, q = offset.shape[1], len(polynomials)
     system = np.zeros((offset.shape[0], k + q, k + q))
-    system[:, :k, :k] = _cube_of_length(
-        true[:, :, None, 0] - true[:, None, :, 0], true[:, :, None, 1] - true[:, None, :, 1]
+    system[:, :k, :k] = _power_of_length(
+        true[:, :, None, 0] - true[:, None, :, 0], true[:, :, None, 1] - true[:, None, :, 1], degree
     )
     powers = np.stack([offset[..., 0] ** i * offset[..., 1] ** j for i, j in polynomials], axis=-1)
     system[:, :k, k:] = powers
@@ -371,13 +374,14 @@ def _local_weights(offset: Array, true: Array, polynomials: list[tuple[int, int]
     # Keeps the system solvable where the neighbours do not tell all polynomials apart.
     system[:, range(k, k + q), range(k, k + q)] = -1e-12
     right = np.zeros((offset.shape[0], k + q, 1))
-    right[:, :k, 0] = _cube_of_length(true[..., 0], true[..., 1])
+    right[:, :k, 0] = _power_of_length(true[..., 0], true[..., 1], degree)
     right[:, k + polynomials.index((0, 0)), 0] = 1.0
     weights = np.linalg.solve(system, right)[:, :k, 0]
     missed: Array = np.abs(np.einsum("ckq,ck->cq", powers, weights) - right[:, k:, 0]).max(axis=1)
     return weights, missed
 
 
-def _cube_of_length(y: Array, z: Array) -> Array:
+def _power_of_length(y: Array, z: Array, degree: int) -> Array:
     square = y * y + z * z
-    return square * np.sqrt(square)
+    power: Array = (square if degree == 3 else square**2) * np.sqrt(square)
+    return power

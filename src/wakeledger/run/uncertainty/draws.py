@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -21,11 +21,12 @@ from wakeledger.physics.methods.wake_line import path_scatter
 from wakeledger.run.chain.estimates import counted_mask, without_walls
 from wakeledger.run.chain.outputs import OUTPUTS, ROWS, coefficient_of, corrected_coefficient_of, estimate_of
 from wakeledger.run.computed import mesh_term
-from wakeledger.run.gridded import regrid_of
+from wakeledger.run.gridded import core_spacings, regrid_of
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.prepared import Prepared
 from wakeledger.run.uncertainty.linear import linear_slopes, paired, separated, survey_budget, tried, with_prediction
 from wakeledger.run.uncertainty.numerics import numerical_terms
+from wakeledger.run.uncertainty.spacing import Cores
 
 #: Draws that tell the wake region's own effect from that of noise.
 _NOISE_DRAWS = 16
@@ -55,6 +56,11 @@ def terms_of(prepared: Prepared, survey: SurveyInput) -> tuple[NumericalTerm, ..
     tuple of NumericalTerm
     """
     own = mesh_term(survey, prepared.chain, prepared.nominal) if survey.computed else None
+    vortices = prepared.vortices.vortices
+    about = [(one, one) for one in core_spacings(prepared.chain, vortices)]
+    if prepared.chain.gridding.operators() is None:
+        # Between scattered points it is the interpolation that errs, not the differences on its fine grid.
+        vortices, about = (), []
     found = numerical_terms(
         prepared.chain,
         prepared.nominal,
@@ -62,8 +68,14 @@ def terms_of(prepared: Prepared, survey: SurveyInput) -> tuple[NumericalTerm, ..
         regrid=regrid_of(survey, prepared.chain.state(prepared.nominal.reference)),
         method_uncertainty=_method_uncertainty(prepared),
         noise=_noise_draws(prepared, seed=survey.survey.uncertainty.seed),
+        cores=Cores(vortices, about or [prepared.chain.gridding.raw_spacing] * len(vortices)),
     )
     return found if own is None else (*found, own)
+
+
+def with_notes(prepared: Prepared, terms: Sequence[NumericalTerm]) -> Prepared:
+    """The survey with what its numerical terms have to say among its notes."""
+    return replace(prepared, notes=(*prepared.notes, *(term.note for term in terms if term.note)))
 
 
 def _method_uncertainty(prepared: Prepared) -> dict[str, float]:

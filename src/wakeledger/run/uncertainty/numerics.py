@@ -14,7 +14,7 @@ import numpy as np
 from wakeledger.confidence.terms import NumericalTerm
 from wakeledger.core.errors import DataError
 from wakeledger.core.grid import Array
-from wakeledger.physics.fields.outer_flow import OuterFlow
+from wakeledger.physics.fields.outer_flow import LEAST_SHARE, OuterFlow
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.physics.methods.residual import residual_drag
 from wakeledger.run.chain.chain import Chain
@@ -22,11 +22,15 @@ from wakeledger.run.chain.outputs import OUTPUTS, coefficient_of, estimate_of
 from wakeledger.run.chain.places import sampled_mask
 from wakeledger.run.chain.reduction import Reduction, Variation
 from wakeledger.run.gridded import Regrid
+from wakeledger.run.uncertainty.changes import changes
 from wakeledger.run.uncertainty.gaps import gap_draws
+from wakeledger.run.uncertainty.spacing import CORES as CORES
+from wakeledger.run.uncertainty.spacing import FROZEN, NO_CORES, Cores, core_term, spacing_term
+from wakeledger.run.uncertainty.spacing import ORDER as ORDER
+from wakeledger.run.uncertainty.spacing import RESOLUTION as RESOLUTION
 from wakeledger.run.uncertainty.wake_edge import MASK as MASK
 from wakeledger.run.uncertainty.wake_edge import mask_term
 
-RESOLUTION = "spacing of the points"
 RESAMPLING = "spline between the points"
 GAPS = "filled points"
 LOSS_ZERO = "zero of the total pressure"
@@ -41,11 +45,11 @@ SPLIT = "border between profile and wave drag"
 PRESSURE = "static pressure that was not measured"
 METHOD = "choices inside {}"
 
-#: Order claimed when a decimated grid is extrapolated; the observed order between h/a = 0.5 and 1 is 4 to 8.
-ORDER = 3.0
 #: Doubt of what the bound vortex's predicted disturbance takes out of the residual, as a share of it (k = 1): the bound
 #: line is taken as straight and level.
 PAIR_DOUBT = 0.2
+#: Shift that shows which outputs hang on a zero, SI.
+_TRIED = 1e-3
 #: Factors on a distance that bound the plausible choices.
 SWEEP = (0.5, 1.5)
 #: Estimates that integrate over the same region as a row, and so share its doubt.
@@ -53,12 +57,6 @@ _SAME_REGION = {
     estimate_of("profile_drag", "entropy_area"): "profile_drag",
     estimate_of("induced_drag", "wake_line"): "induced_drag",
     estimate_of("lift", "wake_line"): "lift",
-}
-#: Outputs that are evaluated on geometry frozen at the nominal grid: their own method uncertainty covers them.
-_FROZEN = {
-    estimate_of("induced_drag", "wake_line"),
-    estimate_of("induced_drag", "vortex_sum"),
-    estimate_of("lift", "wake_line"),
 }
 
 
@@ -70,6 +68,7 @@ def numerical_terms(
     regrid: Regrid,
     method_uncertainty: Mapping[str, float],
     noise: Sequence[Mapping[str, Array]] = (),
+    cores: Cores = NO_CORES,
 ) -> tuple[NumericalTerm, ...]:
     """All numerical terms of one plane.
 
@@ -87,6 +86,8 @@ def numerical_terms(
         Standard uncertainty that an estimate's own method adds, by output, N.
     noise : sequence of mapping
         A few draws of the random errors alone, to tell the region's own effect from theirs.
+    cores : Cores
+        Vortices of the plane.
 
     Returns
     -------
@@ -96,26 +97,27 @@ def numerical_terms(
     edge = mask_term(chain, nominal, noise)
     terms: list[NumericalTerm | None] = [
         replace(edge, standard_uncertainty=_followed(edge.standard_uncertainty)),
-        _resolution_term(chain, nominal),
+        spacing_term(chain, nominal, noise, cores),
+        core_term(chain, nominal, cores),
     ]
-    if chain.gridding.kind == "tensor":
+    if chain.gridding.kind != "uniform":
         terms.append(_resampling_term(chain, nominal, regrid))
     if chain.gridding.filled.any():
         terms.append(_gap_term(chain, nominal, regrid, noise))
-    terms.append(_shift_term(chain, nominal, LOSS_ZERO, Variation(loss_shift=outer.loss_zero_uncertainty)))
-    shift = outer.offset_uncertainty
-    both = [
-        _deviation(chain, nominal, Variation(crossflow_shift=pair)) if np.isfinite(shift) else None
-        for pair in ((shift, 0.0), (0.0, shift))
-    ]
-    if np.isfinite(outer.swirl_uncertainty):
-        terms.append(NumericalTerm(SWIRL, _deviation(chain, nominal, Variation(swirl_shift=outer.swirl_uncertainty))))
+    # Where too little outer flow is left, no zero is taken out, and what is not done has no doubt of its own: by how
+    # much the pressures and the direction are off is for the declared sources to say.
+    if outer.share >= LEAST_SHARE:
+        terms += [
+            _shifted(chain, nominal, LOSS_ZERO, outer.loss_zero_uncertainty, lambda size: [Variation(loss_shift=size)]),
+            _shifted(chain, nominal, OFFSET_ZERO, outer.offset_uncertainty, _both_offsets),
+        ]
+        if chain.swirls:
+            terms.append(
+                _shifted(chain, nominal, SWIRL, outer.swirl_uncertainty, lambda size: [Variation(swirl_shift=size)])
+            )
     terms.append(_edge_term(chain, nominal, noise))
     if regrid.cut:
         terms.append(_cut_term(chain, nominal, regrid))
-    known = [one for one in both if one is not None]
-    if known:
-        terms.append(NumericalTerm(OFFSET_ZERO, np.sqrt(sum(one**2 for one in known))))
     if chain.settings.primary == "velocity" and not {"total_pressure", "static_pressure"} & chain.measured:
         terms.append(_pressure_term(chain, nominal))
     terms.append(_pair_term(chain, nominal))
@@ -123,18 +125,14 @@ def numerical_terms(
         terms.append(_split_term(nominal))
     for name, value in method_uncertainty.items():
         vector = np.zeros(len(OUTPUTS))
-        vector[OUTPUTS.index(name)] = value if np.isfinite(value) else 0.0
+        # Of an estimate that has no value nothing is in doubt; one whose method's doubt is unknown is itself unknown.
+        vector[OUTPUTS.index(name)] = value if np.isfinite(nominal.values[name]) else 0.0
         terms.append(NumericalTerm(METHOD.format(name), vector))
     return tuple(term for term in terms if term is not None)
 
 
-def _difference(vector: Array, nominal: Reduction) -> Array:
-    """Change of the outputs; zero where either is not known, which the row itself then says."""
-    return np.nan_to_num(vector - nominal.vector)
-
-
 def _deviation(chain: Chain, nominal: Reduction, vary: Variation) -> Array:
-    return _difference(chain.reduce(vary=vary).vector, nominal)
+    return changes(chain.reduce(vary=vary).vector, nominal.vector)
 
 
 def _beyond_noise(change: Callable[[Mapping[str, Array]], Array], noise: Sequence[Mapping[str, Array]]) -> Array:
@@ -167,32 +165,18 @@ def _edge_term(chain: Chain, nominal: Reduction, noise: Sequence[Mapping[str, Ar
             chain.reduce(errors, vary=Variation(mask=region), estimates=False).vector
             for region in (mask & ~strip, mask)
         )
-        return np.nan_to_num(without - same)
+        return changes(without, same, estimates=False)
 
     return NumericalTerm(EDGE, _followed(_beyond_noise(change, noise)), "rectangular")
-
-
-def _resolution_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
-    found = []
-    for phase in ((0, 0), (0, 1), (1, 0), (1, 1)):
-        try:
-            coarse = chain.with_gridding(chain.gridding.decimated(2, phase=phase))
-        except DataError:
-            continue
-        mask = sampled_mask(nominal.region.mask, nominal.flow.grid, coarse.gridding.grid)
-        found.append(coarse.reduce(vary=Variation(mask=mask)).vector)
-    if not found:
-        return NumericalTerm(RESOLUTION, np.full(len(OUTPUTS), np.nan))
-    change = np.nan_to_num(np.mean(found, axis=0) - nominal.vector) / (2**ORDER - 1)
-    change[[OUTPUTS.index(name) for name in _FROZEN]] = 0.0
-    return NumericalTerm(RESOLUTION, change)
 
 
 def _resampling_term(chain: Chain, nominal: Reduction, regrid: Regrid) -> NumericalTerm:
     other = chain.with_gridding(regrid(degree=5, spacing=(nominal.flow.grid.dy, nominal.flow.grid.dz)))
     same = other.gridding.grid.shape == nominal.flow.grid.shape
     vary = Variation(mask=nominal.region.mask if same else None)
-    return NumericalTerm(RESAMPLING, _difference(other.reduce(vary=vary).vector, nominal))
+    found = changes(other.reduce(vary=vary).vector, nominal.vector)
+    found[[OUTPUTS.index(name) for name in FROZEN]] = 0.0
+    return NumericalTerm(RESAMPLING, found)
 
 
 def _pressure_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
@@ -220,8 +204,15 @@ def _pair_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
     for row in ("residual_drag", "total_drag"):
         vector[OUTPUTS.index(row)] = doubt
         coefficient, value = nominal.values[coefficient_of(row)], nominal.values[row]
-        vector[OUTPUTS.index(coefficient_of(row))] = np.nan_to_num(doubt * coefficient / value) if value else 0.0
+        vector[OUTPUTS.index(coefficient_of(row))] = _scaled(doubt, coefficient, value)
     return NumericalTerm(PAIR, vector)
+
+
+def _scaled(change: float, coefficient: float, value: float) -> float:
+    """What a change of a row is to its coefficient; a coefficient without a value has no doubt."""
+    if not np.isfinite(coefficient):
+        return 0.0
+    return change * coefficient / value if value else float("nan")
 
 
 def _split_term(nominal: Reduction) -> NumericalTerm:
@@ -230,17 +221,16 @@ def _split_term(nominal: Reduction) -> NumericalTerm:
     for row, sign in (("profile_drag", -1.0), ("wave_drag", 1.0)):
         vector[OUTPUTS.index(row)] = sign * nominal.split_uncertainty
         coefficient, value = nominal.values[coefficient_of(row)], nominal.values[row]
-        scale = coefficient / value if value else np.nan
-        vector[OUTPUTS.index(coefficient_of(row))] = np.nan_to_num(sign * nominal.split_uncertainty * scale)
+        vector[OUTPUTS.index(coefficient_of(row))] = _scaled(sign * nominal.split_uncertainty, coefficient, value)
     return NumericalTerm(SPLIT, vector)
 
 
 def _gap_term(chain: Chain, nominal: Reduction, regrid: Regrid, noise: Sequence[Mapping[str, Array]]) -> NumericalTerm:
     """What the gaps may have held, given the data around them; where those do not tell, what filling does beside."""
-    changes = gap_draws(chain, nominal, noise)
-    if changes is None:
+    drawn = gap_draws(chain, nominal, noise)
+    if drawn is None:
         return _pattern_term(chain, nominal, regrid)
-    known = np.nan_to_num(changes)
+    known = np.where(np.isfinite(nominal.vector), drawn, 0.0)
     size = np.sqrt(np.mean(np.square(known), axis=0))
     # Rows that the gaps move together with the drag have its sign.
     together = np.sign(known.T @ known[:, OUTPUTS.index(nominal.drag)])
@@ -252,7 +242,7 @@ def _pattern_term(chain: Chain, nominal: Reduction, regrid: Regrid) -> Numerical
     state = chain.state(nominal.reference)
     usable = np.isfinite(state.v) & np.isfinite(state.w)
     inside = ~usable
-    changes = []
+    found = []
     step_y, step_z = chain.gridding.raw_spacing
     places = np.stack([chain.points.y, chain.points.z], axis=1)
     gap = places[inside]
@@ -275,12 +265,12 @@ def _pattern_term(chain: Chain, nominal: Reduction, regrid: Regrid) -> Numerical
             continue
         trial = replace(chain, gridding=gridding)
         vector = trial.reduce(vary=Variation(mask=nominal.region.mask)).vector
-        changes.append(_difference(vector, nominal))
-    if not changes:
+        found.append(changes(vector, nominal.vector))
+    if not found:
         # No such pattern fits beside the gaps: all that the filled places contribute is in doubt.
         without = nominal.region.mask & ~chain.gridding.filled
         return NumericalTerm(GAPS, _deviation(chain, nominal, Variation(mask=without)))
-    return NumericalTerm(GAPS, np.sqrt(np.mean(np.square(changes), axis=0)))
+    return NumericalTerm(GAPS, np.sqrt(np.mean(np.square(found), axis=0)))
 
 
 def _cut_term(chain: Chain, nominal: Reduction, regrid: Regrid) -> NumericalTerm | None:
@@ -294,8 +284,8 @@ def _cut_term(chain: Chain, nominal: Reduction, regrid: Regrid) -> NumericalTerm
         other = chain.with_gridding(gridding)
         if chain.empty is not None:
             other = replace(other, empty=chain.empty.with_cut(factor))
-        found.append(_difference(other.reduce(vary=vary).vector, nominal))
-    frozen = [OUTPUTS.index(name) for name in _FROZEN]
+        found.append(changes(other.reduce(vary=vary).vector, nominal.vector))
+    frozen = [OUTPUTS.index(name) for name in FROZEN]
     size = np.abs(found).max(axis=0)
     size[frozen] = 0.0
     return NumericalTerm(CUT, size / np.sqrt(3), "rectangular")
@@ -319,7 +309,16 @@ def _nearest(places: Array, wanted: Array, spacing: tuple[float, float]) -> Mask
     return found
 
 
-def _shift_term(chain: Chain, nominal: Reduction, name: str, vary: Variation) -> NumericalTerm | None:
-    if not np.isfinite(vary.loss_shift):
-        return None
-    return NumericalTerm(name, _deviation(chain, nominal, vary))
+def _both_offsets(size: float) -> list[Variation]:
+    return [Variation(crossflow_shift=pair) for pair in ((size, 0.0), (0.0, size))]
+
+
+def _shifted(
+    chain: Chain, nominal: Reduction, name: str, size: float, varied: Callable[[float], Sequence[Variation]]
+) -> NumericalTerm:
+    """What the doubt of a zero moves, several shifts added in squares; what hangs on it is unknown where that is."""
+    found = [_deviation(chain, nominal, vary) for vary in varied(size if np.isfinite(size) else _TRIED)]
+    vector = found[0] if len(found) == 1 else np.sqrt(sum(np.square(one) for one in found))
+    if not np.isfinite(size):
+        vector = np.where(vector == 0, 0.0, np.nan)
+    return NumericalTerm(name, vector)

@@ -215,6 +215,7 @@ def _shown_noise(chain: Chain, nominal: Reduction, rings: Sequence[Mask]) -> Arr
     if chain.settings.computed:
         return square
     flow, grid, mask = nominal.flow, nominal.flow.grid, nominal.region.mask
+    # Noise that cannot be told takes nothing off.
     v, w, total = (
         np.nan_to_num(estimate_noise(field, mask=mask).standard_deviation)
         for field in (flow.v, flow.w, flow.total_pressure)
