@@ -344,7 +344,28 @@ def table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
     return markdown_table(heads.split(", "), lines)
 
 
-_BEGIN, _END = "<!-- generated: begin -->", "<!-- generated: end -->"
+def together(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
+    """Markdown table of all cases in one; the coefficients."""
+    found = [one for own in studies.values() for one in own]
+    error, u, half = (column(found, name)[:, 1] for name in ("error", "u", "half_width"))
+    ratio = 1 / np.sqrt(np.square(error / u).mean(axis=0))
+    lines = [
+        [
+            row,
+            str(len(found)),
+            share_text(np.abs(error[:, k]) <= half[:, k]),
+            f"{ratio[k]:.3f} ± {1 / math.sqrt(2 * len(found)):.3f}",
+        ]
+        for k, row in enumerate(JUDGED)
+    ]
+    return markdown_table(["row, all cases", "pairs", "true increment inside U95", "u / scatter"], lines)
+
+
+#: The tables of the page, between their marks.
+TABLES = {
+    ("<!-- generated: begin -->", "<!-- generated: end -->"): table,
+    ("<!-- generated: together -->", "<!-- end -->"): together,
+}
 
 
 def main(arguments: Sequence[str] | None = None) -> None:
@@ -362,11 +383,14 @@ def main(arguments: Sequence[str] | None = None) -> None:
     wanted = [task for case in options.case or CASES for task in tasks(case, options.pairs, seed=options.seed)]
     continued(options.results, done, [task for task in wanted if (task[0], task[2]) not in known], jobs=options.jobs)
     found = read(options.results, seed=options.seed)
-    text = table({case: found[case] for case in options.case or CASES if case in found})
-    print(text)
+    studies = {case: found[case] for case in options.case or CASES if case in found}
+    for make in TABLES.values():
+        print(make(studies), end="\n\n")
     if options.write:
         page = options.write.read_text(encoding="utf-8")
-        options.write.write_text(with_block(page, _BEGIN, _END, text), encoding="utf-8")
+        for marks, make in TABLES.items():
+            page = with_block(page, *marks, make(studies))
+        options.write.write_text(page, encoding="utf-8")
 
 
 if __name__ == "__main__":
