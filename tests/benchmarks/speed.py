@@ -17,6 +17,7 @@ from tests.benchmarks.timing import Result, Timing, timed
 
 from wakeledger.confidence.linear_budget import linear_budget
 from wakeledger.confidence.montecarlo import run as run_montecarlo
+from wakeledger.intake.readers.instants import CHUNK_BYTES
 from wakeledger.physics.fields.poisson import stream_function
 from wakeledger.run.chain.chain import Chain
 from wakeledger.run.chain.outputs import OUTPUTS
@@ -208,6 +209,72 @@ def tables() -> list[Result]:
     ]
 
 
+#: Reads a set of instants and prints by how much its process has grown at most, in MB.
+_READING = """
+import sys
+from pathlib import Path
+import netCDF4, numpy as np
+from wakeledger.core.points import Column
+from wakeledger.intake.readers import read_points
+names = {"y": "y", "z": "z", "v": "V", "w": "W"}
+columns = {key: Column(name, "m" if key in "yz" else "m/s") for key, name in names.items()}
+read_points(sys.argv[2], columns, axes=np.eye(3))
+def highest():
+    # The figure of getrusage would begin with the memory of the process that started this one.
+    lines = Path("/proc/self/status").read_text().splitlines()
+    return next(int(line.split()[1]) for line in lines if line.startswith("VmHWM"))
+before = highest()
+read_points(sys.argv[1], columns, axes=np.eye(3))
+print((highest() - before) / 1024)
+"""
+
+
+def instants() -> list[Result]:
+    """Memory and time of reading 10 000 instants of v and w on 60 x 80 points; where the system tells (Linux)."""
+    if not Path("/proc/self/status").exists():
+        return []
+    with tempfile.TemporaryDirectory() as folder:
+        large, small = Path(folder) / "large.nc", Path(folder) / "small.nc"
+        _write_instants(large, 10_000)
+        # What every read needs is loaded before the measurement begins.
+        _write_instants(small, 100)
+        clock = time.perf_counter()
+        done = subprocess.run(
+            [sys.executable, "-c", _READING, str(large), str(small)], check=True, capture_output=True, text=True
+        )
+        taken = time.perf_counter() - clock
+        size = large.stat().st_size / 1e6
+    megabytes = float(done.stdout) * 1024**2 / 1e6
+    chunk = CHUNK_BYTES / 1e6
+    return [
+        Result(
+            "10 000 instants: peak memory beyond the program's own",
+            Timing(megabytes / chunk),
+            1.5,
+            "chunks",
+            f"{size:.0f} MB of v and w on 60 x 80 points; chunks of {chunk:.0f} MB; one worker",
+        ),
+        Result("  reading them, process included", Timing(taken), None, "s", "mean, scatter and worth of the instants"),
+    ]
+
+
+def _write_instants(path: Path, count: int) -> None:
+    """Instants of a steady vortex pair under noise, invented."""
+    import netCDF4
+
+    y, z = np.linspace(-0.8, 0.8, 80), np.linspace(-0.4, 0.4, 60)
+    rng = np.random.default_rng(1)
+    with netCDF4.Dataset(path, "w") as dataset:
+        for name, axis in (("time", np.arange(count)), ("z", z), ("y", y)):
+            dataset.createDimension(name, axis.size)
+            dataset.createVariable(name, "f8", (name,))[:] = axis
+        for name in ("V", "W"):
+            variable = dataset.createVariable(name, "f4", ("time", "z", "y"), chunksizes=(min(count, 100), 60, 80))
+            for start in range(0, count, 500):
+                part = min(500, count - start)
+                variable[start : start + part] = np.sin(3 * y) + 0.2 * rng.standard_normal((part, 60, 80), np.float32)
+
+
 def memory() -> list[Result]:
     """Highest memory of this process so far."""
     peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
@@ -221,5 +288,6 @@ GROUPS: dict[str, Callable[[], list[Result]]] = {
     "linear budget": linear,
     "tables": tables,
     "whole survey": whole_survey,
+    "instants": instants,
     "memory": memory,
 }

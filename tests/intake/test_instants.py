@@ -129,7 +129,7 @@ class Counted:
 
 @pytest.mark.parametrize("axis", [0, 2])
 def test_only_blocks_are_read_and_each_once(monkeypatch, axis):
-    monkeypatch.setattr(instants, "BLOCK_BYTES", 40_000)
+    monkeypatch.setattr(instants, "CHUNK_BYTES", 80_000)
     monkeypatch.setattr(instants, "_SLICE_BYTES", 9_000)
     values = np.moveaxis(np.random.default_rng(1).normal(7.0, 2.0, (900, 12, 20)), 0, axis)
     variable = Counted(values, ("a", "b", "c"))

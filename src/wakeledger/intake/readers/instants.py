@@ -1,7 +1,7 @@
 """Many instants of one plane: mean, scatter and how many independent samples they are worth, read block by block.
 
-A set of instants is never held in memory: it is read in blocks of at most `BLOCK_BYTES`, and of a block a few instants
-at a time are worked on. Neighbouring instants resemble each other where the flow was sampled faster than it changes;
+A set of instants is never held in memory: it is read in blocks of at most half of `CHUNK_BYTES`, and of a block a few
+instants at a time are worked on. Neighbouring instants resemble each other where the flow was sampled faster than it changes;
 the mean is then known less well than the standard deviation over the root of their number says. Means of consecutive
 stretches show by how much: their variance over that of independent instants, one figure for the plane.
 """
@@ -19,8 +19,8 @@ from numpy.typing import NDArray
 
 from wakeledger.core.grid import Array
 
-#: Memory of one block of instants as it is read.
-BLOCK_BYTES = 32_000_000
+#: Memory that reading a set may take: half of it for a block as it is read, the rest for the plane's own sums.
+CHUNK_BYTES = 64_000_000
 # Worked on at once, as numbers of double precision.
 _SLICE_BYTES = 2_000_000
 _STRETCHES = 64
@@ -91,6 +91,7 @@ def read_instants(variable: Any, axis: int) -> Instants:
     -------
     Instants
     """
+    _limit_cache(variable, axis)
     shape = tuple(length for i, length in enumerate(variable.shape) if i != axis)
     total, stretch_total = _Sums(shape), _Sums(shape)
     shift: Array | None = None
@@ -116,6 +117,15 @@ def read_instants(variable: Any, axis: int) -> Instants:
         alike = max(1.0, float(np.median(known)) / (1 - 2 / (9 * freedom)) ** 3)
     mean = total.mean if shift is None else total.mean + shift
     return Instants(mean, np.sqrt(scatter), total.count.astype(np.int64), alike)
+
+
+def _limit_cache(variable: Any, axis: int) -> None:
+    """Let the library keep the pieces of the file that the next block begins in, and no more."""
+    chunking = variable.chunking() if hasattr(variable, "chunking") else None
+    if not isinstance(chunking, list):
+        return
+    instant = variable.dtype.itemsize * math.prod(variable.shape) // variable.shape[axis]
+    variable.set_var_chunk_cache(size=min(2 * chunking[axis] * instant, CHUNK_BYTES // 8))
 
 
 class _Sums:
@@ -164,7 +174,7 @@ def _blocks(variable: Any, axis: int, stretch: range) -> Iterator[Iterator[Array
     """Blocks of a stretch of instants, each as slices of double precision with the instants first."""
     size = int(np.prod(variable.shape)) // variable.shape[axis]
     # A mask takes a byte beside each number.
-    most = max(1, BLOCK_BYTES // (size * (variable.dtype.itemsize + 1)))
+    most = max(1, CHUNK_BYTES // 2 // (size * (variable.dtype.itemsize + 1)))
     for start in range(stretch.start, stretch.stop, most):
         at = [slice(None)] * len(variable.shape)
         at[axis] = slice(start, min(start + most, stretch.stop))

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import mmap
 import stat
 from pathlib import Path
 
@@ -12,6 +11,16 @@ from wakeledger.core.errors import DataError
 _HEAD = 4096
 _HDF5 = b"\x89HDF\r\n\x1a\n"
 _HDF5_OFFSETS = (0, 512, 1024, 2048)
+#: What tells one kind of HDF5 from another, first found first.
+_KINDS_OF_HDF5 = {
+    b"CGNSLibraryVersion": "cgns",
+    b"MATLAB_class": "matlab",
+    b"VTKHDF": "vtk_hdf",
+    b"_NCProperties": "netcdf",
+    b"_Netcdf4": "netcdf",
+    b"DIMENSION_SCALE": "netcdf",
+}
+_BLOCK = 1 << 22
 #: What text never holds: control characters other than tab, newline, form feed, carriage return, end of file.
 _CONTROL = bytes(set(range(32)) - {9, 10, 11, 12, 13, 26}) + b"\x7f"
 _REMEDY = "write the plane as a delimited text table, netCDF, VTK, CGNS or MATLAB file"
@@ -110,15 +119,24 @@ def _head(path: Path) -> bytes:
 
 
 def _kind_of_hdf5(path: Path) -> str:
-    with path.open("rb") as stream, mmap.mmap(stream.fileno(), 0, access=mmap.ACCESS_READ) as content:
-        if content.find(b"CGNSLibraryVersion") >= 0:
-            return "cgns"
-        if content.find(b"MATLAB_class") >= 0:
-            return "matlab"
-        if content.find(b"VTKHDF") >= 0:
-            return "vtk_hdf"
-        netcdf = any(content.find(mark) >= 0 for mark in (b"_NCProperties", b"_Netcdf4", b"DIMENSION_SCALE"))
-    return "netcdf" if netcdf else "matlab"
+    found = _marks_in(path)
+    for mark, kind in _KINDS_OF_HDF5.items():
+        if mark in found:
+            return kind
+    return "matlab"
+
+
+def _marks_in(path: Path) -> set[bytes]:
+    """Which marks of a kind of HDF5 a file holds anywhere; of a large file only a block at a time is in memory."""
+    found: set[bytes] = set()
+    overlap = max(map(len, _KINDS_OF_HDF5))
+    with path.open("rb") as stream:
+        end = b""
+        while block := stream.read(_BLOCK):
+            piece = end + block
+            found |= {mark for mark in _KINDS_OF_HDF5 if mark not in found and mark in piece}
+            end = piece[-overlap:]
+    return found
 
 
 def _other_format(head: bytes) -> str | None:
