@@ -27,6 +27,7 @@ from wakeledger.run.prepared import Prepared
 from wakeledger.run.uncertainty.linear import linear_slopes, paired, separated, survey_budget, tried, with_prediction
 from wakeledger.run.uncertainty.numerics import numerical_terms
 from wakeledger.run.uncertainty.spacing import Cores
+from wakeledger.run.uncertainty.wandering import wandering_term
 
 #: Draws that tell the wake region's own effect from that of noise.
 _NOISE_DRAWS = 16
@@ -70,7 +71,8 @@ def terms_of(prepared: Prepared, survey: SurveyInput) -> tuple[NumericalTerm, ..
         noise=_noise_draws(prepared, seed=survey.survey.uncertainty.seed),
         cores=Cores(vortices, about or [prepared.chain.gridding.raw_spacing] * len(vortices)),
     )
-    return found if own is None else (*found, own)
+    smeared = wandering_term(survey.survey.wake, prepared.vortices, prepared.chain, prepared.nominal)
+    return (*found, *(one for one in (smeared, own) if one is not None))
 
 
 def with_notes(prepared: Prepared, terms: Sequence[NumericalTerm]) -> Prepared:
