@@ -1,11 +1,13 @@
 """The algebra of an increment: what is shared cancels as far as it acts alike, by identity and never by name."""
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
 
 from wakeledger.confidence.components import NUMERICAL, Component
+from wakeledger.confidence.point_errors import PointErrors
 from wakeledger.core.errors import InputError
 from wakeledger.ledger.cancellation import opaque, subtract
 from wakeledger.ledger.contributions import Contributions
@@ -125,6 +127,77 @@ def test_contributions_survive_a_dataset():
         assert one.degrees_of_freedom == other.degrees_of_freedom
     none = contributions(scatter=1.0)
     assert Contributions.from_dataset(none.to_dataset()).components == ()
+
+
+def points(effects, *, source="table", shared_id="holder", places=None, **options):
+    effects = np.asarray(effects, dtype=float)
+    at = np.stack([np.arange(effects.size), np.zeros(effects.size)], axis=1) if places is None else places
+    both = np.stack([effects, effects / 100])[:, None, :]
+    fixed = {"effect": "random", "correlation_length": None, "distribution": "normal", "degrees_of_freedom": math.inf}
+    row = np.zeros(effects.size, dtype=np.int64)
+    return PointErrors(source, "plane.v", shared_id, effects=both, places=at, row=row, **{**fixed, **options})
+
+
+def with_points(*given, scatter=0.0):
+    return replace(contributions(scatter=scatter), points=given)
+
+
+def test_errors_of_points_cancel_one_by_one():
+    a, b = with_points(points([3.0, 4.0, 1.0]), scatter=1.0), with_points(points([3.0, 1.0, -1.0]), scatter=1.0)
+    found = subtract(a, b)
+    # (0, −3, −2) and the scatter of both.
+    assert found.covariance[0, 0, 0] == pytest.approx(9 + 4 + 2, rel=1e-12)
+    (said,) = found.cancelled
+    assert (said.shared_id, said.source_a, said.source_b) == ("holder", "table", "table")
+    assert [x[0, 0] for x in (said.in_a, said.in_b, said.left)] == pytest.approx(
+        [math.sqrt(26), math.sqrt(11), math.sqrt(13)]
+    )
+    assert found.by_source["table (left)"][1, 0] == pytest.approx(13e-4)
+    assert found.half_width()[0, 0] == pytest.approx(1.96 * math.sqrt(15), rel=0.02)
+    assert subtract(a, a).covariance[0, 0, 0] == pytest.approx(2.0)
+
+
+def test_errors_of_other_points_add_and_say_why():
+    one, other = points([3.0, 4.0]), points([3.0, 4.0], places=np.array([[0.0, 0.0], [1.1, 0.0]]))
+    found = subtract(with_points(one), with_points(other))
+    assert found.covariance[0, 0, 0] == pytest.approx(50) and found.cancelled == ()
+    ((identity, source_a, source_b, why),) = found.unlike
+    assert (identity, source_a, source_b) == ("holder", "table", "table") and "100 mm apart" in why
+    assert set(found.by_source) >= {"table (A)", "table (B)"}
+    for unknown in (points([3.0, 4.0], shared_id="another"), None):
+        apart = subtract(with_points(one), with_points(*([] if unknown is None else [unknown])))
+        assert apart.covariance[0, 0, 0] == pytest.approx(50 if unknown is not None else 25)
+        assert apart.unlike == ()
+
+
+def test_doubt_about_the_size_of_errors_of_points():
+    few = points([3.0, 4.0], degrees_of_freedom=5.0)
+    found = subtract(with_points(few), with_points(points([0.0, 0.0], degrees_of_freedom=5.0)))
+    assert found.degrees_of_freedom[0, 0] == pytest.approx(5.0)
+    # One factor for all: Student's t with 5 degrees of freedom of scale s = 5 √(3/5), t = 2.571.
+    assert found.half_width()[0, 0] == pytest.approx(2.571 * 5 * math.sqrt(3 / 5), rel=0.03)
+
+
+def test_errors_of_points_survive_a_dataset():
+    given = with_points(
+        points([3.0, 4.0]), points([1.0, 2.0, 5.0], source="rake", correlation_length=0.02), scatter=1.0
+    )
+    back = Contributions.from_dataset(given.to_dataset())
+    np.testing.assert_array_equal(back.covariance, given.covariance)
+    for one, other in zip(given.points, back.points, strict=True):
+        assert (one.source, one.key, one.unlike(other)) == (other.source, other.key, None)
+        np.testing.assert_array_equal(one.effects, other.effects)
+        np.testing.assert_array_equal(one.row, other.row)
+
+
+def test_a_third_quantity_is_subtracted_too():
+    effect = np.array([[3.0], [0.03], [0.02]])
+    one = Component("zero", "measured", effect, np.zeros((3, 1)), input="plane.u", shared_id="rig")
+    a = Contributions(("total_drag",), (one,), np.zeros((3, 1, 1)), np.full((3, 1), math.inf))
+    b = replace(a, components=(replace(one, linear=2 * effect),))
+    assert a.quantities == ("value", "coefficient", "coefficient_corrected")
+    np.testing.assert_allclose(np.sqrt(subtract(a, b).covariance[:, 0, 0]), effect[:, 0])
+    assert a.of(("total_drag",), quantities=2).quantities == ("value", "coefficient")
 
 
 def figure(difference, expanded):
