@@ -1,9 +1,9 @@
 """Many instants of one plane: mean, scatter and how many independent samples they are worth, read block by block.
 
 A set of instants is never held in memory: it is read in blocks of at most half of `CHUNK_BYTES`, and of a block a few
-instants at a time are worked on. Neighbouring instants resemble each other where the flow was sampled faster than it changes;
-the mean is then known less well than the standard deviation over the root of their number says. Means of consecutive
-stretches show by how much: their variance over that of independent instants, one figure for the plane.
+instants at a time are worked on. Neighbouring instants resemble each other where the flow was sampled faster than it
+changes; the mean is then known less well than the standard deviation over the root of their number says. Means of
+consecutive stretches show by how much: their variance over that of independent instants, one figure for the plane.
 """
 
 from __future__ import annotations
@@ -27,6 +27,8 @@ _STRETCHES = 64
 _FEWEST_STRETCHES = 8
 # Fewer points than this say too little about how alike neighbouring instants are.
 _FEWEST_INSTANTS = _FEWEST_STRETCHES**2
+# Within this of 1 instants pass for independent.
+_INDEPENDENT = 1.1
 _TIME_NAMES = frozenset({"time", "t", "instant", "instants", "snapshot", "snapshots"})
 
 
@@ -114,7 +116,9 @@ def read_instants(variable: Any, axis: int) -> Instants:
     if variable.shape[axis] >= _FEWEST_INSTANTS and known.size:
         # The median of a variance estimate lies below its mean.
         freedom = _stretch_count(variable.shape[axis]) - 1
-        alike = max(1.0, float(np.median(known)) / (1 - 2 / (9 * freedom)) ** 3)
+        alike = float(np.median(known)) / (1 - 2 / (9 * freedom)) ** 3
+        if alike < _INDEPENDENT:
+            alike = 1.0
     mean = total.mean if shift is None else total.mean + shift
     return Instants(mean, np.sqrt(scatter), total.count.astype(np.int64), alike)
 
