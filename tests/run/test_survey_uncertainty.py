@@ -198,6 +198,7 @@ def turn_round(value):
 def test_systematic_error_put_in_by_hand(kit, data, reduced, all_by_sources, target):
     _, in_data, in_file = BY_HAND[target]
     plain = kit.values(all_by_sources)
+    factor = {one.row: one.curvature_factor for one in all_by_sources.propagation}
     both = []
     for sign in (1, -1):
         written = {name: array + sign * in_data.get(name, 0.0) for name, array in data.items()}
@@ -212,7 +213,8 @@ def test_systematic_error_put_in_by_hand(kit, data, reduced, all_by_sources, tar
         # A quadratic of a normal error: its standard deviation is root of a^2 + 2 b^2.
         expected = math.hypot((up - down) / 2, math.sqrt(2) * (up + down) / 2)
         floor = 1e-4 * max(plain["total_drag"], abs(plain[name]))
-        # The lines may be scaled by a few per cent to close with the draws.
+        # Where the row bends its sources are scaled, and lines may be by a few per cent to close with the draws.
+        expected *= factor[name]
         assert line(all_by_sources, name, target) == pytest.approx(expected, rel=0.05, abs=floor), name
 
 
@@ -272,10 +274,12 @@ def test_budget_closes_and_covariance_is_one(reduced):
     np.testing.assert_array_equal(covariance, covariance.T)
     scaled = covariance / np.sqrt(np.outer(np.diag(covariance), np.diag(covariance)))
     assert np.linalg.eigvalsh(scaled).min() > -1e-12
-    # The total is the sum of three rows, so its variance is the sum of their covariances.
+    # The total is the sum of three rows, so its variance is the sum of their covariances, but for what each row's own
+    # curvature is scaled by: here that of the small residual.
+    assert {one.row for one in found.propagation if one.curvature_factor < 1} <= {"residual_drag"}
     parts = [names.index(name) for name in ("profile_drag", "induced_drag", "residual_drag")]
     total = names.index("total_drag")
-    assert covariance[np.ix_(parts, parts)].sum() == pytest.approx(covariance[total, total], rel=1e-6)
+    assert covariance[np.ix_(parts, parts)].sum() == pytest.approx(covariance[total, total], rel=1e-4)
 
 
 def test_twice_the_noise_is_twice_the_uncertainty(reduced):

@@ -49,7 +49,9 @@ class StateSlopes:
         self.reference: Reference = chain.reference(errors)
         names = set(chain.points.channels)
         moved = any(name.startswith("position.") for name in errors)
-        self.plain = chain.traverse is None and not moved
+        # Angles may err from point to point.
+        turned = any(name.startswith("angle.") and np.ndim(error) for name, error in errors.items())
+        self.plain = chain.traverse is None and not moved and not turned
         self.pressures = (
             self.plain
             and chain.settings.primary == "total_pressure"
