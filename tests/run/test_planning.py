@@ -19,6 +19,7 @@ from wakeledger.run.chain.places import zero_places
 from wakeledger.run.config.plan_file import parse_plan, read_plan
 from wakeledger.run.planning.expected import expected_flow
 from wakeledger.run.planning.instrument import Probe, of_holes, probes
+from wakeledger.run.planning.of_ledger import request_of_ledger
 from wakeledger.run.planning.response import respond, without_noise
 from wakeledger.run.planning.search import FACTOR
 from wakeledger.run.planning.simulate import Accuracies, declared, noise_of, shift_of, simulated, visit, window_of
@@ -486,7 +487,138 @@ def test_surveys_scatter_as_the_plan_says(check, tmp_path, changes):
     assert found.expanded_uncertainty == pytest.approx(scatter, rel=0.30)
 
 
+# From a ledger
+
+SOURCES = """[[uncertainty.source]]
+name = "velocity"
+applies_to = ["plane.u", "plane.v", "plane.w"]
+effect = "random"
+standard_uncertainty = "0.10 m/s"
+[[uncertainty.source]]
+name = "pressure"
+applies_to = ["plane.total_pressure", "plane.static_pressure"]
+effect = "random"
+standard_uncertainty = "1.0 Pa"
+[[uncertainty.source]]
+name = "stream"
+applies_to = ["reference.speed"]
+effect = "systematic"
+standard_uncertainty = "0.1 %"
+"""
+COLUMNS = """[plane.columns]
+y = { column = "y", unit = "m" }
+z = { column = "z", unit = "m" }
+u = { column = "u", unit = "m/s" }
+v = { column = "v", unit = "m/s" }
+w = { column = "w", unit = "m/s" }
+total_pressure = { column = "total_pressure", unit = "Pa", relative_to = "total" }
+static_pressure = { column = "static_pressure", unit = "Pa", relative_to = "static" }
+"""
+SURROUNDINGS = {
+    "half, closed": (HALF.replace("free_air", "closed_walls") + WALLS, "40.0 m/s"),
+    "compressible": ("", "120 m/s"),
+    "above the ground": (GROUND, "40.0 m/s"),
+}
+
+
+@pytest.fixture(scope="module", params=list(SURROUNDINGS))
+def surveyed(request, folder):
+    """A finished survey in surroundings, with its exact flow."""
+    boundary, speed = SURROUNDINGS[request.param]
+    more = 'height = "0.45 m"\n' if "z" in boundary.partition("reflection")[2][:8] else ""
+    exact = expected_flow(parse_plan(bounded(boundary, more=more, speed=speed), "plan.toml"))
+    window = window_of(exact, 0.03, 0.27)
+    places = visit(exact, window, shift_of(exact, window, (0.7, 0.3)))
+    noise = noise_of(Probe(0.1, 1.0, 1.0), places.y.size, np.random.default_rng(8))
+    data = {"y": places.y, "z": places.z}
+    data |= {name: values + noise[name] for name, values in places.readings.items()}
+    here = folder / request.param.replace(", ", "_").replace(" ", "_")
+    here.mkdir()
+    np.savetxt(here / "data.csv", np.stack(list(data.values()), axis=1), delimiter=",", header=",".join(data),
+               comments="", fmt="%.12g")  # fmt: skip
+    plane = '[plane]\nfile = "data.csv"\nstation = "0.90 m"\nprimary = "total_pressure"\n' + COLUMNS
+    table = "[boundary]\n" + (boundary or 'kind = "free_air"\n')
+    text = STREAM.replace("40.0 m/s", speed) + plane + table + SOURCES
+    (here / "survey.toml").write_text(text, encoding="utf-8")
+    write_archive(wl.reduce(wl.read_survey(here / "survey.toml"), draws=50), here / "ledger.nc")
+    return here, exact, boundary
+
+
+def test_the_plane_of_a_ledger_is_planned_from_in_its_own_surroundings(surveyed):
+    here, exact, boundary = surveyed
+    (here / "plan.toml").write_text(
+        '[plan]\nledger = "ledger.nc"\ntarget = "30 counts"\nspacing = "30 mm"\nwindow = "150 mm"\n'
+        'noise = "0.10 m/s"\ntotal_pressure_noise = "1.0 Pa"\nreference_accuracy = "0.2 %"\ndraws = 200\n',
+        encoding="utf-8",
+    )
+    flow = expected_flow(read_plan(here / "plan.toml"))
+    assert flow.tables["boundary"].get("reflection") == exact.reflection == flow.reflection
+    assert ("y" in flow.tables["boundary"]) == ("closed_walls" in boundary)
+    if exact.reflection == "y":
+        assert flow.box[0] == 0.0 and flow.limits[0] == pytest.approx(0.015, rel=1e-9)  # the first line of its points
+    # The ring about the wake region is none of the wake; its edge is found within some points.
+    assert np.allclose(flow.box[1::2], exact.box[1::2], atol=0.16)
+    # Noise of 0.1 m/s and 1 Pa is smoothed away as far as it stands above what the flow itself does between points.
+    yy, zz = (field.ravel() for field in np.meshgrid(*flow.lines))
+    for name, noise in (("w", 0.1), ("v", 0.1), ("static_pressure", 1.0), ("total_pressure", 1.0)):
+        wrong = flow.state(yy, zz)[name] - exact.state(yy, zz)[name]
+        assert np.sqrt(np.mean(wrong**2)) < (0.85 if name == "total_pressure" else 0.6) * noise, name
+    if exact.reflection is not None:
+        return  # the rest takes time, and is the same whatever surrounds the flow
+    found = wl.plan(here / "plan.toml", workers=1)
+    assert found.chosen is not None and found.expanded_uncertainty < found.target
+    # The plane's own noise of some counts is in the value.
+    assert found.value == pytest.approx(1e4 * exact.values["total_drag coefficient"], abs=8)
+    random = sum(line.standard_uncertainty**2 for line in found.budget if line.kind == "random")
+    missed = sum(line.standard_uncertainty**2 for line in found.budget if line.kind == "numerical")
+    assert missed < random
+    assert any("smoothed" in note for note in found.notes)
+
+
+def test_a_ledger_alone_gives_ranges_about_what_it_declares(surveyed):
+    here = surveyed[0]
+    request = request_of_ledger(here / "ledger.nc")
+    plan = request.plan
+    assert plan.spacing == pytest.approx((0.03, 0.06, 0.09), rel=1e-6)
+    assert plan.noise == pytest.approx((0.05, 0.10, 0.20), rel=1e-9)
+    assert plan.total_pressure_noise == pytest.approx((0.5, 1.0, 2.0), rel=1e-9)
+    # 0.1 % of the speed is 0.2 % of the dynamic pressure.
+    assert plan.reference_accuracy == pytest.approx((0.001, 0.002, 0.004), rel=1e-9)
+    flow = expected_flow(request)
+    assert any(window_of(flow, 0.03, margin) is not None for margin in plan.window)
+
+
+def test_a_plan_file_beside_a_ledger_does_not_give_what_the_ledger_holds(folder):
+    plan = '[plan]\nledger = "a.nc"\nspacing = "30 mm"\nwindow = "0.1 m"\nhole_noise = "1 Pa"\n'
+    for table in ('[boundary]\nkind = "free_air"\n', "[wake]\nlevel = 4\n"):
+        with pytest.raises(SurveyError, match="both given"):
+            parse_plan(table + plan, "plan.toml")
+
+
 # What is refused
+
+
+@pytest.mark.parametrize(
+    ("boundary", "more", "speed", "place", "words"),
+    [
+        (GROUND, "", "40.0 m/s", "[plan] height", 'add height = "0.3 m"'),
+        (GROUND, 'height = "0.05 m"\n', "40.0 m/s", "[plan] tip_core, height", "core lengths"),
+        ('kind = "closed_walls"\n' + WALLS.replace("1.0 m", "0.6 m"), "", "40.0 m/s", "[boundary]", "stands clear"),
+        ('kind = "closed_walls"\n' + WALLS, "", "120 m/s", "[boundary] kind", "compressible = false"),
+        ('kind = "closed_walls"\nsection = "polygon"\nvertices = [["-1 m", "-1 m"], ["1 m", "-1 m"], ["0 m", "1 m"]]\n',
+         "", "40.0 m/s", "[boundary] section", "nearest to it"),
+        ('kind = "closed_walls"\ny = ["-1.0 m", "1.0 m"]\n', "", "40.0 m/s", "[boundary] section", "nearest to it"),
+        ('kind = "closed_walls"\nreflection = "y"\nmodel_centre = ["0.1 m", "0 m"]\n' + WALLS, "", "40.0 m/s",
+         "[boundary] model_centre", "mirrored"),
+        ('kind = "closed_walls"\nreflection = "y"\ny = ["-0.9 m", "1.0 m"]\nz = ["-0.7 m", "0.7 m"]\n', "",
+         "40.0 m/s", "[boundary] section", "not symmetric"),
+    ],
+)  # fmt: skip
+def test_surroundings_that_are_not_planned_are_told_in_one_line(boundary, more, speed, place, words):
+    with pytest.raises(SurveyError) as caught:
+        expected_flow(parse_plan(bounded(boundary, more=more, speed=speed), "plan.toml"))
+    text = str(caught.value)
+    assert place in text and words in text and "\n" not in text
 
 
 @pytest.mark.parametrize(

@@ -13,6 +13,7 @@ import numpy as np
 
 from wakeledger.core.errors import SurveyError
 from wakeledger.ledger.archive import open_archive
+from wakeledger.physics.fields.wake_region import GROW_CELLS
 from wakeledger.run.config import Survey, parse_survey
 from wakeledger.run.config.plan import FLOW, PlanTable
 from wakeledger.run.config.plan_file import PlanRequest
@@ -89,11 +90,12 @@ def request_of_ledger(path: Path) -> PlanRequest:
 def _ranges(survey: Survey, plane: Any, path: Path) -> dict[str, Any]:
     """Ranges about what a survey declares."""
     y, z = (np.asarray(plane[name].values, dtype=float) for name in ("y", "z"))
-    mask = np.asarray(plane["wake_mask"].values, dtype=bool)
-    rows, columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
-    if not rows.size:
-        raise SurveyError("it holds no wake", file=path, remedy="plan from a loading")
-    room = float(min(y[columns[0]] - y[0], y[-1] - y[columns[-1]], z[rows[0]] - z[0], z[-1] - z[rows[-1]]))
+    y0, y1, z0, z1 = wake_box(survey, plane, path)
+    # On a reflection plane the window needs no room.
+    sides = {"port": y0 - y[0], "starboard": y[-1] - y1, "lower": z0 - z[0], "upper": z[-1] - z1}
+    reflection = None if survey.boundary is None else survey.boundary.reflection
+    sides.pop({"y": "port", "z": "lower"}.get(reflection or "", ""), None)
+    room = float(min(sides.values()))
     spacing = float(max(np.diff(y).min(), np.diff(z).min()))
     declared = declared_sizes(survey)
     if "hole_noise" not in declared and not {"noise", "total_pressure_noise"} <= set(declared):
@@ -115,6 +117,47 @@ def _ranges(survey: Survey, plane: Any, path: Path) -> dict[str, Any]:
     for key, size in declared.items():
         found[key] = [f"{k * size * factor.get(key, 1.0)!r} {units.get(key, 'Pa')}" for k in FACTORS]
     return found
+
+
+def wake_box(survey: Survey, plane: Any, path: Path) -> tuple[float, float, float, float]:
+    """Where the wake is in a ledger's plane: what is left of its region without the ring that it was grown by.
+
+    Parameters
+    ----------
+    survey : Survey
+        Its file.
+    plane : Dataset
+        With ``wake_mask``.
+    path : Path
+        The archive, for messages.
+
+    Returns
+    -------
+    tuple of float
+        y and z of its port lower and its starboard upper corner, m; of the side surveyed, where the plane reflects.
+
+    Raises
+    ------
+    SurveyError
+        If it holds no wake.
+    """
+    mask = np.asarray(plane["wake_mask"].values, dtype=bool)
+    if not mask.any():
+        raise SurveyError("it holds no wake", file=path, remedy="plan from a loading")
+    box = []
+    reflection = None if survey.boundary is None else survey.boundary.reflection
+    for axis, name in ((0, "y"), (1, "z")):
+        places = np.asarray(plane[name].values, dtype=float)
+        inside = places[mask.any(axis=axis)]
+        if reflection == name:
+            inside = inside[inside >= 0]
+        grow = survey.wake.grow
+        ring = GROW_CELLS * float(np.diff(places).min()) if grow is None else grow
+        middle = float(inside[0] + inside[-1]) / 2
+        box += [min(float(inside[0]) + ring, middle), max(float(inside[-1]) - ring, middle)]
+        if reflection == name and name == "y":
+            box[-2] = 0.0
+    return box[0], box[1], box[2], box[3]
 
 
 def declared_sizes(survey: Survey) -> dict[str, float]:

@@ -139,6 +139,13 @@ def _place(boundary: BoundaryTable, plan: PlanTable, reference: Reference, path:
     duct: RectangularDuct | RoundDuct | None = None
     if boundary.kind != "free_air":
         closed = boundary.kind == "closed_walls"
+        if boundary.diameter is None and (boundary.y is None or boundary.z is None):
+            raise SurveyError(
+                "the flow in such a section is not known exactly, and not planned from a loading",
+                file=path,
+                place="[boundary] section",
+                remedy="plan with the rectangle or circle that is nearest to it, or from a ledger",
+            )
         boundary.surroundings()
         if reference.compressible:
             raise SurveyError(
@@ -149,20 +156,14 @@ def _place(boundary: BoundaryTable, plan: PlanTable, reference: Reference, path:
             )
         if boundary.diameter is not None:
             duct = RoundDuct(boundary.diameter, _pair(boundary.centre), closed)
-        elif boundary.y is not None and boundary.z is not None:
+        else:
+            assert boundary.y is not None and boundary.z is not None
             walls = {"y": boundary.y, "z": boundary.z}
             if boundary.reflection is not None:
                 # Walls that end on the reflection plane stand for both sides of it.
                 low, high = walls[boundary.reflection]
                 walls[boundary.reflection] = (low if low < 0 else -high, high)
             duct = RectangularDuct(walls["y"], walls["z"], closed)
-        else:
-            raise SurveyError(
-                "the flow in such a section is not known exactly, and not planned from a loading",
-                file=path,
-                place="[boundary] section",
-                remedy="plan with the rectangle or circle that is nearest to it, or from a ledger",
-            )
     y, z = _pair(boundary.model_centre)
     if plan.height is not None:
         z = plan.height

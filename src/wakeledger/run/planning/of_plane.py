@@ -12,14 +12,14 @@ import numpy as np
 
 from wakeledger.core.errors import DataError
 from wakeledger.core.grid import Array
-from wakeledger.run.config import parse_survey
+from wakeledger.run.config import Survey, parse_survey
 from wakeledger.run.config.plan_file import planned_tables
 from wakeledger.run.config.quantities import parse_quantity
 from wakeledger.run.config.stream import ModelTable, ReferenceTable
 from wakeledger.run.config.tables import BoundaryTable
 from wakeledger.run.planning.flow import VARIABLES, ExpectedFlow, with_coefficients
 from wakeledger.run.planning.instrument import of_holes
-from wakeledger.run.planning.of_ledger import declared_sizes
+from wakeledger.run.planning.of_ledger import declared_sizes, wake_box
 from wakeledger.stream.reference import Reference
 
 if TYPE_CHECKING:
@@ -69,26 +69,22 @@ def _of_plane(ledger: Ledger, tables: Mapping[str, Any], path: Path) -> Expected
     fields = {name: np.asarray(plane[name].values, dtype=float) - zeros.get(name, 0.0) for name in VARIABLES}
     if not all(np.isfinite(field).all() for field in fields.values()):
         raise DataError("its plane has places without a value", file=path, remedy="plan from a loading")
-    mask = np.asarray(plane["wake_mask"].values, dtype=bool)
-    if not mask.any():
-        raise DataError("it holds no wake", file=path, remedy="plan from a loading")
-    rows, columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
+    survey = parse_survey(str(ledger.survey_text), path)
+    y0, y1, z0, z1 = wake_box(survey, plane, path)
     kept, left_out = planned_tables(tables)
     boundary = BoundaryTable.model_validate(kept["boundary"])
     model = ModelTable.model_validate(tables["model"])
     found = {row.name: row.value for row in ledger.rows}
     reference = ReferenceTable.model_validate(tables["reference"]).resolve()
-    noises = _noise_of(str(ledger.survey_text), reference, path)
+    noises = _noise_of(survey, reference)
     splines = {name: _spline(y, z, field, noises.get(name, 0.0)) for name, field in fields.items()}
     # A reflected plane holds both sides, of which one is surveyed.
     own_y = y[y > -1e-9] if boundary.reflection == "y" else y
     own_z = z[z > -1e-9] if boundary.reflection == "z" else z
-    low_y = max(float(y[columns[0]]), 0.0) if boundary.reflection == "y" else float(y[columns[0]])
-    low_z = max(float(z[rows[0]]), 0.0) if boundary.reflection == "z" else float(z[rows[0]])
     return ExpectedFlow(
         state=lambda at_y, at_z: {name: spline.ev(at_z, at_y) for name, spline in splines.items()},
         values=with_coefficients(found, reference, model),
-        box=(low_y, float(y[columns[-1]]), low_z, float(z[rows[-1]])),
+        box=(y0, y1, z0, z1),
         limits=(float(own_y[0]), float(y[-1]), float(own_z[0]), float(z[-1])),
         tables=kept,
         station=station_of(tables),
@@ -109,9 +105,9 @@ def _of_plane(ledger: Ledger, tables: Mapping[str, Any], path: Path) -> Expected
     )
 
 
-def _noise_of(text: str, reference: Reference, path: Path) -> dict[str, float]:
+def _noise_of(survey: Survey, reference: Reference) -> dict[str, float]:
     """Noise of a plane's channels as its file declares it, by variable; empty where it does not."""
-    sizes = declared_sizes(parse_survey(text, path))
+    sizes = declared_sizes(survey)
     if "hole_noise" in sizes:
         probe = of_holes(sizes["hole_noise"], reference)
         return {"v": probe.velocity, "w": probe.velocity, "total_pressure": probe.total_pressure,
