@@ -15,7 +15,7 @@ from wakeledger.ledger.rounding import rounded
 from wakeledger.present.figures.budget import budget_figure
 from wakeledger.present.figures.canvas import BLUE, GREY, INK, VERMILION, WIDTH, style
 from wakeledger.present.figures.drawing import Drawing, drawn
-from wakeledger.present.figures.maps import HATCH, UNTRUSTED, VEIL, Shade, draw_arrows, hatch, shaded
+from wakeledger.present.figures.maps import HATCH, UNTRUSTED, VEIL, Shade, hatch, shaded_map
 from wakeledger.present.wording import unit_text, words
 
 if TYPE_CHECKING:
@@ -63,24 +63,14 @@ def vorticity_difference_map(increment: Increment) -> Figure:
 
 
 def _map(increment: Increment, name: str, title: str, label: str, colours: str, *, arrows: bool = False) -> Figure:
-    from matplotlib.figure import Figure
-
     plane = increment.plane
     assert plane is not None
     grid = grid_of(plane)
     values = plane[name].values
     limit = max(float(np.nanpercentile(np.abs(values), _SPANNED)), _noise(increment, values), 1e-12)
-    with style():
-        height = float(np.clip((WIDTH - 1.5) * grid.dz * grid.nz / (grid.dy * grid.ny), 1.2, 7.5)) + 1.15
-        figure = Figure(figsize=(WIDTH, height), layout="constrained")
-        axes = figure.add_subplot()
-        shaded(figure, axes, grid, Shade(values, label, colours, -limit, limit, "both"), title)
-        drawn = _overlay(axes, increment)
-        if arrows:
-            draw_arrows(axes, grid, plane["v"].values, plane["w"].values, "U")
-        if drawn:
-            figure.legend(handles=drawn, loc="outside lower left", ncols=len(drawn))
-    return figure
+    crossflow = (plane["v"].values, plane["w"].values, "U") if arrows else None
+    shade = Shade(values, label, colours, -limit, limit, "both")
+    return shaded_map(grid, shade, title, overlay=lambda axes: _overlay(axes, increment), arrows=crossflow)
 
 
 def _noise(increment: Increment, values: Array) -> float:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -133,18 +134,49 @@ def axial_velocity_map(ledger: Ledger) -> Figure:
 
 
 def _map(ledger: Ledger, title: str, shade: Shade, *, arrows: bool = False) -> Figure:
+    crossflow = (ledger.plane["v"].values, ledger.plane["w"].values, "m/s") if arrows else None
+    return shaded_map(
+        grid_of(ledger.plane), shade, title, overlay=lambda axes: _overlay(axes, ledger), arrows=crossflow
+    )
+
+
+def shaded_map(
+    grid: UniformGrid,
+    shade: Shade,
+    title: str,
+    *,
+    overlay: Callable[[Axes], list[object]],
+    arrows: tuple[Array, Array, str] | None = None,
+) -> Figure:
+    """A figure of one field of a plane, seen from behind in equal scale, with what is drawn over it.
+
+    Parameters
+    ----------
+    grid : UniformGrid
+        The plane's grid.
+    shade : Shade
+        The field and its colours.
+    title : str
+        What it is.
+    overlay : callable
+        Draws over the field; returns what the legend names.
+    arrows : (ndarray, ndarray, str), optional
+        Crossflow to starboard and up, shape (nz, ny), and its unit.
+
+    Returns
+    -------
+    Figure
+    """
     from matplotlib.figure import Figure
 
-    grid = grid_of(ledger.plane)
-    width_m, height_m = grid.dy * grid.ny, grid.dz * grid.nz
     with style():
-        height = float(np.clip((WIDTH - 1.5) * height_m / width_m, 1.2, 7.5)) + 1.15
+        height = float(np.clip((WIDTH - 1.5) * grid.dz * grid.nz / (grid.dy * grid.ny), 1.2, 7.5)) + 1.15
         figure = Figure(figsize=(WIDTH, height), layout="constrained")
         axes = figure.add_subplot()
         shaded(figure, axes, grid, shade, title)
-        named = _overlay(axes, ledger)
-        if arrows:
-            draw_arrows(axes, grid, ledger.plane["v"].values, ledger.plane["w"].values, "m/s")
+        named = overlay(axes)
+        if arrows is not None:
+            draw_arrows(axes, grid, *arrows)
         if named:
             figure.legend(handles=named, loc="outside lower left", ncols=len(named))
     return figure
