@@ -301,6 +301,9 @@ def _not_cancelled(
         ids = [None if source is None else source.shared_id for source in own]
         if any((identity, name) in side for identity, side in zip(ids, done, strict=True)):
             continue
+        # Sources of an empty tunnel are declared in a file of their own.
+        if ids == [None, None] and all(any(name == one for _, one in side) for side in done):
+            continue
         if own[0] is not None and own[1] is not None:
             if ids[0] == ids[1]:
                 reason = _why_not(own[0], own[1], difference, (a, b))
