@@ -38,13 +38,18 @@ def _rule(offsets: Array, moments: Array) -> Array:
 def _midpoint_matrix(n: int, moments: Array) -> Array:
     """One functional about the middle of each cell, exact for polynomials, on the points around it."""
     matrix = np.zeros((n - 1, n))
+    rules: dict[tuple[int, int], Array] = {}
     for cell in range(n - 1):
         half = min(_WIDTH // 2, cell + 1, n - 1 - cell)
         # In the outermost cell the two-point rule would be the weakest link: lean on four points from inside.
         count = 2 * half if half > 1 else min(4, n)
         first = cell + 1 - half if half > 1 else (0 if cell == 0 else n - count)
-        offsets = np.arange(count, dtype=np.float64) + (first - cell - 0.5)
-        matrix[cell, first : first + count] = _rule(offsets, moments[:count])
+        # Away from the ends every cell has the same rule.
+        rule = rules.get((count, first - cell))
+        if rule is None:
+            offsets = np.arange(count, dtype=np.float64) + (first - cell - 0.5)
+            rule = rules[count, first - cell] = _rule(offsets, moments[:count])
+        matrix[cell, first : first + count] = rule
     matrix.flags.writeable = False
     return matrix
 

@@ -158,13 +158,45 @@ def share_out(
     -------
     WakeCells
     """
-    step = max(step, grid.dy, grid.dz)
+    return cells_on(ground_of(grid, wake, excluded, reflection), step)
+
+
+@dataclass(frozen=True, eq=False)
+class Ground:
+    """What is shared out, whatever the cells' size.
+
+    Attributes
+    ----------
+    grid : UniformGrid
+        The grid.
+    to_wake : ndarray, shape (nz, ny)
+        Distance of each point from the wake, m; infinite without a wake.
+    presence : ndarray, shape (nz − 1, ny − 1)
+        How much each square between points counts.
+    """
+
+    grid: UniformGrid
+    to_wake: Array
+    presence: Array
+
+
+def ground_of(grid: UniformGrid, wake: Mask, excluded: Mask | None, reflection: Reflection) -> Ground:
+    """What is shared out of a window; arguments as in `share_out`."""
     wake = np.asarray(wake, bool)
     if excluded is not None:
         wake = wake & ~np.asarray(excluded, bool)
-    presence = _presence(grid, wake, excluded, reflection)
+    to_wake = np.full(grid.shape, np.inf)
+    if wake.any():
+        to_wake = ndimage.distance_transform_edt(~wake, sampling=(grid.dz, grid.dy))
+    return Ground(grid, to_wake, _presence(grid, to_wake, excluded, reflection))
+
+
+def cells_on(ground: Ground, step: float) -> WakeCells:
+    """Cells of one size, m, as `share_out` makes them."""
+    grid, presence = ground.grid, ground.presence
+    step = max(step, grid.dy, grid.dz)
     fine_y, fine_z = _tents_along(grid.ny - 1, step / grid.dy), _tents_along(grid.nz - 1, step / grid.dz)
-    near = _squares(_within(grid, wake, _MARGIN * step))
+    near = _squares(ground.to_wake <= _MARGIN * step)
     fine = sparse.csr_array(sparse.kron(fine_z, fine_y, format="csr"))
     in_wake = np.flatnonzero(fine @ near.ravel().astype(float) > 0)
     fine = sparse.csr_array(fine[in_wake])
@@ -215,7 +247,7 @@ def _tents_along(intervals: int, step: float) -> sparse.csr_array:
     return sparse.csr_array(np.maximum(0.0, 1 - np.abs(np.subtract.outer(nodes, middle)) / step))
 
 
-def _presence(grid: UniformGrid, wake: Mask, excluded: Mask | None, reflection: Reflection) -> Array:
+def _presence(grid: UniformGrid, to_wake: Array, excluded: Mask | None, reflection: Reflection) -> Array:
     """How much each square counts: 1 in the wake, falling to 0 at the window's edge and at what is excluded."""
     void = np.zeros(grid.shape, dtype=bool) if excluded is None else np.asarray(excluded, bool)
     framed = np.pad(~void, 1)
@@ -224,19 +256,11 @@ def _presence(grid: UniformGrid, wake: Mask, excluded: Mask | None, reflection: 
     elif reflection == "z":
         framed[0 if abs(grid.z[0]) < abs(grid.z[-1]) else -1, :] = True
     to_void = ndimage.distance_transform_edt(framed, sampling=(grid.dz, grid.dy))[1:-1, 1:-1]
-    if not wake.any():
+    if np.isinf(to_wake).all():
         return np.where(_squares(void), 0.0, 1.0)
-    to_wake = ndimage.distance_transform_edt(~wake, sampling=(grid.dz, grid.dy))
     share = to_wake / np.maximum(to_wake + to_void, np.finfo(float).tiny)
     at_points = np.where(void, 0.0, 1 - share**_FADING)
     result: Array = (at_points[:-1, :-1] + at_points[1:, :-1] + at_points[:-1, 1:] + at_points[1:, 1:]) / 4
-    return result
-
-
-def _within(grid: UniformGrid, mask: Mask, distance: float) -> Mask:
-    if not mask.any():
-        return mask
-    result: Mask = ndimage.distance_transform_edt(~mask, sampling=(grid.dz, grid.dy)) <= distance
     return result
 
 

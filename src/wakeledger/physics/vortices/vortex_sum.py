@@ -25,7 +25,7 @@ from wakeledger.physics.fields.circulation import cell_circulations, circle_weig
 from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.gaussian_elements import Reflection, interaction_matrix
 from wakeledger.physics.fields.wake_region import wake_region
-from wakeledger.physics.vortices.cells import WakeCells, share_out
+from wakeledger.physics.vortices.cells import Ground, WakeCells, cells_on, ground_of
 from wakeledger.physics.vortices.identify import MeasuredVortex, Vortex, measured_vortices
 
 Mask = NDArray[np.bool_]
@@ -100,13 +100,11 @@ class VortexSum:
 class _Sharing:
     """How the plane was shared out, so that it can be done again with other cells."""
 
-    mask: Mask
-    excluded: Mask | None
-    reflection: Reflection
+    ground: Ground
     step: float
 
-    def cells(self, grid: UniformGrid) -> WakeCells:
-        return share_out(grid, self.mask, self.step, excluded=self.excluded, reflection=self.reflection)
+    def cells(self) -> WakeCells:
+        return cells_on(self.ground, self.step)
 
 
 @dataclass(frozen=True, eq=False)
@@ -211,9 +209,10 @@ def _sharing(
 ) -> tuple[_Sharing, WakeCells]:
     spacing = max(grid.dy, grid.dz)
     step = max(spacing, CELL_STEP * min(cores)) if cores else CELL_STEP_UNRESOLVED * spacing
+    ground = ground_of(grid, mask, excluded, reflection)
     while True:
-        sharing = _Sharing(mask, excluded, reflection, step)
-        cells = sharing.cells(grid)
+        sharing = _Sharing(ground, step)
+        cells = sharing.cells()
         if cells.count <= MOST_CELLS:
             return sharing, cells
         step *= max(_GROWTH, float(np.sqrt(cells.count / MOST_CELLS)))
@@ -450,6 +449,6 @@ def _method_uncertainty(parts: WakeParts, v: Array, w: Array, density: float, dr
     cells = parts.cells.circulations(v, w)
     unsplit = 0.5 * density * float(cells @ parts.among_cells @ cells)
     sharing = replace(parts._sharing, step=2 * parts._sharing.step)
-    doubled = _parts(parts.grid, parts._measured, sharing, sharing.cells(parts.grid), parts.reflection, parts._nominal)
+    doubled = _parts(parts.grid, parts._measured, sharing, sharing.cells(), parts.reflection, parts._nominal)
     coarse = float(evaluate(doubled, v, w, density))
     return float(np.hypot(unsplit - drag, (coarse - drag) / _DOUBLING))
