@@ -8,6 +8,7 @@ import sys
 from pathlib import Path
 from types import MappingProxyType
 
+import netCDF4
 import numpy as np
 import pytest
 import xarray as xr
@@ -51,6 +52,33 @@ def test_round_trip_is_the_identity(ledger, archive):
     for field in dataclasses.fields(Ledger):
         assert same(getattr(ledger, field.name), getattr(returned, field.name)), field.name
     assert ledger_json(returned) == ledger_json(ledger)
+
+
+#: Both archives twice at a time, the first two closed in between: with variable-length strings the library crashed.
+REOPENED = """
+import sys, netCDF4
+before = []
+for _ in range(4):
+    opened = [netCDF4.Dataset(path) for path in sys.argv[1:]]
+    for dataset in before:
+        dataset.close()
+    before = opened
+"""
+
+
+def test_archives_can_be_open_several_times_in_one_process(ledger, archive, tmp_path):
+    write_archive(ledger, tmp_path / "other.nc")
+    subprocess.run([sys.executable, "-c", REOPENED, str(archive), str(tmp_path / "other.nc")], check=True)
+
+
+def test_text_is_kept_as_characters(archive):
+    with netCDF4.Dataset(archive) as opened:
+        groups = [opened, *opened.groups.values()]
+        variables = [variable for group in groups for variable in group.variables.values()]
+    assert any(variable.dtype == "S1" for variable in variables)
+    assert not any(variable.dtype is str for variable in variables)
+    rows = xr.open_dataset(archive)
+    assert float(rows["value"].sel(row="lift")) == float(rows["value"][list(rows["row"].values).index("lift")])
 
 
 # Text that a C string can hold: no NUL, no lone surrogates.

@@ -72,6 +72,9 @@ def write_group(dataset: xr.Dataset, path: Path, *, group: str | None, mode: str
             settings["dtype"] = "int32"
         if kind in "iufb" and variable.ndim and variable.size:
             settings |= {"zlib": True, "complevel": 1, "shuffle": True, "fletcher32": True}
+        if kind in "UO":
+            # Text as characters: files with variable-length strings, open twice in one process, crash netCDF 4.10.
+            settings["dtype"] = "S1"
         encoding[name] = settings
         attributes = dict(variable.attrs)
         if attributes.get("units") == "K":
