@@ -1,12 +1,10 @@
 """The budget by source: known parts are found, squares close, nothing unknown becomes zero."""
 
-import dataclasses
-
 import numpy as np
 import pytest
 
 from wakeledger.confidence.budget import REMAINDER, Budget, make_budget, with_scaled_scatter
-from wakeledger.confidence.components import MEASURED, Component, twins_together
+from wakeledger.confidence.components import MEASURED, Component
 from wakeledger.confidence.montecarlo import run
 from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.sources import InputLayout, Source
@@ -212,11 +210,20 @@ def test_scatter_of_scaled_draws_leaves_single_errors_as_they_are():
 
 
 def test_one_error_of_two_inputs_is_one():
-    own = Component("zero", MEASURED, np.array([3.0]), np.array([0.1]), input="plane.u", shared_id="rig")
-    other = dataclasses.replace(own, input="empty.plane.u", linear=np.array([-3.0]))
-    (both,) = twins_together((own, other), "empty.")
-    assert both.linear[0] == 0.0 and both.curved[0] == pytest.approx(0.2) and both.key == ("rig", "plane.u", 0)
-    # Without an identity, and of another input, they are two.
-    apart = dataclasses.replace(own, shared_id=None), dataclasses.replace(other, shared_id=None)
-    assert twins_together(apart, "empty.") == apart
-    assert len(twins_together((own, dataclasses.replace(other, input="empty.plane.v")), "empty.")) == 2
+    """An input of another survey with the same error: f = (x + e) − (x' + e) holds no e, nor does its square."""
+    source = Source("zero", ("offset", "other.offset"), "systematic", 0.3, shared_id="rig", prefix="other.")
+    layouts = {"offset": InputLayout(0.0), "other.offset": InputLayout(0.0), "gain": InputLayout(1.0)}
+    sources = [source, Source("gain", ("gain",), "systematic", 0.1)]
+
+    def evaluate(errors):
+        apart = errors["offset"] - errors["other.offset"]
+        return np.stack([errors["gain"] + apart, errors["gain"] + 5 * apart**2, errors["offset"] + errors["gain"]], 1)
+
+    samples = run(evaluate, sources, layouts, names=("a", "b", "c"), draws=200, seed=1)
+    budget = make_budget(evaluate, sources, layouts, samples, seed=1)
+    (zero, gain) = budget.components
+    assert zero.key == ("rig", "offset", 0) and gain.source == "gain"
+    np.testing.assert_allclose(zero.linear, [0.0, 0.0, 0.3], atol=1e-12)
+    np.testing.assert_allclose(zero.curved, 0.0, atol=1e-12)
+    assert next(line for line in budget.of("a") if line.source == "zero").standard_uncertainty < 1e-9
+    np.testing.assert_allclose(np.diag(budget.scatter), 0.0, atol=1e-12)

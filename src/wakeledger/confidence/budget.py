@@ -15,7 +15,6 @@ from wakeledger.confidence.components import (
     scatter,
     shifted_components,
     term_components,
-    twins_together,
 )
 from wakeledger.confidence.linear_budget import Slopes
 from wakeledger.confidence.montecarlo import Evaluate, Progress, sample
@@ -218,9 +217,7 @@ def make_budget(
         components = shifted_components(
             evaluate, sampler, few, len(samples.names), batch=batch, workers=workers, progress=report
         )
-        for one in few:
-            own = [part for part in components if part.source == one.source.name]
-            parts.append(_shifted(one, twins_together(own, one.source.prefix) if one.source.prefix else own))
+        parts += [_shifted(one, [part for part in components if part.source == one.source.name]) for one in few]
         done += counts[0]
     for one in many:
         if redrawn:

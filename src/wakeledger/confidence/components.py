@@ -150,31 +150,6 @@ def shifted_components(
     return tuple(found)
 
 
-def twins_together(components: Sequence[Component], prefix: str) -> tuple[Component, ...]:
-    """Components of one source in which an error that two inputs have in common is one.
-
-    Parameters
-    ----------
-    components : sequence of Component
-        From `shifted_components`: one for each input.
-    prefix : str
-        What the names of the second inputs begin with (`wakeledger.confidence.sources.Source.prefix`).
-
-    Returns
-    -------
-    tuple of Component
-        Under the name of the first input, its effects the sums of both.
-    """
-    found: dict[tuple[str, str, str | None, int], Component] = {}
-    for one in components:
-        key = one.source, one.input.removeprefix(prefix), one.shared_id, one.number
-        twin = found.get(key) if one.shared_id is not None else None
-        if twin is not None:
-            one = replace(twin, linear=twin.linear + one.linear, curved=twin.curved + one.curved)
-        found[key if one.shared_id is not None else (one.source, one.input, None, one.number)] = one
-    return tuple(found.values())
-
-
 def term_components(terms: Sequence[NumericalTerm]) -> tuple[Component, ...]:
     """Numerical terms as components.
 

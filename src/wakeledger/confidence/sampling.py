@@ -157,6 +157,11 @@ class SourceErrors:
         numbers = (seed,) if isinstance(seed, int) else tuple(seed)
         self._key = f"shared|{source.shared_id}" if source.shared_id else f"survey|{numbers}|{source.name}"
         self._inputs = tuple(self._prepare(name, layouts[name]) for name in source.applies_to)
+        # Inputs of two surveys that one error acts on have their variables in common.
+        groups: dict[tuple[str, int], list[_InputErrors]] = {}
+        for one in self._inputs:
+            groups.setdefault((one.key, one.latents), []).append(one)
+        self._groups = tuple(tuple(group) for group in groups.values())
 
     def _prepare(self, name: str, layout: InputLayout) -> _InputErrors:
         source = self.source
@@ -182,7 +187,7 @@ class SourceErrors:
     @property
     def latents(self) -> int:
         """Number of independent variables behind the errors of one draw."""
-        return sum(one.latents for one in self._inputs)
+        return sum(group[0].latents for group in self._groups)
 
     @property
     def doubt_is_common(self) -> bool:
@@ -203,7 +208,9 @@ class SourceErrors:
             Additive errors in SI by input.
         """
         return {
-            one.name: one.errors(latents) for one, latents in zip(self._inputs, self._latents(start, stop), strict=True)
+            one.name: one.errors(latents.copy() if len(group) > 1 else latents)
+            for group, latents in zip(self._groups, self._latents(start, stop), strict=True)
+            for one in group
         }
 
     def variables(self, start: int, stop: int) -> Array:
@@ -235,10 +242,11 @@ class SourceErrors:
             Additive errors in SI by input.
         """
         errors, start = {}, 0
-        for one in self._inputs:
-            part = self.source.spread * variables[None, start : start + one.latents]
-            errors[one.name] = one.errors(part)[0]
-            start += one.latents
+        for group in self._groups:
+            stop = start + group[0].latents
+            for one in group:
+                errors[one.name] = one.errors(self.source.spread * variables[None, start:stop])[0]
+            start = stop
         return errors
 
     def effects(self, slopes: Mapping[str, Array]) -> dict[str, Array]:
@@ -259,13 +267,19 @@ class SourceErrors:
 
     @property
     def names(self) -> tuple[tuple[str, int], ...]:
-        """Input of each independent variable and its number there, in the order of `deviation`."""
-        return tuple((one.name, number) for one in self._inputs for number in range(one.latents))
+        """Input of each independent variable and its number there, in the order of `deviation`.
+
+        Of a variable that acts on two inputs, the first.
+        """
+        return tuple((name, number) for name, count in self.counts.items() for number in range(count))
 
     @property
     def counts(self) -> dict[str, int]:
-        """Number of independent variables of each input, in the order of `deviation`."""
-        return {one.name: one.latents for one in self._inputs}
+        """Number of independent variables of each input, in the order of `deviation`.
+
+        Of inputs that have them in common, under the first one's name.
+        """
+        return {group[0].name: group[0].latents for group in self._groups}
 
     @property
     def followed(self) -> bool:
@@ -273,7 +287,7 @@ class SourceErrors:
         return all(one.is_scalar for one in self._inputs) or self.source.effect == "systematic"
 
     def _latents(self, start: int, stop: int) -> list[Array]:
-        """Variables of each input, (draws, latents), before they are expanded to errors."""
+        """Variables of each group of inputs, (draws, latents), before they are expanded to errors."""
         source = self.source
 
         def fill(rng: np.random.Generator, out: Array) -> None:
@@ -285,7 +299,7 @@ class SourceErrors:
         if self.doubt_is_common:
             factor = draw_blocks(f"{self._key}|doubt", start, stop, 1, lambda rng, out: _fill_doubt(rng, out, source))
         drawn = []
-        for one in self._inputs:
+        for one, *_ in self._groups:
             latents = draw_blocks(one.key, start, stop, one.latents, fill)
             if factor is not None:
                 latents *= factor
@@ -305,12 +319,14 @@ class SourceErrors:
         dict of str to ndarray, shape (1, n), or (1,) for single numbers
         """
         errors = {}
-        for one in self._inputs:
-            unit = np.zeros((1, one.latents))
-            if 0 <= latent < one.latents:
-                unit[0, latent] = self.source.spread
-            latent -= one.latents
-            errors[one.name] = one.errors(unit)
+        for group in self._groups:
+            count = group[0].latents
+            for one in group:
+                unit = np.zeros((1, count))
+                if 0 <= latent < count:
+                    unit[0, latent] = self.source.spread
+                errors[one.name] = one.errors(unit)
+            latent -= count
         return errors
 
 

@@ -9,7 +9,7 @@ from dataclasses import replace
 import numpy as np
 
 from wakeledger.confidence.budget import Budget
-from wakeledger.confidence.components import MEASURED, twins_together
+from wakeledger.confidence.components import MEASURED
 from wakeledger.confidence.linear import welch_satterthwaite
 from wakeledger.confidence.linear_budget import correlated_sources
 from wakeledger.confidence.samples import Samples
@@ -20,7 +20,6 @@ from wakeledger.core.names import ROWS
 from wakeledger.ledger.contributions import Contributions
 from wakeledger.ledger.crosscheck import check_estimate, compare
 from wakeledger.ledger.rows import BudgetLine, Comparison, CrossCheck, Row
-from wakeledger.run.chain.empty_tunnel import PREFIX
 from wakeledger.run.chain.outputs import coefficient_of, corrected_coefficient_of, estimate_of
 from wakeledger.run.config import Survey
 
@@ -343,11 +342,9 @@ def contributions(budget: Budget | None, names: Sequence[str]) -> Contributions 
     if budget is None or budget.scatter is None or not names:
         return None
     at = np.array([[budget.rows.index(name) for name in named] for named in _outputs_of(names, budget)])
-    measured = [one for one in budget.components if one.kind == MEASURED]
-    terms = [one for one in budget.components if one.kind != MEASURED]
     components = tuple(
         replace(one, linear=one.linear[at], curved=one.curved[at])
-        for one in (*twins_together(measured, PREFIX), *terms)
+        for one in budget.components
         # A term of another row is no part of these; a declared source is, even at zero.
         if one.kind == MEASURED or np.any(one.linear[at])
     )
