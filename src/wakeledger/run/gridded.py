@@ -14,6 +14,7 @@ from wakeledger.intake.gridding import Gridding, check_duplicates, make_gridding
 from wakeledger.intake.gridding.lattice import find_lattice
 from wakeledger.intake.gridding.mirror import make_mirrored
 from wakeledger.intake.gridding.window import covered_window
+from wakeledger.intake.speeds import check_speeds
 from wakeledger.intake.state import State, check_state
 from wakeledger.physics.fields.boundary import Boundary, FreeAir, Rectangle, Reflection, points_inside
 from wakeledger.physics.fields.wake_region import region_of
@@ -163,6 +164,7 @@ def bare_chain(survey: SurveyInput) -> Bare:
         chain = replace(chain, traverse=raw.traverse, displacement=raw.displacement)
     state = chain.state(reference)
     check_state(state, points=points, reference=reference)
+    check_speeds(state, points, reference)
     return Bare(chain, state, raw)
 
 

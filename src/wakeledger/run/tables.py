@@ -15,6 +15,7 @@ from wakeledger.core.flags import Flag, decode
 from wakeledger.core.grid import Array
 from wakeledger.core.plane import make_plane
 from wakeledger.intake.probe.record import Calibration
+from wakeledger.intake.speeds import measured_speed_ratio, speed_note
 from wakeledger.intake.state import State, nonphysical
 from wakeledger.physics.fields.boundary import Boundary, Circle, ClosedWalls, FreeAir
 from wakeledger.physics.fields.differences import axial_vorticity, crossflow_divergence
@@ -295,6 +296,7 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
             f"Outside the wake the flow is turned by {pitch:+.3f} deg in pitch and {yaw:+.3f} deg in yaw; that was"
             " taken out of the energy form and the momentum balance, and the vorticity form does not see it."
         )
+    found += speed_note(measured_speed_ratio(state, survey.points, nominal.reference))
     if survey.survey.plane.primary == "velocity" and state.static_pressure is None and state.total_pressure is None:
         found.append("No pressure was measured: the static pressure follows from the crossflow's momentum balance.")
     if nominal.invalid_area > 0:
