@@ -636,6 +636,8 @@ def test_surroundings_that_are_not_planned_are_told_in_one_line(boundary, more, 
         ([('station = "0.90 m"\n', "")], "[plan]", "station"),
         ([('"60 mm"', '"400 mm"')], "[plan] tip_core", "quarter of the span"),
         ([("[model]", "[models]")], "[models]", "'model'"),
+        ([('"0.1 deg"', '"400 deg"')], "[plan] angle_accuracy", "smaller than 20 deg"),
+        ([('["0.1 %", "0.3 %"]', '"250 %"')], "[plan] reference_accuracy", "smaller than 20 %"),
         ([("repeats", 'ledger = "a.nc"\nrepeats')], "[plan]", "both given"),
         ([('"0.90 m"', '"-0.2 m"')], "[plan] station", "not behind"),
     ],
@@ -687,6 +689,14 @@ def test_targets_that_are_none_are_refused(text):
         read_target("2 counts", "lift", {coefficient_of("lift"): 0.5})
     with pytest.raises(SurveyError, match="'lift'"):
         read_target("2 counts", "lfit", {})
+
+
+def test_a_row_that_is_not_there_and_a_part_of_nothing_are_refused(flow):
+    with pytest.raises(SurveyError, match="wave_drag is not known of this flow"):
+        read_target("2 counts", "wave_drag", flow.values)
+    with pytest.raises(SurveyError, match="the side force is expected to be zero"):
+        read_target("1 %", "side_force", flow.values)
+    assert read_target("0.1 N", "side_force", flow.values).limit == 0.1
 
 
 def test_a_target_without_a_unit_that_is_more_than_the_drag_is_refused():

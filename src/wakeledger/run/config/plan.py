@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import Annotated, Any, Literal
 
 from pydantic import Field, PlainValidator, model_validator
@@ -43,6 +44,18 @@ def _range(si_unit: str, *, above: float | None = None) -> PlainValidator:
     return _several(lambda value: parse_quantity(value, si_unit, difference=True, above=above, least=least))
 
 
+def _accuracies(si_unit: str, most: float, said: str) -> PlainValidator:
+    """Standard uncertainties that errors of second order still describe."""
+
+    def parse(value: Any) -> float:
+        size = parse_quantity(value, si_unit, difference=True, least=0.0)
+        if size >= most:
+            raise fail(f"{value!r} is not planned with", f"give a standard uncertainty smaller than {said}")
+        return size
+
+    return _several(parse)
+
+
 def _instruments(si_unit: str) -> PlainValidator:
     """Noise of one instrument or of several, which may share a value."""
     many: Validator = listed(lambda value: parse_quantity(value, si_unit, least=0.0), _RANGE)
@@ -56,8 +69,8 @@ def _count(value: Any) -> int:
 
 
 Lengths = Annotated[tuple[float, ...], _range("m", above=0.0)]
-Angles = Annotated[tuple[float, ...], _range("rad")]
-Shares = Annotated[tuple[float, ...], _range("1")]
+Angles = Annotated[tuple[float, ...], _accuracies("rad", math.radians(20), "20 deg")]
+Shares = Annotated[tuple[float, ...], _accuracies("1", 0.2, "20 %")]
 Pressures = Annotated[tuple[float, ...], _range("Pa")]
 SpeedNoise = Annotated[tuple[float, ...], _instruments("m s-1")]
 PressureNoise = Annotated[tuple[float, ...], _instruments("Pa")]

@@ -25,7 +25,7 @@ from wakeledger.stream.reference import Reference
 if TYPE_CHECKING:
     from scipy.interpolate import RectBivariateSpline
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 
 def flow_of_ledger(path: Path) -> ExpectedFlow:

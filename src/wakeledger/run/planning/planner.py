@@ -119,10 +119,6 @@ def _planned(
         flow = _with_own_values(flow, table)
     place = "[plan] target" if target_text is None else "--target"
     target = read_target(table.target if target_text is None else target_text, table.row, flow.values, place=place)
-    if math.isnan(flow.values[target.output]):
-        raise SurveyError(
-            f"{table.row} is not known of this flow", place="[plan] row", remedy="plan for another row, or a loading"
-        )
     design = _design(flow, table, target, request.path, progress, workers)
     choice, reached = design.cheapest()
     ratios: dict[Key, float] = {}

@@ -14,6 +14,8 @@ from wakeledger.run.chain.outputs import ROWS, coefficient_of
 _EXAMPLES = 'write "2 counts" (of a drag coefficient), "0.5 %", a value in the row\'s unit, or one of its coefficient'
 #: One count of a drag coefficient.
 _COUNT = 1e-4
+#: Coefficients below this are rounding.
+_NOTHING = 1e-9
 
 
 @dataclass(frozen=True)
@@ -75,6 +77,10 @@ def read_target(text: str | None, row: str, values: Mapping[str, float], *, plac
     coefficient = row if row == "span_efficiency" else coefficient_of(row)
     if math.isnan(values.get(coefficient, math.nan)):
         coefficient = row
+    if math.isnan(values.get(coefficient, math.nan)):
+        raise SurveyError(
+            f"{row} is not known of this flow", place="[plan] row", remedy="plan for another row, or from a ledger"
+        )
     in_counts = "drag" in row and coefficient != row
     shown = ("counts", 1 / _COUNT) if in_counts else ("1" if coefficient != row else NAMED_ROWS[row].unit, 1.0)
     try:
@@ -86,6 +92,12 @@ def read_target(text: str | None, row: str, values: Mapping[str, float], *, plac
             raise SurveyError(f"counts are given for {row}", place=place, remedy=_EXAMPLES)
         limit, output = float(number), coefficient
     elif unit == "%":
+        if abs(values[coefficient]) < _NOTHING:
+            raise SurveyError(
+                f"the {row.replace('_', ' ')} is expected to be zero, and {text} of it is nothing",
+                place=place,
+                remedy=f"give a value in {NAMED_ROWS[row].unit}, or a coefficient",
+            )
         limit, output = abs(float(number) / 100 * values[coefficient]) * shown[1], coefficient
     elif not unit:
         limit, output = float(number) * shown[1], coefficient
