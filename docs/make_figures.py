@@ -32,7 +32,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 FOLDER = measured.DOCS / "figures"
 

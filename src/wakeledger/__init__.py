@@ -16,11 +16,11 @@ import importlib
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from wakeledger import methods
     from wakeledger.core.estimate import Estimate
     from wakeledger.core.plane import plane
     from wakeledger.ledger.archive import open_archive as open_ledger
-    from wakeledger.ledger.rows import Ledger
-    from wakeledger.physics import methods
+    from wakeledger.ledger.ledger import Budget, Ledger
     from wakeledger.physics.fields.boundary import Circle, ClosedWalls, FreeAir, OpenJet, Polygon, Rectangle
     from wakeledger.physics.fields.flow import find_wake
     from wakeledger.physics.fields.wall_correction import wall_stream_function
@@ -40,16 +40,17 @@ _HOMES = {
     "OpenJet": (_BOUNDARY, "OpenJet"),
     "Polygon": (_BOUNDARY, "Polygon"),
     "Rectangle": (_BOUNDARY, "Rectangle"),
+    "Budget": ("wakeledger.ledger.ledger", "Budget"),
     "combine": ("wakeledger.run.ledgers.repeats", "combine"),
     "Estimate": ("wakeledger.core.estimate", "Estimate"),
     "plan": ("wakeledger.run.planning.planner", "plan"),
     "plane": ("wakeledger.core.plane", "plane"),
     "open_ledger": ("wakeledger.ledger.archive", "open_archive"),
-    "Ledger": ("wakeledger.ledger.rows", "Ledger"),
+    "Ledger": ("wakeledger.ledger.ledger", "Ledger"),
     "find_wake": ("wakeledger.physics.fields.flow", "find_wake"),
     "grid_series": ("wakeledger.run.ledgers.grid_series", "grid_series"),
     "increment": ("wakeledger.run.ledgers.increment", "increment"),
-    "methods": ("wakeledger.physics.methods", None),
+    "methods": ("wakeledger.methods", None),
     "read_survey": ("wakeledger.run.load", "load"),
     "wall_stream_function": ("wakeledger.physics.fields.wall_correction", "wall_stream_function"),
     "reduce": ("wakeledger.run.survey", "reduce"),
@@ -57,6 +58,7 @@ _HOMES = {
 }
 
 __all__ = [
+    "Budget",
     "Circle",
     "ClosedWalls",
     "Estimate",

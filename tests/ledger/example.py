@@ -9,7 +9,8 @@ from wakeledger.core.grid import UniformGrid
 from wakeledger.core.plane import make_plane
 from wakeledger.core.points import Channel, Points
 from wakeledger.ledger.crosscheck import check_estimate, compare
-from wakeledger.ledger.rows import BudgetLine, Check, CrossCheck, Ledger, Row
+from wakeledger.ledger.ledger import Ledger
+from wakeledger.ledger.rows import BudgetLine, Check, CrossCheck, Row
 
 SPEED, DENSITY, AREA, SPAN = 42.0, 1.185, 0.18, 1.2
 Q = 0.5 * DENSITY * SPEED**2

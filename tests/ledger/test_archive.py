@@ -19,7 +19,8 @@ from wakeledger.core.errors import DataError
 from wakeledger.core.names import CHECKS, METHODS, ROWS
 from wakeledger.core.points import Channel, Points
 from wakeledger.ledger.archive import ARCHIVE_FORMAT, FORMAT_ATTRIBUTE, is_archive, open_archive, write_archive
-from wakeledger.ledger.rows import CHECK_VERDICTS, BudgetLine, Check, Comparison, CrossCheck, Ledger, Row
+from wakeledger.ledger.ledger import Ledger
+from wakeledger.ledger.rows import CHECK_VERDICTS, BudgetLine, Check, Comparison, CrossCheck, Row
 from wakeledger.ledger.tabular import ledger_json
 
 

@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 from matplotlib.image import AxesImage
 
-from wakeledger.ledger.rows import Combined
+from wakeledger.ledger.ledger import Combined
 from wakeledger.present import figures
 from wakeledger.present.figures import gallery
 from wakeledger.present.figures.drawing import Drawing
@@ -87,7 +87,7 @@ def test_what_the_report_leaves_out_is_said_and_written_with_the_figures(ledger,
     many = surveyed(ledger, 3)
     document = report_html(many)
     assert document.count("<figure>") == 2
-    assert re.findall(r"The plane at ([\d.]+ m)", document) == ["0.5 m", "1.5 m"]
+    assert re.findall(r"<h2>The plane at ([\d.]+ m)", document) == ["0.5 m", "1.5 m"]
     assert "The plane at 1 m is not drawn here" in document
     names = OF_LEDGER.write(many, tmp_path, figures=("svg",))
     pictures = [name.name for name in names if name.parts[0] == "figures"]

@@ -7,7 +7,7 @@ from unicodedata import east_asian_width
 import numpy as np
 import pytest
 
-from wakeledger.ledger.rows import Combined
+from wakeledger.ledger.ledger import Combined
 from wakeledger.present import figures
 from wakeledger.present.figures.stations import decay_curve, stations_figure, stations_rows
 from wakeledger.present.report import report_html

@@ -6,8 +6,13 @@ import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from types import MappingProxyType
+from typing import TYPE_CHECKING
 
 from wakeledger.core.names import METHODS, ROWS
+
+if TYPE_CHECKING:
+    import pandas as pd
+    import xarray as xr
 
 
 @dataclass(frozen=True)
@@ -56,3 +61,39 @@ class Estimate:
     def unit(self) -> str:
         """UDUNITS string of the row's unit."""
         return ROWS[self.row].unit
+
+    def to_dataframe(self) -> pd.DataFrame:
+        """The estimate as a table of one line.
+
+        Returns
+        -------
+        DataFrame
+            Indexed by the row's name; a column for each figure, one for the unit, and one for each of the terms.
+        """
+        import pandas as pd
+
+        line = {"method": self.method, "unit": self.unit} | self._figures() | {"reason": self.reason} | dict(self.terms)
+        return pd.DataFrame(line, index=pd.Index([self.row], name="row"))
+
+    def to_dataset(self) -> xr.Dataset:
+        """The estimate as a dataset of scalars.
+
+        Returns
+        -------
+        Dataset
+            Figures with their ``units``; terms under their own names; row, method and reason as attributes.
+        """
+        import xarray as xr
+
+        figures = {name: ((), value, {"units": self.unit}) for name, value in self._figures().items()}
+        terms = {name: ((), float(value)) for name, value in self.terms.items()}
+        attributes = {"row": self.row, "method": self.method, "long_name": ROWS[self.row].long_name}
+        return xr.Dataset(figures | terms, attrs=attributes | ({"reason": self.reason} if self.reason else {}))
+
+    def _figures(self) -> dict[str, float]:
+        names = ("value", "standard_uncertainty", "method_uncertainty", "expected_difference")
+        return {name: float(getattr(self, name)) for name in names}
+
+    def _repr_html_(self) -> str:
+        html: str = self.to_dataframe().to_html(na_rep="–", float_format="{:.4g}".format)
+        return html

@@ -19,19 +19,9 @@ from wakeledger.core.errors import DataError
 from wakeledger.ledger import encoding
 from wakeledger.ledger.closure import Cause, Closure
 from wakeledger.ledger.contributions import Contributions
+from wakeledger.ledger.ledger import Combined, KeptSurvey, Ledger
 from wakeledger.ledger.propagation import dataset_propagation, propagation_dataset
-from wakeledger.ledger.rows import (
-    BudgetLine,
-    Check,
-    Combined,
-    Comparison,
-    CrossCheck,
-    Diagnostic,
-    KeptSurvey,
-    Ledger,
-    Row,
-    TunnelFigure,
-)
+from wakeledger.ledger.rows import BudgetLine, Check, Comparison, CrossCheck, Diagnostic, Row, TunnelFigure
 from wakeledger.ledger.tabular import rows_dataset
 from wakeledger.ledger.units import scalar
 

@@ -18,7 +18,7 @@ from wakeledger.core.traverse import axis_of
 if TYPE_CHECKING:
     import xarray as xr
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 #: Grids whose places differ by less than this share of a spacing are the same.
 _SAME = 1e-6

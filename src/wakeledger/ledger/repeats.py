@@ -50,7 +50,7 @@ def repeat_lines(repeats: xr.Dataset) -> tuple[RepeatLine, ...]:
     Parameters
     ----------
     repeats : Dataset
-        `wakeledger.ledger.rows.Ledger.repeats`.
+        `wakeledger.ledger.ledger.Ledger.repeats`.
 
     Returns
     -------
@@ -82,7 +82,7 @@ def repeats_json(repeats: xr.Dataset) -> dict[str, Any]:
     Parameters
     ----------
     repeats : Dataset
-        `wakeledger.ledger.rows.Ledger.repeats`.
+        `wakeledger.ledger.ledger.Ledger.repeats`.
 
     Returns
     -------

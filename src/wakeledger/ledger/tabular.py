@@ -12,10 +12,11 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from wakeledger.core.names import ROWS
+from wakeledger.ledger.ledger import Ledger
 from wakeledger.ledger.propagation import propagation_entry
 from wakeledger.ledger.repeats import repeats_json
 from wakeledger.ledger.rounding import UNKNOWN, rounded
-from wakeledger.ledger.rows import COUNT, Ledger, Row
+from wakeledger.ledger.rows import COUNT, Row
 from wakeledger.ledger.units import scalar
 
 if TYPE_CHECKING:

@@ -17,7 +17,7 @@ if TYPE_CHECKING:
     from rich.table import Table
 
     from wakeledger.ledger.closure import Closure
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 #: What the last line of a closure is called.
 LEFT_OVER = "left over"

@@ -15,8 +15,8 @@ if TYPE_CHECKING:
 
     from wakeledger.ledger.grid_series import GridSeries
     from wakeledger.ledger.increment import Increment
+    from wakeledger.ledger.ledger import Ledger
     from wakeledger.ledger.plan import Plan
-    from wakeledger.ledger.rows import Ledger
 
 Record = TypeVar("Record")
 Figures = Mapping[str, "Figure"]

@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     import xarray as xr
     from rich.table import Table
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 #: More runs than this are not printed one by one.
 MOST_RUNS = 4

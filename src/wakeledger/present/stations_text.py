@@ -15,7 +15,8 @@ from wakeledger.present.wording import VERDICT_WORDS, error_text, in_counts, uni
 if TYPE_CHECKING:
     from rich.table import Table
 
-    from wakeledger.ledger.rows import Combined, Ledger, Row
+    from wakeledger.ledger.ledger import Combined, Ledger
+    from wakeledger.ledger.rows import Row
 
 #: Rows that a resolved trend gives at the trailing edge; all others are means.
 _FOLLOWED = ("induced_drag", "induced_drag_free_air", "profile_drag", "total_drag", "span_efficiency")

@@ -62,7 +62,8 @@ if TYPE_CHECKING:
     from rich.table import Table
 
     from wakeledger.ledger.inspection import AngleRange, ChannelSummary, EdgeState, Inspection
-    from wakeledger.ledger.rows import Check, Comparison, CrossCheck, Ledger, Row
+    from wakeledger.ledger.ledger import Ledger
+    from wakeledger.ledger.rows import Check, Comparison, CrossCheck, Row
 
 #: From this width on, estimates show their value.
 ROOMY = 92

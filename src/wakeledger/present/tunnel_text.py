@@ -15,7 +15,8 @@ from wakeledger.present.wording import coefficient_text, in_counts, unit_text, w
 if TYPE_CHECKING:
     from rich.table import Table
 
-    from wakeledger.ledger.rows import Ledger, TunnelFigure
+    from wakeledger.ledger.ledger import Ledger
+    from wakeledger.ledger.rows import TunnelFigure
 
 
 @dataclass(frozen=True)

@@ -26,7 +26,7 @@ from wakeledger.run.turned_positions import turned
 if TYPE_CHECKING:
     import xarray as xr
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 #: What other surveys stand for, and where the survey file names them.
 EMPTY_TUNNEL, SUPPORT_TARE = "empty_tunnel", "support_tare"

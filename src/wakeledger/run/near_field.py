@@ -8,7 +8,8 @@ from dataclasses import replace
 
 from wakeledger.ledger.closure import Cause, Closure, NearField, close
 from wakeledger.ledger.crosscheck import COVERAGE_FACTOR
-from wakeledger.ledger.rows import COUNT, Comparison, Ledger
+from wakeledger.ledger.ledger import Ledger
+from wakeledger.ledger.rows import COUNT, Comparison
 from wakeledger.run.computed import MESH
 from wakeledger.run.stations import TREND
 from wakeledger.run.uncertainty import numerics

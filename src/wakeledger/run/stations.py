@@ -23,7 +23,8 @@ from wakeledger.core.grid import Array
 from wakeledger.ledger.cancellation import SCATTER, Difference
 from wakeledger.ledger.contributions import PLAIN, Contributions
 from wakeledger.ledger.increment import ordered_budget
-from wakeledger.ledger.rows import Combined, Ledger, Row
+from wakeledger.ledger.ledger import Combined, Ledger
+from wakeledger.ledger.rows import Row
 from wakeledger.physics.methods.station_fit import StationFit, station_fit
 from wakeledger.run import tables
 from wakeledger.run.assembly import comparisons, require_rows

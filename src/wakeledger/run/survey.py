@@ -13,8 +13,9 @@ from wakeledger.confidence.samples import Samples
 from wakeledger.confidence.terms import NumericalTerm
 from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.ledger.inspection import Inspection
+from wakeledger.ledger.ledger import KeptSurvey, Ledger
 from wakeledger.ledger.propagation import Propagation
-from wakeledger.ledger.rows import Check, CrossCheck, KeptSurvey, Ledger, Row
+from wakeledger.ledger.rows import Check, CrossCheck, Row
 from wakeledger.physics.fields.boundary import Boundary
 from wakeledger.physics.loading.span import span_loading
 from wakeledger.run import tables

@@ -12,7 +12,7 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
     from wakeledger.ledger.increment import Increment
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 #: Rows that get a panel where the budget has them, in this order.
 PANELS = ("profile_drag", "induced_drag", "wave_drag", "total_drag", "section_drag", "lift")

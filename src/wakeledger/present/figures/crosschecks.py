@@ -12,7 +12,7 @@ from wakeledger.present.wording import VERDICT_WORDS, words
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 _MARKS = {
     "agrees": (BLUE, "o", True),

@@ -13,7 +13,7 @@ from wakeledger.present.figures.drawing import Drawing, drawn
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 #: So many planes of several stations are drawn at the most, unless all are asked for.
 MOST_PLANES = 6

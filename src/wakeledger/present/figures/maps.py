@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 #: Cells with one of these flags hold no measurement that can be trusted; they are hatched.
 UNTRUSTED = int(Flag.MISSING | Flag.FAR_FROM_DATA | Flag.NON_PHYSICAL | Flag.OUT_OF_RANGE)

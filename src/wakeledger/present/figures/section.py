@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 _EDGES = {"closed_walls": "walls", "open_jet": "edge of the jet", "free_air": ""}
 _PALE = "#eef0f2"

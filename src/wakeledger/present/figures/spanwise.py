@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 _LINES = (
     (BLUE, "-"), (VERMILION, (0, (5, 2))), (GREEN, (0, (1.5, 1.5))), (PURPLE, (0, (5, 1.5, 1.5, 1.5))), (INK, "-"),

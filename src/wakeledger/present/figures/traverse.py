@@ -13,7 +13,7 @@ from wakeledger.present.figures.maps import UNTRUSTED
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 _LABELS = {"y": "y to starboard, m", "z": "z up, m"}
 

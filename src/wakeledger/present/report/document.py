@@ -27,7 +27,7 @@ from wakeledger.present.wording import (
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
-    from wakeledger.ledger.rows import Ledger
+    from wakeledger.ledger.ledger import Ledger
 
 
 def report_html(ledger: Ledger, figures: Mapping[str, Figure] | None = None) -> str:

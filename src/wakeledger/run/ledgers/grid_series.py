@@ -17,7 +17,8 @@ from wakeledger.confidence.grid_convergence import (
 from wakeledger.core.errors import DataError, InputError
 from wakeledger.ledger.archive import open_archive
 from wakeledger.ledger.grid_series import FAR_FIELD, Grid, GridSeries, Series, counts_per_unit
-from wakeledger.ledger.rows import Comparison, Ledger
+from wakeledger.ledger.ledger import Ledger
+from wakeledger.ledger.rows import Comparison
 from wakeledger.run import tables
 from wakeledger.run.config import Survey
 from wakeledger.run.ledgers.increment import declared_surveys

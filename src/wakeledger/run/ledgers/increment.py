@@ -25,8 +25,9 @@ from wakeledger.ledger.increment import (
     Side,
     ordered_budget,
 )
+from wakeledger.ledger.ledger import Ledger
 from wakeledger.ledger.plane_difference import plane_differences
-from wakeledger.ledger.rows import Ledger, Row
+from wakeledger.ledger.rows import Row
 from wakeledger.run import tables
 from wakeledger.run.config import Survey, parse_survey
 from wakeledger.run.ledgers.shared_points import shared_points_notes, unshared_points

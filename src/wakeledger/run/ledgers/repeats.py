@@ -21,9 +21,10 @@ from wakeledger.ledger.archive import open_archive
 from wakeledger.ledger.cancellation import SCATTER, Difference, together
 from wakeledger.ledger.contributions import PLAIN, QUANTITIES, Contributions
 from wakeledger.ledger.increment import ordered_budget
+from wakeledger.ledger.ledger import Ledger
 from wakeledger.ledger.plane_mean import plane_mean
 from wakeledger.ledger.rounding import significant
-from wakeledger.ledger.rows import COUNT, Check, Ledger, Row
+from wakeledger.ledger.rows import COUNT, Check, Row
 from wakeledger.run import tables
 from wakeledger.run.ledgers.increment import contributions_of, declared_surveys, refuse_conflicts
 from wakeledger.run.ledgers.unlike import is_computed, unlike

@@ -12,8 +12,8 @@ from wakeledger.confidence.point_errors import PointErrors
 from wakeledger.core.plane import grid_of
 from wakeledger.core.traverse import axis_of
 from wakeledger.ledger.cancellation import Difference
+from wakeledger.ledger.ledger import Ledger
 from wakeledger.ledger.plane_difference import same_places
-from wakeledger.ledger.rows import Ledger
 from wakeledger.run.config import Survey
 
 #: Share of the expected fall of the noise from both planes to their difference that must be seen.

@@ -6,7 +6,7 @@ import math
 from collections.abc import Iterable, Sequence
 
 from wakeledger.confidence.components import MEASURED
-from wakeledger.ledger.rows import Ledger
+from wakeledger.ledger.ledger import Ledger
 from wakeledger.ledger.units import SCALAR_UNITS
 from wakeledger.run.config import Survey
 

@@ -22,8 +22,9 @@ from wakeledger.core.traverse import make_traverse
 from wakeledger.intake.gridding import check_duplicates
 from wakeledger.intake.gridding.line import Line, make_line
 from wakeledger.intake.probe.traverse import correction_input
+from wakeledger.ledger.ledger import Ledger
 from wakeledger.ledger.propagation import Propagation
-from wakeledger.ledger.rows import CrossCheck, Ledger, Row
+from wakeledger.ledger.rows import CrossCheck, Row
 from wakeledger.physics.fields.traverse_window import TAIL
 from wakeledger.physics.methods.section_drag import SectionDrag, section_drag
 from wakeledger.run import tables
