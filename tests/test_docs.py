@@ -31,7 +31,8 @@ from wakeledger.run.config.survey import Survey, parse_survey
 from wakeledger.run.load import refuse_unsupported
 from wakeledger.run.section import terms as section_terms
 from wakeledger.run.stations import TREND
-from wakeledger.run.uncertainty import method_choice, numerics
+from wakeledger.run.uncertainty import method_choice, numerics, spacing, wake_edge
+from wakeledger.run.uncertainty.wandering import WANDERING
 
 ROOT = Path(__file__).resolve().parents[1]
 DOCS = ROOT / "docs"
@@ -201,14 +202,16 @@ def test_verdicts_are_those_of_the_program():
 def test_numerical_terms_of_the_budget_are_documented(sample):
     listed = part("uncertainty.md", "Numerical terms")
     names = [line.split("|")[1].strip() for line in listed.splitlines() if line.startswith("| ")][1:]
-    constants = ("MASK", "RESOLUTION", "RESAMPLING", "GAPS", "PAIR", "PRESSURE", "LOSS_ZERO", "OFFSET_ZERO")
+    constants = ("MASK", "RESOLUTION", "CORES", "RESAMPLING", "GAPS", "PAIR", "PRESSURE", "LOSS_ZERO", "OFFSET_ZERO")
     constants = (*constants, "SWIRL", "EDGE", "CUT", "SPLIT")
     known = [*(getattr(numerics, name) for name in constants), MESH, TREND]
     lines = [getattr(section_terms, name) for name in ("WINDOW", "RESOLUTION", "GAPS", "LEVEL")]
-    last = ["choices inside *estimate*", method_choice.CHOICE.format("*row*")]
+    last = ["choices inside *estimate*", method_choice.CHOICE.format("*row*"), WANDERING]
     assert names == [*known, *last, "Term of a line traverse", *lines]
     assert numerics.METHOD == "choices inside {}"
     assert (numerics.SWEEP, numerics.ORDER) == ((0.5, 1.5), 3.0)
+    assert (wake_edge.RINGS, wake_edge.CHANCE, wake_edge.BEYOND) == ((2.0, 8.0), 0.003, 2.0)
+    assert (spacing.LOWEST, spacing.SHOWN, spacing.CLEAR) == (1.0, 1.2, 3.0)
 
 
 def test_exit_statuses_are_those_of_the_program():

@@ -94,7 +94,7 @@ def numerical_terms(
     tuple of NumericalTerm
         Over `wakeledger.run.chain.outputs.OUTPUTS`; terms that do not apply are left out.
     """
-    edge = mask_term(chain, nominal, noise)
+    edge = mask_term(chain, nominal, noise, zero_uncertainty=outer.loss_zero_uncertainty)
     terms: list[NumericalTerm | None] = [
         replace(edge, standard_uncertainty=_followed(edge.standard_uncertainty)),
         spacing_term(chain, nominal, noise, cores),

@@ -44,7 +44,7 @@ _DRAWS = 16
 Noise = Sequence[Mapping[str, Array]]
 
 
-def mask_term(chain: Chain, nominal: Reduction, noise: Noise) -> NumericalTerm:
+def mask_term(chain: Chain, nominal: Reduction, noise: Noise, *, zero_uncertainty: float = 0.0) -> NumericalTerm:
     """What lies beyond the edge of the wake region.
 
     Parameters
@@ -55,6 +55,8 @@ def mask_term(chain: Chain, nominal: Reduction, noise: Noise) -> NumericalTerm:
         Its reduction.
     noise : sequence of mapping
         A few draws of the random errors alone; empty where none is declared.
+    zero_uncertainty : float
+        Standard uncertainty of the zero of the total pressure from what it wanders, Pa, which has a term of its own.
 
     Returns
     -------
@@ -66,7 +68,7 @@ def mask_term(chain: Chain, nominal: Reduction, noise: Noise) -> NumericalTerm:
         in the rings is added: far out it is not the flow's.
     """
     rings = _rings(chain, nominal)
-    tails, ring = _tails(chain, nominal), _clear_of_noise(chain, nominal, noise, rings)
+    tails, ring = _tails(chain, nominal), _clear_of_noise(chain, nominal, noise, rings, zero_uncertainty)
     half = np.where(np.abs(ring) > np.abs(tails), ring, tails)
     if chain.settings.primary == "velocity" and not {"total_pressure", "static_pressure"} & chain.measured:
         half = np.copysign(np.abs(half) + np.abs(_turning(chain, nominal, rings)), half)
@@ -168,7 +170,9 @@ def _changed(chain: Chain, nominal: Reduction, loss: Array, vorticity: Array) ->
     return changes(np.array([values[name] for name in OUTPUTS]), nominal.vector)
 
 
-def _clear_of_noise(chain: Chain, nominal: Reduction, noise: Noise, rings: Sequence[Mask]) -> Array:
+def _clear_of_noise(
+    chain: Chain, nominal: Reduction, noise: Noise, rings: Sequence[Mask], zero_uncertainty: float
+) -> Array:
     """What a ring about the region holds beyond its own noise, zero where it cannot be told from that."""
     if not rings:
         # The region fills the window; what lies beyond is the term of the window's edge, and the tails'.
@@ -186,6 +190,7 @@ def _clear_of_noise(chain: Chain, nominal: Reduction, noise: Noise, rings: Seque
         square, count = np.mean([np.square(change(errors) - found) for errors in noise], axis=0), len(noise)
     else:
         square, count = _shown_noise(chain, nominal, rings), _DRAWS
+    square = square + _wander(chain, nominal, rings, zero_uncertainty)
     # The noise is known from a few draws only.
     limit = float(stdtrit(count, 1 - CHANCE / 2))
     clear = np.where(found**2 <= limit**2 * square, 0.0, np.sqrt(np.maximum(found**2 - square, 0.0)))
@@ -193,6 +198,18 @@ def _clear_of_noise(chain: Chain, nominal: Reduction, noise: Noise, rings: Seque
     at = np.arange(len(OUTPUTS))
     result: Array = np.sign(found[largest, at]) * clear[largest, at]
     return result
+
+
+def _wander(chain: Chain, nominal: Reduction, rings: Sequence[Mask], zero_uncertainty: float) -> Array:
+    """Mean square of what a wandering total pressure does in each ring: its zero moves, and so does the ring's mean."""
+    # Where the wander is unknown, so is all that hangs on the zero, by the zero's own term.
+    size = zero_uncertainty if math.isfinite(zero_uncertainty) else 0.0
+    own = np.square(
+        _changed(chain, nominal, np.where(nominal.region.mask, size, 0.0), np.zeros(nominal.flow.grid.shape))
+    )
+    share = [1.0 + (np.count_nonzero(ring) / max(np.count_nonzero(nominal.region.mask), 1)) ** 2 for ring in rings]
+    found: Array = np.multiply.outer(np.array(share), own)
+    return found
 
 
 def _rings(chain: Chain, nominal: Reduction) -> list[Mask]:
