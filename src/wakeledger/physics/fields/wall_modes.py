@@ -12,17 +12,24 @@ from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.interpolate import RectBivariateSpline
 
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.boundary import Boundary, FreeAir
 from wakeledger.physics.fields.wall_correction import wall_part
 
+Kind = Literal["vorticity", "divergence"]
+
 #: Modes tried; the last number is taken as it comes where the wake reaches up to a wall.
-_RANKS = (24, 48, 96)
-#: A probe field's energy beside the walls is met to this part of the largest.
-_TOLERANCE = 1e-8
+_RANKS = (24, 48)
+#: What the modes leave of the response to white probe fields, as a part of the largest. Images and the free-space solve
+#: treat the highest wavenumbers in different ways: a thousandth of what the walls add to noise, and no smooth mode.
+_TOLERANCE = 1e-3
 _PROBES = 4
-_LEAST = 1e-13
+#: Weakest mode kept, as a part of the strongest.
+_LEAST = 1e-5
+#: Points along each axis on which modes are looked for; splines carry them to more.
+_MOST_POINTS = 64
 
 
 def wall_modes(
@@ -30,7 +37,7 @@ def wall_modes(
     boundary: Boundary,
     mask: NDArray[np.bool_],
     *,
-    of: Literal["vorticity", "divergence"] = "vorticity",
+    of: Kind = "vorticity",
 ) -> tuple[Array, Array]:
     """Modes of the walls' share of ½ρ∬ψξ, or of −½ρ∬φσ, over a wake region.
 
@@ -50,40 +57,67 @@ def wall_modes(
     strengths : ndarray, shape (r,)
         λ_r, m²; none in free air.
     modes : ndarray, shape (r, nz, ny)
-        φ_r, orthonormal over the points and zero outside the mask: the share is ½ρ · cell area · Σ_r λ_r (Σ_i φ_r ξ)².
+        φ_r, zero outside the mask: the share is ½ρ · cell area · Σ_r λ_r (Σ_i φ_r ξ)².
 
     Raises
     ------
     SurveyError
         If the window does not fit its surroundings.
     """
-    held = np.flatnonzero(mask)
-    if isinstance(boundary, FreeAir) or not held.size:
+    if isinstance(boundary, FreeAir) or not mask.any():
         return np.zeros(0), np.zeros((0, *grid.shape))
+    coarse = _coarser(grid)
+    if coarse == grid:
+        strengths, modes = _modes(grid, boundary, mask, of)
+    else:
+        nearest = tuple(
+            np.rint(np.linspace(0, fine - 1, few)).astype(int)
+            for fine, few in zip(grid.shape, coarse.shape, strict=True)
+        )
+        strengths, few_points = _modes(coarse, boundary, mask[np.ix_(*nearest)], of)
+        strengths = strengths * (grid.cell_area / coarse.cell_area)
+        modes = np.stack([_interpolated(mode, coarse, grid) for mode in few_points])
+    return strengths, np.where(mask, modes, 0.0)
+
+
+def _coarser(grid: UniformGrid) -> UniformGrid:
+    """The window with few points, enough for what is smooth."""
+    nz, ny = (min(n, _MOST_POINTS) for n in grid.shape)
+    step_y, step_z = grid.dy * (grid.ny - 1) / (ny - 1), grid.dz * (grid.nz - 1) / (nz - 1)
+    return grid if (nz, ny) == grid.shape else UniformGrid(grid.y0, grid.z0, step_y, step_z, ny, nz)
+
+
+def _interpolated(field: Array, coarse: UniformGrid, grid: UniformGrid) -> Array:
+    degrees = {"kx": min(5, coarse.nz - 1), "ky": min(5, coarse.ny - 1)}
+    spline = RectBivariateSpline(coarse.z, coarse.y, field, **degrees)
+    values: Array = spline(np.clip(grid.z, *coarse.z[[0, -1]]), np.clip(grid.y, *coarse.y[[0, -1]]))
+    return values
+
+
+def _modes(grid: UniformGrid, boundary: Boundary, mask: NDArray[np.bool_], of: Kind) -> tuple[Array, Array]:
+    """Strengths and modes; the modes go on smoothly beyond the mask."""
+    held = np.flatnonzero(mask)
 
     def response(columns: Array) -> Array:
         fields = np.zeros((columns.shape[1], grid.nz * grid.ny))
         fields[:, held] = columns.T
-        walls = wall_part(fields.reshape(-1, *grid.shape), grid, boundary, of=of)
-        within: Array = walls.reshape(fields.shape)[:, held].T
-        return within
+        walls: Array = wall_part(fields.reshape(-1, *grid.shape), grid, boundary, of=of).reshape(fields.shape).T
+        return walls
 
     rng = np.random.default_rng(0)
-    probes = rng.standard_normal((held.size, _PROBES))
-    at_probes = response(probes)
-    range_of = at_probes
-    values, vectors = np.zeros(0), np.zeros((held.size, 0))
+    at_probes = response(rng.standard_normal((held.size, _PROBES)))[held]
+    range_of = np.zeros((held.size, 0))
+    basis = range_of
     for rank in _RANKS:
         more = rng.standard_normal((held.size, min(rank, held.size) - range_of.shape[1]))
-        range_of = np.concatenate([range_of, response(more)], axis=1)
+        range_of = np.concatenate([range_of, response(more)[held]], axis=1)
         basis, _ = np.linalg.qr(range_of)
-        inner = basis.T @ response(basis)
-        values, turn = np.linalg.eigh((inner + inner.T) / 2)
-        vectors = basis @ turn
-        left = at_probes - (vectors * values) @ (vectors.T @ probes)
+        left = at_probes - basis @ (basis.T @ at_probes)
         if np.abs(left).max() < _TOLERANCE * np.abs(at_probes).max() or range_of.shape[1] == held.size:
             break
+    everywhere = response(basis)
+    inner = basis.T @ everywhere[held]
+    values, turn = np.linalg.eigh((inner + inner.T) / 2)
     kept = np.abs(values) > _LEAST * np.abs(values).max()
-    modes = np.zeros((int(kept.sum()), grid.nz * grid.ny))
-    modes[:, held] = vectors[:, kept].T
+    modes = (everywhere @ turn[:, kept] / values[kept]).T
     return values[kept], modes.reshape(-1, *grid.shape)
