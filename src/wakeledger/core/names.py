@@ -46,9 +46,9 @@ VARIABLES: Mapping[str, Variable] = _table(
     pitch=Variable("flow pitch angle atan2(w, u), positive for upwash", "rad"),
     yaw=Variable("flow yaw angle asin(v/|V|), positive towards starboard", "rad"),
     total_pressure=Variable("total pressure", "Pa"),
-    static_pressure=Variable("static pressure", "Pa"),
-    density=Variable("density of the air", "kg m-3"),
-    temperature=Variable("static temperature", "K"),
+    static_pressure=Variable("static pressure", "Pa", "air_pressure"),
+    density=Variable("density of the air", "kg m-3", "air_density"),
+    temperature=Variable("static temperature", "K", "air_temperature"),
     total_temperature=Variable("total temperature", "K"),
     turbulent_viscosity=Variable("dynamic turbulent viscosity", "Pa s"),
     reynolds_stress_uu=Variable("mean square of the fluctuation of u", "m2 s-2"),
@@ -80,7 +80,7 @@ PLANE_VARIABLES: Mapping[str, Variable] = _table(
     stream_function=Variable("stream function of the crossflow, v = d(psi)/dz, w = -d(psi)/dy", "m2 s-1"),
     total_pressure_loss=Variable("total pressure of the undisturbed stream minus the local one", "Pa"),
     wake_mask=Variable("1 inside the wake region, 0 outside", "1"),
-    flag=Variable("quality flags of each cell", "1"),
+    flag=Variable("quality flags of each cell", "1", "quality_flag"),
 )
 
 #: Rows of the ledger: meaning and unit (a section's drag is per unit span).

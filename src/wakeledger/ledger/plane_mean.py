@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from wakeledger.core.grid import UniformGrid
 from wakeledger.core.plane import grid_of, make_plane
 from wakeledger.core.traverse import axis_of
+from wakeledger.ledger.encoding import UNCERTAINTY_SUFFIX
 from wakeledger.ledger.plane_difference import brought, common_places, nearest_places, same_places
 
 if TYPE_CHECKING:
@@ -31,11 +32,13 @@ def plane_mean(planes: Sequence[xr.Dataset]) -> tuple[xr.Dataset, str]:
     Returns
     -------
     dataset : Dataset
-        The mean of every field that all have; the wake region is that of any of them, and flags are set where they are
-        in any. Where there is nothing in common, the first plane.
+        The mean of every field that all have, without uncertainties; the wake region is that of any of them, and flags
+        are set where they are in any. Where there is nothing in common, the first plane.
     note : str
         What was done.
     """
+    # The uncertainty of a mean depends on which errors the runs share, which is not known field by field.
+    planes = [plane.drop_vars([name for name in plane if str(name).endswith(UNCERTAINTY_SUFFIX)]) for plane in planes]
     first = planes[0]
     if all(same_places(plane[axis].values, first[axis].values) for plane in planes for axis in ("y", "z")):
         mean = first.copy()

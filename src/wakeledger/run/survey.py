@@ -45,6 +45,7 @@ from wakeledger.run.stations import reduce_stations
 from wakeledger.run.traverse.probe_range import probe_range
 from wakeledger.run.tunnel import tunnel_figures
 from wakeledger.run.uncertainty.draws import Propagated, numerical_only, propagate, terms_of, with_notes
+from wakeledger.run.uncertainty.field_scatter import field_uncertainties, with_uncertainties
 from wakeledger.run.uncertainty.method_choice import choice_terms, spread_notes
 from wakeledger.run.uncertainty.noise_alone import noise_alone_notes
 from wakeledger.run.uncertainty.propagation import propagation, propagation_notes
@@ -242,7 +243,9 @@ def _ledger(
         compressible=nominal.reference.compressible,
         rows=rows,
         covariance=covariance,
-        plane=tables.plane_table(prepared.chain, nominal),
+        plane=with_uncertainties(
+            tables.plane_table(prepared.chain, nominal), field_uncertainties(prepared, seed=file.uncertainty.seed)
+        ),
         raw=survey.as_read,
         survey_text=file.text,
         estimates=estimates,
