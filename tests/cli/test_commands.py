@@ -102,6 +102,14 @@ def test_a_failed_check_is_status_1_with_the_products_written(cli, survey_room, 
     assert open_archive(survey.parent / "clean wing-ledger" / "ledger.nc").failed
 
 
+def test_a_quiet_reduction_still_says_which_checks_fail(cli, survey_room, survey):
+    status, out, err = cli("reduce", survey, "--quiet")
+    assert (status, out) == (1, "")
+    assert one_line(err)
+    assert "clean wing-ledger" in err
+    assert err.rstrip().endswith("core_resolution")
+
+
 def test_options_reach_the_reduction(cli, survey_room, survey, passing, monkeypatch):
     from wakeledger.present.figures import gallery
 

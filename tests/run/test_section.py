@@ -182,7 +182,7 @@ def test_exact_gaussian_wake_in_noise(tmp_path):
     # White noise of 0.4 % of q, 5 mm apart, over a wake of 0.26 m and its outer level: 0.5 % of the drag.
     assert 0.003 * exact < row.standard_uncertainty < 0.008 * exact
     assert abs(row.value - exact) < row.expanded_uncertainty
-    assert row.unit == "N m-1"
+    assert row.unit == "N/m"
     assert row.coefficient == pytest.approx(row.value / (Q * CHORD), rel=1e-12)
     # 0.0418938/0.5: closed form for A = 0.3, B = 0.05 m on a chord of 0.5 m.
     assert row.coefficient == pytest.approx(0.0418938 / CHORD, abs=row.coefficient_expanded_uncertainty)
@@ -546,7 +546,7 @@ def test_archive_opens_with_plain_xarray(reduced):
     folder, found = reduced
     with xr.open_dataset(folder / "ledger.nc") as root:
         assert float(root["value"].sel(row=ROW)) == found.row(ROW).value
-        assert str(root["unit"].sel(row=ROW).values) == "N m-1"
+        assert str(root["unit"].sel(row=ROW).values) == "N/m"
     with xr.open_dataset(folder / "ledger.nc", group="plane") as plane:
         assert plane["total_pressure_loss"].dims == ("z", "y")
         assert plane.sizes == {"z": 121, "y": 1}

@@ -44,28 +44,35 @@ def run(command: click.Command, arguments: Sequence[str]) -> int:
     except click.UsageError as error:
         path = error.ctx.command_path if error.ctx else "wakeledger"
         said = error.format_message().rstrip(".")
-        _say(f"{said} See '{path} --help'" if said.endswith("?") else f"{said}; see '{path} --help'")
+        say(f"{said} See '{path} --help'" if said.endswith("?") else f"{said}; see '{path} --help'")
         return INPUT_WRONG
     except click.ClickException as error:
-        _say(error.format_message())
+        say(error.format_message())
         return INPUT_WRONG
     except click.exceptions.Abort:
-        _say("interrupted; nothing was written")
+        say("interrupted; nothing was written")
         return INTERRUPTED
     except WakeledgerError as error:
-        _say(str(error))
+        say(str(error))
         return INPUT_WRONG
     except BrokenPipeError:
         # The reader of the output is gone; what is left in the buffer must not raise again at exit.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return DONE
     except Exception as error:
-        _say(f"the program failed ({type(error).__name__}); {_log(arguments)}")
+        say(f"the program failed ({type(error).__name__}); {_log(arguments)}")
         return PROGRAM_FAILED
     return status if isinstance(status, int) else DONE
 
 
-def _say(message: str) -> None:
+def say(message: str) -> None:
+    """Print one line to stderr.
+
+    Parameters
+    ----------
+    message : str
+        What is to be said; line breaks in it become blanks.
+    """
     click.echo(f"wakeledger: {' '.join(message.split())}", err=True)
 
 

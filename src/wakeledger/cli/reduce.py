@@ -21,7 +21,7 @@ from wakeledger.cli.delivery import figures_option, overwrite_option
 )
 @figures_option
 @overwrite_option
-@click.option("--quiet", is_flag=True, help="Print neither progress nor the ledger.")
+@click.option("--quiet", is_flag=True, help="Print neither progress nor the ledger; failed checks are named.")
 @click.pass_obj
 def reduce(
     command: str,
@@ -55,4 +55,8 @@ def reduce(
 
         screen.show(ledger_text(ledger, width=screen.width(), colour=screen.colour()))
         screen.show_written(directory, names)
+    elif ledger.failed:
+        # Without a word the exit status alone would look like a failure of the program.
+        named = [check.name for check in ledger.checks if check.verdict == "fail"]
+        exits.say(f"the ledger is written to {directory}, but of its checks fail: {', '.join(named)}")
     return exits.CHECK_FAILED if ledger.failed else exits.DONE

@@ -98,7 +98,7 @@ ROWS: Mapping[str, Variable] = _table(
     root_bending_moment=Variable("root bending moment of one half, positive tip up", "N m"),
     induced_drag_minimum=Variable("least induced drag for this lift and trailing edge", "N"),
     span_efficiency=Variable("span efficiency C_L^2/(pi A C_Di)", "1"),
-    section_drag=Variable("section drag per unit span, positive downstream", "N m-1"),
+    section_drag=Variable("section drag per unit span, positive downstream", "N/m"),
 )
 
 #: Methods by row, the primary one first.
