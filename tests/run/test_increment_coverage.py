@@ -68,8 +68,11 @@ def test_the_study_uses_what_the_archive_keeps():
         other = next(x for x in kept.components if (x.source, x.input) == (one.source, one.input))
         assert other.key == one.key
         np.testing.assert_allclose(other.linear, one.linear, rtol=1e-9, atol=1e-12)
-    # What is left beside them is found from 100 draws, within 7 %: four times that.
-    u = [np.sqrt(np.einsum("qrr->qr", one.scatter)) for one in (kept, parts)]
+    # What is left beside them is found from 100 draws, within 7 %: four times that. The study leaves out that the
+    # program makes it smaller where a row bends over its errors.
+    straight = [one.curvature_factor == 1 for one in ledger.propagation if one.row in increments.JUDGED]
+    assert sum(straight) == 3
+    u = [np.sqrt(np.einsum("qrr->qr", one.scatter))[:, straight] for one in (kept, parts)]
     np.testing.assert_allclose(u[0], u[1], rtol=0.28)
 
 
