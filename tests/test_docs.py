@@ -210,7 +210,7 @@ def test_numerical_terms_of_the_budget_are_documented(sample):
     assert names == [*known, *last, "Term of a line traverse", *lines]
     assert numerics.METHOD == "choices inside {}"
     assert (numerics.SWEEP, numerics.ORDER) == ((0.5, 1.5), 3.0)
-    assert (wake_edge.RINGS, wake_edge.CHANCE, wake_edge.BEYOND) == ((2.0, 8.0), 0.003, 2.0)
+    assert (wake_edge.RINGS, wake_edge.CHANCE, wake_edge.BEYOND) == ((2.0, 8.0), 0.0003, 2.0)
     assert (spacing.LOWEST, spacing.SHOWN, spacing.CLEAR) == (1.0, 1.2, 3.0)
 
 

@@ -33,7 +33,7 @@ MASK = "edge of the wake region"
 #: Widths of the rings about the region that are looked at, in spacings of the points.
 RINGS = (2.0, 8.0)
 #: Chance with which noise alone makes a ring count.
-CHANCE = 0.003
+CHANCE = 0.0003
 #: Factor on both: a tail need not be Gaussian, a ring's content is off by its noise, and more may lie beyond it.
 BEYOND = 2.0
 #: From how many standard deviations on a shape counts as seen; the same chance, for many places.
@@ -213,7 +213,7 @@ def _wander(chain: Chain, nominal: Reduction, rings: Sequence[Mask], zero_uncert
 
 
 def _rings(chain: Chain, nominal: Reduction) -> list[Mask]:
-    """Wider regions; the widest leaves enough of the window for the zero of the total pressure."""
+    """Wider regions, as far as they leave twice as much of the window as the zero of the total pressure needs."""
     grid, mask = nominal.flow.grid, nominal.region.mask
     distance = ndimage.distance_transform_edt(~mask, sampling=(grid.dz, grid.dy))
     excluded = region_of(chain.settings.exclude, grid) if chain.settings.exclude else np.zeros(grid.shape, dtype=bool)
@@ -221,7 +221,7 @@ def _rings(chain: Chain, nominal: Reduction) -> list[Mask]:
     found = []
     for width in RINGS[:1] if chain.settings.computed else RINGS:
         wider = (distance <= width * spacing) & ~excluded
-        if np.mean(~wider) >= LEAST_SHARE and (wider & ~mask).any():
+        if np.mean(~wider) >= 2 * LEAST_SHARE and (wider & ~mask).any():
             found.append(wider)
     return found
 
