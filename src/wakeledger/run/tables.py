@@ -26,6 +26,7 @@ from wakeledger.physics.vortices.identify import Vortex
 from wakeledger.run.chain.chain import Chain
 from wakeledger.run.chain.places import default_grow
 from wakeledger.run.chain.reduction import Reduction
+from wakeledger.run.crossflow_sense import crossflow_notes
 from wakeledger.run.gridded import survey_window
 from wakeledger.run.load import SurveyInput
 from wakeledger.stream.reference import Reference
@@ -296,6 +297,7 @@ def notes(survey: SurveyInput, chain: Chain, nominal: Reduction, state: State) -
             f"Outside the wake the flow is turned by {pitch:+.3f} deg in pitch and {yaw:+.3f} deg in yaw; that was"
             " taken out of the energy form and the momentum balance, and the vorticity form does not see it."
         )
+        found += crossflow_notes(nominal)
     found += speed_note(measured_speed_ratio(state, survey.points, nominal.reference))
     if survey.survey.plane.primary == "velocity" and state.static_pressure is None and state.total_pressure is None:
         found.append("No pressure was measured: the static pressure follows from the crossflow's momentum balance.")
