@@ -169,8 +169,8 @@ def example_ledger(*, spacing: float = 0.01) -> Ledger:
     span = xr.Dataset(
         {
             "circulation": ("y", bound, {"units": "m2 s-1", "long_name": "bound circulation"}),
-            "profile_drag": ("y", 2.5 * strips, {"units": "N m-1", "long_name": "profile drag per unit span"}),
-            "induced_drag": ("y", 1.7 * strips, {"units": "N m-1", "long_name": "induced drag per unit span"}),
+            "profile_drag": ("y", 2.5 * strips, {"units": "N/m", "long_name": "profile drag per unit span"}),
+            "induced_drag": ("y", 1.7 * strips, {"units": "N/m", "long_name": "induced drag per unit span"}),
         },
         coords={"y": ("y", span_y, {"units": "m", "long_name": "distance to starboard"})},
     )  # fmt: skip

@@ -30,7 +30,7 @@ DIMENSIONS: dict[str, tuple[str, str]] = {
     "K": ("a temperature", "12 degC"),
     "N": ("a force", "11.32 N"),
     "N m": ("a moment", "4.2 N m"),
-    "N m-1": ("a force per length", "3.1 N/m"),
+    "N/m": ("a force per length", "3.1 N/m"),
     "s": ("a time", "40 ms"),
     "kg": ("a mass", "80 kg"),
 }
@@ -81,7 +81,7 @@ def _rewrite(unit: str) -> str:
 def _hint(unit: str, si_unit: str) -> str:
     """What the writer of a wrong unit probably meant; empty where there is no guess."""
     bare = unit.replace(" ", "")
-    if si_unit in {"N m", "N m-1"} and bare == "Nm":
+    if si_unit in {"N m", "N/m"} and bare == "Nm":
         return "write 'N m', with a space; "
     if si_unit == "K" and bare in {"C", "F"}:
         return f"write 'deg{bare}'; "

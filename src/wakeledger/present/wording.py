@@ -34,7 +34,7 @@ _SPECIAL: Mapping[str, str] = MappingProxyType(
 
 #: UDUNITS strings as they are printed.
 _UNITS: Mapping[str, str] = MappingProxyType(
-    {"1": "", "N m": "N m", "N m-1": "N/m", "m s-1": "m/s", "m2 s-1": "m²/s", "s-1": "1/s", "kg m-3": "kg/m³"}
+    {"1": "", "N m": "N m", "N/m": "N/m", "m s-1": "m/s", "m2 s-1": "m²/s", "s-1": "1/s", "kg m-3": "kg/m³"}
     | {"m2": "m²", "J kg-1 K-1": "J/(kg K)", "m2 s-2": "m²/s²"}
 )
 

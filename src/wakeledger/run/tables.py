@@ -195,9 +195,9 @@ def span_table(loading: SpanLoading, *, crossflow: bool = True) -> xr.Dataset:
         (
             ("y", loading.y, "m", "distance to starboard"),
             ("bound_circulation", loading.bound_circulation, "m2 s-1", "bound circulation, positive for lift"),
-            ("lift_per_span", loading.lift_per_span, "N m-1", "lift per unit span"),
-            ("profile_drag_per_span", loading.profile_drag_per_span, "N m-1", "profile drag per unit span"),
-            ("induced_drag_per_span", loading.induced_drag_per_span, "N m-1", "induced drag per unit span"),
+            ("lift_per_span", loading.lift_per_span, "N/m", "lift per unit span"),
+            ("profile_drag_per_span", loading.profile_drag_per_span, "N/m", "profile drag per unit span"),
+            ("induced_drag_per_span", loading.induced_drag_per_span, "N/m", "induced drag per unit span"),
         ),
     )
     return table if crossflow else table[["y", "profile_drag_per_span"]]

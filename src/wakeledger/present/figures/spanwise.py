@@ -27,7 +27,7 @@ def span_figure(ledger: Ledger) -> Figure:
     Parameters
     ----------
     ledger : Ledger
-        With a ``span`` dataset along y: circulations in m2 s-1, drags per unit span in N m-1, each with its
+        With a ``span`` dataset along y: circulations in m2 s-1, drags per unit span in N/m, each with its
         uncertainty under ``<name>_standard_uncertainty`` where there is one.
 
     Returns
@@ -38,8 +38,8 @@ def span_figure(ledger: Ledger) -> Figure:
 
     span = ledger.span
     assert span is not None
-    panels = [panel for panel in (_named(span, "m2 s-1"), _named(span, "N m-1")) if panel]
-    titles = {"m2 s-1": "Bound circulation along the span", "N m-1": "Drag of each strip, per unit span"}
+    panels = [panel for panel in (_named(span, "m2 s-1"), _named(span, "N/m")) if panel]
+    titles = {"m2 s-1": "Bound circulation along the span", "N/m": "Drag of each strip, per unit span"}
     with style():
         figure = Figure(figsize=(WIDTH, 2.3 * max(1, len(panels)) + 0.4), layout="constrained")
         grid = figure.subplots(max(1, len(panels)), 1, sharex=True, squeeze=False)
@@ -59,7 +59,7 @@ def span_figure(ledger: Ledger) -> Figure:
 def _named(span: xr.Dataset, unit: str) -> list[str]:
     names = [str(name) for name, values in span.data_vars.items() if values.dims == ("y",)]
     chosen = [name for name in names if span[name].attrs.get("units") == unit and "uncertainty" not in name]
-    return chosen if unit != "N m-1" else [name for name in chosen if "drag" in name]
+    return chosen if unit != "N/m" else [name for name in chosen if "drag" in name]
 
 
 def _curve(axes: Axes, span: xr.Dataset, name: str, colour: str, line: object) -> None:
