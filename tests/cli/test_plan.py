@@ -1,12 +1,13 @@
 """``wakeledger plan`` as a user runs it."""
 
+import dataclasses
 import json
 
 import numpy as np
 import pytest
 
 from wakeledger.cli import exits, wakeledger
-from wakeledger.present.plan_text import outcome, plan_text, time_text
+from wakeledger.present.plan_text import outcome, plan_text, standing, time_text
 
 PLAN = """title = "one set-up"
 [reference]
@@ -102,6 +103,21 @@ def test_the_text_says_what_the_record_holds(run):
     assert all(len(line) <= 80 for line in text.splitlines())
     assert np.isfinite(found.uncertainty).all()
     assert plan_text(found, width=80, colour=True) != text
+
+
+def test_a_set_up_that_is_good_enough_but_fails_a_check_is_told_so(run):
+    from wakeledger.run.planning import plan
+
+    path, _, _ = run
+    found = plan(path, target="0.02 counts")
+    one = dataclasses.replace(found.chosen, failing=("edge_vorticity",), expanded_uncertainty=0.01)
+    failing = dataclasses.replace(found, chosen=one, expanded_uncertainty=0.01, reached=False)
+    assert "would be within the target of 0.0200 counts, but edge vorticity would fail" in outcome(failing)
+    assert standing(failing, one) == (False, "edge vorticity would FAIL")
+    good = dataclasses.replace(one, failing=())
+    assert standing(failing, good) == (True, "reaches the target")
+    assert standing(failing, dataclasses.replace(good, minutes=1e9))[0] is (not failing.time_limit < 1e9)
+    assert standing(failing, dataclasses.replace(good, expanded_uncertainty=1.0)) == (False, "does NOT reach it")
 
 
 def test_times():

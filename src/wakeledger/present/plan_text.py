@@ -84,6 +84,11 @@ def outcome(plan: Plan) -> str:
         if plan.stated > plan.target:
             sentence += f" The ledger of such a survey would state {with_unit(plan, plan.stated, 2)}."
         return sentence
+    if plan.chosen.failing and plan.expanded_uncertainty <= plan.target:
+        return (
+            f"No set-up tried passes its checks: {known} (U95) would be within the target of {target}, but"
+            f" {', '.join(map(words, plan.chosen.failing))} would fail. Try a wider window or a closer spacing."
+        )
     within = f" within {time_text(plan.time_limit)}" if math.isfinite(plan.time_limit) else ""
     sentence = f"No set-up tried reaches {target}{within}; the best one found: {known} (U95)"
     if math.isfinite(plan.chosen.minutes):
@@ -192,13 +197,23 @@ def _map(plan: Plan) -> Table:
     return table
 
 
+def standing(plan: Plan, one: SetUp) -> tuple[bool, str]:
+    """Whether a set-up reaches the target, and what is to be said of it."""
+    if one.expanded_uncertainty > plan.target:
+        return False, "does NOT reach it"
+    if one.failing:
+        return False, f"{', '.join(map(words, one.failing))} would FAIL"
+    if one.minutes > plan.time_limit:
+        return False, "takes TOO LONG"
+    return True, "reaches the target"
+
+
 def _by_probe(plan: Plan) -> Table:
     table = new_table(
         ("probe's noise", "left"), ("every", "right"), ("window", "right"), ("surveys", "right"), ("time", "right"),
         ("U95", "right"), ("its ledger's", "right"), ("", "left"),
     )  # fmt: skip
     for one in plan.by_probe:
-        reaches = one.expanded_uncertainty <= plan.target and not one.failing and not one.minutes > plan.time_limit
         table.add_row(
             one.probe,
             f"{1e3 * one.spacing:.3g} mm",
@@ -207,7 +222,7 @@ def _by_probe(plan: Plan) -> Table:
             cost_text(one),
             significant(one.expanded_uncertainty, 2),
             significant(one.stated, 2),
-            "reaches the target" if reaches else "does NOT reach it",
+            standing(plan, one)[1],
         )
     return table
 

@@ -7,9 +7,9 @@ from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
 from wakeledger.ledger.rounding import significant
-from wakeledger.present.plan_text import checked, outcome, set_up_facts, takes_text, time_text, unit_of
+from wakeledger.present.plan_text import checked, outcome, set_up_facts, standing, takes_text, time_text, unit_of
 from wakeledger.present.report.page import page, pictures
-from wakeledger.present.wording import digits, words
+from wakeledger.present.wording import digits
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -72,10 +72,8 @@ def _by_probe(plan: Plan) -> list[dict[str, Any]]:
             "time": time_text(one.minutes) if math.isfinite(one.minutes) else "–",
             "u": significant(one.expanded_uncertainty, 2),
             "stated": significant(one.stated, 2),
-            "reaches": one.expanded_uncertainty <= plan.target
-            and not one.failing
-            and not one.minutes > plan.time_limit,
-            "failing": ", ".join(map(words, one.failing)),
+            "reaches": standing(plan, one)[0],
+            "standing": standing(plan, one)[1],
         }
         for one in plan.by_probe
     ]
