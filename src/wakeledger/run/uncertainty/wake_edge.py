@@ -162,7 +162,7 @@ def _changed(chain: Chain, nominal: Reduction, loss: Array, vorticity: Array) ->
     values["induced_drag_free_air"] += free
     for name in ("lift", "side_force", "rolling_moment", "root_bending_moment"):
         values[name] += float(getattr(with_it, name) - getattr(nominal.forces, name))
-    free_air = float(with_it.free_air_drag) - chain.frozen.bias.get("induced_drag", 0.0)
+    free_air = float(with_it.free_air_drag) - chain.frozen.bias.get("induced_drag_free_air", 0.0)
     values |= coefficients(values, free_air, settings, reference, nominal.wake_blockage, {})
     values |= tunnel_figures(
         values, nominal.vorticity + vorticity, grid, settings, reference, nominal.wake_blockage, {}
