@@ -165,7 +165,11 @@ def _read(path: Path, kind: str, columns: Mapping[str, Column], cut: Cut) -> Raw
     if kind in KINDS:
         return read_mesh(path, kind, columns, cut)
     if cut.time is not None:
-        raise DataError("time is given, and the file holds one instant", file=path, remedy="leave time out of [plane]")
+        raise DataError(
+            "time is given, and the file is no OpenFOAM case",
+            file=path,
+            remedy="leave time out of [plane]; a set of instants in netCDF is averaged as a whole",
+        )
     volume = None if np.isnan(cut.position) else cut
     if kind == "matlab":
         return read_matlab(path, columns, volume)

@@ -85,7 +85,7 @@ OF_PLANE: dict[str, Drawing[Ledger]] = {
     "span_loading": Drawing(
         spanwise.span_figure,
         lambda ledger: ledger.span is not None,
-        "Loading along the span and the drag of each strip, with expanded uncertainties (k = 2) where they are known.",
+        "Loading along the span and the drag of each strip.",
     ),
 }
 

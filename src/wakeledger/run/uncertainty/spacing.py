@@ -152,7 +152,7 @@ def spacing_term(chain: Chain, nominal: Reduction, noise: Noise, cores: Cores) -
         for name in _NAMED
         if order[OUTPUTS.index(name)] < ORDER
     ]
-    said = f"order {ORDER:g}, as assumed: no lower one shows clear of the noise"
+    said = f"order {ORDER:g}, as assumed: no observed order below it is clear of the noise"
     if lower:
         said = (
             f"the observed order of convergence where it is below {ORDER:g} ({', '.join(lower)}), else with {ORDER:g}"
