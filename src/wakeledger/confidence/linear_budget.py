@@ -266,7 +266,7 @@ def linear_budget(
     m = len(names)
     covariances, orders = [], []
     common = np.zeros((m, m))
-    shared: dict[tuple[str, str], list[Array]] = {}
+    shared: dict[str, list[Array]] = {}
     for source in sources:
         errors = SourceErrors(source, layouts, seed=0)
         covariance = np.zeros((m, m))
@@ -274,21 +274,26 @@ def linear_budget(
         through = {name: slopes.figures[name] for name in source.applies_to if name not in slopes.direct}
         straight = {name: slopes.direct[name] for name in source.applies_to if name in slopes.direct}
         found = errors.effects({**through, **straight})
-        for name, effects in found.items():
-            inner = effects @ effects.T
-            covariance += inner if name in straight else slopes.outputs @ inner @ slopes.outputs.T
-            if name in straight and source.name not in (second or {}):
-                curved = 0.5 * slopes.curvatures.get(name, np.zeros(m)) * _size(source, layouts[name]) ** 2
-                fourth = source.kurtosis if math.isfinite(source.kurtosis) else 3.0
-                order += SecondOrder(
-                    (fourth - 1) * curved**2, curved, 4 * curved**2, 2 * curved * np.square(effects[:, 0])
-                )
-            if source.shared_id is not None:
-                whole = effects if name in straight else slopes.outputs @ effects
-                for other in shared.setdefault((source.shared_id, name), []):
-                    if other.shape == whole.shape:
-                        common += other @ whole.T + whole @ other.T
-                shared[source.shared_id, name].append(whole)
+        for stream, inputs in errors.streams.items():
+            if source.shared_id is None:
+                for name in inputs:
+                    inner = found[name] @ found[name].T
+                    covariance += inner if name in straight else slopes.outputs @ inner @ slopes.outputs.T
+                continue
+            # An error of several inputs acts on all of them at once.
+            whole: Array = np.sum(
+                [found[name] if name in straight else slopes.outputs @ found[name] for name in inputs], axis=0
+            )
+            covariance += whole @ whole.T
+            for other in shared.setdefault(stream, []):
+                common += other @ whole.T + whole @ other.T
+            shared[stream].append(whole)
+        for name in straight if source.name not in (second or {}) else ():
+            curved = 0.5 * slopes.curvatures.get(name, np.zeros(m)) * _size(source, layouts[name]) ** 2
+            fourth = source.kurtosis if math.isfinite(source.kurtosis) else 3.0
+            order += SecondOrder(
+                (fourth - 1) * curved**2, curved, 4 * curved**2, 2 * curved * np.square(found[name][:, 0])
+            )
         covariances.append(covariance)
         orders.append(order)
     together = PairOrder.none(m) if pairs is None else pairs

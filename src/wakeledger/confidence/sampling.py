@@ -181,8 +181,9 @@ class SourceErrors:
             latents, expand = rows.size, _ByRow(inverse, rows.size)
         elif source.correlation_length is not None and layout.positions is not None:
             latents, expand = correlated_field(layout.positions, source.correlation_length)
-        key = f"{self._key}|{name.removeprefix(self.source.prefix)}"
-        return _InputErrors(name, key, latents, scale, expand, layout.is_scalar)
+        # What errs at each point or row does so anew in another survey.
+        common = name.removeprefix(source.prefix) if source.effect == "systematic" else name
+        return _InputErrors(name, f"{self._key}|{common}", latents, scale, expand, layout.is_scalar)
 
     @property
     def latents(self) -> int:
@@ -280,6 +281,11 @@ class SourceErrors:
         Of inputs that have them in common, under the first one's name.
         """
         return {group[0].name: group[0].latents for group in self._groups}
+
+    @property
+    def streams(self) -> dict[str, tuple[str, ...]]:
+        """Inputs that have their variables in common, by what tells these from all others."""
+        return {f"{group[0].key}|{group[0].latents}": tuple(one.name for one in group) for group in self._groups}
 
     @property
     def followed(self) -> bool:
