@@ -1,9 +1,13 @@
 """A crossflow with exchanged or reversed components is told; wakes, noise and near planes are not called so."""
 
+from types import SimpleNamespace
+
 import numpy as np
 import pytest
 from tests.run import survey_kit as kit
 
+from wakeledger.core.grid import UniformGrid
+from wakeledger.run.crossflow_sense import crossflow_notes
 from wakeledger.run.survey import inspect, load
 
 
@@ -40,3 +44,13 @@ def test_noise_alone_is_not_judged(tmp_path):
     assert (
         said(tmp_path, change=lambda v, w: (0.2 * rng.standard_normal(v.size), 0.2 * rng.standard_normal(w.size))) == []
     )
+
+
+def test_a_plane_too_small_to_tell_its_noise_is_not_judged():
+    """Eight lines have 16 sixth differences along each axis, of 50 that noise takes; a strain makes no vorticity."""
+    grid = UniformGrid(-0.1, -0.1, 0.02, 0.02, 8, 8)
+    y, z = grid.mesh()
+    nominal = SimpleNamespace(
+        flow=SimpleNamespace(grid=grid, v=y, w=-z), forces=SimpleNamespace(stream_function=np.zeros(grid.shape))
+    )
+    assert crossflow_notes(nominal) == []

@@ -38,8 +38,10 @@ def crossflow_notes(nominal: Reduction) -> list[str]:
     made = induced_crossflow(nominal.forces.stream_function, grid)
     measured, made = (field - field.mean(axis=(1, 2), keepdims=True) for field in (measured, made))
     energy = float(np.mean(measured**2))
-    noise = [estimate_noise(field).standard_deviation for field in measured]
-    if not energy > _ABOVE_NOISE**2 * float(np.nanmean(np.square(noise))):
+    noise = np.array([estimate_noise(field).standard_deviation for field in measured])
+    known = noise[np.isfinite(noise)]
+    # Where too few points stand side by side to tell the noise, nothing is judged.
+    if not known.size or not energy > _ABOVE_NOISE**2 * float(np.mean(known**2)):
         return []
     share = 1 - float(np.mean((measured - made) ** 2)) / energy
     if share >= _OWN:
