@@ -13,7 +13,8 @@ import pytest
 import wakeledger as wl
 from wakeledger.core.errors import InputError, SurveyError
 from wakeledger.ledger.archive import write_archive
-from wakeledger.ledger.plan import PLAN_FORMAT
+from wakeledger.ledger.plan import PLAN_FORMAT, PlanLine
+from wakeledger.present.plan_text import checked
 from wakeledger.run.chain.outputs import coefficient_of
 from wakeledger.run.chain.places import zero_places
 from wakeledger.run.config.plan_file import parse_plan, read_plan
@@ -387,6 +388,18 @@ def test_what_a_grid_misses_is_the_true_error_and_no_term_of_a_ledger(flow):
     assert sum(found.terms.values()) > 4 * found.missed
     assert found.scatter(Accuracies(), 1) == found.measured(Accuracies(), 1) + found.missed
     assert found.stated(Accuracies(), 1) == found.measured(Accuracies(), 1) + sum(found.terms.values())
+
+
+def test_a_term_that_cannot_be_had_leaves_the_ledgers_figure_unknown(flow, small):
+    """Every second of six lines leaves three, of four that are needed: the ledger would not know its spacing's part."""
+    window = window_of(flow, 0.03, 0.3)
+    middle = np.sort(window.z[np.argsort(np.abs(window.z))[:6]])
+    places = visit(flow, replace(window, z=middle), (0.0, 0.0))
+    found = respond(flow, Probe(0.1, 1.0, 1.0), Accuracies(), output="profile_drag", surveys=[places], seed=(1,))
+    assert math.isnan(found.terms["spacing of the points"])
+    assert math.isnan(found.stated(Accuracies(), 1)) and found.scatter(Accuracies(), 1) > 0
+    unknown = PlanLine("spacing of the points", "numerical", math.nan, math.nan)
+    assert "would not know U95: it cannot tell spacing of the points." in checked(replace(small, terms=(unknown,)))
 
 
 def test_a_window_too_small_is_in_the_figure_whatever_the_ledger_states(flow):

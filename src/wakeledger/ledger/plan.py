@@ -161,7 +161,7 @@ class Plan:
         Of the chosen set-up, the largest first.
     terms : tuple of PlanLine
         Numerical terms that the ledger of the chosen set-up would state, the largest first; shares are those of
-        `stated`.
+        `stated`. NaN for those that cannot be had, which leave it unknown.
     improvements : tuple of Improvement
         The one that gains most first.
     by_probe : tuple of SetUp

@@ -160,7 +160,10 @@ def checked(plan: Plan) -> str:
     left = with_unit(plan, plan.left, 2)
     terms = [line for line in plan.terms if line.share >= SMALL][:MOST_LINES]
     stated = f" The ledger of such a survey would state U95 = {with_unit(plan, plan.stated, 2)}"
-    if terms:
+    unknown = [line.source for line in plan.terms if math.isnan(line.standard_uncertainty)]
+    if unknown:
+        stated = f" The ledger of such a survey would not know U95: it cannot tell {', '.join(unknown)}"
+    elif terms:
         named = ", ".join(f"{line.source} {significant(line.standard_uncertainty, 2)}" for line in terms)
         stated += f": it cannot know that, and has numerical terms for it (u: {named})"
     return (

@@ -359,9 +359,10 @@ def _lines(found: Sequence[tuple[str, Kind, float]], scale: float, total: float)
     lines = [
         PlanLine(name, kind, scale * math.sqrt(variance), variance / total)
         for name, kind, variance in found
-        if variance > 0
+        if not variance <= 0
     ]
-    return tuple(sorted(lines, key=lambda line: -line.standard_uncertainty))
+    # Unknown ones last.
+    return tuple(sorted(lines, key=lambda line: (math.isnan(line.standard_uncertainty), -line.standard_uncertainty)))
 
 
 def _halves(lines: Sequence[PlanLine], design: Design, choice: Choice) -> dict[str, float]:

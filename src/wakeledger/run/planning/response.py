@@ -75,8 +75,8 @@ class Response:
     error : float
         Their mean error, in the output's unit.
     terms : mapping of str to float
-        Of each numerical term that the ledger of such a survey states. It does not know the exact row, so that these
-        stand for `missed` there.
+        Of each numerical term that the ledger of such a survey states, NaN for one that cannot be had. It does not know
+        the exact row, so that these stand for `missed` there.
     failing : tuple of str
         Checks that would fail.
     reason : str or None
@@ -111,7 +111,7 @@ class Response:
         return self.measured(accuracies, repeats) + self.missed
 
     def stated(self, accuracies: Accuracies, repeats: int) -> float:
-        """Variance that a ledger states: declared sources and numerical terms."""
+        """Variance that a ledger states: declared sources and numerical terms; NaN where one of these is unknown."""
         return self.measured(accuracies, repeats) + sum(self.terms.values())
 
     def scaled(self, factor: float) -> Response:
@@ -226,8 +226,8 @@ class _Pass:
         self.layouts = layouts(survey, points, prepared.chain.gridding, names)
         self.prepared, self.at, self.workers, self.seed = prepared, at, workers, seed
         chain = prepared.chain
-        # A term that is not known is none, as in a ledger's sum.
-        sizes = ((term.name, float(np.nan_to_num(term.standard_uncertainty[at]))) for term in terms)
+        # One unknown term leaves the ledger's uncertainty unknown.
+        sizes = ((term.name, float(term.standard_uncertainty[at])) for term in terms)
         self.terms = {name: size**2 for name, size in sizes if size != 0}
         self.failing = tuple(
             check.name for check in all_checks(prepared.nominal, facts_of(prepared)) if check.verdict == "fail"
