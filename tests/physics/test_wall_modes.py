@@ -62,6 +62,25 @@ def test_modes_of_a_fine_plane(of: str) -> None:
     assert found[6] == pytest.approx(expected[6], rel=1e-4)
 
 
+def test_a_region_between_the_points_on_which_modes_are_looked_for() -> None:
+    """Two by two places of 201 x 301, none of them nearest to one of 64 x 64."""
+    grid = UniformGrid(-0.6, -0.4, 0.004, 0.004, 301, 201)
+    mask = np.zeros(grid.shape, bool)
+    mask[103:105, 149:151] = True
+    for axis, points in enumerate(grid.shape):
+        nearest = np.rint(np.linspace(0, points - 1, 64)).astype(int)
+        assert not np.isin(np.nonzero(mask)[axis], nearest).any()
+    fields = np.random.default_rng(5).standard_normal((6, *grid.shape)) * mask
+    boundary = BOUNDARIES["closed"]
+    walls = wall_stream_function(fields, grid, boundary) - stream_function(fields, grid)
+    expected = (fields * walls).sum(axis=(-2, -1))
+    strengths, modes = wall_modes(grid, boundary, mask)
+    found = np.einsum("r,kr->k", strengths, np.einsum("rzy,kzy->kr", modes, fields) ** 2)
+    # The tolerance of the modes.
+    np.testing.assert_allclose(found, expected, rtol=0, atol=2e-3 * np.abs(expected).max())
+    assert np.abs(expected).max() > 1e-6
+
+
 def test_nothing_around_the_plane_adds_nothing() -> None:
     for boundary, mask in ((FreeAir(), MASK), (BOUNDARIES["closed"], np.zeros_like(MASK))):
         strengths, modes = wall_modes(GRID, boundary, mask)

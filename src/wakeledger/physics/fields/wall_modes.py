@@ -70,11 +70,15 @@ def wall_modes(
     if coarse == grid:
         strengths, modes = _modes(grid, boundary, mask, of)
     else:
-        nearest = tuple(
-            np.rint(np.linspace(0, fine - 1, few)).astype(int)
-            for fine, few in zip(grid.shape, coarse.shape, strict=True)
-        )
-        strengths, few_points = _modes(coarse, boundary, mask[np.ix_(*nearest)], of)
+        # Every place of the region counts at the point nearest to it, so that a thin one is not missed.
+        held = np.zeros(coarse.shape, dtype=bool)
+        held[
+            tuple(
+                np.rint(places * ((few - 1) / (fine - 1))).astype(int)
+                for places, few, fine in zip(np.nonzero(mask), coarse.shape, grid.shape, strict=True)
+            )
+        ] = True
+        strengths, few_points = _modes(coarse, boundary, held, of)
         strengths = strengths * (grid.cell_area / coarse.cell_area)
         modes = np.stack([_interpolated(mode, coarse, grid) for mode in few_points])
     return strengths, np.where(mask, modes, 0.0)
