@@ -20,11 +20,11 @@ from wakeledger.physics.methods.slipstream import slipstream
 from wakeledger.physics.methods.velocity_defect import drag_split
 from wakeledger.physics.methods.vorticity_area import vorticity_forces
 from wakeledger.run.chain.chain import Chain
-from wakeledger.run.chain.outputs import OUTPUTS, coefficient_of
 from wakeledger.run.chain.reduction import Reduction
 from wakeledger.run.chain.zeroing import zeroed
 from wakeledger.run.load import SurveyInput
 from wakeledger.run.tables import counts_text
+from wakeledger.run.uncertainty.changes import changes_with
 
 MESH = "integral on the points' own mesh"
 #: Excess of total pressure or enthalpy over the stream's that is a slipstream's, as a share of q, and its fewest cells.
@@ -106,13 +106,8 @@ def mesh_term(survey: SurveyInput, chain: Chain, nominal: Reduction) -> Numerica
     star = nominal.loss_free
     gridded = np.where(mask, profile_integrand(nominal.flow, reference, star), 0.0)
     change = abs(on_mesh - settings.counted * float(grid.integrate(gridded)))
-    vector = np.zeros(len(OUTPUTS))
-    for row in ("profile_drag", "total_drag"):
-        vector[OUTPUTS.index(row)] = change
-        value = nominal.values[row]
-        scale = nominal.values[coefficient_of(row)] / value if value else np.nan
-        vector[OUTPUTS.index(coefficient_of(row))] = np.nan_to_num(change * scale)
-    return NumericalTerm(MESH, vector, "rectangular")
+    moved = dict.fromkeys(("profile_drag", "total_drag"), change)
+    return NumericalTerm(MESH, changes_with(moved, nominal.values), "rectangular")
 
 
 def slipstream_region(chain: Chain, first: Reduction) -> Mask | None:

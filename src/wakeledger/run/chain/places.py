@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from wakeledger.core.grid import UniformGrid
+from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.intake.gridding import Gridding
 from wakeledger.physics.fields.loss_level import beyond
 from wakeledger.physics.fields.outer_flow import LEAST_SHARE
@@ -31,4 +31,12 @@ def sampled_mask(mask: Mask, grid: UniformGrid, onto: UniformGrid) -> Mask:
     iz, iy = np.rint((onto.z - grid.z0) / grid.dz).astype(int), np.rint((onto.y - grid.y0) / grid.dy).astype(int)
     inside = np.outer((iz >= 0) & (iz < grid.nz), (iy >= 0) & (iy < grid.ny))
     found: Mask = mask[np.ix_(np.clip(iz, 0, grid.nz - 1), np.clip(iy, 0, grid.ny - 1))] & inside
+    return found
+
+
+def mask_at(mask: Mask, grid: UniformGrid, y: Array, z: Array) -> Mask:
+    """Whether points, y and z of shape (n,), lie in a region, by the nearest place of its grid."""
+    iz = np.clip(np.rint((z - grid.z0) / grid.dz).astype(int), 0, grid.nz - 1)
+    iy = np.clip(np.rint((y - grid.y0) / grid.dy).astype(int), 0, grid.ny - 1)
+    found: Mask = mask[iz, iy]
     return found

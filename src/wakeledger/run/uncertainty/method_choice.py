@@ -8,13 +8,11 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 
-import numpy as np
-
 from wakeledger.confidence.terms import NumericalTerm, spread_beyond
 from wakeledger.core.grid import Array
 from wakeledger.ledger.crosscheck import COVERAGE_FACTOR
 from wakeledger.ledger.rows import COUNT, CrossCheck, Row
-from wakeledger.run.chain.outputs import coefficient_of, corrected_coefficient_of
+from wakeledger.run.uncertainty.changes import changes_with, share_of, with_induced_drag
 
 CHOICE = "choice among methods for the {}"
 
@@ -123,29 +121,15 @@ def _doubt(check: CrossCheck) -> float:
 def _moved(row: str, size: float, values: Mapping[str, float], outputs: Sequence[str]) -> Array:
     """What all outputs move by when a row does."""
     moved = {row: size}
-    if row in ("profile_drag", "induced_drag", "wave_drag"):
+    if row in ("profile_drag", "wave_drag"):
         moved["total_drag"] = size
     if row == "induced_drag":
-        # The walls' part is the same.
-        moved["induced_drag_free_air"] = size
-        drag = values.get("induced_drag_free_air", math.nan)
-        drag = values[row] if math.isnan(drag) else drag
-        moved["span_efficiency"] = -_share(size, drag) * values.get("span_efficiency", math.nan)
+        moved = with_induced_drag(size, values)
     if row == "lift":
-        share = _share(size, values[row])
+        share = share_of(size, values[row])
         for name, power in (("span_efficiency", 2), ("angle_correction", 1), ("wall_upwash", 1)):
             moved[name] = power * share * values.get(name, math.nan)
-    for name, change in tuple(moved.items()):
-        for coefficient in (coefficient_of(name), corrected_coefficient_of(name)):
-            moved[coefficient] = _share(change, values.get(name, math.nan)) * values.get(coefficient, math.nan)
-    # An output without a value has no uncertainty either.
-    known = (moved.get(name, 0.0) if math.isfinite(values.get(name, math.nan)) else 0.0 for name in outputs)
-    vector: Array = np.array(list(known))
-    return vector
-
-
-def _share(change: float, value: float) -> float:
-    return change / value if value else math.nan
+    return changes_with(moved, values, outputs)
 
 
 def _in_counts(row: Row) -> bool:

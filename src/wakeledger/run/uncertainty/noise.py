@@ -32,6 +32,7 @@ from wakeledger.physics.vortices.vortex_sum import noise_bias as vortex_sum_bias
 from wakeledger.run.chain.chain import Chain
 from wakeledger.run.chain.estimates import counted_mask
 from wakeledger.run.chain.outputs import estimate_of
+from wakeledger.run.chain.places import mask_at
 from wakeledger.run.chain.reduction import Reduction
 
 #: Drawn error fields of each source: for its variance, and for a bias that has no closed form.
@@ -96,7 +97,7 @@ def declared_noise(
         Sources that do not reach the crossflow are left out.
     """
     found = []
-    wake = _at_points(nominal.region.mask, chain)
+    wake = mask_at(nominal.region.mask, nominal.flow.grid, chain.points.y, chain.points.z)
     still = chain.state(nominal.reference)
     for source in sources:
         if source.effect == "systematic":
@@ -335,15 +336,6 @@ def _paired_mean(form: Callable[[Array, Array], Array], nominal: Reduction, fiel
     v, w = nominal.flow.v, nominal.flow.w
     still = form(v, w)
     return _mean((form(v + fields[0], w + fields[1]) + form(v - fields[0], w - fields[1])) / 2 - still)
-
-
-def _at_points(mask: Mask, chain: Chain) -> Mask:
-    """Value of a region at every point, by the nearest place of the grid."""
-    grid = chain.gridding.grid
-    iz = np.clip(np.rint((chain.points.z - grid.z0) / grid.dz).astype(int), 0, grid.nz - 1)
-    iy = np.clip(np.rint((chain.points.y - grid.y0) / grid.dy).astype(int), 0, grid.ny - 1)
-    inside: Mask = mask[iz, iy]
-    return inside
 
 
 def _correlation(source: Source, chain: Chain) -> tuple[Array | None, Array | None] | None:

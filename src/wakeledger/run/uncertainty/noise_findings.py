@@ -25,6 +25,7 @@ from wakeledger.intake.gridding.mirror import ON_PLANE
 from wakeledger.intake.state import absolute
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.run.chain.chain import Chain
+from wakeledger.run.chain.places import mask_at
 from wakeledger.run.chain.reduction import Reduction
 from wakeledger.run.uncertainty.channel_noise import (
     CHANNELS,
@@ -193,7 +194,7 @@ def _recording(
 
     under = measured if channels is None else channels
     values = under({})
-    wake = _inside(chain, nominal)
+    wake = mask_at(nominal.region.mask, nominal.flow.grid, chain.points.y, chain.points.z)
     usable = np.isfinite(chain.state(nominal.reference).u)
     place = place_labels(chain.points.y, chain.points.z)
     idle = frozenset({"u"}) if chain.settings.primary != "velocity" else frozenset()
@@ -327,15 +328,6 @@ def _twins(gridding: Gridding) -> Mask:
     if mirror.axis == "y":
         return np.broadcast_to(grid.y <= ON_PLANE * grid.dy, grid.shape)
     return np.broadcast_to(grid.z[:, None] <= ON_PLANE * grid.dz, grid.shape)
-
-
-def _inside(chain: Chain, nominal: Reduction) -> NDArray[np.bool_]:
-    """Whether each point lies in the wake region, by the nearest place of the grid."""
-    grid = nominal.flow.grid
-    iz = np.clip(np.rint((chain.points.z - grid.z0) / grid.dz).astype(int), 0, grid.nz - 1)
-    iy = np.clip(np.rint((chain.points.y - grid.y0) / grid.dy).astype(int), 0, grid.ny - 1)
-    inside: NDArray[np.bool_] = nominal.region.mask[iz, iy]
-    return inside
 
 
 def _from_data(chain: Chain, v: float, w: float, *, seed: int) -> Noise:

@@ -18,11 +18,11 @@ from wakeledger.physics.fields.outer_flow import LEAST_SHARE, OuterFlow
 from wakeledger.physics.fields.wake_region import Mask
 from wakeledger.physics.methods.residual import residual_drag
 from wakeledger.run.chain.chain import Chain
-from wakeledger.run.chain.outputs import OUTPUTS, coefficient_of, estimate_of
+from wakeledger.run.chain.outputs import OUTPUTS, estimate_of
 from wakeledger.run.chain.places import sampled_mask
 from wakeledger.run.chain.reduction import Reduction, Variation
 from wakeledger.run.gridded import Regrid
-from wakeledger.run.uncertainty.changes import changes
+from wakeledger.run.uncertainty.changes import changes, changes_with
 from wakeledger.run.uncertainty.gaps import gap_draws
 from wakeledger.run.uncertainty.spacing import CORES as CORES
 from wakeledger.run.uncertainty.spacing import FROZEN, NO_CORES, Cores, core_term, spacing_term
@@ -200,29 +200,13 @@ def _pair_term(chain: Chain, nominal: Reduction) -> NumericalTerm:
         blockage=nominal.wake_blockage,
     )
     doubt = PAIR_DOUBT * abs(chain.settings.counted * float(sum(whole)) - sum(nominal.residual_parts))
-    vector = np.zeros(len(OUTPUTS))
-    for row in ("residual_drag", "total_drag"):
-        vector[OUTPUTS.index(row)] = doubt
-        coefficient, value = nominal.values[coefficient_of(row)], nominal.values[row]
-        vector[OUTPUTS.index(coefficient_of(row))] = _scaled(doubt, coefficient, value)
-    return NumericalTerm(PAIR, vector)
-
-
-def _scaled(change: float, coefficient: float, value: float) -> float:
-    """What a change of a row is to its coefficient; a coefficient without a value has no doubt."""
-    if not np.isfinite(coefficient):
-        return 0.0
-    return change * coefficient / value if value else float("nan")
+    return NumericalTerm(PAIR, changes_with(dict.fromkeys(("residual_drag", "total_drag"), doubt), nominal.values))
 
 
 def _split_term(nominal: Reduction) -> NumericalTerm:
     """The border between profile and wave drag: what one gains, the other loses."""
-    vector = np.zeros(len(OUTPUTS))
-    for row, sign in (("profile_drag", -1.0), ("wave_drag", 1.0)):
-        vector[OUTPUTS.index(row)] = sign * nominal.split_uncertainty
-        coefficient, value = nominal.values[coefficient_of(row)], nominal.values[row]
-        vector[OUTPUTS.index(coefficient_of(row))] = _scaled(sign * nominal.split_uncertainty, coefficient, value)
-    return NumericalTerm(SPLIT, vector)
+    size = nominal.split_uncertainty
+    return NumericalTerm(SPLIT, changes_with({"profile_drag": -size, "wave_drag": size}, nominal.values))
 
 
 def _gap_term(chain: Chain, nominal: Reduction, regrid: Regrid, noise: Sequence[Mapping[str, Array]]) -> NumericalTerm:

@@ -14,10 +14,10 @@ from wakeledger.core.grid import Array
 from wakeledger.physics.fields.core_response import core_error
 from wakeledger.physics.vortices.identify import Vortex
 from wakeledger.run.chain.chain import Chain
-from wakeledger.run.chain.outputs import OUTPUTS, coefficient_of, corrected_coefficient_of, estimate_of
+from wakeledger.run.chain.outputs import OUTPUTS, estimate_of
 from wakeledger.run.chain.places import sampled_mask
 from wakeledger.run.chain.reduction import Reduction, Variation
-from wakeledger.run.uncertainty.changes import changes
+from wakeledger.run.uncertainty.changes import changes, changes_with, with_induced_drag
 
 RESOLUTION = "spacing of the points"
 CORES = "cores against the spacing"
@@ -75,18 +75,7 @@ class Cores:
         """What differences over so many spacings make of the outputs by the vortices' self energy."""
         squares = sum(gamma**2 * core_error(dy, dz) for gamma, dy, dz in self.per_core(step))
         size = counted * nominal.reference.density / (8 * math.pi) * squares
-        values = nominal.values
-        free = values["induced_drag_free_air"]
-        moved = {"induced_drag": size, "total_drag": size, "induced_drag_free_air": size}
-        drag = values["induced_drag"] if math.isnan(free) else free
-        moved["span_efficiency"] = -size * values["span_efficiency"] / drag if drag else math.nan
-        for row in ("induced_drag", "total_drag", "induced_drag_free_air"):
-            for name in (coefficient_of(row), corrected_coefficient_of(row)):
-                moved[name] = size * values[name] / values[row] if values[row] else math.nan
-        vector = np.array([moved.get(name, 0.0) for name in OUTPUTS])
-        # An output without a value has no uncertainty either.
-        found: Array = np.where(np.isfinite(nominal.vector), vector, 0.0)
-        return found
+        return changes_with(with_induced_drag(size, nominal.values), nominal.values)
 
 
 NO_CORES = Cores()

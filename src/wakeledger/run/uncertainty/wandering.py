@@ -7,20 +7,17 @@ from __future__ import annotations
 
 import math
 
-import numpy as np
-
 from wakeledger.confidence.terms import NumericalTerm
 from wakeledger.physics.vortices.smearing import smearing_loss
 from wakeledger.physics.vortices.vortex_sum import VortexSum
 from wakeledger.run.chain.chain import Chain
-from wakeledger.run.chain.outputs import ESTIMATES, OUTPUTS, coefficient_of, corrected_coefficient_of, estimate_of
+from wakeledger.run.chain.outputs import ESTIMATES, estimate_of
 from wakeledger.run.chain.reduction import Reduction
 from wakeledger.run.config.tables import WakeTable
 from wakeledger.run.tables import counts_text
+from wakeledger.run.uncertainty.changes import changes_with, with_induced_drag
 
 WANDERING = "wandering of the vortices"
-#: Rows that hold the induced drag.
-_ROWS = ("induced_drag", "induced_drag_free_air", "total_drag")
 
 
 def _lost(vortices: VortexSum, chain: Chain, nominal: Reduction, deviation: float) -> float:
@@ -67,18 +64,9 @@ def wandering_term(wake: WakeTable, vortices: VortexSum, chain: Chain, nominal: 
         return None
     found = _lost(vortices, chain, nominal, wake.wandering)
     size = math.hypot(found, _doubt(wake, vortices, chain, nominal) or 0.0)
-    values = nominal.values
-    moved = dict.fromkeys(_ROWS, size)
-    moved |= {estimate_of(row, method): size for row, method in ESTIMATES if row in _ROWS}
-    free = values["induced_drag_free_air"]
-    drag = values["induced_drag"] if math.isnan(free) else free
-    moved["span_efficiency"] = -size / drag * values["span_efficiency"] if drag else math.nan
-    for row in _ROWS:
-        for name in (coefficient_of(row), corrected_coefficient_of(row)):
-            moved[name] = size / values[row] * values[name] if values[row] else math.nan
-    vector = np.array([moved.get(name, 0.0) for name in OUTPUTS])
-    # An output without a value has no uncertainty either.
-    return NumericalTerm(WANDERING, np.where(np.isfinite(nominal.vector), vector, 0.0))
+    moved = with_induced_drag(size, nominal.values)
+    moved |= {estimate_of(row, method): size for row, method in ESTIMATES if row in moved}
+    return NumericalTerm(WANDERING, changes_with(moved, nominal.values))
 
 
 def wandering_notes(wake: WakeTable, vortices: VortexSum, chain: Chain, nominal: Reduction) -> list[str]:
