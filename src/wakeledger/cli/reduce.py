@@ -58,5 +58,5 @@ def reduce(
     elif ledger.failed:
         # Without a word the exit status alone would look like a failure of the program.
         named = [check.name for check in ledger.checks if check.verdict == "fail"]
-        exits.say(f"the ledger is written to {directory}, but of its checks fail: {', '.join(named)}")
+        exits.say(f"the ledger is written to {directory}, but these of its checks fail: {', '.join(named)}")
     return exits.CHECK_FAILED if ledger.failed else exits.DONE
