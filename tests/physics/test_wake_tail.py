@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from wakeledger.core.grid import UniformGrid
-from wakeledger.physics.fields.wake_tail import gaussian_tail, shape_share, wake_tails
+from wakeledger.physics.fields.wake_tail import gaussian_tail, hidden_tail, shape_share, untold, wake_tails
 
 GRID = UniformGrid(-1.0, -1.0, 0.01, 0.01, 201, 201)
 
@@ -54,6 +54,26 @@ def test_the_region_has_none():
     loss, vorticity = wake_tails(field, 2 * field, GRID, levels=(1.0, 0.0), mask=mask)
     assert not loss[mask].any() and loss[~mask].any()
     assert not vorticity.any()
+
+
+def test_a_field_near_its_level_tells_no_tail():
+    field = np.exp(-(radius() ** 2) / (2 * 0.1**2))
+    # A peak of 1, 3.5 and 6 times the level: between 2 and 5 the tail is told in part.
+    found = [untold(-field, 1 / times) for times in (1.0, 3.5, 6.0)]
+    # The peak lies half a spacing off the points, a share of (0.005/0.1)²/2 at most.
+    assert found == pytest.approx([1.0, 0.5, 0.0], abs=0.01)
+    assert untold(field, 0.0) == 0.0
+
+
+def test_what_hides_beside_a_region_has_the_level_and_the_width():
+    mask = radius() < 0.3
+    hidden = hidden_tail(2.0, GRID, mask=mask, width=0.05)
+    assert not hidden[mask].any()
+    # ∫ ℓ exp(−d²/2w²) 2π(R + d) dd = 2πℓ (R w √(π/2) + w²); the border is known within a spacing, a tenth of it.
+    truth = 2 * np.pi * 2.0 * (0.3 * 0.05 * np.sqrt(np.pi / 2) + 0.05**2)
+    assert GRID.integrate(hidden) == pytest.approx(truth, rel=0.12)
+    for one in (np.ones_like(mask), np.zeros_like(mask)):
+        assert not hidden_tail(2.0, GRID, mask=one, width=0.05).any()
 
 
 def test_a_shape_is_found_in_noise():

@@ -13,6 +13,9 @@ from scipy import ndimage
 from wakeledger.core.grid import Array, UniformGrid
 from wakeledger.physics.fields.wake_region import SEED, Mask, connected
 
+#: Peak over level from which on the contours tell the whole tail, and none of it is taken as hidden.
+TOLD = 5.0
+
 
 def gaussian_tail(smooth: Array, level: float, grid: UniformGrid) -> Array:
     """Extrapolation of a field beyond the contour at a level.
@@ -97,6 +100,51 @@ def wake_tails(
         for field, level in fields
     )
     return one, other
+
+
+def untold(smooth: Array, level: float) -> float:
+    """How little of a field's tail its contours tell.
+
+    Parameters
+    ----------
+    smooth : ndarray, shape (nz, ny)
+        A field about its zero, its noise smoothed, any unit.
+    level : float
+        Level that bounds it, the same unit.
+
+    Returns
+    -------
+    float
+        1 where the peak is below `SEED` times the level, so that noise sets the contours, falling to 0 at `TOLD` times.
+    """
+    peak = float(np.abs(smooth).max()) / level if level > 0 else np.inf
+    return float(np.clip((TOLD - peak) / (TOLD - SEED), 0.0, 1.0))
+
+
+def hidden_tail(level: float, grid: UniformGrid, *, mask: Mask, width: float) -> Array:
+    """The most that a field whose contours tell nothing may hold beside the wake region.
+
+    Parameters
+    ----------
+    level : float
+        Level that bounds it, any unit.
+    grid : UniformGrid
+        The grid.
+    mask : ndarray of bool, shape (nz, ny)
+        The wake region.
+    width : float
+        Standard deviation of its fall beyond the region, m.
+
+    Returns
+    -------
+    ndarray, shape (nz, ny)
+        ℓ exp(−d²/2w²) at a distance d from the region, the unit of the level; zero inside.
+    """
+    if mask.all() or not mask.any():
+        return np.zeros(grid.shape)
+    distance = ndimage.distance_transform_edt(~mask, sampling=(grid.dz, grid.dy))
+    found: Array = np.where(mask, 0.0, level * np.exp(-0.5 * (distance / width) ** 2))
+    return found
 
 
 def shape_share(values: Array, shape: Array) -> tuple[float, float]:

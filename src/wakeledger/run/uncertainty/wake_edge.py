@@ -1,7 +1,8 @@
 """The edge of the wake region as a numerical term: what lies beyond it, as far as that can be known.
 
 A wider region takes in more noise than wake. What its ring holds counts only where it stands clear of the ring's own
-noise; elsewhere the tails of the wake's fields, told from within the region, say how much there can be.
+noise; elsewhere the tails of the wake's fields, told from within the region, say how much there can be. A weak
+loss, whose contours are those of noise, tells no tail: there it is what the outer flow shows, and how well.
 """
 
 from __future__ import annotations
@@ -20,7 +21,7 @@ from wakeledger.core.grid import Array
 from wakeledger.physics.fields.differences import axial_vorticity
 from wakeledger.physics.fields.outer_flow import LEAST_SHARE
 from wakeledger.physics.fields.wake_region import GROW_CELLS, Mask, region_of, smoothed, wake_region
-from wakeledger.physics.fields.wake_tail import shape_share, wake_tails
+from wakeledger.physics.fields.wake_tail import hidden_tail, shape_share, untold, wake_tails
 from wakeledger.physics.methods.vorticity_area import vorticity_forces
 from wakeledger.run.chain.chain import Chain
 from wakeledger.run.chain.coefficients import coefficients, tunnel_figures
@@ -36,8 +37,8 @@ RINGS = (2.0, 8.0)
 CHANCE = 0.0003
 #: Factor on both: a tail need not be Gaussian, a ring's content is off by its noise, and more may lie beyond it.
 BEYOND = 2.0
-#: From how many standard deviations on a shape counts as seen; the same chance, for many places.
-_CLEAR = 3.0
+#: Doubt of a tail, as a share of it (k = 1), before the outer flow is asked.
+DOUBT = 1.0
 #: Draws of noise that the data show, where none is declared.
 _DRAWS = 16
 
@@ -62,10 +63,12 @@ def mask_term(chain: Chain, nominal: Reduction, noise: Noise, *, zero_uncertaint
     -------
     NumericalTerm
         Rectangular. Half its width is, for each output, twice the larger of what the tails hold outside the region
-        (`wakeledger.physics.fields.wake_tail`; more of them where the outer flow shows more of their shape) and what a
-        ring holds, c: √(c² − s²) where c stands clear of the ring's own noise s, else nothing. Outputs move with the
-        sign in which the wake goes on. Without any measured pressure what the pressure that turns the crossflow does
-        in the rings is added: far out it is not the flow's.
+        (`wakeledger.physics.fields.wake_tail`) and what a ring holds, c: √(c² − s²) where c stands clear of the ring's
+        own noise s, else nothing. As far as the peak of the loss is near its level, the level over the region's
+        surroundings stands for the tail. How much of a tail there is: 1 ± 1, and what a fit to the outer flow says,
+        weighted by their uncertainties, as rms; more where it is high at the region's edge. Outputs move with the sign
+        in which the wake goes on. Without any measured pressure what the pressure that turns the crossflow does in the
+        rings is added: far out it is not the flow's.
     """
     rings = _rings(chain, nominal)
     tails, ring = _tails(chain, nominal), _clear_of_noise(chain, nominal, noise, rings, zero_uncertainty)
@@ -109,8 +112,18 @@ def _tails(chain: Chain, nominal: Reduction) -> Array:
         mask=mask,
     )
     outer = ~mask
-    lost = lost * _shown_share(loss, lost, outer)
-    turned = turned * _shown_share(vorticity, turned, outer)
+    # Where the tail is high at the region's edge, the zero and the level hold much of it too.
+    high = [
+        1.0 + (float(np.abs(tail).max()) / level if level > 0 else 0.0)
+        for tail, level in ((lost, found.loss_level), (turned, found.vorticity_level))
+    ]
+    hides = untold(smooth_loss - found.loss_zero, found.loss_level)
+    if hides > 0:
+        width = 0.5 * max(grow, default_grow(chain.gridding))
+        hidden = hidden_tail(found.loss_level, grid, mask=mask, width=width)
+        lost, high[0] = (1 - hides) * lost + hides * hidden, 1.0 + (1 - hides) * (high[0] - 1.0)
+    lost = lost * high[0] * _likely_share(loss, lost, outer)
+    turned = turned * high[1] * _likely_share(vorticity, turned, outer)
     energised = chain.frozen.energised
     if energised is not None:
         # The energy of a slipstream is no profile drag, nor is its tail.
@@ -126,12 +139,16 @@ def _tails(chain: Chain, nominal: Reduction) -> Array:
     return changed
 
 
-def _shown_share(field: Array, tail: Array, outer: Mask) -> float:
-    """By how much more of a tail's shape the outer flow shows than the tail; 1 where that is not clear of the noise."""
-    if np.count_nonzero(outer) < 2 or not np.ptp(tail[outer]) > 0:
-        return 1.0
+def _likely_share(field: Array, tail: Array, outer: Mask) -> float:
+    """How much of a tail there may be, as rms: one and its doubt, drawn to what the outer flow shows by its noise."""
+    alone = math.hypot(1.0, DOUBT)
+    if np.count_nonzero(outer) < 3 or not np.ptp(tail[outer]) > 0:
+        return alone
     share, u = shape_share(field[outer], tail[outer])
-    return max(share, 1.0) if share > _CLEAR * u else 1.0
+    if not u > 0:
+        return max(abs(share), alone)
+    weight = DOUBT**2 / (DOUBT**2 + u**2)
+    return math.hypot(1.0 + weight * (share - 1.0), math.sqrt(weight) * u)
 
 
 def _with_zero(lost: Array, mask: Mask) -> Array:
@@ -207,7 +224,8 @@ def _wander(chain: Chain, nominal: Reduction, rings: Sequence[Mask], zero_uncert
     own = np.square(
         _changed(chain, nominal, np.where(nominal.region.mask, size, 0.0), np.zeros(nominal.flow.grid.shape))
     )
-    share = [1.0 + (np.count_nonzero(ring) / max(np.count_nonzero(nominal.region.mask), 1)) ** 2 for ring in rings]
+    inside = max(int(np.count_nonzero(nominal.region.mask)), 1)
+    share = [1.0 + (int(np.count_nonzero(ring)) / inside) ** 2 for ring in rings]
     found: Array = np.multiply.outer(np.array(share), own)
     return found
 
