@@ -333,7 +333,7 @@ def table(studies: Mapping[str, Sequence[Mapping[str, Any]]]) -> str:
                     f"{typical[k]:.2f} counts",
                     f"{typical[k] / scattered[k]:.3f} ± {1 / math.sqrt(2 * len(found)):.3f}",
                     f"{tightening(found)[1, k]:.1f}",
-                    "" if wider is None else f"{100 * wider[:, 1, k].mean():.1f} %",
+                    "" if wider is None else f"{wider[:, 1, k].sum()} of {len(wider)}",
                     f"{np.mean(ratios):.3f}" if ratios else "",
                 ]
             )

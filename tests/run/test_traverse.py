@@ -245,7 +245,7 @@ def test_a_drift_of_the_reference_reading_is_seen_at_revisits_and_taken_out(raw,
     how = TraverseConditions(reference_drift=10.0, noise=0.5)
     path = raw.traverse(tmp_path, wake, *probes[5], how=how, at=raw.positions(revisit=QUIET))
     found = reduce(load(path), draws=200)
-    said = note(found, "visits to 1 place(s)")
+    said = note(found, "visits to 1 place ")
     # q* = q q/(q + 10 Pa s): it seems to fall by 1.04 % of q, as the total pressure does.
     for quantity in ("total pressure changed by ", "dynamic pressure by "):
         assert float(said.split(quantity)[1].split("%")[0]) == pytest.approx(-1.03, abs=0.12)

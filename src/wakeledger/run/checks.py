@@ -98,6 +98,8 @@ class Facts:
         What surrounds the survey, its reflection plane included.
     cut : float
         Distance from the reflection plane y = 0 inside which points were to be left out, m.
+    computed : bool
+        Whether the flow was computed: it has no noise and no instruments.
     """
 
     vortices: Sequence[Core]
@@ -111,6 +113,7 @@ class Facts:
     noise: NoiseFindings | None = None
     boundary: Boundary = FREE_AIR
     cut: float = 0.0
+    computed: bool = False
 
 
 #: Why checks do not apply where the direction of the flow was not measured.
@@ -409,6 +412,8 @@ def core_resolution(facts: Facts) -> Check:
 def noise_bias(reduction: Reduction, facts: Facts) -> Check:
     """Noise bias of the induced drag over the induced drag."""
     induced = abs(float(reduction.forces.induced_drag))
+    if facts.computed:
+        return _check("noise_bias", math.nan, {"not_applicable": "A computed flow has no noise."})
     if math.isnan(facts.bias):
         message = (
             "The noise of the crossflow is neither declared nor can it be told from the data, so what it adds to the"
@@ -477,10 +482,16 @@ def outer_flow(reduction: Reduction, facts: Facts) -> Check:
         if facts.crossflow
         else "."
     )
-    check = _check("outer_flow", value, {"pass": found, "warn": f"{found} Check the total-pressure reference's drift."})
+    remedy = (
+        "Look whether the stream of [reference] is the computation's, and how far its boundaries are."
+        if facts.computed
+        else "Check the total-pressure reference's drift."
+    )
+    check = _check("outer_flow", value, {"pass": found, "warn": f"{found} {remedy}"})
     turned = math.radians(math.hypot(pitch, yaw))
     if check.verdict == "pass" and turned > ANGLE_LIMIT:
-        message = f"{found} Check the probe's alignment or the stream's upflow."
+        why = "direction of the computed stream" if facts.computed else "probe's alignment or the stream's upflow"
+        message = f"{found} Check the {why}."
         return Check("outer_flow", "warn", turned / ANGLE_LIMIT * LIMITS["outer_flow"][0], check.limit, message)
     return check
 

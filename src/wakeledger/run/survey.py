@@ -298,6 +298,7 @@ def facts_of(prepared: Prepared) -> Facts:
         noise=None if prepared.chain.settings.computed else prepared.findings,
         boundary=prepared.chain.settings.boundary,
         cut=prepared.cut,
+        computed=prepared.chain.settings.computed,
     )
 
 

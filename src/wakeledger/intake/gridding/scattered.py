@@ -221,7 +221,7 @@ def make_scattered(
 def _require_places(number: int) -> None:
     if number < FEWEST_PLACES:
         raise DataError(
-            f"the survey has usable measurements at {number} place(s)",
+            f"the survey has usable measurements at {number} place{'' if number == 1 else 's'}",
             remedy=f"a plane needs at least 5 x 5 places ({FEWEST_PLACES})",
         )
 

@@ -65,6 +65,7 @@ def inspect_plane(survey: SurveyInput, gridded: Gridded) -> Inspection:
         spacings=core_spacings(chain, vortices),
         crossflow=chain.settings.crossflow,
         probe=probe_range(chain),
+        computed=chain.settings.computed,
     )
     checks = tuple(check for check in all_checks(nominal, facts) if check.name not in _LATER)
     worst = worst_core(facts)

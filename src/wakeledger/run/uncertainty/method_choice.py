@@ -92,7 +92,7 @@ def spread_notes(checks: Sequence[CrossCheck], rows: Sequence[Row]) -> list[str]
         )
         found.append(
             f"{methods} {abs(scale) * far:.2g} {unit} from it (root mean square, expected differences taken out); their"
-            f" uncertainties explain {abs(scale) * explained:.2g}{added}"
+            f" uncertainties explain {abs(scale) * explained:.2g} {unit}{added}"
         )
     return found
 
