@@ -220,6 +220,14 @@ def test_unlike_ledgers_are_warned_of(kit, room, tmp_path):
     assert lift.value.difference > 0 > lift.coefficient.difference
 
 
+def test_lengths_of_the_model_are_no_matter_of_the_flow(room):
+    """A mean chord that was written differently changes no flow."""
+    one = open_archive(room / "a.nc")
+    other = dataclasses.replace(one, model={**one.model, "mean_chord": 1.1 * one.model["mean_chord"]})
+    (said,) = [sentence for sentence in wl.increment(one, other).warnings if "mean chord" in sentence]
+    assert said.endswith("the coefficients are each on its own.")
+
+
 def test_unknown_stays_unknown(kit, room, tmp_path):
     path = survey(kit, tmp_path, seed=4, declared=[])
     found = wl.increment(room / "a.nc", reduce(load(path)))

@@ -55,7 +55,7 @@ def unlike(
                 "the coefficients are each on its own; the differences of forces are those of two streams"
                 if name == "dynamic_pressure"
                 else "the coefficients are each on its own"
-                if name in ("reference_area", "span", "chord")
+                if name in ("reference_area", "span", "mean_chord", "chord")
                 else "the two flows are not alike"
             )
             shown = [_scalar_text(name, value) for value in (one, other)]

@@ -102,7 +102,7 @@ def flow_of_loading(request: PlanRequest) -> ExpectedFlow:
     def losses(total: float) -> GaussianLosses:
         sheet = sheet_losses(flat, here, total=total * (1 - 2 * CORE_LOSS), width=float(plan.wake_width or 0.0))
         cores = tip_cores(here)
-        return sheet + GaussianLosses(cores.y, cores.z, np.full(cores.n, CORE_LOSS * total), np.hypot(cores.core, 0.0))
+        return sheet + GaussianLosses(cores.y, cores.z, np.full(cores.n, CORE_LOSS * total), cores.core)
 
     try:
         wake, rows = _fitted(place, reference, here, losses, distance, drag)

@@ -368,8 +368,8 @@ class _Preparation:
         parts |= self._one_for_all(f"{DRIFT}.level", path.filed(on_holes(moved[0] * once, moved[1] * once)))
         self._add(DRIFT, path.filed(size), parts)
         self.said[DRIFT] = (
-            f"{found.visits} visits to {found.places} place{'' if found.places == 1 else 's'} show that over the traverse"
-            f" {' and '.join(sentences)}"
+            f"{found.visits} visits to {found.places} place{'' if found.places == 1 else 's'} show that over the"
+            f" traverse {' and '.join(sentences)}"
         )
         self._carry(DRIFT, "drift of the readings", tuple(parts))
 
