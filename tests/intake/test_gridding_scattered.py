@@ -187,7 +187,7 @@ def test_decimated_keeps_the_grid_and_costs_accuracy():
 
 def test_too_few_places():
     y, z = scatter(4)
-    with pytest.raises(DataError, match=r"16 place\(s\)"):
+    with pytest.raises(DataError, match=r"at 16 places"):
         make_gridding(y, z, everything(y))
 
 

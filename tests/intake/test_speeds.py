@@ -73,3 +73,14 @@ def test_a_probe_that_reads_a_little_fast_is_told_of():
     ratio = looked_at(values | {name: 1.04 * values[name] for name in "uvw"}, SLOW)
     assert ratio == pytest.approx(1.04)
     assert "1.040 times" in speed_note(ratio)[0]
+
+
+def test_a_window_in_a_slipstream_is_believed_where_velocity_and_pressures_agree():
+    values = flow(SLOW)
+    fast = {name: 2.5 * values[name] for name in "uvw"}
+    speed = np.sqrt(sum(component**2 for component in fast.values()))
+    pressures = {"static_pressure": values["static_pressure"]}
+    pressures["total_pressure"] = pressures["static_pressure"] + 0.5 * SLOW.density * speed**2
+    assert looked_at(fast | pressures, SLOW, "velocity") == pytest.approx(1.0)
+    with pytest.raises(DataError, match="100 m/s in the middle"):
+        looked_at(fast, SLOW, "velocity")

@@ -72,7 +72,8 @@ def mask_term(chain: Chain, nominal: Reduction, noise: Noise, *, zero_uncertaint
     """
     rings = _rings(chain, nominal)
     tails, ring = _tails(chain, nominal), _clear_of_noise(chain, nominal, noise, rings, zero_uncertainty)
-    half = np.where(np.abs(ring) > np.abs(tails), ring, tails)
+    # A value that a wider region loses makes the term unknown, whatever the tails say.
+    half = np.where((np.abs(ring) > np.abs(tails)) | np.isnan(ring), ring, tails)
     if chain.settings.primary == "velocity" and not {"total_pressure", "static_pressure"} & chain.measured:
         half = np.copysign(np.abs(half) + np.abs(_turning(chain, nominal, rings)), half)
     return NumericalTerm(MASK, BEYOND * half / math.sqrt(3), "rectangular")
