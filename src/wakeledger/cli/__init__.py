@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import sys
 
 import click
@@ -35,4 +36,7 @@ for command in (reduce, inspect, show, increment, repeats, grids, plan, calibrat
 
 def main() -> None:
     """Entry point of the ``wakeledger`` program."""
+    # Draws have threads of their own; those of the linear algebra only get into their way.
+    for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS"):
+        os.environ.setdefault(name, "1")
     sys.exit(run(wakeledger, sys.argv[1:]))
